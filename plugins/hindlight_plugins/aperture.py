@@ -1,0 +1,76 @@
+"""Aperture photometry: the sum of the pixels in a circle, each counted by the part of it that lies inside.
+
+    flux = sum(w d),      error^2 = rms^2 sum(w^2) + (sum(w) background_err)^2 + flux / gain,
+
+w being the exact overlap of circle and pixel (the CCD equation of W. J. Merline & S. B. Howell 1995, with weights). No
+correction for light outside the circle is made: a Gaussian has 0.2 % of it beyond 1.5 FWHM.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import ClassVar
+
+import numpy as np
+from numpy.typing import NDArray
+
+from hindlight import BeamShape, Estimator, Stamps, hookimpl, setting
+
+ROUNDING = 1e-9
+
+Array = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class Aperture(Estimator):
+    """Flux within a circle, for images in counts or in a unit per pixel."""
+
+    units: ClassVar[tuple[str, ...]] = ("", "Jy/pixel", "mJy/pixel", "uJy/pixel")
+
+    radius_fwhm: float = setting(1.5, "radius of the circle", unit="FWHM", minimum=0.3, maximum=3)
+
+    def radius(self, beam: BeamShape) -> float:
+        """In units of the geometric mean width."""
+        return self.radius_fwhm * beam.fwhm
+
+    def measure(self, stamps: Stamps) -> tuple[Array, Array]:
+        """Flux and error; NaN where any pixel that the circle touches is."""
+        half = stamps.pixels.shape[1] // 2
+        weights = circle_overlap(self.radius(stamps.beam), stamps.dx, stamps.dy, half).reshape(len(stamps.dx), -1)
+        data = np.where(weights > 0, stamps.pixels.reshape(weights.shape), 0)
+        flux = (weights * data).sum(axis=1)
+        variance = stamps.rms**2 * (weights**2).sum(axis=1)
+        variance += (weights.sum(axis=1) * stamps.background_err) ** 2
+        if np.isfinite(stamps.electrons_per_unit):
+            variance += np.maximum(flux, 0) / stamps.electrons_per_unit
+        return flux, np.sqrt(variance)
+
+
+def circle_overlap(radius: float, x: Array, y: Array, half: int) -> Array:
+    """Area of each pixel of a square stamp inside a circle around (x, y) from its middle, shape (n, size, size).
+
+    `x`, `y` have shape (n,), `size` is 2 * half + 1. The area of the circle to the lower left of each pixel corner has a
+    closed form, made of functions of one coordinate and the product of both; differences of it give the pixels.
+    """
+    full = np.pi * radius**2
+    edges = np.arange(-half - 0.5, half + 1.0)
+    a = np.clip(edges - x[:, None], -radius, radius)[:, None, :]
+    b = np.clip(edges - y[:, None], -radius, radius)[:, :, None]
+    sector_a, chord_a = radius**2 * np.arccos(a / radius), a * np.sqrt(radius**2 - a**2)
+    sector_b, chord_b = radius**2 * np.arccos(b / radius), b * np.sqrt(radius**2 - b**2)
+    left_of_a, below_b = full - sector_a + chord_a, full - sector_b + chord_b
+    # A corner inside the circle: what is left of it, and what is below it, less all, and again what is neither.
+    inside = (left_of_a + (sector_a - chord_a) / 2) + (below_b + (sector_b - chord_b) / 2 - 1.25 * full) + a * b
+    # A corner outside the circle: nothing, all, or a part cut off by one of the two lines.
+    right, above = (a > 0).astype(float), (b > 0).astype(float)
+    outside = right * (below_b - above * full) + above * left_of_a
+    corner = np.where(a**2 + b**2 < radius**2, inside, outside)
+    area = np.diff(np.diff(corner, axis=1), axis=2)
+    area[area < ROUNDING] = 0.0  # pixels that the circle does not touch carry no weight at all
+    return area
+
+
+@hookimpl
+def register_estimators() -> list[type[Estimator]]:
+    """One estimator."""
+    return [Aperture]

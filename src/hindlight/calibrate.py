@@ -1,0 +1,230 @@
+"""Columns and their null to p-values, thresholds, tails and false-discovery rates. Pure numbers in and out.
+
+A target is ranked within the set of itself and its controls: every calibrated column gives each member of the set a
+rank p-value; the smallest is the member's combination, ties ordered by how far that column lies beyond the controls,
+in their MAD; the combination is ranked in the same set. Under exchangeability the result is exact (Phipson & Smyth
+2010, SAGMB 9, 39): P(p <= a) <= a.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import special, stats
+
+from hindlight.lightcurve import FloatArray, IntArray
+
+MAD_TO_SIGMA = 1.482602
+TAIL_CONFIDENCE = 0.95
+SHAPES = np.concatenate(([0.0], np.geomspace(1e-3, 5.0, 160)))
+SCALES = np.geomspace(0.02, 50.0, 400)
+
+
+@dataclass(frozen=True, eq=False)
+class Null:
+    """Controls of one set: oriented values of shape (n, k), larger more unusual, -inf for none; and what follows."""
+
+    values: FloatArray
+    sorted_values: FloatArray
+    at_least: IntArray
+    centre: FloatArray
+    spread: FloatArray
+
+    @property
+    def n(self) -> int:
+        """How many controls."""
+        return len(self.values)
+
+
+@dataclass(frozen=True)
+class Rank:
+    """Where a target stands: (r+1)/(n+1), which column decided it, and its distance beyond the controls in MAD."""
+
+    p_value: float
+    column: int
+    beyond: float
+    exceeded_by: int
+    control_distances: FloatArray
+
+
+def null_from(values: FloatArray) -> Null:
+    """The null of controls' oriented values, shape (n, k)."""
+    ordered = np.sort(values, axis=0)
+    n = len(values)
+    at_least = np.empty(values.shape, np.int64)
+    for k in range(values.shape[1]):
+        at_least[:, k] = n - np.searchsorted(ordered[:, k], values[:, k], side="left")
+    centre, spread = _centre_and_spread(values)
+    return Null(values, ordered, at_least, centre, spread)
+
+
+def _centre_and_spread(values: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Median and MAD (as a sigma) of each column's finite values; a wider measure where more than half are equal."""
+    k = values.shape[1]
+    centre, spread = np.zeros(k), np.ones(k)
+    for j in range(k):
+        finite = values[np.isfinite(values[:, j]), j]
+        if finite.size == 0:
+            continue
+        centre[j] = np.median(finite)
+        low, high = np.quantile(finite, [0.01, 0.99])
+        measures = (MAD_TO_SIGMA * np.median(np.abs(finite - centre[j])), (high - low) / 4.65, np.ptp(finite))
+        spread[j] = next((m for m in measures if m > 0), 1.0)
+    return centre, spread
+
+
+def rank(null: Null, target: FloatArray) -> Rank:
+    """Rank a target's oriented values, shape (k,), within the set of itself and the controls; NaN p for no values."""
+    n = null.n
+    if n == 0 or not np.isfinite(target).any():
+        return Rank(float("nan"), -1, float("nan"), 0, np.empty(0))
+    above = np.array([n - np.searchsorted(null.sorted_values[:, k], t, side="left") for k, t in enumerate(target)])
+    target_p = np.where(np.isfinite(target), (above + 1) / (n + 1), 1.0)
+    control_p = (null.at_least + (target[None, :] >= null.values)) / (n + 1)
+    control_p = np.where(np.isfinite(null.values), control_p, 1.0)
+    column, best, distance = _combination(target_p[None, :], (target[None, :] - null.centre) / null.spread)
+    _, control_best, control_distance = _combination(control_p, (null.values - null.centre) / null.spread)
+    ahead = (control_best < best[0]) | ((control_best == best[0]) & (control_distance >= distance[0]))
+    r = int(ahead.sum())
+    return Rank((r + 1) / (n + 1), int(column[0]), float(distance[0]), r, control_distance)
+
+
+def _combination(p: FloatArray, distance: FloatArray) -> tuple[IntArray, FloatArray, FloatArray]:
+    """For each row of (m, k): the column with the smallest p (of several, the one furthest out), its p and distance."""
+    best = p.min(axis=1)
+    masked = np.where(p == best[:, None], distance, -np.inf)
+    column = masked.argmax(axis=1)
+    return column, best, masked[np.arange(len(p)), column]
+
+
+def leave_one_out(null: Null) -> FloatArray:
+    """The p-value of every control ranked among all of them, shape (n,)."""
+    if null.n == 0:
+        return np.empty(0)
+    p = np.where(np.isfinite(null.values), null.at_least / null.n, 1.0)
+    _, best, distance = _combination(p, (null.values - null.centre) / null.spread)
+    order = np.lexsort((-distance, best))
+    key = np.stack([best, -distance], axis=1)[order]
+    new = np.concatenate(([True], (key[1:] != key[:-1]).any(axis=1)))
+    last = np.append(np.flatnonzero(new)[1:], null.n)
+    result = np.empty(null.n)
+    result[order] = last[np.cumsum(new) - 1] / null.n
+    return result
+
+
+def false_discovery(p_values: FloatArray) -> FloatArray:
+    """Benjamini-Hochberg (1995, JRSS B 57, 289) adjusted p-values; NaN stays NaN and does not count as a trial."""
+    adjusted = np.full(p_values.shape, np.nan)
+    known = np.isfinite(p_values)
+    if known.any():
+        adjusted[known] = stats.false_discovery_control(p_values[known], method="bh")
+    return adjusted
+
+
+def controls_needed(n_targets: int, level: float) -> int:
+    """How many controls let a single candidate among `n_targets` reach the level: n >= targets / level - 1."""
+    return max(1, int(np.ceil(n_targets / level)) - 1)
+
+
+def tail_bound(distances: FloatArray, target: float, exceedances: int) -> float:
+    """An upper bound on the chance that a control lies beyond `target`, from a fitted tail; NaN where none can be.
+
+    A generalised Pareto tail with shape >= 0 is fitted to the largest `exceedances` of the controls' distances; the
+    bound is the upper end of the 95 % profile-likelihood interval of the tail probability. The plain estimate
+    (Knijnenburg et al. 2009, Bioinformatics 25, i161) understates heavy tails and is not used.
+    """
+    finite = np.sort(distances[np.isfinite(distances)])[::-1]
+    m = min(exceedances, finite.size // 4)
+    if m < 10 or not np.isfinite(target):
+        return float("nan")
+    start = (finite[m - 1] + finite[m]) / 2
+    excess = finite[:m] - start
+    scale0 = float(excess.mean())
+    if scale0 <= 0 or target <= finite[0]:
+        return float("nan")
+    shape, scale = SHAPES[:, None], SCALES[None, :] * scale0
+    likelihood = -m * np.log(scale) - (shape + 1) * _log_terms(shape, scale, excess)
+    log_tail = -_log_terms(shape, scale, np.array([target - start]))
+    drop = stats.chi2.isf(1 - TAIL_CONFIDENCE, 1) / 2
+    inside = likelihood >= likelihood.max() - drop
+    return float(m / finite.size * np.exp(log_tail[inside].max()))
+
+
+def _log_terms(shape: FloatArray, scale: FloatArray, excess: FloatArray) -> FloatArray:
+    """Sum over the excesses of log(1 + shape y / scale) / shape, and of y / scale where the shape is zero."""
+    total = np.zeros(np.broadcast_shapes(shape.shape, scale.shape))
+    safe = np.where(shape > 0, shape, 1.0)
+    for y in excess:
+        total += np.where(shape > 0, np.log1p(shape * y / scale) / safe, y / scale)
+    return total
+
+
+def threshold(maxima: FloatArray, false_alarms: float) -> float:
+    """The value above which at most a fraction `false_alarms` of the controls' maxima lie; NaN for no controls.
+
+    With too few controls for that rate it is the highest of them: the rate is then 1/(n+1).
+    """
+    finite = np.sort(maxima[np.isfinite(maxima)])[::-1]
+    if finite.size == 0:
+        return float("nan")
+    allowed = int(np.floor(false_alarms * (finite.size + 1))) - 1
+    return float(finite[max(0, min(allowed, finite.size - 1))])
+
+
+def gaussian_threshold(n_samples: int, false_alarms: float) -> float:
+    """The same for Gaussian noise and `n_samples` independent looks: Sidak's correction."""
+    if n_samples < 1:
+        return float("nan")
+    return float(stats.norm.isf(-np.expm1(np.log1p(-false_alarms) / n_samples)))
+
+
+def robust_threshold(values: FloatArray, false_alarms: float) -> float:
+    """Median + k MAD-sigma of the controls with Gaussian k for this rate, at least k: unmoved by a few real sources.
+
+    NaN for no controls.
+    """
+    k = float(stats.norm.isf(false_alarms))
+    finite = values[np.isfinite(values)]
+    if finite.size == 0:
+        return float("nan")
+    centre = float(np.median(finite))
+    sigma = MAD_TO_SIGMA * float(np.median(np.abs(finite - centre)))
+    return max(k, centre + k * max(1.0, sigma))
+
+
+def upper_bound(flux: float, error: float, confidence: float = 0.95) -> float:
+    """Upper bound on a flux that cannot be negative, flat prior (Helene 1983, NIM 212, 319); NaN for no error."""
+    if not (np.isfinite(flux) and np.isfinite(error) and error > 0):
+        return float("nan")
+    z = flux / error
+    return float(error * (z - special.ndtri_exp(np.log1p(-confidence) + stats.norm.logcdf(z))))
+
+
+def extra_scatter(flux: FloatArray, flux_err: FloatArray) -> float:
+    """Maximum-likelihood scatter beyond the errors about a common mean, 0 where the errors suffice; NaN for n < 3.
+
+    Solves the score equation for s: maximises -sum[r^2/(e^2+s^2) + ln(e^2+s^2)]/2 over the mean and s >= 0.
+    """
+    if flux.size < 3:
+        return float("nan")
+
+    def score(variance: float) -> float:
+        total = flux_err**2 + variance
+        mean = float((flux / total).sum() / (1 / total).sum())
+        return float((((flux - mean) ** 2 - total) / total**2).sum())
+
+    if score(0.0) <= 0:
+        return 0.0
+    high = float(np.ptp(flux)) ** 2
+    low = 0.0
+    for _ in range(200):
+        middle = (low + high) / 2
+        low, high = (middle, high) if score(middle) > 0 else (low, middle)
+    return float(((low + high) / 2) ** 0.5)
+
+
+def runs(mask: NDArray[np.bool_]) -> int:
+    """How many unbroken runs of True."""
+    return int(np.count_nonzero(np.diff(np.concatenate(([0], mask.astype(int)))) == 1))

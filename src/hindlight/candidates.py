@@ -1,0 +1,286 @@
+"""What is said about a target: counts, looks, brightenings, standing, and the order of the candidate table.
+
+Pure: light curves, thresholds and p-values in, rows out. It reads nothing and writes nothing.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from hindlight.calibrate import extra_scatter, runs, upper_bound
+from hindlight.fence import Fault
+from hindlight.lightcurve import FloatArray, LightCurve, weighted_mean
+from hindlight.plugin import PeriodResult
+from hindlight.ranking import Thresholds
+from hindlight.settings import Detection
+from hindlight.timing import DAY, J2000_JD, in_window, lookback
+
+STILL_POSSIBLE = 1000.0  # ephemerides with odds no worse than one to this are still possible
+MOST_BRIGHT = 0.5  # brightenings that fill more of the samples than this are no separate brightenings
+
+Mask = NDArray[np.bool_]
+
+
+@dataclass(frozen=True, eq=False)
+class ChannelView:
+    """One channel of a target: its curve, how many frames cover it, and its thresholds."""
+
+    curve: LightCurve
+    n_frames: int
+    thresholds: Thresholds
+
+    @property
+    def snr(self) -> FloatArray:
+        """Flux over its error, absolute where the flux is signed; shape (n,)."""
+        snr = self.curve.flux / self.curve.flux_err
+        return np.abs(snr) if self.curve.channel.signed else snr
+
+    @property
+    def detected(self) -> Mask:
+        """Samples above the channel's threshold."""
+        return np.asarray(self.snr > self.thresholds.detected)
+
+    @property
+    def bright(self) -> Mask:
+        """Samples that stand above the quiet level beyond chance."""
+        if len(self.curve) < 2:
+            return np.zeros(len(self.curve), dtype=bool)
+        excess = self.curve.above_quiet
+        excess = np.abs(excess) if self.curve.channel.signed else excess
+        return np.asarray(excess > self.thresholds.above_quiet)
+
+    @property
+    def seen(self) -> bool:
+        """Seen in two frames, in one above every control, or in the mean."""
+        if len(self.curve) == 0:
+            return False
+        mean, error = weighted_mean(self.curve.flux, self.curve.flux_err)
+        in_mean = (abs(mean) if self.curve.channel.signed else mean) > self.thresholds.mean * error
+        alone = bool(self.detected.any()) and float(self.snr.max()) > self.thresholds.highest
+        return bool(in_mean or self.detected.sum() >= 2 or alone)
+
+    @property
+    def quiet_otherwise(self) -> bool:
+        """Whether the samples that are not bright scatter no more than blank sky does."""
+        rest = ~self.bright
+        if rest.sum() < 3:
+            return False
+        flux, error = self.curve.flux[rest], self.curve.flux_err[rest]
+        mean, _ = weighted_mean(flux, error)
+        reduced = float((((flux - mean) / error) ** 2).sum()) / (int(rest.sum()) - 1)
+        return bool(reduced <= self.thresholds.reduced and self.bright.mean() <= MOST_BRIGHT)
+
+
+@dataclass(frozen=True, eq=False)
+class View:
+    """A target in all its channels; `utc` gives a frame's time as text, `label` its file, HDU and plane."""
+
+    name: str
+    channels: tuple[ChannelView, ...]
+    utc: Callable[[int], str]
+    label: Callable[[int], str]
+
+
+@dataclass(frozen=True)
+class Examined:
+    """What the searches and checks say of one target: table cells by full column name, the chosen result, concerns."""
+
+    cells: Mapping[str, Any]
+    period: PeriodResult | None
+    concerns: tuple[str, ...]
+    faults: tuple[Fault, ...]
+
+
+@dataclass(frozen=True)
+class Described:
+    """What the tables say of one target from its light curves: its core cells, and a row for each channel."""
+
+    cells: Mapping[str, Any]
+    channels: tuple[Mapping[str, Any], ...]
+
+
+def epochs(times_s: FloatArray, gap_days: float) -> int:
+    """How many groups the times (in seconds, NaN ignored) fall into, apart by more than the gap."""
+    known = np.sort(times_s[np.isfinite(times_s)])
+    return 0 if known.size == 0 else 1 + int(np.count_nonzero(np.diff(known) > gap_days * DAY))
+
+
+def brightenings(view: View, gap_days: float) -> int:
+    """How many separate times the target was bright: epochs, or runs of bright samples within one, if more."""
+    times = [c.curve.t_tdb_s[c.bright] for c in view.channels]
+    in_runs = [runs(c.bright) for c in view.channels if not c.curve.channel.signed]
+    return max([epochs(np.concatenate(times), gap_days) if times else 0, *in_runs], default=0)
+
+
+def standing(view: View, beyond_chance: bool, established: bool, detection: Detection) -> str:
+    """The verdict in one word; see `hindlight.schema.STANDINGS`."""
+    used = [len(c.curve) for c in view.channels]
+    if not any(used):
+        return "uncovered"
+    if max(used) < detection.min_frames:
+        return "undecided"
+    if not beyond_chance:
+        return "steady" if any(c.seen for c in view.channels) else "unseen"
+    if established:
+        return "periodic"
+    lit = [c for c in view.channels if c.bright.any()]
+    if not lit or not all(c.quiet_otherwise for c in lit):
+        return "variable"
+    return "repeating" if brightenings(view, detection.epoch_gap_days) > 1 else "single"
+
+
+def counts(view: View, detection: Detection) -> dict[str, Any]:
+    """The columns of the candidate table that count frames and looks and name the first and last."""
+    samples = _all_samples(view)
+    detected = samples["detected"]
+    peak = int(np.argmax(samples["snr"])) if len(detected) else -1
+    row: dict[str, Any] = {
+        "n_frames": sum(c.n_frames for c in view.channels),
+        "n_used": len(detected),
+        "n_detected": int(detected.sum()),
+        "n_epochs": epochs(samples["t"], detection.epoch_gap_days),
+        "peak_snr": float(samples["snr"][peak]) if peak >= 0 else float("nan"),
+        "peak_frame": view.label(int(samples["frame"][peak])) if peak >= 0 else "",
+    }
+    return row | _first_and_last(view, samples)
+
+
+def _all_samples(view: View) -> dict[str, Any]:
+    """The samples of all channels together in order of time, untimed ones last."""
+    parts: dict[str, list[Any]] = {
+        "t": [],
+        "snr": [],
+        "detected": [],
+        "frame": [],
+        "limit": [],
+        "flux": [],
+        "channel": [],
+    }
+    for index, c in enumerate(view.channels):
+        for name, values in (
+            ("t", c.curve.t_tdb_s), ("snr", c.snr), ("detected", c.detected), ("frame", c.curve.frame),
+            ("limit", c.thresholds.detected * c.curve.flux_err), ("flux", np.abs(c.curve.flux)),
+            ("channel", np.full(len(c.curve), index)),
+        ):  # fmt: skip
+            parts[name].append(values)
+    joined = {name: np.concatenate(values) if values else np.empty(0) for name, values in parts.items()}
+    order = np.lexsort((joined["frame"], joined["t"]))
+    joined = {name: values[order] for name, values in joined.items()}
+    joined["detected"] = joined["detected"].astype(bool)
+    return joined
+
+
+def _first_and_last(view: View, samples: Mapping[str, Any]) -> dict[str, str]:
+    """Times of the first and last detection, and of the nearest non-detections that would have shown either."""
+    row = dict.fromkeys(("first_detected", "last_detected", "quiet_before", "quiet_after"), "")
+    hits = np.flatnonzero(samples["detected"] & np.isfinite(samples["t"]))
+    if hits.size == 0:
+        return row
+    first, last = int(hits[0]), int(hits[-1])
+    row["first_detected"] = view.utc(int(samples["frame"][first]))
+    row["last_detected"] = view.utc(int(samples["frame"][last]))
+    for name, edge, side in (
+        ("quiet_before", first, slice(None, first)), ("quiet_after", last, slice(last + 1, None))
+    ):  # fmt: skip
+        constrains = (samples["limit"] < samples["flux"][edge]) & (samples["channel"] == samples["channel"][edge])
+        quiet = np.flatnonzero((constrains & ~samples["detected"] & np.isfinite(samples["t"]))[side])
+        if quiet.size:
+            at = int(quiet[-1]) if name == "quiet_before" else last + 1 + int(quiet[0])
+            row[name] = view.utc(int(samples["frame"][at]))
+    return row
+
+
+def describe(
+    view: View, given: Mapping[str, float], beyond_chance: bool, examined: Examined | None, detection: Detection
+) -> Described:
+    """The cells of one target that need its light curves; `given` is the ephemeris of the target list, NaN for none."""
+    period = examined.period if examined is not None else None
+    if period is not None and not (period.established and period.ephemerides):
+        period = None
+    cells = counts(view, detection) | _period_cells(period)
+    cells["name"] = view.name
+    cells["standing"] = standing(view, beyond_chance, period is not None, detection)
+    cells["concerns"] = "; ".join(examined.concerns) if examined is not None else ""
+    cells["lookback_p"] = _lookback_p(view, given)
+    return Described(cells, tuple(channel_row(view, c) for c in view.channels))
+
+
+def _period_cells(period: PeriodResult | None) -> dict[str, Any]:
+    """The columns of an established period."""
+    if period is None:
+        return {"cycle_counts_left": 0}
+    best = period.ephemerides[0]
+    errors = [best.covariance[i][i] ** 0.5 for i in range(3)]
+    return {
+        "period": best.period_s,
+        "period_err": errors[1],
+        "period_dot": best.period_dot if np.isfinite(errors[2]) else float("nan"),
+        "period_dot_err": errors[2],
+        "epoch": J2000_JD + best.epoch_tdb_s / DAY,
+        "cycle_counts_left": sum(e.log_odds > -np.log(STILL_POSSIBLE) for e in period.ephemerides),
+    }
+
+
+def _lookback_p(view: View, given: Mapping[str, float]) -> float:
+    """See `hindlight.timing.lookback`; NaN where the target list gives no ephemeris."""
+    if not np.isfinite([given["period"], given["epoch"]]).all():
+        return float("nan")
+    inside, detected = [np.empty(0, bool)], [np.empty(0, bool)]
+    for c in view.channels:
+        known = np.isfinite(c.curve.t_tdb_s)
+        t = c.curve.t_tdb_s[known] - (given["epoch"] - J2000_JD) * DAY
+        dot, window = float(np.nan_to_num(given["period_dot"])), float(np.nan_to_num(given["window"]))
+        inside.append(in_window(t, c.curve.exposure_s[known], given["period"], dot, window))
+        detected.append(c.detected[known])
+    return lookback(np.concatenate(inside), np.concatenate(detected))
+
+
+def channel_row(view: View, c: ChannelView) -> dict[str, Any]:
+    """One row of channels.ecsv."""
+    curve = c.curve
+    mean, error = weighted_mean(curve.flux, curve.flux_err)
+    quiet, quiet_err = curve.quiet_level
+    typical = float(np.median(curve.flux_err)) if len(curve) else float("nan")
+    return {
+        "name": view.name,
+        "channel": curve.channel.label,
+        "flux_unit": curve.channel.unit,
+        "n_frames": c.n_frames,
+        "n_used": len(curve),
+        "n_detected": int(c.detected.sum()),
+        "threshold": c.thresholds.detected,
+        "threshold_above_quiet": c.thresholds.above_quiet,
+        "threshold_mean": c.thresholds.mean,
+        "n_controls": c.thresholds.n_controls,
+        "quiet_level": quiet,
+        "quiet_level_err": quiet_err,
+        "flux_mean": mean,
+        "flux_mean_err": error,
+        "scatter": extra_scatter(curve.flux, curve.flux_err),
+        "limit_sigma": c.thresholds.detected * typical,
+        "limit_bayes": float("nan") if curve.channel.signed else upper_bound(mean, error),
+        "limit_above_quiet": c.thresholds.above_quiet * float(np.hypot(typical, quiet_err)),
+    }
+
+
+def order(rows: Sequence[Mapping[str, Any]]) -> list[int]:
+    """Best first: rows without concerns, then by p-value, then by how far beyond the controls, then by name."""
+
+    def key(index: int) -> tuple[Any, ...]:
+        row = rows[index]
+        known = bool(np.isfinite(row["p_value"]))
+        beyond = row["beyond_controls"]
+        return (
+            bool(row["concerns"]),
+            not known,
+            row["p_value"] if known else 1.0,
+            -beyond if np.isfinite(beyond) else np.inf,
+            row["name"],
+        )
+
+    return sorted(range(len(rows)), key=key)

@@ -1,0 +1,369 @@
+"""The command line: one call per command. The only place that prints."""
+
+from __future__ import annotations
+
+import contextlib
+import errno
+import logging
+import os
+import signal
+import sys
+import traceback
+from collections.abc import Callable, Iterator
+from pathlib import Path
+from typing import Any, TypeVar
+
+import click
+import numpy as np
+from rich.console import Console
+from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeRemainingColumn
+from rich.table import Table
+
+from hindlight import __version__
+from hindlight.errors import HindlightError, UsageError
+
+BEST_ROWS = 10
+TABLE_ENDINGS = (".ecsv", ".fits", ".vot", ".csv", ".parquet")
+INTERRUPTED = 130
+TERMINATED = 143
+
+Command = TypeVar("Command", bound=Callable[..., Any])
+
+
+def main() -> None:
+    """Run the command line and leave with its exit status."""
+    signal.signal(signal.SIGTERM, _terminate)
+    sys.exit(run_command(sys.argv[1:]))
+
+
+def run_command(arguments: list[str]) -> int:
+    """Run one command line; returns its exit status. A user's own mistake is one line, never a traceback."""
+    try:
+        cli.main(args=arguments, prog_name="hindlight", standalone_mode=False)
+    except click.exceptions.Exit as end:
+        return int(end.exit_code)
+    except (click.Abort, KeyboardInterrupt):
+        return _say("interrupted; the same command continues", INTERRUPTED)
+    except click.ClickException as error:
+        return _say(f"{error.format_message()}; see `hindlight --help`", 2)
+    except HindlightError as error:
+        return _say(str(error), error.exit_status)
+    except OSError as error:
+        if error.errno in (errno.ENOSPC, errno.EDQUOT):
+            return _say("the disk is full; make room, the same command continues", 4)
+        return _inside_error(error)
+    except Exception as error:  # noqa: BLE001 - the last resort: one line, and the traceback where it can be found
+        return _inside_error(error)
+    return 0
+
+
+def _terminate(_number: int, _frame: Any) -> None:
+    sys.stderr.write("hindlight: terminated; the same command continues\n")
+    os._exit(TERMINATED)
+
+
+def _say(text: str, status: int) -> int:
+    click.echo(f"hindlight: {' '.join(text.split())}", err=True)
+    return status
+
+
+def _inside_error(error: BaseException) -> int:
+    """An error inside the program; a run has its traceback in its log, otherwise -v shows it."""
+    if logging.getLogger("hindlight").level <= logging.DEBUG:
+        click.echo("".join(traceback.format_exception(error)), err=True)
+    hint = "the traceback is in the run's log.txt, or comes with -v; please report it, the same command continues"
+    return _say(f"error inside the program: {type(error).__name__}: {error}; {hint}", 1)
+
+
+def common_options(command: Command) -> Command:
+    """-q and -v, which every command has."""
+    command = click.option("-q", "--quiet", is_flag=True, help="Say nothing but errors.")(command)
+    return click.option("-v", "--verbose", is_flag=True, help="Say more, and show tracebacks.")(command)
+
+
+@click.group(context_settings={"help_option_names": ["-h", "--help"]})
+@click.version_option(__version__, prog_name="hindlight")
+def cli() -> None:
+    """Was this position ever bright before?
+
+    Measures target positions in every image of an archive, seen or not, and ranks them against blank sky.
+    """
+
+
+@cli.command()
+@click.argument("archive", nargs=-1, required=True)
+@click.option("--targets", type=click.Path(path_type=Path), help="Target list: count the frames that cover each.")
+@click.option("--settings", "settings_file", type=click.Path(path_type=Path), help="Settings (TOML).")
+@click.option("--plugin", "plugins", multiple=True, type=click.Path(path_type=Path), help="A plugin file; repeatable.")
+@common_options
+def inventory(
+    archive: tuple[str, ...], targets: Path | None, settings_file: Path | None, plugins: tuple[Path, ...],
+    quiet: bool, verbose: bool,
+) -> None:  # fmt: skip
+    """Headers only: what is there, when, where, in what state."""
+    from hindlight import survey
+
+    with _watching(quiet, verbose) as watcher:
+        found = survey.inventory(archive, targets, settings_file, plugins, watcher)
+    _print_inventory(found)
+
+
+@cli.command()
+@click.argument("archive", nargs=-1, required=True)
+@click.option("--targets", required=True, type=click.Path(path_type=Path), help="Target list: name, ra, dec.")
+@click.option("--out", required=True, type=click.Path(path_type=Path), help="Folder of the run, made when absent.")
+@click.option("--settings", "settings_file", type=click.Path(path_type=Path), help="Settings (TOML).")
+@click.option("--plugin", "plugins", multiple=True, type=click.Path(path_type=Path), help="A plugin file; repeatable.")
+@click.option("--without", multiple=True, metavar="NAME", help="Leave a plugin out; repeatable.")
+@click.option("--workers", type=click.IntRange(min=1), help="Processes; default: one for small work, else one a core.")
+@click.option("--scheduler", metavar="ADDRESS", help="Address of a dask scheduler that exists.")
+@common_options
+def mine(
+    archive: tuple[str, ...], targets: Path, out: Path, settings_file: Path | None, plugins: tuple[Path, ...],
+    without: tuple[str, ...], workers: int | None, scheduler: str | None, quiet: bool, verbose: bool,
+) -> None:  # fmt: skip
+    """The whole job: measure every target in every frame, and rank them.
+
+    The same command again continues an interrupted run, or extends it with new files and targets.
+    """
+    from hindlight.runner import Request
+    from hindlight.runner import mine as run_mine
+
+    if workers is not None and scheduler is not None:
+        raise UsageError("give --workers or --scheduler, not both")
+    request = Request(archive, targets, out, settings_file, plugins, without, workers, scheduler)
+    with _watching(quiet, verbose) as watcher:
+        result = run_mine(request, watcher)
+    if not quiet:
+        _print_result(result)
+
+
+@cli.command()
+@click.argument("run", type=click.Path(path_type=Path))
+@click.argument("target")
+@click.option("--out", type=click.Path(path_type=Path), help="File to write; the ending sets the format.")
+@common_options
+def lightcurve(run: Path, target: str, out: Path | None, quiet: bool, verbose: bool) -> None:
+    """One target's light curves; to standard output as ECSV unless --out names a file."""
+    from hindlight.export import light_curves
+    from hindlight.store import RunFolder
+    from hindlight.tables import write_table
+
+    if out is not None and out.suffix.lower() not in TABLE_ENDINGS:
+        raise UsageError(f"--out {out}: unknown ending {out.suffix!r}; use one of {', '.join(TABLE_ENDINGS)}")
+    with _logging(verbose):
+        table = light_curves(RunFolder(run), target)
+        if out is None:
+            table.write(sys.stdout, format="ascii.ecsv")
+            return
+        if not out.parent.is_dir():
+            raise UsageError(f"--out {out}: no folder {out.parent}; make it first")
+        write_table(out, table)
+    if not quiet:
+        click.echo(f"{len(table)} measurements of {target} written to {out}", err=True)
+
+
+@cli.command()
+@click.option("--check", type=click.Path(path_type=Path), metavar="FILE.py", help="Check that a plugin behaves.")
+@click.option("--plugin", "files", multiple=True, type=click.Path(path_type=Path), help="List this file's plugins too.")
+@common_options
+def plugins(check: Path | None, files: tuple[Path, ...], quiet: bool, verbose: bool) -> None:
+    """What is installed, its columns; with --check whether a plugin behaves."""
+    from hindlight import host
+    from hindlight.settings import Settings
+
+    with _logging(verbose):
+        if check is not None:
+            _check_plugin(check)
+            return
+        loaded = host.load(host.spec_from(Settings(), files))
+        _print_plugins(loaded)
+
+
+@cli.command("settings")
+@click.option(
+    "--plugin", "files", multiple=True, type=click.Path(path_type=Path), help="With this file's settings too."
+)
+@common_options
+def show_settings(files: tuple[Path, ...], quiet: bool, verbose: bool) -> None:
+    """A commented settings file with every default."""
+    from hindlight import host
+    from hindlight.settings import Settings, render
+
+    with _logging(verbose):
+        loaded = host.load(host.spec_from(Settings(), files))
+        click.echo(render(Settings(), {e.plugin.name: e.plugin for e in loaded.loaded}), nl=False)
+
+
+@cli.command()
+@click.argument("folder", type=click.Path(path_type=Path))
+@common_options
+def demo(folder: Path, quiet: bool, verbose: bool) -> None:
+    """Write the demonstration archive and its target list."""
+    from hindlight.demo import write_demo
+
+    with _logging(verbose):
+        if folder.exists() and (not folder.is_dir() or any(folder.iterdir())):
+            raise UsageError(f"{folder}: is not an empty folder; give a new one")
+        write_demo(folder)
+    if not quiet:
+        click.echo(
+            f"written; now: hindlight mine {folder} --targets {folder / 'targets.ecsv'} --out {folder}-run", err=True
+        )
+
+
+@contextlib.contextmanager
+def _logging(verbose: bool) -> Iterator[None]:
+    logging.getLogger("hindlight").setLevel(logging.DEBUG if verbose else logging.INFO)
+    yield
+
+
+class _Silent:
+    """A watcher that says nothing."""
+
+    def stage(self, name: str, total: int) -> None:
+        """Nothing to say."""
+
+    def step(self, n: int = 1) -> None:
+        """Nothing to say."""
+
+
+class _Lines:
+    """A watcher for an output that is no terminal: one line when a stage begins."""
+
+    def stage(self, name: str, total: int) -> None:
+        """Say the stage."""
+        click.echo(f"hindlight: {name}" + (f", {total} steps" if total else ""), err=True)
+
+    def step(self, n: int = 1) -> None:
+        """Nothing to say between stages."""
+
+
+class _Bar:
+    """A watcher for a terminal: one progress bar a stage."""
+
+    def __init__(self, progress: Progress) -> None:
+        self.progress = progress
+        self.task: Any = None
+
+    def stage(self, name: str, total: int) -> None:
+        """Begin a bar."""
+        if self.task is not None:
+            self.progress.remove_task(self.task)
+        self.task = self.progress.add_task(name, total=total or None)
+
+    def step(self, n: int = 1) -> None:
+        """Move the bar."""
+        if self.task is not None:
+            self.progress.advance(self.task, n)
+
+
+@contextlib.contextmanager
+def _watching(quiet: bool, verbose: bool) -> Iterator[Any]:
+    """Whoever shows how far a run is, on standard error."""
+    with _logging(verbose):
+        if quiet:
+            yield _Silent()
+        elif not sys.stderr.isatty():
+            yield _Lines()
+        else:
+            columns = (TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(), TimeRemainingColumn())
+            with Progress(*columns, console=Console(stderr=True), transient=True) as progress:
+                yield _Bar(progress)
+
+
+def _console() -> Console:
+    """Standard output; wide enough for its tables where it is no terminal."""
+    return Console(width=None if sys.stdout.isatty() else 160, highlight=False, soft_wrap=not sys.stdout.isatty())
+
+
+def _simple_table(title: str, *names: str) -> Table:
+    table = Table(title=title, title_justify="left", box=None, pad_edge=False)
+    for name in names:
+        table.add_column(name, no_wrap=name in ("name", "target", "channel"))
+    return table
+
+
+def _print_result(result: Any) -> None:
+    console = _console()
+    table = result.table
+    best = [row for row in table if not row["concerns"]][:BEST_ROWS]
+    doubtful = [row for row in table if row["concerns"]]
+    console.print(_candidates("best rows", best))
+    if doubtful:
+        console.print(_candidates("beyond chance, but a check failed", doubtful[:BEST_ROWS]))
+        for row in doubtful[:BEST_ROWS]:
+            console.print(f"  {row['name']}: {row['concerns']}", markup=False)
+    console.print((result.run / "summary.txt").read_text(encoding="utf-8"), end="", markup=False)
+    console.print(f"written to {result.run}: candidates.ecsv (.fits, .vot), channels.ecsv, rejects.ecsv", markup=False)
+
+
+def _candidates(title: str, rows: list[Any]) -> Table:
+    table = _simple_table(title, "name", "standing", "p", "q", "seen/used", "peak S/N", "first seen", "period (s)")
+    for row in rows:
+        table.add_row(
+            str(row["name"]), str(row["standing"]), _short(row["p_value"], "<" if row["p_is_extrapolated"] else ""),
+            _short(row["q_value"]), f"{row['n_detected']}/{row['n_used']}", _short(row["peak_snr"]),
+            str(row["first_detected"])[:19], _short(row["period"], digits=8),
+        )  # fmt: skip
+    return table
+
+
+def _short(value: Any, before: str = "", digits: int = 3) -> str:
+    return f"{before}{float(value):.{digits}g}" if np.isfinite(value) else ""
+
+
+def _print_inventory(found: Any) -> None:
+    console = _console()
+    names = ("channel", "frames", "first", "last", "exposure (s)", "beam (arcsec)", "depth")
+    table = _simple_table("frames by instrument and channel", *names)
+    for row in found.channels:
+        table.add_row(
+            row.channel, str(row.n_frames), row.first[:10], row.last[:10], _short(row.exposure_s),
+            f"{_short(row.beam_min)} to {_short(row.beam_max)}" if np.isfinite(row.beam_min) else "not stated",
+            f"{_short(row.depth)} {row.unit}" if np.isfinite(row.depth) else "not stated",
+        )  # fmt: skip
+    console.print(table)
+    if found.targets:
+        cover = _simple_table("frames that cover each target", "target", "frames", "channels")
+        for target in found.targets:
+            cover.add_row(target.name, str(target.n_frames), str(target.n_channels))
+        console.print(cover)
+    for title, counted in (("set aside", found.rejects), ("taken for granted", found.assumptions)):
+        table = _simple_table(title, "count", "word", "meaning")
+        for entry in counted:
+            table.add_row(str(entry.count), entry.word, entry.meaning)
+        console.print(table if counted else f"{title}: nothing")
+
+
+def _print_plugins(loaded: Any) -> None:
+    console = _console()
+    table = _simple_table("plugins", "name", "kind", "origin", "columns and settings")
+    for entry in loaded.loaded:
+        columns = ", ".join(f"{c.name} ({c.about}, {c.unusual})" if c.unusual else c.name for c in entry.plugin.columns)
+        table.add_row(entry.plugin.name, entry.plugin.kind, f"{entry.origin}: {entry.source}", columns)
+    console.print(table)
+
+
+def _check_plugin(path: Path) -> None:
+    """Run the conformance kit on a file's plugins; status 2 where one fails."""
+    from hindlight import host, testing
+    from hindlight.settings import Settings
+
+    loaded = host.load(host.spec_from(Settings(), [path]))
+    mine = [entry.plugin for entry in loaded.loaded if entry.origin == "file"]
+    if not mine:
+        raise UsageError(f"plugin file {path}: registers nothing; mark a register_... function with @hookimpl")
+    problems = 0
+    for plugin in mine:
+        report = testing.examine(plugin)
+        click.echo(f"{plugin.kind} {plugin.name}: {report.timing}")
+        for problem in report.problems:
+            problems += 1
+            click.echo(f"  {problem}")
+        if not report.problems:
+            click.echo(f"  passes {report.n_checks} checks")
+    if problems:
+        raise UsageError(
+            f"plugin file {path}: {problems} checks failed; the lines above say which and how to mend them"
+        )

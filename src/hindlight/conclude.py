@@ -1,0 +1,114 @@
+"""The fields of a run: who is judged with whom, every target's rank, and p-values over all targets.
+
+Pure: judgements in, ranks and p-values out. The arithmetic is in `calibrate`, one field at a time in `ranking`.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from hindlight import calibrate, ranking
+from hindlight.host import Plugins
+from hindlight.judge import Judgement, full_columns
+from hindlight.lightcurve import FloatArray, IntArray
+from hindlight.positions import separation_deg
+from hindlight.settings import Settings
+from hindlight.systems import unit_vectors
+
+
+@dataclass(eq=False)
+class Field:
+    """One field while it is judged: its targets and controls as ids, and what is known of them so far."""
+
+    number: int
+    targets: IntArray
+    controls: IntArray
+    serving: NDArray[np.bool_]
+    judgement: Judgement = field(default_factory=Judgement)
+    ranks: ranking.FieldRanks | None = None
+    thresholds: dict[str, ranking.Thresholds] = field(default_factory=dict)
+
+    @property
+    def ranked(self) -> ranking.FieldRanks:
+        """The ranks, once `rank` has found them."""
+        if self.ranks is None:
+            raise ValueError(f"field {self.number} has not been ranked")
+        return self.ranks
+
+    @property
+    def ids(self) -> IntArray:
+        """Every position of the field, ascending."""
+        return np.sort(np.concatenate([self.targets, self.controls]))
+
+    def rows(self, ids: IntArray) -> IntArray:
+        """Where these positions stand in the field's judgement."""
+        return np.searchsorted(self.ids, ids)
+
+
+def serving_controls(
+    positions: Mapping[str, Any], controls: IntArray, in_frames: NDArray[np.bool_]
+) -> NDArray[np.bool_]:
+    """Which controls may serve which targets: in enough of the same frames, and clear of every target of the run."""
+    rows = np.searchsorted(positions["id"], controls)
+    everyone = positions["kind"] == "target"
+    vectors = unit_vectors(positions["ra"][rows], positions["dec"][rows])
+    occupied = unit_vectors(positions["ra"][everyone], positions["dec"][everyone])
+    free = np.ones(len(controls), dtype=bool)
+    for start in range(0, len(occupied), 256):
+        apart = separation_deg(vectors, occupied[start : start + 256])
+        free &= (apart >= 0.999 * positions["clear_radius"][rows][:, None]).all(axis=1)
+    return np.asarray(in_frames & free[None, :])
+
+
+def rank(found: Field, plugins: Plugins, settings: Settings) -> None:
+    """Fill in a field's ranks and thresholds from its judgement."""
+    columns = full_columns([*plugins.statistics, *plugins.period_searches])
+    targets, controls = found.rows(found.targets), found.rows(found.controls)
+    serving = ranking.matched(found.judgement, targets, controls, found.serving, settings.controls.shared_frames)
+    found.ranks = ranking.rank_field(found.judgement, columns, targets, controls, serving)
+    found.thresholds = ranking.thresholds(found.judgement, controls, settings.detection)
+
+
+def gated(found: Field, settings: Settings) -> IntArray:
+    """The positions whose periods are searched: those the statistics so far put among the foremost fraction."""
+    target_p = np.array([r.p_value for r in found.ranked.ranks])
+    with np.errstate(invalid="ignore"):
+        pass_targets = found.targets[target_p <= settings.ranking.gate]
+        pass_controls = found.controls[found.ranked.control_p <= settings.ranking.gate]
+    return np.sort(np.concatenate([pass_targets, pass_controls]))
+
+
+@dataclass(frozen=True, eq=False)
+class PValues:
+    """Over all targets of the run, in order of their ids: shapes (n,)."""
+
+    empirical: FloatArray
+    p: FloatArray
+    q: FloatArray
+    extrapolated: NDArray[np.bool_]
+    short: NDArray[np.bool_]
+    needed: int
+
+
+def p_values(ranks: Sequence[calibrate.Rank], settings: Settings) -> PValues:
+    """One p-value and q-value per target; a tail bound stands in where the controls alone cannot decide."""
+    empirical = np.array([r.p_value for r in ranks])
+    level = settings.ranking.level
+    q = calibrate.false_discovery(empirical)
+    p = empirical.copy()
+    with np.errstate(invalid="ignore"):
+        undecided = np.array([r.exceeded_by == 0 for r in ranks]) & (q > level)
+    extrapolated = np.zeros(len(ranks), dtype=bool)
+    for index in np.flatnonzero(undecided).tolist():
+        bound = calibrate.tail_bound(
+            ranks[index].control_distances, ranks[index].beyond, settings.ranking.tail_exceedances
+        )
+        if bound < p[index]:
+            p[index], extrapolated[index] = bound, True
+    needed = calibrate.controls_needed(int(np.isfinite(empirical).sum()), level)
+    return PValues(empirical, p, calibrate.false_discovery(p), extrapolated, undecided, needed)

@@ -1,0 +1,30 @@
+"""The few kinds of error that the command line shows as one line, without a traceback.
+
+Anything else that is raised is an error inside the program: its traceback goes to the run's log.
+"""
+
+
+class HindlightError(Exception):
+    """Something the user can mend; the text says what, where, what was expected, what was found, and how to mend it."""
+
+    exit_status = 2
+
+
+class UsageError(HindlightError):
+    """The command, a settings file, a target list or a plugin is wrong."""
+
+
+class RunInUseError(HindlightError):
+    """Another live process works in the run folder."""
+
+
+class NothingToDoError(HindlightError):
+    """No FITS image was found, or no target is covered by any frame."""
+
+    exit_status = 3
+
+
+class StoppedError(HindlightError):
+    """The run ended early through an outside fault; the same command continues it."""
+
+    exit_status = 4

@@ -1,0 +1,86 @@
+"""One target's light curves out of a run, as a table with raw and calibrated flux side by side."""
+
+from __future__ import annotations
+
+import difflib
+from pathlib import Path
+from typing import Any
+
+import astropy.table
+import numpy as np
+
+from hindlight import store, tasks
+from hindlight.ensemble import calibrated
+from hindlight.errors import UsageError
+from hindlight.schema import LIGHT_CURVE
+from hindlight.store import RunFolder
+from hindlight.tables import astropy_table
+
+
+def light_curves(run: RunFolder, target: str) -> astropy.table.Table:
+    """Every measurement of a target, in order of channel and time; NaN flux where a frame gave none.
+
+    Raises `UsageError` for a folder that holds no run, or a name that is no target of it.
+    """
+    run.require()
+    tables = tasks.book(str(run.path.resolve()), "")
+    row = _row_of(tables.positions, target, run.path)
+    plan = [
+        piece
+        for piece in store.pieces(tables.frames, tables.positions)
+        if piece.round == tables.positions["round"][row] and run.part(piece).is_file()
+    ]
+    if not plan:
+        raise UsageError(f"run {run.path}: nothing is measured yet; continue it with `hindlight mine`")
+    rows = store.read_rows(run, plan, tables.positions["id"][row : row + 1])
+    void = tables.frames["id"][tables.frames["state"] == "void"]
+    rows = {name: values[~np.isin(rows["frame"], void)] for name, values in rows.items()}
+    order = np.lexsort((rows["frame"], rows["t_tdb_s"], rows["channel"].astype(str)))
+    rows = {name: values[order] for name, values in rows.items()}
+    meta = {
+        "target": target,
+        "flags": "bits are explained in the README",
+        "time": "BJD (TDB) at the middle of good time",
+    }
+    return astropy_table(LIGHT_CURVE, _columns(run, tables, rows, target), meta)
+
+
+def _row_of(positions: dict[str, Any], target: str, run: Path) -> int:
+    names = positions["name"].tolist()
+    if target in names and target:
+        return int(names.index(target))
+    close = difflib.get_close_matches(target, [n for n in names if n], n=1)
+    hint = f"did you mean {close[0]!r}?" if close else "names are in candidates.ecsv"
+    raise UsageError(f"run {run}: no target {target!r}; {hint}")
+
+
+def _columns(run: RunFolder, tables: tasks.Book, rows: dict[str, Any], target: str) -> dict[str, Any]:
+    """The table's columns from raw rows."""
+    flux, flux_err, _ = calibrated(rows["frame"], rows["flux"], rows["flux_err"], tables.solution)
+    at = np.array([tables.row_of_frame[int(frame)] for frame in rows["frame"]], np.int64)
+    limits = _thresholds(run, target)
+    limit = np.array([limits.get(channel, np.inf) for channel in rows["channel"]])
+    signed = np.array([tables.channels[channel].signed for channel in rows["channel"]], bool)
+    with np.errstate(invalid="ignore"):
+        snr = flux / flux_err
+        detected = np.where(signed, np.abs(snr), snr) > limit
+    return {
+        **{name: rows[name] for name in rows if name not in ("position", "gain")},
+        "middle_utc": tables.frames["middle_utc"][at],
+        "flux": flux,
+        "flux_err": flux_err,
+        "flux_unit": [tables.channels[channel].unit for channel in rows["channel"]],
+        "raw_flux": rows["flux"],
+        "raw_flux_err": rows["flux_err"],
+        "detected": detected,
+        "path": [tasks.frame_label(tables.frames, int(row)) for row in at],
+    }
+
+
+def _thresholds(run: RunFolder, target: str) -> dict[str, float]:
+    """The detection threshold of each channel of a target, if the run has been judged."""
+    if not run.has("channels.ecsv"):
+        return {}
+    table = astropy.table.Table.read(run.file("channels.ecsv"), format="ascii.ecsv")
+    mine = table[table["name"] == target]
+    return {str(row["channel"]): float(row["threshold"]) for row in mine}

@@ -1,0 +1,218 @@
+"""What a dialect is given and returns: a lean view of header cards, and the facts of one frame.
+
+Only the cards asked for are parsed. The meaning of keywords is the dialects' business, not this module's.
+"""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Iterator
+from dataclasses import dataclass, field
+from functools import lru_cache
+
+CARD = 80
+Value = str | float | int | bool | None
+NAN = float("nan")
+
+_STRING = re.compile(r"\s*'((?:[^']|'')*)'")
+_WHOLE = re.compile(r"[+-]?[0-9]+")
+_REAL = re.compile(r"[+-]?(?:[0-9]+\.?[0-9]*|\.[0-9]+)(?:[EDed][+-]?[0-9]+)?")
+_DATE = re.compile(r"\s*([+-]?\d{4,5})-(\d{1,2})-(\d{1,2})(?:[T ](\d{1,2}):(\d{1,2})(?::(\d{1,2}(?:\.\d*)?))?)?Z?\s*")
+
+
+@dataclass(frozen=True)
+class Moment:
+    """An instant as a whole day (MJD) and seconds of that day, in whatever scale the header uses.
+
+    `has_clock` is False where only the date is known; seconds are then 0.
+    """
+
+    mjd: int
+    seconds: float
+    has_clock: bool = True
+
+    def plus(self, seconds: float) -> Moment:
+        """This instant some seconds later."""
+        days, rest = divmod(self.seconds + seconds, 86400.0)
+        return Moment(self.mjd + int(days), rest, self.has_clock)
+
+    @classmethod
+    def from_mjd(cls, mjd: float) -> Moment:
+        """An instant from one number (a double resolves about a microsecond)."""
+        day = int(mjd // 1)
+        return cls(day, (mjd - day) * 86400.0)
+
+    @classmethod
+    def from_iso(cls, text: str) -> Moment | None:
+        """An instant from an ISO 8601 date with or without a time of day (FITS 4.0, 9.1.1); None if it is no date."""
+        match = _DATE.fullmatch(text)
+        if match is None:
+            return None
+        year, month, day, hour, minute, second = match.groups()
+        if not (1 <= int(month) <= 12 and 1 <= int(day) <= 31):
+            return None
+        mjd = _mjd(int(year), int(month), int(day))
+        if mjd >= _mjd(int(year) + int(month) // 12, int(month) % 12 + 1, 1):
+            return None  # the month has no such day
+        if hour is None:
+            return cls(mjd, 0.0, has_clock=False)
+        seconds = int(hour) * 3600 + int(minute) * 60 + float(second or 0)
+        if int(hour) > 24 or int(minute) > 59 or float(second or 0) >= 61 or seconds > 86401:
+            return None
+        return cls(mjd, seconds)
+
+
+def _mjd(year: int, month: int, day: int) -> int:
+    """Modified Julian Date of a day in the (proleptic) Gregorian calendar (Fliegel & Van Flandern 1968)."""
+    shift = (14 - month) // 12
+    y, m = year + 4800 - shift, month + 12 * shift - 3
+    return day + (153 * m + 2) // 5 + 365 * y + y // 4 - y // 100 + y // 400 - 32045 - 2400001
+
+
+@dataclass(frozen=True)
+class PlaneAxes:
+    """Where a plane lies on the axes beside the celestial ones.
+
+    Each mapping goes from the axis type ('FREQ', 'STOKES', 'TIME', ...) to the plane's world coordinate, the step of
+    the axis and its unit; an axis of length one is here too. `time_axis` is the type of a longer axis that is a time
+    and so gives the plane its own, or '' where there is none.
+    """
+
+    values: dict[str, float] = field(default_factory=dict)
+    steps: dict[str, float] = field(default_factory=dict)
+    units: dict[str, str] = field(default_factory=dict)
+    time_axis: str = ""
+
+
+@dataclass(frozen=True)
+class FrameFacts:
+    """What a header says about one frame; NaN, '' or None where it says nothing.
+
+    start, middle, end
+        Instants in `scale` (an astropy time scale); with `span_s` any two of start, middle, end follow from one.
+    exposure_s, span_s
+        Good time, and time from first to last photon.
+    beam_major, beam_minor, beam_angle
+        Full widths at half maximum in arcsec, and position angle east of north in degrees.
+    site
+        ITRF metres, or None.
+    barycentric
+        Whether the times are already referred to the barycentre.
+    electrons_per_unit, saturation, depth
+        In units of the pixels after scaling.
+    assumptions
+        Words of `hindlight.ASSUMPTIONS`, one for each thing taken for granted.
+    """
+
+    instrument: str = ""
+    band: str = ""
+    stokes: str = "I"
+    frequency_hz: float = NAN
+    unit: str = ""
+    beam_major: float = NAN
+    beam_minor: float = NAN
+    beam_angle: float = NAN
+    start: Moment | None = None
+    middle: Moment | None = None
+    end: Moment | None = None
+    scale: str = "utc"
+    exposure_s: float = NAN
+    span_s: float = NAN
+    barycentric: bool = False
+    site: tuple[float, float, float] | None = None
+    saturation: float = NAN
+    electrons_per_unit: float = NAN
+    depth: float = NAN
+    primary_beam: str = "unknown"
+    assumptions: tuple[str, ...] = ()
+
+
+class Cards:
+    """Header cards by keyword, parsed when asked for; the first of a repeated keyword counts.
+
+    `raw` holds the header's bytes up to END, without padding.
+    """
+
+    def __init__(self, raw: bytes) -> None:
+        """Index the cards of `raw`, whole cards of 80 bytes."""
+        self.raw = raw
+        self._text = text = raw.decode("latin-1")
+        starts = range(0, len(text) - CARD + 1, CARD)
+        keys = [text[start : start + 8].rstrip() for start in starts]
+        self._index = dict(zip(reversed(keys), reversed(starts), strict=True))  # the first of a repeated keyword stays
+
+    def __contains__(self, key: str) -> bool:
+        return key in self._index
+
+    def __iter__(self) -> Iterator[str]:
+        return reversed(self._index)
+
+    def card(self, key: str) -> str:
+        """The 80 characters of a card, '' where there is none."""
+        start = self._index.get(key)
+        return "" if start is None else self._text[start : start + CARD]
+
+    def all_of(self, key: str) -> list[str]:
+        """The text after the keyword of every card with this keyword, as for HISTORY and COMMENT."""
+        starts = range(0, len(self._text) - CARD + 1, CARD)
+        return [self._text[s + 8 : s + CARD].rstrip() for s in starts if self._text[s : s + 8].rstrip() == key]
+
+    def get(self, key: str) -> Value:
+        """The value of a card as text, number or truth; None where it is absent, empty or no value at all."""
+        start = self._index.get(key)
+        if start is None or self._text[start + 8 : start + 10] != "= ":
+            return None
+        return parse_value(self._text[start + 10 : start + CARD])
+
+    def text(self, key: str) -> str:
+        """The value if it is text, without outer blanks; '' otherwise."""
+        value = self.get(key)
+        return value.strip() if isinstance(value, str) else ""
+
+    def number(self, key: str) -> float:
+        """The value if it is a finite number, NaN otherwise; numbers written as text are not numbers."""
+        if key not in self._index:
+            return NAN
+        value = self.get(key)
+        if isinstance(value, bool) or not isinstance(value, int | float):
+            return NAN
+        return float(value) if abs(value) < 1e300 else NAN
+
+    def integer(self, key: str, default: int = 0) -> int:
+        """The value if it is a whole number, `default` otherwise."""
+        value = self.get(key)
+        return value if isinstance(value, int) and not isinstance(value, bool) else default
+
+    def first_number(self, *keys: str) -> float:
+        """The first finite number among several keywords, NaN where there is none."""
+        for key in keys:
+            value = self.number(key)
+            if value == value:
+                return value
+        return NAN
+
+    def moment(self, key: str) -> Moment | None:
+        """The value as an instant: an ISO date under a DATE keyword, a number under an MJD or JD keyword."""
+        value = self.get(key)
+        if isinstance(value, str):
+            return Moment.from_iso(value)
+        number = self.number(key)
+        if number != number:
+            return None
+        return Moment.from_mjd(number - 2400000.5 if key.startswith("JD") else number)
+
+
+@lru_cache(maxsize=16384)  # most cards of an archive repeat from file to file
+def parse_value(text: str) -> Value:
+    """The value in columns 11 to 80 of a card (FITS 4.0, 4.2): text, truth, whole or real number; None if none."""
+    match = _STRING.match(text)
+    if match:
+        return match.group(1).replace("''", "'").rstrip()
+    bare = text.split("/", 1)[0].strip()
+    if bare in ("T", "F"):
+        return bare == "T"
+    if _WHOLE.fullmatch(bare):
+        return int(bare)
+    if _REAL.fullmatch(bare):
+        return float(bare.upper().replace("D", "E"))
+    return None

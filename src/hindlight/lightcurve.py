@@ -1,0 +1,232 @@
+"""Light curves: what a statistic is given.
+
+`LightCurve` is one position in one channel; `Block` holds many positions over the same frames as matrices. All arrays
+are read-only. Nothing here reads files or decides anything.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass, fields
+from functools import cached_property
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+QUIET_CLIP_SIGMA = 3.0
+QUIET_ROUNDS = 5
+
+
+@dataclass(frozen=True)
+class Channel:
+    """What makes fluxes comparable; a position has one light curve per channel.
+
+    `frequency_hz` and `beam_arcsec` are NaN where the headers do not give them. `label` is the key used in every table.
+    """
+
+    label: str
+    instrument: str = ""
+    band: str = ""
+    stokes: str = "I"
+    frequency_hz: float = float("nan")
+    beam_arcsec: float = float("nan")
+    unit: str = ""
+
+    @property
+    def signed(self) -> bool:
+        """Whether the flux may truly be negative, as Stokes Q, U and V may: such channels are judged two-sided."""
+        return self.stokes in ("Q", "U", "V")
+
+
+def freeze(array: NDArray[Any], dtype: Any = np.float64) -> Any:
+    """A read-only, contiguous copy of `array` with the given type."""
+    frozen = np.array(array, dtype=dtype, order="C", copy=True)
+    frozen.flags.writeable = False
+    return frozen
+
+
+@dataclass(frozen=True, eq=False)
+class LightCurve:
+    """The usable measurements of one position in one channel, in order of time.
+
+    Every array has shape (n,): only measurements with finite flux and a positive, finite error are here.
+
+    t_tdb_s
+        Middle of the exposure's good time, seconds from J2000.0 TDB at the Solar-System barycentre; NaN (at the end)
+        where the frame has no clock. A plugin whose `uses_times` is true never sees such samples.
+    exposure_s
+        Good time in seconds; NaN where unknown.
+    flux, flux_err
+        Calibrated flux and its 1-sigma error in the channel's unit; may be negative.
+    raw_flux, raw_flux_err
+        The same before the frame's gain and error scale.
+    frame
+        Frame identifiers; flags, see `hindlight.Flag`.
+    """
+
+    name: str
+    channel: Channel
+    t_tdb_s: FloatArray
+    exposure_s: FloatArray
+    flux: FloatArray
+    flux_err: FloatArray
+    raw_flux: FloatArray
+    raw_flux_err: FloatArray
+    frame: IntArray
+    flags: IntArray
+
+    @classmethod
+    def from_arrays(
+        cls,
+        t_tdb_s: NDArray[Any],
+        flux: NDArray[Any],
+        flux_err: NDArray[Any],
+        *,
+        exposure_s: NDArray[Any] | None = None,
+        name: str = "",
+        channel: Channel | None = None,
+        frame: NDArray[Any] | None = None,
+        flags: NDArray[Any] | None = None,
+        raw_flux: NDArray[Any] | None = None,
+        raw_flux_err: NDArray[Any] | None = None,
+    ) -> LightCurve:
+        """A light curve of plain arrays of shape (n,): unusable samples dropped, the rest put in order of time."""
+        flux = np.asarray(flux, float)
+        flux_err = np.asarray(flux_err, float)
+        t_tdb_s = np.asarray(t_tdb_s, float)
+        n = flux.size
+        frame = np.arange(n) if frame is None else np.asarray(frame)
+        good = np.isfinite(flux) & np.isfinite(flux_err) & (flux_err > 0)
+        order = np.lexsort((frame, t_tdb_s))
+        order = order[good[order]]
+
+        def pick(array: NDArray[Any] | None, default: NDArray[Any], dtype: type) -> Any:
+            return freeze((default if array is None else np.asarray(array))[order], dtype)
+
+        return cls(
+            name=name,
+            channel=channel or Channel(label=""),
+            t_tdb_s=pick(t_tdb_s, t_tdb_s, np.float64),
+            exposure_s=pick(exposure_s, np.full(n, np.nan), np.float64),
+            flux=pick(flux, flux, np.float64),
+            flux_err=pick(flux_err, flux_err, np.float64),
+            raw_flux=pick(raw_flux, flux, np.float64),
+            raw_flux_err=pick(raw_flux_err, flux_err, np.float64),
+            frame=pick(frame, frame, np.int64),
+            flags=pick(flags, np.zeros(n), np.int64),
+        )
+
+    def __len__(self) -> int:
+        return int(self.flux.size)
+
+    def select(self, keep: NDArray[np.bool_]) -> LightCurve:
+        """The samples where `keep`, shape (n,), is true."""
+        arrays: dict[str, Any] = {
+            f.name: freeze(value[keep], value.dtype.type)
+            for f in fields(self)
+            if isinstance(value := getattr(self, f.name), np.ndarray)
+        }
+        return LightCurve(name=self.name, channel=self.channel, **arrays)
+
+    @cached_property
+    def timed(self) -> LightCurve:
+        """The samples whose time is known."""
+        known = np.isfinite(self.t_tdb_s)
+        return self if bool(known.all()) else self.select(known)
+
+    @cached_property
+    def quiet_level(self) -> tuple[float, float]:
+        """The flux when the source is not bright, and its 1-sigma error; see `quiet_level`."""
+        return quiet_level(self.flux, self.flux_err)
+
+    @cached_property
+    def above_quiet(self) -> FloatArray:
+        """Excess over the quiet level in units of its own error, shape (n,).
+
+        The error of the difference is hypot(flux_err, error of the quiet level).
+        """
+        level, error = self.quiet_level
+        return (self.flux - level) / np.hypot(self.flux_err, error)
+
+
+@dataclass(frozen=True, eq=False)
+class Block:
+    """Many positions over the same frames in one channel: what `compute_block` of a statistic is given.
+
+    Matrices have shape (n_positions, n_frames), NaN where a position has no usable measurement in a frame; `names` has
+    n_positions entries, `frame` has shape (n_frames,). Frames are in order of their identifier; times differ from
+    position to position by the barycentric correction, so a row is *not* always in order of time.
+    """
+
+    names: tuple[str, ...]
+    channel: Channel
+    frame: IntArray
+    t_tdb_s: FloatArray
+    exposure_s: FloatArray
+    flux: FloatArray
+    flux_err: FloatArray
+    raw_flux: FloatArray
+    raw_flux_err: FloatArray
+    flags: IntArray
+
+    def __len__(self) -> int:
+        return len(self.names)
+
+    def curve(self, row: int) -> LightCurve:
+        """The light curve of one row."""
+        return LightCurve.from_arrays(
+            self.t_tdb_s[row],
+            self.flux[row],
+            self.flux_err[row],
+            exposure_s=self.exposure_s[row],
+            name=self.names[row],
+            channel=self.channel,
+            frame=self.frame,
+            flags=self.flags[row],
+            raw_flux=self.raw_flux[row],
+            raw_flux_err=self.raw_flux_err[row],
+        )
+
+    def curves(self) -> Iterator[LightCurve]:
+        """The light curves of all rows, in order."""
+        return (self.curve(row) for row in range(len(self.names)))
+
+
+def weighted_mean(flux: FloatArray, flux_err: FloatArray) -> tuple[float, float]:
+    """Inverse-variance weighted mean and its 1-sigma error; NaN, NaN for no samples."""
+    if flux.size == 0:
+        return float("nan"), float("nan")
+    weight = 1.0 / flux_err**2
+    total = float(weight.sum())
+    return float((weight * flux).sum()) / total, total**-0.5
+
+
+def quiet_level(flux: FloatArray, flux_err: FloatArray) -> tuple[float, float]:
+    """The flux of a position when it is not bright, with its 1-sigma error.
+
+    A weighted mean after samples further than three of their own (scaled) errors from the running level have been set
+    aside, started from the median so that up to half of the samples may be bright. The error carries the scatter of
+    the samples kept, where that exceeds their errors. `flux` and `flux_err` have shape (n,), finite, errors positive;
+    NaN, NaN for no samples. Clipped means are common practice, no source.
+    """
+    if flux.size < 3:
+        return weighted_mean(flux, flux_err)
+    level = float(np.median(flux))
+    spread = float(np.median(np.abs(flux - level) / flux_err)) * 1.482602
+    scale = max(1.0, spread)
+    keep = np.ones(flux.size, dtype=bool)
+    for _ in range(QUIET_ROUNDS):
+        before = keep
+        keep = np.abs(flux - level) <= QUIET_CLIP_SIGMA * scale * flux_err
+        if keep.sum() < 2:
+            return weighted_mean(flux, flux_err)
+        level, error = weighted_mean(flux[keep], flux_err[keep])
+        if np.array_equal(keep, before):
+            break
+    residual = (flux[keep] - level) / flux_err[keep]
+    excess = float((residual**2).sum()) / max(1, int(keep.sum()) - 1)
+    return level, error * max(1.0, excess) ** 0.5

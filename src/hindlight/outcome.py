@@ -1,0 +1,223 @@
+"""The tables a run ends with: candidates, controls, statistics and plugin faults, with their metadata.
+
+Pure: what was judged, ranked and examined in, tables out. Nothing is written here.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import astropy.table
+
+from hindlight import candidates, ranking
+from hindlight.conclude import Field, PValues
+from hindlight.fence import Fault, blank
+from hindlight.host import Plugins
+from hindlight.judge import full_columns
+from hindlight.plugin import Column, ConsistencyCheck, PeriodSearch, Statistic
+from hindlight.schema import CANDIDATES, PLUGIN_FAULTS, TableColumn
+from hindlight.settings import Settings
+from hindlight.tables import astropy_table, rows_to_columns
+
+CAUTION = (
+    "A low p_value says that a position varies unlike blank sky in the same frames, not what it is. Look at the frames, "
+    "at the other frames of the same night, and for a second instrument, before telescope time or a claim rests on it."
+)
+
+NO_EPHEMERIS = dict.fromkeys(("period", "epoch", "period_dot", "window"), float("nan"))
+
+
+def plugin_cells(found: Field, plugins: Plugins) -> list[dict[str, Any]]:
+    """For every position of a field the plugins' columns, each plugin's in the channel where it is furthest out."""
+    columns = full_columns([*plugins.statistics, *plugins.period_searches])
+    controls = found.rows(found.controls)
+    keys = ranking.calibrated_keys(found.judgement, columns, controls)
+    matrix = ranking.oriented_matrix(found.judgement, keys, columns, controls)
+    cells: list[dict[str, Any]] = [{} for _ in range(len(found.ids))]
+    for plugin in [*plugins.statistics, *plugins.period_searches]:
+        labels = ranking.reported_channels(found.judgement, plugin.name, keys, matrix, controls)
+        for index, label in enumerate(labels):
+            cells[index][f"{plugin.name}_channel"] = label
+            for column in plugin.columns:
+                full = f"{plugin.name}_{column.name}"
+                values = found.judgement.values.get((label, full))
+                cells[index][full] = blank(column) if values is None else values[index]
+    return cells
+
+
+def plugin_columns(plugins: Plugins) -> list[TableColumn]:
+    """The declared columns of the candidate table's plugin blocks."""
+    made: list[TableColumn] = []
+    for plugin in [*plugins.statistics, *plugins.period_searches, *plugins.checks]:
+        if isinstance(plugin, ConsistencyCheck):
+            made.append(
+                TableColumn(f"{plugin.name}_verdict", "pass, fail or uninformative; '' if not asked", dtype="str")
+            )
+            made.append(TableColumn(f"{plugin.name}_evidence", "why, in a sentence", dtype="str"))
+        if isinstance(plugin, Statistic | PeriodSearch):
+            where = "'' for all together" if getattr(plugin, "all_channels", True) else "where they are furthest out"
+            made.append(TableColumn(f"{plugin.name}_channel", f"channel of these columns, {where}", dtype="str"))
+        made += [_full(plugin.name, column) for column in plugin.columns]
+    return made
+
+
+def _full(name: str, column: Column) -> TableColumn:
+    flux = "" if column.flux_power == 0 else f" (in flux unit to the power {column.flux_power:g} of that channel)"
+    return TableColumn(f"{name}_{column.name}", column.doc + flux, column.unit, column.ucd, column.dtype)
+
+
+def chance_cells(found: Field, index: int, at: int, p: PValues) -> dict[str, Any]:
+    """The columns of a target that come from its rank; `at` is its place among all targets of the run."""
+    rank, deciding = found.ranked.ranks[index], found.ranked.deciding[index]
+    channel, column = deciding or ("", "")
+    return {
+        "p_value": p.p[at],
+        "q_value": p.q[at],
+        "p_is_extrapolated": bool(p.extrapolated[at]),
+        "p_empirical": p.empirical[at],
+        "lowest_p_statistic": f"{column} in {channel}" if channel else column,
+        "beyond_controls": rank.beyond,
+        "n_controls": int(found.ranked.n_controls[index]),
+    }
+
+
+def notes(found: Field, index: int, at: int, p: PValues) -> str:
+    """What a reader should know before trusting a row."""
+    n_controls = int(found.ranked.n_controls[index])
+    said = []
+    if p.short[at]:
+        said.append(f"{n_controls} controls cannot decide at this level, {p.needed} are needed")
+    if p.extrapolated[at]:
+        said.append("p_value is the upper bound of a fitted tail, beyond every control")
+    if n_controls == 0:
+        said.append("no control serves this target: no p-value")
+    return "; ".join(said)
+
+
+def remarks(p: PValues, fields: Sequence[Field], settings: Settings) -> tuple[str, ...]:
+    """What the last lines of a run must say."""
+    said = []
+    sizes = [int(n) for found in fields for n in found.ranked.n_controls]
+    if sizes and min(sizes) < settings.controls.per_field:
+        said.append(
+            f"controls per target: {min(sizes)} to {max(sizes)}, {settings.controls.per_field} were asked for; "
+            "no more fit into the frames clear of sources and of each other"
+        )
+    if p.short.any():
+        said.append(
+            f"{int(p.short.sum())} targets lie beyond every control, but their number cannot decide at q < "
+            f"{settings.ranking.level:g}: {p.needed} controls a field would ([controls] per_field)"
+        )
+    if p.extrapolated.any():
+        said.append(f"{int(p.extrapolated.sum())} p-values are upper bounds of a fitted tail (p_is_extrapolated)")
+    return tuple(said)
+
+
+def meta(settings: Settings, p: PValues, fields: Sequence[Field]) -> dict[str, Any]:
+    """Metadata of the result tables: the levels in force, and the usual caution."""
+    return {
+        "caution": CAUTION,
+        "false_discovery_level": settings.ranking.level,
+        "detection_false_alarm_rate": settings.detection.false_alarms,
+        "detection_rule": "a blank position has any detection in a channel with this chance, from the controls",
+        "limit_confidence": 0.95,
+        "controls_needed_for_one_candidate": p.needed,
+        "n_fields": len(fields),
+    }
+
+
+@dataclass(frozen=True, eq=False)
+class Outcome:
+    """What a run ends with: the candidate table, counts of standings, and numbers for the last lines."""
+
+    run: Path
+    table: astropy.table.Table
+    standings: Mapping[str, int]
+    n_frames: int
+    n_measurements: int
+    rejects: Mapping[str, int]
+    faults: tuple[Fault, ...]
+    extrapolated: int
+    remarks: tuple[str, ...]
+
+
+def summary(result: Outcome) -> str:
+    """The text of summary.txt, which is also what a run says at its end."""
+    counted = ", ".join(f"{n} {word}" for word, n in result.standings.items() if n)
+    lines = [
+        f"{len(result.table)} targets, {result.n_frames} frames, {result.n_measurements} measurements of targets",
+        f"standings: {counted}",
+    ]
+    aside = ", ".join(f"{n} {reason}" for reason, n in result.rejects.items())
+    lines.append(f"set aside: {aside or 'nothing'}" + (" (rejects.ecsv)" if aside else ""))
+    count = sum(fault.count for fault in result.faults)
+    names = sorted({fault.plugin for fault in result.faults})
+    lines.append(
+        f"plugin faults: {count or 'none'}" + (f" in {', '.join(names)} (plugin_faults.ecsv)" if count else "")
+    )
+    return "\n".join([*lines, *result.remarks, CAUTION]) + "\n"
+
+
+def candidate_table(
+    rows: Sequence[Mapping[str, Any]], plugins: Plugins, meta: Mapping[str, Any]
+) -> astropy.table.Table:
+    """The candidate table, best first."""
+    declared = [*CANDIDATES, *plugin_columns(plugins)]
+    arranged = [rows[i] for i in candidates.order(rows)]
+    blanks = {"str": "", "bool": False, "int64": 0, "float64": float("nan")}
+    values = {c.name: [row.get(c.name, blanks[c.dtype]) for row in arranged] for c in declared}
+    return astropy_table(declared, values, meta)
+
+
+def control_columns(fields: Sequence[Field], plugins: Plugins) -> tuple[list[TableColumn], dict[str, Any]]:
+    """The controls' table: id, field, every calibrated column, and each control's p-value among the others."""
+    calibrated = [
+        _full(plugin.name, column)
+        for plugin in [*plugins.statistics, *plugins.period_searches]
+        for column in plugin.columns
+        if column.unusual is not None
+    ]
+    declared = [
+        TableColumn("id", "identifier of the position", dtype="int64", ucd="meta.id"),
+        TableColumn("field", "cell of sky", dtype="int64"),
+        *calibrated,
+        TableColumn("p_value", "rank of the control among all controls of its field", ucd="stat.probability"),
+    ]
+    values: dict[str, list[Any]] = {c.name: [] for c in declared}
+    for found in fields:
+        cells = plugin_cells(found, plugins)
+        for control, row, p in zip(found.controls, found.rows(found.controls), found.ranked.control_p, strict=True):
+            values["id"].append(int(control))
+            values["field"].append(found.number)
+            values["p_value"].append(float(p))
+            for column in calibrated:
+                values[column.name].append(float(cells[row][column.name]))
+    return declared, values
+
+
+def statistic_columns(
+    fields: Sequence[Field], names: Mapping[int, str], plugins: Plugins
+) -> tuple[list[TableColumn], dict[str, Any]]:
+    """Every statistic of every target in every channel ('' for all together): one row per target and channel."""
+    declared = [
+        TableColumn("name", "target", dtype="str", ucd="meta.id;src"),
+        TableColumn("channel", "key of comparable fluxes; '' for all channels together", dtype="str"),
+        *[_full(p.name, c) for p in [*plugins.statistics, *plugins.period_searches] for c in p.columns],
+    ]
+    rows = []
+    for found in fields:
+        labels = sorted({channel for channel, _ in found.judgement.values})
+        for target, index in zip(found.targets, found.rows(found.targets), strict=True):
+            for label in labels:
+                cells = {full: v[index] for (channel, full), v in found.judgement.values.items() if channel == label}
+                rows.append({"name": names[int(target)], "channel": label, **cells})
+    return declared, rows_to_columns(declared, rows)
+
+
+def fault_table(faults: Sequence[Fault]) -> astropy.table.Table:
+    """plugin_faults.ecsv."""
+    rows = [{c.name: getattr(fault, c.name) for c in PLUGIN_FAULTS} for fault in faults]
+    return astropy_table(PLUGIN_FAULTS, rows_to_columns(PLUGIN_FAULTS, rows))

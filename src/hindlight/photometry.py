@@ -1,0 +1,286 @@
+"""Forced photometry: stamps to fluxes, at given pixels of an image or at given positions of a frame.
+
+Local background and noise come from `background`, the flux from an estimator plugin; flags say what is wrong with a
+measurement. Times, channels and light curves are the business of others.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from hindlight.archive import MEGABYTE
+from hindlight.background import Annulus, local_background
+from hindlight.detection import detect_bright
+from hindlight.errors import UsageError
+from hindlight.facts import NAN
+from hindlight.headers import fold_unit
+from hindlight.lightcurve import FloatArray, IntArray
+from hindlight.pixels import Floats, Pixels, PlanePlace, Windows, find_image, read_plane
+from hindlight.plugin import BeamShape, Estimator, Stamps
+from hindlight.schema import Flag
+from hindlight.settings import Photometry, Settings
+from hindlight.sky import Projection, beam_shape, projection
+
+NEIGHBOUR_SNR = 5.0  # a neighbour must stand this far above the background to be flagged
+LATTICE_PER_FWHM = 2.5  # neighbours are looked for on a lattice this fine: a peak between its points loses 20 %
+
+Columns = dict[str, NDArray[Any]]
+
+
+@dataclass(frozen=True)
+class FrameToMeasure:
+    """What photometry needs to know of a frame.
+
+    Beam in arcsec and degrees east of north, NaN where unknown; `mjd` NaN where there is no date; `electrons_per_unit`
+    and `saturation` in the unit of the pixels, NaN where unknown.
+    """
+
+    path: str
+    hdu: int = 0
+    plane: int = 0
+    mjd: float = NAN
+    beam_major: float = NAN
+    beam_minor: float = NAN
+    beam_angle: float = NAN
+    unit: str = ""
+    electrons_per_unit: float = NAN
+    saturation: float = NAN
+
+
+@dataclass(frozen=True, eq=False)
+class OpenFrame:
+    """A frame whose header has been read: where its pixels are, its projection, its beam in pixels."""
+
+    place: PlanePlace
+    sky: Projection
+    beam: BeamShape
+    unpacked_limit: int
+
+    def pixels(self, windows: Windows | None = None) -> Pixels:
+        """Its pixels; see `pixels.read_plane`."""
+        return read_plane(self.place, self.unpacked_limit, windows)
+
+
+def choose_estimator(
+    estimators: Sequence[Estimator], unit: str, setting: str = "auto", beam_known: bool = True
+) -> Estimator:
+    """The estimator that is set by name, or for 'auto' the one that claims the unit.
+
+    One that needs the beam is passed over where the beam is not known; a unit that nobody claims goes to the estimator
+    that claims no unit (''). Raises `UsageError` for a name that no estimator has, or where there is none at all.
+    """
+    names = sorted(estimator.name for estimator in estimators)
+    if setting != "auto":
+        for estimator in estimators:
+            if estimator.name == setting:
+                return estimator
+        raise UsageError(f"[photometry] estimator: no estimator {setting!r}; there are auto, {', '.join(names)}")
+    ordered = sorted(estimators, key=lambda estimator: estimator.name)
+    for wanted in (fold_unit(unit), ""):
+        for estimator in ordered:
+            if wanted in estimator.units and (beam_known or not estimator.needs_beam):
+                return estimator
+    if not ordered:
+        raise UsageError("no estimator plugin is installed; fluxes cannot be measured")
+    return ordered[0]
+
+
+def measure_frame(
+    frame: FrameToMeasure, ra: FloatArray, dec: FloatArray, estimator: Estimator, settings: Settings
+) -> Columns:
+    """Measure ICRS positions (degrees, shape (n,)) in a frame.
+
+    Returns columns of shape (m,) for the m positions on the image: `index` among the n, `x`, `y` (0-based pixels), and
+    those of `measure`. Raises `SetAsideError`, `OSError`, or `ValueError` from an unusable projection.
+    """
+    opened = open_frame(frame, settings)
+    x, y = opened.sky.icrs_to_pixel(ra, dec, frame.mjd)
+    width, height = opened.place.width, opened.place.height
+    index = np.flatnonzero((x >= -0.5) & (y >= -0.5) & (x < width - 0.5) & (y < height - 0.5))
+    x, y = x[index], y[index]
+    if len(index) == 0:
+        pixels = Pixels(np.zeros((1, 1), np.float32))  # nothing will be read
+    else:
+        half = max(Annulus.around(opened.beam.fwhm, settings.photometry).half, _half_width(estimator, opened.beam))
+        pixels = opened.pixels(Windows(_nearest(x), _nearest(y), half))
+    found = measure(
+        pixels, x, y, opened.beam, estimator, settings.photometry, frame.electrons_per_unit, frame.saturation
+    )
+    return {"index": index, "x": x, "y": y, **found}
+
+
+def bright_sources(
+    frame: FrameToMeasure, snr: float, settings: Settings
+) -> tuple[FloatArray, FloatArray, FloatArray, float]:
+    """Sources brighter than `snr` in a whole frame: ICRS degrees and S/N, shape (n,), and the beam's width in arcsec.
+
+    Raises as `measure_frame` does.
+    """
+    opened = open_frame(frame, settings)
+    x, y, found = detect_bright(opened.pixels().whole(), opened.beam, snr)
+    ra, dec = opened.sky.pixel_to_icrs(x, y, frame.mjd)
+    known = np.isfinite(ra)
+    return ra[known], dec[known], found[known], opened.beam.major * opened.sky.pixel_scale_arcsec
+
+
+@dataclass(frozen=True, eq=False)
+class FrameCutout:
+    """Raw pixels around a position: shape (size, size), the position at (x, y) in them, 0-based.
+
+    `to_sky` of shape (2, 2) turns a pixel offset into ICRS (east, north) arcsec; `fwhm` is the beam in pixels.
+    """
+
+    pixels: FloatArray
+    x: float
+    y: float
+    to_sky: FloatArray
+    fwhm: float
+
+
+def cutout(frame: FrameToMeasure, x: float, y: float, half_width: float, settings: Settings) -> FrameCutout:
+    """A square around 0-based pixel coordinates of a frame, reaching `half_width` beams to each side.
+
+    NaN where blank or outside. Raises as `measure_frame` does.
+    """
+    opened = open_frame(frame, settings)
+    half = max(1, math.ceil(half_width * opened.beam.fwhm))
+    ix, iy = _nearest(np.array([x])), _nearest(np.array([y]))
+    stamp = opened.pixels(Windows(ix, iy, half)).stamps(ix, iy, half)[0].astype(float)
+    to_sky = opened.sky.jacobian_icrs(x, y, frame.mjd)
+    return FrameCutout(stamp, x - float(ix[0]) + half, y - float(iy[0]) + half, to_sky, opened.beam.fwhm)
+
+
+def open_frame(frame: FrameToMeasure, settings: Settings) -> OpenFrame:
+    """Read a frame's header. Raises as `measure_frame` does."""
+    limit = settings.inventory.unpacked_limit_mb * MEGABYTE
+    image = find_image(frame.path, frame.hdu, limit)
+    sky = projection(image.hdu.cards, frame.path)
+    return OpenFrame(PlanePlace(image, sky.axes, frame.plane), sky, _beam(frame, sky, settings.photometry), limit)
+
+
+def _beam(frame: FrameToMeasure, sky: Projection, settings: Photometry) -> BeamShape:
+    """The frame's beam in pixels; a round one of the assumed width where it is unknown."""
+    if not frame.beam_major > 0.0:
+        return BeamShape(settings.assumed_fwhm_pixels, settings.assumed_fwhm_pixels, 0.0)
+    minor = frame.beam_minor if frame.beam_minor > 0.0 else frame.beam_major
+    angle = frame.beam_angle if math.isfinite(frame.beam_angle) else 0.0
+    return beam_shape(frame.beam_major, minor, angle, sky.reference_jacobian)
+
+
+def measure(
+    pixels: Pixels,
+    x: FloatArray,
+    y: FloatArray,
+    beam: BeamShape,
+    estimator: Estimator,
+    settings: Photometry,
+    electrons_per_unit: float = NAN,
+    saturation: float = NAN,
+) -> Columns:
+    """Measure 0-based pixel coordinates, shape (n,), of an image.
+
+    Returns `flux`, `flux_err`, `background` (per pixel), `rms` (per pixel) in the pixels' unit, and `flags` (bits of
+    `schema.Flag`), each of shape (n,). Flux and error are NaN where pixels that carry weight are blank or outside, or
+    where the annulus holds fewer than 20 pixels or no noise.
+    """
+    ix, iy = _nearest(x), _nearest(y)
+    annulus = Annulus.around(beam.fwhm, settings)
+    local = local_background(pixels, ix, iy, annulus)
+    beam_pixels = math.pi * beam.major * beam.minor / (4.0 * math.log(2.0)) / annulus.step**2
+    half = _half_width(estimator, beam)
+    raw = pixels.stamps(ix, iy, half)
+    stamps = Stamps(
+        pixels=raw - local.level[:, None, None],
+        dx=x - ix,
+        dy=y - iy,
+        rms=local.rms,
+        background_err=local.error(beam_pixels if estimator.correlated else 1.0),
+        beam=beam,
+        electrons_per_unit=electrons_per_unit,
+    )
+    flux, flux_err = _estimate(estimator, stamps)
+    thin = 2 * local.used < len(annulus.index)
+    flags = np.where(thin | np.isnan(local.rms), Flag.THIN_BACKGROUND, 0)
+    flags |= _gaps(pixels, ix, iy, half, np.isnan(flux), raw)
+    if saturation == saturation:
+        near = _distance(half) <= estimator.radius(beam) + 0.5
+        flags |= np.where((raw[:, near] >= saturation).any(axis=1), Flag.SATURATED, 0)
+    flags |= _neighbours(pixels, ix, iy, beam, settings, local.level + NEIGHBOUR_SNR * local.rms)
+    bad = ~(np.isfinite(flux) & np.isfinite(flux_err))
+    flux[bad] = flux_err[bad] = np.nan
+    return {
+        "flux": flux,
+        "flux_err": flux_err,
+        "background": local.level,
+        "rms": local.rms,
+        "flags": flags.astype(np.int64),
+    }
+
+
+def _nearest(coordinate: FloatArray) -> IntArray:
+    return np.floor(coordinate + 0.5).astype(np.int64)
+
+
+def _half_width(estimator: Estimator, beam: BeamShape) -> int:
+    """Of the stamps that hold every pixel which reaches into the estimator's radius, wherever in a pixel they centre."""
+    return max(1, math.ceil(estimator.radius(beam)))
+
+
+def _distance(half: int, step: int = 1) -> FloatArray:
+    """Of a stamp's pixel centres from its middle."""
+    offset = np.arange(-half, half + 1, step, dtype=float) ** 2
+    distance: FloatArray = np.sqrt(offset[:, None] + offset)
+    return distance
+
+
+def _estimate(estimator: Estimator, stamps: Stamps) -> tuple[FloatArray, FloatArray]:
+    """What the estimator finds, checked for shape and made writable."""
+    flux, flux_err = estimator.measure(stamps)
+    flux, flux_err = np.array(flux, float), np.array(flux_err, float)
+    if flux.shape != stamps.dx.shape or flux_err.shape != stamps.dx.shape:
+        shapes = f"{flux.shape} and {flux_err.shape}"
+        raise TypeError(f"estimator {estimator.name} returned shapes {shapes}, expected {stamps.dx.shape} twice")
+    return flux, flux_err
+
+
+def _gaps(
+    pixels: Pixels, ix: IntArray, iy: IntArray, half: int, lost: NDArray[np.bool_], raw: Floats
+) -> NDArray[np.int64]:
+    """EDGE and BLANKED for positions whose flux is lost to missing pixels."""
+    flags = np.zeros(len(ix), np.int64)
+    rows = np.flatnonzero(lost)
+    if len(rows) == 0:
+        return flags
+    height, width = pixels.shape
+    offset = np.arange(-half, half + 1)
+    columns, lines = ix[rows, None] + offset, iy[rows, None] + offset
+    inside = ((lines >= 0) & (lines < height))[:, :, None] & ((columns >= 0) & (columns < width))[:, None, :]
+    flags[rows] |= np.where(inside.all(axis=(1, 2)), 0, Flag.EDGE)
+    flags[rows] |= np.where((inside & np.isnan(raw[rows])).any(axis=(1, 2)), Flag.BLANKED, 0)
+    return flags
+
+
+def _neighbours(
+    pixels: Pixels, ix: IntArray, iy: IntArray, beam: BeamShape, settings: Photometry, threshold: FloatArray
+) -> NDArray[np.int64]:
+    """NEIGHBOUR where, within the annulus' inner radius, the highest pixel beyond a beam from the position is above
+
+    `threshold`, shape (n,), and above every pixel within a beam.
+    """
+    step = max(1, int(beam.fwhm / LATTICE_PER_FWHM))
+    reach = settings.annulus_inner * beam.fwhm
+    half = max(1, int(reach) // step) * step
+    stamps = pixels.stamps(ix, iy, half, step).reshape(len(ix), -1)
+    distance = _distance(half, step).ravel()
+    around = np.flatnonzero((distance > beam.major) & (distance <= reach))
+    if len(around) == 0:
+        return np.zeros(len(ix), np.int64)
+    other = np.fmax.reduce(stamps[:, around], axis=1)
+    own = np.fmax.reduce(stamps[:, np.flatnonzero(distance <= beam.major)], axis=1)
+    return np.where((other > threshold) & ~(other <= own), np.int64(Flag.NEIGHBOUR), np.int64(0))

@@ -1,0 +1,269 @@
+"""Pixels of one plane of one HDU: stamps around positions, or the whole.
+
+A plain file is mapped and only the stamps' pixels are read; a gzip file is unpacked once, with a cap; a tile-compressed
+image is unpacked around the positions where they are few, else whole. Values are scaled, blanks are NaN, bytes native.
+Nothing here knows of sky or beams.
+"""
+
+from __future__ import annotations
+
+import gzip
+import io
+import math
+import mmap
+import os
+import warnings
+import zlib
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from astropy.io import fits
+from numpy.lib.stride_tricks import sliding_window_view
+from numpy.typing import NDArray
+
+from hindlight.files import PlainSource, open_source
+from hindlight.headers import Hdu, SetAsideError, Source, read_hdus
+from hindlight.lightcurve import IntArray
+
+TILE_REACH = 64  # pixels that a tile typically sticks out beyond the window asked for
+SECTIONS_BELOW = 0.25  # windows with their tiles must stay below this fraction of the image to be read one by one
+
+Floats = NDArray[np.floating[Any]]
+
+
+@dataclass(frozen=True, eq=False)
+class Pixels:
+    """One image as it is stored, shape (height, width), and what turns stored numbers into values.
+
+    value = zero + scale * stored; the stored integer `blank` means no value. Values are float32 where that holds every
+    stored number (as in astropy), float64 otherwise.
+    """
+
+    stored: NDArray[Any]
+    scale: float = 1.0
+    zero: float = 0.0
+    blank: int | None = None
+
+    @property
+    def shape(self) -> tuple[int, int]:
+        """Height and width."""
+        height, width = self.stored.shape
+        return height, width
+
+    def whole(self) -> Floats:
+        """All values, shape (height, width), NaN where blank."""
+        return self._values(self.stored)
+
+    def stamps(self, ix: IntArray, iy: IntArray, half: int, step: int = 1) -> Floats:
+        """Values around pixels (ix, iy), shape (n, m, m) with m = 2 * half // step + 1; NaN where blank or outside.
+
+        `half` is a multiple of `step`; every `step`-th row and column is taken, the middle ones among them.
+        """
+        height, width = self.stored.shape
+        size = 2 * half + 1
+        outside = (ix < half) | (iy < half) | (ix >= width - half) | (iy >= height - half)
+        if size > min(height, width) or outside.all():
+            return self._padded(ix, iy, half, step)
+        windows = sliding_window_view(self.stored, (size, size))[:, :, ::step, ::step]
+        values = self._values(windows[np.clip(iy - half, 0, height - size), np.clip(ix - half, 0, width - size)])
+        if outside.any():
+            values[outside] = self._padded(ix[outside], iy[outside], half, step)
+        return values
+
+    def _padded(self, ix: IntArray, iy: IntArray, half: int, step: int) -> Floats:
+        """The same where windows may reach over the edge."""
+        height, width = self.stored.shape
+        offsets = np.arange(-half, half + 1, step)
+        rows, columns = iy[:, None] + offsets, ix[:, None] + offsets
+        raw = self.stored[rows.clip(0, height - 1)[:, :, None], columns.clip(0, width - 1)[:, None, :]]
+        values = self._values(raw)
+        gone = ((rows < 0) | (rows >= height))[:, :, None] | ((columns < 0) | (columns >= width))[:, None, :]
+        values[gone] = np.nan
+        return values
+
+    def _values(self, raw: NDArray[Any]) -> Floats:
+        small = raw.dtype.itemsize <= 2 or (raw.dtype.kind == "f" and raw.dtype.itemsize == 4)
+        values: Floats = raw.astype(np.float32 if small else np.float64)
+        if self.scale != 1.0:
+            values *= self.scale
+        if self.zero != 0.0:
+            values += self.zero
+        if self.blank is not None:
+            values[raw == self.blank] = np.nan
+        return values
+
+
+@dataclass(frozen=True, eq=False)
+class Windows:
+    """The square windows of half width `half` around pixels (ix, iy) that will be asked for."""
+
+    ix: IntArray
+    iy: IntArray
+    half: int
+
+
+@dataclass(frozen=True, eq=False)
+class ImagePlace:
+    """An image HDU of a file, gzip-packed or not."""
+
+    path: str
+    packed: bool
+    hdu: Hdu
+
+
+@dataclass(frozen=True, eq=False)
+class PlanePlace:
+    """A plane of an image: `axes` are the FITS numbers of the two celestial axes, `index` counts in storage order.
+
+    Axes stored before or between the celestial ones have length one (`hindlight.headers.planes` refuses others).
+    """
+
+    image: ImagePlace
+    axes: tuple[int, int]
+    index: int = 0
+
+    @property
+    def width(self) -> int:
+        """Pixels along the first celestial axis."""
+        return self.image.hdu.axes[self.axes[0] - 1]
+
+    @property
+    def height(self) -> int:
+        """Pixels along the second celestial axis."""
+        return self.image.hdu.axes[self.axes[1] - 1]
+
+    @property
+    def lead(self) -> tuple[int, ...]:
+        """The indices of the plane on the axes stored outside the celestial ones, the slowest first, as in NumPy."""
+        outer = self.image.hdu.axes[: self.axes[1] - 1 : -1]
+        if self.index >= math.prod(outer):
+            raise SetAsideError("no_image", f"there is no plane {self.index}", self.image.hdu.index, self.index)
+        return tuple(int(i) for i in np.unravel_index(self.index, outer)) if outer else ()
+
+    def fault(self, reason: str, detail: str) -> SetAsideError:
+        """What to raise about this plane."""
+        return SetAsideError(reason, detail, self.image.hdu.index, self.index)
+
+
+class _HeadersOnly:
+    """A source that is not asked whether data are there: reading them will tell, and a gzip file stays packed."""
+
+    def __init__(self, source: Source) -> None:
+        self.read_at = source.read_at
+
+    def reaches(self, end: int) -> bool:
+        return True
+
+
+def find_image(path: str, hdu: int, unpacked_limit: int) -> ImagePlace:
+    """The image HDU with this index, by reading headers up to it.
+
+    `unpacked_limit`, in bytes, bounds what a gzip file may unpack to. Raises `OSError`, and `SetAsideError` where the
+    file is broken or has no such image.
+    """
+    with open_source(path, unpacked_limit) as source:
+        packed = not isinstance(source, PlainSource)
+        for found in read_hdus(_HeadersOnly(source) if packed else source):
+            if found.index == hdu and found.is_image:
+                return ImagePlace(path, packed, found)
+    raise SetAsideError("no_image", f"the file has no image in HDU {hdu}", hdu)
+
+
+def read_plane(place: PlanePlace, unpacked_limit: int, windows: Windows | None = None) -> Pixels:
+    """The pixels of a plane.
+
+    Only the pixels within `windows` need be right, all of them where it is None. A mapped file stays mapped as long as
+    the result lives. Raises `OSError` and `SetAsideError`; `unpacked_limit` is in bytes.
+    """
+    hdu, lead = place.image.hdu, place.lead
+    if hdu.compressed:
+        return _unpack_tiles(place, lead, unpacked_limit, windows)
+    dtype = np.dtype({8: ">u1", 16: ">i2", 32: ">i4", 64: ">i8", -32: ">f4", -64: ">f8"}[hdu.bitpix])
+    count = place.width * place.height
+    start = hdu.data_offset + place.index * count * dtype.itemsize
+    end = start + count * dtype.itemsize
+    packed = place.image.packed
+    buffer: Any = _unpacked(place, start, end, unpacked_limit) if packed else _mapped(place, end)
+    stored = np.frombuffer(buffer, dtype, count, 0 if packed else start)
+    return Pixels(stored.reshape(place.height, place.width), hdu.bscale, hdu.bzero, hdu.blank)
+
+
+def _mapped(place: PlanePlace, end: int) -> mmap.mmap:
+    """The first `end` bytes of a file as a read-only mapping, which goes away with the arrays that use it."""
+    descriptor = os.open(place.image.path, os.O_RDONLY)
+    try:
+        if os.fstat(descriptor).st_size < end:
+            raise _truncated(place, end)
+        return mmap.mmap(descriptor, end, access=mmap.ACCESS_READ)
+    finally:
+        os.close(descriptor)
+
+
+def _unpacked(place: PlanePlace, start: int, end: int, limit: int) -> bytes:
+    """Bytes of an unpacked gzip file."""
+    if end > limit:
+        raise place.fault("bad_compression", "the gzip file unpacks to more than the limit")
+    try:
+        with gzip.open(place.image.path) as stream:
+            stream.seek(start)
+            data = stream.read(end - start)
+    except (EOFError, zlib.error, gzip.BadGzipFile) as error:
+        raise place.fault("bad_compression", f"the gzip file is broken: {error}") from error
+    if len(data) < end - start:
+        raise _truncated(place, end)
+    return data
+
+
+def _truncated(place: PlanePlace, end: int) -> SetAsideError:
+    return place.fault("truncated", f"the pixels should end at byte {end}, the file ends before")
+
+
+def _unpack_tiles(place: PlanePlace, lead: tuple[int, ...], limit: int, windows: Windows | None) -> Pixels:
+    """A tile-compressed plane through astropy, which also scales and blanks it."""
+    hdu = place.image.hdu
+    if place.width * place.height * abs(hdu.bitpix) // 8 > limit:
+        raise place.fault("bad_compression", "the image unpacks to more than the limit")
+    target: Any = place.image.path
+    if place.image.packed:  # a tile-compressed file inside a gzip file
+        target = io.BytesIO(_unpacked(place, 0, hdu.data_offset + hdu.data_bytes, limit))
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")  # about cards; pixels that cannot be unpacked raise
+        try:
+            with fits.open(target) as hdus:
+                return Pixels(_sections(hdus[hdu.index].section, place, lead, windows))
+        except (OSError, ValueError, RuntimeError, IndexError, TypeError, KeyError) as error:
+            detail = " ".join(str(error).split())
+            raise place.fault("bad_compression", f"the tiles cannot be unpacked: {detail}") from error
+
+
+def _sections(section: Any, plane: PlanePlace, lead: tuple[int, ...], windows: Windows | None) -> NDArray[Any]:
+    """The plane, or an image of its shape that holds its pixels within the windows."""
+    rest = section.shape[len(lead) :]
+    # After the leading axes come the rows; of the others only the columns' axis may be longer than one.
+    across = next((i for i, length in enumerate(rest) if i > 0 and length == plane.width), 1)
+
+    def read(rows: slice, columns: slice) -> NDArray[Any]:
+        where = [rows, *(columns if i == across else slice(None) for i in range(1, len(rest)))]
+        values = np.asarray(section[(*lead, *where)])
+        return values.reshape(_length(rows, plane.height), _length(columns, plane.width))
+
+    whole = slice(None), slice(None)
+    if windows is None:
+        return read(*whole)
+    reach = 2 * (windows.half + TILE_REACH) + 1
+    if len(windows.ix) * reach**2 > SECTIONS_BELOW * plane.width * plane.height:
+        return read(*whole)
+    image: NDArray[Any] | None = None
+    for x, y in zip(windows.ix.tolist(), windows.iy.tolist(), strict=True):
+        rows = slice(max(0, y - windows.half), min(plane.height, y + windows.half + 1))
+        columns = slice(max(0, x - windows.half), min(plane.width, x + windows.half + 1))
+        values = read(rows, columns)
+        if image is None:
+            image = np.zeros((plane.height, plane.width), values.dtype)
+        image[rows, columns] = values
+    return read(*whole) if image is None else image
+
+
+def _length(part: slice, full: int) -> int:
+    return full if part.stop is None else part.stop - part.start

@@ -1,0 +1,217 @@
+"""What a run will do, pinned: frames into batches, targets and controls into fields and rounds.
+
+A plan is only ever added to: batches and rounds once given stay, so that a continued, an extended or a differently
+parallel run does the same pieces. Pure: tables in, tables out.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from hindlight.errors import UsageError
+from hindlight.footprints import coverage_matrix
+from hindlight.lightcurve import FloatArray, IntArray
+from hindlight.positions import BlankSky, Targets, control_grid, field_of, field_size, serves
+from hindlight.schema import FRAMES, POSITIONS
+from hindlight.settings import Controls
+from hindlight.systems import unit_vectors
+
+SAMPLED_FRAMES = 4000  # coverage is judged on at most this many frames of a field, evenly spaced
+WIDE_BEAM = 0.9  # controls stand apart by the beam that this fraction of the frames does not exceed
+SAME_PLACE_DEG = 1e-6
+
+Columns = dict[str, Any]
+
+
+def empty(columns: Sequence[Any]) -> Columns:
+    """A table without rows."""
+    types = {"float64": np.float64, "int64": np.int64, "bool": bool, "str": object}
+    return {c.name: np.empty(0, types[c.dtype]) for c in columns}
+
+
+def append(table: Columns, rows: Mapping[str, Any]) -> Columns:
+    """The rows of two tables with the same columns, one after the other."""
+    return {name: np.concatenate([values, np.asarray(rows[name], values.dtype)]) for name, values in table.items()}
+
+
+def file_keys(frames: Mapping[str, Any]) -> NDArray[np.object_]:
+    """What tells files apart: archive folder and path, one entry a frame."""
+    keys = np.empty(len(frames["path"]), object)
+    keys[:] = list(zip(frames["archive"], frames["path"], strict=True))
+    return keys
+
+
+def merge_frames(
+    pinned: Columns, found: Mapping[str, Any], present: set[tuple[str, str]], batch_frames: int
+) -> Columns:
+    """The frame table with what a new walk found.
+
+    `found` holds the frames of new and changed files, channel given; `present` every file still there. Frames of a
+    changed file become void and its new frames are added; those of a file that is gone stay, marked.
+    """
+    frames = {name: values.copy() for name, values in pinned.items()}
+    changed = set(file_keys(found).tolist())
+    for index, key in enumerate(file_keys(frames)):
+        if frames["state"][index] != "void":
+            frames["state"][index] = "void" if key in changed else "current" if key in present else "vanished"
+    n = len(found["path"])
+    if n == 0:
+        return frames
+    first_id = int(frames["id"].max()) + 1 if len(frames["id"]) else 0
+    first_batch = int(frames["batch"].max()) + 1 if len(frames["batch"]) else 0
+    added = dict(found)
+    added["id"] = first_id + np.arange(n)
+    added["batch"] = first_batch + np.arange(n) // batch_frames
+    added["state"] = np.full(n, "current", object)
+    return append(frames if len(frames["id"]) else empty(FRAMES), added)
+
+
+@dataclass(frozen=True, eq=False)
+class BrightSources:
+    """Sources found in reference frames: ICRS degrees, S/N and beam (arcsec), shapes (n,)."""
+
+    ra: FloatArray
+    dec: FloatArray
+    snr: FloatArray
+    beam: FloatArray
+
+    def blank_sky(self, least_deg: float) -> BlankSky:
+        """What to keep clear of: where a Gaussian of that S/N has fallen below a tenth of the noise, and a beam more."""
+        beam_deg = self.beam / 3600.0
+        reach = beam_deg * (np.sqrt(np.log2(np.maximum(10 * self.snr, 2.0))) / 2 + 1.0)
+        return BlankSky(unit_vectors(self.ra, self.dec), np.maximum(reach, least_deg))
+
+
+def new_targets(positions: Columns, targets: Targets) -> NDArray[np.int64]:
+    """Rows of the target list that the run does not have yet; raises `UsageError` for a name that has moved."""
+    old = {name: i for i, name in enumerate(positions["name"]) if name}
+    rows = []
+    for row, name in enumerate(targets.names):
+        if name not in old:
+            rows.append(row)
+            continue
+        i = old[name]
+        offset = np.hypot(
+            (positions["ra"][i] - targets.ra[row] + 180) % 360 - 180, positions["dec"][i] - targets.dec[row]
+        )
+        if offset > SAME_PLACE_DEG:
+            raise UsageError(
+                f"target {name!r}: this run has it at {positions['ra'][i]:.6f} {positions['dec'][i]:.6f}, the list at "
+                f"{targets.ra[row]:.6f} {targets.dec[row]:.6f}; give it another name, or another --out"
+            )
+    return np.array(rows, np.int64)
+
+
+def add_targets(positions: Columns, targets: Targets, rows: NDArray[np.int64], size_deg: float) -> Columns:
+    """The position table with these rows of the target list in a round of their own."""
+    n = len(rows)
+    if n == 0:
+        return positions
+    ra, dec = targets.ra[rows], targets.dec[rows]
+    return append(positions, {
+        "id": _next_id(positions) + np.arange(n), "name": [targets.names[row] for row in rows],
+        "kind": np.full(n, "target", object), "ra": ra, "dec": dec,
+        "pm_ra_cosdec": targets.column("pm_ra_cosdec")[rows], "pm_dec": targets.column("pm_dec")[rows],
+        "ref_epoch": targets.column("ref_epoch")[rows], "field": field_of(ra, dec, size_deg),
+        "round": np.full(n, _next_round(positions)), "clear_radius": np.zeros(n),
+    })  # fmt: skip
+
+
+def _next_id(positions: Columns) -> int:
+    return int(positions["id"].max()) + 1 if len(positions["id"]) else 0
+
+
+def _next_round(positions: Columns) -> int:
+    return int(positions["round"].max()) + 1 if len(positions["round"]) else 0
+
+
+def chosen_field_size(frames: Columns, settings: Controls) -> float:
+    """The side of a field in degrees: as set, or half the median footprint."""
+    return settings.field_size_deg or field_size(frames["radius"])
+
+
+@dataclass(frozen=True, eq=False)
+class FieldFrames:
+    """Frames that cover a target of one field: their rows in the frame table and who is in which.
+
+    `covered` has shape (n_frames, n_targets).
+    """
+
+    rows: IntArray
+    covered: NDArray[np.bool_]
+
+
+def covered(frames: Columns, rows: IntArray, vectors: FloatArray) -> NDArray[np.bool_]:
+    """Which of these frames cover which positions (n, 3) by their footprints; shape (n_rows, n)."""
+    outline = ("footprint", "centre_ra", "centre_dec", "radius")
+    return coverage_matrix({name: frames[name][rows] for name in outline}, vectors)
+
+
+def field_frames(frames: Columns, vectors: FloatArray) -> FieldFrames:
+    """The frames (at most some thousands, evenly spaced) that cover any of the positions (n, 3)."""
+    usable = np.flatnonzero(frames["state"] != "void")
+    inside = covered(frames, usable, vectors)
+    hit = np.flatnonzero(inside.any(axis=1))
+    if len(hit) > SAMPLED_FRAMES:
+        hit = hit[np.linspace(0, len(hit) - 1, SAMPLED_FRAMES).astype(int)]
+    return FieldFrames(usable[hit], inside[hit])
+
+
+def reference_frames(frames: Columns, rows: IntArray, per_channel: int) -> IntArray:
+    """The frames in which to look for bright sources: per channel the longest exposures, spread over time."""
+    chosen: list[int] = []
+    for label in sorted(set(frames["channel"][rows].tolist())):
+        mine = rows[frames["channel"][rows] == label]
+        exposure = np.nan_to_num(frames["exposure_s"][mine])
+        longest = mine[exposure >= 0.99 * exposure.max()]
+        spread = np.linspace(0, len(longest) - 1, min(per_channel, len(longest))).round().astype(int)
+        chosen += longest[np.unique(spread)].tolist()
+    return np.array(sorted(chosen), np.int64)
+
+
+def field_spacing(frames: Columns, rows: IntArray, settings: Controls, assumed_fwhm_pixels: float) -> float:
+    """The least distance between blank positions in degrees: so many of the wide beams among these frames."""
+    beam = frames["beam_major"][rows]
+    beam = np.where(np.isfinite(beam), beam, assumed_fwhm_pixels * frames["pixel_scale"][rows])
+    return settings.separation * float(np.quantile(beam, WIDE_BEAM, method="higher")) / 3600.0
+
+
+def add_controls(
+    positions: Columns, field: int, frames: Columns, within: FieldFrames, spacing_deg: float,
+    bright: BrightSources, settings: Controls,
+) -> Columns:  # fmt: skip
+    """The position table with the controls of one field, in the same round as the field's last targets."""
+    is_target = positions["kind"] == "target"
+    mine = is_target & (positions["field"] == field)
+    all_targets = unit_vectors(positions["ra"][is_target], positions["dec"][is_target])
+    centre = unit_vectors(positions["ra"][mine], positions["dec"][mine]).mean(axis=0)
+    ra0 = float(np.degrees(np.arctan2(centre[1], centre[0])) % 360)
+    dec0 = float(np.degrees(np.arctan2(centre[2], np.hypot(centre[0], centre[1]))))
+    extent = 2 * float(np.median(frames["radius"][within.rows]))
+    ra, dec = control_grid(ra0, dec0, extent, spacing_deg, settings.per_field, field)
+    vectors = unit_vectors(ra, dec)
+    free = BlankSky(all_targets, np.full(len(all_targets), spacing_deg)).clear(vectors)
+    if len(bright.ra):
+        free &= bright.blank_sky(spacing_deg / 2).clear(vectors)
+    ra, dec, vectors = ra[free], dec[free], vectors[free]
+    inside = covered(frames, within.rows, vectors)
+    useful = serves(within.covered, inside, settings.shared_frames).any(axis=0)
+    ra, dec = ra[useful][: settings.per_field], dec[useful][: settings.per_field]
+    n = len(ra)
+    return append(positions, {
+        "id": _next_id(positions) + np.arange(n), "name": np.full(n, "", object),
+        "kind": np.full(n, "control", object), "ra": ra, "dec": dec,
+        "pm_ra_cosdec": np.zeros(n), "pm_dec": np.zeros(n), "ref_epoch": np.full(n, 2000.0),
+        "field": np.full(n, field), "round": np.full(n, int(positions["round"][mine].max())),
+        "clear_radius": np.full(n, spacing_deg),
+    })  # fmt: skip
+
+
+def no_positions() -> Columns:
+    """A position table without rows."""
+    return empty(POSITIONS)

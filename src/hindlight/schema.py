@@ -1,0 +1,301 @@
+"""Every column of every table that is written, and every fixed word in them: declared once here, read by all.
+
+A `TableColumn` says a column's name, type, unit, UCD (IVOA UCD1+ list) and meaning. Nothing here reads or writes files.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from enum import IntFlag
+
+NATURAL_UNIT = "flux"  # stands for the unit of the channel, which differs from row to row
+
+
+@dataclass(frozen=True)
+class TableColumn:
+    """One column: `dtype` is float64, int64, bool or str; text blanks are empty strings, missing numbers NaN."""
+
+    name: str
+    doc: str
+    unit: str = ""
+    ucd: str = ""
+    dtype: str = "float64"
+
+
+class Flag(IntFlag):
+    """Bits of a measurement's `flags`."""
+
+    EDGE = 1
+    BLANKED = 2
+    SATURATED = 4
+    THIN_BACKGROUND = 8
+    NEIGHBOUR = 16
+
+
+FLAG_DOCS = {
+    Flag.EDGE: "the pixels the estimator needs reach over the edge of the image: no flux",
+    Flag.BLANKED: "a pixel the estimator needs is blank: no flux",
+    Flag.SATURATED: "a pixel the estimator needs is at or above the saturation level: not used",
+    Flag.THIN_BACKGROUND: "fewer than half of the annulus pixels are there; no flux when fewer than 20 are",
+    Flag.NEIGHBOUR: "a source brighter than the position itself stands within the inner radius of the annulus",
+}
+UNUSABLE = Flag.EDGE | Flag.BLANKED | Flag.SATURATED
+
+REASONS = {
+    "empty_file": "the file has no bytes",
+    "not_fits": "the file does not begin as FITS does",
+    "unreadable": "the operating system would not let the file be read",
+    "bad_header": "the header cannot be parsed or has no END",
+    "truncated": "the file ends before its data do",
+    "bad_compression": "the compressed file is broken or unpacks to more than the limit",
+    "no_image": "no HDU of the file holds an image",
+    "no_wcs": "the image has no celestial coordinates",
+    "bad_wcs": "the celestial coordinates are unusable",
+    "unknown_axis": "an axis longer than one is neither celestial nor time, frequency or Stokes",
+    "no_dialect": "no dialect recognises the header",
+    "bad_pixels": "the pixels could not be read when the frame was measured",
+    "vanished": "the file was there when the run began and is gone",
+    "changed": "the file has changed since it was measured",
+}
+
+ASSUMPTIONS = {
+    "geocentre": "no site in the header or settings: the Earth's centre was used, times are uncertain by 21 ms",
+    "no_clock": "no time of day: fluxes are measured, timing is refused",
+    "no_exposure": "no exposure time: the stated time was taken for its middle",
+    "start_assumed": "the header does not say what its date refers to: taken as the start of the exposure",
+    "scale_assumed": "no time scale in the header: UTC was taken",
+    "frame_assumed": "no celestial frame in the header: taken from the equinox, or ICRS where there is none",
+    "no_beam": "no beam or seeing in the header: an assumed width was used for stamp and annulus",
+    "beam_from_settings": "no beam or seeing in the header: the width in the settings was used",
+    "no_unit": "no unit in the header: fluxes are in the image's own numbers",
+    "no_frequency": "a radio image without a frequency",
+    "no_instrument": "no instrument in the header",
+    "stokes_assumed": "no Stokes parameter in the header: taken as I",
+    "primary_beam_unknown": "the header does not say whether the primary beam was corrected: fluxes are apparent",
+    "plane_exposure": "the exposure of a time plane was taken as the step of the time axis",
+    "span_is_good_time": "no good time in the header: the span from start to end was taken",
+    "unverified": "checksums were not verified",
+}
+
+STANDINGS = {
+    "periodic": "varies beyond chance and repeats with a period that survives aliases, harmonics and the aperiodic null",
+    "repeating": "bright in two or more separate epochs or pulses beyond chance, no period established",
+    "single": "bright once beyond chance, quiet otherwise",
+    "variable": "varies beyond chance, not in separate brightenings",
+    "steady": "seen, does not vary beyond chance, and enough frames to say so",
+    "unseen": "enough frames, never seen, not even in the mean",
+    "undecided": "too few usable frames to say",
+    "uncovered": "no usable frame",
+}
+
+FRAMES = (
+    TableColumn("id", "identifier of the frame in this run", dtype="int64", ucd="meta.id"),
+    TableColumn("archive", "the archive folder as given", dtype="str"),
+    TableColumn("path", "file, relative to the archive folder", dtype="str", ucd="meta.file"),
+    TableColumn("hdu", "HDU within the file, 0 is the primary", dtype="int64"),
+    TableColumn("plane", "plane of a cube, counted over its longer axes in storage order, 0-based", dtype="int64"),
+    TableColumn("digest", "of the header's bytes and the file's size", dtype="str"),
+    TableColumn("size", "bytes of the file", unit="byte", dtype="int64"),
+    TableColumn("modified_ns", "modification time of the file when it was read", unit="ns", dtype="int64"),
+    TableColumn("batch", "piece of work the frame belongs to", dtype="int64"),
+    TableColumn("channel", "key of comparable fluxes", dtype="str"),
+    TableColumn("instrument", "instrument", dtype="str", ucd="meta.id;instr"),
+    TableColumn("band", "filter or band", dtype="str", ucd="instr.bandpass"),
+    TableColumn("stokes", "Stokes parameter", dtype="str", ucd="phys.polarization.stokes"),
+    TableColumn("frequency_hz", "frequency, NaN where not stated", unit="Hz", ucd="em.freq"),
+    TableColumn("start_mjd_tdb", "first photon, MJD (TDB) at the site, NaN where unknown", unit="d", ucd="time.start"),
+    TableColumn("middle_mjd_tdb", "middle of the good time, MJD (TDB) at the site", unit="d", ucd="time.epoch"),
+    TableColumn("end_mjd_tdb", "last photon, MJD (TDB) at the site", unit="d", ucd="time.end"),
+    TableColumn("middle_tdb_s", "middle of the good time, seconds from J2000.0 TDB at the site", unit="s"),
+    TableColumn("middle_utc", "middle of the good time, ISO 8601 UTC", dtype="str"),
+    TableColumn("exposure_s", "good time, NaN where unknown", unit="s", ucd="time.duration;obs.exposure"),
+    TableColumn("span_s", "from first to last photon, NaN where unknown", unit="s", ucd="time.duration"),
+    TableColumn("barycentric", "whether the header's times are already barycentric", dtype="bool"),
+    TableColumn("site_x", "place of the instrument (ITRF), NaN for the geocentre", unit="m"),
+    TableColumn("site_y", "place of the instrument (ITRF), NaN for the geocentre", unit="m"),
+    TableColumn("site_z", "place of the instrument (ITRF), NaN for the geocentre", unit="m"),
+    TableColumn("beam_major", "FWHM of the beam or seeing", unit="arcsec", ucd="pos.angResolution"),
+    TableColumn("beam_minor", "FWHM of the beam or seeing, minor axis", unit="arcsec", ucd="pos.angResolution"),
+    TableColumn("beam_angle", "position angle of the beam, east of north", unit="deg", ucd="pos.posAng"),
+    TableColumn("unit", "unit of the pixels", dtype="str", ucd="meta.unit"),
+    TableColumn("depth", "noise per pixel as the header states it, in the pixels' unit, NaN where not stated"),
+    TableColumn("saturation", "saturation level in the pixels' unit, NaN where not stated"),
+    TableColumn("electrons_per_unit", "gain of the detector, electrons per unit of the pixels, NaN where not stated"),
+    TableColumn("width", "pixels along the first celestial axis", unit="pixel", dtype="int64"),
+    TableColumn("height", "pixels along the second celestial axis", unit="pixel", dtype="int64"),
+    TableColumn("pixel_scale", "square root of the area of a pixel", unit="arcsec", ucd="instr.pixel"),
+    TableColumn("centre_ra", "centre of the footprint, ICRS", unit="deg", ucd="pos.eq.ra"),
+    TableColumn("centre_dec", "centre of the footprint, ICRS", unit="deg", ucd="pos.eq.dec"),
+    TableColumn("radius", "from the centre to the farthest corner", unit="deg", ucd="phys.angSize"),
+    TableColumn("footprint", "corners of the image, ICRS degrees: ra dec ra dec ...", dtype="str", ucd="pos.outline"),
+    TableColumn("primary_beam", "corrected, uncorrected or unknown", dtype="str"),
+    TableColumn("dialect", "plugin that read the header", dtype="str"),
+    TableColumn("state", "current, vanished (kept) or void (the file has changed since)", dtype="str"),
+    TableColumn("assumptions", "each thing taken for granted: word and sentence", dtype="str", ucd="meta.note"),
+)
+
+POSITIONS = (
+    TableColumn("id", "identifier of the position in this run", dtype="int64", ucd="meta.id"),
+    TableColumn("name", "name of the target, empty for a control", dtype="str", ucd="meta.id;src"),
+    TableColumn("kind", "target, control or comparison", dtype="str", ucd="meta.code.class"),
+    TableColumn("ra", "right ascension, ICRS", unit="deg", ucd="pos.eq.ra"),
+    TableColumn("dec", "declination, ICRS", unit="deg", ucd="pos.eq.dec"),
+    TableColumn("pm_ra_cosdec", "proper motion", unit="mas/yr", ucd="pos.pm;pos.eq.ra"),
+    TableColumn("pm_dec", "proper motion", unit="mas/yr", ucd="pos.pm;pos.eq.dec"),
+    TableColumn("ref_epoch", "Julian year of the position", unit="yr", ucd="meta.ref;time.epoch"),
+    TableColumn("field", "cell of sky", dtype="int64"),
+    TableColumn("round", "round of measuring the position belongs to", dtype="int64"),
+    TableColumn(
+        "clear_radius", "for a control: no target it serves is nearer than this", unit="deg", ucd="phys.angSize"
+    ),
+)
+
+FRAME_SOLUTION = (
+    TableColumn("frame", "identifier of the frame", dtype="int64", ucd="meta.id"),
+    TableColumn("channel", "key of comparable fluxes", dtype="str"),
+    TableColumn("gain", "calibrated flux = flux / gain"),
+    TableColumn("gain_err", "1-sigma error of the gain"),
+    TableColumn("shift_x", "shift of the pointing", unit="pixel"),
+    TableColumn("shift_y", "shift of the pointing", unit="pixel"),
+    TableColumn("error_scale", "factor on the error"),
+    TableColumn("extra_scatter", "further scatter, as a fraction of the flux"),
+    TableColumn("n_comparisons", "comparison sources used", dtype="int64"),
+    TableColumn("verdict", "uncalibrated, good or bad", dtype="str"),
+)
+
+MEASUREMENTS = (
+    TableColumn("position", "identifier of the position", dtype="int64"),
+    TableColumn("frame", "identifier of the frame", dtype="int64"),
+    TableColumn("channel", "key of comparable fluxes", dtype="str"),
+    TableColumn("x", "0-based pixel, first axis", unit="pixel", ucd="pos.cartesian.x;instr.det"),
+    TableColumn("y", "0-based pixel, second axis", unit="pixel", ucd="pos.cartesian.y;instr.det"),
+    TableColumn(
+        "t_tdb_s", "middle of good time, seconds from J2000.0 TDB at the barycentre", unit="s", ucd="time.epoch"
+    ),
+    TableColumn("bjd_tdb", "the same as BJD (TDB); exact to 40 microseconds", unit="d", ucd="time.epoch"),
+    TableColumn("exposure_s", "good time, NaN where unknown", unit="s", ucd="time.duration;obs.exposure"),
+    TableColumn("flux", "raw flux in the channel's unit", unit=NATURAL_UNIT, ucd="phot.flux"),
+    TableColumn("flux_err", "its 1-sigma error", unit=NATURAL_UNIT, ucd="stat.error;phot.flux"),
+    TableColumn(
+        "background", "local background per pixel that was taken off", unit=NATURAL_UNIT, ucd="instr.background"
+    ),
+    TableColumn("rms", "robust local noise per pixel", unit=NATURAL_UNIT, ucd="instr.det.noise"),
+    TableColumn("gain", "primary-beam gain used, 1 where none was applied"),
+    TableColumn("flags", "bits, see the README", dtype="int64", ucd="meta.code.qual"),
+)
+
+LIGHT_CURVE = (
+    TableColumn("channel", "key of comparable fluxes", dtype="str"),
+    TableColumn(
+        "t_tdb_s", "middle of good time, seconds from J2000.0 TDB at the barycentre", unit="s", ucd="time.epoch"
+    ),
+    TableColumn("bjd_tdb", "the same as BJD (TDB)", unit="d", ucd="time.epoch"),
+    TableColumn(
+        "middle_utc", "middle of good time at the site, ISO 8601 UTC", dtype="str", ucd="time.epoch;obs.exposure"
+    ),
+    TableColumn("exposure_s", "good time, NaN where unknown", unit="s", ucd="time.duration;obs.exposure"),
+    TableColumn("flux", "calibrated flux", ucd="phot.flux"),
+    TableColumn("flux_err", "its 1-sigma error", ucd="stat.error;phot.flux"),
+    TableColumn("flux_unit", "unit of the fluxes and of background and rms", dtype="str", ucd="meta.unit"),
+    TableColumn("raw_flux", "flux before the frame's gain", ucd="phot.flux"),
+    TableColumn("raw_flux_err", "its 1-sigma error", ucd="stat.error;phot.flux"),
+    TableColumn("background", "local background per pixel that was taken off", ucd="instr.background"),
+    TableColumn("rms", "robust local noise per pixel", ucd="instr.det.noise"),
+    TableColumn("detected", "whether the measurement is above the channel's threshold", dtype="bool"),
+    TableColumn("x", "0-based pixel, first axis", unit="pixel", ucd="pos.cartesian.x;instr.det"),
+    TableColumn("y", "0-based pixel, second axis", unit="pixel", ucd="pos.cartesian.y;instr.det"),
+    TableColumn("flags", "bits, see the README", dtype="int64", ucd="meta.code.qual"),
+    TableColumn("frame", "identifier of the frame", dtype="int64", ucd="meta.id"),
+    TableColumn("path", "file, relative to the archive folder, with HDU and plane", dtype="str", ucd="meta.file"),
+)
+
+REJECTS = (
+    TableColumn("path", "file, relative to the archive folder", dtype="str", ucd="meta.file"),
+    TableColumn("hdu", "HDU, -1 for the whole file", dtype="int64"),
+    TableColumn("plane", "plane of a cube, -1 for the whole HDU", dtype="int64"),
+    TableColumn("reason", "a fixed word", dtype="str", ucd="meta.code.status"),
+    TableColumn("detail", "a sentence", dtype="str", ucd="meta.note"),
+)
+
+PLUGIN_FAULTS = (
+    TableColumn("plugin", "name of the plugin", dtype="str", ucd="meta.id"),
+    TableColumn("kind", "kind of plugin", dtype="str"),
+    TableColumn("target", "first position at which it failed", dtype="str", ucd="meta.id;src"),
+    TableColumn("channel", "channel of that light curve", dtype="str"),
+    TableColumn("fault", "what went wrong: an exception's name, or wrong_column", dtype="str"),
+    TableColumn("detail", "its message", dtype="str", ucd="meta.note"),
+    TableColumn("line", "file and line of the plugin that raised it", dtype="str"),
+    TableColumn("count", "how many light curves failed so", dtype="int64", ucd="meta.number"),
+)
+
+CHANNELS = (
+    TableColumn("name", "target", dtype="str", ucd="meta.id;src"),
+    TableColumn("channel", "key of comparable fluxes", dtype="str"),
+    TableColumn("flux_unit", "unit of every flux in this row", dtype="str", ucd="meta.unit"),
+    TableColumn("n_frames", "frames that cover the target", dtype="int64", ucd="meta.number;obs"),
+    TableColumn("n_used", "frames with a usable flux", dtype="int64", ucd="meta.number;obs"),
+    TableColumn("n_detected", "frames above the threshold", dtype="int64", ucd="meta.number;obs"),
+    TableColumn("threshold", "what counts as detected; the table says the false-alarm rate", ucd="stat.snr"),
+    TableColumn("threshold_above_quiet", "the same for the excess over the quiet level", ucd="stat.snr"),
+    TableColumn("threshold_mean", "the same for the mean flux over its error", ucd="stat.snr"),
+    TableColumn("n_controls", "blank positions that set the thresholds", dtype="int64", ucd="meta.number"),
+    TableColumn("quiet_level", "flux when not bright", ucd="phot.flux"),
+    TableColumn("quiet_level_err", "its 1-sigma error", ucd="stat.error;phot.flux"),
+    TableColumn("flux_mean", "weighted mean flux over all usable frames, seen or not", ucd="phot.flux;stat.mean"),
+    TableColumn("flux_mean_err", "its 1-sigma error", ucd="stat.error;phot.flux"),
+    TableColumn("scatter", "scatter beyond the errors, maximum likelihood", ucd="stat.stdev;phot.flux"),
+    TableColumn(
+        "limit_sigma",
+        "k-sigma limit of a median frame: a source this bright is detected in half of them",
+        ucd="phot.flux;stat.max",
+    ),
+    TableColumn(
+        "limit_bayes",
+        "95 % upper bound on the mean total flux (flat prior, flux not negative)",
+        ucd="phot.flux;stat.max",
+    ),
+    TableColumn(
+        "limit_above_quiet",
+        "k-sigma limit of a median frame on the excess over the quiet level",
+        ucd="phot.flux;stat.max",
+    ),
+)
+
+CANDIDATES = (
+    TableColumn("name", "target", dtype="str", ucd="meta.id;meta.main"),
+    TableColumn("ra", "right ascension, ICRS", unit="deg", ucd="pos.eq.ra;meta.main"),
+    TableColumn("dec", "declination, ICRS", unit="deg", ucd="pos.eq.dec;meta.main"),
+    TableColumn("standing", "the verdict in one word", dtype="str", ucd="meta.code.class"),
+    TableColumn("concerns", "consistency checks that failed", dtype="str", ucd="meta.code.qual"),
+    TableColumn(
+        "p_value", "chance that a blank position of this field looks as variable as this", ucd="stat.probability"
+    ),
+    TableColumn("q_value", "false-discovery rate over the targets of the run at this p-value", ucd="stat.probability"),
+    TableColumn("p_is_extrapolated", "whether p_value lies beyond the controls, from a fitted tail", dtype="bool"),
+    TableColumn("lowest_p_statistic", "the statistic and channel that is furthest out", dtype="str", ucd="meta.id"),
+    TableColumn("n_frames", "frames that cover the target, all channels", dtype="int64", ucd="meta.number;obs"),
+    TableColumn("n_used", "frames with a usable flux", dtype="int64", ucd="meta.number;obs"),
+    TableColumn("n_detected", "frames above their channel's threshold", dtype="int64", ucd="meta.number;obs"),
+    TableColumn("n_epochs", "separate looks among the usable frames", dtype="int64", ucd="meta.number;obs"),
+    TableColumn("first_detected", "middle of the first frame with a detection, ISO 8601 UTC", dtype="str"),
+    TableColumn("last_detected", "middle of the last frame with a detection, ISO 8601 UTC", dtype="str"),
+    TableColumn(
+        "quiet_before", "last constraining non-detection before the first detection, ISO 8601 UTC", dtype="str"
+    ),
+    TableColumn("quiet_after", "first constraining non-detection after the last detection, ISO 8601 UTC", dtype="str"),
+    TableColumn("peak_snr", "highest flux over its error in a single frame", ucd="stat.snr;stat.max"),
+    TableColumn("peak_frame", "the frame of that flux: file, HDU and plane", dtype="str", ucd="meta.file"),
+    TableColumn("period", "period, where one is established", unit="s", ucd="time.period"),
+    TableColumn("period_err", "its 1-sigma error", unit="s", ucd="stat.error;time.period"),
+    TableColumn("period_dot", "change of the period", unit="s/s", ucd="time.period;arith.diff"),
+    TableColumn("period_dot_err", "its 1-sigma error", unit="s/s", ucd="stat.error;time.period"),
+    TableColumn("epoch", "BJD (TDB) of a maximum near the weighted middle of the data", unit="d", ucd="time.epoch"),
+    TableColumn("cycle_counts_left", "ephemerides still possible, 0 where no period is claimed", dtype="int64"),
+    TableColumn(
+        "lookback_p", "chance of the detections falling in the windows of the ephemeris given", ucd="stat.probability"
+    ),
+    TableColumn("n_controls", "blank positions that the target was ranked with", dtype="int64", ucd="meta.number"),
+    TableColumn("p_empirical", "p_value before any extrapolation: (r+1)/(n+1)", ucd="stat.probability"),
+    TableColumn("beyond_controls", "distance of the combination beyond the controls, in their MAD", ucd="stat.value"),
+    TableColumn("notes", "what a reader should know before trusting the row", dtype="str", ucd="meta.note"),
+)

@@ -1,0 +1,275 @@
+"""Settings: TOML in, one frozen `Settings` out, and the same back as commented TOML.
+
+A setting is declared once, as a field made by `setting()`, with its default, meaning, unit and bounds; plugins declare
+theirs with the same function. Unknown names are refused with the nearest valid one. Nothing here reads an archive.
+"""
+
+from __future__ import annotations
+
+import dataclasses
+import difflib
+import tomllib
+from collections.abc import Mapping
+from dataclasses import dataclass, field, fields
+from pathlib import Path
+from typing import Any
+
+import tomli_w
+
+from hindlight.errors import UsageError
+
+
+def setting(
+    default: Any,
+    doc: str,
+    *,
+    unit: str = "",
+    minimum: float | None = None,
+    maximum: float | None = None,
+    choices: tuple[Any, ...] | None = None,
+) -> Any:
+    """A dataclass field that is a setting: its default, one sentence of meaning, unit, bounds or choices."""
+    metadata = {"doc": doc, "unit": unit, "minimum": minimum, "maximum": maximum, "choices": choices}
+    if isinstance(default, dict | list):
+        return field(default_factory=lambda: type(default)(default), metadata=metadata)
+    return field(default=default, metadata=metadata)
+
+
+@dataclass(frozen=True)
+class Inventory:
+    """Finding frames."""
+
+    unpacked_limit_mb: int = setting(4096, "largest size a compressed file may unpack to", unit="MB", minimum=1)
+
+
+@dataclass(frozen=True)
+class Channels:
+    """What counts as the same channel."""
+
+    frequency_tolerance: float = setting(
+        0.02, "frames of one instrument share a channel when their frequencies span at most this fraction", minimum=0
+    )
+    beam_tolerance: float = setting(
+        1.5, "and their beams (or seeing) span at most this factor: the resolution class", minimum=1
+    )
+
+
+@dataclass(frozen=True)
+class Photometry:
+    """Forced photometry."""
+
+    estimator: str = setting("auto", "name of the estimator for every frame; auto chooses by the frame's unit")
+    annulus_inner: float = setting(3.0, "inner radius of the background annulus", unit="FWHM", minimum=1)
+    annulus_outer: float = setting(
+        9.1, "outer radius; with the default inner radius it holds 200 independent beams", unit="FWHM", minimum=2
+    )
+    annulus_pixels: int = setting(
+        4000,
+        "where the annulus holds more pixels than this, every second, third... row and column is used",
+        minimum=200,
+    )
+    assumed_fwhm_pixels: float = setting(
+        3.0, "width of the beam or seeing where the header gives none", unit="pixel", minimum=1, maximum=50
+    )
+    fwhm_arcsec: dict[str, float] = setting({}, "instrument = width: used where the header gives none", unit="arcsec")
+
+
+@dataclass(frozen=True)
+class Controls:
+    """Blank positions that set the null."""
+
+    per_field: int = setting(512, "blank positions wanted for each field of sky", minimum=0)
+    separation: float = setting(2.0, "least distance between controls and to targets", unit="FWHM", minimum=1)
+    shared_frames: float = setting(
+        0.9, "a control serves a target when it is in at least this fraction of its frames", minimum=0, maximum=1
+    )
+    field_size_deg: float = setting(0.0, "side of a field; 0 takes half the median footprint", unit="deg", minimum=0)
+    reference_frames: int = setting(
+        3, "frames per channel and field in which bright sources to stay clear of are looked for", minimum=1
+    )
+    bright_snr: float = setting(5.0, "what counts as a bright source there", unit="sigma", minimum=3)
+
+
+@dataclass(frozen=True)
+class Flow:
+    """How the work is cut up; fixed once a run has begun."""
+
+    batch_frames: int = setting(32, "frames per piece of work", minimum=1, maximum=4096)
+
+
+@dataclass(frozen=True)
+class Detection:
+    """What counts as seen."""
+
+    false_alarms: float = setting(
+        0.01, "chance that a blank position has any detection in a channel", minimum=1e-6, maximum=0.5
+    )
+    min_frames: int = setting(8, "fewer usable frames than this in every channel leave a target undecided", minimum=2)
+    epoch_gap_days: float = setting(0.5, "frames further apart than this are separate epochs", unit="day", minimum=0)
+
+
+@dataclass(frozen=True)
+class Ranking:
+    """What counts as beyond chance."""
+
+    level: float = setting(0.05, "false-discovery rate of the run", minimum=1e-6, maximum=0.5)
+    gate: float = setting(
+        0.1, "a period is searched where some statistic is among this fraction of the controls", minimum=0, maximum=1
+    )
+    tail_exceedances: int = setting(50, "controls to which a tail is fitted when they cannot decide", minimum=20)
+    gather_curves: int = setting(256, "positions judged in one piece of work", minimum=1)
+
+
+@dataclass(frozen=True)
+class Settings:
+    """Every setting in force. `sites` and `plugin` are free-form tables: instrument -> ITRF metres, plugin -> settings."""
+
+    inventory: Inventory = field(default_factory=Inventory)
+    channels: Channels = field(default_factory=Channels)
+    photometry: Photometry = field(default_factory=Photometry)
+    controls: Controls = field(default_factory=Controls)
+    flow: Flow = field(default_factory=Flow)
+    detection: Detection = field(default_factory=Detection)
+    ranking: Ranking = field(default_factory=Ranking)
+    sites: dict[str, tuple[float, float, float]] = field(default_factory=dict)
+    plugin: dict[str, dict[str, Any]] = field(default_factory=dict)
+
+    def measuring(self) -> dict[str, Any]:
+        """The sections that touch measured values, as plain data: a run cannot change them once it has begun."""
+        names = ("inventory", "channels", "photometry", "controls", "flow", "sites")
+        return {name: as_plain(getattr(self, name)) for name in names}
+
+
+RECORD_SECTIONS = ("run", "versions")  # written into a run's settings.toml beside the settings, ignored when read
+
+
+def as_plain(section: Any) -> dict[str, Any]:
+    """A section (dataclass or mapping) as plain TOML data."""
+    if dataclasses.is_dataclass(section) and not isinstance(section, type):
+        return dataclasses.asdict(section)
+    return {key: list(value) if isinstance(value, tuple) else value for key, value in section.items()}
+
+
+def read_settings(path: Path | None) -> Settings:
+    """Settings from a TOML file, defaults for what it leaves out; `None` gives the defaults."""
+    if path is None:
+        return Settings()
+    try:
+        data = tomllib.loads(path.read_text(encoding="utf-8"))
+    except FileNotFoundError:
+        raise UsageError(f"settings file {path}: no such file; `hindlight settings` prints one to start from") from None
+    except (OSError, UnicodeDecodeError, tomllib.TOMLDecodeError) as error:
+        raise UsageError(f"settings file {path}: not readable as TOML ({error}); mend that line") from None
+    return settings_from(data, str(path))
+
+
+def settings_from(data: Mapping[str, Any], where: str) -> Settings:
+    """Settings from plain data; `where` names the source in messages."""
+    sections = {f.name: f for f in fields(Settings)}
+    values: dict[str, Any] = {}
+    for name, content in data.items():
+        if name in RECORD_SECTIONS:
+            continue
+        if name not in sections:
+            raise UsageError(f"{where}: no section [{name}]{_nearest(name, sections)}")
+        if not isinstance(content, Mapping):
+            raise UsageError(f"{where}: [{name}] must be a table of settings, got {content!r}")
+        if name == "sites":
+            values[name] = {key: _site(key, value, where) for key, value in content.items()}
+        elif name == "plugin":
+            values[name] = {key: _table(f"plugin.{key}", value, where) for key, value in content.items()}
+        else:
+            values[name] = check_section(getattr(Settings(), name), content, f"{where}: [{name}]")
+    return Settings(**values)
+
+
+def check_section(defaults: Any, content: Mapping[str, Any], where: str) -> Any:
+    """The dataclass instance `defaults` with the values of `content`, each checked against its declaration."""
+    declared = {f.name: f for f in fields(defaults) if "doc" in f.metadata}
+    values = {}
+    for key, value in content.items():
+        if key not in declared:
+            raise UsageError(f"{where}: no setting {key!r}{_nearest(key, declared)}")
+        values[key] = _checked(declared[key], getattr(defaults, key), value, f"{where} {key}")
+    return dataclasses.replace(defaults, **values)
+
+
+def _checked(declared: dataclasses.Field[Any], default: Any, value: Any, where: str) -> Any:
+    """`value` if it has the default's type and lies within the declared bounds."""
+    expected = type(default)
+    if expected is float and isinstance(value, int) and not isinstance(value, bool):
+        value = float(value)
+    if expected is tuple and isinstance(value, list):
+        value = tuple(value)
+    if type(value) is not expected:
+        raise UsageError(f"{where}: expected {expected.__name__} (default {default!r}), got {value!r}")
+    meta = declared.metadata
+    if isinstance(value, int | float) and not isinstance(value, bool):
+        low, high = meta["minimum"], meta["maximum"]
+        if value != value or (low is not None and value < low) or (high is not None and value > high):
+            bounds = f"from {'any' if low is None else low} to {'any' if high is None else high}"
+            raise UsageError(f"{where}: {value!r} is out of range, expected {bounds}")
+    if meta["choices"] is not None and value not in meta["choices"]:
+        raise UsageError(f"{where}: {value!r} is none of {', '.join(map(repr, meta['choices']))}")
+    return value
+
+
+def _site(name: str, value: Any, where: str) -> tuple[float, float, float]:
+    good = isinstance(value, list | tuple) and len(value) == 3 and all(isinstance(v, int | float) for v in value)
+    if not good or not 6.2e6 < sum(float(v) ** 2 for v in value) ** 0.5 < 6.5e6:
+        raise UsageError(
+            f"{where}: [sites] {name}: expected [x, y, z] in metres from the Earth's centre, got {value!r}"
+        )
+    return (float(value[0]), float(value[1]), float(value[2]))
+
+
+def _table(name: str, value: Any, where: str) -> dict[str, Any]:
+    if not isinstance(value, Mapping):
+        raise UsageError(f"{where}: [{name}] must be a table of settings, got {value!r}")
+    return dict(value)
+
+
+def _nearest(name: str, valid: Mapping[str, Any]) -> str:
+    close = difflib.get_close_matches(name, list(valid), n=1, cutoff=0.5)
+    return f"; did you mean {close[0]!r}?" if close else f"; there are {', '.join(sorted(valid))}"
+
+
+def render(settings: Settings, plugin_defaults: Mapping[str, Any] | None = None) -> str:
+    """The settings as commented TOML. `plugin_defaults` maps plugin names to instances whose settings are listed too."""
+    lines = ["# Settings of hindlight. Every line is optional; what is left out has the value shown here."]
+    for entry in fields(settings):
+        section = getattr(settings, entry.name)
+        if entry.name == "sites":
+            lines += ["", "# Places of instruments whose headers give none, as [x, y, z] in metres (ITRF).", "[sites]"]
+            lines += [f"{_key(name)} = {list(value)}" for name, value in sorted(section.items())]
+        elif entry.name != "plugin":
+            lines += ["", f"# {type(section).__doc__}", f"[{entry.name}]", *_setting_lines(section)]
+    for name, instance in sorted((plugin_defaults or {}).items()):
+        declared = _setting_lines(instance)
+        if declared:
+            lines += ["", f"[plugin.{name}]", *declared]
+    return "\n".join(lines) + "\n"
+
+
+def _setting_lines(section: Any) -> list[str]:
+    lines = []
+    for declared in fields(section):
+        meta = declared.metadata
+        if "doc" not in meta:
+            continue
+        unit = f" ({meta['unit']})" if meta["unit"] else ""
+        choices = f"; one of {', '.join(map(str, meta['choices']))}" if meta["choices"] else ""
+        value = getattr(section, declared.name)
+        value = list(value) if isinstance(value, tuple) else value
+        if isinstance(value, dict):
+            inner = ", ".join(f"{_key(k)} = {v}" for k, v in sorted(value.items()))
+            text = f"{declared.name} = {{ {inner} }}" if inner else f"{declared.name} = {{}}"
+        else:
+            text = tomli_w.dumps({declared.name: value}).strip()
+        lines += [f"# {meta['doc']}{unit}{choices}", text]
+    return lines
+
+
+def _key(name: str) -> str:
+    """A TOML key, quoted where it must be."""
+    return tomli_w.dumps({name: 0}).split(" = ")[0]

@@ -1,0 +1,392 @@
+"""Between sky and pixels: the projection of one image, from its header cards alone.
+
+Plain headers go through wcslib on the celestial cards only, cached by those cards' bytes; anything unusual (SIP,
+look-up tables, TPV, legacy keywords) goes through the full `astropy.wcs.WCS`. Coordinates outside this module are ICRS.
+Nothing here reads pixels or knows what a frame is for.
+"""
+
+from __future__ import annotations
+
+import math
+import re
+import threading
+import warnings
+from contextlib import ExitStack
+from dataclasses import dataclass, field
+from functools import cached_property, lru_cache
+from typing import Any, Protocol
+
+import numpy as np
+from astropy.io import fits
+from astropy.wcs import WCS, NoConvergence, WcsError, Wcsprm
+
+from hindlight.facts import NAN, Cards
+from hindlight.lightcurve import FloatArray
+from hindlight.plugin import BeamShape
+from hindlight.systems import BadWcsError, NoCelestialError, System, from_icrs, system_of, to_icrs, unit_vectors
+
+LEAN_CODES = {"SIN", "TAN", "ARC", "ZEA", "STG", "CAR", "CEA", "MER", "SFL", "AIT", "MOL", "NCP", "GLS"}
+ZENITHAL_CODES = {"SIN", "TAN", "ARC", "ZEA", "STG", "NCP", "TPV", "ZPN", "AZP", "SZP", "TNX", "ZPX", "DSS"}
+TURNING_CODES = {"CAR", "CEA", "MER"}  # 360 degrees of native longitude are one constant step of pixels
+LONGITUDES = {"RA": "DEC", "GLON": "GLAT"}
+REFUSED_LONGITUDES = {"ELON": "ecliptic", "HLON": "heliographic", "SLON": "supergalactic"}
+MAX_AXES = 9
+ROUND_TRIP_PIXELS = 0.01  # an inverted distortion that comes back further off than this has not converged
+
+_PLAIN = re.compile(
+    r"(CTYPE|CRPIX|CRVAL|CDELT|CROTA|CUNIT|NAXIS)\d|(PC|CD|PV)\d_\d+|LONPOLE|LATPOLE|RADEC?SYS|EQUINOX|EPOCH"
+)
+_ODD = re.compile(r"[AB]P?_ORDER|(CPDIS|CQDIS|DP|DQ)\d|D2IM.*|WAT\d_\d+|(PC|CD)\d{6}|PS\d_\d+|AMDX.*|PLTRAH")
+_TABLE = re.compile(r"(CPDIS|CQDIS|D2IMDIS)\d")
+_FIVE_POINTS = np.array([[0.5, -0.5, 0.0, 0.0, 0.0], [0.0, 0.0, 0.5, -0.5, 0.0]])  # right, left, up, down, middle
+
+
+class _Engine(Protocol):
+    """What turns world coordinates (n, 2), in axis order, into 0-based pixels (n, 2) and back; NaN where undefined."""
+
+    def to_pixel(self, world: FloatArray) -> FloatArray: ...
+
+    def to_world(self, pixel: FloatArray) -> FloatArray: ...
+
+
+@dataclass(frozen=True, eq=False)
+class Projection:
+    """The way from ICRS to 0-based pixels of one image and back.
+
+    axes
+        FITS numbers (1-based) of the two celestial axes in storage order: x runs along the first of them.
+    system, system_assumed
+        Of the header's coordinates, and whether the header leaves it to the rules of FITS 4.0, 8.3.
+    size
+        Pixels along x and y, 0 where the cards do not say.
+    reference
+        The 0-based pixel to which scale and beam refer: CRPIX for zenithal projections, where the plane is that of
+        the aperture; the middle of the image for others.
+    """
+
+    axes: tuple[int, int]
+    system: System
+    system_assumed: bool
+    size: tuple[int, int]
+    reference: tuple[float, float]
+    engine: _Engine = field(repr=False)
+    swapped: bool = False
+
+    def icrs_to_pixel(self, ra: FloatArray, dec: FloatArray, mjd: float = NAN) -> tuple[FloatArray, FloatArray]:
+        """0-based pixel coordinates of positions in degrees, shape (n,); NaN where the projection is undefined.
+
+        `mjd` is the date of the image: FK4 rotates, so its own date is needed (NaN takes the equinox instead).
+        """
+        lon, lat = from_icrs(np.asarray(ra, float), np.asarray(dec, float), self.system, mjd)
+        world = np.column_stack((lat, lon) if self.swapped else (lon, lat))
+        pixel = self.engine.to_pixel(world) if len(world) else world
+        return np.ascontiguousarray(pixel[:, 0]), np.ascontiguousarray(pixel[:, 1])
+
+    def pixel_to_icrs(self, x: FloatArray, y: FloatArray, mjd: float = NAN) -> tuple[FloatArray, FloatArray]:
+        """ICRS degrees of 0-based pixel coordinates, shape (n,); NaN where the projection is undefined."""
+        lon, lat = self._pixel_to_own(x, y)
+        return to_icrs(lon, lat, self.system, mjd)
+
+    @cached_property
+    def pixel_scale_arcsec(self) -> float:
+        """Square root of the area of a pixel at the reference pixel."""
+        (a, b), (c, d) = self.reference_jacobian
+        return float(abs(a * d - b * c) ** 0.5)
+
+    @cached_property
+    def reference_jacobian(self) -> FloatArray:
+        """`jacobian` at the reference pixel, which is what `beam_shape` wants."""
+        return self.jacobian(*self.reference)
+
+    def jacobian(self, x: float, y: float) -> FloatArray:
+        """Shape (2, 2): a pixel offset (dx, dy) to (east, north) arcsec of the header's *own* system, as beams use."""
+        return _tangent_map(*self._pixel_to_own(x + _FIVE_POINTS[0], y + _FIVE_POINTS[1]))
+
+    def jacobian_icrs(self, x: float, y: float, mjd: float = NAN) -> FloatArray:
+        """Shape (2, 2): a pixel offset (dx, dy) to ICRS (east, north) arcsec."""
+        return _tangent_map(*self.pixel_to_icrs(x + _FIVE_POINTS[0], y + _FIVE_POINTS[1], mjd))
+
+    def _pixel_to_own(self, x: FloatArray, y: FloatArray) -> tuple[FloatArray, FloatArray]:
+        pixel = np.column_stack((np.asarray(x, float), np.asarray(y, float)))
+        world = self.engine.to_world(pixel) if len(pixel) else pixel
+        first, second = (1, 0) if self.swapped else (0, 1)
+        return world[:, first], world[:, second]
+
+
+def projection(cards: Cards, path: str = "") -> Projection:
+    """The projection that header cards describe.
+
+    `path` is the local file itself, needed only for look-up-table distortions, which live in other HDUs. Raises
+    `NoCelestialError` or `BadWcsError` with a sentence.
+    """
+    kinds = [(key, _kind(key)) for key in cards]
+    if not any(kind == "odd" for _, kind in kinds):
+        lean = _lean("".join([cards.card(key) for key, kind in kinds if kind]))
+        if lean is not None:
+            return lean
+    return _full(cards.raw, path if _has_tables(cards) else "")
+
+
+def beam_shape(major: float, minor: float, angle: float, jacobian: FloatArray) -> BeamShape:
+    """A beam in pixels from full widths in arcsec and the position angle of its major axis (degrees east of north).
+
+    `jacobian` is `Projection.jacobian` where the beam refers to: the second-moment matrix goes through its inverse.
+    """
+    pa = math.radians(angle)
+    along = np.array([math.sin(pa), math.cos(pa)])
+    across = np.array([math.cos(pa), -math.sin(pa)])
+    inverse = np.linalg.inv(jacobian)
+    square = inverse @ (major**2 * np.outer(along, along) + minor**2 * np.outer(across, across)) @ inverse.T
+    widths, vectors = np.linalg.eigh(square)
+    if widths[1] - widths[0] < 1e-9 * widths[1]:
+        return BeamShape(float(widths[1] ** 0.5), float(widths[0] ** 0.5), 0.0)
+    return BeamShape(float(widths[1] ** 0.5), float(widths[0] ** 0.5), float(math.atan2(vectors[1, 1], vectors[0, 1])))
+
+
+# --- reading the cards
+
+
+@lru_cache(maxsize=4096)
+def _kind(key: str) -> str:
+    """Whether a keyword matters to the projection: 'plain', 'odd' (full WCS needed) or ''."""
+    if _PLAIN.fullmatch(key):
+        return "plain"
+    return "odd" if _ODD.fullmatch(key) else ""
+
+
+@dataclass(frozen=True)
+class _Celestial:
+    """What both ways need to know of a header: the pair of axes and what they are called."""
+
+    axes: tuple[int, int]
+    code: str
+    suffix: str
+    swapped: bool
+    system: System
+    assumed: bool
+
+
+@lru_cache(maxsize=256)
+def _lean(key: str) -> Projection | None:
+    """The projection through wcslib on the celestial cards; None where they need the full WCS."""
+    cards = Cards(key.encode("latin-1"))
+    found = _celestial(cards)
+    odd_unit = any(cards.text(f"CUNIT{i}") not in ("", "deg") for i in found.axes)
+    has_pv = any(k[:2] == "PV" for k in cards)
+    if found.code not in LEAN_CODES or found.suffix or odd_unit or (found.code == "TAN" and has_pv):
+        return None
+    text = _two_axes(cards, found.axes)
+    with _as_bad_wcs():
+        prm = Wcsprm(header=text.encode("latin-1"), relax=True)
+        prm.fix()  # NCP and GLS become SIN and SFL
+        prm.set()
+        turn = None
+        if found.code in TURNING_CODES:
+            turn = _turn(prm, found.swapped)
+            prm.bounds_check(False, True)  # else pixels over 180 degrees from the reference value have no sky
+    return _finished(cards, found, _WcslibEngine(prm, turn, _reference(cards, found)))
+
+
+@lru_cache(maxsize=64)
+def _full(raw: bytes, path: str) -> Projection:
+    """The projection through `astropy.wcs.WCS` with every distortion it knows."""
+    cards = Cards(raw)
+    found = _celestial(cards)
+    if found.code == "TAB":
+        raise BadWcsError(f"CTYPE{found.axes[0]} is a table of coordinates (-TAB), which is not supported")
+    tables = _has_tables(cards)
+    if tables and not path:
+        raise BadWcsError(
+            "the distortion is a look-up table in another HDU, and there is no local file to read it from"
+        )
+    with warnings.catch_warnings(), ExitStack() as stack, _as_bad_wcs():
+        warnings.simplefilter("ignore")  # FITSFixedWarning and card warnings: what cannot be used raises below
+        hdus = stack.enter_context(fits.open(path)) if tables else None
+        header = fits.Header.fromstring(raw.decode("latin-1"))
+        if "A_ORDER" in header and not found.suffix:
+            for i in found.axes:  # astropy applies such coefficients too, but complains on standard error
+                header[f"CTYPE{i}"] = cards.text(f"CTYPE{i}") + "-SIP"
+        wcs = WCS(header, fobj=hdus).celestial
+        wcs.wcs.set()
+    if wcs.naxis != 2:
+        raise BadWcsError("the two celestial axes cannot be separated from the others")
+    return _finished(cards, found, _AstropyEngine(wcs))
+
+
+def _celestial(cards: Cards) -> _Celestial:
+    """The pair of celestial axes, checked: one longitude, its latitude, one projection, reference values and scale."""
+    types = {i: cards.text(f"CTYPE{i}") for i in range(1, MAX_AXES + 1)}
+    names = {i: text[:4].rstrip("-") if text[4:5] in ("", "-") else text for i, text in types.items()}
+    for i, name in names.items():
+        if name in REFUSED_LONGITUDES:
+            raise BadWcsError(f"CTYPE{i} is {types[i]!r}: {REFUSED_LONGITUDES[name]} coordinates are not supported")
+    lon = [i for i, name in names.items() if name in LONGITUDES and types[i][4:5] == "-"]
+    lat = [i for i, name in names.items() if name in LONGITUDES.values() and types[i][4:5] == "-"]
+    if len(lon) != 1 or len(lat) != 1:
+        shown = ", ".join(repr(text) for text in types.values() if text) or "no CTYPE"
+        raise NoCelestialError(f"no pair of projected celestial axes such as RA---SIN and DEC--SIN: {shown}")
+    i, j = lon[0], lat[0]
+    code, suffix = types[i][5:8], types[i][8:]
+    if LONGITUDES[names[i]] != names[j] or types[j][5:8] != code:
+        raise BadWcsError(f"CTYPE{i} is {types[i]!r} but CTYPE{j} is {types[j]!r}: they are no pair")
+    axes = (min(i, j), max(i, j))
+    _check_numbers(cards, axes)
+    system, assumed = (System("galactic"), False) if names[i] == "GLON" else system_of(cards)
+    return _Celestial(axes, code, suffix, i > j, system, assumed)
+
+
+def _check_numbers(cards: Cards, axes: tuple[int, int]) -> None:
+    """Refuse what FITS lets default in silence (a reference value of 0, a scale of 1 degree) and cannot be meant."""
+    for i in axes:
+        for stem in ("CRVAL", "CRPIX"):
+            if not math.isfinite(cards.number(f"{stem}{i}")):
+                raise BadWcsError(f"{stem}{i} is missing or no number")
+    matrix = [key for key in cards if re.fullmatch(r"(PC|CD)\d_\d", key)]
+    other = [k for k in matrix if (int(k[2]) in axes) != (int(k[4]) in axes) and cards.number(k) != 0.0]
+    if other:
+        raise BadWcsError(f"{other[0]} mixes a celestial axis with another one")
+    if not any(key[:2] == "CD" for key in matrix):
+        for i in axes:
+            scale = cards.number(f"CDELT{i}")
+            if scale == 0.0 or not (math.isfinite(scale) or any(k[:3] == f"PC{i}" for k in matrix)):
+                raise BadWcsError(
+                    f"CDELT{i} is {'zero' if scale == 0.0 else 'missing or no number'}, without a CD matrix"
+                )
+
+
+def _two_axes(cards: Cards, axes: tuple[int, int]) -> str:
+    """The celestial cards with their axes renumbered 1 and 2; what belongs to other axes is left out."""
+    number = {str(axes[0]): "1", str(axes[1]): "2"}
+    out = []
+    for key in cards:
+        text = cards.card(key)
+        match = re.fullmatch(r"(CTYPE|CRPIX|CRVAL|CDELT|CROTA|CUNIT|PV|PC|CD)(\d)(_(\d+))?", key)
+        if match is None:
+            out += [text] if key in ("LONPOLE", "LATPOLE") else []
+            continue
+        stem, first, _, second = match.groups()
+        if first not in number or (stem in ("PC", "CD") and second not in number):
+            continue
+        tail = "" if second is None else "_" + (number[second] if stem in ("PC", "CD") else second)
+        out.append(f"{stem}{number[first]}{tail}".ljust(8) + text[8:])
+    return "".join(out)
+
+
+def _size(cards: Cards, found: _Celestial) -> tuple[int, int]:
+    return cards.integer(f"NAXIS{found.axes[0]}"), cards.integer(f"NAXIS{found.axes[1]}")
+
+
+def _has_tables(cards: Cards) -> bool:
+    return any(_TABLE.fullmatch(key) for key in cards)
+
+
+def _reference(cards: Cards, found: _Celestial) -> tuple[float, float]:
+    """See `Projection`."""
+    width, height = _size(cards, found)
+    if found.code not in ZENITHAL_CODES and min(width, height) > 0:
+        return (width - 1) / 2.0, (height - 1) / 2.0
+    return cards.number(f"CRPIX{found.axes[0]}") - 1.0, cards.number(f"CRPIX{found.axes[1]}") - 1.0
+
+
+def _finished(cards: Cards, found: _Celestial, engine: _Engine) -> Projection:
+    """The projection, if its scale is finite and positive at the reference pixel."""
+    size, reference = _size(cards, found), _reference(cards, found)
+    result = Projection(found.axes, found.system, found.assumed, size, reference, engine, found.swapped)
+    scale = result.pixel_scale_arcsec
+    if not (math.isfinite(scale) and scale > 0.0):
+        raise BadWcsError("the projection is undefined or singular at the image's reference pixel")
+    return result
+
+
+class _as_bad_wcs:  # noqa: N801 - a context manager, written like a function where it is used
+    """Turn what wcslib and astropy raise on bad cards into `BadWcsError`; one line of theirs says what is wrong."""
+
+    def __enter__(self) -> None:
+        return None
+
+    def __exit__(self, kind: object, error: BaseException | None, trace: object) -> None:
+        if isinstance(error, WcsError | ValueError | KeyError | TypeError | AssertionError | MemoryError):
+            lines = [line for line in str(error).splitlines() if line and not line.startswith("ERROR")]
+            raise BadWcsError(f"wcslib refuses the coordinates: {(lines or [str(error)])[-1].rstrip('.')}") from error
+
+
+# --- the two engines
+
+
+def _turn(prm: Wcsprm, swapped: bool) -> FloatArray:
+    """The step in pixels, shape (2,), that 360 degrees of native longitude make."""
+    matrix = prm.get_pc() * prm.get_cdelt()[:, None]
+    return np.linalg.solve(matrix, np.array([0.0, 360.0] if swapped else [360.0, 0.0]))
+
+
+@dataclass(frozen=True, eq=False)
+class _WcslibEngine:
+    """Plain projections, straight through wcslib.
+
+    `turn` is set for cylindrical projections: an image may lie more than 180 degrees from its reference value, and
+    wcslib then gives the pixel one turn away; the one nearest the image's middle is wanted.
+    """
+
+    prm: Wcsprm
+    turn: FloatArray | None
+    middle: tuple[float, float]
+    lock: Any = field(default_factory=threading.Lock)  # a Wcsprm is changed for a moment while it is used
+
+    def to_pixel(self, world: FloatArray) -> FloatArray:
+        with self.lock:
+            pixel: FloatArray = self.prm.s2p(world, 0)["pixcrd"]
+        if self.turn is not None:
+            turns = np.rint((np.array(self.middle) - pixel) @ self.turn / (self.turn @ self.turn))
+            pixel = np.where(turns[:, None] != 0.0, pixel + turns[:, None] * self.turn, pixel)
+        return pixel
+
+    def to_world(self, pixel: FloatArray) -> FloatArray:
+        with self.lock:
+            world: FloatArray = self.prm.p2s(pixel, 0)["world"]
+        return world
+
+
+@dataclass(frozen=True, eq=False)
+class _AstropyEngine:
+    """Distorted projections, through astropy's full WCS."""
+
+    wcs: WCS
+    lock: Any = field(default_factory=threading.Lock)
+
+    def to_pixel(self, world: FloatArray) -> FloatArray:
+        """Invert the distortion by iteration; NaN where it does not come back to the same point."""
+        with self.lock:
+            linear = np.asarray(self.wcs.wcs_world2pix(world, 0))
+            if not self.wcs.has_distortion:
+                return linear
+            pixel = np.full_like(linear, np.nan)
+            near = np.isfinite(linear).all(axis=1)
+            if near.any():
+                pixel[near] = self._invert(world[near])
+        return pixel
+
+    def _invert(self, world: FloatArray) -> FloatArray:
+        with np.errstate(all="ignore"):  # a distortion far outside the image may overflow; such points become NaN
+            try:
+                pixel = np.asarray(self.wcs.all_world2pix(world, 0, quiet=True))
+            except NoConvergence as error:  # pragma: no cover - quiet=True returns the best solution instead
+                pixel = np.asarray(error.best_solution)
+            undistorted = self.wcs.pix2foc(pixel, 0)
+            wanted = self.wcs.wcs_world2pix(world, 0)
+            off = np.abs(np.asarray(undistorted) - wanted).max(axis=1)
+        return np.where((off < ROUND_TRIP_PIXELS)[:, None], pixel, np.nan)
+
+    def to_world(self, pixel: FloatArray) -> FloatArray:
+        with self.lock:
+            return np.asarray(self.wcs.all_pix2world(pixel, 0))
+
+
+def _tangent_map(lon: FloatArray, lat: FloatArray) -> FloatArray:
+    """The (east, north) arcsec per pixel from the sky at `_FIVE_POINTS`."""
+    vectors = unit_vectors(lon, lat)
+    lon0, lat0 = math.radians(lon[4]), math.radians(lat[4])
+    east = np.array([-math.sin(lon0), math.cos(lon0), 0.0])
+    north = np.array([-math.sin(lat0) * math.cos(lon0), -math.sin(lat0) * math.sin(lon0), math.cos(lat0)])
+    steps = np.stack((vectors[0] - vectors[1], vectors[2] - vectors[3]), axis=1)
+    scaled: FloatArray = np.degrees(np.stack((east, north)) @ steps) * 3600.0
+    return scaled

@@ -1,0 +1,332 @@
+"""The pieces of work: plain functions of plain arguments, callable in a notebook as well as on a cluster.
+
+Each reads what it needs from the run folder, and returns a small report, never pixels. Tables of the run are read once
+per process and version.
+"""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
+from functools import lru_cache, partial
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from hindlight import clock, host, judge, photometry, store
+from hindlight.candidates import ChannelView, Described, Examined, View, describe
+from hindlight.channels import channels_of
+from hindlight.errors import HindlightError
+from hindlight.fence import Fault, blank, call, checked
+from hindlight.headers import SetAsideError
+from hindlight.lightcurve import Channel, FloatArray, IntArray, LightCurve
+from hindlight.plan import BrightSources
+from hindlight.plugin import Candidate, Cutout, Finding, PeriodResult
+from hindlight.positions import moved
+from hindlight.ranking import Thresholds
+from hindlight.schema import MEASUREMENTS
+from hindlight.settings import Settings
+from hindlight.store import Columns, Piece, RunFolder
+from hindlight.systems import unit_vectors
+
+JULIAN_YEAR_S = 31557600.0
+
+
+@dataclass(frozen=True)
+class Order:
+    """What every piece of work is told: the run, its settings, its plugins, and which version of its tables."""
+
+    run: str
+    settings: Settings
+    plugins: host.PluginSpec
+    version: str = ""
+
+
+@dataclass(frozen=True)
+class Book:
+    """The tables of a run that pieces of work share."""
+
+    folder: RunFolder
+    frames: Columns
+    positions: Columns
+    solution: Columns
+    channels: dict[str, Channel]
+    row_of_frame: dict[int, int] = field(default_factory=dict)
+
+
+@lru_cache(maxsize=4)
+def book(run: str, version: str) -> Book:
+    """The tables of a run, read once per process; `version` changes whenever one of them does."""
+    folder = RunFolder(Path(run))
+    frames = folder.frames()
+    positions = folder.positions() if folder.has("positions.parquet") else {}
+    solution = folder.solution() if folder.has("frame_solution.parquet") else {}
+    rows = {int(frame): row for row, frame in enumerate(frames["id"])}
+    return Book(folder, frames, positions, solution, channels_of(frames), rows)
+
+
+def frame_facts(frames: Columns, row: int) -> photometry.FrameToMeasure:
+    """What photometry needs to know of a frame, from its row in the frame table."""
+    value = {name: values[row] for name, values in frames.items()}
+    return photometry.FrameToMeasure(
+        path=str(Path(value["archive"]) / value["path"]), hdu=int(value["hdu"]), plane=int(value["plane"]),
+        mjd=float(value["middle_mjd_tdb"]), beam_major=float(value["beam_major"]),
+        beam_minor=float(value["beam_minor"]), beam_angle=float(value["beam_angle"]), unit=str(value["unit"]),
+        electrons_per_unit=float(value["electrons_per_unit"]), saturation=float(value["saturation"]),
+    )  # fmt: skip
+
+
+def frame_label(frames: Columns, row: int) -> str:
+    """File, HDU and plane of a frame as one word."""
+    return f"{frames['path'][row]}[{frames['hdu'][row]},{frames['plane'][row]}]"
+
+
+def measure_piece(order: Order, piece: Piece) -> dict[str, int]:
+    """Measure one batch of frames at one round of positions and write the part. Returns counts."""
+    tables = book(order.run, order.version)
+    rows = np.flatnonzero((tables.frames["batch"] == piece.batch) & (tables.frames["state"] == "current"))
+    who = {name: values[tables.positions["round"] == piece.round] for name, values in tables.positions.items()}
+    vectors = unit_vectors(who["ra"], who["dec"])
+    sites = np.stack([tables.frames[f"site_{axis}"][rows] for axis in "xyz"], axis=1)
+    middles = np.where(tables.frames["barycentric"][rows], np.nan, tables.frames["middle_tdb_s"][rows])
+    observatory = clock.observatory_vectors(middles, sites)
+    estimators = host.load(order.plugins).estimators
+    parts: list[Columns] = []
+    rejects: list[dict[str, Any]] = []
+    for row, vector in zip(rows, observatory, strict=True):
+        try:
+            parts.append(_measure_frame(order, tables.frames, int(row), who, vectors, vector, estimators))
+        except (SetAsideError, OSError, ValueError) as error:
+            rejects.append(_reject(tables.frames, int(row), error))
+    columns = _concatenated(parts)
+    store.write_part(tables.folder, piece, columns, rejects)
+    return {"frames": len(rows), "measurements": len(columns["flux"]), "rejects": len(rejects)}
+
+
+def _reject(frames: Columns, row: int, error: Exception) -> dict[str, Any]:
+    reason = error.reason if isinstance(error, SetAsideError) else "bad_pixels"
+    detail = error.detail if isinstance(error, SetAsideError) else " ".join(str(error).split())
+    return {
+        "path": str(frames["path"][row]), "hdu": int(frames["hdu"][row]), "plane": int(frames["plane"][row]),
+        "reason": reason, "detail": detail,
+    }  # fmt: skip
+
+
+def _near(frames: Columns, row: int, vectors: FloatArray) -> IntArray:
+    """Positions that may lie in a frame: within the circle around its corners."""
+    centre = unit_vectors(frames["centre_ra"][row : row + 1], frames["centre_dec"][row : row + 1])[0]
+    cosine = vectors[:, 0] * centre[0] + vectors[:, 1] * centre[1] + vectors[:, 2] * centre[2]
+    return np.flatnonzero(cosine >= np.cos(np.radians(min(180.0, 1.001 * float(frames["radius"][row]) + 1e-4))))
+
+
+def _measure_frame(
+    order: Order, frames: Columns, row: int, who: Columns, vectors: FloatArray, observatory: FloatArray, estimators: Any
+) -> Columns:
+    """The measurement columns of one frame."""
+    near = _near(frames, row, vectors)
+    middle = float(frames["middle_tdb_s"][row])
+    year = 2000.0 + middle / JULIAN_YEAR_S
+    ra, dec = moved(
+        who["ra"][near], who["dec"][near], who["pm_ra_cosdec"][near], who["pm_dec"][near], who["ref_epoch"][near], year
+    )
+    facts = frame_facts(frames, row)
+    estimator = photometry.choose_estimator(estimators, facts.unit, order.settings.photometry.estimator)
+    found = photometry.measure_frame(facts, ra, dec, estimator, order.settings)
+    inside = near[found["index"]]
+    n = len(inside)
+    shift = 0.0 if frames["barycentric"][row] else clock.roemer(observatory, vectors[inside])
+    columns = {name: found[name] for name in ("x", "y", "flux", "flux_err", "background", "rms", "flags")}
+    columns["position"] = who["id"][inside]
+    columns["frame"] = np.full(n, frames["id"][row])
+    columns["channel"] = np.full(n, frames["channel"][row], object)
+    columns["t_tdb_s"] = middle + shift * np.ones(n)
+    columns["bjd_tdb"] = clock.bjd(columns["t_tdb_s"])
+    columns["exposure_s"] = np.full(n, frames["exposure_s"][row])
+    columns["gain"] = np.ones(n)
+    return columns
+
+
+def _concatenated(parts: Sequence[Columns]) -> Columns:
+    types: dict[str, Any] = {"float64": np.float64, "int64": np.int64, "str": object}
+    return {
+        c.name: np.concatenate([np.empty(0, types[c.dtype]), *[part[c.name] for part in parts]]).astype(types[c.dtype])
+        for c in MEASUREMENTS
+    }
+
+
+def find_bright(order: Order, frame: int) -> BrightSources:
+    """Bright sources in one reference frame; none where its pixels cannot be read."""
+    tables = book(order.run, order.version)
+    row = tables.row_of_frame[frame]
+    settings = order.settings
+    try:
+        ra, dec, snr, beam = photometry.bright_sources(
+            frame_facts(tables.frames, row), settings.controls.bright_snr, settings
+        )
+    except (SetAsideError, OSError, ValueError):
+        ra = dec = snr = np.empty(0)
+        beam = 0.0
+    return BrightSources(ra, dec, snr, np.full(len(ra), beam))
+
+
+def position_label(positions: Columns, row: int) -> str:
+    """The name of a target, or what to call a control."""
+    return str(positions["name"][row]) or f"{positions['kind'][row]} {positions['id'][row]}"
+
+
+def position_blocks(order: Order, ids: IntArray, frames: IntArray | None = None) -> dict[str, Any]:
+    """The blocks of these positions (ascending ids), one per channel, and the rows they were made from."""
+    tables = book(order.run, order.version)
+    rows_of = np.searchsorted(tables.positions["id"], ids)
+    rounds = set(tables.positions["round"][rows_of].tolist())
+    plan = [p for p in store.pieces(tables.frames, tables.positions) if p.round in rounds]
+    rows = store.read_rows(tables.folder, plan, ids, frames)
+    void = tables.frames["id"][tables.frames["state"] == "void"]
+    keep = ~np.isin(rows["frame"], void)
+    rows = {name: values[keep] for name, values in rows.items()}
+    names = [position_label(tables.positions, int(row)) for row in rows_of]
+    return {"rows": rows, "blocks": store.blocks(rows, ids, names, tables.solution, tables.channels)}
+
+
+def judge_positions(order: Order, ids: IntArray) -> judge.Judgement:
+    """Every statistic at these positions (ascending ids)."""
+    return judge.judge(position_blocks(order, ids)["blocks"], host.load(order.plugins).statistics)
+
+
+def search_positions(order: Order, ids: IntArray) -> judge.Judgement:
+    """Every period search at these positions (ascending ids)."""
+    found = position_blocks(order, ids)["blocks"]
+    curves = [[block.curve(row) for block in found.values()] for row in range(len(ids))]
+    return judge.search(curves, host.load(order.plugins).period_searches)
+
+
+def target_data(order: Order, target: int) -> tuple[list[LightCurve], Columns]:
+    """One position's light curves in all channels, and its raw rows."""
+    found = position_blocks(order, np.array([target]))
+    return [block.curve(0) for block in found["blocks"].values()], found["rows"]
+
+
+def describe_targets(
+    order: Order, ids: IntArray, thresholds: Mapping[str, Thresholds], given: Sequence[Mapping[str, float]],
+    beyond: Sequence[bool], examined: Sequence[Examined | None],
+) -> list[Described]:  # fmt: skip
+    """What the tables say of these targets (ascending ids) of one field."""
+    tables = book(order.run, order.version)
+    found = position_blocks(order, ids)
+    utc = tables.frames["middle_utc"]
+    covering = Counter(zip(found["rows"]["position"].tolist(), found["rows"]["channel"].tolist(), strict=True))
+    described = []
+    for row, target in enumerate(ids.tolist()):
+        channels = tuple(
+            ChannelView(block.curve(row), covering[target, label], thresholds[label])
+            for label, block in found["blocks"].items()
+            if covering[target, label]
+        )
+        name = position_label(tables.positions, int(np.searchsorted(tables.positions["id"], target)))
+        view = View(
+            name, channels,
+            utc=lambda frame: str(utc[tables.row_of_frame[frame]]),
+            label=lambda frame: frame_label(tables.frames, tables.row_of_frame[frame]),
+        )  # fmt: skip
+        described.append(describe(view, given[row], beyond[row], examined[row], order.settings.detection))
+    return described
+
+
+def examine_target(order: Order, target: int, field_controls: IntArray, above_quiet: dict[str, float]) -> Examined:
+    """Periods examined and consistency checked for one target that varies beyond chance.
+
+    `above_quiet` maps channel labels to what counts as bright.
+    """
+    plugins = host.load(order.plugins)
+    curves, rows = target_data(order, target)
+    cells: dict[str, Any] = {}
+    faults: list[Fault] = []
+    chosen: PeriodResult | None = None
+    name = curves[0].name if curves else ""
+    for plugin in plugins.period_searches:
+        given = judge.timed_curves(curves, plugin.min_points)
+        if not given:
+            continue
+        result = call(plugin, partial(_examined, plugin, given), name)
+        if isinstance(result, Fault):
+            faults.append(result)
+            continue
+        cells |= {f"{plugin.name}_{key}": value for key, value in result.values.items()}
+        if chosen is None or (result.established and not chosen.established):
+            chosen = result
+    candidate = _candidate(order, target, field_controls, curves, rows, above_quiet, chosen)
+    concerns = []
+    for check in plugins.checks:
+        answer = call(check, partial(_found, check, candidate), name)
+        if isinstance(answer, Fault):
+            faults.append(answer)
+            continue
+        cells |= {f"{check.name}_{key}": value for key, value in answer.values.items()}
+        cells |= {f"{check.name}_verdict": answer.verdict, f"{check.name}_evidence": answer.evidence}
+        if answer.verdict == "fail":
+            concerns.append(f"{check.name}: {answer.evidence}")
+    return Examined(cells, chosen, tuple(concerns), tuple(faults))
+
+
+def _examined(plugin: Any, curves: Sequence[LightCurve]) -> PeriodResult:
+    result = plugin.examine(curves)
+    if not isinstance(result, PeriodResult):
+        raise TypeError(f"examine() returned {type(result).__name__}, expected a PeriodResult")
+    return PeriodResult(checked(plugin, result.values), tuple(result.ephemerides), bool(result.established))
+
+
+def _found(check: Any, candidate: Candidate) -> Finding:
+    finding = check.check(candidate)
+    if not isinstance(finding, Finding) or finding.verdict not in ("pass", "fail", "uninformative"):
+        raise TypeError(f"check() returned {finding!r:.80}, expected a Finding with a verdict of the three")
+    declared = {column.name: blank(column) for column in check.columns}
+    return Finding(finding.verdict, finding.evidence, checked(check, {**declared, **finding.values}))
+
+
+def _candidate(
+    order: Order, target: int, controls: IntArray, curves: Sequence[LightCurve], rows: Columns,
+    above_quiet: dict[str, float], period: PeriodResult | None,
+) -> Candidate:  # fmt: skip
+    tables = book(order.run, order.version)
+    at = int(np.searchsorted(tables.positions["id"], target))
+    bright, xs, ys = [], [], []
+    for curve in curves:
+        excess = np.abs(curve.above_quiet) if curve.channel.signed else curve.above_quiet
+        bright.append(np.asarray(excess > above_quiet.get(curve.channel.label, np.inf)))
+        where = {int(frame): i for i, frame in enumerate(rows["frame"])}
+        index = np.array([where[int(frame)] for frame in curve.frame], np.int64)
+        xs.append(rows["x"][index])
+        ys.append(rows["y"][index])
+
+    def blank_sky(channel: str, frames: IntArray) -> Any:
+        found = position_blocks(order, controls, np.asarray(frames))["blocks"]
+        return found[channel]
+
+    def cutouts(frames: IntArray, half_width: float) -> list[Cutout]:
+        return [made for frame in frames if (made := _cutout(order, rows, int(frame), half_width)) is not None]
+
+    ephemeris = period.ephemerides[0] if period and period.established and period.ephemerides else None
+    return Candidate(
+        name=str(tables.positions["name"][at]), ra=float(tables.positions["ra"][at]),
+        dec=float(tables.positions["dec"][at]), curves=tuple(curves), bright=tuple(bright), x=tuple(xs), y=tuple(ys),
+        ephemeris=ephemeris, controls=blank_sky, cutouts=cutouts,
+    )  # fmt: skip
+
+
+def _cutout(order: Order, rows: Columns, frame: int, half_width: float) -> Cutout | None:
+    """Raw pixels around a measured position; None where the file is no longer readable."""
+    tables = book(order.run, order.version)
+    row = tables.row_of_frame[frame]
+    at = int(np.flatnonzero(rows["frame"] == frame)[0])
+    try:
+        made = photometry.cutout(
+            frame_facts(tables.frames, row), float(rows["x"][at]), float(rows["y"][at]), half_width, order.settings
+        )
+    except (SetAsideError, OSError, ValueError, HindlightError):
+        return None
+    return Cutout(
+        frame=frame, channel=str(tables.frames["channel"][row]), pixels=made.pixels, x=made.x, y=made.y,
+        to_sky=made.to_sky, fwhm=made.fwhm, background=float(rows["background"][at]), rms=float(rows["rms"][at]),
+    )  # fmt: skip
