@@ -315,3 +315,15 @@ def test_only_the_best_frames_are_asked_for():
     object.__setattr__(candidate, "cutouts", lambda frames, half_width: asked.extend(frames) or [])
     Position(max_frames=4).check(candidate)
     assert asked == [549, 149, 548, 148]
+
+
+def test_findings_hold_the_declared_columns():
+    """Whatever the verdict, a finding has each declared column and no other."""
+    rng = np.random.default_rng(14)
+    curve, bright = flaring([7])
+    for z in (None, rng.normal(size=(40, N_FRAMES))):
+        values = FrameWide().check(make_candidate([curve], [bright], z)).values
+        assert list(values) == [column.name for column in FrameWide.columns]
+    for offsets in (np.zeros((0, 2)), np.zeros((1, 2)), np.zeros((3, 2))):
+        values = Position().check(simulated(offsets, rng)).values
+        assert list(values) == [column.name for column in Position.columns]

@@ -21,6 +21,7 @@ from hindlight_plugins.lomb_scargle import (
     prepare,
     refine,
     settle,
+    whitened_products,
     window,
     window_peaks,
 )
@@ -197,7 +198,7 @@ def test_search_and_examination_agree():
     times = random_times(rng)
     curve = make_curve(times, sinusoid(times, 3 * DAY, 1.5) + rng.normal(size=200))
     quick, full = QUICK.search([curve]), QUICK.examine([curve]).values
-    completed = {"permutation_p", "rival_log_odds", "verdict"}
+    completed = {"log10_fap_red", "permutation_p", "rival_log_odds", "verdict"}
     assert quick.keys() == full.keys() == {column.name for column in LombScargle.columns}
     assert {k: v for k, v in quick.items() if k not in completed} == {
         k: v for k, v in full.items() if k not in completed
@@ -242,13 +243,42 @@ def test_a_slow_drift_is_not_established():
         assert "cycles" in result.values["verdict"]
 
 
-def test_random_walks_are_rarely_established():
-    """At most 3 of 40 random walks, whose power is all at low frequencies, pass for periodic."""
+def wander(rng: np.random.Generator, times: np.ndarray, tau: float) -> np.ndarray:
+    """A damped random walk of unit variance."""
+    flux = rng.normal(size=times.size)
+    for i, gap in enumerate(np.diff(times)):
+        decay = math.exp(-gap / tau)
+        flux[i + 1] = decay * flux[i] + math.sqrt(1 - decay**2) * flux[i + 1]
+    return flux
+
+
+@pytest.mark.parametrize("tau_days", [1, 5, 30])
+def test_wandering_sources_are_not_established(tau_days):
+    """Of 30 sources that wander without a period at most one passes for periodic, though white noise is ruled out."""
     rng = np.random.default_rng(18)
-    passed = sum(
-        QUICK.examine([make_curve(random_times(rng), np.cumsum(rng.normal(size=200)))]).established for _ in range(40)
-    )
-    assert passed <= 3
+    passed, red = 0, 0
+    for _ in range(30):
+        times = random_times(rng)
+        result = QUICK.examine([make_curve(times, 5 * wander(rng, times, tau_days * DAY) + rng.normal(size=200))])
+        passed += result.established
+        red += result.values["log10_fap"] < -3 < result.values["log10_fap_red"]
+    assert passed <= 1
+    assert red >= 10
+
+
+def test_whitening_agrees_with_the_full_covariance():
+    """Scalar products and determinant of the recursion are those of the dense covariance matrix, ties included."""
+    rng = np.random.default_rng(32)
+    times = np.sort(rng.integers(0, 60, 40)) * 1000.0
+    series = prepare(make_curve(times, rng.normal(size=40), rng.uniform(0.5, 2, 40)))
+    columns = np.stack((series.y, np.ones(40), np.sin(series.t / 5000)))
+    variance, tau = np.array([0.0, 0.3, 2.0]), np.array([3000.0, 1000.0, 1e5])
+    products, log_det = whitened_products(series, columns, variance, tau)
+    for k in range(3):
+        apart = np.abs(series.t[:, None] - series.t)
+        covariance = variance[k] * np.exp(-apart / tau[k]) + np.diag(series.error**2)
+        np.testing.assert_allclose(products[k], columns @ np.linalg.solve(covariance, columns.T), rtol=1e-9, atol=1e-9)
+        assert log_det[k] == pytest.approx(np.linalg.slogdet(covariance)[1])
 
 
 def test_a_daily_effect_is_not_established():

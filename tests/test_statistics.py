@@ -7,7 +7,7 @@ import math
 import numpy as np
 import pytest
 from astropy.io.votable.ucd import check_ucd
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from hindlight import Channel, LightCurve, Statistic
@@ -173,6 +173,7 @@ def light_curves(min_size: int = 3) -> st.SearchStrategy[LightCurve]:
     return st.lists(sample, min_size=min_size, max_size=40).map(lambda rows: LightCurve.from_arrays(*np.array(rows).T))
 
 
+@settings(deadline=None)
 @given(light_curves())
 def test_flux_scaling(curve):
     """Fluxes and errors a thousand times larger multiply each column by a thousand to its declared power of flux."""
@@ -190,6 +191,7 @@ def test_flux_scaling(curve):
             assert after[column.name] == pytest.approx(expected, rel=1e-6, abs=floor, nan_ok=True), column.name
 
 
+@settings(deadline=None)
 @given(light_curves(), st.integers(-(10**9), 10**9))
 def test_time_shift(curve, shift):
     """A shift of the time origin changes nothing but times."""

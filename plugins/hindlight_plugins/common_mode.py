@@ -28,8 +28,8 @@ class FrameWide(ConsistencyCheck):
     columns = (
         Column("p", "chance that blank positions stray as much in the worst bright frame, all bright frames counted",
                ucd="stat.probability"),
-        Column("n_frames", "bright frames with enough blank positions to tell", ucd="meta.number;obs"),
-        Column("n_bad", "those that are bad as a whole", ucd="meta.number;obs"),
+        Column("n_frames", "bright frames with enough blank positions to tell", dtype="int64", ucd="meta.number;obs"),
+        Column("n_bad", "those that are bad as a whole", dtype="int64", ucd="meta.number;obs"),
     )  # fmt: skip
     min_controls: int = setting(20, "fewest blank positions in a frame that can tell", minimum=1)
     level: float = setting(1e-3, "chance below which a frame is bad, all bright frames counted", minimum=0, maximum=1)

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import nifty_ls
 import numpy as np
@@ -54,8 +54,9 @@ class LombScargle(PeriodSearch):
         Column("window", "how strongly the times of the samples alone repeat with this period, 0 to 1",
                ucd="stat.value"),
         Column("channel", "channel of the highest peak", dtype="str", ucd="meta.id"),
-        Column("log10_fap_red", "the same in red noise: where the source wanders without a period (a damped random walk "
-               "with the time scale and size that fit best); blank where not asked", ucd="stat.probability"),
+        Column("log10_fap_red", "log10 of the false-alarm probability if the source wanders without a period, as a "
+               "damped random walk of the size and time scale that fit best; blank where not asked",
+               ucd="stat.probability"),
         Column("permutation_p", "chance that the same fluxes in random order show a peak as high; blank unless all "
                "other tests were passed", ucd="stat.probability"),
         Column("rival_log_odds", "natural logarithm of the odds of the best period against the next one that is no "
@@ -98,7 +99,7 @@ class LombScargle(PeriodSearch):
             return PeriodResult(_blank() | {"verdict": "not established: no channel can be searched"})
         rivals = self._rivals(peak)
         if rivals and rivals[0][1] > peak.power + TIE:  # an alias beyond the frequencies searched
-            peak = peak.at(*rivals[0])
+            peak = replace(peak, frequency=rivals[0][0], power=rivals[0][1])
             rivals = self._rivals(peak)
         odds = [(frequency, peak.log_odds(power)) for frequency, power in rivals]
         against = [-o for f, o in odds if not _is_harmonic(f, peak)]
@@ -136,8 +137,7 @@ class LombScargle(PeriodSearch):
                 peaks.append(Peak(series, grid, power, *refine(series, at, grid.step, grid.low, grid.high)))
         if not peaks:
             return None
-        best = min(peaks, key=lambda peak: round(peak.log_false_peaks, 6))
-        return best.among(len(peaks))
+        return replace(min(peaks, key=lambda peak: round(peak.log_false_peaks, 6)), channels=len(peaks))
 
     def _values(self, peak: Peak) -> dict[str, float | str]:
         series, frequency = peak.series, peak.frequency
@@ -157,7 +157,7 @@ class LombScargle(PeriodSearch):
         """Frequency and power of every other peak worth a look, highest first: harmonics, aliases, the next peaks."""
         series, grid = peak.series, peak.grid
         highest = max(self._highest_frequency(series), grid.high)
-        wanted = [*(factor * peak.frequency for factor in HARMONICS)]
+        wanted = [factor * peak.frequency for factor in HARMONICS]
         wanted += aliases(peak.frequency, window_peaks(series, grid))
         wanted += [grid.low + grid.step * k for k in highest_maxima(peak.grid_power, PEAKS)]
         found = [refine(series, f, grid.step, grid.low, highest) for f in wanted if grid.low - grid.step < f <= highest]
@@ -186,8 +186,6 @@ class LombScargle(PeriodSearch):
             reasons.append("the times of the samples repeat with this period themselves")
         if float(values["rival_log_odds"]) < math.log(self.min_odds):
             reasons.append(f"another period is possible, odds {math.exp(float(values['rival_log_odds'])):.3g} to 1")
-        if gain_across_halves(series, frequency) <= 0:
-            reasons.append("the sinusoid of one half of the data does not describe the other half")
         return reasons
 
     def _permutation_p(self, peak: Peak) -> float:
@@ -258,13 +256,12 @@ class Series:
     def shuffled(self, rng: np.random.Generator) -> Series:
         """The same fluxes, each with its error, in random order."""
         order = rng.permutation(self.t.size)
-        arrays = (self.t, self.y[order], self.error[order], self.weight[order], self.exposure[order])
-        return Series(*arrays, self.middle, self.scale, self.chi2, self.channel)
+        return replace(self, y=self.y[order], error=self.error[order], weight=self.weight[order])
 
 
 @dataclass(frozen=True, eq=False)
 class Peak:
-    """The highest peak of a periodogram."""
+    """A peak of a periodogram, the best of as many channels."""
 
     series: Series
     grid: Grid
@@ -272,14 +269,6 @@ class Peak:
     frequency: float
     power: float
     channels: int = 1
-
-    def at(self, frequency: float, power: float) -> Peak:
-        """Another peak of the same series."""
-        return Peak(self.series, self.grid, self.grid_power, frequency, power, self.channels)
-
-    def among(self, channels: int) -> Peak:
-        """The same as the best of several channels."""
-        return Peak(self.series, self.grid, self.grid_power, self.frequency, self.power, channels)
 
     @property
     def log_false_peaks(self) -> float:
@@ -418,13 +407,8 @@ def baluev(power: float, n: int, f_max: float, variance: float) -> tuple[float, 
     """
     log_rest = math.log(max(1 - power, 1e-15))
     log_gamma = 0.5 * math.log(2 / (n - 1)) + float(special.gammaln((n - 1) / 2) - special.gammaln((n - 2) / 2))
-    log_tau = (
-        log_gamma
-        + _log_width(f_max, variance)
-        + (n - 4) / 2 * log_rest
-        + 0.5 * math.log(max((n - 1) * power / 2, 1e-300))
-    )
-    return (n - 3) / 2 * log_rest, log_tau
+    log_height = 0.5 * math.log(max((n - 1) * power / 2, 1e-300))
+    return (n - 3) / 2 * log_rest, log_gamma + _log_width(f_max, variance) + (n - 4) / 2 * log_rest + log_height
 
 
 def _log_width(f_max: float, variance: float) -> float:
@@ -434,54 +418,49 @@ def _log_width(f_max: float, variance: float) -> float:
 def log_fap_red(peak: Peak) -> float:
     """Natural logarithm of the false-alarm probability of a peak among damped random walks, an upper bound.
 
-    The walk's variance and time scale are those of highest likelihood without a sinusoid, on a coarse grid; with them
-    the samples and the sinusoid are made white. Z, half the chi-square that the sinusoid then takes off, has
-    FAP = W exp(-Z) sqrt(Z) + exp(-Z) (Baluev 2008, for noise that is known).
+    Z, the gain in ln likelihood when a sinusoid is added to the walk that fits best (variance and time scale on a
+    coarse grid, fitted with and without it), has FAP = W exp(-Z) sqrt(Z) + exp(-Z) (Baluev 2008, for known noise).
     """
     series = peak.series
     gaps = np.diff(series.t)
     shortest = float(np.quantile(gaps[gaps > 0], 0.1))
     tau, variance = np.meshgrid(np.geomspace(shortest, series.span, WALK_TIMES), WALK_VARIANCES)
-    tau, variance = tau.ravel(), variance.ravel()
-    pulls, log_norm = whiten(series, series.y[None], variance, tau)
-    best = int(np.argmin((pulls[:, 0] ** 2).sum(axis=1) + log_norm))
     phase = 2 * np.pi * peak.frequency * series.t
     columns = np.stack((series.y, np.ones_like(phase), np.cos(phase), np.sin(phase)))
-    y, *model = whiten(series, columns, variance[[best]], tau[[best]])[0][0]
-    z = (_least_chi2(y, np.array(model[:1])) - _least_chi2(y, np.array(model))) / 2
+    products, log_det = whitened_products(series, columns, variance.ravel(), tau.ravel())
+    with_and_without = [float((_least_squares(products, k) + log_det).min()) for k in (4, 2)]
+    z = max((with_and_without[1] - with_and_without[0]) / 2, 1e-300)
     log_width = _log_width(max(peak.grid.high, peak.frequency), float((series.weight * series.t**2).sum()))
-    log_fap = -z + float(np.logaddexp(log_width + 0.5 * math.log(max(z, 1e-300)), 0.0)) + math.log(peak.channels)
-    return min(log_fap, 0.0)
+    return min(-z + float(np.logaddexp(log_width + 0.5 * math.log(z), 0.0)) + math.log(peak.channels), 0.0)
 
 
-def whiten(series: Series, columns: Array, variance: Array, tau: Array) -> tuple[Array, Array]:
-    """Columns (k, n) made white for damped random walks of g variances and times: (g, k, n), and log det (g,).
+def whitened_products(series: Series, columns: Array, variance: Array, tau: Array) -> tuple[Array, Array]:
+    """Scalar products, shape (g, k, k), of k columns made white for g damped random walks, and log det, shape (g,).
 
-    Kelly, Bechtold & Siemiginowska 2009 (ApJ 698, 895), eqs 6 to 12, for walks of mean 0 seen with the series' errors.
+    Columns have shape (k, n). Kelly, Bechtold & Siemiginowska 2009 (ApJ 698, 895), eqs 6 to 12, for walks of mean 0
+    seen with the errors of the series.
     """
     state = np.zeros((tau.size, len(columns)))
     spread = variance.copy()
-    out = np.empty((series.t.size, *state.shape))
-    log_norm = np.zeros(tau.size)
-    gaps = np.append(np.diff(series.t), 0.0)
-    for i, gap in enumerate(gaps):
+    products = np.zeros((*state.shape, len(columns)))
+    log_det = np.zeros(tau.size)
+    for i, gap in enumerate(np.append(np.diff(series.t), 0.0)):
         total = spread + series.error[i] ** 2
         surprise = columns[:, i] - state
-        out[i] = surprise / np.sqrt(total)[:, None]
-        log_norm += np.log(total)
+        products += surprise[:, :, None] * surprise[:, None, :] / total[:, None, None]
+        log_det += np.log(total)
         decay = np.exp(-gap / tau)
         share = spread / total
         state = decay[:, None] * (state + share[:, None] * surprise)
         spread = variance + decay**2 * (spread * (1 - share) - variance)
-    return np.moveaxis(out, 0, -1), log_norm
+    return products, log_det
 
 
-def _least_chi2(y: Array, model: Array) -> float:
-    """Sum of squares that the columns of `model`, shape (k, n), leave of y."""
-    coefficients = np.linalg.pinv((model[:, None] * model).sum(axis=2), rcond=1e-9, hermitian=True) @ (model * y).sum(
-        axis=1
-    )
-    return float(((y - (coefficients[:, None] * model).sum(axis=0)) ** 2).sum())
+def _least_squares(products: Array, k: int) -> Array:
+    """Chi-square that the columns 1 to k - 1 leave of column 0, shape (g,), from scalar products (g, k, k)."""
+    inverse = np.linalg.pinv(products[:, 1:k, 1:k], rcond=1e-9, hermitian=True)
+    cross = products[:, 0, 1:k]
+    return products[:, 0, 0] - (cross[:, :, None] * inverse * cross[:, None, :]).sum(axis=(1, 2))
 
 
 def window(t: Array, frequency: Array) -> Array:
@@ -515,36 +494,11 @@ def aliases(frequency: float, sampling: Sequence[float]) -> list[float]:
 
 def fit(series: Series, frequency: float) -> Array:
     """Offset, cosine and sine coefficients of the weighted least-squares sinusoid, in units of `scale`."""
-    return _fit(series.t, series.y, series.weight, frequency)
-
-
-def _fit(t: Array, y: Array, weight: Array, frequency: float) -> Array:
-    phase = 2 * np.pi * frequency * t
-    model = np.stack((np.ones_like(t), np.cos(phase), np.sin(phase)))
-    weighted = model * weight / weight.sum()
+    phase = 2 * np.pi * frequency * series.t
+    model = np.stack((np.ones_like(phase), np.cos(phase), np.sin(phase)))
+    weighted = model * series.weight
     matrix = (weighted[:, None] * model).sum(axis=2)  # plain sums: a threaded product would change last bits
-    return np.linalg.pinv(matrix, rcond=1e-9, hermitian=True) @ (weighted * y).sum(axis=1)
-
-
-def gain_across_halves(series: Series, frequency: float) -> float:
-    """How much chi-square a sinusoid fitted to one half of the samples takes off the other half, both ways summed.
-
-    Each half has its own mean. Over `series.chi2`; not positive for a source that was bright in one half only.
-    """
-    gain = 0.0
-    middle = series.t.size // 2
-    halves = (slice(None, middle), slice(middle, None))
-    for one, other in (halves, halves[::-1]):
-        _, cosine, sine = _fit(series.t[one], series.y[one], series.weight[one], frequency)
-        phase = 2 * np.pi * frequency * series.t[other]
-        y, weight = series.y[other], series.weight[other]
-        gain += _dispersion(y, weight) - _dispersion(y - cosine * np.cos(phase) - sine * np.sin(phase), weight)
-    return gain
-
-
-def _dispersion(y: Array, weight: Array) -> float:
-    mean = (weight * y).sum() / weight.sum()
-    return float((weight * (y - mean) ** 2).sum())
+    return np.linalg.pinv(matrix, rcond=1e-9, hermitian=True) @ (weighted * series.y).sum(axis=1)
 
 
 def smear(series: Series, frequency: float) -> float:

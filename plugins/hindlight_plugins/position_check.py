@@ -33,7 +33,7 @@ class Position(ConsistencyCheck):
         Column("chi2_scatter", "chi-square of the centroids about their mean, 2 (n - 1) degrees of freedom; blank for "
                "one frame", ucd="stat.fit.chi2"),
         Column("p", "chance of an offset or a scatter as large, both tests counted", ucd="stat.probability"),
-        Column("n_frames", "bright frames with a centroid", ucd="meta.number;obs"),
+        Column("n_frames", "bright frames with a centroid", dtype="int64", ucd="meta.number;obs"),
     )  # fmt: skip
     min_snr: float = setting(5.0, "least flux over error of a frame whose centroid counts", unit="sigma", minimum=3)
     max_frames: int = setting(30, "at most so many frames, those of highest flux over error", minimum=1)

@@ -16,18 +16,16 @@ from typing import Any, NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from hindlight import clock, footprints, sky
+from hindlight import clock, footprints
 from hindlight.facts import NAN, FrameFacts, Moment
 from hindlight.files import FileEntry, list_files, open_source
-from hindlight.footprints import coverage_matrix, covering
 from hindlight.headers import Hdu, Plane, SetAsideError, facts_of, planes, read_hdus
 from hindlight.lightcurve import FloatArray
+from hindlight.outlines import Image, Outline, outlines
 from hindlight.plugin import Dialect
 from hindlight.schema import ASSUMPTIONS, FRAMES
 from hindlight.settings import Settings
-from hindlight.systems import BadWcsError, NoCelestialError
-
-__all__ = ["WalkResult", "coverage_matrix", "covering", "walk"]
+from hindlight.systems import NoCelestialError
 
 FILES_AT_ONCE = 512
 MEGABYTE = 1_000_000
@@ -88,13 +86,14 @@ def walk(
     step(len(files) - len(new))
     parts: list[Columns] = []
     rejects: list[Row] = []
-    remaining = iter(sorted(new))
+    remaining = iter(sorted(new, key=lambda f: (f[0], f[1].path)))
     while piece := list(islice(remaining, FILES_AT_ONCE)):
         found: list[_Found] = []
         for archive, entry in piece:
             _read_file(archive, entry, dialects, settings, found, rejects)
         parts.append(_columns(found, settings, rejects))
         step(len(piece))
+    rejects.sort(key=lambda row: (row["path"], row["hdu"], row["plane"]))
     unchanged = present - {(archive, entry.path) for archive, entry in new}
     return WalkResult(_joined(parts), rejects, present, unchanged)
 
@@ -181,9 +180,9 @@ def _columns(found: Sequence[_Found], settings: Settings, rejects: list[Row]) ->
     """The columns of some frames; those without usable coordinates become rejects."""
     words: list[list[str]] = [list(f.facts.assumptions) for f in found]
     times = _times(found, settings, words)
-    outlines, kept = _outlines(found, times["middle_mjd_tdb"], words, rejects)
+    usable, kept = _outlines(found, times["middle_mjd_tdb"], words, rejects)
     columns = {name: values[kept] for name, values in (times | _plain(found)).items()}
-    columns |= footprints.columns(outlines)
+    columns |= footprints.columns(usable)
     _beams(columns, settings, [words[i] for i in kept])
     columns["assumptions"] = _text([_sentences(tuple(dict.fromkeys(words[i]))) for i in kept])
     return columns
@@ -303,26 +302,26 @@ def _site(facts: FrameFacts, settings: Settings) -> tuple[float, float, float]:
 
 def _outlines(
     found: Sequence[_Found], mjd: FloatArray, words: Sequence[list[str]], rejects: list[Row]
-) -> tuple[list[footprints.Outline], list[int]]:
+) -> tuple[list[Outline], list[int]]:
     """The outline of each frame with usable coordinates, and which frames those are."""
-    outlines, kept = [], []
-    refused: dict[tuple[str, str, int], bool] = {}
-    for i, frame in enumerate(found):
-        key = (frame.archive, frame.entry.path, frame.hdu.index)
-        if key in refused:
-            continue
-        try:
-            projection = sky.projection(frame.hdu.cards, os.path.join(frame.archive, frame.entry.path))
-            outlines.append(footprints.outline(projection, frame.plane.width, frame.plane.height, float(mjd[i])))
-        except (NoCelestialError, BadWcsError) as error:
-            reason = "no_wcs" if isinstance(error, NoCelestialError) else "bad_wcs"
-            rejects.append(_reject(frame.entry, SetAsideError(reason, str(error)), frame.hdu.index))
-            refused[key] = True
-            continue
-        kept.append(i)
-        if projection.system_assumed:
-            words[i].append("frame_assumed")
-    return outlines, kept
+    images = [
+        Image(f.hdu.cards, os.path.join(f.archive, f.entry.path), f.plane.width, f.plane.height, date)
+        for f, date in zip(found, mjd.tolist(), strict=True)
+    ]
+    kept: list[int] = []
+    usable: list[Outline] = []
+    refused = None
+    for i, own in enumerate(outlines(images)):
+        if isinstance(own, Outline):
+            usable.append(own)
+            kept.append(i)
+            if own.system_assumed:
+                words[i].append("frame_assumed")
+        elif found[i].hdu is not refused:  # one row for all planes of a cube
+            refused = found[i].hdu
+            reason = "no_wcs" if isinstance(own, NoCelestialError) else "bad_wcs"
+            rejects.append(_reject(found[i].entry, SetAsideError(reason, str(own)), refused.index))
+    return usable, kept
 
 
 def _beams(columns: Columns, settings: Settings, words: Sequence[list[str]]) -> None:

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import Any
 
 import numpy as np
@@ -15,11 +16,15 @@ from numpy.typing import NDArray
 
 from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.pixels import Floats, Pixels
+from hindlight.plugin import BeamShape
 from hindlight.settings import Photometry
 
 MAD_TO_SIGMA = 1.482602  # of a normal distribution
 MEDIAN_TO_MEAN = 1.2533  # the median's error over the mean's, sqrt(pi / 2)
 FEWEST_PIXELS = 20
+GOLDEN_RATIO = 0.6180339887498949  # its multiples spread most evenly (H. Weyl 1916)
+KEPT_BYTES = 24 << 20  # the C library heeds blocks up to 32 MiB
+TOLERANCE = 1e-6  # of radii: pixels at a whole number of FWHM must not hang on the last digits of the beam
 CHUNK = 64  # positions at a time: their stamps stay in the processor's cache
 
 
@@ -27,34 +32,48 @@ CHUNK = 64  # positions at a time: their stamps stay in the processor's cache
 class Annulus:
     """Pixels of an annulus on a lattice of every `step`-th row and column.
 
-    `half` is the half width of the square stamp that holds it, a multiple of `step`; `index` of shape (k,) picks its
-    pixels from the flattened stamp.
+    `half` is the half width of the square stamp that holds it, a multiple of `step`. Of shape (k,) and picking from the
+    flattened stamp: `index` its pixels, `core` those within a beam's width of the middle, `around` those between.
     """
 
     half: int
     step: int
     index: IntArray
+    core: IntArray
+    around: IntArray
 
-    @classmethod
-    def around(cls, fwhm: float, settings: Photometry) -> Annulus:
-        """The annulus that the settings ask for, radii in units of `fwhm` (pixels)."""
-        inner, outer = settings.annulus_inner * fwhm, max(settings.annulus_outer, settings.annulus_inner) * fwhm
-        area = math.pi * (outer**2 - inner**2)
-        step = max(1, math.ceil((area / settings.annulus_pixels) ** 0.5))
-        half = int(outer) // step * step
-        offset = np.arange(-half, half + 1, step, dtype=float) ** 2
-        square = offset[:, None] + offset
-        inside = (square >= inner**2) & (square <= outer**2)
-        return cls(half, step, np.flatnonzero(inside))
+
+def annulus_of(beam: BeamShape, settings: Photometry) -> Annulus:
+    """The annulus that the settings ask for, in units of the beam's mean width."""
+    inner, outer = settings.annulus_inner * beam.fwhm, settings.annulus_outer * beam.fwhm
+    return _annulus(beam.major, inner, max(inner, outer), settings.annulus_pixels)
+
+
+@lru_cache(maxsize=64)
+def _annulus(width: float, inner: float, outer: float, most: int) -> Annulus:
+    """An annulus by its radii and the beam's longer width in pixels, with at most about `most` pixels."""
+    step = max(1, math.ceil((math.pi * (outer**2 - inner**2) / most) ** 0.5))
+    half = int(outer) // step * step
+    offset = np.arange(-half, half + 1, step, dtype=float) ** 2
+    square = (offset[:, None] + offset).ravel()
+    inner, outer = inner * (1.0 - TOLERANCE), outer * (1.0 + TOLERANCE)
+    ring = np.flatnonzero((square >= inner**2) & (square <= outer**2))
+    core, within = square <= width**2, square < inner**2
+    return Annulus(half, step, ring, np.flatnonzero(core), np.flatnonzero(within & ~core))
 
 
 @dataclass(frozen=True, eq=False)
 class Background:
-    """Per position, shape (n,): median, 1.4826 MAD (NaN below 20 pixels or where all are equal), pixels used."""
+    """Per position, shape (n,): median, 1.4826 MAD (NaN below 20 pixels or where half are equal), pixels used.
+
+    `core` and `around` are the highest pixels within a beam's width, and from there to the annulus.
+    """
 
     level: FloatArray
     rms: FloatArray
     used: IntArray
+    core: FloatArray
+    around: FloatArray
 
     def error(self, beam_pixels: float) -> FloatArray:
         """1-sigma error of the median, where `beam_pixels` pixels of the annulus have independent noise together.
@@ -65,18 +84,45 @@ class Background:
         return MEDIAN_TO_MEAN * self.rms / np.sqrt(independent)
 
 
+@lru_cache(maxsize=1)
+def keep_freed_memory() -> None:
+    """Make the C library keep what is freed, once per process.
+
+    By default glibc gives freed arrays back to the system and takes new ones page by page, which costs more than the
+    arithmetic; it keeps blocks up to the largest one freed so far (mallopt(3), M_MMAP_THRESHOLD). Harmless elsewhere.
+    """
+    np.empty(KEPT_BYTES, np.uint8)
+
+
 def local_background(pixels: Pixels, ix: IntArray, iy: IntArray, annulus: Annulus) -> Background:
     """Background and noise around pixels (ix, iy), shape (n,)."""
     n = len(ix)
-    level, rms, used = np.empty(n), np.empty(n), np.empty(n, np.int64)
-    for start in range(0, n, CHUNK):
-        part = slice(start, start + CHUNK)
-        stamps = pixels.stamps(ix[part], iy[part], annulus.half, annulus.step)
-        ring = np.take(stamps.reshape(len(stamps), -1), annulus.index, axis=1, mode="clip")
-        level[part], rms[part], used[part] = median_and_mad(ring)
-    rms *= MAD_TO_SIGMA
-    rms[(used < FEWEST_PIXELS) | (rms == 0.0)] = np.nan
-    return Background(level, rms, used)
+    keep_freed_memory()
+    level, rms, core, around = (np.full(n, np.nan) for _ in range(4))
+    used = np.empty(n, np.int64)
+    with np.errstate(invalid="ignore", over="ignore"):  # infinite pixels may make NaN, never a warning
+        for start in range(0, n, CHUNK):
+            part = slice(start, start + CHUNK)
+            stamps = pixels.stamps(ix[part], iy[part], annulus.half, annulus.step)
+            flat = stamps.reshape(len(stamps), -1)
+            ring = np.take(flat, annulus.index, axis=1, mode="clip")
+            if pixels.quantum:
+                ring += _dither(len(annulus.index), pixels.quantum).astype(ring.dtype)
+            level[part], rms[part], used[part] = median_and_mad(ring)
+            core[part] = np.fmax.reduce(flat[:, annulus.core], axis=1)
+            if len(annulus.around):
+                around[part] = np.fmax.reduce(flat[:, annulus.around], axis=1)
+    rms[(used < FEWEST_PIXELS) | (rms <= pixels.quantum / 2.0)] = np.nan
+    return Background(level, rms * MAD_TO_SIGMA, used, core, around)
+
+
+def _dither(n: int, quantum: float) -> FloatArray:
+    """Offsets, shape (n,), spread evenly over one quantum about zero, always the same ones.
+
+    The median of whole numbers is a whole number, up to half a count from the background that a sum of pixels has
+    under it; spread out over the interval that each count stands for, they have the right median and MAD.
+    """
+    return np.asarray((np.arange(1, n + 1) * GOLDEN_RATIO % 1.0 - 0.5) * quantum, dtype=np.float64)
 
 
 def median_and_mad(values: Floats) -> tuple[FloatArray, FloatArray, IntArray]:

@@ -91,6 +91,15 @@ def rank(null: Null, target: FloatArray) -> Rank:
     return Rank((r + 1) / (n + 1), int(column[0]), float(distance[0]), r, control_distance)
 
 
+def furthest_columns(null: Null, values: FloatArray) -> IntArray:
+    """For each row of oriented values (m, k) the column in which it is furthest beyond the controls; shape (m,)."""
+    above = np.empty(values.shape)
+    for k in range(values.shape[1]):
+        above[:, k] = null.n - np.searchsorted(null.sorted_values[:, k], values[:, k], side="left")
+    p = np.where(np.isfinite(values), above, null.n + 1.0)
+    return _combination(p, (values - null.centre) / null.spread)[0]
+
+
 def _combination(p: FloatArray, distance: FloatArray) -> tuple[IntArray, FloatArray, FloatArray]:
     """For each row of (m, k): the column with the smallest p (of several, the one furthest out), its p and distance."""
     best = p.min(axis=1)

@@ -56,13 +56,12 @@ class ChannelView:
 
     @property
     def seen(self) -> bool:
-        """Seen in two frames, in one above every control, or in the mean."""
+        """Seen in a frame or in the mean."""
         if len(self.curve) == 0:
             return False
         mean, error = weighted_mean(self.curve.flux, self.curve.flux_err)
         in_mean = (abs(mean) if self.curve.channel.signed else mean) > self.thresholds.mean * error
-        alone = bool(self.detected.any()) and float(self.snr.max()) > self.thresholds.highest
-        return bool(in_mean or self.detected.sum() >= 2 or alone)
+        return bool(in_mean or self.detected.any())
 
     @property
     def quiet_otherwise(self) -> bool:

@@ -126,7 +126,7 @@ def mine(
 
     The same command again continues an interrupted run, or extends it with new files and targets.
     """
-    from hindlight.runner import Request
+    from hindlight.record import Request
     from hindlight.runner import mine as run_mine
 
     if workers is not None and scheduler is not None:

@@ -189,7 +189,8 @@ def observatory_vectors(middle_tdb_s: FloatArray, sites: FloatArray) -> FloatArr
     result = np.full((len(middle_tdb_s), 3), np.nan)
     good = np.isfinite(middle_tdb_s)
     times = np.asarray(middle_tdb_s)[good]
-    _, barycentric = erfa.epv00(J2000_JD, times / DAY_S)
+    # The bare function: the other warns outside 1900 to 2100, the years its series were fitted to.
+    _, barycentric, _ = erfa.ufunc.epv00(J2000_JD, times / DAY_S)
     vectors = np.array(barycentric["p"]) * AU_LIGHT_S
     sites = np.asarray(sites)[good]
     there = np.isfinite(sites).all(axis=1)

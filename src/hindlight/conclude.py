@@ -29,7 +29,7 @@ class Field:
     targets: IntArray
     controls: IntArray
     serving: NDArray[np.bool_]
-    judgement: Judgement = field(default_factory=Judgement)
+    judgement: Judgement = field(default_factory=lambda: Judgement(0))
     ranks: ranking.FieldRanks | None = None
     thresholds: dict[str, ranking.Thresholds] = field(default_factory=dict)
 

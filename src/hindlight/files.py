@@ -10,13 +10,13 @@ from __future__ import annotations
 import os
 import stat
 import zlib
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 
 from hindlight.errors import UsageError
-from hindlight.headers import BLOCK, SetAsideError, Source
+from hindlight.headers import BLOCK, FIRST_READ, SetAsideError, Source
 
 ENDINGS = tuple(base + packed for base in (".fits", ".fit", ".fts") for packed in ("", ".gz", ".fz"))
 GZIP_MAGIC = b"\x1f\x8b"
@@ -24,7 +24,7 @@ CHUNK = 1 << 16
 FOUR_GIB = 1 << 32
 
 
-@dataclass(frozen=True, order=True)
+@dataclass(frozen=True)
 class FileEntry:
     """A file of an archive: its path relative to the archive folder, size in bytes and modification time.
 
@@ -37,15 +37,21 @@ class FileEntry:
     fault: str = ""
 
 
+def check_folders(archives: Iterable[str]) -> None:
+    """Raise `UsageError` for the first archive that is no folder."""
+    for archive in archives:
+        if not os.path.isdir(archive):
+            raise UsageError(f"archive {archive}: no such folder; give folders that hold FITS files")
+
+
 def list_files(archive: str, visited: set[tuple[int, int]] | None = None) -> list[FileEntry]:
     """Every FITS file below a folder, hidden ones too, in order of their paths.
 
     Links are followed; each folder is entered once, so that loops of links end. `visited` (device and inode of folders)
     is shared between archives that may overlap. Raises `UsageError` if the archive is no folder.
     """
+    check_folders([archive])
     root = Path(archive)
-    if not root.is_dir():
-        raise UsageError(f"archive {archive}: no such folder; give folders that hold FITS files")
     visited = set() if visited is None else visited
     entries: list[FileEntry] = []
     pending = [""]
@@ -62,7 +68,7 @@ def list_files(archive: str, visited: set[tuple[int, int]] | None = None) -> lis
                 pending.append(relative)
             elif entry.name.lower().endswith(ENDINGS):
                 entries.append(_entry(entry, relative))
-    return sorted(entries)
+    return sorted(entries, key=lambda entry: entry.path)
 
 
 def _scan(root: Path, folder: str, visited: set[tuple[int, int]]) -> list[os.DirEntry[str]]:
@@ -103,23 +109,28 @@ def open_source(path: str, unpacked_limit: int) -> Iterator[Source]:
     """
     descriptor = os.open(path, os.O_RDONLY)
     try:
-        if os.pread(descriptor, 2, 0) == GZIP_MAGIC:
+        head = os.pread(descriptor, FIRST_READ, 0)
+        if head.startswith(GZIP_MAGIC):
             yield GzipSource(descriptor, unpacked_limit)
         else:
-            yield PlainSource(descriptor)
+            yield PlainSource(descriptor, head)
     finally:
         os.close(descriptor)
 
 
 class PlainSource:
-    """A file as it is."""
+    """A file as it is; `head` are its first bytes, which need not be read again."""
 
-    def __init__(self, descriptor: int) -> None:
-        self._descriptor = descriptor
+    def __init__(self, descriptor: int, head: bytes) -> None:
+        self._descriptor, self._head = descriptor, head
         self._size = os.fstat(descriptor).st_size
 
     def read_at(self, offset: int, length: int) -> bytes:
         """Up to `length` bytes, fewer only at the end."""
+        if offset >= self._size:
+            return b""
+        if offset + length <= len(self._head):
+            return self._head[offset : offset + length]
         return os.pread(self._descriptor, length, offset)
 
     def reaches(self, end: int) -> bool:

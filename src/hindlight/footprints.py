@@ -1,70 +1,26 @@
-"""Where on the sky an image lies: its outline, and which positions are inside.
+"""Footprints of frames: the columns that hold them, and which positions are inside.
 
-An outline is eight points: the corners and the middles of the sides, which tell how far a side of a wide image bows
+A footprint is eight points: the corners and the middles of the sides, which tell how far a side of a wide image bows
 away from the great circle between its corners. What is said to be covered may lie outside by a trace; the pixel
 coordinates found when a frame is measured settle it.
 """
 
 from __future__ import annotations
 
-import math
 from collections.abc import Mapping, Sequence
-from functools import lru_cache
-from typing import Any, NamedTuple
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from hindlight.facts import NAN
 from hindlight.lightcurve import FloatArray, IntArray
-from hindlight.sky import Projection
-from hindlight.systems import BadWcsError, unit_vectors
+from hindlight.outlines import Outline
+from hindlight.systems import unit_vectors
 
 POINTS = 8
-_ACROSS = np.array([0.0, -0.5, 0.0, 0.5, 0.5, 0.5, 0.0, -0.5, -0.5])  # the middle, then round from a corner
-_UP = np.array([0.0, -0.5, -0.5, -0.5, 0.0, 0.5, 0.5, 0.5, 0.0])
 WIDEST_DEG = 80.0  # a wider image is judged by its circle alone: half-spaces no longer bound it
 SLACK = 5e-8  # radians: footprints are written to 1e-6 degree
-GRID = 33
 PAIRS_AT_ONCE = 1 << 22
-
-
-class Outline(NamedTuple):
-    """Degrees (9, 2): the middle of an image and eight points around it; arcsec per pixel; radius in degrees.
-
-    The radius is NaN where the points give it; where some of them are off the projection it is given here.
-    """
-
-    points: FloatArray
-    pixel_scale: float
-    radius: float
-
-
-def outline(projection: Projection, width: int, height: int, mjd: float) -> Outline:
-    """The outline of an image of some pixels; `mjd` is its date, NaN where unknown (only FK4 needs it).
-
-    Raises `BadWcsError` where the middle of the image is no place on the sky.
-    """
-    return _outline(projection, width, height, mjd if projection.system.name.startswith("fk4") else None)
-
-
-@lru_cache(maxsize=4096)
-def _outline(projection: Projection, width: int, height: int, mjd: float | None) -> Outline:
-    date = NAN if mjd is None else mjd
-    x, y = (width - 1) / 2 + width * _ACROSS, (height - 1) / 2 + height * _UP
-    points = np.empty((POINTS + 1, 2))
-    points[:, 0], points[:, 1] = projection.pixel_to_icrs(x, y, date)
-    if math.isfinite(points.sum()):
-        return Outline(points, projection.pixel_scale_arcsec, NAN)
-    if not np.isfinite(points[0]).all():
-        raise BadWcsError("the middle of the image is no place on the sky")
-    grid_x, grid_y = np.meshgrid(np.linspace(-0.5, width - 0.5, GRID), np.linspace(-0.5, height - 0.5, GRID))
-    ra, dec = projection.pixel_to_icrs(grid_x.ravel(), grid_y.ravel(), date)
-    there = np.isfinite(ra) & np.isfinite(dec)
-    step = projection.pixel_scale_arcsec * max(width, height) / (GRID - 1) / 3600
-    far = _angle_deg(unit_vectors(ra[there], dec[there]), unit_vectors(points[:1, 0], points[:1, 1]))
-    radius = min(180.0, float(far.max()) + step)
-    return Outline(points, projection.pixel_scale_arcsec, radius)
 
 
 def columns(outlines: Sequence[Outline]) -> dict[str, NDArray[Any]]:

@@ -33,6 +33,7 @@ CORE = (
 class Judgement:
     """What was found for n positions: for each channel (or WHOLE) and full column name an array of shape (n,)."""
 
+    n: int
     values: dict[tuple[str, str], Any] = field(default_factory=dict)
     faults: list[Fault] = field(default_factory=list)
     calls: dict[str, int] = field(default_factory=dict)
@@ -40,7 +41,7 @@ class Judgement:
 
 def judge(blocks: Mapping[str, Block], statistics: Sequence[Statistic]) -> Judgement:
     """Every statistic at every position of the blocks (one per channel, the same positions in each)."""
-    result = Judgement()
+    result = Judgement(len(next(iter(blocks.values()), ())))
     for label, block in blocks.items():
         curves = list(block.curves())
         _store(result, label, "core", CORE, [core_columns(curve) for curve in curves])
@@ -56,7 +57,7 @@ def judge(blocks: Mapping[str, Block], statistics: Sequence[Statistic]) -> Judge
 
 def search(curves: Sequence[Sequence[LightCurve]], searches: Sequence[PeriodSearch]) -> Judgement:
     """Every period search at every position; `curves` holds each position's channels."""
-    result = Judgement()
+    result = Judgement(len(curves))
     for plugin in searches:
         rows = []
         for channels in curves:
@@ -103,7 +104,8 @@ def _rows(
         if isinstance(together, Mapping):
             rows = [_unpacked(together, row) for row in range(len(block))]
             return [
-                _one(result, statistic, partial(dict, v), curve.name, label) for v, curve in zip(rows, given, strict=True)
+                _one(result, statistic, partial(dict, v), curve.name, label)
+                for v, curve in zip(rows, given, strict=True)
             ]
     return [
         _one(result, statistic, partial(statistic.compute, curve), curve.name, label) if ok else None
@@ -117,9 +119,7 @@ def _whole_rows(result: Judgement, statistic: Statistic, blocks: Mapping[str, Bl
         curves = [block.curve(index) for block in blocks.values()]
         given = tuple(curve.timed if statistic.uses_times else curve for curve in curves)
         given = tuple(curve for curve in given if len(curve) >= statistic.min_points)
-        rows.append(
-            _one(result, statistic, partial(statistic.compute, given), name, WHOLE) if given else None
-        )
+        rows.append(_one(result, statistic, partial(statistic.compute, given), name, WHOLE) if given else None)
     return rows
 
 
@@ -148,7 +148,7 @@ def _store(
 
 def joined(parts: Sequence[Judgement], lengths: Sequence[int], columns: Mapping[str, Column]) -> Judgement:
     """Judgements of consecutive groups of positions as one; what a group lacks is blank there."""
-    whole = Judgement()
+    whole = Judgement(sum(lengths))
     keys = sorted({key for part in parts for key in part.values})
     for key in keys:
         column = columns[key[1]]
@@ -166,11 +166,10 @@ def joined(parts: Sequence[Judgement], lengths: Sequence[int], columns: Mapping[
 
 def spread(whole: Judgement, part: Judgement, rows: NDArray[np.int64], columns: Mapping[str, Column]) -> None:
     """Put what was found for some positions (at `rows`) into a judgement of all; the others are blank."""
-    n = len(next(iter(whole.values.values()), ()))
     for key, values in part.values.items():
         column = columns[key[1]]
         dtype: Any = object if column.dtype == "str" else column.dtype
-        cells = np.full(n, blank(column), dtype=dtype)
+        cells = np.full(whole.n, blank(column), dtype=dtype)
         cells[rows] = values
         whole.values[key] = cells
     whole.faults += part.faults

@@ -17,7 +17,7 @@ from hindlight.conclude import Field, PValues
 from hindlight.fence import Fault, blank
 from hindlight.host import Plugins
 from hindlight.judge import full_columns
-from hindlight.plugin import Column, ConsistencyCheck, PeriodSearch, Statistic
+from hindlight.plugin import Column, ConsistencyCheck, Statistic
 from hindlight.schema import CANDIDATES, PLUGIN_FAULTS, TableColumn
 from hindlight.settings import Settings
 from hindlight.tables import astropy_table, rows_to_columns
@@ -34,13 +34,12 @@ def plugin_cells(found: Field, plugins: Plugins) -> list[dict[str, Any]]:
     """For every position of a field the plugins' columns, each plugin's in the channel where it is furthest out."""
     columns = full_columns([*plugins.statistics, *plugins.period_searches])
     controls = found.rows(found.controls)
-    keys = ranking.calibrated_keys(found.judgement, columns, controls)
-    matrix = ranking.oriented_matrix(found.judgement, keys, columns, controls)
     cells: list[dict[str, Any]] = [{} for _ in range(len(found.ids))]
     for plugin in [*plugins.statistics, *plugins.period_searches]:
-        labels = ranking.reported_channels(found.judgement, plugin.name, keys, matrix, controls)
+        labels = ranking.reported_channels(found.judgement, plugin, columns, controls)
         for index, label in enumerate(labels):
-            cells[index][f"{plugin.name}_channel"] = label
+            if isinstance(plugin, Statistic) and not plugin.all_channels:
+                cells[index][f"{plugin.name}_channel"] = label
             for column in plugin.columns:
                 full = f"{plugin.name}_{column.name}"
                 values = found.judgement.values.get((label, full))
@@ -57,9 +56,9 @@ def plugin_columns(plugins: Plugins) -> list[TableColumn]:
                 TableColumn(f"{plugin.name}_verdict", "pass, fail or uninformative; '' if not asked", dtype="str")
             )
             made.append(TableColumn(f"{plugin.name}_evidence", "why, in a sentence", dtype="str"))
-        if isinstance(plugin, Statistic | PeriodSearch):
-            where = "'' for all together" if getattr(plugin, "all_channels", True) else "where they are furthest out"
-            made.append(TableColumn(f"{plugin.name}_channel", f"channel of these columns, {where}", dtype="str"))
+        if isinstance(plugin, Statistic) and not plugin.all_channels:
+            where = "channel of these columns: where they are furthest out"
+            made.append(TableColumn(f"{plugin.name}_channel", where, dtype="str"))
         made += [_full(plugin.name, column) for column in plugin.columns]
     return made
 
@@ -122,7 +121,7 @@ def meta(settings: Settings, p: PValues, fields: Sequence[Field]) -> dict[str, A
         "caution": CAUTION,
         "false_discovery_level": settings.ranking.level,
         "detection_false_alarm_rate": settings.detection.false_alarms,
-        "detection_rule": "a blank position has any detection in a channel with this chance, from the controls",
+        "detection_rule": "a blank position has any detection, in any channel, with this chance (from the controls)",
         "limit_confidence": 0.95,
         "controls_needed_for_one_candidate": p.needed,
         "n_fields": len(fields),

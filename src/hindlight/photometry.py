@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hindlight.archive import MEGABYTE
-from hindlight.background import Annulus, local_background
+from hindlight.background import Background, annulus_of, local_background
 from hindlight.detection import detect_bright
 from hindlight.errors import UsageError
 from hindlight.facts import NAN
@@ -28,7 +28,6 @@ from hindlight.settings import Photometry, Settings
 from hindlight.sky import Projection, beam_shape, projection
 
 NEIGHBOUR_SNR = 5.0  # a neighbour must stand this far above the background to be flagged
-LATTICE_PER_FWHM = 2.5  # neighbours are looked for on a lattice this fine: a peak between its points loses 20 %
 
 Columns = dict[str, NDArray[Any]]
 
@@ -105,10 +104,9 @@ def measure_frame(
     index = np.flatnonzero((x >= -0.5) & (y >= -0.5) & (x < width - 0.5) & (y < height - 0.5))
     x, y = x[index], y[index]
     if len(index) == 0:
-        pixels = Pixels(np.zeros((1, 1), np.float32))  # nothing will be read
-    else:
-        half = max(Annulus.around(opened.beam.fwhm, settings.photometry).half, _half_width(estimator, opened.beam))
-        pixels = opened.pixels(Windows(_nearest(x), _nearest(y), half))
+        return {"index": index, "x": x, "y": y, **_nothing()}
+    half = max(annulus_of(opened.beam, settings.photometry).half, _half_width(estimator, opened.beam))
+    pixels = opened.pixels(Windows(_nearest(x), _nearest(y), half))
     found = measure(
         pixels, x, y, opened.beam, estimator, settings.photometry, frame.electrons_per_unit, frame.saturation
     )
@@ -189,12 +187,13 @@ def measure(
     `schema.Flag`), each of shape (n,). Flux and error are NaN where pixels that carry weight are blank or outside, or
     where the annulus holds fewer than 20 pixels or no noise.
     """
+    if len(x) == 0:
+        return _nothing()
     ix, iy = _nearest(x), _nearest(y)
-    annulus = Annulus.around(beam.fwhm, settings)
+    annulus = annulus_of(beam, settings)
     local = local_background(pixels, ix, iy, annulus)
     beam_pixels = math.pi * beam.major * beam.minor / (4.0 * math.log(2.0)) / annulus.step**2
-    half = _half_width(estimator, beam)
-    raw = pixels.stamps(ix, iy, half)
+    raw = pixels.stamps(ix, iy, _half_width(estimator, beam))
     stamps = Stamps(
         pixels=raw - local.level[:, None, None],
         dx=x - ix,
@@ -205,22 +204,20 @@ def measure(
         electrons_per_unit=electrons_per_unit,
     )
     flux, flux_err = _estimate(estimator, stamps)
-    thin = 2 * local.used < len(annulus.index)
-    flags = np.where(thin | np.isnan(local.rms), Flag.THIN_BACKGROUND, 0)
-    flags |= _gaps(pixels, ix, iy, half, np.isnan(flux), raw)
+    flags = np.zeros(len(ix), np.int64)
+    flags[(2 * local.used < len(annulus.index)) | np.isnan(local.rms)] |= Flag.THIN_BACKGROUND
+    flags[_has_neighbour(local)] |= Flag.NEIGHBOUR
     if saturation == saturation:
-        near = _distance(half) <= estimator.radius(beam) + 0.5
-        flags |= np.where((raw[:, near] >= saturation).any(axis=1), Flag.SATURATED, 0)
-    flags |= _neighbours(pixels, ix, iy, beam, settings, local.level + NEIGHBOUR_SNR * local.rms)
+        flags[_saturated(raw, saturation, estimator.radius(beam))] |= Flag.SATURATED
+    _flag_gaps(flags, np.isnan(flux), pixels.shape, ix, iy, raw)
     bad = ~(np.isfinite(flux) & np.isfinite(flux_err))
     flux[bad] = flux_err[bad] = np.nan
-    return {
-        "flux": flux,
-        "flux_err": flux_err,
-        "background": local.level,
-        "rms": local.rms,
-        "flags": flags.astype(np.int64),
-    }
+    return {"flux": flux, "flux_err": flux_err, "background": local.level, "rms": local.rms, "flags": flags}
+
+
+def _nothing() -> Columns:
+    """The columns of `measure` for no positions."""
+    return {name: np.empty(0) for name in ("flux", "flux_err", "background", "rms")} | {"flags": np.empty(0, np.int64)}
 
 
 def _nearest(coordinate: FloatArray) -> IntArray:
@@ -232,16 +229,10 @@ def _half_width(estimator: Estimator, beam: BeamShape) -> int:
     return max(1, math.ceil(estimator.radius(beam)))
 
 
-def _distance(half: int, step: int = 1) -> FloatArray:
-    """Of a stamp's pixel centres from its middle."""
-    offset = np.arange(-half, half + 1, step, dtype=float) ** 2
-    distance: FloatArray = np.sqrt(offset[:, None] + offset)
-    return distance
-
-
 def _estimate(estimator: Estimator, stamps: Stamps) -> tuple[FloatArray, FloatArray]:
     """What the estimator finds, checked for shape and made writable."""
-    flux, flux_err = estimator.measure(stamps)
+    with np.errstate(invalid="ignore", over="ignore"):  # infinite pixels may make NaN, never a warning
+        flux, flux_err = estimator.measure(stamps)
     flux, flux_err = np.array(flux, float), np.array(flux_err, float)
     if flux.shape != stamps.dx.shape or flux_err.shape != stamps.dx.shape:
         shapes = f"{flux.shape} and {flux_err.shape}"
@@ -249,38 +240,33 @@ def _estimate(estimator: Estimator, stamps: Stamps) -> tuple[FloatArray, FloatAr
     return flux, flux_err
 
 
-def _gaps(
-    pixels: Pixels, ix: IntArray, iy: IntArray, half: int, lost: NDArray[np.bool_], raw: Floats
-) -> NDArray[np.int64]:
-    """EDGE and BLANKED for positions whose flux is lost to missing pixels."""
-    flags = np.zeros(len(ix), np.int64)
+def _saturated(raw: Floats, saturation: float, radius: float) -> NDArray[np.bool_]:
+    """Whether any pixel of stamps (n, size, size) that reaches within `radius` of the position is saturated."""
+    half = raw.shape[1] // 2
+    offset = np.arange(-half, half + 1, dtype=float) ** 2
+    near = np.sqrt(offset[:, None] + offset) <= radius + 0.5
+    return np.asarray((raw[:, near] >= saturation).any(axis=1))
+
+
+def _has_neighbour(local: Background) -> NDArray[np.bool_]:
+    """Whether the highest pixel from a beam's width out to the annulus stands out, and above those nearer.
+
+    They are looked for on the annulus' lattice.
+    """
+    stands_out = local.around > local.level + NEIGHBOUR_SNR * local.rms
+    return np.asarray(stands_out & ~(local.around <= local.core))
+
+
+def _flag_gaps(
+    flags: NDArray[np.int64], lost: NDArray[np.bool_], shape: tuple[int, int], ix: IntArray, iy: IntArray, raw: Floats
+) -> None:
+    """Add EDGE and BLANKED to the flags of positions whose flux is lost to missing pixels of their stamps."""
     rows = np.flatnonzero(lost)
     if len(rows) == 0:
-        return flags
-    height, width = pixels.shape
+        return
+    half = raw.shape[1] // 2
     offset = np.arange(-half, half + 1)
     columns, lines = ix[rows, None] + offset, iy[rows, None] + offset
-    inside = ((lines >= 0) & (lines < height))[:, :, None] & ((columns >= 0) & (columns < width))[:, None, :]
-    flags[rows] |= np.where(inside.all(axis=(1, 2)), 0, Flag.EDGE)
-    flags[rows] |= np.where((inside & np.isnan(raw[rows])).any(axis=(1, 2)), Flag.BLANKED, 0)
-    return flags
-
-
-def _neighbours(
-    pixels: Pixels, ix: IntArray, iy: IntArray, beam: BeamShape, settings: Photometry, threshold: FloatArray
-) -> NDArray[np.int64]:
-    """NEIGHBOUR where, within the annulus' inner radius, the highest pixel beyond a beam from the position is above
-
-    `threshold`, shape (n,), and above every pixel within a beam.
-    """
-    step = max(1, int(beam.fwhm / LATTICE_PER_FWHM))
-    reach = settings.annulus_inner * beam.fwhm
-    half = max(1, int(reach) // step) * step
-    stamps = pixels.stamps(ix, iy, half, step).reshape(len(ix), -1)
-    distance = _distance(half, step).ravel()
-    around = np.flatnonzero((distance > beam.major) & (distance <= reach))
-    if len(around) == 0:
-        return np.zeros(len(ix), np.int64)
-    other = np.fmax.reduce(stamps[:, around], axis=1)
-    own = np.fmax.reduce(stamps[:, np.flatnonzero(distance <= beam.major)], axis=1)
-    return np.where((other > threshold) & ~(other <= own), np.int64(Flag.NEIGHBOUR), np.int64(0))
+    inside = ((lines >= 0) & (lines < shape[0]))[:, :, None] & ((columns >= 0) & (columns < shape[1]))[:, None, :]
+    flags[rows] |= np.where(inside.all(axis=(1, 2)), 0, int(Flag.EDGE))
+    flags[rows] |= np.where((inside & np.isnan(raw[rows])).any(axis=(1, 2)), int(Flag.BLANKED), 0)

@@ -26,6 +26,7 @@ from hindlight.files import PlainSource, open_source
 from hindlight.headers import Hdu, SetAsideError, Source, read_hdus
 from hindlight.lightcurve import IntArray
 
+SAMPLE = 256
 TILE_REACH = 64  # pixels that a tile typically sticks out beyond the window asked for
 SECTIONS_BELOW = 0.25  # windows with their tiles must stay below this fraction of the image to be read one by one
 
@@ -37,13 +38,15 @@ class Pixels:
     """One image as it is stored, shape (height, width), and what turns stored numbers into values.
 
     value = zero + scale * stored; the stored integer `blank` means no value. Values are float32 where that holds every
-    stored number (as in astropy), float64 otherwise.
+    stored number (as in astropy), float64 otherwise. `quantum` is the step between values where there is one, as in
+    counts, else 0.
     """
 
     stored: NDArray[Any]
     scale: float = 1.0
     zero: float = 0.0
     blank: int | None = None
+    quantum: float = 0.0
 
     @property
     def shape(self) -> tuple[int, int]:
@@ -186,7 +189,18 @@ def read_plane(place: PlanePlace, unpacked_limit: int, windows: Windows | None =
     packed = place.image.packed
     buffer: Any = _unpacked(place, start, end, unpacked_limit) if packed else _mapped(place, end)
     stored = np.frombuffer(buffer, dtype, count, 0 if packed else start)
-    return Pixels(stored.reshape(place.height, place.width), hdu.bscale, hdu.bzero, hdu.blank)
+    return _scaled(stored.reshape(place.height, place.width), hdu)
+
+
+def _scaled(stored: NDArray[Any], hdu: Hdu) -> Pixels:
+    """Pixels with the HDU's scale. Whether floating-point pixels are counts is told by some in the middle."""
+    quantum = abs(hdu.bscale)
+    if stored.dtype.kind == "f":
+        middle = stored[stored.shape[0] // 2, :SAMPLE]
+        finite = middle[np.isfinite(middle)]
+        whole = bool((finite == np.rint(finite)).all()) and len(np.unique(finite)) > 2 and not hdu.compressed
+        quantum = abs(hdu.bscale) if whole else 0.0
+    return Pixels(stored, hdu.bscale, hdu.bzero, hdu.blank, quantum)
 
 
 def _mapped(place: PlanePlace, end: int) -> mmap.mmap:
@@ -220,7 +234,7 @@ def _truncated(place: PlanePlace, end: int) -> SetAsideError:
 
 
 def _unpack_tiles(place: PlanePlace, lead: tuple[int, ...], limit: int, windows: Windows | None) -> Pixels:
-    """A tile-compressed plane through astropy, which also scales and blanks it."""
+    """A tile-compressed plane through astropy."""
     hdu = place.image.hdu
     if place.width * place.height * abs(hdu.bitpix) // 8 > limit:
         raise place.fault("bad_compression", "the image unpacks to more than the limit")
@@ -229,12 +243,13 @@ def _unpack_tiles(place: PlanePlace, lead: tuple[int, ...], limit: int, windows:
         target = io.BytesIO(_unpacked(place, 0, hdu.data_offset + hdu.data_bytes, limit))
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")  # about cards; pixels that cannot be unpacked raise
-        try:
-            with fits.open(target) as hdus:
-                return Pixels(_sections(hdus[hdu.index].section, place, lead, windows))
-        except (OSError, ValueError, RuntimeError, IndexError, TypeError, KeyError) as error:
-            detail = " ".join(str(error).split())
-            raise place.fault("bad_compression", f"the tiles cannot be unpacked: {detail}") from error
+        with fits.open(target, do_not_scale_image_data=True, uint=False) as hdus:
+            try:
+                stored = _sections(hdus[hdu.index].section, place, lead, windows)
+            except Exception as error:  # on broken bytes the decoders raise whatever they like
+                detail = " ".join(str(error).split())
+                raise place.fault("bad_compression", f"the tiles cannot be unpacked: {detail}") from error
+    return _scaled(stored, hdu)
 
 
 def _sections(section: Any, plane: PlanePlace, lead: tuple[int, ...], windows: Windows | None) -> NDArray[Any]:

@@ -130,6 +130,35 @@ def _next_round(positions: Columns) -> int:
     return int(positions["round"].max()) + 1 if len(positions["round"]) else 0
 
 
+def fields_without_controls(positions: Columns) -> list[int]:
+    """Fields that hold a target and no control, ascending."""
+    have = set(positions["field"][positions["kind"] == "control"].tolist())
+    return sorted(set(positions["field"][positions["kind"] == "target"].tolist()) - have)
+
+
+def round_for_controls(known: Columns, positions: Columns) -> int:
+    """The round of controls planned now: with the new targets if there are any, else one of their own."""
+    return int(positions["round"].max()) if len(positions["id"]) > len(known["id"]) else _next_round(positions)
+
+
+def lost_frames(frames: Columns) -> list[dict[str, Any]]:
+    """Rows of `schema.REJECTS` for frames whose file has changed or is gone."""
+    said = {"vanished": ("vanished", "the file is gone; its measurements are kept"),
+            "void": ("changed", "the file has changed; it is measured anew")}  # fmt: skip
+    rows = []
+    for row in np.flatnonzero(np.isin(frames["state"], list(said))):
+        reason, detail = said[frames["state"][row]]
+        place = {"path": str(frames["path"][row]), "hdu": int(frames["hdu"][row]), "plane": int(frames["plane"][row])}
+        rows.append({**place, "reason": reason, "detail": detail})
+    return rows
+
+
+def joined(parts: Sequence[BrightSources]) -> BrightSources:
+    """The sources of several frames together."""
+    names = ("ra", "dec", "snr", "beam")
+    return BrightSources(*(np.concatenate([np.empty(0), *[getattr(p, name) for p in parts]]) for name in names))
+
+
 def chosen_field_size(frames: Columns, settings: Controls) -> float:
     """The side of a field in degrees: as set, or half the median footprint."""
     return settings.field_size_deg or field_size(frames["radius"])
@@ -182,10 +211,10 @@ def field_spacing(frames: Columns, rows: IntArray, settings: Controls, assumed_f
 
 
 def add_controls(
-    positions: Columns, field: int, frames: Columns, within: FieldFrames, spacing_deg: float,
+    positions: Columns, field: int, round_number: int, frames: Columns, within: FieldFrames, spacing_deg: float,
     bright: BrightSources, settings: Controls,
 ) -> Columns:  # fmt: skip
-    """The position table with the controls of one field, in the same round as the field's last targets."""
+    """The position table with the controls of one field in the given round."""
     is_target = positions["kind"] == "target"
     mine = is_target & (positions["field"] == field)
     all_targets = unit_vectors(positions["ra"][is_target], positions["dec"][is_target])
@@ -207,7 +236,7 @@ def add_controls(
         "id": _next_id(positions) + np.arange(n), "name": np.full(n, "", object),
         "kind": np.full(n, "control", object), "ra": ra, "dec": dec,
         "pm_ra_cosdec": np.zeros(n), "pm_dec": np.zeros(n), "ref_epoch": np.full(n, 2000.0),
-        "field": np.full(n, field), "round": np.full(n, int(positions["round"][mine].max())),
+        "field": np.full(n, field), "round": np.full(n, round_number),
         "clear_radius": np.full(n, spacing_deg),
     })  # fmt: skip
 

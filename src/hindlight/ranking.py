@@ -6,7 +6,7 @@ Takes what `judge` found for all positions of a field; knows no run folder. The 
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,12 +15,14 @@ from scipy.stats import norm
 from hindlight import calibrate
 from hindlight.judge import WHOLE, Judgement, oriented
 from hindlight.lightcurve import FloatArray, IntArray
-from hindlight.plugin import Column
+from hindlight.plugin import Column, Plugin
 from hindlight.settings import Detection
 
 FAILING_SHARE = 0.05  # a plugin that fails on more of the controls than this gets no p-value
 STEADY_SIGMA = 5.0  # controls with a mean flux further out than this do not set detection thresholds
+COMMON_SHARE = 0.1  # a channel's scale: what this share of its blank positions exceeds at most
 QUIET_SPREAD = 5.0
+QUIET_WITHOUT_CONTROLS = 2.0
 
 Key = tuple[str, str]
 
@@ -31,8 +33,6 @@ class Thresholds:
 
     detected, above_quiet, mean
         In sigma: single flux, single excess over the quiet level, weighted mean flux.
-    highest
-        The highest single flux at any control, in sigma.
     reduced
         The largest chi-square per degree of freedom at which a series still counts as quiet.
     """
@@ -40,7 +40,6 @@ class Thresholds:
     detected: float
     above_quiet: float
     mean: float
-    highest: float
     reduced: float
     n_controls: int
 
@@ -86,8 +85,7 @@ def oriented_matrix(
         oriented(judgement.values[key], columns[key[1]], np.asarray(judgement.values[key], float)[controls])
         for key in keys
     ]
-    n = len(next(iter(judgement.values.values())))
-    return np.stack(found, axis=1) if found else np.empty((n, 0))
+    return np.stack(found, axis=1) if found else np.empty((judgement.n, 0))
 
 
 def matched(
@@ -129,65 +127,88 @@ def rank_field(
 
 
 def thresholds(judgement: Judgement, controls: IntArray, detection: Detection) -> dict[str, Thresholds]:
-    """What counts as seen, for each channel of the field."""
+    """What counts as seen, for each channel of the field.
+
+    The rate of false alarms holds for a position as a whole: a blank one has any detection, in any of its channels,
+    with that chance. Each channel's threshold is what one blank position in ten exceeds there, times the one factor
+    that makes the rate hold for the channels together.
+    """
     labels = sorted({channel for channel, _ in judgement.values if channel != WHOLE})
-    return {label: _channel_thresholds(judgement, label, controls, detection, len(labels)) for label in labels}
+    blank = {label: _blank_rows(judgement, label, controls) for label in labels}
+    own = {label: _channel_thresholds(judgement, label, blank[label], detection, len(labels)) for label in labels}
+    single = _common_factor(judgement, "snr_max", {k: v.detected for k, v in own.items()}, blank, detection)
+    excess = _common_factor(judgement, "excess_max", {k: v.above_quiet for k, v in own.items()}, blank, detection)
+    return {
+        label: replace(limits, detected=limits.detected * single, above_quiet=limits.above_quiet * excess)
+        for label, limits in own.items()
+    }
+
+
+def _column(judgement: Judgement, label: str, name: str) -> FloatArray:
+    return np.asarray(judgement.values[label, f"core_{name}"], float)
+
+
+def _blank_rows(judgement: Judgement, label: str, controls: IntArray) -> IntArray:
+    """The controls that set a channel's thresholds: those measured in it and without a steady source of their own."""
+    rows = controls[_column(judgement, label, "n_used")[controls] > 0]
+    mean = _column(judgement, label, "mean_snr")[rows]
+    return rows[mean <= calibrate.robust_threshold(mean, float(norm.sf(STEADY_SIGMA)))]
+
+
+def _common_factor(
+    judgement: Judgement, name: str, limits: Mapping[str, float], blank: Mapping[str, IntArray], detection: Detection
+) -> float:
+    """By how much all channels' limits are raised so that the rate holds for their largest ratio to the limit."""
+    largest = np.full(judgement.n, np.nan)
+    for label, limit in limits.items():
+        ratio = np.full(judgement.n, np.nan)
+        ratio[blank[label]] = _column(judgement, label, name)[blank[label]] / limit
+        largest = np.fmax(largest, ratio)
+    factor = calibrate.threshold(largest, detection.false_alarms)
+    return factor if np.isfinite(factor) else 1.0
 
 
 def _channel_thresholds(
-    judgement: Judgement, label: str, controls: IntArray, detection: Detection, n_channels: int
+    judgement: Judgement, label: str, blank: IntArray, detection: Detection, n_channels: int
 ) -> Thresholds:
-    def column(name: str) -> FloatArray:
-        return np.asarray(judgement.values[label, f"core_{name}"], float)
-
-    rate = detection.false_alarms
-    n_used = column("n_used")
-    rows = controls[n_used[controls] > 0]
-    mean = column("mean_snr")[rows]
-    mean_limit = calibrate.robust_threshold(mean, rate / n_channels)
-    blank = rows[mean <= calibrate.robust_threshold(mean, norm.sf(STEADY_SIGMA))]
-    typical = int(np.median(n_used[n_used > 0])) if np.any(n_used > 0) else 0
-    gaussian = calibrate.gaussian_threshold(typical, rate)
-    if blank.size < 1:
-        k = float(norm.isf(rate / n_channels))
-        return Thresholds(gaussian, gaussian, k, gaussian, 2.0, 0)
-    reduced = column("reduced")[blank]
-    middle = float(np.nanmedian(reduced)) if np.isfinite(reduced).any() else 1.0
-    width = (
-        float(np.nanmedian(np.abs(reduced - middle))) * calibrate.MAD_TO_SIGMA if np.isfinite(reduced).any() else 0.2
-    )
-    too_few = rate * (blank.size + 1) < 1
-    single = calibrate.threshold(column("snr_max")[blank], rate)
-    excess = calibrate.threshold(column("excess_max")[blank], rate)
+    """A channel's thresholds by itself, before the common factor; those of Gaussian noise where there is no control."""
+    rate = detection.false_alarms / n_channels
+    n_used = _column(judgement, label, "n_used")
+    if blank.size == 0:
+        typical = int(np.median(n_used[n_used > 0])) if np.any(n_used > 0) else 0
+        gaussian = calibrate.gaussian_threshold(typical, rate)
+        return Thresholds(gaussian, gaussian, float(norm.isf(rate)), QUIET_WITHOUT_CONTROLS, 0)
     return Thresholds(
-        detected=max(single, gaussian) if too_few else single,
-        above_quiet=_larger(excess, gaussian) if too_few else excess,
-        mean=mean_limit,
-        highest=float(np.max(column("snr_max")[blank])),
-        reduced=middle + QUIET_SPREAD * max(width, 0.02),
+        detected=calibrate.threshold(_column(judgement, label, "snr_max")[blank], COMMON_SHARE),
+        above_quiet=calibrate.threshold(_column(judgement, label, "excess_max")[blank], COMMON_SHARE),
+        mean=calibrate.robust_threshold(_column(judgement, label, "mean_snr")[blank], rate),
+        reduced=_quiet_limit(_column(judgement, label, "reduced")[blank]),
         n_controls=int(blank.size),
     )
 
 
-def _larger(a: float, b: float) -> float:
-    return b if np.isnan(a) else max(a, b)
+def _quiet_limit(reduced: FloatArray) -> float:
+    """The largest chi-square per degree of freedom at which a series still counts as quiet."""
+    known = reduced[np.isfinite(reduced)]
+    if known.size == 0:
+        return QUIET_WITHOUT_CONTROLS
+    middle = float(np.median(known))
+    return middle + QUIET_SPREAD * max(0.02, calibrate.MAD_TO_SIGMA * float(np.median(np.abs(known - middle))))
 
 
 def reported_channels(
-    judgement: Judgement, plugin: str, keys: Sequence[Key], matrix: FloatArray, controls: IntArray
+    judgement: Judgement, plugin: Plugin, columns: Mapping[str, Column], controls: IntArray
 ) -> list[str]:
     """For every position the channel in which a plugin's calibrated columns are furthest out; '' where none is.
 
-    `matrix` belongs to `keys`; the same rule serves targets and controls.
+    Furthest out is what `calibrate.rank` means by it: the smallest rank among the controls, then the largest distance
+    beyond them. The same rule serves targets and controls.
     """
-    mine = [k for k, (_, full) in enumerate(keys) if full.startswith(f"{plugin}_")]
-    labels = sorted({channel for channel, full in judgement.values if full.startswith(f"{plugin}_")})
-    if not mine:
-        return [labels[0] if labels else ""] * len(matrix)
-    values = matrix[:, mine]
-    null = np.sort(values[controls], axis=0)
-    p = np.stack(
-        [len(null) + 1 - np.searchsorted(null[:, k], values[:, k], side="left") for k in range(len(mine))], axis=1
-    )
-    p = np.where(np.isfinite(values), p, len(null) + 2)
-    return [keys[mine[k]][0] for k in p.argmin(axis=1)]
+    mine = {f"{plugin.name}_{column.name}" for column in plugin.columns}
+    keys = [k for k in sorted(judgement.values) if k[1] in mine]
+    calibrated = [k for k in keys if columns[k[1]].unusual is not None]
+    if not calibrated:
+        return [keys[0][0] if keys else WHOLE] * judgement.n
+    matrix = oriented_matrix(judgement, calibrated, columns, controls)
+    furthest = calibrate.furthest_columns(calibrate.null_from(matrix[controls]), matrix)
+    return [calibrated[k][0] for k in furthest]

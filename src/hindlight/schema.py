@@ -91,7 +91,7 @@ STANDINGS = {
 FRAMES = (
     TableColumn("id", "identifier of the frame in this run", dtype="int64", ucd="meta.id"),
     TableColumn("archive", "the archive folder as given", dtype="str"),
-    TableColumn("path", "file, relative to the archive folder", dtype="str", ucd="meta.file"),
+    TableColumn("path", "file, relative to the archive folder", dtype="str", ucd="meta.id;meta.file"),
     TableColumn("hdu", "HDU within the file, 0 is the primary", dtype="int64"),
     TableColumn("plane", "plane of a cube, counted over its longer axes in storage order, 0-based", dtype="int64"),
     TableColumn("digest", "of the header's bytes and the file's size", dtype="str"),
@@ -104,7 +104,12 @@ FRAMES = (
     TableColumn("stokes", "Stokes parameter", dtype="str", ucd="phys.polarization.stokes"),
     TableColumn("frequency_hz", "frequency, NaN where not stated", unit="Hz", ucd="em.freq"),
     TableColumn("start_mjd_tdb", "first photon, MJD (TDB) at the site, NaN where unknown", unit="d", ucd="time.start"),
-    TableColumn("middle_mjd_tdb", "middle of the good time, MJD (TDB) at the site", unit="d", ucd="time.epoch"),
+    TableColumn(
+        "middle_mjd_tdb",
+        "middle of the good time, MJD (TDB) at the site; noon of the day where only that is known",
+        unit="d",
+        ucd="time.epoch",
+    ),
     TableColumn("end_mjd_tdb", "last photon, MJD (TDB) at the site", unit="d", ucd="time.end"),
     TableColumn("middle_tdb_s", "middle of the good time, seconds from J2000.0 TDB at the site", unit="s"),
     TableColumn("middle_utc", "middle of the good time, ISO 8601 UTC", dtype="str"),
@@ -123,11 +128,17 @@ FRAMES = (
     TableColumn("electrons_per_unit", "gain of the detector, electrons per unit of the pixels, NaN where not stated"),
     TableColumn("width", "pixels along the first celestial axis", unit="pixel", dtype="int64"),
     TableColumn("height", "pixels along the second celestial axis", unit="pixel", dtype="int64"),
-    TableColumn("pixel_scale", "square root of the area of a pixel", unit="arcsec", ucd="instr.pixel"),
+    TableColumn("pixel_scale", "square root of the area of a pixel", unit="arcsec", ucd="instr.scale"),
     TableColumn("centre_ra", "centre of the footprint, ICRS", unit="deg", ucd="pos.eq.ra"),
     TableColumn("centre_dec", "centre of the footprint, ICRS", unit="deg", ucd="pos.eq.dec"),
     TableColumn("radius", "from the centre to the farthest corner", unit="deg", ucd="phys.angSize"),
-    TableColumn("footprint", "corners of the image, ICRS degrees: ra dec ra dec ...", dtype="str", ucd="pos.outline"),
+    TableColumn(
+        "footprint",
+        "corners and, between them, middles of the sides, ICRS degrees: ra dec ra dec ...; empty where the image is wider "
+        "than 160 degrees or reaches beyond the sky",
+        dtype="str",
+        ucd="pos.outline",
+    ),
     TableColumn("primary_beam", "corrected, uncorrected or unknown", dtype="str"),
     TableColumn("dialect", "plugin that read the header", dtype="str"),
     TableColumn("state", "current, vanished (kept) or void (the file has changed since)", dtype="str"),
@@ -206,11 +217,13 @@ LIGHT_CURVE = (
     TableColumn("y", "0-based pixel, second axis", unit="pixel", ucd="pos.cartesian.y;instr.det"),
     TableColumn("flags", "bits, see the README", dtype="int64", ucd="meta.code.qual"),
     TableColumn("frame", "identifier of the frame", dtype="int64", ucd="meta.id"),
-    TableColumn("path", "file, relative to the archive folder, with HDU and plane", dtype="str", ucd="meta.file"),
+    TableColumn(
+        "path", "file, relative to the archive folder, with HDU and plane", dtype="str", ucd="meta.id;meta.file"
+    ),
 )
 
 REJECTS = (
-    TableColumn("path", "file, relative to the archive folder", dtype="str", ucd="meta.file"),
+    TableColumn("path", "file, relative to the archive folder", dtype="str", ucd="meta.id;meta.file"),
     TableColumn("hdu", "HDU, -1 for the whole file", dtype="int64"),
     TableColumn("plane", "plane of a cube, -1 for the whole HDU", dtype="int64"),
     TableColumn("reason", "a fixed word", dtype="str", ucd="meta.code.status"),
@@ -284,7 +297,7 @@ CANDIDATES = (
     ),
     TableColumn("quiet_after", "first constraining non-detection after the last detection, ISO 8601 UTC", dtype="str"),
     TableColumn("peak_snr", "highest flux over its error in a single frame", ucd="stat.snr;stat.max"),
-    TableColumn("peak_frame", "the frame of that flux: file, HDU and plane", dtype="str", ucd="meta.file"),
+    TableColumn("peak_frame", "the frame of that flux: file, HDU and plane", dtype="str", ucd="meta.id;meta.file"),
     TableColumn("period", "period, where one is established", unit="s", ucd="time.period"),
     TableColumn("period_err", "its 1-sigma error", unit="s", ucd="stat.error;time.period"),
     TableColumn("period_dot", "change of the period", unit="s/s", ucd="time.period;arith.diff"),

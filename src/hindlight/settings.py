@@ -102,7 +102,7 @@ class Detection:
     """What counts as seen."""
 
     false_alarms: float = setting(
-        0.01, "chance that a blank position has any detection in a channel", minimum=1e-6, maximum=0.5
+        0.01, "chance that a blank position has any detection, in any of its channels", minimum=1e-6, maximum=0.5
     )
     min_frames: int = setting(8, "fewer usable frames than this in every channel leave a target undecided", minimum=2)
     epoch_gap_days: float = setting(0.5, "frames further apart than this are separate epochs", unit="day", minimum=0)

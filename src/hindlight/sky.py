@@ -132,15 +132,17 @@ def beam_shape(major: float, minor: float, angle: float, jacobian: FloatArray) -
 
     `jacobian` is `Projection.jacobian` where the beam refers to: the second-moment matrix goes through its inverse.
     """
-    pa = math.radians(angle)
-    along = np.array([math.sin(pa), math.cos(pa)])
-    across = np.array([math.cos(pa), -math.sin(pa)])
-    inverse = np.linalg.inv(jacobian)
-    square = inverse @ (major**2 * np.outer(along, along) + minor**2 * np.outer(across, across)) @ inverse.T
-    widths, vectors = np.linalg.eigh(square)
-    if widths[1] - widths[0] < 1e-9 * widths[1]:
-        return BeamShape(float(widths[1] ** 0.5), float(widths[0] ** 0.5), 0.0)
-    return BeamShape(float(widths[1] ** 0.5), float(widths[0] ** 0.5), float(math.atan2(vectors[1, 1], vectors[0, 1])))
+    (a, b), (c, d) = jacobian.tolist()
+    det = a * d - b * c
+    s, t = math.sin(math.radians(angle)), math.cos(math.radians(angle))
+    # The half axes (east, north) = major (s, t) and minor (t, -s), in pixels; their outer products add up.
+    along = ((d * s - b * t) * major / det, (a * t - c * s) * major / det)
+    across = ((d * t + b * s) * minor / det, (-a * s - c * t) * minor / det)
+    xx, yy = along[0] ** 2 + across[0] ** 2, along[1] ** 2 + across[1] ** 2
+    xy = along[0] * along[1] + across[0] * across[1]
+    middle, spread = (xx + yy) / 2.0, math.hypot((xx - yy) / 2.0, xy)
+    turn = math.atan2(2.0 * xy, xx - yy) / 2.0 if spread > 1e-9 * middle else 0.0
+    return BeamShape((middle + spread) ** 0.5, (middle - spread) ** 0.5, turn)
 
 
 # --- reading the cards

@@ -11,7 +11,7 @@ import json
 import os
 import socket
 from collections.abc import Iterable, Mapping, Sequence
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from dataclasses import dataclass
 from pathlib import Path
 from typing import IO, Any
@@ -64,6 +64,26 @@ class RunFolder:
             (self.path / "measurements").mkdir(parents=True, exist_ok=True)
         except OSError as error:
             raise UsageError(f"output {self.path}: cannot be made ({error.strerror}); give another folder") from None
+
+    def version(self) -> str:
+        """Changes whenever a table that pieces of work share is written anew."""
+        names = ("frames.parquet", "positions.parquet", "frame_solution.parquet")
+        return ",".join(str(self.file(n).stat().st_mtime_ns) if self.has(n) else "-" for n in names)
+
+    def discard_if_new(self) -> None:
+        """Leave no trace of a run that found nothing to do: remove its folder unless it holds anything."""
+        if self.has("settings.toml"):
+            return
+        for name in ("lock", "log.txt"):
+            self.file(name).unlink(missing_ok=True)
+        for folder in (self.path / "measurements", self.path):
+            with suppress(OSError):
+                folder.rmdir()
+
+    def sweep(self) -> None:
+        """Remove what a killed process left half written; only for whoever holds the lock."""
+        for path in self.path.rglob(".*.part"):
+            path.unlink(missing_ok=True)
 
     def require(self) -> None:
         """Raise `UsageError` unless this is a run that has been planned."""
@@ -179,7 +199,7 @@ def blocks(
 
 def _block(rows: Columns, positions: IntArray, names: Sequence[str], solution: Columns, channel: Channel) -> Block:
     frames, column = np.unique(rows["frame"], return_inverse=True)
-    row: IntArray = np.searchsorted(positions, rows["position"])
+    row = np.asarray(np.searchsorted(positions, rows["position"]))
     flux, flux_err, bad = calibrated(rows["frame"], rows["flux"], rows["flux_err"], solution)
     usable = np.isfinite(flux) & np.isfinite(flux_err) & (flux_err > 0) & ~bad & ((rows["flags"] & int(UNUSABLE)) == 0)
 

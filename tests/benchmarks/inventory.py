@@ -20,12 +20,12 @@ from pathlib import Path
 import numpy as np
 from astropy.io import fits
 from astropy.wcs import WCS
-from hindlight_plugins.standard_headers import StandardHeaders
 
 from hindlight import archive, clock, sky
 from hindlight.facts import parse_value
-from hindlight.footprints import _outline
+from hindlight.outlines import outline
 from hindlight.settings import Settings
+from hindlight_plugins.standard_headers import StandardHeaders
 
 GOAL = 12.0
 SIZE = 32
@@ -98,7 +98,7 @@ def plain_way(paths: list[Path]) -> list[tuple[str, float, float]]:
 
 def forget() -> None:
     """Empty the caches, so that every round reads each file as if for the first time."""
-    for cached in (parse_value, _outline, sky._lean, sky._full):
+    for cached in (parse_value, outline, sky._lean, sky._full):
         cached.cache_clear()
 
 

@@ -48,7 +48,7 @@ def write_files(folder: Path) -> list[Path]:
         header.update({
             "CTYPE1": "RA---TAN", "CTYPE2": "DEC--TAN", "CRVAL1": 150 + rng.uniform(-0.01, 0.01),
             "CRVAL2": 2 + rng.uniform(-0.01, 0.01), "CRPIX1": 1024.5, "CRPIX2": 1024.5, "CD1_1": -d * c, "CD1_2": d * s,
-            "CD2_1": d * s, "CD2_2": d * c, "RADESYS": "ICRS", "BUNIT": "adu", "DATE-OBS": "2001-02-03T04:05:06",
+            "CD2_1": d * s, "CD2_2": d * c, "RADESYS": "ICRS", "BUNIT": "adu", "MJD-OBS": 51943.25,
             "EXPTIME": 30.0,
         })  # fmt: skip
         for card in range(60):

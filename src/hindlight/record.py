@@ -1,0 +1,96 @@
+"""What a run is asked for, and what it records of itself in settings.toml so that it can be continued or refused."""
+
+from __future__ import annotations
+
+import platform
+import tomllib
+from collections.abc import Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import tomli_w
+
+from hindlight import host, settings
+from hindlight.errors import UsageError
+from hindlight.settings import Settings
+from hindlight.store import RunFolder
+
+RECORDED_PACKAGES = (
+    "hindlight", "numpy", "scipy", "astropy", "photutils", "pyarrow", "dask", "distributed", "nifty-ls",
+)  # fmt: skip
+
+
+@dataclass(frozen=True)
+class Request:
+    """What `mine` is asked for."""
+
+    archives: tuple[str, ...]
+    targets: Path
+    out: Path
+    settings: Path | None = None
+    plugins: tuple[Path, ...] = ()
+    without: tuple[str, ...] = ()
+    workers: int | None = None
+    scheduler: str | None = None
+
+    @property
+    def folders(self) -> tuple[str, ...]:
+        """The archive folders as absolute paths."""
+        return tuple(str(Path(archive).resolve()) for archive in self.archives)
+
+
+def settings_in_force(run: RunFolder, request: Request) -> Settings:
+    """The settings given, else those of the run, else the defaults."""
+    if request.settings is None and run.has("settings.toml"):
+        return settings.read_settings(run.file("settings.toml"))
+    return settings.read_settings(request.settings)
+
+
+def text_of(request: Request, chosen: Settings, plugins: host.Plugins, field_size_deg: float) -> str:
+    """The text of settings.toml: every setting in force, and what the run was made from and with."""
+    instances = {entry.plugin.name: entry.plugin for entry in plugins.loaded}
+    record = {
+        "run": {
+            "archives": list(request.folders),
+            "field_size_deg": field_size_deg,
+            "measuring_plugins": _measuring_plugins(plugins),
+        },
+        "versions": {
+            "python": platform.python_version(),
+            "packages": dict(host.installed_versions(RECORDED_PACKAGES)),
+            "plugins": {e.plugin.name: f"{e.source} {e.version}".strip() for e in plugins.loaded},
+        },
+    }
+    return settings.render(chosen, instances) + "\n" + tomli_w.dumps(record)
+
+
+def compare(run: RunFolder, request: Request, chosen: Settings, plugins: host.Plugins) -> Mapping[str, Any]:
+    """What the run recorded of itself, {} for a new one; raises `UsageError` where this request does not fit it."""
+    if not run.has("settings.toml"):
+        return {}
+    data = tomllib.loads(run.file("settings.toml").read_text(encoding="utf-8"))
+    recorded: Mapping[str, Any] = data.get("run", {})
+    missing = [archive for archive in recorded.get("archives", []) if archive not in request.folders]
+    if missing:
+        raise UsageError(f"run {run.path}: was made from archive {missing[0]}; give that too, or another --out")
+    before = settings.settings_from(data, f"{run.path}/settings.toml").measuring()
+    for section, values in chosen.measuring().items():
+        for key in sorted({*values, *before[section]}):
+            was, now = before[section].get(key), values.get(key)
+            if was != now:
+                raise UsageError(
+                    f"run {run.path}: [{section}] {key} was {was!r} and is now {now!r}; "
+                    "it touches what has been measured: keep it, or give another --out"
+                )
+    if recorded.get("measuring_plugins") != _measuring_plugins(plugins):
+        raise UsageError(
+            f"run {run.path}: its dialects or estimators differ from those now; use the same, or give another --out"
+        )
+    return recorded
+
+
+def _measuring_plugins(plugins: host.Plugins) -> str:
+    """A word for the plugins that touch measured values, with their versions and settings."""
+    touching = tuple(entry for entry in plugins.loaded if entry.plugin.kind in ("dialect", "estimator"))
+    return host.Plugins(touching).fingerprint()[:16]

@@ -1,0 +1,265 @@
+"""The second half of `mine`: measured light curves to ranks, verdicts and the run's result tables.
+
+No pixel is read here but for the cut-outs that a consistency check asks for, so a run whose plugins or judging settings
+change comes straight here.
+"""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any, Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+
+from hindlight import conclude, host, judge, outcome, plan, store, tasks
+from hindlight.candidates import Described, Examined
+from hindlight.conclude import Field
+from hindlight.crew import Crew
+from hindlight.errors import NothingToDoError
+from hindlight.fence import Fault, merged
+from hindlight.lightcurve import IntArray
+from hindlight.outcome import Outcome
+from hindlight.plugin import Column
+from hindlight.positions import Targets, serves
+from hindlight.schema import CHANNELS, STANDINGS
+from hindlight.settings import Settings
+from hindlight.store import Columns, RunFolder
+from hindlight.systems import unit_vectors
+from hindlight.tables import arrow_table, astropy_table, rows_to_columns, write_parquet, write_table
+
+
+class Watcher(Protocol):
+    """Whoever wants to know how far a run is."""
+
+    def stage(self, name: str, total: int) -> None:
+        """A stage begins, of `total` steps."""
+
+    def step(self, n: int = 1) -> None:
+        """Some steps of the stage are done."""
+
+
+@dataclass(frozen=True)
+class Session:
+    """What every stage needs: the run folder, who works, what pieces of work are told, plugins, targets, who watches."""
+
+    run: RunFolder
+    crew: Crew
+    order: tasks.Order
+    plugins: host.Plugins
+    targets: Targets
+    watcher: Watcher
+
+
+def verdicts(session: Session, frames: Columns, positions: Columns, rejects: Sequence[Mapping[str, Any]]) -> Outcome:
+    """Judge, rank, examine and describe every target, and write the result tables."""
+    fields = _fields(frames, positions, session.order.settings)
+    columns = judge.full_columns([*session.plugins.statistics, *session.plugins.period_searches])
+    everyone = {found.number: found.ids for found in fields}
+    judged = _judged(session, fields, everyone, tasks.judge_positions, columns, "judging")
+    for found in fields:
+        found.judgement = judged[found.number]
+        conclude.rank(found, session.plugins, session.order.settings)
+    if session.plugins.period_searches:
+        gate = {found.number: conclude.gated(found, session.order.settings) for found in fields}
+        searched = _judged(session, fields, gate, tasks.search_positions, columns, "searching periods")
+        for found in fields:
+            judge.spread(found.judgement, searched[found.number], found.rows(gate[found.number]), columns)
+            conclude.rank(found, session.plugins, session.order.settings)
+    return _tabled(session, frames, positions, rejects, fields)
+
+
+def _fields(frames: Columns, positions: Columns, chosen: Settings) -> list[Field]:
+    """The fields that hold targets, with which control may serve which target."""
+    found = []
+    is_target, is_control = positions["kind"] == "target", positions["kind"] == "control"
+    for number in sorted(set(positions["field"][is_target].tolist())):
+        here = positions["field"] == number
+        targets, controls = positions["id"][is_target & here], positions["id"][is_control & here]
+        vectors = unit_vectors(positions["ra"], positions["dec"])
+        within = plan.field_frames(frames, vectors[is_target & here])
+        covered = plan.covered(frames, within.rows, vectors[is_control & here])
+        in_frames = serves(within.covered, covered, chosen.controls.shared_frames)
+        serving = conclude.serving_controls(positions, np.sort(controls), in_frames)
+        found.append(Field(int(number), np.sort(targets), np.sort(controls), serving))
+    return found
+
+
+def _collected(
+    session: Session, stage: str, function: Callable[..., Any], jobs: Sequence[tuple[Any, ...]], sizes: Sequence[int]
+) -> list[Any]:
+    """The results of jobs in their order, each told the session's order first; `sizes` says how many steps each is."""
+    session.watcher.stage(stage, sum(sizes))
+    results: list[Any] = [None] * len(jobs)
+
+    def done(number: int, result: Any) -> None:
+        results[number] = result
+        session.watcher.step(sizes[number])
+
+    session.crew.run(function, [(session.order, *job) for job in jobs], done)
+    return results
+
+
+def _grouped(ids: IntArray, size: int) -> list[IntArray]:
+    """The ids in groups of a fixed size."""
+    return [ids[start : start + size] for start in range(0, len(ids), size)]
+
+
+def _judged(
+    session: Session,
+    fields: Sequence[Field],
+    wanted: Mapping[int, IntArray],
+    function: Callable[..., judge.Judgement],
+    columns: Mapping[str, Column],
+    stage: str,
+) -> dict[int, judge.Judgement]:
+    """Each field's judgement of its wanted positions, made in groups of a fixed size."""
+    size = session.order.settings.ranking.gather_curves
+    groups = {found.number: _grouped(wanted[found.number], size) for found in fields}
+    jobs = [ids for found in fields for ids in groups[found.number]]
+    results = iter(_collected(session, stage, function, [(ids,) for ids in jobs], [len(ids) for ids in jobs]))
+    return {
+        number: judge.joined([next(results) for _ in mine], [len(ids) for ids in mine], columns)
+        for number, mine in groups.items()
+    }
+
+
+@dataclass(frozen=True, eq=False)
+class Place:
+    """A target among all of the run: its field, its place in the field, its place in the run, its id and its name."""
+
+    found: Field
+    index: int
+    at: int
+    target: int
+    name: str
+
+
+def _places(fields: Sequence[Field], positions: Columns) -> list[Place]:
+    """Every target, in order of field and id."""
+    flat = [(found, index, int(target)) for found in fields for index, target in enumerate(found.targets)]
+    names = positions["name"][np.searchsorted(positions["id"], [target for _, _, target in flat])]
+    return [Place(f, index, at, target, str(names[at])) for at, (f, index, target) in enumerate(flat)]
+
+
+def _tabled(
+    session: Session,
+    frames: Columns,
+    positions: Columns,
+    rejects: Sequence[Mapping[str, Any]],
+    fields: Sequence[Field],
+) -> Outcome:
+    """The result tables of a run, made from its ranked fields and written."""
+    settings, plugins = session.order.settings, session.plugins
+    places = _places(fields, positions)
+    p = conclude.p_values([place.found.ranked.ranks[place.index] for place in places], settings)
+    with np.errstate(invalid="ignore"):
+        beyond = p.q < settings.ranking.level
+    examined = _examined(session, places, beyond)
+    described = _described(session, places, beyond, examined)
+    cells = {found.number: outcome.plugin_cells(found, plugins) for found in fields}
+    rows = []
+    for place, said in zip(places, described, strict=True):
+        found, where = place.found, int(np.searchsorted(positions["id"], place.target))
+        row = dict(cells[found.number][int(np.searchsorted(found.ids, place.target))])
+        row |= examined[place.at].cells if place.at in examined else {}
+        row |= {**said.cells, **outcome.chance_cells(found, place.index, place.at, p)}
+        row |= {"name": place.name, "ra": float(positions["ra"][where]), "dec": float(positions["dec"][where])}
+        row["notes"] = outcome.notes(found, place.index, place.at, p)
+        rows.append(row)
+    faults = [f for found in fields for f in found.judgement.faults] + [f for e in examined.values() for f in e.faults]
+    meta = outcome.meta(settings, p, fields)
+    table = outcome.candidate_table(rows, plugins, meta)
+    result = _result(session.run, table, described, frames, rejects, merged(faults), p, fields, settings)
+    _write(session, result, described, fields, {place.target: place.name for place in places}, meta)
+    return result
+
+
+def _examined(session: Session, places: Sequence[Place], beyond: NDArray[np.bool_]) -> dict[int, Examined]:
+    """Periods and checks of the targets beyond chance, by their place in the run."""
+    chosen = [place for place in places if beyond[place.at]]
+    jobs = [
+        (place.target, place.found.controls, {k: v.above_quiet for k, v in place.found.thresholds.items()})
+        for place in chosen
+    ]
+    results = _collected(session, "examining candidates", tasks.examine_target, jobs, [1] * len(jobs))
+    return {place.at: result for place, result in zip(chosen, results, strict=True)}
+
+
+def _described(
+    session: Session, places: Sequence[Place], beyond: NDArray[np.bool_], examined: Mapping[int, Examined]
+) -> list[Described]:
+    """What the tables say of every target from its light curves."""
+    listed = {name: row for row, name in enumerate(session.targets.names)}
+    columns = {name: session.targets.column(name) for name in outcome.NO_EPHEMERIS}
+    by_field: dict[int, list[Place]] = {}
+    for place in places:
+        by_field.setdefault(place.found.number, []).append(place)
+    size = session.order.settings.ranking.gather_curves
+    groups = [mine[start : start + size] for mine in by_field.values() for start in range(0, len(mine), size)]
+    jobs = []
+    for group in groups:
+        given = [
+            {k: float(v[listed[place.name]]) for k, v in columns.items()}
+            if place.name in listed
+            else outcome.NO_EPHEMERIS
+            for place in group
+        ]
+        ids = np.array([place.target for place in group])
+        judged = [bool(beyond[place.at]) for place in group]
+        jobs.append((ids, group[0].found.thresholds, given, judged, [examined.get(place.at) for place in group]))
+    results = _collected(session, "describing targets", tasks.describe_targets, jobs, [len(group) for group in groups])
+    return [said for result in results for said in result]
+
+
+def _result(
+    run: RunFolder,
+    table: Any,
+    described: Sequence[Described],
+    frames: Columns,
+    rejects: Sequence[Mapping[str, Any]],
+    faults: Sequence[Fault],
+    p: conclude.PValues,
+    fields: Sequence[Field],
+    settings: Settings,
+) -> Outcome:
+    """The run's outcome in numbers."""
+    return Outcome(
+        run=run.path,
+        table=table,
+        standings={word: int(np.sum(table["standing"] == word)) for word in STANDINGS},
+        n_frames=int(np.sum(frames["state"] != "void")),
+        n_measurements=int(sum(row["n_frames"] for said in described for row in said.channels)),
+        rejects=dict(sorted(Counter(str(row["reason"]) for row in rejects).items())),
+        faults=tuple(faults),
+        extrapolated=int(p.extrapolated.sum()),
+        remarks=outcome.remarks(p, fields, settings),
+    )
+
+
+def _write(
+    session: Session,
+    result: Outcome,
+    described: Sequence[Described],
+    fields: Sequence[Field],
+    names: Mapping[int, str],
+    meta: Mapping[str, Any],
+) -> None:
+    """Write every result table, the candidate table last; raises `NothingToDoError` where no target is covered."""
+    run = session.run
+    channel_rows = [row for said in described for row in said.channels]
+    write_table(run.file("channels.ecsv"), astropy_table(CHANNELS, rows_to_columns(CHANNELS, channel_rows), meta))
+    write_table(run.file("plugin_faults.ecsv"), outcome.fault_table(result.faults))
+    statistics = outcome.statistic_columns(fields, names, session.plugins)
+    write_parquet(run.file("statistics.parquet"), arrow_table(*statistics))
+    write_parquet(run.file("controls.parquet"), arrow_table(*outcome.control_columns(fields, session.plugins)))
+    store.write_text(run, "summary.txt", outcome.summary(result))
+    for ending in (".fits", ".vot", ".ecsv"):
+        write_table(run.file(f"candidates{ending}"), result.table)
+    if result.standings["uncovered"] == len(result.table):
+        raise NothingToDoError(
+            f"no target is covered by any of the {result.n_frames} frames; "
+            "check the positions (ICRS degrees) and the archive"
+        )

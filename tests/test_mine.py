@@ -1,0 +1,373 @@
+"""The whole job on small archives, as a user runs it."""
+
+import json
+import shutil
+import signal
+import subprocess
+import sys
+import time
+from pathlib import Path
+
+import numpy as np
+import pyarrow.parquet as pq
+import pytest
+import skies
+from astropy.io import fits
+from astropy.table import Table
+
+from hindlight import cli
+from hindlight.schema import CANDIDATES, REASONS, STANDINGS
+
+DEMO = Path(__file__).parents[1] / "demo_archive"
+STRANGER = Path(__file__).parent / "third_party" / "stranger_plugin"
+
+
+def mine(*arguments, status=0):
+    """Run `hindlight mine` in this process."""
+    assert cli.run_command(["mine", "-q", *[str(a) for a in arguments]]) == status
+
+
+def candidates(run):
+    """The candidate table of a run by name."""
+    table = Table.read(run / "candidates.ecsv")
+    return {str(row["name"]): row for row in table}
+
+
+@pytest.fixture(scope="module")
+def demo(tmp_path_factory):
+    """A run on the committed demonstration archive."""
+    run = tmp_path_factory.mktemp("demo") / "run"
+    mine(DEMO, "--targets", DEMO / "targets.ecsv", "--out", run)
+    return run
+
+
+def test_demo_finds_what_is_planted(demo):
+    """Pulser, variable and flare are the first three rows; nothing blank or steady is called anything else."""
+    truth = {str(row["name"]): str(row["kind"]) for row in Table.read(DEMO / "truth.ecsv")}
+    table = Table.read(demo / "candidates.ecsv")
+    first = {truth[str(row["name"])]: str(row["standing"]) for row in table[:3]}
+    assert set(first) == {"pulser", "sinusoid", "flare"}
+    assert first["pulser"] in ("periodic", "repeating")
+    assert first["sinusoid"] in ("periodic", "variable")
+    assert first["flare"] == "single"
+    for row in table[3:]:
+        if truth[str(row["name"])] == "detector artefact":
+            assert str(row["concerns"]).startswith("position")
+        else:
+            assert row["standing"] in ("unseen", "steady"), row["name"]
+    steady = [row["standing"] for row in table if truth[str(row["name"])].endswith("steady")]
+    assert set(steady) == {"steady"}
+
+
+def test_demo_recovers_the_planted_period(demo):
+    """The variable's period and its error agree with the truth."""
+    truth = {str(row["name"]): row for row in Table.read(DEMO / "truth.ecsv")}
+    (name,) = [n for n, row in truth.items() if str(row["kind"]) == "sinusoid"]
+    row = candidates(demo)[name]
+    assert row["standing"] == "periodic"
+    assert abs(row["period"] - truth[name]["period"]) < 5 * row["period_err"]
+
+
+def test_demo_sets_damaged_files_aside_with_reasons(demo):
+    """Every damaged file that the archive's README names is in rejects.ecsv with a fixed word and a sentence."""
+    rejects = Table.read(demo / "rejects.ecsv")
+    text = (DEMO / "README.md").read_text(encoding="utf-8")
+    assert len(rejects) == 7
+    for row in rejects:
+        assert Path(str(row["path"])).name in text
+        assert str(row["reason"]) in REASONS
+        assert len(str(row["detail"])) > 10
+
+
+def test_tables_read_back_alike_in_all_formats(demo):
+    """The three candidate tables hold the same rows, with the promised first columns, units and UCDs."""
+    ecsv = Table.read(demo / "candidates.ecsv")
+    fits = Table.read(demo / "candidates.fits")
+    vot = Table.read(demo / "candidates.vot")
+    promised = [c.name for c in CANDIDATES]
+    for table in (ecsv, fits, vot):
+        assert table.colnames[: len(promised)] == promised
+        np.testing.assert_array_equal(np.asarray(table["p_value"], float), np.asarray(ecsv["p_value"], float))
+        assert table["ra"].unit == "deg"
+        assert table["period"].unit == "s"
+    assert ecsv["ra"].info.meta["ucd"] == "pos.eq.ra;meta.main"
+    assert vot["p_value"].info.meta["ucd"] == "stat.probability"
+    assert all(ecsv[name].description for name in ecsv.colnames)
+    assert "caution" in ecsv.meta
+    assert set(ecsv["standing"]) <= set(STANDINGS)
+
+
+def test_every_ucd_is_valid():
+    """Each UCD in the schema and in the shipped plugins is in the IVOA's list (UCD1+ 1.5, as astropy carries it)."""
+    from astropy.io.votable.ucd import check_ucd
+
+    from hindlight import host, schema
+
+    columns = [c for v in vars(schema).values() if isinstance(v, tuple) for c in v if isinstance(c, schema.TableColumn)]
+    columns += [c for e in host.load(host.PluginSpec()).loaded for c in e.plugin.columns]
+    assert len(columns) > 100
+    for column in columns:
+        assert not column.ucd or check_ucd(column.ucd, check_controlled_vocabulary=True), (column.name, column.ucd)
+
+
+def test_measurements_agree_with_the_frame_table(demo):
+    """Every part's frames, channels and positions are those pinned, and no wall-clock time is in a table."""
+    frames = pq.read_table(demo / "frames.parquet").to_pydict()
+    positions = pq.read_table(demo / "positions.parquet").to_pydict()
+    channel_of = dict(zip(frames["id"], frames["channel"], strict=True))
+    parts = sorted((demo / "measurements").rglob("*.parquet"))
+    assert len(parts) == max(frames["batch"]) + 1
+    for part in parts:
+        rows = pq.read_table(part).to_pydict()
+        assert all(channel_of[f] == c for f, c in zip(rows["frame"], rows["channel"], strict=True))
+        assert set(rows["position"]) <= set(positions["id"])
+        json.loads(pq.read_schema(part).metadata[b"rejects"])
+
+
+def small(tmp_path, n_frames=24, **sky):
+    """A small archive with a flare, a steady source and blanks; returns its folder."""
+    flare = skies.Source("flare", 200.0, 0.0, lambda k, _d, _s: 20.0 if k == 7 else 0.0)
+    steady = skies.Source("steady", -200.0, 0.0, 8.0)
+    blanks = skies.lattice(4, 200.0)
+    look = skies.Sky(n_frames=n_frames, size=100, **sky)
+    skies.write_sky(tmp_path / "frames", look, [flare, steady], seed=3)
+    (tmp_path / "targets.csv").write_text(skies.target_text([flare, steady, *blanks], look), encoding="utf-8")
+    (tmp_path / "s.toml").write_text("[controls]\nper_field = 130\n[flow]\nbatch_frames = 6\n", encoding="utf-8")
+    return tmp_path
+
+
+def arguments(folder, run):
+    """The command line for such an archive."""
+    return [folder / "frames", "--targets", folder / "targets.csv", "--out", run, "--settings", folder / "s.toml"]
+
+
+def contents(run):
+    """The bytes of every table that must not depend on how the work was done."""
+    names = ["candidates.ecsv", "candidates.fits", "candidates.vot", "channels.ecsv", "rejects.ecsv", "controls.parquet",
+             "statistics.parquet", "positions.parquet", "frames.parquet"]  # fmt: skip
+    parts = sorted((run / "measurements").rglob("*.parquet"))
+    return {str(p.relative_to(run)): p.read_bytes() for p in [*(run / n for n in names), *parts]}
+
+
+def test_same_bytes_for_any_number_of_workers(tmp_path):
+    """One process, two processes and four write the same bytes."""
+    folder = small(tmp_path)
+    mine(*arguments(folder, tmp_path / "one"), "--workers", 1)
+    expected = contents(tmp_path / "one")
+    for workers in (2, 4):
+        mine(*arguments(folder, tmp_path / f"w{workers}"), "--workers", workers)
+        found = contents(tmp_path / f"w{workers}")
+        assert found.keys() == expected.keys()
+        for name, data in expected.items():
+            assert found[name] == data, name
+    assert candidates(tmp_path / "one")["flare"]["standing"] == "single"
+
+
+def test_new_files_and_targets_extend_a_finished_run(tmp_path):
+    """Frames added later are measured, and nothing else again; a target added later gets a row; a changed file is said."""
+    folder = small(tmp_path)
+    late = sorted((folder / "frames").iterdir())[-6:]
+    (tmp_path / "aside").mkdir()
+    for path in late:
+        shutil.move(path, tmp_path / "aside")
+    run = tmp_path / "run"
+    mine(*arguments(folder, run))
+    assert candidates(run)["flare"]["n_frames"] == 18
+    before = {p: (p.stat().st_ino, p.stat().st_mtime_ns) for p in (run / "measurements").rglob("*.parquet")}
+    for path in late:
+        shutil.move(tmp_path / "aside" / path.name, path)
+    with (folder / "targets.csv").open("a", encoding="utf-8") as stream:
+        stream.write("later,150.0,-30.05\n")
+    mine(*arguments(folder, run))
+    table = candidates(run)
+    assert table["flare"]["n_frames"] == 24
+    assert table["later"]["n_frames"] == 24
+    for path, stat in before.items():
+        assert (path.stat().st_ino, path.stat().st_mtime_ns) == stat
+    late[0].unlink()
+    data = late[1].read_bytes()
+    late[1].write_bytes(data + b"\0" * 2880)
+    mine(*arguments(folder, run))
+    reasons = sorted(str(row["reason"]) for row in Table.read(run / "rejects.ecsv"))
+    assert reasons == ["changed", "vanished"]
+    assert candidates(run)["flare"]["n_frames"] == 24
+
+
+def test_changed_plugins_only_judge_again(tmp_path):
+    """Leaving out a statistic changes the table without a pixel being read."""
+    folder = small(tmp_path)
+    run = tmp_path / "run"
+    mine(*arguments(folder, run))
+    before = {p: p.stat().st_mtime_ns for p in (run / "measurements").rglob("*.parquet")}
+    mine(*arguments(folder, run), "--without", "stetson", "--plugin", STRANGER / "longest_run.py")
+    table = Table.read(run / "candidates.ecsv")
+    assert "longest_run_length" in table.colnames
+    assert "stetson_j" not in table.colnames
+    assert before == {p: p.stat().st_mtime_ns for p in (run / "measurements").rglob("*.parquet")}
+
+
+def test_a_strangers_statistic_works_as_file_and_as_distribution(tmp_path):
+    """The same statistic gives the same table as a file and installed from outside, in one process and in two."""
+    folder = small(tmp_path)
+    site = tmp_path / "site"
+    install = [sys.executable, "-m", "pip", "install", "--quiet", "--no-index", "--no-deps", "--no-build-isolation",
+               "--target", str(site), str(STRANGER)]  # fmt: skip
+    subprocess.run(install, check=True, capture_output=True)
+    tables = []
+    for workers in (1, 2):
+        run = tmp_path / f"file{workers}"
+        mine(*arguments(folder, run), "--plugin", STRANGER / "longest_run.py", "--workers", workers)
+        tables.append((run / "candidates.ecsv").read_bytes())
+        run = tmp_path / f"site{workers}"
+        command = [sys.executable, "-c", f"import sys; sys.path.insert(0, {str(site)!r}); from hindlight.cli import main; main()",
+                   "mine", "-q", *map(str, arguments(folder, run)), "--workers", str(workers)]  # fmt: skip
+        done = subprocess.run(command, capture_output=True, text=True, check=False, env=with_path(site))
+        assert done.returncode == 0, done.stderr
+        tables.append((run / "candidates.ecsv").read_bytes())
+    assert len(set(tables)) == 1
+    table = candidates(tmp_path / "site2")
+    assert table["flare"]["longest_run_length"] == 1
+    assert table["steady"]["longest_run_length"] > 5
+    controls = pq.read_table(tmp_path / "site2" / "controls.parquet")
+    assert "longest_run_length" in controls.column_names
+
+
+def with_path(folder):
+    """This process's environment with a folder put first on the module path, for worker processes too."""
+    import os
+
+    return {**os.environ, "PYTHONPATH": str(folder)}
+
+
+BAD_PLUGINS = '''
+from dataclasses import dataclass
+from hindlight import *
+
+
+@dataclass(frozen=True)
+class Raiser(Statistic):
+    columns = (Column("a", "doc", unusual="high"),)
+
+    def compute(self, curve):
+        raise RuntimeError("no, thank you")
+
+
+@dataclass(frozen=True)
+class Misnamer(Statistic):
+    columns = (Column("a", "doc", unusual="high"),)
+
+    def compute(self, curve):
+        return {"b": 1.0}
+
+
+@dataclass(frozen=True)
+class Scribbler(Statistic):
+    columns = (Column("a", "doc", unusual="high"),)
+
+    def compute(self, curve):
+        curve.flux[:] = 0
+        return {"a": 1.0}
+
+
+@hookimpl
+def register_statistics():
+    return [Raiser, Misnamer, Scribbler]
+'''
+
+
+@pytest.mark.parametrize("workers", [1, 2])
+def test_bad_plugins_are_fenced(tmp_path, workers):
+    """One that raises, one that misnames a column and one that writes into its input: status 0, and each is named."""
+    folder = small(tmp_path)
+    (tmp_path / "bad.py").write_text(BAD_PLUGINS, encoding="utf-8")
+    mine(*arguments(folder, tmp_path / "run"), "--plugin", tmp_path / "bad.py", "--workers", workers)
+    faults = {str(row["plugin"]): row for row in Table.read(tmp_path / "run" / "plugin_faults.ecsv")}
+    assert set(faults) == {"raiser", "misnamer", "scribbler"}
+    assert str(faults["raiser"]["fault"]) == "RuntimeError"
+    assert str(faults["raiser"]["line"]) == "bad.py:11"
+    assert "undeclared 'b'" in str(faults["misnamer"]["detail"])
+    assert "read-only" in str(faults["scribbler"]["detail"])
+    mine(*arguments(folder, tmp_path / "plain"))
+    good, plain = candidates(tmp_path / "run"), candidates(tmp_path / "plain")
+    assert {n: r["p_value"] for n, r in good.items()} == {n: r["p_value"] for n, r in plain.items()}
+
+
+def test_a_steady_source_at_two_frequencies_and_in_circular_polarisation_is_steady(tmp_path):
+    """Two frequencies with two beams, Stokes I and V: four channels, one steady source, no variation."""
+    source = [skies.Source("steady", 0.0, 0.0, lambda _k, _d, stokes: 15.0 if stokes == "I" else 0.0)]
+    for n, (frequency, fwhm, stokes) in enumerate([(1.4e9, 3.0, "I"), (1.4e9, 3.0, "V"), (8e8, 5.0, "I")]):
+        look = skies.Sky(n_frames=16, size=120, frequency_hz=frequency, fwhm_pixels=fwhm, stokes=stokes)
+        skies.write_sky(tmp_path / "frames", look, source, seed=n, prefix=f"f{n}_")
+    (tmp_path / "targets.csv").write_text(skies.target_text([*source, *skies.lattice(3, 250)], look), encoding="utf-8")
+    mine(tmp_path / "frames", "--targets", tmp_path / "targets.csv", "--out", tmp_path / "run")
+    row = candidates(tmp_path / "run")["steady"]
+    assert row["standing"] == "steady"
+    channels = Table.read(tmp_path / "run" / "channels.ecsv")
+    mine_ = channels[channels["name"] == "steady"]
+    assert len(mine_) == 3
+    seen = {str(r["channel"]): int(r["n_detected"]) for r in mine_}
+    assert [n for c, n in sorted(seen.items()) if "|V|" in c] == [0]
+    assert all(n == 16 for c, n in seen.items() if "|I|" in c)
+
+
+def raise_to(path, snr):
+    """Add a beam-shaped source to an image so that its central pixel reads exactly `snr`."""
+    with fits.open(path, mode="update") as hdus:
+        image = hdus[0].data
+        centre = image.shape[0] // 2
+        y, x = np.mgrid[: image.shape[0], : image.shape[1]]
+        shape = np.exp(-4 * np.log(2) * ((x - centre) ** 2 + (y - centre) ** 2) / 9.0)
+        image += ((snr - image[centre, centre]) * shape).astype(np.float32)
+
+
+def test_a_source_seen_only_in_the_mean_is_steady_and_four_frames_are_too_few(tmp_path):
+    """Over ten sigma in the mean and never three in a frame is steady, not unseen; four frames leave it undecided."""
+    look = skies.Sky(n_frames=64, size=101, jitter_pixels=0.0)
+    skies.write_sky(tmp_path / "frames", look, [], seed=12)
+    rng = np.random.default_rng(5)
+    paths = sorted((tmp_path / "frames").iterdir())
+    for path in paths:
+        raise_to(path, rng.uniform(0.5, 2.4))
+    faint = skies.Source("faint", 0.0, 0.0)
+    (tmp_path / "targets.csv").write_text(skies.target_text([faint, *skies.lattice(4, 300)], look), encoding="utf-8")
+    mine(tmp_path / "frames", "--targets", tmp_path / "targets.csv", "--out", tmp_path / "run")
+    row = candidates(tmp_path / "run")["faint"]
+    (channel,) = [r for r in Table.read(tmp_path / "run" / "channels.ecsv") if r["name"] == "faint"]
+    assert channel["flux_mean"] / channel["flux_mean_err"] > 10
+    assert row["peak_snr"] < 3
+    assert row["standing"] == "steady"
+    for path in paths[4:]:
+        path.unlink()
+    mine(tmp_path / "frames", "--targets", tmp_path / "targets.csv", "--out", tmp_path / "few")
+    assert candidates(tmp_path / "few")["faint"]["standing"] == "undecided"
+
+
+def test_killed_ten_times_and_continued(tmp_path):
+    """SIGKILL at ten random moments, continued each time: the same table, and no finished part written again."""
+    folder = small(tmp_path)
+    (folder / "s.toml").write_text("[controls]\nper_field = 130\n[flow]\nbatch_frames = 1\n", encoding="utf-8")
+    mine(*arguments(folder, tmp_path / "quiet"))
+    run = tmp_path / "run"
+    command = [sys.executable, "-m", "hindlight", "mine", "-q", *map(str, arguments(folder, run))]
+    rng = np.random.default_rng(17)
+    start = time.perf_counter()
+    assert subprocess.run([*command[:-3], str(tmp_path / "timed"), *command[-2:]], check=False).returncode == 0
+    whole = time.perf_counter() - start
+    finished: dict[Path, tuple[int, int]] = {}
+    killed = 0
+    for _ in range(10):
+        process = subprocess.Popen(command)
+        try:
+            process.wait(timeout=whole * rng.uniform(0.2, 1.0))
+        except subprocess.TimeoutExpired:
+            process.send_signal(signal.SIGKILL)
+            process.wait()
+            killed += 1
+        parts = {p: (p.stat().st_ino, p.stat().st_mtime_ns) for p in (run / "measurements").rglob("batch-*.parquet")}
+        assert finished.items() <= parts.items()
+        finished = parts
+    assert killed >= 5
+    assert subprocess.run(command, check=False).returncode == 0
+    assert all((p.stat().st_ino, p.stat().st_mtime_ns) == stat for p, stat in finished.items())
+    assert (run / "candidates.ecsv").read_bytes() == (tmp_path / "quiet" / "candidates.ecsv").read_bytes()
+    assert not [p for p in run.rglob(".*.part")]
