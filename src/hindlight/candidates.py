@@ -21,6 +21,7 @@ from hindlight.settings import Detection
 from hindlight.timing import DAY, J2000_JD, in_window, lookback
 
 STILL_POSSIBLE = 1000.0  # ephemerides with odds no worse than one to this are still possible
+FAINT_PULSE_SIGMA = 3.0
 MOST_BRIGHT = 0.5  # brightenings that fill more of the samples than this are no separate brightenings
 
 Mask = NDArray[np.bool_]
@@ -65,8 +66,13 @@ class ChannelView:
 
     @property
     def quiet_otherwise(self) -> bool:
-        """Whether the samples that are not bright scatter no more than blank sky does."""
+        """Whether the samples that are not bright scatter no more than blank sky does.
+
+        A source that pulses has faint pulses too, which are not bright by themselves: they are left out as well.
+        """
         rest = ~self.bright
+        if not self.curve.channel.signed:
+            rest &= self.curve.above_quiet <= FAINT_PULSE_SIGMA
         if rest.sum() < 3:
             return False
         flux, error = self.curve.flux[rest], self.curve.flux_err[rest]

@@ -19,6 +19,7 @@ from hindlight.systems import unit_vectors
 
 POINTS = 8
 WIDEST_DEG = 80.0  # a wider image is judged by its circle alone: half-spaces no longer bound it
+SKEW = 0.3  # a side may bow most elsewhere than in its middle: this part of the bow is allowed beyond it
 SLACK = 5e-8  # radians: footprints are written to 1e-6 degree
 PAIRS_AT_ONCE = 1 << 22
 
@@ -94,7 +95,8 @@ def _sides(footprints: Sequence[str], centres: FloatArray) -> tuple[FloatArray, 
         inward = np.sign((across * centres[whole][:, None]).sum(axis=-1))
         across *= inward[..., None]
         normals[whole] = across
-        limits[whole] = np.minimum((across * middles).sum(axis=-1), 0.0) - SLACK
+        bow = (across * middles).sum(axis=-1)
+        limits[whole] = np.minimum(bow, 0.0) - SKEW * np.abs(bow) - SLACK
     return normals, limits
 
 

@@ -194,8 +194,10 @@ def measure(
     local = local_background(pixels, ix, iy, annulus)
     beam_pixels = math.pi * beam.major * beam.minor / (4.0 * math.log(2.0)) / annulus.step**2
     raw = pixels.stamps(ix, iy, _half_width(estimator, beam))
+    with np.errstate(invalid="ignore"):  # infinite pixels may make NaN, never a warning
+        signal = raw - local.level[:, None, None]
     stamps = Stamps(
-        pixels=raw - local.level[:, None, None],
+        pixels=signal,
         dx=x - ix,
         dy=y - iy,
         rms=local.rms,
@@ -231,7 +233,7 @@ def _half_width(estimator: Estimator, beam: BeamShape) -> int:
 
 def _estimate(estimator: Estimator, stamps: Stamps) -> tuple[FloatArray, FloatArray]:
     """What the estimator finds, checked for shape and made writable."""
-    with np.errstate(invalid="ignore", over="ignore"):  # infinite pixels may make NaN, never a warning
+    with np.errstate(invalid="ignore", over="ignore"):  # as above
         flux, flux_err = estimator.measure(stamps)
     flux, flux_err = np.array(flux, float), np.array(flux_err, float)
     if flux.shape != stamps.dx.shape or flux_err.shape != stamps.dx.shape:

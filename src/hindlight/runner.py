@@ -20,7 +20,7 @@ from hindlight.channels import assign
 from hindlight.crew import assembled
 from hindlight.errors import HindlightError, NothingToDoError, UsageError
 from hindlight.outcome import Outcome
-from hindlight.positions import read_targets
+from hindlight.positions import Targets, read_targets
 from hindlight.record import Request
 from hindlight.schema import FRAME_SOLUTION, FRAMES, POSITIONS, REJECTS
 from hindlight.settings import Settings
@@ -51,26 +51,35 @@ def mine(request: Request, watcher: Watcher) -> Outcome:
     record.compare(run, request, settings, plugins)
     files.check_folders(request.folders)
     run.create()
-    with run.locked(), _logged(run):
-        recorded = record.compare(run, request, settings, plugins)
-        order = tasks.Order(str(run.path.resolve()), settings, replace(spec, expected=plugins.fingerprint()))
+    order = tasks.Order(str(run.path.resolve()), settings, replace(spec, expected=plugins.fingerprint()))
+    with run.locked():
         try:
-            frames, rejects = _walked(run, request, settings, plugins, watcher)
+            with _logged(run):
+                return _mine_locked(run, request, order, plugins, targets, watcher)
         except NothingToDoError:
             run.discard_if_new()
             raise
-        size = float(recorded.get("field_size_deg", 0.0)) or plan.chosen_field_size(frames, settings.controls)
-        store.write_text(run, "settings.toml", record.text_of(request, settings, plugins, size))
-        _write_rejects(run, rejects)
-        run.write_columns("frames.parquet", FRAMES, frames)
-        solution = ensemble.uncalibrated(frames["id"], frames["channel"])
-        run.write_columns("frame_solution.parquet", FRAME_SOLUTION, solution)
-        small = len(frames["id"]) * (len(targets) + settings.controls.per_field) < SMALL_WORK
-        with assembled(request.workers, request.scheduler, small) as crew:
-            session = Session(run, crew, replace(order, version=run.version()), plugins, targets, watcher)
-            positions = _planned(session, frames, size)
-            session = replace(session, order=replace(order, version=run.version()))
-            return _measured_and_judged(session, frames, positions, rejects)
+
+
+def _mine_locked(
+    run: RunFolder, request: Request, order: tasks.Order, plugins: host.Plugins, targets: Targets, watcher: Watcher
+) -> Outcome:
+    """The job once the run folder is ours."""
+    settings = order.settings
+    recorded = record.compare(run, request, settings, plugins)
+    frames, rejects = _walked(run, request, settings, plugins, watcher)
+    size = float(recorded.get("field_size_deg", 0.0)) or plan.chosen_field_size(frames, settings.controls)
+    store.write_text(run, "settings.toml", record.text_of(request, settings, plugins, size))
+    _write_rejects(run, rejects)
+    run.write_columns("frames.parquet", FRAMES, frames)
+    solution = ensemble.uncalibrated(frames["id"], frames["channel"])
+    run.write_columns("frame_solution.parquet", FRAME_SOLUTION, solution)
+    small = len(frames["id"]) * (len(targets) + settings.controls.per_field) < SMALL_WORK
+    with assembled(request.workers, request.scheduler, small) as crew:
+        session = Session(run, crew, replace(order, version=run.version()), plugins, targets, watcher)
+        positions = _planned(session, frames, size)
+        session = replace(session, order=replace(order, version=run.version()))
+        return _measured_and_judged(session, frames, positions, rejects)
 
 
 def _measured_and_judged(session: Session, frames: Columns, positions: Columns, rejects: list[Row]) -> Outcome:

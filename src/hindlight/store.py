@@ -58,7 +58,8 @@ class RunFolder:
         if self.path.exists() and not self.path.is_dir():
             raise UsageError(f"output {self.path}: is a file; give a folder for the run")
         known = self.file("settings.toml").exists() or not self.path.exists()
-        if not known and any(p.name not in ("lock", "log.txt") for p in self.path.iterdir()):
+        ours = ("lock", "log.txt", "measurements")  # what a run that was killed at once may have left
+        if not known and any(p.name not in ours and not p.name.endswith(".part") for p in self.path.iterdir()):
             raise UsageError(f"output {self.path}: holds other files and is no run; give a new or empty folder")
         try:
             (self.path / "measurements").mkdir(parents=True, exist_ok=True)

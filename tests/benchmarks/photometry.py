@@ -15,6 +15,7 @@ import statistics
 import sys
 import tempfile
 import time
+import warnings
 from collections.abc import Callable
 from pathlib import Path
 
@@ -22,7 +23,7 @@ import numpy as np
 import photutils
 from astropy.io import fits
 from astropy.stats import SigmaClip
-from astropy.wcs import WCS
+from astropy.wcs import WCS, FITSFixedWarning
 from numpy.lib.stride_tricks import sliding_window_view
 from photutils.aperture import ApertureStats, CircularAnnulus, CircularAperture
 
@@ -131,6 +132,7 @@ def main() -> int:
     parser.add_argument("--fwhm", type=float, default=5.0, help="width of beam or seeing in pixels")
     parser.add_argument("--rounds", type=int, default=5)
     given = parser.parse_args()
+    warnings.simplefilter("ignore", FITSFixedWarning)
     missed = []
     with tempfile.TemporaryDirectory() as name:
         paths = write_files(Path(name))
