@@ -47,3 +47,8 @@ def hdus_of(path: Path, limit: int = 10**9) -> list[Hdu]:
     """Every HDU of a file."""
     with open_source(str(path), limit) as source:
         return list(read_hdus(source))
+
+
+def image(shape: tuple[int, ...], **cards: object) -> Hdu:
+    """An image HDU of a NumPy shape, by its header alone."""
+    return Hdu(0, cards_of(header(**cards)), 2880, 4 * int(np.prod(shape)), -32, shape[::-1])

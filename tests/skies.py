@@ -26,9 +26,10 @@ class Source:
 
 @dataclass(frozen=True)
 class Sky:
-    """One instrument's frames. `noise` is white, beam (autocorrelation equal to the beam) or heavy (the same, with a
+    """One instrument's frames.
 
-    Student t(4) amplitude to each frame and a few outlying pixels before smoothing).
+    `noise` is white, beam (autocorrelation equal to the beam) or heavy (the same from Student t(4) pixels, and the rms
+    differs from frame to frame by a quarter).
     """
 
     instrument: str = "north array"
@@ -82,7 +83,7 @@ def noise_image(sky: Sky, rng: np.random.Generator) -> np.ndarray:
         return white
     amplitude = 1.0
     if sky.noise == "heavy":
-        white = white + 6.0 * (rng.random(white.shape) < 0.002) * rng.standard_t(4, white.shape)
+        white = rng.standard_t(4, white.shape) / 2**0.5
         amplitude = float(np.exp(0.25 * rng.standard_normal()))
     sigma = sky.fwhm_pixels / 2.354820045 / 2**0.5  # smoothed with this the autocorrelation is the beam
     smooth = ndimage.gaussian_filter(white, sigma, mode="wrap")

@@ -33,7 +33,7 @@ def card(text: str) -> Cards:
 
 @given(st.dictionaries(KEYS, VALUES, max_size=12), TEXT)
 def test_values_as_astropy_writes_them(values: dict[str, object], comment: str) -> None:
-    """Every value that astropy writes into a header is what astropy reads there, whatever the comment."""
+    """Every value that astropy writes into a header is read as it was meant, whatever the comment."""
     header = fits.Header()
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", fits.verify.VerifyWarning)  # long comments are cut off
@@ -41,9 +41,11 @@ def test_values_as_astropy_writes_them(values: dict[str, object], comment: str) 
             header[key] = (value, comment)
     cards, again = cards_of(header), fits.Header.fromstring(header.tostring())
     assert set(cards) == set(values)
-    for key in values:
-        assert cards.get(key) == again[key]
-        assert type(cards.get(key)) is type(again[key])
+    for key, value in values.items():
+        # Numbers lose digits when written. Text is compared with what was written: astropy misreads some with quotes.
+        expected = value if isinstance(value, str) else again[key]
+        assert cards.get(key) == expected
+        assert type(cards.get(key)) is type(expected)
 
 
 @given(st.text(st.characters(min_codepoint=32, max_codepoint=126), min_size=70, max_size=70))

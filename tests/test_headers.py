@@ -13,9 +13,9 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from hindlight.facts import FrameFacts, PlaneAxes
-from hindlight.headers import Hdu, SetAsideError, facts_of, fold_unit, planes, read_hdus
+from hindlight.headers import SetAsideError, facts_of, fold_unit, planes, read_hdus
 from hindlight.plugin import Dialect
-from made import cards_of, hdus_of, header, write
+from made import cards_of, hdus_of, header, image, write
 
 
 class Memory:
@@ -31,11 +31,6 @@ class Memory:
     def reaches(self, end: int) -> bool:
         """Whether there are so many."""
         return len(self.data) >= end
-
-
-def image(shape: tuple[int, ...], **cards: object) -> Hdu:
-    """An image HDU of a NumPy shape, by its header alone."""
-    return Hdu(0, cards_of(header(**cards)), 2880, 4 * int(np.prod(shape)), -32, shape[::-1])
 
 
 def reason(data: bytes) -> tuple[str, int, int]:

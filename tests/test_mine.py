@@ -12,8 +12,13 @@ import numpy as np
 import pyarrow.parquet as pq
 import pytest
 import skies
+from astropy import units as u
+from astropy.coordinates import EarthLocation, SkyCoord
 from astropy.io import fits
 from astropy.table import Table
+from astropy.time import Time
+from astropy.utils import iers
+from distributed import LocalCluster
 
 from hindlight import cli
 from hindlight.schema import CANDIDATES, REASONS, STANDINGS
@@ -124,6 +129,23 @@ def test_measurements_agree_with_the_frame_table(demo):
         json.loads(pq.read_schema(part).metadata[b"rejects"])
 
 
+def test_measured_times_agree_with_astropy(demo):
+    """Times of measurements equal astropy's own barycentric correction to a microsecond, at every instrument."""
+    frames = pq.read_table(demo / "frames.parquet").to_pydict()
+    positions = pq.read_table(demo / "positions.parquet").to_pydict()
+    part = sorted((demo / "measurements").rglob("*.parquet"))[-1]
+    rows = pq.read_table(part).to_pydict()
+    with iers.conf.set_temp("auto_download", False), iers.conf.set_temp("auto_max_age", None):
+        for row in range(0, len(rows["flux"]), 701):
+            frame, where = frames["id"].index(rows["frame"][row]), positions["id"].index(rows["position"][row])
+            site = EarthLocation.from_geocentric(*(frames[f"site_{a}"][frame] * u.m for a in "xyz"))
+            t = Time(2451545.0, frames["middle_tdb_s"][frame] / 86400, format="jd", scale="tdb", location=site)
+            sky = SkyCoord(positions["ra"][where] * u.deg, positions["dec"][where] * u.deg)
+            expected = frames["middle_tdb_s"][frame] + t.light_travel_time(sky, ephemeris="builtin").to_value("s")
+            assert abs(rows["t_tdb_s"][row] - expected) < 1e-6
+            assert abs(rows["bjd_tdb"][row] - (2451545.0 + expected / 86400)) < 1e-9
+
+
 def small(tmp_path, n_frames=24, **sky):
     """A small archive with a flare, a steady source and blanks; returns its folder."""
     flare = skies.Source("flare", 200.0, 0.0, lambda k, _d, _s: 20.0 if k == 7 else 0.0)
@@ -161,6 +183,20 @@ def test_same_bytes_for_any_number_of_workers(tmp_path):
         for name, data in expected.items():
             assert found[name] == data, name
     assert candidates(tmp_path / "one")["flare"]["standing"] == "single"
+
+
+def test_a_scheduler_that_exists_is_used(tmp_path):
+    """--scheduler gives the same bytes, file plugins travel to its workers, and a wrong address is one line."""
+    folder = small(tmp_path, n_frames=12)
+    plugin = tmp_path / "longest_run.py"
+    shutil.copy(STRANGER / "longest_run.py", plugin)
+    mine(*arguments(folder, tmp_path / "one"), "--plugin", plugin)
+    expected = contents(tmp_path / "one")
+    with LocalCluster(n_workers=1, threads_per_worker=1, dashboard_address="127.0.0.1:0", silence_logs=50) as cluster:
+        address = cluster.scheduler_address
+        mine(*arguments(folder, tmp_path / "two"), "--plugin", plugin, "--scheduler", address)
+    assert contents(tmp_path / "two") == expected
+    mine(*arguments(folder, tmp_path / "three"), "--scheduler", "tcp://127.0.0.1:9", status=2)
 
 
 def test_new_files_and_targets_extend_a_finished_run(tmp_path):

@@ -12,8 +12,7 @@ from hypothesis import strategies as st
 from hindlight import ASSUMPTIONS, Cards, FrameFacts, Moment, PlaneAxes
 from hindlight.headers import planes
 from hindlight_plugins.standard_headers import StandardHeaders
-from made import SITE, cards_of, header
-from test_headers import image
+from made import SITE, cards_of, header, image
 
 NO_TIMES = {"DATE__OBS": None, "EXPTIME": None, "TIMESYS": None}
 MARCH = 47237  # 1988-03-17, MJD

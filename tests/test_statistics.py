@@ -132,6 +132,7 @@ def test_brightest_sees_a_lone_flare_and_its_time():
     flux[123] += 8
     values = Brightest().compute(LightCurve.from_arrays(np.arange(300) * 60.0, flux, np.ones(300)))
     assert values["excess"] > 6
+    assert values["second"] < 4
     assert values["leave_one_out"] == pytest.approx(values["excess"], rel=0.05)
     assert values["time"] == 123 * 60.0
     assert values["p_trials"] < 1e-7

@@ -37,9 +37,11 @@ class Aperture(Estimator):
         """Flux and error; NaN where any pixel that the circle touches is."""
         half = stamps.pixels.shape[1] // 2
         weights = circle_overlap(self.radius(stamps.beam), stamps.dx, stamps.dy, half).reshape(len(stamps.dx), -1)
-        data = np.where(weights > 0, stamps.pixels.reshape(weights.shape), 0)
+        data = stamps.pixels.reshape(weights.shape)
+        if not np.isfinite(data).all():
+            data = np.where(weights > 0, data, 0)  # what the circle does not touch may be blank
         flux = (weights * data).sum(axis=1)
-        variance = stamps.rms**2 * (weights**2).sum(axis=1)
+        variance = stamps.rms**2 * (weights * weights).sum(axis=1)
         variance += (weights.sum(axis=1) * stamps.background_err) ** 2
         if np.isfinite(stamps.electrons_per_unit):
             variance += np.maximum(flux, 0) / stamps.electrons_per_unit

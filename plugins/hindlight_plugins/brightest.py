@@ -25,6 +25,8 @@ class Brightest(Statistic):
     columns = (
         Column("excess", "highest flux above the quiet level over the error of the difference", unusual="high",
                ucd="stat.snr;stat.max"),
+        Column("second", "second highest such excess: high for a source that brightens again, whatever one outlier does",
+               unusual="high", ucd="stat.snr"),
         Column("p_trials", "chance that Gaussian noise reaches it in as many samples; 0 where below 1e-308",
                ucd="stat.probability"),
         Column("snr", "highest flux over its error", unusual="high", about="presence", ucd="stat.snr;stat.max"),
@@ -41,6 +43,7 @@ class Brightest(Statistic):
         at = int(np.argmax(above))
         return {
             "excess": float(above[at]),
+            "second": float(np.partition(above, -2)[-2]),
             "p_trials": p_of_maximum(float(above[at]), len(curve), two_sided=curve.channel.signed),
             "snr": float(np.max(fold(curve.flux / curve.flux_err))),
             "time": float(curve.t_tdb_s[at]),

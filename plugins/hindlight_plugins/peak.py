@@ -54,9 +54,11 @@ class Peak(Estimator):
         inverse: Array = np.linalg.inv(noise + self.white_noise * np.eye(len(x))).astype(float)
         template = beam_at(stamps.beam, x - stamps.dx[:, None], y - stamps.dy[:, None])
         weights = apply(inverse, template)
-        weights /= (weights * template).sum(axis=1)[:, None]
+        norm = (weights * template).sum(axis=1)
+        weights /= norm[:, None]
         flux = (weights * data).sum(axis=1)
-        variance = stamps.rms**2 * (weights * apply(noise, weights)).sum(axis=1)
+        # w' R w without another product: R w = (C - white noise) w, C w = p / norm, and w' p = 1.
+        variance = stamps.rms**2 * (1 / norm - self.white_noise * (weights * weights).sum(axis=1))
         return flux, np.sqrt(variance + (weights.sum(axis=1) * stamps.background_err) ** 2)
 
 

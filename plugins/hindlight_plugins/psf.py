@@ -46,13 +46,13 @@ class Psf(Estimator):
         area = np.pi * beam.major * beam.minor / LOG16
         profile = np.exp(-LOG16 * ((along / beam.major) ** 2 + (across / beam.minor) ** 2)) / area
         data = stamps.pixels.reshape(len(stamps.dx), -1)[:, near]
-        total, square, cube = (profile**power for power in (1, 2, 3))
+        square = profile * profile
         square_sum = square.sum(axis=1)
-        flux = (total * data).sum(axis=1) / square_sum
-        variance = stamps.rms**2 / square_sum + (total.sum(axis=1) / square_sum * stamps.background_err) ** 2
+        flux = (profile * data).sum(axis=1) / square_sum
+        variance = stamps.rms**2 / square_sum + (profile.sum(axis=1) / square_sum * stamps.background_err) ** 2
         if np.isfinite(stamps.electrons_per_unit):
             photons = np.maximum(flux, 0) / stamps.electrons_per_unit
-            variance = variance + photons * cube.sum(axis=1) / square_sum**2
+            variance += photons * (square * profile).sum(axis=1) / square_sum**2
         return flux, np.sqrt(variance)
 
 

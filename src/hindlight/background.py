@@ -109,9 +109,9 @@ def local_background(pixels: Pixels, ix: IntArray, iy: IntArray, annulus: Annulu
             if pixels.quantum:
                 ring += _dither(len(annulus.index), pixels.quantum).astype(ring.dtype)
             level[part], rms[part], used[part] = median_and_mad(ring)
-            core[part] = np.fmax.reduce(flat[:, annulus.core], axis=1)
+            core[part] = np.fmax.reduce(np.take(flat, annulus.core, axis=1), axis=1)
             if len(annulus.around):
-                around[part] = np.fmax.reduce(flat[:, annulus.around], axis=1)
+                around[part] = np.fmax.reduce(np.take(flat, annulus.around, axis=1), axis=1)
     rms[(used < FEWEST_PIXELS) | (rms <= pixels.quantum / 2.0)] = np.nan
     return Background(level, rms * MAD_TO_SIGMA, used, core, around)
 

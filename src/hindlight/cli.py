@@ -33,6 +33,8 @@ Command = TypeVar("Command", bound=Callable[..., Any])
 def main() -> None:
     """Run the command line and leave with its exit status."""
     signal.signal(signal.SIGTERM, _terminate)
+    logging.captureWarnings(True)  # libraries' warnings go to the log, not between the user's lines
+    logging.getLogger("py.warnings").addHandler(logging.NullHandler())
     sys.exit(run_command(sys.argv[1:]))
 
 

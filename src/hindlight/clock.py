@@ -2,8 +2,8 @@
 
 Everything is seconds from J2000.0 TDB (JD 2451545.0 TDB) in float64, which resolves 0.1 microsecond over a century.
 Fundamental arguments, Earth and leap seconds come from ERFA and from the Earth-rotation table that astropy bundles;
-nothing is ever downloaded. Instants outside 1850 to 2150 are taken for none: no image is that old, and the built-in
-ephemeris holds for about that long.
+nothing is ever downloaded. Instants outside 1850 to 2150 are taken for none: no image is that old. The built-in
+ephemeris was fitted to 1900 to 2100.
 """
 
 from __future__ import annotations

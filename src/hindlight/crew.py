@@ -117,11 +117,14 @@ def _local(count: int) -> Iterator[Crew]:
         "distributed.worker.memory.target": False,
         "distributed.worker.memory.spill": False,
         "distributed.comm.timeouts.connect": "60s",
+        "distributed.scheduler.http.routes": [],  # nothing is served to a browser, which could not be kept out
+        "distributed.worker.http.routes": [],
     }
     with dask.config.set(config):
         security = Security.temporary()
         cluster = LocalCluster(
-            n_workers=count, threads_per_worker=1, processes=True, dashboard_address=None,
+            n_workers=count, threads_per_worker=1, processes=True,
+            dashboard_address="127.0.0.1:0", worker_dashboard_address="127.0.0.1:0",
             host="127.0.0.1", protocol="tls://", security=security, silence_logs=50,
         )  # fmt: skip
         try:
