@@ -13,6 +13,7 @@ from typing import Any, Protocol
 
 from hindlight.errors import StoppedError, UsageError
 
+SCHEDULER_TIMEOUT_S = 10
 AHEAD = 3  # jobs under way per worker
 # The memory allocator's defaults on dask's workers trim and map so eagerly that array loops run at a fraction of
 # their speed; one thread works per process, so one arena is enough.
@@ -139,7 +140,7 @@ def _existing(address: str) -> Iterator[Crew]:
     from distributed import Client
 
     try:
-        client = Client(address, timeout=20)
+        client = Client(address, timeout=SCHEDULER_TIMEOUT_S)
     except (OSError, ValueError, TimeoutError) as error:
         raise UsageError(f"scheduler {address}: cannot be reached ({error}); check the address") from None
     with client:

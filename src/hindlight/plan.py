@@ -153,6 +153,23 @@ def lost_frames(frames: Columns) -> list[dict[str, Any]]:
     return rows
 
 
+def persistent(parts: Sequence[BrightSources]) -> BrightSources:
+    """The sources that several frames of one channel agree on: seen in at least two of them, within a beam.
+
+    A peak of the noise is in one frame only; to keep controls away from it would leave them quieter than blank sky is.
+    With a single frame every source counts.
+    """
+    if len(parts) < 2:
+        return joined(parts)
+    kept = []
+    for index, part in enumerate(parts):
+        others = joined([*parts[:index], *parts[index + 1 :]])
+        places = BlankSky(unit_vectors(others.ra, others.dec), others.beam / 3600.0)
+        again = ~places.clear(unit_vectors(part.ra, part.dec))
+        kept.append(BrightSources(part.ra[again], part.dec[again], part.snr[again], part.beam[again]))
+    return joined(kept)
+
+
 def joined(parts: Sequence[BrightSources]) -> BrightSources:
     """The sources of several frames together."""
     names = ("ra", "dec", "snr", "beam")

@@ -195,7 +195,14 @@ def _bright_sources(
         session.watcher.step()
 
     session.crew.run(tasks.find_bright, [(session.order, int(frames["id"][row])) for row in wanted], done)
-    return {number: plan.joined([results[int(row)] for row in rows]) for number, rows in per_field.items()}
+    labels = frames["channel"]
+    return {
+        number: plan.joined([
+            plan.persistent([results[int(row)] for row in rows if labels[row] == label])
+            for label in sorted(set(labels[rows].tolist()))
+        ])
+        for number, rows in per_field.items()
+    }  # fmt: skip
 
 
 def _measure(session: Session, pieces: Sequence[store.Piece]) -> None:

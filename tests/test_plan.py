@@ -1,0 +1,104 @@
+"""What a run will do: frames pinned into batches, controls placed on blank sky."""
+
+import numpy as np
+import pytest
+
+from hindlight import plan
+from hindlight.errors import UsageError
+from hindlight.positions import BlankSky, Targets, separation_deg
+from hindlight.schema import FRAMES
+from hindlight.settings import Controls
+from hindlight.systems import unit_vectors
+
+
+def found(paths, archive="a", channel="c"):
+    """Frame columns for files as a walk gives them."""
+    n = len(paths)
+    columns = plan.empty(FRAMES)
+    rows = {}
+    for name, values in columns.items():
+        if name not in ("id", "batch", "state"):
+            rows[name] = np.zeros(n, values.dtype) if values.dtype != object else np.full(n, "", object)
+    rows["path"][:] = paths
+    rows["archive"][:] = archive
+    rows["channel"][:] = channel
+    return rows
+
+
+def keys(paths):
+    """What tells these files apart."""
+    return {("a", p) for p in paths}
+
+
+def test_batches_are_given_once_and_only_added_to():
+    """Five files in batches of two, then three more: the first batches stay as they were."""
+    first = plan.merge_frames(plan.empty(FRAMES), found(list("abcde")), keys("abcde"), 2)
+    assert first["batch"].tolist() == [0, 0, 1, 1, 2]
+    more = plan.merge_frames(first, found(list("fgh")), keys("abcdefgh"), 2)
+    assert more["batch"].tolist() == [0, 0, 1, 1, 2, 3, 3, 4]
+    assert more["id"].tolist() == list(range(8))
+
+
+def test_changed_and_vanished_files_are_marked():
+    """A changed file's old frames are void and its new ones added; a vanished one's are kept; one that is back counts."""
+    first = plan.merge_frames(plan.empty(FRAMES), found(list("abc")), keys("abc"), 2)
+    second = plan.merge_frames(first, found(["b"]), keys("ab"), 2)
+    assert second["state"].tolist() == ["current", "void", "vanished", "current"]
+    assert [row["reason"] for row in plan.lost_frames(second)] == ["changed", "vanished"]
+    third = plan.merge_frames(second, found([]), keys("abc"), 2)
+    assert third["state"].tolist() == ["current", "void", "current", "current"]
+
+
+def test_a_name_that_moved_is_refused():
+    """A target whose name is in the run at another place is refused, with both places."""
+    targets = Targets(("x",), np.array([10.0]), np.array([5.0]), {})
+    positions = plan.add_targets(plan.no_positions(), targets, np.array([0]), 1.0)
+    assert plan.new_targets(positions, targets).size == 0
+    with pytest.raises(UsageError, match="this run has it at 10"):
+        plan.new_targets(positions, Targets(("x",), np.array([10.1]), np.array([5.0]), {}))
+
+
+def sources(ra, snr=20.0):
+    """Bright sources on the equator at these right ascensions, beam 36 arcsec."""
+    ra = np.asarray(ra, float)
+    return plan.BrightSources(ra, np.zeros(len(ra)), np.full(len(ra), snr), np.full(len(ra), 36.0))
+
+
+def test_noise_peaks_are_no_sources():
+    """Only what two frames agree on within a beam is kept away from; with one frame everything is."""
+    kept = plan.persistent([sources([1.0, 2.0]), sources([1.002, 3.0]), sources([4.0])])
+    assert sorted(kept.ra.tolist()) == [1.0, 1.002]
+    assert len(plan.persistent([sources([1.0, 2.0])]).ra) == 2
+
+
+def test_brighter_sources_are_kept_further_away_from():
+    """The radius grows with S/N: a Gaussian of S/N 1000 is below a tenth of the noise only 1.8 beams out, and a beam more."""
+    near = sources([0.0], snr=5.0).blank_sky(0.0).radii[0]
+    far = sources([0.0], snr=1000.0).blank_sky(0.0).radii[0]
+    assert near < far
+    assert far == pytest.approx(0.01 * (np.sqrt(np.log2(1e4)) / 2 + 1))
+
+
+def test_controls_stand_clear_of_targets_sources_and_each_other():
+    """Every control keeps the spacing to targets and controls, its radius to sources, and lies in the frames."""
+    frames = found(["f"] * 12)
+    outline = "0.3 -0.3 0.3 0 0.3 0.3 0 0.3 359.7 0.3 359.7 0 359.7 -0.3 0 -0.3"  # corners and middles of sides
+    frames["footprint"][:] = outline
+    frames["centre_ra"][:] = 0.0
+    frames["radius"][:] = 0.43
+    table = plan.merge_frames(plan.empty(FRAMES), frames, keys("f"), 4)
+    targets = Targets(("x", "y"), np.array([0.05, 359.9]), np.array([0.0, 0.1]), {})
+    positions = plan.add_targets(plan.no_positions(), targets, np.arange(2), 30.0)
+    within = plan.field_frames(table, unit_vectors(targets.ra, targets.dec))
+    assert len(within.rows) == 12
+    bright = sources([0.1])
+    number = int(positions["field"][0])
+    got = plan.add_controls(positions, number, 0, table, within, 0.03, bright, Controls(per_field=60))
+    control = got["kind"] == "control"
+    assert 40 <= control.sum() <= 60
+    vectors = unit_vectors(got["ra"][control], got["dec"][control])
+    apart = separation_deg(vectors, vectors) + np.eye(len(vectors))
+    assert apart.min() > 0.0299
+    assert separation_deg(vectors, unit_vectors(targets.ra, targets.dec)).min() > 0.0299
+    assert bright.blank_sky(0.015).clear(vectors).all()
+    assert BlankSky(unit_vectors(np.zeros(1), np.zeros(1)), np.array([0.45])).clear(vectors).sum() == 0
