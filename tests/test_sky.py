@@ -246,6 +246,20 @@ def test_celestial_axes_need_not_come_first() -> None:
     np.testing.assert_allclose(np.ravel(ours.icrs_to_pixel(np.array([30.1]), np.array([40.1]))), want, atol=1e-6)
 
 
+@pytest.mark.parametrize("code", ["CAR", "TAN-SIP"])
+def test_tile_compressed_headers(tmp_path: Path, code: str) -> None:
+    """The header of the table that holds a compressed image gives the image's projection and size."""
+    head = sip_header() if code == "TAN-SIP" else header(CTYPE1="RA---CAR", CTYPE2="DEC--CAR", CRVAL2=0.0)
+    path = tmp_path / "a.fits.fz"
+    image = fits.CompImageHDU(np.zeros((80, 90), np.float32), head)
+    fits.HDUList([fits.PrimaryHDU(), image]).writeto(path)
+    with fits.open(path, disable_image_compression=True) as hdus:
+        ours = projection(cards(hdus[1].header))
+    assert ours.size == (90, 80)
+    want = full(image.header).all_pix2world([[3.0, 70.0]], 0)
+    np.testing.assert_allclose(np.column_stack(ours.pixel_to_icrs(np.array([3.0]), np.array([70.0]))), want, atol=1e-9)
+
+
 @pytest.mark.parametrize(
     ("changes", "error", "words"),
     [
@@ -266,6 +280,7 @@ def test_celestial_axes_need_not_come_first() -> None:
         ({"CRVAL2": 95.0}, BadWcsError, "wcslib"),
         ({"CTYPE1": "RA---TAB", "CTYPE2": "DEC--TAB"}, BadWcsError, "TAB"),
         ({"RADESYS": "GAPPT"}, BadWcsError, "apparent"),
+        ({"CTYPE1": "RA---TPV", "CTYPE2": "DEC--TPV", "PV1_1": 1.0, "PV2_1": 1.0}, BadWcsError, "TPV needs a CD"),
     ],
 )
 def test_refusals(changes: dict, error: type[ValueError], words: str) -> None:

@@ -198,8 +198,8 @@ def _scaled(stored: NDArray[Any], hdu: Hdu) -> Pixels:
     if stored.dtype.kind == "f":
         middle = stored[stored.shape[0] // 2, :SAMPLE]
         finite = middle[np.isfinite(middle)]
-        whole = bool((finite == np.rint(finite)).all()) and len(np.unique(finite)) > 2 and not hdu.compressed
-        quantum = abs(hdu.bscale) if whole else 0.0
+        counts = bool((finite == np.rint(finite)).all()) and len(np.unique(finite)) > 2
+        quantum = quantum if counts and not hdu.compressed else 0.0
     return Pixels(stored, hdu.bscale, hdu.bzero, hdu.blank, quantum)
 
 

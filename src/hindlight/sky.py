@@ -20,21 +20,20 @@ import numpy as np
 from astropy.io import fits
 from astropy.wcs import WCS, NoConvergence, WcsError, Wcsprm
 
+from hindlight.celestial import Celestial, find_celestial, two_axes
 from hindlight.facts import NAN, Cards
 from hindlight.lightcurve import FloatArray
 from hindlight.plugin import BeamShape
-from hindlight.systems import BadWcsError, NoCelestialError, System, from_icrs, system_of, to_icrs, unit_vectors
+from hindlight.systems import BadWcsError, NoCelestialError, System, from_icrs, to_icrs, unit_vectors
+
+__all__ = ["BadWcsError", "NoCelestialError", "Projection", "System", "beam_shape", "projection"]
 
 LEAN_CODES = {"SIN", "TAN", "ARC", "ZEA", "STG", "CAR", "CEA", "MER", "SFL", "AIT", "MOL", "NCP", "GLS"}
-ZENITHAL_CODES = {"SIN", "TAN", "ARC", "ZEA", "STG", "NCP", "TPV", "ZPN", "AZP", "SZP", "TNX", "ZPX", "DSS"}
 TURNING_CODES = {"CAR", "CEA", "MER"}  # 360 degrees of native longitude are one constant step of pixels
-LONGITUDES = {"RA": "DEC", "GLON": "GLAT"}
-REFUSED_LONGITUDES = {"ELON": "ecliptic", "HLON": "heliographic", "SLON": "supergalactic"}
-MAX_AXES = 9
 ROUND_TRIP_PIXELS = 0.01  # an inverted distortion that comes back further off than this has not converged
 
 _PLAIN = re.compile(
-    r"(CTYPE|CRPIX|CRVAL|CDELT|CROTA|CUNIT|NAXIS)\d|(PC|CD|PV)\d_\d+|LONPOLE|LATPOLE|RADEC?SYS|EQUINOX|EPOCH"
+    r"(CTYPE|CRPIX|CRVAL|CDELT|CROTA|CUNIT|Z?NAXIS)\d|(PC|CD|PV)\d_\d+|LONPOLE|LATPOLE|RADEC?SYS|EQUINOX|EPOCH|ZIMAGE"
 )
 _ODD = re.compile(r"[AB]P?_ORDER|(CPDIS|CQDIS|DP|DQ)\d|D2IM.*|WAT\d_\d+|(PC|CD)\d{6}|PS\d_\d+|AMDX.*|PLTRAH")
 _TABLE = re.compile(r"(CPDIS|CQDIS|D2IMDIS)\d")
@@ -60,8 +59,7 @@ class Projection:
     size
         Pixels along x and y, 0 where the cards do not say.
     reference
-        The 0-based pixel to which scale and beam refer: CRPIX for zenithal projections, where the plane is that of
-        the aperture; the middle of the image for others.
+        The 0-based pixel to which scale and beam refer, see `Celestial`.
     """
 
     axes: tuple[int, int]
@@ -156,28 +154,16 @@ def _kind(key: str) -> str:
     return "odd" if _ODD.fullmatch(key) else ""
 
 
-@dataclass(frozen=True)
-class _Celestial:
-    """What both ways need to know of a header: the pair of axes and what they are called."""
-
-    axes: tuple[int, int]
-    code: str
-    suffix: str
-    swapped: bool
-    system: System
-    assumed: bool
-
-
 @lru_cache(maxsize=256)
 def _lean(key: str) -> Projection | None:
     """The projection through wcslib on the celestial cards; None where they need the full WCS."""
     cards = Cards(key.encode("latin-1"))
-    found = _celestial(cards)
+    found = find_celestial(cards)
     odd_unit = any(cards.text(f"CUNIT{i}") not in ("", "deg") for i in found.axes)
     has_pv = any(k[:2] == "PV" for k in cards)
     if found.code not in LEAN_CODES or found.suffix or odd_unit or (found.code == "TAN" and has_pv):
         return None
-    text = _two_axes(cards, found.axes)
+    text = two_axes(cards, found.axes)
     with _as_bad_wcs():
         prm = Wcsprm(header=text.encode("latin-1"), relax=True)
         prm.fix()  # NCP and GLS become SIN and SFL
@@ -186,14 +172,14 @@ def _lean(key: str) -> Projection | None:
         if found.code in TURNING_CODES:
             turn = _turn(prm, found.swapped)
             prm.bounds_check(False, True)  # else pixels over 180 degrees from the reference value have no sky
-    return _finished(cards, found, _WcslibEngine(prm, turn, _reference(cards, found)))
+    return _finished(found, _WcslibEngine(prm, turn, found.reference))
 
 
 @lru_cache(maxsize=64)
 def _full(raw: bytes, path: str) -> Projection:
     """The projection through `astropy.wcs.WCS` with every distortion it knows."""
     cards = Cards(raw)
-    found = _celestial(cards)
+    found = find_celestial(cards)
     if found.code == "TAB":
         raise BadWcsError(f"CTYPE{found.axes[0]} is a table of coordinates (-TAB), which is not supported")
     tables = _has_tables(cards)
@@ -210,90 +196,21 @@ def _full(raw: bytes, path: str) -> Projection:
                 header[f"CTYPE{i}"] = cards.text(f"CTYPE{i}") + "-SIP"
         wcs = WCS(header, fobj=hdus).celestial
         wcs.wcs.set()
+    if found.code == "TPV" and not any(key.startswith("CD") for key in cards if key[2:3].isdigit()):
+        # wcslib would apply the polynomial before CDELT, where nobody means it.
+        raise BadWcsError("TPV needs a CD matrix, and there is none")
     if wcs.naxis != 2:
         raise BadWcsError("the two celestial axes cannot be separated from the others")
-    return _finished(cards, found, _AstropyEngine(wcs))
-
-
-def _celestial(cards: Cards) -> _Celestial:
-    """The pair of celestial axes, checked: one longitude, its latitude, one projection, reference values and scale."""
-    types = {i: cards.text(f"CTYPE{i}") for i in range(1, MAX_AXES + 1)}
-    names = {i: text[:4].rstrip("-") if text[4:5] in ("", "-") else text for i, text in types.items()}
-    for i, name in names.items():
-        if name in REFUSED_LONGITUDES:
-            raise BadWcsError(f"CTYPE{i} is {types[i]!r}: {REFUSED_LONGITUDES[name]} coordinates are not supported")
-    lon = [i for i, name in names.items() if name in LONGITUDES and types[i][4:5] == "-"]
-    lat = [i for i, name in names.items() if name in LONGITUDES.values() and types[i][4:5] == "-"]
-    if len(lon) != 1 or len(lat) != 1:
-        shown = ", ".join(repr(text) for text in types.values() if text) or "no CTYPE"
-        raise NoCelestialError(f"no pair of projected celestial axes such as RA---SIN and DEC--SIN: {shown}")
-    i, j = lon[0], lat[0]
-    code, suffix = types[i][5:8], types[i][8:]
-    if LONGITUDES[names[i]] != names[j] or types[j][5:8] != code:
-        raise BadWcsError(f"CTYPE{i} is {types[i]!r} but CTYPE{j} is {types[j]!r}: they are no pair")
-    axes = (min(i, j), max(i, j))
-    _check_numbers(cards, axes)
-    system, assumed = (System("galactic"), False) if names[i] == "GLON" else system_of(cards)
-    return _Celestial(axes, code, suffix, i > j, system, assumed)
-
-
-def _check_numbers(cards: Cards, axes: tuple[int, int]) -> None:
-    """Refuse what FITS lets default in silence (a reference value of 0, a scale of 1 degree) and cannot be meant."""
-    for i in axes:
-        for stem in ("CRVAL", "CRPIX"):
-            if not math.isfinite(cards.number(f"{stem}{i}")):
-                raise BadWcsError(f"{stem}{i} is missing or no number")
-    matrix = [key for key in cards if re.fullmatch(r"(PC|CD)\d_\d", key)]
-    other = [k for k in matrix if (int(k[2]) in axes) != (int(k[4]) in axes) and cards.number(k) != 0.0]
-    if other:
-        raise BadWcsError(f"{other[0]} mixes a celestial axis with another one")
-    if not any(key[:2] == "CD" for key in matrix):
-        for i in axes:
-            scale = cards.number(f"CDELT{i}")
-            if scale == 0.0 or not (math.isfinite(scale) or any(k[:3] == f"PC{i}" for k in matrix)):
-                raise BadWcsError(
-                    f"CDELT{i} is {'zero' if scale == 0.0 else 'missing or no number'}, without a CD matrix"
-                )
-
-
-def _two_axes(cards: Cards, axes: tuple[int, int]) -> str:
-    """The celestial cards with their axes renumbered 1 and 2; what belongs to other axes is left out."""
-    number = {str(axes[0]): "1", str(axes[1]): "2"}
-    out = []
-    for key in cards:
-        text = cards.card(key)
-        match = re.fullmatch(r"(CTYPE|CRPIX|CRVAL|CDELT|CROTA|CUNIT|PV|PC|CD)(\d)(_(\d+))?", key)
-        if match is None:
-            out += [text] if key in ("LONPOLE", "LATPOLE") else []
-            continue
-        stem, first, _, second = match.groups()
-        if first not in number or (stem in ("PC", "CD") and second not in number):
-            continue
-        tail = "" if second is None else "_" + (number[second] if stem in ("PC", "CD") else second)
-        out.append(f"{stem}{number[first]}{tail}".ljust(8) + text[8:])
-    return "".join(out)
-
-
-def _size(cards: Cards, found: _Celestial) -> tuple[int, int]:
-    return cards.integer(f"NAXIS{found.axes[0]}"), cards.integer(f"NAXIS{found.axes[1]}")
+    return _finished(found, _AstropyEngine(wcs))
 
 
 def _has_tables(cards: Cards) -> bool:
     return any(_TABLE.fullmatch(key) for key in cards)
 
 
-def _reference(cards: Cards, found: _Celestial) -> tuple[float, float]:
-    """See `Projection`."""
-    width, height = _size(cards, found)
-    if found.code not in ZENITHAL_CODES and min(width, height) > 0:
-        return (width - 1) / 2.0, (height - 1) / 2.0
-    return cards.number(f"CRPIX{found.axes[0]}") - 1.0, cards.number(f"CRPIX{found.axes[1]}") - 1.0
-
-
-def _finished(cards: Cards, found: _Celestial, engine: _Engine) -> Projection:
+def _finished(found: Celestial, engine: _Engine) -> Projection:
     """The projection, if its scale is finite and positive at the reference pixel."""
-    size, reference = _size(cards, found), _reference(cards, found)
-    result = Projection(found.axes, found.system, found.assumed, size, reference, engine, found.swapped)
+    result = Projection(found.axes, found.system, found.assumed, found.size, found.reference, engine, found.swapped)
     scale = result.pixel_scale_arcsec
     if not (math.isfinite(scale) and scale > 0.0):
         raise BadWcsError("the projection is undefined or singular at the image's reference pixel")

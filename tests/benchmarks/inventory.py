@@ -21,7 +21,7 @@ import numpy as np
 from astropy.io import fits
 from astropy.wcs import WCS
 
-from hindlight import archive, clock, sky
+from hindlight import archive, clock
 from hindlight.facts import parse_value
 from hindlight.outlines import outline
 from hindlight.settings import Settings
@@ -98,7 +98,7 @@ def plain_way(paths: list[Path]) -> list[tuple[str, float, float]]:
 
 def forget() -> None:
     """Empty the caches, so that every round reads each file as if for the first time."""
-    for cached in (parse_value, outline, sky._lean, sky._full):
+    for cached in (parse_value, outline):
         cached.cache_clear()
 
 
