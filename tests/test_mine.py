@@ -239,6 +239,10 @@ def test_changed_plugins_only_judge_again(tmp_path):
     table = Table.read(run / "candidates.ecsv")
     assert "longest_run_length" in table.colnames
     assert "stetson_j" not in table.colnames
+    mine(*arguments(folder, run)[:-2])
+    table = Table.read(run / "candidates.ecsv")
+    assert "longest_run_length" not in table.colnames
+    assert "stetson_j" in table.colnames
     assert before == {p: p.stat().st_mtime_ns for p in (run / "measurements").rglob("*.parquet")}
 
 

@@ -252,9 +252,10 @@ def test_every_way_of_storing_gives_the_same_fluxes(tmp_path: Path) -> None:
             assert got[name].tobytes() == want[name].tobytes(), name
 
 
-def test_beam_from_the_frame(tmp_path: Path) -> None:
+@pytest.mark.parametrize("seed", [3, 4, 5, 6])
+def test_beam_from_the_frame(tmp_path: Path, seed: int) -> None:
     """An elliptical beam lies in the pixels as the frame's rotation says; an unknown one is assumed round."""
-    frame, wcs = random_frame(tmp_path / "a.fits", 3, fwhm=6.0)
+    frame, wcs = random_frame(tmp_path / "a.fits", seed, fwhm=6.0)
     ra, dec = wcs.all_pix2world([100.0], [90.0], 0)
     # A source that is the beam itself: peak reading gives its peak only if shape and angle are right.
     long = dataclasses.replace(frame, beam_minor=frame.beam_major / 2, beam_angle=35.0, unit="Jy/beam")

@@ -58,7 +58,8 @@ def circle_overlap(radius: float, x: Array, y: Array, half: int) -> Array:
     full = np.pi * square
     edges = np.arange(-half - 0.5, half + 1.0)[:, None]
     # Positions come last while corners are worked out: inner loops are then long, and fast.
-    a, b = np.clip(edges - x, -radius, radius)[None, :, :], np.clip(edges - y, -radius, radius)[:, None, :]
+    a, b = (np.minimum(np.maximum(edges - c, -radius), radius) for c in (x, y))
+    a, b = a[None, :, :], b[:, None, :]
     sector_a, chord_a = square * np.arccos(a / radius), a * np.sqrt(square - a * a)
     sector_b, chord_b = square * np.arccos(b / radius), b * np.sqrt(square - b * b)
     left_of_a, below_b = full - sector_a + chord_a, full - sector_b + chord_b

@@ -25,7 +25,6 @@ FEWEST_PIXELS = 20
 GOLDEN_RATIO = 0.6180339887498949  # its multiples spread most evenly (H. Weyl 1916)
 KEPT_BYTES = 24 << 20  # the C library heeds blocks up to 32 MiB
 TOLERANCE = 1e-6  # of radii: pixels at a whole number of FWHM must not hang on the last digits of the beam
-CHUNK = 64  # positions at a time: their stamps stay in the processor's cache
 
 
 @dataclass(frozen=True, eq=False)
@@ -95,25 +94,20 @@ def keep_freed_memory() -> None:
 
 
 def local_background(pixels: Pixels, ix: IntArray, iy: IntArray, annulus: Annulus) -> Background:
-    """Background and noise around pixels (ix, iy), shape (n,)."""
-    n = len(ix)
+    """Background and noise around pixels (ix, iy), shape (n,); a few hundred at a time stay in the processor's cache."""
     keep_freed_memory()
-    level, rms, core, around = (np.full(n, np.nan) for _ in range(4))
-    used = np.empty(n, np.int64)
+    stamps = pixels.stamps(ix, iy, annulus.half, annulus.step).reshape(len(ix), -1)
+    ring = np.take(stamps, annulus.index, axis=1, mode="clip")
+    if pixels.quantum:
+        ring += _dither(len(annulus.index), pixels.quantum).astype(ring.dtype)
     with np.errstate(invalid="ignore", over="ignore"):  # infinite pixels may make NaN, never a warning
-        for start in range(0, n, CHUNK):
-            part = slice(start, start + CHUNK)
-            stamps = pixels.stamps(ix[part], iy[part], annulus.half, annulus.step)
-            flat = stamps.reshape(len(stamps), -1)
-            ring = np.take(flat, annulus.index, axis=1, mode="clip")
-            if pixels.quantum:
-                ring += _dither(len(annulus.index), pixels.quantum).astype(ring.dtype)
-            level[part], rms[part], used[part] = median_and_mad(ring)
-            core[part] = np.fmax.reduce(np.take(flat, annulus.core, axis=1), axis=1)
-            if len(annulus.around):
-                around[part] = np.fmax.reduce(np.take(flat, annulus.around, axis=1), axis=1)
-    rms[(used < FEWEST_PIXELS) | (rms <= pixels.quantum / 2.0)] = np.nan
-    return Background(level, rms * MAD_TO_SIGMA, used, core, around)
+        level, spread, used = median_and_mad(ring)
+    core = np.fmax.reduce(np.take(stamps, annulus.core, axis=1), axis=1)
+    around = np.full(len(ix), np.nan)
+    if len(annulus.around):
+        around = np.fmax.reduce(np.take(stamps, annulus.around, axis=1), axis=1)
+    spread[(used < FEWEST_PIXELS) | (spread <= pixels.quantum / 2.0)] = np.nan
+    return Background(level, spread * MAD_TO_SIGMA, used, core, around)
 
 
 def _dither(n: int, quantum: float) -> FloatArray:

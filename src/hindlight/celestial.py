@@ -15,7 +15,10 @@ from hindlight.systems import BadWcsError, NoCelestialError, System, system_of
 ZENITHAL_CODES = {"SIN", "TAN", "ARC", "ZEA", "STG", "NCP", "TPV", "ZPN", "AZP", "SZP", "TNX", "ZPX", "DSS"}
 LONGITUDES = {"RA": "DEC", "GLON": "GLAT"}
 REFUSED_LONGITUDES = {"ELON": "ecliptic", "HLON": "heliographic", "SLON": "supergalactic"}
-MAX_AXES = 9
+CTYPES = {i: f"CTYPE{i}" for i in range(1, 10)}
+
+_MATRIX = re.compile(r"(PC|CD)\d_\d")
+_OF_AXES = re.compile(r"(CTYPE|CRPIX|CRVAL|CDELT|CROTA|CUNIT|PV|PC|CD)(\d)(_(\d+))?")
 
 
 @dataclass(frozen=True)
@@ -50,7 +53,7 @@ def find_celestial(cards: Cards) -> Celestial:
 
     Raises `NoCelestialError` or `BadWcsError` with a sentence.
     """
-    types = {i: cards.text(f"CTYPE{i}") for i in range(1, MAX_AXES + 1)}
+    types = {i: cards.text(key) for i, key in CTYPES.items() if key in cards}
     names = {i: text[:4].rstrip("-") if text[4:5] in ("", "-") else text for i, text in types.items()}
     for i, name in names.items():
         if name in REFUSED_LONGITUDES:
@@ -77,7 +80,7 @@ def _check_numbers(cards: Cards, axes: tuple[int, int]) -> None:
         for stem in ("CRVAL", "CRPIX"):
             if not math.isfinite(cards.number(f"{stem}{i}")):
                 raise BadWcsError(f"{stem}{i} is missing or no number")
-    matrix = [key for key in cards if re.fullmatch(r"(PC|CD)\d_\d", key)]
+    matrix = [key for key in cards if _MATRIX.fullmatch(key)]
     other = [k for k in matrix if (int(k[2]) in axes) != (int(k[4]) in axes) and cards.number(k) != 0.0]
     if other:
         raise BadWcsError(f"{other[0]} mixes a celestial axis with another one")
@@ -96,7 +99,7 @@ def two_axes(cards: Cards, axes: tuple[int, int]) -> str:
     out = []
     for key in cards:
         text = cards.card(key)
-        match = re.fullmatch(r"(CTYPE|CRPIX|CRVAL|CDELT|CROTA|CUNIT|PV|PC|CD)(\d)(_(\d+))?", key)
+        match = _OF_AXES.fullmatch(key)
         if match is None:
             out += [text] if key in ("LONPOLE", "LATPOLE") else []
             continue

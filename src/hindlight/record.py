@@ -5,7 +5,7 @@ from __future__ import annotations
 import platform
 import tomllib
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -41,10 +41,16 @@ class Request:
 
 
 def settings_in_force(run: RunFolder, request: Request) -> Settings:
-    """The settings given, else those of the run, else the defaults."""
-    if request.settings is None and run.has("settings.toml"):
-        return settings.read_settings(run.file("settings.toml"))
-    return settings.read_settings(request.settings)
+    """The settings given, else those of the run, else the defaults.
+
+    A run's own settings may speak of plugins that are not asked for now; those tables are left out.
+    """
+    if request.settings is not None or not run.has("settings.toml"):
+        return settings.read_settings(request.settings)
+    recorded = settings.read_settings(run.file("settings.toml"))
+    loaded = host.load(host.spec_from(Settings(), request.plugins, request.without)).loaded
+    names = {entry.plugin.name for entry in loaded}
+    return replace(recorded, plugin={name: table for name, table in recorded.plugin.items() if name in names})
 
 
 def text_of(request: Request, chosen: Settings, plugins: host.Plugins, field_size_deg: float) -> str:

@@ -24,7 +24,7 @@ from hindlight.celestial import Celestial, find_celestial, two_axes
 from hindlight.facts import NAN, Cards
 from hindlight.lightcurve import FloatArray
 from hindlight.plugin import BeamShape
-from hindlight.systems import BadWcsError, NoCelestialError, System, from_icrs, to_icrs, unit_vectors
+from hindlight.systems import BadWcsError, NoCelestialError, System, from_icrs, to_icrs
 
 __all__ = ["BadWcsError", "NoCelestialError", "Projection", "System", "beam_shape", "projection"]
 
@@ -301,11 +301,14 @@ class _AstropyEngine:
 
 
 def _tangent_map(lon: FloatArray, lat: FloatArray) -> FloatArray:
-    """The (east, north) arcsec per pixel from the sky at `_FIVE_POINTS`."""
-    vectors = unit_vectors(lon, lat)
-    lon0, lat0 = math.radians(lon[4]), math.radians(lat[4])
-    east = np.array([-math.sin(lon0), math.cos(lon0), 0.0])
-    north = np.array([-math.sin(lat0) * math.cos(lon0), -math.sin(lat0) * math.sin(lon0), math.cos(lat0)])
-    steps = np.stack((vectors[0] - vectors[1], vectors[2] - vectors[3]), axis=1)
-    scaled: FloatArray = np.degrees(np.stack((east, north)) @ steps) * 3600.0
-    return scaled
+    """The (east, north) arcsec per pixel from the sky at `_FIVE_POINTS`; in plain numbers, which is fast for so few."""
+    points = []
+    for a, d in zip(np.radians(lon).tolist(), np.radians(lat).tolist(), strict=True):
+        points.append((math.cos(d) * math.cos(a), math.cos(d) * math.sin(a), math.sin(d)))
+    a, d = math.radians(lon[4]), math.radians(lat[4])
+    east = (-math.sin(a), math.cos(a), 0.0)
+    north = (-math.sin(d) * math.cos(a), -math.sin(d) * math.sin(a), math.cos(d))
+    right, left, up, down, _ = points
+    steps = [[p - m for p, m in zip(*pair, strict=True)] for pair in ((right, left), (up, down))]
+    rows = [[sum(c * s for c, s in zip(axis, step, strict=True)) for step in steps] for axis in (east, north)]
+    return np.array(rows) * (180.0 / math.pi * 3600.0)
