@@ -49,8 +49,8 @@ def test_a_file_plugin_is_loaded_with_its_settings():
 @pytest.mark.parametrize(
     ("text", "words"),
     [
-        ("import nothing_of_this_name\n", "does not import: ModuleNotFoundError"),
-        ("def broken(:\n", "does not import: SyntaxError.*line 1"),
+        ("import nothing_of_this_name\n", "fails: ModuleNotFoundError"),
+        ("def broken(:\n", "fails: SyntaxError.*line 1"),
         (START + "@hookimpl\ndef register_statistic():\n    return []\n", "register_statistic.*the hooks are"),
         (statistic("    t: float = setting(1.0, 'x')", decorator=""), r"put @dataclass\(frozen=True\) above class Mine"),
         (statistic("    t: float = setting(1.0, 'x')", decorator="@dataclass"), "frozen"),

@@ -309,20 +309,28 @@ class Scribbler(Statistic):
         return {"a": 1.0}
 
 
+@dataclass(frozen=True)
+class Quitter(Statistic):
+    columns = (Column("a", "doc", unusual="high"),)
+
+    def compute(self, curve):
+        raise SystemExit
+
+
 @hookimpl
 def register_statistics():
-    return [Raiser, Misnamer, Scribbler]
+    return [Raiser, Misnamer, Scribbler, Quitter]
 '''
 
 
 @pytest.mark.parametrize("workers", [1, 2])
 def test_bad_plugins_are_fenced(tmp_path, workers):
-    """One that raises, one that misnames a column and one that writes into its input: status 0, and each is named."""
+    """One that raises, one that misnames a column, one that writes into its input, one that quits: each is named."""
     folder = small(tmp_path)
     (tmp_path / "bad.py").write_text(BAD_PLUGINS, encoding="utf-8")
     mine(*arguments(folder, tmp_path / "run"), "--plugin", tmp_path / "bad.py", "--workers", workers)
     faults = {str(row["plugin"]): row for row in Table.read(tmp_path / "run" / "plugin_faults.ecsv")}
-    assert set(faults) == {"raiser", "misnamer", "scribbler"}
+    assert set(faults) == {"raiser", "misnamer", "scribbler", "quitter"}
     assert str(faults["raiser"]["fault"]) == "RuntimeError"
     assert str(faults["raiser"]["line"]) == "bad.py:11"
     assert "undeclared 'b'" in str(faults["misnamer"]["detail"])
@@ -330,6 +338,62 @@ def test_bad_plugins_are_fenced(tmp_path, workers):
     mine(*arguments(folder, tmp_path / "plain"))
     good, plain = candidates(tmp_path / "run"), candidates(tmp_path / "plain")
     assert {n: r["p_value"] for n, r in good.items()} == {n: r["p_value"] for n, r in plain.items()}
+
+
+def test_without_controls_nothing_is_said_of_variation(tmp_path, capsys):
+    """A flare without a single control to rank it against is undecided, and the last lines say so."""
+    folder = small(tmp_path)
+    (folder / "s.toml").write_text("[controls]\nper_field = 0\n", encoding="utf-8")
+    assert cli.run_command(["mine", *map(str, arguments(folder, tmp_path / "run"))]) == 0
+    assert {str(row["standing"]) for row in candidates(tmp_path / "run").values()} == {"undecided"}
+    assert "have no control and so no p-value" in capsys.readouterr().out
+
+
+def test_errors_that_are_not_the_scatter_are_said(tmp_path, capsys):
+    """Correlated noise under an estimator for white noise: the stated errors are too small, and the run says by how much."""
+    look = skies.Sky(n_frames=12, size=110, unit="adu", noise="beam")
+    skies.write_sky(tmp_path / "frames", look, [], seed=4)
+    (tmp_path / "targets.csv").write_text(skies.target_text(skies.lattice(4, 250), look), encoding="utf-8")
+    command = ["mine", tmp_path / "frames", "--targets", tmp_path / "targets.csv", "--out", tmp_path / "run"]
+    assert cli.run_command([str(a) for a in command]) == 0
+    assert "are not the scatter of blank sky" in capsys.readouterr().out
+
+
+def test_a_damaged_part_is_named_and_made_anew(tmp_path, capsys):
+    """A flipped byte in a part is found by its checksum and named; deleted, the same command gives the same table."""
+    folder = small(tmp_path)
+    run = tmp_path / "run"
+    mine(*arguments(folder, run))
+    before = (run / "candidates.ecsv").read_bytes()
+    part = sorted((run / "measurements").rglob("*.parquet"))[1]
+    data = bytearray(part.read_bytes())
+    data[len(data) // 3] ^= 0x10
+    part.write_bytes(data)
+    mine(*arguments(folder, run), status=2)
+    assert f"{part.name}: is damaged" in capsys.readouterr().err
+    part.unlink()
+    mine(*arguments(folder, run))
+    assert (run / "candidates.ecsv").read_bytes() == before
+
+
+def test_the_run_folder_is_no_part_of_the_archive(tmp_path):
+    """A run inside its own archive does not find its own tables."""
+    folder = small(tmp_path)
+    run = folder / "frames" / "run"
+    for _ in range(2):
+        mine(*arguments(folder, run))
+        assert len(Table.read(run / "rejects.ecsv")) == 0
+
+
+def test_names_with_markup_and_mended_target_lists(tmp_path, capsys):
+    """Names that look like terminal markup are printed as they are; a list in hours is refused and can be mended."""
+    folder = small(tmp_path)
+    (folder / "targets.csv").write_text("name,ra,dec\n[/x],10.0,-30.0\n", encoding="utf-8")
+    mine(*arguments(folder, tmp_path / "run"), status=3)
+    assert "degrees are wanted, not hours" in capsys.readouterr().err
+    (folder / "targets.csv").write_text("name,ra,dec\n[/x],150.0,-30.0\n", encoding="utf-8")
+    assert cli.run_command(["mine", *map(str, arguments(folder, tmp_path / "run"))]) == 0
+    assert "[/x]" in capsys.readouterr().out
 
 
 def test_a_steady_source_at_two_frequencies_and_in_circular_polarisation_is_steady(tmp_path):

@@ -56,12 +56,22 @@ def test_radians_and_hours_are_converted(tmp_path):
         ("name,ra,dec\nx,1,2\ny,,4\n", "row 2, column 'ra'"),
         ("name,ra,dec\nx,twelve,4\n", "'twelve' is no angle"),
         ("name,ra,dec\n", "no rows"),
+        ("name,ra,dec,period\nx,1,2,-3\n", "row 1, column 'period': -3 is out of range"),
+        ("name,ra,dec,epoch\nx,1,2,52000\n", "column 'epoch': 52000 is out of range"),
+        ("name,ra,dec,ref_epoch\nx,1,2,51544\n", "column 'ref_epoch'"),
     ],
 )
 def test_mistakes_name_row_and_column(tmp_path, text, words):
     """What is wrong with a target list is said with row and column."""
     with pytest.raises(UsageError, match=words):
         positions.read_targets(write(tmp_path / "t.csv", text))
+
+
+def test_names_are_text_whatever_they_look_like(tmp_path):
+    """A byte-order mark is no part of a column's name, and 002 and 1e5 are names."""
+    path = tmp_path / "t.csv"
+    path.write_bytes("name,ra,dec\n002,1,2\n1e5,3,4\n".encode("utf-8-sig"))
+    assert positions.read_targets(path).names == ("002", "1e5")
 
 
 def test_a_wrong_unit_is_refused(tmp_path):

@@ -71,14 +71,16 @@ def walk(
     settings: Settings,
     known: Mapping[str, Any] | None = None,
     progress: Callable[[int], None] | None = None,
+    skip: Sequence[str] = (),
 ) -> WalkResult:
     """Every frame of some archive folders that is not among the `known` frames, read from headers alone.
 
     `known` are columns of frames found before; their files are not read again while size and time are the same.
-    `progress` is called with a number of files now and then. Raises `UsageError` if an archive is no folder.
+    `progress` is called with a number of files now and then; folders in `skip`, as that of a run, are not entered.
+    Raises `UsageError` if an archive is no folder.
     """
     before = _known_files(known or {})
-    visited: set[tuple[int, int]] = set()
+    visited = {(place.st_dev, place.st_ino) for folder in skip if (place := _place(folder)) is not None}
     files = [(archive, entry) for archive in archives for entry in list_files(archive, visited)]
     present = {(archive, entry.path) for archive, entry in files}
     new = [f for f in files if before.get((f[0], f[1].path)) != (f[1].size, f[1].modified_ns)]
@@ -93,9 +95,16 @@ def walk(
             _read_file(archive, entry, dialects, settings, found, rejects)
         parts.append(_columns(found, settings, rejects))
         step(len(piece))
-    rejects.sort(key=lambda row: (row["path"], row["hdu"], row["plane"]))
+    rejects.sort(key=lambda row: (row["path"], row["hdu"], row["plane"], row["archive"]))
     unchanged = present - {(archive, entry.path) for archive, entry in new}
     return WalkResult(_joined(parts), rejects, present, unchanged)
+
+
+def _place(folder: str) -> os.stat_result | None:
+    try:
+        return os.stat(folder)
+    except OSError:
+        return None
 
 
 def _known_files(known: Mapping[str, Any]) -> dict[tuple[str, str], tuple[int, int]]:
@@ -141,9 +150,9 @@ def _read_file(
             raise SetAsideError("no_image", f"none of its {last + 1} HDUs holds an image")
     except SetAsideError as error:
         # A gzip stream that breaks after some HDUs cannot know which one it was in.
-        rejects.append(_reject(entry, error, last + 1 if last >= 0 and images else error.hdu))
+        rejects.append(_reject(archive, entry, error, last + 1 if last >= 0 and images else error.hdu))
     except OSError as error:
-        rejects.append(_reject(entry, SetAsideError("unreadable", f"the system says: {error.strerror}")))
+        rejects.append(_reject(archive, entry, SetAsideError("unreadable", f"the system says: {error.strerror}")))
 
 
 def _frames_of(
@@ -154,7 +163,7 @@ def _frames_of(
             read = _facts(hdu, plane, dialects)
             yield _Found(archive, entry, hdu, plane, *read)
     except SetAsideError as error:
-        rejects.append(_reject(entry, error, hdu.index))
+        rejects.append(_reject(archive, entry, error, hdu.index))
 
 
 def _facts(hdu: Hdu, plane: Plane, dialects: Sequence[Dialect]) -> tuple[str, FrameFacts]:
@@ -169,8 +178,9 @@ def _facts(hdu: Hdu, plane: Plane, dialects: Sequence[Dialect]) -> tuple[str, Fr
     return read
 
 
-def _reject(entry: FileEntry, error: SetAsideError, hdu: int = -1) -> Row:
-    return {"path": entry.path, "hdu": hdu, "plane": error.plane, "reason": error.reason, "detail": error.detail}
+def _reject(archive: str, entry: FileEntry, error: SetAsideError, hdu: int = -1) -> Row:
+    place = {"path": entry.path, "hdu": hdu, "plane": error.plane, "archive": archive}
+    return {**place, "reason": error.reason, "detail": error.detail}
 
 
 # --- many frames at once
@@ -320,7 +330,7 @@ def _outlines(
         elif found[i].hdu is not refused:  # one row for all planes of a cube
             refused = found[i].hdu
             reason = "no_wcs" if isinstance(own, NoCelestialError) else "bad_wcs"
-            rejects.append(_reject(found[i].entry, SetAsideError(reason, str(own)), refused.index))
+            rejects.append(_reject(found[i].archive, found[i].entry, SetAsideError(reason, str(own)), refused.index))
     return usable, kept
 
 

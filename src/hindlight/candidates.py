@@ -122,12 +122,12 @@ def brightenings(view: View, gap_days: float) -> int:
     return max([epochs(np.concatenate(times), gap_days) if times else 0, *in_runs], default=0)
 
 
-def standing(view: View, beyond_chance: bool, established: bool, detection: Detection) -> str:
-    """The verdict in one word; see `hindlight.schema.STANDINGS`."""
+def standing(view: View, beyond_chance: bool, established: bool, detection: Detection, testable: bool = True) -> str:
+    """The verdict in one word; see `hindlight.schema.STANDINGS`. Not `testable`: the controls could not decide."""
     used = [len(c.curve) for c in view.channels]
     if not any(used):
         return "uncovered"
-    if max(used) < detection.min_frames:
+    if max(used) < detection.min_frames or not testable:
         return "undecided"
     if not beyond_chance:
         return "steady" if any(c.seen for c in view.channels) else "unseen"
@@ -201,15 +201,23 @@ def _first_and_last(view: View, samples: Mapping[str, Any]) -> dict[str, str]:
 
 
 def describe(
-    view: View, given: Mapping[str, float], beyond_chance: bool, examined: Examined | None, detection: Detection
+    view: View,
+    given: Mapping[str, float],
+    decided: tuple[bool, bool],
+    examined: Examined | None,
+    detection: Detection,
 ) -> Described:
-    """The cells of one target that need its light curves; `given` is the ephemeris of the target list, NaN for none."""
+    """The cells of one target that need its light curves.
+
+    `given` is the ephemeris of the target list, NaN for none; `decided` says whether the target varies beyond chance,
+    and whether the controls could decide that.
+    """
     period = examined.period if examined is not None else None
     if period is not None and not (period.established and period.ephemerides):
         period = None
     cells = counts(view, detection) | _period_cells(period)
     cells["name"] = view.name
-    cells["standing"] = standing(view, beyond_chance, period is not None, detection)
+    cells["standing"] = standing(view, decided[0], period is not None, detection, decided[1])
     cells["concerns"] = "; ".join(examined.concerns) if examined is not None else ""
     cells["lookback_p"] = _lookback_p(view, given)
     return Described(cells, tuple(channel_row(view, c) for c in view.channels))

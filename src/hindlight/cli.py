@@ -18,11 +18,13 @@ import numpy as np
 from rich.console import Console
 from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeRemainingColumn
 from rich.table import Table
+from rich.text import Text
 
 from hindlight import __version__
 from hindlight.errors import HindlightError, UsageError
 
 BEST_ROWS = 10
+LONGEST_CELL = 200
 TABLE_ENDINGS = (".ecsv", ".fits", ".vot", ".csv", ".parquet")
 INTERRUPTED = 130
 TERMINATED = 143
@@ -54,7 +56,7 @@ def run_command(arguments: list[str]) -> int:
         if error.errno in (errno.ENOSPC, errno.EDQUOT):
             return _say("the disk is full; make room, the same command continues", 4)
         return _inside_error(error)
-    except Exception as error:  # noqa: BLE001 - the last resort: one line, and the traceback where it can be found
+    except (Exception, SystemExit) as error:  # noqa: BLE001 - the last resort: one line, and the traceback where it can be found
         return _inside_error(error)
     return 0
 
@@ -286,6 +288,11 @@ def _simple_table(title: str, *names: str) -> Table:
     return table
 
 
+def _add(table: Table, *cells: object) -> None:
+    """A row of plain text: what stands in a header or a target list is never taken for markup, and is one line."""
+    table.add_row(*(Text(" ".join(str(cell).split())[:LONGEST_CELL]) for cell in cells))
+
+
 def _print_result(result: Any) -> None:
     console = _console()
     table = result.table
@@ -295,7 +302,7 @@ def _print_result(result: Any) -> None:
     if doubtful:
         console.print(_candidates("beyond chance, but a check failed", doubtful[:BEST_ROWS]))
         for row in doubtful[:BEST_ROWS]:
-            console.print(f"  {row['name']}: {row['concerns']}", markup=False)
+            console.print(f"  {' '.join(str(row['name']).split())}: {row['concerns']}", markup=False)
     console.print((result.run / "summary.txt").read_text(encoding="utf-8"), end="", markup=False)
     console.print(f"written to {result.run}: candidates.ecsv (.fits, .vot), channels.ecsv, rejects.ecsv", markup=False)
 
@@ -303,7 +310,8 @@ def _print_result(result: Any) -> None:
 def _candidates(title: str, rows: list[Any]) -> Table:
     table = _simple_table(title, "name", "standing", "p", "q", "seen/used", "peak S/N", "first seen", "period (s)")
     for row in rows:
-        table.add_row(
+        _add(
+            table,
             str(row["name"]), str(row["standing"]), _short(row["p_value"], "<" if row["p_is_extrapolated"] else ""),
             _short(row["q_value"]), f"{row['n_detected']}/{row['n_used']}", _short(row["peak_snr"]),
             str(row["first_detected"])[:19], _short(row["period"], digits=8),
@@ -320,7 +328,8 @@ def _print_inventory(found: Any) -> None:
     names = ("channel", "frames", "first", "last", "exposure (s)", "beam (arcsec)", "depth")
     table = _simple_table("frames by instrument and channel", *names)
     for row in found.channels:
-        table.add_row(
+        _add(
+            table,
             row.channel, str(row.n_frames), row.first[:10], row.last[:10], _short(row.exposure_s),
             f"{_short(row.beam_min)} to {_short(row.beam_max)}" if np.isfinite(row.beam_min) else "not stated",
             f"{_short(row.depth)} {row.unit}" if np.isfinite(row.depth) else "not stated",
@@ -329,12 +338,12 @@ def _print_inventory(found: Any) -> None:
     if found.targets:
         cover = _simple_table("frames that cover each target", "target", "frames", "channels")
         for target in found.targets:
-            cover.add_row(target.name, str(target.n_frames), str(target.n_channels))
+            _add(cover, target.name, str(target.n_frames), str(target.n_channels))
         console.print(cover)
     for title, counted in (("set aside", found.rejects), ("taken for granted", found.assumptions)):
         table = _simple_table(title, "count", "word", "meaning")
         for entry in counted:
-            table.add_row(str(entry.count), entry.word, entry.meaning)
+            _add(table, str(entry.count), entry.word, entry.meaning)
         console.print(table if counted else f"{title}: nothing")
 
 
@@ -343,7 +352,7 @@ def _print_plugins(loaded: Any) -> None:
     table = _simple_table("plugins", "name", "kind", "origin", "columns and settings")
     for entry in loaded.loaded:
         columns = ", ".join(f"{c.name} ({c.about}, {c.unusual})" if c.unusual else c.name for c in entry.plugin.columns)
-        table.add_row(entry.plugin.name, entry.plugin.kind, f"{entry.origin}: {entry.source}", columns)
+        _add(table, entry.plugin.name, entry.plugin.kind, f"{entry.origin}: {entry.source}", columns)
     console.print(table)
 
 

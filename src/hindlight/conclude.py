@@ -85,13 +85,18 @@ def gated(found: Field, settings: Settings) -> IntArray:
 
 @dataclass(frozen=True, eq=False)
 class PValues:
-    """Over all targets of the run, in order of their ids: shapes (n,)."""
+    """Over all targets of the run, in order of their ids: shapes (n,).
+
+    `short`: beyond every control, whose number cannot decide at the run's level; `testable`: there is a p-value that
+    can decide, from the controls or from their tail.
+    """
 
     empirical: FloatArray
     p: FloatArray
     q: FloatArray
     extrapolated: NDArray[np.bool_]
     short: NDArray[np.bool_]
+    testable: NDArray[np.bool_]
     needed: int
 
 
@@ -104,11 +109,13 @@ def p_values(ranks: Sequence[calibrate.Rank], settings: Settings) -> PValues:
     with np.errstate(invalid="ignore"):
         undecided = np.array([r.exceeded_by == 0 for r in ranks]) & (q > level)
     extrapolated = np.zeros(len(ranks), dtype=bool)
+    testable = np.isfinite(empirical)
     for index in np.flatnonzero(undecided).tolist():
         bound = calibrate.tail_bound(
             ranks[index].control_distances, ranks[index].beyond, settings.ranking.tail_exceedances
         )
+        testable[index] = np.isfinite(bound)
         if bound < p[index]:
             p[index], extrapolated[index] = bound, True
     needed = calibrate.controls_needed(int(np.isfinite(empirical).sum()), level)
-    return PValues(empirical, p, calibrate.false_discovery(p), extrapolated, undecided, needed)
+    return PValues(empirical, p, calibrate.false_discovery(p), extrapolated, undecided, testable, needed)

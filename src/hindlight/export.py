@@ -14,7 +14,7 @@ from hindlight.ensemble import calibrated
 from hindlight.errors import UsageError
 from hindlight.schema import LIGHT_CURVE
 from hindlight.store import RunFolder
-from hindlight.tables import astropy_table
+from hindlight.tables import astropy_table, read_ecsv
 
 
 def light_curves(run: RunFolder, target: str) -> astropy.table.Table:
@@ -81,6 +81,6 @@ def _thresholds(run: RunFolder, target: str) -> dict[str, float]:
     """The detection threshold of each channel of a target, if the run has been judged."""
     if not run.has("channels.ecsv"):
         return {}
-    table = astropy.table.Table.read(run.file("channels.ecsv"), format="ascii.ecsv")
+    table = read_ecsv(run.file("channels.ecsv"))
     mine = table[table["name"] == target]
     return {str(row["channel"]): float(row["threshold"]) for row in mine}

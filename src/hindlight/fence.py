@@ -48,7 +48,7 @@ def call(plugin: Plugin, method: Callable[[], Result], target: str, channel: str
             return method()
     except WrongColumnError as error:
         return Fault(plugin.name, plugin.kind, target, channel, "wrong_column", str(error), "")
-    except Exception as error:  # noqa: BLE001 - the fence is where anything a plugin raises is handled
+    except (Exception, SystemExit, GeneratorExit) as error:  # noqa: BLE001 - the fence: anything a plugin raises
         frames = traceback.extract_tb(error.__traceback__)
         last = frames[-1]
         line = f"{last.filename.rsplit('/', 1)[-1]}:{last.lineno}"

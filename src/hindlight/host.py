@@ -124,14 +124,18 @@ def load(spec: PluginSpec) -> Plugins:
     manager.add_hookspecs(hookspecs)
     origins: dict[str, tuple[str, str, str]] = {}
     for name, module, origin in [*_entry_points(), *_file_modules(spec)]:
+        if name in origins:
+            raise UsageError(f"plugin {origin[1]} is given twice; give it once")
         try:
             manager.register(module, name)
-        except ValueError as error:
-            raise UsageError(f"plugin {name}: {error}; give it once") from None
+        except pluggy.PluginValidationError as error:
+            raise UsageError(f"plugin {origin[1]}: {' '.join(str(error).split())}; hooks take no arguments") from None
         origins[name] = origin
     _refuse_unknown_hooks(manager)
     loaded = [
-        Loaded(_make(cls, name, spec), *origins[name]) for name in sorted(origins) for cls in _classes(manager, name)
+        Loaded(_make(cls, name, spec), *origins[name])
+        for name in sorted(origins)
+        for cls in _classes(manager, name, origins[name][1])
     ]
     plugins = Plugins(_chosen(loaded, spec))
     if spec.expected and plugins.fingerprint() != spec.expected:
@@ -186,10 +190,10 @@ def _imported(load_module: Callable[[], ModuleType], what: str) -> ModuleType:
     """What `load_module` returns; whatever it raises becomes one line that names the plugin."""
     try:
         return load_module()
-    except Exception as error:  # noqa: BLE001 - a plugin may raise anything while it is imported
+    except (Exception, SystemExit, GeneratorExit) as error:  # noqa: BLE001 - a plugin may raise anything
         where = f" at line {error.lineno}" if isinstance(error, SyntaxError) else ""
         raise UsageError(
-            f"{what} does not import: {type(error).__name__}: {error}{where}; mend or leave it out"
+            f"{what} fails: {type(error).__name__}: {error}{where}; mend or leave it out"
         ) from None
 
 
@@ -201,14 +205,16 @@ def _refuse_unknown_hooks(manager: pluggy.PluginManager) -> None:
         raise UsageError(f"plugin {text}; the hooks are {', '.join(sorted(KINDS))}") from None
 
 
-def _classes(manager: pluggy.PluginManager, name: str) -> list[type[Plugin]]:
+def _classes(manager: pluggy.PluginManager, name: str, source: str) -> list[type[Plugin]]:
     """The classes one module registers, each checked for its kind."""
     module = manager.get_plugin(name)
     found: list[type[Plugin]] = []
     for caller in manager.get_hookcallers(module) or []:
-        offered: Any = _imported(getattr(module, caller.name), f"plugin {name}: {caller.name}()")
+        offered: Any = _imported(getattr(module, caller.name), f"plugin {source}: {caller.name}()")
         kind = KINDS[caller.name]
-        for cls in offered or []:
+        if not isinstance(offered, list | tuple):
+            raise UsageError(f"plugin {source}: {caller.name}() must return a list of classes, got {offered!r:.60}")
+        for cls in offered:
             if not (isinstance(cls, type) and issubclass(cls, kind)):
                 raise UsageError(f"plugin {cls!r}: {caller.name}() must return classes derived from {kind.__name__}")
             found.append(cls)

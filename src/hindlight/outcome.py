@@ -11,6 +11,7 @@ from pathlib import Path
 from typing import Any
 
 import astropy.table
+import numpy as np
 
 from hindlight import candidates, ranking
 from hindlight.conclude import Field, PValues
@@ -27,6 +28,7 @@ CAUTION = (
     "at the other frames of the same night, and for a second instrument, before telescope time or a claim rests on it."
 )
 
+HONEST_ERRORS = 1.25  # blank sky that scatters by more than this times its errors, or less than its inverse, is said
 NO_EPHEMERIS = dict.fromkeys(("period", "epoch", "period_dot", "window"), float("nan"))
 
 
@@ -83,7 +85,7 @@ def chance_cells(found: Field, index: int, at: int, p: PValues) -> dict[str, Any
     }
 
 
-def notes(found: Field, index: int, at: int, p: PValues) -> str:
+def notes(found: Field, index: int, at: int, p: PValues, position_error_arcsec: float = 0.0) -> str:
     """What a reader should know before trusting a row."""
     n_controls = int(found.ranked.n_controls[index])
     said = []
@@ -93,6 +95,10 @@ def notes(found: Field, index: int, at: int, p: PValues) -> str:
         said.append("p_value is the upper bound of a fitted tail, beyond every control")
     if n_controls == 0:
         said.append("no control serves this target: no p-value")
+    if position_error_arcsec > 0:
+        said.append(
+            f"measured at the stated place only, not searched within its error of {position_error_arcsec:g} arcsec"
+        )
     return "; ".join(said)
 
 
@@ -100,6 +106,11 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings) -> tuple[st
     """What the last lines of a run must say."""
     said = []
     sizes = [int(n) for found in fields for n in found.ranked.n_controls]
+    alone = sum(size == 0 for size in sizes)
+    if alone:
+        said.append(f"{alone} targets have no control and so no p-value: nothing is said of their variation")
+    if not p.testable.all() and len(sizes) - alone:
+        said.append(f"{int((~p.testable).sum())} targets are undecided: too few controls, or too few usable frames")
     if sizes and min(sizes) < settings.controls.per_field:
         said.append(
             f"controls per target: {min(sizes)} to {max(sizes)}, {settings.controls.per_field} were asked for; "
@@ -110,9 +121,29 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings) -> tuple[st
             f"{int(p.short.sum())} targets lie beyond every control, but their number cannot decide at q < "
             f"{settings.ranking.level:g}: {p.needed} controls a field would ([controls] per_field)"
         )
+    said += _error_remarks(fields)
     if p.extrapolated.any():
         said.append(f"{int(p.extrapolated.sum())} p-values are upper bounds of a fitted tail (p_is_extrapolated)")
     return tuple(said)
+
+
+def _error_remarks(fields: Sequence[Field]) -> list[str]:
+    """Channels whose stated errors are not the scatter of blank sky."""
+    scatter: dict[str, list[float]] = {}
+    for found in fields:
+        controls = found.rows(found.controls)
+        for (label, full), values in found.judgement.values.items():
+            if full == "core_reduced" and controls.size:
+                scatter.setdefault(label, []).extend(np.sqrt(values[controls][np.isfinite(values[controls])]).tolist())
+    said = []
+    for label, values in sorted(scatter.items()):
+        factor = float(np.median(values)) if values else 1.0
+        if not 1 / HONEST_ERRORS < factor < HONEST_ERRORS:
+            said.append(
+                f"errors in {label} are not the scatter of blank sky, which is {factor:.2f} times as large: standings and "
+                "p-values hold, since the controls have the same errors, but S/N, mean errors and limits do not"
+            )
+    return said
 
 
 def meta(settings: Settings, p: PValues, fields: Sequence[Field]) -> dict[str, Any]:

@@ -99,6 +99,13 @@ def new_targets(positions: Columns, targets: Targets) -> NDArray[np.int64]:
         offset = np.hypot(
             (positions["ra"][i] - targets.ra[row] + 180) % 360 - 180, positions["dec"][i] - targets.dec[row]
         )
+        motion = ("pm_ra_cosdec", "pm_dec", "ref_epoch")
+        moves = [name for name in motion if positions[name][i] != targets.column(name)[row]]
+        if moves:
+            raise UsageError(
+                f"target {name!r}: this run has {moves[0]} {positions[moves[0]][i]:g}, the list "
+                f"{targets.column(moves[0])[row]:g}; give it another name, or another --out"
+            )
         if offset > SAME_PLACE_DEG:
             raise UsageError(
                 f"target {name!r}: this run has it at {positions['ra'][i]:.6f} {positions['dec'][i]:.6f}, the list at "
@@ -149,7 +156,7 @@ def lost_frames(frames: Columns) -> list[dict[str, Any]]:
     for row in np.flatnonzero(np.isin(frames["state"], list(said))):
         reason, detail = said[frames["state"][row]]
         place = {"path": str(frames["path"][row]), "hdu": int(frames["hdu"][row]), "plane": int(frames["plane"][row])}
-        rows.append({**place, "reason": reason, "detail": detail})
+        rows.append({**place, "reason": reason, "detail": detail, "archive": str(frames["archive"][row])})
     return rows
 
 

@@ -30,6 +30,13 @@ OPTIONAL_UNITS = {
     "epoch": u.d, "epoch_err": u.d, "window": u.s, "epoch_frequency": u.MHz,
     "dm": u.pc / u.cm**3, "dm_err": u.pc / u.cm**3, "distance": u.kpc,
 }  # fmt: skip
+RANGES = {
+    "pos_err": (0, 3.6e5), "pos_err_major": (0, 3.6e5), "pos_err_minor": (0, 3.6e5), "pos_err_angle": (-360, 360),
+    "pm_ra_cosdec": (-1e5, 1e5), "pm_dec": (-1e5, 1e5), "ref_epoch": (1800, 2200),
+    "period": (1e-3, 1e11), "period_err": (0, 1e11), "period_dot": (-1, 1), "period_dot_err": (0, 1),
+    "epoch": (2.3e6, 2.6e6), "epoch_err": (0, 1e5), "window": (0, 1e11), "epoch_frequency": (1, 1e15),
+    "dm": (0, 1e5), "dm_err": (0, 1e5), "distance": (0, 1e7),
+}  # fmt: skip
 DEFAULTS = {"pm_ra_cosdec": 0.0, "pm_dec": 0.0, "ref_epoch": 2000.0, "pos_err": 0.0}
 
 
@@ -44,6 +51,11 @@ class Targets:
 
     def __len__(self) -> int:
         return len(self.names)
+
+    @property
+    def position_error(self) -> FloatArray:
+        """The larger 1-sigma position error in arcsec, 0 where not given; shape (n,)."""
+        return np.fmax(self.column("pos_err"), np.nan_to_num(self.column("pos_err_major")))
 
     def column(self, name: str) -> FloatArray:
         """An optional column, shape (n,); NaN (or 0 for motions, 2000 for their epoch) where not given."""
@@ -77,6 +89,8 @@ def read_targets(path: Path) -> Targets:
         for name, unit in OPTIONAL_UNITS.items()
         if name in table.colnames
     }
+    for name, values in optional.items():
+        _refuse_out_of_range(name, values, path)
     return Targets(names, ra % 360.0, dec, optional)
 
 
@@ -84,9 +98,11 @@ def _read_table(path: Path) -> astropy.table.Table:
     if not path.is_file():
         raise UsageError(f"targets {path}: no such file; give a table with columns name, ra, dec")
     try:
-        if path.suffix.lower() == ".csv":
-            return astropy.table.Table.read(path, format="ascii.csv")
-        return astropy.table.Table.read(path)
+        if path.suffix.lower() != ".csv":
+            return astropy.table.Table.read(path)
+        # A byte-order mark is no part of the first column's name, and a name such as 002 is no number.
+        text = path.read_text(encoding="utf-8-sig")
+        return astropy.table.Table.read(text.splitlines(), format="ascii.csv", converters={"name": str})
     except Exception as error:  # noqa: BLE001 - readers raise whatever they like on a broken table
         detail = " ".join(str(error).split())[:200]
         raise UsageError(
@@ -126,6 +142,18 @@ def _quantity(column: Any, name: str, unit: u.UnitBase, path: Path) -> FloatArra
     except (u.UnitConversionError, TypeError, ValueError) as error:
         expected = unit.to_string() or "a pure number"
         raise UsageError(f"targets {path}: column {name!r}: {error}; expected numbers in {expected}") from None
+
+
+def _refuse_out_of_range(name: str, values: FloatArray, path: Path) -> None:
+    """Raise `UsageError` for the first value of an optional column that cannot be meant; NaN means not given."""
+    low, high = RANGES[name]
+    bad = ~np.isnan(values) & ~((values >= low) & (values <= high))
+    if bad.any():
+        row = int(np.flatnonzero(bad)[0])
+        raise UsageError(
+            f"targets {path}: row {row + 1}, column {name!r}: {values[row]:g} is out of range, expected {low:g} to {high:g} "
+            f"{OPTIONAL_UNITS[name].to_string()}".rstrip()
+        )
 
 
 def _refuse_bad_positions(ra: FloatArray, dec: FloatArray, path: Path) -> None:

@@ -15,6 +15,7 @@ from hindlight import host, settings
 from hindlight.errors import UsageError
 from hindlight.settings import Settings
 from hindlight.store import RunFolder
+from hindlight.tables import damaged
 
 RECORDED_PACKAGES = (
     "hindlight", "numpy", "scipy", "astropy", "photutils", "pyarrow", "dask", "distributed", "nifty-ls",
@@ -47,7 +48,10 @@ def settings_in_force(run: RunFolder, request: Request) -> Settings:
     """
     if request.settings is not None or not run.has("settings.toml"):
         return settings.read_settings(request.settings)
-    recorded = settings.read_settings(run.file("settings.toml"))
+    try:
+        recorded = settings.read_settings(run.file("settings.toml"))
+    except UsageError as error:
+        raise damaged(run.file("settings.toml"), error) from None
     loaded = host.load(host.spec_from(Settings(), request.plugins, request.without)).loaded
     names = {entry.plugin.name for entry in loaded}
     return replace(recorded, plugin={name: table for name, table in recorded.plugin.items() if name in names})
@@ -75,8 +79,12 @@ def compare(run: RunFolder, request: Request, chosen: Settings, plugins: host.Pl
     """What the run recorded of itself, {} for a new one; raises `UsageError` where this request does not fit it."""
     if not run.has("settings.toml"):
         return {}
-    data = tomllib.loads(run.file("settings.toml").read_text(encoding="utf-8"))
-    recorded: Mapping[str, Any] = data.get("run", {})
+    path = run.file("settings.toml")
+    try:
+        data = tomllib.loads(path.read_text(encoding="utf-8"))
+        recorded: Mapping[str, Any] = data["run"]
+    except (tomllib.TOMLDecodeError, UnicodeDecodeError, KeyError) as error:
+        raise damaged(path, error) from None
     missing = [archive for archive in recorded.get("archives", []) if archive not in request.folders]
     if missing:
         raise UsageError(f"run {run.path}: was made from archive {missing[0]}; give that too, or another --out")

@@ -12,7 +12,6 @@ from contextlib import contextmanager
 from dataclasses import replace
 from typing import Any
 
-import astropy.table
 import numpy as np
 
 from hindlight import archive, ensemble, files, host, plan, record, store, tasks
@@ -26,7 +25,7 @@ from hindlight.schema import FRAME_SOLUTION, FRAMES, POSITIONS, REJECTS
 from hindlight.settings import Settings
 from hindlight.store import Columns, RunFolder
 from hindlight.systems import unit_vectors
-from hindlight.tables import astropy_table, rows_to_columns, write_table
+from hindlight.tables import astropy_table, read_ecsv, rows_to_columns, write_table
 from hindlight.verdicts import Session, Watcher, verdicts
 
 SMALL_WORK = 2_000_000  # measurements; up to this many the work is done in this process unless told otherwise
@@ -46,7 +45,7 @@ def mine(request: Request, watcher: Watcher) -> Outcome:
     settings = record.settings_in_force(run, request)
     spec = host.spec_from(settings, request.plugins, request.without)
     plugins = host.load(spec)
-    _check_estimator(plugins, settings)
+    _check_plugins(plugins, settings)
     targets = read_targets(request.targets)
     record.compare(run, request, settings, plugins)
     files.check_folders(request.folders)
@@ -109,7 +108,14 @@ def _logged(run: RunFolder) -> Iterator[None]:
         handler.close()
 
 
-def _check_estimator(plugins: host.Plugins, settings: Settings) -> None:
+def _check_plugins(plugins: host.Plugins, settings: Settings) -> None:
+    """Raise `UsageError` where the plugins that are left cannot do the job."""
+    for kind, some in (("dialect", plugins.dialects), ("estimator", plugins.estimators)):
+        if not some:
+            raise UsageError(f"--without: no {kind} is left, and nothing can be measured; leave one in")
+    ranked = [c for plugin in plugins.statistics for c in plugin.columns if c.unusual and c.about == "variation"]
+    if not ranked:
+        raise UsageError("--without: no statistic that asks about variation is left to rank by; leave one in")
     names = [e.name for e in plugins.estimators]
     if settings.photometry.estimator not in ("auto", *names):
         raise UsageError(
@@ -124,7 +130,7 @@ def _walked(
     run.sweep()
     known = run.frames() if run.has("frames.parquet") else plan.empty(FRAMES)
     watcher.stage("reading headers", 0)
-    found = archive.walk(request.folders, plugins.dialects, settings, known, watcher.step)
+    found = archive.walk(request.folders, plugins.dialects, settings, known, watcher.step, [str(run.path)])
     labels = assign(found.frames, known, settings.channels)
     frames = plan.merge_frames(known, {**found.frames, "channel": labels}, found.present, settings.flow.batch_frames)
     if not np.any(frames["state"] != "void"):
@@ -133,22 +139,22 @@ def _walked(
             f"archive {', '.join(request.archives)}: no usable FITS image found ({what}); "
             "give a folder that holds .fits, .fit or .fts files"
         )
-    unchanged = {path for _, path in found.unchanged}
-    return frames, _distinct([*_earlier_rejects(run, unchanged), *found.rejects, *plan.lost_frames(frames)])
+    return frames, _distinct([*_earlier_rejects(run, found.unchanged), *found.rejects, *plan.lost_frames(frames)])
 
 
-def _earlier_rejects(run: RunFolder, unchanged: set[str]) -> list[Row]:
+def _earlier_rejects(run: RunFolder, unchanged: set[tuple[str, str]]) -> list[Row]:
     """What was set aside in files that are not read again because they have not changed."""
     if not run.has("rejects.ecsv"):
         return []
-    table = astropy.table.Table.read(run.file("rejects.ecsv"), format="ascii.ecsv")
+    table = read_ecsv(run.file("rejects.ecsv"))
     rows = [{c.name: int(r[c.name]) if c.dtype == "int64" else str(r[c.name]) for c in REJECTS} for r in table]
-    return [row for row in rows if row["path"] in unchanged and row["reason"] not in ("vanished", "changed")]
+    kept = [row for row in rows if (row["archive"], row["path"]) in unchanged]
+    return [row for row in kept if row["reason"] not in ("vanished", "changed")]
 
 
 def _distinct(rejects: Sequence[Row]) -> list[Row]:
     """Rows in a fixed order, each once."""
-    keyed = {(r["path"], r["hdu"], r["plane"], r["reason"]): r for r in rejects}
+    keyed = {(r["path"], r["hdu"], r["plane"], r["reason"], r["archive"]): r for r in rejects}
     return [keyed[key] for key in sorted(keyed)]
 
 
@@ -161,13 +167,19 @@ def _planned(session: Session, frames: Columns, size_deg: float) -> Columns:
     run, settings = session.run, session.order.settings
     known = run.positions() if run.has("positions.parquet") else plan.no_positions()
     positions = plan.add_targets(known, session.targets, plan.new_targets(known, session.targets), size_deg)
-    within = {}
+    within: dict[int, plan.FieldFrames] = {}
     for number in plan.fields_without_controls(positions):
         mine = (positions["kind"] == "target") & (positions["field"] == number)
         vectors = unit_vectors(positions["ra"][mine], positions["dec"][mine])
         here = plan.field_frames(frames, vectors)
         if len(here.rows):
             within[number] = here
+    if not within and len(known["id"]) == 0:
+        hint = "; all ra are below 24: degrees are wanted, not hours" if max(session.targets.ra) < 24 else ""
+        raise NothingToDoError(
+            f"no target is covered by any of the {len(frames['id'])} frames; "
+            f"check the positions (ICRS degrees) and the archive{hint}"
+        )
     bright = _bright_sources(session, frames, within)
     round_of_controls = plan.round_for_controls(known, positions)
     for number, here in within.items():

@@ -228,6 +228,7 @@ REJECTS = (
     TableColumn("plane", "plane of a cube, -1 for the whole HDU", dtype="int64"),
     TableColumn("reason", "a fixed word", dtype="str", ucd="meta.code.status"),
     TableColumn("detail", "a sentence", dtype="str", ucd="meta.note"),
+    TableColumn("archive", "the archive folder", dtype="str"),
 )
 
 PLUGIN_FAULTS = (

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import dataclasses
 import difflib
+import math
 import tomllib
 from collections.abc import Mapping
 from dataclasses import dataclass, field, fields
@@ -180,7 +181,10 @@ def settings_from(data: Mapping[str, Any], where: str) -> Settings:
             values[name] = {key: _table(f"plugin.{key}", value, where) for key, value in content.items()}
         else:
             values[name] = check_section(getattr(Settings(), name), content, f"{where}: [{name}]")
-    return Settings(**values)
+    settings = Settings(**values)
+    if settings.photometry.annulus_outer <= settings.photometry.annulus_inner:
+        raise UsageError(f"{where}: [photometry] annulus_outer must be larger than annulus_inner")
+    return settings
 
 
 def check_section(defaults: Any, content: Mapping[str, Any], where: str) -> Any:
@@ -204,9 +208,13 @@ def _checked(declared: dataclasses.Field[Any], default: Any, value: Any, where: 
     if type(value) is not expected:
         raise UsageError(f"{where}: expected {expected.__name__} (default {default!r}), got {value!r}")
     meta = declared.metadata
+    if isinstance(value, dict):
+        bad = [k for k, v in value.items() if isinstance(v, bool) or not isinstance(v, int | float) or not v > 0]
+        if bad:
+            raise UsageError(f"{where}: {bad[0]!r} must be a positive number, got {value[bad[0]]!r}")
     if isinstance(value, int | float) and not isinstance(value, bool):
         low, high = meta["minimum"], meta["maximum"]
-        if value != value or (low is not None and value < low) or (high is not None and value > high):
+        if not math.isfinite(value) or (low is not None and value < low) or (high is not None and value > high):
             bounds = f"from {'any' if low is None else low} to {'any' if high is None else high}"
             raise UsageError(f"{where}: {value!r} is out of range, expected {bounds}")
     if meta["choices"] is not None and value not in meta["choices"]:

@@ -24,7 +24,7 @@ from hindlight.ensemble import calibrated
 from hindlight.errors import RunInUseError, UsageError
 from hindlight.lightcurve import Block, Channel, FloatArray, IntArray, freeze
 from hindlight.schema import FRAME_SOLUTION, FRAMES, MEASUREMENTS, POSITIONS, UNUSABLE, TableColumn
-from hindlight.tables import arrow_table, columns_of, read_parquet, write_parquet, write_whole
+from hindlight.tables import arrow_table, columns_of, read_metadata, read_parquet, write_parquet, write_whole
 
 PART_ROW_GROUP = 16384
 
@@ -57,7 +57,7 @@ class RunFolder:
         """Make the folder; raises `UsageError` where it cannot be one."""
         if self.path.exists() and not self.path.is_dir():
             raise UsageError(f"output {self.path}: is a file; give a folder for the run")
-        known = self.file("settings.toml").exists() or not self.path.exists()
+        known = self.has("settings.toml") or self.has("frames.parquet") or not self.path.exists()
         ours = ("lock", "log.txt", "measurements")  # what a run that was killed at once may have left
         if not known and any(p.name not in ours and not p.name.endswith(".part") for p in self.path.iterdir()):
             raise UsageError(f"output {self.path}: holds other files and is no run; give a new or empty folder")
@@ -158,12 +158,9 @@ def write_part(run: RunFolder, piece: Piece, columns: Columns, rejects: list[dic
 
 def part_rejects(run: RunFolder, plan: Iterable[Piece]) -> list[dict[str, Any]]:
     """Frames set aside while they were measured, in the order of the plan."""
-    import pyarrow.parquet as pq
-
     rows: list[dict[str, Any]] = []
     for piece in plan:
-        metadata = pq.read_schema(run.part(piece)).metadata or {}
-        rows += json.loads(metadata.get(b"rejects", b"[]"))
+        rows += json.loads(read_metadata(run.part(piece)).get(b"rejects", b"[]"))
     return rows
 
 

@@ -17,6 +17,7 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
 
+from hindlight.errors import UsageError
 from hindlight.schema import NATURAL_UNIT, TableColumn
 
 ARROW_TYPES = {"float64": pa.float64(), "int64": pa.int64(), "bool": pa.bool_(), "str": pa.string()}
@@ -70,13 +71,35 @@ def write_parquet(path: Path, table: pa.Table, row_group: int = 65536) -> None:
 
 
 def read_parquet(path: Path, columns: Sequence[str] | None = None, filters: Any = None) -> pa.Table:
-    """Read Parquet, verifying page checksums."""
-    return pq.read_table(
-        path,
-        columns=None if columns is None else list(columns),
-        filters=filters,
-        page_checksum_verification=True,
-        partitioning=None,
+    """Read Parquet, verifying page checksums. Raises `UsageError` naming the file where it is damaged."""
+    wanted = None if columns is None else list(columns)
+    try:
+        return pq.read_table(path, columns=wanted, filters=filters, page_checksum_verification=True, partitioning=None)
+    except (pa.ArrowException, OSError, KeyError) as error:
+        raise damaged(path, error) from None
+
+
+def read_metadata(path: Path) -> dict[bytes, bytes]:
+    """The key-value metadata of a Parquet file. Raises `UsageError` naming the file where it is damaged."""
+    try:
+        return dict(pq.read_schema(path).metadata or {})
+    except (pa.ArrowException, OSError) as error:
+        raise damaged(path, error) from None
+
+
+def read_ecsv(path: Path) -> astropy.table.Table:
+    """Read ECSV. Raises `UsageError` naming the file where it is damaged."""
+    try:
+        return astropy.table.Table.read(path, format="ascii.ecsv")
+    except (ValueError, OSError, IndexError, KeyError) as error:
+        raise damaged(path, error) from None
+
+
+def damaged(path: Path, error: Exception) -> UsageError:
+    """What to say of a file of the run that cannot be read."""
+    detail = " ".join(str(error).split())[:120]
+    return UsageError(
+        f"{path}: is damaged ({detail}); delete that file and give the `mine` command again, it is made anew"
     )
 
 

@@ -110,7 +110,7 @@ def _reject(frames: Columns, row: int, error: Exception) -> dict[str, Any]:
     detail = error.detail if isinstance(error, SetAsideError) else " ".join(str(error).split())
     return {
         "path": str(frames["path"][row]), "hdu": int(frames["hdu"][row]), "plane": int(frames["plane"][row]),
-        "reason": reason, "detail": detail,
+        "reason": reason, "detail": detail, "archive": str(frames["archive"][row]),
     }  # fmt: skip
 
 
@@ -210,7 +210,7 @@ def target_data(order: Order, target: int) -> tuple[list[LightCurve], Columns]:
 
 def describe_targets(
     order: Order, ids: IntArray, thresholds: Mapping[str, Thresholds], given: Sequence[Mapping[str, float]],
-    beyond: Sequence[bool], examined: Sequence[Examined | None],
+    decided: Sequence[tuple[bool, bool]], examined: Sequence[Examined | None],
 ) -> list[Described]:  # fmt: skip
     """What the tables say of these targets (ascending ids) of one field."""
     tables = book(order.run, order.version)
@@ -230,7 +230,7 @@ def describe_targets(
             utc=lambda frame: str(utc[tables.row_of_frame[frame]]),
             label=lambda frame: frame_label(tables.frames, tables.row_of_frame[frame]),
         )  # fmt: skip
-        described.append(describe(view, given[row], beyond[row], examined[row], order.settings.detection))
+        described.append(describe(view, given[row], decided[row], examined[row], order.settings.detection))
     return described
 
 

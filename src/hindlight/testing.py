@@ -75,7 +75,7 @@ def examine(plugin: Plugin) -> Report:
             with warnings.catch_warnings():
                 warnings.simplefilter("error")
                 problem = check()
-        except Exception as error:  # noqa: BLE001 - whatever the plugin raises is the finding
+        except (Exception, SystemExit, GeneratorExit) as error:  # noqa: BLE001 - whatever the plugin raises is the finding
             problem = f"raised {type(error).__name__}: {error}"
         if problem:
             problems.append(f"{name}: {problem}")
@@ -362,7 +362,7 @@ def _timing(plugin: Plugin) -> str:
         with np.errstate(all="ignore"):
             for curve in curves:
                 compute(curve)
-    except Exception:  # noqa: BLE001 - it is reported by the checks
+    except (Exception, SystemExit, GeneratorExit):  # noqa: BLE001 - it is reported by the checks
         return "not timed, it fails"
     taken = (time.perf_counter() - start) * TIMED_CURVES / n
     return f"a thousand light curves of {SAMPLES} samples take {taken:.2f} s"

@@ -158,8 +158,9 @@ def _tabled(
     with np.errstate(invalid="ignore"):
         beyond = p.q < settings.ranking.level
     examined = _examined(session, places, beyond)
-    described = _described(session, places, beyond, examined)
+    described = _described(session, places, [*zip(beyond.tolist(), p.testable.tolist(), strict=True)], examined)
     cells = {found.number: outcome.plugin_cells(found, plugins) for found in fields}
+    errors = dict(zip(session.targets.names, session.targets.position_error.tolist(), strict=True))
     rows = []
     for place, said in zip(places, described, strict=True):
         found, where = place.found, int(np.searchsorted(positions["id"], place.target))
@@ -167,7 +168,7 @@ def _tabled(
         row |= examined[place.at].cells if place.at in examined else {}
         row |= {**said.cells, **outcome.chance_cells(found, place.index, place.at, p)}
         row |= {"name": place.name, "ra": float(positions["ra"][where]), "dec": float(positions["dec"][where])}
-        row["notes"] = outcome.notes(found, place.index, place.at, p)
+        row["notes"] = outcome.notes(found, place.index, place.at, p, errors.get(place.name, 0.0))
         rows.append(row)
     faults = [f for found in fields for f in found.judgement.faults] + [f for e in examined.values() for f in e.faults]
     meta = outcome.meta(settings, p, fields)
@@ -189,7 +190,7 @@ def _examined(session: Session, places: Sequence[Place], beyond: NDArray[np.bool
 
 
 def _described(
-    session: Session, places: Sequence[Place], beyond: NDArray[np.bool_], examined: Mapping[int, Examined]
+    session: Session, places: Sequence[Place], decided: Sequence[tuple[bool, bool]], examined: Mapping[int, Examined]
 ) -> list[Described]:
     """What the tables say of every target from its light curves."""
     listed = {name: row for row, name in enumerate(session.targets.names)}
@@ -208,7 +209,7 @@ def _described(
             for place in group
         ]
         ids = np.array([place.target for place in group])
-        judged = [bool(beyond[place.at]) for place in group]
+        judged = [decided[place.at] for place in group]
         jobs.append((ids, group[0].found.thresholds, given, judged, [examined.get(place.at) for place in group]))
     results = _collected(session, "describing targets", tasks.describe_targets, jobs, [len(group) for group in groups])
     return [said for result in results for said in result]
@@ -259,7 +260,4 @@ def _write(
     for ending in (".fits", ".vot", ".ecsv"):
         write_table(run.file(f"candidates{ending}"), result.table)
     if result.standings["uncovered"] == len(result.table):
-        raise NothingToDoError(
-            f"no target is covered by any of the {result.n_frames} frames; "
-            "check the positions (ICRS degrees) and the archive"
-        )
+        raise NothingToDoError(f"no target has a usable pixel in any of the {result.n_frames} frames; see rejects.ecsv")
