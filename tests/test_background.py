@@ -8,7 +8,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 from hypothesis.extra import numpy as hnp
 
-from hindlight.background import MAD_TO_SIGMA, annulus_of, local_background, median_and_mad
+from hindlight.background import MAD_TO_SIGMA, Background, annulus_of, local_background, median_and_mad
 from hindlight.pixels import Pixels
 from hindlight.plugin import BeamShape
 from hindlight.settings import Photometry
@@ -16,6 +16,12 @@ from hindlight.settings import Photometry
 SETTINGS = Photometry()
 ROUND = BeamShape(3.0, 3.0, 0.0)
 NUMBERS = st.one_of(st.floats(-1e6, 1e6, width=32), st.just(float("nan")))
+
+
+def background(pixels: Pixels, ix: np.ndarray, iy: np.ndarray) -> Background:
+    """Around pixels, with the default annulus of a round beam."""
+    annulus = annulus_of(ROUND, SETTINGS)
+    return local_background(pixels.stamps(ix, iy, annulus.half, annulus.step), annulus, pixels.quantum)
 
 
 def obvious(row: np.ndarray) -> tuple[float, float, int]:
@@ -78,7 +84,7 @@ def test_background_of_an_image() -> None:
     image = rng.normal(50, 3, (90, 100)).astype(np.float32)
     image[20:25, 30:40] = np.nan
     ix, iy = np.array([50, 45, 2]), np.array([45, 40, 80])
-    local = local_background(Pixels(image), ix, iy, annulus_of(ROUND, SETTINGS))
+    local = background(Pixels(image), ix, iy)
     y, x = np.indices(image.shape)
     for i in range(3):
         distance = np.hypot(x - ix[i], y - iy[i])
@@ -94,7 +100,7 @@ def test_background_of_an_image() -> None:
 def test_constant_pixels_have_no_noise(value: float, kind: type) -> None:
     """Padding, zero or not, is no sky: its noise is NaN, in counts too."""
     pixels = Pixels(np.full((70, 70), value, kind), quantum=float(kind is np.int16))
-    local = local_background(pixels, np.array([35]), np.array([35]), annulus_of(ROUND, SETTINGS))
+    local = background(pixels, np.array([35]), np.array([35]))
     assert np.isnan(local.rms).all()
 
 
@@ -103,10 +109,9 @@ def test_too_few_pixels() -> None:
     rng = np.random.default_rng(1)
     image = np.full((70, 70), np.nan)
     image[20, 20:39] = rng.normal(size=19)
-    annulus = annulus_of(ROUND, SETTINGS)
-    assert np.isnan(local_background(Pixels(image), np.array([35]), np.array([35]), annulus).rms[0])
+    assert np.isnan(background(Pixels(image), np.array([35]), np.array([35])).rms[0])
     image[20, 39] = 0.1
-    assert local_background(Pixels(image), np.array([35]), np.array([35]), annulus).rms[0] > 0
+    assert background(Pixels(image), np.array([35]), np.array([35])).rms[0] > 0
 
 
 @pytest.mark.parametrize("rms", [1.0, 2.0, 10.0])
@@ -117,7 +122,7 @@ def test_counts_have_no_preferred_level(rms: float) -> None:
     image = np.rint(rng.normal(true, rms, (400, 400))).astype(np.int16)
     grid = np.arange(30, 370, 40)
     ix, iy = (axis.ravel() for axis in np.meshgrid(grid, grid))
-    local = local_background(Pixels(image, quantum=1.0), ix, iy, annulus_of(ROUND, SETTINGS))
+    local = background(Pixels(image, quantum=1.0), ix, iy)
     pull = (local.level - true) / local.error(1.0)
     if rms > 1:
         assert abs(pull.mean()) < 4 / len(ix) ** 0.5
@@ -133,7 +138,7 @@ def test_error_of_the_median() -> None:
     grid = np.arange(30, 570, 50)
     ix, iy = (axis.ravel() for axis in np.meshgrid(grid, grid))
     annulus = annulus_of(ROUND, SETTINGS)
-    local = local_background(Pixels(image), ix, iy, annulus)
+    local = background(Pixels(image), ix, iy)
     pull = local.level / local.error(1.0)
     assert 0.8 < pull.std() < 1.2
     np.testing.assert_allclose(local.error(1.0), 1.2533 * local.rms / len(annulus.index) ** 0.5)

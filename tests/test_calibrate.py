@@ -153,7 +153,9 @@ def test_robust_threshold_ignores_a_few_real_sources():
     rng = np.random.default_rng(3)
     blank = rng.standard_normal(300)
     contaminated = np.concatenate([blank[3:], [30.0, 40.0, 50.0]])
-    assert calibrate.robust_threshold(contaminated, 0.01) == pytest.approx(calibrate.robust_threshold(blank, 0.01), abs=0.2)
+    assert calibrate.robust_threshold(contaminated, 0.01) == pytest.approx(
+        calibrate.robust_threshold(blank, 0.01), abs=0.2
+    )
 
 
 def test_controls_needed():

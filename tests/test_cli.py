@@ -95,7 +95,9 @@ def test_output_folder_with_other_files(archive, tmp_path, capsys):
 
 def test_settings_that_touch_measurements(archive, tmp_path, capsys):
     """A changed setting that touches measured values is refused, with the difference named."""
-    (tmp_path / "s.toml").write_text("[photometry]\nannulus_inner = 4.0\n[controls]\nper_field = 40\n", encoding="utf-8")
+    (tmp_path / "s.toml").write_text(
+        "[photometry]\nannulus_inner = 4.0\n[controls]\nper_field = 40\n", encoding="utf-8"
+    )
     command = ["mine", archive / "frames", "--targets", archive / "targets.csv", "--out", archive / "run"]
     ends(capsys, [*command, "--settings", tmp_path / "s.toml"], 2, "annulus_inner was 3.0 and is now 4.0")
 

@@ -55,7 +55,11 @@ def test_faults_are_counted_and_the_rest_goes_on():
     result = judge({"c": block}, [Good(), Misnames(), Raises(), Scribbles()])
     assert result.values["c", "good_n"].tolist() == [int(np.isfinite(row).sum()) for row in block.flux]
     faults = {f.plugin: f for f in merged(result.faults)}
-    assert (faults["raises"].count, faults["raises"].fault, faults["raises"].target) == (2, "ZeroDivisionError", "curve 0")
+    assert (faults["raises"].count, faults["raises"].fault, faults["raises"].target) == (
+        2,
+        "ZeroDivisionError",
+        "curve 0",
+    )
     assert faults["raises"].detail == "by zero"
     assert faults["raises"].line.startswith("test_fence.py:")
     assert (faults["misnames"].count, faults["misnames"].fault) == (6, "wrong_column")

@@ -32,7 +32,9 @@ def test_shipped_plugins_are_all_found():
     found = host.load(host.PluginSpec())
     names = [entry.plugin.name for entry in found.loaded if entry.origin == "shipped"]
     assert names == sorted(names)
-    assert {"chi_square", "von_neumann", "stetson", "brightest", "lomb_scargle", "peak", "psf", "aperture"} <= set(names)
+    assert {"chi_square", "von_neumann", "stetson", "brightest", "lomb_scargle", "peak", "psf", "aperture"} <= set(
+        names
+    )
     assert {e.plugin.kind for e in found.loaded} == {
         "dialect", "estimator", "statistic", "period_search", "consistency_check"
     }  # fmt: skip
@@ -52,7 +54,10 @@ def test_a_file_plugin_is_loaded_with_its_settings():
         ("import nothing_of_this_name\n", "fails: ModuleNotFoundError"),
         ("def broken(:\n", "fails: SyntaxError.*line 1"),
         (START + "@hookimpl\ndef register_statistic():\n    return []\n", "register_statistic.*the hooks are"),
-        (statistic("    t: float = setting(1.0, 'x')", decorator=""), r"put @dataclass\(frozen=True\) above class Mine"),
+        (
+            statistic("    t: float = setting(1.0, 'x')", decorator=""),
+            r"put @dataclass\(frozen=True\) above class Mine",
+        ),
         (statistic("    t: float = setting(1.0, 'x')", decorator="@dataclass"), "frozen"),
         (statistic("    t: float = 1.0"), "must be made by setting"),
         (statistic("", columns="('a',)"), "must be Column"),
@@ -61,7 +66,10 @@ def test_a_file_plugin_is_loaded_with_its_settings():
         (statistic("    name = 'chi_square'"), "'chi_square' stands twice"),
         (statistic("    name = 'Big Name'"), "snake case"),
         (statistic("    name = 'quiet'", columns='(Column("BEFORE", "doc"),)'), "'quiet_before'.*is taken"),
-        (START + "@hookimpl\ndef register_statistics():\n    return [3]\n", "must return classes derived from Statistic"),
+        (
+            START + "@hookimpl\ndef register_statistics():\n    return [3]\n",
+            "must return classes derived from Statistic",
+        ),
         (START + "@hookimpl\ndef register_statistics():\n    raise OSError('no')\n", "OSError: no"),
     ],
 )

@@ -21,6 +21,7 @@ from hindlight_plugins.lomb_scargle import (
     prepare,
     refine,
     settle,
+    true_multiple,
     whitened_products,
     window,
     window_peaks,
@@ -346,6 +347,37 @@ def test_a_harmonic_does_not_stand_in_the_way():
     assert result.established
     ratio = result.values["period"] / DAY
     assert min(abs(ratio - 4), abs(ratio - 2)) < 0.01
+
+
+@pytest.mark.parametrize("seed", range(4))
+def test_half_the_period_of_a_pulser_is_not_established(seed):
+    """A pulse of an eighth of the period has most power at a harmonic, which is never claimed for its period."""
+    rng = np.random.default_rng(seed)
+    times = random_times(rng, 150)
+    period = 7.3 * 3600
+    pulses = 9.0 * ((times - 7e8) / period % 1.0 < 0.12)
+    result = LombScargle(max_frequencies=200_000, permutations=19).examine(
+        [make_curve(times, pulses + rng.normal(size=150))]
+    )
+    found = float(result.values["period"])
+    assert not result.established or found == pytest.approx(period, rel=1e-3)
+
+
+def test_cycles_that_differ_are_told_from_cycles_that_do_not():
+    """One cycle in two or three unlike the others is found, a sinusoid or a plain pulse is not; chance keeps its rate."""
+    rng = np.random.default_rng(7)
+    times = random_times(rng, 200)
+    cycle = (times - 7e8) / (3 * DAY)
+    shape = np.cos(2 * np.pi * cycle)
+    frequency = 1 / (3 * DAY)
+    noise = rng.normal(size=200)
+    for multiple in (2, 3):
+        curve = make_curve(times, 4 * shape * np.where(np.floor(cycle) % multiple == 0, 2, 1) + noise)
+        assert true_multiple(prepare(curve), frequency) > 0
+    assert true_multiple(prepare(make_curve(times, 8 * shape + noise)), frequency) == 0
+    assert true_multiple(prepare(make_curve(times, 8.0 * (cycle % 1 < 0.3) + noise)), frequency) == 0
+    wrong = [true_multiple(prepare(make_curve(times, shape + rng.normal(size=200))), frequency) for _ in range(200)]
+    assert np.count_nonzero(wrong) <= 2
 
 
 def test_exposure_smearing_is_undone():

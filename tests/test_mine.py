@@ -279,7 +279,7 @@ def with_path(folder):
     return {**os.environ, "PYTHONPATH": str(folder)}
 
 
-BAD_PLUGINS = '''
+BAD_PLUGINS = """
 from dataclasses import dataclass
 from hindlight import *
 
@@ -320,7 +320,7 @@ class Quitter(Statistic):
 @hookimpl
 def register_statistics():
     return [Raiser, Misnamer, Scribbler, Quitter]
-'''
+"""
 
 
 @pytest.mark.parametrize("workers", [1, 2])

@@ -64,11 +64,16 @@ def circle_overlap(radius: float, x: Array, y: Array, half: int) -> Array:
     sector_b, chord_b = square * np.arccos(b / radius), b * np.sqrt(square - b * b)
     left_of_a, below_b = full - sector_a + chord_a, full - sector_b + chord_b
     # A corner inside the circle: what is left of it, and what is below it, less all, and again what is neither.
-    inside = (left_of_a + (sector_a - chord_a) / 2) + (below_b + (sector_b - chord_b) / 2 - 1.25 * full) + a * b
+    corner = a * b
+    corner += left_of_a + (sector_a - chord_a) / 2
+    corner += below_b + (sector_b - chord_b) / 2 - 1.25 * full
     # A corner outside the circle: nothing, all, or a part cut off by one of the two lines.
     right, above = (a > 0).astype(float), (b > 0).astype(float)
-    outside = right * (below_b - above * full) + above * left_of_a
-    corner = outside + (a * a + b * b < square) * (inside - outside)  # several times faster than choosing
+    outside = right * (below_b - above * full)
+    outside += above * left_of_a
+    corner -= outside
+    corner *= a * a + b * b < square  # several times faster than choosing between the two
+    corner += outside
     strip = corner[1:] - corner[:-1]
     area = strip[:, 1:] - strip[:, :-1]
     area *= area > ROUNDING  # pixels that the circle does not touch carry no weight at all

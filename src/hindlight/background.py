@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hindlight.lightcurve import FloatArray, IntArray
-from hindlight.pixels import Floats, Pixels
+from hindlight.pixels import Floats
 from hindlight.plugin import BeamShape
 from hindlight.settings import Photometry
 
@@ -93,20 +93,22 @@ def keep_freed_memory() -> None:
     np.empty(KEPT_BYTES, np.uint8)
 
 
-def local_background(pixels: Pixels, ix: IntArray, iy: IntArray, annulus: Annulus) -> Background:
-    """Background and noise around pixels (ix, iy), shape (n,); a few hundred at a time stay in the processor's cache."""
-    keep_freed_memory()
-    stamps = pixels.stamps(ix, iy, annulus.half, annulus.step).reshape(len(ix), -1)
+def local_background(stamps: Floats, annulus: Annulus, quantum: float = 0.0) -> Background:
+    """Background and noise of stamps (n, m, m) on the annulus' lattice.
+
+    `quantum` is the step between values where they are counts, see `Pixels`.
+    """
+    stamps = stamps.reshape(len(stamps), -1)
     ring = np.take(stamps, annulus.index, axis=1, mode="clip")
-    if pixels.quantum:
-        ring += _dither(len(annulus.index), pixels.quantum).astype(ring.dtype)
+    if quantum:
+        ring += _dither(len(annulus.index), quantum).astype(ring.dtype)
     with np.errstate(invalid="ignore", over="ignore"):  # infinite pixels may make NaN, never a warning
         level, spread, used = median_and_mad(ring)
     core = np.fmax.reduce(np.take(stamps, annulus.core, axis=1), axis=1)
-    around = np.full(len(ix), np.nan)
+    around = np.full(len(stamps), np.nan)
     if len(annulus.around):
         around = np.fmax.reduce(np.take(stamps, annulus.around, axis=1), axis=1)
-    spread[(used < FEWEST_PIXELS) | (spread <= pixels.quantum / 2.0)] = np.nan
+    spread[(used < FEWEST_PIXELS) | (spread <= quantum / 2.0)] = np.nan
     return Background(level, spread * MAD_TO_SIGMA, used, core, around)
 
 
@@ -128,32 +130,37 @@ def median_and_mad(values: Floats) -> tuple[FloatArray, FloatArray, IntArray]:
     used = np.full(n, k, np.int64)
     if n == 0 or k == 0:
         return np.full(n, np.nan), np.full(n, np.nan), used
-    holes = np.isnan(np.min(values, axis=1))
+    lowest = np.min(values, axis=1)
+    holes = np.isnan(lowest)
     if holes.any():
         level, spread = np.empty(n), np.empty(n)
         level[holes], spread[holes], used[holes] = _with_holes(values[holes])
         if not holes.all():
-            level[~holes], spread[~holes] = _without_holes(values[~holes])
+            level[~holes], spread[~holes] = _without_holes(values[~holes], False)
         return level, spread, used
-    return *_without_holes(values), used
+    return *_without_holes(values, bool((lowest > 0.0).all())), used
 
 
-def _without_holes(values: Floats) -> tuple[FloatArray, FloatArray]:
+def _without_holes(values: Floats, positive: bool) -> tuple[FloatArray, FloatArray]:
     """Rows without NaN, by selection in place: half the values are left below the median and half above it."""
     half = values.shape[1] // 2
-    level = _middle(values)
+    level = _middle(values, positive)
     column = level.astype(values.dtype)[:, None]
     np.subtract(column, values[:, :half], out=values[:, :half])
     np.subtract(values[:, half:], column, out=values[:, half:])
-    # Deviations are not negative, and such floats sort like the integers of the same bits, which is faster.
-    return level, _middle(values, np.int32 if values.dtype.itemsize == 4 else np.int64)
+    return level, _middle(values, True)
 
 
-def _middle(values: Floats, sort_as: Any = None) -> FloatArray:
-    """The median of each row of (n, k); the values are left with the k // 2 smaller ones in front."""
+def _middle(values: Floats, positive: bool) -> FloatArray:
+    """The median of each row of (n, k); the values are left with the k // 2 smaller ones in front.
+
+    Floats that are not negative sort like the integers of the same bits, which is faster.
+    """
     half = values.shape[1] // 2
-    sorted_view: NDArray[Any] = values if sort_as is None else values.view(sort_as)
-    sorted_view.partition(half, axis=1)
+    view: NDArray[Any] = values
+    if positive:
+        view = values.view(np.int32 if values.dtype.itemsize == 4 else np.int64)
+    view.partition(half, axis=1)
     upper = values[:, half].astype(float)
     if values.shape[1] % 2:
         return upper

@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hindlight.archive import MEGABYTE
-from hindlight.background import Background, annulus_of, local_background
+from hindlight.background import Background, annulus_of, keep_freed_memory, local_background
 from hindlight.detection import detect_bright
 from hindlight.errors import UsageError
 from hindlight.facts import NAN
@@ -190,6 +190,7 @@ def measure(
     """
     if len(x) == 0:
         return _nothing()
+    keep_freed_memory()
     order = np.argsort(y, kind="stable")  # what lies together in the file is read together
     parts = [order[start : start + AT_A_TIME] for start in range(0, len(x), AT_A_TIME)]
     found = [
@@ -213,9 +214,15 @@ def _measure_some(
     """`measure` for as many positions as fit into the processor's cache together."""
     ix, iy = _nearest(x), _nearest(y)
     annulus = annulus_of(beam, settings)
-    local = local_background(pixels, ix, iy, annulus)
+    wide = pixels.stamps(ix, iy, annulus.half, annulus.step)
+    local = local_background(wide, annulus, pixels.quantum)
     beam_pixels = math.pi * beam.major * beam.minor / (4.0 * math.log(2.0)) / annulus.step**2
-    raw = pixels.stamps(ix, iy, _half_width(estimator, beam))
+    half = _half_width(estimator, beam)
+    if annulus.step == 1 and half <= annulus.half:
+        middle = slice(annulus.half - half, annulus.half + half + 1)
+        raw = wide[:, middle, middle]
+    else:
+        raw = pixels.stamps(ix, iy, half)
     with np.errstate(invalid="ignore"):  # infinite pixels may make NaN, never a warning
         signal = raw - local.level[:, None, None]
     stamps = Stamps(

@@ -44,7 +44,9 @@ def planted(size: int, pixel: float) -> list[skies.Source]:
     return [pulser, wave]
 
 
-def run_once(folder: Path, seed: int, blanks: int, pool: int, frames: int, size: int) -> tuple[Table, dict[str, np.ndarray]]:
+def run_once(
+    folder: Path, seed: int, blanks: int, pool: int, frames: int, size: int
+) -> tuple[Table, dict[str, np.ndarray]]:
     """Simulate, mine, and return the candidate table and the controls' columns."""
     sky = skies.Sky(n_frames=frames, size=size, noise="heavy")
     sources = planted(size, sky.pixel_arcsec)
