@@ -9,7 +9,9 @@ from scipy import stats
 from hindlight import calibrate
 
 # Benjamini & Hochberg 1995, JRSS B 57, 289, section 3.2: fifteen p-values, four rejected at q = 0.05.
-PUBLISHED_P = [.0001, .0004, .0019, .0095, .0201, .0278, .0298, .0344, .0459, .3240, .4262, .5719, .6528, .7590, 1.0]  # fmt: skip
+PUBLISHED_P = [
+    .0001, .0004, .0019, .0095, .0201, .0278, .0298, .0344, .0459, .3240, .4262, .5719, .6528, .7590, 1.0
+]  # fmt: skip
 
 
 def test_false_discovery_gives_the_published_example():

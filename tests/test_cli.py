@@ -6,8 +6,8 @@ import sys
 from pathlib import Path
 
 import pytest
-import skies
 
+import skies
 from hindlight import cli
 
 TEXT = "name,ra,dec\na,150.0,-30.0\n"

@@ -11,7 +11,6 @@ from pathlib import Path
 import numpy as np
 import pyarrow.parquet as pq
 import pytest
-import skies
 from astropy import units as u
 from astropy.coordinates import EarthLocation, SkyCoord
 from astropy.io import fits
@@ -20,6 +19,7 @@ from astropy.time import Time
 from astropy.utils import iers
 from distributed import LocalCluster
 
+import skies
 from hindlight import cli
 from hindlight.schema import CANDIDATES, REASONS, STANDINGS
 
@@ -259,8 +259,8 @@ def test_a_strangers_statistic_works_as_file_and_as_distribution(tmp_path):
         mine(*arguments(folder, run), "--plugin", STRANGER / "longest_run.py", "--workers", workers)
         tables.append((run / "candidates.ecsv").read_bytes())
         run = tmp_path / f"site{workers}"
-        command = [sys.executable, "-c", f"import sys; sys.path.insert(0, {str(site)!r}); from hindlight.cli import main; main()",
-                   "mine", "-q", *map(str, arguments(folder, run)), "--workers", str(workers)]  # fmt: skip
+        command = [sys.executable, "-m", "hindlight", "mine", "-q", *map(str, arguments(folder, run))]
+        command += ["--workers", str(workers)]
         done = subprocess.run(command, capture_output=True, text=True, check=False, env=with_path(site))
         assert done.returncode == 0, done.stderr
         tables.append((run / "candidates.ecsv").read_bytes())
@@ -474,4 +474,4 @@ def test_killed_ten_times_and_continued(tmp_path):
     assert subprocess.run(command, check=False).returncode == 0
     assert all((p.stat().st_ino, p.stat().st_mtime_ns) == stat for p, stat in finished.items())
     assert (run / "candidates.ecsv").read_bytes() == (tmp_path / "quiet" / "candidates.ecsv").read_bytes()
-    assert not [p for p in run.rglob(".*.part")]
+    assert not list(run.rglob(".*.part"))

@@ -192,9 +192,7 @@ def _imported(load_module: Callable[[], ModuleType], what: str) -> ModuleType:
         return load_module()
     except (Exception, SystemExit, GeneratorExit) as error:  # noqa: BLE001 - a plugin may raise anything
         where = f" at line {error.lineno}" if isinstance(error, SyntaxError) else ""
-        raise UsageError(
-            f"{what} fails: {type(error).__name__}: {error}{where}; mend or leave it out"
-        ) from None
+        raise UsageError(f"{what} fails: {type(error).__name__}: {error}{where}; mend or leave it out") from None
 
 
 def _refuse_unknown_hooks(manager: pluggy.PluginManager) -> None:

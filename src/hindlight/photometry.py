@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hindlight.archive import MEGABYTE
-from hindlight.background import Background, annulus_of, keep_freed_memory, local_background
+from hindlight.background import Annulus, Background, annulus_of, keep_freed_memory, local_background
 from hindlight.detection import detect_bright
 from hindlight.errors import UsageError
 from hindlight.facts import NAN
@@ -217,23 +217,11 @@ def _measure_some(
     wide = pixels.stamps(ix, iy, annulus.half, annulus.step)
     local = local_background(wide, annulus, pixels.quantum)
     beam_pixels = math.pi * beam.major * beam.minor / (4.0 * math.log(2.0)) / annulus.step**2
-    half = _half_width(estimator, beam)
-    if annulus.step == 1 and half <= annulus.half:
-        middle = slice(annulus.half - half, annulus.half + half + 1)
-        raw = wide[:, middle, middle]
-    else:
-        raw = pixels.stamps(ix, iy, half)
+    raw = _small_stamps(pixels, ix, iy, _half_width(estimator, beam), wide, annulus)
     with np.errstate(invalid="ignore"):  # infinite pixels may make NaN, never a warning
         signal = raw - local.level[:, None, None]
-    stamps = Stamps(
-        pixels=signal,
-        dx=x - ix,
-        dy=y - iy,
-        rms=local.rms,
-        background_err=local.error(beam_pixels if estimator.correlated else 1.0),
-        beam=beam,
-        electrons_per_unit=electrons_per_unit,
-    )
+    background_err = local.error(beam_pixels if estimator.correlated else 1.0)
+    stamps = Stamps(signal, x - ix, y - iy, local.rms, background_err, beam, electrons_per_unit)
     flux, flux_err = _estimate(estimator, stamps)
     flags = np.zeros(len(ix), np.int64)
     flags[(2 * local.used < len(annulus.index)) | np.isnan(local.rms)] |= Flag.THIN_BACKGROUND
@@ -258,6 +246,14 @@ def _nearest(coordinate: FloatArray) -> IntArray:
 def _half_width(estimator: Estimator, beam: BeamShape) -> int:
     """Of the stamps that hold every pixel which reaches into the estimator's radius, wherever in a pixel they centre."""
     return max(1, math.ceil(estimator.radius(beam)))
+
+
+def _small_stamps(pixels: Pixels, ix: IntArray, iy: IntArray, half: int, wide: Floats, annulus: Annulus) -> Floats:
+    """Stamps for the estimator, from the middle of those for the annulus where these hold every pixel."""
+    if annulus.step > 1 or half > annulus.half:
+        return pixels.stamps(ix, iy, half)
+    middle = slice(annulus.half - half, annulus.half + half + 1)
+    return wide[:, middle, middle]
 
 
 def _estimate(estimator: Estimator, stamps: Stamps) -> tuple[FloatArray, FloatArray]:

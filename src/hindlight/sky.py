@@ -37,7 +37,7 @@ _PLAIN = re.compile(
 )
 _ODD = re.compile(r"[AB]P?_ORDER|(CPDIS|CQDIS|DP|DQ)\d|D2IM.*|WAT\d_\d+|(PC|CD)\d{6}|PS\d_\d+|AMDX.*|PLTRAH")
 _TABLE = re.compile(r"(CPDIS|CQDIS|D2IMDIS)\d")
-_FIVE_POINTS = np.array([[0.5, -0.5, 0.0, 0.0, 0.0], [0.0, 0.0, 0.5, -0.5, 0.0]])  # right, left, up, down, middle
+_FIVE_POINTS = np.array([[0.5, 0.0], [-0.5, 0.0], [0.0, 0.5], [0.0, -0.5], [0.0, 0.0]])  # right, left, up, down, middle
 
 
 class _Engine(Protocol):
@@ -82,8 +82,8 @@ class Projection:
 
     def pixel_to_icrs(self, x: FloatArray, y: FloatArray, mjd: float = NAN) -> tuple[FloatArray, FloatArray]:
         """ICRS degrees of 0-based pixel coordinates, shape (n,); NaN where the projection is undefined."""
-        lon, lat = self._pixel_to_own(x, y)
-        return to_icrs(lon, lat, self.system, mjd)
+        pixel = np.column_stack((np.asarray(x, float), np.asarray(y, float)))
+        return to_icrs(*self._own(pixel), self.system, mjd)
 
     @cached_property
     def pixel_scale_arcsec(self) -> float:
@@ -98,14 +98,14 @@ class Projection:
 
     def jacobian(self, x: float, y: float) -> FloatArray:
         """Shape (2, 2): a pixel offset (dx, dy) to (east, north) arcsec of the header's *own* system, as beams use."""
-        return _tangent_map(*self._pixel_to_own(x + _FIVE_POINTS[0], y + _FIVE_POINTS[1]))
+        return _tangent_map(*self._own(_FIVE_POINTS + np.array((x, y))))
 
     def jacobian_icrs(self, x: float, y: float, mjd: float = NAN) -> FloatArray:
         """Shape (2, 2): a pixel offset (dx, dy) to ICRS (east, north) arcsec."""
-        return _tangent_map(*self.pixel_to_icrs(x + _FIVE_POINTS[0], y + _FIVE_POINTS[1], mjd))
+        return _tangent_map(*to_icrs(*self._own(_FIVE_POINTS + np.array((x, y))), self.system, mjd))
 
-    def _pixel_to_own(self, x: FloatArray, y: FloatArray) -> tuple[FloatArray, FloatArray]:
-        pixel = np.column_stack((np.asarray(x, float), np.asarray(y, float)))
+    def _own(self, pixel: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Longitude and latitude in the header's own system of pixels (n, 2)."""
         world = self.engine.to_world(pixel) if len(pixel) else pixel
         first, second = (1, 0) if self.swapped else (0, 1)
         return world[:, first], world[:, second]

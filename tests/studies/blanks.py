@@ -21,7 +21,6 @@ from scipy import stats
 
 sys.path.insert(0, str(Path(__file__).parents[1]))
 import skies
-
 from hindlight import cli
 
 LEVEL = 0.05
