@@ -359,6 +359,19 @@ def test_errors_that_are_not_the_scatter_are_said(tmp_path, capsys):
     assert "are not the scatter of blank sky" in capsys.readouterr().out
 
 
+def test_sums_of_a_map_per_beam_are_fluxes(tmp_path):
+    """A source of 100 Jy/beam is 100 by every estimator: sums of pixels are divided by the beam's area."""
+    look = skies.Sky(n_frames=10, size=110)
+    source = skies.Source("s", 0.0, 0.0, 100.0)
+    skies.write_sky(tmp_path / "frames", look, [source], seed=8)
+    (tmp_path / "targets.csv").write_text(skies.target_text([source], look), encoding="utf-8")
+    for name in ("peak", "psf", "aperture"):
+        (tmp_path / "s.toml").write_text(f'[photometry]\nestimator = "{name}"\n', encoding="utf-8")
+        mine(*arguments(tmp_path, tmp_path / name))
+        (row,) = Table.read(tmp_path / name / "channels.ecsv")
+        assert row["flux_mean"] == pytest.approx(100.0, rel=0.03)
+
+
 def test_a_damaged_part_is_named_and_made_anew(tmp_path, capsys):
     """A flipped byte in a part is found by its checksum and named; deleted, the same command gives the same table."""
     folder = small(tmp_path)

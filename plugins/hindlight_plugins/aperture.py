@@ -26,6 +26,7 @@ class Aperture(Estimator):
     """Flux within a circle, for images in counts or in a unit per pixel."""
 
     units: ClassVar[tuple[str, ...]] = ("", "Jy/pixel", "mJy/pixel", "uJy/pixel")
+    sums: ClassVar[bool] = True
 
     radius_fwhm: float = setting(1.5, "radius of the circle", unit="FWHM", minimum=0.3, maximum=3)
 

@@ -28,6 +28,7 @@ class Psf(Estimator):
 
     units: ClassVar[tuple[str, ...]] = ("adu", "electron", "count", "adu/s", "electron/s", "count/s")
     needs_beam: ClassVar[bool] = True
+    sums: ClassVar[bool] = True
 
     radius_fwhm: float = setting(1.5, "pixels up to this distance are used", unit="FWHM", minimum=0.5, maximum=3)
 

@@ -30,6 +30,8 @@ from hindlight.sky import Projection, beam_shape, projection
 AT_A_TIME = 128  # positions: their stamps stay in the processor's cache
 NEIGHBOUR_SNR = 5.0  # a neighbour must stand this far above the background to be flagged
 
+PER_BEAM = "/beam"
+
 Columns = dict[str, NDArray[Any]]
 
 
@@ -111,6 +113,11 @@ def measure_frame(
     found = measure(
         pixels, x, y, opened.beam, estimator, settings.photometry, frame.electrons_per_unit, frame.saturation
     )
+    if estimator.sums and fold_unit(frame.unit).endswith(PER_BEAM):
+        # Summed pixels of a map per beam count each point of it once a beam: the flux is the sum over the beam's area.
+        area = math.pi * opened.beam.major * opened.beam.minor / (4.0 * math.log(2.0))
+        found["flux"] /= area
+        found["flux_err"] /= area
     return {"index": index, "x": x, "y": y, **found}
 
 

@@ -239,13 +239,15 @@ class Estimator(Plugin):
 
     `units` lists the folded units (see `hindlight.fold_unit`) for which it is the default; with `needs_beam` it is not
     where beam or seeing are only assumed. With `correlated` it takes the noise as correlated over a beam, so that
-    `background_err` counts the annulus' beams instead of its pixels.
+    `background_err` counts the annulus' beams instead of its pixels. With `sums` its flux is a sum over pixels, which is
+    divided by the beam's area where the unit is per beam.
     """
 
     kind: ClassVar[str] = "estimator"
     units: ClassVar[tuple[str, ...]] = ()
     needs_beam: ClassVar[bool] = False
     correlated: ClassVar[bool] = False
+    sums: ClassVar[bool] = False
 
     def radius(self, beam: BeamShape) -> float:
         """How far from the position, in pixels, the estimator needs pixels."""

@@ -132,7 +132,8 @@ def _measure_frame(
         who["ra"][near], who["dec"][near], who["pm_ra_cosdec"][near], who["pm_dec"][near], who["ref_epoch"][near], year
     )
     facts = frame_facts(frames, row)
-    estimator = photometry.choose_estimator(estimators, facts.unit, order.settings.photometry.estimator)
+    wanted = order.settings.photometry.estimator
+    estimator = photometry.choose_estimator(estimators, facts.unit, wanted, facts.beam_major > 0)
     found = photometry.measure_frame(facts, ra, dec, estimator, order.settings)
     inside = near[found["index"]]
     n = len(inside)
