@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import importlib.util
+import sys
 from pathlib import Path
 from types import ModuleType
 
@@ -27,8 +28,6 @@ def study(name: str) -> ModuleType:
     assert spec is not None
     assert spec.loader is not None
     module = importlib.util.module_from_spec(spec)
-    import sys
-
     sys.modules[spec.name] = module
     spec.loader.exec_module(module)
     return module

@@ -284,3 +284,19 @@ def test_no_such_image(tmp_path: Path) -> None:
     for hdu in (0, 2):
         with pytest.raises(SetAsideError, match=f"no image in HDU {hdu}"):
             find_image(str(tmp_path / "a.fits"), hdu, LIMIT)
+
+
+def test_counts_are_recognised(tmp_path: Path) -> None:
+    """Whole numbers have a quantum however they are stored; other pixels, padding and lossy tiles have none."""
+    counts = RNG.poisson(5.0, (40, 50))
+    images = {"int": (counts.astype(np.int16), 1.0), "float": (counts.astype(np.float32), 1.0), "real": (IMAGE, 0.0),
+              "zeros": (np.zeros((40, 50), np.float32), 0.0)}  # fmt: skip
+    for name, (image, quantum) in images.items():
+        fits.PrimaryHDU(image).writeto(tmp_path / f"{name}.fits")
+        assert read_plane(place(tmp_path / f"{name}.fits"), LIMIT).quantum == quantum
+    blank = counts.astype(np.float64)
+    blank[:, 20:30] = np.nan
+    fits.PrimaryHDU(blank).writeto(tmp_path / "blank.fits")
+    assert read_plane(place(tmp_path / "blank.fits"), LIMIT).quantum == 1.0
+    fits.HDUList([fits.PrimaryHDU(), fits.CompImageHDU(IMAGE)]).writeto(tmp_path / "a.fits.fz")
+    assert read_plane(place(tmp_path / "a.fits.fz", 1), LIMIT).quantum == 0.0

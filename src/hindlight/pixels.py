@@ -204,12 +204,18 @@ def read_plane(place: PlanePlace, unpacked_limit: int, windows: Windows | None =
 def _scaled(stored: NDArray[Any], hdu: Hdu) -> Pixels:
     """Pixels with the HDU's scale. Whether floating-point pixels are counts is told by some in the middle."""
     quantum = abs(hdu.bscale)
-    if stored.dtype.kind == "f":
-        middle = stored[stored.shape[0] // 2, :SAMPLE]
-        finite = middle[np.isfinite(middle)]
-        counts = bool((finite == np.rint(finite)).all()) and len(np.unique(finite)) > 2
-        quantum = quantum if counts and not hdu.compressed else 0.0
+    if stored.dtype.kind == "f" and (hdu.compressed or not _holds_counts(stored)):
+        quantum = 0.0
     return Pixels(stored, hdu.bscale, hdu.bzero, hdu.blank, quantum)
+
+
+def _holds_counts(stored: NDArray[Any]) -> bool:
+    """Whether some pixels in the middle of a floating-point image are whole numbers, more than two different ones."""
+    middle = stored[stored.shape[0] // 2]
+    if float(middle[len(middle) // 2]) % 1.0 != 0.0 and math.isfinite(middle[len(middle) // 2]):
+        return False  # the usual case, at little cost
+    finite = middle[:SAMPLE][np.isfinite(middle[:SAMPLE])]
+    return bool((finite == np.rint(finite)).all()) and len(np.unique(finite)) > 2
 
 
 def _mapped(place: PlanePlace, end: int) -> mmap.mmap:

@@ -29,6 +29,7 @@ from hindlight.systems import BadWcsError, NoCelestialError, System, from_icrs, 
 __all__ = ["BadWcsError", "NoCelestialError", "Projection", "System", "beam_shape", "projection"]
 
 LEAN_CODES = {"SIN", "TAN", "ARC", "ZEA", "STG", "CAR", "CEA", "MER", "SFL", "AIT", "MOL", "NCP", "GLS"}
+LEGACY_CODES = {"NCP", "GLS"}
 TURNING_CODES = {"CAR", "CEA", "MER"}  # 360 degrees of native longitude are one constant step of pixels
 ROUND_TRIP_PIXELS = 0.01  # an inverted distortion that comes back further off than this has not converged
 
@@ -117,9 +118,9 @@ def projection(cards: Cards, path: str = "") -> Projection:
     `path` is the local file itself, needed only for look-up-table distortions, which live in other HDUs. Raises
     `NoCelestialError` or `BadWcsError` with a sentence.
     """
-    kinds = [(key, _kind(key)) for key in cards]
-    if not any(kind == "odd" for _, kind in kinds):
-        lean = _lean("".join([cards.card(key) for key, kind in kinds if kind]))
+    kinds = {key: kind for key in cards if (kind := _kind(key))}
+    if "odd" not in kinds.values():
+        lean = _lean("".join([cards.card(key) for key in kinds]))
         if lean is not None:
             return lean
     return _full(cards.raw, path if _has_tables(cards) else "")
@@ -166,7 +167,8 @@ def _lean(key: str) -> Projection | None:
     text = two_axes(cards, found.axes)
     with _as_bad_wcs():
         prm = Wcsprm(header=text.encode("latin-1"), relax=True)
-        prm.fix()  # NCP and GLS become SIN and SFL
+        if found.code in LEGACY_CODES:
+            prm.fix()  # they become SIN and SFL
         prm.set()
         turn = None
         if found.code in TURNING_CODES:
