@@ -20,7 +20,7 @@ from astropy.utils import iers
 from distributed import LocalCluster
 
 import skies
-from hindlight import cli
+from hindlight import cli, crew
 from hindlight.schema import CANDIDATES, REASONS, STANDINGS
 
 DEMO = Path(__file__).parents[1] / "demo_archive"
@@ -146,15 +146,16 @@ def test_measured_times_agree_with_astropy(demo):
             assert abs(rows["bjd_tdb"][row] - (2451545.0 + expected / 86400)) < 1e-9
 
 
-def small(tmp_path, n_frames=24, **sky):
+def small(tmp_path, n_frames=24, size=100, per_field=130, batch=6, **sky):
     """A small archive with a flare, a steady source and blanks; returns its folder."""
     flare = skies.Source("flare", 200.0, 0.0, lambda k, _d, _s: 20.0 if k == 7 else 0.0)
     steady = skies.Source("steady", -200.0, 0.0, 8.0)
     blanks = skies.lattice(4, 200.0)
-    look = skies.Sky(n_frames=n_frames, size=100, **sky)
+    look = skies.Sky(n_frames=n_frames, size=size, **sky)
     skies.write_sky(tmp_path / "frames", look, [flare, steady], seed=3)
     (tmp_path / "targets.csv").write_text(skies.target_text([flare, steady, *blanks], look), encoding="utf-8")
-    (tmp_path / "s.toml").write_text("[controls]\nper_field = 130\n[flow]\nbatch_frames = 6\n", encoding="utf-8")
+    settings = f"[controls]\nper_field = {per_field}\n[flow]\nbatch_frames = {batch}\n"
+    (tmp_path / "s.toml").write_text(settings, encoding="utf-8")
     return tmp_path
 
 
@@ -173,7 +174,7 @@ def contents(run):
 
 def test_same_bytes_for_any_number_of_workers(tmp_path):
     """One process, two processes and four write the same bytes."""
-    folder = small(tmp_path)
+    folder = small(tmp_path, per_field=60)
     mine(*arguments(folder, tmp_path / "one"), "--workers", 1)
     expected = contents(tmp_path / "one")
     for workers in (2, 4):
@@ -185,9 +186,9 @@ def test_same_bytes_for_any_number_of_workers(tmp_path):
     assert candidates(tmp_path / "one")["flare"]["standing"] == "single"
 
 
-def test_a_scheduler_that_exists_is_used(tmp_path):
+def test_a_scheduler_that_exists_is_used(tmp_path, monkeypatch):
     """--scheduler gives the same bytes, file plugins travel to its workers, and a wrong address is one line."""
-    folder = small(tmp_path, n_frames=12)
+    folder = small(tmp_path, n_frames=12, per_field=40)
     plugin = tmp_path / "longest_run.py"
     shutil.copy(STRANGER / "longest_run.py", plugin)
     mine(*arguments(folder, tmp_path / "one"), "--plugin", plugin)
@@ -196,6 +197,7 @@ def test_a_scheduler_that_exists_is_used(tmp_path):
         address = cluster.scheduler_address
         mine(*arguments(folder, tmp_path / "two"), "--plugin", plugin, "--scheduler", address)
     assert contents(tmp_path / "two") == expected
+    monkeypatch.setattr(crew, "SCHEDULER_TIMEOUT_S", 1)
     mine(*arguments(folder, tmp_path / "three"), "--scheduler", "tcp://127.0.0.1:9", status=2)
 
 
@@ -248,7 +250,7 @@ def test_changed_plugins_only_judge_again(tmp_path):
 
 def test_a_strangers_statistic_works_as_file_and_as_distribution(tmp_path):
     """The same statistic gives the same table as a file and installed from outside, in one process and in two."""
-    folder = small(tmp_path)
+    folder = small(tmp_path, n_frames=10, per_field=40)
     site = tmp_path / "site"
     install = [sys.executable, "-m", "pip", "install", "--quiet", "--no-index", "--no-deps", "--no-build-isolation",
                "--target", str(site), str(STRANGER)]  # fmt: skip
@@ -372,6 +374,25 @@ def test_sums_of_a_map_per_beam_are_fluxes(tmp_path):
         assert row["flux_mean"] == pytest.approx(100.0, rel=0.03)
 
 
+def test_an_estimator_that_fails_sets_frames_aside(tmp_path):
+    """What an estimator raises is said for each frame, and the run ends as a run without usable frames does."""
+    folder = small(tmp_path, n_frames=10, per_field=20)
+    text = (
+        "from dataclasses import dataclass\nfrom hindlight import *\n@dataclass(frozen=True)\nclass Bad(Estimator):\n"
+    )
+    text += (
+        "    def radius(self, beam):\n        return 3.0\n    def measure(self, stamps):\n        raise KeyError('x')\n"
+    )
+    text += "@hookimpl\ndef register_estimators():\n    return [Bad]\n"
+    (tmp_path / "bad.py").write_text(text, encoding="utf-8")
+    (tmp_path / "s.toml").write_text('[photometry]\nestimator = "bad"\n', encoding="utf-8")
+    mine(*arguments(folder, tmp_path / "run"), "--plugin", tmp_path / "bad.py", status=3)
+    rejects = Table.read(tmp_path / "run" / "rejects.ecsv")
+    assert len(rejects) == 10
+    assert set(rejects["reason"]) == {"not_measured"}
+    assert "KeyError" in str(rejects["detail"][0])
+
+
 def test_a_damaged_part_is_named_and_made_anew(tmp_path, capsys):
     """A flipped byte in a part is found by its checksum and named; deleted, the same command gives the same table."""
     folder = small(tmp_path)
@@ -461,8 +482,7 @@ def test_a_source_seen_only_in_the_mean_is_steady_and_four_frames_are_too_few(tm
 
 def test_killed_ten_times_and_continued(tmp_path):
     """SIGKILL at ten random moments, continued each time: the same table, and no finished part written again."""
-    folder = small(tmp_path)
-    (folder / "s.toml").write_text("[controls]\nper_field = 130\n[flow]\nbatch_frames = 1\n", encoding="utf-8")
+    folder = small(tmp_path, n_frames=20, size=80, per_field=40, batch=1)
     mine(*arguments(folder, tmp_path / "quiet"))
     run = tmp_path / "run"
     command = [sys.executable, "-m", "hindlight", "mine", "-q", *map(str, arguments(folder, run))]

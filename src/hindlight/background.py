@@ -170,18 +170,27 @@ def _middle(values: Floats, positive: bool) -> FloatArray:
 
 
 def _with_holes(values: Floats) -> tuple[FloatArray, FloatArray, IntArray]:
-    """Rows with NaN, by sorting, which puts NaN last."""
-    used = np.count_nonzero(~np.isnan(values), axis=1)
-    values.sort(axis=1)
-    level = _sorted_middle(values, used)
-    values = np.abs(values - level.astype(values.dtype)[:, None])
-    values.sort(axis=1)
-    return level, _sorted_middle(values, used), used
+    """Rows with values that are no numbers: every other one of those is put below all values and the rest above, which
+
+    leaves the median where it was and lets one selection serve every row.
+    """
+    holes = ~np.isfinite(values)
+    used = np.count_nonzero(~holes, axis=1)
+    count: NDArray[np.int32] = np.cumsum(holes, axis=1, dtype=np.int32)
+    aside = np.where(count & 1, -np.inf, np.inf).astype(values.dtype)
+    level = _middle_between_holes(np.where(holes, aside, values), used)
+    deviation = np.abs(values - level.astype(values.dtype)[:, None])
+    return level, _middle_between_holes(np.where(holes, aside, deviation), used), used
 
 
-def _sorted_middle(values: Floats, used: IntArray) -> FloatArray:
-    """The median of the first `used` values of each sorted row; at least one more value (NaN) stands behind them."""
-    rows = np.arange(len(values))
-    lower, upper = values[rows, np.maximum(used - 1, 0) // 2], values[rows, used // 2]
-    middle: FloatArray = (lower.astype(float) + upper.astype(float)) / 2.0
+def _middle_between_holes(values: Floats, used: IntArray) -> FloatArray:
+    """The median of the `used` finite values of each row of (n, k), NaN for none; see `_with_holes` for the others."""
+    k = values.shape[1]
+    middle = np.full(len(values), np.nan)
+    odd = (k - used) % 2 == 1  # then one more is below than above
+    for rows, upper, pair in ((~odd & (used > 0), k // 2, k % 2 == 0), (odd & (used > 0), (k + 1) // 2, k % 2 == 1)):
+        part = values[rows]
+        part.partition(upper, axis=1)
+        high = part[:, upper].astype(float)
+        middle[rows] = (high + part[:, :upper].max(axis=1, initial=-np.inf)) / 2 if pair else high
     return middle

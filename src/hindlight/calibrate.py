@@ -109,9 +109,9 @@ def _combination(p: FloatArray, distance: FloatArray) -> tuple[IntArray, FloatAr
 
 
 def leave_one_out(null: Null) -> FloatArray:
-    """The p-value of every control ranked among all of them, shape (n,)."""
-    if null.n == 0:
-        return np.empty(0)
+    """The p-value of every control ranked among all of them, shape (n,); 1 where nothing was measured."""
+    if null.values.size == 0:
+        return np.ones(null.n)
     p = np.where(np.isfinite(null.values), null.at_least / null.n, 1.0)
     _, best, distance = _combination(p, (null.values - null.centre) / null.spread)
     order = np.lexsort((-distance, best))

@@ -54,6 +54,7 @@ REASONS = {
     "unknown_axis": "an axis longer than one is neither celestial nor time, frequency or Stokes",
     "no_dialect": "no dialect recognises the header",
     "bad_pixels": "the pixels could not be read when the frame was measured",
+    "not_measured": "an estimator plugin failed on the frame",
     "vanished": "the file was there when the run began and is gone",
     "changed": "the file has changed since it was measured",
 }

@@ -19,7 +19,7 @@ from hindlight import clock, host, judge, photometry, store
 from hindlight.candidates import ChannelView, Described, Examined, View, describe
 from hindlight.channels import channels_of
 from hindlight.errors import HindlightError
-from hindlight.fence import Fault, blank, call, checked
+from hindlight.fence import Fault, blank, call, checked, one_line
 from hindlight.headers import SetAsideError
 from hindlight.lightcurve import Channel, FloatArray, IntArray, LightCurve
 from hindlight.plan import BrightSources
@@ -98,20 +98,23 @@ def measure_piece(order: Order, piece: Piece) -> dict[str, int]:
     for row, vector in zip(rows, observatory, strict=True):
         try:
             parts.append(_measure_frame(order, tables.frames, int(row), who, vectors, vector, estimators))
-        except (SetAsideError, OSError, ValueError) as error:
+        except (Exception, SystemExit) as error:  # noqa: BLE001 - a bad frame, or an estimator of anyone's, is said
             rejects.append(_reject(tables.frames, int(row), error))
     columns = _concatenated(parts)
     store.write_part(tables.folder, piece, columns, rejects)
     return {"frames": len(rows), "measurements": len(columns["flux"]), "rejects": len(rejects)}
 
 
-def _reject(frames: Columns, row: int, error: Exception) -> dict[str, Any]:
-    reason = error.reason if isinstance(error, SetAsideError) else "bad_pixels"
-    detail = error.detail if isinstance(error, SetAsideError) else " ".join(str(error).split())
-    return {
-        "path": str(frames["path"][row]), "hdu": int(frames["hdu"][row]), "plane": int(frames["plane"][row]),
-        "reason": reason, "detail": detail, "archive": str(frames["archive"][row]),
-    }  # fmt: skip
+def _reject(frames: Columns, row: int, error: BaseException) -> dict[str, Any]:
+    """A row of the rejects for a frame that could not be measured."""
+    if isinstance(error, SetAsideError):
+        reason, detail = error.reason, error.detail
+    else:
+        known = isinstance(error, OSError | ValueError)
+        reason, detail = "bad_pixels" if known else "not_measured", f"{type(error).__name__}: {one_line(str(error))}"
+    place = {name: int(frames[name][row]) for name in ("hdu", "plane")}
+    texts = {name: str(frames[name][row]) for name in ("path", "archive")}
+    return {**texts, **place, "reason": reason, "detail": detail}
 
 
 def _near(frames: Columns, row: int, vectors: FloatArray) -> IntArray:
