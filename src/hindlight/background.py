@@ -189,6 +189,8 @@ def _middle_between_holes(values: Floats, used: IntArray) -> FloatArray:
     middle = np.full(len(values), np.nan)
     odd = (k - used) % 2 == 1  # then one more is below than above
     for rows, upper, pair in ((~odd & (used > 0), k // 2, k % 2 == 0), (odd & (used > 0), (k + 1) // 2, k % 2 == 1)):
+        if not rows.any():
+            continue
         part = values[rows]
         part.partition(upper, axis=1)
         high = part[:, upper].astype(float)
