@@ -21,7 +21,7 @@ NUMBERS = st.one_of(st.floats(-1e6, 1e6, width=32), st.just(float("nan")))
 def background(pixels: Pixels, ix: np.ndarray, iy: np.ndarray) -> Background:
     """Around pixels, with the default annulus of a round beam."""
     annulus = annulus_of(ROUND, SETTINGS)
-    return local_background(pixels.stamps(ix, iy, annulus.half, annulus.step), annulus, pixels.quantum)
+    return local_background(pixels.stamps(ix, iy, annulus.lattice), annulus, pixels.quantum)
 
 
 def obvious(row: np.ndarray) -> tuple[float, float, int]:
@@ -53,29 +53,38 @@ def test_no_rows_and_no_columns() -> None:
     assert np.isnan(median_and_mad(np.zeros((2, 0)))[0]).all()
 
 
-@pytest.mark.parametrize("fwhm", [1.0, 2.5, 3.0, 5.0, 12.0])
-def test_annulus(fwhm: float) -> None:
+@pytest.mark.parametrize("major", [1.0, 2.5, 3.0, 5.0, 12.0, 40.0])
+@pytest.mark.parametrize("axis_ratio", [1.0, 0.4])
+def test_annulus(major: float, axis_ratio: float) -> None:
     """The annulus holds the pixels whose centres lie between its radii, thinned where they are too many."""
-    annulus = annulus_of(BeamShape(fwhm, fwhm, 0.0), SETTINGS)
-    offset = np.arange(-annulus.half, annulus.half + 1, annulus.step)
-    distance = np.hypot(*np.meshgrid(offset, offset)).ravel()
-    inner, outer = SETTINGS.annulus_inner * fwhm, SETTINGS.annulus_outer * fwhm
+    beam = BeamShape(major, major * axis_ratio, 0.0)
+    annulus = annulus_of(beam, SETTINGS)
+    lattice = annulus.lattice
+    rows = np.arange(-lattice.rows, lattice.rows + 1, lattice.down)
+    columns = np.arange(-lattice.columns, lattice.columns + 1, lattice.across)
+    distance = np.hypot(rows[:, None], columns).ravel()
+    inner, outer = SETTINGS.annulus_inner * beam.fwhm, SETTINGS.annulus_outer * beam.fwhm
     np.testing.assert_array_equal(
         annulus.index, np.flatnonzero((distance >= inner - 1e-6) & (distance <= outer + 1e-6))
     )
-    assert 0.0 in offset
-    assert outer - annulus.step < annulus.half <= outer
+    assert 0 in rows
+    assert 0 in columns
+    assert outer - lattice.down < lattice.rows <= outer
+    assert outer - lattice.across < lattice.columns <= outer
+    assert lattice.down <= max(1.0, beam.minor)  # no beam slips between two rows
+    assert lattice.across <= max(1.0, beam.minor)
     assert len(annulus.index) < 1.1 * SETTINGS.annulus_pixels
-    assert annulus.step == 1 or len(annulus.index) > SETTINGS.annulus_pixels / 4.5
+    thinning = lattice.down * lattice.across
+    assert thinning == 1 or len(annulus.index) > SETTINGS.annulus_pixels / 4.5
     assert set(annulus.core.tolist()).isdisjoint(annulus.around)
     assert (distance[annulus.around] < inner).all()
-    assert (distance[annulus.core] <= fwhm).all()
+    assert (distance[annulus.core] <= major).all()
 
 
 def test_the_default_annulus_holds_200_beams() -> None:
     """As the settings promise."""
     annulus = annulus_of(BeamShape(6.0, 6.0, 0.0), SETTINGS)
-    assert len(annulus.index) * annulus.step**2 / (1.1331 * 36) > 200
+    assert len(annulus.index) * annulus.lattice.down * annulus.lattice.across / (1.1331 * 36) > 200
 
 
 def test_background_of_an_image() -> None:

@@ -13,7 +13,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from hindlight.headers import SetAsideError
-from hindlight.pixels import Pixels, PlanePlace, Windows, find_image, read_plane
+from hindlight.pixels import Lattice, Pixels, PlanePlace, Windows, find_image, read_plane
 
 LIMIT = 100_000_000
 RNG = np.random.default_rng(3)
@@ -30,33 +30,39 @@ def whole(path: Path, hdu: int = 0, index: int = 0, axes: tuple[int, int] = (1, 
     return read_plane(place(path, hdu, index, axes), LIMIT).whole()
 
 
-def slow_stamp(image: np.ndarray, x: int, y: int, half: int, step: int) -> np.ndarray:
+def slow_stamp(image: np.ndarray, x: int, y: int, lattice: Lattice) -> np.ndarray:
     """The obvious way: pixel by pixel."""
-    offsets = range(-half, half + 1, step)
     height, width = image.shape
     return np.array(
         [
-            [image[y + j, x + i] if 0 <= y + j < height and 0 <= x + i < width else np.nan for i in offsets]
-            for j in offsets
+            [
+                image[y + j, x + i] if 0 <= y + j < height and 0 <= x + i < width else np.nan
+                for i in range(-lattice.columns, lattice.columns + 1, lattice.across)
+            ]
+            for j in range(-lattice.rows, lattice.rows + 1, lattice.down)
         ]
     )
 
 
-@given(st.integers(1, 12), st.integers(1, 12), st.integers(0, 4), st.integers(1, 3), st.integers(0, 2**32 - 1))
-def test_stamps_are_what_they_should_be(height: int, width: int, steps: int, step: int, seed: int) -> None:
+SMALL = st.tuples(*[st.integers(0, 4), st.integers(0, 4), st.integers(1, 3), st.integers(1, 3)])
+
+
+@given(st.integers(1, 12), st.integers(1, 12), SMALL, st.integers(0, 2**32 - 1))
+def test_stamps_are_what_they_should_be(height: int, width: int, size: tuple[int, ...], seed: int) -> None:
     """Whatever the image, position, size and lattice, stamps hold the right pixels and NaN outside."""
     rng = np.random.default_rng(seed)
     image = rng.normal(size=(height, width))
     x, y = rng.integers(-3, width + 3, 5), rng.integers(-3, height + 3, 5)
-    stamps = Pixels(image).stamps(x, y, steps * step, step)
-    want = [slow_stamp(image, i, j, steps * step, step) for i, j in zip(x, y, strict=True)]
-    np.testing.assert_array_equal(stamps, want)
+    down, across = size[2:]
+    lattice = Lattice(size[0] * down, size[1] * across, down, across)
+    want = [slow_stamp(image, i, j, lattice) for i, j in zip(x, y, strict=True)]
+    np.testing.assert_array_equal(Pixels(image).stamps(x, y, lattice), want)
 
 
 def test_no_positions() -> None:
     """No positions, no stamps."""
     none = np.zeros(0, np.int64)
-    assert Pixels(IMAGE).stamps(none, none, 2).shape == (0, 5, 5)
+    assert Pixels(IMAGE).stamps(none, none, Lattice.square(2)).shape == (0, 5, 5)
 
 
 @pytest.mark.parametrize("kind", [np.uint8, np.int16, np.int32, np.int64, np.float32, np.float64])
@@ -175,8 +181,8 @@ def check_windows(path: Path, want: np.ndarray, axes: tuple[int, int] = (1, 2), 
     """Stamps of an image that is read only around positions are those of the whole."""
     big = PlanePlace(find_image(str(path), 1, LIMIT), axes, index)
     windows = windows_of(want.shape)
-    got = read_plane(big, LIMIT, windows).stamps(windows.ix, windows.iy, windows.half)
-    np.testing.assert_array_equal(got, Pixels(want).stamps(windows.ix, windows.iy, windows.half))
+    got = read_plane(big, LIMIT, windows).stamps(windows.ix, windows.iy, Lattice.square(windows.half))
+    np.testing.assert_array_equal(got, Pixels(want).stamps(windows.ix, windows.iy, Lattice.square(windows.half)))
 
 
 def test_tiles_around_few_positions(tmp_path: Path) -> None:
@@ -207,8 +213,8 @@ def test_tile_compressed_scale_and_blank(tmp_path: Path) -> None:
     want[3, 4] = np.nan
     np.testing.assert_array_equal(whole(path, 1), want)
     windows = windows_of(want.shape)
-    got = read_plane(place(path, 1), LIMIT, windows).stamps(windows.ix, windows.iy, windows.half)
-    np.testing.assert_array_equal(got, Pixels(want).stamps(windows.ix, windows.iy, windows.half))
+    got = read_plane(place(path, 1), LIMIT, windows).stamps(windows.ix, windows.iy, Lattice.square(windows.half))
+    np.testing.assert_array_equal(got, Pixels(want).stamps(windows.ix, windows.iy, Lattice.square(windows.half)))
     unsigned = tmp_path / "b.fits.fz"
     fits.HDUList([fits.PrimaryHDU(), fits.CompImageHDU(np.array([[0, 40000, 65535]] * 3, np.uint16))]).writeto(unsigned)
     np.testing.assert_array_equal(whole(unsigned, 1)[0], [0, 40000, 65535])

@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hindlight.lightcurve import FloatArray, IntArray
-from hindlight.pixels import Floats
+from hindlight.pixels import Floats, Lattice
 from hindlight.plugin import BeamShape
 from hindlight.settings import Photometry
 
@@ -29,14 +29,13 @@ TOLERANCE = 1e-6  # of radii: pixels at a whole number of FWHM must not hang on 
 
 @dataclass(frozen=True, eq=False)
 class Annulus:
-    """Pixels of an annulus on a lattice of every `step`-th row and column.
+    """Pixels of an annulus, on the lattice that holds it.
 
-    `half` is the half width of the square stamp that holds it, a multiple of `step`. Of shape (k,) and picking from the
-    flattened stamp: `index` its pixels, `core` those within a beam's width of the middle, `around` those between.
+    Of shape (k,) and picking from the flattened stamp: `index` its pixels, `core` those within a beam's width of the
+    middle, `around` those between.
     """
 
-    half: int
-    step: int
+    lattice: Lattice
     index: IntArray
     core: IntArray
     around: IntArray
@@ -45,20 +44,26 @@ class Annulus:
 def annulus_of(beam: BeamShape, settings: Photometry) -> Annulus:
     """The annulus that the settings ask for, in units of the beam's mean width."""
     inner, outer = settings.annulus_inner * beam.fwhm, settings.annulus_outer * beam.fwhm
-    return _annulus(beam.major, inner, max(inner, outer), settings.annulus_pixels)
+    return _annulus(beam.major, beam.minor, inner, max(inner, outer), settings.annulus_pixels)
 
 
 @lru_cache(maxsize=64)
-def _annulus(width: float, inner: float, outer: float, most: int) -> Annulus:
-    """An annulus by its radii and the beam's longer width in pixels, with at most about `most` pixels."""
-    step = max(1, math.ceil((math.pi * (outer**2 - inner**2) / most) ** 0.5))
-    half = int(outer) // step * step
-    offset = np.arange(-half, half + 1, step, dtype=float) ** 2
-    square = (offset[:, None] + offset).ravel()
+def _annulus(major: float, minor: float, inner: float, outer: float, most: int) -> Annulus:
+    """An annulus by its radii and the beam's widths in pixels, with at most about `most` pixels.
+
+    Rows are left out before columns are, since pixels of one row lie together in the file and in memory; but never so
+    many that less than one row a beam's width is left.
+    """
+    fewer = math.ceil((math.pi * (outer**2 - inner**2) / most) ** 0.5) ** 2
+    down = max(1, min(fewer, int(minor)))
+    across = max(1, math.ceil(fewer / down))
+    lattice = Lattice(int(outer) // down * down, int(outer) // across * across, down, across)
+    rows, columns = (offset.astype(float) ** 2 for offset in lattice.offsets)
+    square = (rows[:, None] + columns).ravel()
     inner, outer = inner * (1.0 - TOLERANCE), outer * (1.0 + TOLERANCE)
     ring = np.flatnonzero((square >= inner**2) & (square <= outer**2))
-    core, within = square <= width**2, square < inner**2
-    return Annulus(half, step, ring, np.flatnonzero(core), np.flatnonzero(within & ~core))
+    core, within = square <= major**2, square < inner**2
+    return Annulus(lattice, ring, np.flatnonzero(core), np.flatnonzero(within & ~core))
 
 
 @dataclass(frozen=True, eq=False)
@@ -94,7 +99,7 @@ def keep_freed_memory() -> None:
 
 
 def local_background(stamps: Floats, annulus: Annulus, quantum: float = 0.0) -> Background:
-    """Background and noise of stamps (n, m, m) on the annulus' lattice.
+    """Background and noise of stamps on the annulus' lattice, shape (n, rows, columns).
 
     `quantum` is the step between values where they are counts, see `Pixels`.
     """

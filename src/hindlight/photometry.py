@@ -15,13 +15,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hindlight.archive import MEGABYTE
-from hindlight.background import Annulus, Background, annulus_of, keep_freed_memory, local_background
+from hindlight.background import Background, annulus_of, keep_freed_memory, local_background
 from hindlight.detection import detect_bright
 from hindlight.errors import UsageError
 from hindlight.facts import NAN
 from hindlight.headers import fold_unit
 from hindlight.lightcurve import FloatArray, IntArray
-from hindlight.pixels import Floats, Pixels, PlanePlace, Windows, find_image, read_plane
+from hindlight.pixels import Floats, Lattice, Pixels, PlanePlace, Windows, find_image, read_plane
 from hindlight.plugin import BeamShape, Estimator, Stamps
 from hindlight.schema import Flag
 from hindlight.settings import Photometry, Settings
@@ -108,7 +108,8 @@ def measure_frame(
     x, y = x[index], y[index]
     if len(index) == 0:
         return {"index": index, "x": x, "y": y, **_nothing()}
-    half = max(annulus_of(opened.beam, settings.photometry).half, _half_width(estimator, opened.beam))
+    lattice = annulus_of(opened.beam, settings.photometry).lattice
+    half = max(lattice.rows, lattice.columns, _half_width(estimator, opened.beam))
     pixels = opened.pixels(Windows(_nearest(x), _nearest(y), half))
     found = measure(
         pixels, x, y, opened.beam, estimator, settings.photometry, frame.electrons_per_unit, frame.saturation
@@ -157,7 +158,7 @@ def cutout(frame: FrameToMeasure, x: float, y: float, half_width: float, setting
     opened = open_frame(frame, settings)
     half = max(1, math.ceil(half_width * opened.beam.fwhm))
     ix, iy = _nearest(np.array([x])), _nearest(np.array([y]))
-    stamp = opened.pixels(Windows(ix, iy, half)).stamps(ix, iy, half)[0].astype(float)
+    stamp = opened.pixels(Windows(ix, iy, half)).stamps(ix, iy, Lattice.square(half))[0].astype(float)
     to_sky = opened.sky.jacobian_icrs(x, y, frame.mjd)
     return FrameCutout(stamp, x - float(ix[0]) + half, y - float(iy[0]) + half, to_sky, opened.beam.fwhm)
 
@@ -221,10 +222,11 @@ def _measure_some(
     """`measure` for as many positions as fit into the processor's cache together."""
     ix, iy = _nearest(x), _nearest(y)
     annulus = annulus_of(beam, settings)
-    wide = pixels.stamps(ix, iy, annulus.half, annulus.step)
+    lattice = annulus.lattice
+    wide = pixels.stamps(ix, iy, lattice)
     local = local_background(wide, annulus, pixels.quantum)
-    beam_pixels = math.pi * beam.major * beam.minor / (4.0 * math.log(2.0)) / annulus.step**2
-    raw = _small_stamps(pixels, ix, iy, _half_width(estimator, beam), wide, annulus)
+    beam_pixels = math.pi * beam.major * beam.minor / (4.0 * math.log(2.0)) / (lattice.down * lattice.across)
+    raw = _small_stamps(pixels, ix, iy, _half_width(estimator, beam), wide, lattice)
     with np.errstate(invalid="ignore"):  # infinite pixels may make NaN, never a warning
         signal = raw - local.level[:, None, None]
     background_err = local.error(beam_pixels if estimator.correlated else 1.0)
@@ -255,12 +257,12 @@ def _half_width(estimator: Estimator, beam: BeamShape) -> int:
     return max(1, math.ceil(estimator.radius(beam)))
 
 
-def _small_stamps(pixels: Pixels, ix: IntArray, iy: IntArray, half: int, wide: Floats, annulus: Annulus) -> Floats:
+def _small_stamps(pixels: Pixels, ix: IntArray, iy: IntArray, half: int, wide: Floats, lattice: Lattice) -> Floats:
     """Stamps for the estimator, from the middle of those for the annulus where these hold every pixel."""
-    if annulus.step > 1 or half > annulus.half:
-        return pixels.stamps(ix, iy, half)
-    middle = slice(annulus.half - half, annulus.half + half + 1)
-    return wide[:, middle, middle]
+    rows, columns = lattice.rows, lattice.columns
+    if lattice.down * lattice.across > 1 or half > min(rows, columns):
+        return pixels.stamps(ix, iy, Lattice.square(half))
+    return wide[:, rows - half : rows + half + 1, columns - half : columns + half + 1]
 
 
 def _estimate(estimator: Estimator, stamps: Stamps) -> tuple[FloatArray, FloatArray]:

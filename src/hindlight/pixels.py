@@ -34,6 +34,34 @@ SECTIONS_BELOW = 0.25  # windows with their tiles must stay below this fraction 
 Floats = NDArray[np.floating[Any]]
 
 
+@dataclass(frozen=True)
+class Lattice:
+    """Which pixels of a stamp around its middle one: every `down`-th row and `across`-th column.
+
+    `rows` and `columns`, how far it reaches to each side, are multiples of the steps, so that the middle is among them.
+    """
+
+    rows: int
+    columns: int
+    down: int = 1
+    across: int = 1
+
+    @classmethod
+    def square(cls, half: int) -> Lattice:
+        """Every pixel of a square that reaches `half` pixels to each side."""
+        return cls(half, half)
+
+    @property
+    def shape(self) -> tuple[int, int]:
+        """Of a stamp."""
+        return 2 * self.rows // self.down + 1, 2 * self.columns // self.across + 1
+
+    @property
+    def offsets(self) -> tuple[IntArray, IntArray]:
+        """Of rows and of columns from the middle."""
+        return np.arange(-self.rows, self.rows + 1, self.down), np.arange(-self.columns, self.columns + 1, self.across)
+
+
 @dataclass(frozen=True, eq=False)
 class Pixels:
     """One image as it is stored, shape (height, width), and what turns stored numbers into values.
@@ -59,51 +87,50 @@ class Pixels:
         """All values, shape (height, width), NaN where blank."""
         return self._values(self.stored)
 
-    def stamps(self, ix: IntArray, iy: IntArray, half: int, step: int = 1) -> Floats:
-        """Values around pixels (ix, iy), shape (n, m, m) with m = 2 * half // step + 1; NaN where blank or outside.
-
-        `half` is a multiple of `step`; every `step`-th row and column is taken, the middle ones among them.
-        """
+    def stamps(self, ix: IntArray, iy: IntArray, lattice: Lattice) -> Floats:
+        """Values around pixels (ix, iy), shape (n, *lattice.shape); NaN where blank or outside."""
         height, width = self.stored.shape
-        size = 2 * half + 1
-        outside = (ix < half) | (iy < half) | (ix >= width - half) | (iy >= height - half)
-        if size > min(height, width) or outside.all():
-            return self._padded(ix, iy, half, step)
+        rows, columns = lattice.rows, lattice.columns
+        last_top, last_left = height - 1 - 2 * rows, width - 1 - 2 * columns
+        top, left = iy - rows, ix - columns
+        outside = (left < 0) | (top < 0) | (left > last_left) | (top > last_top)
+        if last_top < 0 or last_left < 0 or outside.all():
+            return self._padded(ix, iy, lattice)
         down, across = self.stored.strides
         windows = as_strided(  # every window of the image on its lattice; `sliding_window_view` takes thrice as long
             self.stored,
-            (height - size + 1, width - size + 1, 2 * half // step + 1, 2 * half // step + 1),
-            (down, across, down * step, across * step),
+            (last_top + 1, last_left + 1, *lattice.shape),
+            (down, across, down * lattice.down, across * lattice.across),
             writeable=False,
         )
-        left, top = ix - half, iy - half
         if not outside.any():
             return self._values(windows[top, left])
-        values = self._values(windows[top.clip(0, height - size), left.clip(0, width - size)])
-        values[outside] = self._padded(ix[outside], iy[outside], half, step)
+        values = self._values(windows[top.clip(0, last_top), left.clip(0, last_left)])
+        values[outside] = self._padded(ix[outside], iy[outside], lattice)
         return values
 
-    def _padded(self, ix: IntArray, iy: IntArray, half: int, step: int) -> Floats:
+    def _padded(self, ix: IntArray, iy: IntArray, lattice: Lattice) -> Floats:
         """The same where windows may reach over the edge."""
         height, width = self.stored.shape
         within = ((ix >= 0) & (iy >= 0) & (ix < width) & (iy < height)).all()
-        if within and len(ix) * (2 * half // step + 1) ** 2 > 4 * self.stored.size:  # a margin costs less than masks
-            return self._of_padded_image(ix, iy, half, step)
-        offsets = np.arange(-half, half + 1, step)
-        rows, columns = iy[:, None] + offsets, ix[:, None] + offsets
+        if within and len(ix) * math.prod(lattice.shape) > 4 * self.stored.size:  # a margin costs less than masks
+            return self._of_padded_image(ix, iy, lattice)
+        down, across = lattice.offsets
+        rows, columns = iy[:, None] + down, ix[:, None] + across
         raw = self.stored[rows.clip(0, height - 1)[:, :, None], columns.clip(0, width - 1)[:, None, :]]
         values = self._values(raw)
         gone = ((rows < 0) | (rows >= height))[:, :, None] | ((columns < 0) | (columns >= width))[:, None, :]
         values[gone] = np.nan
         return values
 
-    def _of_padded_image(self, ix: IntArray, iy: IntArray, half: int, step: int) -> Floats:
+    def _of_padded_image(self, ix: IntArray, iy: IntArray, lattice: Lattice) -> Floats:
         """The same from a copy of the whole image with a margin of NaN."""
         values = self.whole()
-        image = np.full((values.shape[0] + 2 * half, values.shape[1] + 2 * half), np.nan, values.dtype)
-        image[half : half + values.shape[0], half : half + values.shape[1]] = values
-        windows = np.lib.stride_tricks.sliding_window_view(image, (2 * half + 1, 2 * half + 1))[:, :, ::step, ::step]
-        return np.ascontiguousarray(windows[iy, ix])
+        (height, width), rows, columns = values.shape, lattice.rows, lattice.columns
+        image = np.full((height + 2 * rows, width + 2 * columns), np.nan, values.dtype)
+        image[rows : rows + height, columns : columns + width] = values
+        windows = np.lib.stride_tricks.sliding_window_view(image, (2 * rows + 1, 2 * columns + 1))
+        return np.ascontiguousarray(windows[:, :, :: lattice.down, :: lattice.across][iy, ix])
 
     def _values(self, raw: NDArray[Any]) -> Floats:
         small = raw.dtype.itemsize <= 2 or (raw.dtype.kind == "f" and raw.dtype.itemsize == 4)
