@@ -28,8 +28,9 @@ class Source:
 class Sky:
     """One instrument's frames.
 
-    `noise` is white, beam (autocorrelation equal to the beam) or heavy (the same from Student t(4) pixels, and the rms
-    differs from frame to frame by a quarter).
+    `gain_scatter` is that of the frames' gains; `pointing_pixels` and `pointing_gradient` (per pixel) are how far, on
+    each axis, images are off their headers. `noise` is white, beam (autocorrelation equal to the beam) or heavy (the
+    same from Student t(4) pixels, and the rms differs from frame to frame by a quarter).
     """
 
     instrument: str = "north array"
@@ -48,6 +49,9 @@ class Sky:
     ra: float = 150.0
     dec: float = -30.0
     jitter_pixels: float = 0.5
+    gain_scatter: float = 0.0
+    pointing_pixels: float = 0.0
+    pointing_gradient: float = 0.0
     site: tuple[float, float, float] = (5195675.767, 1891071.326, -3170873.735)
     extra: dict[str, object] = field(default_factory=dict)
 
@@ -90,24 +94,50 @@ def noise_image(sky: Sky, rng: np.random.Generator) -> np.ndarray:
     return amplitude * smooth / (1 / (2 * np.pi**0.5 * sigma))
 
 
-def write_sky(folder: Path, sky: Sky, sources: Sequence[Source], seed: int, prefix: str = "frame") -> None:
+@dataclass(frozen=True)
+class Truth:
+    """What was done to one frame: its gain, and its shift at the middle of the image in pixels."""
+
+    name: str
+    gain: float
+    shift: tuple[float, float]
+
+
+def write_sky(folder: Path, sky: Sky, sources: Sequence[Source], seed: int, prefix: str = "frame") -> list[Truth]:
     """Write the frames of one instrument into a folder."""
     folder.mkdir(parents=True, exist_ok=True)
     rng = np.random.default_rng(seed)
     days = np.sort(rng.uniform(sky.first_day, sky.last_day, sky.n_frames))
-    y, x = np.mgrid[: sky.size, : sky.size]
+    middle = (sky.size - 1) / 2
+    done = []
     for number, day in enumerate(days):
-        shift = sky.jitter_pixels * rng.standard_normal(2)
+        jitter = sky.jitter_pixels * rng.standard_normal(2)
         image = sky.rms * noise_image(sky, rng)
+        gain, shift, gradient = 1.0, np.zeros(2), np.zeros((2, 2))
+        if sky.gain_scatter or sky.pointing_pixels:
+            gain = 1.0 + sky.gain_scatter * rng.standard_normal()
+            shift = sky.pointing_pixels * rng.standard_normal(2)
+            gradient = sky.pointing_gradient * rng.standard_normal((2, 2))
         for source in sources:
             flux = source.flux(number, float(day), sky.stokes) if callable(source.flux) else source.flux
-            px = (sky.size - 1) / 2 + shift[0] - source.east / sky.pixel_arcsec
-            py = (sky.size - 1) / 2 + shift[1] + source.north / sky.pixel_arcsec
-            shape = np.exp(-4 * np.log(2) * ((x - px) ** 2 + (y - py) ** 2) / sky.fwhm_pixels**2)
+            place = np.array((-source.east, source.north)) / sky.pixel_arcsec + jitter
+            place = place + shift + gradient @ place
             scale = 1.0 if sky.unit == "Jy/beam" else 1 / (1.133090 * sky.fwhm_pixels**2)
-            image += sky.rms * flux * scale * shape
-        hdu = fits.PrimaryHDU(image.astype(np.float32), header(sky, float(day), shift))
-        hdu.writeto(folder / f"{prefix}{number:04d}.fits", overwrite=True)
+            add_source(image, middle + place, sky.rms * gain * flux * scale, sky.fwhm_pixels)
+        name = f"{prefix}{number:04d}.fits"
+        hdu = fits.PrimaryHDU(image.astype(np.float32), header(sky, float(day), jitter))
+        hdu.writeto(folder / name, overwrite=True)
+        done.append(Truth(name, gain, (float(shift[0]), float(shift[1]))))
+    return done
+
+
+def add_source(image: np.ndarray, place: np.ndarray, peak: float, fwhm: float) -> None:
+    """Add a round Gaussian at 0-based (x, y)."""
+    reach = int(np.ceil(6 * fwhm))
+    left, top = (max(0, int(c) - reach) for c in place)
+    patch = image[top : max(0, int(place[1]) + reach + 1), left : max(0, int(place[0]) + reach + 1)]
+    y, x = np.mgrid[: patch.shape[0], : patch.shape[1]]
+    patch += peak * np.exp(-4 * np.log(2) * ((x + left - place[0]) ** 2 + (y + top - place[1]) ** 2) / fwhm**2)
 
 
 def target_text(sources: Sequence[Source], sky: Sky) -> str:

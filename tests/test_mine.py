@@ -351,14 +351,18 @@ def test_without_controls_nothing_is_said_of_variation(tmp_path, capsys):
     assert "have no control and so no p-value" in capsys.readouterr().out
 
 
-def test_errors_that_are_not_the_scatter_are_said(tmp_path, capsys):
-    """Correlated noise under an estimator for white noise: the stated errors are too small, and the run says by how much."""
+def test_errors_that_are_not_the_scatter_are_scaled(tmp_path, capsys):
+    """Correlated noise under an estimator for white noise: errors are scaled up, and the run says by how much."""
     look = skies.Sky(n_frames=12, size=110, unit="adu", noise="beam")
     skies.write_sky(tmp_path / "frames", look, [], seed=4)
     (tmp_path / "targets.csv").write_text(skies.target_text(skies.lattice(4, 250), look), encoding="utf-8")
     command = ["mine", tmp_path / "frames", "--targets", tmp_path / "targets.csv", "--out", tmp_path / "run"]
     assert cli.run_command([str(a) for a in command]) == 0
-    assert "are not the scatter of blank sky" in capsys.readouterr().out
+    said = capsys.readouterr().out
+    assert "errors of north array|R|I|30as|adu were scaled to the scatter of blank sky in 12 of 12 frames" in said
+    assert "are not the scatter of blank sky" not in said
+    solution = pq.read_table(tmp_path / "run" / "frame_solution.parquet")
+    assert np.median(solution["error_scale"].to_numpy()) == pytest.approx(2.4, rel=0.25)
 
 
 def test_sums_of_a_map_per_beam_are_fluxes(tmp_path):

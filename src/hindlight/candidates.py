@@ -29,10 +29,11 @@ Mask = NDArray[np.bool_]
 
 @dataclass(frozen=True, eq=False)
 class ChannelView:
-    """One channel of a target: its curve, how many frames cover it, and its thresholds."""
+    """One channel of a target: its curve, how many frames cover it, how many of them are calibrated, its thresholds."""
 
     curve: LightCurve
     n_frames: int
+    n_calibrated: int
     thresholds: Thresholds
 
     @property
@@ -266,6 +267,7 @@ def channel_row(view: View, c: ChannelView) -> dict[str, Any]:
         "n_frames": c.n_frames,
         "n_used": len(curve),
         "n_detected": int(c.detected.sum()),
+        "n_calibrated": c.n_calibrated,
         "threshold": c.thresholds.detected,
         "threshold_above_quiet": c.thresholds.above_quiet,
         "threshold_mean": c.thresholds.mean,

@@ -1,35 +1,343 @@
 """From the comparisons' raw fluxes to each frame's gain, error scale, extra scatter and verdict, and their use.
 
-For now no comparison is measured: every frame has gain 1 and the verdict 'uncalibrated', which says so. What reads
-light curves goes through `calibrated` already, so a solution changes fluxes without a pixel being read again.
+A channel's frames and comparisons make a graph: flux = gain of the frame x brightness of the source. Gains come from
+robust least squares over the whole of it (R. K. Honeycutt 1992, PASP 104, 435), in linear form, since logarithms bias
+faint sources. What reads light curves goes through `calibrated`, so a solution changes fluxes without a pixel being
+read again. Nothing here reads files.
 """
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy import optimize, sparse, special
+from scipy.sparse import csgraph
+from scipy.sparse.linalg import lsqr
 
+from hindlight.background import MAD_TO_SIGMA
 from hindlight.lightcurve import FloatArray, IntArray
+from hindlight.settings import Comparisons
+
+HUBER = 1.345  # 95 % efficiency for normal errors (P. J. Huber 1981, Robust Statistics)
+ROUNDS = 12  # of reweighting and linearising
+FEWEST_SNR = 3.0  # a comparison whose typical S/N in a channel is lower tells nothing of gains there
+MAD_ERROR = 1.167  # relative error of a MAD's sigma, times sqrt(n)
+SIGNIFICANT = 3.3  # sigma: one frame in a thousand by chance
+FEWEST_CONTROLS = 30
+VARIABLE_P = 1e-6
+VARIABLE_FACTOR = 3.0  # a comparison that scatters so many times more than the typical one is no comparison
+BAD_P = 1e-6
+BAD_SCATTER = 0.5
 
 Columns = dict[str, Any]
 
 
-def uncalibrated(frames: IntArray, channels: NDArray[np.object_]) -> Columns:
-    """The solution that changes nothing, for frames of shape (n,)."""
-    n = len(frames)
+@dataclass(frozen=True, eq=False)
+class Gains:
+    """A channel's solution: `gain`, its error, own scatter (fraction of flux) and number of comparisons, per frame.
+
+    Shapes (n_frames,); gain is NaN where there are too few comparisons. `brightness` and `scatter` are per source, NaN
+    for one that was left out; `common_scatter` is that of the channel; `spread` the scatter of the gains themselves.
+    """
+
+    gain: FloatArray
+    gain_err: FloatArray
+    frame_scatter: FloatArray
+    n_comparisons: IntArray
+    brightness: FloatArray
+    scatter: FloatArray
+    common_scatter: float
+    spread: float
+
+
+def solve_gains(flux: FloatArray, flux_err: FloatArray, fewest: int = 3) -> Gains:
+    """Gains of frames and brightness of sources from raw fluxes of shape (n_frames, n_sources), NaN where there is none.
+
+    In each connected part of the graph the logarithms of the gains add up to zero: its mean scale stays what it was.
+    Sources that scatter far more than the others are left out.
+    """
+    n_frames, n_sources = flux.shape
+    known = np.isfinite(flux) & np.isfinite(flux_err) & (flux_err > 0)
+    with np.errstate(invalid="ignore"):
+        snr = _median_of(np.where(known, flux / np.where(known, flux_err, 1.0), np.nan), axis=0)
+        known &= (snr >= FEWEST_SNR)[None, :]
+    scatter = np.full(n_sources, np.nan)
+    while True:
+        known &= (known.sum(axis=1) >= fewest)[:, None]
+        known &= (known.sum(axis=0) >= 2)[None, :]
+        if not known.any():
+            nothing = np.full(n_frames, np.nan)
+            return Gains(
+                nothing, nothing, nothing, np.zeros(n_frames, np.int64), np.full(n_sources, np.nan), scatter, 0.0, 0.0
+            )
+        gain, brightness = _bilinear_fit(flux, flux_err, known)
+        relative, error = _relative(flux, flux_err, known, gain, brightness)
+        common = excess_scatter(relative[known], error[known])
+        scatter = np.array([_column_scatter(relative[:, s], error[:, s], known[:, s]) for s in range(n_sources)])
+        worst = _worst(relative, error, known, scatter, common)
+        if worst is None:
+            break
+        known = known.copy()
+        known[:, worst] = False
+    frame_scatter = np.array([_frame_scatter(relative[e], error[e], known[e], common) for e in range(n_frames)])
+    weight = np.where(known, 1.0 / (error**2 + common**2), 0.0).sum(axis=1)
+    n_used = known.sum(axis=1)
+    enough = n_used >= fewest
+    with np.errstate(divide="ignore"):
+        gain_err = np.where(enough, gain / np.sqrt(weight), np.nan)
+    logs = np.log(gain[enough])
+    return Gains(
+        gain=np.where(enough, gain, np.nan),
+        gain_err=gain_err,
+        frame_scatter=np.where(enough, frame_scatter, np.nan),
+        n_comparisons=np.where(enough, n_used, 0).astype(np.int64),
+        brightness=np.where(known.any(axis=0), brightness, np.nan),
+        scatter=np.where(known.any(axis=0), scatter, np.nan),
+        common_scatter=common,
+        spread=float(MAD_TO_SIGMA * np.median(np.abs(logs - np.median(logs)))),
+    )
+
+
+def _median_of(values: FloatArray, axis: int) -> FloatArray:
+    """The median of what is not NaN, NaN where all is."""
+    some = np.isfinite(values).any(axis=axis)
+    filled = np.where(np.expand_dims(some, axis), values, 0.0)
+    return np.where(some, np.nanmedian(filled, axis=axis), np.nan)
+
+
+def _bilinear_fit(flux: FloatArray, flux_err: FloatArray, known: NDArray[np.bool_]) -> tuple[FloatArray, FloatArray]:
+    """Gains (1 where unknown) and brightnesses by Gauss-Newton steps with Huber's weights."""
+    n_frames, n_sources = flux.shape
+    frame, source = np.nonzero(known)
+    value, error = flux[frame, source], flux_err[frame, source]
+    brightness = np.nan_to_num(_median_of(np.where(known, flux, np.nan), axis=0), nan=1.0)
+    brightness = np.where(brightness > 0, brightness, 1.0)
+    gain = np.nan_to_num(_median_of(np.where(known, flux / brightness, np.nan), axis=1), nan=1.0)
+    gain = np.where(gain > 0, gain, 1.0)
+    part = _parts(known)
+    ones = np.ones(len(frame))
+    rows = np.arange(len(frame))
+    for _ in range(ROUNDS):
+        model = gain[frame] * brightness[source]
+        relative = value / model - 1.0
+        sigma = error / model
+        common = excess_scatter(relative, sigma)
+        total = np.hypot(sigma, common)
+        pull = relative / total
+        weight = np.sqrt(np.minimum(1.0, HUBER / np.maximum(np.abs(pull), 1e-300))) / total
+        matrix = sparse.csr_matrix(
+            (
+                np.concatenate((weight * ones, weight * ones)),
+                (np.concatenate((rows, rows)), np.concatenate((frame, n_frames + source))),
+            ),
+            shape=(len(frame), n_frames + n_sources),
+        )
+        step = lsqr(matrix, weight * relative, atol=1e-12, btol=1e-12)[0]
+        step = np.clip(step, -0.5, 0.5)
+        gain, brightness = gain * np.exp(step[:n_frames]), brightness * np.exp(step[n_frames:])
+        if np.abs(step).max() < 1e-9:
+            break
+    for number in np.unique(part):  # the gauge of each connected part
+        mine = (part[:n_frames] == number) & known.any(axis=1)
+        if mine.any():
+            mean = np.exp(np.log(gain[mine]).mean())
+            gain[mine] /= mean
+            brightness[part[n_frames:] == number] *= mean
+    return gain, brightness
+
+
+def _parts(known: NDArray[np.bool_]) -> IntArray:
+    """The connected part of each frame, then of each source."""
+    graph = sparse.bmat([[None, sparse.csr_matrix(known)], [sparse.csr_matrix(known.T), None]])
+    labels: IntArray = csgraph.connected_components(graph, directed=False)[1]
+    return labels
+
+
+def _relative(
+    flux: FloatArray, flux_err: FloatArray, known: NDArray[np.bool_], gain: FloatArray, brightness: FloatArray
+) -> tuple[FloatArray, FloatArray]:
+    """Residual and error as fractions of the model, shape (n_frames, n_sources), NaN where unknown."""
+    model = np.where(known, gain[:, None] * brightness, np.nan)
+    return flux / model - 1.0, flux_err / model
+
+
+def excess_scatter(residual: FloatArray, error: FloatArray) -> float:
+    """Scatter s >= 0 beyond the errors by maximum likelihood, for residuals about a known mean; NaN without any.
+
+    Outliers beyond four times the typical pull are left aside. s maximises -sum(r^2 / (e^2 + s^2) + ln(e^2 + s^2)) / 2.
+    """
+    if len(residual) == 0:
+        return float("nan")
+    pull = np.abs(residual) / error
+    kept = pull <= 4.0 * max(1.0, MAD_TO_SIGMA * float(np.median(pull)))
+    square, variance = residual[kept] ** 2, error[kept] ** 2
+
+    def score(s2: float) -> float:
+        total = variance + s2
+        return float((square / total**2 - 1.0 / total).sum())
+
+    if score(0.0) <= 0.0:
+        return 0.0
+    high: float = float(square.max())
+    if score(high) >= 0.0:
+        return float(high**0.5)
+    best = float(optimize.brentq(score, 0.0, high, xtol=1e-12, rtol=1e-9))
+    return float(best**0.5)
+
+
+def _column_scatter(residual: FloatArray, error: FloatArray, known: NDArray[np.bool_]) -> float:
+    return excess_scatter(residual[known], error[known]) if known.sum() >= 3 else float("nan")
+
+
+def _worst(
+    residual: FloatArray, error: FloatArray, known: NDArray[np.bool_], scatter: FloatArray, common: float
+) -> int | None:
+    """The source that scatters most, if that is far more than the typical one does and no chance; None otherwise."""
+    if known.any(axis=0).sum() <= 3 or not np.isfinite(scatter).any():
+        return None
+    ratio = np.nan_to_num(scatter, nan=-1.0)
+    at = int(ratio.argmax())
+    typical = max(float(np.nanmedian(scatter)), 1e-3)
+    mine = known[:, at]
+    chi2 = float((residual[mine, at] ** 2 / (error[mine, at] ** 2 + common**2)).sum())
+    chance = float(special.chdtrc(int(mine.sum()) - 1, chi2))
+    return at if scatter[at] > VARIABLE_FACTOR * typical and chance < VARIABLE_P else None
+
+
+def _frame_scatter(residual: FloatArray, error: FloatArray, known: NDArray[np.bool_], common: float) -> float:
+    """A frame's own scatter where it is significantly larger than the channel's, else the channel's."""
+    n = int(known.sum())
+    if n < 5:
+        return common
+    chi2 = float((residual[known] ** 2 / (error[known] ** 2 + common**2)).sum())
+    if special.chdtrc(n - 1, chi2) > 1e-3:
+        return common
+    return max(common, excess_scatter(residual[known], error[known]))
+
+
+def error_scales(pulls: FloatArray, n_controls: IntArray) -> FloatArray:
+    """Factors on the errors of a channel's frames, shape (n,), from the scatter of blank sky in units of its errors.
+
+    `pulls` is the MAD-sigma of flux / error over a frame's controls, `n_controls` their number. A factor for the whole
+    channel is taken where its frames together differ from 1 beyond chance, a frame's own where it differs from that.
+    """
+    scale = np.ones(len(pulls))
+    usable = np.isfinite(pulls) & (pulls > 0) & (n_controls >= FEWEST_CONTROLS)
+    if not usable.any():
+        return scale
+    logs, error = np.log(pulls[usable]), MAD_ERROR / np.sqrt(n_controls[usable])
+    weight = error**-2.0
+    order = np.argsort(logs)
+    middle = np.searchsorted(np.cumsum(weight[order]), weight.sum() / 2)
+    common = float(logs[order][min(middle, len(order) - 1)])  # a weighted median: some frames may be far off
+    if abs(common) <= SIGNIFICANT * 1.2533 * weight.sum() ** -0.5:
+        common = 0.0
+    scale[:] = np.exp(common)
+    own = np.abs(logs - common) > SIGNIFICANT * error
+    scale[np.flatnonzero(usable)[own]] = np.exp(logs[own])
+    return scale
+
+
+def solved(
+    frames: IntArray, channels: NDArray[np.object_], evidence: Sequence[Columns], fluxes: Sequence[Columns],
+    settings: Comparisons,
+) -> tuple[Columns, tuple[str, ...]]:  # fmt: skip
+    """The solution for frames of shape (n,) in order of frame, and a sentence on each channel's flux scale.
+
+    `evidence` and `fluxes` are those of `tasks.FrameEvidence`, batch by batch.
+    """
+    known = {name: np.concatenate([part[name] for part in evidence]) for name in _EVIDENCE}
+    rows = {name: np.concatenate([part[name] for part in fluxes]) for name in ("frame", "position", "flux", "flux_err")}
+    at = {int(frame): i for i, frame in enumerate(known["frame"])}
+    parts, said = [], []
+    for label in sorted(set(channels.tolist())):
+        mine = frames[channels == label]
+        matrix = _matrix(rows, mine)
+        gains = solve_gains(*matrix, settings.fewest)
+        index = np.array([at.get(int(frame), -1) for frame in mine])
+        there = index >= 0
+        pulls, counts, shifts = (
+            np.full(len(mine), np.nan),
+            np.zeros(len(mine), np.int64),
+            np.full((len(mine), 2), np.nan),
+        )
+        pulls[there], counts[there] = known["pull"][index[there]], known["n_controls"][index[there]]
+        shifts[there] = np.stack((known["shift_x"], known["shift_y"]), axis=1)[index[there]]
+        part = solution(mine, label, gains, error_scales(pulls, counts), shifts, settings)
+        parts.append(part)
+        said += _said(label, part, gains)
+    joined = {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}
+    order = np.argsort(joined["frame"], kind="stable")
+    return {name: values[order] for name, values in joined.items()}, tuple(said)
+
+
+_EVIDENCE = ("frame", "pull", "n_controls", "shift_x", "shift_y")
+
+
+def _matrix(rows: Columns, frames: IntArray) -> tuple[FloatArray, FloatArray]:
+    """Fluxes and errors of the comparisons in some frames (ascending), shape (n_frames, n_sources), NaN for none."""
+    mine = np.isin(rows["frame"], frames)
+    sources, column = np.unique(rows["position"][mine], return_inverse=True)
+    row = np.searchsorted(frames, rows["frame"][mine])
+    flux, error = np.full((2, len(frames), len(sources)), np.nan)
+    flux[row, column], error[row, column] = rows["flux"][mine], rows["flux_err"][mine]
+    return flux, error
+
+
+def _said(label: str, part: Columns, gains: Gains) -> list[str]:
+    """What the last lines of a run say of a channel's flux scale."""
+    n, tied = len(part["frame"]), int((part["verdict"] != "uncalibrated").sum())
+    bad = int((part["verdict"] == "bad").sum())
+    scaled = part["error_scale"] != 1.0
+    scales = [
+        f"errors of {label} were scaled to the scatter of blank sky in {int(scaled.sum())} of {n} frames, by "
+        f"{part['error_scale'][scaled].min():.2f} to {part['error_scale'][scaled].max():.2f}"
+    ] if scaled.any() else []  # fmt: skip
+    if not tied:
+        return [
+            *scales,
+            f"the flux scale of {label} is not tied to comparisons: fluxes are raw, and their errors are widened by "
+            f"{100 * part['extra_scatter'][0]:.3g} % of the flux",
+        ]
+    said = (
+        f"the flux scale of {label}: {tied} of {n} frames tied by up to {int(part['n_comparisons'].max())} comparisons"
+    )
+    said += (
+        f", gains scatter by {100 * gains.spread:.1f} %, comparisons by {100 * gains.common_scatter:.1f} % more than"
+    )
+    said += " their errors"
+    return [*scales, said + (f"; {bad} frames scatter so much that they are not used" if bad else "")]
+
+
+def solution(
+    frames: IntArray, channel: str, gains: Gains, scale: FloatArray, shifts: FloatArray, settings: Comparisons
+) -> Columns:
+    """Rows of `schema.FRAME_SOLUTION` for a channel's frames, shape (n,).
+
+    `shifts` has shape (n, 2), NaN where no shift was applied. A frame without enough comparisons keeps its raw scale,
+    with the error widened by the scatter of the channel's gains, or by `uncalibrated_scatter` where that is not known.
+    """
+    tied = np.isfinite(gains.gain)
+    unknown = max(gains.spread, 0.0) if tied.sum() >= 5 else settings.uncalibrated_scatter
+    with np.errstate(invalid="ignore"):
+        own = np.hypot(gains.frame_scatter, gains.gain_err / gains.gain)
+        bad = tied & (gains.frame_scatter > BAD_SCATTER)
+    verdict = np.where(bad, "bad", np.where(tied, "good", "uncalibrated")).astype(object)
     return {
         "frame": frames,
-        "channel": channels,
-        "gain": np.ones(n),
-        "gain_err": np.full(n, np.nan),
-        "shift_x": np.full(n, np.nan),
-        "shift_y": np.full(n, np.nan),
-        "error_scale": np.ones(n),
-        "extra_scatter": np.zeros(n),
-        "n_comparisons": np.zeros(n, np.int64),
-        "verdict": np.full(n, "uncalibrated", dtype=object),
+        "channel": np.full(len(frames), channel, object),
+        "gain": np.where(tied, gains.gain, 1.0),
+        "gain_err": gains.gain_err,
+        "shift_x": shifts[:, 0],
+        "shift_y": shifts[:, 1],
+        "error_scale": scale,
+        "extra_scatter": np.where(tied, own, unknown),
+        "n_comparisons": gains.n_comparisons,
+        "verdict": verdict,
     }
 
 

@@ -23,6 +23,7 @@ from hindlight.headers import fold_unit
 from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.pixels import Floats, Lattice, Pixels, PlanePlace, Windows, find_image, read_plane
 from hindlight.plugin import BeamShape, Estimator, Stamps
+from hindlight.pointing import FEWEST, Centroids, Pointing, centroids, pointing, stamp_half
 from hindlight.schema import Flag
 from hindlight.settings import Photometry, Settings
 from hindlight.sky import Projection, beam_shape, projection
@@ -94,20 +95,29 @@ def choose_estimator(
 
 
 def measure_frame(
-    frame: FrameToMeasure, ra: FloatArray, dec: FloatArray, estimator: Estimator, settings: Settings
-) -> Columns:
+    frame: FrameToMeasure, ra: FloatArray, dec: FloatArray, estimator: Estimator, settings: Settings,
+    anchors: tuple[FloatArray, FloatArray] | None = None,
+) -> Columns:  # fmt: skip
     """Measure ICRS positions (degrees, shape (n,)) in a frame.
 
-    Returns columns of shape (m,) for the m positions on the image: `index` among the n, `x`, `y` (0-based pixels), and
-    those of `measure`. Raises `SetAsideError`, `OSError`, or `ValueError` from an unusable projection.
+    `anchors` are ICRS positions of known sources: where they are in the image tells how far it is off its header, and
+    the positions are measured that far away from where the header puts them. Returns columns of shape (m,) for the m
+    positions on the image: `index` among the n, `x`, `y` (0-based pixels), `shift_x`, `shift_y` (at the middle of the
+    image, NaN where the anchors do not tell), and those of `measure`. Raises `SetAsideError`, `OSError`, or `ValueError`
+    from an unusable projection.
     """
     opened = open_frame(frame, settings)
     x, y = opened.sky.icrs_to_pixel(ra, dec, frame.mjd)
-    width, height = opened.place.width, opened.place.height
-    index = np.flatnonzero((x >= -0.5) & (y >= -0.5) & (x < width - 0.5) & (y < height - 0.5))
+    shift = _shift(frame, opened, anchors) if anchors is not None else None
+    if shift is not None:
+        x, y = shift.moved(x, y)
+    index = _inside(opened, x, y)
     x, y = x[index], y[index]
+    offset = (NAN, NAN) if shift is None else shift.offset.tolist()
+    place = {"index": index, "x": x, "y": y}
+    place |= {f"shift_{axis}": np.full(len(index), value) for axis, value in zip("xy", offset, strict=True)}
     if len(index) == 0:
-        return {"index": index, "x": x, "y": y, **_nothing()}
+        return {**place, **_nothing()}
     lattice = annulus_of(opened.beam, settings.photometry).lattice
     half = max(lattice.rows, lattice.columns, _half_width(estimator, opened.beam))
     pixels = opened.pixels(Windows(_nearest(x), _nearest(y), half))
@@ -119,7 +129,51 @@ def measure_frame(
         area = math.pi * opened.beam.major * opened.beam.minor / (4.0 * math.log(2.0))
         found["flux"] /= area
         found["flux_err"] /= area
-    return {"index": index, "x": x, "y": y, **found}
+    return {**place, **found}
+
+
+def _inside(opened: OpenFrame, x: FloatArray, y: FloatArray) -> IntArray:
+    """Which of some pixel coordinates lie on the image."""
+    width, height = opened.place.width, opened.place.height
+    return np.flatnonzero((x >= -0.5) & (y >= -0.5) & (x < width - 0.5) & (y < height - 0.5))
+
+
+def _centroids(
+    frame: FrameToMeasure, opened: OpenFrame, ra: FloatArray, dec: FloatArray
+) -> tuple[IntArray, FloatArray, FloatArray, Centroids]:
+    """Centroids of the sources on the image: which they are, where the header puts them (pixels), and their centroids."""
+    x, y = opened.sky.icrs_to_pixel(ra, dec, frame.mjd)
+    index = _inside(opened, x, y)
+    x, y = x[index], y[index]
+    windows = Windows(_nearest(x), _nearest(y), stamp_half(opened.beam))
+    return index, x, y, centroids(opened.pixels(windows), x, y, opened.beam)
+
+
+def _shift(frame: FrameToMeasure, opened: OpenFrame, anchors: tuple[FloatArray, FloatArray]) -> Pointing | None:
+    """How far the image is off its header, None where the anchors do not tell."""
+    if len(anchors[0]) < FEWEST:
+        return None
+    index, x, y, found = _centroids(frame, opened, *anchors)
+    if len(index) < FEWEST:
+        return None
+    return pointing(found, x, y, (opened.place.height, opened.place.width), opened.beam)
+
+
+def locate(
+    frame: FrameToMeasure, ra: FloatArray, dec: FloatArray, settings: Settings
+) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+    """Where sources near ICRS positions (degrees, shape (n,)) are in a frame: ICRS degrees, S/N and width over the beam's.
+
+    NaN for a source that does not stand out, is saturated or not on the image. Raises as `measure_frame` does.
+    """
+    opened = open_frame(frame, settings)
+    index, x, y, found = _centroids(frame, opened, ra, dec)
+    there = np.full((4, len(ra)), np.nan)
+    there[0, index], there[1, index] = opened.sky.pixel_to_icrs(x + found.dx, y + found.dy, frame.mjd)
+    there[2, index], there[3, index] = found.snr, found.width
+    there[:, index[found.highest >= frame.saturation]] = np.nan
+    there[:2, ~np.isfinite(there[2])] = np.nan
+    return there[0], there[1], there[2], there[3]
 
 
 def bright_sources(

@@ -265,6 +265,17 @@ def add_controls(
     })  # fmt: skip
 
 
+def add_comparisons(positions: Columns, field: int, round_number: int, ra: FloatArray, dec: FloatArray) -> Columns:
+    """The position table with comparisons of one field in the given round."""
+    n = len(ra)
+    return append(positions, {
+        "id": _next_id(positions) + np.arange(n), "name": np.full(n, "", object),
+        "kind": np.full(n, "comparison", object), "ra": ra, "dec": dec,
+        "pm_ra_cosdec": np.zeros(n), "pm_dec": np.zeros(n), "ref_epoch": np.full(n, 2000.0),
+        "field": np.full(n, field), "round": np.full(n, round_number), "clear_radius": np.zeros(n),
+    })  # fmt: skip
+
+
 def no_positions() -> Columns:
     """A position table without rows."""
     return empty(POSITIONS)

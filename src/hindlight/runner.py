@@ -10,14 +10,16 @@ import logging
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import replace
+from pathlib import Path
 from typing import Any
 
 import numpy as np
 
-from hindlight import archive, ensemble, files, host, plan, record, store, tasks
+from hindlight import archive, comparisons, ensemble, files, host, plan, record, store, tasks
 from hindlight.channels import assign
 from hindlight.crew import assembled
 from hindlight.errors import HindlightError, NothingToDoError, UsageError
+from hindlight.lightcurve import FloatArray
 from hindlight.outcome import Outcome
 from hindlight.positions import Targets, read_targets
 from hindlight.record import Request
@@ -47,6 +49,7 @@ def mine(request: Request, watcher: Watcher) -> Outcome:
     plugins = host.load(spec)
     _check_plugins(plugins, settings)
     targets = read_targets(request.targets)
+    own = _own_comparisons(settings)
     record.compare(run, request, settings, plugins)
     files.check_folders(request.folders)
     run.create()
@@ -54,16 +57,17 @@ def mine(request: Request, watcher: Watcher) -> Outcome:
     with run.locked():
         try:
             with _logged(run):
-                return _mine_locked(run, request, order, plugins, targets, watcher)
+                return _mine_locked(run, request, order, plugins, (targets, own), watcher)
         except NothingToDoError:
             run.discard_if_new()
             raise
 
 
 def _mine_locked(
-    run: RunFolder, request: Request, order: tasks.Order, plugins: host.Plugins, targets: Targets, watcher: Watcher
-) -> Outcome:
-    """The job once the run folder is ours."""
+    run: RunFolder, request: Request, order: tasks.Order, plugins: host.Plugins,
+    lists: tuple[Targets, Targets | None], watcher: Watcher,
+) -> Outcome:  # fmt: skip
+    """The job once the run folder is ours; `lists` are the targets and the user's own comparisons, if any."""
     settings = order.settings
     recorded = record.compare(run, request, settings, plugins)
     frames, rejects = _walked(run, request, settings, plugins, watcher)
@@ -71,11 +75,9 @@ def _mine_locked(
     store.write_text(run, "settings.toml", record.text_of(request, settings, plugins, size))
     _write_rejects(run, rejects)
     run.write_columns("frames.parquet", FRAMES, frames)
-    solution = ensemble.uncalibrated(frames["id"], frames["channel"])
-    run.write_columns("frame_solution.parquet", FRAME_SOLUTION, solution)
-    small = len(frames["id"]) * (len(targets) + settings.controls.per_field) < SMALL_WORK
+    small = len(frames["id"]) * (len(lists[0]) + settings.controls.per_field) < SMALL_WORK
     with assembled(request.workers, request.scheduler, small) as crew:
-        session = Session(run, crew, replace(order, version=run.version()), plugins, targets, watcher)
+        session = Session(run, crew, replace(order, version=run.version()), plugins, lists[0], watcher, lists[1])
         positions = _planned(session, frames, size)
         session = replace(session, order=replace(order, version=run.version()))
         return _measured_and_judged(session, frames, positions, rejects)
@@ -86,7 +88,9 @@ def _measured_and_judged(session: Session, frames: Columns, positions: Columns, 
     _measure(session, pieces)
     rejects = _distinct([*rejects, *store.part_rejects(session.run, pieces)])
     _write_rejects(session.run, rejects)
-    return verdicts(session, frames, positions, rejects)
+    said = _solved(session, frames, positions)
+    session = replace(session, order=replace(session.order, version=session.run.version()))
+    return verdicts(session, frames, positions, rejects, said)
 
 
 @contextmanager
@@ -106,6 +110,16 @@ def _logged(run: RunFolder) -> Iterator[None]:
     finally:
         log.removeHandler(handler)
         handler.close()
+
+
+def _own_comparisons(settings: Settings) -> Targets | None:
+    """The user's table of comparisons, None where there is none; raises `UsageError` where it cannot be read."""
+    if not settings.comparisons.table:
+        return None
+    try:
+        return read_targets(Path(settings.comparisons.table))
+    except UsageError as error:
+        raise UsageError(f"[comparisons] table: {str(error).removeprefix('targets ')}") from None
 
 
 def _check_plugins(plugins: host.Plugins, settings: Settings) -> None:
@@ -182,6 +196,9 @@ def _planned(session: Session, frames: Columns, size_deg: float) -> Columns:
         )
     bright = _bright_sources(session, frames, within)
     round_of_controls = plan.round_for_controls(known, positions)
+    chosen = _comparisons(session, frames, positions, within, bright)
+    for number, (ra, dec) in chosen.items():
+        positions = plan.add_comparisons(positions, number, round_of_controls, ra, dec)
     for number, here in within.items():
         spacing = plan.field_spacing(frames, here.rows, settings.controls, settings.photometry.assumed_fwhm_pixels)
         positions = plan.add_controls(
@@ -215,6 +232,64 @@ def _bright_sources(
         ])
         for number, rows in per_field.items()
     }  # fmt: skip
+
+
+def _comparisons(
+    session: Session, frames: Columns, positions: Columns, within: Mapping[int, plan.FieldFrames],
+    bright: Mapping[int, plan.BrightSources],
+) -> dict[int, tuple[FloatArray, FloatArray]]:  # fmt: skip
+    """New comparisons of each field, ICRS degrees: those of the user's table, or chosen from the bright sources."""
+    settings = session.order.settings.comparisons
+    kind = positions["kind"]
+    if session.comparisons is not None:
+        given = session.comparisons
+        return {} if (kind == "comparison").any() else {int(positions["field"][0]): (given.ra, given.dec)}
+    if settings.wanted == 0:
+        return {}
+    occupied = unit_vectors(positions["ra"][kind == "target"], positions["dec"][kind == "target"])
+    known = unit_vectors(positions["ra"][kind == "comparison"], positions["dec"][kind == "comparison"])
+    wanted: list[tuple[int, int]] = []
+    places: dict[int, tuple[FloatArray, FloatArray]] = {}
+    for number, here in within.items():
+        places[number] = comparisons.candidates(bright[number], occupied, known, settings)
+        known = np.concatenate((known, unit_vectors(*places[number])))
+        if len(places[number][0]) >= settings.fewest:
+            rows = comparisons.sampled_frames(frames, here.rows, settings.located_in)
+            wanted += [(number, int(row)) for row in rows]
+    session.watcher.stage("locating comparison sources", len(wanted))
+    found: list[comparisons.Located | None] = [None] * len(wanted)
+
+    def done(number: int, result: comparisons.Located) -> None:
+        found[number] = result
+        session.watcher.step()
+
+    jobs = [(session.order, int(frames["id"][row]), *places[number]) for number, row in wanted]
+    session.crew.run(tasks.locate_sources, jobs, done)
+    return {
+        number: comparisons.placed(
+            *places[number], [f for (n, _), f in zip(wanted, found, strict=True) if f and n == number], settings
+        )
+        for number in within
+    }
+
+
+def _solved(session: Session, frames: Columns, positions: Columns) -> tuple[str, ...]:
+    """Solve the flux scale of every channel from the measurements and write it; what to say of it in the last lines."""
+    batches = np.unique(frames["batch"][frames["state"] != "void"]).tolist()
+    session.watcher.stage("solving the flux scale", len(batches))
+    found: list[Any] = [None] * len(batches)
+
+    def done(number: int, result: tasks.FrameEvidence) -> None:
+        found[number] = result
+        session.watcher.step()
+
+    session.crew.run(tasks.frame_evidence, [(session.order, int(batch)) for batch in batches], done)
+    chosen = session.order.settings.comparisons
+    solved, said = ensemble.solved(
+        frames["id"], frames["channel"], [f.frames for f in found], [f.comparisons for f in found], chosen
+    )
+    session.run.write_columns("frame_solution.parquet", FRAME_SOLUTION, solved)
+    return said
 
 
 def _measure(session: Session, pieces: Sequence[store.Piece]) -> None:

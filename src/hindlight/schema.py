@@ -167,8 +167,8 @@ FRAME_SOLUTION = (
     TableColumn("channel", "key of comparable fluxes", dtype="str"),
     TableColumn("gain", "calibrated flux = flux / gain"),
     TableColumn("gain_err", "1-sigma error of the gain"),
-    TableColumn("shift_x", "shift of the pointing", unit="pixel"),
-    TableColumn("shift_y", "shift of the pointing", unit="pixel"),
+    TableColumn("shift_x", "shift at the middle of the image against its header, NaN where unknown", unit="pixel"),
+    TableColumn("shift_y", "shift at the middle of the image against its header, NaN where unknown", unit="pixel"),
     TableColumn("error_scale", "factor on the error"),
     TableColumn("extra_scatter", "further scatter, as a fraction of the flux"),
     TableColumn("n_comparisons", "comparison sources used", dtype="int64"),
@@ -194,6 +194,8 @@ MEASUREMENTS = (
     TableColumn("rms", "robust local noise per pixel", unit=NATURAL_UNIT, ucd="instr.det.noise"),
     TableColumn("gain", "primary-beam gain used, 1 where none was applied"),
     TableColumn("flags", "bits, see the README", dtype="int64", ucd="meta.code.qual"),
+    TableColumn("shift_x", "shift of the frame at its middle, contained in x; NaN where none was found", unit="pixel"),
+    TableColumn("shift_y", "shift of the frame at its middle, contained in y; NaN where none was found", unit="pixel"),
 )
 
 LIGHT_CURVE = (
@@ -250,6 +252,9 @@ CHANNELS = (
     TableColumn("n_frames", "frames that cover the target", dtype="int64", ucd="meta.number;obs"),
     TableColumn("n_used", "frames with a usable flux", dtype="int64", ucd="meta.number;obs"),
     TableColumn("n_detected", "frames above the threshold", dtype="int64", ucd="meta.number;obs"),
+    TableColumn(
+        "n_calibrated", "usable frames whose flux scale is tied to comparisons", dtype="int64", ucd="meta.number;obs"
+    ),
     TableColumn("threshold", "what counts as detected; the table says the false-alarm rate", ucd="stat.snr"),
     TableColumn("threshold_above_quiet", "the same for the excess over the quiet level", ucd="stat.snr"),
     TableColumn("threshold_mean", "the same for the mean flux over its error", ucd="stat.snr"),

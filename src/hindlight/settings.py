@@ -92,6 +92,24 @@ class Controls:
 
 
 @dataclass(frozen=True)
+class Comparisons:
+    """Steady sources that put frames on one flux scale and show where they point."""
+
+    wanted: int = setting(40, "comparison sources wanted for each field of sky; 0 leaves fluxes raw", minimum=0)
+    table: str = setting("", "table of comparison sources (ra, dec), used instead of searching the archive for them")
+    min_snr: float = setting(15.0, "S/N in a reference frame from which a source may serve", unit="sigma", minimum=5)
+    isolation: float = setting(4.0, "no other bright source or target is nearer than this", unit="FWHM", minimum=1)
+    located_in: int = setting(60, "frames per channel and field in which their exact places are measured", minimum=2)
+    fewest: int = setting(3, "fewer comparisons than this leave a frame on its raw scale", minimum=2)
+    uncalibrated_scatter: float = setting(
+        0.05,
+        "error of the flux scale, as a fraction, where comparisons cannot tell; 5 % is usual, common practice, no source",
+        minimum=0,
+        maximum=1,
+    )
+
+
+@dataclass(frozen=True)
 class Flow:
     """How the work is cut up; fixed once a run has begun."""
 
@@ -129,6 +147,7 @@ class Settings:
     channels: Channels = field(default_factory=Channels)
     photometry: Photometry = field(default_factory=Photometry)
     controls: Controls = field(default_factory=Controls)
+    comparisons: Comparisons = field(default_factory=Comparisons)
     flow: Flow = field(default_factory=Flow)
     detection: Detection = field(default_factory=Detection)
     ranking: Ranking = field(default_factory=Ranking)
@@ -137,7 +156,7 @@ class Settings:
 
     def measuring(self) -> dict[str, Any]:
         """The sections that touch measured values, as plain data: a run cannot change them once it has begun."""
-        names = ("inventory", "channels", "photometry", "controls", "flow", "sites")
+        names = ("inventory", "channels", "photometry", "controls", "comparisons", "flow", "sites")
         return {name: as_plain(getattr(self, name)) for name in names}
 
 

@@ -16,8 +16,10 @@ from typing import Any
 import numpy as np
 
 from hindlight import clock, host, judge, photometry, store
+from hindlight.background import MAD_TO_SIGMA
 from hindlight.candidates import ChannelView, Described, Examined, View, describe
 from hindlight.channels import channels_of
+from hindlight.comparisons import Located
 from hindlight.errors import HindlightError
 from hindlight.fence import Fault, blank, call, checked, one_line
 from hindlight.headers import SetAsideError
@@ -26,12 +28,14 @@ from hindlight.plan import BrightSources
 from hindlight.plugin import Candidate, Cutout, Finding, PeriodResult
 from hindlight.positions import moved
 from hindlight.ranking import Thresholds
-from hindlight.schema import MEASUREMENTS
+from hindlight.schema import MEASUREMENTS, UNUSABLE
 from hindlight.settings import Settings
 from hindlight.store import Columns, Piece, RunFolder
 from hindlight.systems import unit_vectors
 
 JULIAN_YEAR_S = 31557600.0
+MOST_ANCHORS = 100  # comparisons of a frame that tell its shift
+MEASURED = ("x", "y", "flux", "flux_err", "background", "rms", "flags", "shift_x", "shift_y")
 
 
 @dataclass(frozen=True)
@@ -89,6 +93,7 @@ def measure_piece(order: Order, piece: Piece) -> dict[str, int]:
     rows = np.flatnonzero((tables.frames["batch"] == piece.batch) & (tables.frames["state"] == "current"))
     who = {name: values[tables.positions["round"] == piece.round] for name, values in tables.positions.items()}
     vectors = unit_vectors(who["ra"], who["dec"])
+    anchors = _anchors(tables.positions, piece.round)
     sites = np.stack([tables.frames[f"site_{axis}"][rows] for axis in "xyz"], axis=1)
     middles = np.where(tables.frames["barycentric"][rows], np.nan, tables.frames["middle_tdb_s"][rows])
     observatory = clock.observatory_vectors(middles, sites)
@@ -97,7 +102,7 @@ def measure_piece(order: Order, piece: Piece) -> dict[str, int]:
     rejects: list[dict[str, Any]] = []
     for row, vector in zip(rows, observatory, strict=True):
         try:
-            parts.append(_measure_frame(order, tables.frames, int(row), who, vectors, vector, estimators))
+            parts.append(_measure_frame(order, tables.frames, int(row), who, vectors, anchors, vector, estimators))
         except (Exception, SystemExit) as error:  # noqa: BLE001 - a bad frame, or an estimator of anyone's, is said
             rejects.append(_reject(tables.frames, int(row), error))
     columns = _concatenated(parts)
@@ -117,6 +122,13 @@ def _reject(frames: Columns, row: int, error: BaseException) -> dict[str, Any]:
     return {**texts, **place, "reason": reason, "detail": detail}
 
 
+def _anchors(positions: Columns, round_number: int) -> Columns:
+    """The comparisons of this round and those before: what was planned later cannot change what is measured now."""
+    mine = (positions["kind"] == "comparison") & (positions["round"] <= round_number)
+    ra, dec = positions["ra"][mine], positions["dec"][mine]
+    return {"ra": ra, "dec": dec, "vectors": unit_vectors(ra, dec)}
+
+
 def _near(frames: Columns, row: int, vectors: FloatArray) -> IntArray:
     """Positions that may lie in a frame: within the circle around its corners."""
     centre = unit_vectors(frames["centre_ra"][row : row + 1], frames["centre_dec"][row : row + 1])[0]
@@ -125,8 +137,9 @@ def _near(frames: Columns, row: int, vectors: FloatArray) -> IntArray:
 
 
 def _measure_frame(
-    order: Order, frames: Columns, row: int, who: Columns, vectors: FloatArray, observatory: FloatArray, estimators: Any
-) -> Columns:
+    order: Order, frames: Columns, row: int, who: Columns, vectors: FloatArray, anchors: Columns,
+    observatory: FloatArray, estimators: Any,
+) -> Columns:  # fmt: skip
     """The measurement columns of one frame."""
     near = _near(frames, row, vectors)
     middle = float(frames["middle_tdb_s"][row])
@@ -137,11 +150,13 @@ def _measure_frame(
     facts = frame_facts(frames, row)
     wanted = order.settings.photometry.estimator
     estimator = photometry.choose_estimator(estimators, facts.unit, wanted, facts.beam_major > 0)
-    found = photometry.measure_frame(facts, ra, dec, estimator, order.settings)
+    known = _near(frames, row, anchors["vectors"])[:MOST_ANCHORS]
+    sources = anchors["ra"][known], anchors["dec"][known]
+    found = photometry.measure_frame(facts, ra, dec, estimator, order.settings, sources)
     inside = near[found["index"]]
     n = len(inside)
     shift = 0.0 if frames["barycentric"][row] else clock.roemer(observatory, vectors[inside])
-    columns = {name: found[name] for name in ("x", "y", "flux", "flux_err", "background", "rms", "flags")}
+    columns = {name: found[name] for name in MEASURED}
     columns["position"] = who["id"][inside]
     columns["frame"] = np.full(n, frames["id"][row])
     columns["channel"] = np.full(n, frames["channel"][row], object)
@@ -173,6 +188,53 @@ def find_bright(order: Order, frame: int) -> BrightSources:
         ra = dec = snr = np.empty(0)
         beam = 0.0
     return BrightSources(ra, dec, snr, np.full(len(ra), beam))
+
+
+def locate_sources(order: Order, frame: int, ra: FloatArray, dec: FloatArray) -> Located:
+    """Where candidates for comparisons, ICRS degrees of shape (n,), are in one frame; NaN where it cannot be read."""
+    tables = book(order.run, order.version)
+    try:
+        facts = frame_facts(tables.frames, tables.row_of_frame[frame])
+        found_ra, found_dec, snr, width = photometry.locate(facts, ra, dec, order.settings)
+    except (SetAsideError, OSError, ValueError):
+        found_ra = found_dec = snr = width = np.full(len(ra), np.nan)
+    east = ((found_ra - ra + 180.0) % 360.0 - 180.0) * np.cos(np.radians(dec))
+    return Located(east, found_dec - dec, snr, width)
+
+
+@dataclass(frozen=True, eq=False)
+class FrameEvidence:
+    """What one batch of frames tells of its flux scale.
+
+    `comparisons` are columns frame, position, flux, flux_err of usable measurements; `frames` are columns frame, pull
+    (MAD-sigma of flux over error at the controls), n_controls, shift_x and shift_y, one row a frame.
+    """
+
+    comparisons: Columns
+    frames: Columns
+
+
+def frame_evidence(order: Order, batch: int) -> FrameEvidence:
+    """What the measurements of one batch, in all rounds, tell of each frame's flux scale."""
+    tables = book(order.run, order.version)
+    who = tables.positions
+    plan = [p for p in store.pieces(tables.frames, who) if p.batch == batch]
+    rows = store.read_rows(tables.folder, plan, who["id"][who["kind"] != "target"])
+    kind = who["kind"][np.searchsorted(who["id"], rows["position"])]
+    usable = np.isfinite(rows["flux"]) & (rows["flux_err"] > 0) & ((rows["flags"] & int(UNUSABLE)) == 0)
+    steady = usable & (kind == "comparison")
+    ids, row = np.unique(rows["frame"], return_inverse=True)
+    first = np.unique(row, return_index=True)[1]
+    frames: Columns = {"frame": ids, "pull": np.full(len(ids), np.nan), "n_controls": np.zeros(len(ids), np.int64)}
+    frames |= {name: rows[name][first] for name in ("shift_x", "shift_y")}
+    blank = np.flatnonzero(usable & (kind == "control"))
+    for at in np.unique(row[blank]).tolist():
+        mine = blank[row[blank] == at]
+        pull = rows["flux"][mine] / rows["flux_err"][mine]
+        frames["pull"][at] = MAD_TO_SIGMA * np.median(np.abs(pull - np.median(pull)))
+        frames["n_controls"][at] = len(mine)
+    names = ("frame", "position", "flux", "flux_err")
+    return FrameEvidence({name: rows[name][steady] for name in names}, frames)
 
 
 def position_label(positions: Columns, row: int) -> str:
@@ -224,7 +286,7 @@ def describe_targets(
     described = []
     for row, target in enumerate(ids.tolist()):
         channels = tuple(
-            ChannelView(block.curve(row), covering[target, label], thresholds[label])
+            _channel_view(block.curve(row), covering[target, label], thresholds[label], tables.solution)
             for label, block in found["blocks"].items()
             if covering[target, label]
         )
@@ -236,6 +298,11 @@ def describe_targets(
         )  # fmt: skip
         described.append(describe(view, given[row], decided[row], examined[row], order.settings.detection))
     return described
+
+
+def _channel_view(curve: LightCurve, n_frames: int, thresholds: Thresholds, solution: Columns) -> ChannelView:
+    verdict = solution["verdict"][np.searchsorted(solution["frame"], curve.frame)]
+    return ChannelView(curve, n_frames, int((verdict == "good").sum()), thresholds)
 
 
 def examine_target(order: Order, target: int, field_controls: IntArray, above_quiet: dict[str, float]) -> Examined:

@@ -43,7 +43,10 @@ class Watcher(Protocol):
 
 @dataclass(frozen=True)
 class Session:
-    """What every stage needs: the run folder, who works, what pieces of work are told, plugins, targets, who watches."""
+    """What every stage needs: the run folder, who works, what pieces of work are told, plugins, targets, who watches.
+
+    `comparisons` are the user's own, None where they are to be chosen from the archive.
+    """
 
     run: RunFolder
     crew: Crew
@@ -51,10 +54,16 @@ class Session:
     plugins: host.Plugins
     targets: Targets
     watcher: Watcher
+    comparisons: Targets | None = None
 
 
-def verdicts(session: Session, frames: Columns, positions: Columns, rejects: Sequence[Mapping[str, Any]]) -> Outcome:
-    """Judge, rank, examine and describe every target, and write the result tables."""
+def verdicts(
+    session: Session, frames: Columns, positions: Columns, rejects: Sequence[Mapping[str, Any]], said: Sequence[str]
+) -> Outcome:
+    """Judge, rank, examine and describe every target, and write the result tables.
+
+    `said` are sentences for the last lines that earlier stages have to say.
+    """
     fields = _fields(frames, positions, session.order.settings)
     columns = judge.full_columns([*session.plugins.statistics, *session.plugins.period_searches])
     everyone = {found.number: found.ids for found in fields}
@@ -68,7 +77,7 @@ def verdicts(session: Session, frames: Columns, positions: Columns, rejects: Seq
         for found in fields:
             judge.spread(found.judgement, searched[found.number], found.rows(gate[found.number]), columns)
             conclude.rank(found, session.plugins, session.order.settings)
-    return _tabled(session, frames, positions, rejects, fields)
+    return _tabled(session, frames, positions, rejects, fields, said)
 
 
 def _fields(frames: Columns, positions: Columns, chosen: Settings) -> list[Field]:
@@ -150,6 +159,7 @@ def _tabled(
     positions: Columns,
     rejects: Sequence[Mapping[str, Any]],
     fields: Sequence[Field],
+    said: Sequence[str],
 ) -> Outcome:
     """The result tables of a run, made from its ranked fields and written."""
     settings, plugins = session.order.settings, session.plugins
@@ -162,18 +172,18 @@ def _tabled(
     cells = {found.number: outcome.plugin_cells(found, plugins) for found in fields}
     errors = dict(zip(session.targets.names, session.targets.position_error.tolist(), strict=True))
     rows = []
-    for place, said in zip(places, described, strict=True):
+    for place, cells_of in zip(places, described, strict=True):
         found, where = place.found, int(np.searchsorted(positions["id"], place.target))
         row = dict(cells[found.number][int(np.searchsorted(found.ids, place.target))])
         row |= examined[place.at].cells if place.at in examined else {}
-        row |= {**said.cells, **outcome.chance_cells(found, place.index, place.at, p)}
+        row |= {**cells_of.cells, **outcome.chance_cells(found, place.index, place.at, p)}
         row |= {"name": place.name, "ra": float(positions["ra"][where]), "dec": float(positions["dec"][where])}
         row["notes"] = outcome.notes(found, place.index, place.at, p, errors.get(place.name, 0.0))
         rows.append(row)
     faults = [f for found in fields for f in found.judgement.faults] + [f for e in examined.values() for f in e.faults]
     meta = outcome.meta(settings, p, fields)
     table = outcome.candidate_table(rows, plugins, meta)
-    result = _result(session.run, table, described, frames, rejects, merged(faults), p, fields, settings)
+    result = _result(session.run, table, described, frames, rejects, merged(faults), p, fields, settings, said)
     _write(session, result, described, fields, {place.target: place.name for place in places}, meta)
     return result
 
@@ -225,6 +235,7 @@ def _result(
     p: conclude.PValues,
     fields: Sequence[Field],
     settings: Settings,
+    said: Sequence[str],
 ) -> Outcome:
     """The run's outcome in numbers."""
     return Outcome(
@@ -232,11 +243,11 @@ def _result(
         table=table,
         standings={word: int(np.sum(table["standing"] == word)) for word in STANDINGS},
         n_frames=int(np.sum(frames["state"] != "void")),
-        n_measurements=int(sum(row["n_frames"] for said in described for row in said.channels)),
+        n_measurements=int(sum(row["n_frames"] for target in described for row in target.channels)),
         rejects=dict(sorted(Counter(str(row["reason"]) for row in rejects).items())),
         faults=tuple(faults),
         extrapolated=int(p.extrapolated.sum()),
-        remarks=outcome.remarks(p, fields, settings),
+        remarks=(*said, *outcome.remarks(p, fields, settings)),
     )
 
 

@@ -1,0 +1,135 @@
+"""Which sources of an archive can serve as comparisons, and where exactly they are.
+
+Candidates are the bright sources of the reference frames that stand alone; centroids in many frames then tell their
+places, whether they are points, and which of them come and go. Pure: sources and centroids in, positions out.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from hindlight.lightcurve import FloatArray, IntArray
+from hindlight.plan import BrightSources
+from hindlight.pointing import LEAST_SNR
+from hindlight.positions import BlankSky
+from hindlight.settings import Comparisons
+from hindlight.systems import unit_vectors
+
+FAINTER = 0.1  # a neighbour of so small a part of a source's S/N does not disturb it
+POINT_WIDTH = 1.3  # median width over the beam's up to which a source counts as a point
+SPARE = 2  # so many times more candidates are looked at than comparisons are wanted
+OFTEN = 0.5  # of the frames that are deep enough to show it, a steady source is found in at least this fraction
+SURE = 2.0  # a source of so many times the least S/N is expected to be found
+ROUNDS = 4
+
+Columns = dict[str, Any]
+
+
+@dataclass(frozen=True, eq=False)
+class Located:
+    """Centroids of n candidates in one frame: ICRS offsets in degrees (along ra times cos dec, and dec), S/N, width.
+
+    Shape (n,), NaN where a source was not found or not covered.
+    """
+
+    east: FloatArray
+    north: FloatArray
+    snr: FloatArray
+    width: FloatArray
+
+
+def candidates(
+    sources: BrightSources, occupied: FloatArray, known: FloatArray, settings: Comparisons
+) -> tuple[FloatArray, FloatArray]:
+    """ICRS degrees, shape (n,) twice, of sources that may serve: brightest first.
+
+    `sources` are all bright ones, each as often as it was found; `occupied` are unit vectors of targets to stay clear
+    of, `known` those of comparisons that are there already.
+    """
+    order = np.argsort(-sources.snr, kind="stable")
+    ra, dec, snr, beam = (getattr(sources, name)[order] for name in ("ra", "dec", "snr", "beam"))
+    vectors = unit_vectors(ra, dec)
+    clear = BlankSky(occupied, np.full(len(occupied), settings.isolation * float(beam.max(initial=0.0)) / 3600.0))
+    free = (snr >= settings.min_snr) & (clear.clear(vectors) if len(occupied) else True)
+    taken = [*known]
+    chosen: list[int] = []
+    for i in np.flatnonzero(free).tolist():
+        if len(chosen) >= SPARE * settings.wanted:
+            break
+        same = np.cos(np.radians(beam[i] / 3600.0))
+        alone = np.cos(np.radians(settings.isolation * beam[i] / 3600.0))
+        cosine = vectors @ vectors[i]
+        crowd = (cosine > alone) & (cosine < same) & (snr > FAINTER * snr[i])
+        if crowd.any() or (taken and (np.array(taken) @ vectors[i]).max() > same):
+            continue
+        chosen.append(i)
+        taken.append(vectors[i])
+    return ra[chosen], dec[chosen]
+
+
+def placed(
+    ra: FloatArray, dec: FloatArray, found: Sequence[Located], settings: Comparisons
+) -> tuple[FloatArray, FloatArray]:
+    """ICRS degrees of the comparisons among the candidates at (ra, dec), shape (n,), brightest first.
+
+    A place is the median over the frames of the centroids less each frame's own shift, the mean shift of all frames
+    being zero. Left out are sources that are no points, and those found in too few of the frames deep enough for them.
+    """
+    if not found or len(ra) == 0:
+        return ra[:0], dec[:0]
+    east, north, snr, width = (
+        np.stack([getattr(f, name) for f in found]) for name in ("east", "north", "snr", "width")
+    )
+    place_east, place_north = _consistent(east), _consistent(north)
+    seen = np.isfinite(snr)
+    good = (seen.sum(axis=0) >= 2) & np.isfinite(place_east) & np.isfinite(place_north)
+    good &= _median(width) <= POINT_WIDTH
+    good &= _steady(snr, seen)
+    kept = np.flatnonzero(good)[: settings.wanted]
+    return ra[kept] + place_east[kept] / np.cos(np.radians(dec[kept])), dec[kept] + place_north[kept]
+
+
+def _steady(snr: FloatArray, seen: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """Which sources are found in most of the frames that are deep enough for them."""
+    expected = _relative_depth(snr)[:, None] * _median(snr) >= SURE * LEAST_SNR
+    return np.asarray(seen.sum(axis=0) >= OFTEN * np.maximum(1, (expected | seen).sum(axis=0)))
+
+
+def _relative_depth(snr: FloatArray) -> FloatArray:
+    """How many times deeper than typical each frame is, shape (n_frames,): the median of S/N over the sources' own."""
+    return np.nan_to_num(_median((snr / _median(snr)).T), nan=0.0)
+
+
+def _consistent(offset: FloatArray) -> FloatArray:
+    """Places of the sources, shape (n,), from offsets (n_frames, n) that share an unknown shift in each frame."""
+    place = np.zeros(offset.shape[1])
+    for _ in range(ROUNDS):
+        shift = _median((offset - place).T)
+        known = np.isfinite(shift)
+        if not known.any():
+            return np.full(offset.shape[1], np.nan)
+        place = _median(offset - (shift - shift[known].mean())[:, None])
+        place = np.where(np.isfinite(place), place, 0.0)
+    return np.where(np.isfinite(offset).any(axis=0), place, np.nan)
+
+
+def _median(values: FloatArray) -> FloatArray:
+    """Over the first axis, of what is not NaN; NaN where all is."""
+    some = np.isfinite(values).any(axis=0)
+    return np.where(some, np.nanmedian(np.where(some, values, 0.0), axis=0), np.nan)
+
+
+def sampled_frames(frames: Columns, rows: IntArray, per_channel: int) -> IntArray:
+    """The frames in which candidates are located: so many per channel, evenly over time."""
+    chosen: list[int] = []
+    for label in sorted(set(frames["channel"][rows].tolist())):
+        mine = rows[frames["channel"][rows] == label]
+        mine = mine[np.argsort(frames["middle_mjd_tdb"][mine], kind="stable")]
+        spread = np.linspace(0, len(mine) - 1, min(per_channel, len(mine))).round().astype(int)
+        chosen += mine[np.unique(spread)].tolist()
+    return np.array(sorted(chosen), np.int64)

@@ -1,0 +1,95 @@
+"""Which sources serve as comparisons and where they are."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+
+from hindlight.comparisons import Located, candidates, placed, sampled_frames
+from hindlight.plan import BrightSources
+from hindlight.settings import Comparisons
+from hindlight.systems import unit_vectors
+
+BEAM = 30.0  # arcsec
+SETTINGS = Comparisons(wanted=3)
+NOBODY = np.zeros((0, 3))
+
+
+def sources(east_beams: list[float], snr: list[float]) -> BrightSources:
+    """Sources in a row along right ascension at the equator."""
+    n = len(snr)
+    return BrightSources(10 + np.array(east_beams) * BEAM / 3600, np.zeros(n), np.array(snr), np.full(n, BEAM))
+
+
+def test_the_bright_that_stand_alone() -> None:
+    """Brightest first; not the faint, not those with a neighbour, not one found twice, not those near a target."""
+    found = sources([0, 10, 20, 22, 40, 40.2, 50, 60], [30, 100, 60, 50, 80, 70, 10, 90])
+    target = unit_vectors(np.array([10 + 61 * BEAM / 3600]), np.array([0.0]))
+    ra, _ = candidates(found, target, NOBODY, SETTINGS)
+    np.testing.assert_allclose((ra - 10) * 3600 / BEAM, [10, 40, 0])
+
+
+def test_a_faint_neighbour_does_no_harm_and_a_known_one_is_not_taken_again() -> None:
+    """A tenth of the S/N is little; what another field has already is left alone."""
+    found = sources([0, 2, 30], [200, 15, 100])
+    known = unit_vectors(np.array([10 + 30 * BEAM / 3600]), np.array([0.0]))
+    ra, _ = candidates(found, NOBODY, known, SETTINGS)
+    np.testing.assert_allclose((ra - 10) * 3600 / BEAM, [0])
+
+
+def located(seed: int, frames: int = 40, n: int = 6) -> tuple[np.ndarray, list[Located]]:
+    """Offsets that the candidates truly have, and centroids in frames that are each shifted; S/N 100, 90, 80..."""
+    rng = np.random.default_rng(seed)
+    true = rng.normal(0, 1e-3, (2, n))
+    made = []
+    shifts = rng.normal(0, 2e-3, (frames, 2))
+    shifts -= shifts.mean(axis=0)
+    for k in range(frames):
+        offset = true + shifts[k][:, None] + rng.normal(0, 1e-4, (2, n))
+        made.append(Located(*offset, 100.0 - 10 * np.arange(n) + rng.normal(0, 1, n), np.ones(n)))
+    return true, made
+
+
+def test_places_are_common_to_all_frames() -> None:
+    """Each frame has its own shift, of which the places are free; missing sources do not move the others."""
+    true, found = located(1)
+    for k, frame in enumerate(found):
+        frame.east[k % 6] = frame.north[k % 6] = frame.snr[k % 6] = np.nan
+    ra, dec = placed(np.full(6, 20.0), np.full(6, 60.0), found, Comparisons(wanted=6))
+    np.testing.assert_allclose((ra - 20) * np.cos(np.radians(60)), true[0], atol=1e-4)
+    np.testing.assert_allclose(dec - 60, true[1], atol=1e-4)
+
+
+def test_what_is_no_point_or_comes_and_goes_is_left_out() -> None:
+    """An extended source, one seen in a quarter of the frames, one seen once; the brightest of the rest are taken."""
+    _, found = located(2)
+    for k, frame in enumerate(found):
+        frame.width[0] = 1.8
+        for source, seen in ((1, k % 4 == 0), (2, k == 7)):
+            if not seen:
+                frame.east[source] = frame.north[source] = frame.snr[source] = np.nan
+    ra, _ = placed(np.arange(6) * 1.0, np.zeros(6), found, Comparisons(wanted=2))
+    np.testing.assert_allclose(ra, [3, 4], atol=0.01)
+
+
+def test_shallow_frames_do_not_make_a_source_inconstant() -> None:
+    """Half of the frames show only the brightest: the faint ones are judged by the others."""
+    _, found = located(3)
+    for frame in found[::2]:
+        frame.snr[:] /= 9.0
+        for values in (frame.east, frame.north, frame.snr):
+            values[2:] = np.nan
+    assert len(placed(np.arange(6) * 1.0, np.zeros(6), found, Comparisons(wanted=6))[0]) == 6
+
+
+def test_nothing_to_choose_from() -> None:
+    """No candidates, or no frame."""
+    assert len(placed(np.empty(0), np.empty(0), [], SETTINGS)[0]) == 0
+    assert len(candidates(sources([], []), NOBODY, NOBODY, SETTINGS)[0]) == 0
+
+
+def test_frames_are_spread_over_time() -> None:
+    """So many of each channel, first and last among them."""
+    frames = {"channel": np.array(["a"] * 10 + ["b"] * 2, object), "middle_mjd_tdb": np.r_[np.arange(10)[::-1], 3, 4]}
+    rows = sampled_frames(frames, np.arange(12), 3)
+    assert rows.tolist() == pytest.approx([0, 5, 9, 10, 11]) or rows.tolist() == [0, 4, 9, 10, 11]
