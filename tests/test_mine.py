@@ -174,7 +174,7 @@ def contents(run):
 
 def test_same_bytes_for_any_number_of_workers(tmp_path):
     """One process, two processes and four write the same bytes."""
-    folder = small(tmp_path, per_field=60)
+    folder = small(tmp_path)
     mine(*arguments(folder, tmp_path / "one"), "--workers", 1)
     expected = contents(tmp_path / "one")
     for workers in (2, 4):
