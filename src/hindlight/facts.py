@@ -152,10 +152,10 @@ class Cards:
         start = self._index.get(key)
         return "" if start is None else self._text[start : start + CARD]
 
-    def all_of(self, key: str) -> list[str]:
-        """The text after the keyword of every card with this keyword, as for HISTORY and COMMENT."""
+    def all_of(self, *keys: str) -> list[str]:
+        """The text after the keyword of every card with one of these keywords, as for HISTORY and COMMENT."""
         starts = range(0, len(self._text) - CARD + 1, CARD)
-        return [self._text[s + 8 : s + CARD].rstrip() for s in starts if self._text[s : s + 8].rstrip() == key]
+        return [self._text[s + 8 : s + CARD].rstrip() for s in starts if self._text[s : s + 8].rstrip() in keys]
 
     def get(self, key: str) -> Value:
         """The value of a card as text, number or truth; None where it is absent, empty or no value at all."""
