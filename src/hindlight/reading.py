@@ -10,7 +10,7 @@ from __future__ import annotations
 
 import math
 import re
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import replace
 from functools import lru_cache
 from typing import NamedTuple
@@ -74,7 +74,7 @@ _NORTH, _SOUTH = (re.compile(rf"\b((?i:{word})|{word[0].upper()}\b)") for word i
 _MINUS_EAST, _MINUS_WEST = (
     re.compile(
         rf"({word}\w*|\b{word[0]})\s*(is|are|=|:)?\s*(neg|minus)"
-        rf"|((neg\w*|minus)\s*(is|=|:|for)?\s*|-)({word}|{word[0]}\b)",
+        rf"|((neg\w*|minus)\s*(is|=|:|for)?\s*|-)\b({word}|{word[0]}\b)",
         re.I,
     )
     for word in ("east", "west")
@@ -225,7 +225,8 @@ def _header_times(cards: Cards, observed: Callable[[Cards], Observed], exposure:
         instants = (known.get("start"), known.get("middle"), known.get("end"))
         return Times(*instants, exposure, span, seen.scale, seen.words)
     dated = start or middle or seen.moment or end
-    return _without_clock(Times(dated, None, None, exposure, span, seen.scale, seen.words))
+    words = tuple(word for word in seen.words if word != "start_assumed")  # of what there is none
+    return _without_clock(Times(dated, None, None, exposure, span, seen.scale, words))
 
 
 def stated_instant(cards: Cards) -> Observed:
@@ -269,7 +270,7 @@ def separate_clock(cards: Cards) -> Observed:
         if clock is None:
             other = julian_instant(cards)
             near = other.moment is not None and abs(other.moment.mjd - moment.mjd) <= 1
-            return other if near else Observed(moment)
+            return other if near else Observed(moment, *_said_which(comments, written.two_digits))
         moment = clock if clock.mjd else replace(clock, mjd=moment.mjd)
         comments.insert(0, comment_of(cards, clock_key) + (" start" if clock_key in CLOCKS_OF_START else ""))
         scale = "UTC" if "UT" in clock_key else ""
@@ -278,14 +279,20 @@ def separate_clock(cards: Cards) -> Observed:
     if _LOCAL.search(comments[0]):
         return Observed(replace(moment, seconds=0.0, has_clock=False), words=(*words, "local_unsettled"))
     moment, more = _checked_day(cards, moment, separate)
-    which = next(filter(None, map(_which, comments)), "")
-    if not which and written.two_digits:
-        more = ("start_assumed", *more)
-    elif which:
-        more = tuple(word for word in more if word != "start_assumed")
+    which, _, assumed = _said_which(comments, written.two_digits or "start_assumed" in more)
+    words += [word for word in more if word != "start_assumed"]
     said = scale or next((found.group(1) for text in comments if (found := _SCALE.search(text))), "")
     date = written.moment if separate else None
-    return Observed(moment, which or "start", cards.text("TIMESYS") or said, (*words, *dict.fromkeys(more)), date)
+    return Observed(moment, which, cards.text("TIMESYS") or said, (*words, *assumed), date)
+
+
+def _said_which(comments: Sequence[str], doubtful: bool) -> tuple[str, str, tuple[str, ...]]:
+    """Which instant the first comment to say so means, or the start, with a word where that is doubtful; as parts of
+
+    an `Observed`, with a blank for the scale.
+    """
+    which = next(filter(None, map(_which, comments)), "")
+    return which or "start", "", ("start_assumed",) if doubtful and not which else ()
 
 
 def _clock(cards: Cards) -> tuple[str, Moment | None, list[str]]:
@@ -378,7 +385,14 @@ def stated_exposure(cards: Cards) -> Exposure:
 
 def spoken_exposure(cards: Cards) -> Exposure:
     """The same, with the unit in whatever words the comment has it, as in 'exposure time minutes'."""
-    return _exposure(cards, lambda comment: next((u for p, u in _UNITS_IN_WORDS if p.search(comment)), 1.0))
+    return _exposure(cards, _spoken_unit)
+
+
+def _spoken_unit(comment: str) -> float:
+    bracket = _UNIT.search(comment)
+    if bracket and bracket.group(1) in SECONDS:
+        return SECONDS[bracket.group(1)]
+    return next((unit for pattern, unit in _UNITS_IN_WORDS if pattern.search(comment)), 1.0)
 
 
 def _exposure(cards: Cards, unit_of: Callable[[str], float]) -> Exposure:
@@ -523,12 +537,15 @@ def _height(cards: Cards) -> float:
 
 
 def east_longitude(cards: Cards) -> float:
-    """Degrees east of Greenwich by OBSGEO-L or by an older card whose direction is settled; NaN otherwise.
+    """Degrees east of Greenwich by OBSGEO or by an older card whose direction is settled; NaN otherwise.
 
     Settled it is by a letter beside the number, by the comment, or by a sidereal time that only one sign can have.
     """
     if cards.number("OBSGEO-L") == cards.number("OBSGEO-L"):
         return cards.number("OBSGEO-L")
+    x, y = cards.number("OBSGEO-X"), cards.number("OBSGEO-Y")
+    if x == x and y == y:
+        return math.degrees(math.atan2(y, x))
     keys = _place_keys(cards)
     if keys is None:
         return NAN

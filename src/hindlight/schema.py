@@ -85,7 +85,7 @@ ASSUMPTIONS = {
     "sidereal_time": "the time of day was computed from sidereal time and longitude: good to a second or two",
     "site_unsettled": "the header's longitude does not say whether east or west is positive: it was not used",
     "exposure_doubtful": "the exposure is below 0.01 s or above 100 000 s, perhaps in another unit: taken as stated",
-    "coadds": "several exposures were combined: the stated exposure may be that of each one; it was taken as that of all",
+    "coadds": "several exposures were combined: the stated exposure may be that of each one, but was taken as that of all",
     "intermittent": "the good time is less than the span from start to end: when it lay in between is not known",
     "beam_from_history": "the beam was taken from the text of the header's history or comments",
     "beam_swapped": "the minor axis of the beam was larger than the major one: they were swapped",
