@@ -83,7 +83,8 @@ def test_plain_frame(tmp_path: Path) -> None:
         ({"TELAPSE": 600.0}, 0, 300, 600, ["intermittent"]),
         ({"EXPTIME": None}, 0, 0, None, ["no_exposure"]),
         ({"EXPTIME": None, "DATE__AVG": "1988-03-17T06:01:00"}, None, 60, None, ["no_exposure"]),
-        ({"EXPTIME": None, "DATE__END": "1988-03-17T06:10:00"}, None, 600, 600, ["no_exposure"]),
+        ({"EXPTIME": None, "DATE__END": "1988-03-17T06:10:00"}, 0, 300, 600, ["span_is_good_time"]),
+        ({"EXPTIME": None, "DATE__OBS": None, "DATE__END": "1988-03-17T06:10:00"}, None, 600, 600, ["no_exposure"]),
         (
             {"EXPTIME": None, "DATE__BEG": "1988-03-17T06:00:00", "DATE__END": "1988-03-17T06:10:00"},
             0, 300, 600, ["span_is_good_time"],

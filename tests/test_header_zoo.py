@@ -791,6 +791,29 @@ STANDARD_CASES = [
         )
         for key in ("NCOMBINE", "COADDS")
     ),
+    *(
+        Case(
+            f"the seeing, {said}",
+            ICRS + NAME + SITE + "BUNIT   = 'ADU'\nDATE-OBS= '1988-03-17T06:00:00'\nTIMESYS = 'UTC'\nEXPTIME = 120.0\n"
+            f"SEEING  =                  3.0 / {said}",
+            "",
+            "1988-03-17T06:01:00",
+            unit="adu",
+            beam=(width, width, 0.0),
+            **STANDARD,
+        )
+        for said, width in (("average FWHM (pixels)", 108.0), ("[pix]", 108.0))
+    ),
+    Case(
+        "an exposure from DATE-OBS to DATE-END",
+        MODERN + "DATE-OBS= '1988-03-17T06:00:00'\nDATE-END= '1988-03-17T06:02:00'\nTIMESYS = 'UTC'\nEXP_TIME= 100.0",
+        "primary_beam_unknown intermittent",
+        "1988-03-17T06:01:00",
+        exposure=100.0,
+        span=120.0,
+        frequency=154e6,
+        **STANDARD,
+    ),
     Case(
         "a long beam without its angle",
         MODERN.replace("BPA", "XPA")

@@ -244,7 +244,8 @@ def _columns(found: Sequence[_Found], settings: Settings, rejects: list[Row]) ->
     usable, kept = _outlines(found, times["middle_mjd_tdb"], words, rejects)
     columns = {name: values[kept] for name, values in (times | _plain(found)).items()}
     columns |= footprints.columns(usable)
-    _beams(columns, settings, [words[i] for i in kept])
+    in_pixels = np.array([found[i].facts.beam_in_pixels for i in kept], dtype=bool)
+    _beams(columns, in_pixels, settings, [words[i] for i in kept])
     columns["assumptions"] = _text([_sentences(tuple(dict.fromkeys(words[i]))) for i in kept])
     return columns
 
@@ -387,8 +388,10 @@ def _outlines(
     return usable, kept
 
 
-def _beams(columns: Columns, settings: Settings, words: Sequence[list[str]]) -> None:
+def _beams(columns: Columns, in_pixels: NDArray[np.bool_], settings: Settings, words: Sequence[list[str]]) -> None:
     """Fill in widths from the settings where the header gives none, or one that cannot be a width in this image."""
+    for name in ("beam_major", "beam_minor"):
+        columns[name] = np.where(in_pixels, columns[name] * columns["pixel_scale"], columns[name])
     _read_as_arcsec(columns, settings, words)
     ratio = columns["beam_major"] / columns["pixel_scale"]
     good = _within(ratio, BEAM_PIXELS)

@@ -94,6 +94,8 @@ class FrameFacts:
         Good time, and time from first to last photon.
     beam_major, beam_minor, beam_angle
         Full widths at half maximum in arcsec, and position angle east of north in degrees.
+    beam_in_pixels
+        Whether the widths are in pixels instead, as some headers give the seeing.
     site
         ITRF metres, or None.
     barycentric
@@ -112,6 +114,7 @@ class FrameFacts:
     beam_major: float = NAN
     beam_minor: float = NAN
     beam_angle: float = NAN
+    beam_in_pixels: bool = False
     start: Moment | None = None
     middle: Moment | None = None
     end: Moment | None = None

@@ -39,6 +39,7 @@ DISAGREE_S = 1.0
 SAME_HOURS_S = 21600.0  # what is a day off to within this is the same time of another day
 EXPOSURES = ("EXPTIME", "EXPOSURE", "ITIME", "EXP_TIME", "INTTIME", "ONTIME", "LIVETIME")
 LIKELY_EXPOSURE_S = (1e-2, 1e5)
+WIDTHS = ("SEEING", "PSFFWHM")
 COADDS = ("NCOMBINE", "COADDS", "NCOADDS")
 ROUND_BEAM = 1.05
 DATES = ("DATE-OBS", "DATE_OBS", "DATEOBS", "UT-DATE", "UTDATE")
@@ -48,7 +49,7 @@ CLOCKS = (
 JULIAN = ("MJD-OBS", "MJD", "MJDATE", "JD-OBS", "JD")
 PLACES = (
     ("LATITUDE", "LONGITUD"), ("SITELAT", "SITELONG"), ("LAT-OBS", "LONG-OBS"), ("OBS-LAT", "OBS-LONG"),
-    ("GEOLAT", "GEOLON"), ("LAT", "LONG"), ("LAT", "LON"),
+    ("OBSLAT", "OBSLON"), ("GEOLAT", "GEOLON"), ("LAT", "LONG"), ("LAT", "LON"),
 )  # fmt: skip
 HEIGHTS = ("ALTITUDE", "SITEALT", "SITEELEV", "ALT-OBS", "OBS-ELEV", "HEIGHT", "ELEVATIO")
 CLOCKS_OF_START = ("UTSTART", "UT-START", "START", "TIME-BEG")
@@ -61,6 +62,7 @@ _MIDDLE = re.compile(r"\bmid(dle|point|time|exp\w*)?\b|\bcent(er|re) of (the )?(
 _END = re.compile(r"\bend\b")
 _UNIT = re.compile(r"\[\s*([^\]]*?)\s*\]")
 _SCALE = re.compile(r"\b(UTC|UT1|UT|GMT|TAI|IAT|GPS|TDT|TDB|TT|ET)\b")
+_PIXELS = re.compile(r"\bpix", re.I)
 _LOCAL = re.compile(r"\blocal\b(?! (mean |apparent )?sidereal)", re.I)
 _UNITS_IN_WORDS = (
     (re.compile(r"\b(ms|msec|milli-?sec\w*)\b", re.I), 1e-3),
@@ -107,12 +109,13 @@ class Times(NamedTuple):
 
 
 class Beam(NamedTuple):
-    """Full widths at half maximum in arcsec, position angle in degrees, and what was taken for granted."""
+    """Full widths at half maximum in arcsec (or in pixels), position angle in degrees, what was taken for granted."""
 
     major: float = NAN
     minor: float = NAN
     angle: float = NAN
     words: tuple[str, ...] = ()
+    in_pixels: bool = False
 
 
 Exposure = tuple[float, tuple[str, ...]]
@@ -153,6 +156,7 @@ def read_facts(
         beam_major=shape.major,
         beam_minor=shape.minor,
         beam_angle=shape.angle,
+        beam_in_pixels=shape.in_pixels,
         start=times.start,
         middle=times.middle,
         end=times.end,
@@ -216,6 +220,8 @@ def _header_times(cards: Cards, observed: Callable[[Cards], Observed], exposure:
     middle = _instant(cards, "DATE-AVG", "MJD-AVG")
     if _has_clock(start) or _has_clock(end):
         known_start, known_end = (m if _has_clock(m) else None for m in (start, end))
+        if known_start is None and known_end is not None:
+            known_start = _start_before(known_end, observed(cards))
         return Times(known_start, None, known_end, exposure, span)
     if _has_clock(middle):
         return Times(None, middle, None, exposure, span)
@@ -227,6 +233,13 @@ def _header_times(cards: Cards, observed: Callable[[Cards], Observed], exposure:
     dated = start or middle or seen.moment or end
     words = tuple(word for word in seen.words if word != "start_assumed")  # of what there is none
     return _without_clock(Times(dated, None, None, exposure, span, seen.scale, words))
+
+
+def _start_before(end: Moment, seen: Observed) -> Moment | None:
+    """DATE-OBS as the start of an exposure whose end alone has a card of the newer kind; None where it may be another."""
+    first = seen.moment
+    certain = first is not None and first.has_clock and seen.which == "start" and not seen.words and not seen.scale
+    return first if certain and first is not None and between(end, first) >= 0 else None
 
 
 def stated_instant(cards: Cards) -> Observed:
@@ -601,11 +614,12 @@ def _from_geodetic(latitude: float, longitude: float, height: float) -> tuple[fl
 
 
 def stated_beam(cards: Cards) -> Beam:
-    """BMAJ and its like, in degrees, or SEEING in arcsec."""
+    """BMAJ and its like, in degrees, or SEEING in arcsec unless its comment says pixels."""
     major, minor, angle = cards.number("BMAJ"), cards.number("BMIN"), cards.number("BPA")
     if not major > 0:
-        width = cards.first_number("SEEING", "PSFFWHM")  # arcsec by common practice, no source
-        return Beam(width, width, 0.0) if width > 0 else Beam()
+        key = next((key for key in WIDTHS if cards.number(key) > 0), "")
+        width = cards.number(key)  # arcsec by common practice, no source
+        return Beam(width, width, 0.0, in_pixels=_PIXELS.search(comment_of(cards, key)) is not None) if key else Beam()
     return beam_of(major, minor, angle)
 
 
