@@ -33,12 +33,12 @@ from hindlight import (
     spoken_exposure,
 )
 
-PLATES = ("PLTLABEL", "PLATENUM", "PLATE-ID", "PLATEID", "PLATE", "PLTSCALE", "EMULSION", "PLTRAH")
+PLATES = frozenset(("PLTLABEL", "PLATENUM", "PLATE-ID", "PLATEID", "PLATE", "PLTSCALE", "EMULSION", "PLTRAH"))
 LOCAL_CLOCKS = ("LT", "LT-OBS", "LOCTIME", "LOC-TIME", "LOCALTIM", "TIME-LOC")
 CLOCKS = ("TIME-OBS", "TIME_OBS", "START", "TIME-BEG")  # local only where the comment says so
 ZONES = ("TIMEZONE", "TIMEZON", "TZ", "UTOFFSET", "UTC-OFF", "GMTOFF", "ZONE")
 STARS = ("LST", "ST", "LST-OBS", "SIDTIME", "LMST")
-NIGHTS = ("DATE-OBS", "NIGHT")
+HABITS = frozenset((*LOCAL_CLOCKS, *ZONES, *STARS, "NIGHT"))
 DAY_S = 86400.0
 SIDEREAL_RATE = 1.00273790935
 DAY_BY_STARS_S = (60.0, 150.0)  # a day is 236 s of sidereal time: the right one fits to within, the wrong one is beyond
@@ -59,11 +59,11 @@ class PlateHeaders(Dialect):
 
     def recognises(self, cards: Cards) -> bool:
         """Whether a card names a plate, or one of these habits shows where DATE-OBS alone gives no instant."""
-        if any(key in cards for key in PLATES):
+        if cards.has_any(PLATES):
             return True
         if cards.text("DATE-OBS")[10:11] == "T":
             return cards.text("TIMESYS").upper() in ("LOCAL", "LT")
-        if any(key in cards for key in (*LOCAL_CLOCKS, *ZONES, *STARS, "NIGHT")):
+        if cards.has_any(HABITS):
             return True
         return has_old_times(cards) and any(_speaks_of_night(cards, key) for key in ("DATE-OBS", *CLOCKS))
 
@@ -73,7 +73,8 @@ class PlateHeaders(Dialect):
 
 
 def _speaks_of_night(cards: Cards, key: str) -> bool:
-    return _NIGHT.search(comment_of(cards, key)) is not None or "local" in comment_of(cards, key).lower()
+    said = comment_of(cards, key)
+    return bool(said) and (_NIGHT.search(said) is not None or "local" in said.lower())
 
 
 def _instant(cards: Cards) -> Observed:

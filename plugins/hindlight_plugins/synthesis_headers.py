@@ -25,6 +25,8 @@ from hindlight import (
     stated_beam,
 )
 
+RADIO_AXES = ("FREQ", "STOKES")
+
 _NUMBER = r"([+-]?(?:\d+\.?\d*|\.\d+)(?:[EeDd][+-]?\d+)?)"
 _BEAM = re.compile(
     rf"\bBMAJ\s*=\s*{_NUMBER}\s*(arcsec|asec|\"|'')?[^=]*?\bBMIN\s*=\s*{_NUMBER}[^=]*?\bBPA\s*=\s*{_NUMBER}", re.I
@@ -53,7 +55,7 @@ class SynthesisHeaders(Dialect):
 
 
 def _is_radio(cards: Cards) -> bool:
-    return any(cards.text(f"CTYPE{i}").startswith(("FREQ", "STOKES")) for i in (3, 4))
+    return cards.text("CTYPE3").startswith(RADIO_AXES) or cards.text("CTYPE4").startswith(RADIO_AXES)
 
 
 def _beam(cards: Cards) -> Beam:

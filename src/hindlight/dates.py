@@ -45,7 +45,7 @@ def read_date(value: Value) -> WrittenDate:
     text = str(value) if isinstance(value, int) and not isinstance(value, bool) else value
     if not isinstance(text, str):
         return WrittenDate()
-    found = Moment.from_iso(text)
+    found = None if "/" in text else Moment.from_iso(text)
     if found is not None:
         return WrittenDate(found)
     match = _PARTS.fullmatch(text.strip().upper())

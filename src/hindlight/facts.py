@@ -147,6 +147,10 @@ class Cards:
     def __contains__(self, key: str) -> bool:
         return key in self._index
 
+    def has_any(self, keys: frozenset[str]) -> bool:
+        """Whether one of several keywords is there."""
+        return not self._index.keys().isdisjoint(keys)
+
     def __iter__(self) -> Iterator[str]:
         return reversed(self._index)
 
@@ -174,12 +178,10 @@ class Cards:
 
     def number(self, key: str) -> float:
         """The value if it is a finite number, NaN otherwise; numbers written as text are not numbers."""
-        if key not in self._index:
-            return NAN
         value = self.get(key)
-        if isinstance(value, bool) or not isinstance(value, int | float):
+        if value is None or isinstance(value, str | bool):
             return NAN
-        return float(value) if abs(value) < 1e300 else NAN
+        return float(value) if -1e300 < value < 1e300 else NAN
 
     def integer(self, key: str, default: int = 0) -> int:
         """The value if it is a whole number, `default` otherwise."""

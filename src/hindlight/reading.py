@@ -55,6 +55,7 @@ HEIGHTS = ("ALTITUDE", "SITEALT", "SITEELEV", "ALT-OBS", "OBS-ELEV", "HEIGHT", "
 CLOCKS_OF_START = ("UTSTART", "UT-START", "START", "TIME-BEG")
 SIDEREAL = ("LST", "ST", "LST-OBS", "SIDTIME", "LMST")
 SAME_LONGITUDE_DEG = 2.0
+_CLOCKS, _DATES, _COADDS, _OLD_PLACES = map(frozenset, (CLOCKS, DATES, COADDS, [longitude for _, longitude in PLACES]))
 
 _COMMENT = re.compile(r"(?:\s*'(?:[^']|'')*')?[^/]*/(.*)")
 _START = re.compile(r"\b(start|begin)")
@@ -178,14 +179,21 @@ def has_old_times(cards: Cards) -> bool:
     date = cards.text("DATE-OBS")
     if date[10:11] == "T":
         return False
-    if any(key in cards for key in CLOCKS):
+    if cards.has_any(_CLOCKS):
         return True
-    return any(key in cards and cards.get(key) != "" for key in DATES) and cards.moment("DATE-OBS") is None
+    return (
+        cards.has_any(_DATES)
+        and any(key in cards and cards.get(key) != "" for key in DATES)
+        and cards.moment("DATE-OBS") is None
+    )
 
 
 def comment_of(cards: Cards, key: str) -> str:
     """The comment of a card, '' where there is none."""
-    match = _COMMENT.match(cards.card(key)[10:])
+    text = cards.card(key)[10:]
+    if "'" not in text:
+        return text.partition("/")[2].strip()
+    match = _COMMENT.match(text)
     return match.group(1).strip() if match else ""
 
 
@@ -198,7 +206,8 @@ def _times_and_scale(
     """The instants and their astropy time scale; instants without a clock where the scale is none we know."""
     good_time, words = exposure(cards)
     times = _plane_times(cards, axes, good_time) if axes.time_axis else _header_times(cards, observed, good_time)
-    times = times._replace(words=(*times.words, *words))
+    if words:
+        times = times._replace(words=(*times.words, *words))
     stated = axes.time_axis if axes.time_axis not in ("", "TIME") else times.scale or cards.text("TIMESYS")
     name = stated.upper().partition("(")[0].strip()  # the standard allows a realization, as in TT(TAI)
     if name not in SCALES and name:
@@ -255,6 +264,7 @@ def stated_instant(cards: Cards) -> Observed:
     return Observed(instant, which or "start", words=words)
 
 
+@lru_cache(maxsize=1024)  # comments repeat from file to file
 def _which(comment: str) -> str:
     """Which instant of the exposure a comment says its card is, '' where it does not."""
     text = comment.lower()
@@ -314,7 +324,9 @@ def _clock(cards: Cards) -> tuple[str, Moment | None, list[str]]:
         if key not in cards:
             continue
         value = cards.get(key)
-        seconds, assumed = read_clock(value, _clock_unit(comment_of(cards, key)))
+        seconds, assumed = read_clock(value)
+        if assumed:
+            seconds, assumed = read_clock(value, _clock_unit(comment_of(cards, key)))
         if seconds == seconds:
             return key, Moment(0, seconds), ["clock_unit_assumed"] if assumed else []
         whole = read_date(value).moment if isinstance(value, str) else None
@@ -323,6 +335,7 @@ def _clock(cards: Cards) -> tuple[str, Moment | None, list[str]]:
     return "", None, []
 
 
+@lru_cache(maxsize=1024)
 def _clock_unit(comment: str) -> float:
     """Seconds in the unit that a comment states for a time of day, NaN where it states none."""
     bracket = _UNIT.search(comment)
@@ -393,7 +406,13 @@ def stated_exposure(cards: Cards) -> Exposure:
 
     brackets (FITS 4.0, 4.3.2).
     """
-    return _exposure(cards, lambda comment: SECONDS.get(m.group(1), 1.0) if (m := _UNIT.search(comment)) else 1.0)
+    return _exposure(cards, _bracketed_unit)
+
+
+@lru_cache(maxsize=1024)
+def _bracketed_unit(comment: str) -> float:
+    bracket = _UNIT.search(comment)
+    return SECONDS.get(bracket.group(1), 1.0) if bracket else 1.0
 
 
 def spoken_exposure(cards: Cards) -> Exposure:
@@ -401,6 +420,7 @@ def spoken_exposure(cards: Cards) -> Exposure:
     return _exposure(cards, _spoken_unit)
 
 
+@lru_cache(maxsize=1024)
 def _spoken_unit(comment: str) -> float:
     bracket = _UNIT.search(comment)
     if bracket and bracket.group(1) in SECONDS:
@@ -419,7 +439,7 @@ def _exposure(cards: Cards, unit_of: Callable[[str], float]) -> Exposure:
     if not exposure > 0:
         return NAN, ()
     exposure *= unit_of(comment_of(cards, key))
-    words = ("coadds",) if any(cards.number(count) > 1 for count in COADDS) else ()
+    words = ("coadds",) if cards.has_any(_COADDS) and any(cards.number(count) > 1 for count in COADDS) else ()
     return exposure, (*_exposure_words(exposure), *words)
 
 
@@ -519,6 +539,8 @@ def _site(cards: Cards) -> tuple[tuple[float, float, float] | None, tuple[str, .
 
 def _place_keys(cards: Cards) -> tuple[str, str] | None:
     """The pair of cards that gives a possible latitude and longitude."""
+    if not cards.has_any(_OLD_PLACES):
+        return None
     for latitude, longitude in PLACES:
         if latitude in cards and longitude in cards:
             size = _unsigned(cards, longitude)
