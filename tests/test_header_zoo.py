@@ -732,7 +732,7 @@ STANDARD_CASES = [
         MODERN + "DATE-BEG= '1988-03-17T06:00:00'\nDATE-END= '1988-03-17T06:02:00'\nDATE-AVG= '1988-03-17T09:00:00'\n"
         "DATE-OBS= '17/03/87'\nUT      = '05:00:00'\nTIMESYS = 'UTC'\nEXPTIME =                120.0",
         middle="1988-03-17T06:01:00",
-        **(PLAIN | {"dialect": "old_headers"}),
+        **(PLAIN | {"dialect": "synthesis_headers"}),
     ),
     Case(
         "the average before DATE-OBS, and that before MJD-OBS",

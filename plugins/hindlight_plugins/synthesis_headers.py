@@ -45,9 +45,11 @@ class SynthesisHeaders(Dialect):
 
     def recognises(self, cards: Cards) -> bool:
         """Whether the beam stands in text alone, or a radio image has a date that the standard cannot read."""
-        if "BMAJ" not in cards and b"BMAJ" in cards.raw and _beam_in_text(cards) is not None:
+        if not _is_radio(cards):
+            return False
+        if "BMAJ" not in cards and b"BMAJ" in cards.raw.upper() and _beam_in_text(cards) is not None:
             return True
-        return _is_radio(cards) and has_old_times(cards)
+        return has_old_times(cards)
 
     def read(self, cards: Cards, axes: PlaneAxes) -> FrameFacts:
         """The facts of one plane."""
@@ -55,7 +57,12 @@ class SynthesisHeaders(Dialect):
 
 
 def _is_radio(cards: Cards) -> bool:
-    return cards.text("CTYPE3").startswith(RADIO_AXES) or cards.text("CTYPE4").startswith(RADIO_AXES)
+    """Whether an axis or the unit is one of radio images."""
+    return (
+        cards.text("CTYPE3").startswith(RADIO_AXES)
+        or cards.text("CTYPE4").startswith(RADIO_AXES)
+        or ("BEAM" in cards.text("BUNIT").upper())
+    )
 
 
 def _beam(cards: Cards) -> Beam:

@@ -8,9 +8,11 @@ from __future__ import annotations
 import re
 from collections.abc import Iterator
 from dataclasses import dataclass, field
+from datetime import date
 from functools import lru_cache
 
 CARD = 80
+ORDINAL_OF_MJD = 678576  # of MJD 0, 1858-11-17, as Python counts days
 Value = str | float | int | bool | None
 NAN = float("nan")
 
@@ -49,24 +51,16 @@ class Moment:
         if match is None:
             return None
         year, month, day, hour, minute, second = match.groups()
-        if not (1 <= int(month) <= 12 and 1 <= int(day) <= 31):
+        try:
+            mjd = date(int(year), int(month), int(day)).toordinal() - ORDINAL_OF_MJD
+        except ValueError:  # the calendar has no such day
             return None
-        mjd = _mjd(int(year), int(month), int(day))
-        if mjd >= _mjd(int(year) + int(month) // 12, int(month) % 12 + 1, 1):
-            return None  # the month has no such day
         if hour is None:
             return cls(mjd, 0.0, has_clock=False)
         seconds = int(hour) * 3600 + int(minute) * 60 + float(second or 0)
         if int(hour) > 24 or int(minute) > 59 or float(second or 0) >= 61 or seconds > 86401:
             return None
         return cls(mjd, seconds)
-
-
-def _mjd(year: int, month: int, day: int) -> int:
-    """Modified Julian Date of a day in the (proleptic) Gregorian calendar (Fliegel & Van Flandern 1968)."""
-    shift = (14 - month) // 12
-    y, m = year + 4800 - shift, month + 12 * shift - 3
-    return day + (153 * m + 2) // 5 + 365 * y + y // 4 - y // 100 + y // 400 - 32045 - 2400001
 
 
 @dataclass(frozen=True)
@@ -173,11 +167,13 @@ class Cards:
 
     def text(self, key: str) -> str:
         """The value if it is text, without outer blanks; '' otherwise."""
-        value = self.get(key)
+        value = self.get(key) if key in self._index else None
         return value.strip() if isinstance(value, str) else ""
 
     def number(self, key: str) -> float:
         """The value if it is a finite number, NaN otherwise; numbers written as text are not numbers."""
+        if key not in self._index:
+            return NAN
         value = self.get(key)
         if value is None or isinstance(value, str | bool):
             return NAN
@@ -210,10 +206,9 @@ class Cards:
 @lru_cache(maxsize=16384)  # most cards of an archive repeat from file to file
 def parse_value(text: str) -> Value:
     """The value in columns 11 to 80 of a card (FITS 4.0, 4.2): text, truth, whole or real number; None if none."""
-    match = _STRING.match(text)
-    if match:
+    if "'" in text and (match := _STRING.match(text)):
         return match.group(1).replace("''", "'").rstrip()
-    bare = text.split("/", 1)[0].strip()
+    bare = text.partition("/")[0].strip()
     if bare in ("T", "F"):
         return bare == "T"
     if _WHOLE.fullmatch(bare):

@@ -55,7 +55,9 @@ HEIGHTS = ("ALTITUDE", "SITEALT", "SITEELEV", "ALT-OBS", "OBS-ELEV", "HEIGHT", "
 CLOCKS_OF_START = ("UTSTART", "UT-START", "START", "TIME-BEG")
 SIDEREAL = ("LST", "ST", "LST-OBS", "SIDTIME", "LMST")
 SAME_LONGITUDE_DEG = 2.0
-_CLOCKS, _DATES, _COADDS, _OLD_PLACES = map(frozenset, (CLOCKS, DATES, COADDS, [longitude for _, longitude in PLACES]))
+_CLOCKS, _DATES, _COADDS, _JULIAN = map(frozenset, (CLOCKS, DATES, COADDS, JULIAN))
+_TRUSTED = frozenset(("DATE-BEG", "MJD-BEG", "TSTART", "DATE-END", "MJD-END", "TSTOP", "DATE-AVG", "MJD-AVG"))
+_OLD_PLACES = frozenset(longitude for _, longitude in PLACES)
 
 _COMMENT = re.compile(r"(?:\s*'(?:[^']|'')*')?[^/]*/(.*)")
 _START = re.compile(r"\b(start|begin)")
@@ -191,8 +193,9 @@ def has_old_times(cards: Cards) -> bool:
 def comment_of(cards: Cards, key: str) -> str:
     """The comment of a card, '' where there is none."""
     text = cards.card(key)[10:]
-    if "'" not in text:
-        return text.partition("/")[2].strip()
+    before, slash, after = text.partition("/")
+    if not slash or before.count("'") % 2 == 0:  # the slash is not inside the value's quotes
+        return after.strip()
     match = _COMMENT.match(text)
     return match.group(1).strip() if match else ""
 
@@ -224,9 +227,11 @@ def _header_times(cards: Cards, observed: Callable[[Cards], Observed], exposure:
     """What the header says of the whole HDU, by order of trust; the first instant with a time of day counts."""
     span = cards.number("TELAPSE") * _time_unit(cards)
     span = span if span > 0 else NAN
-    start = _instant(cards, "DATE-BEG", "MJD-BEG") or _relative(cards, "TSTART")
-    end = _instant(cards, "DATE-END", "MJD-END") or _relative(cards, "TSTOP")
-    middle = _instant(cards, "DATE-AVG", "MJD-AVG")
+    start = end = middle = None
+    if cards.has_any(_TRUSTED):
+        start = _instant(cards, "DATE-BEG", "MJD-BEG") or _relative(cards, "TSTART")
+        end = _instant(cards, "DATE-END", "MJD-END") or _relative(cards, "TSTOP")
+        middle = _instant(cards, "DATE-AVG", "MJD-AVG")
     if _has_clock(start) or _has_clock(end):
         known_start, known_end = (m if _has_clock(m) else None for m in (start, end))
         if known_start is None and known_end is not None:
@@ -356,7 +361,7 @@ def julian_instant(cards: Cards) -> Observed:
 
 
 def _julian(cards: Cards) -> tuple[str, Moment | None]:
-    for key in JULIAN:
+    for key in JULIAN if cards.has_any(_JULIAN) else ():
         number = cards.number(key)
         if number == number:
             moment = Moment.from_mjd(number - 2400000.5 if key.startswith("JD") else number)
@@ -448,7 +453,7 @@ def _exposure_words(exposure: float) -> tuple[str, ...]:
 
 
 def _time_unit(cards: Cards) -> float:
-    return SECONDS.get(cards.text("TIMEUNIT") or "s", NAN)
+    return SECONDS.get(cards.text("TIMEUNIT") or "s", NAN) if "TIMEUNIT" in cards else 1.0
 
 
 def _instant(cards: Cards, *keys: str) -> Moment | None:
@@ -674,9 +679,12 @@ def _frequency(cards: Cards, axes: PlaneAxes) -> float:
     """Hz by the axis or the keyword, NaN where there is none or it cannot be one."""
     if "FREQ" in axes.values:
         return _sane_frequency(axes.values["FREQ"], axes.units["FREQ"])
-    key = next((key for key in ("FREQ", "OBSFREQ") if cards.number(key) == cards.number(key)), "")
-    unit = _UNIT.search(comment_of(cards, key)) if key else None
-    return _sane_frequency(cards.number(key), unit.group(1) if unit else "")
+    for key in ("FREQ", "OBSFREQ"):
+        value = cards.number(key)
+        if value == value:
+            unit = _UNIT.search(comment_of(cards, key))
+            return _sane_frequency(value, unit.group(1) if unit else "")
+    return NAN
 
 
 def _sane_frequency(value: float, unit: str) -> float:
