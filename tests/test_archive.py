@@ -77,13 +77,14 @@ def test_plain_frame(tmp_path: Path) -> None:
 @pytest.mark.parametrize(
     ("cards", "start", "middle", "end", "words"),
     [
-        ({"DATE__BEG": "1988-03-17T06:00:00", "DATE__END": "1988-03-17T07:00:00"}, 0, 1800, 3600, []),
+        ({"DATE__BEG": "1988-03-17T06:00:00", "DATE__END": "1988-03-17T07:00:00"}, 0, 1800, 3600, ["intermittent"]),
         ({"DATE__AVG": "1988-03-17T06:01:00"}, 0, 60, 120, []),
         ({"DATE__OBS": ("1988-03-17T06:02:00", "end of exposure")}, 0, 60, 120, []),
-        ({"TELAPSE": 600.0}, 0, 300, 600, []),
+        ({"TELAPSE": 600.0}, 0, 300, 600, ["intermittent"]),
         ({"EXPTIME": None}, 0, 0, None, ["no_exposure"]),
         ({"EXPTIME": None, "DATE__AVG": "1988-03-17T06:01:00"}, None, 60, None, ["no_exposure"]),
-        ({"EXPTIME": None, "DATE__END": "1988-03-17T06:10:00"}, None, 600, 600, ["no_exposure"]),
+        ({"EXPTIME": None, "DATE__END": "1988-03-17T06:10:00"}, 0, 300, 600, ["span_is_good_time"]),
+        ({"EXPTIME": None, "DATE__OBS": None, "DATE__END": "1988-03-17T06:10:00"}, None, 600, 600, ["no_exposure"]),
         (
             {"EXPTIME": None, "DATE__BEG": "1988-03-17T06:00:00", "DATE__END": "1988-03-17T06:10:00"},
             0, 300, 600, ["span_is_good_time"],

@@ -64,7 +64,8 @@ def test_wrong_cards_are_no_error(cards: dict[str, object]) -> None:
         ({"DATE__BEG": "1988-03-17T05:00:00", "DATE__END": "1988-03-17T07:00:00"}, (18000.0, None, 25200.0)),
         ({"MJD__BEG": MARCH + 0.25, "MJD__END": MARCH + 0.5}, (21600.0, None, 43200.0)),
         ({"DATE__BEG": "1988-03-17", "MJD__BEG": MARCH + 0.5}, (43200.0, None, None)),
-        ({"DATE__END": "1988-03-17T07:00:00"}, (None, None, 25200.0)),
+        ({"DATE__END": "1988-03-17T07:00:00"}, (21600.0, None, 25200.0)),
+        ({"DATE__END": "1988-03-17T05:00:00"}, (None, None, 18000.0)),
         ({"DATE__AVG": "1988-03-17T05:00:00"}, (None, 18000.0, None)),
         ({"MJD__AVG": MARCH + 0.75}, (None, 64800.0, None)),
         ({"DATE__BEG": "1988-03-17", "DATE__AVG": "1988-03-17T05:00:00"}, (None, 18000.0, None)),
@@ -215,6 +216,7 @@ def test_sites() -> None:
         ({"BPA": None}, (88.18, 88.18, 0.0)),
         ({"BPA": -10.0}, (108.0, 72.0, 170.0)),
         ({"BMAJ": None, "SEEING": 1.2}, (1.2, 1.2, 0.0)),
+        ({"BMAJ": None, "SEEING": (1.2, "[arcsec]"), "PSFFWHM": 2.0}, (1.2, 1.2, 0.0)),
         ({"BMAJ": 0.0}, (math.nan,) * 3),
     ],
 )

@@ -3,6 +3,7 @@
 Everything a plugin needs is here and in `hindlight.testing`; other modules are the program's own.
 """
 
+from hindlight.dates import between, greenwich_sidereal_s, read_angle, read_clock, read_date
 from hindlight.facts import Cards, FrameFacts, Moment, PlaneAxes
 from hindlight.headers import fold_unit
 from hindlight.hookspecs import hookimpl
@@ -22,6 +23,23 @@ from hindlight.plugin import (
     Stamps,
     Statistic,
 )
+from hindlight.reading import (
+    Beam,
+    Observed,
+    beam_of,
+    comment_of,
+    east_longitude,
+    east_or_west,
+    has_old_times,
+    julian_instant,
+    read_facts,
+    separate_clock,
+    sidereal_clock,
+    spoken_exposure,
+    stated_beam,
+    stated_exposure,
+    stated_instant,
+)
 from hindlight.schema import ASSUMPTIONS, Flag
 from hindlight.settings import setting
 
@@ -29,6 +47,7 @@ __version__ = "0.1.0"
 
 __all__ = [
     "ASSUMPTIONS",
+    "Beam",
     "BeamShape",
     "Block",
     "Candidate",
@@ -45,14 +64,33 @@ __all__ = [
     "FrameFacts",
     "LightCurve",
     "Moment",
+    "Observed",
     "PeriodResult",
     "PeriodSearch",
     "PlaneAxes",
     "Stamps",
     "Statistic",
+    "beam_of",
+    "between",
+    "comment_of",
+    "east_longitude",
+    "east_or_west",
     "fold_unit",
+    "greenwich_sidereal_s",
+    "has_old_times",
     "hookimpl",
+    "julian_instant",
     "quiet_level",
+    "read_angle",
+    "read_clock",
+    "read_date",
+    "read_facts",
+    "separate_clock",
     "setting",
+    "sidereal_clock",
+    "spoken_exposure",
+    "stated_beam",
+    "stated_exposure",
+    "stated_instant",
     "weighted_mean",
 ]

@@ -9,6 +9,7 @@ from __future__ import annotations
 import hashlib
 import os
 from collections.abc import Callable, Iterator, Mapping, Sequence
+from dataclasses import replace
 from functools import lru_cache
 from itertools import islice
 from typing import Any, NamedTuple
@@ -17,9 +18,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hindlight import clock, footprints
-from hindlight.facts import NAN, FrameFacts, Moment
+from hindlight.errors import UsageError
+from hindlight.facts import NAN, Cards, FrameFacts, Moment
 from hindlight.files import FileEntry, list_files, open_source
-from hindlight.headers import Hdu, Plane, SetAsideError, facts_of, planes, read_hdus
+from hindlight.goodtime import with_good_time
+from hindlight.headers import Hdu, Plane, SetAsideError, facts_of, inherited, planes, read_hdus
 from hindlight.lightcurve import FloatArray
 from hindlight.outlines import Image, Outline, outlines
 from hindlight.plugin import Dialect
@@ -29,8 +32,12 @@ from hindlight.systems import NoCelestialError
 
 FILES_AT_ONCE = 512
 MEGABYTE = 1_000_000
+AUTO = "auto"
 ADDED_LATER = ("id", "batch", "channel", "state")
 BEAM_PIXELS = (0.5, 100.0)  # a stated width outside it is no width of a point source in this image
+ARCSEC_PIXELS = (1.5, 100.0)  # what a width stated in arcsec must be, where degrees were expected
+GOOD_FRACTION = 0.999  # less good time than this in the span is said to be intermittent
+TIME_CARDS = ("DATE-OBS", "MJD-OBS", "DATE-BEG", "MJD-BEG", "DATE-AVG", "MJD-AVG", "DATE-END", "MJD-END", "TSTART")
 
 Columns = dict[str, NDArray[Any]]
 Row = dict[str, Any]
@@ -77,8 +84,9 @@ def walk(
 
     `known` are columns of frames found before; their files are not read again while size and time are the same.
     `progress` is called with a number of files now and then; folders in `skip`, as that of a run, are not entered.
-    Raises `UsageError` if an archive is no folder.
+    Raises `UsageError` if an archive is no folder, or the settings name a dialect that is not there.
     """
+    dialects = chosen_dialects(dialects, settings)
     before = _known_files(known or {})
     visited = {(place.st_dev, place.st_ino) for folder in skip if (place := _place(folder)) is not None}
     files = [(archive, entry) for archive in archives for entry in list_files(archive, visited)]
@@ -98,6 +106,16 @@ def walk(
     rejects.sort(key=lambda row: (row["path"], row["hdu"], row["plane"], row["archive"]))
     unchanged = present - {(archive, entry.path) for archive, entry in new}
     return WalkResult(_joined(parts), rejects, present, unchanged)
+
+
+def chosen_dialects(dialects: Sequence[Dialect], settings: Settings) -> Sequence[Dialect]:
+    """The dialects to be asked, or the one that the settings name. Raises `UsageError` if that is not there."""
+    name = settings.inventory.dialect
+    chosen = [dialect for dialect in dialects if name in (AUTO, dialect.name)]
+    if not chosen and name != AUTO:
+        there = ", ".join((AUTO, *sorted(dialect.name for dialect in dialects)))
+        raise UsageError(f"[inventory] dialect: no dialect {name!r}; there are {there}")
+    return chosen
 
 
 def _place(folder: str) -> os.stat_result | None:
@@ -135,7 +153,8 @@ def _read_file(
     rejects: list[Row],
 ) -> None:
     """Add the frames of a file and what of it is set aside."""
-    images, last = 0, -1
+    images, last, begun = 0, -1, len(found)
+    primary: Cards | None = None
     try:
         if entry.fault:
             raise SetAsideError("unreadable", entry.fault)
@@ -143,9 +162,13 @@ def _read_file(
         with open_source(os.path.join(archive, entry.path), limit) as source:
             for hdu in read_hdus(source):
                 last = hdu.index
+                if not hdu.index and not hdu.axes:
+                    primary = hdu.cards
                 if hdu.is_image:
                     images += 1
-                    found.extend(_frames_of(archive, entry, hdu, dialects, rejects))
+                    found.extend(_frames_of(archive, entry, hdu, primary, dialects, settings, rejects))
+                elif hdu.is_good_time:
+                    found[begun:] = [_with_good_time(frame, hdu) for frame in found[begun:]]
         if not images:
             raise SetAsideError("no_image", f"none of its {last + 1} HDUs holds an image")
     except SetAsideError as error:
@@ -156,26 +179,54 @@ def _read_file(
 
 
 def _frames_of(
-    archive: str, entry: FileEntry, hdu: Hdu, dialects: Sequence[Dialect], rejects: list[Row]
+    archive: str,
+    entry: FileEntry,
+    hdu: Hdu,
+    primary: Cards | None,
+    dialects: Sequence[Dialect],
+    settings: Settings,
+    rejects: list[Row],
 ) -> Iterator[_Found]:
     try:
+        cards, words = _with_primary(hdu.cards, primary)
         for plane in planes(hdu):
-            read = _facts(hdu, plane, dialects)
+            read = _facts(cards, plane, dialects, settings.inventory.dialect != AUTO, words)
             yield _Found(archive, entry, hdu, plane, *read)
     except SetAsideError as error:
         rejects.append(_reject(archive, entry, error, hdu.index))
 
 
-def _facts(hdu: Hdu, plane: Plane, dialects: Sequence[Dialect]) -> tuple[str, FrameFacts]:
+def _with_primary(cards: Cards, primary: Cards | None) -> tuple[Cards, tuple[str, ...]]:
+    """The cards that say what a frame is: with those of a primary header without data where only it has a date.
+
+    The standard has INHERIT for this (see `read_hdus`); many files that mean it do not say it.
+    """
+    if primary is None or "INHERIT" in cards or any(key in cards for key in TIME_CARDS):
+        return cards, ()
+    if not any(key in primary for key in TIME_CARDS):
+        return cards, ()
+    return inherited(cards, primary), ("primary_header",)
+
+
+def _facts(
+    cards: Cards, plane: Plane, dialects: Sequence[Dialect], forced: bool, words: tuple[str, ...]
+) -> tuple[str, FrameFacts]:
     try:
-        read = facts_of(hdu.cards, plane.axes, dialects)
+        read = facts_of(cards, plane.axes, dialects, forced)
     except Exception as error:  # a dialect may be anyone's: what it raises sets the HDU aside and is said there
         raise SetAsideError("bad_header", f"the dialect failed: {type(error).__name__}: {error}") from error
     if read is None:
         raise SetAsideError("no_dialect", "no dialect recognises the header")
     if read[1].scale not in clock.SCALES:
         raise SetAsideError("bad_header", f"dialect {read[0]} gave the unknown time scale {read[1].scale!r}")
-    return read
+    return (read[0], replace(read[1], assumptions=(*read[1].assumptions, *words))) if words else read
+
+
+def _with_good_time(frame: _Found, table: Hdu) -> _Found:
+    """The frame with exposure and span of a table of good-time intervals, unless it is a plane with a time of its own."""
+    if frame.plane.axes.time_axis:
+        return frame
+    return frame._replace(facts=with_good_time(frame.facts, table.cards, table.table))
 
 
 def _reject(archive: str, entry: FileEntry, error: SetAsideError, hdu: int = -1) -> Row:
@@ -193,7 +244,8 @@ def _columns(found: Sequence[_Found], settings: Settings, rejects: list[Row]) ->
     usable, kept = _outlines(found, times["middle_mjd_tdb"], words, rejects)
     columns = {name: values[kept] for name, values in (times | _plain(found)).items()}
     columns |= footprints.columns(usable)
-    _beams(columns, settings, [words[i] for i in kept])
+    in_pixels = np.array([found[i].facts.beam_in_pixels for i in kept], dtype=bool)
+    _beams(columns, in_pixels, settings, [words[i] for i in kept])
     columns["assumptions"] = _text([_sentences(tuple(dict.fromkeys(words[i]))) for i in kept])
     return columns
 
@@ -253,6 +305,7 @@ def _times(found: Sequence[_Found], settings: Settings, words: Sequence[list[str
     exposure = np.array([f.exposure_s for f in facts], dtype=float)
     span = np.where(end >= start, end - start, np.array([f.span_s for f in facts], dtype=float))
     stated = np.isfinite(exposure)
+    broken = exposure < GOOD_FRACTION * span
     exposure, span = np.where(stated, exposure, span), np.where(np.isfinite(span), span, exposure)
     half = np.nan_to_num(span) / 2
     middle = _first(middle, start + half, end - half)
@@ -264,6 +317,7 @@ def _times(found: Sequence[_Found], settings: Settings, words: Sequence[list[str
         (~stated & np.isfinite(exposure), "span_is_good_time"),
         (~np.isfinite(exposure), "no_exposure"),
         (homeless, "geocentre"),
+        (broken, "intermittent"),
     ):
         for i in np.flatnonzero(rows).tolist():
             words[i].append(word)
@@ -334,13 +388,31 @@ def _outlines(
     return usable, kept
 
 
-def _beams(columns: Columns, settings: Settings, words: Sequence[list[str]]) -> None:
+def _beams(columns: Columns, in_pixels: NDArray[np.bool_], settings: Settings, words: Sequence[list[str]]) -> None:
     """Fill in widths from the settings where the header gives none, or one that cannot be a width in this image."""
+    for name in ("beam_major", "beam_minor"):
+        columns[name] = np.where(in_pixels, columns[name] * columns["pixel_scale"], columns[name])
+    _read_as_arcsec(columns, settings, words)
     ratio = columns["beam_major"] / columns["pixel_scale"]
-    good = (ratio >= BEAM_PIXELS[0]) & (ratio <= BEAM_PIXELS[1])
+    good = _within(ratio, BEAM_PIXELS)
     good &= (columns["beam_minor"] > 0) & (columns["beam_minor"] <= columns["beam_major"])
     for i in np.flatnonzero(~good).tolist():
         width = settings.photometry.fwhm_arcsec.get(columns["instrument"][i], NAN)
         words[i].append("no_beam" if np.isnan(width) else "beam_from_settings")
         columns["beam_major"][i] = columns["beam_minor"][i] = width
         columns["beam_angle"][i] = 0.0 if width == width else NAN
+
+
+def _read_as_arcsec(columns: Columns, settings: Settings, words: Sequence[list[str]]) -> None:
+    """A word for each beam that is too wide in degrees but fits in arcsec, and the change of unit if that is wanted."""
+    ratio = columns["beam_major"] / columns["pixel_scale"]
+    wrong = (ratio > BEAM_PIXELS[1]) & _within(ratio / 3600.0, ARCSEC_PIXELS)
+    for i in np.flatnonzero(wrong).tolist():
+        words[i].append("beam_unit")
+    if settings.inventory.bmaj_in_arcsec:
+        for name in ("beam_major", "beam_minor"):
+            columns[name] = np.where(wrong, columns[name] / 3600.0, columns[name])
+
+
+def _within(values: FloatArray, bounds: tuple[float, float]) -> NDArray[np.bool_]:
+    return np.asarray((values >= bounds[0]) & (values <= bounds[1]))

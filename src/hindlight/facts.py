@@ -8,9 +8,11 @@ from __future__ import annotations
 import re
 from collections.abc import Iterator
 from dataclasses import dataclass, field
+from datetime import date
 from functools import lru_cache
 
 CARD = 80
+ORDINAL_OF_MJD = 678576  # of MJD 0, 1858-11-17, as Python counts days
 Value = str | float | int | bool | None
 NAN = float("nan")
 
@@ -49,24 +51,16 @@ class Moment:
         if match is None:
             return None
         year, month, day, hour, minute, second = match.groups()
-        if not (1 <= int(month) <= 12 and 1 <= int(day) <= 31):
+        try:
+            mjd = date(int(year), int(month), int(day)).toordinal() - ORDINAL_OF_MJD
+        except ValueError:  # the calendar has no such day
             return None
-        mjd = _mjd(int(year), int(month), int(day))
-        if mjd >= _mjd(int(year) + int(month) // 12, int(month) % 12 + 1, 1):
-            return None  # the month has no such day
         if hour is None:
             return cls(mjd, 0.0, has_clock=False)
         seconds = int(hour) * 3600 + int(minute) * 60 + float(second or 0)
         if int(hour) > 24 or int(minute) > 59 or float(second or 0) >= 61 or seconds > 86401:
             return None
         return cls(mjd, seconds)
-
-
-def _mjd(year: int, month: int, day: int) -> int:
-    """Modified Julian Date of a day in the (proleptic) Gregorian calendar (Fliegel & Van Flandern 1968)."""
-    shift = (14 - month) // 12
-    y, m = year + 4800 - shift, month + 12 * shift - 3
-    return day + (153 * m + 2) // 5 + 365 * y + y // 4 - y // 100 + y // 400 - 32045 - 2400001
 
 
 @dataclass(frozen=True)
@@ -94,6 +88,8 @@ class FrameFacts:
         Good time, and time from first to last photon.
     beam_major, beam_minor, beam_angle
         Full widths at half maximum in arcsec, and position angle east of north in degrees.
+    beam_in_pixels
+        Whether the widths are in pixels instead, as some headers give the seeing.
     site
         ITRF metres, or None.
     barycentric
@@ -112,6 +108,7 @@ class FrameFacts:
     beam_major: float = NAN
     beam_minor: float = NAN
     beam_angle: float = NAN
+    beam_in_pixels: bool = False
     start: Moment | None = None
     middle: Moment | None = None
     end: Moment | None = None
@@ -144,6 +141,10 @@ class Cards:
     def __contains__(self, key: str) -> bool:
         return key in self._index
 
+    def has_any(self, keys: frozenset[str]) -> bool:
+        """Whether one of several keywords is there."""
+        return not self._index.keys().isdisjoint(keys)
+
     def __iter__(self) -> Iterator[str]:
         return reversed(self._index)
 
@@ -152,10 +153,10 @@ class Cards:
         start = self._index.get(key)
         return "" if start is None else self._text[start : start + CARD]
 
-    def all_of(self, key: str) -> list[str]:
-        """The text after the keyword of every card with this keyword, as for HISTORY and COMMENT."""
+    def all_of(self, *keys: str) -> list[str]:
+        """The text after the keyword of every card with one of these keywords, as for HISTORY and COMMENT."""
         starts = range(0, len(self._text) - CARD + 1, CARD)
-        return [self._text[s + 8 : s + CARD].rstrip() for s in starts if self._text[s : s + 8].rstrip() == key]
+        return [self._text[s + 8 : s + CARD].rstrip() for s in starts if self._text[s : s + 8].rstrip() in keys]
 
     def get(self, key: str) -> Value:
         """The value of a card as text, number or truth; None where it is absent, empty or no value at all."""
@@ -166,7 +167,7 @@ class Cards:
 
     def text(self, key: str) -> str:
         """The value if it is text, without outer blanks; '' otherwise."""
-        value = self.get(key)
+        value = self.get(key) if key in self._index else None
         return value.strip() if isinstance(value, str) else ""
 
     def number(self, key: str) -> float:
@@ -174,9 +175,9 @@ class Cards:
         if key not in self._index:
             return NAN
         value = self.get(key)
-        if isinstance(value, bool) or not isinstance(value, int | float):
+        if value is None or isinstance(value, str | bool):
             return NAN
-        return float(value) if abs(value) < 1e300 else NAN
+        return float(value) if -1e300 < value < 1e300 else NAN
 
     def integer(self, key: str, default: int = 0) -> int:
         """The value if it is a whole number, `default` otherwise."""
@@ -205,10 +206,9 @@ class Cards:
 @lru_cache(maxsize=16384)  # most cards of an archive repeat from file to file
 def parse_value(text: str) -> Value:
     """The value in columns 11 to 80 of a card (FITS 4.0, 4.2): text, truth, whole or real number; None if none."""
-    match = _STRING.match(text)
-    if match:
+    if "'" in text and (match := _STRING.match(text)):
         return match.group(1).replace("''", "'").rstrip()
-    bare = text.split("/", 1)[0].strip()
+    bare = text.partition("/")[0].strip()
     if bare in ("T", "F"):
         return bare == "T"
     if _WHOLE.fullmatch(bare):

@@ -10,7 +10,7 @@ from __future__ import annotations
 import math
 import re
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 from typing import Protocol
 
@@ -22,7 +22,10 @@ FIRST_READ = 4 * BLOCK  # most headers end within it
 HEADER_LIMIT = 10_000 * BLOCK
 BITPIXES = (8, 16, 32, 64, -32, -64)
 MAX_AXES = 99
+NOT_INHERITED = ("SIMPLE", "EXTEND", "BSCALE", "BZERO", "BLANK", "CHECKSUM", "DATASUM", "HISTORY", "COMMENT", "")
 IMAGE_EXTENSIONS = ("IMAGE", "IUEIMAGE")
+GOOD_TIME = ("GTI", "STDGTI")
+GOOD_TIME_LIMIT = 10_000 * BLOCK
 TIME_TYPES = ("TIME", "UTC", "TAI", "TT", "TDB", "TCG", "TCB", "UT1", "UT", "GMT", "TDT", "ET", "IAT", "GPS")
 
 _TABLE_CARD = re.compile(rb"(BITPIX|NAXIS\d*|PCOUNT|GCOUNT) *=")
@@ -62,6 +65,8 @@ class Hdu:
     bitpix, axes
         Of the image; `axes` are the lengths NAXIS1, NAXIS2, ... For a tile-compressed image they are those of the
         image and not of the table that holds it, and `compressed` is true.
+    table
+        The rows of a table of good-time intervals; no other data are kept.
     bscale, bzero, blank
         value = bzero + bscale * stored; `blank` is the stored integer that means no value, None where there is none.
     """
@@ -73,6 +78,7 @@ class Hdu:
     bitpix: int
     axes: tuple[int, ...]
     compressed: bool = False
+    table: bytes = b""
     bscale: float = 1.0
     bzero: float = 0.0
     blank: int | None = None
@@ -82,6 +88,12 @@ class Hdu:
         """Whether it holds an image of two dimensions or more with any pixel."""
         extension = self.cards.text("XTENSION")
         return len(self.axes) >= 2 and 0 not in self.axes and (self.compressed or extension in ("", *IMAGE_EXTENSIONS))
+
+    @property
+    def is_good_time(self) -> bool:
+        """Whether it is a table of good-time intervals, of a reasonable size."""
+        named = self.cards.text("EXTNAME").upper() in GOOD_TIME
+        return named and self.cards.text("XTENSION") == "BINTABLE" and self.data_bytes <= GOOD_TIME_LIMIT
 
 
 @dataclass(frozen=True)
@@ -105,19 +117,33 @@ class Plane:
 def read_hdus(source: Source) -> Iterator[Hdu]:
     """The HDUs of a file in order, each once its data are known to be there; no pixel is looked at.
 
+    An extension with INHERIT = T has the cards of a primary HDU without data after its own (FITS 4.0, 4.4.2.6).
     Raises `SetAsideError` where the file is broken; HDUs before that place have been given already.
     """
     offset = index = 0
+    primary: Cards | None = None
     while True:
         raw = _read_header(source, offset, index)
         if not raw:
             return
         hdu = _layout(raw, offset, index)
+        if index == 0:
+            primary = hdu.cards if not hdu.axes else None
+        elif primary is not None and hdu.cards.get("INHERIT") is True:
+            hdu = replace(hdu, cards=inherited(hdu.cards, primary))
+        if hdu.is_good_time:
+            hdu = replace(hdu, table=source.read_at(hdu.data_offset, hdu.data_bytes))
         end = hdu.data_offset + hdu.data_bytes
         if not source.reaches(end):
             raise SetAsideError("truncated", f"HDU {index} should end at byte {end}, the file ends before", index)
         yield hdu
         offset, index = hdu.data_offset + _padded(hdu.data_bytes), index + 1
+
+
+def inherited(own: Cards, primary: Cards) -> Cards:
+    """The cards of an extension, and those of the primary header that it has not."""
+    more = (primary.card(key) for key in primary if key not in own and key not in NOT_INHERITED)
+    return Cards(own.raw + "".join(more).encode("latin-1"))
 
 
 def _padded(n_bytes: int) -> int:
@@ -228,7 +254,7 @@ def planes(hdu: Hdu) -> list[Plane]:
     frequency nor Stokes with usable coordinates, or is stored inside the celestial ones.
     """
     cards, n_data = hdu.cards, len(hdu.axes)
-    count = max(n_data, min(cards.integer("WCSAXES"), MAX_AXES))
+    count = max(n_data, min(cards.integer("WCSAXES") or _highest_axis(cards, n_data), MAX_AXES))
     types = [cards.text(f"CTYPE{i}").upper() for i in range(1, count + 1)]
     celestial = [i for i, text in enumerate(types) if _CELESTIAL.match(text)]
     if len(celestial) != 2 or sum(bool(_LATITUDE.match(types[i])) for i in celestial) != 1 or celestial[1] >= n_data:
@@ -246,6 +272,14 @@ def planes(hdu: Hdu) -> list[Plane]:
         axes = _plane_axes(others, {second + 2 + k: p for k, p in enumerate(place)})
         found.append(Plane(index, axes, place[::-1], lengths[first], lengths[second]))
     return found
+
+
+def _highest_axis(cards: Cards, n_data: int) -> int:
+    """The last axis that has a type: without WCSAXES there are as many (FITS 4.0, 8.2)."""
+    count = n_data
+    while f"CTYPE{count + 1}" in cards:
+        count += 1
+    return count
 
 
 def _axis(cards: Cards, number: int, ctype: str, length: int) -> _Axis:
@@ -298,10 +332,15 @@ def _plane_axes(others: Sequence[_Axis], place: dict[int, int]) -> PlaneAxes:
     return PlaneAxes(values, steps, units, time_axis)
 
 
-def facts_of(cards: Cards, axes: PlaneAxes, dialects: Sequence[Dialect]) -> tuple[str, FrameFacts] | None:
-    """The first dialect that recognises the header, and what it reads there; None where none does."""
+def facts_of(
+    cards: Cards, axes: PlaneAxes, dialects: Sequence[Dialect], forced: bool = False
+) -> tuple[str, FrameFacts] | None:
+    """The first dialect that recognises the header, and what it reads there; None where none does.
+
+    With `forced` the first one reads it, whether it recognises the header or not.
+    """
     for dialect in dialects:
-        if dialect.recognises(cards):
+        if forced or dialect.recognises(cards):
             return dialect.name, dialect.read(cards, axes)
     return None
 

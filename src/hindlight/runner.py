@@ -127,6 +127,7 @@ def _check_plugins(plugins: host.Plugins, settings: Settings) -> None:
     for kind, some in (("dialect", plugins.dialects), ("estimator", plugins.estimators)):
         if not some:
             raise UsageError(f"--without: no {kind} is left, and nothing can be measured; leave one in")
+    archive.chosen_dialects(plugins.dialects, settings)
     ranked = [c for plugin in plugins.statistics for c in plugin.columns if c.unusual and c.about == "variation"]
     if not ranked:
         raise UsageError("--without: no statistic that asks about variation is left to rank by; leave one in")

@@ -41,6 +41,10 @@ class Inventory:
     """Finding frames."""
 
     unpacked_limit_mb: int = setting(4096, "largest size a compressed file may unpack to", unit="MB", minimum=1)
+    dialect: str = setting("auto", "name of the header dialect that reads every header; auto asks each whether it can")
+    bmaj_in_arcsec: bool = setting(
+        False, "whether BMAJ and BMIN that are too wide in degrees but not in arcsec are read as arcsec"
+    )
 
 
 @dataclass(frozen=True)
