@@ -41,6 +41,7 @@ class Inventory:
     """Finding frames."""
 
     unpacked_limit_mb: int = setting(4096, "largest size a compressed file may unpack to", unit="MB", minimum=1)
+    planes_limit: int = setting(100_000, "a cube of more planes than this is set aside", minimum=1)
 
 
 @dataclass(frozen=True)
