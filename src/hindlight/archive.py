@@ -217,7 +217,7 @@ def _is_duration(seconds: float) -> bool:
 
 def _reject(archive: str, entry: FileEntry, error: SetAsideError, hdu: int = -1) -> Row:
     place = {"path": entry.path, "hdu": hdu, "plane": error.plane, "archive": archive}
-    return {**place, "reason": error.reason, "detail": one_line(visible(error.detail))}
+    return {**place, "reason": error.reason, "detail": visible(one_line(error.detail))}
 
 
 # --- many frames at once

@@ -24,6 +24,7 @@ GZIP_MAGIC = b"\x1f\x8b"
 CHUNK = 1 << 16
 FIRST_FEED = 1 << 12
 FOUR_GIB = 1 << 32
+COARSE_CLOCK_NS = 2_000_000_000  # the same file may show a rounded time where it is mounted otherwise
 
 _UNFIT = re.compile(r"[\x00-\x08\x0b-\x1f\x7f-\x9f\u2028\u2029\ud800-\udfff]|\A\s|\s\Z")
 _ESCAPE = re.compile(rb"\\x([0-9a-f]{2})")
@@ -132,6 +133,16 @@ def open_file(path: str) -> int:
         return descriptor
     os.close(descriptor)
     raise SetAsideError("unreadable", "not a regular file")
+
+
+def check_unchanged(path: str, size: int, modified_ns: int) -> None:
+    """Raise `SetAsideError` where a file is no longer the one that was listed. Raises `OSError` too."""
+    try:
+        status = os.stat(path)
+    except FileNotFoundError:
+        raise SetAsideError("vanished", "the file is gone since its header was read") from None
+    if status.st_size != size or abs(status.st_mtime_ns - modified_ns) > COARSE_CLOCK_NS:
+        raise SetAsideError("changed", "the file has changed since its header was read; give the same command again")
 
 
 @contextmanager

@@ -133,10 +133,11 @@ class Pixels:
     def _values(self, raw: NDArray[Any]) -> Floats:
         small = raw.dtype.itemsize <= 2 or (raw.dtype.kind == "f" and raw.dtype.itemsize == 4)
         values: Floats = raw.astype(np.float32 if small else np.float64)
-        if self.scale != 1.0:
-            values *= self.scale
-        if self.zero != 0.0:
-            values += self.zero
+        with np.errstate(over="ignore", invalid="ignore"):  # beyond the largest number is infinite, which is no flux
+            if self.scale != 1.0:
+                values *= self.scale
+            if self.zero != 0.0:
+                values += self.zero
         if self.blank is not None:
             values[raw == self.blank] = np.nan
         return values
@@ -298,14 +299,14 @@ def _unpack_tiles(place: PlanePlace, lead: tuple[int, ...], limit: int, windows:
     target: Any = place.image.path
     if place.image.packed:  # a tile-compressed file inside a gzip file
         target = io.BytesIO(_unpacked(place, 0, hdu.data_offset + hdu.data_bytes, limit))
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore")  # about cards; pixels that cannot be unpacked raise
-        with fits.open(target, do_not_scale_image_data=True, uint=False) as hdus:
-            try:
+    try:
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore")  # about cards; pixels that cannot be unpacked raise
+            with fits.open(target, do_not_scale_image_data=True, uint=False) as hdus:
                 stored = _sections(hdus[hdu.index].section, place, lead, windows)
-            except Exception as error:  # on broken bytes the decoders raise whatever they like
-                detail = " ".join(str(error).split())
-                raise place.fault("bad_compression", f"the tiles cannot be unpacked: {detail}") from error
+    except Exception as error:  # on broken bytes the decoders raise whatever they like
+        detail = " ".join(str(error).split())
+        raise place.fault("bad_compression", f"the tiles cannot be unpacked: {detail}") from error
     return _scaled(stored, hdu)
 
 

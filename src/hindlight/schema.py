@@ -57,7 +57,7 @@ REASONS = {
     "bad_pixels": "the pixels could not be read when the frame was measured",
     "not_measured": "an estimator plugin failed on the frame",
     "vanished": "the file was there when the run began and is gone",
-    "changed": "the file has changed since it was measured",
+    "changed": "the file has changed since it was read or measured",
 }
 
 ASSUMPTIONS = {

@@ -169,7 +169,9 @@ def _lean(key: str) -> Projection | None:
     if found.code not in LEAN_CODES or found.suffix or odd_unit or (found.code == "TAN" and has_pv):
         return None
     text = two_axes(cards, found.axes)
-    prm = Wcsprm(header=text.encode("latin-1"), relax=True)
+    with warnings.catch_warnings():
+        warnings.simplefilter("error")  # wcslib leaves a card out with a warning, and takes a default in its place
+        prm = Wcsprm(header=text.encode("latin-1"), relax=True)
     if found.code in LEGACY_CODES:
         prm.fix()  # they become SIN and SFL
     prm.set()
@@ -199,8 +201,10 @@ def _full(raw: bytes, path: str) -> Projection:
         warnings.simplefilter("ignore")  # FITSFixedWarning and card warnings: what cannot be used raises below
         hdus = stack.enter_context(fits.open(path)) if tables else None
         header = fits.Header.fromstring(raw.decode("latin-1"))
-        if "A_ORDER" in header and not found.suffix:
-            for i in found.axes:  # astropy applies such coefficients too, but complains on standard error
+        for i in found.axes if "A_ORDER" in header else ():
+            if not cards.text(f"CTYPE{i}")[
+                8:
+            ]:  # astropy applies such coefficients too, but complains on standard error
                 header[f"CTYPE{i}"] = cards.text(f"CTYPE{i}") + "-SIP"
         wcs = WCS(header, fobj=hdus).celestial
         wcs.wcs.set()
@@ -234,7 +238,8 @@ class _as_bad_wcs:  # noqa: N801 - a context manager, written like a function wh
     def __exit__(self, kind: object, error: BaseException | None, trace: object) -> None:
         if isinstance(error, Exception) and not isinstance(error, BadWcsError | NoCelestialError):
             lines = [line for line in str(error).splitlines() if line and not line.startswith("ERROR")]
-            raise BadWcsError(f"wcslib refuses the coordinates: {(lines or [str(error)])[-1].rstrip('.')}") from error
+            said = " ".join(lines) if isinstance(error, Warning) else (lines or [str(error)])[-1]
+            raise BadWcsError(f"wcslib refuses the coordinates: {said.rstrip('.')}") from error
 
 
 # --- the two engines
