@@ -162,11 +162,12 @@ def _layout(raw: bytes, offset: int, index: int) -> Hdu:
     cards = Cards(raw)
     bitpix, axes = _shape(cards, "", index)
     elements = math.prod(axes) if axes else 0
-    if axes and axes[0] == 0 and cards.get("GROUPS") is True:
-        elements = math.prod(axes[1:])  # random groups
+    random_groups = bool(axes) and axes[0] == 0 and cards.get("GROUPS") is True
+    if random_groups:
+        elements = math.prod(axes[1:])
     groups, parameters = cards.integer("GCOUNT", 1), cards.integer("PCOUNT")
-    if groups < 0 or parameters < 0:
-        raise SetAsideError("bad_header", f"PCOUNT or GCOUNT of HDU {index} is negative", index)
+    if parameters < 0 or groups < 0 or (groups == 0 and not random_groups):
+        raise SetAsideError("bad_header", f"PCOUNT or GCOUNT of HDU {index} is too small", index)
     size = abs(bitpix) // 8 * groups * (parameters + elements)
     if size > LARGEST:
         raise SetAsideError("bad_header", f"the data of HDU {index} would be larger than any file", index)

@@ -202,9 +202,10 @@ def _full(raw: bytes, path: str) -> Projection:
         hdus = stack.enter_context(fits.open(path)) if tables else None
         header = fits.Header.fromstring(raw.decode("latin-1"))
         for i in found.axes if "A_ORDER" in header else ():
-            if not cards.text(f"CTYPE{i}")[
-                8:
-            ]:  # astropy applies such coefficients too, but complains on standard error
+            suffix = cards.text(f"CTYPE{i}")[8:]
+            if suffix not in ("", "-SIP"):
+                raise BadWcsError(f"CTYPE{i} ends in {suffix!r}, and there are SIP coefficients")
+            if not suffix:  # astropy applies such coefficients too, but complains on standard error
                 header[f"CTYPE{i}"] = cards.text(f"CTYPE{i}") + "-SIP"
         wcs = WCS(header, fobj=hdus).celestial
         wcs.wcs.set()
