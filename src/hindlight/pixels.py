@@ -20,6 +20,7 @@ from astropy.io import fits
 from numpy.lib.stride_tricks import as_strided
 from numpy.typing import NDArray
 
+from hindlight import apart
 from hindlight.files import GzipStream, PlainSource, open_file, open_source
 from hindlight.headers import Hdu, SetAsideError, Source, read_hdus
 from hindlight.lightcurve import IntArray
@@ -28,6 +29,8 @@ SAMPLE = 256
 PIECE = 1 << 20
 TILE_REACH = 64  # pixels that a tile typically sticks out beyond the window asked for
 SECTIONS_BELOW = 0.25  # windows with their tiles must stay below this fraction of the image to be read one by one
+
+FRAGILE = ("HCOMPRESS_1", "PLIO_1")  # their decoders write where broken bytes tell them to
 
 Floats = NDArray[np.floating[Any]]
 
@@ -300,14 +303,22 @@ def _unpack_tiles(place: PlanePlace, lead: tuple[int, ...], limit: int, windows:
     if place.image.packed:  # a tile-compressed file inside a gzip file
         target = io.BytesIO(_unpacked(place, 0, hdu.data_offset + hdu.data_bytes, limit))
     try:
-        with warnings.catch_warnings():
-            warnings.simplefilter("ignore")  # about cards; pixels that cannot be unpacked raise
-            with fits.open(target, do_not_scale_image_data=True, uint=False) as hdus:
-                stored = _sections(hdus[hdu.index].section, place, lead, windows)
+        if hdu.cards.text("ZCMPTYPE") in FRAGILE:
+            stored = apart.call(_decoded, target, place, lead, windows)
+        else:
+            stored = _decoded(target, place, lead, windows)
     except Exception as error:  # on broken bytes the decoders raise whatever they like
         detail = " ".join(str(error).split())
         raise place.fault("bad_compression", f"the tiles cannot be unpacked: {detail}") from error
     return _scaled(stored, hdu)
+
+
+def _decoded(target: Any, place: PlanePlace, lead: tuple[int, ...], windows: Windows | None) -> NDArray[Any]:
+    """The stored numbers of a plane, unpacked by astropy from a path or from bytes in memory."""
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")  # about cards; pixels that cannot be unpacked raise
+        with fits.open(target, do_not_scale_image_data=True, uint=False) as hdus:
+            return _sections(hdus[place.image.hdu.index].section, place, lead, windows)
 
 
 def _sections(section: Any, plane: PlanePlace, lead: tuple[int, ...], windows: Windows | None) -> NDArray[Any]:

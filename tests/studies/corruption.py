@@ -71,11 +71,13 @@ def good_files() -> dict[str, bytes]:
         fits.CompImageHDU(noise.astype(np.int16), header(), compression_type="RICE_1", tile_shape=(16, 64)),
         fits.CompImageHDU(floats, header(), compression_type="GZIP_2", quantize_level=0),
     ]
+    smooth = fits.CompImageHDU(noise.astype(np.int32), header(), compression_type="HCOMPRESS_1", tile_shape=(32, 64))
     return {
         "floats.fits": written(fits.PrimaryHDU(floats, header())),
         "scaled.fits": written(scaled),
         "packed.fits.gz": gzip.compress(written(fits.PrimaryHDU(floats, header())), mtime=0),
         "tiles.fits.fz": written(fits.PrimaryHDU(), *tiles),
+        "smooth.fits.fz": written(fits.PrimaryHDU(), smooth),
         "cube.fits": written(fits.PrimaryHDU(cube, header(**axes))),
         "several.fits": written(*several),
     }
