@@ -89,7 +89,7 @@ def test_plain_frame(tmp_path: Path) -> None:
             {"EXPTIME": None, "DATE__BEG": "1988-03-17T06:00:00", "DATE__END": "1988-03-17T06:10:00"},
             0, 300, 600, ["span_is_good_time"],
         ),
-        ({"DATE__BEG": "1988-03-17T06:00:00", "DATE__END": "1988-03-17T05:00:00"}, 0, 60, None, []),
+        ({"DATE__BEG": "1988-03-17T06:00:00", "DATE__END": "1988-03-17T05:00:00"}, 0, 60, 120, ["implausible_date"]),
     ],
 )  # fmt: skip
 def test_start_middle_end(

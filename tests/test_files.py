@@ -143,10 +143,11 @@ def test_gzip_unpacks_no_pixel(tmp_path: Path) -> None:
     plain = write(tmp_path / "a.fits", (200, 300)).read_bytes()
     path = zipped(tmp_path / "a.fits.gz", plain[:2880] + NOISE[:240_480])
     with open_source(str(path), 10**9) as source:
+        assert isinstance(source, GzipSource)
         source.read_at(0, 2880)
         assert source.reaches(2880 + 240_000)
         assert source.read_at(2880 + 241_920, 2880) == b""
-        assert source._packed_at < 100_000  # type: ignore[attr-defined]  # how far it read is what is tested
+        assert source.stream.packed_at < 100_000
 
 
 def test_gzip_with_further_hdus(tmp_path: Path) -> None:

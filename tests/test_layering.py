@@ -15,10 +15,10 @@ PLUGINS = Path(hindlight_plugins.__file__).parent
 ORDER = [
     "errors", "schema", "facts", "settings", "dates", "lightcurve", "plugin", "hookspecs", "tables", "host", "fence",
     "clock", "systems", "celestial", "sky", "headers", "reading", "goodtime", "files", "channels", "outlines",
-    "footprints", "archive", "summary", "positions", "pixels", "background", "detection", "pointing", "photometry",
-    "ensemble", "store", "judge", "calibrate", "ranking", "timing", "candidates", "plan", "comparisons", "tasks",
-    "conclude", "outcome", "crew", "record", "verdicts", "runner", "survey", "export", "demo", "testing", "cli",
-    "__main__",
+    "footprints", "archive", "summary", "positions", "apart", "pixels", "background", "detection", "pointing",
+    "photometry", "ensemble", "store", "judge", "calibrate", "ranking", "timing", "candidates", "plan", "comparisons",
+    "tasks", "conclude", "outcome", "crew", "record", "verdicts", "runner", "survey", "export", "demo", "testing",
+    "cli", "__main__",
 ]  # fmt: skip
 PLUGINS_MAY_IMPORT = {"hindlight", "numpy", "scipy", "astropy", "photutils", "nifty_ls"}
 

@@ -129,7 +129,7 @@ FILES = [
     Real(
         ASTROPY,
         "astropy/nddata/tests/data/sip-wcs.fits",
-        "scale_assumed no_beam",
+        "scale_assumed no_beam repeated_keyword",
         middle="2011-09-01T02:10:05.000",
         exposure=120.0,
         unit="adu",

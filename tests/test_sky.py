@@ -277,7 +277,7 @@ def test_tile_compressed_headers(tmp_path: Path, code: str) -> None:
         ({"CD1_1": 1e-3, "CD1_2": 1e-3, "CD2_1": 1e-3, "CD2_2": 1e-3}, BadWcsError, "singular"),
         ({"PC1_3": 0.5, "CTYPE3": "FREQ"}, BadWcsError, "mixes"),
         ({"CTYPE1": "RA---XXX", "CTYPE2": "DEC--XXX"}, BadWcsError, "wcslib"),
-        ({"CRVAL2": 95.0}, BadWcsError, "wcslib"),
+        ({"CRVAL2": 95.0}, BadWcsError, "no latitude"),
         ({"CTYPE1": "RA---TAB", "CTYPE2": "DEC--TAB"}, BadWcsError, "TAB"),
         ({"RADESYS": "GAPPT"}, BadWcsError, "apparent"),
         ({"CTYPE1": "RA---TPV", "CTYPE2": "DEC--TPV", "PV1_1": 1.0, "PV2_1": 1.0}, BadWcsError, "TPV needs a CD"),

@@ -19,8 +19,9 @@ from numpy.typing import NDArray
 
 from hindlight import clock, footprints
 from hindlight.errors import UsageError
-from hindlight.facts import NAN, Cards, FrameFacts, Moment
-from hindlight.files import FileEntry, list_files, open_source
+from hindlight.facts import NAN, Cards, FrameFacts, Moment, visible
+from hindlight.fence import one_line
+from hindlight.files import FileEntry, list_files, local_path, open_source
 from hindlight.goodtime import with_good_time
 from hindlight.headers import Hdu, Plane, SetAsideError, facts_of, inherited, planes, read_hdus
 from hindlight.lightcurve import FloatArray
@@ -31,8 +32,12 @@ from hindlight.settings import Settings
 from hindlight.systems import NoCelestialError
 
 FILES_AT_ONCE = 512
+HELD_AT_ONCE = 1 << 25  # bytes of headers and of frames: files may have many HDUs, and these long headers
+FRAME_BYTES = 1 << 10
 MEGABYTE = 1_000_000
 AUTO = "auto"
+PLAUSIBLE_MJD = (-3242, 88_069)  # 1850-01-01 and 2100-01-01
+LONGEST_EXPOSURE_S = 100 * clock.DAY_S
 ADDED_LATER = ("id", "batch", "channel", "state")
 BEAM_PIXELS = (0.5, 100.0)  # a stated width outside it is no width of a point source in this image
 ARCSEC_PIXELS = (1.5, 100.0)  # what a width stated in arcsec must be, where degrees were expected
@@ -99,8 +104,14 @@ def walk(
     remaining = iter(sorted(new, key=lambda f: (f[0], f[1].path)))
     while piece := list(islice(remaining, FILES_AT_ONCE)):
         found: list[_Found] = []
+        held = 0
         for archive, entry in piece:
-            _read_file(archive, entry, dialects, settings, found, rejects)
+            for frames in _read_file(archive, entry, dialects, settings, rejects):
+                found += frames
+                held += _held(frames)
+                if held > HELD_AT_ONCE:
+                    parts.append(_columns(found, settings, rejects))
+                    found, held = [], 0
         parts.append(_columns(found, settings, rejects))
         step(len(piece))
     rejects.sort(key=lambda row: (row["path"], row["hdu"], row["plane"], row["archive"]))
@@ -145,30 +156,34 @@ def _joined(parts: Sequence[Columns]) -> Columns:
 
 
 def _read_file(
-    archive: str,
-    entry: FileEntry,
-    dialects: Sequence[Dialect],
-    settings: Settings,
-    found: list[_Found],
-    rejects: list[Row],
-) -> None:
-    """Add the frames of a file and what of it is set aside."""
-    images, last, begun = 0, -1, len(found)
+    archive: str, entry: FileEntry, dialects: Sequence[Dialect], settings: Settings, rejects: list[Row]
+) -> Iterator[list[_Found]]:
+    """The frames of a file, some HDUs at a time; adds what of it is set aside.
+
+    Frames wait for a table of good time that may follow them in the file, unless they are very many.
+    """
+    images, last, held = 0, -1, 0
     primary: Cards | None = None
+    waiting: list[_Found] = []
     try:
         if entry.fault:
             raise SetAsideError("unreadable", entry.fault)
         limit = settings.inventory.unpacked_limit_mb * MEGABYTE
-        with open_source(os.path.join(archive, entry.path), limit) as source:
+        with open_source(local_path(archive, entry.path), limit) as source:
             for hdu in read_hdus(source):
                 last = hdu.index
                 if not hdu.index and not hdu.axes:
                     primary = hdu.cards
                 if hdu.is_image:
                     images += 1
-                    found.extend(_frames_of(archive, entry, hdu, primary, dialects, settings, rejects))
+                    frames = _frames_of(archive, entry, hdu, primary, dialects, settings, rejects)
+                    waiting += frames
+                    held += _held(frames)
+                    if held > HELD_AT_ONCE:
+                        yield waiting
+                        waiting, held = [], 0
                 elif hdu.is_good_time:
-                    found[begun:] = [_with_good_time(frame, hdu) for frame in found[begun:]]
+                    waiting = [_with_good_time(frame, hdu) for frame in waiting]
         if not images:
             raise SetAsideError("no_image", f"none of its {last + 1} HDUs holds an image")
     except SetAsideError as error:
@@ -176,6 +191,13 @@ def _read_file(
         rejects.append(_reject(archive, entry, error, last + 1 if last >= 0 and images else error.hdu))
     except OSError as error:
         rejects.append(_reject(archive, entry, SetAsideError("unreadable", f"the system says: {error.strerror}")))
+    if waiting:
+        yield waiting
+
+
+def _held(frames: Sequence[_Found]) -> int:
+    """About the bytes that frames take while they wait."""
+    return FRAME_BYTES * len(frames) + sum(len(f.hdu.cards.raw) for f in frames if f.plane.index == 0)
 
 
 def _frames_of(
@@ -186,14 +208,17 @@ def _frames_of(
     dialects: Sequence[Dialect],
     settings: Settings,
     rejects: list[Row],
-) -> Iterator[_Found]:
+) -> list[_Found]:
+    """The frames of an HDU, as far as nothing is wrong with it."""
+    frames: list[_Found] = []
     try:
         cards, words = _with_primary(hdu.cards, primary)
-        for plane in planes(hdu):
+        for plane in planes(hdu, settings.inventory.planes_limit):
             read = _facts(cards, plane, dialects, settings.inventory.dialect != AUTO, words)
-            yield _Found(archive, entry, hdu, plane, *read)
+            frames.append(_Found(archive, entry, hdu, plane, *read))
     except SetAsideError as error:
         rejects.append(_reject(archive, entry, error, hdu.index))
+    return frames
 
 
 def _with_primary(cards: Cards, primary: Cards | None) -> tuple[Cards, tuple[str, ...]]:
@@ -219,7 +244,9 @@ def _facts(
         raise SetAsideError("no_dialect", "no dialect recognises the header")
     if read[1].scale not in clock.SCALES:
         raise SetAsideError("bad_header", f"dialect {read[0]} gave the unknown time scale {read[1].scale!r}")
-    return (read[0], replace(read[1], assumptions=(*read[1].assumptions, *words))) if words else read
+    words = (*words, "repeated_keyword") if cards.contradicted() else words
+    facts = _plausible(read[1])
+    return read[0], replace(facts, assumptions=(*facts.assumptions, *words)) if words else facts
 
 
 def _with_good_time(frame: _Found, table: Hdu) -> _Found:
@@ -229,9 +256,31 @@ def _with_good_time(frame: _Found, table: Hdu) -> _Found:
     return frame._replace(facts=with_good_time(frame.facts, table.cards, table.table))
 
 
+def _plausible(facts: FrameFacts) -> FrameFacts:
+    """The facts without dates and durations that cannot be, with a word for each kind of thing that was left out."""
+    left_out: dict[str, Any] = {
+        name: None
+        for name in ("start", "middle", "end")
+        if (moment := getattr(facts, name)) and not PLAUSIBLE_MJD[0] <= moment.mjd < PLAUSIBLE_MJD[1]
+    }
+    words = ["implausible_date"] if left_out else []
+    durations = [name for name in ("exposure_s", "span_s") if not _is_duration(getattr(facts, name))]
+    if durations:
+        words.append("implausible_exposure")
+        left_out |= dict.fromkeys(durations, NAN)
+        if "exposure_s" in durations and facts.unit.endswith("/s"):
+            left_out["electrons_per_unit"] = NAN  # they were counted over that exposure
+    return replace(facts, **left_out, assumptions=(*facts.assumptions, *words)) if words else facts
+
+
+def _is_duration(seconds: float) -> bool:
+    """Whether a duration is none at all (NaN), or one that an image can have."""
+    return not (seconds < 0 or seconds > LONGEST_EXPOSURE_S)
+
+
 def _reject(archive: str, entry: FileEntry, error: SetAsideError, hdu: int = -1) -> Row:
     place = {"path": entry.path, "hdu": hdu, "plane": error.plane, "archive": archive}
-    return {**place, "reason": error.reason, "detail": error.detail}
+    return {**place, "reason": error.reason, "detail": visible(one_line(error.detail))}
 
 
 # --- many frames at once
@@ -260,7 +309,7 @@ def _plain(found: Sequence[_Found]) -> Columns:
     numbers = ("frequency_hz", "beam_major", "beam_minor", "beam_angle", "depth", "saturation", "electrons_per_unit")
     columns: Columns = {name: np.array([getattr(f, name) for f in facts], dtype=float) for name in numbers}
     columns |= {
-        name: _text([getattr(f, name) for f in facts])
+        name: _text([visible(getattr(f, name)) for f in facts])
         for name in ("instrument", "band", "stokes", "unit", "primary_beam")
     }
     frequency = columns["frequency_hz"]
@@ -303,6 +352,8 @@ def _times(found: Sequence[_Found], settings: Settings, words: Sequence[list[str
 
     start, middle, end = (instants(name) for name in ("start", "middle", "end"))
     exposure = np.array([f.exposure_s for f in facts], dtype=float)
+    reversed_ends, stretched = end < start, end - start > LONGEST_EXPOSURE_S
+    end = np.where(reversed_ends | stretched, NAN, end)
     span = np.where(end >= start, end - start, np.array([f.span_s for f in facts], dtype=float))
     stated = np.isfinite(exposure)
     broken = exposure < GOOD_FRACTION * span
@@ -313,6 +364,8 @@ def _times(found: Sequence[_Found], settings: Settings, words: Sequence[list[str
     days = np.array([_day(f) for f in facts], dtype=float)
     homeless = clocked & np.isnan(sites[:, 0]) & ~np.array([f.barycentric for f in facts], dtype=bool)
     for rows, word in (
+        (reversed_ends, "implausible_date"),
+        (stretched, "implausible_exposure"),
         (~clocked, "no_clock"),
         (~stated & np.isfinite(exposure), "span_is_good_time"),
         (~np.isfinite(exposure), "no_exposure"),
@@ -369,7 +422,7 @@ def _outlines(
 ) -> tuple[list[Outline], list[int]]:
     """The outline of each frame with usable coordinates, and which frames those are."""
     images = [
-        Image(f.hdu.cards, os.path.join(f.archive, f.entry.path), f.plane.width, f.plane.height, date)
+        Image(f.hdu.cards, local_path(f.archive, f.entry.path), f.plane.width, f.plane.height, date)
         for f, date in zip(found, mjd.tolist(), strict=True)
     ]
     kept: list[int] = []
@@ -395,7 +448,8 @@ def _beams(columns: Columns, in_pixels: NDArray[np.bool_], settings: Settings, w
     _read_as_arcsec(columns, settings, words)
     ratio = columns["beam_major"] / columns["pixel_scale"]
     good = _within(ratio, BEAM_PIXELS)
-    good &= (columns["beam_minor"] > 0) & (columns["beam_minor"] <= columns["beam_major"])
+    good &= columns["beam_minor"] >= BEAM_PIXELS[0] * columns["pixel_scale"]
+    good &= columns["beam_minor"] <= columns["beam_major"]
     for i in np.flatnonzero(~good).tolist():
         width = settings.photometry.fwhm_arcsec.get(columns["instrument"][i], NAN)
         words[i].append("no_beam" if np.isnan(width) else "beam_from_settings")

@@ -105,9 +105,9 @@ def local_background(stamps: Floats, annulus: Annulus, quantum: float = 0.0) -> 
     """
     stamps = stamps.reshape(len(stamps), -1)
     ring = np.take(stamps, annulus.index, axis=1, mode="clip")
-    if quantum:
-        ring += _dither(len(annulus.index), quantum).astype(ring.dtype)
     with np.errstate(invalid="ignore", over="ignore"):  # infinite pixels may make NaN, never a warning
+        if quantum:
+            ring += _dither(len(annulus.index), quantum).astype(ring.dtype)
         level, spread, used = median_and_mad(ring)
     core = np.fmax.reduce(np.take(stamps, annulus.core, axis=1), axis=1)
     around = np.full(len(stamps), np.nan)

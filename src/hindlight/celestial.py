@@ -9,7 +9,7 @@ import math
 import re
 from dataclasses import dataclass
 
-from hindlight.facts import Cards
+from hindlight.facts import CARD, Cards
 from hindlight.systems import BadWcsError, NoCelestialError, System, system_of
 
 ZENITHAL_CODES = {"SIN", "TAN", "ARC", "ZEA", "STG", "NCP", "TPV", "ZPN", "AZP", "SZP", "TNX", "ZPX", "DSS"}
@@ -17,7 +17,10 @@ LONGITUDES = {"RA": "DEC", "GLON": "GLAT"}
 REFUSED_LONGITUDES = {"ELON": "ecliptic", "HLON": "heliographic", "SLON": "supergalactic"}
 CTYPES = {i: f"CTYPE{i}" for i in range(1, 10)}
 
+LARGEST_DEG = (720.0, 90.0)  # longitudes are written from -180 or 0 on, with a turn to spare; latitudes end at the pole
+
 _MATRIX = re.compile(r"(PC|CD)\d_\d")
+_QUOTED = re.compile(r"= *'(?:[^']|'')*'")
 _OF_AXES = re.compile(r"(CTYPE|CRPIX|CRVAL|CDELT|CROTA|CUNIT|PV|PC|CD)(\d)(_(\d+))?")
 
 
@@ -69,6 +72,10 @@ def find_celestial(cards: Cards) -> Celestial:
         raise BadWcsError(f"CTYPE{i} is {types[i]!r} but CTYPE{j} is {types[j]!r}: they are no pair")
     axes = (min(i, j), max(i, j))
     _check_numbers(cards, axes)
+    for axis, most in zip((i, j), LARGEST_DEG, strict=True):
+        value = cards.number(f"CRVAL{axis}")
+        if cards.text(f"CUNIT{axis}") in ("", "deg") and abs(value) > most:
+            raise BadWcsError(f"CRVAL{axis} is {value:g}, which is no {'longitude' if axis == i else 'latitude'}")
     system, assumed = (System("galactic"), False) if names[i] == "GLON" else system_of(cards)
     size = _size(cards, axes)
     return Celestial(axes, code, suffix, i > j, system, assumed, size, _reference(cards, axes, code, size))
@@ -107,7 +114,9 @@ def two_axes(cards: Cards, axes: tuple[int, int]) -> str:
         if first not in number or (stem in ("PC", "CD") and second not in number):
             continue
         tail = "" if second is None else "_" + (number[second] if stem in ("PC", "CD") else second)
-        out.append(f"{stem}{number[first]}{tail}".ljust(8) + text[8:])
+        quoted = _QUOTED.match(text[8:])  # wcslib leaves out a card with more than a comment behind its text
+        value = quoted.group() if quoted else text[8:]
+        out.append((f"{stem}{number[first]}{tail}".ljust(8) + value).ljust(CARD))
     return "".join(out)
 
 

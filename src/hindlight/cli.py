@@ -22,6 +22,7 @@ from rich.text import Text
 
 from hindlight import __version__
 from hindlight.errors import HindlightError, UsageError
+from hindlight.facts import visible
 
 BEST_ROWS = 10
 LONGEST_CELL = 200
@@ -67,7 +68,7 @@ def _terminate(_number: int, _frame: Any) -> None:
 
 
 def _say(text: str, status: int) -> int:
-    click.echo(f"hindlight: {' '.join(text.split())}", err=True)
+    click.echo(f"hindlight: {visible(' '.join(text.split()))}", err=True)
     return status
 
 
@@ -164,7 +165,7 @@ def lightcurve(run: Path, target: str, out: Path | None, quiet: bool, verbose: b
             raise UsageError(f"--out {out}: no folder {out.parent}; make it first")
         write_table(out, table)
     if not quiet:
-        click.echo(f"{len(table)} measurements of {target} written to {out}", err=True)
+        click.echo(visible(f"{len(table)} measurements of {target} written to {out}"), err=True)
 
 
 @cli.command()
@@ -290,7 +291,7 @@ def _simple_table(title: str, *names: str) -> Table:
 
 def _add(table: Table, *cells: object) -> None:
     """A row of plain text: what stands in a header or a target list is never taken for markup, and is one line."""
-    table.add_row(*(Text(" ".join(str(cell).split())[:LONGEST_CELL]) for cell in cells))
+    table.add_row(*(Text(visible(str(cell))[:LONGEST_CELL]) for cell in cells))
 
 
 def _print_result(result: Any) -> None:
@@ -302,8 +303,9 @@ def _print_result(result: Any) -> None:
     if doubtful:
         console.print(_candidates("beyond chance, but a check failed", doubtful[:BEST_ROWS]))
         for row in doubtful[:BEST_ROWS]:
-            console.print(f"  {' '.join(str(row['name']).split())}: {row['concerns']}", markup=False)
-    console.print((result.run / "summary.txt").read_text(encoding="utf-8"), end="", markup=False)
+            console.print(f"  {visible(str(row['name']))}: {visible(str(row['concerns']))}", markup=False)
+    for line in (result.run / "summary.txt").read_text(encoding="utf-8").splitlines():
+        console.print(visible(line), markup=False)
     console.print(f"written to {result.run}: candidates.ecsv (.fits, .vot), channels.ecsv, rejects.ecsv", markup=False)
 
 

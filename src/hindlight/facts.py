@@ -16,6 +16,9 @@ ORDINAL_OF_MJD = 678576  # of MJD 0, 1858-11-17, as Python counts days
 Value = str | float | int | bool | None
 NAN = float("nan")
 
+_CONTROL = re.compile(r"[\x00-\x1f\x7f-\x9f\u2028\u2029\ud800-\udfff]")
+_FREE = frozenset(("", "COMMENT", "HISTORY", "CONTINUE", "HIERARCH", "END"))  # may stand more than once
+_RECORD = re.compile(r"(DP|DQ|D2IM)\d")  # hold many values each, as 'NAME: value' (M. R. Calabretta et al. 2004, draft)
 _STRING = re.compile(r"\s*'((?:[^']|'')*)'")
 _WHOLE = re.compile(r"[+-]?[0-9]+")
 _REAL = re.compile(r"[+-]?(?:[0-9]+\.?[0-9]*|\.[0-9]+)(?:[EDed][+-]?[0-9]+)?")
@@ -61,6 +64,13 @@ class Moment:
         if int(hour) > 24 or int(minute) > 59 or float(second or 0) >= 61 or seconds > 86401:
             return None
         return cls(mjd, seconds)
+
+
+def visible(text: str) -> str:
+    """Text with control characters (line breaks too) as \\xNN: fit for any table, and harmless on a terminal."""
+    if text.isprintable():
+        return text
+    return _CONTROL.sub(lambda found: found[0].encode("unicode_escape").decode("ascii"), text)
 
 
 @dataclass(frozen=True)
@@ -137,6 +147,7 @@ class Cards:
         starts = range(0, len(text) - CARD + 1, CARD)
         keys = [text[start : start + 8].rstrip() for start in starts]
         self._index = dict(zip(reversed(keys), reversed(starts), strict=True))  # the first of a repeated keyword stays
+        self._repeats = len(keys) != len(self._index)
 
     def __contains__(self, key: str) -> bool:
         return key in self._index
@@ -147,6 +158,20 @@ class Cards:
 
     def __iter__(self) -> Iterator[str]:
         return reversed(self._index)
+
+    def contradicted(self) -> bool:
+        """Whether a keyword stands more than once, with different values."""
+        if not self._repeats:
+            return False
+        cards = (self._text[start : start + CARD] for start in range(0, len(self._text) - CARD + 1, CARD))
+        own = ((card[:8].rstrip(), card[8:]) for card in cards)
+        return any(
+            key not in _FREE
+            and not _RECORD.match(key)
+            and rest != self.card(key)[8:]
+            and parse_value(rest[2:]) != self.get(key)
+            for key, rest in own
+        )
 
     def card(self, key: str) -> str:
         """The 80 characters of a card, '' where there is none."""

@@ -8,6 +8,7 @@ blocks.
 from __future__ import annotations
 
 import os
+import re
 import stat
 import zlib
 from collections.abc import Iterable, Iterator
@@ -21,14 +22,20 @@ from hindlight.headers import BLOCK, FIRST_READ, SetAsideError, Source
 ENDINGS = tuple(base + packed for base in (".fits", ".fit", ".fts") for packed in ("", ".gz", ".fz"))
 GZIP_MAGIC = b"\x1f\x8b"
 CHUNK = 1 << 16
+FIRST_FEED = 1 << 12
 FOUR_GIB = 1 << 32
+COARSE_CLOCK_NS = 2_000_000_000  # the same file may show a rounded time where it is mounted otherwise
+
+_UNFIT = re.compile(r"[\x00-\x08\x0b-\x1f\x7f-\x9f\u2028\u2029\ud800-\udfff]|\A\s|\s\Z")
+_ESCAPE = re.compile(rb"\\x([0-9a-f]{2})")
 
 
 @dataclass(frozen=True)
 class FileEntry:
     """A file of an archive: its path relative to the archive folder, size in bytes and modification time.
 
-    `fault` is a sentence where the file (or a folder) cannot be read; size and time are then 0.
+    `path` is as `path_text` writes it. `fault` is a sentence where the file (or a folder) cannot be read; size and time
+    are then 0.
     """
 
     path: str
@@ -37,10 +44,29 @@ class FileEntry:
     fault: str = ""
 
 
+def path_text(path: str) -> str:
+    """A path as text that every table holds: bytes that are no UTF-8 and control characters are written \\xNN.
+
+    Newlines and tabs stay. Other paths are left alone, but for one that has such an escape in its own name, so that
+    `local_path` always finds the way back.
+    """
+    if not (_UNFIT.search(path) or _ESCAPE.search(os.fsencode(path))):
+        return path
+    return _UNFIT.sub(
+        lambda found: "".join(f"\\x{byte:02x}" for byte in os.fsencode(found[0])), path.replace("\\", r"\x5c")
+    )
+
+
+def local_path(archive: str, path: str = "") -> str:
+    """Where the system finds a file of an archive, both as `path_text` writes them."""
+    names = (_ESCAPE.sub(lambda found: bytes([int(found[1], 16)]), os.fsencode(text)) for text in (archive, path))
+    return os.path.join(*(os.fsdecode(name) for name in names)) if path else os.fsdecode(next(names))
+
+
 def check_folders(archives: Iterable[str]) -> None:
     """Raise `UsageError` for the first archive that is no folder."""
     for archive in archives:
-        if not os.path.isdir(archive):
+        if not os.path.isdir(local_path(archive)):
             raise UsageError(f"archive {archive}: no such folder; give folders that hold FITS files")
 
 
@@ -51,7 +77,7 @@ def list_files(archive: str, visited: set[tuple[int, int]] | None = None) -> lis
     is shared between archives that may overlap. Raises `UsageError` if the archive is no folder.
     """
     check_folders([archive])
-    root = Path(archive)
+    root = Path(local_path(archive))
     visited = set() if visited is None else visited
     entries: list[FileEntry] = []
     pending = [""]
@@ -60,14 +86,14 @@ def list_files(archive: str, visited: set[tuple[int, int]] | None = None) -> lis
         try:
             found = _scan(root, folder, visited)
         except OSError as error:
-            entries.append(FileEntry(folder or ".", 0, 0, f"the folder cannot be listed: {error.strerror}"))
+            entries.append(FileEntry(path_text(folder) or ".", 0, 0, f"the folder cannot be listed: {error.strerror}"))
             continue
         for entry in found:
             relative = f"{folder}/{entry.name}" if folder else entry.name
             if _is_folder(entry):
                 pending.append(relative)
             elif entry.name.lower().endswith(ENDINGS):
-                entries.append(_entry(entry, relative))
+                entries.append(_entry(entry, path_text(relative)))
     return sorted(entries, key=lambda entry: entry.path)
 
 
@@ -100,6 +126,25 @@ def _entry(entry: os.DirEntry[str], relative: str) -> FileEntry:
     return FileEntry(relative, status.st_size, status.st_mtime_ns)
 
 
+def open_file(path: str) -> int:
+    """A descriptor of a regular file, never waiting for one that is a pipe by now. Raises `OSError`, `SetAsideError`."""
+    descriptor = os.open(path, os.O_RDONLY | os.O_NONBLOCK)
+    if stat.S_ISREG(os.fstat(descriptor).st_mode):
+        return descriptor
+    os.close(descriptor)
+    raise SetAsideError("unreadable", "not a regular file")
+
+
+def check_unchanged(path: str, size: int, modified_ns: int) -> None:
+    """Raise `SetAsideError` where a file is no longer the one that was listed. Raises `OSError` too."""
+    try:
+        status = os.stat(path)
+    except FileNotFoundError:
+        raise SetAsideError("vanished", "the file is gone since its header was read") from None
+    if status.st_size != size or abs(status.st_mtime_ns - modified_ns) > COARSE_CLOCK_NS:
+        raise SetAsideError("changed", "the file has changed since its header was read; give the same command again")
+
+
 @contextmanager
 def open_source(path: str, unpacked_limit: int) -> Iterator[Source]:
     """The unpacked bytes of a file, whether plain or gzip (told by its first bytes, not its name).
@@ -107,7 +152,7 @@ def open_source(path: str, unpacked_limit: int) -> Iterator[Source]:
     `unpacked_limit` bounds, in bytes, what a gzip file may unpack to. Raises `OSError` where the system refuses, and
     `SetAsideError` (bad_compression) while a broken or too large gzip file is read.
     """
-    descriptor = os.open(path, os.O_RDONLY)
+    descriptor = open_file(path)
     try:
         head = os.pread(descriptor, FIRST_READ, 0)
         if head.startswith(GZIP_MAGIC):
@@ -138,6 +183,54 @@ class PlainSource:
         return self._size >= end
 
 
+class GzipStream:
+    """What a gzip file unpacks to, member after member, in pieces; packed bytes are read `chunk` at a time.
+
+    Each member is fed in steps that grow from a small one: zlib hands back what it was fed beyond a member's end, which
+    would be copied once for each of a great many small members.
+    """
+
+    def __init__(self, descriptor: int, chunk: int = CHUNK) -> None:
+        self.packed_at = 0  # how far the file has been read
+        self._descriptor, self._chunk = descriptor, chunk
+        self._waiting = memoryview(b"")  # packed bytes read and not yet fed
+        self._member = zlib.decompressobj(wbits=31)
+        self._step = FIRST_FEED
+        self._ended = False
+
+    def piece(self, most: int) -> bytes:
+        """The next unpacked bytes, at most so many; b'' at the end. Raises `SetAsideError` (bad_compression)."""
+        unpacked = b""
+        while not unpacked and not self._ended:
+            if not self._waiting and not self._fill():
+                raise SetAsideError("bad_compression", "the gzip file ends in the middle")
+            fed = self._waiting[: self._step]
+            try:
+                unpacked = self._member.decompress(fed, most)
+            except zlib.error as error:
+                raise SetAsideError("bad_compression", f"the gzip file is broken: {error}") from error
+            left = self._member.unused_data if self._member.eof else self._member.unconsumed_tail
+            self._waiting = self._waiting[len(fed) - len(left) :]
+            self._step = min(2 * self._step, self._chunk)
+            if self._member.eof:
+                self._next_member()
+        return unpacked
+
+    def _fill(self) -> bool:
+        """Read more of the file; False at its end."""
+        more = os.pread(self._descriptor, self._chunk, self.packed_at)
+        self.packed_at += len(more)
+        self._waiting = memoryview(bytes(self._waiting) + more)
+        return bool(more)
+
+    def _next_member(self) -> None:
+        """Go on with a further gzip member; what else follows (padding) is left."""
+        if len(self._waiting) < len(GZIP_MAGIC):
+            self._fill()
+        self._member, self._step = zlib.decompressobj(wbits=31), FIRST_FEED
+        self._ended = self._waiting[: len(GZIP_MAGIC)] != GZIP_MAGIC
+
+
 class GzipSource:
     """A gzip file, unpacked forwards and no further than asked.
 
@@ -146,24 +239,18 @@ class GzipSource:
     """
 
     def __init__(self, descriptor: int, limit: int) -> None:
+        self.stream = GzipStream(descriptor)
         self._descriptor, self._limit = descriptor, limit
-        self._packed_size = os.fstat(descriptor).st_size
-        self._packed_at = 0
-        self._stream = zlib.decompressobj(wbits=31)
-        self._waiting = b""  # packed bytes not yet fed
-        self._window, self._window_at = b"", 0  # the unpacked bytes kept, and where they begin
-        self._ended = False
+        self._window, self._window_at = bytearray(), 0  # the unpacked bytes kept, and where they begin
         self._known_end: int | None = None
 
     def read_at(self, offset: int, length: int) -> bytes:
         """Up to `length` unpacked bytes, fewer only at the end."""
         if self._known_end is not None and offset >= self._known_end:
             return b""
-        self._drop_before(offset)
-        while self._window_at + len(self._window) < offset + length and self._unpack():
-            self._drop_before(offset)
+        self._unpack_to(offset + length, offset)
         start = offset - self._window_at
-        return self._window[start : start + length]
+        return bytes(self._window[start : start + length])
 
     def reaches(self, end: int) -> bool:
         """Whether the file unpacks to at least `end` bytes."""
@@ -171,49 +258,27 @@ class GzipSource:
         if (self._trailer_size() - end) % FOUR_GIB < BLOCK:
             self._known_end = end
             return True
-        self._drop_before(end)
-        while self._window_at + len(self._window) < end and self._unpack():
-            self._drop_before(end)
+        self._unpack_to(end, end)
         return self._window_at + len(self._window) >= end
 
     def _trailer_size(self) -> int:
-        return int.from_bytes(os.pread(self._descriptor, 4, max(0, self._packed_size - 4)), "little")
+        size = os.fstat(self._descriptor).st_size
+        return int.from_bytes(os.pread(self._descriptor, 4, max(0, size - 4)), "little")
 
-    def _drop_before(self, offset: int) -> None:
-        """Forget unpacked bytes before `offset`; they are never asked for again."""
-        cut = min(offset - self._window_at, len(self._window))
-        if cut > 0:
-            self._window, self._window_at = self._window[cut:], self._window_at + cut
-
-    def _unpack(self) -> bool:
-        """Unpack one more piece; False at the end of the file."""
-        if self._ended:
-            return False
-        if not self._waiting:
-            self._waiting = os.pread(self._descriptor, CHUNK, self._packed_at)
-            self._packed_at += len(self._waiting)
-        if not self._waiting:
-            raise SetAsideError("bad_compression", "the gzip file ends in the middle")
-        try:
-            piece = self._stream.decompress(self._waiting, CHUNK)
-        except zlib.error as error:
-            raise SetAsideError("bad_compression", f"the gzip file is broken: {error}") from error
-        self._waiting = self._stream.unconsumed_tail
-        if self._stream.eof:
-            self._next_member()
-        self._window += piece
-        self._check_limit(self._window_at + len(self._window))
-        return True
-
-    def _next_member(self) -> None:
-        """Go on with a further gzip member; what else follows (padding) is left."""
-        rest = self._stream.unused_data
-        if len(rest) < len(GZIP_MAGIC):
-            more = os.pread(self._descriptor, CHUNK, self._packed_at)
-            self._packed_at += len(more)
-            rest += more
-        self._stream, self._waiting = zlib.decompressobj(wbits=31), rest
-        self._ended = not rest.startswith(GZIP_MAGIC)
+    def _unpack_to(self, end: int, keep_from: int) -> None:
+        """Unpack up to `end`, or the file's end; forget what is before `keep_from`, which is never asked for again."""
+        while True:
+            cut = min(keep_from - self._window_at, len(self._window))
+            if cut > 0:
+                del self._window[:cut]
+                self._window_at += cut
+            if self._window_at + len(self._window) >= end:
+                return
+            piece = self.stream.piece(CHUNK)
+            if not piece:
+                return
+            self._window += piece
+            self._check_limit(self._window_at + len(self._window))
 
     def _check_limit(self, size: int) -> None:
         if size > self._limit:

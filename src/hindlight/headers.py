@@ -23,6 +23,7 @@ HEADER_LIMIT = 10_000 * BLOCK
 BITPIXES = (8, 16, 32, 64, -32, -64)
 MAX_AXES = 99
 NOT_INHERITED = ("SIMPLE", "EXTEND", "BSCALE", "BZERO", "BLANK", "CHECKSUM", "DATASUM", "HISTORY", "COMMENT", "")
+LARGEST = 1 << 62  # bytes or pixels: no file is larger
 IMAGE_EXTENSIONS = ("IMAGE", "IUEIMAGE")
 GOOD_TIME = ("GTI", "STDGTI")
 GOOD_TIME_LIMIT = 10_000 * BLOCK
@@ -69,6 +70,7 @@ class Hdu:
         The rows of a table of good-time intervals; no other data are kept.
     bscale, bzero, blank
         value = bzero + bscale * stored; `blank` is the stored integer that means no value, None where there is none.
+        Scale and zero point are NaN where the header gives something else than a number.
     """
 
     index: int
@@ -186,16 +188,19 @@ def _layout(raw: bytes, offset: int, index: int) -> Hdu:
     cards = Cards(raw)
     bitpix, axes = _shape(cards, "", index)
     elements = math.prod(axes) if axes else 0
-    if axes and axes[0] == 0 and cards.get("GROUPS") is True:
-        elements = math.prod(axes[1:])  # random groups
-    size = abs(bitpix) // 8 * cards.integer("GCOUNT", 1) * (cards.integer("PCOUNT") + elements)
-    if size < 0:
-        raise SetAsideError("bad_header", f"PCOUNT or GCOUNT of HDU {index} is negative", index)
+    random_groups = bool(axes) and axes[0] == 0 and cards.get("GROUPS") is True
+    if random_groups:
+        elements = math.prod(axes[1:])
+    groups, parameters = cards.integer("GCOUNT", 1), cards.integer("PCOUNT")
+    if parameters < 0 or groups < 0 or (groups == 0 and not random_groups):
+        raise SetAsideError("bad_header", f"PCOUNT or GCOUNT of HDU {index} is too small", index)
+    size = abs(bitpix) // 8 * groups * (parameters + elements)
+    if size > LARGEST:
+        raise SetAsideError("bad_header", f"the data of HDU {index} would be larger than any file", index)
     compressed = cards.get("ZIMAGE") is True and cards.text("XTENSION") == "BINTABLE"
     if compressed:
         bitpix, axes = _shape(cards, "Z", index)
         cards = _image_cards(raw)
-    scale, zero = cards.number("BSCALE"), cards.number("BZERO")
     blank = cards.get("BLANK")
     return Hdu(
         index=index,
@@ -205,10 +210,16 @@ def _layout(raw: bytes, offset: int, index: int) -> Hdu:
         bitpix=bitpix,
         axes=axes,
         compressed=compressed,
-        bscale=1.0 if scale != scale else scale,
-        bzero=0.0 if zero != zero else zero,
+        bscale=_scaling(cards, "BSCALE", 1.0),
+        bzero=_scaling(cards, "BZERO", 0.0),
         blank=blank if isinstance(blank, int) and not isinstance(blank, bool) and bitpix > 0 else None,
     )
+
+
+def _scaling(cards: Cards, key: str, default: float) -> float:
+    """The number on a card, `default` where the card is absent or left empty, NaN for anything else."""
+    left_empty = cards.card(key)[8:].partition("/")[0].strip(" =") == ""
+    return default if left_empty else cards.number(key)
 
 
 def _image_cards(raw: bytes) -> Cards:
@@ -226,6 +237,8 @@ def _shape(cards: Cards, prefix: str, index: int) -> tuple[int, tuple[int, ...]]
     axes = tuple(cards.integer(f"{prefix}NAXIS{i}", -1) for i in range(1, count + 1))
     if min(axes, default=0) < 0:
         raise SetAsideError("bad_header", f"{prefix}NAXIS{axes.index(min(axes)) + 1} of HDU {index} is wrong", index)
+    if math.prod(max(1, length) for length in axes) > LARGEST:
+        raise SetAsideError("bad_header", f"the axes of HDU {index} are longer than those of any image", index)
     return bitpix, axes
 
 
@@ -247,12 +260,14 @@ class _Axis:
     unit: str
 
 
-def planes(hdu: Hdu) -> list[Plane]:
+def planes(hdu: Hdu, most: int | None = None) -> list[Plane]:
     """The planes of an image in storage order, with the world coordinates of each on the other axes.
 
     Raises `SetAsideError`: no_wcs without a celestial pair of axes, unknown_axis where a longer axis is neither time,
-    frequency nor Stokes with usable coordinates, or is stored inside the celestial ones.
+    frequency nor Stokes with usable coordinates, or is stored inside the celestial ones, bad_header where the stored
+    numbers cannot be scaled, too_many_planes beyond `most`.
     """
+    _check_scaling(hdu)
     cards, n_data = hdu.cards, len(hdu.axes)
     count = max(n_data, min(cards.integer("WCSAXES") or _highest_axis(cards, n_data), MAX_AXES))
     types = [cards.text(f"CTYPE{i}").upper() for i in range(1, count + 1)]
@@ -266,6 +281,10 @@ def planes(hdu: Hdu) -> list[Plane]:
     for axis in others:
         _refuse_unknown(axis, second + 1, hdu.index)
     outer = lengths[second + 1 : n_data]
+    if most is not None and math.prod(outer) > most:
+        raise SetAsideError(
+            "too_many_planes", f"{math.prod(outer)} planes are more than the limit of {most}", hdu.index
+        )
     found = []
     for index in range(math.prod(outer)):
         place = _unravel(index, outer)
@@ -280,6 +299,14 @@ def _highest_axis(cards: Cards, n_data: int) -> int:
     while f"CTYPE{count + 1}" in cards:
         count += 1
     return count
+
+
+def _check_scaling(hdu: Hdu) -> None:
+    """Refuse a scale that makes all pixels alike, or none at all."""
+    for key, value, wrong in (("BSCALE", hdu.bscale, hdu.bscale == 0.0), ("BZERO", hdu.bzero, False)):
+        if wrong or not math.isfinite(value):
+            text = hdu.cards.card(key)[9:30].strip()
+            raise SetAsideError("bad_header", f"{key} is {text!r}: the pixels cannot be scaled", hdu.index)
 
 
 def _axis(cards: Cards, number: int, ctype: str, length: int) -> _Axis:

@@ -13,7 +13,9 @@ from functools import lru_cache
 from typing import NamedTuple
 
 import numpy as np
+from numpy.typing import NDArray
 
+from hindlight.celestial import LARGEST_DEG
 from hindlight.facts import NAN, Cards
 from hindlight.lightcurve import FloatArray
 from hindlight.sky import Projection, projection
@@ -22,6 +24,9 @@ from hindlight.systems import BadWcsError, NoCelestialError, System, system_of, 
 ACROSS = np.array([0.0, -0.5, 0.0, 0.5, 0.5, 0.5, 0.0, -0.5, -0.5])  # the middle, then round from a corner
 UP = np.array([0.0, -0.5, -0.5, -0.5, 0.0, 0.5, 0.5, 0.5, 0.0])
 GRID = 33
+SMALLEST = (
+    1e-3  # of the extent that pixels and scale give: an image that is smaller on the sky is far off its projection
+)
 
 # Angle from the reference point at a radius in the plane of projection, both in radians (Calabretta & Greisen 2002,
 # A&A 395, 1077, 5.1).
@@ -90,12 +95,24 @@ def outlines(images: Sequence[Image]) -> list[Outline | NoCelestialError | BadWc
             groups.setdefault(plain[:3], []).append(i)
             numbers[i] = (*plain.numbers, image.width, image.height)
     for (code, system, assumed), rows in groups.items():
-        points = _zenithal(code, system, np.array([numbers[i] for i in rows]))
-        for i, own in zip(rows, points, strict=True):
-            if math.isfinite(own.sum()):
-                m11, m12, m21, m22 = numbers[i][4:8]
-                found[i] = Outline(own, abs(m11 * m22 - m12 * m21) ** 0.5 * 3600, NAN, assumed)
+        given = np.array([numbers[i] for i in rows])
+        points = _zenithal(code, system, given)
+        scale = np.sqrt(np.abs(given[:, 4] * given[:, 7] - given[:, 5] * given[:, 6])) * 3600
+        usable = _has_extent(points, scale, np.hypot(given[:, 8], given[:, 9]))
+        for i, own, size, usual in zip(rows, points, scale.tolist(), usable, strict=True):
+            if usual:
+                found[i] = Outline(own, size, NAN, assumed)
     return [_one(image) if own is None else own for image, own in zip(images, found, strict=True)]
+
+
+def _has_extent(points: FloatArray, scale: FloatArray, diagonal: FloatArray) -> NDArray[np.bool_]:
+    """Whether the points (n, 9, 2) of images lie apart on the sky, for scales in arcsec and diagonals in pixels.
+
+    False where any of them is no place on the sky.
+    """
+    vectors = unit_vectors(points[..., 0], points[..., 1])
+    chord = np.sqrt(((vectors[:, 1:] - vectors[:, :1]) ** 2).sum(axis=-1)).max(axis=1)
+    return np.asarray(chord > SMALLEST * np.radians(scale / 3600) * diagonal / 2)
 
 
 # --- plain zenithal images, together
@@ -109,7 +126,9 @@ def _plain(cards: Cards) -> _Plain | None:
     matrix = _matrix(cards)
     numbers = (*(cards.number(key) for key in ("CRVAL1", "CRVAL2", "CRPIX1", "CRPIX2")), *matrix)
     determinant = numbers[4] * numbers[7] - numbers[5] * numbers[6]
-    if not (math.isfinite(sum(numbers)) and determinant != 0.0 and abs(numbers[1]) < 90.0):
+    if not (math.isfinite(sum(numbers)) and determinant != 0.0 and math.isfinite(determinant)):
+        return None
+    if not (abs(numbers[0]) <= LARGEST_DEG[0] and abs(numbers[1]) < LARGEST_DEG[1]):
         return None
     if not {cards.text("CUNIT1"), cards.text("CUNIT2")} <= {"", "deg"} or cards.get("LONPOLE") not in (
         None,
@@ -153,9 +172,9 @@ def _zenithal(code: str, system: System, numbers: FloatArray) -> FloatArray:
     lon, lat, x0, y0, m11, m12, m21, m22, width, height = numbers.T[:, :, None]
     dx = (width + 1) / 2 + width * ACROSS - x0
     dy = (height + 1) / 2 + height * UP - y0
-    x, y = np.radians(m11 * dx + m12 * dy), np.radians(m21 * dx + m22 * dy)
-    radius = np.hypot(x, y)
-    with np.errstate(invalid="ignore"):  # points off the projection become NaN
+    with np.errstate(invalid="ignore", over="ignore"):  # points off the projection become NaN
+        x, y = np.radians(m11 * dx + m12 * dy), np.radians(m21 * dx + m22 * dy)
+        radius = np.hypot(x, y)
         angle = ZENITHAL[code](radius)
     stretch = np.sin(angle) / np.where(radius > 0.0, radius, 1.0)
     d = np.radians(lat)
@@ -191,6 +210,9 @@ def outline(found: Projection, width: int, height: int, mjd: float | None) -> Ou
     if not np.isfinite(points[0]).all():
         raise BadWcsError("the middle of the image is no place on the sky")
     radius = NAN if np.isfinite(points).all() else _visible_radius(found, width, height, date, points[0])
+    diagonal = np.array([math.hypot(width, height)])
+    if radius != radius and not _has_extent(points[None], np.array([found.pixel_scale_arcsec]), diagonal)[0]:
+        raise BadWcsError("the image is so far from its reference pixel that it shrinks to a point of the sky")
     return Outline(points, found.pixel_scale_arcsec, radius, found.system_assumed)
 
 

@@ -51,17 +51,21 @@ REASONS = {
     "no_image": "no HDU of the file holds an image",
     "no_wcs": "the image has no celestial coordinates",
     "bad_wcs": "the celestial coordinates are unusable",
+    "too_many_planes": "the cube has more planes than the limit in the settings",
     "unknown_axis": "an axis longer than one is neither celestial nor time, frequency or Stokes",
     "no_dialect": "no dialect recognises the header",
     "bad_pixels": "the pixels could not be read when the frame was measured",
     "not_measured": "an estimator plugin failed on the frame",
     "vanished": "the file was there when the run began and is gone",
-    "changed": "the file has changed since it was measured",
+    "changed": "the file has changed since it was read or measured",
 }
 
 ASSUMPTIONS = {
     "geocentre": "no site in the header or settings: the Earth's centre was used, times are uncertain by 21 ms",
     "no_clock": "no time of day: fluxes are measured, timing is refused",
+    "implausible_date": "a date before 1850 or after 2100, or an end before its start: that date was not used",
+    "implausible_exposure": "an exposure above 100 days, or negative: it was taken as unknown",
+    "repeated_keyword": "a keyword stands more than once with different values: the first one was taken",
     "no_exposure": "no exposure time: the stated time was taken for its middle",
     "start_assumed": "the header does not say what its date refers to: taken as the start of the exposure",
     "scale_assumed": "no time scale in the header: UTC was taken",

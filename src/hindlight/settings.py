@@ -45,6 +45,7 @@ class Inventory:
     bmaj_in_arcsec: bool = setting(
         False, "whether BMAJ and BMIN that are too wide in degrees but not in arcsec are read as arcsec"
     )
+    planes_limit: int = setting(100_000, "a cube of more planes than this is set aside", minimum=1)
 
 
 @dataclass(frozen=True)

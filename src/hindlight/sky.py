@@ -18,7 +18,7 @@ from typing import Any, Protocol
 
 import numpy as np
 from astropy.io import fits
-from astropy.wcs import WCS, NoConvergence, WcsError, Wcsprm
+from astropy.wcs import WCS, NoConvergence, Wcsprm
 
 from hindlight.celestial import Celestial, find_celestial, two_axes
 from hindlight.facts import NAN, Cards
@@ -31,6 +31,7 @@ __all__ = ["BadWcsError", "NoCelestialError", "Projection", "System", "beam_shap
 LEAN_CODES = {"SIN", "TAN", "ARC", "ZEA", "STG", "CAR", "CEA", "MER", "SFL", "AIT", "MOL", "NCP", "GLS"}
 LEGACY_CODES = {"NCP", "GLS"}
 TURNING_CODES = {"CAR", "CEA", "MER"}  # 360 degrees of native longitude are one constant step of pixels
+MOST = {"WCSAXES": 99, "A_ORDER": 9, "B_ORDER": 9, "AP_ORDER": 9, "BP_ORDER": 9}  # more would only fill the memory
 ROUND_TRIP_PIXELS = 0.01  # an inverted distortion that comes back further off than this has not converged
 
 _PLAIN = re.compile(
@@ -78,7 +79,8 @@ class Projection:
         """
         lon, lat = from_icrs(np.asarray(ra, float), np.asarray(dec, float), self.system, mjd)
         world = np.column_stack((lat, lon) if self.swapped else (lon, lat))
-        pixel = self.engine.to_pixel(world) if len(world) else world
+        with _as_bad_wcs():
+            pixel = self.engine.to_pixel(world) if len(world) else world
         return np.ascontiguousarray(pixel[:, 0]), np.ascontiguousarray(pixel[:, 1])
 
     def pixel_to_icrs(self, x: FloatArray, y: FloatArray, mjd: float = NAN) -> tuple[FloatArray, FloatArray]:
@@ -107,7 +109,8 @@ class Projection:
 
     def _own(self, pixel: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Longitude and latitude in the header's own system of pixels (n, 2)."""
-        world = self.engine.to_world(pixel) if len(pixel) else pixel
+        with _as_bad_wcs():
+            world = self.engine.to_world(pixel) if len(pixel) else pixel
         first, second = (1, 0) if self.swapped else (0, 1)
         return world[:, first], world[:, second]
 
@@ -119,11 +122,12 @@ def projection(cards: Cards, path: str = "") -> Projection:
     `NoCelestialError` or `BadWcsError` with a sentence.
     """
     kinds = {key: kind for key in cards if (kind := _kind(key))}
-    if "odd" not in kinds.values():
-        lean = _lean("".join([cards.card(key) for key in kinds]))
-        if lean is not None:
-            return lean
-    return _full(cards.raw, path if _has_tables(cards) else "")
+    with _as_bad_wcs():
+        if "odd" not in kinds.values():
+            lean = _lean("".join([cards.card(key) for key in kinds]))
+            if lean is not None:
+                return lean
+        return _full(cards.raw, path if _has_tables(cards) else "")
 
 
 def beam_shape(major: float, minor: float, angle: float, jacobian: FloatArray) -> BeamShape:
@@ -165,15 +169,16 @@ def _lean(key: str) -> Projection | None:
     if found.code not in LEAN_CODES or found.suffix or odd_unit or (found.code == "TAN" and has_pv):
         return None
     text = two_axes(cards, found.axes)
-    with _as_bad_wcs():
+    with warnings.catch_warnings():
+        warnings.simplefilter("error")  # wcslib leaves a card out with a warning, and takes a default in its place
         prm = Wcsprm(header=text.encode("latin-1"), relax=True)
-        if found.code in LEGACY_CODES:
-            prm.fix()  # they become SIN and SFL
-        prm.set()
-        turn = None
-        if found.code in TURNING_CODES:
-            turn = _turn(prm, found.swapped)
-            prm.bounds_check(False, True)  # else pixels over 180 degrees from the reference value have no sky
+    if found.code in LEGACY_CODES:
+        prm.fix()  # they become SIN and SFL
+    prm.set()
+    turn = None
+    if found.code in TURNING_CODES:
+        turn = _turn(prm, found.swapped)
+        prm.bounds_check(False, True)  # else pixels over 180 degrees from the reference value have no sky
     return _finished(found, _WcslibEngine(prm, turn, found.reference))
 
 
@@ -189,12 +194,18 @@ def _full(raw: bytes, path: str) -> Projection:
         raise BadWcsError(
             "the distortion is a look-up table in another HDU, and there is no local file to read it from"
         )
-    with warnings.catch_warnings(), ExitStack() as stack, _as_bad_wcs():
+    for key, most in MOST.items():
+        if cards.number(key) > most:
+            raise BadWcsError(f"{key} is {cards.number(key):g}, more than {most}")
+    with warnings.catch_warnings(), ExitStack() as stack:
         warnings.simplefilter("ignore")  # FITSFixedWarning and card warnings: what cannot be used raises below
         hdus = stack.enter_context(fits.open(path)) if tables else None
         header = fits.Header.fromstring(raw.decode("latin-1"))
-        if "A_ORDER" in header and not found.suffix:
-            for i in found.axes:  # astropy applies such coefficients too, but complains on standard error
+        for i in found.axes if "A_ORDER" in header else ():
+            suffix = cards.text(f"CTYPE{i}")[8:]
+            if suffix not in ("", "-SIP"):
+                raise BadWcsError(f"CTYPE{i} ends in {suffix!r}, and there are SIP coefficients")
+            if not suffix:  # astropy applies such coefficients too, but complains on standard error
                 header[f"CTYPE{i}"] = cards.text(f"CTYPE{i}") + "-SIP"
         wcs = WCS(header, fobj=hdus).celestial
         wcs.wcs.set()
@@ -226,9 +237,10 @@ class _as_bad_wcs:  # noqa: N801 - a context manager, written like a function wh
         return None
 
     def __exit__(self, kind: object, error: BaseException | None, trace: object) -> None:
-        if isinstance(error, WcsError | ValueError | KeyError | TypeError | AssertionError | MemoryError):
+        if isinstance(error, Exception) and not isinstance(error, BadWcsError | NoCelestialError):
             lines = [line for line in str(error).splitlines() if line and not line.startswith("ERROR")]
-            raise BadWcsError(f"wcslib refuses the coordinates: {(lines or [str(error)])[-1].rstrip('.')}") from error
+            said = " ".join(lines) if isinstance(error, Warning) else (lines or [str(error)])[-1]
+            raise BadWcsError(f"wcslib refuses the coordinates: {said.rstrip('.')}") from error
 
 
 # --- the two engines

@@ -6,7 +6,7 @@ from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
 
-from hindlight import archive, host
+from hindlight import archive, files, host
 from hindlight.channels import assign
 from hindlight.errors import NothingToDoError
 from hindlight.plan import empty
@@ -24,7 +24,9 @@ def inventory(
     loaded = host.load(host.spec_from(settings, plugins))
     listed = read_targets(targets) if targets is not None else None
     watcher.stage("reading headers", 0)
-    found = archive.walk(archives, loaded.dialects, settings, None, watcher.step)
+    found = archive.walk(
+        [files.path_text(folder) for folder in archives], loaded.dialects, settings, None, watcher.step
+    )
     if len(found.frames["path"]) == 0 and not found.rejects:
         raise NothingToDoError(
             f"archive {', '.join(archives)}: no FITS file found; give a folder that holds .fits, .fit or .fts files"

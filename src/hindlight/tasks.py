@@ -21,7 +21,9 @@ from hindlight.candidates import ChannelView, Described, Examined, View, describ
 from hindlight.channels import channels_of
 from hindlight.comparisons import Located
 from hindlight.errors import HindlightError
+from hindlight.facts import visible
 from hindlight.fence import Fault, blank, call, checked, one_line
+from hindlight.files import check_unchanged, local_path
 from hindlight.headers import SetAsideError
 from hindlight.lightcurve import Channel, FloatArray, IntArray, LightCurve
 from hindlight.plan import BrightSources
@@ -31,7 +33,7 @@ from hindlight.ranking import Thresholds
 from hindlight.schema import MEASUREMENTS, UNUSABLE
 from hindlight.settings import Settings
 from hindlight.store import Columns, Piece, RunFolder
-from hindlight.systems import unit_vectors
+from hindlight.systems import BadWcsError, NoCelestialError, unit_vectors
 
 JULIAN_YEAR_S = 31557600.0
 MOST_ANCHORS = 100  # comparisons of a frame that tell its shift
@@ -75,7 +77,7 @@ def frame_facts(frames: Columns, row: int) -> photometry.FrameToMeasure:
     """What photometry needs to know of a frame, from its row in the frame table."""
     value = {name: values[row] for name, values in frames.items()}
     return photometry.FrameToMeasure(
-        path=str(Path(value["archive"]) / value["path"]), hdu=int(value["hdu"]), plane=int(value["plane"]),
+        path=local_path(str(value["archive"]), str(value["path"])), hdu=int(value["hdu"]), plane=int(value["plane"]),
         mjd=float(value["middle_mjd_tdb"]), beam_major=float(value["beam_major"]),
         beam_minor=float(value["beam_minor"]), beam_angle=float(value["beam_angle"]), unit=str(value["unit"]),
         electrons_per_unit=float(value["electrons_per_unit"]), saturation=float(value["saturation"]),
@@ -114,9 +116,12 @@ def _reject(frames: Columns, row: int, error: BaseException) -> dict[str, Any]:
     """A row of the rejects for a frame that could not be measured."""
     if isinstance(error, SetAsideError):
         reason, detail = error.reason, error.detail
+    elif isinstance(error, BadWcsError | NoCelestialError):
+        reason, detail = "bad_wcs", str(error)
     else:
         known = isinstance(error, OSError | ValueError)
-        reason, detail = "bad_pixels" if known else "not_measured", f"{type(error).__name__}: {one_line(str(error))}"
+        reason, detail = "bad_pixels" if known else "not_measured", f"{type(error).__name__}: {error}"
+    detail = visible(one_line(detail))
     place = {name: int(frames[name][row]) for name in ("hdu", "plane")}
     texts = {name: str(frames[name][row]) for name in ("path", "archive")}
     return {**texts, **place, "reason": reason, "detail": detail}
@@ -152,7 +157,10 @@ def _measure_frame(
     estimator = photometry.choose_estimator(estimators, facts.unit, wanted, facts.beam_major > 0)
     known = _near(frames, row, anchors["vectors"])[:MOST_ANCHORS]
     sources = anchors["ra"][known], anchors["dec"][known]
+    listed = int(frames["size"][row]), int(frames["modified_ns"][row])
+    check_unchanged(facts.path, *listed)
     found = photometry.measure_frame(facts, ra, dec, estimator, order.settings, sources)
+    check_unchanged(facts.path, *listed)  # nor while it was read
     inside = near[found["index"]]
     n = len(inside)
     shift = 0.0 if frames["barycentric"][row] else clock.roemer(observatory, vectors[inside])
@@ -176,7 +184,7 @@ def _concatenated(parts: Sequence[Columns]) -> Columns:
 
 
 def find_bright(order: Order, frame: int) -> BrightSources:
-    """Bright sources in one reference frame; none where its pixels cannot be read."""
+    """Bright sources in one reference frame; none where its pixels cannot be read, which measuring it will say."""
     tables = book(order.run, order.version)
     row = tables.row_of_frame[frame]
     settings = order.settings
@@ -184,7 +192,7 @@ def find_bright(order: Order, frame: int) -> BrightSources:
         ra, dec, snr, beam = photometry.bright_sources(
             frame_facts(tables.frames, row), settings.controls.bright_snr, settings
         )
-    except (SetAsideError, OSError, ValueError):
+    except Exception:  # noqa: BLE001 - whatever is wrong with a frame, the run goes on
         ra = dec = snr = np.empty(0)
         beam = 0.0
     return BrightSources(ra, dec, snr, np.full(len(ra), beam))
