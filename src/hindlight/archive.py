@@ -9,6 +9,7 @@ from __future__ import annotations
 import hashlib
 import os
 from collections.abc import Callable, Iterator, Mapping, Sequence
+from dataclasses import dataclass, replace
 from functools import lru_cache
 from itertools import islice
 from typing import Any, NamedTuple
@@ -17,14 +18,16 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hindlight import clock, footprints
+from hindlight.companions import sort_out
 from hindlight.facts import NAN, FrameFacts, Moment
 from hindlight.files import FileEntry, list_files, open_source
 from hindlight.headers import Hdu, Plane, SetAsideError, facts_of, planes, read_hdus
+from hindlight.knowledge import Knowledge
 from hindlight.lightcurve import FloatArray
 from hindlight.outlines import Image, Outline, outlines
 from hindlight.plugin import Dialect
 from hindlight.schema import ASSUMPTIONS, FRAMES
-from hindlight.settings import Settings
+from hindlight.settings import COMPANION_KINDS, Settings
 from hindlight.systems import NoCelestialError
 
 FILES_AT_ONCE = 512
@@ -45,7 +48,8 @@ class WalkResult(NamedTuple):
     rejects
         Rows of `schema.REJECTS`, of new and changed files only.
     present, unchanged
-        (archive, path) of every file that is there, and of those that were known and have not changed.
+        (archive, path) of every file that is there and no companion of another, and of those that were known and have
+        not changed.
     """
 
     frames: Columns
@@ -63,6 +67,18 @@ class _Found(NamedTuple):
     plane: Plane
     dialect: str
     facts: FrameFacts
+    companions: Mapping[str, str]  # kind -> path
+
+
+@dataclass(frozen=True)
+class _Reader:
+    """What every file is read with, and where what it holds is put."""
+
+    dialects: Sequence[Dialect]
+    knowledge: Knowledge
+    unpacked_limit: int
+    found: list[_Found]
+    rejects: list[Row]
 
 
 def walk(
@@ -81,18 +97,28 @@ def walk(
     """
     before = _known_files(known or {})
     visited = {(place.st_dev, place.st_ino) for folder in skip if (place := _place(folder)) is not None}
-    files = [(archive, entry) for archive in archives for entry in list_files(archive, visited)]
+    folders = {
+        archive: sort_out(list_files(archive, visited), settings.companions) for archive in dict.fromkeys(archives)
+    }
+    files = [(archive, entry) for archive, folder in folders.items() for entry in folder.images]
     present = {(archive, entry.path) for archive, entry in files}
-    new = [f for f in files if before.get((f[0], f[1].path)) != (f[1].size, f[1].modified_ns)]
+    companions = {(a, path): own for a, folder in folders.items() for path, own in folder.companions.items()}
+    new = [f for f in files if before.get((f[0], f[1].path)) != _identity(f[1], companions.get((f[0], f[1].path), {}))]
     step = progress or (lambda _n: None)
     step(len(files) - len(new))
     parts: list[Columns] = []
-    rejects: list[Row] = []
+    rejects = [
+        _reject(archive, entry, SetAsideError("companion", sentence))
+        for archive, folder in folders.items()
+        for entry, sentence in folder.aside
+    ]
+    knowledge = Knowledge(settings.frames, settings.sites)
     remaining = iter(sorted(new, key=lambda f: (f[0], f[1].path)))
     while piece := list(islice(remaining, FILES_AT_ONCE)):
         found: list[_Found] = []
+        reader = _Reader(dialects, knowledge, settings.inventory.unpacked_limit_mb * MEGABYTE, found, rejects)
         for archive, entry in piece:
-            _read_file(archive, entry, dialects, settings, found, rejects)
+            _read_file(archive, entry, companions.get((archive, entry.path), {}), reader)
         parts.append(_columns(found, settings, rejects))
         step(len(piece))
     rejects.sort(key=lambda row: (row["path"], row["hdu"], row["plane"], row["archive"]))
@@ -107,11 +133,17 @@ def _place(folder: str) -> os.stat_result | None:
         return None
 
 
-def _known_files(known: Mapping[str, Any]) -> dict[tuple[str, str], tuple[int, int]]:
+def _known_files(known: Mapping[str, Any]) -> dict[tuple[str, str], tuple[Any, ...]]:
+    """What tells whether the files of some frames have changed; see `_identity`."""
     if not known:
         return {}
-    rows = zip(known["archive"], known["path"], known["size"], known["modified_ns"], known["state"], strict=True)
-    return {(a, p): (int(size), int(time)) for a, p, size, time, state in rows if state != "void"}
+    names = ("size", "modified_ns", *(f"{kind}_file" for kind in COMPANION_KINDS))
+    rows = zip(known["archive"], known["path"], known["state"], *(known[name] for name in names), strict=True)
+    return {(a, p): (int(size), int(time), *own) for a, p, state, size, time, *own in rows if state != "void"}
+
+
+def _identity(entry: FileEntry, companions: Mapping[str, str]) -> tuple[Any, ...]:
+    return entry.size, entry.modified_ns, *(companions.get(kind, "") for kind in COMPANION_KINDS)
 
 
 def _joined(parts: Sequence[Columns]) -> Columns:
@@ -126,44 +158,49 @@ def _joined(parts: Sequence[Columns]) -> Columns:
 # --- one file
 
 
-def _read_file(
-    archive: str,
-    entry: FileEntry,
-    dialects: Sequence[Dialect],
-    settings: Settings,
-    found: list[_Found],
-    rejects: list[Row],
-) -> None:
+def _read_file(archive: str, entry: FileEntry, companions: Mapping[str, str], reader: _Reader) -> None:
     """Add the frames of a file and what of it is set aside."""
     images, last = 0, -1
     try:
         if entry.fault:
             raise SetAsideError("unreadable", entry.fault)
-        limit = settings.inventory.unpacked_limit_mb * MEGABYTE
-        with open_source(os.path.join(archive, entry.path), limit) as source:
+        with open_source(os.path.join(archive, entry.path), reader.unpacked_limit) as source:
             for hdu in read_hdus(source):
                 last = hdu.index
                 if hdu.is_image:
                     images += 1
-                    found.extend(_frames_of(archive, entry, hdu, dialects, rejects))
+                    reader.found.extend(_frames_of(archive, entry, hdu, companions, reader))
         if not images:
             raise SetAsideError("no_image", f"none of its {last + 1} HDUs holds an image")
     except SetAsideError as error:
         # A gzip stream that breaks after some HDUs cannot know which one it was in.
-        rejects.append(_reject(archive, entry, error, last + 1 if last >= 0 and images else error.hdu))
+        reader.rejects.append(_reject(archive, entry, error, last + 1 if last >= 0 and images else error.hdu))
     except OSError as error:
-        rejects.append(_reject(archive, entry, SetAsideError("unreadable", f"the system says: {error.strerror}")))
+        reason = SetAsideError("unreadable", f"the system says: {error.strerror}")
+        reader.rejects.append(_reject(archive, entry, reason))
 
 
 def _frames_of(
-    archive: str, entry: FileEntry, hdu: Hdu, dialects: Sequence[Dialect], rejects: list[Row]
+    archive: str, entry: FileEntry, hdu: Hdu, companions: Mapping[str, str], reader: _Reader
 ) -> Iterator[_Found]:
     try:
         for plane in planes(hdu):
-            read = _facts(hdu, plane, dialects)
-            yield _Found(archive, entry, hdu, plane, *read)
+            dialect, facts = _facts(hdu, plane, reader.dialects)
+            if reader.knowledge:
+                facts = reader.knowledge.applied(hdu.cards, entry.path, facts)
+            if "primary_beam" in companions:
+                facts = _with_gains(facts)
+            yield _Found(archive, entry, hdu, plane, dialect, facts, companions)
     except SetAsideError as error:
-        rejects.append(_reject(archive, entry, error, hdu.index))
+        reader.rejects.append(_reject(archive, entry, error, hdu.index))
+
+
+def _with_gains(facts: FrameFacts) -> FrameFacts:
+    """The facts of a frame that has a companion with the primary beam's gain: uncorrected, unless something says not."""
+    if facts.primary_beam == "corrected":
+        return replace(facts, assumptions=(*facts.assumptions, "gains_not_applied"))
+    words = tuple(w for w in facts.assumptions if w not in ("primary_beam_unknown", "primary_beam_apparent"))
+    return replace(facts, primary_beam="uncorrected", assumptions=words)
 
 
 def _facts(hdu: Hdu, plane: Plane, dialects: Sequence[Dialect]) -> tuple[str, FrameFacts]:
@@ -206,6 +243,7 @@ def _plain(found: Sequence[_Found]) -> Columns:
     """What only has to be copied."""
     facts = [f.facts for f in found]
     numbers = ("frequency_hz", "beam_major", "beam_minor", "beam_angle", "depth", "saturation", "electrons_per_unit")
+    numbers += ("primary_beam_fwhm_deg", "clock_error_s")
     columns: Columns = {name: np.array([getattr(f, name) for f in facts], dtype=float) for name in numbers}
     columns |= {
         name: _text([getattr(f, name) for f in facts])
@@ -216,6 +254,8 @@ def _plain(found: Sequence[_Found]) -> Columns:
     columns["barycentric"] = np.array([f.barycentric for f in facts], dtype=bool)
     columns["archive"] = _text([f.archive for f in found])
     columns["path"] = _text([f.entry.path for f in found])
+    for kind in COMPANION_KINDS:
+        columns[f"{kind}_file"] = _text([f.companions.get(kind, "") for f in found])
     columns["dialect"] = _text([f.dialect for f in found])
     columns["digest"] = _text([_digest(f.hdu, f.entry.size) for f in found])
     integers = {
@@ -254,6 +294,8 @@ def _times(found: Sequence[_Found], settings: Settings, words: Sequence[list[str
     span = np.where(end >= start, end - start, np.array([f.span_s for f in facts], dtype=float))
     stated = np.isfinite(exposure)
     exposure, span = np.where(stated, exposure, span), np.where(np.isfinite(span), span, exposure)
+    fraction = np.array([f.good_time_fraction for f in facts], dtype=float)
+    exposure, stated = np.where(np.isfinite(fraction), fraction * span, exposure), stated | np.isfinite(fraction)
     half = np.nan_to_num(span) / 2
     middle = _first(middle, start + half, end - half)
     clocked = np.isfinite(middle)

@@ -27,7 +27,7 @@ from hindlight.plugin import Candidate, Cutout, Finding, PeriodResult
 from hindlight.positions import moved
 from hindlight.ranking import Thresholds
 from hindlight.schema import MEASUREMENTS
-from hindlight.settings import Settings
+from hindlight.settings import COMPANION_KINDS, Settings
 from hindlight.store import Columns, Piece, RunFolder
 from hindlight.systems import unit_vectors
 
@@ -70,11 +70,15 @@ def book(run: str, version: str) -> Book:
 def frame_facts(frames: Columns, row: int) -> photometry.FrameToMeasure:
     """What photometry needs to know of a frame, from its row in the frame table."""
     value = {name: values[row] for name, values in frames.items()}
+    named = {kind: value[f"{kind}_file"] for kind in COMPANION_KINDS if value[f"{kind}_file"]}
+    companions = {kind: str(Path(value["archive"]) / path) for kind, path in named.items()}
     return photometry.FrameToMeasure(
         path=str(Path(value["archive"]) / value["path"]), hdu=int(value["hdu"]), plane=int(value["plane"]),
         mjd=float(value["middle_mjd_tdb"]), beam_major=float(value["beam_major"]),
         beam_minor=float(value["beam_minor"]), beam_angle=float(value["beam_angle"]), unit=str(value["unit"]),
         electrons_per_unit=float(value["electrons_per_unit"]), saturation=float(value["saturation"]),
+        primary_beam=str(value["primary_beam"]), primary_beam_fwhm_deg=float(value["primary_beam_fwhm_deg"]),
+        companions=companions,
     )  # fmt: skip
 
 
@@ -141,14 +145,13 @@ def _measure_frame(
     inside = near[found["index"]]
     n = len(inside)
     shift = 0.0 if frames["barycentric"][row] else clock.roemer(observatory, vectors[inside])
-    columns = {name: found[name] for name in ("x", "y", "flux", "flux_err", "background", "rms", "flags")}
+    columns = {name: found[name] for name in ("x", "y", "flux", "flux_err", "background", "rms", "gain", "flags")}
     columns["position"] = who["id"][inside]
     columns["frame"] = np.full(n, frames["id"][row])
     columns["channel"] = np.full(n, frames["channel"][row], object)
     columns["t_tdb_s"] = middle + shift * np.ones(n)
     columns["bjd_tdb"] = clock.bjd(columns["t_tdb_s"])
     columns["exposure_s"] = np.full(n, frames["exposure_s"][row])
-    columns["gain"] = np.ones(n)
     return columns
 
 
