@@ -162,7 +162,7 @@ def _site(value: Any) -> str | Vector:
 
 MATCH = {
     "path": Key("pattern of the file's path in the archive; * crosses folders", '"plates/*"', _glob),
-    "instrument": Key("pattern of the header's instrument, capitals or not", '"north*"', _glob),
+    "instrument": Key("pattern of the instrument's name, capitals or not", '"north*"', _glob),
     "header": Key("cards: a number, true or false, or a pattern of text", '{ OBSERVER = "J*" }', _header),
     "from": Key("the header's date is this or later", "1990-01-01", _date),
     "to": Key("the header's date is before this", "1995-01-01", _date),

@@ -67,6 +67,7 @@ class Knowledge:
         self._paths = [_Pattern.of(block.match["path"]) if "path" in block.match else None for block in blocks]
         self._dates = [_dates(block) for block in blocks]
         self._keywords = tuple(sorted({key for block in blocks for key in block.match.get("header", {})}))
+        self._renaming = {index for index, block in enumerate(blocks) if "instrument_name" in block.facts}
         self._by_header = lru_cache(REMEMBERED)(self._matching_header)
         self._given = lru_cache(REMEMBERED)(self._merged)
 
@@ -79,21 +80,31 @@ class Knowledge:
         Its assumptions lose the words that are no longer true and gain set_by_user, with facts and blocks.
         """
         texts = tuple(cards.card(key) for key in self._keywords)
+        matching = self._matching((facts.instrument,), texts, path, facts)
+        if self._renaming.intersection(matching):
+            name = self._given(matching)[0].get("instrument_name")
+            if name is not None and name[0] != facts.instrument:
+                matching = self._matching((facts.instrument, name[0]), texts, path, facts)
+        return self._with(facts, matching) if matching else facts
+
+    def _matching(
+        self, names: tuple[str, ...], texts: tuple[str, ...], path: str, facts: FrameFacts
+    ) -> tuple[int, ...]:
+        """The blocks that speak of a frame: `names` its instrument's in the header and, if another, by a block."""
         date = _date(facts)
-        matching = tuple(
+        return tuple(
             index
-            for index in self._by_header(facts.instrument, texts)
+            for index in self._by_header(names, texts)
             if ((here := self._paths[index]) is None or here(path)) and _within(date, self._dates[index])
         )
-        return self._with(facts, cards, matching) if matching else facts
 
-    def _matching_header(self, instrument: str, texts: tuple[str, ...]) -> tuple[int, ...]:
+    def _matching_header(self, names: tuple[str, ...], texts: tuple[str, ...]) -> tuple[int, ...]:
         """Blocks that instrument and cards leave open."""
         cards = dict(zip(self._keywords, texts, strict=True))
         return tuple(
             index
             for index, block in enumerate(self._blocks)
-            if fnmatch.fnmatchcase(instrument.lower(), block.match.get("instrument", "*").lower())
+            if any(fnmatch.fnmatchcase(name.lower(), block.match.get("instrument", "*").lower()) for name in names)
             and all(_card_is(cards[key], wanted) for key, wanted in block.match.get("header", {}).items())
         )
 
@@ -115,7 +126,7 @@ class Knowledge:
             return self._sites[value]
         return fold_unit(value) if key == "unit" else value
 
-    def _with(self, facts: FrameFacts, cards: Cards, matching: tuple[int, ...]) -> FrameFacts:
+    def _with(self, facts: FrameFacts, matching: tuple[int, ...]) -> FrameFacts:
         always, silent = self._given(matching)
         lacking = {key: entry for key, entry in silent.items() if _is_missing(key, facts)}
         given = _latest(lacking, always)
@@ -184,10 +195,12 @@ def _latest(first: Given, second: Given) -> Given:
 def _is_missing(key: str, facts: FrameFacts) -> bool:
     """Whether the header does not say this."""
     if key == "site":
-        return facts.site is None
+        return facts.site is None and not facts.barycentric
     if key == "primary_beam":
         return facts.primary_beam == "unknown"
-    name = {"instrument_name": "instrument", "beam_arcsec": "beam_major"}.get(key, key)
+    name = {
+        "instrument_name": "instrument", "beam_arcsec": "beam_major", "good_time_fraction": "exposure_s",
+    }.get(key, key)  # fmt: skip
     if key in ("time_scale", "date_means", "stokes"):
         return any(word in facts.assumptions for word in OBSOLETE[key])
     value = getattr(facts, name, math.nan)
