@@ -13,11 +13,11 @@ SOURCE = Path(hindlight.__file__).parent
 PLUGINS = Path(hindlight_plugins.__file__).parent
 
 ORDER = [
-    "errors", "schema", "facts", "blocks", "settings", "lightcurve", "plugin", "hookspecs", "tables", "host", "fence", "clock",
-    "systems", "celestial", "sky", "headers", "knowledge", "files", "companions", "channels", "outlines", "footprints", "archive", "summary",
-    "positions", "pixels", "background", "detection", "photometry", "ensemble", "store", "judge", "calibrate", "ranking",
-    "timing", "candidates", "plan", "tasks", "conclude", "outcome", "crew", "record", "verdicts", "runner", "survey",
-    "export", "demo", "testing", "cli", "__main__",
+    "errors", "schema", "facts", "blocks", "settings", "lightcurve", "plugin", "hookspecs", "tables", "host", "fence",
+    "clock", "systems", "celestial", "sky", "headers", "knowledge", "files", "companions", "channels", "outlines",
+    "footprints", "archive", "summary", "positions", "pixels", "background", "detection", "photometry", "ensemble",
+    "store", "judge", "calibrate", "ranking", "timing", "candidates", "plan", "tasks", "conclude", "outcome", "crew",
+    "record", "verdicts", "runner", "survey", "export", "demo", "testing", "cli", "__main__",
 ]  # fmt: skip
 PLUGINS_MAY_IMPORT = {"hindlight", "numpy", "scipy", "astropy", "photutils", "nifty_ls"}
 

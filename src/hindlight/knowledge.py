@@ -11,9 +11,9 @@ import glob
 import math
 import re
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from functools import lru_cache
-from typing import Any
+from typing import Any, NamedTuple
 
 from hindlight.blocks import FrameBlock, Vector
 from hindlight.facts import Cards, FrameFacts, Moment, parse_value
@@ -40,22 +40,27 @@ RADIO_UNITS = ("/beam", "Jy/pixel", "Jy/sr")
 Given = dict[str, tuple[Any, FrameBlock]]
 
 
-@dataclass(frozen=True)
-class _Pattern:
-    """A glob whose fixed beginning and end are compared before the rest."""
+Span = tuple[tuple[int, float], tuple[int, float]]
 
-    start: str
-    end: str
-    matches: Callable[[str], object]
+
+class _Test(NamedTuple):
+    """What a block asks of path and date: a piece of text that the path must hold, which is quick to see, then the whole
+
+    pattern, and the span of dates; None where it does not ask.
+    """
+
+    piece: str
+    matches: Callable[[str], object] | None
+    span: Span | None
 
     @classmethod
-    def of(cls, pattern: str) -> _Pattern:
-        start, _, end = re.sub(r"[*?[]", "\0", pattern, count=1).partition("\0")
-        rest = re.split(r"[*?\]]", end)[-1] if start != pattern else ""
-        return cls(start, rest, re.compile(fnmatch.translate(pattern)).match)
-
-    def __call__(self, text: str) -> bool:
-        return text.startswith(self.start) and text.endswith(self.end) and self.matches(text) is not None
+    def of(cls, block: FrameBlock) -> _Test:
+        """The test of one block."""
+        if "path" not in block.match:
+            return cls("", None, _span(block))
+        pattern = block.match["path"]
+        pieces = re.split(r"\[!?\]?[^\]]*\]|[*?[]", pattern)
+        return cls(max(pieces, key=len), re.compile(fnmatch.translate(pattern)).match, _span(block))
 
 
 class Knowledge:
@@ -64,8 +69,7 @@ class Knowledge:
     def __init__(self, blocks: Sequence[FrameBlock], sites: Mapping[str, Vector]) -> None:
         """`sites` are the places that blocks may name."""
         self._blocks, self._sites = tuple(blocks), dict(sites)
-        self._paths = [_Pattern.of(block.match["path"]) if "path" in block.match else None for block in blocks]
-        self._dates = [_dates(block) for block in blocks]
+        self._tests = [_Test.of(block) for block in blocks]
         self._keywords = tuple(sorted({key for block in blocks for key in block.match.get("header", {})}))
         self._renaming = {index for index, block in enumerate(blocks) if "instrument_name" in block.facts}
         self._by_header = lru_cache(REMEMBERED)(self._matching_header)
@@ -92,11 +96,12 @@ class Knowledge:
     ) -> tuple[int, ...]:
         """The blocks that speak of a frame: `names` its instrument's in the header and, if another, by a block."""
         date = _date(facts)
-        return tuple(
-            index
-            for index in self._by_header(names, texts)
-            if ((here := self._paths[index]) is None or here(path)) and _within(date, self._dates[index])
-        )
+        found = []
+        for index in self._by_header(names, texts):
+            piece, matches, span = self._tests[index]
+            if piece in path and (matches is None or matches(path)) and (span is None or _within(date, span)):
+                found.append(index)
+        return tuple(found)
 
     def _matching_header(self, names: tuple[str, ...], texts: tuple[str, ...]) -> tuple[int, ...]:
         """Blocks that instrument and cards leave open."""
@@ -135,14 +140,14 @@ class Knowledge:
         changed = {key: value for key, (value, _) in given.items()}
         idle = {key for key in changed if _has_no_place(key, changed, facts)}
         used = {key: value for key, value in changed.items() if key not in idle}
-        known = _changed(facts, used)
+        new = _changes(facts, used)
         gone = {word for key in used for word in OBSOLETE.get(key, ())}
-        words = [word for word in known.assumptions if word not in gone]
-        words += _opened(known, words)
+        words = [word for word in facts.assumptions if word not in gone]
+        words += [word for word in _opened(facts, new) if word not in words]
         for word, keys in (("set_by_user", [k for k in given if k in used]), ("set_without_effect", sorted(idle))):
             if keys:
                 words.append(f"{word}: {_listed(keys, given)}")
-        return replace(known, assumptions=tuple(words))
+        return replace(facts, **{**new, "assumptions": tuple(words)})
 
 
 def block_for(instrument: str) -> dict[str, str]:
@@ -163,7 +168,7 @@ def _card_is(card: str, wanted: str | float | bool) -> bool:
     return isinstance(value, bool) == isinstance(wanted, bool) and not isinstance(value, str) and value == wanted
 
 
-def _dates(block: FrameBlock) -> tuple[tuple[int, float], tuple[int, float]] | None:
+def _span(block: FrameBlock) -> Span | None:
     """From when to when, as day and seconds; None for a block that does not say."""
     if "from" not in block.match and "to" not in block.match:
         return None
@@ -176,8 +181,8 @@ def _date(facts: FrameFacts) -> tuple[int, float] | None:
     return (moment.mjd, moment.seconds) if moment else None
 
 
-def _within(date: tuple[int, float] | None, bounds: tuple[tuple[int, float], tuple[int, float]] | None) -> bool:
-    return bounds is None or (date is not None and bounds[0] <= date < bounds[1])
+def _within(date: tuple[int, float] | None, span: Span) -> bool:
+    return date is not None and span[0] <= date < span[1]
 
 
 # --- facts
@@ -224,8 +229,8 @@ def _moments(facts: FrameFacts) -> dict[str, Moment]:
     return {name: moment for name, moment in named.items() if moment is not None}
 
 
-def _changed(facts: FrameFacts, given: Mapping[str, Any]) -> FrameFacts:
-    """The facts with some of them given."""
+def _changes(facts: FrameFacts, given: Mapping[str, Any]) -> dict[str, Any]:
+    """The fields of `FrameFacts` that change where these keys are given."""
     new: dict[str, Any] = {}
     moments = _moments(facts)
     if "date_means" in given:
@@ -246,18 +251,19 @@ def _changed(facts: FrameFacts, given: Mapping[str, Any]) -> FrameFacts:
         new["good_time_fraction"] = math.nan
         if facts.span_s != facts.span_s:
             new["span_s"] = given["exposure_s"] / given["good_time_fraction"]
-    return replace(facts, **new)
+    return new
 
 
-def _opened(facts: FrameFacts, words: Sequence[str]) -> list[str]:
-    """What is now open: a radio unit brings questions, and so does a primary beam without a width."""
-    wanted = []
-    if any(text in facts.unit for text in RADIO_UNITS):
-        wanted += ["primary_beam_unknown"] if facts.primary_beam == "unknown" else []
-        wanted += ["no_frequency"] if facts.frequency_hz != facts.frequency_hz else []
-    if facts.primary_beam == "uncorrected" and facts.primary_beam_fwhm_deg != facts.primary_beam_fwhm_deg:
-        wanted.append("primary_beam_apparent")
-    return [word for word in wanted if word not in words]
+def _opened(facts: FrameFacts, new: Mapping[str, Any]) -> list[str]:
+    """What is then open: a radio unit brings questions, and so does a primary beam without a width."""
+    state, unit = new.get("primary_beam", facts.primary_beam), new.get("unit", "")
+    words = []
+    if any(text in unit for text in RADIO_UNITS):
+        frequency = new.get("frequency_hz", facts.frequency_hz)
+        words += ["primary_beam_unknown"] if state == "unknown" else []
+        words += ["no_frequency"] if frequency != frequency else []
+    width = new.get("primary_beam_fwhm_deg", facts.primary_beam_fwhm_deg)
+    return [*words, "primary_beam_apparent"] if state == "uncorrected" and width != width else words
 
 
 def _listed(keys: Sequence[str], given: Given) -> str:
