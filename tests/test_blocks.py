@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 import tomllib
 from pathlib import Path
 from typing import Any
@@ -62,6 +63,16 @@ def test_what_is_printed_as_an_example_can_be_used() -> None:
     content = tomllib.loads("[[frames]]\n" + "\n".join(block))
     (read,) = read_blocks(content["frames"], {"north hill": (6.4e6, 0.0, 0.0)}, "test")
     assert set(read.facts) == set(FACTS)
+
+
+def test_the_example_of_the_readme_is_read() -> None:
+    """The settings that README.md shows are valid."""
+    text = (Path(__file__).parents[1] / "README.md").read_text(encoding="utf-8")
+    (shown,) = re.findall(r"```toml\n(.*?)```", text, re.DOTALL)
+    settings = settings_from(tomllib.loads(shown), "README.md")
+    assert (len(settings.frames), settings.companions.rms) == (2, "noise/{name}")
+    named = set(re.findall(r"`?\b([a-z_]+)\b", text.split("### Telling it")[1].split("### What a run holds")[0]))
+    assert {*MATCH, *FACTS, "where_missing"} <= named
 
 
 def test_a_run_cannot_change_blocks() -> None:

@@ -198,6 +198,7 @@ def test_an_instrument_is_matched_by_the_name_it_was_given(tmp_path: Path) -> No
         ({"date_means": "middle"}, {"DATE__BEG": "1988-03-17T06:00:00", "DATE__END": "1988-03-17T07:00:00"}),
         ({"clock_offset_s": 3}, {"DATE__OBS": "1988-03-17"}),
         ({"clock_error_s": 3}, {"DATE__OBS": None}),
+        ({"time_scale": "tt"}, {"DATE__OBS": "1988-03-17"}),
         ({"site": "hill"}, {"TREFPOS": "BARYCENTER"}),
         ({"primary_beam_fwhm_deg": 3}, {}),
     ],
@@ -222,6 +223,13 @@ def test_what_facts_leave_open_is_said(tmp_path: Path) -> None:
     assert "primary_beam_unknown" in words_of(row["assumptions"])
     _, words = one(tmp_path, {"primary_beam": "uncorrected"})
     assert set(words) == {"primary_beam_apparent", "set_by_user"}
+
+
+def test_a_width_is_taken_at_the_users_word(tmp_path: Path) -> None:
+    """A beam far below a pixel, which a header would not be believed, is used where a block gives it."""
+    assert one(tmp_path, BMAJ=1e-4, BMIN=1e-4)[1] == ["no_beam"]
+    row, words = one(tmp_path, {"beam_arcsec": 0.36}, BMAJ=1e-4, BMIN=1e-4)
+    assert (row["beam_major"], words) == (0.36, ["set_by_user"])
 
 
 def test_a_hundred_blocks_cost_little() -> None:

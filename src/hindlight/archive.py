@@ -7,6 +7,7 @@ A file that is broken never ends the walk: it becomes a row of the rejects. No p
 from __future__ import annotations
 
 import hashlib
+import math
 import os
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
@@ -188,19 +189,26 @@ def _frames_of(
             dialect, facts = _facts(hdu, plane, reader.dialects)
             if reader.knowledge:
                 facts = reader.knowledge.applied(hdu.cards, entry.path, facts)
-            if "primary_beam" in companions:
-                facts = _with_gains(facts)
+            facts = _with_gains(facts, "primary_beam" in companions)
             yield _Found(archive, entry, hdu, plane, dialect, facts, companions)
     except SetAsideError as error:
         reader.rejects.append(_reject(archive, entry, error, hdu.index))
 
 
-def _with_gains(facts: FrameFacts) -> FrameFacts:
-    """The facts of a frame that has a companion with the primary beam's gain: uncorrected, unless something says not."""
+def _with_gains(facts: FrameFacts, has_file: bool) -> FrameFacts:
+    """The facts of a frame with what follows from a companion that holds the primary beam's gain, or from there being none.
+
+    A frame that has one is uncorrected unless something says otherwise.
+    """
+    words = facts.assumptions
+    if not has_file:
+        if facts.primary_beam != "uncorrected" or math.isfinite(facts.primary_beam_fwhm_deg):
+            return facts
+        return replace(facts, assumptions=(*words, "primary_beam_apparent"))
     if facts.primary_beam == "corrected":
-        return replace(facts, assumptions=(*facts.assumptions, "gains_not_applied"))
-    words = tuple(w for w in facts.assumptions if w not in ("primary_beam_unknown", "primary_beam_apparent"))
-    return replace(facts, primary_beam="uncorrected", assumptions=words)
+        return replace(facts, assumptions=(*words, "gains_not_applied"))
+    known = tuple(word for word in words if word != "primary_beam_unknown")
+    return replace(facts, primary_beam="uncorrected", assumptions=known)
 
 
 def _facts(hdu: Hdu, plane: Plane, dialects: Sequence[Dialect]) -> tuple[str, FrameFacts]:
@@ -242,8 +250,10 @@ def _text(values: Sequence[str]) -> NDArray[Any]:
 def _plain(found: Sequence[_Found]) -> Columns:
     """What only has to be copied."""
     facts = [f.facts for f in found]
-    numbers = ("frequency_hz", "beam_major", "beam_minor", "beam_angle", "depth", "saturation", "electrons_per_unit")
-    numbers += ("primary_beam_fwhm_deg", "clock_error_s")
+    numbers = (
+        "frequency_hz", "beam_major", "beam_minor", "beam_angle", "depth", "saturation", "electrons_per_unit",
+        "primary_beam_fwhm_deg", "clock_error_s",
+    )  # fmt: skip
     columns: Columns = {name: np.array([getattr(f, name) for f in facts], dtype=float) for name in numbers}
     columns |= {
         name: _text([getattr(f, name) for f in facts])
@@ -382,6 +392,8 @@ def _beams(columns: Columns, settings: Settings, words: Sequence[list[str]]) -> 
     good = (ratio >= BEAM_PIXELS[0]) & (ratio <= BEAM_PIXELS[1])
     good &= (columns["beam_minor"] > 0) & (columns["beam_minor"] <= columns["beam_major"])
     for i in np.flatnonzero(~good).tolist():
+        if any(word.startswith("set_by_user") and "beam_arcsec" in word for word in words[i]):
+            continue  # taken at the user's word, as the widths in the settings are
         width = settings.photometry.fwhm_arcsec.get(columns["instrument"][i], NAN)
         words[i].append("no_beam" if np.isnan(width) else "beam_from_settings")
         columns["beam_major"][i] = columns["beam_minor"][i] = width

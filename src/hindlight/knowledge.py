@@ -219,7 +219,7 @@ def _has_no_place(key: str, given: Mapping[str, Any], facts: FrameFacts) -> bool
         return facts.barycentric
     if key == "date_means":
         return len(moments) != 1
-    if key in ("clock_offset_s", "clock_error_s"):
+    if key in ("time_scale", "clock_offset_s", "clock_error_s"):
         return not any(moment.has_clock for moment in moments.values())
     return key == "primary_beam_fwhm_deg" and given.get("primary_beam", facts.primary_beam) != "uncorrected"
 
@@ -255,15 +255,12 @@ def _changes(facts: FrameFacts, given: Mapping[str, Any]) -> dict[str, Any]:
 
 
 def _opened(facts: FrameFacts, new: Mapping[str, Any]) -> list[str]:
-    """What is then open: a radio unit brings questions, and so does a primary beam without a width."""
-    state, unit = new.get("primary_beam", facts.primary_beam), new.get("unit", "")
-    words = []
-    if any(text in unit for text in RADIO_UNITS):
-        frequency = new.get("frequency_hz", facts.frequency_hz)
-        words += ["primary_beam_unknown"] if state == "unknown" else []
-        words += ["no_frequency"] if frequency != frequency else []
-    width = new.get("primary_beam_fwhm_deg", facts.primary_beam_fwhm_deg)
-    return [*words, "primary_beam_apparent"] if state == "uncorrected" and width != width else words
+    """What a radio unit that is new leaves open."""
+    if not any(text in new.get("unit", "") for text in RADIO_UNITS):
+        return []
+    frequency = new.get("frequency_hz", facts.frequency_hz)
+    words = ["primary_beam_unknown"] if new.get("primary_beam", facts.primary_beam) == "unknown" else []
+    return [*words, "no_frequency"] if frequency != frequency else words
 
 
 def _listed(keys: Sequence[str], given: Given) -> str:
