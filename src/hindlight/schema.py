@@ -153,11 +153,20 @@ FRAMES = (
         "primary_beam_fwhm_deg", "FWHM of a Gaussian primary beam about the reference pixel, NaN for none", unit="deg"
     ),
     TableColumn("clock_error_s", "1-sigma error of the header's clock, NaN where not stated", unit="s"),
-    TableColumn("weight_file", "companion with weights, relative to the archive folder", dtype="str", ucd="meta.file"),
-    TableColumn("rms_file", "companion with the noise, relative to the archive folder", dtype="str", ucd="meta.file"),
-    TableColumn("mask_file", "companion with bad pixels, relative to the archive folder", dtype="str", ucd="meta.file"),
     TableColumn(
-        "primary_beam_file", "companion with gains, relative to the archive folder", dtype="str", ucd="meta.file"
+        "weight_file", "companion with weights, relative to the archive folder", dtype="str", ucd="meta.id;meta.file"
+    ),
+    TableColumn(
+        "rms_file", "companion with the noise, relative to the archive folder", dtype="str", ucd="meta.id;meta.file"
+    ),
+    TableColumn(
+        "mask_file", "companion with bad pixels, relative to the archive folder", dtype="str", ucd="meta.id;meta.file"
+    ),
+    TableColumn(
+        "primary_beam_file",
+        "companion with gains, relative to the archive folder",
+        dtype="str",
+        ucd="meta.id;meta.file",
     ),
     TableColumn("dialect", "plugin that read the header", dtype="str"),
     TableColumn("state", "current, vanished (kept) or void (the file has changed since)", dtype="str"),
