@@ -22,6 +22,9 @@ def frames(*rows: tuple[object, ...]) -> dict[str, np.ndarray]:
         name: np.array([row[i] for row in rows], dtype=object if i < 4 else float) for i, name in enumerate(names)
     }
     columns["beam_minor"] = columns["beam_major"]
+    columns["primary_beam"] = np.full(len(rows), "unknown", dtype=object)
+    columns["primary_beam_file"] = np.full(len(rows), "", dtype=object)
+    columns["primary_beam_fwhm_deg"] = np.full(len(rows), NAN)
     return columns
 
 
@@ -152,3 +155,15 @@ def test_channels_of_frames() -> None:
     assert (second.band, second.signed) == ("r", True)
     assert np.isnan(second.beam_arcsec)
     assert channels_of({"channel": np.empty(0, object)}) == {}
+
+
+def test_apparent_and_corrected_fluxes_never_share_a_channel() -> None:
+    """Frames that the primary beam still dims stay apart from those corrected by header, by gain file or by Gaussian."""
+    columns = radio(*[(1000, 10)] * 5)
+    columns["primary_beam"][:] = ("unknown", "uncorrected", "corrected", "uncorrected", "uncorrected")
+    columns["primary_beam_file"][3] = "gain.fits"
+    columns["primary_beam_fwhm_deg"][4] = 0.5
+    apparent, corrected = "array|1000MHz|I|10as|Jy/beam", "array|1000MHz|I|10as|Jy/beam|corrected"
+    old = labelled(columns)
+    assert old["channel"].tolist() == [apparent, apparent, corrected, corrected, corrected]
+    assert assign(columns, old, SETTINGS).tolist() == old["channel"].tolist()

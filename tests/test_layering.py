@@ -13,12 +13,12 @@ SOURCE = Path(hindlight.__file__).parent
 PLUGINS = Path(hindlight_plugins.__file__).parent
 
 ORDER = [
-    "errors", "schema", "facts", "settings", "dates", "lightcurve", "plugin", "hookspecs", "tables", "host", "fence",
-    "clock", "systems", "celestial", "sky", "headers", "reading", "goodtime", "files", "channels", "outlines",
-    "footprints", "archive", "summary", "positions", "apart", "pixels", "background", "detection", "pointing",
-    "photometry", "ensemble", "store", "judge", "calibrate", "ranking", "timing", "candidates", "plan", "comparisons",
-    "tasks", "conclude", "outcome", "crew", "record", "verdicts", "runner", "survey", "export", "demo", "testing",
-    "cli", "__main__",
+    "errors", "schema", "facts", "blocks", "settings", "dates", "lightcurve", "plugin", "hookspecs", "tables", "host",
+    "fence", "clock", "systems", "celestial", "sky", "headers", "reading", "goodtime", "knowledge", "files",
+    "companions", "channels", "outlines", "footprints", "archive", "summary", "positions", "apart", "pixels",
+    "background", "detection", "pointing", "photometry", "ensemble", "store", "judge", "calibrate", "ranking", "timing",
+    "candidates", "plan", "comparisons", "tasks", "conclude", "outcome", "crew", "record", "verdicts", "runner",
+    "survey", "export", "demo", "testing", "cli", "__main__",
 ]  # fmt: skip
 PLUGINS_MAY_IMPORT = {"hindlight", "numpy", "scipy", "astropy", "photutils", "nifty_ls"}
 

@@ -7,9 +7,10 @@ A file that is broken never ends the walk: it becomes a row of the rejects. No p
 from __future__ import annotations
 
 import hashlib
+import math
 import os
 from collections.abc import Callable, Iterator, Mapping, Sequence
-from dataclasses import replace
+from dataclasses import dataclass, replace
 from functools import lru_cache
 from itertools import islice
 from typing import Any, NamedTuple
@@ -18,17 +19,19 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hindlight import clock, footprints
+from hindlight.companions import sort_out
 from hindlight.errors import UsageError
 from hindlight.facts import NAN, Cards, FrameFacts, Moment, visible
 from hindlight.fence import one_line
 from hindlight.files import FileEntry, list_files, local_path, open_source
 from hindlight.goodtime import with_good_time
 from hindlight.headers import Hdu, Plane, SetAsideError, facts_of, inherited, planes, read_hdus
+from hindlight.knowledge import Knowledge
 from hindlight.lightcurve import FloatArray
 from hindlight.outlines import Image, Outline, outlines
 from hindlight.plugin import Dialect
 from hindlight.schema import ASSUMPTIONS, FRAMES
-from hindlight.settings import Settings
+from hindlight.settings import COMPANION_KINDS, Inventory, Settings
 from hindlight.systems import NoCelestialError
 
 FILES_AT_ONCE = 512
@@ -57,7 +60,8 @@ class WalkResult(NamedTuple):
     rejects
         Rows of `schema.REJECTS`, of new and changed files only.
     present, unchanged
-        (archive, path) of every file that is there, and of those that were known and have not changed.
+        (archive, path) of every file that is there and no companion of another, and of those that were known and have
+        not changed.
     """
 
     frames: Columns
@@ -75,6 +79,17 @@ class _Found(NamedTuple):
     plane: Plane
     dialect: str
     facts: FrameFacts
+    companions: Mapping[str, str]  # kind -> path
+
+
+@dataclass(frozen=True)
+class _Reader:
+    """What every file is read with, and where what is set aside is put."""
+
+    dialects: Sequence[Dialect]
+    knowledge: Knowledge
+    settings: Inventory
+    rejects: list[Row]
 
 
 def walk(
@@ -94,19 +109,29 @@ def walk(
     dialects = chosen_dialects(dialects, settings)
     before = _known_files(known or {})
     visited = {(place.st_dev, place.st_ino) for folder in skip if (place := _place(folder)) is not None}
-    files = [(archive, entry) for archive in archives for entry in list_files(archive, visited)]
+    folders = {
+        archive: sort_out(list_files(archive, visited), settings.companions) for archive in dict.fromkeys(archives)
+    }
+    files = [(archive, entry) for archive, folder in folders.items() for entry in folder.images]
     present = {(archive, entry.path) for archive, entry in files}
-    new = [f for f in files if before.get((f[0], f[1].path)) != (f[1].size, f[1].modified_ns)]
+    companions = {(a, path): own for a, folder in folders.items() for path, own in folder.companions.items()}
+    new = [f for f in files if before.get((f[0], f[1].path)) != _identity(f[1], companions.get((f[0], f[1].path), {}))]
     step = progress or (lambda _n: None)
     step(len(files) - len(new))
     parts: list[Columns] = []
-    rejects: list[Row] = []
+    rejects = [
+        _reject(archive, entry, SetAsideError("companion", sentence))
+        for archive, folder in folders.items()
+        for entry, sentence in folder.aside
+    ]
+    knowledge = Knowledge(settings.frames, settings.sites)
+    reader = _Reader(dialects, knowledge, settings.inventory, rejects)
     remaining = iter(sorted(new, key=lambda f: (f[0], f[1].path)))
     while piece := list(islice(remaining, FILES_AT_ONCE)):
         found: list[_Found] = []
         held = 0
         for archive, entry in piece:
-            for frames in _read_file(archive, entry, dialects, settings, rejects):
+            for frames in _read_file(archive, entry, companions.get((archive, entry.path), {}), reader):
                 found += frames
                 held += _held(frames)
                 if held > HELD_AT_ONCE:
@@ -136,11 +161,17 @@ def _place(folder: str) -> os.stat_result | None:
         return None
 
 
-def _known_files(known: Mapping[str, Any]) -> dict[tuple[str, str], tuple[int, int]]:
+def _known_files(known: Mapping[str, Any]) -> dict[tuple[str, str], tuple[Any, ...]]:
+    """What tells whether the files of some frames have changed; see `_identity`."""
     if not known:
         return {}
-    rows = zip(known["archive"], known["path"], known["size"], known["modified_ns"], known["state"], strict=True)
-    return {(a, p): (int(size), int(time)) for a, p, size, time, state in rows if state != "void"}
+    names = ("size", "modified_ns", *(f"{kind}_file" for kind in COMPANION_KINDS))
+    rows = zip(known["archive"], known["path"], known["state"], *(known[name] for name in names), strict=True)
+    return {(a, p): (int(size), int(time), *own) for a, p, state, size, time, *own in rows if state != "void"}
+
+
+def _identity(entry: FileEntry, companions: Mapping[str, str]) -> tuple[Any, ...]:
+    return entry.size, entry.modified_ns, *(companions.get(kind, "") for kind in COMPANION_KINDS)
 
 
 def _joined(parts: Sequence[Columns]) -> Columns:
@@ -156,7 +187,7 @@ def _joined(parts: Sequence[Columns]) -> Columns:
 
 
 def _read_file(
-    archive: str, entry: FileEntry, dialects: Sequence[Dialect], settings: Settings, rejects: list[Row]
+    archive: str, entry: FileEntry, companions: Mapping[str, str], reader: _Reader
 ) -> Iterator[list[_Found]]:
     """The frames of a file, some HDUs at a time; adds what of it is set aside.
 
@@ -168,7 +199,7 @@ def _read_file(
     try:
         if entry.fault:
             raise SetAsideError("unreadable", entry.fault)
-        limit = settings.inventory.unpacked_limit_mb * MEGABYTE
+        limit = reader.settings.unpacked_limit_mb * MEGABYTE
         with open_source(local_path(archive, entry.path), limit) as source:
             for hdu in read_hdus(source):
                 last = hdu.index
@@ -176,11 +207,11 @@ def _read_file(
                     primary = hdu.cards
                 if hdu.is_image:
                     images += 1
-                    frames = _frames_of(archive, entry, hdu, primary, dialects, settings, rejects)
+                    frames = _frames_of(archive, entry, hdu, primary, companions, reader)
                     waiting += frames
                     held += _held(frames)
                     if held > HELD_AT_ONCE:
-                        yield waiting
+                        yield [_known(frame, reader) for frame in waiting]
                         waiting, held = [], 0
                 elif hdu.is_good_time:
                     waiting = [_with_good_time(frame, hdu) for frame in waiting]
@@ -188,11 +219,12 @@ def _read_file(
             raise SetAsideError("no_image", f"none of its {last + 1} HDUs holds an image")
     except SetAsideError as error:
         # A gzip stream that breaks after some HDUs cannot know which one it was in.
-        rejects.append(_reject(archive, entry, error, last + 1 if last >= 0 and images else error.hdu))
+        reader.rejects.append(_reject(archive, entry, error, last + 1 if last >= 0 and images else error.hdu))
     except OSError as error:
-        rejects.append(_reject(archive, entry, SetAsideError("unreadable", f"the system says: {error.strerror}")))
+        reason = SetAsideError("unreadable", f"the system says: {error.strerror}")
+        reader.rejects.append(_reject(archive, entry, reason))
     if waiting:
-        yield waiting
+        yield [_known(frame, reader) for frame in waiting]
 
 
 def _held(frames: Sequence[_Found]) -> int:
@@ -201,24 +233,43 @@ def _held(frames: Sequence[_Found]) -> int:
 
 
 def _frames_of(
-    archive: str,
-    entry: FileEntry,
-    hdu: Hdu,
-    primary: Cards | None,
-    dialects: Sequence[Dialect],
-    settings: Settings,
-    rejects: list[Row],
+    archive: str, entry: FileEntry, hdu: Hdu, primary: Cards | None, companions: Mapping[str, str], reader: _Reader
 ) -> list[_Found]:
     """The frames of an HDU, as far as nothing is wrong with it."""
     frames: list[_Found] = []
+    forced = reader.settings.dialect != AUTO
     try:
         cards, words = _with_primary(hdu.cards, primary)
-        for plane in planes(hdu, settings.inventory.planes_limit):
-            read = _facts(cards, plane, dialects, settings.inventory.dialect != AUTO, words)
-            frames.append(_Found(archive, entry, hdu, plane, *read))
+        for plane in planes(hdu, reader.settings.planes_limit):
+            read = _facts(cards, plane, reader.dialects, forced, words)
+            frames.append(_Found(archive, entry, hdu, plane, *read, companions))
     except SetAsideError as error:
-        rejects.append(_reject(archive, entry, error, hdu.index))
+        reader.rejects.append(_reject(archive, entry, error, hdu.index))
     return frames
+
+
+def _known(frame: _Found, reader: _Reader) -> _Found:
+    """The frame with what the user knows of it, and what follows from its companions."""
+    facts = frame.facts
+    if reader.knowledge:
+        facts = reader.knowledge.applied(frame.hdu.cards, frame.entry.path, facts)
+    return frame._replace(facts=_with_gains(facts, "primary_beam" in frame.companions))
+
+
+def _with_gains(facts: FrameFacts, has_file: bool) -> FrameFacts:
+    """The facts of a frame with what follows from a companion that holds the primary beam's gain, or from there being none.
+
+    A frame that has one is uncorrected unless something says otherwise.
+    """
+    words = facts.assumptions
+    if not has_file:
+        if facts.primary_beam != "uncorrected" or math.isfinite(facts.primary_beam_fwhm_deg):
+            return facts
+        return replace(facts, assumptions=(*words, "primary_beam_apparent"))
+    if facts.primary_beam == "corrected":
+        return replace(facts, assumptions=(*words, "gains_not_applied"))
+    known = tuple(word for word in words if word != "primary_beam_unknown")
+    return replace(facts, primary_beam="uncorrected", assumptions=known)
 
 
 def _with_primary(cards: Cards, primary: Cards | None) -> tuple[Cards, tuple[str, ...]]:
@@ -306,7 +357,10 @@ def _text(values: Sequence[str]) -> NDArray[Any]:
 def _plain(found: Sequence[_Found]) -> Columns:
     """What only has to be copied."""
     facts = [f.facts for f in found]
-    numbers = ("frequency_hz", "beam_major", "beam_minor", "beam_angle", "depth", "saturation", "electrons_per_unit")
+    numbers = (
+        "frequency_hz", "beam_major", "beam_minor", "beam_angle", "depth", "saturation", "electrons_per_unit",
+        "primary_beam_fwhm_deg", "clock_error_s",
+    )  # fmt: skip
     columns: Columns = {name: np.array([getattr(f, name) for f in facts], dtype=float) for name in numbers}
     columns |= {
         name: _text([visible(getattr(f, name)) for f in facts])
@@ -317,6 +371,8 @@ def _plain(found: Sequence[_Found]) -> Columns:
     columns["barycentric"] = np.array([f.barycentric for f in facts], dtype=bool)
     columns["archive"] = _text([f.archive for f in found])
     columns["path"] = _text([f.entry.path for f in found])
+    for kind in COMPANION_KINDS:
+        columns[f"{kind}_file"] = _text([f.companions.get(kind, "") for f in found])
     columns["dialect"] = _text([f.dialect for f in found])
     columns["digest"] = _text([_digest(f.hdu, f.entry.size) for f in found])
     integers = {
@@ -356,8 +412,10 @@ def _times(found: Sequence[_Found], settings: Settings, words: Sequence[list[str
     end = np.where(reversed_ends | stretched, NAN, end)
     span = np.where(end >= start, end - start, np.array([f.span_s for f in facts], dtype=float))
     stated = np.isfinite(exposure)
-    broken = exposure < GOOD_FRACTION * span
     exposure, span = np.where(stated, exposure, span), np.where(np.isfinite(span), span, exposure)
+    fraction = np.array([f.good_time_fraction for f in facts], dtype=float)
+    exposure, stated = np.where(np.isfinite(fraction), fraction * span, exposure), stated | np.isfinite(fraction)
+    broken = exposure < GOOD_FRACTION * span
     half = np.nan_to_num(span) / 2
     middle = _first(middle, start + half, end - half)
     clocked = np.isfinite(middle)
@@ -451,6 +509,8 @@ def _beams(columns: Columns, in_pixels: NDArray[np.bool_], settings: Settings, w
     good &= columns["beam_minor"] >= BEAM_PIXELS[0] * columns["pixel_scale"]
     good &= columns["beam_minor"] <= columns["beam_major"]
     for i in np.flatnonzero(~good).tolist():
+        if any(word.startswith("set_by_user") and "beam_arcsec" in word for word in words[i]):
+            continue  # taken at the user's word, as the widths in the settings are
         width = settings.photometry.fwhm_arcsec.get(columns["instrument"][i], NAN)
         words[i].append("no_beam" if np.isnan(width) else "beam_from_settings")
         columns["beam_major"][i] = columns["beam_minor"][i] = width

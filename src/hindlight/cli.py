@@ -5,7 +5,9 @@ from __future__ import annotations
 import contextlib
 import errno
 import logging
+import math
 import os
+import shutil
 import signal
 import sys
 import traceback
@@ -27,6 +29,9 @@ from hindlight.facts import visible
 BEST_ROWS = 10
 LONGEST_CELL = 200
 TABLE_ENDINGS = (".ecsv", ".fits", ".vot", ".csv", ".parquet")
+BARS, PLAIN_SHADES = "▁▂▃▄▅▆▇█", ".:-=+*#%@"
+LONGEST_LABEL = 30
+PLAIN_WIDTH = 100
 INTERRUPTED = 130
 TERMINATED = 143
 
@@ -326,6 +331,8 @@ def _short(value: Any, before: str = "", digits: int = 3) -> str:
 
 
 def _print_inventory(found: Any) -> None:
+    from hindlight.summary import settings_to_fill_in
+
     console = _console()
     names = ("channel", "frames", "first", "last", "exposure (s)", "beam (arcsec)", "depth")
     table = _simple_table("frames by instrument and channel", *names)
@@ -337,6 +344,7 @@ def _print_inventory(found: Any) -> None:
             f"{_short(row.depth)} {row.unit}" if np.isfinite(row.depth) else "not stated",
         )  # fmt: skip
     console.print(table)
+    _print_timeline(found.coverage)
     if found.targets:
         cover = _simple_table("frames that cover each target", "target", "frames", "channels")
         for target in found.targets:
@@ -347,6 +355,48 @@ def _print_inventory(found: Any) -> None:
         for entry in counted:
             _add(table, str(entry.count), entry.word, entry.meaning)
         console.print(table if counted else f"{title}: nothing")
+    text = settings_to_fill_in(found.missing)
+    if text:
+        click.echo(
+            "# what headers do not say: fill in what you know, take its # away, and give the file with --settings"
+        )
+        click.echo(text, nl=False)
+
+
+def _print_timeline(coverage: Any) -> None:
+    """A row of characters for each instrument, one character for each year or few years."""
+    from hindlight.summary import timeline
+
+    if not any(row.years for row in coverage):
+        return
+    on_terminal = sys.stdout.isatty()
+    shades = BARS if on_terminal and "utf" in (sys.stdout.encoding or "").lower() else PLAIN_SHADES
+    names = {row.instrument: _label(row.instrument, on_terminal) for row in coverage}
+    margin = max(len(name) for name in names.values()) + 2
+    lines = timeline(coverage, (shutil.get_terminal_size().columns if on_terminal else PLAIN_WIDTH) - margin)
+    most = max(max(counts) for _, counts in lines.rows)
+    columns = len(lines.rows[0][1])
+    each = "a year" if lines.step == 1 else f"in {lines.step} years"
+    click.echo(f"frames {each}, from 1 ({shades[0]}) to {most} ({_shade(most, most, shades)})")
+    axis = "".join(f"{lines.first + i * lines.step:<10}" for i in range(0, columns, 10))
+    click.echo(f"{'':{margin}}{axis.rstrip()}")
+    undated = {row.instrument: f"  and {row.undated} without a date" if row.undated else "" for row in coverage}
+    for instrument, counts in lines.rows:
+        row = "".join(_shade(n, most, shades) for n in counts)
+        click.echo(f"{names[instrument]:{margin}}{row}{undated[instrument]}".rstrip())
+
+
+def _label(instrument: str, on_terminal: bool) -> str:
+    """The name of an instrument, shortened, in one line; in plain letters where it is not for a terminal."""
+    name = " ".join(instrument.split())[:LONGEST_LABEL] or "(no name)"
+    return name if on_terminal else name.encode("ascii", "replace").decode()
+
+
+def _shade(count: int, most: int, shades: str) -> str:
+    """A blank for none, then the darker the more frames, by the logarithm."""
+    if count == 0:
+        return " "
+    return shades[round((len(shades) - 1) * math.log(count) / math.log(most))] if most > 1 else shades[0]
 
 
 def _print_plugins(loaded: Any) -> None:

@@ -3,6 +3,11 @@
 Anything else that is raised is an error inside the program: its traceback goes to the run's log.
 """
 
+from __future__ import annotations
+
+import difflib
+from collections.abc import Iterable
+
 
 class HindlightError(Exception):
     """Something the user can mend; the text says what, where, what was expected, what was found, and how to mend it."""
@@ -28,3 +33,10 @@ class StoppedError(HindlightError):
     """The run ended early through an outside fault; the same command continues it."""
 
     exit_status = 4
+
+
+def nearest(name: str, valid: Iterable[str]) -> str:
+    """The end of a message about an unknown name: the nearest valid one, or all there are."""
+    names = list(valid)
+    close = difflib.get_close_matches(name, names, n=1, cutoff=0.5)
+    return f"; did you mean {close[0]!r}?" if close else f"; there are {', '.join(sorted(names))}"

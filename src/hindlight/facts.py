@@ -106,6 +106,12 @@ class FrameFacts:
         Whether the times are already referred to the barycentre.
     electrons_per_unit, saturation, depth
         In units of the pixels after scaling.
+    clock_error_s
+        1-sigma error of the header's clock.
+    good_time_fraction
+        Where it is a number, the good time is this fraction of the time from start to end, whatever `exposure_s` says.
+    primary_beam, primary_beam_fwhm_deg
+        "corrected", "uncorrected" or "unknown"; the width of a Gaussian primary beam about the reference pixel.
     assumptions
         Words of `hindlight.ASSUMPTIONS`, one for each thing taken for granted.
     """
@@ -131,6 +137,9 @@ class FrameFacts:
     electrons_per_unit: float = NAN
     depth: float = NAN
     primary_beam: str = "unknown"
+    primary_beam_fwhm_deg: float = NAN
+    clock_error_s: float = NAN
+    good_time_fraction: float = NAN
     assumptions: tuple[str, ...] = ()
 
 

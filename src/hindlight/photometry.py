@@ -7,26 +7,40 @@ measurement. Times, channels and light curves are the business of others.
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
-from dataclasses import dataclass
+import os
+from collections.abc import Iterator, Mapping, Sequence
+from contextlib import contextmanager
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from hindlight.archive import MEGABYTE
-from hindlight.background import Background, annulus_of, keep_freed_memory, local_background
+from hindlight.background import Annulus, Background, annulus_of, keep_freed_memory, local_background, median_and_mad
 from hindlight.detection import detect_bright
 from hindlight.errors import UsageError
 from hindlight.facts import NAN
-from hindlight.headers import fold_unit
+from hindlight.headers import SetAsideError, fold_unit
 from hindlight.lightcurve import FloatArray, IntArray
-from hindlight.pixels import Floats, Lattice, Pixels, PlanePlace, Windows, find_image, read_plane
+from hindlight.pixels import (
+    Floats,
+    ImagePlace,
+    Lattice,
+    Mask,
+    Pixels,
+    PlanePlace,
+    Windows,
+    find_image,
+    images_of,
+    read_plane,
+)
 from hindlight.plugin import BeamShape, Estimator, Stamps
 from hindlight.pointing import FEWEST, Centroids, Pointing, centroids, pointing, stamp_half
 from hindlight.schema import Flag
 from hindlight.settings import Photometry, Settings
 from hindlight.sky import Projection, beam_shape, projection
+from hindlight.systems import unit_vectors
 
 AT_A_TIME = 128  # positions: their stamps stay in the processor's cache
 NEIGHBOUR_SNR = 5.0  # a neighbour must stand this far above the background to be flagged
@@ -41,7 +55,9 @@ class FrameToMeasure:
     """What photometry needs to know of a frame.
 
     Beam in arcsec and degrees east of north, NaN where unknown; `mjd` NaN where there is no date; `electrons_per_unit`
-    and `saturation` in the unit of the pixels, NaN where unknown.
+    and `saturation` in the unit of the pixels, NaN where unknown. `companions` are files by kind, see
+    `settings.Companions`; one with gains, or else a Gaussian of `primary_beam_fwhm_deg` about the reference pixel, is
+    applied where `primary_beam` is "uncorrected".
     """
 
     path: str
@@ -54,20 +70,67 @@ class FrameToMeasure:
     unit: str = ""
     electrons_per_unit: float = NAN
     saturation: float = NAN
+    primary_beam: str = "unknown"
+    primary_beam_fwhm_deg: float = NAN
+    companions: Mapping[str, str] = field(default_factory=dict)
 
 
 @dataclass(frozen=True, eq=False)
 class OpenFrame:
-    """A frame whose header has been read: where its pixels are, its projection, its beam in pixels."""
+    """A frame whose header has been read: where its pixels and those of its companions are, its projection, its beam in
+
+    pixels.
+    """
 
     place: PlanePlace
     sky: Projection
     beam: BeamShape
     unpacked_limit: int
+    companions: Mapping[str, PlanePlace] = field(default_factory=dict)
 
     def pixels(self, windows: Windows | None = None) -> Pixels:
-        """Its pixels; see `pixels.read_plane`."""
-        return read_plane(self.place, self.unpacked_limit, windows)
+        """Its pixels, blank where a companion says so; see `pixels.read_plane`."""
+        own = read_plane(self.place, self.unpacked_limit, windows)
+        read = {kind: self.companion(kind, windows) for kind in ("mask", "weight")}
+        masks = tuple(Mask(found, kind == "weight") for kind, found in read.items() if found is not None)
+        return replace(own, masks=masks) if masks else own
+
+    def companion(self, kind: str, windows: Windows | None = None) -> Pixels | None:
+        """The pixels of a companion, None where there is none."""
+        place = self.companions.get(kind)
+        if place is None:
+            return None
+        with _blamed_on(place.image.path, kind):
+            return read_plane(place, self.unpacked_limit, windows)
+
+
+@dataclass(frozen=True, eq=False)
+class Noise:
+    """Where the noise per pixel is taken from: a map of it, else that of the annulus scaled with the weights, if any.
+
+    Weights are inverse variances up to a factor, which cancels.
+    """
+
+    rms: Pixels | None = None
+    weight: Pixels | None = None
+
+    def at(self, ix: IntArray, iy: IntArray, local: FloatArray, annulus: Annulus) -> FloatArray:
+        """The noise at pixels (ix, iy), whose annulus has the noise `local`; NaN where it is no positive number."""
+        here = Lattice.square(0)
+        if self.rms is not None:
+            rms = self.rms.stamps(ix, iy, here)[:, 0, 0].astype(float)
+            return np.where((rms > 0) & np.isfinite(rms) & np.isfinite(local), rms, np.nan)
+        if self.weight is None:
+            return local
+        around = self.weight.stamps(ix, iy, annulus.lattice).reshape(len(ix), -1)[:, annulus.index]
+        around = np.where(around > 0, around, np.nan)  # other pixels are blank, and not in the local noise
+        level, _, _ = median_and_mad(around)
+        weight = self.weight.stamps(ix, iy, here)[:, 0, 0].astype(float)
+        weight[~(weight > 0)] = np.nan
+        return np.asarray(local * np.sqrt(level / weight))
+
+
+OWN_NOISE = Noise()
 
 
 def choose_estimator(
@@ -103,8 +166,8 @@ def measure_frame(
     `anchors` are ICRS positions of known sources: where they are in the image tells how far it is off its header, and
     the positions are measured that far away from where the header puts them. Returns columns of shape (m,) for the m
     positions on the image: `index` among the n, `x`, `y` (0-based pixels), `shift_x`, `shift_y` (at the middle of the
-    image, NaN where the anchors do not tell), and those of `measure`. Raises `SetAsideError`, `OSError`, or `ValueError`
-    from an unusable projection.
+    image, NaN where the anchors do not tell), `gain` of the primary beam, and those of `measure`, flux and error divided
+    by the gain. Raises `SetAsideError`, `OSError`, or `ValueError` from an unusable projection.
     """
     opened = open_frame(frame, settings)
     x, y = opened.sky.icrs_to_pixel(ra, dec, frame.mjd)
@@ -117,18 +180,22 @@ def measure_frame(
     place = {"index": index, "x": x, "y": y}
     place |= {f"shift_{axis}": np.full(len(index), value) for axis, value in zip("xy", offset, strict=True)}
     if len(index) == 0:
-        return {**place, **_nothing()}
+        return {**place, "gain": np.empty(0), **_nothing()}
     lattice = annulus_of(opened.beam, settings.photometry).lattice
     half = max(lattice.rows, lattice.columns, _half_width(estimator, opened.beam))
-    pixels = opened.pixels(Windows(_nearest(x), _nearest(y), half))
+    windows = Windows(_nearest(x), _nearest(y), half)
+    noise = Noise(opened.companion("rms", windows), opened.companion("weight", windows))
     found = measure(
-        pixels, x, y, opened.beam, estimator, settings.photometry, frame.electrons_per_unit, frame.saturation
-    )
+        opened.pixels(windows), x, y, opened.beam, estimator, settings.photometry, frame.electrons_per_unit,
+        frame.saturation, noise,
+    )  # fmt: skip
     if estimator.sums and fold_unit(frame.unit).endswith(PER_BEAM):
         # Summed pixels of a map per beam count each point of it once a beam: the flux is the sum over the beam's area.
         area = math.pi * opened.beam.major * opened.beam.minor / (4.0 * math.log(2.0))
         found["flux"] /= area
         found["flux_err"] /= area
+    found["gain"] = _gain(opened, frame, ra[index], dec[index], x, y)
+    _divide(found, settings.photometry.primary_beam_floor)
     return {**place, **found}
 
 
@@ -174,6 +241,47 @@ def locate(
     there[:, index[found.highest >= frame.saturation]] = np.nan
     there[:2, ~np.isfinite(there[2])] = np.nan
     return there[0], there[1], there[2], there[3]
+
+
+def _gain(
+    opened: OpenFrame, frame: FrameToMeasure, ra: FloatArray, dec: FloatArray, x: FloatArray, y: FloatArray
+) -> FloatArray:
+    """The primary beam's gain at positions of a frame, in degrees and in pixels; 1 where none is to be applied."""
+    if frame.primary_beam != "uncorrected":
+        return np.ones(len(x))
+    gains = opened.companion("primary_beam", Windows(_nearest(x), _nearest(y), 1))
+    if gains is not None:
+        return _between_pixels(gains, x, y)
+    if not frame.primary_beam_fwhm_deg > 0:
+        return np.ones(len(x))
+    column, row = (np.array([place]) for place in opened.sky.reference)
+    axis = unit_vectors(*opened.sky.pixel_to_icrs(column, row, frame.mjd))
+    chord = np.linalg.norm(unit_vectors(ra, dec) - axis, axis=1)
+    distance = np.degrees(2.0 * np.arcsin(np.minimum(1.0, chord / 2.0)))
+    return np.asarray(2.0 ** (-4.0 * (distance / frame.primary_beam_fwhm_deg) ** 2))
+
+
+def _between_pixels(pixels: Pixels, x: FloatArray, y: FloatArray) -> FloatArray:
+    """Values at pixel coordinates, bilinear; of the nearest pixel where one of the four around is missing."""
+    ix, iy = _nearest(x), _nearest(y)
+    stamps = pixels.stamps(ix, iy, Lattice.square(1)).astype(float)
+    dx, dy = x - ix, y - iy
+    across = np.where(dx < 0, 0, 2)
+    down = np.where(dy < 0, 0, 2)
+    every, u, v = np.arange(len(x)), np.abs(dx), np.abs(dy)
+    middle = stamps[:, 1, 1]
+    value = (1 - v) * ((1 - u) * middle + u * stamps[every, 1, across])
+    value += v * ((1 - u) * stamps[every, down, 1] + u * stamps[every, down, across])
+    return np.asarray(np.where(np.isfinite(value), value, middle))
+
+
+def _divide(found: Columns, floor: float) -> None:
+    """Apply the gain to flux and error; where it is below the floor or no number there is no flux."""
+    low = ~((found["gain"] >= floor) & (found["gain"] > 0.0))
+    found["flags"][low] |= Flag.LOW_GAIN
+    gain = np.where(low, np.nan, found["gain"])
+    found["flux"] /= gain
+    found["flux_err"] /= gain
 
 
 def bright_sources(
@@ -222,7 +330,47 @@ def open_frame(frame: FrameToMeasure, settings: Settings) -> OpenFrame:
     limit = settings.inventory.unpacked_limit_mb * MEGABYTE
     image = find_image(frame.path, frame.hdu, limit)
     sky = projection(image.hdu.cards, frame.path)
-    return OpenFrame(PlanePlace(image, sky.axes, frame.plane), sky, _beam(frame, sky, settings.photometry), limit)
+    place = PlanePlace(image, sky.axes, frame.plane)
+    companions = {kind: companion_place(place, path, kind, limit) for kind, path in frame.companions.items()}
+    return OpenFrame(place, sky, _beam(frame, sky, settings.photometry), limit, companions)
+
+
+def companion_place(image: PlanePlace, path: str, kind: str, unpacked_limit: int) -> PlanePlace:
+    """Where the pixels of a companion are that belong to a plane of an image.
+
+    They are in the HDU of the same number, or in the only image of the file; the companion has the same planes, or one
+    for all of them. Raises `SetAsideError` where its shape is another, and as `find_image`.
+    """
+    with _blamed_on(path, kind):
+        found = _companion_image(path, image.image.hdu.index, unpacked_limit)
+    axes, size = found.hdu.axes, (image.width, image.height)
+    if axes == image.image.hdu.axes:
+        return PlanePlace(found, image.axes, image.index)
+    flat = [(number, length) for number, length in enumerate(axes, 1) if length > 1]
+    if tuple(length for _, length in flat) != size:
+        shown, wanted = (" x ".join(map(str, lengths)) or "no" for lengths in (axes, size))
+        name = os.path.basename(path)
+        raise image.fault("bad_companion", f"its {kind} companion {name} has {shown} pixels, expected {wanted}")
+    return PlanePlace(found, (flat[0][0], flat[1][0]))
+
+
+def _companion_image(path: str, hdu: int, unpacked_limit: int) -> ImagePlace:
+    images = images_of(path, unpacked_limit)
+    same = [found for found in images if found.hdu.index == hdu]
+    if not same and len(images) != 1:
+        raise SetAsideError("bad_companion", f"it has {len(images)} images, none of them in HDU {hdu}", hdu)
+    return (same or images)[0]
+
+
+@contextmanager
+def _blamed_on(path: str, kind: str) -> Iterator[None]:
+    """What cannot be read here is the companion's fault."""
+    try:
+        yield
+    except (SetAsideError, OSError) as error:
+        detail = (error.strerror if isinstance(error, OSError) else None) or str(error)
+        name = os.path.basename(path)
+        raise SetAsideError("bad_companion", f"its {kind} companion {name} cannot be used: {detail}") from error
 
 
 def _beam(frame: FrameToMeasure, sky: Projection, settings: Photometry) -> BeamShape:
@@ -243,12 +391,13 @@ def measure(
     settings: Photometry,
     electrons_per_unit: float = NAN,
     saturation: float = NAN,
+    noise: Noise = OWN_NOISE,
 ) -> Columns:
     """Measure 0-based pixel coordinates, shape (n,), of an image.
 
     Returns `flux`, `flux_err`, `background` (per pixel), `rms` (per pixel) in the pixels' unit, and `flags` (bits of
     `schema.Flag`), each of shape (n,). Flux and error are NaN where pixels that carry weight are blank or outside, or
-    where the annulus holds fewer than 20 pixels or no noise.
+    where the annulus holds fewer than 20 pixels or no noise. `noise` may give noise other than that of the annulus.
     """
     if len(x) == 0:
         return _nothing()
@@ -256,7 +405,7 @@ def measure(
     order = np.argsort(y, kind="stable")  # what lies together in the file is read together
     parts = [order[start : start + AT_A_TIME] for start in range(0, len(x), AT_A_TIME)]
     found = [
-        _measure_some(pixels, x[part], y[part], beam, estimator, settings, electrons_per_unit, saturation)
+        _measure_some(pixels, x[part], y[part], beam, estimator, settings, electrons_per_unit, saturation, noise)
         for part in parts
     ]
     back = np.argsort(order)
@@ -272,6 +421,7 @@ def _measure_some(
     settings: Photometry,
     electrons_per_unit: float,
     saturation: float,
+    noise: Noise,
 ) -> Columns:
     """`measure` for as many positions as fit into the processor's cache together."""
     ix, iy = _nearest(x), _nearest(y)
@@ -283,8 +433,9 @@ def _measure_some(
     raw = _small_stamps(pixels, ix, iy, _half_width(estimator, beam), wide, lattice)
     with np.errstate(invalid="ignore"):  # infinite pixels may make NaN, never a warning
         signal = raw - local.level[:, None, None]
-    background_err = local.error(beam_pixels if estimator.correlated else 1.0)
-    stamps = Stamps(signal, x - ix, y - iy, local.rms, background_err, beam, electrons_per_unit)
+    rms = noise.at(ix, iy, local.rms, annulus)
+    background_err = replace(local, rms=rms).error(beam_pixels if estimator.correlated else 1.0)
+    stamps = Stamps(signal, x - ix, y - iy, rms, background_err, beam, electrons_per_unit)
     flux, flux_err = _estimate(estimator, stamps)
     flags = np.zeros(len(ix), np.int64)
     flags[(2 * local.used < len(annulus.index)) | np.isnan(local.rms)] |= Flag.THIN_BACKGROUND
@@ -294,7 +445,7 @@ def _measure_some(
     _flag_gaps(flags, np.isnan(flux), pixels.shape, ix, iy, raw)
     bad = ~(np.isfinite(flux) & np.isfinite(flux_err))
     flux[bad] = flux_err[bad] = np.nan
-    return {"flux": flux, "flux_err": flux_err, "background": local.level, "rms": local.rms, "flags": flags}
+    return {"flux": flux, "flux_err": flux_err, "background": local.level, "rms": rms, "flags": flags}
 
 
 def _nothing() -> Columns:

@@ -12,6 +12,7 @@ import math
 import mmap
 import os
 import warnings
+from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Any
 
@@ -69,7 +70,7 @@ class Pixels:
 
     value = zero + scale * stored; the stored integer `blank` means no value. Values are float32 where that holds every
     stored number (as in astropy), float64 otherwise. `quantum` is the step between values where there is one, as in
-    counts, else 0.
+    counts, else 0. `masks` are images of the same shape: a pixel is blank where one of them is anything but zero.
     """
 
     stored: NDArray[Any]
@@ -77,6 +78,7 @@ class Pixels:
     zero: float = 0.0
     blank: int | None = None
     quantum: float = 0.0
+    masks: tuple[Mask, ...] = ()
 
     @property
     def shape(self) -> tuple[int, int]:
@@ -86,10 +88,20 @@ class Pixels:
 
     def whole(self) -> Floats:
         """All values, shape (height, width), NaN where blank."""
-        return self._values(self.stored)
+        values = self._values(self.stored)
+        for mask in self.masks:
+            values[mask.bad(mask.pixels.whole())] = np.nan
+        return values
 
     def stamps(self, ix: IntArray, iy: IntArray, lattice: Lattice) -> Floats:
         """Values around pixels (ix, iy), shape (n, *lattice.shape); NaN where blank or outside."""
+        values = self._unmasked(ix, iy, lattice)
+        for mask in self.masks:
+            values[mask.bad(mask.pixels.stamps(ix, iy, lattice))] = np.nan
+        return values
+
+    def _unmasked(self, ix: IntArray, iy: IntArray, lattice: Lattice) -> Floats:
+        """The same without masks."""
         height, width = self.stored.shape
         rows, columns = lattice.rows, lattice.columns
         last_top, last_left = height - 1 - 2 * rows, width - 1 - 2 * columns
@@ -126,7 +138,7 @@ class Pixels:
 
     def _of_padded_image(self, ix: IntArray, iy: IntArray, lattice: Lattice) -> Floats:
         """The same from a copy of the whole image with a margin of NaN."""
-        values = self.whole()
+        values = self._values(self.stored)
         (height, width), rows, columns = values.shape, lattice.rows, lattice.columns
         image = np.full((height + 2 * rows, width + 2 * columns), np.nan, values.dtype)
         image[rows : rows + height, columns : columns + width] = values
@@ -144,6 +156,21 @@ class Pixels:
         if self.blank is not None:
             values[raw == self.blank] = np.nan
         return values
+
+
+@dataclass(frozen=True, eq=False)
+class Mask:
+    """An image that says which pixels of another are bad: those not zero, or for weights those not above zero.
+
+    No number is bad either way.
+    """
+
+    pixels: Pixels
+    is_weight: bool = False
+
+    def bad(self, values: Floats) -> NDArray[np.bool_]:
+        """Which of these values of it mark bad pixels."""
+        return np.asarray(~(values > 0) if self.is_weight else values != 0)
 
 
 @dataclass(frozen=True, eq=False)
@@ -214,12 +241,23 @@ def find_image(path: str, hdu: int, unpacked_limit: int) -> ImagePlace:
     `unpacked_limit`, in bytes, bounds what a gzip file may unpack to. Raises `OSError`, and `SetAsideError` where the
     file is broken or has no such image.
     """
+    for found in _images(path, unpacked_limit):
+        if found.hdu.index == hdu:
+            return found
+    raise SetAsideError("no_image", f"the file has no image in HDU {hdu}", hdu)
+
+
+def images_of(path: str, unpacked_limit: int) -> list[ImagePlace]:
+    """Every image HDU of a file. Raises as `find_image`."""
+    return list(_images(path, unpacked_limit))
+
+
+def _images(path: str, unpacked_limit: int) -> Iterator[ImagePlace]:
     with open_source(path, unpacked_limit) as source:
         packed = not isinstance(source, PlainSource)
         for found in read_hdus(_HeadersOnly(source) if packed else source):
-            if found.index == hdu and found.is_image:
-                return ImagePlace(path, packed, found)
-    raise SetAsideError("no_image", f"the file has no image in HDU {hdu}", hdu)
+            if found.is_image:
+                yield ImagePlace(path, packed, found)
 
 
 def read_plane(place: PlanePlace, unpacked_limit: int, windows: Windows | None = None) -> Pixels:

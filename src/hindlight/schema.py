@@ -30,6 +30,7 @@ class Flag(IntFlag):
     SATURATED = 4
     THIN_BACKGROUND = 8
     NEIGHBOUR = 16
+    LOW_GAIN = 32
 
 
 FLAG_DOCS = {
@@ -38,8 +39,9 @@ FLAG_DOCS = {
     Flag.SATURATED: "a pixel the estimator needs is at or above the saturation level: not used",
     Flag.THIN_BACKGROUND: "fewer than half of the annulus pixels are there; no flux when fewer than 20 are",
     Flag.NEIGHBOUR: "a source brighter than the position itself stands within the inner radius of the annulus",
+    Flag.LOW_GAIN: "the primary beam's gain is below the floor or unknown there: no flux",
 }
-UNUSABLE = Flag.EDGE | Flag.BLANKED | Flag.SATURATED
+UNUSABLE = Flag.EDGE | Flag.BLANKED | Flag.SATURATED | Flag.LOW_GAIN
 
 REASONS = {
     "empty_file": "the file has no bytes",
@@ -56,6 +58,8 @@ REASONS = {
     "no_dialect": "no dialect recognises the header",
     "bad_pixels": "the pixels could not be read when the frame was measured",
     "not_measured": "an estimator plugin failed on the frame",
+    "companion": "the file belongs to an image, by the patterns in [companions], and is no frame itself",
+    "bad_companion": "a file that belongs to the image does not fit it",
     "vanished": "the file was there when the run began and is gone",
     "changed": "the file has changed since it was read or measured",
 }
@@ -97,6 +101,10 @@ ASSUMPTIONS = {
     "beam_unit": "the stated beam cannot be in degrees, but can in arcsec: used only where the settings say so",
     "rotation_doubtful": "the first axis has a rotation of its own: only that of the second was used, by the standard",
     "primary_header": "times and instrument were taken from the primary header, which the extension may not have meant",
+    "primary_beam_apparent": "the primary beam is uncorrected and its width not known: fluxes are apparent",
+    "gains_not_applied": "the primary beam is corrected already: the companion with its gains is not applied",
+    "set_by_user": "these facts come from [[frames]] blocks of the settings",
+    "set_without_effect": "facts that [[frames]] blocks give but this header leaves no place for",
     "unverified": "checksums were not verified",
 }
 
@@ -163,6 +171,25 @@ FRAMES = (
         ucd="pos.outline",
     ),
     TableColumn("primary_beam", "corrected, uncorrected or unknown", dtype="str"),
+    TableColumn(
+        "primary_beam_fwhm_deg", "FWHM of a Gaussian primary beam about the reference pixel, NaN for none", unit="deg"
+    ),
+    TableColumn("clock_error_s", "1-sigma error of the header's clock, NaN where not stated", unit="s"),
+    TableColumn(
+        "weight_file", "companion with weights, relative to the archive folder", dtype="str", ucd="meta.id;meta.file"
+    ),
+    TableColumn(
+        "rms_file", "companion with the noise, relative to the archive folder", dtype="str", ucd="meta.id;meta.file"
+    ),
+    TableColumn(
+        "mask_file", "companion with bad pixels, relative to the archive folder", dtype="str", ucd="meta.id;meta.file"
+    ),
+    TableColumn(
+        "primary_beam_file",
+        "companion with gains, relative to the archive folder",
+        dtype="str",
+        ucd="meta.id;meta.file",
+    ),
     TableColumn("dialect", "plugin that read the header", dtype="str"),
     TableColumn("state", "current, vanished (kept) or void (the file has changed since)", dtype="str"),
     TableColumn("assumptions", "each thing taken for granted: word and sentence", dtype="str", ucd="meta.note"),
@@ -213,7 +240,12 @@ MEASUREMENTS = (
     TableColumn(
         "background", "local background per pixel that was taken off", unit=NATURAL_UNIT, ucd="instr.background"
     ),
-    TableColumn("rms", "robust local noise per pixel", unit=NATURAL_UNIT, ucd="instr.det.noise"),
+    TableColumn(
+        "rms",
+        "noise per pixel: robust, of the annulus, or of the rms companion",
+        unit=NATURAL_UNIT,
+        ucd="instr.det.noise",
+    ),
     TableColumn("gain", "primary-beam gain used, 1 where none was applied"),
     TableColumn("flags", "bits, see the README", dtype="int64", ucd="meta.code.qual"),
     TableColumn("shift_x", "shift of the frame at its middle, contained in x; NaN where none was found", unit="pixel"),

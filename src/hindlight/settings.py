@@ -7,7 +7,7 @@ theirs with the same function. Unknown names are refused with the nearest valid 
 from __future__ import annotations
 
 import dataclasses
-import difflib
+import inspect
 import math
 import tomllib
 from collections.abc import Mapping
@@ -17,7 +17,8 @@ from typing import Any
 
 import tomli_w
 
-from hindlight.errors import UsageError
+from hindlight.blocks import SITE_FORMS, FrameBlock, Vector, read_blocks, read_place, render_blocks
+from hindlight.errors import UsageError, nearest
 
 
 def setting(
@@ -77,7 +78,26 @@ class Photometry:
     assumed_fwhm_pixels: float = setting(
         3.0, "width of the beam or seeing where the header gives none", unit="pixel", minimum=1, maximum=50
     )
+    primary_beam_floor: float = setting(
+        0.15, "positions where the primary beam's gain is below this are not used", minimum=0, maximum=1
+    )
     fwhm_arcsec: dict[str, float] = setting({}, "instrument = width: used where the header gives none", unit="arcsec")
+
+
+@dataclass(frozen=True)
+class Companions:
+    """Files that belong to an image, by the names they have beside it: patterns with {name} for the image's file name,
+
+    {stem} for the same without its ending; relative to the image's folder. Empty for none.
+    """
+
+    weight: str = setting("", "weights (inverse variances up to a factor); zero or no number: the pixel is blank")
+    rms: str = setting("", "noise per pixel: taken for the error in place of the local noise")
+    mask: str = setting("", "anything but zero: the pixel is blank")
+    primary_beam: str = setting("", "gain of the primary beam: fluxes and errors are divided by it")
+
+
+COMPANION_KINDS = tuple(f.name for f in fields(Companions))
 
 
 @dataclass(frozen=True)
@@ -146,7 +166,11 @@ class Ranking:
 
 @dataclass(frozen=True)
 class Settings:
-    """Every setting in force. `sites` and `plugin` are free-form tables: instrument -> ITRF metres, plugin -> settings."""
+    """Every setting in force.
+
+    `sites` and `plugin` are free-form tables: instrument or place -> ITRF metres, plugin -> settings. `frames` are the
+    blocks of what headers do not say, see `hindlight.blocks`.
+    """
 
     inventory: Inventory = field(default_factory=Inventory)
     channels: Channels = field(default_factory=Channels)
@@ -156,13 +180,16 @@ class Settings:
     flow: Flow = field(default_factory=Flow)
     detection: Detection = field(default_factory=Detection)
     ranking: Ranking = field(default_factory=Ranking)
-    sites: dict[str, tuple[float, float, float]] = field(default_factory=dict)
+    sites: dict[str, Vector] = field(default_factory=dict)
+    companions: Companions = field(default_factory=Companions)
+    frames: tuple[FrameBlock, ...] = ()
     plugin: dict[str, dict[str, Any]] = field(default_factory=dict)
 
     def measuring(self) -> dict[str, Any]:
         """The sections that touch measured values, as plain data: a run cannot change them once it has begun."""
-        names = ("inventory", "channels", "photometry", "controls", "comparisons", "flow", "sites")
-        return {name: as_plain(getattr(self, name)) for name in names}
+        names = ("inventory", "channels", "photometry", "controls", "comparisons", "flow", "sites", "companions")
+        sections = {name: as_plain(getattr(self, name)) for name in names}
+        return sections | {"frames": {f"block {block.number}": block.as_plain() for block in self.frames}}
 
 
 RECORD_SECTIONS = ("run", "versions")  # written into a run's settings.toml beside the settings, ignored when read
@@ -196,7 +223,9 @@ def settings_from(data: Mapping[str, Any], where: str) -> Settings:
         if name in RECORD_SECTIONS:
             continue
         if name not in sections:
-            raise UsageError(f"{where}: no section [{name}]{_nearest(name, sections)}")
+            raise UsageError(f"{where}: no section [{name}]{nearest(name, sections)}")
+        if name == "frames":
+            continue  # they may speak of sites
         if not isinstance(content, Mapping):
             raise UsageError(f"{where}: [{name}] must be a table of settings, got {content!r}")
         if name == "sites":
@@ -205,7 +234,9 @@ def settings_from(data: Mapping[str, Any], where: str) -> Settings:
             values[name] = {key: _table(f"plugin.{key}", value, where) for key, value in content.items()}
         else:
             values[name] = check_section(getattr(Settings(), name), content, f"{where}: [{name}]")
+    values["frames"] = read_blocks(data.get("frames", ()), values.get("sites", {}), where)
     settings = Settings(**values)
+    _companions(settings.companions, where)
     if settings.photometry.annulus_outer <= settings.photometry.annulus_inner:
         raise UsageError(f"{where}: [photometry] annulus_outer must be larger than annulus_inner")
     return settings
@@ -217,7 +248,7 @@ def check_section(defaults: Any, content: Mapping[str, Any], where: str) -> Any:
     values = {}
     for key, value in content.items():
         if key not in declared:
-            raise UsageError(f"{where}: no setting {key!r}{_nearest(key, declared)}")
+            raise UsageError(f"{where}: no setting {key!r}{nearest(key, declared)}")
         values[key] = _checked(declared[key], getattr(defaults, key), value, f"{where} {key}")
     return dataclasses.replace(defaults, **values)
 
@@ -246,13 +277,31 @@ def _checked(declared: dataclasses.Field[Any], default: Any, value: Any, where: 
     return value
 
 
-def _site(name: str, value: Any, where: str) -> tuple[float, float, float]:
-    good = isinstance(value, list | tuple) and len(value) == 3 and all(isinstance(v, int | float) for v in value)
-    if not good or not 6.2e6 < sum(float(v) ** 2 for v in value) ** 0.5 < 6.5e6:
-        raise UsageError(
-            f"{where}: [sites] {name}: expected [x, y, z] in metres from the Earth's centre, got {value!r}"
-        )
-    return (float(value[0]), float(value[1]), float(value[2]))
+def _site(name: str, value: Any, where: str) -> Vector:
+    try:
+        return read_place(value)
+    except ValueError as expected:
+        raise UsageError(f"{where}: [sites] {name}: expected {expected}, got {value!r}") from None
+
+
+def _companions(companions: Companions, where: str) -> None:
+    """Raise `UsageError` for a pattern that cannot name a file beside the image's own."""
+    for kind in COMPANION_KINDS:
+        pattern = getattr(companions, kind)
+        if pattern and not is_companion_pattern(pattern):
+            raise UsageError(
+                f"{where}: [companions] {kind}: expected a file name in which {{name}} or {{stem}} stands once for that of "
+                f'the image, and more, such as "{{stem}}.{kind}.fits" or "{kind}/{{name}}", got {pattern!r}'
+            )
+
+
+def is_companion_pattern(pattern: str) -> bool:
+    """Whether a pattern names FITS files that are not the image itself."""
+    places = pattern.count("{stem}") + pattern.count("{name}")
+    bare = pattern.replace("{stem}", "").replace("{name}", "")
+    ends = pattern.endswith("{name}") or pattern.lower().endswith((".fits", ".fit", ".fts"))
+    more = bare.lower().removesuffix(".fits").removesuffix(".fit").removesuffix(".fts").strip("./")
+    return places == 1 and ends and bool(more) and not pattern.startswith("/") and "{" not in bare
 
 
 def _table(name: str, value: Any, where: str) -> dict[str, Any]:
@@ -261,26 +310,33 @@ def _table(name: str, value: Any, where: str) -> dict[str, Any]:
     return dict(value)
 
 
-def _nearest(name: str, valid: Mapping[str, Any]) -> str:
-    close = difflib.get_close_matches(name, list(valid), n=1, cutoff=0.5)
-    return f"; did you mean {close[0]!r}?" if close else f"; there are {', '.join(sorted(valid))}"
-
-
 def render(settings: Settings, plugin_defaults: Mapping[str, Any] | None = None) -> str:
     """The settings as commented TOML. `plugin_defaults` maps plugin names to instances whose settings are listed too."""
     lines = ["# Settings of hindlight. Every line is optional; what is left out has the value shown here."]
     for entry in fields(settings):
         section = getattr(settings, entry.name)
         if entry.name == "sites":
-            lines += ["", "# Places of instruments whose headers give none, as [x, y, z] in metres (ITRF).", "[sites]"]
+            lines += [
+                "",
+                "# Places of instruments whose headers give none, or to be named in [[frames]] blocks.",
+                "[sites]",
+            ]
+            lines += [f"# north = {SITE_FORMS}"] if not section else []
             lines += [f"{_key(name)} = {list(value)}" for name, value in sorted(section.items())]
+        elif entry.name == "frames":
+            lines += render_blocks(section)
         elif entry.name != "plugin":
-            lines += ["", f"# {type(section).__doc__}", f"[{entry.name}]", *_setting_lines(section)]
+            lines += ["", *_doc_lines(section), f"[{entry.name}]", *_setting_lines(section)]
     for name, instance in sorted((plugin_defaults or {}).items()):
         declared = _setting_lines(instance)
         if declared:
             lines += ["", f"[plugin.{name}]", *declared]
     return "\n".join(lines) + "\n"
+
+
+def _doc_lines(section: Any) -> list[str]:
+    """The docstring of a section as comments."""
+    return [f"# {line}" for line in inspect.cleandoc(type(section).__doc__ or "").splitlines() if line.strip()]
 
 
 def _setting_lines(section: Any) -> list[str]:

@@ -1,6 +1,7 @@
-"""What an archive holds, in a few rows: frames by channel, targets covered, what was set aside or taken for granted.
+"""What an archive holds, in a few rows: frames by channel and year, targets covered, what was set aside or assumed.
 
-Only counts and medians of the frame table; printing them is the command line's business.
+Also what is missing, and the settings that would supply it. Only counts and medians of the frame table; printing them is
+the command line's business.
 """
 
 from __future__ import annotations
@@ -13,11 +14,29 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from hindlight.blocks import FACTS, WHERE_MISSING, block_lines
 from hindlight.facts import NAN
 from hindlight.footprints import coverage_matrix
+from hindlight.knowledge import block_for
 from hindlight.lightcurve import FloatArray
 from hindlight.schema import ASSUMPTIONS, REASONS
 from hindlight.systems import unit_vectors
+
+UNIX_EPOCH_MJD = 40587
+SUPPLIED_BY = {
+    "no_instrument": "instrument_name",
+    "geocentre": "site",
+    "scale_assumed": "time_scale",
+    "start_assumed": "date_means",
+    "no_exposure": "exposure_s",
+    "span_is_good_time": "good_time_fraction",
+    "no_unit": "unit",
+    "no_beam": "beam_arcsec",
+    "no_frequency": "frequency_hz",
+    "stokes_assumed": "stokes",
+    "primary_beam_unknown": "primary_beam",
+    "primary_beam_apparent": "primary_beam_fwhm_deg",
+}  # a word of an assumption -> the key of a block that ends it
 
 
 @dataclass(frozen=True)
@@ -60,6 +79,33 @@ class Count:
 
 
 @dataclass(frozen=True)
+class Coverage:
+    """How many frames of an instrument there are in each calendar year, and how many without a date."""
+
+    instrument: str
+    years: Mapping[int, int]
+    undated: int
+
+
+@dataclass(frozen=True)
+class Missing:
+    """What the headers of an instrument's frames do not say: for each key of a `[[frames]]` block how many lack it."""
+
+    instrument: str
+    n_frames: int
+    lacking: Mapping[str, int]
+
+
+@dataclass(frozen=True)
+class Timeline:
+    """Frames by instrument in columns of `step` years, the first of which begins with the year `first`."""
+
+    first: int
+    step: int
+    rows: tuple[tuple[str, tuple[int, ...]], ...]
+
+
+@dataclass(frozen=True)
 class Summary:
     """What an archive holds: channels in order of instrument and label, targets as given, words most frequent first."""
 
@@ -68,6 +114,8 @@ class Summary:
     targets: tuple[TargetSummary, ...]
     rejects: tuple[Count, ...]
     assumptions: tuple[Count, ...]
+    coverage: tuple[Coverage, ...] = ()
+    missing: tuple[Missing, ...] = ()
 
 
 def summarise(
@@ -81,19 +129,88 @@ def summarise(
     labels = np.asarray(frames["channel"], dtype=object)
     rows_of = {label: np.flatnonzero(labels == label) for label in sorted(set(labels.tolist()))}
     channels = [_channel(frames, label, rows) for label, rows in rows_of.items()]
-    words = Counter(word for text in frames["assumptions"] for word in words_of(text))
+    words: Counter[str] = Counter()
+    for text, count in Counter(frames["assumptions"]).items():
+        words.update(dict.fromkeys(words_of(text), count))
     return Summary(
         n_frames=len(labels),
         channels=tuple(sorted(channels, key=lambda c: (c.instrument, c.channel))),
         targets=_targets(frames, rows_of, target_names, np.asarray(ra, float), np.asarray(dec, float)),
         rejects=_counts(Counter(str(row["reason"]) for row in rejects), REASONS),
         assumptions=_counts(words, ASSUMPTIONS),
+        coverage=_coverage(frames),
+        missing=_missing(frames),
     )
 
 
 def words_of(assumptions: str) -> list[str]:
     """The words in a frame's `assumptions`, without their sentences."""
     return [part.partition(":")[0].strip() for part in assumptions.split(";") if part.strip()]
+
+
+def _by_instrument(frames: Mapping[str, Any]) -> dict[str, NDArray[np.int64]]:
+    names = np.asarray(frames["instrument"], dtype=object)
+    return {name: np.flatnonzero(names == name) for name in sorted(set(names.tolist()))}
+
+
+def _coverage(frames: Mapping[str, Any]) -> tuple[Coverage, ...]:
+    found = []
+    for name, rows in _by_instrument(frames).items():
+        mjd = _finite(frames["middle_mjd_tdb"][rows])
+        days = (np.floor(mjd) - UNIX_EPOCH_MJD).astype("timedelta64[D]")
+        years = (np.datetime64(0, "D") + days).astype("datetime64[Y]").astype(int) + 1970
+        found.append(Coverage(name, dict(sorted(Counter(years.tolist()).items())), len(rows) - len(mjd)))
+    return tuple(found)
+
+
+def timeline(coverage: Sequence[Coverage], columns: int) -> Timeline:
+    """The coverage in at most so many columns (ten or more), of 1, 2, 5, 10, 20... years as fits."""
+    years = [year for row in coverage for year in row.years]
+    if not years:
+        return Timeline(0, 1, ())
+    steps = (base * 10**power for power in range(5) for base in (1, 2, 5))
+    step = next(s for s in steps if max(years) // s - min(years) // s < max(10, columns))
+    first = min(years) // step
+    rows = []
+    for row in coverage:
+        counts = [0] * (max(years) // step - first + 1)
+        for year, count in row.years.items():
+            counts[year // step - first] += count
+        rows.append((row.instrument, tuple(counts)))
+    return Timeline(first * step, step, tuple(rows))
+
+
+def _missing(frames: Mapping[str, Any]) -> tuple[Missing, ...]:
+    """What a block of settings could supply, instruments with the most frames first."""
+    found = []
+    for name, rows in _by_instrument(frames).items():
+        lacking: Counter[str] = Counter()
+        for text, count in Counter(frames["assumptions"][rows]).items():
+            lacking.update({SUPPLIED_BY[word]: count for word in words_of(text) if word in SUPPLIED_BY})
+        if lacking:
+            found.append(Missing(name, len(rows), {key: lacking[key] for key in FACTS if key in lacking}))
+    return tuple(sorted(found, key=lambda row: (-row.n_frames, row.instrument)))
+
+
+def settings_to_fill_in(missing: Sequence[Missing]) -> str:
+    """The `[[frames]]` blocks that would supply what is missing, as TOML in which every value is a comment to complete.
+
+    What only some frames of an instrument lack goes into a block of its own that leaves the others as they are.
+    """
+    lines: list[str] = []
+    for row in missing:
+        everywhere = [key for key, count in row.lacking.items() if count == row.n_frames]
+        for keys, more in ((everywhere, {}), ([k for k in row.lacking if k not in everywhere], {WHERE_MISSING: True})):
+            if keys:
+                lines += ["", *block_lines({**block_for(row.instrument), **more})]
+                lines += [_to_fill_in(key, row) for key in keys]
+    return "\n".join(lines[1:]) + "\n" if lines else ""
+
+
+def _to_fill_in(key: str, row: Missing) -> str:
+    few = row.lacking[key] < row.n_frames
+    count = f"{row.lacking[key]} of {row.n_frames} frames" if few else f"all {row.n_frames} frames"
+    return f'# {key} = ""  # {count}: {FACTS[key].doc}, as {FACTS[key].example}'
 
 
 def _channel(frames: Mapping[str, Any], label: str, rows: NDArray[np.int64]) -> ChannelSummary:

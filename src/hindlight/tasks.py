@@ -31,13 +31,13 @@ from hindlight.plugin import Candidate, Cutout, Finding, PeriodResult
 from hindlight.positions import moved
 from hindlight.ranking import Thresholds
 from hindlight.schema import MEASUREMENTS, UNUSABLE
-from hindlight.settings import Settings
+from hindlight.settings import COMPANION_KINDS, Settings
 from hindlight.store import Columns, Piece, RunFolder
 from hindlight.systems import BadWcsError, NoCelestialError, unit_vectors
 
 JULIAN_YEAR_S = 31557600.0
 MOST_ANCHORS = 100  # comparisons of a frame that tell its shift
-MEASURED = ("x", "y", "flux", "flux_err", "background", "rms", "flags", "shift_x", "shift_y")
+MEASURED = ("x", "y", "flux", "flux_err", "background", "rms", "gain", "flags", "shift_x", "shift_y")
 
 
 @dataclass(frozen=True)
@@ -76,11 +76,15 @@ def book(run: str, version: str) -> Book:
 def frame_facts(frames: Columns, row: int) -> photometry.FrameToMeasure:
     """What photometry needs to know of a frame, from its row in the frame table."""
     value = {name: values[row] for name, values in frames.items()}
+    named = {kind: value[f"{kind}_file"] for kind in COMPANION_KINDS if value[f"{kind}_file"]}
+    companions = {kind: str(Path(value["archive"]) / path) for kind, path in named.items()}
     return photometry.FrameToMeasure(
         path=local_path(str(value["archive"]), str(value["path"])), hdu=int(value["hdu"]), plane=int(value["plane"]),
         mjd=float(value["middle_mjd_tdb"]), beam_major=float(value["beam_major"]),
         beam_minor=float(value["beam_minor"]), beam_angle=float(value["beam_angle"]), unit=str(value["unit"]),
         electrons_per_unit=float(value["electrons_per_unit"]), saturation=float(value["saturation"]),
+        primary_beam=str(value["primary_beam"]), primary_beam_fwhm_deg=float(value["primary_beam_fwhm_deg"]),
+        companions=companions,
     )  # fmt: skip
 
 
@@ -171,7 +175,6 @@ def _measure_frame(
     columns["t_tdb_s"] = middle + shift * np.ones(n)
     columns["bjd_tdb"] = clock.bjd(columns["t_tdb_s"])
     columns["exposure_s"] = np.full(n, frames["exposure_s"][row])
-    columns["gain"] = np.ones(n)
     return columns
 
 
