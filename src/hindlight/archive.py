@@ -205,7 +205,7 @@ def _plausible(facts: FrameFacts, hdu: Hdu) -> FrameFacts:
         left_out |= dict.fromkeys(durations, NAN)
         if "exposure_s" in durations and facts.unit.endswith("/s"):
             left_out["electrons_per_unit"] = NAN  # they were counted over that exposure
-    if hdu.cards.contradicted():
+    if hdu.cards.contradicted:
         words.append("repeated_keyword")
     return replace(facts, **left_out, assumptions=(*facts.assumptions, *words)) if words else facts
 
