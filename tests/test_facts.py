@@ -11,7 +11,7 @@ from astropy.time import Time
 from hypothesis import given
 from hypothesis import strategies as st
 
-from hindlight.facts import Cards, Moment, parse_value
+from hindlight.facts import Cards, Moment, parse_value, visible
 
 KEYS = st.from_regex(r"[A-Z][A-Z0-9_-]{0,7}", fullmatch=True).filter(
     lambda key: key not in ("END", "COMMENT", "HISTORY", "CONTINUE", "HIERARCH", "SIMPLE", "BITPIX", "EXTEND")
@@ -184,3 +184,31 @@ def test_later(day: int, seconds: float, more: float) -> None:
     later = Moment(day, seconds).plus(more)
     assert (later.mjd - day) * 86400 + later.seconds == pytest.approx(seconds + more, abs=1e-6)
     assert 0 <= later.seconds <= 86400
+
+
+def test_repeated_keywords() -> None:
+    """A keyword with two values contradicts itself; the same value twice, and what may stand often, do not."""
+
+    def cards(*texts: str) -> Cards:
+        return Cards("".join(text.ljust(80) for text in texts).encode("latin-1"))
+
+    history = ("HISTORY one", "HISTORY two", "COMMENT x", "COMMENT y", "", "")
+    assert not cards("CRVAL1  = 1.0", *history).contradicted
+    assert not cards("CRVAL1  = 1.0", "CRVAL1  = 1.00 / the same", *history).contradicted
+    assert cards("CRVAL1  = 1.0", "CRVAL1  = 2.0", *history).contradicted
+    assert cards("OBJECT  = 'a'", "OBJECT  = 'b'").contradicted
+
+
+@pytest.mark.parametrize(
+    ("text", "shown"),
+    [
+        ("plain é µ", "plain é µ"),
+        ("a\nb\t", "a\\nb\\t"),
+        ("\x1b[31m", "\\x1b[31m"),
+        ("\udcff", "\\udcff"),
+        ("\x85", "\\x85"),
+    ],
+)
+def test_visible(text: str, shown: str) -> None:
+    """Control characters are written out, all else is left."""
+    assert visible(text) == shown

@@ -295,7 +295,7 @@ def _facts(
         raise SetAsideError("no_dialect", "no dialect recognises the header")
     if read[1].scale not in clock.SCALES:
         raise SetAsideError("bad_header", f"dialect {read[0]} gave the unknown time scale {read[1].scale!r}")
-    words = (*words, "repeated_keyword") if cards.contradicted() else words
+    words = (*words, "repeated_keyword") if cards.contradicted else words
     facts = _plausible(read[1])
     return read[0], replace(facts, assumptions=(*facts.assumptions, *words)) if words else facts
 

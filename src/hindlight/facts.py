@@ -9,7 +9,7 @@ import re
 from collections.abc import Iterator
 from dataclasses import dataclass, field
 from datetime import date
-from functools import lru_cache
+from functools import cached_property, lru_cache
 
 CARD = 80
 ORDINAL_OF_MJD = 678576  # of MJD 0, 1858-11-17, as Python counts days
@@ -156,7 +156,10 @@ class Cards:
         starts = range(0, len(text) - CARD + 1, CARD)
         keys = [text[start : start + 8].rstrip() for start in starts]
         self._index = dict(zip(reversed(keys), reversed(starts), strict=True))  # the first of a repeated keyword stays
-        self._repeats = len(keys) != len(self._index)
+        repeats = len(keys) - len(self._index)
+        if repeats:
+            repeats -= sum(keys.count(key) - 1 for key in _FREE if key in self._index)
+        self._repeats = repeats > 0
 
     def __contains__(self, key: str) -> bool:
         return key in self._index
@@ -168,6 +171,7 @@ class Cards:
     def __iter__(self) -> Iterator[str]:
         return reversed(self._index)
 
+    @cached_property
     def contradicted(self) -> bool:
         """Whether a keyword stands more than once, with different values."""
         if not self._repeats:

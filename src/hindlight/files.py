@@ -50,7 +50,7 @@ def path_text(path: str) -> str:
     Newlines and tabs stay. Other paths are left alone, but for one that has such an escape in its own name, so that
     `local_path` always finds the way back.
     """
-    if not (_UNFIT.search(path) or _ESCAPE.search(os.fsencode(path))):
+    if not (_UNFIT.search(path) or ("\\x" in path and _ESCAPE.search(os.fsencode(path)))):
         return path
     return _UNFIT.sub(
         lambda found: "".join(f"\\x{byte:02x}" for byte in os.fsencode(found[0])), path.replace("\\", r"\x5c")
@@ -59,6 +59,8 @@ def path_text(path: str) -> str:
 
 def local_path(archive: str, path: str = "") -> str:
     """Where the system finds a file of an archive, both as `path_text` writes them."""
+    if "\\x" not in archive and "\\x" not in path:
+        return os.path.join(archive, path) if path else archive
     names = (_ESCAPE.sub(lambda found: bytes([int(found[1], 16)]), os.fsencode(text)) for text in (archive, path))
     return os.path.join(*(os.fsdecode(name) for name in names)) if path else os.fsdecode(next(names))
 

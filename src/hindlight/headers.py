@@ -218,6 +218,8 @@ def _layout(raw: bytes, offset: int, index: int) -> Hdu:
 
 def _scaling(cards: Cards, key: str, default: float) -> float:
     """The number on a card, `default` where the card is absent or left empty, NaN for anything else."""
+    if key not in cards:
+        return default
     left_empty = cards.card(key)[8:].partition("/")[0].strip(" =") == ""
     return default if left_empty else cards.number(key)
 
