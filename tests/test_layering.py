@@ -15,8 +15,8 @@ PLUGINS = Path(hindlight_plugins.__file__).parent
 ORDER = [
     "errors", "schema", "settings", "facts", "lightcurve", "plugin", "hookspecs", "tables", "host", "fence", "clock",
     "systems", "celestial", "sky", "headers", "files", "channels", "outlines", "footprints", "archive", "summary",
-    "positions", "pixels", "background", "detection", "photometry", "ensemble", "store", "judge", "calibrate", "ranking",
-    "timing", "candidates", "plan", "tasks", "conclude", "outcome", "crew", "record", "verdicts", "runner", "survey",
+    "positions", "pixels", "background", "detection", "photometry", "duplicates", "ensemble", "store", "judge", "calibrate",
+    "ranking", "timing", "candidates", "plan", "tasks", "conclude", "outcome", "crew", "record", "verdicts", "runner", "survey",
     "export", "demo", "testing", "cli", "__main__",
 ]  # fmt: skip
 PLUGINS_MAY_IMPORT = {"hindlight", "numpy", "scipy", "astropy", "photutils", "nifty_ls"}

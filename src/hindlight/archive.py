@@ -29,7 +29,7 @@ from hindlight.systems import NoCelestialError
 
 FILES_AT_ONCE = 512
 MEGABYTE = 1_000_000
-ADDED_LATER = ("id", "batch", "channel", "state")
+ADDED_LATER = ("id", "batch", "channel", "state", "duplicate_of", "related_to")
 BEAM_PIXELS = (0.5, 100.0)  # a stated width outside it is no width of a point source in this image
 
 Columns = dict[str, NDArray[Any]]
@@ -40,8 +40,8 @@ class WalkResult(NamedTuple):
     """What a walk found.
 
     frames
-        Columns of `schema.FRAMES` without those that are given later (id, batch, channel, state), of new and changed
-        files only, in order of archive, path, HDU and plane.
+        Columns of `schema.FRAMES` without those that are given later (`ADDED_LATER`), of new and changed files only, in
+        order of archive, path, HDU and plane.
     rejects
         Rows of `schema.REJECTS`, of new and changed files only.
     present, unchanged

@@ -13,6 +13,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from hindlight.duplicates import counts, waiting
 from hindlight.errors import UsageError
 from hindlight.footprints import coverage_matrix
 from hindlight.lightcurve import FloatArray, IntArray
@@ -46,29 +47,39 @@ def file_keys(frames: Mapping[str, Any]) -> NDArray[np.object_]:
     return keys
 
 
-def merge_frames(
-    pinned: Columns, found: Mapping[str, Any], present: set[tuple[str, str]], batch_frames: int
-) -> Columns:
+def merge_frames(pinned: Columns, found: Mapping[str, Any], present: set[tuple[str, str]]) -> Columns:
     """The frame table with what a new walk found.
 
     `found` holds the frames of new and changed files, channel given; `present` every file still there. Frames of a
-    changed file become void and its new frames are added; those of a file that is gone stay, marked.
+    changed file become void and its new frames are added; those of a file that is gone stay, marked. New frames, and
+    copies of a frame that is void now, wait to be compared: see `batched`.
     """
     frames = {name: values.copy() for name, values in pinned.items()}
     changed = set(file_keys(found).tolist())
     for index, key in enumerate(file_keys(frames)):
         if frames["state"][index] != "void":
             frames["state"][index] = "void" if key in changed else "current" if key in present else "vanished"
+    gone = frames["id"][frames["state"] == "void"]
+    frames["duplicate_of"][np.isin(frames["duplicate_of"], gone)] = -1
     n = len(found["path"])
     if n == 0:
         return frames
     first_id = int(frames["id"].max()) + 1 if len(frames["id"]) else 0
-    first_batch = int(frames["batch"].max()) + 1 if len(frames["batch"]) else 0
     added = dict(found)
     added["id"] = first_id + np.arange(n)
-    added["batch"] = first_batch + np.arange(n) // batch_frames
     added["state"] = np.full(n, "current", object)
+    for name in ("batch", "duplicate_of", "related_to"):
+        added[name] = np.full(n, -1)
     return append(frames if len(frames["id"]) else empty(FRAMES), added)
+
+
+def batched(frames: Columns, batch_frames: int) -> Columns:
+    """The frame table with every frame that waits for a batch, and is no copy of another, in one."""
+    rows = np.flatnonzero(waiting(frames))
+    first_batch = int(frames["batch"].max()) + 1 if len(frames["batch"]) else 0
+    batch = frames["batch"].copy()
+    batch[rows] = first_batch + np.arange(len(rows)) // batch_frames
+    return {**frames, "batch": batch}
 
 
 @dataclass(frozen=True, eq=False)
@@ -153,7 +164,7 @@ def lost_frames(frames: Columns) -> list[dict[str, Any]]:
     said = {"vanished": ("vanished", "the file is gone; its measurements are kept"),
             "void": ("changed", "the file has changed; it is measured anew")}  # fmt: skip
     rows = []
-    for row in np.flatnonzero(np.isin(frames["state"], list(said))):
+    for row in np.flatnonzero(np.isin(frames["state"], list(said)) & (frames["duplicate_of"] < 0)):
         reason, detail = said[frames["state"][row]]
         place = {"path": str(frames["path"][row]), "hdu": int(frames["hdu"][row]), "plane": int(frames["plane"][row])}
         rows.append({**place, "reason": reason, "detail": detail, "archive": str(frames["archive"][row])})
@@ -185,7 +196,7 @@ def joined(parts: Sequence[BrightSources]) -> BrightSources:
 
 def chosen_field_size(frames: Columns, settings: Controls) -> float:
     """The side of a field in degrees: as set, or half the median footprint."""
-    return settings.field_size_deg or field_size(frames["radius"])
+    return settings.field_size_deg or field_size(frames["radius"][counts(frames)])
 
 
 @dataclass(frozen=True, eq=False)
@@ -207,7 +218,7 @@ def covered(frames: Columns, rows: IntArray, vectors: FloatArray) -> NDArray[np.
 
 def field_frames(frames: Columns, vectors: FloatArray) -> FieldFrames:
     """The frames (at most some thousands, evenly spaced) that cover any of the positions (n, 3)."""
-    usable = np.flatnonzero(frames["state"] != "void")
+    usable = np.flatnonzero(counts(frames))
     inside = covered(frames, usable, vectors)
     hit = np.flatnonzero(inside.any(axis=1))
     if len(hit) > SAMPLED_FRAMES:

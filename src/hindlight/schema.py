@@ -57,6 +57,7 @@ REASONS = {
     "not_measured": "an estimator plugin failed on the frame",
     "vanished": "the file was there when the run began and is gone",
     "changed": "the file has changed since it was measured",
+    "duplicate_of": "the same exposure as another frame, which is kept: it counts once",
 }
 
 ASSUMPTIONS = {
@@ -98,7 +99,7 @@ FRAMES = (
     TableColumn("digest", "of the header's bytes and the file's size", dtype="str"),
     TableColumn("size", "bytes of the file", unit="byte", dtype="int64"),
     TableColumn("modified_ns", "modification time of the file when it was read", unit="ns", dtype="int64"),
-    TableColumn("batch", "piece of work the frame belongs to", dtype="int64"),
+    TableColumn("batch", "piece of work the frame belongs to, -1 for none", dtype="int64"),
     TableColumn("channel", "key of comparable fluxes", dtype="str"),
     TableColumn("instrument", "instrument", dtype="str", ucd="meta.id;instr"),
     TableColumn("band", "filter or band", dtype="str", ucd="instr.bandpass"),
@@ -143,6 +144,8 @@ FRAMES = (
     TableColumn("primary_beam", "corrected, uncorrected or unknown", dtype="str"),
     TableColumn("dialect", "plugin that read the header", dtype="str"),
     TableColumn("state", "current, vanished (kept) or void (the file has changed since)", dtype="str"),
+    TableColumn("duplicate_of", "id of the frame kept of the same exposure, -1 for none", dtype="int64"),
+    TableColumn("related_to", "id of the deep image that holds this exposure, -1 for none", dtype="int64"),
     TableColumn("assumptions", "each thing taken for granted: word and sentence", dtype="str", ucd="meta.note"),
 )
 
@@ -254,7 +257,11 @@ CHANNELS = (
     TableColumn("threshold_above_quiet", "the same for the excess over the quiet level", ucd="stat.snr"),
     TableColumn("threshold_mean", "the same for the mean flux over its error", ucd="stat.snr"),
     TableColumn("n_controls", "blank positions that set the thresholds", dtype="int64", ucd="meta.number"),
-    TableColumn("quiet_level", "flux when not bright", ucd="phot.flux"),
+    TableColumn(
+        "quiet_level",
+        "flux when not bright; from the deep images without a bright frame where those are more precise",
+        ucd="phot.flux",
+    ),
     TableColumn("quiet_level_err", "its 1-sigma error", ucd="stat.error;phot.flux"),
     TableColumn("flux_mean", "weighted mean flux over all usable frames, seen or not", ucd="phot.flux;stat.mean"),
     TableColumn("flux_mean_err", "its 1-sigma error", ucd="stat.error;phot.flux"),
@@ -274,6 +281,14 @@ CHANNELS = (
         "k-sigma limit of a median frame on the excess over the quiet level",
         ucd="phot.flux;stat.max",
     ),
+    TableColumn(
+        "n_deep",
+        "deep images made of frames counted here: their noise is not independent of those, so no other count has them",
+        dtype="int64",
+        ucd="meta.number;obs",
+    ),
+    TableColumn("deep_flux", "weighted mean flux in the deep images", ucd="phot.flux;stat.mean"),
+    TableColumn("deep_flux_err", "its 1-sigma error", ucd="stat.error;phot.flux"),
 )
 
 CANDIDATES = (

@@ -61,13 +61,18 @@ class Count:
 
 @dataclass(frozen=True)
 class Summary:
-    """What an archive holds: channels in order of instrument and label, targets as given, words most frequent first."""
+    """What an archive holds: channels in order of instrument and label, targets as given, words most frequent first.
+
+    `possible_duplicates` are pairs of frames, `deep_images` frames that hold others.
+    """
 
     n_frames: int
     channels: tuple[ChannelSummary, ...]
     targets: tuple[TargetSummary, ...]
     rejects: tuple[Count, ...]
     assumptions: tuple[Count, ...]
+    possible_duplicates: int = 0
+    deep_images: int = 0
 
 
 def summarise(
