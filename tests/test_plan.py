@@ -63,6 +63,24 @@ def test_changed_and_vanished_files_are_marked():
     assert third["state"].tolist() == ["current", "void", "current", "current"]
 
 
+def test_moved_files_keep_their_frames():
+    """A file that turns up elsewhere, or whose exact copy is left, is the same frame; a file that is only like it is not."""
+    digests = ["p", "q", "q", "r"]
+    rows = {**found(list("abcd")), "digest": np.array(digests, object)}
+    first = plan.merge_frames(plan.empty(FRAMES), rows, keys("abcd"))
+    first["duplicate_of"][2] = 1
+    first = plan.batched(first, 2)
+    moved = {**found(["e", "f"]), "digest": np.array(["p", "s"], object)}
+    second = plan.merge_frames(first, moved, keys("cdef"))
+    assert second["path"].tolist() == ["e", "c", "b", "d", "f"]
+    assert second["state"].tolist() == ["current", "current", "vanished", "current", "current"]
+    assert second["batch"].tolist() == [0, 0, -1, 1, -1]
+    assert plan.lost_frames(second) == []
+    third = plan.merge_frames(second, found([]), keys("bcdef"))
+    assert third["path"].tolist() == second["path"].tolist()
+    assert set(third["state"]) == {"current"}
+
+
 def test_a_name_that_moved_is_refused():
     """A target whose name is in the run at another place is refused, with both places."""
     targets = Targets(("x",), np.array([10.0]), np.array([5.0]), {})

@@ -10,7 +10,7 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
-from functools import cache
+from functools import cache, lru_cache
 from typing import Any
 
 import numpy as np
@@ -42,7 +42,8 @@ WIDEST = 0.98  # frames that reach at least this fraction of the widest copy sho
 
 WINDOWS = 8  # at most, across and down
 WINDOW_FWHM = 2.0  # half width of a window
-HALF_WIDTHS = (3, 24)  # pixels
+HALF_WIDTHS = (3, 11)  # pixels
+SAMPLES_KEPT = 512  # of at most 34,000 pixels each
 SHIFT_TOLERANCE = 0.05  # pixels: grids shifted by a whole number to this accuracy are one grid
 FEWEST_PIXELS = 64
 AGREEING = 0.98  # of the pixels that say anything must be equal
@@ -385,7 +386,7 @@ def compare(
     def opened(index: int) -> OpenFrame:
         return open_frame(frames[index], settings)
 
-    @cache
+    @lru_cache(SAMPLES_KEPT)
     def own(index: int, half: int) -> Sample:
         return _sample(opened(index), *_pattern(opened(index), half), half)
 
@@ -398,7 +399,7 @@ def compare(
                 other = own(b, half)
             else:
                 other = _mapped(opened(a), opened(b), half, frames[a].mjd, frames[b].mjd)
-            likeness = alike(own(a, half), other, _beam_pixels(opened(a)))
+            likeness = alike(own(a, half), other, _per_value(opened(a), own(a, half)), _reach(opened(a), half))
         except (SetAsideError, OSError, ValueError):
             likeness = Likeness()
         found.append(Likeness("", likeness.correlation) if equal_only and likeness.word != "equal" else likeness)
@@ -414,9 +415,20 @@ def _one_grid(a: OpenFrame, b: OpenFrame) -> bool:
     return a.sky is b.sky and (a.place.width, a.place.height) == (b.place.width, b.place.height)
 
 
-def _beam_pixels(frame: OpenFrame) -> float:
-    """Pixels whose noise is one independent value, at least one."""
-    return max(1.0, math.pi * frame.beam.major * frame.beam.minor / (4.0 * math.log(2.0)))
+def _per_value(frame: OpenFrame, sample: Sample) -> float:
+    """Pixels of a sample for each independent value of the noise, at least one.
+
+    There is one a beam, or one a window where those are smaller, but not more than beams in the image.
+    """
+    beam = max(1.0, math.pi * frame.beam.major * frame.beam.minor / (4.0 * math.log(2.0)))
+    n_windows, n_pixels = len(sample.values), sample.values.size
+    independent = min(max(n_pixels / beam, n_windows), frame.place.width * frame.place.height / beam)
+    return n_pixels / max(1.0, independent)
+
+
+def _reach(frame: OpenFrame, half: int) -> int:
+    """How far around a bright pixel its source is taken to reach."""
+    return max(1, min(half, round(frame.beam.fwhm)))
 
 
 def _half_width(frame: OpenFrame) -> int:
@@ -478,8 +490,10 @@ def _linear(offset: FloatArray) -> FloatArray:
     return np.stack([np.maximum(-offset, 0.0), 1.0 - np.abs(offset), np.maximum(offset, 0.0)], axis=1)
 
 
-def alike(a: Sample, b: Sample, beam_pixels: float) -> Likeness:
-    """What two samples of the same places say of their images; `beam_pixels` of them have one independent noise value.
+def alike(a: Sample, b: Sample, per_value: float, reach: int = 1) -> Likeness:
+    """What two samples of the same places say of their images.
+
+    `per_value` of their pixels have one independent value of the noise; sources reach `reach` pixels.
 
     Equal: nearly all pixels that are not the background's commonest value agree within the step of storing, and unlike
     images would not. Noise: what is left without local level and without sources is correlated beyond chance.
@@ -489,10 +503,10 @@ def alike(a: Sample, b: Sample, beam_pixels: float) -> Likeness:
         return Likeness()
     flat_a, sigma_a = _flat(a.values, good)
     flat_b, sigma_b = _flat(b.values, good)
-    if _equal(a, b, good, min(sigma_a, sigma_b), beam_pixels):
+    if _equal(a, b, good, min(sigma_a, sigma_b), per_value):
         return Likeness("equal", 1.0)
-    clean = good & ~_bright(flat_a, sigma_a, beam_pixels) & ~_bright(flat_b, sigma_b, beam_pixels)
-    independent = np.count_nonzero(clean) / beam_pixels
+    clean = good & ~_bright(flat_a, sigma_a, reach) & ~_bright(flat_b, sigma_b, reach)
+    independent = np.count_nonzero(clean) / per_value
     if independent <= 4.0 or min(np.std(flat_a[clean]), np.std(flat_b[clean])) == 0.0:
         return Likeness()
     rho = float(np.corrcoef(flat_a[clean], flat_b[clean])[0, 1])
@@ -509,17 +523,16 @@ def _flat(values: FloatArray, good: Mask) -> tuple[FloatArray, float]:
     return flat, MAD_TO_SIGMA * float(np.median(np.abs(flat[good])))
 
 
-def _bright(flat: FloatArray, sigma: float, beam_pixels: float) -> Mask:
-    """Pixels that belong to sources or holes: far from the window's median, or within a beam's width of one that is.
+def _bright(flat: FloatArray, sigma: float, reach: int) -> Mask:
+    """Pixels that belong to sources or holes: far from the window's median, or within `reach` of one that is.
 
     Wings of sources are in both images; left in, they would pass for shared noise.
     """
-    reach = max(1, round(beam_pixels**0.5))
     disc = np.hypot(*np.mgrid[-reach : reach + 1, -reach : reach + 1]) <= reach
     return np.asarray(ndimage.binary_dilation(np.abs(flat) >= CLIP_SIGMA * sigma, disc[None]))
 
 
-def _equal(a: Sample, b: Sample, good: Mask, sigma: float, beam_pixels: float) -> bool:
+def _equal(a: Sample, b: Sample, good: Mask, sigma: float, per_value: float) -> bool:
     """Whether the pixels that say anything are the same, and would not be by chance."""
     x, y = a.values[good], b.values[good]
     telling = (x != np.median(x)) | (y != np.median(y))
@@ -533,4 +546,4 @@ def _equal(a: Sample, b: Sample, good: Mask, sigma: float, beam_pixels: float) -
         return float(np.mean(np.abs(x - other) <= tolerance + ROUNDING * np.abs(x)))
 
     by_chance = max(agreement(np.random.default_rng(PATTERN_SEED).permutation(y)), 1.0 / len(y))
-    return agreement(y) >= AGREEING and -math.log(by_chance) * len(x) / beam_pixels > CHANCE
+    return agreement(y) >= AGREEING and -math.log(by_chance) * len(x) / per_value > CHANCE

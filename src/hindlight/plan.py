@@ -26,6 +26,8 @@ SAMPLED_FRAMES = 4000  # coverage is judged on at most this many frames of a fie
 WIDE_BEAM = 0.9  # controls stand apart by the beam that this fraction of the frames does not exceed
 SAME_PLACE_DEG = 1e-6
 
+PLACE = ("archive", "path", "modified_ns")  # of a file that is moved, all that changes
+
 Columns = dict[str, Any]
 
 
@@ -51,14 +53,17 @@ def merge_frames(pinned: Columns, found: Mapping[str, Any], present: set[tuple[s
     """The frame table with what a new walk found.
 
     `found` holds the frames of new and changed files, channel given; `present` every file still there. Frames of a
-    changed file become void and its new frames are added; those of a file that is gone stay, marked. New frames, and
-    copies of a frame that is void now, wait to be compared: see `batched`.
+    changed file become void and its new frames are added; those of a file that is gone stay, marked; those of one that
+    was moved, or of which a copy is left, keep their row. New frames, and copies of a frame that is void now, wait to be
+    compared: see `batched`.
     """
     frames = {name: values.copy() for name, values in pinned.items()}
     changed = set(file_keys(found).tolist())
     for index, key in enumerate(file_keys(frames)):
         if frames["state"][index] != "void":
             frames["state"][index] = "void" if key in changed else "current" if key in present else "vanished"
+    found = _moved(frames, found)
+    _stand_in(frames)
     gone = frames["id"][frames["state"] == "void"]
     frames["duplicate_of"][np.isin(frames["duplicate_of"], gone)] = -1
     n = len(found["path"])
@@ -71,6 +76,44 @@ def merge_frames(pinned: Columns, found: Mapping[str, Any], present: set[tuple[s
     for name in ("batch", "duplicate_of", "related_to"):
         added[name] = np.full(n, -1)
     return append(frames if len(frames["id"]) else empty(FRAMES), added)
+
+
+def _moved(frames: Columns, found: Mapping[str, Any]) -> Mapping[str, Any]:
+    """What was found but for frames whose file was only moved: those that vanished take their new places in `frames`."""
+    places: dict[tuple[Any, ...], list[int]] = {}
+    lost = _lost(frames)
+    for row in range(len(found["path"])) if lost else ():
+        places.setdefault(_identity(found, row), []).append(row)
+    taken = []
+    for row in lost:
+        if again := places.get(_identity(frames, row)):
+            taken.append(again.pop(0))
+            for name in PLACE:
+                frames[name][row] = found[name][taken[-1]]
+            frames["state"][row] = "current"
+    return {name: np.delete(np.asarray(values), taken) for name, values in found.items()} if taken else found
+
+
+def _stand_in(frames: Columns) -> None:
+    """Let an exact copy that is there change places with the frame kept where that has vanished."""
+    lost = {int(frames["id"][row]): row for row in _lost(frames)}
+    for copy in np.flatnonzero((frames["duplicate_of"] >= 0) & (frames["state"] == "current")).tolist() if lost else ():
+        kept = lost.get(int(frames["duplicate_of"][copy]))
+        if kept is not None and _identity(frames, kept) == _identity(frames, copy):
+            for name in (*PLACE, "state"):
+                frames[name][[kept, copy]] = frames[name][[copy, kept]]
+            del lost[int(frames["id"][kept])]
+
+
+def _lost(frames: Columns) -> list[int]:
+    """The vanished frames whose header is known, copies of others last."""
+    rows = np.flatnonzero((frames["state"] == "vanished") & (frames["digest"] != ""))
+    return sorted(rows.tolist(), key=lambda row: (bool(frames["duplicate_of"][row] >= 0), row))
+
+
+def _identity(frames: Mapping[str, Any], row: int) -> tuple[Any, ...]:
+    """What a frame keeps when its file is moved: the digest of header and size, HDU and plane."""
+    return tuple(frames[name][row] for name in ("digest", "hdu", "plane"))
 
 
 def batched(frames: Columns, batch_frames: int) -> Columns:

@@ -217,6 +217,7 @@ LIGHT_CURVE = (
     TableColumn("background", "local background per pixel that was taken off", ucd="instr.background"),
     TableColumn("rms", "robust local noise per pixel", ucd="instr.det.noise"),
     TableColumn("detected", "whether the measurement is above the channel's threshold", dtype="bool"),
+    TableColumn("deep", "whether it is in a deep image made of other frames here, which is not judged", dtype="bool"),
     TableColumn("x", "0-based pixel, first axis", unit="pixel", ucd="pos.cartesian.x;instr.det"),
     TableColumn("y", "0-based pixel, second axis", unit="pixel", ucd="pos.cartesian.y;instr.det"),
     TableColumn("flags", "bits, see the README", dtype="int64", ucd="meta.code.qual"),
