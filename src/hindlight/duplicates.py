@@ -10,7 +10,7 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
-from functools import cache, lru_cache
+from functools import cache, cached_property, lru_cache
 from typing import Any
 
 import numpy as np
@@ -376,6 +376,31 @@ class Sample:
     quantum: float = 0.0
     packed: bool = False
 
+    @cached_property
+    def flat(self) -> FloatArray:
+        """The values without their windows' medians, 0 where there is no value."""
+        flat = np.zeros(self.values.shape)
+        for window, out in zip(self.values, flat, strict=True):
+            there = np.isfinite(window)
+            if there.any():
+                out[there] = window[there] - np.median(window[there])
+        return flat
+
+    @cached_property
+    def sigma(self) -> float:
+        """1.4826 MAD of the flat values; NaN where there is none."""
+        there = np.isfinite(self.values)
+        return MAD_TO_SIGMA * float(np.median(np.abs(self.flat[there]))) if there.any() else float("nan")
+
+    def background(self, reach: int) -> Mask:
+        """Pixels that belong to no source and no hole: not far from the window's median nor within `reach` of such.
+
+        Wings of sources are in both images; left in, they would pass for shared noise.
+        """
+        disc = np.hypot(*np.mgrid[-reach : reach + 1, -reach : reach + 1]) <= reach
+        far = np.abs(self.flat) >= CLIP_SIGMA * self.sigma
+        return np.asarray(~ndimage.binary_dilation(far, disc[None]) & np.isfinite(self.values))
+
 
 def compare(
     frames: Sequence[FrameToMeasure], pairs: Sequence[tuple[int, int]], strict: Sequence[bool], settings: Settings
@@ -399,10 +424,10 @@ def compare(
                 other = own(b, half)
             else:
                 other = _mapped(opened(a), opened(b), half, frames[a].mjd, frames[b].mjd)
-            likeness = alike(own(a, half), other, _per_value(opened(a), own(a, half)), _reach(opened(a), half))
+            per_value, reach = _per_value(opened(a), own(a, half)), _reach(opened(a), half)
+            found.append(alike(own(a, half), other, per_value, reach, equal_only))
         except (SetAsideError, OSError, ValueError):
-            likeness = Likeness()
-        found.append(Likeness("", likeness.correlation) if equal_only and likeness.word != "equal" else likeness)
+            found.append(Likeness())
     return found
 
 
@@ -490,7 +515,7 @@ def _linear(offset: FloatArray) -> FloatArray:
     return np.stack([np.maximum(-offset, 0.0), 1.0 - np.abs(offset), np.maximum(offset, 0.0)], axis=1)
 
 
-def alike(a: Sample, b: Sample, per_value: float, reach: int = 1) -> Likeness:
+def alike(a: Sample, b: Sample, per_value: float, reach: int = 1, equal_only: bool = False) -> Likeness:
     """What two samples of the same places say of their images.
 
     `per_value` of their pixels have one independent value of the noise; sources reach `reach` pixels.
@@ -498,52 +523,36 @@ def alike(a: Sample, b: Sample, per_value: float, reach: int = 1) -> Likeness:
     Equal: nearly all pixels that are not the background's commonest value agree within the step of storing, and unlike
     images would not. Noise: what is left without local level and without sources is correlated beyond chance.
     """
-    good = np.isfinite(a.values) & np.isfinite(b.values)
-    if np.count_nonzero(good) < FEWEST_PIXELS:
-        return Likeness()
-    flat_a, sigma_a = _flat(a.values, good)
-    flat_b, sigma_b = _flat(b.values, good)
-    if _equal(a, b, good, min(sigma_a, sigma_b), per_value):
+    if _equal(a, b, per_value):
         return Likeness("equal", 1.0)
-    clean = good & ~_bright(flat_a, sigma_a, reach) & ~_bright(flat_b, sigma_b, reach)
-    independent = np.count_nonzero(clean) / per_value
-    if independent <= 4.0 or min(np.std(flat_a[clean]), np.std(flat_b[clean])) == 0.0:
+    if equal_only:
         return Likeness()
-    rho = float(np.corrcoef(flat_a[clean], flat_b[clean])[0, 1])
+    clean = a.background(reach) & b.background(reach)
+    independent = np.count_nonzero(clean) / per_value
+    if independent <= 4.0 or np.count_nonzero(clean) < FEWEST_PIXELS:
+        return Likeness()
+    if min(np.std(a.flat[clean]), np.std(b.flat[clean])) == 0.0:
+        return Likeness()
+    rho = float(np.corrcoef(a.flat[clean], b.flat[clean])[0, 1])
     beyond = math.atanh(min(rho, 1.0 - 1e-12)) * math.sqrt(independent - 3.0)  # R. A. Fisher 1921
     return Likeness("noise" if rho > SHARED_NOISE and beyond > SIGNIFICANCE else "", rho)
 
 
-def _flat(values: FloatArray, good: Mask) -> tuple[FloatArray, float]:
-    """The windows without their medians, 0 where not good; and 1.4826 MAD of the good pixels."""
-    flat = np.zeros(values.shape)
-    for window, use, out in zip(values, good, flat, strict=True):
-        if use.any():
-            out[use] = window[use] - np.median(window[use])
-    return flat, MAD_TO_SIGMA * float(np.median(np.abs(flat[good])))
-
-
-def _bright(flat: FloatArray, sigma: float, reach: int) -> Mask:
-    """Pixels that belong to sources or holes: far from the window's median, or within `reach` of one that is.
-
-    Wings of sources are in both images; left in, they would pass for shared noise.
-    """
-    disc = np.hypot(*np.mgrid[-reach : reach + 1, -reach : reach + 1]) <= reach
-    return np.asarray(ndimage.binary_dilation(np.abs(flat) >= CLIP_SIGMA * sigma, disc[None]))
-
-
-def _equal(a: Sample, b: Sample, good: Mask, sigma: float, per_value: float) -> bool:
+def _equal(a: Sample, b: Sample, per_value: float) -> bool:
     """Whether the pixels that say anything are the same, and would not be by chance."""
+    good = np.isfinite(a.values) & np.isfinite(b.values)
+    if np.count_nonzero(good) < FEWEST_PIXELS:
+        return False
     x, y = a.values[good], b.values[good]
     telling = (x != np.median(x)) | (y != np.median(y))
     x, y = x[telling], y[telling]
-    if len(x) < FEWEST_PIXELS:
-        return False
-    step = HALF_STEP * max(a.quantum, b.quantum)
-    tolerance = NOISE_SHARE * sigma if a.packed or b.packed else min(step, NOISE_SHARE * sigma)
+    most = NOISE_SHARE * min(a.sigma, b.sigma)
+    tolerance = most if a.packed or b.packed else min(HALF_STEP * max(a.quantum, b.quantum), most)
 
     def agreement(other: FloatArray) -> float:
         return float(np.mean(np.abs(x - other) <= tolerance + ROUNDING * np.abs(x)))
 
+    if len(x) < FEWEST_PIXELS or agreement(y) < AGREEING:
+        return False
     by_chance = max(agreement(np.random.default_rng(PATTERN_SEED).permutation(y)), 1.0 / len(y))
-    return agreement(y) >= AGREEING and -math.log(by_chance) * len(x) / per_value > CHANCE
+    return -math.log(by_chance) * len(x) / per_value > CHANCE
