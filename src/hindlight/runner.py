@@ -74,8 +74,7 @@ def _mine_locked(
         pairs = duplicates.candidates(frames)
         if len(pairs):  # what the walk found is kept if the run is stopped while it compares
             _write_frames(session, request, frames, rejects, size)
-            frames = {**frames, "duplicate_of": _duplicates(session, frames, pairs)}
-        frames = plan.batched({**frames, "related_to": duplicates.related(frames)}, settings.flow.batch_frames)
+        frames = _compared(session, frames, pairs)
         rejects = _distinct([*rejects, *duplicates.rejects(frames)])
         size = size or plan.chosen_field_size(frames, settings.controls)
         _write_frames(session, request, frames, rejects, size)
@@ -95,8 +94,16 @@ def _write_frames(session: Session, request: Request, frames: Columns, rejects: 
     session.run.write_columns("frames.parquet", FRAMES, frames)
 
 
-def _duplicates(session: Session, frames: Columns, pairs: duplicates.Pairs) -> Any:
-    """The column `duplicate_of` after the pixels of these pairs have been compared."""
+def _compared(session: Session, frames: Columns, pairs: duplicates.Pairs) -> Columns:
+    """The frame table with copies, deep images and batches told, once the pixels of these pairs have been compared."""
+    same = _same_exposure(session, frames, pairs) if len(pairs) else np.zeros(0, bool)
+    frames = {**frames, "duplicate_of": duplicates.settled(frames, pairs.first[same], pairs.second[same])}
+    frames["related_to"] = duplicates.related(frames)
+    return plan.batched(frames, session.order.settings.flow.batch_frames)
+
+
+def _same_exposure(session: Session, frames: Columns, pairs: duplicates.Pairs) -> Any:
+    """Which of the pairs are one exposure, by their pixels."""
     session.watcher.stage("comparing pixels of possible duplicates", len(pairs))
     pieces = duplicates.jobs(pairs)
     same = np.zeros(len(pairs), bool)
@@ -108,7 +115,7 @@ def _duplicates(session: Session, frames: Columns, pairs: duplicates.Pairs) -> A
     todo = [tasks.comparison(session.order, frames, pairs, piece) for piece in pieces]
     session.crew.run(duplicates.compare, todo, done)
     log.info("duplicates: %d of %d possible pairs are one exposure", np.count_nonzero(same), len(pairs))
-    return duplicates.settled(frames, pairs.first[same], pairs.second[same])
+    return same
 
 
 def _measured_and_judged(session: Session, frames: Columns, positions: Columns, rejects: list[Row]) -> Outcome:
