@@ -4,6 +4,7 @@ import numpy as np
 import pytest
 
 from hindlight import plan
+from hindlight.duplicates import waiting
 from hindlight.errors import UsageError
 from hindlight.positions import BlankSky, Targets, separation_deg
 from hindlight.schema import FRAMES
@@ -17,7 +18,7 @@ def found(paths, archive="a", channel="c"):
     columns = plan.empty(FRAMES)
     rows = {}
     for name, values in columns.items():
-        if name not in ("id", "batch", "state"):
+        if name not in ("id", "batch", "state", "duplicate_of", "related_to"):
             rows[name] = np.zeros(n, values.dtype) if values.dtype != object else np.full(n, "", object)
     rows["path"][:] = paths
     rows["archive"][:] = archive
@@ -32,21 +33,52 @@ def keys(paths):
 
 def test_batches_are_given_once_and_only_added_to():
     """Five files in batches of two, then three more: the first batches stay as they were."""
-    first = plan.merge_frames(plan.empty(FRAMES), found(list("abcde")), keys("abcde"), 2)
+    first = plan.batched(plan.merge_frames(plan.empty(FRAMES), found(list("abcde")), keys("abcde")), 2)
     assert first["batch"].tolist() == [0, 0, 1, 1, 2]
-    more = plan.merge_frames(first, found(list("fgh")), keys("abcdefgh"), 2)
+    more = plan.batched(plan.merge_frames(first, found(list("fgh")), keys("abcdefgh")), 2)
     assert more["batch"].tolist() == [0, 0, 1, 1, 2, 3, 3, 4]
     assert more["id"].tolist() == list(range(8))
 
 
+def test_copies_belong_to_no_batch_until_the_frame_kept_has_changed():
+    """A copy is in no batch; when the file of the frame kept changes, the copy waits to be compared again."""
+    first = plan.merge_frames(plan.empty(FRAMES), found(list("abc")), keys("abc"))
+    first["duplicate_of"][1] = 0
+    first = plan.batched(first, 2)
+    assert first["batch"].tolist() == [0, -1, 0]
+    assert not waiting(first).any()
+    second = plan.merge_frames(first, found(["a"]), keys("abc"))
+    assert second["duplicate_of"].tolist() == [-1, -1, -1, -1]
+    assert waiting(second).tolist() == [False, True, False, True]
+    assert plan.batched(second, 2)["batch"].tolist() == [0, 1, 0, 1]
+
+
 def test_changed_and_vanished_files_are_marked():
     """A changed file's old frames are void and its new ones added; a vanished one's are kept; one that is back counts."""
-    first = plan.merge_frames(plan.empty(FRAMES), found(list("abc")), keys("abc"), 2)
-    second = plan.merge_frames(first, found(["b"]), keys("ab"), 2)
+    first = plan.merge_frames(plan.empty(FRAMES), found(list("abc")), keys("abc"))
+    second = plan.merge_frames(first, found(["b"]), keys("ab"))
     assert second["state"].tolist() == ["current", "void", "vanished", "current"]
     assert [row["reason"] for row in plan.lost_frames(second)] == ["changed", "vanished"]
-    third = plan.merge_frames(second, found([]), keys("abc"), 2)
+    third = plan.merge_frames(second, found([]), keys("abc"))
     assert third["state"].tolist() == ["current", "void", "current", "current"]
+
+
+def test_moved_files_keep_their_frames():
+    """A file that turns up elsewhere, or whose exact copy is left, is the same frame; a file that is only like it is not."""
+    digests = ["p", "q", "q", "r"]
+    rows = {**found(list("abcd")), "digest": np.array(digests, object)}
+    first = plan.merge_frames(plan.empty(FRAMES), rows, keys("abcd"))
+    first["duplicate_of"][2] = 1
+    first = plan.batched(first, 2)
+    moved = {**found(["e", "f"]), "digest": np.array(["p", "s"], object)}
+    second = plan.merge_frames(first, moved, keys("cdef"))
+    assert second["path"].tolist() == ["e", "c", "b", "d", "f"]
+    assert second["state"].tolist() == ["current", "current", "vanished", "current", "current"]
+    assert second["batch"].tolist() == [0, 0, -1, 1, -1]
+    assert plan.lost_frames(second) == []
+    third = plan.merge_frames(second, found([]), keys("bcdef"))
+    assert third["path"].tolist() == second["path"].tolist()
+    assert set(third["state"]) == {"current"}
 
 
 def test_a_name_that_moved_is_refused():
@@ -86,7 +118,7 @@ def test_controls_stand_clear_of_targets_sources_and_each_other():
     frames["footprint"][:] = outline
     frames["centre_ra"][:] = 0.0
     frames["radius"][:] = 0.43
-    table = plan.merge_frames(plan.empty(FRAMES), frames, keys("f"), 4)
+    table = plan.merge_frames(plan.empty(FRAMES), frames, keys("f"))
     targets = Targets(("x", "y"), np.array([0.05, 359.9]), np.array([0.0, 0.1]), {})
     positions = plan.add_targets(plan.no_positions(), targets, np.arange(2), 30.0)
     within = plan.field_frames(table, unit_vectors(targets.ra, targets.dec))

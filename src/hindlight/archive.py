@@ -41,7 +41,7 @@ MEGABYTE = 1_000_000
 AUTO = "auto"
 PLAUSIBLE_MJD = (-3242, 88_069)  # 1850-01-01 and 2100-01-01
 LONGEST_EXPOSURE_S = 100 * clock.DAY_S
-ADDED_LATER = ("id", "batch", "channel", "state")
+ADDED_LATER = ("id", "batch", "channel", "state", "duplicate_of", "related_to")
 BEAM_PIXELS = (0.5, 100.0)  # a stated width outside it is no width of a point source in this image
 ARCSEC_PIXELS = (1.5, 100.0)  # what a width stated in arcsec must be, where degrees were expected
 GOOD_FRACTION = 0.999  # less good time than this in the span is said to be intermittent
@@ -55,8 +55,8 @@ class WalkResult(NamedTuple):
     """What a walk found.
 
     frames
-        Columns of `schema.FRAMES` without those that are given later (id, batch, channel, state), of new and changed
-        files only, in order of archive, path, HDU and plane.
+        Columns of `schema.FRAMES` without those that are given later (`ADDED_LATER`), of new and changed files only, in
+        order of archive, path, HDU and plane.
     rejects
         Rows of `schema.REJECTS`, of new and changed files only.
     present, unchanged

@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from hindlight.calibrate import extra_scatter, runs, upper_bound
 from hindlight.fence import Fault
-from hindlight.lightcurve import FloatArray, LightCurve, weighted_mean
+from hindlight.lightcurve import FloatArray, IntArray, LightCurve, weighted_mean
 from hindlight.plugin import PeriodResult
 from hindlight.ranking import Thresholds
 from hindlight.settings import Detection
@@ -29,12 +29,18 @@ Mask = NDArray[np.bool_]
 
 @dataclass(frozen=True, eq=False)
 class ChannelView:
-    """One channel of a target: its curve, how many frames cover it, how many of them are calibrated, its thresholds."""
+    """One channel of a target: its curve, how many frames cover it, how many of them are calibrated, and its thresholds.
+
+    `deep` are its fluxes in deep images made of frames of the curve, and `within` the deep image that each sample of
+    the curve belongs to, -1 for none; None where the channel has no deep image.
+    """
 
     curve: LightCurve
     n_frames: int
     n_calibrated: int
     thresholds: Thresholds
+    deep: LightCurve | None = None
+    within: IntArray | None = None
 
     @property
     def snr(self) -> FloatArray:
@@ -63,7 +69,30 @@ class ChannelView:
             return False
         mean, error = weighted_mean(self.curve.flux, self.curve.flux_err)
         in_mean = (abs(mean) if self.curve.channel.signed else mean) > self.thresholds.mean * error
-        return bool(in_mean or self.detected.any())
+        return bool(in_mean or self.detected.any() or self.seen_deep)
+
+    @property
+    def deep_mean(self) -> tuple[float, float]:
+        """Weighted mean flux of the deep images and its error, NaN where there are none."""
+        return _mean(self.deep)
+
+    @property
+    def seen_deep(self) -> bool:
+        """Seen in the deep images together; what one of many frames must exceed is more than enough for them."""
+        flux, error = self.deep_mean
+        return bool((abs(flux) if self.curve.channel.signed else flux) > self.thresholds.detected * error)
+
+    @property
+    def quiet_level(self) -> tuple[float, float]:
+        """The flux when the source is not bright, from snapshots or from deep images, whichever is more precise.
+
+        A deep image that holds a bright snapshot shows the brightening too and is left out.
+        """
+        own = self.curve.quiet_level
+        if self.deep is None or self.within is None:
+            return own
+        quiet = _mean(self.deep.select(~np.isin(self.deep.frame, self.within[self.bright])))
+        return own if own[1] <= quiet[1] or np.isnan(quiet[1]) else quiet
 
     @property
     def quiet_otherwise(self) -> bool:
@@ -80,6 +109,10 @@ class ChannelView:
         mean, _ = weighted_mean(flux, error)
         reduced = float((((flux - mean) / error) ** 2).sum()) / (int(rest.sum()) - 1)
         return bool(reduced <= self.thresholds.reduced and self.bright.mean() <= MOST_BRIGHT)
+
+
+def _mean(curve: LightCurve | None) -> tuple[float, float]:
+    return (float("nan"), float("nan")) if curve is None else weighted_mean(curve.flux, curve.flux_err)
 
 
 @dataclass(frozen=True, eq=False)
@@ -258,7 +291,8 @@ def channel_row(view: View, c: ChannelView) -> dict[str, Any]:
     """One row of channels.ecsv."""
     curve = c.curve
     mean, error = weighted_mean(curve.flux, curve.flux_err)
-    quiet, quiet_err = curve.quiet_level
+    quiet, quiet_err = c.quiet_level
+    deep, deep_err = c.deep_mean
     typical = float(np.median(curve.flux_err)) if len(curve) else float("nan")
     return {
         "name": view.name,
@@ -279,7 +313,10 @@ def channel_row(view: View, c: ChannelView) -> dict[str, Any]:
         "scatter": extra_scatter(curve.flux, curve.flux_err),
         "limit_sigma": c.thresholds.detected * typical,
         "limit_bayes": float("nan") if curve.channel.signed else upper_bound(mean, error),
-        "limit_above_quiet": c.thresholds.above_quiet * float(np.hypot(typical, quiet_err)),
+        "limit_above_quiet": c.thresholds.above_quiet * float(np.hypot(typical, curve.quiet_level[1])),
+        "n_deep": 0 if c.deep is None else len(c.deep),
+        "deep_flux": deep,
+        "deep_flux_err": deep_err,
     }
 
 

@@ -355,6 +355,9 @@ def _print_inventory(found: Any) -> None:
         for entry in counted:
             _add(table, str(entry.count), entry.word, entry.meaning)
         console.print(table if counted else f"{title}: nothing")
+    console.print(f"possible duplicates: {found.possible_duplicates} pairs, compared when mined")
+    if found.deep_images:
+        console.print(f"deep images that hold other frames: {found.deep_images}, kept apart from those when mined")
     text = settings_to_fill_in(found.missing)
     if text:
         click.echo(

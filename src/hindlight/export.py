@@ -73,6 +73,7 @@ def _columns(run: RunFolder, tables: tasks.Book, rows: dict[str, Any], target: s
         "raw_flux": rows["flux"],
         "raw_flux_err": rows["flux_err"],
         "detected": detected,
+        "deep": np.isin(rows["frame"], tables.frames["related_to"]),
         "path": [tasks.frame_label(tables.frames, int(row)) for row in at],
     }
 

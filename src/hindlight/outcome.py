@@ -102,6 +102,24 @@ def notes(found: Field, index: int, at: int, p: PValues, position_error_arcsec: 
     return "; ".join(said)
 
 
+def related_frames(frames: Mapping[str, Any]) -> tuple[str, ...]:
+    """What the last lines say of copies and of deep images; nothing where there are none."""
+    said = []
+    copies = int(np.count_nonzero((frames["duplicate_of"] >= 0) & (frames["state"] != "void")))
+    if copies:
+        said.append(
+            f"duplicates: {copies} frames are copies of an exposure that is kept, and count nowhere (rejects.ecsv)"
+        )
+    holds = np.unique(frames["related_to"][frames["related_to"] >= 0])
+    parts = int(np.count_nonzero((frames["related_to"] >= 0) & ~np.isin(frames["id"], holds)))
+    if parts:
+        said.append(
+            f"related: {len(holds)} deep images hold {parts} of the other frames: those are judged for variability, the "
+            "deep ones count for the quiet level alone (channels.ecsv)"
+        )
+    return tuple(said)
+
+
 def remarks(p: PValues, fields: Sequence[Field], settings: Settings) -> tuple[str, ...]:
     """What the last lines of a run must say."""
     said = []

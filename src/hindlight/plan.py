@@ -13,6 +13,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from hindlight.duplicates import counts, waiting
 from hindlight.errors import UsageError
 from hindlight.footprints import coverage_matrix
 from hindlight.lightcurve import FloatArray, IntArray
@@ -24,6 +25,8 @@ from hindlight.systems import unit_vectors
 SAMPLED_FRAMES = 4000  # coverage is judged on at most this many frames of a field, evenly spaced
 WIDE_BEAM = 0.9  # controls stand apart by the beam that this fraction of the frames does not exceed
 SAME_PLACE_DEG = 1e-6
+
+PLACE = ("archive", "path", "modified_ns")  # of a file that is moved, all that changes
 
 Columns = dict[str, Any]
 
@@ -46,29 +49,80 @@ def file_keys(frames: Mapping[str, Any]) -> NDArray[np.object_]:
     return keys
 
 
-def merge_frames(
-    pinned: Columns, found: Mapping[str, Any], present: set[tuple[str, str]], batch_frames: int
-) -> Columns:
+def merge_frames(pinned: Columns, found: Mapping[str, Any], present: set[tuple[str, str]]) -> Columns:
     """The frame table with what a new walk found.
 
     `found` holds the frames of new and changed files, channel given; `present` every file still there. Frames of a
-    changed file become void and its new frames are added; those of a file that is gone stay, marked.
+    changed file become void and its new frames are added; those of a file that is gone stay, marked; those of one that
+    was moved, or of which a copy is left, keep their row. New frames, and copies of a frame that is void now, wait to be
+    compared: see `batched`.
     """
     frames = {name: values.copy() for name, values in pinned.items()}
     changed = set(file_keys(found).tolist())
     for index, key in enumerate(file_keys(frames)):
         if frames["state"][index] != "void":
             frames["state"][index] = "void" if key in changed else "current" if key in present else "vanished"
+    found = _moved(frames, found)
+    _stand_in(frames)
+    gone = frames["id"][frames["state"] == "void"]
+    frames["duplicate_of"][np.isin(frames["duplicate_of"], gone)] = -1
     n = len(found["path"])
     if n == 0:
         return frames
     first_id = int(frames["id"].max()) + 1 if len(frames["id"]) else 0
-    first_batch = int(frames["batch"].max()) + 1 if len(frames["batch"]) else 0
     added = dict(found)
     added["id"] = first_id + np.arange(n)
-    added["batch"] = first_batch + np.arange(n) // batch_frames
     added["state"] = np.full(n, "current", object)
+    for name in ("batch", "duplicate_of", "related_to"):
+        added[name] = np.full(n, -1)
     return append(frames if len(frames["id"]) else empty(FRAMES), added)
+
+
+def _moved(frames: Columns, found: Mapping[str, Any]) -> Mapping[str, Any]:
+    """What was found but for frames whose file was only moved: those that vanished take their new places in `frames`."""
+    places: dict[tuple[Any, ...], list[int]] = {}
+    lost = _lost(frames)
+    for row in range(len(found["path"])) if lost else ():
+        places.setdefault(_identity(found, row), []).append(row)
+    taken = []
+    for row in lost:
+        if again := places.get(_identity(frames, row)):
+            taken.append(again.pop(0))
+            for name in PLACE:
+                frames[name][row] = found[name][taken[-1]]
+            frames["state"][row] = "current"
+    return {name: np.delete(np.asarray(values), taken) for name, values in found.items()} if taken else found
+
+
+def _stand_in(frames: Columns) -> None:
+    """Let an exact copy that is there change places with the frame kept where that has vanished."""
+    lost = {int(frames["id"][row]): row for row in _lost(frames)}
+    for copy in np.flatnonzero((frames["duplicate_of"] >= 0) & (frames["state"] == "current")).tolist() if lost else ():
+        kept = lost.get(int(frames["duplicate_of"][copy]))
+        if kept is not None and _identity(frames, kept) == _identity(frames, copy):
+            for name in (*PLACE, "state"):
+                frames[name][[kept, copy]] = frames[name][[copy, kept]]
+            del lost[int(frames["id"][kept])]
+
+
+def _lost(frames: Columns) -> list[int]:
+    """The vanished frames whose header is known, copies of others last."""
+    rows = np.flatnonzero((frames["state"] == "vanished") & (frames["digest"] != ""))
+    return sorted(rows.tolist(), key=lambda row: (bool(frames["duplicate_of"][row] >= 0), row))
+
+
+def _identity(frames: Mapping[str, Any], row: int) -> tuple[Any, ...]:
+    """What a frame keeps when its file is moved: the digest of header and size, HDU and plane."""
+    return tuple(frames[name][row] for name in ("digest", "hdu", "plane"))
+
+
+def batched(frames: Columns, batch_frames: int) -> Columns:
+    """The frame table with every frame that waits for a batch, and is no copy of another, in one."""
+    rows = np.flatnonzero(waiting(frames))
+    first_batch = int(frames["batch"].max()) + 1 if len(frames["batch"]) else 0
+    batch = frames["batch"].copy()
+    batch[rows] = first_batch + np.arange(len(rows)) // batch_frames
+    return {**frames, "batch": batch}
 
 
 @dataclass(frozen=True, eq=False)
@@ -153,7 +207,7 @@ def lost_frames(frames: Columns) -> list[dict[str, Any]]:
     said = {"vanished": ("vanished", "the file is gone; its measurements are kept"),
             "void": ("changed", "the file has changed; it is measured anew")}  # fmt: skip
     rows = []
-    for row in np.flatnonzero(np.isin(frames["state"], list(said))):
+    for row in np.flatnonzero(np.isin(frames["state"], list(said)) & (frames["duplicate_of"] < 0)):
         reason, detail = said[frames["state"][row]]
         place = {"path": str(frames["path"][row]), "hdu": int(frames["hdu"][row]), "plane": int(frames["plane"][row])}
         rows.append({**place, "reason": reason, "detail": detail, "archive": str(frames["archive"][row])})
@@ -185,7 +239,7 @@ def joined(parts: Sequence[BrightSources]) -> BrightSources:
 
 def chosen_field_size(frames: Columns, settings: Controls) -> float:
     """The side of a field in degrees: as set, or half the median footprint."""
-    return settings.field_size_deg or field_size(frames["radius"])
+    return settings.field_size_deg or field_size(frames["radius"][counts(frames)])
 
 
 @dataclass(frozen=True, eq=False)
@@ -207,7 +261,7 @@ def covered(frames: Columns, rows: IntArray, vectors: FloatArray) -> NDArray[np.
 
 def field_frames(frames: Columns, vectors: FloatArray) -> FieldFrames:
     """The frames (at most some thousands, evenly spaced) that cover any of the positions (n, 3)."""
-    usable = np.flatnonzero(frames["state"] != "void")
+    usable = np.flatnonzero(counts(frames))
     inside = covered(frames, usable, vectors)
     hit = np.flatnonzero(inside.any(axis=1))
     if len(hit) > SAMPLED_FRAMES:

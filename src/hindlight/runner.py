@@ -15,7 +15,7 @@ from typing import Any
 
 import numpy as np
 
-from hindlight import archive, comparisons, ensemble, files, host, plan, record, store, tasks
+from hindlight import archive, comparisons, duplicates, ensemble, files, host, plan, record, store, tasks
 from hindlight.channels import assign
 from hindlight.crew import assembled
 from hindlight.errors import HindlightError, NothingToDoError, UsageError
@@ -71,16 +71,53 @@ def _mine_locked(
     settings = order.settings
     recorded = record.compare(run, request, settings, plugins)
     frames, rejects = _walked(run, request, settings, plugins, watcher)
-    size = float(recorded.get("field_size_deg", 0.0)) or plan.chosen_field_size(frames, settings.controls)
-    store.write_text(run, "settings.toml", record.text_of(request, settings, plugins, size))
-    _write_rejects(run, rejects)
-    run.write_columns("frames.parquet", FRAMES, frames)
+    size = float(recorded.get("field_size_deg", 0.0))
     small = len(frames["id"]) * (len(lists[0]) + settings.controls.per_field) < SMALL_WORK
     with assembled(request.workers, request.scheduler, small) as crew:
-        session = Session(run, crew, replace(order, version=run.version()), plugins, lists[0], watcher, lists[1])
+        session = Session(run, crew, order, plugins, lists[0], watcher, lists[1])
+        pairs = duplicates.candidates(frames)
+        if len(pairs):  # what the walk found is kept if the run is stopped while it compares
+            _write_frames(session, request, frames, rejects, size)
+        frames = _compared(session, frames, pairs)
+        rejects = _distinct([*rejects, *duplicates.rejects(frames)])
+        size = size or plan.chosen_field_size(frames, settings.controls)
+        _write_frames(session, request, frames, rejects, size)
+        session = replace(session, order=replace(order, version=run.version()))
         positions = _planned(session, frames, size)
         session = replace(session, order=replace(order, version=run.version()))
         return _measured_and_judged(session, frames, positions, rejects)
+
+
+def _write_frames(session: Session, request: Request, frames: Columns, rejects: Sequence[Row], size: float) -> None:
+    """Write the frame table and, before it, what must be there when it is; `size` of a field is 0 while unknown."""
+    text = record.text_of(request, session.order.settings, session.plugins, size)
+    store.write_text(session.run, "settings.toml", text)
+    _write_rejects(session.run, rejects)
+    session.run.write_columns("frames.parquet", FRAMES, frames)
+
+
+def _compared(session: Session, frames: Columns, pairs: duplicates.Pairs) -> Columns:
+    """The frame table with copies, deep images and batches told, once the pixels of these pairs have been compared."""
+    same = _same_exposure(session, frames, pairs) if len(pairs) else np.zeros(0, bool)
+    frames = {**frames, "duplicate_of": duplicates.settled(frames, pairs.first[same], pairs.second[same])}
+    frames["related_to"] = duplicates.related(frames)
+    return plan.batched(frames, session.order.settings.flow.batch_frames)
+
+
+def _same_exposure(session: Session, frames: Columns, pairs: duplicates.Pairs) -> Any:
+    """Which of the pairs are one exposure, by their pixels."""
+    session.watcher.stage("comparing pixels of possible duplicates", len(pairs))
+    pieces = duplicates.jobs(pairs)
+    same = np.zeros(len(pairs), bool)
+
+    def done(number: int, result: list[duplicates.Likeness]) -> None:
+        same[pieces[number]] = [bool(likeness.word) for likeness in result]
+        session.watcher.step(len(result))
+
+    todo = [tasks.comparison(session.order, frames, pairs, piece) for piece in pieces]
+    session.crew.run(duplicates.compare, todo, done)
+    log.info("duplicates: %d of %d possible pairs are one exposure", np.count_nonzero(same), len(pairs))
+    return same
 
 
 def _measured_and_judged(session: Session, frames: Columns, positions: Columns, rejects: list[Row]) -> Outcome:
@@ -147,7 +184,7 @@ def _walked(
     watcher.stage("reading headers", 0)
     found = archive.walk(request.folders, plugins.dialects, settings, known, watcher.step, [str(run.path)])
     labels = assign(found.frames, known, settings.channels)
-    frames = plan.merge_frames(known, {**found.frames, "channel": labels}, found.present, settings.flow.batch_frames)
+    frames = plan.merge_frames(known, {**found.frames, "channel": labels}, found.present)
     if not np.any(frames["state"] != "void"):
         what = f"{len(found.rejects)} files or HDUs were set aside" if found.rejects else "there is no FITS file"
         raise NothingToDoError(
@@ -164,7 +201,7 @@ def _earlier_rejects(run: RunFolder, unchanged: set[tuple[str, str]]) -> list[Ro
     table = read_ecsv(run.file("rejects.ecsv"))
     rows = [{c.name: int(r[c.name]) if c.dtype == "int64" else str(r[c.name]) for c in REJECTS} for r in table]
     kept = [row for row in rows if (row["archive"], row["path"]) in unchanged]
-    return [row for row in kept if row["reason"] not in ("vanished", "changed")]
+    return [row for row in kept if row["reason"] not in ("vanished", "changed", "duplicate_of")]
 
 
 def _distinct(rejects: Sequence[Row]) -> list[Row]:
@@ -276,7 +313,7 @@ def _comparisons(
 
 def _solved(session: Session, frames: Columns, positions: Columns) -> tuple[str, ...]:
     """Solve the flux scale of every channel from the measurements and write it; what to say of it in the last lines."""
-    batches = np.unique(frames["batch"][frames["state"] != "void"]).tolist()
+    batches = sorted({piece.batch for piece in store.pieces(frames, positions)})
     session.watcher.stage("solving the flux scale", len(batches))
     found: list[Any] = [None] * len(batches)
 

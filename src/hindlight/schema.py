@@ -62,6 +62,7 @@ REASONS = {
     "bad_companion": "a file that belongs to the image does not fit it",
     "vanished": "the file was there when the run began and is gone",
     "changed": "the file has changed since it was read or measured",
+    "duplicate_of": "the same exposure as another frame, which is kept: it counts once",
 }
 
 ASSUMPTIONS = {
@@ -128,7 +129,7 @@ FRAMES = (
     TableColumn("digest", "of the header's bytes and the file's size", dtype="str"),
     TableColumn("size", "bytes of the file", unit="byte", dtype="int64"),
     TableColumn("modified_ns", "modification time of the file when it was read", unit="ns", dtype="int64"),
-    TableColumn("batch", "piece of work the frame belongs to", dtype="int64"),
+    TableColumn("batch", "piece of work the frame belongs to, -1 for none", dtype="int64"),
     TableColumn("channel", "key of comparable fluxes", dtype="str"),
     TableColumn("instrument", "instrument", dtype="str", ucd="meta.id;instr"),
     TableColumn("band", "filter or band", dtype="str", ucd="instr.bandpass"),
@@ -192,6 +193,8 @@ FRAMES = (
     ),
     TableColumn("dialect", "plugin that read the header", dtype="str"),
     TableColumn("state", "current, vanished (kept) or void (the file has changed since)", dtype="str"),
+    TableColumn("duplicate_of", "id of the frame kept of the same exposure, -1 for none", dtype="int64"),
+    TableColumn("related_to", "id of the deep image that holds this exposure, -1 for none", dtype="int64"),
     TableColumn("assumptions", "each thing taken for granted: word and sentence", dtype="str", ucd="meta.note"),
 )
 
@@ -270,6 +273,7 @@ LIGHT_CURVE = (
     TableColumn("background", "local background per pixel that was taken off", ucd="instr.background"),
     TableColumn("rms", "robust local noise per pixel", ucd="instr.det.noise"),
     TableColumn("detected", "whether the measurement is above the channel's threshold", dtype="bool"),
+    TableColumn("deep", "whether it is in a deep image made of other frames here, which is not judged", dtype="bool"),
     TableColumn("x", "0-based pixel, first axis", unit="pixel", ucd="pos.cartesian.x;instr.det"),
     TableColumn("y", "0-based pixel, second axis", unit="pixel", ucd="pos.cartesian.y;instr.det"),
     TableColumn("flags", "bits, see the README", dtype="int64", ucd="meta.code.qual"),
@@ -313,7 +317,11 @@ CHANNELS = (
     TableColumn("threshold_above_quiet", "the same for the excess over the quiet level", ucd="stat.snr"),
     TableColumn("threshold_mean", "the same for the mean flux over its error", ucd="stat.snr"),
     TableColumn("n_controls", "blank positions that set the thresholds", dtype="int64", ucd="meta.number"),
-    TableColumn("quiet_level", "flux when not bright", ucd="phot.flux"),
+    TableColumn(
+        "quiet_level",
+        "flux when not bright; from the deep images without a bright frame where those are more precise",
+        ucd="phot.flux",
+    ),
     TableColumn("quiet_level_err", "its 1-sigma error", ucd="stat.error;phot.flux"),
     TableColumn("flux_mean", "weighted mean flux over all usable frames, seen or not", ucd="phot.flux;stat.mean"),
     TableColumn("flux_mean_err", "its 1-sigma error", ucd="stat.error;phot.flux"),
@@ -333,6 +341,14 @@ CHANNELS = (
         "k-sigma limit of a median frame on the excess over the quiet level",
         ucd="phot.flux;stat.max",
     ),
+    TableColumn(
+        "n_deep",
+        "deep images made of frames counted here: their noise is not independent of those, so no other count has them",
+        dtype="int64",
+        ucd="meta.number;obs",
+    ),
+    TableColumn("deep_flux", "weighted mean flux in the deep images", ucd="phot.flux;stat.mean"),
+    TableColumn("deep_flux_err", "its 1-sigma error", ucd="stat.error;phot.flux"),
 )
 
 CANDIDATES = (

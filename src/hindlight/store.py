@@ -140,7 +140,7 @@ def _take(stream: IO[str], run: Path) -> None:
 
 def pieces(frames: Columns, positions: Columns) -> list[Piece]:
     """Every piece of the plan, in order."""
-    batches = np.unique(frames["batch"][frames["state"] != "void"])
+    batches = np.unique(frames["batch"][(frames["state"] != "void") & (frames["batch"] >= 0)])
     rounds = np.unique(positions["round"])
     return [Piece(int(batch), int(round_)) for round_ in rounds for batch in batches]
 

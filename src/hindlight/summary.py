@@ -107,7 +107,10 @@ class Timeline:
 
 @dataclass(frozen=True)
 class Summary:
-    """What an archive holds: channels in order of instrument and label, targets as given, words most frequent first."""
+    """What an archive holds: channels in order of instrument and label, targets as given, words most frequent first.
+
+    `possible_duplicates` are pairs of frames, `deep_images` frames that hold others.
+    """
 
     n_frames: int
     channels: tuple[ChannelSummary, ...]
@@ -116,6 +119,8 @@ class Summary:
     assumptions: tuple[Count, ...]
     coverage: tuple[Coverage, ...] = ()
     missing: tuple[Missing, ...] = ()
+    possible_duplicates: int = 0
+    deep_images: int = 0
 
 
 def summarise(

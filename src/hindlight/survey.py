@@ -3,13 +3,16 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
-from hindlight import archive, files, host
+import numpy as np
+
+from hindlight import archive, duplicates, files, host
 from hindlight.channels import assign
 from hindlight.errors import NothingToDoError
-from hindlight.plan import empty
+from hindlight.plan import empty, merge_frames
 from hindlight.positions import read_targets
 from hindlight.schema import FRAMES
 from hindlight.settings import read_settings
@@ -31,7 +34,12 @@ def inventory(
         raise NothingToDoError(
             f"archive {', '.join(archives)}: no FITS file found; give a folder that holds .fits, .fit or .fts files"
         )
-    frames = {**found.frames, "channel": assign(found.frames, empty(FRAMES), settings.channels)}
-    if listed is None:
-        return summarise(frames, found.rejects)
-    return summarise(frames, found.rejects, listed.names, listed.ra, listed.dec)
+    labels = assign(found.frames, empty(FRAMES), settings.channels)
+    frames = merge_frames(empty(FRAMES), {**found.frames, "channel": labels}, found.present)
+    where = () if listed is None else (listed.names, listed.ra, listed.dec)
+    deep = np.unique(duplicates.related(frames))
+    return replace(
+        summarise(frames, found.rejects, *where),
+        possible_duplicates=len(duplicates.candidates(frames)),
+        deep_images=int(np.count_nonzero(deep >= 0)),
+    )

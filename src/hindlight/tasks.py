@@ -9,13 +9,13 @@ from __future__ import annotations
 from collections import Counter
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
-from functools import lru_cache, partial
+from functools import cached_property, lru_cache, partial
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 
-from hindlight import clock, host, judge, photometry, store
+from hindlight import clock, duplicates, host, judge, photometry, store
 from hindlight.background import MAD_TO_SIGMA
 from hindlight.candidates import ChannelView, Described, Examined, View, describe
 from hindlight.channels import channels_of
@@ -61,6 +61,11 @@ class Book:
     channels: dict[str, Channel]
     row_of_frame: dict[int, int] = field(default_factory=dict)
 
+    @cached_property
+    def deepest(self) -> IntArray:
+        """For each frame the id of the deepest image that holds it, -1 for none."""
+        return duplicates.deepest(self.frames)
+
 
 @lru_cache(maxsize=4)
 def book(run: str, version: str) -> Book:
@@ -91,6 +96,13 @@ def frame_facts(frames: Columns, row: int) -> photometry.FrameToMeasure:
 def frame_label(frames: Columns, row: int) -> str:
     """File, HDU and plane of a frame as one word."""
     return f"{frames['path'][row]}[{frames['hdu'][row]},{frames['plane'][row]}]"
+
+
+def comparison(order: Order, frames: Columns, pairs: duplicates.Pairs, piece: IntArray) -> tuple[Any, ...]:
+    """What `duplicates.compare` is to be given for some of the pairs."""
+    rows, index = np.unique(np.concatenate([pairs.first[piece], pairs.second[piece]]), return_inverse=True)
+    both = index.reshape(2, -1).T.tolist()
+    return [frame_facts(frames, int(row)) for row in rows], both, pairs.strict[piece].tolist(), order.settings
 
 
 def measure_piece(order: Order, piece: Piece) -> dict[str, int]:
@@ -254,17 +266,27 @@ def position_label(positions: Columns, row: int) -> str:
 
 
 def position_blocks(order: Order, ids: IntArray, frames: IntArray | None = None) -> dict[str, Any]:
-    """The blocks of these positions (ascending ids), one per channel, and the rows they were made from."""
+    """The blocks of these positions (ascending ids), one per channel, and the rows they were made from.
+
+    Deep images are kept apart from their own snapshots, whose noise they share: `deep` holds blocks of those that are
+    in no deeper one.
+    """
     tables = book(order.run, order.version)
     rows_of = np.searchsorted(tables.positions["id"], ids)
     rounds = set(tables.positions["round"][rows_of].tolist())
     plan = [p for p in store.pieces(tables.frames, tables.positions) if p.round in rounds]
     rows = store.read_rows(tables.folder, plan, ids, frames)
     void = tables.frames["id"][tables.frames["state"] == "void"]
-    keep = ~np.isin(rows["frame"], void)
-    rows = {name: values[keep] for name, values in rows.items()}
+    related = tables.frames["related_to"]
+    is_deep = np.isin(rows["frame"], related[related >= 0])
+    topmost = is_deep & np.isin(rows["frame"], tables.frames["id"][related < 0])
     names = [position_label(tables.positions, int(row)) for row in rows_of]
-    return {"rows": rows, "blocks": store.blocks(rows, ids, names, tables.solution, tables.channels)}
+    found = []
+    for keep in (~np.isin(rows["frame"], void) & ~is_deep, topmost):
+        mine = {name: values[keep] for name, values in rows.items()}
+        found.append((mine, store.blocks(mine, ids, names, tables.solution, tables.channels)))
+    (rows, blocks), (_, deep) = found
+    return {"rows": rows, "blocks": blocks, "deep": deep}
 
 
 def judge_positions(order: Order, ids: IntArray) -> judge.Judgement:
@@ -294,13 +316,20 @@ def describe_targets(
     found = position_blocks(order, ids)
     utc = tables.frames["middle_utc"]
     covering = Counter(zip(found["rows"]["position"].tolist(), found["rows"]["channel"].tolist(), strict=True))
+
+    def channel_view(row: int, target: int, label: str) -> ChannelView:
+        curve = found["blocks"][label].curve(row)
+        verdict = tables.solution["verdict"][np.searchsorted(tables.solution["frame"], curve.frame)]
+        n_calibrated = int((verdict == "good").sum())
+        if label not in found["deep"]:
+            return ChannelView(curve, covering[target, label], n_calibrated, thresholds[label])
+        within = tables.deepest[[tables.row_of_frame[frame] for frame in curve.frame.tolist()]]
+        deep = found["deep"][label].curve(row)
+        return ChannelView(curve, covering[target, label], n_calibrated, thresholds[label], deep, within)
+
     described = []
     for row, target in enumerate(ids.tolist()):
-        channels = tuple(
-            _channel_view(block.curve(row), covering[target, label], thresholds[label], tables.solution)
-            for label, block in found["blocks"].items()
-            if covering[target, label]
-        )
+        channels = tuple(channel_view(row, target, label) for label in found["blocks"] if covering[target, label])
         name = position_label(tables.positions, int(np.searchsorted(tables.positions["id"], target)))
         view = View(
             name, channels,
@@ -309,11 +338,6 @@ def describe_targets(
         )  # fmt: skip
         described.append(describe(view, given[row], decided[row], examined[row], order.settings.detection))
     return described
-
-
-def _channel_view(curve: LightCurve, n_frames: int, thresholds: Thresholds, solution: Columns) -> ChannelView:
-    verdict = solution["verdict"][np.searchsorted(solution["frame"], curve.frame)]
-    return ChannelView(curve, n_frames, int((verdict == "good").sum()), thresholds)
 
 
 def examine_target(order: Order, target: int, field_controls: IntArray, above_quiet: dict[str, float]) -> Examined:

@@ -18,6 +18,7 @@ from hindlight import conclude, host, judge, outcome, plan, store, tasks
 from hindlight.candidates import Described, Examined
 from hindlight.conclude import Field
 from hindlight.crew import Crew
+from hindlight.duplicates import counts
 from hindlight.errors import NothingToDoError
 from hindlight.fence import Fault, merged
 from hindlight.lightcurve import IntArray
@@ -242,12 +243,12 @@ def _result(
         run=run.path,
         table=table,
         standings={word: int(np.sum(table["standing"] == word)) for word in STANDINGS},
-        n_frames=int(np.sum(frames["state"] != "void")),
+        n_frames=int(np.count_nonzero(counts(frames))),
         n_measurements=int(sum(row["n_frames"] for target in described for row in target.channels)),
         rejects=dict(sorted(Counter(str(row["reason"]) for row in rejects).items())),
         faults=tuple(faults),
         extrapolated=int(p.extrapolated.sum()),
-        remarks=(*said, *outcome.remarks(p, fields, settings)),
+        remarks=(*outcome.related_frames(frames), *said, *outcome.remarks(p, fields, settings)),
     )
 
 
