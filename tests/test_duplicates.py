@@ -173,7 +173,7 @@ def view(flux, deep_err, bright_at=()):
     curve = LightCurve.from_arrays(np.arange(16.0), values, np.ones(16))
     deep = LightCurve.from_arrays(np.zeros(1), np.array([flux + 0.1]), np.array([deep_err]), frame=np.array([100]))
     within = np.where(np.arange(16) < 10, 100, -1)
-    return ChannelView(curve, 16, Thresholds(5.0, 5.0, 4.0, 2.0, 100), deep, within)
+    return ChannelView(curve, 16, 0, Thresholds(5.0, 5.0, 4.0, 2.0, 100), deep, within)
 
 
 def test_the_quiet_level_is_the_more_precise_one():

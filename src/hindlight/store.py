@@ -87,11 +87,13 @@ class RunFolder:
             path.unlink(missing_ok=True)
 
     def require(self) -> None:
-        """Raise `UsageError` unless this is a run that has been planned."""
-        if not self.file("positions.parquet").is_file():
+        """Raise `UsageError` unless this is a run that has been measured."""
+        if not self.has("positions.parquet"):
             raise UsageError(
                 f"{self.path}: no run here; make one with `hindlight mine ARCHIVE --targets FILE --out RUN`"
             )
+        if not self.has("frame_solution.parquet"):
+            raise UsageError(f"{self.path}: this run was stopped before all was measured; its command continues it")
 
     def has(self, name: str) -> bool:
         """Whether a file of the run is there."""
@@ -166,10 +168,9 @@ def part_rejects(run: RunFolder, plan: Iterable[Piece]) -> list[dict[str, Any]]:
 
 def read_rows(run: RunFolder, plan: Iterable[Piece], positions: IntArray, frames: IntArray | None = None) -> Columns:
     """All raw rows of these positions (and only these frames, if given), ordered by position and frame."""
-    wanted = pa.array(np.unique(positions))
-    filters: Any = [
-        ("position", ">=", int(positions.min())), ("position", "<=", int(positions.max())), ("position", "in", wanted)
-    ]  # fmt: skip
+    wanted = np.unique(positions)
+    first, last = (int(wanted[0]), int(wanted[-1])) if len(wanted) else (0, -1)
+    filters: Any = [("position", ">=", first), ("position", "<=", last), ("position", "in", pa.array(wanted))]
     if frames is not None:
         filters.append(("frame", "in", pa.array(np.unique(frames))))
     names = [c.name for c in MEASUREMENTS]
