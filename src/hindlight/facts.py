@@ -17,7 +17,7 @@ Value = str | float | int | bool | None
 NAN = float("nan")
 
 _CONTROL = re.compile(r"[\x00-\x1f\x7f-\x9f\u2028\u2029\ud800-\udfff]")
-_FREE = frozenset(("", "COMMENT", "HISTORY", "CONTINUE", "HIERARCH", "END"))  # may stand more than once
+_FREE = ("", "COMMENT", "HISTORY", "CONTINUE", "HIERARCH")  # may stand more than once
 _RECORD = re.compile(r"(DP|DQ|D2IM)\d")  # hold many values each, as 'NAME: value' (M. R. Calabretta et al. 2004, draft)
 _STRING = re.compile(r"\s*'((?:[^']|'')*)'")
 _WHOLE = re.compile(r"[+-]?[0-9]+")
@@ -156,10 +156,10 @@ class Cards:
         starts = range(0, len(text) - CARD + 1, CARD)
         keys = [text[start : start + 8].rstrip() for start in starts]
         self._index = dict(zip(reversed(keys), reversed(starts), strict=True))  # the first of a repeated keyword stays
-        repeats = len(keys) - len(self._index)
-        if repeats:
-            repeats -= sum(keys.count(key) - 1 for key in _FREE if key in self._index)
-        self._repeats = repeats > 0
+        self._repeats = len(keys) - len(self._index)
+        if self._repeats:
+            for key in _FREE:
+                self._repeats -= keys.count(key) - 1 if key in self._index else 0
 
     def __contains__(self, key: str) -> bool:
         return key in self._index
@@ -176,15 +176,15 @@ class Cards:
         """Whether a keyword stands more than once, with different values."""
         if not self._repeats:
             return False
-        cards = (self._text[start : start + CARD] for start in range(0, len(self._text) - CARD + 1, CARD))
-        own = ((card[:8].rstrip(), card[8:]) for card in cards)
-        return any(
-            key not in _FREE
-            and not _RECORD.match(key)
-            and rest != self.card(key)[8:]
-            and parse_value(rest[2:]) != self.get(key)
-            for key, rest in own
-        )
+        cards = [self._text[start : start + CARD] for start in range(0, len(self._text) - CARD + 1, CARD)]
+        first: dict[str, str] = {}
+        for card in cards:
+            known = first.setdefault(card[:8], card)
+            free = card[:8].rstrip() in _FREE or _RECORD.match(card)
+            differs = known is not card and known != card and not free
+            if differs and parse_value(card[10:]) != parse_value(known[10:]):
+                return True
+        return False
 
     def card(self, key: str) -> str:
         """The 80 characters of a card, '' where there is none."""
