@@ -92,7 +92,7 @@ def test_tail_bound_seldom_understates(draw, survival):
     """The bound is below a third of the true chance in at most 3 % of draws, also for heavy tails."""
     rng = np.random.default_rng(8)
     low = 0
-    n_sets = 150
+    n_sets = 60
     for _ in range(n_sets):
         controls = draw(rng, 512)
         target = max(controls.max() * 1.3, 6.0)

@@ -8,6 +8,7 @@ import numpy as np
 import pyarrow.parquet as pq
 import pytest
 from astropy.table import Table
+from scipy import stats
 
 import skies
 from hindlight import cli
@@ -85,3 +86,20 @@ def test_comparisons_from_a_table(uneven: Path, tmp_path: Path) -> None:
     used = [p for p in pq.read_table(tmp_path / "run0" / "positions.parquet").to_pylist() if p["kind"] == "comparison"]
     assert [p["ra"] for p in used] == [p["ra"] for p in places][:4]
     assert not (tmp_path / "run2" / "frames.parquet").exists()
+
+
+def test_limits_of_each_frame(uneven: Path, tmp_path: Path) -> None:
+    """k-sigma limits are threshold times error; the bound on the flux leaves 5 % of its truncated normal above it."""
+    run, out = uneven / "run", tmp_path / "curve.ecsv"
+    assert cli.run_command(["lightcurve", str(run), "target", "--out", str(out), "-q"]) == 0
+    curve = Table.read(out)
+    rows = {str(row["channel"]): row for row in Table.read(run / "channels.ecsv")}
+    for row in curve:
+        of_channel = rows[str(row["channel"])]
+        assert row["limit_sigma"] == pytest.approx(of_channel["threshold"] * row["flux_err"])
+        above = of_channel["threshold_above_quiet"] * np.hypot(row["flux_err"], of_channel["quiet_level_err"])
+        assert row["limit_above_quiet"] == pytest.approx(above)
+        rest = stats.truncnorm.sf(
+            (row["limit_bayes"] - row["flux"]) / row["flux_err"], -row["flux"] / row["flux_err"], np.inf
+        )
+        assert rest == pytest.approx(0.05, rel=1e-6)

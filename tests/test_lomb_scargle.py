@@ -135,15 +135,15 @@ def test_recovery():
 
 
 def test_false_alarms_keep_their_rate():
-    """Among 400 curves of noise no more fall below a false-alarm probability of 5 % than chance allows (p = 1e-4)."""
+    """Among 250 curves of noise no more fall below a false-alarm probability of 5 % than chance allows (p = 1e-4)."""
     rng = np.random.default_rng(8)
     search = LombScargle(max_frequencies=2000)
     below = 0
-    for _ in range(400):
+    for _ in range(250):
         times = random_times(rng, 60)
         error = rng.uniform(0.5, 2, 60)
         below += search.search([make_curve(times, error * rng.normal(size=60), error)])["log10_fap"] < math.log10(0.05)
-    assert 0 < below <= binom.ppf(1 - 1e-4, 400, 0.05)
+    assert 0 < below <= binom.ppf(1 - 1e-4, 250, 0.05)
 
 
 def test_ephemeris_of_a_sinusoid():
@@ -207,9 +207,9 @@ def test_search_and_examination_agree():
 
 
 def test_noise_is_not_established():
-    """Of 30 curves of white noise none is established; the sentence says why."""
+    """Of 15 curves of white noise none is established; the sentence says why."""
     rng = np.random.default_rng(14)
-    for _ in range(30):
+    for _ in range(15):
         result = QUICK.examine([make_curve(random_times(rng), rng.normal(size=200))])
         assert not result.established
         assert "false-alarm probability" in result.values["verdict"]
@@ -255,16 +255,16 @@ def wander(rng: np.random.Generator, times: np.ndarray, tau: float) -> np.ndarra
 
 @pytest.mark.parametrize("tau_days", [1, 5, 30])
 def test_wandering_sources_are_not_established(tau_days):
-    """Of 30 sources that wander without a period at most one passes for periodic, though white noise is ruled out."""
+    """Of 16 sources that wander without a period at most one passes for periodic, though white noise is ruled out."""
     rng = np.random.default_rng(18)
     passed, red = 0, 0
-    for _ in range(30):
+    for _ in range(16):
         times = random_times(rng)
         result = QUICK.examine([make_curve(times, 5 * wander(rng, times, tau_days * DAY) + rng.normal(size=200))])
         passed += result.established
         red += result.values["log10_fap"] < -3 < result.values["log10_fap_red"]
     assert passed <= 1
-    assert red >= 10
+    assert red >= 5
 
 
 def test_whitening_agrees_with_the_full_covariance():

@@ -203,12 +203,18 @@ def robust_threshold(values: FloatArray, false_alarms: float) -> float:
     return max(k, centre + k * max(1.0, sigma))
 
 
+def upper_bounds(flux: FloatArray, error: FloatArray, confidence: float = 0.95) -> FloatArray:
+    """Upper bounds on fluxes that cannot be negative, flat prior (Helene 1983, NIM 212, 319); NaN for no error."""
+    known = np.isfinite(flux) & np.isfinite(error) & (error > 0)
+    sigma = np.where(known, error, 1.0)
+    z = np.where(known, flux, 0.0) / sigma
+    bound = sigma * (z - special.ndtri_exp(np.log1p(-confidence) + stats.norm.logcdf(z)))
+    return np.asarray(np.where(known, bound, np.nan))
+
+
 def upper_bound(flux: float, error: float, confidence: float = 0.95) -> float:
-    """Upper bound on a flux that cannot be negative, flat prior (Helene 1983, NIM 212, 319); NaN for no error."""
-    if not (np.isfinite(flux) and np.isfinite(error) and error > 0):
-        return float("nan")
-    z = flux / error
-    return float(error * (z - special.ndtri_exp(np.log1p(-confidence) + stats.norm.logcdf(z))))
+    """`upper_bounds` for one flux."""
+    return float(upper_bounds(np.array([flux]), np.array([error]), confidence)[0])
 
 
 def extra_scatter(flux: FloatArray, flux_err: FloatArray) -> float:

@@ -10,8 +10,10 @@ import astropy.table
 import numpy as np
 
 from hindlight import store, tasks
+from hindlight.calibrate import upper_bounds
 from hindlight.ensemble import calibrated
 from hindlight.errors import UsageError
+from hindlight.lightcurve import FloatArray
 from hindlight.schema import LIGHT_CURVE
 from hindlight.store import RunFolder
 from hindlight.tables import astropy_table, read_ecsv
@@ -58,8 +60,10 @@ def _columns(run: RunFolder, tables: tasks.Book, rows: dict[str, Any], target: s
     """The table's columns from raw rows."""
     flux, flux_err, _ = calibrated(rows["frame"], rows["flux"], rows["flux_err"], tables.solution)
     at = np.array([tables.row_of_frame[int(frame)] for frame in rows["frame"]], np.int64)
-    limits = _thresholds(run, target)
-    limit = np.array([limits.get(channel, np.inf) for channel in rows["channel"]])
+    judged = _judged_channels(run, target)
+    nothing = {"threshold": np.inf, "threshold_above_quiet": np.inf, "quiet_level_err": 0.0}
+    known = [judged.get(channel, nothing) for channel in rows["channel"]]
+    limit, above, quiet_err = (np.array([row[name] for row in known], float) for name in nothing)
     signed = np.array([tables.channels[channel].signed for channel in rows["channel"]], bool)
     with np.errstate(invalid="ignore"):
         snr = flux / flux_err
@@ -73,15 +77,23 @@ def _columns(run: RunFolder, tables: tasks.Book, rows: dict[str, Any], target: s
         "raw_flux": rows["flux"],
         "raw_flux_err": rows["flux_err"],
         "detected": detected,
+        "limit_sigma": _finite(limit * flux_err),
+        "limit_bayes": np.where(signed, np.nan, upper_bounds(flux, flux_err)),
+        "limit_above_quiet": _finite(above * np.hypot(flux_err, quiet_err)),
         "deep": np.isin(rows["frame"], tables.frames["related_to"]),
         "path": [tasks.frame_label(tables.frames, int(row)) for row in at],
     }
 
 
-def _thresholds(run: RunFolder, target: str) -> dict[str, float]:
-    """The detection threshold of each channel of a target, if the run has been judged."""
+def _finite(values: FloatArray) -> FloatArray:
+    return np.where(np.isfinite(values), values, np.nan)
+
+
+def _judged_channels(run: RunFolder, target: str) -> dict[str, dict[str, float]]:
+    """What was found for each channel of a target, if the run has been judged."""
     if not run.has("channels.ecsv"):
         return {}
     table = read_ecsv(run.file("channels.ecsv"))
     mine = table[table["name"] == target]
-    return {str(row["channel"]): float(row["threshold"]) for row in mine}
+    names = ("threshold", "threshold_above_quiet", "quiet_level_err")
+    return {str(row["channel"]): {name: float(row[name]) for name in names} for row in mine}

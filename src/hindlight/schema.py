@@ -273,6 +273,21 @@ LIGHT_CURVE = (
     TableColumn("background", "local background per pixel that was taken off", ucd="instr.background"),
     TableColumn("rms", "robust local noise per pixel", ucd="instr.det.noise"),
     TableColumn("detected", "whether the measurement is above the channel's threshold", dtype="bool"),
+    TableColumn(
+        "limit_sigma",
+        "threshold times error: a source this bright is detected in half of such frames",
+        ucd="phot.flux;stat.max",
+    ),
+    TableColumn(
+        "limit_bayes",
+        "95 % upper bound on the total flux in this frame (flat prior, flux not negative); NaN where signed",
+        ucd="phot.flux;stat.max",
+    ),
+    TableColumn(
+        "limit_above_quiet",
+        "the like of limit_sigma for the excess over the quiet level, whose own error it holds",
+        ucd="phot.flux;stat.max",
+    ),
     TableColumn("deep", "whether it is in a deep image made of other frames here, which is not judged", dtype="bool"),
     TableColumn("x", "0-based pixel, first axis", unit="pixel", ucd="pos.cartesian.x;instr.det"),
     TableColumn("y", "0-based pixel, second axis", unit="pixel", ucd="pos.cartesian.y;instr.det"),
