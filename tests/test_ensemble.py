@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 from scipy import optimize
 
-from hindlight.ensemble import calibrated, error_scales, excess_scatter, solution, solve_gains, solved
+from hindlight.ensemble import IMAGE_COLUMNS, calibrated, error_scales, excess_scatter, solution, solve_gains, solved
 from hindlight.settings import Comparisons
 
 
@@ -122,12 +122,17 @@ def test_error_scales() -> None:
     assert few.tolist() == [1.0]  # ten controls say too little
 
 
+def nothing(n: int) -> dict[str, np.ndarray]:
+    """Frames of whose image nothing was found."""
+    return {name: np.full(n, np.nan) for name in IMAGE_COLUMNS}
+
+
 def test_solution_and_its_use() -> None:
     """flux / gain; the error carries error scale, extra scatter and gain; a raw frame keeps its flux, error widened."""
     _, flux, error = simulated(11, frames=12)
     flux[4] = np.nan
     gains = solve_gains(flux, error)
-    rows = solution(np.arange(12), "c", gains, np.full(12, 1.5), np.full((12, 2), np.nan), Comparisons())
+    rows = solution(np.arange(12), "c", gains, np.full(12, 1.5), nothing(12), Comparisons())
     assert rows["verdict"].tolist() == ["good"] * 4 + ["uncalibrated"] + ["good"] * 7
     assert rows["extra_scatter"][4] == pytest.approx(gains.spread)  # the scatter of the others' gains
     value, sigma, bad = calibrated(np.array([3, 4]), np.array([100.0, 100.0]), np.array([2.0, 2.0]), rows)
@@ -142,7 +147,7 @@ def test_a_frame_that_scatters_wildly_is_bad() -> None:
     _, flux, error = simulated(12)
     flux[2] *= np.where(np.arange(20) % 2, 3.0, 0.2)
     gains = solve_gains(flux, error)
-    rows = solution(np.arange(60), "c", gains, np.ones(60), np.full((60, 2), np.nan), Comparisons())
+    rows = solution(np.arange(60), "c", gains, np.ones(60), nothing(60), Comparisons())
     assert np.flatnonzero(rows["verdict"] == "bad").tolist() == [2]
 
 
@@ -152,7 +157,7 @@ def test_channels_are_solved_apart_and_spoken_of() -> None:
     frame, source = np.nonzero(np.isfinite(flux))
     rows = {"frame": 2 * frame, "position": source, "flux": flux[frame, source], "flux_err": error[frame, source]}
     known = {"frame": 2 * np.arange(10), "pull": np.ones(10), "n_controls": np.full(10, 200),
-             "shift_x": np.full(10, 0.25), "shift_y": np.full(10, -0.5)}  # fmt: skip
+             "shift_x": np.full(10, 0.25), "shift_y": np.full(10, -0.5), "fwhm": np.full(10, 3.0)}  # fmt: skip
     channels = np.array(["tied", "raw"] * 10, object)
     table, said = solved(np.arange(20), channels, [known], [rows], Comparisons())
     assert table["frame"].tolist() == list(range(20))

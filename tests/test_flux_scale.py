@@ -7,6 +7,7 @@ from pathlib import Path
 import numpy as np
 import pyarrow.parquet as pq
 import pytest
+from astropy.io import fits
 from astropy.table import Table
 from scipy import stats
 
@@ -103,3 +104,28 @@ def test_limits_of_each_frame(uneven: Path, tmp_path: Path) -> None:
             (row["limit_bayes"] - row["flux"]) / row["flux_err"], -row["flux"] / row["flux_err"], np.inf
         )
         assert rest == pytest.approx(0.05, rel=1e-6)
+
+
+def test_seeing_that_the_header_does_not_give(tmp_path: Path) -> None:
+    """Widths come from the comparisons, frame by frame; a flux in an aperture that follows them does not vary with them."""
+    target = skies.Source("target", 0.0, 0.0, 400.0)
+    rest = [skies.Source(f"s{k}", *(700 * np.array((np.cos(k), np.sin(k)))), 900.0) for k in range(1, 7)]
+    widths = {2.5: "a", 4.0: "b", 6.0: "c"}
+    for width, name in widths.items():
+        sky = skies.Sky(instrument="camera", n_frames=4, size=240, unit="adu", noise="white", fwhm_pixels=width)
+        skies.write_sky(tmp_path / "frames", sky, [target, *rest], int(10 * width), prefix=name)
+    for path in (tmp_path / "frames").iterdir():
+        fits.delval(path, "SEEING")
+    (tmp_path / "targets.csv").write_text(skies.target_text([target], sky), encoding="utf-8")
+    (tmp_path / "s.toml").write_text("[controls]\nper_field = 40\n", encoding="utf-8")
+    arguments = ["mine", tmp_path / "frames", "--targets", tmp_path / "targets.csv", "--out", tmp_path / "run",
+                 "--settings", tmp_path / "s.toml", "-q", "--without", "lomb_scargle"]  # fmt: skip
+    assert cli.run_command([str(a) for a in arguments]) == 0
+    frames = pq.read_table(tmp_path / "run" / "frames.parquet").to_pydict()
+    solution = pq.read_table(tmp_path / "run" / "frame_solution.parquet").to_pydict()
+    path = dict(zip(frames["id"], frames["path"], strict=True))
+    true = {name: width for width, name in widths.items()}
+    for frame, found, verdict in zip(solution["frame"], solution["fwhm"], solution["verdict"], strict=True):
+        assert found == pytest.approx(true[path[frame][0]], rel=0.05)
+        assert verdict == "good"
+    assert np.ptp(np.log(solution["gain"])) < 0.05

@@ -32,6 +32,7 @@ VARIABLE_P = 1e-6
 VARIABLE_FACTOR = 3.0  # a comparison that scatters so many times more than the typical one is no comparison
 BAD_P = 1e-6
 BAD_SCATTER = 0.5
+IMAGE_COLUMNS = ("shift_x", "shift_y", "fwhm")  # what measuring found of the image itself
 
 Columns = dict[str, Any]
 
@@ -250,7 +251,10 @@ def solved(
 
     `evidence` and `fluxes` are those of `tasks.FrameEvidence`, batch by batch.
     """
-    known = {name: np.concatenate([part[name] for part in evidence]) for name in _EVIDENCE}
+    known = {
+        name: np.concatenate([part[name] for part in evidence])
+        for name in ("frame", "pull", "n_controls", *IMAGE_COLUMNS)
+    }
     rows = {name: np.concatenate([part[name] for part in fluxes]) for name in ("frame", "position", "flux", "flux_err")}
     at = {int(frame): i for i, frame in enumerate(known["frame"])}
     parts, said = [], []
@@ -259,23 +263,14 @@ def solved(
         matrix = _matrix(rows, mine)
         gains = solve_gains(*matrix, settings.fewest)
         index = np.array([at.get(int(frame), -1) for frame in mine])
-        there = index >= 0
-        pulls, counts, shifts = (
-            np.full(len(mine), np.nan),
-            np.zeros(len(mine), np.int64),
-            np.full((len(mine), 2), np.nan),
-        )
-        pulls[there], counts[there] = known["pull"][index[there]], known["n_controls"][index[there]]
-        shifts[there] = np.stack((known["shift_x"], known["shift_y"]), axis=1)[index[there]]
-        part = solution(mine, label, gains, error_scales(pulls, counts), shifts, settings)
+        own = {name: np.where(index >= 0, values[index], np.nan) for name, values in known.items()}
+        scale = error_scales(own["pull"], np.nan_to_num(own["n_controls"]).astype(np.int64))
+        part = solution(mine, label, gains, scale, {name: own[name] for name in IMAGE_COLUMNS}, settings)
         parts.append(part)
         said += _said(label, part, gains)
     joined = {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}
     order = np.argsort(joined["frame"], kind="stable")
     return {name: values[order] for name, values in joined.items()}, tuple(said)
-
-
-_EVIDENCE = ("frame", "pull", "n_controls", "shift_x", "shift_y")
 
 
 def _matrix(rows: Columns, frames: IntArray) -> tuple[FloatArray, FloatArray]:
@@ -314,11 +309,11 @@ def _said(label: str, part: Columns, gains: Gains) -> list[str]:
 
 
 def solution(
-    frames: IntArray, channel: str, gains: Gains, scale: FloatArray, shifts: FloatArray, settings: Comparisons
+    frames: IntArray, channel: str, gains: Gains, scale: FloatArray, image: Columns, settings: Comparisons
 ) -> Columns:
     """Rows of `schema.FRAME_SOLUTION` for a channel's frames, shape (n,).
 
-    `shifts` has shape (n, 2), NaN where no shift was applied. A frame without enough comparisons keeps its raw scale,
+    `image` are the columns IMAGE_COLUMNS, NaN where nothing was found. A frame without enough comparisons keeps its raw scale,
     with the error widened by the scatter of the channel's gains, or by `uncalibrated_scatter` where that is not known.
     """
     tied = np.isfinite(gains.gain)
@@ -332,8 +327,7 @@ def solution(
         "channel": np.full(len(frames), channel, object),
         "gain": np.where(tied, gains.gain, 1.0),
         "gain_err": gains.gain_err,
-        "shift_x": shifts[:, 0],
-        "shift_y": shifts[:, 1],
+        **image,
         "error_scale": scale,
         "extra_scatter": np.where(tied, own, unknown),
         "n_comparisons": gains.n_comparisons,

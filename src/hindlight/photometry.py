@@ -43,6 +43,9 @@ from hindlight.sky import Projection, beam_shape, projection
 from hindlight.systems import unit_vectors
 
 AT_A_TIME = 128  # positions: their stamps stay in the processor's cache
+WIDTH_STEPS = 6  # at most, from the assumed width to that of the sources
+WIDTH_STEP = (0.5, 2.0)  # factors
+WIDTH_CLOSE = 0.02
 NEIGHBOUR_SNR = 5.0  # a neighbour must stand this far above the background to be flagged
 
 PER_BEAM = "/beam"
@@ -164,12 +167,15 @@ def measure_frame(
     """Measure ICRS positions (degrees, shape (n,)) in a frame.
 
     `anchors` are ICRS positions of known sources: where they are in the image tells how far it is off its header, and
-    the positions are measured that far away from where the header puts them. Returns columns of shape (m,) for the m
-    positions on the image: `index` among the n, `x`, `y` (0-based pixels), `shift_x`, `shift_y` (at the middle of the
-    image, NaN where the anchors do not tell), `gain` of the primary beam, and those of `measure`, flux and error divided
-    by the gain. Raises `SetAsideError`, `OSError`, or `ValueError` from an unusable projection.
+    the positions are measured that far away from where the header puts them. Where the header gives no width the
+    anchors' own is used, if they tell it. Returns columns of shape (m,) for the m positions on the image: `index` among
+    the n, `x`, `y` (0-based pixels), `shift_x`, `shift_y` (at the middle of the image, NaN where the anchors do not
+    tell), `fwhm` (pixels), `gain` of the primary beam, and those of `measure`, flux and error divided by the gain.
+    Raises `SetAsideError`, `OSError`, or `ValueError` from an unusable projection.
     """
     opened = open_frame(frame, settings)
+    if anchors is not None:
+        opened = _with_own_width(frame, opened, *anchors)
     x, y = opened.sky.icrs_to_pixel(ra, dec, frame.mjd)
     shift = _shift(frame, opened, anchors) if anchors is not None else None
     if shift is not None:
@@ -177,7 +183,7 @@ def measure_frame(
     index = _inside(opened, x, y)
     x, y = x[index], y[index]
     offset = (NAN, NAN) if shift is None else shift.offset.tolist()
-    place = {"index": index, "x": x, "y": y}
+    place = {"index": index, "x": x, "y": y, "fwhm": np.full(len(index), opened.beam.fwhm)}
     place |= {f"shift_{axis}": np.full(len(index), value) for axis, value in zip("xy", offset, strict=True)}
     if len(index) == 0:
         return {**place, "gain": np.empty(0), **_nothing()}
@@ -216,6 +222,25 @@ def _centroids(
     return index, x, y, centroids(opened.pixels(windows), x, y, opened.beam)
 
 
+def _with_own_width(frame: FrameToMeasure, opened: OpenFrame, ra: FloatArray, dec: FloatArray) -> OpenFrame:
+    """The frame with the width of the sources at these places as its beam, where its header gives none.
+
+    It is the median width, found from the assumed one by steps; where fewer than three stand out, the assumed one stays.
+    """
+    if frame.beam_major > 0.0:
+        return opened
+    for _ in range(WIDTH_STEPS):
+        width = _centroids(frame, opened, ra, dec)[3].width
+        if np.isfinite(width).sum() < FEWEST:
+            break
+        factor = float(np.clip(np.nanmedian(width), *WIDTH_STEP))
+        fwhm = max(1.0, factor * opened.beam.fwhm)
+        opened = replace(opened, beam=BeamShape(fwhm, fwhm, 0.0))
+        if abs(factor - 1.0) < WIDTH_CLOSE:
+            break
+    return opened
+
+
 def _shift(frame: FrameToMeasure, opened: OpenFrame, anchors: tuple[FloatArray, FloatArray]) -> Pointing | None:
     """How far the image is off its header, None where the anchors do not tell."""
     if len(anchors[0]) < FEWEST:
@@ -233,7 +258,7 @@ def locate(
 
     NaN for a source that does not stand out, is saturated or not on the image. Raises as `measure_frame` does.
     """
-    opened = open_frame(frame, settings)
+    opened = _with_own_width(frame, open_frame(frame, settings), ra, dec)
     index, x, y, found = _centroids(frame, opened, ra, dec)
     there = np.full((4, len(ra)), np.nan)
     there[0, index], there[1, index] = opened.sky.pixel_to_icrs(x + found.dx, y + found.dy, frame.mjd)

@@ -75,7 +75,7 @@ ASSUMPTIONS = {
     "start_assumed": "the header does not say what its date refers to: taken as the start of the exposure",
     "scale_assumed": "no time scale in the header: UTC was taken",
     "frame_assumed": "no celestial frame in the header: taken from the equinox, or ICRS where there is none",
-    "no_beam": "no beam or seeing in the header: an assumed width was used for stamp and annulus",
+    "no_beam": "no beam or seeing in the header: the width of the comparison sources was used, or an assumed one",
     "beam_from_settings": "no beam or seeing in the header: the width in the settings was used",
     "no_unit": "no unit in the header: fluxes are in the image's own numbers",
     "no_frequency": "a radio image without a frequency",
@@ -221,6 +221,7 @@ FRAME_SOLUTION = (
     TableColumn("gain_err", "1-sigma error of the gain"),
     TableColumn("shift_x", "shift at the middle of the image against its header, NaN where unknown", unit="pixel"),
     TableColumn("shift_y", "shift at the middle of the image against its header, NaN where unknown", unit="pixel"),
+    TableColumn("fwhm", "width of beam or seeing that was used, NaN where nothing was measured", unit="pixel"),
     TableColumn("error_scale", "factor on the error"),
     TableColumn("extra_scatter", "further scatter, as a fraction of the flux"),
     TableColumn("n_comparisons", "comparison sources used", dtype="int64"),
@@ -253,6 +254,7 @@ MEASUREMENTS = (
     TableColumn("flags", "bits, see the README", dtype="int64", ucd="meta.code.qual"),
     TableColumn("shift_x", "shift of the frame at its middle, contained in x; NaN where none was found", unit="pixel"),
     TableColumn("shift_y", "shift of the frame at its middle, contained in y; NaN where none was found", unit="pixel"),
+    TableColumn("fwhm", "width of beam or seeing that was used (mean of both axes)", unit="pixel"),
 )
 
 LIGHT_CURVE = (
