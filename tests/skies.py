@@ -30,7 +30,8 @@ class Sky:
 
     `gain_scatter` is that of the frames' gains; `pointing_pixels` and `pointing_gradient` (per pixel) are how far, on
     each axis, images are off their headers. `noise` is white, beam (autocorrelation equal to the beam) or heavy (the
-    same from Student t(4) pixels, and the rms differs from frame to frame by a quarter).
+    same from Student t(4) pixels, and the rms differs from frame to frame by a quarter). `noisier`, where it is given,
+    is by how much each frame's noise is larger than `rms`.
     """
 
     instrument: str = "north array"
@@ -52,6 +53,7 @@ class Sky:
     gain_scatter: float = 0.0
     pointing_pixels: float = 0.0
     pointing_gradient: float = 0.0
+    noisier: tuple[float, ...] = ()
     site: tuple[float, float, float] = (5195675.767, 1891071.326, -3170873.735)
     extra: dict[str, object] = field(default_factory=dict)
 
@@ -113,6 +115,8 @@ def write_sky(folder: Path, sky: Sky, sources: Sequence[Source], seed: int, pref
     for number, day in enumerate(days):
         jitter = sky.jitter_pixels * rng.standard_normal(2)
         image = sky.rms * noise_image(sky, rng)
+        if sky.noisier:
+            image *= sky.noisier[number]
         gain, shift, gradient = 1.0, np.zeros(2), np.zeros((2, 2))
         if sky.gain_scatter or sky.pointing_pixels:
             gain = 1.0 + sky.gain_scatter * rng.standard_normal()

@@ -127,6 +127,34 @@ def nothing(n: int) -> dict[str, np.ndarray]:
     return {name: np.full(n, np.nan) for name in IMAGE_COLUMNS}
 
 
+def test_scatter_that_blank_sky_shows_is_no_extra_scatter() -> None:
+    """Errors that are two and a half times too small everywhere are scaled; comparisons need nothing beyond that.
+
+    Taken for a fraction of the flux as well, the same noise would count twice in a bright source's error.
+    """
+    rng = np.random.default_rng(14)
+    flux = 10 ** rng.uniform(1.5, 2.5, 20) + 2.5 * rng.standard_normal((10, 20))
+    frame, source = np.nonzero(np.isfinite(flux))
+    rows = {"frame": frame, "position": source, "flux": flux[frame, source], "flux_err": np.ones(flux.size)}
+    known = {"frame": np.arange(10), "pull": np.full(10, 2.5), "n_controls": np.full(10, 500),
+             "shift_x": np.zeros(10), "shift_y": np.zeros(10), "fwhm": np.full(10, 3.0)}  # fmt: skip
+    table, _ = solved(np.arange(10), np.full(10, "c", object), [known], [rows], Comparisons())
+    np.testing.assert_allclose(table["error_scale"], 2.5)
+    assert (table["extra_scatter"] < 0.006).all()  # the error of a gain; with the noise counted twice 0.02 and more
+
+
+def test_error_scale_of_a_channel_is_the_mean_of_the_frames_alike() -> None:
+    """As good as 20 frames of 500 controls allow, 1.167 / sqrt(10,000); frames that are far off do not count."""
+    rng = np.random.default_rng(15)
+    found = []
+    for _ in range(200):
+        pulls = 2.0 * (1 + 1.167 / 500**0.5 * rng.standard_normal(20))
+        pulls[:3] = 9.0
+        found.append(error_scales(pulls, np.full(20, 500))[-1])
+    assert np.mean(found) == pytest.approx(2.0, rel=0.003)
+    assert np.std(found) / 2.0 == pytest.approx(1.167 / (17 * 500) ** 0.5, rel=0.2)  # that of a median is 1.25 times it
+
+
 def test_solution_and_its_use() -> None:
     """flux / gain; the error carries error scale, extra scatter and gain; a raw frame keeps its flux, error widened."""
     _, flux, error = simulated(11, frames=12)

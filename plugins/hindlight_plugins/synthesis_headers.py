@@ -17,6 +17,7 @@ from hindlight import (
     FrameFacts,
     PlaneAxes,
     beam_of,
+    comment_of,
     has_old_times,
     hookimpl,
     read_facts,
@@ -31,6 +32,7 @@ _NUMBER = r"([+-]?(?:\d+\.?\d*|\.\d+)(?:[EeDd][+-]?\d+)?)"
 _BEAM = re.compile(
     rf"\bBMAJ\s*=\s*{_NUMBER}\s*(arcsec|asec|\"|'')?[^=]*?\bBMIN\s*=\s*{_NUMBER}[^=]*?\bBPA\s*=\s*{_NUMBER}", re.I
 )
+_NIGHT = re.compile(r"\bnight|\bevening", re.I)
 _NOT_CORRECTED = re.compile(
     r"\b(not|no|without|un)\b.{0,20}primary[- ]beam corr|\bnot corrected for (the )?primary", re.I
 )
@@ -45,7 +47,7 @@ class SynthesisHeaders(Dialect):
 
     def recognises(self, cards: Cards) -> bool:
         """Whether the beam stands in text alone, or a radio image has a date that the standard cannot read."""
-        if not _is_radio(cards):
+        if not _is_radio(cards) or _dated_by_night(cards):
             return False
         if "BMAJ" not in cards and b"BMAJ" in cards.raw.upper() and _beam_in_text(cards) is not None:
             return True
@@ -63,6 +65,11 @@ def _is_radio(cards: Cards) -> bool:
         or cards.text("CTYPE4").startswith(RADIO_AXES)
         or ("BEAM" in cards.text("BUNIT").upper())
     )
+
+
+def _dated_by_night(cards: Cards) -> bool:
+    """Whether a date beside its time of day is that of the night: `plate_headers` knows which day is meant."""
+    return has_old_times(cards) and ("NIGHT" in cards or _NIGHT.search(comment_of(cards, "DATE-OBS")) is not None)
 
 
 def _beam(cards: Cards) -> Beam:

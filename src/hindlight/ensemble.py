@@ -234,8 +234,10 @@ def error_scales(pulls: FloatArray, n_controls: IntArray) -> FloatArray:
     weight = error**-2.0
     order = np.argsort(logs)
     middle = np.searchsorted(np.cumsum(weight[order]), weight.sum() / 2)
-    common = float(logs[order][min(middle, len(order) - 1)])  # a weighted median: some frames may be far off
-    if abs(common) <= SIGNIFICANT * 1.2533 * weight.sum() ** -0.5:
+    typical = float(logs[order][min(middle, len(order) - 1)])  # a weighted median: some frames may be far off
+    alike = np.abs(logs - typical) <= SIGNIFICANT * error
+    common = float(np.log(np.average(pulls[usable][alike], weights=weight[alike])))  # a mean of logs would be biased
+    if abs(common) <= SIGNIFICANT * weight[alike].sum() ** -0.5:
         common = 0.0
     scale[:] = np.exp(common)
     own = np.abs(logs - common) > SIGNIFICANT * error
@@ -260,11 +262,12 @@ def solved(
     parts, said = [], []
     for label in sorted(set(channels.tolist())):
         mine = frames[channels == label]
-        matrix = _matrix(rows, mine)
-        gains = solve_gains(*matrix, settings.fewest)
         index = np.array([at.get(int(frame), -1) for frame in mine])
         own = {name: np.where(index >= 0, values[index], np.nan) for name, values in known.items()}
         scale = error_scales(own["pull"], np.nan_to_num(own["n_controls"]).astype(np.int64))
+        flux, flux_err = _matrix(rows, mine)
+        # Scatter beyond the errors is a fraction of the flux: what blank sky shows as well must not count as that.
+        gains = solve_gains(flux, flux_err * scale[:, None], settings.fewest)
         part = solution(mine, label, gains, scale, {name: own[name] for name in IMAGE_COLUMNS}, settings)
         parts.append(part)
         said += _said(label, part, gains)
