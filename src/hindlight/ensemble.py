@@ -263,7 +263,7 @@ def solved(
     for label in sorted(set(channels.tolist())):
         mine = frames[channels == label]
         index = np.array([at.get(int(frame), -1) for frame in mine])
-        own = {name: np.where(index >= 0, values[index], np.nan) for name, values in known.items()}
+        own = {name: np.append(values, np.nan)[index] for name, values in known.items()}  # NaN for a frame not there
         scale = error_scales(own["pull"], np.nan_to_num(own["n_controls"]).astype(np.int64))
         flux, flux_err = _matrix(rows, mine)
         # Scatter beyond the errors is a fraction of the flux: what blank sky shows as well must not count as that.
