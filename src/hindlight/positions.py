@@ -22,6 +22,7 @@ from hindlight.lightcurve import FloatArray, IntArray
 BANDS_PER_TURN = 1 << 20  # cells of one declination band: field = band * BANDS_PER_TURN + cell
 CANDIDATES_PER_CONTROL = 6
 ARCSEC = np.pi / 180 / 3600
+ARCSEC_DEG = 1 / 3600
 
 OPTIONAL_UNITS = {
     "pos_err": u.arcsec, "pos_err_major": u.arcsec, "pos_err_minor": u.arcsec, "pos_err_angle": u.deg,
@@ -56,6 +57,14 @@ class Targets:
     def position_error(self) -> FloatArray:
         """The larger 1-sigma position error in arcsec, 0 where not given; shape (n,)."""
         return np.fmax(self.column("pos_err"), np.nan_to_num(self.column("pos_err_major")))
+
+    @property
+    def error_ellipses(self) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """1-sigma axes in arcsec and position angle of the first one in degrees, each of shape (n,); circles if not given."""
+        major = self.position_error
+        minor, angle = self.column("pos_err_minor"), self.column("pos_err_angle")
+        given = np.isfinite(minor) & (self.column("pos_err_major") >= self.column("pos_err"))
+        return major, np.where(given, minor, major), np.nan_to_num(angle)
 
     def column(self, name: str) -> FloatArray:
         """An optional column, shape (n,); NaN (or 0 for motions, 2000 for their epoch) where not given."""
@@ -264,7 +273,7 @@ def control_grid(
 
 
 def from_tangent(
-    ra0: float, dec0: float, xi: NDArray[np.floating[Any]], eta: NDArray[np.floating[Any]]
+    ra0: float | FloatArray, dec0: float | FloatArray, xi: NDArray[np.floating[Any]], eta: NDArray[np.floating[Any]]
 ) -> tuple[FloatArray, FloatArray]:
     """Gnomonic plane (degrees east and north of a centre) to ICRS degrees (Calabretta & Greisen 2002, eq. 54)."""
     x, y, d0 = np.radians(xi), np.radians(eta), np.radians(dec0)
