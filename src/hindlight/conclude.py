@@ -17,7 +17,7 @@ from hindlight.host import Plugins
 from hindlight.judge import Judgement, full_columns
 from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.plan import of_targets
-from hindlight.positions import separation_deg
+from hindlight.positions import nearest_deg
 from hindlight.search import best_places
 from hindlight.settings import Settings
 from hindlight.systems import unit_vectors
@@ -65,10 +65,7 @@ def serving_controls(
     everyone = of_targets(positions)
     vectors = unit_vectors(positions["ra"][rows], positions["dec"][rows])
     occupied = unit_vectors(positions["ra"][everyone], positions["dec"][everyone])
-    free = np.ones(len(controls), dtype=bool)
-    for start in range(0, len(occupied), 256):
-        apart = separation_deg(vectors, occupied[start : start + 256])
-        free &= (apart >= 0.999 * positions["clear_radius"][rows][:, None]).all(axis=1)
+    free = nearest_deg(vectors, occupied) >= 0.999 * positions["clear_radius"][rows]
     return np.asarray(in_frames & free[None, :])
 
 

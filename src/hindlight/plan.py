@@ -17,7 +17,17 @@ from hindlight.duplicates import counts, waiting
 from hindlight.errors import UsageError
 from hindlight.footprints import coverage_matrix
 from hindlight.lightcurve import FloatArray, IntArray
-from hindlight.positions import ARCSEC_DEG, BlankSky, Targets, control_grid, field_of, field_size, from_tangent, serves
+from hindlight.positions import (
+    ARCSEC_DEG,
+    BlankSky,
+    Targets,
+    control_grid,
+    field_of,
+    field_size,
+    from_tangent,
+    nearest_deg,
+    serves,
+)
 from hindlight.schema import FRAMES, POSITIONS
 from hindlight.search import CENTRE, Places, places_within
 from hindlight.settings import Controls, Search
@@ -310,7 +320,7 @@ def field_spacing(frames: Columns, rows: IntArray, settings: Controls, assumed_f
 def beams(frames: Columns, rows: IntArray, assumed_fwhm_pixels: float) -> FloatArray:
     """Width in degrees of the beam or seeing of these frames, the assumed one where a header gives none."""
     beam = frames["beam_major"][rows]
-    return np.where(np.isfinite(beam), beam, assumed_fwhm_pixels * frames["pixel_scale"][rows]) / 3600.0
+    return np.asarray(np.where(np.isfinite(beam), beam, assumed_fwhm_pixels * frames["pixel_scale"][rows]) / 3600.0)
 
 
 def add_controls(
@@ -355,7 +365,7 @@ def _clear_of_targets(
     ra, dec = control_grid(ra0, dec0, extent, spacing_deg, wanted, seed)
     near = of_targets(positions)
     occupied = unit_vectors(positions["ra"][near], positions["dec"][near])
-    free = BlankSky(occupied, np.full(len(occupied), clear_deg)).clear(unit_vectors(ra, dec))
+    free = nearest_deg(unit_vectors(ra, dec), occupied) > clear_deg
     return ra[free], dec[free]
 
 
@@ -396,26 +406,31 @@ def sought(
 
 def add_trials(positions: Columns, group: Sought) -> Columns:
     """The position table with the places tried for some targets; the stated place of each is the first of them."""
+    positions = {name: values.copy() for name, values in positions.items()}
+    rows = np.searchsorted(positions["id"], group.targets)
     error = LATTICE_ERROR * group.spacing_deg / ARCSEC_DEG
-    first_round = _next_round(positions)
-    search = int(group.targets[0])
-    done = 0
-    for target, places in zip(group.targets.tolist(), group.places, strict=True):
-        row = int(np.searchsorted(positions["id"], target))
-        positions = {name: values.copy() for name, values in positions.items()}
-        for name, value in (("search", search), ("parent", target), ("place_err", error), ("node", CENTRE)):
-            positions[name][row] = value
-        ra, dec = from_tangent(
-            float(positions["ra"][row]), float(positions["dec"][row]), places.east[1:], places.north[1:]
-        )
-        rounds = first_round + (done + np.arange(len(ra))) // ROUND_PLACES
-        done += len(ra)
-        motion = {name: float(positions[name][row]) for name in MOTION}
-        positions = _added(
-            positions, "trial", ra, dec, int(positions["field"][row]), rounds, search=search, parent=target,
-            place_err=error, node=places.node[1:], **motion,
-        )  # fmt: skip
-    return positions
+    for name, value in (
+        ("search", group.targets[0]),
+        ("parent", group.targets),
+        ("place_err", error),
+        ("node", CENTRE),
+    ):
+        positions[name][rows] = value
+    owner = np.repeat(rows, [len(places) - 1 for places in group.places])
+    east = np.concatenate([places.east[1:] for places in group.places])
+    north = np.concatenate([places.north[1:] for places in group.places])
+    ra, dec = from_tangent(positions["ra"][owner], positions["dec"][owner], east, north)
+    motion = {name: positions[name][owner] for name in MOTION}
+    return _added(
+        positions, "trial", ra, dec, positions["field"][owner], _rounds(positions, len(ra)), search=group.targets[0],
+        parent=positions["id"][owner], place_err=error,
+        node=np.concatenate([places.node[1:] for places in group.places]), **motion,
+    )  # fmt: skip
+
+
+def _rounds(positions: Columns, n: int) -> IntArray:
+    """New rounds for `n` places."""
+    return np.asarray(_next_round(positions) + np.arange(n) // ROUND_PLACES)
 
 
 def add_blanks(
@@ -441,17 +456,14 @@ def add_blanks(
         )
         inside = covered(frames, within.rows, unit_vectors(*rim))
         whole &= serves(within.covered, inside, controls.shared_frames).any(axis=0)
-    first_round, done = _next_round(positions), 0
-    for a, d in list(zip(ra0[whole].tolist(), dec0[whole].tolist(), strict=True))[:wanted]:
-        ra, dec = from_tangent(a, d, east, north)
-        rounds = first_round + (done + np.arange(len(ra))) // ROUND_PLACES
-        done += len(ra)
-        positions = _added(
-            positions, "blank", ra, dec, field, rounds, clear_radius=clear, search=search,
-            parent=_next_id(positions) + int(np.flatnonzero(node == CENTRE)[0]),
-            place_err=LATTICE_ERROR * group.spacing_deg / ARCSEC_DEG, node=node,
-        )  # fmt: skip
-    return positions
+    middles = np.flatnonzero(whole)[:wanted]
+    ra, dec = (axis.ravel() for axis in from_tangent(ra0[middles, None], dec0[middles, None], east, north))
+    ids = _next_id(positions) + np.arange(len(ra))
+    parent = np.repeat(ids.reshape(len(middles), len(node))[:, node == CENTRE], len(node))
+    return _added(
+        positions, "blank", ra, dec, field, _rounds(positions, len(ra)), clear_radius=clear, search=search, parent=parent,
+        place_err=LATTICE_ERROR * group.spacing_deg / ARCSEC_DEG, node=np.tile(node, len(middles)),
+    )  # fmt: skip
 
 
 def add_comparisons(positions: Columns, field: int, round_number: int, ra: FloatArray, dec: FloatArray) -> Columns:

@@ -15,6 +15,7 @@ import astropy.units as u
 import numpy as np
 from astropy.coordinates import Angle
 from numpy.typing import NDArray
+from scipy.spatial import cKDTree
 
 from hindlight.errors import UsageError
 from hindlight.lightcurve import FloatArray, IntArray
@@ -207,6 +208,14 @@ def separation_deg(a: FloatArray, b: FloatArray) -> FloatArray:
     """Angles in degrees between unit vectors, shapes (n, 3) and (m, 3), as (n, m); exact for small angles."""
     chord = np.sqrt(np.maximum(0.0, ((a[:, None, :] - b[None, :, :]) ** 2).sum(axis=-1)))
     return np.asarray(np.degrees(2 * np.arcsin(np.minimum(1.0, chord / 2))))
+
+
+def nearest_deg(a: FloatArray, b: FloatArray) -> FloatArray:
+    """Angle in degrees from each unit vector of `a` (n, 3) to the nearest of `b` (m, 3); infinite for none. Shape (n,)."""
+    if len(a) == 0 or len(b) == 0:
+        return np.full(len(a), np.inf)
+    chord = np.minimum(cKDTree(b).query(a)[0], 2.0)
+    return np.asarray(np.degrees(2 * np.arcsin(chord / 2)))
 
 
 def moved(
