@@ -27,8 +27,8 @@ from hindlight.systems import unit_vectors
 class Field:
     """One field while it is judged: its targets and controls as ids, and what is known of them so far.
 
-    A target that was searched is a field by itself, with its best place and those of its controls, out of `n_trials`;
-    its number is below zero.
+    Targets that were searched are in fields apart, with their best places and those of their controls, out of
+    `n_trials` each; the numbers of such fields are below zero.
     """
 
     number: int
@@ -72,7 +72,7 @@ def serving_controls(
 def searched(
     positions: Mapping[str, Any], target: int, bright: Judgement, ids: IntArray, in_frames: NDArray[np.bool_]
 ) -> Field:
-    """A target that was searched as a field of its own: its best place among its controls' best places.
+    """A target that was searched as a field of its own, numbered below zero: its best place among its controls' best places.
 
     `bright` holds the core's columns of the places `ids` (ascending); `in_frames`, by ascending id of the middles, says
     which control ellipses share enough of the target's frames.
@@ -90,6 +90,20 @@ def searched(
     serving = serving_controls(positions, middles, in_frames)
     order = np.argsort(chosen[1:])
     return Field(-1 - target, chosen[:1], chosen[1:][order], serving[:, order], n_trials=len(nodes))
+
+
+def together(fields: Sequence[Field]) -> list[Field]:
+    """Searched targets whose controls are judged at the same places as one field, so that these are judged once."""
+    alike: dict[tuple[int, ...], list[Field]] = {}
+    for found in fields:
+        alike.setdefault((found.n_trials, *found.controls.tolist()), []).append(found)
+    joined = []
+    for group in alike.values():
+        targets = np.concatenate([found.targets for found in group])
+        serving = np.concatenate([found.serving for found in group])
+        order = np.argsort(targets)
+        joined.append(Field(group[0].number, targets[order], group[0].controls, serving[order], group[0].n_trials))
+    return joined
 
 
 _CHOOSING = ("core_excess_max", "core_mean_snr")

@@ -164,9 +164,9 @@ def _search_remarks(fields: Sequence[Field], settings: Settings) -> list[str]:
     found = [f for f in fields if f.n_trials > 1]
     if not found:
         return []
-    trials, sizes = [f.n_trials for f in found], [int(f.ranked.n_controls[0]) for f in found]
+    trials, sizes = [f.n_trials for f in found], [int(n) for f in found for n in f.ranked.n_controls]
     said = (
-        f"{len(found)} targets were searched within their position errors at {min(trials)} to {max(trials)} places each, "
+        f"{len(sizes)} targets were searched within their position errors at {min(trials)} to {max(trials)} places each, "
         f"with {min(sizes)} to {max(sizes)} controls searched alike"
     )
     short = min(sizes) < settings.search.controls

@@ -104,7 +104,7 @@ def _fields(frames: Columns, positions: Columns, chosen: Settings) -> list[Field
 def _searched_fields(
     session: Session, frames: Columns, positions: Columns, columns: Mapping[str, Column]
 ) -> list[Field]:
-    """The targets that were searched, each as a field of its own, once the places tried have been compared."""
+    """The targets that were searched, in fields apart, once the places tried have been compared."""
     tried = np.sort(positions["id"][positions["search"] >= 0])
     if len(tried) == 0:
         return []
@@ -122,7 +122,7 @@ def _searched_fields(
         covered = plan.covered(frames, within.rows, vectors[alike])
         in_frames = serves(within.covered, covered, session.order.settings.controls.shared_frames)
         found.append(conclude.searched(positions, int(positions["id"][row]), bright, tried, in_frames))
-    return found
+    return conclude.together(found)
 
 
 def _collected(
