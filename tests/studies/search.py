@@ -75,9 +75,10 @@ def pulser_found(seed: int, frames: int, noise: str, steady: Sequence[skies.Sour
     good = (
         apart < 0.5 and row["q_value"] < LEVEL and row["standing"] in ("repeating", "periodic") and not row["concerns"]
     )
+    said = f"{row['standing']}, {row['concerns'] or 'no concerns'}"
     print(
         f"seed {seed}, {noise} noise: pulser at {row['n_trials']} places and {row['n_controls']} controls: {apart:.2f} beams "
-        f"off, q {row['q_value']:.3g} ({row['standing']}, {row['concerns'] or 'no concerns'}): {'holds' if good else 'FALLS SHORT'}",
+        f"off, q {row['q_value']:.3g} ({said}): {'holds' if good else 'FALLS SHORT'}",
         flush=True,
     )
     return bool(good)
