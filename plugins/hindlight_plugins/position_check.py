@@ -70,12 +70,12 @@ class Position(ConsistencyCheck):
             found += [(-float(s), int(f), signed) for s, f in zip(snr[good], curve.frame[good], strict=True)]
         return {frame: (-negative, signed) for negative, frame, signed in sorted(found)[: self.max_frames]}
 
-    def _judge(self, offsets: Array, error: Array, fwhm: Array, known_to: float) -> Finding:
+    def _judge(self, offsets: Array, error: Array, fwhm: Array, known_to: float = 0.0) -> Finding:
         """The finding from offsets of shape (n, 2), their errors per axis and beams, shape (n,), all in arcsec.
 
         chi2 = |mean|^2 / err_mean^2 with 2 degrees of freedom, and sum |offset - mean|^2 / err^2 with 2 (n-1): the sum
-        of both is the chi-square against the target's position. The floor and the target's error `known_to` are common to all frames,
-        so the mean is never better known than by them.
+        of both is the chi-square against the target's position. The floor and the target's error `known_to` are common
+        to all frames, so the mean is never better known than by them.
         """
         n = error.size
         floor = self.floor * fwhm
