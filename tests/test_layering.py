@@ -17,7 +17,7 @@ ORDER = [
     "fence", "clock", "systems", "celestial", "sky", "headers", "reading", "goodtime", "knowledge", "files",
     "companions", "channels", "outlines", "footprints", "archive", "summary", "positions", "apart", "pixels",
     "background", "detection", "pointing", "photometry", "duplicates", "ensemble", "store", "judge", "calibrate",
-    "ranking", "timing", "candidates", "plan", "comparisons", "tasks", "conclude", "outcome", "crew", "record",
+    "ranking", "search", "timing", "candidates", "plan", "comparisons", "tasks", "conclude", "outcome", "crew", "record",
     "verdicts", "runner", "survey", "export", "demo", "testing", "cli", "__main__",
 ]  # fmt: skip
 PLUGINS_MAY_IMPORT = {"hindlight", "numpy", "scipy", "astropy", "photutils", "nifty_ls"}

@@ -56,7 +56,8 @@ class Position(ConsistencyCheck):
             values = {"offset": float("nan"), "chi2_scatter": float("nan"), "p": float("nan"), "n_frames": 0}
             return Finding("uninformative", f"no bright frame of {self.min_snr:g} sigma has a centroid", values)
         east, north, error, fwhm = np.array(rows).T
-        return self._judge(np.stack((east, north), axis=1), error, fwhm)
+        known_to = math.hypot(self.target_err, candidate.place_err)
+        return self._judge(np.stack((east, north), axis=1), error, fwhm, known_to)
 
     def _bright_frames(self, candidate: Candidate) -> dict[int, tuple[float, bool]]:
         """Signal to noise, and whether it may be negative, of each bright frame that carries a position, best first."""
@@ -69,12 +70,12 @@ class Position(ConsistencyCheck):
             found += [(-float(s), int(f), signed) for s, f in zip(snr[good], curve.frame[good], strict=True)]
         return {frame: (-negative, signed) for negative, frame, signed in sorted(found)[: self.max_frames]}
 
-    def _judge(self, offsets: Array, error: Array, fwhm: Array) -> Finding:
+    def _judge(self, offsets: Array, error: Array, fwhm: Array, known_to: float = 0.0) -> Finding:
         """The finding from offsets of shape (n, 2), their errors per axis and beams, shape (n,), all in arcsec.
 
         chi2 = |mean|^2 / err_mean^2 with 2 degrees of freedom, and sum |offset - mean|^2 / err^2 with 2 (n-1): the sum
-        of both is the chi-square against the target's position. The floor and `target_err` are common to all frames,
-        so the mean is never better known than by them.
+        of both is the chi-square against the target's position. The floor and the target's error `known_to` are common
+        to all frames, so the mean is never better known than by them.
         """
         n = error.size
         floor = self.floor * fwhm
@@ -82,7 +83,7 @@ class Position(ConsistencyCheck):
         mean = (weight[:, None] * offsets).sum(axis=0) / weight.sum()
         distance = math.hypot(*mean)
         beam = float((weight * fwhm).sum() / weight.sum())
-        variance = float(1 / weight.sum()) + ((self.floor * beam) ** 2 if n > 1 else 0.0) + self.target_err**2
+        variance = float(1 / weight.sum()) + ((self.floor * beam) ** 2 if n > 1 else 0.0) + known_to**2
         within = CIRCLE_95 * variance**0.5
         p = [math.exp(-(distance**2) / variance / 2)]
         frames = "1 bright frame" if n == 1 else f"{n} bright frames"

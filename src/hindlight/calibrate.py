@@ -56,11 +56,11 @@ def null_from(values: FloatArray) -> Null:
     at_least = np.empty(values.shape, np.int64)
     for k in range(values.shape[1]):
         at_least[:, k] = n - np.searchsorted(ordered[:, k], values[:, k], side="left")
-    centre, spread = _centre_and_spread(values)
+    centre, spread = centre_and_spread(values)
     return Null(values, ordered, at_least, centre, spread)
 
 
-def _centre_and_spread(values: FloatArray) -> tuple[FloatArray, FloatArray]:
+def centre_and_spread(values: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Median and MAD (as a sigma) of each column's finite values; a wider measure where more than half are equal."""
     k = values.shape[1]
     centre, spread = np.zeros(k), np.ones(k)

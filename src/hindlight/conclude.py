@@ -16,19 +16,26 @@ from hindlight import calibrate, ranking
 from hindlight.host import Plugins
 from hindlight.judge import Judgement, full_columns
 from hindlight.lightcurve import FloatArray, IntArray
-from hindlight.positions import separation_deg
+from hindlight.plan import of_targets
+from hindlight.positions import nearest_deg
+from hindlight.search import best_places
 from hindlight.settings import Settings
 from hindlight.systems import unit_vectors
 
 
 @dataclass(eq=False)
 class Field:
-    """One field while it is judged: its targets and controls as ids, and what is known of them so far."""
+    """One field while it is judged: its targets and controls as ids, and what is known of them so far.
+
+    Targets that were searched are in fields apart, with their best places and those of their controls, out of
+    `n_trials` each; the numbers of such fields are below zero.
+    """
 
     number: int
     targets: IntArray
     controls: IntArray
     serving: NDArray[np.bool_]
+    n_trials: int = 1
     judgement: Judgement = field(default_factory=lambda: Judgement(0))
     ranks: ranking.FieldRanks | None = None
     thresholds: dict[str, ranking.Thresholds] = field(default_factory=dict)
@@ -55,14 +62,58 @@ def serving_controls(
 ) -> NDArray[np.bool_]:
     """Which controls may serve which targets: in enough of the same frames, and clear of every target of the run."""
     rows = np.searchsorted(positions["id"], controls)
-    everyone = positions["kind"] == "target"
+    everyone = of_targets(positions)
     vectors = unit_vectors(positions["ra"][rows], positions["dec"][rows])
     occupied = unit_vectors(positions["ra"][everyone], positions["dec"][everyone])
-    free = np.ones(len(controls), dtype=bool)
-    for start in range(0, len(occupied), 256):
-        apart = separation_deg(vectors, occupied[start : start + 256])
-        free &= (apart >= 0.999 * positions["clear_radius"][rows][:, None]).all(axis=1)
+    free = nearest_deg(vectors, occupied) >= 0.999 * positions["clear_radius"][rows]
     return np.asarray(in_frames & free[None, :])
+
+
+def searched(
+    positions: Mapping[str, Any], target: int, bright: Judgement, ids: IntArray, in_frames: NDArray[np.bool_]
+) -> Field:
+    """A target that was searched as a field of its own, numbered below zero: its best place among its controls' best places.
+
+    `bright` holds the core's columns of the places `ids` (ascending); `in_frames`, by ascending id of the middles, says
+    which control ellipses share enough of the target's frames.
+    """
+    row = int(np.searchsorted(positions["id"], target))
+    nodes = positions["node"][positions["parent"] == target]  # by id: the stated place first
+    mine = (positions["kind"] == "blank") & (positions["search"] == positions["search"][row])
+    middles = np.unique(positions["parent"][mine])
+    places = np.stack([_places(positions, int(parent), nodes) for parent in (target, *middles.tolist())])
+    at = np.searchsorted(ids, places)
+    labels = sorted({channel for channel, _ in bright.values})
+    columns = [[np.asarray(bright.values[label, name], float)[at] for label in labels] for name in _CHOOSING]
+    best = best_places(*columns) if labels else np.zeros(len(places), np.int64)
+    chosen = places[np.arange(len(places)), best]
+    serving = serving_controls(positions, middles, in_frames)
+    order = np.argsort(chosen[1:])
+    return Field(-1 - target, chosen[:1], chosen[1:][order], serving[:, order], n_trials=len(nodes))
+
+
+def together(fields: Sequence[Field]) -> list[Field]:
+    """Searched targets whose controls are judged at the same places as one field, so that these are judged once."""
+    alike: dict[tuple[int, ...], list[Field]] = {}
+    for found in fields:
+        alike.setdefault((found.n_trials, *found.controls.tolist()), []).append(found)
+    joined = []
+    for group in alike.values():
+        targets = np.concatenate([found.targets for found in group])
+        serving = np.concatenate([found.serving for found in group])
+        order = np.argsort(targets)
+        joined.append(Field(group[0].number, targets[order], group[0].controls, serving[order], group[0].n_trials))
+    return joined
+
+
+_CHOOSING = ("core_excess_max", "core_mean_snr")
+
+
+def _places(positions: Mapping[str, Any], parent: int, nodes: IntArray) -> IntArray:
+    """The ids of the places at these nodes around a middle."""
+    rows = np.flatnonzero(positions["parent"] == parent)
+    rows = rows[np.argsort(positions["node"][rows])]
+    return np.asarray(positions["id"][rows[np.searchsorted(positions["node"][rows], nodes)]])
 
 
 def rank(found: Field, plugins: Plugins, settings: Settings) -> None:

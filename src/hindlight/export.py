@@ -26,7 +26,7 @@ def light_curves(run: RunFolder, target: str) -> astropy.table.Table:
     """
     run.require()
     tables = tasks.book(str(run.path.resolve()), "")
-    row = _row_of(tables.positions, target, run.path)
+    row = _judged_row(run, tables.positions, _row_of(tables.positions, target, run.path), target)
     plan = [
         piece
         for piece in store.pieces(tables.frames, tables.positions)
@@ -54,6 +54,21 @@ def _row_of(positions: dict[str, Any], target: str, run: Path) -> int:
     close = difflib.get_close_matches(target, [n for n in names if n], n=1)
     hint = f"did you mean {close[0]!r}?" if close else "names are in candidates.ecsv"
     raise UsageError(f"run {run}: no target {target!r}; {hint}")
+
+
+def _judged_row(run: RunFolder, positions: dict[str, Any], row: int, target: str) -> int:
+    """The row of the place where a target was judged: the stated one, or that found by searching."""
+    tried = np.flatnonzero(positions["parent"] == positions["id"][row])
+    if len(tried) == 0 or not run.has("candidates.ecsv"):
+        return row
+    table = read_ecsv(run.file("candidates.ecsv"))
+    found = table[table["name"] == target]
+    if len(found) == 0 or not np.isfinite(float(found["found_ra"][0])):
+        return row
+    offset = np.hypot(
+        positions["ra"][tried] - float(found["found_ra"][0]), positions["dec"][tried] - float(found["found_dec"][0])
+    )
+    return int(tried[np.argmin(offset)])
 
 
 def _columns(run: RunFolder, tables: tasks.Book, rows: dict[str, Any], target: str) -> dict[str, Any]:

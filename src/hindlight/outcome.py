@@ -18,6 +18,7 @@ from hindlight.conclude import Field, PValues
 from hindlight.fence import Fault, blank
 from hindlight.host import Plugins
 from hindlight.judge import full_columns
+from hindlight.lightcurve import FloatArray
 from hindlight.plugin import Column, ConsistencyCheck, Statistic
 from hindlight.schema import CANDIDATES, PLUGIN_FAULTS, TableColumn
 from hindlight.settings import Settings
@@ -85,7 +86,7 @@ def chance_cells(found: Field, index: int, at: int, p: PValues) -> dict[str, Any
     }
 
 
-def notes(found: Field, index: int, at: int, p: PValues, position_error_arcsec: float = 0.0) -> str:
+def notes(found: Field, index: int, at: int, p: PValues, place: str = "") -> str:
     """What a reader should know before trusting a row."""
     n_controls = int(found.ranked.n_controls[index])
     said = []
@@ -95,11 +96,22 @@ def notes(found: Field, index: int, at: int, p: PValues, position_error_arcsec: 
         said.append("p_value is the upper bound of a fitted tail, beyond every control")
     if n_controls == 0:
         said.append("no control serves this target: no p-value")
-    if position_error_arcsec > 0:
-        said.append(
-            f"measured at the stated place only, not searched within its error of {position_error_arcsec:g} arcsec"
-        )
-    return "; ".join(said)
+    return "; ".join([*said, place] if place else said)
+
+
+def place_note(found: Field, distances: FloatArray, error: float, most_places: int) -> str:
+    """What is to be said of the place a target was judged at; '' where it is the stated one and no error is given.
+
+    `distances` in arcsec from the stated place: of the place judged, and of the one tried furthest out; `error` is the
+    target's position error in arcsec.
+    """
+    if found.n_trials == 1:
+        return f"measured at the stated place only, its error being {error:g} arcsec" if error > 0 else ""
+    said = (
+        f"searched at {found.n_trials} places up to {distances[1]:.4g} arcsec from the stated one, as its controls were; "
+        f"judged {distances[0]:.4g} arcsec away from it"
+    )
+    return said + ("; [search] most_places left out those further away" if found.n_trials >= most_places else "")
 
 
 def related_frames(frames: Mapping[str, Any]) -> tuple[str, ...]:
@@ -124,25 +136,41 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings) -> tuple[st
     """What the last lines of a run must say."""
     said = []
     sizes = [int(n) for found in fields for n in found.ranked.n_controls]
+    placed = [int(n) for found in fields if found.n_trials == 1 for n in found.ranked.n_controls]
     alone = sum(size == 0 for size in sizes)
     if alone:
         said.append(f"{alone} targets have no control and so no p-value: nothing is said of their variation")
     if not p.testable.all() and len(sizes) - alone:
         said.append(f"{int((~p.testable).sum())} targets are undecided: too few controls, or too few usable frames")
-    if sizes and min(sizes) < settings.controls.per_field:
+    if placed and min(placed) < settings.controls.per_field:
         said.append(
-            f"controls per target: {min(sizes)} to {max(sizes)}, {settings.controls.per_field} were asked for; "
+            f"controls per target: {min(placed)} to {max(placed)}, {settings.controls.per_field} were asked for; "
             "no more fit into the frames clear of sources and of each other"
         )
+    said += _search_remarks(fields, settings)
     if p.short.any():
         said.append(
             f"{int(p.short.sum())} targets lie beyond every control, but their number cannot decide at q < "
-            f"{settings.ranking.level:g}: {p.needed} controls a field would ([controls] per_field)"
+            f"{settings.ranking.level:g}: {p.needed} controls would ([controls] per_field, [search] controls)"
         )
     said += _error_remarks(fields)
     if p.extrapolated.any():
         said.append(f"{int(p.extrapolated.sum())} p-values are upper bounds of a fitted tail (p_is_extrapolated)")
     return tuple(said)
+
+
+def _search_remarks(fields: Sequence[Field], settings: Settings) -> list[str]:
+    """Targets that were searched within their position errors."""
+    found = [f for f in fields if f.n_trials > 1]
+    if not found:
+        return []
+    trials, sizes = [f.n_trials for f in found], [int(n) for f in found for n in f.ranked.n_controls]
+    said = (
+        f"{len(sizes)} targets were searched within their position errors at {min(trials)} to {max(trials)} places each, "
+        f"with {min(sizes)} to {max(sizes)} controls searched alike"
+    )
+    short = min(sizes) < settings.search.controls
+    return [said + (f"; {settings.search.controls} were asked for, no more fit into the frames" if short else "")]
 
 
 def _error_remarks(fields: Sequence[Field]) -> list[str]:
@@ -151,7 +179,7 @@ def _error_remarks(fields: Sequence[Field]) -> list[str]:
     for found in fields:
         controls = found.rows(found.controls)
         for (label, full), values in found.judgement.values.items():
-            if full == "core_reduced" and controls.size:
+            if full == "core_reduced" and controls.size and found.n_trials == 1:  # a place chosen is not typical
                 scatter.setdefault(label, []).extend(np.sqrt(values[controls][np.isfinite(values[controls])]).tolist())
     said = []
     for label, values in sorted(scatter.items()):

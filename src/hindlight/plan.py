@@ -17,15 +17,30 @@ from hindlight.duplicates import counts, waiting
 from hindlight.errors import UsageError
 from hindlight.footprints import coverage_matrix
 from hindlight.lightcurve import FloatArray, IntArray
-from hindlight.positions import BlankSky, Targets, control_grid, field_of, field_size, serves
+from hindlight.positions import (
+    ARCSEC_DEG,
+    BlankSky,
+    Targets,
+    control_grid,
+    field_of,
+    field_size,
+    from_tangent,
+    nearest_deg,
+    serves,
+)
 from hindlight.schema import FRAMES, POSITIONS
-from hindlight.settings import Controls
+from hindlight.search import CENTRE, Places, places_within
+from hindlight.settings import Controls, Search
 from hindlight.systems import unit_vectors
 
 SAMPLED_FRAMES = 4000  # coverage is judged on at most this many frames of a field, evenly spaced
 WIDE_BEAM = 0.9  # controls stand apart by the beam that this fraction of the frames does not exceed
 SAME_PLACE_DEG = 1e-6
+ROUND_PLACES = 20_000  # places tried that are measured in one piece of work
+LATTICE_ERROR = (5 / 72) ** 0.5  # rms distance per axis from the nearest node of a hexagonal lattice of unit spacing
+RIM = np.radians(np.arange(0, 360, 45))
 
+MOTION = ("pm_ra_cosdec", "pm_dec", "ref_epoch")
 PLACE = ("archive", "path", "modified_ns")  # of a file that is moved, all that changes
 
 Columns = dict[str, Any]
@@ -153,8 +168,7 @@ def new_targets(positions: Columns, targets: Targets) -> NDArray[np.int64]:
         offset = np.hypot(
             (positions["ra"][i] - targets.ra[row] + 180) % 360 - 180, positions["dec"][i] - targets.dec[row]
         )
-        motion = ("pm_ra_cosdec", "pm_dec", "ref_epoch")
-        moves = [name for name in motion if positions[name][i] != targets.column(name)[row]]
+        moves = [name for name in MOTION if positions[name][i] != targets.column(name)[row]]
         if moves:
             raise UsageError(
                 f"target {name!r}: this run has {moves[0]} {positions[moves[0]][i]:g}, the list "
@@ -174,12 +188,27 @@ def add_targets(positions: Columns, targets: Targets, rows: NDArray[np.int64], s
     if n == 0:
         return positions
     ra, dec = targets.ra[rows], targets.dec[rows]
+    motion = {name: targets.column(name)[rows] for name in MOTION}
+    return _added(
+        positions, "target", ra, dec, field_of(ra, dec, size_deg), _next_round(positions),
+        name=[targets.names[row] for row in rows], **motion,
+    )  # fmt: skip
+
+
+def _added(
+    positions: Columns, kind: str, ra: FloatArray, dec: FloatArray, field: Any, round_: Any, **more: Any
+) -> Columns:
+    """The position table with more rows: what is not given of them has no name, does not move and was not searched."""
+    n = len(ra)
+    usual = {
+        "id": _next_id(positions) + np.arange(n), "name": "", "kind": kind, "ra": ra, "dec": dec, "pm_ra_cosdec": 0.0,
+        "pm_dec": 0.0, "ref_epoch": 2000.0, "field": field, "round": round_, "clear_radius": 0.0, "search": -1,
+        "parent": -1, "place_err": 0.0, "node": -1,
+    }  # fmt: skip
+    rows = {**usual, **more}
     return append(positions, {
-        "id": _next_id(positions) + np.arange(n), "name": [targets.names[row] for row in rows],
-        "kind": np.full(n, "target", object), "ra": ra, "dec": dec,
-        "pm_ra_cosdec": targets.column("pm_ra_cosdec")[rows], "pm_dec": targets.column("pm_dec")[rows],
-        "ref_epoch": targets.column("ref_epoch")[rows], "field": field_of(ra, dec, size_deg),
-        "round": np.full(n, _next_round(positions)), "clear_radius": np.zeros(n),
+        name: np.full(n, value, object if isinstance(value, str) else None) if np.ndim(value) == 0 else value
+        for name, value in rows.items()
     })  # fmt: skip
 
 
@@ -283,9 +312,15 @@ def reference_frames(frames: Columns, rows: IntArray, per_channel: int) -> IntAr
 
 def field_spacing(frames: Columns, rows: IntArray, settings: Controls, assumed_fwhm_pixels: float) -> float:
     """The least distance between blank positions in degrees: so many of the wide beams among these frames."""
+    return settings.separation * float(
+        np.quantile(beams(frames, rows, assumed_fwhm_pixels), WIDE_BEAM, method="higher")
+    )
+
+
+def beams(frames: Columns, rows: IntArray, assumed_fwhm_pixels: float) -> FloatArray:
+    """Width in degrees of the beam or seeing of these frames, the assumed one where a header gives none."""
     beam = frames["beam_major"][rows]
-    beam = np.where(np.isfinite(beam), beam, assumed_fwhm_pixels * frames["pixel_scale"][rows])
-    return settings.separation * float(np.quantile(beam, WIDE_BEAM, method="higher")) / 3600.0
+    return np.asarray(np.where(np.isfinite(beam), beam, assumed_fwhm_pixels * frames["pixel_scale"][rows]) / 3600.0)
 
 
 def add_controls(
@@ -293,41 +328,147 @@ def add_controls(
     bright: BrightSources, settings: Controls,
 ) -> Columns:  # fmt: skip
     """The position table with the controls of one field in the given round."""
-    is_target = positions["kind"] == "target"
-    mine = is_target & (positions["field"] == field)
-    all_targets = unit_vectors(positions["ra"][is_target], positions["dec"][is_target])
-    centre = unit_vectors(positions["ra"][mine], positions["dec"][mine]).mean(axis=0)
-    ra0 = float(np.degrees(np.arctan2(centre[1], centre[0])) % 360)
-    dec0 = float(np.degrees(np.arctan2(centre[2], np.hypot(centre[0], centre[1]))))
-    extent = 2 * float(np.median(frames["radius"][within.rows]))
-    ra, dec = control_grid(ra0, dec0, extent, spacing_deg, settings.per_field, field)
+    mine = (positions["kind"] == "target") & (positions["field"] == field)
+    ra, dec = _clear_of_targets(positions, mine, spacing_deg, spacing_deg, settings.per_field, field, frames, within)
     vectors = unit_vectors(ra, dec)
-    free = BlankSky(all_targets, np.full(len(all_targets), spacing_deg)).clear(vectors)
+    free = np.ones(len(ra), bool)
     if len(bright.ra):
         free &= bright.blank_sky(spacing_deg / 2).clear(vectors)
     ra, dec, vectors = ra[free], dec[free], vectors[free]
     inside = covered(frames, within.rows, vectors)
     useful = serves(within.covered, inside, settings.shared_frames).any(axis=0)
     ra, dec = ra[useful][: settings.per_field], dec[useful][: settings.per_field]
-    n = len(ra)
-    return append(positions, {
-        "id": _next_id(positions) + np.arange(n), "name": np.full(n, "", object),
-        "kind": np.full(n, "control", object), "ra": ra, "dec": dec,
-        "pm_ra_cosdec": np.zeros(n), "pm_dec": np.zeros(n), "ref_epoch": np.full(n, 2000.0),
-        "field": np.full(n, field), "round": np.full(n, round_number),
-        "clear_radius": np.full(n, spacing_deg),
-    })  # fmt: skip
+    return _added(positions, "control", ra, dec, field, round_number, clear_radius=spacing_deg)
+
+
+def of_targets(positions: Mapping[str, Any]) -> NDArray[np.bool_]:
+    """Which positions a target may be at: the stated ones, and places tried for it."""
+    return np.isin(positions["kind"], ("target", "trial"))
+
+
+def owners(positions: Mapping[str, Any], ids: IntArray) -> IntArray:
+    """Rows of the targets that positions belong to: their own, but those of a place tried are its target's."""
+    rows = np.searchsorted(positions["id"], ids)
+    tried = positions["kind"][rows] == "trial"
+    return np.where(tried, np.searchsorted(positions["id"], positions["parent"][rows]), rows)
+
+
+def _clear_of_targets(
+    positions: Columns, middle_of: NDArray[np.bool_], spacing_deg: float, clear_deg: float, wanted: int, seed: int,
+    frames: Columns, within: FieldFrames,
+) -> tuple[FloatArray, FloatArray]:  # fmt: skip
+    """Places around the middle of some targets, `spacing_deg` apart and `clear_deg` from where any target may be."""
+    centre = unit_vectors(positions["ra"][middle_of], positions["dec"][middle_of]).mean(axis=0)
+    ra0 = float(np.degrees(np.arctan2(centre[1], centre[0])) % 360)
+    dec0 = float(np.degrees(np.arctan2(centre[2], np.hypot(centre[0], centre[1]))))
+    extent = 2 * float(np.median(frames["radius"][within.rows]))
+    ra, dec = control_grid(ra0, dec0, extent, spacing_deg, wanted, seed)
+    near = of_targets(positions)
+    occupied = unit_vectors(positions["ra"][near], positions["dec"][near])
+    free = nearest_deg(unit_vectors(ra, dec), occupied) > clear_deg
+    return ra[free], dec[free]
+
+
+@dataclass(frozen=True, eq=False)
+class Sought:
+    """Targets of one field that are searched with the same controls: their ids and the places tried for each."""
+
+    targets: IntArray
+    places: tuple[Places, ...]
+    spacing_deg: float
+
+    @property
+    def reach(self) -> float:
+        """Degrees from a middle to the place furthest out."""
+        return max(places.reach for places in self.places)
+
+
+def sought(
+    positions: Columns, targets: Targets, new: IntArray, beam_deg: float, settings: Search
+) -> list[Sought]:  # fmt: skip
+    """Which of these targets (ids of one field) are to be searched; alike in size those that share their controls."""
+    row_of = {name: row for row, name in enumerate(targets.names)}
+    major, minor, angle = targets.error_ellipses
+    spacing = settings.spacing * beam_deg
+    found: dict[int, list[tuple[int, Places]]] = {}
+    for target in new.tolist():
+        row = row_of[str(positions["name"][np.searchsorted(positions["id"], target)])]
+        if settings.sigmas == 0 or major[row] * ARCSEC_DEG <= beam_deg:
+            continue
+        axes = major[row] * ARCSEC_DEG, minor[row] * ARCSEC_DEG
+        places = places_within(*axes, angle[row], spacing, settings.sigmas, settings.most_places)
+        found.setdefault(round(np.log2(places.reach / spacing)), []).append((target, places))
+    return [
+        Sought(np.array([t for t, _ in mine]), tuple(places for _, places in mine), spacing)
+        for _, mine in sorted(found.items())
+    ]
+
+
+def add_trials(positions: Columns, group: Sought) -> Columns:
+    """The position table with the places tried for some targets; the stated place of each is the first of them."""
+    positions = {name: values.copy() for name, values in positions.items()}
+    rows = np.searchsorted(positions["id"], group.targets)
+    error = LATTICE_ERROR * group.spacing_deg / ARCSEC_DEG
+    for name, value in (
+        ("search", group.targets[0]),
+        ("parent", group.targets),
+        ("place_err", error),
+        ("node", CENTRE),
+    ):
+        positions[name][rows] = value
+    owner = np.repeat(rows, [len(places) - 1 for places in group.places])
+    east = np.concatenate([places.east[1:] for places in group.places])
+    north = np.concatenate([places.north[1:] for places in group.places])
+    ra, dec = from_tangent(positions["ra"][owner], positions["dec"][owner], east, north)
+    motion = {name: positions[name][owner] for name in MOTION}
+    return _added(
+        positions, "trial", ra, dec, positions["field"][owner], _rounds(positions, len(ra)), search=group.targets[0],
+        parent=positions["id"][owner], place_err=error,
+        node=np.concatenate([places.node[1:] for places in group.places]), **motion,
+    )  # fmt: skip
+
+
+def _rounds(positions: Columns, n: int) -> IntArray:
+    """New rounds for `n` places."""
+    return np.asarray(_next_round(positions) + np.arange(n) // ROUND_PLACES)
+
+
+def add_blanks(
+    positions: Columns, group: Sought, frames: Columns, within: FieldFrames, spacing_deg: float, controls: Controls,
+    wanted: int,
+) -> Columns:  # fmt: skip
+    """The position table with the control ellipses of a search: every place tried for any of its targets, around each.
+
+    They overlap neither each other nor a place where a target may be, and lie whole in the frames. Sources in them are
+    left where they are, since nothing keeps a target's ellipse clear of sources either.
+    """
+    node, first = np.unique(np.concatenate([places.node for places in group.places]), return_index=True)
+    east = np.concatenate([places.east for places in group.places])[first]
+    north = np.concatenate([places.north for places in group.places])[first]
+    clear = group.reach + spacing_deg
+    mine = np.isin(positions["id"], group.targets)
+    field, search = int(positions["field"][mine][0]), int(group.targets[0])
+    ra0, dec0 = _clear_of_targets(positions, mine, clear + group.reach, clear, wanted, search, frames, within)
+    whole = np.ones(len(ra0), bool)
+    for angle in RIM:
+        rim = from_tangent(
+            ra0, dec0, np.full(len(ra0), group.reach * np.sin(angle)), np.array(group.reach * np.cos(angle))
+        )
+        inside = covered(frames, within.rows, unit_vectors(*rim))
+        whole &= serves(within.covered, inside, controls.shared_frames).any(axis=0)
+    middles = np.flatnonzero(whole)[:wanted]
+    ra, dec = (axis.ravel() for axis in from_tangent(ra0[middles, None], dec0[middles, None], east, north))
+    ids = _next_id(positions) + np.arange(len(ra))
+    parent = np.repeat(ids.reshape(len(middles), len(node))[:, node == CENTRE], len(node))
+    return _added(
+        positions, "blank", ra, dec, field, _rounds(positions, len(ra)), clear_radius=clear, search=search, parent=parent,
+        place_err=LATTICE_ERROR * group.spacing_deg / ARCSEC_DEG, node=np.tile(node, len(middles)),
+    )  # fmt: skip
 
 
 def add_comparisons(positions: Columns, field: int, round_number: int, ra: FloatArray, dec: FloatArray) -> Columns:
     """The position table with comparisons of one field in the given round."""
-    n = len(ra)
-    return append(positions, {
-        "id": _next_id(positions) + np.arange(n), "name": np.full(n, "", object),
-        "kind": np.full(n, "comparison", object), "ra": ra, "dec": dec,
-        "pm_ra_cosdec": np.zeros(n), "pm_dec": np.zeros(n), "ref_epoch": np.full(n, 2000.0),
-        "field": np.full(n, field), "round": np.full(n, round_number), "clear_radius": np.zeros(n),
-    })  # fmt: skip
+    return _added(positions, "comparison", ra, dec, field, round_number)
 
 
 def no_positions() -> Columns:

@@ -160,6 +160,8 @@ class Candidate:
         Called with a channel label and frame identifiers (m,): the blank positions of the field in those frames.
     cutouts
         Called with frame identifiers and a half width in beams: raw pixels around the target.
+    place_err
+        1-sigma error per axis of a place that was searched for, arcsec; 0 where it was given.
     """
 
     name: str
@@ -172,6 +174,7 @@ class Candidate:
     ephemeris: Ephemeris | None
     controls: Callable[[str, IntArray], Block]
     cutouts: Callable[[IntArray, float], Sequence[Cutout]]
+    place_err: float = 0.0
 
 
 @dataclass(frozen=True)

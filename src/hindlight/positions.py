@@ -15,6 +15,7 @@ import astropy.units as u
 import numpy as np
 from astropy.coordinates import Angle
 from numpy.typing import NDArray
+from scipy.spatial import cKDTree
 
 from hindlight.errors import UsageError
 from hindlight.lightcurve import FloatArray, IntArray
@@ -22,6 +23,7 @@ from hindlight.lightcurve import FloatArray, IntArray
 BANDS_PER_TURN = 1 << 20  # cells of one declination band: field = band * BANDS_PER_TURN + cell
 CANDIDATES_PER_CONTROL = 6
 ARCSEC = np.pi / 180 / 3600
+ARCSEC_DEG = 1 / 3600
 
 OPTIONAL_UNITS = {
     "pos_err": u.arcsec, "pos_err_major": u.arcsec, "pos_err_minor": u.arcsec, "pos_err_angle": u.deg,
@@ -56,6 +58,14 @@ class Targets:
     def position_error(self) -> FloatArray:
         """The larger 1-sigma position error in arcsec, 0 where not given; shape (n,)."""
         return np.fmax(self.column("pos_err"), np.nan_to_num(self.column("pos_err_major")))
+
+    @property
+    def error_ellipses(self) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """1-sigma axes in arcsec and position angle of the first one in degrees, each of shape (n,); circles if not given."""
+        major = self.position_error
+        minor, angle = self.column("pos_err_minor"), self.column("pos_err_angle")
+        given = np.isfinite(minor) & (self.column("pos_err_major") >= self.column("pos_err"))
+        return major, np.where(given, minor, major), np.nan_to_num(angle)
 
     def column(self, name: str) -> FloatArray:
         """An optional column, shape (n,); NaN (or 0 for motions, 2000 for their epoch) where not given."""
@@ -200,6 +210,14 @@ def separation_deg(a: FloatArray, b: FloatArray) -> FloatArray:
     return np.asarray(np.degrees(2 * np.arcsin(np.minimum(1.0, chord / 2))))
 
 
+def nearest_deg(a: FloatArray, b: FloatArray) -> FloatArray:
+    """Angle in degrees from each unit vector of `a` (n, 3) to the nearest of `b` (m, 3); infinite for none. Shape (n,)."""
+    if len(a) == 0 or len(b) == 0:
+        return np.full(len(a), np.inf)
+    chord = np.minimum(cKDTree(b).query(a)[0], 2.0)
+    return np.asarray(np.degrees(2 * np.arcsin(chord / 2)))
+
+
 def moved(
     ra: FloatArray, dec: FloatArray, pm_ra_cosdec: FloatArray, pm_dec: FloatArray, ref_epoch: FloatArray, year: float
 ) -> tuple[FloatArray, FloatArray]:
@@ -264,7 +282,7 @@ def control_grid(
 
 
 def from_tangent(
-    ra0: float, dec0: float, xi: NDArray[np.floating[Any]], eta: NDArray[np.floating[Any]]
+    ra0: float | FloatArray, dec0: float | FloatArray, xi: NDArray[np.floating[Any]], eta: NDArray[np.floating[Any]]
 ) -> tuple[FloatArray, FloatArray]:
     """Gnomonic plane (degrees east and north of a centre) to ICRS degrees (Calabretta & Greisen 2002, eq. 54)."""
     x, y, d0 = np.radians(xi), np.radians(eta), np.radians(dec0)

@@ -72,7 +72,7 @@ def _mine_locked(
     recorded = record.compare(run, request, settings, plugins)
     frames, rejects = _walked(run, request, settings, plugins, watcher)
     size = float(recorded.get("field_size_deg", 0.0))
-    small = len(frames["id"]) * (len(lists[0]) + settings.controls.per_field) < SMALL_WORK
+    small = len(frames["id"]) * _most_positions(frames, lists[0], settings) < SMALL_WORK
     with assembled(request.workers, request.scheduler, small) as crew:
         session = Session(run, crew, order, plugins, lists[0], watcher, lists[1])
         pairs = duplicates.candidates(frames)
@@ -86,6 +86,14 @@ def _mine_locked(
         positions = _planned(session, frames, size)
         session = replace(session, order=replace(order, version=run.version()))
         return _measured_and_judged(session, frames, positions, rejects)
+
+
+def _most_positions(frames: Columns, targets: Targets, settings: Settings) -> int:
+    """About how many positions will be measured at most."""
+    narrow = float(np.min(frames["beam_major"], initial=np.inf, where=frames["beam_major"] > 0))
+    searched = int(np.count_nonzero(targets.position_error > narrow)) if settings.search.sigmas else 0
+    places = settings.search.most_places * (searched + settings.search.controls) if searched else 0
+    return len(targets) + settings.controls.per_field + places
 
 
 def _write_frames(session: Session, request: Request, frames: Columns, rejects: Sequence[Row], size: float) -> None:
@@ -219,6 +227,10 @@ def _planned(session: Session, frames: Columns, size_deg: float) -> Columns:
     run, settings = session.run, session.order.settings
     known = run.positions() if run.has("positions.parquet") else plan.no_positions()
     positions = plan.add_targets(known, session.targets, plan.new_targets(known, session.targets), size_deg)
+    round_of_controls = plan.round_for_controls(known, positions)
+    searches = _sought(session, frames, positions, len(known["id"]))
+    for _, group in searches:
+        positions = plan.add_trials(positions, group)
     within: dict[int, plan.FieldFrames] = {}
     for number in plan.fields_without_controls(positions):
         mine = (positions["kind"] == "target") & (positions["field"] == number)
@@ -233,7 +245,6 @@ def _planned(session: Session, frames: Columns, size_deg: float) -> Columns:
             f"check the positions (ICRS degrees) and the archive{hint}"
         )
     bright = _bright_sources(session, frames, within)
-    round_of_controls = plan.round_for_controls(known, positions)
     chosen = _comparisons(session, frames, positions, within, bright)
     for number, (ra, dec) in chosen.items():
         positions = plan.add_comparisons(positions, number, round_of_controls, ra, dec)
@@ -242,9 +253,32 @@ def _planned(session: Session, frames: Columns, size_deg: float) -> Columns:
         positions = plan.add_controls(
             positions, number, round_of_controls, frames, here, spacing, bright[number], settings.controls
         )
+    for here, group in searches:
+        spacing = plan.field_spacing(frames, here.rows, settings.controls, settings.photometry.assumed_fwhm_pixels)
+        positions = plan.add_blanks(
+            positions, group, frames, here, spacing, settings.controls, settings.search.controls
+        )
     if len(positions["id"]) > len(known["id"]):
         run.write_columns("positions.parquet", POSITIONS, positions)
     return positions
+
+
+def _sought(
+    session: Session, frames: Columns, positions: Columns, n_known: int
+) -> list[tuple[plan.FieldFrames, plan.Sought]]:  # fmt: skip
+    """Which of the new targets, those after the first `n_known` positions, are searched, and the frames they are in."""
+    settings = session.order.settings
+    new = positions["id"][n_known:]
+    fields = positions["field"][n_known:]
+    found = []
+    for number in sorted(set(fields.tolist())) if session.targets.position_error.any() else ():
+        mine = np.isin(positions["id"], new[fields == number])
+        here = plan.field_frames(frames, unit_vectors(positions["ra"][mine], positions["dec"][mine]))
+        if len(here.rows):
+            beam = float(np.median(plan.beams(frames, here.rows, settings.photometry.assumed_fwhm_pixels)))
+            groups = plan.sought(positions, session.targets, positions["id"][mine], beam, settings.search)
+            found += [(here, group) for group in groups]
+    return found
 
 
 def _bright_sources(

@@ -201,7 +201,12 @@ FRAMES = (
 POSITIONS = (
     TableColumn("id", "identifier of the position in this run", dtype="int64", ucd="meta.id"),
     TableColumn("name", "name of the target, empty for a control", dtype="str", ucd="meta.id;src"),
-    TableColumn("kind", "target, control or comparison", dtype="str", ucd="meta.code.class"),
+    TableColumn(
+        "kind",
+        "target, trial (a place within a target's error), control, blank (a place tried for a control) or comparison",
+        dtype="str",
+        ucd="meta.code.class",
+    ),
     TableColumn("ra", "right ascension, ICRS", unit="deg", ucd="pos.eq.ra"),
     TableColumn("dec", "declination, ICRS", unit="deg", ucd="pos.eq.dec"),
     TableColumn("pm_ra_cosdec", "proper motion", unit="mas/yr", ucd="pos.pm;pos.eq.ra"),
@@ -212,6 +217,12 @@ POSITIONS = (
     TableColumn(
         "clear_radius", "for a control: no target it serves is nearer than this", unit="deg", ucd="phys.angSize"
     ),
+    TableColumn(
+        "search", "where places are searched: the id of the first target searched with the same controls", dtype="int64"
+    ),
+    TableColumn("parent", "where places are searched: the id of that in the middle, -1 elsewhere", dtype="int64"),
+    TableColumn("place_err", "1-sigma error per axis of a place tried, from the distance to the next", unit="arcsec"),
+    TableColumn("node", "place on the lattice around it, the same number for the same offset; else -1", dtype="int64"),
 )
 
 FRAME_SOLUTION = (
@@ -405,4 +416,11 @@ CANDIDATES = (
     TableColumn("p_empirical", "p_value before any extrapolation: (r+1)/(n+1)", ucd="stat.probability"),
     TableColumn("beyond_controls", "distance of the combination beyond the controls, in their MAD", ucd="stat.value"),
     TableColumn("notes", "what a reader should know before trusting the row", dtype="str", ucd="meta.note"),
+    TableColumn(
+        "found_ra", "where it was judged, if searched within its position error, ICRS", unit="deg", ucd="pos.eq.ra"
+    ),
+    TableColumn(
+        "found_dec", "where it was judged, if searched within its position error, ICRS", unit="deg", ucd="pos.eq.dec"
+    ),
+    TableColumn("n_trials", "places searched; the controls were searched alike", dtype="int64", ucd="meta.number"),
 )

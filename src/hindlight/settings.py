@@ -117,6 +117,22 @@ class Controls:
 
 
 @dataclass(frozen=True)
+class Search:
+    """Targets whose position error is larger than a beam."""
+
+    sigmas: float = setting(
+        2.0, "the brightest place within so many position errors is searched; 0 measures the stated one only", minimum=0
+    )
+    spacing: float = setting(
+        0.5, "distance of the places tried, in median beams; at 0.5 a source may lose 21 % of its flux", minimum=0.1
+    )
+    most_places: int = setting(3000, "a target has no more places than this: the innermost ones", minimum=7)
+    controls: int = setting(
+        100, "ellipses of the same places elsewhere in the frames that are searched alike", minimum=0
+    )
+
+
+@dataclass(frozen=True)
 class Comparisons:
     """Steady sources that put frames on one flux scale and show where they point."""
 
@@ -176,6 +192,7 @@ class Settings:
     channels: Channels = field(default_factory=Channels)
     photometry: Photometry = field(default_factory=Photometry)
     controls: Controls = field(default_factory=Controls)
+    search: Search = field(default_factory=Search)
     comparisons: Comparisons = field(default_factory=Comparisons)
     flow: Flow = field(default_factory=Flow)
     detection: Detection = field(default_factory=Detection)
@@ -187,7 +204,17 @@ class Settings:
 
     def measuring(self) -> dict[str, Any]:
         """The sections that touch measured values, as plain data: a run cannot change them once it has begun."""
-        names = ("inventory", "channels", "photometry", "controls", "comparisons", "flow", "sites", "companions")
+        names = (
+            "inventory",
+            "channels",
+            "photometry",
+            "controls",
+            "search",
+            "comparisons",
+            "flow",
+            "sites",
+            "companions",
+        )
         sections = {name: as_plain(getattr(self, name)) for name in names}
         return sections | {"frames": {f"block {block.number}": block.as_plain() for block in self.frames}}
 

@@ -26,7 +26,7 @@ from hindlight.fence import Fault, blank, call, checked, one_line
 from hindlight.files import check_unchanged, local_path
 from hindlight.headers import SetAsideError
 from hindlight.lightcurve import Channel, FloatArray, IntArray, LightCurve
-from hindlight.plan import BrightSources
+from hindlight.plan import BrightSources, owners
 from hindlight.plugin import Candidate, Cutout, Finding, PeriodResult
 from hindlight.positions import moved
 from hindlight.ranking import Thresholds
@@ -242,7 +242,7 @@ def frame_evidence(order: Order, batch: int) -> FrameEvidence:
     tables = book(order.run, order.version)
     who = tables.positions
     plan = [p for p in store.pieces(tables.frames, who) if p.batch == batch]
-    rows = store.read_rows(tables.folder, plan, who["id"][who["kind"] != "target"])
+    rows = store.read_rows(tables.folder, plan, who["id"][np.isin(who["kind"], ("control", "comparison"))])
     kind = who["kind"][np.searchsorted(who["id"], rows["position"])]
     usable = np.isfinite(rows["flux"]) & (rows["flux_err"] > 0) & ((rows["flags"] & int(UNUSABLE)) == 0)
     steady = usable & (kind == "comparison")
@@ -261,8 +261,9 @@ def frame_evidence(order: Order, batch: int) -> FrameEvidence:
 
 
 def position_label(positions: Columns, row: int) -> str:
-    """The name of a target, or what to call a control."""
-    return str(positions["name"][row]) or f"{positions['kind'][row]} {positions['id'][row]}"
+    """The name of a target, also for a place tried for it, or what to call a control."""
+    owner = int(owners(positions, positions["id"][row : row + 1])[0])
+    return str(positions["name"][owner]) or f"{positions['kind'][row]} {positions['id'][row]}"
 
 
 def position_blocks(order: Order, ids: IntArray, frames: IntArray | None = None) -> dict[str, Any]:
@@ -292,6 +293,11 @@ def position_blocks(order: Order, ids: IntArray, frames: IntArray | None = None)
 def judge_positions(order: Order, ids: IntArray) -> judge.Judgement:
     """Every statistic at these positions (ascending ids)."""
     return judge.judge(position_blocks(order, ids)["blocks"], host.load(order.plugins).statistics)
+
+
+def judge_brightness(order: Order, ids: IntArray) -> judge.Judgement:
+    """The core's own columns at these positions (ascending ids): what chooses among places that are tried."""
+    return judge.judge(position_blocks(order, ids)["blocks"], ())
 
 
 def search_positions(order: Order, ids: IntArray) -> judge.Judgement:
@@ -415,9 +421,9 @@ def _candidate(
 
     ephemeris = period.ephemerides[0] if period and period.established and period.ephemerides else None
     return Candidate(
-        name=str(tables.positions["name"][at]), ra=float(tables.positions["ra"][at]),
+        name=position_label(tables.positions, at), ra=float(tables.positions["ra"][at]),
         dec=float(tables.positions["dec"][at]), curves=tuple(curves), bright=tuple(bright), x=tuple(xs), y=tuple(ys),
-        ephemeris=ephemeris, controls=blank_sky, cutouts=cutouts,
+        ephemeris=ephemeris, controls=blank_sky, cutouts=cutouts, place_err=float(tables.positions["place_err"][at]),
     )  # fmt: skip
 
 

@@ -21,10 +21,10 @@ from hindlight.crew import Crew
 from hindlight.duplicates import counts
 from hindlight.errors import NothingToDoError
 from hindlight.fence import Fault, merged
-from hindlight.lightcurve import IntArray
+from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.outcome import Outcome
 from hindlight.plugin import Column
-from hindlight.positions import Targets, serves
+from hindlight.positions import Targets, separation_deg, serves
 from hindlight.schema import CHANNELS, STANDINGS
 from hindlight.settings import Settings
 from hindlight.store import Columns, RunFolder
@@ -65,8 +65,11 @@ def verdicts(
 
     `said` are sentences for the last lines that earlier stages have to say.
     """
-    fields = _fields(frames, positions, session.order.settings)
     columns = judge.full_columns([*session.plugins.statistics, *session.plugins.period_searches])
+    fields = [
+        *_fields(frames, positions, session.order.settings),
+        *_searched_fields(session, frames, positions, columns),
+    ]
     everyone = {found.number: found.ids for found in fields}
     judged = _judged(session, fields, everyone, tasks.judge_positions, columns, "judging")
     for found in fields:
@@ -84,7 +87,8 @@ def verdicts(
 def _fields(frames: Columns, positions: Columns, chosen: Settings) -> list[Field]:
     """The fields that hold targets, with which control may serve which target."""
     found = []
-    is_target, is_control = positions["kind"] == "target", positions["kind"] == "control"
+    is_control = positions["kind"] == "control"
+    is_target = (positions["kind"] == "target") & (positions["search"] < 0)
     for number in sorted(set(positions["field"][is_target].tolist())):
         here = positions["field"] == number
         targets, controls = positions["id"][is_target & here], positions["id"][is_control & here]
@@ -95,6 +99,30 @@ def _fields(frames: Columns, positions: Columns, chosen: Settings) -> list[Field
         serving = conclude.serving_controls(positions, np.sort(controls), in_frames)
         found.append(Field(int(number), np.sort(targets), np.sort(controls), serving))
     return found
+
+
+def _searched_fields(
+    session: Session, frames: Columns, positions: Columns, columns: Mapping[str, Column]
+) -> list[Field]:
+    """The targets that were searched, in fields apart, once the places tried have been compared."""
+    tried = np.sort(positions["id"][positions["search"] >= 0])
+    if len(tried) == 0:
+        return []
+    groups = _grouped(tried, session.order.settings.ranking.gather_curves)
+    sizes = [len(ids) for ids in groups]
+    parts = _collected(session, "comparing places", tasks.judge_brightness, [(ids,) for ids in groups], sizes)
+    bright = judge.joined(parts, sizes, columns)
+    vectors = unit_vectors(positions["ra"], positions["dec"])
+    is_target = (positions["kind"] == "target") & (positions["search"] >= 0)
+    is_middle = (positions["kind"] == "blank") & (positions["parent"] == positions["id"])
+    found = []
+    for row in np.flatnonzero(is_target).tolist():
+        alike = is_middle & (positions["search"] == positions["search"][row])
+        within = plan.field_frames(frames, vectors[[row]])
+        covered = plan.covered(frames, within.rows, vectors[alike])
+        in_frames = serves(within.covered, covered, session.order.settings.controls.shared_frames)
+        found.append(conclude.searched(positions, int(positions["id"][row]), bright, tried, in_frames))
+    return conclude.together(found)
 
 
 def _collected(
@@ -150,7 +178,7 @@ class Place:
 def _places(fields: Sequence[Field], positions: Columns) -> list[Place]:
     """Every target, in order of field and id."""
     flat = [(found, index, int(target)) for found in fields for index, target in enumerate(found.targets)]
-    names = positions["name"][np.searchsorted(positions["id"], [target for _, _, target in flat])]
+    names = positions["name"][plan.owners(positions, np.array([target for _, _, target in flat], np.int64))]
     return [Place(f, index, at, target, str(names[at])) for at, (f, index, target) in enumerate(flat)]
 
 
@@ -178,8 +206,15 @@ def _tabled(
         row = dict(cells[found.number][int(np.searchsorted(found.ids, place.target))])
         row |= examined[place.at].cells if place.at in examined else {}
         row |= {**cells_of.cells, **outcome.chance_cells(found, place.index, place.at, p)}
-        row |= {"name": place.name, "ra": float(positions["ra"][where]), "dec": float(positions["dec"][where])}
-        row["notes"] = outcome.notes(found, place.index, place.at, p, errors.get(place.name, 0.0))
+        stated = int(plan.owners(positions, np.array([place.target]))[0])
+        row |= {"name": place.name, "ra": float(positions["ra"][stated]), "dec": float(positions["dec"][stated])}
+        row["n_trials"] = found.n_trials
+        if found.n_trials > 1:
+            row |= {"found_ra": float(positions["ra"][where]), "found_dec": float(positions["dec"][where])}
+        said_of_it = outcome.place_note(
+            found, _distances(positions, stated, where), errors.get(place.name, 0.0), settings.search.most_places
+        )
+        row["notes"] = outcome.notes(found, place.index, place.at, p, said_of_it)
         rows.append(row)
     faults = [f for found in fields for f in found.judgement.faults] + [f for e in examined.values() for f in e.faults]
     meta = outcome.meta(settings, p, fields)
@@ -187,6 +222,17 @@ def _tabled(
     result = _result(session.run, table, described, frames, rejects, merged(faults), p, fields, settings, said)
     _write(session, result, described, fields, {place.target: place.name for place in places}, meta)
     return result
+
+
+def _distances(positions: Columns, stated: int, judged: int) -> FloatArray:
+    """How far the place judged, and the place tried furthest out, are from the stated one (rows), in arcsec."""
+    tried = np.flatnonzero(positions["parent"] == positions["id"][stated])
+    rows = np.array([judged, *tried.tolist()])
+    apart = separation_deg(
+        unit_vectors(positions["ra"][rows], positions["dec"][rows]),
+        unit_vectors(positions["ra"][[stated]], positions["dec"][[stated]]),
+    )
+    return np.array([apart[0, 0], apart.max()]) * 3600.0
 
 
 def _examined(session: Session, places: Sequence[Place], beyond: NDArray[np.bool_]) -> dict[int, Examined]:
