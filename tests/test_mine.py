@@ -1,11 +1,6 @@
 """The whole job on small archives, as a user runs it."""
 
 import json
-import shutil
-import signal
-import subprocess
-import sys
-import time
 from pathlib import Path
 
 import numpy as np
@@ -17,14 +12,12 @@ from astropy.io import fits
 from astropy.table import Table
 from astropy.time import Time
 from astropy.utils import iers
-from distributed import LocalCluster
 
 import skies
-from hindlight import cli, crew
+from hindlight import cli
 from hindlight.schema import CANDIDATES, REASONS, STANDINGS
 
 DEMO = Path(__file__).parents[1] / "demo_archive"
-STRANGER = Path(__file__).parent / "third_party" / "stranger_plugin"
 
 
 def mine(*arguments, status=0):
@@ -164,184 +157,6 @@ def arguments(folder, run):
     return [folder / "frames", "--targets", folder / "targets.csv", "--out", run, "--settings", folder / "s.toml"]
 
 
-def contents(run):
-    """The bytes of every table that must not depend on how the work was done."""
-    names = ["candidates.ecsv", "candidates.fits", "candidates.vot", "channels.ecsv", "rejects.ecsv", "controls.parquet",
-             "statistics.parquet", "positions.parquet", "frames.parquet"]  # fmt: skip
-    parts = sorted((run / "measurements").rglob("*.parquet"))
-    return {str(p.relative_to(run)): p.read_bytes() for p in [*(run / n for n in names), *parts]}
-
-
-def test_same_bytes_for_any_number_of_workers(tmp_path):
-    """One process, two processes and four write the same bytes."""
-    folder = small(tmp_path)
-    mine(*arguments(folder, tmp_path / "one"), "--workers", 1)
-    expected = contents(tmp_path / "one")
-    for workers in (2, 4):
-        mine(*arguments(folder, tmp_path / f"w{workers}"), "--workers", workers)
-        found = contents(tmp_path / f"w{workers}")
-        assert found.keys() == expected.keys()
-        for name, data in expected.items():
-            assert found[name] == data, name
-    assert candidates(tmp_path / "one")["flare"]["standing"] == "single"
-
-
-def test_a_scheduler_that_exists_is_used(tmp_path, monkeypatch):
-    """--scheduler gives the same bytes, file plugins travel to its workers, and a wrong address is one line."""
-    folder = small(tmp_path, n_frames=12, per_field=40)
-    plugin = tmp_path / "longest_run.py"
-    shutil.copy(STRANGER / "longest_run.py", plugin)
-    mine(*arguments(folder, tmp_path / "one"), "--plugin", plugin)
-    expected = contents(tmp_path / "one")
-    with LocalCluster(n_workers=1, threads_per_worker=1, dashboard_address="127.0.0.1:0", silence_logs=50) as cluster:
-        address = cluster.scheduler_address
-        mine(*arguments(folder, tmp_path / "two"), "--plugin", plugin, "--scheduler", address)
-    assert contents(tmp_path / "two") == expected
-    monkeypatch.setattr(crew, "SCHEDULER_TIMEOUT_S", 1)
-    mine(*arguments(folder, tmp_path / "three"), "--scheduler", "tcp://127.0.0.1:9", status=2)
-
-
-def test_new_files_and_targets_extend_a_finished_run(tmp_path):
-    """Frames added later are measured, and nothing else again; a target added later gets a row; a changed file is said."""
-    folder = small(tmp_path)
-    late = sorted((folder / "frames").iterdir())[-6:]
-    (tmp_path / "aside").mkdir()
-    for path in late:
-        shutil.move(path, tmp_path / "aside")
-    run = tmp_path / "run"
-    mine(*arguments(folder, run))
-    assert candidates(run)["flare"]["n_frames"] == 18
-    before = {p: (p.stat().st_ino, p.stat().st_mtime_ns) for p in (run / "measurements").rglob("*.parquet")}
-    for path in late:
-        shutil.move(tmp_path / "aside" / path.name, path)
-    with (folder / "targets.csv").open("a", encoding="utf-8") as stream:
-        stream.write("later,150.0,-30.05\n")
-    mine(*arguments(folder, run))
-    table = candidates(run)
-    assert table["flare"]["n_frames"] == 24
-    assert table["later"]["n_frames"] == 24
-    for path, stat in before.items():
-        assert (path.stat().st_ino, path.stat().st_mtime_ns) == stat
-    late[0].unlink()
-    data = late[1].read_bytes()
-    late[1].write_bytes(data + b"\0" * 2880)
-    mine(*arguments(folder, run))
-    reasons = sorted(str(row["reason"]) for row in Table.read(run / "rejects.ecsv"))
-    assert reasons == ["changed", "vanished"]
-    assert candidates(run)["flare"]["n_frames"] == 24
-
-
-def test_changed_plugins_only_judge_again(tmp_path):
-    """Leaving out a statistic changes the table without a pixel being read."""
-    folder = small(tmp_path)
-    run = tmp_path / "run"
-    mine(*arguments(folder, run))
-    before = {p: p.stat().st_mtime_ns for p in (run / "measurements").rglob("*.parquet")}
-    mine(*arguments(folder, run), "--without", "stetson", "--plugin", STRANGER / "longest_run.py")
-    table = Table.read(run / "candidates.ecsv")
-    assert "longest_run_length" in table.colnames
-    assert "stetson_j" not in table.colnames
-    mine(*arguments(folder, run)[:-2])
-    table = Table.read(run / "candidates.ecsv")
-    assert "longest_run_length" not in table.colnames
-    assert "stetson_j" in table.colnames
-    assert before == {p: p.stat().st_mtime_ns for p in (run / "measurements").rglob("*.parquet")}
-
-
-def test_a_strangers_statistic_works_as_file_and_as_distribution(tmp_path):
-    """The same statistic gives the same table as a file and installed from outside, in one process and in two."""
-    folder = small(tmp_path, n_frames=10, per_field=40)
-    site = tmp_path / "site"
-    install = [sys.executable, "-m", "pip", "install", "--quiet", "--no-index", "--no-deps", "--no-build-isolation",
-               "--target", str(site), str(STRANGER)]  # fmt: skip
-    subprocess.run(install, check=True, capture_output=True)
-    tables = []
-    for workers in (1, 2):
-        run = tmp_path / f"file{workers}"
-        mine(*arguments(folder, run), "--plugin", STRANGER / "longest_run.py", "--workers", workers)
-        tables.append((run / "candidates.ecsv").read_bytes())
-        run = tmp_path / f"site{workers}"
-        command = [sys.executable, "-m", "hindlight", "mine", "-q", *map(str, arguments(folder, run))]
-        command += ["--workers", str(workers)]
-        done = subprocess.run(command, capture_output=True, text=True, check=False, env=with_path(site))
-        assert done.returncode == 0, done.stderr
-        tables.append((run / "candidates.ecsv").read_bytes())
-    assert len(set(tables)) == 1
-    table = candidates(tmp_path / "site2")
-    assert table["flare"]["longest_run_length"] == 1
-    assert table["steady"]["longest_run_length"] > 5
-    controls = pq.read_table(tmp_path / "site2" / "controls.parquet")
-    assert "longest_run_length" in controls.column_names
-
-
-def with_path(folder):
-    """This process's environment with a folder put first on the module path, for worker processes too."""
-    import os
-
-    return {**os.environ, "PYTHONPATH": str(folder)}
-
-
-BAD_PLUGINS = """
-from dataclasses import dataclass
-from hindlight import *
-
-
-@dataclass(frozen=True)
-class Raiser(Statistic):
-    columns = (Column("a", "doc", unusual="high"),)
-
-    def compute(self, curve):
-        raise RuntimeError("no, thank you")
-
-
-@dataclass(frozen=True)
-class Misnamer(Statistic):
-    columns = (Column("a", "doc", unusual="high"),)
-
-    def compute(self, curve):
-        return {"b": 1.0}
-
-
-@dataclass(frozen=True)
-class Scribbler(Statistic):
-    columns = (Column("a", "doc", unusual="high"),)
-
-    def compute(self, curve):
-        curve.flux[:] = 0
-        return {"a": 1.0}
-
-
-@dataclass(frozen=True)
-class Quitter(Statistic):
-    columns = (Column("a", "doc", unusual="high"),)
-
-    def compute(self, curve):
-        raise SystemExit
-
-
-@hookimpl
-def register_statistics():
-    return [Raiser, Misnamer, Scribbler, Quitter]
-"""
-
-
-@pytest.mark.parametrize("workers", [1, 2])
-def test_bad_plugins_are_fenced(tmp_path, workers):
-    """One that raises, one that misnames a column, one that writes into its input, one that quits: each is named."""
-    folder = small(tmp_path)
-    (tmp_path / "bad.py").write_text(BAD_PLUGINS, encoding="utf-8")
-    mine(*arguments(folder, tmp_path / "run"), "--plugin", tmp_path / "bad.py", "--workers", workers)
-    faults = {str(row["plugin"]): row for row in Table.read(tmp_path / "run" / "plugin_faults.ecsv")}
-    assert set(faults) == {"raiser", "misnamer", "scribbler", "quitter"}
-    assert str(faults["raiser"]["fault"]) == "RuntimeError"
-    assert str(faults["raiser"]["line"]) == "bad.py:11"
-    assert "undeclared 'b'" in str(faults["misnamer"]["detail"])
-    assert "read-only" in str(faults["scribbler"]["detail"])
-    mine(*arguments(folder, tmp_path / "plain"))
-    good, plain = candidates(tmp_path / "run"), candidates(tmp_path / "plain")
-    assert {n: r["p_value"] for n, r in good.items()} == {n: r["p_value"] for n, r in plain.items()}
-
-
 def test_without_controls_nothing_is_said_of_variation(tmp_path, capsys):
     """A flare without a single control to rank it against is undecided, and the last lines say so."""
     folder = small(tmp_path)
@@ -376,42 +191,6 @@ def test_sums_of_a_map_per_beam_are_fluxes(tmp_path):
         mine(*arguments(tmp_path, tmp_path / name))
         (row,) = Table.read(tmp_path / name / "channels.ecsv")
         assert row["flux_mean"] == pytest.approx(100.0, rel=0.03)
-
-
-def test_an_estimator_that_fails_sets_frames_aside(tmp_path):
-    """What an estimator raises is said for each frame, and the run ends as a run without usable frames does."""
-    folder = small(tmp_path, n_frames=10, per_field=20)
-    text = (
-        "from dataclasses import dataclass\nfrom hindlight import *\n@dataclass(frozen=True)\nclass Bad(Estimator):\n"
-    )
-    text += (
-        "    def radius(self, beam):\n        return 3.0\n    def measure(self, stamps):\n        raise KeyError('x')\n"
-    )
-    text += "@hookimpl\ndef register_estimators():\n    return [Bad]\n"
-    (tmp_path / "bad.py").write_text(text, encoding="utf-8")
-    (tmp_path / "s.toml").write_text('[photometry]\nestimator = "bad"\n', encoding="utf-8")
-    mine(*arguments(folder, tmp_path / "run"), "--plugin", tmp_path / "bad.py", status=3)
-    rejects = Table.read(tmp_path / "run" / "rejects.ecsv")
-    assert len(rejects) == 10
-    assert set(rejects["reason"]) == {"not_measured"}
-    assert "KeyError" in str(rejects["detail"][0])
-
-
-def test_a_damaged_part_is_named_and_made_anew(tmp_path, capsys):
-    """A flipped byte in a part is found by its checksum and named; deleted, the same command gives the same table."""
-    folder = small(tmp_path)
-    run = tmp_path / "run"
-    mine(*arguments(folder, run))
-    before = (run / "candidates.ecsv").read_bytes()
-    part = sorted((run / "measurements").rglob("*.parquet"))[1]
-    data = bytearray(part.read_bytes())
-    data[len(data) // 3] ^= 0x10
-    part.write_bytes(data)
-    mine(*arguments(folder, run), status=2)
-    assert f"{part.name}: is damaged" in capsys.readouterr().err
-    part.unlink()
-    mine(*arguments(folder, run))
-    assert (run / "candidates.ecsv").read_bytes() == before
 
 
 def test_the_run_folder_is_no_part_of_the_archive(tmp_path):
@@ -482,33 +261,3 @@ def test_a_source_seen_only_in_the_mean_is_steady_and_four_frames_are_too_few(tm
         path.unlink()
     mine(tmp_path / "frames", "--targets", tmp_path / "targets.csv", "--out", tmp_path / "few")
     assert candidates(tmp_path / "few")["faint"]["standing"] == "undecided"
-
-
-def test_killed_ten_times_and_continued(tmp_path):
-    """SIGKILL at ten random moments, continued each time: the same table, and no finished part written again."""
-    folder = small(tmp_path, n_frames=20, size=80, per_field=40, batch=1)
-    mine(*arguments(folder, tmp_path / "quiet"))
-    run = tmp_path / "run"
-    command = [sys.executable, "-m", "hindlight", "mine", "-q", *map(str, arguments(folder, run))]
-    rng = np.random.default_rng(17)
-    start = time.perf_counter()
-    assert subprocess.run([*command[:-3], str(tmp_path / "timed"), *command[-2:]], check=False).returncode == 0
-    whole = time.perf_counter() - start
-    finished: dict[Path, tuple[int, int]] = {}
-    killed = 0
-    for _ in range(10):
-        process = subprocess.Popen(command)
-        try:
-            process.wait(timeout=whole * rng.uniform(0.2, 1.0))
-        except subprocess.TimeoutExpired:
-            process.send_signal(signal.SIGKILL)
-            process.wait()
-            killed += 1
-        parts = {p: (p.stat().st_ino, p.stat().st_mtime_ns) for p in (run / "measurements").rglob("batch-*.parquet")}
-        assert finished.items() <= parts.items()
-        finished = parts
-    assert killed >= 5
-    assert subprocess.run(command, check=False).returncode == 0
-    assert all((p.stat().st_ino, p.stat().st_mtime_ns) == stat for p, stat in finished.items())
-    assert (run / "candidates.ecsv").read_bytes() == (tmp_path / "quiet" / "candidates.ecsv").read_bytes()
-    assert not list(run.rglob(".*.part"))
