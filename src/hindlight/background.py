@@ -181,11 +181,14 @@ def _with_holes(values: Floats) -> tuple[FloatArray, FloatArray, IntArray]:
     """
     holes = ~np.isfinite(values)
     used = np.count_nonzero(~holes, axis=1)
-    count: NDArray[np.int32] = np.cumsum(holes, axis=1, dtype=np.int32)
-    aside = np.where(count & 1, -np.inf, np.inf).astype(values.dtype)
-    level = _middle_between_holes(np.where(holes, aside, values), used)
+    odd = np.cumsum(holes, axis=1, dtype=np.uint8) & 1  # running over at 256 leaves odd and even as they are
+    outside = np.array([np.inf, -np.inf], values.dtype)[odd[holes]]
+    filled = values.copy()
+    filled[holes] = outside
+    level = _middle_between_holes(filled, used)
     deviation = np.abs(values - level.astype(values.dtype)[:, None])
-    return level, _middle_between_holes(np.where(holes, aside, deviation), used), used
+    deviation[holes] = outside
+    return level, _middle_between_holes(deviation, used), used
 
 
 def _middle_between_holes(values: Floats, used: IntArray) -> FloatArray:
