@@ -13,6 +13,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from hindlight.ensemble import median_of
 from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.plan import BrightSources
 from hindlight.pointing import LEAST_SNR
@@ -88,7 +89,7 @@ def placed(
     place_east, place_north = _consistent(east), _consistent(north)
     seen = np.isfinite(snr)
     good = (seen.sum(axis=0) >= 2) & np.isfinite(place_east) & np.isfinite(place_north)
-    good &= _median(width) <= POINT_WIDTH
+    good &= median_of(width) <= POINT_WIDTH
     good &= _steady(snr, seen)
     kept = np.flatnonzero(good)[: settings.wanted]
     return ra[kept] + place_east[kept] / np.cos(np.radians(dec[kept])), dec[kept] + place_north[kept]
@@ -96,32 +97,26 @@ def placed(
 
 def _steady(snr: FloatArray, seen: NDArray[np.bool_]) -> NDArray[np.bool_]:
     """Which sources are found in most of the frames that are deep enough for them."""
-    expected = _relative_depth(snr)[:, None] * _median(snr) >= SURE * LEAST_SNR
+    expected = _relative_depth(snr)[:, None] * median_of(snr) >= SURE * LEAST_SNR
     return np.asarray(seen.sum(axis=0) >= OFTEN * np.maximum(1, (expected | seen).sum(axis=0)))
 
 
 def _relative_depth(snr: FloatArray) -> FloatArray:
     """How many times deeper than typical each frame is, shape (n_frames,): the median of S/N over the sources' own."""
-    return np.nan_to_num(_median((snr / _median(snr)).T), nan=0.0)
+    return np.nan_to_num(median_of((snr / median_of(snr)).T), nan=0.0)
 
 
 def _consistent(offset: FloatArray) -> FloatArray:
     """Places of the sources, shape (n,), from offsets (n_frames, n) that share an unknown shift in each frame."""
     place = np.zeros(offset.shape[1])
     for _ in range(ROUNDS):
-        shift = _median((offset - place).T)
+        shift = median_of((offset - place).T)
         known = np.isfinite(shift)
         if not known.any():
             return np.full(offset.shape[1], np.nan)
-        place = _median(offset - (shift - shift[known].mean())[:, None])
+        place = median_of(offset - (shift - shift[known].mean())[:, None])
         place = np.where(np.isfinite(place), place, 0.0)
     return np.where(np.isfinite(offset).any(axis=0), place, np.nan)
-
-
-def _median(values: FloatArray) -> FloatArray:
-    """Over the first axis, of what is not NaN; NaN where all is."""
-    some = np.isfinite(values).any(axis=0)
-    return np.where(some, np.nanmedian(np.where(some, values, 0.0), axis=0), np.nan)
 
 
 def sampled_frames(frames: Columns, rows: IntArray, per_channel: int) -> IntArray:

@@ -64,7 +64,7 @@ def solve_gains(flux: FloatArray, flux_err: FloatArray, fewest: int = 3) -> Gain
     n_frames, n_sources = flux.shape
     known = np.isfinite(flux) & np.isfinite(flux_err) & (flux_err > 0)
     with np.errstate(invalid="ignore"):
-        snr = _median_of(np.where(known, flux / np.where(known, flux_err, 1.0), np.nan), axis=0)
+        snr = median_of(np.where(known, flux / np.where(known, flux_err, 1.0), np.nan), axis=0)
         known &= (snr >= FEWEST_SNR)[None, :]
     scatter = np.full(n_sources, np.nan)
     while True:
@@ -103,7 +103,7 @@ def solve_gains(flux: FloatArray, flux_err: FloatArray, fewest: int = 3) -> Gain
     )
 
 
-def _median_of(values: FloatArray, axis: int) -> FloatArray:
+def median_of(values: FloatArray, axis: int = 0) -> FloatArray:
     """The median of what is not NaN, NaN where all is."""
     some = np.isfinite(values).any(axis=axis)
     filled = np.where(np.expand_dims(some, axis), values, 0.0)
@@ -115,9 +115,9 @@ def _bilinear_fit(flux: FloatArray, flux_err: FloatArray, known: NDArray[np.bool
     n_frames, n_sources = flux.shape
     frame, source = np.nonzero(known)
     value, error = flux[frame, source], flux_err[frame, source]
-    brightness = np.nan_to_num(_median_of(np.where(known, flux, np.nan), axis=0), nan=1.0)
+    brightness = np.nan_to_num(median_of(np.where(known, flux, np.nan), axis=0), nan=1.0)
     brightness = np.where(brightness > 0, brightness, 1.0)
-    gain = np.nan_to_num(_median_of(np.where(known, flux / brightness, np.nan), axis=1), nan=1.0)
+    gain = np.nan_to_num(median_of(np.where(known, flux / brightness, np.nan), axis=1), nan=1.0)
     gain = np.where(gain > 0, gain, 1.0)
     part = _parts(known)
     ones = np.ones(len(frame))
