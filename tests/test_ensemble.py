@@ -163,7 +163,9 @@ def test_solution_and_its_use() -> None:
     rows = solution(np.arange(12), "c", gains, np.full(12, 1.5), nothing(12), Comparisons())
     assert rows["verdict"].tolist() == ["good"] * 4 + ["uncalibrated"] + ["good"] * 7
     assert rows["extra_scatter"][4] == pytest.approx(gains.spread)  # the scatter of the others' gains
-    value, sigma, bad = calibrated(np.array([3, 4]), np.array([100.0, 100.0]), np.array([2.0, 2.0]), rows)
+    value, sigma, bad = calibrated(
+        {"frame": np.array([3, 4]), "flux": np.array([100.0, 100.0]), "flux_err": np.array([2.0, 2.0])}, rows
+    )
     assert value.tolist() == [100 / rows["gain"][3], 100.0]
     want = [np.hypot(3.0, rows["extra_scatter"][3] * 100) / rows["gain"][3], np.hypot(3.0, 100 * gains.spread)]
     np.testing.assert_allclose(sigma, want)

@@ -6,7 +6,7 @@ import pytest
 from hindlight import plan
 from hindlight.duplicates import waiting
 from hindlight.errors import UsageError
-from hindlight.positions import BlankSky, Targets, separation_deg
+from hindlight.positions import BlankSky, Targets, field_of, separation_deg
 from hindlight.schema import FRAMES
 from hindlight.settings import Controls
 from hindlight.systems import unit_vectors
@@ -111,14 +111,66 @@ def test_brighter_sources_are_kept_further_away_from():
     assert far == pytest.approx(0.01 * (np.sqrt(np.log2(1e4)) / 2 + 1))
 
 
+def squares(centres):
+    """The table of frames 0.6 deg wide, their middles on the equator at these right ascensions."""
+    frames = found(["f"] * len(centres))
+    for k, ra in enumerate(centres):
+        west, east = (ra - 0.3) % 360, (ra + 0.3) % 360  # corners and middles of sides
+        frames["footprint"][k] = (
+            f"{east} -0.3 {east} 0 {east} 0.3 {ra} 0.3 {west} 0.3 {west} 0 {west} -0.3 {ra} -0.3"
+        )
+        frames["centre_ra"][k] = ra
+    frames["radius"][:] = 0.43
+    return plan.merge_frames(plan.empty(FRAMES), frames, keys("f"))
+
+
+def with_controls(table, targets, wanted, spacing=0.03):
+    """The position table with these targets, in fields of 0.3 degrees, and controls for each field."""
+    positions = plan.add_targets(plan.no_positions(), targets, np.arange(len(targets)), 0.3)
+    for number in plan.fields_without_controls(positions):
+        mine = positions["field"] == number
+        within = plan.field_frames(table, unit_vectors(positions["ra"][mine], positions["dec"][mine]))
+        settings = Controls(per_field=wanted)
+        positions = plan.add_controls(positions, number, 0, table, within, spacing, sources([]), settings)
+    return positions
+
+
+def fields(positions, kind):
+    """How many fields hold positions of this kind."""
+    return len(set(positions["field"][positions["kind"] == kind].tolist()))
+
+
+def test_fields_in_the_same_frames_share_their_controls():
+    """Where controls fill the frames, targets of four cells have one set; in frames of their own they have their own."""
+    corners = np.array([0.12, 359.88, 0.12, 359.88]), np.array([0.12, 0.12, -0.12, -0.12])
+    names = ("a", "b", "c", "d")
+    together = with_controls(squares([0.0] * 12), Targets(names, *corners, {}), wanted=600)
+    assert len(set(field_of(*corners, 0.3).tolist())) == 4
+    assert fields(together, "target") == fields(together, "control") == 1
+    assert 300 < (together["kind"] == "control").sum() <= 600
+
+    ra = np.array([0.12, 359.88, 5.0])
+    apart = with_controls(squares([0.0] * 12 + [5.0] * 12), Targets(names[:3], ra, np.zeros(3), {}), wanted=600)
+    assert fields(apart, "target") == fields(apart, "control") == 2
+
+
+def test_fields_that_hold_their_controls_keep_their_own():
+    """Where the wanted number fits around each target, those of the next cell are further away and do not serve."""
+    ra = np.array([0.2, 359.8])
+    got = with_controls(squares([0.0] * 12), Targets(("a", "b"), ra, np.zeros(2), {}), wanted=12)
+    assert fields(got, "target") == fields(got, "control") == 2
+
+
+def test_half_covered_targets_do_not_take_controls_of_other_frames():
+    """A target in frames that the neighbour's controls are not in has controls of its own."""
+    ra = np.array([0.12, 359.5])
+    got = with_controls(squares([0.0] * 12 + [359.6] * 12), Targets(("a", "b"), ra, np.zeros(2), {}), wanted=600)
+    assert fields(got, "target") == fields(got, "control") == 2
+
+
 def test_controls_stand_clear_of_targets_sources_and_each_other():
     """Every control keeps the spacing to targets and controls, its radius to sources, and lies in the frames."""
-    frames = found(["f"] * 12)
-    outline = "0.3 -0.3 0.3 0 0.3 0.3 0 0.3 359.7 0.3 359.7 0 359.7 -0.3 0 -0.3"  # corners and middles of sides
-    frames["footprint"][:] = outline
-    frames["centre_ra"][:] = 0.0
-    frames["radius"][:] = 0.43
-    table = plan.merge_frames(plan.empty(FRAMES), frames, keys("f"))
+    table = squares([0.0] * 12)
     targets = Targets(("x", "y"), np.array([0.05, 359.9]), np.array([0.0, 0.1]), {})
     positions = plan.add_targets(plan.no_positions(), targets, np.arange(2), 30.0)
     within = plan.field_frames(table, unit_vectors(targets.ra, targets.dec))

@@ -16,11 +16,9 @@ from hindlight import calibrate, ranking
 from hindlight.host import Plugins
 from hindlight.judge import Judgement, full_columns
 from hindlight.lightcurve import FloatArray, IntArray
-from hindlight.plan import of_targets
-from hindlight.positions import nearest_deg
+from hindlight.plan import serving_controls
 from hindlight.search import best_places
 from hindlight.settings import Settings
-from hindlight.systems import unit_vectors
 
 
 @dataclass(eq=False)
@@ -55,18 +53,6 @@ class Field:
     def rows(self, ids: IntArray) -> IntArray:
         """Where these positions stand in the field's judgement."""
         return np.searchsorted(self.ids, ids)
-
-
-def serving_controls(
-    positions: Mapping[str, Any], controls: IntArray, in_frames: NDArray[np.bool_]
-) -> NDArray[np.bool_]:
-    """Which controls may serve which targets: in enough of the same frames, and clear of every target of the run."""
-    rows = np.searchsorted(positions["id"], controls)
-    everyone = of_targets(positions)
-    vectors = unit_vectors(positions["ra"][rows], positions["dec"][rows])
-    occupied = unit_vectors(positions["ra"][everyone], positions["dec"][everyone])
-    free = nearest_deg(vectors, occupied) >= 0.999 * positions["clear_radius"][rows]
-    return np.asarray(in_frames & free[None, :])
 
 
 def searched(

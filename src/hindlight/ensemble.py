@@ -338,14 +338,12 @@ def solution(
     }
 
 
-def calibrated(
-    frame: IntArray, flux: FloatArray, flux_err: FloatArray, solution: Columns
-) -> tuple[FloatArray, FloatArray, NDArray[np.bool_]]:
+def calibrated(rows: Columns, solution: Columns) -> tuple[FloatArray, FloatArray, NDArray[np.bool_]]:
     """Calibrated flux and error, and whether the frame is bad, for raw rows of shape (n,).
 
     flux / gain and hypot(flux_err * error_scale, extra_scatter * flux) / gain; `solution` is sorted by frame.
     """
-    at = np.searchsorted(solution["frame"], frame)
-    gain = solution["gain"][at]
-    error = np.hypot(flux_err * solution["error_scale"][at], solution["extra_scatter"][at] * flux)
+    at = np.searchsorted(solution["frame"], rows["frame"])
+    gain, flux = solution["gain"][at], rows["flux"]
+    error = np.hypot(rows["flux_err"] * solution["error_scale"][at], solution["extra_scatter"][at] * flux)
     return flux / gain, error / gain, np.asarray(solution["verdict"][at] == "bad")

@@ -73,7 +73,7 @@ def _judged_row(run: RunFolder, positions: dict[str, Any], row: int, target: str
 
 def _columns(run: RunFolder, tables: tasks.Book, rows: dict[str, Any], target: str) -> dict[str, Any]:
     """The table's columns from raw rows."""
-    flux, flux_err, _ = calibrated(rows["frame"], rows["flux"], rows["flux_err"], tables.solution)
+    flux, flux_err, _ = calibrated(rows, tables.solution)
     at = np.array([tables.row_of_frame[int(frame)] for frame in rows["frame"]], np.int64)
     judged = _judged_channels(run, target)
     nothing = {"threshold": np.inf, "threshold_above_quiet": np.inf, "quiet_level_err": 0.0}

@@ -143,8 +143,9 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings) -> tuple[st
     if not p.testable.all() and len(sizes) - alone:
         said.append(f"{int((~p.testable).sum())} targets are undecided: too few controls, or too few usable frames")
     if placed and min(placed) < settings.controls.per_field:
+        number = f"{min(placed)} to {max(placed)}" if max(placed) > min(placed) else str(min(placed))
         said.append(
-            f"controls per target: {min(placed)} to {max(placed)}, {settings.controls.per_field} were asked for; "
+            f"controls per target: {number}, {settings.controls.per_field} were asked for; "
             "no more fit into the frames clear of sources and of each other"
         )
     said += _search_remarks(fields, settings)

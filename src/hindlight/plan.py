@@ -26,6 +26,7 @@ from hindlight.positions import (
     field_size,
     from_tangent,
     nearest_deg,
+    separation_deg,
     serves,
 )
 from hindlight.schema import FRAMES, POSITIONS
@@ -33,6 +34,7 @@ from hindlight.search import CENTRE, Places, places_within
 from hindlight.settings import Controls, Search
 from hindlight.systems import unit_vectors
 
+AS_WELL = 0.9  # a neighbour's controls do where they are this fraction of what a field could have of its own
 SAMPLED_FRAMES = 4000  # coverage is judged on at most this many frames of a field, evenly spaced
 WIDE_BEAM = 0.9  # controls stand apart by the beam that this fraction of the frames does not exceed
 SAME_PLACE_DEG = 1e-6
@@ -327,7 +329,7 @@ def add_controls(
     positions: Columns, field: int, round_number: int, frames: Columns, within: FieldFrames, spacing_deg: float,
     bright: BrightSources, settings: Controls,
 ) -> Columns:  # fmt: skip
-    """The position table with the controls of one field in the given round."""
+    """The position table with controls for one field, in the given round; its targets join a field that has theirs."""
     mine = (positions["kind"] == "target") & (positions["field"] == field)
     ra, dec = _clear_of_targets(positions, mine, spacing_deg, spacing_deg, settings.per_field, field, frames, within)
     vectors = unit_vectors(ra, dec)
@@ -335,10 +337,48 @@ def add_controls(
     if len(bright.ra):
         free &= bright.blank_sky(spacing_deg / 2).clear(vectors)
     ra, dec, vectors = ra[free], dec[free], vectors[free]
-    inside = covered(frames, within.rows, vectors)
-    useful = serves(within.covered, inside, settings.shared_frames).any(axis=0)
-    ra, dec = ra[useful][: settings.per_field], dec[useful][: settings.per_field]
-    return _added(positions, "control", ra, dec, field, round_number, clear_radius=spacing_deg)
+    serving = serves(within.covered, covered(frames, within.rows, vectors), settings.shared_frames)
+    useful = np.flatnonzero(serving.any(axis=0))[: settings.per_field]
+    if len(useful):
+        middle = _middle(positions, mine)
+        reach = float(separation_deg(middle[None, :], vectors[useful]).max()) + spacing_deg
+        neighbour = _neighbour(positions, middle, reach, frames, within, serving[:, useful].sum(axis=1), settings)
+        if neighbour is not None:
+            return {**positions, "field": np.where(mine, neighbour, positions["field"])}
+    return _added(positions, "control", ra[useful], dec[useful], field, round_number, clear_radius=spacing_deg)
+
+
+def _neighbour(
+    positions: Columns, middle: FloatArray, reach_deg: float, frames: Columns, within: FieldFrames, own: IntArray,
+    settings: Controls,
+) -> int | None:  # fmt: skip
+    """The field whose controls would serve some targets about as well as their own, `own` for each; None for none.
+
+    Only controls within `reach_deg` of the targets' middle count, so that a field whose own would be nearer has its own.
+    """
+    near = positions["kind"] == "control"
+    vectors = unit_vectors(positions["ra"], positions["dec"])
+    near[near] = separation_deg(vectors[near], middle[None, :])[:, 0] <= reach_deg
+    in_frames = serves(within.covered, covered(frames, within.rows, vectors[near]), settings.shared_frames)
+    serving = serving_controls(positions, positions["id"][near], in_frames)
+    shares = {}
+    for number in np.unique(positions["field"][near]).tolist():
+        theirs = serving[:, positions["field"][near] == number].sum(axis=1)
+        shares[number] = float((theirs[own > 0] / own[own > 0]).min())
+    best = max(shares, key=lambda number: shares[number], default=None)
+    return best if best is not None and shares[best] >= AS_WELL else None
+
+
+def serving_controls(
+    positions: Mapping[str, Any], controls: IntArray, in_frames: NDArray[np.bool_]
+) -> NDArray[np.bool_]:
+    """Which controls may serve which targets: in enough of the same frames, and clear of every target of the run."""
+    rows = np.searchsorted(positions["id"], controls)
+    everyone = of_targets(positions)
+    vectors = unit_vectors(positions["ra"][rows], positions["dec"][rows])
+    occupied = unit_vectors(positions["ra"][everyone], positions["dec"][everyone])
+    free = nearest_deg(vectors, occupied) >= 0.999 * positions["clear_radius"][rows]
+    return np.asarray(in_frames & free[None, :])
 
 
 def of_targets(positions: Mapping[str, Any]) -> NDArray[np.bool_]:
@@ -358,7 +398,7 @@ def _clear_of_targets(
     frames: Columns, within: FieldFrames,
 ) -> tuple[FloatArray, FloatArray]:  # fmt: skip
     """Places around the middle of some targets, `spacing_deg` apart and `clear_deg` from where any target may be."""
-    centre = unit_vectors(positions["ra"][middle_of], positions["dec"][middle_of]).mean(axis=0)
+    centre = _middle(positions, middle_of)
     ra0 = float(np.degrees(np.arctan2(centre[1], centre[0])) % 360)
     dec0 = float(np.degrees(np.arctan2(centre[2], np.hypot(centre[0], centre[1]))))
     extent = 2 * float(np.median(frames["radius"][within.rows]))
@@ -367,6 +407,12 @@ def _clear_of_targets(
     occupied = unit_vectors(positions["ra"][near], positions["dec"][near])
     free = nearest_deg(unit_vectors(ra, dec), occupied) > clear_deg
     return ra[free], dec[free]
+
+
+def _middle(positions: Columns, of: NDArray[np.bool_]) -> FloatArray:
+    """The direction halfway between some positions, shape (3,)."""
+    total = unit_vectors(positions["ra"][of], positions["dec"][of]).sum(axis=0)
+    return np.asarray(total / np.linalg.norm(total))
 
 
 @dataclass(frozen=True, eq=False)

@@ -212,7 +212,7 @@ POSITIONS = (
     TableColumn("pm_ra_cosdec", "proper motion", unit="mas/yr", ucd="pos.pm;pos.eq.ra"),
     TableColumn("pm_dec", "proper motion", unit="mas/yr", ucd="pos.pm;pos.eq.dec"),
     TableColumn("ref_epoch", "Julian year of the position", unit="yr", ucd="meta.ref;time.epoch"),
-    TableColumn("field", "cell of sky", dtype="int64"),
+    TableColumn("field", "cell of sky, by its number, whose controls serve", dtype="int64"),
     TableColumn("round", "round of measuring the position belongs to", dtype="int64"),
     TableColumn(
         "clear_radius", "for a control: no target it serves is nearer than this", unit="deg", ucd="phys.angSize"

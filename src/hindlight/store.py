@@ -199,7 +199,7 @@ def blocks(
 def _block(rows: Columns, positions: IntArray, names: Sequence[str], solution: Columns, channel: Channel) -> Block:
     frames, column = np.unique(rows["frame"], return_inverse=True)
     row = np.asarray(np.searchsorted(positions, rows["position"]))
-    flux, flux_err, bad = calibrated(rows["frame"], rows["flux"], rows["flux_err"], solution)
+    flux, flux_err, bad = calibrated(rows, solution)
     usable = np.isfinite(flux) & np.isfinite(flux_err) & (flux_err > 0) & ~bad & ((rows["flags"] & int(UNUSABLE)) == 0)
 
     def matrix(values: FloatArray, keep: NDArray[np.bool_] = usable) -> FloatArray:

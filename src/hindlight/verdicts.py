@@ -96,7 +96,7 @@ def _fields(frames: Columns, positions: Columns, chosen: Settings) -> list[Field
         within = plan.field_frames(frames, vectors[is_target & here])
         covered = plan.covered(frames, within.rows, vectors[is_control & here])
         in_frames = serves(within.covered, covered, chosen.controls.shared_frames)
-        serving = conclude.serving_controls(positions, np.sort(controls), in_frames)
+        serving = plan.serving_controls(positions, np.sort(controls), in_frames)
         found.append(Field(int(number), np.sort(targets), np.sort(controls), serving))
     return found
 
