@@ -116,9 +116,7 @@ def squares(centres):
     frames = found(["f"] * len(centres))
     for k, ra in enumerate(centres):
         west, east = (ra - 0.3) % 360, (ra + 0.3) % 360  # corners and middles of sides
-        frames["footprint"][k] = (
-            f"{east} -0.3 {east} 0 {east} 0.3 {ra} 0.3 {west} 0.3 {west} 0 {west} -0.3 {ra} -0.3"
-        )
+        frames["footprint"][k] = f"{east} -0.3 {east} 0 {east} 0.3 {ra} 0.3 {west} 0.3 {west} 0 {west} -0.3 {ra} -0.3"
         frames["centre_ra"][k] = ra
     frames["radius"][:] = 0.43
     return plan.merge_frames(plan.empty(FRAMES), frames, keys("f"))

@@ -312,7 +312,10 @@ def channel_row(view: View, c: ChannelView) -> dict[str, Any]:
         "flux_mean_err": error,
         "scatter": extra_scatter(curve.flux, curve.flux_err),
         "limit_sigma": c.thresholds.detected * typical,
-        "limit_bayes": float("nan") if curve.channel.signed else upper_bound(mean, error),
+        "confusion_rms": c.thresholds.confusion,
+        "limit_bayes": (
+            float("nan") if curve.channel.signed else upper_bound(mean, float(np.hypot(error, c.thresholds.confusion)))
+        ),
         "limit_above_quiet": c.thresholds.above_quiet * float(np.hypot(typical, curve.quiet_level[1])),
         "n_deep": 0 if c.deep is None else len(c.deep),
         "deep_flux": deep,

@@ -76,9 +76,9 @@ def _columns(run: RunFolder, tables: tasks.Book, rows: dict[str, Any], target: s
     flux, flux_err, _ = calibrated(rows, tables.solution)
     at = np.array([tables.row_of_frame[int(frame)] for frame in rows["frame"]], np.int64)
     judged = _judged_channels(run, target)
-    nothing = {"threshold": np.inf, "threshold_above_quiet": np.inf, "quiet_level_err": 0.0}
+    nothing = {"threshold": np.inf, "threshold_above_quiet": np.inf, "quiet_level_err": 0.0, "confusion_rms": 0.0}
     known = [judged.get(channel, nothing) for channel in rows["channel"]]
-    limit, above, quiet_err = (np.array([row[name] for row in known], float) for name in nothing)
+    limit, above, quiet_err, confusion = (np.array([row[name] for row in known], float) for name in nothing)
     signed = np.array([tables.channels[channel].signed for channel in rows["channel"]], bool)
     with np.errstate(invalid="ignore"):
         snr = flux / flux_err
@@ -93,7 +93,7 @@ def _columns(run: RunFolder, tables: tasks.Book, rows: dict[str, Any], target: s
         "raw_flux_err": rows["flux_err"],
         "detected": detected,
         "limit_sigma": _finite(limit * flux_err),
-        "limit_bayes": np.where(signed, np.nan, upper_bounds(flux, flux_err)),
+        "limit_bayes": np.where(signed, np.nan, upper_bounds(flux, np.hypot(flux_err, confusion))),
         "limit_above_quiet": _finite(above * np.hypot(flux_err, quiet_err)),
         "deep": np.isin(rows["frame"], tables.frames["related_to"]),
         "path": [tasks.frame_label(tables.frames, int(row)) for row in at],
@@ -110,5 +110,5 @@ def _judged_channels(run: RunFolder, target: str) -> dict[str, dict[str, float]]
         return {}
     table = read_ecsv(run.file("channels.ecsv"))
     mine = table[table["name"] == target]
-    names = ("threshold", "threshold_above_quiet", "quiet_level_err")
+    names = ("threshold", "threshold_above_quiet", "quiet_level_err", "confusion_rms")
     return {str(row["channel"]): {name: float(row[name]) for name in names} for row in mine}

@@ -25,6 +25,8 @@ CORE = (
     Column("snr_max", "highest flux over its error (absolute for Stokes Q, U, V)", unusual="high", about="presence"),
     Column("excess_max", "highest excess over the quiet level in sigma", unusual="high"),
     Column("mean_snr", "weighted mean flux over its error", unusual="high", about="presence"),
+    Column("mean", "weighted mean flux"),
+    Column("mean_err", "its error"),
     Column("reduced", "chi-square per degree of freedom about the weighted mean", unusual="high"),
 )
 
@@ -89,6 +91,8 @@ def core_columns(curve: LightCurve) -> dict[str, Any]:
         "snr_max": float(snr.max()),
         "excess_max": float(excess.max()) if len(curve) > 1 else float("nan"),
         "mean_snr": mean_snr,
+        "mean": mean,
+        "mean_err": error,
         "reduced": spread / (len(curve) - 1) if len(curve) > 1 else float("nan"),
     }
 

@@ -154,7 +154,7 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings) -> tuple[st
             f"{int(p.short.sum())} targets lie beyond every control, but their number cannot decide at q < "
             f"{settings.ranking.level:g}: {p.needed} controls would ([controls] per_field, [search] controls)"
         )
-    said += _error_remarks(fields)
+    said += [*_error_remarks(fields), *_confusion_remarks(fields)]
     if p.extrapolated.any():
         said.append(f"{int(p.extrapolated.sum())} p-values are upper bounds of a fitted tail (p_is_extrapolated)")
     return tuple(said)
@@ -191,6 +191,21 @@ def _error_remarks(fields: Sequence[Field]) -> list[str]:
                 "p-values hold, since the controls have the same errors, but S/N, mean errors and limits do not"
             )
     return said
+
+
+def _confusion_remarks(fields: Sequence[Field]) -> list[str]:
+    """Channels in which faint sources and diffuse emission, not noise, bound what can be said of a mean flux."""
+    worst: dict[str, float] = {}
+    for found in fields:
+        for label, limits in found.thresholds.items():
+            error = found.judgement.values[label, "core_mean_err"][found.rows(found.controls)]
+            if limits.confusion > 0 and limits.confusion > np.nanmedian(error):
+                worst[label] = max(worst.get(label, 0.0), limits.confusion)
+    return [
+        f"blank positions in {label} differ in their mean fluxes by {confusion:.3g} rms beyond their errors: confusion or "
+        "diffuse emission, which bounds on the total flux contain (confusion_rms in channels.ecsv)"
+        for label, confusion in sorted(worst.items())
+    ]
 
 
 def meta(settings: Settings, p: PValues, fields: Sequence[Field]) -> dict[str, Any]:

@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 from scipy.stats import norm
 
 from hindlight import calibrate
+from hindlight.ensemble import excess_scatter
 from hindlight.judge import WHOLE, Judgement, oriented
 from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.plugin import Column, Plugin
@@ -21,6 +22,7 @@ from hindlight.settings import Detection
 FAILING_SHARE = 0.05  # a plugin that fails on more of the controls than this gets no p-value
 STEADY_SIGMA = 5.0  # controls with a mean flux further out than this do not set detection thresholds
 COMMON_SHARE = 0.1  # a channel's scale: what this share of its blank positions exceeds at most
+FEWEST_MEANS = 10  # blank positions that show how much their mean fluxes differ
 QUIET_SPREAD = 5.0
 QUIET_WITHOUT_CONTROLS = 2.0
 
@@ -35,6 +37,9 @@ class Thresholds:
         In sigma: single flux, single excess over the quiet level, weighted mean flux.
     reduced
         The largest chi-square per degree of freedom at which a series still counts as quiet.
+    confusion
+        In units of flux: rms by which the mean fluxes of blank positions differ beyond their errors, since faint sources
+        and diffuse emission lie in all of them.
     """
 
     detected: float
@@ -42,6 +47,7 @@ class Thresholds:
     mean: float
     reduced: float
     n_controls: int
+    confusion: float = 0.0
 
 
 @dataclass(frozen=True, eq=False)
@@ -184,7 +190,15 @@ def _channel_thresholds(
         mean=calibrate.robust_threshold(_column(judgement, label, "mean_snr")[blank], rate),
         reduced=_quiet_limit(_column(judgement, label, "reduced")[blank]),
         n_controls=int(blank.size),
+        confusion=_confusion(_column(judgement, label, "mean")[blank], _column(judgement, label, "mean_err")[blank]),
     )
+
+
+def _confusion(mean: FloatArray, error: FloatArray) -> float:
+    """The excess scatter of mean fluxes, shape (n,), about their median; 0 for fewer than FEWEST_MEANS of them."""
+    if len(mean) < FEWEST_MEANS:
+        return 0.0
+    return excess_scatter(mean - np.median(mean), error)
 
 
 def _quiet_limit(reduced: FloatArray) -> float:

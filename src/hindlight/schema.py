@@ -355,13 +355,18 @@ CHANNELS = (
     TableColumn("flux_mean_err", "its 1-sigma error", ucd="stat.error;phot.flux"),
     TableColumn("scatter", "scatter beyond the errors, maximum likelihood", ucd="stat.stdev;phot.flux"),
     TableColumn(
+        "confusion_rms",
+        "scatter of blank positions' mean fluxes beyond their errors: faint sources and diffuse emission",
+        ucd="stat.stdev;phot.flux",
+    ),
+    TableColumn(
         "limit_sigma",
         "k-sigma limit of a median frame: a source this bright is detected in half of them",
         ucd="phot.flux;stat.max",
     ),
     TableColumn(
         "limit_bayes",
-        "95 % upper bound on the mean total flux (flat prior, flux not negative)",
+        "95 % upper bound on the mean total flux (flat prior, flux not negative); its error holds confusion_rms",
         ucd="phot.flux;stat.max",
     ),
     TableColumn(

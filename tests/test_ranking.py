@@ -1,0 +1,55 @@
+"""Thresholds of a field from its blank positions, where faint sources and diffuse emission lie under all of them."""
+
+import numpy as np
+import pytest
+
+from hindlight import candidates, judge, ranking
+from hindlight.lightcurve import Block, Channel, freeze
+from hindlight.settings import Detection
+
+CHANNEL = Channel(label="array|1400MHz|I|30as|Jy/beam", unit="Jy/beam")
+
+
+def block(steady: np.ndarray, seed: int, n_frames: int = 60, error: float = 1.0) -> Block:
+    """Positions of these steady fluxes in white noise."""
+    rng = np.random.default_rng(seed)
+    shape = (len(steady), n_frames)
+    flux = freeze(steady[:, None] + rng.normal(0.0, error, shape), np.float64)
+    times, errors = np.broadcast_to(np.arange(n_frames) * 86400.0, shape), np.full(shape, error)
+    return Block(
+        names=tuple(f"p{k}" for k in range(len(steady))), channel=CHANNEL, frame=np.arange(n_frames), t_tdb_s=times,
+        exposure_s=np.full(shape, 60.0), flux=flux, flux_err=errors, raw_flux=flux, raw_flux_err=errors,
+        flags=np.zeros(shape, np.int64),
+    )  # fmt: skip
+
+
+def thresholds(steady: np.ndarray, seed: int) -> ranking.Thresholds:
+    """What such controls give."""
+    found = judge.judge({CHANNEL.label: block(steady, seed)}, ())
+    return ranking.thresholds(found, np.arange(len(steady)), Detection())[CHANNEL.label]
+
+
+@pytest.mark.parametrize("seed", [1, 2, 3])
+def test_confusion_is_the_scatter_of_blank_means_beyond_their_errors(seed: int) -> None:
+    """An rms of 0.5 under means known to 0.13 is found to within its own error of some 6 %; without it next to nothing."""
+    under = np.random.default_rng(seed + 10).normal(0.3, 0.5, 200)
+    assert thresholds(under, seed).confusion == pytest.approx(0.5, rel=0.2)
+    assert thresholds(np.zeros(200), seed).confusion < 0.06
+    assert thresholds(under[:5], seed).confusion == 0.0
+
+
+def test_bounds_on_total_flux_hold_above_confusion() -> None:
+    """A 95 % bound lies above the flux of 95 % of faint sources, confusion among them; by its error alone it would not."""
+    rng = np.random.default_rng(4)
+    found = thresholds(rng.normal(0.0, 0.5, 200), 4)
+    plain = 0
+    above = 0
+    sources = block(2.0 + rng.normal(0.0, 0.5, 400), 5)
+    for curve in sources.curves():
+        seen = candidates.ChannelView(curve, len(curve), 0, found)
+        row = candidates.channel_row(candidates.View("x", (seen,), str, str), seen)
+        above += row["limit_bayes"] > 2.0
+        plain += row["flux_mean"] + 1.6449 * row["flux_mean_err"] > 2.0
+        assert row["confusion_rms"] == found.confusion
+    assert 0.92 * 400 <= above <= 0.98 * 400  # binomial: 380 +- 4, and the confusion is known to 6 %
+    assert plain < 0.8 * 400
