@@ -38,6 +38,7 @@ def make_block(z: np.ndarray, frames: np.ndarray, channel: Channel = RADIO) -> B
         raw_flux=2.0 * z,
         raw_flux_err=filler + 2.0,
         flags=filler.astype(np.int64),
+        clock_error_s=np.full(frames.size, np.nan),
     )
 
 

@@ -42,7 +42,8 @@ def uneven(tmp_path_factory: pytest.TempPathFactory) -> Path:
     skies.write_sky(folder / "frames" / "a", array, [target, *rest], 1)
     skies.write_sky(folder / "frames" / "b", camera, [], 2)
     (folder / "targets.csv").write_text(skies.target_text([target], array), encoding="utf-8")
-    (folder / "s.toml").write_text("[controls]\nper_field = 60\n", encoding="utf-8")
+    known = '[controls]\nper_field = 60\n[[frames]]\npath = "b/*"\nclock_error_s = 0.25\n'
+    (folder / "s.toml").write_text(known, encoding="utf-8")
     arguments = ["mine", folder / "frames", "--targets", folder / "targets.csv", "--out", folder / "run",
                  "--settings", folder / "s.toml", "-q", "--without", "lomb_scargle"]  # fmt: skip
     assert cli.run_command([str(a) for a in arguments]) == 0
@@ -97,6 +98,8 @@ def test_limits_of_each_frame(uneven: Path, tmp_path: Path) -> None:
     rows = {str(row["channel"]): row for row in Table.read(run / "channels.ecsv")}
     for row in curve:
         of_channel = rows[str(row["channel"])]
+        stated = 0.25 if str(row["channel"]).startswith("camera") else np.nan
+        assert row["clock_error_s"] == pytest.approx(stated, nan_ok=True)
         assert row["limit_sigma"] == pytest.approx(of_channel["threshold"] * row["flux_err"])
         above = of_channel["threshold_above_quiet"] * np.hypot(row["flux_err"], of_channel["quiet_level_err"])
         assert row["limit_above_quiet"] == pytest.approx(above)

@@ -19,7 +19,7 @@ def block(steady: np.ndarray, seed: int, n_frames: int = 60, error: float = 1.0)
     return Block(
         names=tuple(f"p{k}" for k in range(len(steady))), channel=CHANNEL, frame=np.arange(n_frames), t_tdb_s=times,
         exposure_s=np.full(shape, 60.0), flux=flux, flux_err=errors, raw_flux=flux, raw_flux_err=errors,
-        flags=np.zeros(shape, np.int64),
+        flags=np.zeros(shape, np.int64), clock_error_s=np.full(n_frames, np.nan),
     )  # fmt: skip
 
 

@@ -282,7 +282,8 @@ def _lookback_p(view: View, given: Mapping[str, float]) -> float:
         known = np.isfinite(c.curve.t_tdb_s)
         t = c.curve.t_tdb_s[known] - (given["epoch"] - J2000_JD) * DAY
         dot, window = float(np.nan_to_num(given["period_dot"])), float(np.nan_to_num(given["window"]))
-        inside.append(in_window(t, c.curve.exposure_s[known], given["period"], dot, window))
+        exposure, clock = c.curve.exposure_s[known], c.curve.clock_error_s[known]
+        inside.append(in_window(t, exposure, clock, given["period"], dot, window))
         detected.append(c.detected[known])
     return lookback(np.concatenate(inside), np.concatenate(detected))
 

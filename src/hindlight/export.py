@@ -86,6 +86,7 @@ def _columns(run: RunFolder, tables: tasks.Book, rows: dict[str, Any], target: s
     return {
         **{name: rows[name] for name in rows if name not in ("position", "gain")},
         "middle_utc": tables.frames["middle_utc"][at],
+        "clock_error_s": tables.frames["clock_error_s"][at],
         "flux": flux,
         "flux_err": flux_err,
         "flux_unit": [tables.channels[channel].unit for channel in rows["channel"]],

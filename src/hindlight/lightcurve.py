@@ -66,6 +66,8 @@ class LightCurve:
         The same before the frame's gain and error scale.
     frame
         Frame identifiers; flags, see `hindlight.Flag`.
+    clock_error_s
+        1-sigma error of the frame's clock in seconds; NaN where nobody has stated one.
     """
 
     name: str
@@ -78,6 +80,7 @@ class LightCurve:
     raw_flux_err: FloatArray
     frame: IntArray
     flags: IntArray
+    clock_error_s: FloatArray
 
     @classmethod
     def from_arrays(
@@ -93,6 +96,7 @@ class LightCurve:
         flags: NDArray[Any] | None = None,
         raw_flux: NDArray[Any] | None = None,
         raw_flux_err: NDArray[Any] | None = None,
+        clock_error_s: NDArray[Any] | None = None,
     ) -> LightCurve:
         """A light curve of plain arrays of shape (n,): unusable samples dropped, the rest put in order of time."""
         flux = np.asarray(flux, float)
@@ -118,6 +122,7 @@ class LightCurve:
             raw_flux_err=pick(raw_flux_err, flux_err, np.float64),
             frame=pick(frame, frame, np.int64),
             flags=pick(flags, np.zeros(n), np.int64),
+            clock_error_s=pick(clock_error_s, np.full(n, np.nan), np.float64),
         )
 
     def __len__(self) -> int:
@@ -158,8 +163,8 @@ class Block:
     """Many positions over the same frames in one channel: what `compute_block` of a statistic is given.
 
     Matrices have shape (n_positions, n_frames), NaN where a position has no usable measurement in a frame; `names` has
-    n_positions entries, `frame` has shape (n_frames,). Frames are in order of their identifier; times differ from
-    position to position by the barycentric correction, so a row is *not* always in order of time.
+    n_positions entries, `frame` and `clock_error_s` have shape (n_frames,). Frames are in order of their identifier; times
+    differ from position to position by the barycentric correction, so a row is *not* always in order of time.
     """
 
     names: tuple[str, ...]
@@ -172,6 +177,7 @@ class Block:
     raw_flux: FloatArray
     raw_flux_err: FloatArray
     flags: IntArray
+    clock_error_s: FloatArray
 
     def __len__(self) -> int:
         return len(self.names)
@@ -189,6 +195,7 @@ class Block:
             flags=self.flags[row],
             raw_flux=self.raw_flux[row],
             raw_flux_err=self.raw_flux_err[row],
+            clock_error_s=self.clock_error_s,
         )
 
     def curves(self) -> Iterator[LightCurve]:

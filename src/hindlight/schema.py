@@ -277,6 +277,9 @@ LIGHT_CURVE = (
     TableColumn(
         "middle_utc", "middle of good time at the site, ISO 8601 UTC", dtype="str", ucd="time.epoch;obs.exposure"
     ),
+    TableColumn(
+        "clock_error_s", "1-sigma error of the frame's clock, NaN where not stated", unit="s", ucd="stat.error;time"
+    ),
     TableColumn("exposure_s", "good time, NaN where unknown", unit="s", ucd="time.duration;obs.exposure"),
     TableColumn("flux", "calibrated flux", ucd="phot.flux"),
     TableColumn("flux_err", "its 1-sigma error", ucd="stat.error;phot.flux"),

@@ -186,7 +186,8 @@ def blocks(
     """Rows as one block per channel, in order of channel; every position has a row in each.
 
     Measurements with a flag that makes them unusable, without a finite flux, or in a frame whose solution is bad are
-    NaN. `positions` (sorted) and `names` belong together.
+    NaN. `positions` (sorted) and `names` belong together; `rows` are those of `read_rows`, each with its frame's
+    `clock_error_s`.
     """
     found: dict[str, Block] = {}
     for label in sorted(set(rows["channel"].tolist())):
@@ -197,7 +198,7 @@ def blocks(
 
 
 def _block(rows: Columns, positions: IntArray, names: Sequence[str], solution: Columns, channel: Channel) -> Block:
-    frames, column = np.unique(rows["frame"], return_inverse=True)
+    frames, first, column = np.unique(rows["frame"], return_index=True, return_inverse=True)
     row = np.asarray(np.searchsorted(positions, rows["position"]))
     flux, flux_err, bad = calibrated(rows, solution)
     usable = np.isfinite(flux) & np.isfinite(flux_err) & (flux_err > 0) & ~bad & ((rows["flags"] & int(UNUSABLE)) == 0)
@@ -222,6 +223,7 @@ def _block(rows: Columns, positions: IntArray, names: Sequence[str], solution: C
         raw_flux=matrix(rows["flux"]),
         raw_flux_err=matrix(rows["flux_err"]),
         flags=flags,
+        clock_error_s=freeze(rows["clock_error_s"][first]),
     )
 
 

@@ -277,6 +277,7 @@ def position_blocks(order: Order, ids: IntArray, frames: IntArray | None = None)
     rounds = set(tables.positions["round"][rows_of].tolist())
     plan = [p for p in store.pieces(tables.frames, tables.positions) if p.round in rounds]
     rows = store.read_rows(tables.folder, plan, ids, frames)
+    rows["clock_error_s"] = tables.frames["clock_error_s"][np.searchsorted(tables.frames["id"], rows["frame"])]
     void = tables.frames["id"][tables.frames["state"] == "void"]
     related = tables.frames["related_to"]
     is_deep = np.isin(rows["frame"], related[related >= 0])

@@ -105,7 +105,7 @@ def simulated_block(n_positions: int = 6, n_frames: int = 40, seed: int = 0) -> 
     names = tuple(f"curve {k}" for k in range(n_positions))
     flags = freeze(np.zeros((n_positions, n_frames)), np.int64)
     frame = freeze(np.arange(n_frames), np.int64)
-    return Block(names, CHANNEL, frame, t, exposure, flux, err, raw, raw_err, flags)
+    return Block(names, CHANNEL, frame, t, exposure, flux, err, raw, raw_err, flags, np.full_like(frame, np.nan, float))
 
 
 def awkward_curves(n_least: int) -> dict[str, LightCurve]:

@@ -13,6 +13,7 @@ from hindlight.lightcurve import FloatArray
 
 J2000_JD = 2451545.0
 DAY = 86400.0
+CLOCK_SIGMAS = 2.0
 
 
 def from_nearest_pulse(t: FloatArray, period: float, period_dot: float = 0.0) -> FloatArray:
@@ -24,10 +25,13 @@ def from_nearest_pulse(t: FloatArray, period: float, period_dot: float = 0.0) ->
 
 
 def in_window(
-    t: FloatArray, exposure_s: FloatArray, period: float, period_dot: float, window_s: float
+    t: FloatArray, exposure_s: FloatArray, clock_error_s: FloatArray, period: float, period_dot: float, window_s: float
 ) -> NDArray[np.bool_]:
-    """Which exposures of shape (n,) (middle and good time in seconds) overlap a window around a predicted pulse."""
-    reach = (np.nan_to_num(exposure_s) + window_s) / 2
+    """Which exposures of shape (n,) (middle, good time, clock's error in seconds) overlap a window around a pulse.
+
+    Where a clock's error is known the exposure may lie CLOCK_SIGMAS of it further away.
+    """
+    reach = (np.nan_to_num(exposure_s) + window_s) / 2 + CLOCK_SIGMAS * np.nan_to_num(clock_error_s)
     return np.asarray(np.abs(from_nearest_pulse(t, period, period_dot)) <= reach)
 
 
