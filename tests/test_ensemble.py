@@ -137,7 +137,8 @@ def test_scatter_that_blank_sky_shows_is_no_extra_scatter() -> None:
     frame, source = np.nonzero(np.isfinite(flux))
     rows = {"frame": frame, "position": source, "flux": flux[frame, source], "flux_err": np.ones(flux.size)}
     known = {"frame": np.arange(10), "pull": np.full(10, 2.5), "n_controls": np.full(10, 500),
-             "shift_x": np.zeros(10), "shift_y": np.zeros(10), "fwhm": np.full(10, 3.0)}  # fmt: skip
+             "shift_x": np.zeros(10), "shift_y": np.zeros(10), "fwhm": np.full(10, 3.0),
+             "held": np.full(10, np.nan)}  # fmt: skip
     table, _ = solved(np.arange(10), np.full(10, "c", object), [known], [rows], Comparisons())
     np.testing.assert_allclose(table["error_scale"], 2.5)
     assert (table["extra_scatter"] < 0.006).all()  # the error of a gain; with the noise counted twice 0.02 and more
@@ -187,7 +188,8 @@ def test_channels_are_solved_apart_and_spoken_of() -> None:
     frame, source = np.nonzero(np.isfinite(flux))
     rows = {"frame": 2 * frame, "position": source, "flux": flux[frame, source], "flux_err": error[frame, source]}
     known = {"frame": 2 * np.arange(10), "pull": np.ones(10), "n_controls": np.full(10, 200),
-             "shift_x": np.full(10, 0.25), "shift_y": np.full(10, -0.5), "fwhm": np.full(10, 3.0)}  # fmt: skip
+             "shift_x": np.full(10, 0.25), "shift_y": np.full(10, -0.5), "fwhm": np.full(10, 3.0),
+             "held": np.full(10, np.nan)}  # fmt: skip
     channels = np.array(["tied", "raw"] * 10, object)
     table, said = solved(np.arange(20), channels, [known], [rows], Comparisons())
     assert table["frame"].tolist() == list(range(20))
@@ -197,3 +199,17 @@ def test_channels_are_solved_apart_and_spoken_of() -> None:
     assert np.isnan(table["shift_x"][1])
     assert any("tied" in line and "10 of 10 frames" in line for line in said)
     assert any("raw is not tied" in line and "5 %" in line for line in said)
+
+
+def test_light_that_is_not_counted_is_a_factor_of_the_channel() -> None:
+    """The median over the frames that tell it, in the gain of every frame; told by two frames it is not believed."""
+    _, flux, error = simulated(14, frames=12)
+    gains = solve_gains(flux, error)
+    image = nothing(12) | {"held": np.array([0.8, 0.9, 0.85, *[np.nan] * 9])}
+    rows = solution(np.arange(12), "c", gains, np.ones(12), image, Comparisons())
+    plain = solution(np.arange(12), "c", gains, np.ones(12), nothing(12), Comparisons())
+    np.testing.assert_allclose(rows["gain"], 0.85 * plain["gain"])
+    np.testing.assert_allclose(rows["gain_err"], 0.85 * plain["gain_err"])
+    assert rows["held"].tolist() == [0.85] * 12
+    image["held"][2] = np.nan
+    assert solution(np.arange(12), "c", gains, np.ones(12), image, Comparisons())["held"].tolist() == [1.0] * 12

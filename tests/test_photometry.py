@@ -147,7 +147,7 @@ def test_no_position_on_the_image(tmp_path: Path) -> None:
     frame, _ = random_frame(tmp_path / "a.fits", 1)
     got = measure_frame(frame, np.array([10.0]), np.array([-89.9]), Aperture(), SETTINGS)
     assert all(len(column) == 0 for column in got.values())
-    assert set(got) == {"index", "x", "y", "shift_x", "shift_y", "fwhm", "gain", *COLUMNS}
+    assert set(got) == {"index", "x", "y", "shift_x", "shift_y", "fwhm", "gain", "held", *COLUMNS}
 
 
 def measure_one(image: np.ndarray, x: float, y: float, **kwargs: float) -> dict[str, float]:

@@ -32,7 +32,9 @@ VARIABLE_P = 1e-6
 VARIABLE_FACTOR = 3.0  # a comparison that scatters so many times more than the typical one is no comparison
 BAD_P = 1e-6
 BAD_SCATTER = 0.5
-IMAGE_COLUMNS = ("shift_x", "shift_y", "fwhm")  # what measuring found of the image itself
+WORTH_SAYING = 0.01
+FEWEST_HELD = 3  # frames that tell how much light the estimator counts
+IMAGE_COLUMNS = ("shift_x", "shift_y", "fwhm", "held")  # what measuring found of the image itself
 
 Columns = dict[str, Any]
 
@@ -295,6 +297,12 @@ def _said(label: str, part: Columns, gains: Gains) -> list[str]:
         f"errors of {label} were scaled to the scatter of blank sky in {int(scaled.sum())} of {n} frames, by "
         f"{part['error_scale'][scaled].min():.2f} to {part['error_scale'][scaled].max():.2f}"
     ] if scaled.any() else []  # fmt: skip
+    held = float(part["held"][0])
+    if abs(held - 1.0) > WORTH_SAYING:
+        scales.append(
+            f"{label}: {100 * held:.1f} % of a point source's light is counted; fluxes are corrected to all of it within "
+            "the inner radius of the annulus"
+        )
     if not tied:
         return [
             *scales,
@@ -316,10 +324,13 @@ def solution(
 ) -> Columns:
     """Rows of `schema.FRAME_SOLUTION` for a channel's frames, shape (n,).
 
-    `image` are the columns IMAGE_COLUMNS, NaN where nothing was found. A frame without enough comparisons keeps its raw scale,
+    `image` are the columns IMAGE_COLUMNS, NaN where nothing was found; what is `held` is taken for the channel as a whole,
+    since gains make up for its changes. A frame without enough comparisons keeps its raw scale,
     with the error widened by the scatter of the channel's gains, or by `uncalibrated_scatter` where that is not known.
     """
     tied = np.isfinite(gains.gain)
+    told = image["held"][np.isfinite(image["held"])]
+    held = float(np.median(told)) if len(told) >= FEWEST_HELD else 1.0
     unknown = max(gains.spread, 0.0) if tied.sum() >= 5 else settings.uncalibrated_scatter
     with np.errstate(invalid="ignore"):
         own = np.hypot(gains.frame_scatter, gains.gain_err / gains.gain)
@@ -328,9 +339,10 @@ def solution(
     return {
         "frame": frames,
         "channel": np.full(len(frames), channel, object),
-        "gain": np.where(tied, gains.gain, 1.0),
-        "gain_err": gains.gain_err,
+        "gain": held * np.where(tied, gains.gain, 1.0),
+        "gain_err": held * gains.gain_err,
         **image,
+        "held": np.full(len(frames), held),
         "error_scale": scale,
         "extra_scatter": np.where(tied, own, unknown),
         "n_comparisons": gains.n_comparisons,

@@ -16,6 +16,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from hindlight import growth
 from hindlight.archive import MEGABYTE
 from hindlight.background import Annulus, Background, annulus_of, keep_freed_memory, local_background, median_and_mad
 from hindlight.detection import detect_bright
@@ -90,10 +91,17 @@ class OpenFrame:
     beam: BeamShape
     unpacked_limit: int
     companions: Mapping[str, PlanePlace] = field(default_factory=dict)
+    unpacked: Pixels | None = None
+
+    def unpacked_once(self) -> OpenFrame:
+        """The same with its pixels in memory if they are packed or compressed: for a frame that is read several times."""
+        if self.place.image.packed or self.place.image.hdu.compressed:
+            return replace(self, unpacked=read_plane(self.place, self.unpacked_limit))
+        return self
 
     def pixels(self, windows: Windows | None = None) -> Pixels:
         """Its pixels, blank where a companion says so; see `pixels.read_plane`."""
-        own = read_plane(self.place, self.unpacked_limit, windows)
+        own = self.unpacked or read_plane(self.place, self.unpacked_limit, windows)
         read = {kind: self.companion(kind, windows) for kind in ("mask", "weight")}
         masks = tuple(Mask(found, kind == "weight") for kind, found in read.items() if found is not None)
         return replace(own, masks=masks) if masks else own
@@ -170,12 +178,13 @@ def measure_frame(
     the positions are measured that far away from where the header puts them. Where the header gives no width the
     anchors' own is used, if they tell it. Returns columns of shape (m,) for the m positions on the image: `index` among
     the n, `x`, `y` (0-based pixels), `shift_x`, `shift_y` (at the middle of the image, NaN where the anchors do not
-    tell), `fwhm` (pixels), `gain` of the primary beam, and those of `measure`, flux and error divided by the gain.
+    tell), `fwhm` (pixels), `gain` of the primary beam, `held` (the fraction of a point source's light that is counted, NaN
+    where the anchors do not tell), and those of `measure`, flux and error divided by the gain.
     Raises `SetAsideError`, `OSError`, or `ValueError` from an unusable projection.
     """
     opened = open_frame(frame, settings)
-    if anchors is not None:
-        opened = _with_own_width(frame, opened, *anchors)
+    if anchors is not None and len(anchors[0]):
+        opened = _with_own_width(frame, opened.unpacked_once(), *anchors)
     x, y = opened.sky.icrs_to_pixel(ra, dec, frame.mjd)
     shift = _shift(frame, opened, anchors) if anchors is not None else None
     if shift is not None:
@@ -186,7 +195,7 @@ def measure_frame(
     place = {"index": index, "x": x, "y": y, "fwhm": np.full(len(index), opened.beam.fwhm)}
     place |= {f"shift_{axis}": np.full(len(index), value) for axis, value in zip("xy", offset, strict=True)}
     if len(index) == 0:
-        return {**place, "gain": np.empty(0), **_nothing()}
+        return {**place, "gain": np.empty(0), "held": np.empty(0), **_nothing()}
     lattice = annulus_of(opened.beam, settings.photometry).lattice
     half = max(lattice.rows, lattice.columns, _half_width(estimator, opened.beam))
     windows = Windows(_nearest(x), _nearest(y), half)
@@ -200,6 +209,8 @@ def measure_frame(
         area = math.pi * opened.beam.major * opened.beam.minor / (4.0 * math.log(2.0))
         found["flux"] /= area
         found["flux_err"] /= area
+    held = _held(frame, opened, anchors, shift, estimator, settings) if anchors is not None else NAN
+    found["held"] = np.full(len(index), held)
     found["gain"] = _gain(opened, frame, ra[index], dec[index], x, y)
     _divide(found, settings.photometry.primary_beam_floor)
     return {**place, **found}
@@ -251,6 +262,29 @@ def _shift(frame: FrameToMeasure, opened: OpenFrame, anchors: tuple[FloatArray, 
     return pointing(found, x, y, (opened.place.height, opened.place.width), opened.beam)
 
 
+def _held(
+    frame: FrameToMeasure, opened: OpenFrame, anchors: tuple[FloatArray, FloatArray], shift: Pointing | None,
+    estimator: Estimator, settings: Settings,
+) -> float:  # fmt: skip
+    """The fraction of a point source's light that an estimator of sums counts, NaN where the anchors do not tell."""
+    if not estimator.sums or len(anchors[0]) < FEWEST:
+        return NAN
+    x, y = opened.sky.icrs_to_pixel(anchors[0], anchors[1], frame.mjd)
+    if shift is not None:
+        x, y = shift.moved(x, y)
+    brightest = _inside(opened, x, y)[: growth.WANTED]
+    x, y = x[brightest], y[brightest]
+    whole = growth.AllLight(settings.photometry.annulus_inner)
+    lattice = annulus_of(opened.beam, settings.photometry).lattice
+    half = max(lattice.rows, lattice.columns, _half_width(whole, opened.beam))
+    pixels = opened.pixels(Windows(_nearest(x), _nearest(y), half))
+    counted, light = (
+        measure(pixels, x, y, opened.beam, by, settings.photometry, saturation=frame.saturation)
+        for by in (estimator, whole)
+    )
+    return growth.fraction_held(counted, light)
+
+
 def locate(
     frame: FrameToMeasure, ra: FloatArray, dec: FloatArray, settings: Settings
 ) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
@@ -258,7 +292,7 @@ def locate(
 
     NaN for a source that does not stand out, is saturated or not on the image. Raises as `measure_frame` does.
     """
-    opened = _with_own_width(frame, open_frame(frame, settings), ra, dec)
+    opened = _with_own_width(frame, open_frame(frame, settings).unpacked_once(), ra, dec)
     index, x, y, found = _centroids(frame, opened, ra, dec)
     there = np.full((4, len(ra)), np.nan)
     there[0, index], there[1, index] = opened.sky.pixel_to_icrs(x + found.dx, y + found.dy, frame.mjd)

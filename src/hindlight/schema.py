@@ -233,6 +233,9 @@ FRAME_SOLUTION = (
     TableColumn("shift_x", "shift at the middle of the image against its header, NaN where unknown", unit="pixel"),
     TableColumn("shift_y", "shift at the middle of the image against its header, NaN where unknown", unit="pixel"),
     TableColumn("fwhm", "width of beam or seeing that was used, NaN where nothing was measured", unit="pixel"),
+    TableColumn(
+        "held", "fraction of a point source's light that was counted, contained in gain: median of the channel"
+    ),
     TableColumn("error_scale", "factor on the error"),
     TableColumn("extra_scatter", "further scatter, as a fraction of the flux"),
     TableColumn("n_comparisons", "comparison sources used", dtype="int64"),
@@ -266,6 +269,9 @@ MEASUREMENTS = (
     TableColumn("shift_x", "shift of the frame at its middle, contained in x; NaN where none was found", unit="pixel"),
     TableColumn("shift_y", "shift of the frame at its middle, contained in y; NaN where none was found", unit="pixel"),
     TableColumn("fwhm", "width of beam or seeing that was used (mean of both axes)", unit="pixel"),
+    TableColumn(
+        "held", "fraction of a point source's light that sums of pixels count, from comparisons; NaN where unknown"
+    ),
 )
 
 LIGHT_CURVE = (

@@ -15,7 +15,7 @@ from typing import Any
 
 import numpy as np
 
-from hindlight import clock, duplicates, host, judge, photometry, store
+from hindlight import clock, duplicates, ensemble, host, judge, photometry, store
 from hindlight.background import MAD_TO_SIGMA
 from hindlight.candidates import ChannelView, Described, Examined, View, describe
 from hindlight.channels import channels_of
@@ -37,7 +37,7 @@ from hindlight.systems import BadWcsError, NoCelestialError, unit_vectors
 
 JULIAN_YEAR_S = 31557600.0
 MOST_ANCHORS = 100  # comparisons of a frame that tell its shift
-MEASURED = ("x", "y", "flux", "flux_err", "background", "rms", "gain", "flags", "shift_x", "shift_y", "fwhm")
+MEASURED = ("x", "y", "flux", "flux_err", "background", "rms", "gain", "flags", "shift_x", "shift_y", "fwhm", "held")
 
 
 @dataclass(frozen=True)
@@ -230,7 +230,7 @@ class FrameEvidence:
     """What one batch of frames tells of its flux scale.
 
     `comparisons` are columns frame, position, flux, flux_err of usable measurements; `frames` are columns frame, pull
-    (MAD-sigma of flux over error at the controls), n_controls, shift_x, shift_y and fwhm, one row a frame.
+    (MAD-sigma of flux over error at the controls), n_controls, and ensemble.IMAGE_COLUMNS, one row a frame.
     """
 
     comparisons: Columns
@@ -249,7 +249,7 @@ def frame_evidence(order: Order, batch: int) -> FrameEvidence:
     ids, row = np.unique(rows["frame"], return_inverse=True)
     first = np.unique(row, return_index=True)[1]
     frames: Columns = {"frame": ids, "pull": np.full(len(ids), np.nan), "n_controls": np.zeros(len(ids), np.int64)}
-    frames |= {name: rows[name][first] for name in ("shift_x", "shift_y", "fwhm")}
+    frames |= {name: rows[name][first] for name in ensemble.IMAGE_COLUMNS}
     blank = np.flatnonzero(usable & (kind == "control"))
     for at in np.unique(row[blank]).tolist():
         mine = blank[row[blank] == at]
