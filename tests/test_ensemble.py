@@ -202,14 +202,19 @@ def test_channels_are_solved_apart_and_spoken_of() -> None:
 
 
 def test_light_that_is_not_counted_is_a_factor_of_the_channel() -> None:
-    """The median over the frames that tell it, in the gain of every frame; told by two frames it is not believed."""
+    """The median over the frames that tell it, in every gain; told by too few, or not beyond their scatter, it is all."""
     _, flux, error = simulated(14, frames=12)
     gains = solve_gains(flux, error)
-    image = nothing(12) | {"held": np.array([0.8, 0.9, 0.85, *[np.nan] * 9])}
+    told = np.array([0.84, 0.86, 0.85, 0.83, 0.87, *[np.nan] * 7])
+    image = nothing(12) | {"held": told}
     rows = solution(np.arange(12), "c", gains, np.ones(12), image, Comparisons())
     plain = solution(np.arange(12), "c", gains, np.ones(12), nothing(12), Comparisons())
     np.testing.assert_allclose(rows["gain"], 0.85 * plain["gain"])
     np.testing.assert_allclose(rows["gain_err"], 0.85 * plain["gain_err"])
     assert rows["held"].tolist() == [0.85] * 12
-    image["held"][2] = np.nan
-    assert solution(np.arange(12), "c", gains, np.ones(12), image, Comparisons())["held"].tolist() == [1.0] * 12
+    for weak in (
+        np.where(np.arange(12) == 2, np.nan, told),
+        10 * (told - 0.85) + 0.95,
+    ):  # four frames; five that differ
+        image = nothing(12) | {"held": weak}
+        assert solution(np.arange(12), "c", gains, np.ones(12), image, Comparisons())["held"].tolist() == [1.0] * 12

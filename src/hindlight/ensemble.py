@@ -33,7 +33,8 @@ VARIABLE_FACTOR = 3.0  # a comparison that scatters so many times more than the 
 BAD_P = 1e-6
 BAD_SCATTER = 0.5
 WORTH_SAYING = 0.01
-FEWEST_HELD = 3  # frames that tell how much light the estimator counts
+MEDIAN_ERROR = 1.253  # relative to that of the mean, for normal errors
+FEWEST_HELD = 5  # frames that tell how much light the estimator counts
 IMAGE_COLUMNS = ("shift_x", "shift_y", "fwhm", "held")  # what measuring found of the image itself
 
 Columns = dict[str, Any]
@@ -329,8 +330,7 @@ def solution(
     with the error widened by the scatter of the channel's gains, or by `uncalibrated_scatter` where that is not known.
     """
     tied = np.isfinite(gains.gain)
-    told = image["held"][np.isfinite(image["held"])]
-    held = float(np.median(told)) if len(told) >= FEWEST_HELD else 1.0
+    held = _held(image["held"])
     unknown = max(gains.spread, 0.0) if tied.sum() >= 5 else settings.uncalibrated_scatter
     with np.errstate(invalid="ignore"):
         own = np.hypot(gains.frame_scatter, gains.gain_err / gains.gain)
@@ -348,6 +348,16 @@ def solution(
         "n_comparisons": gains.n_comparisons,
         "verdict": verdict,
     }
+
+
+def _held(told: FloatArray) -> float:
+    """What part of a point's light is counted in a channel whose frames tell it, shape (n,) with NaN: 1 if that may be all."""
+    told = told[np.isfinite(told)]
+    if len(told) < FEWEST_HELD:
+        return 1.0
+    held = float(np.median(told))
+    error = MEDIAN_ERROR * MAD_TO_SIGMA * float(np.median(np.abs(told - held))) / len(told) ** 0.5
+    return held if abs(held - 1.0) > SIGNIFICANT * error else 1.0
 
 
 def calibrated(rows: Columns, solution: Columns) -> tuple[FloatArray, FloatArray, NDArray[np.bool_]]:
