@@ -113,6 +113,7 @@ GOOD: dict[str, Any] = {"unit": "adu"}
         ({"stokes": "R"}, ["one of I, Q"]),
         ({"primary_beam": "yes"}, ["one of corrected, uncorrected"]),
         ({"primary_beam": "corrected", "primary_beam_fwhm_deg": 1.0}, ["primary_beam_fwhm_deg: not used"]),
+        ({"primary_beam_at_hz": 1e9}, ["primary_beam_at_hz", "give primary_beam_fwhm_deg"]),
         ({"unit": ""}, ["unit: expected text"]),
         ({"beam_arcsec": [30.0, 45.0, 0.0]}, ["major not below minor"]),
         ({"beam_arcsec": [30.0, 45.0]}, ["[major, minor, angle]"]),

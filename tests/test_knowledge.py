@@ -130,6 +130,10 @@ def test_a_fact_ends_an_assumption(
             {"primary_beam": "uncorrected", "primary_beam_fwhm_deg": 2},
             {"primary_beam": "uncorrected", "primary_beam_fwhm_deg": 2.0},
         ),
+        (
+            {"primary_beam": "uncorrected", "primary_beam_fwhm_deg": 2, "primary_beam_at_hz": 308e6},  # the frame's: 154
+            {"primary_beam": "uncorrected", "primary_beam_fwhm_deg": 4.0},
+        ),
         ({"clock_error_s": 0.5}, {"clock_error_s": 0.5}),
     ],
 )  # fmt: skip

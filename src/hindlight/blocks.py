@@ -189,6 +189,11 @@ FACTS = {
     "primary_beam_fwhm_deg": Key(
         "FWHM of a Gaussian primary beam about the reference pixel, degrees", "0.5", _number(POSITIVE, 0.0)
     ),
+    "primary_beam_at_hz": Key(
+        "frequency of that width, which goes with 1 / frequency; else it is that of every frame",
+        "1.4e9",
+        _number(POSITIVE, 0.0),
+    ),
 }
 KEYS = {**MATCH, **FACTS}
 WHERE_MISSING = "where_missing"
@@ -223,6 +228,10 @@ def _block(number: int, entry: Mapping[str, Any], sites: Mapping[str, Vector], w
         raise UsageError(f"{where} to: expected a date after from = {values['from']!r}, got {values['to']!r}")
     if "primary_beam_fwhm_deg" in values and values.get("primary_beam") == "corrected":
         raise UsageError(f'{where} primary_beam_fwhm_deg: not used where primary_beam = "corrected"; leave one out')
+    if "primary_beam_at_hz" in values and "primary_beam_fwhm_deg" not in values:
+        raise UsageError(
+            f"{where} primary_beam_at_hz: it says where a width holds; give primary_beam_fwhm_deg in the block"
+        )
     return FrameBlock(
         number,
         {key: value for key, value in values.items() if key in MATCH},

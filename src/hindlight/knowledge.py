@@ -221,7 +221,9 @@ def _has_no_place(key: str, given: Mapping[str, Any], facts: FrameFacts) -> bool
         return len(moments) != 1
     if key in ("time_scale", "clock_offset_s", "clock_error_s"):
         return not any(moment.has_clock for moment in moments.values())
-    return key == "primary_beam_fwhm_deg" and given.get("primary_beam", facts.primary_beam) != "uncorrected"
+    if key == "primary_beam_at_hz" and not given.get("frequency_hz", facts.frequency_hz) > 0:
+        return True
+    return key.startswith("primary_beam_") and given.get("primary_beam", facts.primary_beam) != "uncorrected"
 
 
 def _moments(facts: FrameFacts) -> dict[str, Moment]:
@@ -244,8 +246,11 @@ def _changes(facts: FrameFacts, given: Mapping[str, Any]) -> dict[str, Any]:
         if key == "beam_arcsec":
             major, minor, angle = value if isinstance(value, tuple) else (value, value, 0.0)
             new |= {"beam_major": major, "beam_minor": minor, "beam_angle": angle}
-        elif key not in ("date_means", "clock_offset_s"):
+        elif key not in ("date_means", "clock_offset_s", "primary_beam_at_hz"):
             new[{"instrument_name": "instrument", "time_scale": "scale"}.get(key, key)] = value
+    if "primary_beam_fwhm_deg" in given and "primary_beam_at_hz" in given:
+        frequency = given.get("frequency_hz", facts.frequency_hz)
+        new["primary_beam_fwhm_deg"] *= given["primary_beam_at_hz"] / frequency
     if "exposure_s" in given and "good_time_fraction" in given:
         # Both together say how long the frame took.
         new["good_time_fraction"] = math.nan
