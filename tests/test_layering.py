@@ -17,8 +17,8 @@ ORDER = [
     "fence", "clock", "systems", "celestial", "sky", "headers", "reading", "goodtime", "knowledge", "files",
     "companions", "channels", "outlines", "footprints", "archive", "summary", "positions", "apart", "pixels",
     "background", "detection", "pointing", "growth", "photometry", "duplicates", "ensemble", "store", "judge", "calibrate",
-    "ranking", "search", "timing", "candidates", "plan", "comparisons", "tasks", "conclude", "outcome", "crew", "record",
-    "verdicts", "runner", "survey", "export", "demo", "testing", "cli", "__main__",
+    "ranking", "lifted", "search", "timing", "candidates", "plan", "comparisons", "tasks", "conclude", "bright", "outcome",
+    "crew", "record", "verdicts", "runner", "survey", "export", "demo", "testing", "cli", "__main__",
 ]  # fmt: skip
 PLUGINS_MAY_IMPORT = {"hindlight", "numpy", "scipy", "astropy", "photutils", "nifty_ls"}
 

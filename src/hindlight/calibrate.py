@@ -18,6 +18,7 @@ from hindlight.lightcurve import FloatArray, IntArray
 
 MAD_TO_SIGMA = 1.482602
 TAIL_CONFIDENCE = 0.95
+FEWEST_EXCEEDANCES = 10
 SHAPES = np.concatenate(([0.0], np.geomspace(1e-3, 5.0, 160)))
 SCALES = np.geomspace(0.02, 50.0, 400)
 
@@ -75,8 +76,12 @@ def centre_and_spread(values: FloatArray) -> tuple[FloatArray, FloatArray]:
     return centre, spread
 
 
-def rank(null: Null, target: FloatArray) -> Rank:
-    """Rank a target's oriented values, shape (k,), within the set of itself and the controls; NaN p for no values."""
+def rank(null: Null, target: FloatArray, weight: float = 1.0) -> Rank:
+    """Rank a target's oriented values, shape (k,), within the set of itself and the controls; NaN p for no values.
+
+    Where controls are alike in groups of `weight`, one target stands for so many of them: p = (r + weight) / (n + weight),
+    which for whole groups is the exact rank among groups.
+    """
     n = null.n
     if n == 0 or not np.isfinite(target).any():
         return Rank(float("nan"), -1, float("nan"), 0, np.empty(0))
@@ -88,7 +93,7 @@ def rank(null: Null, target: FloatArray) -> Rank:
     _, control_best, control_distance = _combination(control_p, (null.values - null.centre) / null.spread)
     ahead = (control_best < best[0]) | ((control_best == best[0]) & (control_distance >= distance[0]))
     r = int(ahead.sum())
-    return Rank((r + 1) / (n + 1), int(column[0]), float(distance[0]), r, control_distance)
+    return Rank((r + weight) / (n + weight), int(column[0]), float(distance[0]), r, control_distance)
 
 
 def furthest_columns(null: Null, values: FloatArray) -> IntArray:
@@ -137,16 +142,17 @@ def controls_needed(n_targets: int, level: float) -> int:
     return max(1, int(np.ceil(n_targets / level)) - 1)
 
 
-def tail_bound(distances: FloatArray, target: float, exceedances: int) -> float:
+def tail_bound(distances: FloatArray, target: float, exceedances: int, weight: float = 1.0) -> float:
     """An upper bound on the chance that a control lies beyond `target`, from a fitted tail; NaN where none can be.
 
     A generalised Pareto tail with shape >= 0 is fitted to the largest `exceedances` of the controls' distances; the
     bound is the upper end of the 95 % profile-likelihood interval of the tail probability. The plain estimate
-    (Knijnenburg et al. 2009, Bioinformatics 25, i161) understates heavy tails and is not used.
+    (Knijnenburg et al. 2009, Bioinformatics 25, i161) understates heavy tails and is not used. Controls alike in groups of
+    `weight` tell that much less: more of them are used, and the likelihood counts accordingly.
     """
     finite = np.sort(distances[np.isfinite(distances)])[::-1]
-    m = min(exceedances, finite.size // 4)
-    if m < 10 or not np.isfinite(target):
+    m = min(round(exceedances * weight), finite.size // 4)
+    if m < FEWEST_EXCEEDANCES * weight or not np.isfinite(target):
         return float("nan")
     start = (finite[m - 1] + finite[m]) / 2
     excess = finite[:m] - start
@@ -156,7 +162,7 @@ def tail_bound(distances: FloatArray, target: float, exceedances: int) -> float:
     shape, scale = SHAPES[:, None], SCALES[None, :] * scale0
     likelihood = -m * np.log(scale) - (shape + 1) * _log_terms(shape, scale, excess)
     log_tail = -_log_terms(shape, scale, np.array([target - start]))
-    drop = stats.chi2.isf(1 - TAIL_CONFIDENCE, 1) / 2
+    drop = weight * stats.chi2.isf(1 - TAIL_CONFIDENCE, 1) / 2
     inside = likelihood >= likelihood.max() - drop
     return float(m / finite.size * np.exp(log_tail[inside].max()))
 

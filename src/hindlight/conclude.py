@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 from hindlight import calibrate, ranking
 from hindlight.host import Plugins
 from hindlight.judge import Judgement, full_columns
+from hindlight.lifted import Lift, originals
 from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.plan import serving_controls
 from hindlight.search import best_places
@@ -26,7 +27,8 @@ class Field:
     """One field while it is judged: its targets and controls as ids, and what is known of them so far.
 
     Targets that were searched are in fields apart, with their best places and those of their controls, out of
-    `n_trials` each; the numbers of such fields are below zero.
+    `n_trials` each; so are bright ones, with copies of the controls made as bright as they are (`lift`), which are alike in
+    groups of `group_size`. The numbers of such fields are below zero.
     """
 
     number: int
@@ -34,6 +36,8 @@ class Field:
     controls: IntArray
     serving: NDArray[np.bool_]
     n_trials: int = 1
+    lift: Lift | None = None
+    group_size: float = 1.0
     judgement: Judgement = field(default_factory=lambda: Judgement(0))
     ranks: ranking.FieldRanks | None = None
     thresholds: dict[str, ranking.Thresholds] = field(default_factory=dict)
@@ -49,6 +53,11 @@ class Field:
     def ids(self) -> IntArray:
         """Every position of the field, ascending."""
         return np.sort(np.concatenate([self.targets, self.controls]))
+
+    @property
+    def blank_sky(self) -> IntArray:
+        """The controls as they were measured, ascending."""
+        return originals(self.controls)
 
     def rows(self, ids: IntArray) -> IntArray:
         """Where these positions stand in the field's judgement."""
@@ -107,12 +116,14 @@ def rank(found: Field, plugins: Plugins, settings: Settings) -> None:
     columns = full_columns([*plugins.statistics, *plugins.period_searches])
     targets, controls = found.rows(found.targets), found.rows(found.controls)
     serving = ranking.matched(found.judgement, targets, controls, found.serving, settings.controls.shared_frames)
-    found.ranks = ranking.rank_field(found.judgement, columns, targets, controls, serving)
+    found.ranks = ranking.rank_field(found.judgement, columns, targets, controls, serving, found.group_size)
     found.thresholds = ranking.thresholds(found.judgement, controls, settings.detection)
 
 
 def gated(found: Field, settings: Settings) -> IntArray:
     """The positions whose periods are searched: those the statistics so far put among the foremost fraction."""
+    if len(found.targets) == 0:
+        return found.targets
     target_p = np.array([r.p_value for r in found.ranked.ranks])
     with np.errstate(invalid="ignore"):
         pass_targets = found.targets[target_p <= settings.ranking.gate]
@@ -137,8 +148,11 @@ class PValues:
     needed: int
 
 
-def p_values(ranks: Sequence[calibrate.Rank], settings: Settings) -> PValues:
-    """One p-value and q-value per target; a tail bound stands in where the controls alone cannot decide."""
+def p_values(ranks: Sequence[calibrate.Rank], weights: Sequence[float], settings: Settings) -> PValues:
+    """One p-value and q-value per target; a tail bound stands in where the controls alone cannot decide.
+
+    `weights` are the group sizes of the controls that each was ranked with.
+    """
     empirical = np.array([r.p_value for r in ranks])
     level = settings.ranking.level
     q = calibrate.false_discovery(empirical)
@@ -149,7 +163,7 @@ def p_values(ranks: Sequence[calibrate.Rank], settings: Settings) -> PValues:
     testable = np.isfinite(empirical)
     for index in np.flatnonzero(undecided).tolist():
         bound = calibrate.tail_bound(
-            ranks[index].control_distances, ranks[index].beyond, settings.ranking.tail_exceedances
+            ranks[index].control_distances, ranks[index].beyond, settings.ranking.tail_exceedances, weights[index]
         )
         testable[index] = np.isfinite(bound)
         if bound < p[index]:

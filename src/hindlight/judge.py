@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hindlight.fence import Fault, blank, call, checked
-from hindlight.lightcurve import Block, FloatArray, LightCurve, weighted_mean
+from hindlight.lightcurve import Block, FloatArray, IntArray, LightCurve, weighted_mean
 from hindlight.plugin import Column, PeriodSearch, Plugin, Statistic
 
 WHOLE = ""  # stands for 'all channels together' where a channel's label is expected
@@ -148,6 +148,11 @@ def _store(
         cells = [blank(column) if row is None else row[column.name] for row in rows]
         dtype: Any = object if column.dtype == "str" else column.dtype
         result.values[label, f"{name}_{column.name}"] = np.array(cells, dtype=dtype)
+
+
+def taken(whole: Judgement, rows: IntArray) -> Judgement:
+    """What was found for some of the positions, without the faults."""
+    return Judgement(len(rows), {key: values[rows] for key, values in whole.values.items()})
 
 
 def joined(parts: Sequence[Judgement], lengths: Sequence[int], columns: Mapping[str, Column]) -> Judgement:

@@ -18,6 +18,7 @@ from hindlight.conclude import Field, PValues
 from hindlight.fence import Fault, blank
 from hindlight.host import Plugins
 from hindlight.judge import full_columns
+from hindlight.lifted import COPY
 from hindlight.lightcurve import FloatArray
 from hindlight.plugin import Column, ConsistencyCheck, Statistic
 from hindlight.schema import CANDIDATES, PLUGIN_FAULTS, TableColumn
@@ -83,7 +84,16 @@ def chance_cells(found: Field, index: int, at: int, p: PValues) -> dict[str, Any
         "lowest_p_statistic": f"{column} in {channel}" if channel else column,
         "beyond_controls": rank.beyond,
         "n_controls": int(found.ranked.n_controls[index]),
+        "null": null_of(found),
     }
+
+
+def null_of(found: Field) -> str:
+    """What the controls of a field are."""
+    if found.lift is None:
+        return "blank sky"
+    levels = ", ".join(f"{level:.3g} in {label}" for label, level in sorted(found.lift.levels.items()))
+    return f"blank sky and the residuals of comparisons, scaled to a flux of {levels}"
 
 
 def notes(found: Field, index: int, at: int, p: PValues, place: str = "") -> str:
@@ -136,7 +146,7 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings) -> tuple[st
     """What the last lines of a run must say."""
     said = []
     sizes = [int(n) for found in fields for n in found.ranked.n_controls]
-    placed = [int(n) for found in fields if found.n_trials == 1 for n in found.ranked.n_controls]
+    placed = [int(n) for found in fields if found.n_trials == 1 and not found.lift for n in found.ranked.n_controls]
     alone = sum(size == 0 for size in sizes)
     if alone:
         said.append(f"{alone} targets have no control and so no p-value: nothing is said of their variation")
@@ -180,7 +190,8 @@ def _error_remarks(fields: Sequence[Field]) -> list[str]:
     for found in fields:
         controls = found.rows(found.controls)
         for (label, full), values in found.judgement.values.items():
-            if full == "core_reduced" and controls.size and found.n_trials == 1:  # a place chosen is not typical
+            typical = found.n_trials == 1 and found.lift is None  # a place chosen is not
+            if full == "core_reduced" and controls.size and typical:
                 scatter.setdefault(label, []).extend(np.sqrt(values[controls][np.isfinite(values[controls])]).tolist())
     said = []
     for label, values in sorted(scatter.items()):
@@ -197,7 +208,7 @@ def _confusion_remarks(fields: Sequence[Field]) -> list[str]:
     """Channels in which faint sources and diffuse emission, not noise, bound what can be said of a mean flux."""
     worst: dict[str, float] = {}
     for found in fields:
-        for label, limits in found.thresholds.items():
+        for label, limits in found.thresholds.items() if found.lift is None else ():
             error = found.judgement.values[label, "core_mean_err"][found.rows(found.controls)]
             if limits.confusion > 0 and limits.confusion > np.nanmedian(error):
                 worst[label] = max(worst.get(label, 0.0), limits.confusion)
@@ -274,7 +285,8 @@ def control_columns(fields: Sequence[Field], plugins: Plugins) -> tuple[list[Tab
     ]
     declared = [
         TableColumn("id", "identifier of the position", dtype="int64", ucd="meta.id"),
-        TableColumn("field", "cell of sky", dtype="int64"),
+        TableColumn("field", "cell of sky; below zero for targets apart", dtype="int64"),
+        TableColumn("copy", "0: as measured; k: made as bright as the field's targets, the k-th time", dtype="int64"),
         *calibrated,
         TableColumn("p_value", "rank of the control among all controls of its field", ucd="stat.probability"),
     ]
@@ -282,7 +294,8 @@ def control_columns(fields: Sequence[Field], plugins: Plugins) -> tuple[list[Tab
     for found in fields:
         cells = plugin_cells(found, plugins)
         for control, row, p in zip(found.controls, found.rows(found.controls), found.ranked.control_p, strict=True):
-            values["id"].append(int(control))
+            values["id"].append(int(control) % COPY)
+            values["copy"].append(int(control) // COPY)
             values["field"].append(found.number)
             values["p_value"].append(float(p))
             for column in calibrated:

@@ -115,8 +115,12 @@ def rank_field(
     targets: IntArray,
     controls: IntArray,
     serving: NDArray[np.bool_],
+    weight: float = 1.0,
 ) -> FieldRanks:
-    """Every target of a field ranked among the controls that serve it; `targets`, `controls` are row indices."""
+    """Every target of a field ranked among the controls that serve it; `targets`, `controls` are row indices.
+
+    `weight` is that of `calibrate.rank`.
+    """
     keys = calibrated_keys(judgement, columns, controls)
     matrix = oriented_matrix(judgement, keys, columns, controls)
     nulls: dict[bytes, calibrate.Null] = {}
@@ -125,7 +129,7 @@ def rank_field(
         signature = mask.tobytes()
         if signature not in nulls:
             nulls[signature] = calibrate.null_from(matrix[controls[mask]])
-        found = calibrate.rank(nulls[signature], matrix[row])
+        found = calibrate.rank(nulls[signature], matrix[row], weight)
         ranks.append(found)
         deciding.append(keys[found.column] if found.column >= 0 else None)
     control_p = calibrate.leave_one_out(calibrate.null_from(matrix[controls]))

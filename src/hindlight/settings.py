@@ -114,6 +114,13 @@ class Controls:
         3, "frames per channel and field in which bright sources to stay clear of are looked for", minimum=1
     )
     bright_snr: float = setting(5.0, "what counts as a bright source there", unit="sigma", minimum=3)
+    bright_target_snr: float = setting(
+        3.0,
+        "a target this bright in a typical frame is ranked among controls made as bright as it is",
+        unit="sigma",
+        minimum=1,
+    )
+    bright_pool: int = setting(400, "of which there are at most so many, if the run's level needs them", minimum=50)
 
 
 @dataclass(frozen=True)

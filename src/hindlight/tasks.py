@@ -15,7 +15,7 @@ from typing import Any
 
 import numpy as np
 
-from hindlight import clock, duplicates, ensemble, host, judge, photometry, store
+from hindlight import clock, duplicates, ensemble, host, judge, lifted, photometry, store
 from hindlight.background import MAD_TO_SIGMA
 from hindlight.candidates import ChannelView, Described, Examined, View, describe
 from hindlight.channels import channels_of
@@ -25,6 +25,7 @@ from hindlight.facts import visible
 from hindlight.fence import Fault, blank, call, checked, one_line
 from hindlight.files import check_unchanged, local_path
 from hindlight.headers import SetAsideError
+from hindlight.lifted import Lift, originals
 from hindlight.lightcurve import Channel, FloatArray, IntArray, LightCurve
 from hindlight.plan import BrightSources, owners
 from hindlight.plugin import Candidate, Cutout, Finding, PeriodResult
@@ -266,13 +267,16 @@ def position_label(positions: Columns, row: int) -> str:
     return str(positions["name"][owner]) or f"{positions['kind'][row]} {positions['id'][row]}"
 
 
-def position_blocks(order: Order, ids: IntArray, frames: IntArray | None = None) -> dict[str, Any]:
+def position_blocks(
+    order: Order, ids: IntArray, frames: IntArray | None = None, lift: Lift | None = None
+) -> dict[str, Any]:
     """The blocks of these positions (ascending ids), one per channel, and the rows they were made from.
 
-    Deep images are kept apart from their own snapshots, whose noise they share: `deep` holds blocks of those that are
-    in no deeper one.
+    With `lift`, ids may be those of copies of controls, see `lifted`. Deep images are kept apart from their own snapshots,
+    whose noise they share: `deep` holds blocks of those that are in no deeper one.
     """
     tables = book(order.run, order.version)
+    wanted, ids = ids, originals(ids)
     rows_of = np.searchsorted(tables.positions["id"], ids)
     rounds = set(tables.positions["round"][rows_of].tolist())
     plan = [p for p in store.pieces(tables.frames, tables.positions) if p.round in rounds]
@@ -288,12 +292,34 @@ def position_blocks(order: Order, ids: IntArray, frames: IntArray | None = None)
         mine = {name: values[keep] for name, values in rows.items()}
         found.append((mine, store.blocks(mine, ids, names, tables.solution, tables.channels)))
     (rows, blocks), (_, deep) = found
+    if lift is not None:
+        left = residuals(order)
+        blocks = {
+            label: lifted.lifted(block, ids, wanted, lift.levels.get(label, 0.0), left.get(label))
+            for label, block in blocks.items()
+        }
     return {"rows": rows, "blocks": blocks, "deep": deep}
 
 
-def judge_positions(order: Order, ids: IntArray) -> judge.Judgement:
+def residuals(order: Order) -> Mapping[str, lifted.Residuals]:
+    """What calibration leaves in each channel whose comparisons tell it."""
+    return _residuals(order.run, order.version)
+
+
+@lru_cache(maxsize=2)
+def _residuals(run: str, version: str) -> Mapping[str, lifted.Residuals]:
+    tables = book(run, version)
+    ids = np.sort(tables.positions["id"][tables.positions["kind"] == "comparison"])
+    if len(ids) == 0:
+        return {}
+    blocks = position_blocks(Order(run, Settings(), host.PluginSpec(), version), ids)["blocks"]
+    found = {label: lifted.residuals(block, tables.solution) for label, block in blocks.items()}
+    return {label: left for label, left in found.items() if left is not None}
+
+
+def judge_positions(order: Order, ids: IntArray, lift: Lift | None = None) -> judge.Judgement:
     """Every statistic at these positions (ascending ids)."""
-    return judge.judge(position_blocks(order, ids)["blocks"], host.load(order.plugins).statistics)
+    return judge.judge(position_blocks(order, ids, lift=lift)["blocks"], host.load(order.plugins).statistics)
 
 
 def judge_brightness(order: Order, ids: IntArray) -> judge.Judgement:
@@ -301,9 +327,9 @@ def judge_brightness(order: Order, ids: IntArray) -> judge.Judgement:
     return judge.judge(position_blocks(order, ids)["blocks"], ())
 
 
-def search_positions(order: Order, ids: IntArray) -> judge.Judgement:
+def search_positions(order: Order, ids: IntArray, lift: Lift | None = None) -> judge.Judgement:
     """Every period search at these positions (ascending ids)."""
-    found = position_blocks(order, ids)["blocks"]
+    found = position_blocks(order, ids, lift=lift)["blocks"]
     curves = [[block.curve(row) for block in found.values()] for row in range(len(ids))]
     return judge.search(curves, host.load(order.plugins).period_searches)
 

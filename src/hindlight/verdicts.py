@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hindlight import conclude, host, judge, outcome, plan, store, tasks
+from hindlight.bright import Bright, apart
 from hindlight.candidates import Described, Examined
 from hindlight.conclude import Field
 from hindlight.crew import Crew
@@ -75,13 +76,43 @@ def verdicts(
     for found in fields:
         found.judgement = judged[found.number]
         conclude.rank(found, session.plugins, session.order.settings)
+    fields, bright = _by_brightness(session, fields, columns)
+    everything = [*fields, *(targets.apart for targets in bright)]
     if session.plugins.period_searches:
-        gate = {found.number: conclude.gated(found, session.order.settings) for found in fields}
-        searched = _judged(session, fields, gate, tasks.search_positions, columns, "searching periods")
-        for found in fields:
+        gate = {found.number: conclude.gated(found, session.order.settings) for found in everything}
+        searched = _judged(session, everything, gate, tasks.search_positions, columns, "searching periods")
+        for found in everything:
             judge.spread(found.judgement, searched[found.number], found.rows(gate[found.number]), columns)
-            conclude.rank(found, session.plugins, session.order.settings)
-    return _tabled(session, frames, positions, rejects, fields, said)
+        _ranked(session, fields, bright)
+    return _tabled(session, frames, positions, rejects, everything, said)
+
+
+def _by_brightness(
+    session: Session, fields: Sequence[Field], columns: Mapping[str, Column]
+) -> tuple[list[Field], list[Bright]]:
+    """The fields without their bright targets, and these, ranked among controls made as bright as they are."""
+    settings = session.order.settings
+    left = tasks.residuals(session.order)
+    n_targets = sum(len(found.targets) for found in fields)
+    split = [apart(found, left, n_targets, settings) for found in fields]
+    made = [targets for _, some in split for targets in some]
+    if not made:
+        return list(fields), []
+    copies = {targets.number: targets.apart.controls for targets in made}
+    lifted = [targets.apart for targets in made]
+    judged = _judged(session, lifted, copies, tasks.judge_positions, columns, "judging controls as bright as targets")
+    for targets in made:
+        targets.judged(judged[targets.number], columns)
+    rest = [found for found, _ in split]
+    _ranked(session, rest, made)
+    return rest, made
+
+
+def _ranked(session: Session, fields: Sequence[Field], bright: Sequence[Bright]) -> None:
+    for found in fields:
+        conclude.rank(found, session.plugins, session.order.settings)
+    for targets in bright:
+        targets.ranked(session.plugins, session.order.settings)
 
 
 def _fields(frames: Columns, positions: Columns, chosen: Settings) -> list[Field]:
@@ -156,8 +187,8 @@ def _judged(
     """Each field's judgement of its wanted positions, made in groups of a fixed size."""
     size = session.order.settings.ranking.gather_curves
     groups = {found.number: _grouped(wanted[found.number], size) for found in fields}
-    jobs = [ids for found in fields for ids in groups[found.number]]
-    results = iter(_collected(session, stage, function, [(ids,) for ids in jobs], [len(ids) for ids in jobs]))
+    jobs = [(ids, found.lift) for found in fields for ids in groups[found.number]]
+    results = iter(_collected(session, stage, function, jobs, [len(ids) for ids, _ in jobs]))
     return {
         number: judge.joined([next(results) for _ in mine], [len(ids) for ids in mine], columns)
         for number, mine in groups.items()
@@ -193,7 +224,8 @@ def _tabled(
     """The result tables of a run, made from its ranked fields and written."""
     settings, plugins = session.order.settings, session.plugins
     places = _places(fields, positions)
-    p = conclude.p_values([place.found.ranked.ranks[place.index] for place in places], settings)
+    ranks = [place.found.ranked.ranks[place.index] for place in places]
+    p = conclude.p_values(ranks, [place.found.group_size for place in places], settings)
     with np.errstate(invalid="ignore"):
         beyond = p.q < settings.ranking.level
     examined = _examined(session, places, beyond)
@@ -239,7 +271,7 @@ def _examined(session: Session, places: Sequence[Place], beyond: NDArray[np.bool
     """Periods and checks of the targets beyond chance, by their place in the run."""
     chosen = [place for place in places if beyond[place.at]]
     jobs = [
-        (place.target, place.found.controls, {k: v.above_quiet for k, v in place.found.thresholds.items()})
+        (place.target, place.found.blank_sky, {k: v.above_quiet for k, v in place.found.thresholds.items()})
         for place in chosen
     ]
     results = _collected(session, "examining candidates", tasks.examine_target, jobs, [1] * len(jobs))
