@@ -1,0 +1,117 @@
+"""Controls made as bright as a target: what is added to them, and that steady bright sources are then no candidates."""
+
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+from hindlight import calibrate
+from hindlight.lifted import COPY, copies, lifted, originals, residuals
+from hindlight.lightcurve import Block, Channel, freeze
+from test_estimators import study
+
+CHANNEL = Channel(label="camera|R|I|3as|adu", unit="adu")
+
+
+def block(flux: np.ndarray, error: float, extra: float = 0.0) -> Block:
+    """Rows of positions over frames 10, 11, ...; errors hold a scatter of `extra` times the flux."""
+    total = np.hypot(error, extra * flux)
+    shape = flux.shape
+    return Block(
+        names=tuple(f"p{k}" for k in range(len(flux))), channel=CHANNEL, frame=10 + np.arange(shape[1]),
+        t_tdb_s=np.broadcast_to(np.arange(shape[1]) * 60.0, shape), exposure_s=np.ones(shape), flux=freeze(flux),
+        flux_err=freeze(total), raw_flux=freeze(2.0 * flux), raw_flux_err=np.full(shape, 2.0 * error),
+        flags=np.zeros(shape, np.int64), clock_error_s=np.full(shape[1], np.nan),
+    )  # fmt: skip
+
+
+def solution(n: int, extra: float) -> dict[str, np.ndarray]:
+    """Frames of gain 2 whose comparisons scatter by `extra` more than their errors."""
+    return {
+        "frame": 10 + np.arange(n), "gain": np.full(n, 2.0), "error_scale": np.ones(n),
+        "extra_scatter": np.full(n, extra), "verdict": np.full(n, "good", object),
+    }  # fmt: skip
+
+
+def comparisons(seed: int, extra: float, error: float, n: int = 30, frames: int = 200) -> Block:
+    """Sources of flux 1000 that calibration leaves `extra` of, as residuals of a fit to n sources are."""
+    rng = np.random.default_rng(seed)
+    own = rng.normal(0.0, extra, (n, frames))
+    own -= own.mean(axis=0)
+    return block(1000.0 * (1 + own) + rng.normal(0.0, error, (n, frames)), error, extra)
+
+
+@pytest.mark.parametrize("error", [1.0, 30.0, 60.0])
+def test_residuals_are_what_calibration_leaves(error: float) -> None:
+    """Their scatter is that of the calibration, 3 %, also where a comparison's own noise is as large or twice that."""
+    left = residuals(comparisons(1, 0.03, error), solution(200, 0.03))
+    assert left is not None
+    assert np.std(left.values) == pytest.approx(0.03, rel=0.04)
+    assert np.isfinite(left.values).all()
+
+
+def test_gaps_are_filled_and_variable_sources_left_out() -> None:
+    """From the next source that has one; a source that varies by half is none of them."""
+    given = comparisons(2, 0.03, 1.0)
+    flux = given.flux.copy()
+    flux[3, 40:60] = np.nan
+    flux[5] *= 1 + 0.5 * np.sin(np.arange(200))
+    left = residuals(block(flux, 1.0, 0.03), solution(200, 0.03))
+    assert left is not None
+    assert left.values.shape == (29, 200)
+    np.testing.assert_array_equal(left.values[3, 40:60], left.values[4, 40:60])
+
+
+def test_two_comparisons_tell_nothing() -> None:
+    """Nor do frames that are not tied to any."""
+    assert residuals(comparisons(3, 0.03, 1.0, n=2), solution(200, 0.03)) is None
+    raw = solution(200, 0.03) | {"verdict": np.full(200, "uncalibrated", object)}
+    assert residuals(comparisons(3, 0.03, 1.0), raw) is None
+
+
+def test_copies_are_blank_sky_and_a_steady_source() -> None:
+    """Flux and error gain the level with its residuals, raw fluxes by the gain; the same whoever is asked for together."""
+    rng = np.random.default_rng(4)
+    blank = block(rng.normal(0.0, 1.0, (5, 200)), 1.0)
+    left = residuals(comparisons(5, 0.03, 1.0), solution(200, 0.03))
+    base = np.array([2, 4, 7, 8, 9])
+    ids = np.concatenate([base, copies(base, 3)])
+    made = lifted(blank, base, ids, 100.0, left)
+    np.testing.assert_array_equal(made.flux[:5], blank.flux)
+    np.testing.assert_array_equal(made.flux_err[:5], blank.flux_err)
+    added = made.flux[5:] - np.tile(blank.flux, (3, 1))
+    assert added.mean() == pytest.approx(100.0, rel=0.01)
+    np.testing.assert_allclose(made.flux_err[5:], np.hypot(1.0, 0.03 * added))
+    np.testing.assert_allclose(made.raw_flux[5:], np.tile(blank.raw_flux, (3, 1)) + 2.0 * added)
+    for control in range(5):
+        assert len(np.unique(np.round(added[control::5], 6), axis=0)) == 3  # each copy with another comparison
+    some = np.array([7, 4 + COPY, 7 + 3 * COPY])
+    again = lifted(blank, base, some, 100.0, left)
+    np.testing.assert_array_equal(again.flux, made.flux[np.searchsorted(ids, some)])
+    assert originals(some).tolist() == [4, 7]
+    np.testing.assert_array_equal(lifted(blank, base, ids, 100.0, None).flux[5:10], blank.flux)
+
+
+def test_rank_among_groups_that_are_alike() -> None:
+    """Of 20 groups of ten equal controls the target is beyond all with chance 1/21, and never less by their number."""
+    rng = np.random.default_rng(6)
+    p = []
+    for _ in range(2000):
+        groups = np.repeat(rng.standard_normal((20, 1)), 10, axis=0)
+        p.append(calibrate.rank(calibrate.null_from(groups), rng.standard_normal(1), weight=10.0).p_value)
+    assert min(p) == pytest.approx(10 / 210)
+    assert np.mean(np.array(p) <= 10 / 210) == pytest.approx(1 / 21, abs=3 * (1 / 21 / 2000) ** 0.5)
+    with_one = calibrate.rank(calibrate.null_from(groups), np.array([9.0])).p_value
+    assert with_one == pytest.approx(1 / 201)
+
+
+def test_a_small_version_of_the_study(tmp_path: Path) -> None:
+    """Wild calibration errors: ranked among blank sky steady sources are candidates, among copies they are not."""
+    bright = study("bright")
+    snr = bright.simulated(tmp_path, 3, targets=60, frames=20, size=520, wild=True)
+    blank = bright.mined(tmp_path, "blank", snr, "bright_target_snr = 1e9\n")
+    lit = bright.mined(tmp_path, "lifted", snr, "")
+    assert blank.nulls == {"blank sky"}
+    assert len(lit.nulls) == 2 or lit.nulls == {"blank sky and the residu"}
+    assert not bright.holds([blank], say=False)
+    assert bright.holds([lit], say=False)
