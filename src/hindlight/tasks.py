@@ -20,6 +20,7 @@ from hindlight.background import MAD_TO_SIGMA
 from hindlight.candidates import ChannelView, Described, Examined, View, describe
 from hindlight.channels import channels_of
 from hindlight.comparisons import Located
+from hindlight.ensemble import FLUX_COLUMNS
 from hindlight.errors import HindlightError
 from hindlight.facts import visible
 from hindlight.fence import Fault, blank, call, checked, one_line
@@ -229,7 +230,7 @@ def locate_sources(order: Order, frame: int, ra: FloatArray, dec: FloatArray) ->
 class FrameEvidence:
     """What one batch of frames tells of its flux scale.
 
-    `comparisons` are columns frame, position, flux, flux_err of usable measurements; `frames` are columns frame, pull
+    `comparisons` are columns FLUX_COLUMNS of usable measurements; `frames` are columns frame, pull
     (MAD-sigma of flux over error at the controls), n_controls, shift_x, shift_y and fwhm, one row a frame.
     """
 
@@ -256,8 +257,7 @@ def frame_evidence(order: Order, batch: int) -> FrameEvidence:
         pull = rows["flux"][mine] / rows["flux_err"][mine]
         frames["pull"][at] = MAD_TO_SIGMA * np.median(np.abs(pull - np.median(pull)))
         frames["n_controls"][at] = len(mine)
-    names = ("frame", "position", "flux", "flux_err")
-    return FrameEvidence({name: rows[name][steady] for name in names}, frames)
+    return FrameEvidence({name: rows[name][steady] for name in FLUX_COLUMNS}, frames)
 
 
 def position_label(positions: Columns, row: int) -> str:
