@@ -123,8 +123,6 @@ def _bilinear_fit(flux: FloatArray, flux_err: FloatArray, known: NDArray[np.bool
     gain = np.nan_to_num(median_of(np.where(known, flux / brightness, np.nan), axis=1), nan=1.0)
     gain = np.where(gain > 0, gain, 1.0)
     part = _parts(known)
-    ones = np.ones(len(frame))
-    rows = np.arange(len(frame))
     for _ in range(ROUNDS):
         model = gain[frame] * brightness[source]
         relative = value / model - 1.0
@@ -133,14 +131,8 @@ def _bilinear_fit(flux: FloatArray, flux_err: FloatArray, known: NDArray[np.bool
         total = np.hypot(sigma, common)
         pull = relative / total
         weight = np.sqrt(np.minimum(1.0, HUBER / np.maximum(np.abs(pull), 1e-300))) / total
-        matrix = sparse.csr_matrix(
-            (
-                np.concatenate((weight * ones, weight * ones)),
-                (np.concatenate((rows, rows)), np.concatenate((frame, n_frames + source))),
-            ),
-            shape=(len(frame), n_frames + n_sources),
-        )
-        step = lsqr(matrix, weight * relative, atol=1e-12, btol=1e-12)[0]
+        matrix, size = losses.effects(weight, frame, source, (n_frames, n_sources))
+        step = lsqr(matrix, weight * relative, atol=1e-12, btol=1e-12)[0] / size
         step = np.clip(step, -0.5, 0.5)
         gain, brightness = gain * np.exp(step[:n_frames]), brightness * np.exp(step[n_frames:])
         if np.abs(step).max() < 1e-9:

@@ -22,7 +22,7 @@ from hindlight.lightcurve import FloatArray, IntArray
 
 HUBER = 1.345  # 95 % efficiency for normal errors (P. J. Huber 1981, Robust Statistics)
 ROUNDS = 8  # of undoing and fitting again, at most
-CLOSE = 0.03  # errors: a round that changes less is the last
+CLOSE = 0.1  # errors: a round that changes less is the last
 CHANCE = 5e-4  # of a loss where there is none, one-sided: that of 3.3 sigma
 EDGE_ERROR = 0.1  # k is not told where its error is more than this fraction of the flux at the furthest comparison
 NOISE_ERROR = 0.3  # b is not told where its error is larger: a loss of one rms would not stand out
@@ -211,13 +211,27 @@ def _estimate(data: _Data, gains: Scale, applied: FloatArray) -> _Estimate:
     return _Estimate(value, error, scatter, edge)
 
 
+def effects(
+    weight: FloatArray, frame: IntArray, source: IntArray, shape: tuple[int, int]
+) -> tuple[sparse.csr_matrix, FloatArray]:
+    """Weighted least squares of one effect per frame and one per source: the matrix, and by what to divide its solution.
+
+    Its columns have one size: `lsqr` needs a tenth of the steps. `shape` is (n_frames, n_sources).
+    """
+    rows = np.arange(len(frame))
+    column = np.concatenate((frame, shape[0] + source))
+    both = np.concatenate((weight, weight))
+    size = np.sqrt(np.bincount(column, both**2, minlength=sum(shape)))
+    size[size == 0] = 1.0
+    matrix = sparse.csr_matrix(
+        (both / size[column], (np.concatenate((rows, rows)), column)), shape=(len(rows), sum(shape))
+    )
+    return matrix, size
+
+
 def _free(values: FloatArray, weight: FloatArray, frame: IntArray, source: IntArray) -> FloatArray:
     """What is left of weighted values, shape (m, n), once each frame and each source has taken up what it can."""
-    rows, n_frames = np.arange(len(frame)), int(frame.max()) + 1
-    at = np.concatenate((rows, rows)), np.concatenate((frame, n_frames + source))
-    matrix = sparse.csr_matrix(
-        (np.concatenate((weight, weight)), at), shape=(len(rows), n_frames + int(source.max()) + 1)
-    )
+    matrix, _ = effects(weight, frame, source, (int(frame.max()) + 1, int(source.max()) + 1))
     return np.stack([some - matrix @ lsqr(matrix, some, atol=1e-12, btol=1e-12)[0] for some in values])
 
 

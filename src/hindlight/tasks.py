@@ -219,11 +219,12 @@ def locate_sources(order: Order, frame: int, ra: FloatArray, dec: FloatArray) ->
     tables = book(order.run, order.version)
     try:
         facts = frame_facts(tables.frames, tables.row_of_frame[frame])
-        found_ra, found_dec, snr, width = photometry.locate(facts, ra, dec, order.settings)
+        found_ra, found_dec, snr, width, flat = photometry.locate(facts, ra, dec, order.settings)
     except (SetAsideError, OSError, ValueError):
         found_ra = found_dec = snr = width = np.full(len(ra), np.nan)
+        flat = np.zeros(len(ra), bool)
     east = ((found_ra - ra + 180.0) % 360.0 - 180.0) * np.cos(np.radians(dec))
-    return Located(east, found_dec - dec, snr, width)
+    return Located(east, found_dec - dec, snr, width, flat)
 
 
 @dataclass(frozen=True, eq=False)
