@@ -199,16 +199,42 @@ def _estimate(data: _Data, gains: Scale, applied: FloatArray) -> _Estimate:
     loses = np.stack((-(degrees**2) / what_is_left(degrees, applied[0]), -error / model))
     residual = flux / model - 1.0
     total = np.hypot(error / model, gains.frame_scatter[frame])
-    weight = np.sqrt(np.minimum(1.0, HUBER / np.maximum(np.abs(residual / total), 1e-300))) / total
+    huber = np.minimum(1.0, HUBER / np.maximum(np.abs(residual / total), 1e-300))
+    weight = np.sqrt(huber) / total
     free = _free(np.concatenate((loses, residual[None])) * weight, weight, frame, source)
     edge = float(degrees.max())
-    free[2] += applied @ free[:2]  # as if nothing had been applied
-    value, error = _chosen(free[:2], free[2], np.linalg.norm(loses * weight, axis=1), edge, frame, source)
+    rest = free[2] + applied @ free[:2]  # as if nothing had been applied
+    hidden = float(huber.mean() / np.mean(huber == 1.0))
+    lines = _Lines(free[:2], rest, frame, source, _spread_kept(weight, frame, source), hidden)
+    value, error = _chosen(lines, np.linalg.norm(loses * weight, axis=1), edge)
     scatter = np.zeros(len(data.flux))
     if np.isfinite(error[0]):
         n = np.maximum(1, np.bincount(frame, minlength=len(scatter)))
         scatter = error[0] * np.sqrt(np.bincount(frame, (free[0] / weight) ** 2, minlength=len(scatter)) / n)
     return _Estimate(value, error, scatter, edge)
+
+
+@dataclass(frozen=True, eq=False)
+class _Lines:
+    """Weighted lines of the fit: what each loss takes (2, n), what it is to explain (n,), whose they are, (n,).
+
+    `spread_kept` is the part of the variance of each line that the effects of its frame and source leave, `hidden` by how
+    much too small an error is that comes from residuals with Huber's weights (P. J. Huber 1981, section 7.6, from memory).
+    """
+
+    loses: FloatArray
+    rest: FloatArray
+    frame: IntArray
+    source: IntArray
+    spread_kept: FloatArray
+    hidden: float
+
+
+def _spread_kept(weight: FloatArray, frame: IntArray, source: IntArray) -> FloatArray:
+    """1 - leverage: a line that decides on its frame's gain alone has no residual, whatever its error."""
+    square = weight**2
+    leverage = square / np.bincount(frame, square)[frame] + square / np.bincount(source, square)[source]
+    return np.asarray(np.maximum(0.1, 1.0 - leverage))
 
 
 def effects(
@@ -235,44 +261,45 @@ def _free(values: FloatArray, weight: FloatArray, frame: IntArray, source: IntAr
     return np.stack([some - matrix @ lsqr(matrix, some, atol=1e-12, btol=1e-12)[0] for some in values])
 
 
-def _chosen(
-    loses: FloatArray, rest: FloatArray, size: FloatArray, edge: float, frame: IntArray, source: IntArray
-) -> tuple[FloatArray, FloatArray]:
-    """k and b where they are significant, else 0, and the errors of those that can be told, else NaN."""
-    told = np.linalg.norm(loses, axis=1) > TRACE * size
+def _chosen(lines: _Lines, size: FloatArray, edge: float) -> tuple[FloatArray, FloatArray]:
+    """k and b where they are significant, else 0, and the errors of those that can be told, else NaN.
+
+    `size` is that of the losses' weighted columns before the effects had their part.
+    """
+    told = np.linalg.norm(lines.loses, axis=1) > TRACE * size
     largest = np.array((EDGE_ERROR / edge**2 if edge > 0 else 1.0, NOISE_ERROR))
-    value, error = _solved(loses, rest, told, frame, source)
+    value, error = _solved(lines, told)
     while (error[told] > largest[told]).any():
         told[np.nanargmax(error / largest)] = False
-        value, error = _solved(loses, rest, told, frame, source)
+        value, error = _solved(lines, told)
     told_error, kept = error, told.copy()
-    sigmas = -float(special.stdtrit(max(1, len(np.unique(source)) - 1), CHANCE))
+    sigmas = -float(special.stdtrit(max(1, len(np.unique(lines.source)) - 1), CHANCE))
     while (value[kept] <= sigmas * error[kept]).any():
         kept[np.nanargmin(value / error)] = False
-        value, error = _solved(loses, rest, kept, frame, source)
+        value, error = _solved(lines, kept)
     return value, np.where(kept, error, told_error)
 
 
-def _solved(
-    loses: FloatArray, rest: FloatArray, which: NDArray[np.bool_], frame: IntArray, source: IntArray
-) -> tuple[FloatArray, FloatArray]:
+def _solved(lines: _Lines, which: NDArray[np.bool_]) -> tuple[FloatArray, FloatArray]:
     """Least squares for some of the losses: values, 0 for the others, and errors, NaN for the others.
 
     Errors are those of the weights or, if larger, of the scatter from source to source or from frame to frame, since
-    what is wrong with one source is wrong in many frames (K.-Y. Liang & S. L. Zeger 1986, Biometrika 73, 13).
+    what is wrong with one source is wrong in many frames (K.-Y. Liang & S. L. Zeger 1986, Biometrika 73, 13). Either
+    comes from residuals, which are smaller than errors (`spread_kept`).
     """
     value, error = np.zeros(2), np.full(2, np.nan)
     if not which.any():
         return value, error
-    scale = np.linalg.norm(loses[which], axis=1)
-    some = loses[which] / scale[:, None]
+    scale = np.linalg.norm(lines.loses[which], axis=1)
+    some = lines.loses[which] / scale[:, None]
     inverse = np.linalg.pinv(some @ some.T, hermitian=True)
-    best = inverse @ (some @ rest)
-    score = some * (rest - best @ some)
+    best = inverse @ (some @ lines.rest)
+    score = some * (lines.rest - best @ some)
     variance = np.diag(inverse)
-    for group in (frame, source):
+    for group in (lines.frame, lines.source):
         n = len(np.unique(group))
         sums = np.stack([np.bincount(group, values) for values in score])
-        variance = np.maximum(variance, np.diag(inverse @ (sums @ sums.T) @ inverse) * n / max(1, n - 1))
-    value[which], error[which] = best / scale, np.sqrt(variance) / scale
+        spread = inverse @ (sums @ sums.T) @ inverse
+        variance = np.maximum(variance, np.diag(spread) * lines.hidden**2 * n / max(1, n - 1))
+    value[which], error[which] = best / scale, np.sqrt(variance / (some**2 @ lines.spread_kept)) / scale
     return value, error
