@@ -105,9 +105,7 @@ def columns(loss: Loss, centre: Columns) -> Columns:
     return {name: np.full(len(loss.scatter), value) for name, value in alike.items()} | centre
 
 
-def undone(
-    rows: Mapping[str, Any], sigma: FloatArray, solution: Mapping[str, Any]
-) -> tuple[FloatArray, FloatArray]:  # fmt: skip
+def undone(rows: Mapping[str, Any], sigma: FloatArray, solution: Mapping[str, Any]) -> tuple[FloatArray, FloatArray]:
     """Fluxes and errors without the losses, for raw rows of shape (n,) and what COLUMNS say of each one's frame.
 
     What a source lost to the noise is given back where it is seen: not below S/N 3, wholly from S/N 5.
