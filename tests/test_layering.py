@@ -16,7 +16,8 @@ ORDER = [
     "errors", "schema", "facts", "blocks", "settings", "dates", "lightcurve", "plugin", "hookspecs", "tables", "host",
     "fence", "clock", "systems", "celestial", "sky", "headers", "reading", "goodtime", "knowledge", "files",
     "companions", "channels", "outlines", "footprints", "archive", "summary", "positions", "apart", "pixels",
-    "background", "detection", "pointing", "growth", "photometry", "duplicates", "ensemble", "store", "judge", "calibrate",
+    "background", "detection", "pointing", "growth", "photometry", "duplicates", "losses", "ensemble", "store", "judge",
+    "calibrate",
     "ranking", "search", "timing", "candidates", "plan", "comparisons", "tasks", "conclude", "outcome", "crew", "record",
     "verdicts", "runner", "survey", "export", "demo", "testing", "cli", "__main__",
 ]  # fmt: skip

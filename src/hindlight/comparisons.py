@@ -25,6 +25,7 @@ FAINTER = 0.1  # a neighbour of so small a part of a source's S/N does not distu
 POINT_WIDTH = 1.3  # median width over the beam's up to which a source counts as a point
 SPARE = 2  # so many times more candidates are looked at than comparisons are wanted
 OFTEN = 0.5  # of the frames that are deep enough to show it, a steady source is found in at least this fraction
+FLAT = 0.1  # of the frames it is found in: one that has a flat top in more of them is saturated, whatever headers say
 SURE = 2.0  # a source of so many times the least S/N is expected to be found
 ROUNDS = 4
 
@@ -35,13 +36,14 @@ Columns = dict[str, Any]
 class Located:
     """Centroids of n candidates in one frame: ICRS offsets in degrees (along ra times cos dec, and dec), S/N, width.
 
-    Shape (n,), NaN where a source was not found or not covered.
+    Shape (n,), NaN where a source was not found or not covered; `flat` says whether its top is cut off.
     """
 
     east: FloatArray
     north: FloatArray
     snr: FloatArray
     width: FloatArray
+    flat: NDArray[np.bool_]
 
 
 def candidates(
@@ -79,7 +81,8 @@ def placed(
     """ICRS degrees of the comparisons among the candidates at (ra, dec), shape (n,), brightest first.
 
     A place is the median over the frames of the centroids less each frame's own shift, the mean shift of all frames
-    being zero. Left out are sources that are no points, and those found in too few of the frames deep enough for them.
+    being zero. Left out are sources that are no points, saturated ones, and those found in too few of the frames
+    deep enough for them.
     """
     if not found or len(ra) == 0:
         return ra[:0], dec[:0]
@@ -90,6 +93,7 @@ def placed(
     seen = np.isfinite(snr)
     good = (seen.sum(axis=0) >= 2) & np.isfinite(place_east) & np.isfinite(place_north)
     good &= median_of(width) <= POINT_WIDTH
+    good &= np.stack([f.flat for f in found]).sum(axis=0) <= FLAT * seen.sum(axis=0)
     good &= _steady(snr, seen)
     kept = np.flatnonzero(good)[: settings.wanted]
     return ra[kept] + place_east[kept] / np.cos(np.radians(dec[kept])), dec[kept] + place_north[kept]

@@ -10,6 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import partial
 from typing import Any
 
 import numpy as np
@@ -18,6 +19,7 @@ from scipy import optimize, sparse, special
 from scipy.sparse import csgraph
 from scipy.sparse.linalg import lsqr
 
+from hindlight import losses
 from hindlight.background import MAD_TO_SIGMA
 from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.settings import Comparisons
@@ -35,6 +37,7 @@ BAD_SCATTER = 0.5
 WORTH_SAYING = 0.01
 MEDIAN_ERROR = 1.253  # relative to that of the mean, for normal errors
 FEWEST_HELD = 5  # frames that tell how much light the estimator counts
+FLUX_COLUMNS = ("frame", "position", "x", "y", "flux", "flux_err")  # of comparisons
 IMAGE_COLUMNS = ("shift_x", "shift_y", "fwhm", "held")  # what measuring found of the image itself
 
 Columns = dict[str, Any]
@@ -123,8 +126,6 @@ def _bilinear_fit(flux: FloatArray, flux_err: FloatArray, known: NDArray[np.bool
     gain = np.nan_to_num(median_of(np.where(known, flux / brightness, np.nan), axis=1), nan=1.0)
     gain = np.where(gain > 0, gain, 1.0)
     part = _parts(known)
-    ones = np.ones(len(frame))
-    rows = np.arange(len(frame))
     for _ in range(ROUNDS):
         model = gain[frame] * brightness[source]
         relative = value / model - 1.0
@@ -133,14 +134,8 @@ def _bilinear_fit(flux: FloatArray, flux_err: FloatArray, known: NDArray[np.bool
         total = np.hypot(sigma, common)
         pull = relative / total
         weight = np.sqrt(np.minimum(1.0, HUBER / np.maximum(np.abs(pull), 1e-300))) / total
-        matrix = sparse.csr_matrix(
-            (
-                np.concatenate((weight * ones, weight * ones)),
-                (np.concatenate((rows, rows)), np.concatenate((frame, n_frames + source))),
-            ),
-            shape=(len(frame), n_frames + n_sources),
-        )
-        step = lsqr(matrix, weight * relative, atol=1e-12, btol=1e-12)[0]
+        matrix, size = losses.effects(weight, frame, source, (n_frames, n_sources))
+        step = lsqr(matrix, weight * relative, atol=1e-12, btol=1e-12)[0] / size
         step = np.clip(step, -0.5, 0.5)
         gain, brightness = gain * np.exp(step[:n_frames]), brightness * np.exp(step[n_frames:])
         if np.abs(step).max() < 1e-9:
@@ -250,17 +245,19 @@ def error_scales(pulls: FloatArray, n_controls: IntArray) -> FloatArray:
 
 def solved(
     frames: IntArray, channels: NDArray[np.object_], evidence: Sequence[Columns], fluxes: Sequence[Columns],
-    settings: Comparisons,
+    settings: Comparisons, images: Columns,
 ) -> tuple[Columns, tuple[str, ...]]:  # fmt: skip
-    """The solution for frames of shape (n,) in order of frame, and a sentence on each channel's flux scale.
+    """The solution for frames of shape (n,) in order of frame, and sentences on each channel's flux scale.
 
-    `evidence` and `fluxes` are those of `tasks.FrameEvidence`, batch by batch.
+    `evidence` and `fluxes` are those of `tasks.FrameEvidence`, batch by batch; `images` are the frames' columns width,
+    height and pixel_scale.
     """
+    centres = losses.centres(images)
     known = {
         name: np.concatenate([part[name] for part in evidence])
         for name in ("frame", "pull", "n_controls", *IMAGE_COLUMNS)
     }
-    rows = {name: np.concatenate([part[name] for part in fluxes]) for name in ("frame", "position", "flux", "flux_err")}
+    rows = {name: np.concatenate([part[name] for part in fluxes]) for name in FLUX_COLUMNS}
     at = {int(frame): i for i, frame in enumerate(known["frame"])}
     parts, said = [], []
     for label in sorted(set(channels.tolist())):
@@ -268,25 +265,30 @@ def solved(
         index = np.array([at.get(int(frame), -1) for frame in mine])
         own = {name: np.append(values, np.nan)[index] for name, values in known.items()}  # NaN for a frame not there
         scale = error_scales(own["pull"], np.nan_to_num(own["n_controls"]).astype(np.int64))
-        flux, flux_err = _matrix(rows, mine)
+        centre = {name: values[channels == label] for name, values in centres.items()}
+        x, y, flux, flux_err = _matrices(rows, mine)
         # Scatter beyond the errors is a fraction of the flux: what blank sky shows as well must not count as that.
-        gains = solve_gains(flux, flux_err * scale[:, None], settings.fewest)
+        degrees = losses.distance(x, y, {name: values[:, None] for name, values in centre.items()})
+        solve = partial(solve_gains, fewest=settings.fewest)
+        gains, loss = losses.fitted(flux, flux_err * scale[:, None], degrees, solve)
         part = solution(mine, label, gains, scale, {name: own[name] for name in IMAGE_COLUMNS}, settings)
-        parts.append(part)
-        said += _said(label, part, gains)
+        part["extra_scatter"] = np.hypot(part["extra_scatter"], loss.scatter)
+        parts.append(part | losses.columns(loss, centre))
+        said += [*_said(label, part, gains), *loss.said(label)]
     joined = {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}
     order = np.argsort(joined["frame"], kind="stable")
     return {name: values[order] for name, values in joined.items()}, tuple(said)
 
 
-def _matrix(rows: Columns, frames: IntArray) -> tuple[FloatArray, FloatArray]:
-    """Fluxes and errors of the comparisons in some frames (ascending), shape (n_frames, n_sources), NaN for none."""
+def _matrices(rows: Columns, frames: IntArray) -> tuple[FloatArray, ...]:
+    """x, y, flux and error of the comparisons in some frames (ascending), shape (n_frames, n_sources), NaN for none."""
     mine = np.isin(rows["frame"], frames)
     sources, column = np.unique(rows["position"][mine], return_inverse=True)
     row = np.searchsorted(frames, rows["frame"][mine])
-    flux, error = np.full((2, len(frames), len(sources)), np.nan)
-    flux[row, column], error[row, column] = rows["flux"][mine], rows["flux_err"][mine]
-    return flux, error
+    found = np.full((4, len(frames), len(sources)), np.nan)
+    for matrix, name in zip(found, FLUX_COLUMNS[2:], strict=True):
+        matrix[row, column] = rows[name][mine]
+    return tuple(found)
 
 
 def _said(label: str, part: Columns, gains: Gains) -> list[str]:
@@ -363,9 +365,11 @@ def _held(told: FloatArray) -> float:
 def calibrated(rows: Columns, solution: Columns) -> tuple[FloatArray, FloatArray, NDArray[np.bool_]]:
     """Calibrated flux and error, and whether the frame is bad, for raw rows of shape (n,).
 
-    flux / gain and hypot(flux_err * error_scale, extra_scatter * flux) / gain; `solution` is sorted by frame.
+    flux / gain and hypot(flux_err * error_scale, extra_scatter * flux) / gain, where what sources lose is given back to
+    flux and error first (`losses.undone`); `solution` is sorted by frame.
     """
     at = np.searchsorted(solution["frame"], rows["frame"])
-    gain, flux = solution["gain"][at], rows["flux"]
-    error = np.hypot(rows["flux_err"] * solution["error_scale"][at], solution["extra_scatter"][at] * flux)
+    own = {name: solution[name][at] for name in losses.COLUMNS}
+    flux, sigma = losses.undone(rows, rows["flux_err"] * solution["error_scale"][at], own)
+    gain, error = solution["gain"][at], np.hypot(sigma, solution["extra_scatter"][at] * flux)
     return flux / gain, error / gain, np.asarray(solution["verdict"][at] == "bad")

@@ -287,10 +287,11 @@ def _held(
 
 def locate(
     frame: FrameToMeasure, ra: FloatArray, dec: FloatArray, settings: Settings
-) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
-    """Where sources near ICRS positions (degrees, shape (n,)) are in a frame: ICRS degrees, S/N and width over the beam's.
+) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray, NDArray[np.bool_]]:
+    """Where sources near ICRS positions (degrees, shape (n,)) are in a frame: ICRS degrees, S/N, width over the beam's,
 
-    NaN for a source that does not stand out, is saturated or not on the image. Raises as `measure_frame` does.
+    and whether its top is flat. NaN for a source that does not stand out, is saturated or not on the image. Raises as
+    `measure_frame` does.
     """
     opened = _with_own_width(frame, open_frame(frame, settings).unpacked_once(), ra, dec)
     index, x, y, found = _centroids(frame, opened, ra, dec)
@@ -299,7 +300,9 @@ def locate(
     there[2, index], there[3, index] = found.snr, found.width
     there[:, index[found.highest >= frame.saturation]] = np.nan
     there[:2, ~np.isfinite(there[2])] = np.nan
-    return there[0], there[1], there[2], there[3]
+    flat = np.zeros(len(ra), bool)
+    flat[index] = found.flat & np.isfinite(there[2, index])
+    return there[0], there[1], there[2], there[3], flat
 
 
 def _gain(

@@ -358,7 +358,7 @@ def _solved(session: Session, frames: Columns, positions: Columns) -> tuple[str,
     session.crew.run(tasks.frame_evidence, [(session.order, int(batch)) for batch in batches], done)
     chosen = session.order.settings.comparisons
     solved, said = ensemble.solved(
-        frames["id"], frames["channel"], [f.frames for f in found], [f.comparisons for f in found], chosen
+        frames["id"], frames["channel"], [f.frames for f in found], [f.comparisons for f in found], chosen, frames
     )
     session.run.write_columns("frame_solution.parquet", FRAME_SOLUTION, solved)
     return said

@@ -239,6 +239,13 @@ FRAME_SOLUTION = (
     TableColumn("error_scale", "factor on the error"),
     TableColumn("extra_scatter", "further scatter, as a fraction of the flux"),
     TableColumn("n_comparisons", "comparison sources used", dtype="int64"),
+    TableColumn("loss_off_axis", "fraction of the flux lost for each square degree from the centre", unit="deg**-2"),
+    TableColumn("loss_off_axis_err", "its 1-sigma error, NaN where the comparisons cannot tell", unit="deg**-2"),
+    TableColumn("loss_noise", "flux lost by sources that are seen, in units of their noise, as by CLEAN"),
+    TableColumn("loss_noise_err", "its 1-sigma error, NaN where the comparisons cannot tell"),
+    TableColumn("centre_x", "middle of the image, from which distances are counted", unit="pixel"),
+    TableColumn("centre_y", "middle of the image, from which distances are counted", unit="pixel"),
+    TableColumn("pixel_deg", "side of a pixel", unit="deg", ucd="instr.scale"),
     TableColumn("verdict", "uncalibrated, good or bad", dtype="str"),
 )
 

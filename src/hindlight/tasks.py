@@ -20,6 +20,7 @@ from hindlight.background import MAD_TO_SIGMA
 from hindlight.candidates import ChannelView, Described, Examined, View, describe
 from hindlight.channels import channels_of
 from hindlight.comparisons import Located
+from hindlight.ensemble import FLUX_COLUMNS
 from hindlight.errors import HindlightError
 from hindlight.facts import visible
 from hindlight.fence import Fault, blank, call, checked, one_line
@@ -218,19 +219,20 @@ def locate_sources(order: Order, frame: int, ra: FloatArray, dec: FloatArray) ->
     tables = book(order.run, order.version)
     try:
         facts = frame_facts(tables.frames, tables.row_of_frame[frame])
-        found_ra, found_dec, snr, width = photometry.locate(facts, ra, dec, order.settings)
+        found_ra, found_dec, snr, width, flat = photometry.locate(facts, ra, dec, order.settings)
     except (SetAsideError, OSError, ValueError):
         found_ra = found_dec = snr = width = np.full(len(ra), np.nan)
+        flat = np.zeros(len(ra), bool)
     east = ((found_ra - ra + 180.0) % 360.0 - 180.0) * np.cos(np.radians(dec))
-    return Located(east, found_dec - dec, snr, width)
+    return Located(east, found_dec - dec, snr, width, flat)
 
 
 @dataclass(frozen=True, eq=False)
 class FrameEvidence:
     """What one batch of frames tells of its flux scale.
 
-    `comparisons` are columns frame, position, flux, flux_err of usable measurements; `frames` are columns frame, pull
-    (MAD-sigma of flux over error at the controls), n_controls, and ensemble.IMAGE_COLUMNS, one row a frame.
+    `comparisons` are columns ensemble.FLUX_COLUMNS of usable measurements; `frames` are columns frame, pull (MAD-sigma of
+    flux over error at the controls), n_controls, and ensemble.IMAGE_COLUMNS, one row a frame.
     """
 
     comparisons: Columns
@@ -256,8 +258,7 @@ def frame_evidence(order: Order, batch: int) -> FrameEvidence:
         pull = rows["flux"][mine] / rows["flux_err"][mine]
         frames["pull"][at] = MAD_TO_SIGMA * np.median(np.abs(pull - np.median(pull)))
         frames["n_controls"][at] = len(mine)
-    names = ("frame", "position", "flux", "flux_err")
-    return FrameEvidence({name: rows[name][steady] for name in names}, frames)
+    return FrameEvidence({name: rows[name][steady] for name in FLUX_COLUMNS}, frames)
 
 
 def position_label(positions: Columns, row: int) -> str:
