@@ -6,7 +6,8 @@ import numpy as np
 import pytest
 from scipy import optimize
 
-from hindlight.ensemble import IMAGE_COLUMNS, calibrated, error_scales, excess_scatter, solution, solve_gains, solved
+from hindlight.ensemble import IMAGE_COLUMNS, calibrated, error_scales, solution, solve_gains, solved
+from hindlight.robust import excess_scatter
 from hindlight.settings import Comparisons
 
 

@@ -13,11 +13,11 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from hindlight.ensemble import median_of
 from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.plan import BrightSources
 from hindlight.pointing import LEAST_SNR
 from hindlight.positions import BlankSky
+from hindlight.robust import median_of
 from hindlight.settings import Comparisons
 from hindlight.systems import unit_vectors
 

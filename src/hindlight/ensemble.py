@@ -14,22 +14,27 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import optimize, sparse, special
-from scipy.sparse import csgraph
+from scipy import sparse
 from scipy.sparse.linalg import lsqr
 
 from hindlight.background import MAD_TO_SIGMA
 from hindlight.lightcurve import FloatArray, IntArray
+from hindlight.robust import (
+    HUBER,
+    column_scatter,
+    connected,
+    excess_scatter,
+    frame_scatter,
+    median_of,
+    most_variable,
+)
 from hindlight.settings import Comparisons
 
-HUBER = 1.345  # 95 % efficiency for normal errors (P. J. Huber 1981, Robust Statistics)
 ROUNDS = 12  # of reweighting and linearising
 FEWEST_SNR = 3.0  # a comparison whose typical S/N in a channel is lower tells nothing of gains there
 MAD_ERROR = 1.167  # relative error of a MAD's sigma, times sqrt(n)
 SIGNIFICANT = 3.3  # sigma: one frame in a thousand by chance
 FEWEST_CONTROLS = 30
-VARIABLE_P = 1e-6
-VARIABLE_FACTOR = 3.0  # a comparison that scatters so many times more than the typical one is no comparison
 BAD_P = 1e-6
 BAD_SCATTER = 0.5
 IMAGE_COLUMNS = ("shift_x", "shift_y", "fwhm")  # what measuring found of the image itself
@@ -78,13 +83,13 @@ def solve_gains(flux: FloatArray, flux_err: FloatArray, fewest: int = 3) -> Gain
         gain, brightness = _bilinear_fit(flux, flux_err, known)
         relative, error = _relative(flux, flux_err, known, gain, brightness)
         common = excess_scatter(relative[known], error[known])
-        scatter = np.array([_column_scatter(relative[:, s], error[:, s], known[:, s]) for s in range(n_sources)])
-        worst = _worst(relative, error, known, scatter, common)
+        scatter = np.array([column_scatter(relative[:, s], error[:, s], known[:, s]) for s in range(n_sources)])
+        worst = most_variable(relative, error, known, scatter, common)
         if worst is None:
             break
         known = known.copy()
         known[:, worst] = False
-    frame_scatter = np.array([_frame_scatter(relative[e], error[e], known[e], common) for e in range(n_frames)])
+    of_frame = np.array([frame_scatter(relative[e], error[e], known[e], common) for e in range(n_frames)])
     weight = np.where(known, 1.0 / (error**2 + common**2), 0.0).sum(axis=1)
     n_used = known.sum(axis=1)
     enough = n_used >= fewest
@@ -94,20 +99,13 @@ def solve_gains(flux: FloatArray, flux_err: FloatArray, fewest: int = 3) -> Gain
     return Gains(
         gain=np.where(enough, gain, np.nan),
         gain_err=gain_err,
-        frame_scatter=np.where(enough, frame_scatter, np.nan),
+        frame_scatter=np.where(enough, of_frame, np.nan),
         n_comparisons=np.where(enough, n_used, 0).astype(np.int64),
         brightness=np.where(known.any(axis=0), brightness, np.nan),
         scatter=np.where(known.any(axis=0), scatter, np.nan),
         common_scatter=common,
         spread=float(MAD_TO_SIGMA * np.median(np.abs(logs - np.median(logs)))),
     )
-
-
-def median_of(values: FloatArray, axis: int = 0) -> FloatArray:
-    """The median of what is not NaN, NaN where all is."""
-    some = np.isfinite(values).any(axis=axis)
-    filled = np.where(np.expand_dims(some, axis), values, 0.0)
-    return np.where(some, np.nanmedian(filled, axis=axis), np.nan)
 
 
 def _bilinear_fit(flux: FloatArray, flux_err: FloatArray, known: NDArray[np.bool_]) -> tuple[FloatArray, FloatArray]:
@@ -119,7 +117,7 @@ def _bilinear_fit(flux: FloatArray, flux_err: FloatArray, known: NDArray[np.bool
     brightness = np.where(brightness > 0, brightness, 1.0)
     gain = np.nan_to_num(median_of(np.where(known, flux / brightness, np.nan), axis=1), nan=1.0)
     gain = np.where(gain > 0, gain, 1.0)
-    part = _parts(known)
+    part = connected(known)
     ones = np.ones(len(frame))
     rows = np.arange(len(frame))
     for _ in range(ROUNDS):
@@ -151,73 +149,12 @@ def _bilinear_fit(flux: FloatArray, flux_err: FloatArray, known: NDArray[np.bool
     return gain, brightness
 
 
-def _parts(known: NDArray[np.bool_]) -> IntArray:
-    """The connected part of each frame, then of each source."""
-    graph = sparse.bmat([[None, sparse.csr_matrix(known)], [sparse.csr_matrix(known.T), None]])
-    labels: IntArray = csgraph.connected_components(graph, directed=False)[1]
-    return labels
-
-
 def _relative(
     flux: FloatArray, flux_err: FloatArray, known: NDArray[np.bool_], gain: FloatArray, brightness: FloatArray
 ) -> tuple[FloatArray, FloatArray]:
     """Residual and error as fractions of the model, shape (n_frames, n_sources), NaN where unknown."""
     model = np.where(known, gain[:, None] * brightness, np.nan)
     return flux / model - 1.0, flux_err / model
-
-
-def excess_scatter(residual: FloatArray, error: FloatArray) -> float:
-    """Scatter s >= 0 beyond the errors by maximum likelihood, for residuals about a known mean; NaN without any.
-
-    Outliers beyond four times the typical pull are left aside. s maximises -sum(r^2 / (e^2 + s^2) + ln(e^2 + s^2)) / 2.
-    """
-    if len(residual) == 0:
-        return float("nan")
-    pull = np.abs(residual) / error
-    kept = pull <= 4.0 * max(1.0, MAD_TO_SIGMA * float(np.median(pull)))
-    square, variance = residual[kept] ** 2, error[kept] ** 2
-
-    def score(s2: float) -> float:
-        total = variance + s2
-        return float((square / total**2 - 1.0 / total).sum())
-
-    if score(0.0) <= 0.0:
-        return 0.0
-    high: float = float(square.max())
-    if score(high) >= 0.0:
-        return float(high**0.5)
-    best = float(optimize.brentq(score, 0.0, high, xtol=1e-12, rtol=1e-9))
-    return float(best**0.5)
-
-
-def _column_scatter(residual: FloatArray, error: FloatArray, known: NDArray[np.bool_]) -> float:
-    return excess_scatter(residual[known], error[known]) if known.sum() >= 3 else float("nan")
-
-
-def _worst(
-    residual: FloatArray, error: FloatArray, known: NDArray[np.bool_], scatter: FloatArray, common: float
-) -> int | None:
-    """The source that scatters most, if that is far more than the typical one does and no chance; None otherwise."""
-    if known.any(axis=0).sum() <= 3 or not np.isfinite(scatter).any():
-        return None
-    ratio = np.nan_to_num(scatter, nan=-1.0)
-    at = int(ratio.argmax())
-    typical = max(float(np.nanmedian(scatter)), 1e-3)
-    mine = known[:, at]
-    chi2 = float((residual[mine, at] ** 2 / (error[mine, at] ** 2 + common**2)).sum())
-    chance = float(special.chdtrc(int(mine.sum()) - 1, chi2))
-    return at if scatter[at] > VARIABLE_FACTOR * typical and chance < VARIABLE_P else None
-
-
-def _frame_scatter(residual: FloatArray, error: FloatArray, known: NDArray[np.bool_], common: float) -> float:
-    """A frame's own scatter where it is significantly larger than the channel's, else the channel's."""
-    n = int(known.sum())
-    if n < 5:
-        return common
-    chi2 = float((residual[known] ** 2 / (error[known] ** 2 + common**2)).sum())
-    if special.chdtrc(n - 1, chi2) > 1e-3:
-        return common
-    return max(common, excess_scatter(residual[known], error[known]))
 
 
 def error_scales(pulls: FloatArray, n_controls: IntArray) -> FloatArray:
