@@ -336,7 +336,7 @@ def _fit_curve(fit: _Fit, row: int, basis: FloatArray, mine: Known, share: Float
 
 def _fit_brightness(fit: _Fit) -> None:
     """Brightness of the sources whose flux is not given, from the curves as they are."""
-    solved = np.isfinite(fit.coefficients).all(axis=1)
+    solved = np.asarray(np.isfinite(fit.coefficients).all(axis=1))
     known = fit.known & solved[:, None]
     free = known.any(axis=0) & ~fit.fixed
     if not free.any():
@@ -367,7 +367,7 @@ def _straightened(fit: _Fit, fewest: int) -> FloatArray:
 
     A measured flux tells a brightness only up to such a change, which is the same for all plates.
     """
-    solved = fit.used(fewest).any(axis=1)
+    solved = np.asarray(fit.used(fewest).any(axis=1))
     middle = np.median(fit.coefficients[solved], axis=0)
     x = fit.spline.basis(np.nan_to_num(fit.x, nan=fit.spline.low)) @ middle
     return np.where(np.isfinite(fit.x), x, np.nan)

@@ -81,15 +81,16 @@ def book(run: str, version: str) -> Book:
 def frame_facts(frames: Columns, row: int) -> photometry.FrameToMeasure:
     """What photometry needs to know of a frame, from its row in the frame table."""
     value = {name: values[row] for name, values in frames.items()}
+    sign = -1.0 if value["negative"] else 1.0
     named = {kind: value[f"{kind}_file"] for kind in COMPANION_KINDS if value[f"{kind}_file"]}
     companions = {kind: str(Path(value["archive"]) / path) for kind, path in named.items()}
     return photometry.FrameToMeasure(
         path=local_path(str(value["archive"]), str(value["path"])), hdu=int(value["hdu"]), plane=int(value["plane"]),
         mjd=float(value["middle_mjd_tdb"]), beam_major=float(value["beam_major"]),
         beam_minor=float(value["beam_minor"]), beam_angle=float(value["beam_angle"]), unit=str(value["unit"]),
-        electrons_per_unit=float(value["electrons_per_unit"]), saturation=float(value["saturation"]),
+        electrons_per_unit=float(value["electrons_per_unit"]), saturation=sign * float(value["saturation"]),
         primary_beam=str(value["primary_beam"]), primary_beam_fwhm_deg=float(value["primary_beam_fwhm_deg"]),
-        companions=companions,
+        negative=bool(value["negative"]), companions=companions,
     )  # fmt: skip
 
 
@@ -438,7 +439,10 @@ def _cutout(order: Order, rows: Columns, frame: int, half_width: float) -> Cutou
         )
     except (SetAsideError, OSError, ValueError, HindlightError):
         return None
+    fwhm = float(rows["fwhm"][at])  # that of the comparisons where the header gives none
+    known = float(tables.frames["beam_major"][row]) > 0 or fwhm != order.settings.photometry.assumed_fwhm_pixels
     return Cutout(
         frame=frame, channel=str(tables.frames["channel"][row]), pixels=made.pixels, x=made.x, y=made.y,
-        to_sky=made.to_sky, fwhm=made.fwhm, background=float(rows["background"][at]), rms=float(rows["rms"][at]),
+        to_sky=made.to_sky, fwhm=fwhm, background=float(rows["background"][at]), rms=float(rows["rms"][at]),
+        fwhm_known=known,
     )  # fmt: skip
