@@ -8,7 +8,7 @@ read again. Nothing here reads files.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -19,6 +19,7 @@ from scipy.sparse.linalg import lsqr
 
 from hindlight.background import MAD_TO_SIGMA
 from hindlight.lightcurve import FloatArray, IntArray
+from hindlight.response import Responses, curve_from, faintest_seen, solve_responses
 from hindlight.robust import (
     HUBER,
     column_scatter,
@@ -28,6 +29,7 @@ from hindlight.robust import (
     median_of,
     most_variable,
 )
+from hindlight.schema import Flag
 from hindlight.settings import Comparisons
 
 ROUNDS = 12  # of reweighting and linearising
@@ -184,11 +186,12 @@ def error_scales(pulls: FloatArray, n_controls: IntArray) -> FloatArray:
 
 def solved(
     frames: IntArray, channels: NDArray[np.object_], evidence: Sequence[Columns], fluxes: Sequence[Columns],
-    settings: Comparisons,
+    settings: Comparisons, photographic: NDArray[np.bool_] | None = None, given: Mapping[int, float] | None = None,
 ) -> tuple[Columns, tuple[str, ...]]:  # fmt: skip
     """The solution for frames of shape (n,) in order of frame, and a sentence on each channel's flux scale.
 
-    `evidence` and `fluxes` are those of `tasks.FrameEvidence`, batch by batch.
+    `evidence` and `fluxes` are those of `tasks.FrameEvidence`, batch by batch. `photographic` says which frames are
+    (none where it is left out), `given` are known fluxes of comparisons by position.
     """
     known = {
         name: np.concatenate([part[name] for part in evidence])
@@ -202,10 +205,18 @@ def solved(
         index = np.array([at.get(int(frame), -1) for frame in mine])
         own = {name: np.append(values, np.nan)[index] for name, values in known.items()}  # NaN for a frame not there
         scale = error_scales(own["pull"], np.nan_to_num(own["n_controls"]).astype(np.int64))
-        flux, flux_err = _matrix(rows, mine)
+        flux, flux_err, sources = _matrix(rows, mine)
+        image = {name: own[name] for name in IMAGE_COLUMNS}
+        if photographic is not None and photographic[channels == label].all():
+            known_flux = np.array([(given or {}).get(int(source), np.nan) for source in sources])
+            found = solve_responses(flux, flux_err * scale[:, None], known_flux, settings.fewest_for_curve)
+            limit = faintest_seen(flux, flux_err * scale[:, None], found.brightness)
+            parts.append(_of_plates(mine, label, found, limit, scale, image))
+            said += [*_said_of_errors(label, scale), *_said_of_plates(label, parts[-1], found, settings)]
+            continue
         # Scatter beyond the errors is a fraction of the flux: what blank sky shows as well must not count as that.
         gains = solve_gains(flux, flux_err * scale[:, None], settings.fewest)
-        part = solution(mine, label, gains, scale, {name: own[name] for name in IMAGE_COLUMNS}, settings)
+        part = solution(mine, label, gains, scale, image, settings)
         parts.append(part)
         said += _said(label, part, gains)
     joined = {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}
@@ -213,25 +224,24 @@ def solved(
     return {name: values[order] for name, values in joined.items()}, tuple(said)
 
 
-def _matrix(rows: Columns, frames: IntArray) -> tuple[FloatArray, FloatArray]:
-    """Fluxes and errors of the comparisons in some frames (ascending), shape (n_frames, n_sources), NaN for none."""
+def _matrix(rows: Columns, frames: IntArray) -> tuple[FloatArray, FloatArray, IntArray]:
+    """Fluxes and errors of the comparisons in some frames (ascending), shape (n_frames, n_sources), NaN for none, and
+
+    which positions they are, shape (n_sources,).
+    """
     mine = np.isin(rows["frame"], frames)
     sources, column = np.unique(rows["position"][mine], return_inverse=True)
     row = np.searchsorted(frames, rows["frame"][mine])
     flux, error = np.full((2, len(frames), len(sources)), np.nan)
     flux[row, column], error[row, column] = rows["flux"][mine], rows["flux_err"][mine]
-    return flux, error
+    return flux, error, sources
 
 
 def _said(label: str, part: Columns, gains: Gains) -> list[str]:
     """What the last lines of a run say of a channel's flux scale."""
     n, tied = len(part["frame"]), int((part["verdict"] != "uncalibrated").sum())
     bad = int((part["verdict"] == "bad").sum())
-    scaled = part["error_scale"] != 1.0
-    scales = [
-        f"errors of {label} were scaled to the scatter of blank sky in {int(scaled.sum())} of {n} frames, by "
-        f"{part['error_scale'][scaled].min():.2f} to {part['error_scale'][scaled].max():.2f}"
-    ] if scaled.any() else []  # fmt: skip
+    scales = _said_of_errors(label, part["error_scale"])
     if not tied:
         return [
             *scales,
@@ -246,6 +256,61 @@ def _said(label: str, part: Columns, gains: Gains) -> list[str]:
     )
     said += " their errors"
     return [*scales, said + (f"; {bad} frames scatter so much that they are not used" if bad else "")]
+
+
+def _said_of_errors(label: str, scale: FloatArray) -> list[str]:
+    scaled = scale[scale != 1.0]
+    if len(scaled) == 0:
+        return []
+    return [
+        f"errors of {label} were scaled to the scatter of blank sky in {len(scaled)} of {len(scale)} frames, by "
+        f"{scaled.min():.2f} to {scaled.max():.2f}"
+    ]
+
+
+def _said_of_plates(label: str, part: Columns, found: Responses, settings: Comparisons) -> list[str]:
+    """What the last lines of a run say of a photographic channel."""
+    n, curved = len(part["frame"]), np.array([curve is not None for curve in found.curves])
+    lines = []
+    if curved.any():
+        scale = "fluxes of the table of comparisons" if found.by_table[curved].all() else "the plates' median curve"
+        if found.by_table.any() and not found.by_table[curved].all():
+            scale = "fluxes of the table of comparisons where plates show enough of these, elsewhere the median curve"
+        lines.append(
+            f"the flux scale of {label}: {int(curved.sum())} of {n} plates have a response curve from up to "
+            f"{int(found.n_comparisons.max())} comparisons, which scatter by "
+            f"{100 * float(np.median(found.scatter[curved])):.1f} % more than their errors; it is that of {scale}"
+        )
+        bad = int((part["verdict"] == "bad").sum())
+        lines += [f"{bad} plates of {label} scatter so much that they are not used"] if bad else []
+    if not curved.all():
+        lines.append(
+            f"{int((~curved).sum())} of {n} plates of {label} have fewer than {settings.fewest_for_curve} comparisons that "
+            "other plates or the table know: they tell only whether a source is seen, and no statistic uses them"
+        )
+    return lines
+
+
+def _of_plates(
+    frames: IntArray, channel: str, found: Responses, limit: FloatArray, scale: FloatArray, image: Columns
+) -> Columns:
+    """Rows of `schema.FRAME_SOLUTION` for photographic frames, shape (n,)."""
+    curved = np.array([curve is not None for curve in found.curves], bool)
+    with np.errstate(invalid="ignore"):
+        bad = curved & (found.scatter > BAD_SCATTER)
+    return {
+        "frame": frames,
+        "channel": np.full(len(frames), channel, object),
+        "gain": np.where(curved, 1.0, np.nan),
+        "gain_err": np.full(len(frames), np.nan),
+        **image,
+        "error_scale": scale,
+        "extra_scatter": found.scatter,
+        "n_comparisons": found.n_comparisons,
+        "verdict": np.where(bad, "bad", np.where(curved, "good", "seen_only")).astype(object),
+        "curve": np.array(["" if curve is None else curve.text for curve in found.curves], object),
+        "seen_limit": limit,
+    }
 
 
 def solution(
@@ -272,15 +337,43 @@ def solution(
         "extra_scatter": np.where(tied, own, unknown),
         "n_comparisons": gains.n_comparisons,
         "verdict": verdict,
+        "curve": np.full(len(frames), "", object),
+        "seen_limit": np.full(len(frames), np.nan),
     }
 
 
 def calibrated(rows: Columns, solution: Columns) -> tuple[FloatArray, FloatArray, NDArray[np.bool_]]:
     """Calibrated flux and error, and whether the frame is bad, for raw rows of shape (n,).
 
-    flux / gain and hypot(flux_err * error_scale, extra_scatter * flux) / gain; `solution` is sorted by frame.
+    flux / gain and hypot(flux_err * error_scale, extra_scatter * flux) / gain, or by the response curve where there is
+    one; NaN where the frame tells only whether a source is seen. `solution` is sorted by frame.
     """
-    at = np.searchsorted(solution["frame"], rows["frame"])
+    at = np.asarray(np.searchsorted(solution["frame"], rows["frame"]))
     gain, flux = solution["gain"][at], rows["flux"]
     error = np.hypot(rows["flux_err"] * solution["error_scale"][at], solution["extra_scatter"][at] * flux)
+    flux, error = _by_curves(flux, error, at, solution["curve"])
     return flux / gain, error / gain, np.asarray(solution["verdict"][at] == "bad")
+
+
+def flags(rows: Columns, solution: Columns) -> IntArray:
+    """The flags of raw rows of shape (n,), with the bit that only the solution can tell."""
+    at = np.asarray(np.searchsorted(solution["frame"], rows["frame"]))
+    mine, row = np.unique(at, return_inverse=True)
+    highest = np.array([curve_from(text).measured[-1] if text else np.inf for text in solution["curve"][mine]])
+    with np.errstate(invalid="ignore"):
+        beyond = rows["flux"] > highest[row]
+    return np.asarray(rows["flags"] | np.where(beyond, int(Flag.EXTRAPOLATED), 0))
+
+
+def _by_curves(
+    flux: FloatArray, error: FloatArray, at: IntArray, curves: NDArray[np.object_]
+) -> tuple[FloatArray, FloatArray]:
+    """Fluxes and errors after the response curves, of which `at` tells the row of each."""
+    curved = np.flatnonzero((curves != "")[at])
+    if len(curved) == 0:
+        return flux, error
+    flux, error = flux.copy(), error.copy()
+    curved = curved[np.argsort(at[curved], kind="stable")]
+    for mine in np.split(curved, np.flatnonzero(np.diff(at[curved])) + 1):
+        flux[mine], error[mine] = curve_from(curves[at[mine[0]]]).applied(flux[mine], error[mine])
+    return flux, error

@@ -55,8 +55,8 @@ class Curve:
         rows = np.stack((self.measured, self.flux, self.relative_err), axis=1)
         return " ".join(f"{value:.7g}" for value in rows.ravel())
 
-    def applied(self, measured: FloatArray, measured_err: FloatArray) -> tuple[FloatArray, FloatArray, Known]:
-        """Flux, 1-sigma error, and whether it lies beyond the brightest comparison, for measured fluxes of shape (n,).
+    def applied(self, measured: FloatArray, measured_err: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Flux and 1-sigma error for measured fluxes of shape (n,).
 
         The error is that of the measured flux times the curve's slope there, and that of the curve.
         """
@@ -64,19 +64,16 @@ class Curve:
         slopes = np.diff(log_s) / np.diff(log_m)
         with np.errstate(invalid="ignore"):
             above = measured > self.measured[0]
-            beyond = measured > self.measured[-1]
         x = np.log(np.where(above, measured, self.measured[0]))
         piece = np.clip(np.searchsorted(log_m, x, side="right") - 1, 0, len(slopes) - 1)
         on_curve = np.exp(log_s[piece] + slopes[piece] * (x - log_m[piece]))
         line = self.flux[0] / self.measured[0]
         flux = np.where(above, on_curve, line * measured)
-        with np.errstate(invalid="ignore", divide="ignore"):
-            slope = np.where(above, slopes[piece] * on_curve / np.exp(x), line)
-        error = np.hypot(measured_err * slope, np.interp(x, log_m, self.relative_err) * flux)
-        return flux, error, np.asarray(beyond)
+        slope = np.where(above, slopes[piece] * on_curve / np.exp(x), line)
+        return flux, np.hypot(measured_err * slope, np.interp(x, log_m, self.relative_err) * flux)
 
 
-@lru_cache(maxsize=4096)
+@lru_cache(maxsize=16384)
 def curve_from(text: str) -> Curve:
     """The curve that was kept as `Curve.text`."""
     measured, flux, relative_err = np.array(text.split(), float).reshape(-1, 3).T

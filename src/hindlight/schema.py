@@ -301,7 +301,11 @@ LIGHT_CURVE = (
         "middle_utc", "middle of good time at the site, ISO 8601 UTC", dtype="str", ucd="time.epoch;obs.exposure"
     ),
     TableColumn("exposure_s", "good time, NaN where unknown", unit="s", ucd="time.duration;obs.exposure"),
-    TableColumn("flux", "calibrated flux", ucd="phot.flux"),
+    TableColumn(
+        "flux",
+        "calibrated flux, NaN where there is none, or where a frame tells only whether a source is seen",
+        ucd="phot.flux",
+    ),
     TableColumn("flux_err", "its 1-sigma error", ucd="stat.error;phot.flux"),
     TableColumn("flux_unit", "unit of the fluxes and of background and rms", dtype="str", ucd="meta.unit"),
     TableColumn("raw_flux", "flux before the frame's gain", ucd="phot.flux"),
@@ -311,7 +315,8 @@ LIGHT_CURVE = (
     TableColumn("detected", "whether the measurement is above the channel's threshold", dtype="bool"),
     TableColumn(
         "limit_sigma",
-        "threshold times error: a source this bright is detected in half of such frames",
+        "threshold times error: a source this bright is detected in half of such frames; where a photographic frame gives "
+        "no flux, that of the faintest comparison seen in it",
         ucd="phot.flux;stat.max",
     ),
     TableColumn(
@@ -400,6 +405,14 @@ CHANNELS = (
     ),
     TableColumn("deep_flux", "weighted mean flux in the deep images", ucd="phot.flux;stat.mean"),
     TableColumn("deep_flux_err", "its 1-sigma error", ucd="stat.error;phot.flux"),
+    TableColumn(
+        "n_seen_only",
+        "photographic frames with too few comparisons for fluxes: only n_frames counts them",
+        dtype="int64",
+        ucd="meta.number;obs",
+    ),
+    TableColumn("n_seen", "of these, frames in which the target is seen", dtype="int64", ucd="meta.number;obs"),
+    TableColumn("seen_limit", "flux of the faintest comparison seen in these, their median", ucd="phot.flux;stat.max"),
 )
 
 CANDIDATES = (

@@ -17,7 +17,7 @@ import numpy as np
 
 from hindlight import clock, duplicates, host, judge, photometry, store
 from hindlight.background import MAD_TO_SIGMA
-from hindlight.candidates import ChannelView, Described, Examined, View, describe
+from hindlight.candidates import ChannelView, Described, Examined, SeenOnly, View, describe
 from hindlight.channels import channels_of
 from hindlight.comparisons import Located
 from hindlight.errors import HindlightError
@@ -30,6 +30,8 @@ from hindlight.plan import BrightSources, owners
 from hindlight.plugin import Candidate, Cutout, Finding, PeriodResult
 from hindlight.positions import moved
 from hindlight.ranking import Thresholds
+from hindlight.response import SEEN_SNR
+from hindlight.robust import median_of
 from hindlight.schema import MEASUREMENTS, UNUSABLE
 from hindlight.settings import COMPANION_KINDS, Settings
 from hindlight.store import Columns, Piece, RunFolder
@@ -324,15 +326,18 @@ def describe_targets(
     utc = tables.frames["middle_utc"]
     covering = Counter(zip(found["rows"]["position"].tolist(), found["rows"]["channel"].tolist(), strict=True))
 
+    only = _seen_only(tables, found["rows"], thresholds)
+
     def channel_view(row: int, target: int, label: str) -> ChannelView:
+        alone = only.get((target, label), SeenOnly())
         curve = found["blocks"][label].curve(row)
         verdict = tables.solution["verdict"][np.searchsorted(tables.solution["frame"], curve.frame)]
         n_calibrated = int((verdict == "good").sum())
         if label not in found["deep"]:
-            return ChannelView(curve, covering[target, label], n_calibrated, thresholds[label])
+            return ChannelView(curve, covering[target, label], n_calibrated, thresholds[label], seen_only=alone)
         within = tables.deepest[[tables.row_of_frame[frame] for frame in curve.frame.tolist()]]
         deep = found["deep"][label].curve(row)
-        return ChannelView(curve, covering[target, label], n_calibrated, thresholds[label], deep, within)
+        return ChannelView(curve, covering[target, label], n_calibrated, thresholds[label], deep, within, alone)
 
     described = []
     for row, target in enumerate(ids.tolist()):
@@ -345,6 +350,25 @@ def describe_targets(
         )  # fmt: skip
         described.append(describe(view, given[row], decided[row], examined[row], order.settings.detection))
     return described
+
+
+def _seen_only(
+    tables: Book, rows: Columns, thresholds: Mapping[str, Thresholds]
+) -> dict[tuple[int, str], SeenOnly]:  # fmt: skip
+    """What photographic frames without a response curve tell of positions, by position and channel."""
+    at = np.asarray(np.searchsorted(tables.solution["frame"], rows["frame"]))
+    mine = tables.solution["verdict"][at] == "seen_only"
+    mine &= np.isfinite(rows["flux"]) & (rows["flux_err"] > 0) & ((rows["flags"] & int(UNUSABLE)) == 0)
+    found: dict[tuple[int, str], list[int]] = {}
+    for row in np.flatnonzero(mine).tolist():
+        found.setdefault((int(rows["position"][row]), str(rows["channel"][row])), []).append(row)
+    told = {}
+    for (position, label), some in found.items():
+        least = max(SEEN_SNR, thresholds[label].detected)
+        snr = rows["flux"][some] / (rows["flux_err"][some] * tables.solution["error_scale"][at[some]])
+        limit = median_of(tables.solution["seen_limit"][at[some]])
+        told[position, label] = SeenOnly(len(some), int(np.count_nonzero(snr > least)), float(limit))
+    return told
 
 
 def examine_target(order: Order, target: int, field_controls: IntArray, above_quiet: dict[str, float]) -> Examined:
