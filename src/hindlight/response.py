@@ -10,7 +10,7 @@ noise enters where the fit expects it and faint stars do not flatten the curve. 
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 
 import numpy as np
@@ -32,6 +32,9 @@ ROUNDS = 60
 CLOSE = 1e-4  # change of a brightness, as a fraction, that ends the search
 STEPS = 3  # of reweighting and linearising per round
 LARGEST_STEP = 1.0
+FARTHEST = 5.0  # that a star may be from the range of those known at first, in logarithm
+BENT = 0.1  # error of the extrapolated flux over the square of its logarithm beyond the brightest comparison
+MOST_BENT = 0.15  # an outburst brighter than all comparisons must still be seen
 POINTS = 25  # of a curve as it is kept: 0.1 % from the spline over a factor 100
 
 Known = NDArray[np.bool_]
@@ -42,7 +45,8 @@ class Curve:
     """A plate's response: measured fluxes and fluxes, both positive and rising, shape (n,).
 
     `relative_err` is the 1-sigma error of the curve as a fraction of the flux. Between its points the curve is straight
-    in logarithms, below them a line through the origin, above them it keeps its last logarithmic slope.
+    in logarithms, below them a line through the origin, above them it keeps its last logarithmic slope, with an error that
+    grows.
     """
 
     measured: FloatArray
@@ -67,10 +71,12 @@ class Curve:
         x = np.log(np.where(above, measured, self.measured[0]))
         piece = np.clip(np.searchsorted(log_m, x, side="right") - 1, 0, len(slopes) - 1)
         on_curve = np.exp(log_s[piece] + slopes[piece] * (x - log_m[piece]))
+        beyond = np.maximum(np.log(np.abs(on_curve)) - log_s[-1], 0.0)
+        curve_err = np.hypot(np.interp(x, log_m, self.relative_err), np.minimum(BENT * beyond**2, MOST_BENT))
         line = self.flux[0] / self.measured[0]
         flux = np.where(above, on_curve, line * measured)
         slope = np.where(above, slopes[piece] * on_curve / np.exp(x), line)
-        return flux, np.hypot(measured_err * slope, np.interp(x, log_m, self.relative_err) * flux)
+        return flux, np.hypot(measured_err * slope, curve_err * flux)
 
 
 @lru_cache(maxsize=16384)
@@ -84,9 +90,9 @@ def curve_from(text: str) -> Curve:
 class Responses:
     """A channel's curves, one per plate, None where comparisons are too few.
 
-    `scatter` (of measured fluxes beyond their errors, as a fraction) and `n_comparisons` have shape (n_frames,),
-    `brightness` (on the channel's scale, NaN where unknown) shape (n_sources,); `by_table` says whether given fluxes
-    fix the scale of each of the curves.
+    `scatter` (of measured fluxes beyond their errors, as a fraction), `n_comparisons` (those seen) and `by_table` (whether
+    given fluxes fix the scale of the curve) have shape (n_frames,), `brightness` (on the channel's scale, NaN where
+    unknown) shape (n_sources,).
     """
 
     curves: tuple[Curve | None, ...]
@@ -99,6 +105,7 @@ class Responses:
 def solve_responses(flux: FloatArray, flux_err: FloatArray, given: FloatArray, fewest: int) -> Responses:
     """Curves of plates from measured fluxes of shape (n_frames, n_sources), NaN where there is none.
 
+    A plate needs `fewest` comparisons that are seen in it; those that are not serve too, by what is measured there.
     `given` are known fluxes of the sources, NaN where there is none: where they are enough for a plate's curve they fix
     the scale of it and of the plates that share stars with it; else the median curve of these plates is a straight line
     of slope one. Sources that vary are left out.
@@ -106,17 +113,19 @@ def solve_responses(flux: FloatArray, flux_err: FloatArray, given: FloatArray, f
     known = np.isfinite(flux) & np.isfinite(flux_err) & (flux_err > 0)
     snr = median_of(np.where(known, flux / np.where(known, flux_err, 1.0), np.nan))
     known &= np.nan_to_num(snr) >= FEWEST_SNR
+    seen = known & (np.where(known, flux, 0.0) >= SEEN_SNR * np.where(known, flux_err, 1.0))
     given = np.where(given > 0, given, np.nan)
     curves: list[Curve | None] = [None] * len(flux)
     scatter, brightness = np.full(len(flux), np.nan), np.full(flux.shape[1], np.nan)
-    counts, by_table = np.zeros(len(flux), np.int64), np.zeros(len(flux), bool)
-    for frames, sources in _parts(known, np.isfinite(given), fewest):
+    counts, by_table = seen.sum(axis=1).astype(np.int64), np.zeros(len(flux), bool)
+    for frames, sources in _parts(known, seen, np.isfinite(given), fewest):
         part = np.ix_(frames, sources)
-        fit = _without_variables(flux[part], flux_err[part], known[part], np.log(given[sources]), fewest)
+        stars = _Stars(flux[part], flux_err[part], known[part], seen[part])
+        fit = _without_variables(stars, np.log(given[sources]), fewest)
         brightness[sources] = np.exp(fit.x)
+        used = fit.used(fewest)
         for row, frame in enumerate(frames.tolist()):
-            counts[frame] = fit.known[row].sum()
-            if counts[frame] >= fewest:
+            if used[row].any():
                 curves[frame] = fit.curve(row)
                 scatter[frame], by_table[frame] = fit.scatter[row], fit.by_table
     return Responses(tuple(curves), scatter, counts, brightness, by_table)
@@ -130,13 +139,13 @@ def faintest_seen(flux: FloatArray, flux_err: FloatArray, brightness: FloatArray
     return np.where(np.isfinite(faintest), faintest, np.nan)
 
 
-def _parts(known: Known, given: Known, fewest: int) -> list[tuple[IntArray, IntArray]]:
+def _parts(known: Known, seen: Known, given: Known, fewest: int) -> list[tuple[IntArray, IntArray]]:
     """Frames and sources of each connected part of the plates that have enough comparisons."""
     known = known.copy()
     while True:
         before = int(known.sum())
-        known &= ((known.sum(axis=0) >= 2) | given)[None, :]
-        known &= (known.sum(axis=1) >= fewest)[:, None]
+        known &= (((known & seen).sum(axis=0) >= 2) | given)[None, :]
+        known &= ((known & seen).sum(axis=1) >= fewest)[:, None]
         if int(known.sum()) == before:
             break
     if not known.any():
@@ -153,20 +162,38 @@ def _parts(known: Known, given: Known, fewest: int) -> list[tuple[IntArray, IntA
 # --- the fit of one part
 
 
-@dataclass(eq=False)
-class _Fit:
-    """Curves and brightnesses while they are found.
+@dataclass(frozen=True, eq=False)
+class _Stars:
+    """Measured fluxes of comparisons and their errors, whether they serve, and whether they are seen, shape
 
-    `flux`, `flux_err` and `known` have shape (n_frames, n_sources); `x`, the logarithms of the true fluxes (NaN where not
-    yet known), and `fixed`, whether they are given, shape (n_sources,). `coefficients` and their `covariance` are those
-    of each plate's spline, `scatter` is about it; `taken` is the part of a residual's variance that the fit has taken up.
+    (n_frames, n_sources).
     """
 
     flux: FloatArray
     flux_err: FloatArray
     known: Known
+    seen: Known
+
+    def without(self, source: int) -> _Stars:
+        """The same where one source no longer serves."""
+        known = self.known.copy()
+        known[:, source] = False
+        return replace(self, known=known)
+
+
+@dataclass(eq=False)
+class _Fit:
+    """Curves and brightnesses while they are found.
+
+    `x`, the logarithms of the true fluxes (NaN where not
+    yet known), and `fixed`, whether they are given, shape (n_sources,). `coefficients` and their `covariance` are those
+    of each plate's spline, `scatter` is about it; `taken` is the part of a residual's variance that the fit has taken up.
+    """
+
+    stars: _Stars
     x: FloatArray
     fixed: Known
+    bounds: tuple[float, float]
     spline: _Spline
     coefficients: FloatArray
     covariance: FloatArray
@@ -174,13 +201,14 @@ class _Fit:
     taken: FloatArray
 
     @classmethod
-    def begun(cls, flux: FloatArray, flux_err: FloatArray, known: Known, x: FloatArray, fixed: Known) -> _Fit:
+    def begun(cls, stars: _Stars, x: FloatArray, fixed: Known) -> _Fit:
         """A fit of which only brightnesses are known, and not all of them."""
-        n = len(flux)
+        n = len(stars.flux)
         spline = _Spline.over(x[np.isfinite(x)])
         covariance = np.zeros((n, COEFFICIENTS, COEFFICIENTS))
         coefficients = np.full((n, COEFFICIENTS), np.nan)
-        return cls(flux, flux_err, known, x, fixed, spline, coefficients, covariance, np.zeros(n), np.zeros(flux.shape))
+        bounds = spline.low - FARTHEST, spline.high + FARTHEST
+        return cls(stars, x, fixed, bounds, spline, coefficients, covariance, np.zeros(n), np.zeros(stars.flux.shape))
 
     @property
     def by_table(self) -> bool:
@@ -188,12 +216,12 @@ class _Fit:
 
     def used(self, fewest: int) -> Known:
         """Which fluxes serve: of sources of known brightness, in plates that have enough of them."""
-        usable = self.known & np.isfinite(self.x)
-        return np.asarray(usable & (usable.sum(axis=1) >= fewest)[:, None])
+        usable = self.stars.known & np.isfinite(self.x)
+        return np.asarray(usable & ((usable & self.stars.seen).sum(axis=1) >= fewest)[:, None])
 
     def curve(self, row: int) -> Curve:
-        """The curve of a plate over the range of its own comparisons."""
-        mine = self.x[self.known[row] & np.isfinite(self.x)]
+        """The curve of a plate over the range of the comparisons seen in it."""
+        mine = self.x[self.stars.known[row] & self.stars.seen[row] & np.isfinite(self.x)]
         low, high = float(mine.min()), float(mine.max())
         x = np.linspace(low, max(high, low + 0.01), POINTS)
         basis, slopes = self.spline.basis(x), self.spline.basis(x, 1)
@@ -233,31 +261,28 @@ class _Spline:
         return slope if derivative else np.asarray(spline(inside)) + slope * (x - inside)[:, None]
 
 
-def _without_variables(flux: FloatArray, flux_err: FloatArray, known: Known, given: FloatArray, fewest: int) -> _Fit:
+def _without_variables(stars: _Stars, given: FloatArray, fewest: int) -> _Fit:
     """The fit without the sources that vary."""
     while True:
-        fit = _fitted(flux, flux_err, known, given, fewest)
+        fit = _fitted(stars, given, fewest)
         used = fit.used(fewest)
         if not used.any():
             return fit
         residual, error = _relative(fit, used)
-        total = np.hypot(error, np.nan_to_num(fit.scatter)[:, None])
-        scatter = np.array([column_scatter(residual[:, s], total[:, s], used[:, s]) for s in range(flux.shape[1])])
-        typical = float(np.nanmedian(fit.scatter))
-        worst = most_variable(residual, total, used, np.hypot(scatter, typical), 0.0)
+        total = np.hypot(error, fit.scatter[:, None])
+        scatter = np.array([column_scatter(residual[:, s], total[:, s], used[:, s]) for s in range(used.shape[1])])
+        worst = most_variable(residual, total, used, np.hypot(scatter, float(np.median(fit.scatter))), 0.0)
         if worst is None:
             return fit
-        known = known.copy()
-        known[:, worst] = False
+        stars = stars.without(worst)
 
 
-def _fitted(flux: FloatArray, flux_err: FloatArray, known: Known, given: FloatArray, fewest: int) -> _Fit:
+def _fitted(stars: _Stars, given: FloatArray, fewest: int) -> _Fit:
     """Curves and brightnesses in turn, until neither changes; `given` are logarithms, NaN where there is none."""
     fixed = np.isfinite(given)
-    if not ((known & fixed).sum(axis=1) >= fewest).any():
+    if not ((stars.known & stars.seen & fixed).sum(axis=1) >= fewest).any():
         fixed = np.zeros(len(given), bool)
-    x = np.where(fixed, given, np.nan) if fixed.any() else _first_brightness(flux, known)
-    fit = _Fit.begun(flux, flux_err, known, x, fixed)
+    fit = _Fit.begun(stars, np.where(fixed, given, np.nan) if fixed.any() else _first_brightness(stars), fixed)
     for _ in range(ROUNDS):
         before = fit.x
         _fit_curves(fit, fewest)
@@ -268,14 +293,13 @@ def _fitted(flux: FloatArray, flux_err: FloatArray, known: Known, given: FloatAr
         if same.all() and np.nanmax(np.abs(fit.x - before), initial=0.0) < CLOSE:
             break
     _fit_curves(fit, fewest)
-    fit.known = fit.used(fewest)
     return fit
 
 
-def _first_brightness(flux: FloatArray, known: Known) -> FloatArray:
+def _first_brightness(stars: _Stars) -> FloatArray:
     """Logarithms of the brightness as if all curves were parallel."""
-    positive = known & (flux > 0)
-    logs = np.where(positive, np.log(np.where(positive, flux, 1.0)), np.nan)
+    positive = stars.known & (stars.flux > 0)
+    logs = np.where(positive, np.log(np.where(positive, stars.flux, 1.0)), np.nan)
     x = median_of(logs)
     for _ in range(5):
         offset = median_of(logs - x, axis=1)
@@ -303,7 +327,7 @@ def _fit_curves(fit: _Fit, fewest: int) -> None:
 
 def _fit_curve(fit: _Fit, row: int, basis: FloatArray, mine: Known, share: FloatArray) -> None:
     """One plate's coefficients, their covariance and the scatter about the curve; Gauss-Newton with Huber's weights."""
-    value, error = fit.flux[row, mine], fit.flux_err[row, mine]
+    value, error = fit.stars.flux[row, mine], fit.stars.flux_err[row, mine]
     places = fit.spline.places
     smooth = np.diff(np.diff(np.eye(COEFFICIENTS), axis=0) / np.diff(places)[:, None], axis=0) / SLOPE_CHANGE
     least = LEAST_SLOPE * np.concatenate(([0.0], np.cumsum(np.diff(places))))
@@ -334,7 +358,7 @@ def _fit_curve(fit: _Fit, row: int, basis: FloatArray, mine: Known, share: Float
 def _fit_brightness(fit: _Fit) -> None:
     """Brightness of the sources whose flux is not given, from the curves as they are."""
     solved = np.asarray(np.isfinite(fit.coefficients).all(axis=1))
-    known = fit.known & solved[:, None]
+    flux, flux_err, known = fit.stars.flux, fit.stars.flux_err, fit.stars.known & solved[:, None]
     free = known.any(axis=0) & ~fit.fixed
     if not free.any():
         return
@@ -344,13 +368,13 @@ def _fit_brightness(fit: _Fit) -> None:
     for _ in range(STEPS):
         model = np.exp(coefficients @ fit.spline.basis(x).T)
         slope = coefficients @ fit.spline.basis(x, 1).T
-        relative = np.where(known, fit.flux / model - 1.0, 0.0)
-        total = np.where(known, np.hypot(fit.flux_err / model, fit.scatter[:, None]), 1.0)
+        relative = np.where(known, flux / model - 1.0, 0.0)
+        total = np.where(known, np.hypot(flux_err / model, fit.scatter[:, None]), 1.0)
         weight = np.where(known, _weight(relative, total), 0.0)
         pull = np.clip(relative, -LARGEST_STEP, LARGEST_STEP)
         bottom = (weight * slope**2).sum(axis=0)
         step = (weight * slope * pull).sum(axis=0) / np.where(bottom > 0, bottom, 1.0)
-        x = x + np.where(free, np.clip(step, -LARGEST_STEP, LARGEST_STEP), 0.0)
+        x = np.clip(x + np.where(free, np.clip(step, -LARGEST_STEP, LARGEST_STEP), 0.0), *fit.bounds)
     fit.x = np.where(free, x, fit.x)
 
 
@@ -375,4 +399,4 @@ def _relative(fit: _Fit, used: Known) -> tuple[FloatArray, FloatArray]:
     x = np.nan_to_num(fit.x, nan=fit.spline.low)
     with np.errstate(invalid="ignore"):
         model = np.where(used, np.exp(np.nan_to_num(fit.coefficients) @ fit.spline.basis(x).T), np.nan)
-    return fit.flux / model - 1.0, fit.flux_err / model
+    return fit.stars.flux / model - 1.0, fit.stars.flux_err / model

@@ -19,7 +19,7 @@ from hindlight import clock, duplicates, host, judge, photometry, store
 from hindlight.background import MAD_TO_SIGMA
 from hindlight.candidates import ChannelView, Described, Examined, SeenOnly, View, describe
 from hindlight.channels import channels_of
-from hindlight.comparisons import Located
+from hindlight.comparisons import Located, among_alike
 from hindlight.errors import HindlightError
 from hindlight.facts import visible
 from hindlight.fence import Fault, blank, call, checked, one_line
@@ -30,7 +30,7 @@ from hindlight.plan import BrightSources, owners
 from hindlight.plugin import Candidate, Cutout, Finding, PeriodResult
 from hindlight.positions import moved
 from hindlight.ranking import Thresholds
-from hindlight.response import SEEN_SNR
+from hindlight.response import PHOTOGRAPHIC, SEEN_SNR
 from hindlight.robust import median_of
 from hindlight.schema import MEASUREMENTS, UNUSABLE
 from hindlight.settings import COMPANION_KINDS, Settings
@@ -222,6 +222,8 @@ def locate_sources(order: Order, frame: int, ra: FloatArray, dec: FloatArray) ->
     try:
         facts = frame_facts(tables.frames, tables.row_of_frame[frame])
         found_ra, found_dec, snr, width = photometry.locate(facts, ra, dec, order.settings)
+        if tables.frames["response"][tables.row_of_frame[frame]] == PHOTOGRAPHIC:
+            width = among_alike(snr, width)
     except (SetAsideError, OSError, ValueError):
         found_ra = found_dec = snr = width = np.full(len(ra), np.nan)
     east = ((found_ra - ra + 180.0) % 360.0 - 180.0) * np.cos(np.radians(dec))
