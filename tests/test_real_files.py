@@ -142,7 +142,7 @@ FILES = [
     Real(
         ASTROPY,
         "astropy/wcs/tests/data/dss.14.29.56-62.41.05.fits.gz",
-        "start_assumed site_unsettled geocentre no_unit no_beam frame_assumed",
+        "start_assumed site_unsettled geocentre no_unit no_beam frame_assumed photographic_assumed",
         middle="1976-03-11T18:13:00.000",
         exposure=4200.0,
         instrument="UK 48-inch Schmidt",

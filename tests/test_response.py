@@ -123,6 +123,21 @@ def test_a_single_plate_knows_no_scale() -> None:
     assert solve_responses(measured, error, true, 8).curves[0] is not None
 
 
+def test_too_few_are_left_where_comparisons_vary() -> None:
+    """Eight comparisons of which one varies are seven: no curve, and the given fluxes still tell the limits."""
+    true, measured, error = plates(9)
+    some = np.argsort(true)[-8:]
+    measured[::2, some[3]] *= 10.0
+    assert all(
+        curve is None for curve in solve_responses(measured[:, some], error[:, some], np.full(8, np.nan), 8).curves
+    )
+    found = solve_responses(measured[:, some], error[:, some], true[some], 8)
+    assert all(curve is None for curve in found.curves)
+    np.testing.assert_array_equal(found.brightness, true[some])
+    nothing = solve_responses(np.full((4, 0), np.nan), np.full((4, 0), np.nan), np.empty(0), 8)
+    assert nothing.curves == (None,) * 4
+
+
 def test_the_faintest_star_seen() -> None:
     """Of known brightness, five times its error on the plate; NaN where there is none."""
     flux = np.array([[10.0, 5.0, 4.9, 20.0], [1.0, 1.0, 1.0, np.nan]])

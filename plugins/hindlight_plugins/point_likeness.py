@@ -35,7 +35,8 @@ class PointLikeness(ConsistencyCheck):
     columns = (
         Column("width", "width over the beam's, geometric mean of both axes, median over the bright frames",
                ucd="phys.angSize;arith.ratio"),
-        Column("axis_ratio", "longer over shorter axis of the mean shape of the bright frames", ucd="arith.ratio"),
+        Column("axis_ratio", "longer over shorter axis of the mean shape of the bright frames",
+               ucd="phys.angSize;arith.ratio"),
         Column("chi2", "chi-square of the shapes about that of the beam, 3 degrees of freedom per frame; what is wide "
                "and round counts as the beam", ucd="stat.fit.chi2"),
         Column("p", "chance of such shapes", ucd="stat.probability"),

@@ -25,11 +25,12 @@ SEEN_SNR = 5.0  # what counts as seen on a plate, target or comparison; common p
 FEWEST_SNR = 3.0  # a star whose typical S/N is lower tells nothing of curves
 DEGREE = 3
 COEFFICIENTS = 6
-SLOPE_CHANGE = 1.0  # by which the logarithmic slope may well change between neighbouring coefficients
+SLOPE_CHANGE = 0.3  # by which the logarithmic slope may well change between neighbouring coefficients
 LEAST_SLOPE = 0.05  # a plate that is saturated so far tells nothing, but its curve can be inverted
 LEAST_SPAN = 0.5  # of the spline in the logarithm of the flux
 ROUNDS = 60
 CLOSE = 1e-4  # change of a brightness, as a fraction, that ends the search
+FIRST_SCATTER = 0.05  # of comparisons about a curve, before it is known
 STEPS = 3  # of reweighting and linearising per round
 LARGEST_STEP = 1.0
 FARTHEST = 5.0  # that a star may be from the range of those known at first, in logarithm
@@ -128,6 +129,9 @@ def solve_responses(flux: FloatArray, flux_err: FloatArray, given: FloatArray, f
             if used[row].any():
                 curves[frame] = fit.curve(row)
                 scatter[frame], by_table[frame] = fit.scatter[row], fit.by_table
+    curved = np.isfinite(scatter)
+    if by_table[curved].all():  # no scale but that of the given fluxes
+        brightness = np.where(np.isfinite(brightness), brightness, given)
     return Responses(tuple(curves), scatter, counts, brightness, by_table)
 
 
@@ -208,7 +212,17 @@ class _Fit:
         covariance = np.zeros((n, COEFFICIENTS, COEFFICIENTS))
         coefficients = np.full((n, COEFFICIENTS), np.nan)
         bounds = spline.low - FARTHEST, spline.high + FARTHEST
-        return cls(stars, x, fixed, bounds, spline, coefficients, covariance, np.zeros(n), np.zeros(stars.flux.shape))
+        return cls(
+            stars,
+            x,
+            fixed,
+            bounds,
+            spline,
+            coefficients,
+            covariance,
+            np.full(n, FIRST_SCATTER),
+            np.zeros(stars.flux.shape),
+        )
 
     @property
     def by_table(self) -> bool:
@@ -269,6 +283,7 @@ def _without_variables(stars: _Stars, given: FloatArray, fewest: int) -> _Fit:
         if not used.any():
             return fit
         residual, error = _relative(fit, used)
+        # Few comparisons hide what one of them does in the scatter about the curve: what counts is the excess over that.
         total = np.hypot(error, fit.scatter[:, None])
         scatter = np.array([column_scatter(residual[:, s], total[:, s], used[:, s]) for s in range(used.shape[1])])
         worst = most_variable(residual, total, used, np.hypot(scatter, float(np.median(fit.scatter))), 0.0)
@@ -283,6 +298,9 @@ def _fitted(stars: _Stars, given: FloatArray, fewest: int) -> _Fit:
     if not ((stars.known & stars.seen & fixed).sum(axis=1) >= fewest).any():
         fixed = np.zeros(len(given), bool)
     fit = _Fit.begun(stars, np.where(fixed, given, np.nan) if fixed.any() else _first_brightness(stars), fixed)
+    if not fit.used(fewest).any():  # what is left where sources vary
+        fit.x = np.where(fixed, fit.x, np.nan)
+        return fit
     for _ in range(ROUNDS):
         before = fit.x
         _fit_curves(fit, fewest)
