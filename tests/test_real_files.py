@@ -146,6 +146,7 @@ FILES = [
         middle="1976-03-11T18:13:00.000",
         exposure=4200.0,
         instrument="UK 48-inch Schmidt",
+        band="bandpass 0",
         dialect="plate_headers",
     ),
     # A camera in orbit, 1994: DD/MM/YY and TIME-OBS in the primary header, INHERIT in the extensions.

@@ -128,9 +128,6 @@ def test_too_few_are_left_where_comparisons_vary() -> None:
     true, measured, error = plates(9)
     some = np.argsort(true)[-8:]
     measured[::2, some[3]] *= 10.0
-    assert all(
-        curve is None for curve in solve_responses(measured[:, some], error[:, some], np.full(8, np.nan), 8).curves
-    )
     found = solve_responses(measured[:, some], error[:, some], true[some], 8)
     assert all(curve is None for curve in found.curves)
     np.testing.assert_array_equal(found.brightness, true[some])
