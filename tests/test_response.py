@@ -60,6 +60,14 @@ def test_stars_kept_out_of_the_fit(seed: int, by_table: bool) -> None:
     assert 0.8 < (((flux - truth) / error) ** 2).mean() < 1.25
 
 
+def test_the_scale_is_that_of_the_median_curve() -> None:
+    """Without given fluxes a star has the flux that the median plate measures, bright or faint."""
+    _, measured, error = plates(10)
+    found = solve_responses(measured, error, np.full(60, np.nan), 8)
+    bright = np.argsort(found.brightness)[-50:]
+    np.testing.assert_allclose(np.median(measured, axis=0)[bright] / found.brightness[bright], 1.0, atol=0.05)
+
+
 def test_curves_rise_everywhere() -> None:
     """Also where a plate is saturated and noise makes its brightest stars the fainter ones."""
     true, measured, error = plates(4)
