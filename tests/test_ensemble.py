@@ -7,7 +7,8 @@ import pytest
 from scipy import optimize
 
 from hindlight import losses
-from hindlight.ensemble import IMAGE_COLUMNS, calibrated, error_scales, excess_scatter, solution, solve_gains, solved
+from hindlight.ensemble import IMAGE_COLUMNS, calibrated, error_scales, solution, solve_gains, solved
+from hindlight.robust import excess_scatter
 from hindlight.settings import Comparisons
 
 
@@ -125,7 +126,8 @@ def test_error_scales() -> None:
 
 def images(n: int) -> dict[str, np.ndarray]:
     """Size and scale of n images."""
-    return {"width": np.full(n, 101), "height": np.full(n, 101), "pixel_scale": np.full(n, 36.0)}
+    size = {"width": np.full(n, 101), "height": np.full(n, 101), "pixel_scale": np.full(n, 36.0)}
+    return size | {"response": np.full(n, "linear", object)}
 
 
 def nothing(n: int) -> dict[str, np.ndarray]:

@@ -62,6 +62,7 @@ def solved_of(made) -> tuple[dict[str, np.ndarray], tuple[str, ...]]:
     known = {"frame": np.arange(n), "pull": np.ones(n), "n_controls": np.full(n, 200)}
     known |= {name: np.full(n, np.nan) for name in IMAGE_COLUMNS}
     images = {"width": np.full(n, 1001), "height": np.full(n, 1001), "pixel_scale": np.full(n, 3.6)}
+    images["response"] = np.full(n, "linear", object)
     return solved(np.arange(n), np.full(n, "c", object), [known], [rows_of(made)], Comparisons(), images)
 
 

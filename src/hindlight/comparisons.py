@@ -13,16 +13,17 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from hindlight.ensemble import median_of
 from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.plan import BrightSources
 from hindlight.pointing import LEAST_SNR
 from hindlight.positions import BlankSky
+from hindlight.robust import median_of
 from hindlight.settings import Comparisons
 from hindlight.systems import unit_vectors
 
 FAINTER = 0.1  # a neighbour of so small a part of a source's S/N does not disturb it
 POINT_WIDTH = 1.3  # median width over the beam's up to which a source counts as a point
+ALIKE = 7  # sources of like brightness on a plate whose widths are compared
 SPARE = 2  # so many times more candidates are looked at than comparisons are wanted
 OFTEN = 0.5  # of the frames that are deep enough to show it, a steady source is found in at least this fraction
 FLAT = 0.1  # of the frames it is found in: one that has a flat top in more of them is saturated, whatever headers say
@@ -97,6 +98,20 @@ def placed(
     good &= _steady(snr, seen)
     kept = np.flatnonzero(good)[: settings.wanted]
     return ra[kept] + place_east[kept] / np.cos(np.radians(dec[kept])), dec[kept] + place_north[kept]
+
+
+def among_alike(snr: FloatArray, width: FloatArray) -> FloatArray:
+    """Widths over the median of those of the ALIKE sources nearest in S/N, shape (n,), NaN where there is none.
+
+    A bright star on a plate is a wide one: only among its like does its width tell whether it is a point.
+    """
+    relative = np.full(len(width), np.nan)
+    found = np.flatnonzero(np.isfinite(width) & np.isfinite(snr))
+    order = found[np.argsort(-snr[found], kind="stable")]
+    for at, source in enumerate(order.tolist()):
+        first = min(max(0, at - ALIKE // 2), max(0, len(order) - ALIKE))
+        relative[source] = width[source] / np.median(width[order[first : first + ALIKE]])
+    return relative
 
 
 def _steady(snr: FloatArray, seen: NDArray[np.bool_]) -> NDArray[np.bool_]:
