@@ -23,6 +23,7 @@ def frames(*rows: tuple[object, ...]) -> dict[str, np.ndarray]:
     }
     columns["beam_minor"] = columns["beam_major"]
     columns["primary_beam"] = np.full(len(rows), "unknown", dtype=object)
+    columns["response"] = np.full(len(rows), "linear", dtype=object)
     columns["primary_beam_file"] = np.full(len(rows), "", dtype=object)
     columns["primary_beam_fwhm_deg"] = np.full(len(rows), NAN)
     return columns

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import math
 from collections.abc import Sequence
 
@@ -11,6 +12,7 @@ from scipy.stats import binom, kstest
 
 from hindlight import Block, Candidate, Channel, Cutout, LightCurve
 from hindlight_plugins.common_mode import FrameWide, outlier_rate, pulls
+from hindlight_plugins.point_likeness import PointLikeness, fitted_shape
 from hindlight_plugins.position_check import Position, centroid, centroid_error
 
 RADIO = Channel("radio", unit="Jy/beam")
@@ -328,3 +330,68 @@ def test_findings_hold_the_declared_columns():
     for offsets in (np.zeros((0, 2)), np.zeros((1, 2)), np.zeros((3, 2))):
         values = Position().check(simulated(offsets, rng)).values
         assert list(values) == [column.name for column in Position.columns]
+
+
+# --- point-likeness
+
+CAMERA = Channel("camera", unit="adu")
+
+
+def shaped(frame: int, snr: float, major: float, minor: float, angle: float = 0.5, fwhm: float = 4.0) -> Cutout:
+    """A Gaussian with these widths (pixels) in white noise, as bright as gives `snr` with an optimal filter."""
+    rng = np.random.default_rng(1000 * frame + 1)
+    half = math.ceil(2.5 * fwhm)
+    axis = np.arange(2 * half + 1)
+    x, y = np.meshgrid(axis - half - 0.3, axis - half + 0.2)
+    along, across = x * math.cos(angle) + y * math.sin(angle), y * math.cos(angle) - x * math.sin(angle)
+    shape = np.exp(-4 * math.log(2) * ((along / major) ** 2 + (across / minor) ** 2))
+    pixels = 100.0 + snr * shape / np.sqrt((shape**2).sum()) + rng.normal(size=shape.shape)
+    return Cutout(frame, "camera", pixels, half + 0.3, half - 0.2, np.diag([-1.0, 1.0]), fwhm, 100.0, 1.0)
+
+
+def of_shape(cutouts: Sequence[Cutout], snr: float = 30.0, channel: Channel = CAMERA) -> Candidate:
+    """A candidate whose bright frames are these cut-outs."""
+    curve = make_curve(np.full(len(cutouts), snr), channel)
+    return make_candidate([curve], [curve.flux > 0], cutouts=cutouts)
+
+
+def test_shapes_have_their_errors() -> None:
+    """Each number of a shape has an error of 1 / snr, and no bias."""
+    found = np.array([fitted_shape(shaped(k, 30.0, 4.0, 4.0)) for k in range(300)])
+    np.testing.assert_allclose(found.std(axis=0) * 30, 1.0, atol=0.15)
+    np.testing.assert_allclose(found.mean(axis=0) * 30, 0.0, atol=0.25)
+    found = np.array([fitted_shape(shaped(k, 300.0, 6.0, 3.0, 0.5)) for k in range(10)])
+    half = 0.5 * math.log(2.0)
+    expected = [math.log(math.sqrt(18.0) / 4.0), half * math.cos(1.0), half * math.sin(1.0)]
+    np.testing.assert_allclose(found.mean(axis=0), expected, atol=0.01)
+
+
+@pytest.mark.parametrize(
+    ("major", "minor", "verdict"),
+    [
+        (4.0, 4.0, "pass"), (4.4, 4.0, "pass"), (3.6, 3.6, "pass"), (9.0, 9.0, "pass"),  # wide and round: a bright star
+        (1.0, 1.0, "fail"), (1.5, 1.5, "fail"), (16.0, 2.0, "fail"), (12.0, 4.0, "fail"),
+    ],
+)  # fmt: skip
+def test_what_is_a_point(major: float, minor: float, verdict: str) -> None:
+    """Dust and cosmic rays are narrower than a star of this frame, scratches and trails longer."""
+    finding = PointLikeness().check(of_shape([shaped(100 + k, 30.0, major, minor) for k in range(2)]))
+    assert finding.verdict == verdict
+    assert finding.values["n_frames"] == 2
+    assert "2 bright frames" in finding.evidence
+
+
+def test_where_shapes_say_nothing() -> None:
+    """Faint frames, a beam of less than two pixels or one that is only assumed, and synthesised images."""
+    narrow = [shaped(100, 30.0, 1.0, 1.0)]
+    assert PointLikeness().check(of_shape(narrow)).verdict == "fail"
+    assert PointLikeness().check(of_shape(narrow, snr=6.0)).verdict == "uninformative"
+    synthesised = PointLikeness().check(of_shape(narrow, channel=RADIO))
+    assert synthesised.verdict == "uninformative"
+    assert "part of an image" in synthesised.evidence
+    assumed = [dataclasses.replace(narrow[0], fwhm_known=False)]
+    undersampled = [shaped(100, 30.0, 1.0, 1.0, fwhm=1.8)]
+    for cutouts in (assumed, undersampled):
+        finding = PointLikeness().check(of_shape(cutouts))
+        assert finding.verdict == "uninformative"
+        assert "1 with a beam" in finding.evidence

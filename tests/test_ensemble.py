@@ -6,7 +6,9 @@ import numpy as np
 import pytest
 from scipy import optimize
 
-from hindlight.ensemble import IMAGE_COLUMNS, calibrated, error_scales, excess_scatter, solution, solve_gains, solved
+from hindlight import losses
+from hindlight.ensemble import IMAGE_COLUMNS, calibrated, error_scales, solution, solve_gains, solved
+from hindlight.robust import excess_scatter
 from hindlight.settings import Comparisons
 
 
@@ -122,6 +124,12 @@ def test_error_scales() -> None:
     assert few.tolist() == [1.0]  # ten controls say too little
 
 
+def images(n: int) -> dict[str, np.ndarray]:
+    """Size and scale of n images."""
+    size = {"width": np.full(n, 101), "height": np.full(n, 101), "pixel_scale": np.full(n, 36.0)}
+    return size | {"response": np.full(n, "linear", object)}
+
+
 def nothing(n: int) -> dict[str, np.ndarray]:
     """Frames of whose image nothing was found."""
     return {name: np.full(n, np.nan) for name in IMAGE_COLUMNS}
@@ -135,11 +143,12 @@ def test_scatter_that_blank_sky_shows_is_no_extra_scatter() -> None:
     rng = np.random.default_rng(14)
     flux = 10 ** rng.uniform(1.5, 2.5, 20) + 2.5 * rng.standard_normal((10, 20))
     frame, source = np.nonzero(np.isfinite(flux))
-    rows = {"frame": frame, "position": source, "flux": flux[frame, source], "flux_err": np.ones(flux.size)}
+    rows = {"frame": frame, "position": source, "flux": flux[frame, source], "flux_err": np.ones(flux.size),
+            "x": 5.0 * source, "y": 50.0 + 0 * source}  # fmt: skip
     known = {"frame": np.arange(10), "pull": np.full(10, 2.5), "n_controls": np.full(10, 500),
              "shift_x": np.zeros(10), "shift_y": np.zeros(10), "fwhm": np.full(10, 3.0),
              "held": np.full(10, np.nan)}  # fmt: skip
-    table, _ = solved(np.arange(10), np.full(10, "c", object), [known], [rows], Comparisons())
+    table, _ = solved(np.arange(10), np.full(10, "c", object), [known], [rows], Comparisons(), images(10))
     np.testing.assert_allclose(table["error_scale"], 2.5)
     assert (table["extra_scatter"] < 0.006).all()  # the error of a gain; with the noise counted twice 0.02 and more
 
@@ -162,6 +171,7 @@ def test_solution_and_its_use() -> None:
     flux[4] = np.nan
     gains = solve_gains(flux, error)
     rows = solution(np.arange(12), "c", gains, np.full(12, 1.5), nothing(12), Comparisons())
+    rows |= losses.columns(losses.Loss(np.zeros(12)), losses.centres(images(12)))
     assert rows["verdict"].tolist() == ["good"] * 4 + ["uncalibrated"] + ["good"] * 7
     assert rows["extra_scatter"][4] == pytest.approx(gains.spread)  # the scatter of the others' gains
     value, sigma, bad = calibrated(
@@ -186,12 +196,13 @@ def test_channels_are_solved_apart_and_spoken_of() -> None:
     """A channel with comparisons is tied, one without is said to be raw; every frame has a row, in order of frame."""
     _, flux, error = simulated(13, frames=10)
     frame, source = np.nonzero(np.isfinite(flux))
-    rows = {"frame": 2 * frame, "position": source, "flux": flux[frame, source], "flux_err": error[frame, source]}
+    rows = {"frame": 2 * frame, "position": source, "flux": flux[frame, source], "flux_err": error[frame, source],
+            "x": 5.0 * source, "y": 50.0 + 0 * source}  # fmt: skip
     known = {"frame": 2 * np.arange(10), "pull": np.ones(10), "n_controls": np.full(10, 200),
              "shift_x": np.full(10, 0.25), "shift_y": np.full(10, -0.5), "fwhm": np.full(10, 3.0),
              "held": np.full(10, np.nan)}  # fmt: skip
     channels = np.array(["tied", "raw"] * 10, object)
-    table, said = solved(np.arange(20), channels, [known], [rows], Comparisons())
+    table, said = solved(np.arange(20), channels, [known], [rows], Comparisons(), images(20))
     assert table["frame"].tolist() == list(range(20))
     assert table["verdict"].tolist() == ["good", "uncalibrated"] * 10
     assert table["extra_scatter"][1] == Comparisons().uncalibrated_scatter

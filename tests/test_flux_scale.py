@@ -131,3 +131,32 @@ def test_seeing_that_the_header_does_not_give(tmp_path: Path) -> None:
         assert found == pytest.approx(true[path[frame][0]], rel=0.05)
         assert verdict == "good"
     assert np.ptp(np.log(solution["gain"])) < 0.05
+
+
+def test_saturated_stars_do_not_tie_the_scale(tmp_path: Path) -> None:
+    """No header states a level, most stars are cut off at one, and the seeing changes: gains are right all the same.
+
+    With those stars among the comparisons they would be the majority, and gains off by up to 20 %.
+    """
+    rng = np.random.default_rng(1)
+    grid = np.stack(np.meshgrid(*[np.linspace(-850, 850, 6)] * 2), axis=-1).reshape(-1, 2)
+    flux = rng.permutation([*np.geomspace(3500, 12000, 26), *np.geomspace(300, 1200, 10)])
+    stars = [skies.Source(f"s{k}", *place, float(f)) for k, (place, f) in enumerate(zip(grid, flux, strict=True))]
+    true = {}
+    for k, width in enumerate(rng.uniform(2.6, 3.8, 10)):
+        sky = skies.Sky(instrument="camera", n_frames=1, size=240, unit="adu", noise="white", fwhm_pixels=float(width),
+                        gain_scatter=0.05, first_day=51000.0 + k, last_day=51000.5 + k)  # fmt: skip
+        true |= {t.name: t.gain for t in skies.write_sky(tmp_path / "frames", sky, stars, k + 1, prefix=f"f{k}_")}
+    for path in (tmp_path / "frames").iterdir():
+        with fits.open(path, mode="update") as hdus:
+            hdus[0].data = np.minimum(hdus[0].data, 200.0)
+    (tmp_path / "targets.csv").write_text(skies.target_text([skies.Source("t", 170.0, 0.0)], sky), encoding="utf-8")
+    (tmp_path / "s.toml").write_text("[controls]\nper_field = 40\n", encoding="utf-8")
+    arguments = ["mine", tmp_path / "frames", "--targets", tmp_path / "targets.csv", "--out", tmp_path / "run",
+                 "--settings", tmp_path / "s.toml", "-q", "--without", "lomb_scargle"]  # fmt: skip
+    assert cli.run_command([str(a) for a in arguments]) == 0
+    frames = pq.read_table(tmp_path / "run" / "frames.parquet").to_pydict()
+    solution = pq.read_table(tmp_path / "run" / "frame_solution.parquet").to_pydict()
+    gain = [true[frames["path"][frames["id"].index(frame)]] for frame in solution["frame"]]
+    off = np.log(solution["gain"]) - np.log(gain)
+    assert np.abs(off - off.mean()).max() < 0.02

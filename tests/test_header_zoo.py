@@ -659,7 +659,7 @@ PLATE_CASES = [
         LOG.replace("120.0 / exposure time in seconds", "70.0 /Exposure time minutes")
         + "PLTLABEL= 'K 1234'\nDATE-OBS= '11/03/76' /UT date of Observation\nUT      = '17:38:00.00' /UT time of observation\n"
         "SITELAT = '-30:00:00.00'\nSITELONG= '+020:00:00.00' /Longitude of Observatory\n",
-        "start_assumed site_unsettled geocentre",
+        "start_assumed site_unsettled geocentre photographic_assumed",
         "1976-03-11T18:13:00",
         exposure=4200.0,
         **PLATE,
@@ -668,7 +668,7 @@ PLATE_CASES = [
         "a plate with a modern date, exposure in hours",
         LOG.replace("120.0 / exposure time in seconds", "0.5 / [h] good time")
         + "PLATENUM=                 1234\nDATE-OBS= '1976-03-11T17:38:00' / start\nTIMESYS = 'UT'\n",
-        "geocentre",
+        "geocentre photographic_assumed",
         "1976-03-11T17:53:00",
         exposure=1800.0,
         **PLATE,

@@ -112,6 +112,6 @@ def test_a_small_version_of_the_study(tmp_path: Path) -> None:
     blank = bright.mined(tmp_path, "blank", snr, "bright_target_snr = 1e9\n")
     lit = bright.mined(tmp_path, "lifted", snr, "")
     assert blank.nulls == {"blank sky"}
-    assert len(lit.nulls) == 2 or lit.nulls == {"blank sky and the residu"}
-    assert not bright.holds([blank], say=False)
-    assert bright.holds([lit], say=False)
+    assert lit.nulls == {"blank sky and the residu"}
+    assert (blank.q < 0.05).sum() >= 5
+    assert not (lit.q < 0.05).any()

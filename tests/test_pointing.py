@@ -59,6 +59,19 @@ def test_extended_faint_and_cut_off_sources() -> None:
     assert np.isnan(found.dx[1:]).all()
 
 
+@pytest.mark.parametrize("fwhm", [2.0, 3.0, 6.0, 15.0])
+def test_flat_tops(fwhm: float) -> None:
+    """Cut off at half of their height, after which a flat field spreads them by 1 %, they are flat; whole ones never are."""
+    rng = np.random.default_rng(6)
+    beam = BeamShape(fwhm, fwhm, 0.0)
+    x, y = lattice(9, rng) if fwhm > 10 else lattice(25, rng)
+    whole = image(x, y, np.full(len(x), 200.0), beam, rng)
+    cut = np.minimum(whole, 150.0) * rng.normal(1, 0.003, whole.shape)
+    assert not centroids(Pixels(whole), x, y, beam).flat.any()
+    found = centroids(Pixels(cut.astype(np.float32)), x, y, beam)
+    assert found.flat[np.isfinite(found.dx)].mean() > (0.9 if fwhm > 2 else 0.0)
+
+
 @pytest.mark.parametrize("gradient", [0.0, 2e-3])
 def test_shift_and_gradient(gradient: float) -> None:
     """Shift and gradient over the field are found, a gradient only where there is one; moved places are right."""
@@ -81,7 +94,7 @@ def test_shift_and_gradient(gradient: float) -> None:
 def made_up(dx: np.ndarray, dy: np.ndarray, error: float) -> Centroids:
     """Centroids of points of S/N 30."""
     ones = np.ones(len(dx))
-    return Centroids(dx, dy, error * ones, 30 * ones, ones, ones)
+    return Centroids(dx, dy, error * ones, 30 * ones, ones, ones, np.zeros(len(dx), bool))
 
 
 def test_sources_that_are_elsewhere_do_not_matter() -> None:

@@ -142,10 +142,11 @@ FILES = [
     Real(
         ASTROPY,
         "astropy/wcs/tests/data/dss.14.29.56-62.41.05.fits.gz",
-        "start_assumed site_unsettled geocentre no_unit no_beam frame_assumed",
+        "start_assumed site_unsettled geocentre no_unit no_beam frame_assumed photographic_assumed",
         middle="1976-03-11T18:13:00.000",
         exposure=4200.0,
         instrument="UK 48-inch Schmidt",
+        band="bandpass 0",
         dialect="plate_headers",
     ),
     # A camera in orbit, 1994: DD/MM/YY and TIME-OBS in the primary header, INHERIT in the extensions.

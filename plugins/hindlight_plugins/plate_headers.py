@@ -1,5 +1,7 @@
 """Headers of scanned plates and of early detectors, where an observer's log book speaks.
 
+An emulsion, or a card that numbers a plate, makes the response photographic; emulsion and filter make the band.
+
 The date may be that of the night, with a time of day after midnight; the time may be local or sidereal; the exposure
 may be in minutes. What the header itself can settle (by MJD, longitude, sidereal time, the stated offset of local
 time) is settled, with a word; otherwise the frame has no clock. A day is never guessed.
@@ -33,6 +35,9 @@ from hindlight import (
     spoken_exposure,
 )
 
+NUMBERED = ("PLTLABEL", "PLATENUM", "PLATE-ID", "PLATEID", "PLTRAH")
+READ_OUT = frozenset(("RDNOISE", "READNOIS", "READNOI", "CCDTEMP", "CCD-TEMP"))  # of a detector that is no plate
+NO_FILTER = ("", "NONE", "NO", "OPEN", "CLEAR")
 PLATES = frozenset(("PLTLABEL", "PLATENUM", "PLATE-ID", "PLATEID", "PLATE", "PLTSCALE", "EMULSION", "PLTRAH"))
 LOCAL_CLOCKS = ("LT", "LT-OBS", "LOCTIME", "LOC-TIME", "LOCALTIM", "TIME-LOC")
 CLOCKS = ("TIME-OBS", "TIME_OBS", "START", "TIME-BEG")  # local only where the comment says so
@@ -69,7 +74,25 @@ class PlateHeaders(Dialect):
 
     def read(self, cards: Cards, axes: PlaneAxes) -> FrameFacts:
         """The facts of one plane."""
-        return read_facts(cards, axes, _instant, spoken_exposure)
+        facts = read_facts(cards, axes, _instant, spoken_exposure)
+        emulsion = _joined(cards.text("EMULSION"))
+        numbered = any(key in cards for key in NUMBERED) or bool(cards.text("PLATE"))
+        if not emulsion and (not numbered or cards.has_any(READ_OUT)):
+            return facts
+        words = facts.assumptions if emulsion else (*facts.assumptions, "photographic_assumed")
+        return replace(facts, band=_band(cards, emulsion), response="photographic", assumptions=words)
+
+
+def _band(cards: Cards, emulsion: str) -> str:
+    """Emulsion and filter as `IIIaJ+GG385`, or the code of the band pass where there is neither."""
+    code = cards.get("BANDPASS")
+    glass = _joined(cards.text("FILTER"))
+    parts = [emulsion, "" if glass.upper() in NO_FILTER else glass]
+    return "+".join(filter(None, parts)) or ("" if code is None else f"bandpass {code}")
+
+
+def _joined(text: str) -> str:
+    return "".join(text.split())
 
 
 def _speaks_of_night(cards: Cards, key: str) -> bool:

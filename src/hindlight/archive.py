@@ -364,11 +364,11 @@ def _plain(found: Sequence[_Found]) -> Columns:
     columns: Columns = {name: np.array([getattr(f, name) for f in facts], dtype=float) for name in numbers}
     columns |= {
         name: _text([visible(getattr(f, name)) for f in facts])
-        for name in ("instrument", "band", "stokes", "unit", "primary_beam")
+        for name in ("instrument", "band", "stokes", "unit", "primary_beam", "response")
     }
     frequency = columns["frequency_hz"]
     columns["frequency_hz"] = np.where((frequency > 0) & np.isfinite(frequency), frequency, NAN)
-    columns["barycentric"] = np.array([f.barycentric for f in facts], dtype=bool)
+    columns |= {name: np.array([getattr(f, name) for f in facts], dtype=bool) for name in ("barycentric", "negative")}
     columns["archive"] = _text([f.archive for f in found])
     columns["path"] = _text([f.entry.path for f in found])
     for kind in COMPANION_KINDS:

@@ -115,6 +115,12 @@ def _one_of(*choices: str, fold: Callable[[str], str] = str.lower) -> Callable[[
     return read
 
 
+def _truth(value: Any) -> bool:
+    if not isinstance(value, bool):
+        raise ValueError("true or false")
+    return value
+
+
 def _beam(value: Any) -> float | Vector:
     what = "a positive number, or [major, minor, angle] with major not below minor (arcsec, degrees east of north)"
     if not isinstance(value, list | tuple):
@@ -183,6 +189,8 @@ FACTS = {
     "stokes": Key("Stokes parameter or correlation", '"I"', _one_of(*STOKES, fold=str.upper)),
     "saturation": Key("saturation level in the pixels' unit", "60000.0", _number("a number")),
     "electrons_per_unit": Key("electrons for one unit of the pixels", "2.0", _number(POSITIVE, 0.0)),
+    "response": Key("of the detector", '"photographic"', _one_of("linear", "photographic")),
+    "negative": Key("whether stars are darker than the sky", "true", _truth),
     "primary_beam": Key(
         "whether the primary beam has been divided out", '"uncorrected"', _one_of("corrected", "uncorrected")
     ),
@@ -245,12 +253,6 @@ def _checked(where: str, key: str, value: Any, read: Callable[[Any], Any]) -> An
         return read(value)
     except ValueError as expected:
         raise UsageError(f"{where} {key}: expected {expected}, got {value!r}") from None
-
-
-def _truth(value: Any) -> bool:
-    if not isinstance(value, bool):
-        raise ValueError("true or false")
-    return value
 
 
 def _later(first: str, second: str) -> bool:

@@ -27,12 +27,25 @@ MOST_BRIGHT = 0.5  # brightenings that fill more of the samples than this are no
 Mask = NDArray[np.bool_]
 
 
+@dataclass(frozen=True)
+class SeenOnly:
+    """Photographic frames that tell only whether the target is seen: how many, in how many it is, and the median flux of
+
+    the faintest comparison seen in each, NaN where none is known.
+    """
+
+    n_frames: int = 0
+    n_seen: int = 0
+    limit: float = float("nan")
+
+
 @dataclass(frozen=True, eq=False)
 class ChannelView:
     """One channel of a target: its curve, how many frames cover it, how many of them are calibrated, and its thresholds.
 
     `deep` are its fluxes in deep images made of frames of the curve, and `within` the deep image that each sample of
-    the curve belongs to, -1 for none; None where the channel has no deep image.
+    the curve belongs to, -1 for none; None where the channel has no deep image. `seen_only` tells of frames that give no
+    flux, which are not in the curve.
     """
 
     curve: LightCurve
@@ -41,6 +54,7 @@ class ChannelView:
     thresholds: Thresholds
     deep: LightCurve | None = None
     within: IntArray | None = None
+    seen_only: SeenOnly = SeenOnly()
 
     @property
     def snr(self) -> FloatArray:
@@ -65,8 +79,8 @@ class ChannelView:
     @property
     def seen(self) -> bool:
         """Seen in a frame or in the mean."""
-        if len(self.curve) == 0:
-            return False
+        if len(self.curve) == 0 or self.seen_only.n_seen:
+            return self.seen_only.n_seen > 0
         mean, error = weighted_mean(self.curve.flux, self.curve.flux_err)
         in_mean = (abs(mean) if self.curve.channel.signed else mean) > self.thresholds.mean * error
         return bool(in_mean or self.detected.any() or self.seen_deep)
@@ -160,7 +174,7 @@ def standing(view: View, beyond_chance: bool, established: bool, detection: Dete
     """The verdict in one word; see `hindlight.schema.STANDINGS`. Not `testable`: the controls could not decide."""
     used = [len(c.curve) for c in view.channels]
     if not any(used):
-        return "uncovered"
+        return "undecided" if any(c.seen_only.n_frames for c in view.channels) else "uncovered"
     if max(used) < detection.min_frames or not testable:
         return "undecided"
     if not beyond_chance:
@@ -321,6 +335,9 @@ def channel_row(view: View, c: ChannelView) -> dict[str, Any]:
         "n_deep": 0 if c.deep is None else len(c.deep),
         "deep_flux": deep,
         "deep_flux_err": deep_err,
+        "n_seen_only": c.seen_only.n_frames,
+        "n_seen": c.seen_only.n_seen,
+        "seen_limit": c.seen_only.limit,
     }
 
 

@@ -1,8 +1,8 @@
 """Which frames share a channel: the key of comparable fluxes.
 
-Frames of one instrument, band, Stokes parameter, unit and state of the primary beam are split by frequency and then by
-beam into classes of limited span. Classes that a run has already are kept and joined, so that an extended run keeps its
-labels. Frames without a frequency or a beam never share a class with frames that have one.
+Frames of one instrument, band, Stokes parameter, unit, response and state of the primary beam are split by frequency
+and then by beam into classes of limited span. Classes that a run has already are kept and joined, so that an extended
+run keeps its labels. Frames without a frequency or a beam never share a class with frames that have one.
 """
 
 from __future__ import annotations
@@ -20,6 +20,7 @@ from hindlight.settings import Channels
 
 GROUP = ("instrument", "band", "stokes", "unit")
 CORRECTED = "corrected"
+LINEAR = "linear"  # is not said in labels
 
 
 @dataclass(frozen=True)
@@ -83,7 +84,8 @@ def _beam(frames: Mapping[str, Any]) -> FloatArray:
 
 def _rows_by_group(frames: Mapping[str, Any]) -> dict[tuple[str, ...], IntArray]:
     rows: dict[tuple[str, ...], list[int]] = {}
-    for row, key in enumerate(zip(*(frames[name] for name in GROUP), _on_sky(frames), strict=True)):
+    responses = ["" if name == LINEAR else name for name in frames["response"].tolist()]
+    for row, key in enumerate(zip(*(frames[name] for name in GROUP), responses, _on_sky(frames), strict=True)):
         rows.setdefault(key, []).append(row)
     return {key: np.array(found) for key, found in rows.items()}
 
@@ -162,10 +164,10 @@ def _runs(values: FloatArray, factor: float) -> list[IntArray]:
 
 def _label(group: Sequence[str], frequency: float, beam: float, taken: set[str]) -> str:
     """A label such as `camera|r|I|1.2as|adu`, with a number where it would be that of another channel."""
-    instrument, band, stokes, unit, on_sky = (_plain(text) for text in group)
+    instrument, band, stokes, unit, *more = (_plain(text) for text in group)
     megahertz = "" if math.isnan(frequency) else f"{_rounded(frequency / 1e6, 3)}MHz"
     width = "" if math.isnan(beam) else f"{_rounded(beam, 2)}as"
-    label = "|".join(part for part in (instrument, band, megahertz, stokes, width, unit, on_sky) if part)
+    label = "|".join(part for part in (instrument, band, megahertz, stokes, width, unit, *more) if part)
     number = 2
     unique = label
     while unique in taken:

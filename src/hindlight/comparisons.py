@@ -13,18 +13,20 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from hindlight.ensemble import median_of
 from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.plan import BrightSources
 from hindlight.pointing import LEAST_SNR
 from hindlight.positions import BlankSky
+from hindlight.robust import median_of
 from hindlight.settings import Comparisons
 from hindlight.systems import unit_vectors
 
 FAINTER = 0.1  # a neighbour of so small a part of a source's S/N does not disturb it
 POINT_WIDTH = 1.3  # median width over the beam's up to which a source counts as a point
+ALIKE = 7  # sources of like brightness on a plate whose widths are compared
 SPARE = 2  # so many times more candidates are looked at than comparisons are wanted
 OFTEN = 0.5  # of the frames that are deep enough to show it, a steady source is found in at least this fraction
+FLAT = 0.1  # of the frames it is found in: one that has a flat top in more of them is saturated, whatever headers say
 SURE = 2.0  # a source of so many times the least S/N is expected to be found
 ROUNDS = 4
 
@@ -35,13 +37,14 @@ Columns = dict[str, Any]
 class Located:
     """Centroids of n candidates in one frame: ICRS offsets in degrees (along ra times cos dec, and dec), S/N, width.
 
-    Shape (n,), NaN where a source was not found or not covered.
+    Shape (n,), NaN where a source was not found or not covered; `flat` says whether its top is cut off.
     """
 
     east: FloatArray
     north: FloatArray
     snr: FloatArray
     width: FloatArray
+    flat: NDArray[np.bool_]
 
 
 def candidates(
@@ -79,7 +82,8 @@ def placed(
     """ICRS degrees of the comparisons among the candidates at (ra, dec), shape (n,), brightest first.
 
     A place is the median over the frames of the centroids less each frame's own shift, the mean shift of all frames
-    being zero. Left out are sources that are no points, and those found in too few of the frames deep enough for them.
+    being zero. Left out are sources that are no points, saturated ones, and those found in too few of the frames
+    deep enough for them.
     """
     if not found or len(ra) == 0:
         return ra[:0], dec[:0]
@@ -90,9 +94,24 @@ def placed(
     seen = np.isfinite(snr)
     good = (seen.sum(axis=0) >= 2) & np.isfinite(place_east) & np.isfinite(place_north)
     good &= median_of(width) <= POINT_WIDTH
+    good &= np.stack([f.flat for f in found]).sum(axis=0) <= FLAT * seen.sum(axis=0)
     good &= _steady(snr, seen)
     kept = np.flatnonzero(good)[: settings.wanted]
     return ra[kept] + place_east[kept] / np.cos(np.radians(dec[kept])), dec[kept] + place_north[kept]
+
+
+def among_alike(snr: FloatArray, width: FloatArray) -> FloatArray:
+    """Widths over the median of those of the ALIKE sources nearest in S/N, shape (n,), NaN where there is none.
+
+    A bright star on a plate is a wide one: only among its like does its width tell whether it is a point.
+    """
+    relative = np.full(len(width), np.nan)
+    found = np.flatnonzero(np.isfinite(width) & np.isfinite(snr))
+    order = found[np.argsort(-snr[found], kind="stable")]
+    for at, source in enumerate(order.tolist()):
+        first = min(max(0, at - ALIKE // 2), max(0, len(order) - ALIKE))
+        relative[source] = width[source] / np.median(width[order[first : first + ALIKE]])
+    return relative
 
 
 def _steady(snr: FloatArray, seen: NDArray[np.bool_]) -> NDArray[np.bool_]:

@@ -8,33 +8,42 @@ read again. Nothing here reads files.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from functools import partial
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import optimize, sparse, special
-from scipy.sparse import csgraph
 from scipy.sparse.linalg import lsqr
 
+from hindlight import losses
 from hindlight.background import MAD_TO_SIGMA
 from hindlight.lightcurve import FloatArray, IntArray
+from hindlight.response import PHOTOGRAPHIC, Responses, curve_from, faintest_seen, solve_responses
+from hindlight.robust import (
+    HUBER,
+    column_scatter,
+    connected,
+    excess_scatter,
+    frame_scatter,
+    median_of,
+    most_variable,
+)
+from hindlight.schema import Flag
 from hindlight.settings import Comparisons
 
-HUBER = 1.345  # 95 % efficiency for normal errors (P. J. Huber 1981, Robust Statistics)
 ROUNDS = 12  # of reweighting and linearising
 FEWEST_SNR = 3.0  # a comparison whose typical S/N in a channel is lower tells nothing of gains there
 MAD_ERROR = 1.167  # relative error of a MAD's sigma, times sqrt(n)
 SIGNIFICANT = 3.3  # sigma: one frame in a thousand by chance
 FEWEST_CONTROLS = 30
-VARIABLE_P = 1e-6
-VARIABLE_FACTOR = 3.0  # a comparison that scatters so many times more than the typical one is no comparison
 BAD_P = 1e-6
 BAD_SCATTER = 0.5
 WORTH_SAYING = 0.01
 MEDIAN_ERROR = 1.253  # relative to that of the mean, for normal errors
 FEWEST_HELD = 5  # frames that tell how much light the estimator counts
+FLUX_COLUMNS = ("frame", "position", "x", "y", "flux", "flux_err")  # of comparisons
 IMAGE_COLUMNS = ("shift_x", "shift_y", "fwhm", "held")  # what measuring found of the image itself
 
 Columns = dict[str, Any]
@@ -81,13 +90,13 @@ def solve_gains(flux: FloatArray, flux_err: FloatArray, fewest: int = 3) -> Gain
         gain, brightness = _bilinear_fit(flux, flux_err, known)
         relative, error = _relative(flux, flux_err, known, gain, brightness)
         common = excess_scatter(relative[known], error[known])
-        scatter = np.array([_column_scatter(relative[:, s], error[:, s], known[:, s]) for s in range(n_sources)])
-        worst = _worst(relative, error, known, scatter, common)
+        scatter = np.array([column_scatter(relative[:, s], error[:, s], known[:, s]) for s in range(n_sources)])
+        worst = most_variable(relative, error, known, scatter, common)
         if worst is None:
             break
         known = known.copy()
         known[:, worst] = False
-    frame_scatter = np.array([_frame_scatter(relative[e], error[e], known[e], common) for e in range(n_frames)])
+    of_frame = np.array([frame_scatter(relative[e], error[e], known[e], common) for e in range(n_frames)])
     weight = np.where(known, 1.0 / (error**2 + common**2), 0.0).sum(axis=1)
     n_used = known.sum(axis=1)
     enough = n_used >= fewest
@@ -97,20 +106,13 @@ def solve_gains(flux: FloatArray, flux_err: FloatArray, fewest: int = 3) -> Gain
     return Gains(
         gain=np.where(enough, gain, np.nan),
         gain_err=gain_err,
-        frame_scatter=np.where(enough, frame_scatter, np.nan),
+        frame_scatter=np.where(enough, of_frame, np.nan),
         n_comparisons=np.where(enough, n_used, 0).astype(np.int64),
         brightness=np.where(known.any(axis=0), brightness, np.nan),
         scatter=np.where(known.any(axis=0), scatter, np.nan),
         common_scatter=common,
         spread=float(MAD_TO_SIGMA * np.median(np.abs(logs - np.median(logs)))),
     )
-
-
-def median_of(values: FloatArray, axis: int = 0) -> FloatArray:
-    """The median of what is not NaN, NaN where all is."""
-    some = np.isfinite(values).any(axis=axis)
-    filled = np.where(np.expand_dims(some, axis), values, 0.0)
-    return np.where(some, np.nanmedian(filled, axis=axis), np.nan)
 
 
 def _bilinear_fit(flux: FloatArray, flux_err: FloatArray, known: NDArray[np.bool_]) -> tuple[FloatArray, FloatArray]:
@@ -122,9 +124,7 @@ def _bilinear_fit(flux: FloatArray, flux_err: FloatArray, known: NDArray[np.bool
     brightness = np.where(brightness > 0, brightness, 1.0)
     gain = np.nan_to_num(median_of(np.where(known, flux / brightness, np.nan), axis=1), nan=1.0)
     gain = np.where(gain > 0, gain, 1.0)
-    part = _parts(known)
-    ones = np.ones(len(frame))
-    rows = np.arange(len(frame))
+    part = connected(known)
     for _ in range(ROUNDS):
         model = gain[frame] * brightness[source]
         relative = value / model - 1.0
@@ -133,14 +133,8 @@ def _bilinear_fit(flux: FloatArray, flux_err: FloatArray, known: NDArray[np.bool
         total = np.hypot(sigma, common)
         pull = relative / total
         weight = np.sqrt(np.minimum(1.0, HUBER / np.maximum(np.abs(pull), 1e-300))) / total
-        matrix = sparse.csr_matrix(
-            (
-                np.concatenate((weight * ones, weight * ones)),
-                (np.concatenate((rows, rows)), np.concatenate((frame, n_frames + source))),
-            ),
-            shape=(len(frame), n_frames + n_sources),
-        )
-        step = lsqr(matrix, weight * relative, atol=1e-12, btol=1e-12)[0]
+        matrix, size = losses.effects(weight, frame, source, (n_frames, n_sources))
+        step = lsqr(matrix, weight * relative, atol=1e-12, btol=1e-12)[0] / size
         step = np.clip(step, -0.5, 0.5)
         gain, brightness = gain * np.exp(step[:n_frames]), brightness * np.exp(step[n_frames:])
         if np.abs(step).max() < 1e-9:
@@ -154,73 +148,12 @@ def _bilinear_fit(flux: FloatArray, flux_err: FloatArray, known: NDArray[np.bool
     return gain, brightness
 
 
-def _parts(known: NDArray[np.bool_]) -> IntArray:
-    """The connected part of each frame, then of each source."""
-    graph = sparse.bmat([[None, sparse.csr_matrix(known)], [sparse.csr_matrix(known.T), None]])
-    labels: IntArray = csgraph.connected_components(graph, directed=False)[1]
-    return labels
-
-
 def _relative(
     flux: FloatArray, flux_err: FloatArray, known: NDArray[np.bool_], gain: FloatArray, brightness: FloatArray
 ) -> tuple[FloatArray, FloatArray]:
     """Residual and error as fractions of the model, shape (n_frames, n_sources), NaN where unknown."""
     model = np.where(known, gain[:, None] * brightness, np.nan)
     return flux / model - 1.0, flux_err / model
-
-
-def excess_scatter(residual: FloatArray, error: FloatArray) -> float:
-    """Scatter s >= 0 beyond the errors by maximum likelihood, for residuals about a known mean; NaN without any.
-
-    Outliers beyond four times the typical pull are left aside. s maximises -sum(r^2 / (e^2 + s^2) + ln(e^2 + s^2)) / 2.
-    """
-    if len(residual) == 0:
-        return float("nan")
-    pull = np.abs(residual) / error
-    kept = pull <= 4.0 * max(1.0, MAD_TO_SIGMA * float(np.median(pull)))
-    square, variance = residual[kept] ** 2, error[kept] ** 2
-
-    def score(s2: float) -> float:
-        total = variance + s2
-        return float((square / total**2 - 1.0 / total).sum())
-
-    if score(0.0) <= 0.0:
-        return 0.0
-    high: float = float(square.max())
-    if score(high) >= 0.0:
-        return float(high**0.5)
-    best = float(optimize.brentq(score, 0.0, high, xtol=1e-12, rtol=1e-9))
-    return float(best**0.5)
-
-
-def _column_scatter(residual: FloatArray, error: FloatArray, known: NDArray[np.bool_]) -> float:
-    return excess_scatter(residual[known], error[known]) if known.sum() >= 3 else float("nan")
-
-
-def _worst(
-    residual: FloatArray, error: FloatArray, known: NDArray[np.bool_], scatter: FloatArray, common: float
-) -> int | None:
-    """The source that scatters most, if that is far more than the typical one does and no chance; None otherwise."""
-    if known.any(axis=0).sum() <= 3 or not np.isfinite(scatter).any():
-        return None
-    ratio = np.nan_to_num(scatter, nan=-1.0)
-    at = int(ratio.argmax())
-    typical = max(float(np.nanmedian(scatter)), 1e-3)
-    mine = known[:, at]
-    chi2 = float((residual[mine, at] ** 2 / (error[mine, at] ** 2 + common**2)).sum())
-    chance = float(special.chdtrc(int(mine.sum()) - 1, chi2))
-    return at if scatter[at] > VARIABLE_FACTOR * typical and chance < VARIABLE_P else None
-
-
-def _frame_scatter(residual: FloatArray, error: FloatArray, known: NDArray[np.bool_], common: float) -> float:
-    """A frame's own scatter where it is significantly larger than the channel's, else the channel's."""
-    n = int(known.sum())
-    if n < 5:
-        return common
-    chi2 = float((residual[known] ** 2 / (error[known] ** 2 + common**2)).sum())
-    if special.chdtrc(n - 1, chi2) > 1e-3:
-        return common
-    return max(common, excess_scatter(residual[known], error[known]))
 
 
 def error_scales(pulls: FloatArray, n_controls: IntArray) -> FloatArray:
@@ -250,17 +183,19 @@ def error_scales(pulls: FloatArray, n_controls: IntArray) -> FloatArray:
 
 def solved(
     frames: IntArray, channels: NDArray[np.object_], evidence: Sequence[Columns], fluxes: Sequence[Columns],
-    settings: Comparisons,
+    settings: Comparisons, images: Columns, given: Mapping[int, float] | None = None,
 ) -> tuple[Columns, tuple[str, ...]]:  # fmt: skip
-    """The solution for frames of shape (n,) in order of frame, and a sentence on each channel's flux scale.
+    """The solution for frames of shape (n,) in order of frame, and sentences on each channel's flux scale.
 
-    `evidence` and `fluxes` are those of `tasks.FrameEvidence`, batch by batch.
+    `evidence` and `fluxes` are those of `tasks.FrameEvidence`, batch by batch; `images` are the frames' columns width,
+    height, pixel_scale and response; `given` are known fluxes of comparisons by position.
     """
+    centres = losses.centres(images)
     known = {
         name: np.concatenate([part[name] for part in evidence])
         for name in ("frame", "pull", "n_controls", *IMAGE_COLUMNS)
     }
-    rows = {name: np.concatenate([part[name] for part in fluxes]) for name in ("frame", "position", "flux", "flux_err")}
+    rows = {name: np.concatenate([part[name] for part in fluxes]) for name in FLUX_COLUMNS}
     at = {int(frame): i for i, frame in enumerate(known["frame"])}
     parts, said = [], []
     for label in sorted(set(channels.tolist())):
@@ -268,36 +203,48 @@ def solved(
         index = np.array([at.get(int(frame), -1) for frame in mine])
         own = {name: np.append(values, np.nan)[index] for name, values in known.items()}  # NaN for a frame not there
         scale = error_scales(own["pull"], np.nan_to_num(own["n_controls"]).astype(np.int64))
-        flux, flux_err = _matrix(rows, mine)
+        centre = {name: values[channels == label] for name, values in centres.items()}
+        image = {name: own[name] for name in IMAGE_COLUMNS}
+        (x, y, flux, flux_err), sources = _matrices(rows, mine)
         # Scatter beyond the errors is a fraction of the flux: what blank sky shows as well must not count as that.
-        gains = solve_gains(flux, flux_err * scale[:, None], settings.fewest)
-        part = solution(mine, label, gains, scale, {name: own[name] for name in IMAGE_COLUMNS}, settings)
-        parts.append(part)
-        said += _said(label, part, gains)
+        sigma = flux_err * scale[:, None]
+        if (images["response"][channels == label] == PHOTOGRAPHIC).all():
+            known_flux = np.array([(given or {}).get(int(source), np.nan) for source in sources])
+            found = solve_responses(flux, sigma, known_flux, settings.fewest_for_curve)
+            part = _of_plates(mine, label, found, faintest_seen(flux, sigma, found.brightness), scale, image)
+            loss = losses.Loss(np.zeros(len(mine)))
+            said += [*_said_of_errors(label, scale), *_said_of_plates(label, part, found, settings)]
+        else:
+            degrees = losses.distance(x, y, {name: values[:, None] for name, values in centre.items()})
+            gains, loss = losses.fitted(flux, sigma, degrees, partial(solve_gains, fewest=settings.fewest))
+            part = solution(mine, label, gains, scale, image, settings)
+            part["extra_scatter"] = np.hypot(part["extra_scatter"], loss.scatter)
+            said += [*_said(label, part, gains), *loss.said(label)]
+        parts.append(part | losses.columns(loss, centre))
     joined = {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}
     order = np.argsort(joined["frame"], kind="stable")
     return {name: values[order] for name, values in joined.items()}, tuple(said)
 
 
-def _matrix(rows: Columns, frames: IntArray) -> tuple[FloatArray, FloatArray]:
-    """Fluxes and errors of the comparisons in some frames (ascending), shape (n_frames, n_sources), NaN for none."""
+def _matrices(rows: Columns, frames: IntArray) -> tuple[FloatArray, IntArray]:
+    """x, y, flux and error of the comparisons in some frames (ascending), shape (4, n_frames, n_sources), NaN for none, and
+
+    which positions they are, shape (n_sources,).
+    """
     mine = np.isin(rows["frame"], frames)
     sources, column = np.unique(rows["position"][mine], return_inverse=True)
     row = np.searchsorted(frames, rows["frame"][mine])
-    flux, error = np.full((2, len(frames), len(sources)), np.nan)
-    flux[row, column], error[row, column] = rows["flux"][mine], rows["flux_err"][mine]
-    return flux, error
+    found = np.full((4, len(frames), len(sources)), np.nan)
+    for matrix, name in zip(found, FLUX_COLUMNS[2:], strict=True):
+        matrix[row, column] = rows[name][mine]
+    return found, sources
 
 
 def _said(label: str, part: Columns, gains: Gains) -> list[str]:
     """What the last lines of a run say of a channel's flux scale."""
     n, tied = len(part["frame"]), int((part["verdict"] != "uncalibrated").sum())
     bad = int((part["verdict"] == "bad").sum())
-    scaled = part["error_scale"] != 1.0
-    scales = [
-        f"errors of {label} were scaled to the scatter of blank sky in {int(scaled.sum())} of {n} frames, by "
-        f"{part['error_scale'][scaled].min():.2f} to {part['error_scale'][scaled].max():.2f}"
-    ] if scaled.any() else []  # fmt: skip
+    scales = _said_of_errors(label, part["error_scale"])
     held = float(part["held"][0])
     if abs(held - 1.0) > WORTH_SAYING:
         scales.append(
@@ -318,6 +265,62 @@ def _said(label: str, part: Columns, gains: Gains) -> list[str]:
     )
     said += " their errors"
     return [*scales, said + (f"; {bad} frames scatter so much that they are not used" if bad else "")]
+
+
+def _said_of_errors(label: str, scale: FloatArray) -> list[str]:
+    scaled = scale[scale != 1.0]
+    if len(scaled) == 0:
+        return []
+    return [
+        f"errors of {label} were scaled to the scatter of blank sky in {len(scaled)} of {len(scale)} frames, by "
+        f"{scaled.min():.2f} to {scaled.max():.2f}"
+    ]
+
+
+def _said_of_plates(label: str, part: Columns, found: Responses, settings: Comparisons) -> list[str]:
+    """What the last lines of a run say of a photographic channel."""
+    n, curved = len(part["frame"]), np.array([curve is not None for curve in found.curves])
+    lines = []
+    if curved.any():
+        scale = "fluxes of the table of comparisons" if found.by_table[curved].all() else "the plates' median curve"
+        if found.by_table.any() and not found.by_table[curved].all():
+            scale = "fluxes of the table of comparisons where plates show enough of these, elsewhere the median curve"
+        lines.append(
+            f"the flux scale of {label}: {int(curved.sum())} of {n} plates have a response curve from up to "
+            f"{int(found.n_comparisons.max())} comparisons, which scatter by "
+            f"{100 * float(np.median(found.scatter[curved])):.1f} % more than their errors; it is that of {scale}"
+        )
+        bad = int((part["verdict"] == "bad").sum())
+        lines += [f"{bad} plates of {label} scatter so much that they are not used"] if bad else []
+    if not curved.all():
+        lines.append(
+            f"{int((~curved).sum())} of {n} plates of {label} have fewer than {settings.fewest_for_curve} comparisons that "
+            "other plates or the table know: they tell only whether a source is seen, and no statistic uses them"
+        )
+    return lines
+
+
+def _of_plates(
+    frames: IntArray, channel: str, found: Responses, limit: FloatArray, scale: FloatArray, image: Columns
+) -> Columns:
+    """Rows of `schema.FRAME_SOLUTION` for photographic frames, shape (n,)."""
+    curved = np.array([curve is not None for curve in found.curves], bool)
+    with np.errstate(invalid="ignore"):
+        bad = curved & (found.scatter > BAD_SCATTER)
+    return {
+        "frame": frames,
+        "channel": np.full(len(frames), channel, object),
+        "gain": np.where(curved, 1.0, np.nan),
+        "gain_err": np.full(len(frames), np.nan),
+        **image,
+        "held": np.ones(len(frames)),  # what an aperture leaves out is in the curve
+        "error_scale": scale,
+        "extra_scatter": found.scatter,
+        "n_comparisons": found.n_comparisons,
+        "verdict": np.where(bad, "bad", np.where(curved, "good", "seen_only")).astype(object),
+        "curve": np.array(["" if curve is None else curve.text for curve in found.curves], object),
+        "seen_limit": limit,
+    }
 
 
 def solution(
@@ -347,6 +350,8 @@ def solution(
         "extra_scatter": np.where(tied, own, unknown),
         "n_comparisons": gains.n_comparisons,
         "verdict": verdict,
+        "curve": np.full(len(frames), "", object),
+        "seen_limit": np.full(len(frames), np.nan),
     }
 
 
@@ -363,9 +368,37 @@ def _held(told: FloatArray) -> float:
 def calibrated(rows: Columns, solution: Columns) -> tuple[FloatArray, FloatArray, NDArray[np.bool_]]:
     """Calibrated flux and error, and whether the frame is bad, for raw rows of shape (n,).
 
-    flux / gain and hypot(flux_err * error_scale, extra_scatter * flux) / gain; `solution` is sorted by frame.
+    flux / gain and hypot(flux_err * error_scale, extra_scatter * flux) / gain, where what sources lose is given back to
+    flux and error first (`losses.undone`); by the response curve where there is one. NaN where the frame tells only whether
+    a source is seen. `solution` is sorted by frame.
     """
-    at = np.searchsorted(solution["frame"], rows["frame"])
-    gain, flux = solution["gain"][at], rows["flux"]
-    error = np.hypot(rows["flux_err"] * solution["error_scale"][at], solution["extra_scatter"][at] * flux)
+    at = np.asarray(np.searchsorted(solution["frame"], rows["frame"]))
+    own = {name: solution[name][at] for name in losses.COLUMNS}
+    flux, sigma = losses.undone(rows, rows["flux_err"] * solution["error_scale"][at], own)
+    gain, error = solution["gain"][at], np.hypot(sigma, solution["extra_scatter"][at] * flux)
+    flux, error = _by_curves(flux, error, at, solution["curve"])
     return flux / gain, error / gain, np.asarray(solution["verdict"][at] == "bad")
+
+
+def flags(rows: Columns, solution: Columns) -> IntArray:
+    """The flags of raw rows of shape (n,), with the bit that only the solution can tell."""
+    at = np.asarray(np.searchsorted(solution["frame"], rows["frame"]))
+    mine, row = np.unique(at, return_inverse=True)
+    highest = np.array([curve_from(text).measured[-1] if text else np.inf for text in solution["curve"][mine]])
+    with np.errstate(invalid="ignore"):
+        beyond = rows["flux"] > highest[row]
+    return np.asarray(rows["flags"] | np.where(beyond, int(Flag.EXTRAPOLATED), 0))
+
+
+def _by_curves(
+    flux: FloatArray, error: FloatArray, at: IntArray, curves: NDArray[np.object_]
+) -> tuple[FloatArray, FloatArray]:
+    """Fluxes and errors after the response curves, of which `at` tells the row of each."""
+    curved = np.flatnonzero((curves != "")[at])
+    if len(curved) == 0:
+        return flux, error
+    flux, error = flux.copy(), error.copy()
+    curved = curved[np.argsort(at[curved], kind="stable")]
+    for mine in np.split(curved, np.flatnonzero(np.diff(at[curved])) + 1):
+        flux[mine], error[mine] = curve_from(curves[at[mine[0]]]).applied(flux[mine], error[mine])
+    return flux, error

@@ -11,9 +11,10 @@ import numpy as np
 
 from hindlight import store, tasks
 from hindlight.calibrate import upper_bounds
-from hindlight.ensemble import calibrated
+from hindlight.ensemble import calibrated, flags
 from hindlight.errors import UsageError
 from hindlight.lightcurve import FloatArray
+from hindlight.response import SEEN_SNR
 from hindlight.schema import LIGHT_CURVE
 from hindlight.store import RunFolder
 from hindlight.tables import astropy_table, read_ecsv
@@ -80,9 +81,14 @@ def _columns(run: RunFolder, tables: tasks.Book, rows: dict[str, Any], target: s
     known = [judged.get(channel, nothing) for channel in rows["channel"]]
     limit, above, quiet_err, confusion = (np.array([row[name] for row in known], float) for name in nothing)
     signed = np.array([tables.channels[channel].signed for channel in rows["channel"]], bool)
+    of_frame = np.searchsorted(tables.solution["frame"], rows["frame"])
+    seen_only = tables.solution["verdict"][of_frame] == "seen_only"
     with np.errstate(invalid="ignore"):
-        snr = flux / flux_err
-        detected = np.where(signed, np.abs(snr), snr) > limit
+        snr = np.where(
+            seen_only, rows["flux"] / (rows["flux_err"] * tables.solution["error_scale"][of_frame]), flux / flux_err
+        )
+        least = np.where(seen_only, np.maximum(SEEN_SNR, np.where(np.isfinite(limit), limit, 0.0)), limit)
+        detected = np.where(signed, np.abs(snr), snr) > least
     return {
         **{name: rows[name] for name in rows if name not in ("position", "gain")},
         "middle_utc": tables.frames["middle_utc"][at],
@@ -93,7 +99,8 @@ def _columns(run: RunFolder, tables: tasks.Book, rows: dict[str, Any], target: s
         "raw_flux": rows["flux"],
         "raw_flux_err": rows["flux_err"],
         "detected": detected,
-        "limit_sigma": _finite(limit * flux_err),
+        "limit_sigma": np.where(seen_only, tables.solution["seen_limit"][of_frame], _finite(limit * flux_err)),
+        "flags": flags(rows, tables.solution),
         "limit_bayes": np.where(signed, np.nan, upper_bounds(flux, np.hypot(flux_err, confusion))),
         "limit_above_quiet": _finite(above * np.hypot(flux_err, quiet_err)),
         "deep": np.isin(rows["frame"], tables.frames["related_to"]),

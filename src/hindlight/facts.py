@@ -106,6 +106,9 @@ class FrameFacts:
         Whether the times are already referred to the barycentre.
     electrons_per_unit, saturation, depth
         In units of the pixels after scaling.
+    response, negative
+        "linear", or "photographic" where measured fluxes need a curve of each frame's own; whether stars are darker than
+        the sky.
     clock_error_s
         1-sigma error of the header's clock.
     good_time_fraction
@@ -138,6 +141,8 @@ class FrameFacts:
     depth: float = NAN
     primary_beam: str = "unknown"
     primary_beam_fwhm_deg: float = NAN
+    response: str = "linear"
+    negative: bool = False
     clock_error_s: float = NAN
     good_time_fraction: float = NAN
     assumptions: tuple[str, ...] = ()

@@ -34,6 +34,7 @@ OBSOLETE = {
     "frequency_hz": ("no_frequency",),
     "stokes": ("stokes_assumed",),
     "primary_beam": ("primary_beam_unknown",),
+    "response": ("photographic_assumed",),
 }
 RADIO_UNITS = ("/beam", "Jy/pixel", "Jy/sr")
 
@@ -203,6 +204,10 @@ def _is_missing(key: str, facts: FrameFacts) -> bool:
         return facts.site is None and not facts.barycentric
     if key == "primary_beam":
         return facts.primary_beam == "unknown"
+    if key in ("response", "negative"):
+        return getattr(facts, key) == getattr(FrameFacts, key) or any(
+            w in facts.assumptions for w in OBSOLETE.get(key, ())
+        )
     name = {
         "instrument_name": "instrument", "beam_arcsec": "beam_major", "good_time_fraction": "exposure_s",
     }.get(key, key)  # fmt: skip

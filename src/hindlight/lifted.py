@@ -15,12 +15,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hindlight.background import MAD_TO_SIGMA
-from hindlight.ensemble import median_of
 from hindlight.lightcurve import Block, FloatArray, IntArray, freeze
+from hindlight.robust import median_of
 
 COPY = 1 << 40  # the k-th copy of a control has the control's id + k * COPY
 FEWEST_SOURCES = 3
 FEWEST_FRAMES = 8
+LEAST_SHARE = 0.1  # of a comparison's error that is noise of its own, at least
 LEAST_SNR = 5.0  # a comparison that is typically fainter tells nothing of what calibration leaves
 VARIABLE_FACTOR = 3.0  # a comparison that scatters so many times more than the typical one varies itself
 
@@ -60,7 +61,8 @@ def residuals(block: Block, solution: Columns) -> Residuals | None:
     with np.errstate(invalid="ignore", divide="ignore"):
         weight = np.where(known, block.flux_err**-2.0, 0.0)
         brightness = (weight * np.where(known, block.flux, 0.0)).sum(axis=1) / weight.sum(axis=1)
-        noise = block.raw_flux_err * solution["error_scale"][at] / gain / brightness[:, None]
+        relative, own = block.flux_err / brightness[:, None], extra * block.flux / brightness[:, None]
+        noise = np.sqrt(np.maximum(relative**2 - own**2, (LEAST_SHARE * relative) ** 2))
         usable = (known.sum(axis=1) >= max(FEWEST_FRAMES, tied.sum() / 2)) & (median_of(noise.T) <= 1 / LEAST_SNR)
         left = np.where(known, block.flux / brightness[:, None] - 1.0, np.nan)
         pull = MAD_TO_SIGMA * median_of(np.abs(left / np.hypot(noise, extra)).T)

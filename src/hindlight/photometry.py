@@ -61,7 +61,8 @@ class FrameToMeasure:
     Beam in arcsec and degrees east of north, NaN where unknown; `mjd` NaN where there is no date; `electrons_per_unit`
     and `saturation` in the unit of the pixels, NaN where unknown. `companions` are files by kind, see
     `settings.Companions`; one with gains, or else a Gaussian of `primary_beam_fwhm_deg` about the reference pixel, is
-    applied where `primary_beam` is "uncorrected".
+    applied where `primary_beam` is "uncorrected". With `negative` stars are darker than the sky: pixels, and with them
+    `saturation`, are meant with the other sign.
     """
 
     path: str
@@ -76,6 +77,7 @@ class FrameToMeasure:
     saturation: float = NAN
     primary_beam: str = "unknown"
     primary_beam_fwhm_deg: float = NAN
+    negative: bool = False
     companions: Mapping[str, str] = field(default_factory=dict)
 
 
@@ -83,7 +85,7 @@ class FrameToMeasure:
 class OpenFrame:
     """A frame whose header has been read: where its pixels and those of its companions are, its projection, its beam in
 
-    pixels.
+    pixels. Where it is a `negative` its pixels have the other sign, so that stars are brighter than the sky.
     """
 
     place: PlanePlace
@@ -91,6 +93,7 @@ class OpenFrame:
     beam: BeamShape
     unpacked_limit: int
     companions: Mapping[str, PlanePlace] = field(default_factory=dict)
+    negative: bool = False
     unpacked: Pixels | None = None
 
     def unpacked_once(self) -> OpenFrame:
@@ -102,6 +105,8 @@ class OpenFrame:
     def pixels(self, windows: Windows | None = None) -> Pixels:
         """Its pixels, blank where a companion says so; see `pixels.read_plane`."""
         own = self.unpacked or read_plane(self.place, self.unpacked_limit, windows)
+        if self.negative:
+            own = replace(own, scale=-own.scale, zero=-own.zero)
         read = {kind: self.companion(kind, windows) for kind in ("mask", "weight")}
         masks = tuple(Mask(found, kind == "weight") for kind, found in read.items() if found is not None)
         return replace(own, masks=masks) if masks else own
@@ -287,10 +292,11 @@ def _held(
 
 def locate(
     frame: FrameToMeasure, ra: FloatArray, dec: FloatArray, settings: Settings
-) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
-    """Where sources near ICRS positions (degrees, shape (n,)) are in a frame: ICRS degrees, S/N and width over the beam's.
+) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray, NDArray[np.bool_]]:
+    """Where sources near ICRS positions (degrees, shape (n,)) are in a frame: ICRS degrees, S/N, width over the beam's,
 
-    NaN for a source that does not stand out, is saturated or not on the image. Raises as `measure_frame` does.
+    and whether its top is flat. NaN for a source that does not stand out, is saturated or not on the image. Raises as
+    `measure_frame` does.
     """
     opened = _with_own_width(frame, open_frame(frame, settings).unpacked_once(), ra, dec)
     index, x, y, found = _centroids(frame, opened, ra, dec)
@@ -299,7 +305,9 @@ def locate(
     there[2, index], there[3, index] = found.snr, found.width
     there[:, index[found.highest >= frame.saturation]] = np.nan
     there[:2, ~np.isfinite(there[2])] = np.nan
-    return there[0], there[1], there[2], there[3]
+    flat = np.zeros(len(ra), bool)
+    flat[index] = found.flat & np.isfinite(there[2, index])
+    return there[0], there[1], there[2], there[3], flat
 
 
 def _gain(
@@ -391,7 +399,7 @@ def open_frame(frame: FrameToMeasure, settings: Settings) -> OpenFrame:
     sky = projection(image.hdu.cards, frame.path)
     place = PlanePlace(image, sky.axes, frame.plane)
     companions = {kind: companion_place(place, path, kind, limit) for kind, path in frame.companions.items()}
-    return OpenFrame(place, sky, _beam(frame, sky, settings.photometry), limit, companions)
+    return OpenFrame(place, sky, _beam(frame, sky, settings.photometry), limit, companions, frame.negative)
 
 
 def companion_place(image: PlanePlace, path: str, kind: str, unpacked_limit: int) -> PlanePlace:

@@ -130,7 +130,8 @@ class Cutout:
     """Raw pixels around a position in one frame.
 
     `pixels` has shape (size, size), NaN where blank or outside; `x`, `y` is the position in 0-based pixels of the
-    cut-out; `to_sky` of shape (2, 2) turns a pixel offset into (east, north) arcsec; `fwhm` is the beam in pixels.
+    cut-out; `to_sky` of shape (2, 2) turns a pixel offset into (east, north) arcsec; `fwhm` is the beam in pixels, and
+    `fwhm_known` whether header, settings or comparisons tell it: it is an assumed one otherwise.
     """
 
     frame: int
@@ -142,6 +143,7 @@ class Cutout:
     fwhm: float
     background: float
     rms: float
+    fwhm_known: bool = True
 
 
 @dataclass(frozen=True, eq=False)

@@ -31,6 +31,9 @@ GRADIENT_P = 1e-3
 HUBER = 1.345  # 95 % efficiency for normal errors (P. J. Huber 1981, Robust Statistics)
 REWEIGHTINGS = 10
 LOG16 = 4.0 * math.log(2.0)
+FLAT = 0.02  # pixels lower than the highest by less than this fraction are as high as it
+FLAT_PIXELS = 3.0  # so many more than three times those of a beam make a flat top; two or four fall together by chance
+FLAT_SNR = 30.0  # in a fainter source noise may do so
 
 
 @dataclass(frozen=True, eq=False)
@@ -38,7 +41,7 @@ class Centroids:
     """Where sources are, relative to where they were looked for: `dx`, `dy`, their error (pixels), S/N, shape (n,).
 
     `width` is the source's width over the beam's, 1 for a point; NaN where nothing stands out. `highest` is the highest
-    pixel near the source as it is stored.
+    pixel near the source as it is stored; `flat` says whether its top is cut off, as saturation does.
     """
 
     dx: FloatArray
@@ -47,6 +50,7 @@ class Centroids:
     snr: FloatArray
     width: FloatArray
     highest: FloatArray
+    flat: NDArray[np.bool_]
 
 
 def stamp_half(beam: BeamShape) -> int:
@@ -97,12 +101,22 @@ def centroids(pixels: Pixels, x: FloatArray, y: FloatArray, beam: BeamShape) -> 
     stamps[gone] = 0.0
     whole = (gone.sum(axis=(1, 2)) == 0) & (sigma > 0) & (used > border.sum() // 2)
     start = _start(stamps, x - ix, y - iy, sigma, whole, beam)
-    return _followed(stamps, whole, sigma, (x - ix, y - iy), start, beam, highest)
+    flat = _flat(stamps[:, ~border], beam)
+    return _followed(stamps, whole, sigma, (x - ix, y - iy), start, beam, highest, flat)
+
+
+def _flat(pixels: FloatArray, beam: BeamShape) -> NDArray[np.bool_]:
+    """Whether more pixels near a source, shape (n, m), are as high as the highest than in the beam, a Gaussian."""
+    of_beam = math.pi / 4.0 * beam.major * beam.minor * -math.log2(1.0 - FLAT)
+    top = pixels.max(axis=1, initial=0.0)
+    as_high = (pixels > (1.0 - FLAT) * top[:, None]).sum(axis=1)
+    return np.asarray(as_high >= FLAT_PIXELS + 3.0 * of_beam)
 
 
 def _followed(
     stamps: FloatArray, whole: NDArray[np.bool_], sigma: FloatArray, place: tuple[FloatArray, FloatArray],
     start: tuple[FloatArray, FloatArray], beam: BeamShape, highest: FloatArray,
+    flat: NDArray[np.bool_],
 ) -> Centroids:  # fmt: skip
     """Centroids from a start on; `place` is the predicted one from the middle of each stamp."""
     half, core = stamps.shape[1] // 2, max(2, math.ceil(CORE * beam.major))
@@ -133,7 +147,9 @@ def _followed(
         error = np.hypot(0.4247 * beam.fwhm / snr, SAMPLING_ERROR)
     seen = whole & (snr >= LEAST_SNR) & (np.hypot(dx, dy) < REACH / 1.5 * beam.major)
     dx, dy, error, snr, width = (np.where(seen, values, np.nan) for values in (dx, dy, error, snr, width))
-    return Centroids(dx, dy, error, snr, width, highest)
+    with np.errstate(invalid="ignore"):
+        flat = flat & (snr >= FLAT_SNR)
+    return Centroids(dx, dy, error, snr, width, highest, flat)
 
 
 def _beam_at(beam: BeamShape, gx: FloatArray, gy: FloatArray) -> FloatArray:

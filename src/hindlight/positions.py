@@ -76,8 +76,8 @@ class Targets:
         return np.where(np.isfinite(values), values, default)
 
 
-def read_targets(path: Path) -> Targets:
-    """Read a target list in any format astropy knows by the file's ending.
+def read_targets(path: Path, fluxes: bool = False) -> Targets:
+    """Read a target list in any format astropy knows by the file's ending; with `fluxes` the column `flux` too.
 
     Raises `UsageError` naming row and column for anything that is no target list.
     """
@@ -101,6 +101,8 @@ def read_targets(path: Path) -> Targets:
     }
     for name, values in optional.items():
         _refuse_out_of_range(name, values, path)
+    if fluxes and "flux" in table.colnames:
+        optional["flux"] = _quantity(table["flux"], "flux", table["flux"].unit or u.one, path)
     return Targets(names, ra % 360.0, dec, optional)
 
 

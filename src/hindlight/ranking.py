@@ -13,10 +13,10 @@ from numpy.typing import NDArray
 from scipy.stats import norm
 
 from hindlight import calibrate
-from hindlight.ensemble import excess_scatter
 from hindlight.judge import WHOLE, Judgement, oriented
 from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.plugin import Column, Plugin
+from hindlight.robust import excess_scatter
 from hindlight.settings import Detection
 
 FAILING_SHARE = 0.05  # a plugin that fails on more of the controls than this gets no p-value

@@ -162,7 +162,7 @@ def _own_comparisons(settings: Settings) -> Targets | None:
     if not settings.comparisons.table:
         return None
     try:
-        return read_targets(Path(settings.comparisons.table))
+        return read_targets(Path(settings.comparisons.table), fluxes=True)
     except UsageError as error:
         raise UsageError(f"[comparisons] table: {str(error).removeprefix('targets ')}") from None
 
@@ -358,10 +358,24 @@ def _solved(session: Session, frames: Columns, positions: Columns) -> tuple[str,
     session.crew.run(tasks.frame_evidence, [(session.order, int(batch)) for batch in batches], done)
     chosen = session.order.settings.comparisons
     solved, said = ensemble.solved(
-        frames["id"], frames["channel"], [f.frames for f in found], [f.comparisons for f in found], chosen
-    )
+        frames["id"], frames["channel"], [f.frames for f in found], [f.comparisons for f in found], chosen, frames,
+        _given_fluxes(session, positions),
+    )  # fmt: skip
     session.run.write_columns("frame_solution.parquet", FRAME_SOLUTION, solved)
     return said
+
+
+def _given_fluxes(session: Session, positions: Columns) -> dict[int, float]:
+    """Fluxes in the user's table of comparisons, by position; they are found by their places, which are those of it."""
+    given = session.comparisons
+    if given is None:
+        return {}
+    flux = dict(
+        zip(zip(given.ra.tolist(), given.dec.tolist(), strict=True), given.column("flux").tolist(), strict=True)
+    )
+    mine = positions["kind"] == "comparison"
+    places = zip(positions["ra"][mine].tolist(), positions["dec"][mine].tolist(), strict=True)
+    return {int(i): flux[place] for i, place in zip(positions["id"][mine], places, strict=True) if place in flux}
 
 
 def _measure(session: Session, pieces: Sequence[store.Piece]) -> None:

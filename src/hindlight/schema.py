@@ -31,6 +31,7 @@ class Flag(IntFlag):
     THIN_BACKGROUND = 8
     NEIGHBOUR = 16
     LOW_GAIN = 32
+    EXTRAPOLATED = 64
 
 
 FLAG_DOCS = {
@@ -40,6 +41,7 @@ FLAG_DOCS = {
     Flag.THIN_BACKGROUND: "fewer than half of the annulus pixels are there; no flux when fewer than 20 are",
     Flag.NEIGHBOUR: "a source brighter than the position itself stands within the inner radius of the annulus",
     Flag.LOW_GAIN: "the primary beam's gain is below the floor or unknown there: no flux",
+    Flag.EXTRAPOLATED: "brighter than the brightest comparison of its plate: the flux is extrapolated",
 }
 UNUSABLE = Flag.EDGE | Flag.BLANKED | Flag.SATURATED | Flag.LOW_GAIN
 
@@ -103,10 +105,18 @@ ASSUMPTIONS = {
     "rotation_doubtful": "the first axis has a rotation of its own: only that of the second was used, by the standard",
     "primary_header": "times and instrument were taken from the primary header, which the extension may not have meant",
     "primary_beam_apparent": "the primary beam is uncorrected and its width not known: fluxes are apparent",
+    "photographic_assumed": "the header names a plate but no emulsion: the response was taken as photographic",
     "gains_not_applied": "the primary beam is corrected already: the companion with its gains is not applied",
     "set_by_user": "these facts come from [[frames]] blocks of the settings",
     "set_without_effect": "facts that [[frames]] blocks give but this header leaves no place for",
     "unverified": "checksums were not verified",
+}
+
+VERDICTS = {
+    "uncalibrated": "too few comparisons: fluxes are raw, their errors widened",
+    "good": "tied to comparisons",
+    "bad": "comparisons scatter so much that the frame is not used",
+    "seen_only": "a photographic frame with too few comparisons for a response curve: it tells only seen or unseen",
 }
 
 STANDINGS = {
@@ -175,6 +185,10 @@ FRAMES = (
     TableColumn(
         "primary_beam_fwhm_deg", "FWHM of a Gaussian primary beam about the reference pixel, NaN for none", unit="deg"
     ),
+    TableColumn("response", "of the detector: linear, or photographic", dtype="str"),
+    TableColumn(
+        "negative", "whether stars are darker than the sky: pixels are taken with the other sign", dtype="bool"
+    ),
     TableColumn("clock_error_s", "1-sigma error of the header's clock, NaN where not stated", unit="s"),
     TableColumn(
         "weight_file", "companion with weights, relative to the archive folder", dtype="str", ucd="meta.id;meta.file"
@@ -228,7 +242,7 @@ POSITIONS = (
 FRAME_SOLUTION = (
     TableColumn("frame", "identifier of the frame", dtype="int64", ucd="meta.id"),
     TableColumn("channel", "key of comparable fluxes", dtype="str"),
-    TableColumn("gain", "calibrated flux = flux / gain"),
+    TableColumn("gain", "calibrated flux = flux / gain; NaN where the frame gives no flux on the channel's scale"),
     TableColumn("gain_err", "1-sigma error of the gain"),
     TableColumn("shift_x", "shift at the middle of the image against its header, NaN where unknown", unit="pixel"),
     TableColumn("shift_y", "shift at the middle of the image against its header, NaN where unknown", unit="pixel"),
@@ -239,7 +253,23 @@ FRAME_SOLUTION = (
     TableColumn("error_scale", "factor on the error"),
     TableColumn("extra_scatter", "further scatter, as a fraction of the flux"),
     TableColumn("n_comparisons", "comparison sources used", dtype="int64"),
-    TableColumn("verdict", "uncalibrated, good or bad", dtype="str"),
+    TableColumn("loss_off_axis", "fraction of the flux lost for each square degree from the centre", unit="deg**-2"),
+    TableColumn("loss_off_axis_err", "its 1-sigma error, NaN where the comparisons cannot tell", unit="deg**-2"),
+    TableColumn("loss_noise", "flux lost by sources that are seen, in units of their noise, as by CLEAN"),
+    TableColumn("loss_noise_err", "its 1-sigma error, NaN where the comparisons cannot tell"),
+    TableColumn("centre_x", "middle of the image, from which distances are counted", unit="pixel"),
+    TableColumn("centre_y", "middle of the image, from which distances are counted", unit="pixel"),
+    TableColumn("pixel_deg", "side of a pixel", unit="deg", ucd="instr.scale"),
+    TableColumn("verdict", ", ".join(VERDICTS), dtype="str"),
+    TableColumn(
+        "curve",
+        "of a photographic frame, in place of the gain: measured flux, flux and the curve's error as a fraction of the "
+        "flux, again and again; straight in logarithms between, a line through the origin below, empty for none",
+        dtype="str",
+    ),
+    TableColumn(
+        "seen_limit", "of a photographic frame: the flux of the faintest comparison seen in it, NaN where none is known"
+    ),
 )
 
 MEASUREMENTS = (
@@ -287,7 +317,11 @@ LIGHT_CURVE = (
         "clock_error_s", "1-sigma error of the frame's clock, NaN where not stated", unit="s", ucd="stat.error;time"
     ),
     TableColumn("exposure_s", "good time, NaN where unknown", unit="s", ucd="time.duration;obs.exposure"),
-    TableColumn("flux", "calibrated flux", ucd="phot.flux"),
+    TableColumn(
+        "flux",
+        "calibrated flux, NaN where there is none, or where a frame tells only whether a source is seen",
+        ucd="phot.flux",
+    ),
     TableColumn("flux_err", "its 1-sigma error", ucd="stat.error;phot.flux"),
     TableColumn("flux_unit", "unit of the fluxes and of background and rms", dtype="str", ucd="meta.unit"),
     TableColumn("raw_flux", "flux before the frame's gain", ucd="phot.flux"),
@@ -297,7 +331,8 @@ LIGHT_CURVE = (
     TableColumn("detected", "whether the measurement is above the channel's threshold", dtype="bool"),
     TableColumn(
         "limit_sigma",
-        "threshold times error: a source this bright is detected in half of such frames",
+        "threshold times error: a source this bright is detected in half of such frames; where a photographic frame gives "
+        "no flux, that of the faintest comparison seen in it",
         ucd="phot.flux;stat.max",
     ),
     TableColumn(
@@ -391,6 +426,14 @@ CHANNELS = (
     ),
     TableColumn("deep_flux", "weighted mean flux in the deep images", ucd="phot.flux;stat.mean"),
     TableColumn("deep_flux_err", "its 1-sigma error", ucd="stat.error;phot.flux"),
+    TableColumn(
+        "n_seen_only",
+        "photographic frames with too few comparisons for fluxes: only n_frames counts them",
+        dtype="int64",
+        ucd="meta.number;obs",
+    ),
+    TableColumn("n_seen", "of these, frames in which the target is seen", dtype="int64", ucd="meta.number;obs"),
+    TableColumn("seen_limit", "flux of the faintest comparison seen in these, their median", ucd="phot.flux;stat.max"),
 )
 
 CANDIDATES = (

@@ -144,11 +144,16 @@ class Comparisons:
     """Steady sources that put frames on one flux scale and show where they point."""
 
     wanted: int = setting(40, "comparison sources wanted for each field of sky; 0 leaves fluxes raw", minimum=0)
-    table: str = setting("", "table of comparison sources (ra, dec), used instead of searching the archive for them")
+    table: str = setting(
+        "", "table of comparison sources (ra, dec; flux if known), used instead of searching the archive"
+    )
     min_snr: float = setting(15.0, "S/N in a reference frame from which a source may serve", unit="sigma", minimum=5)
     isolation: float = setting(4.0, "no other bright source or target is nearer than this", unit="FWHM", minimum=1)
     located_in: int = setting(60, "frames per channel and field in which their exact places are measured", minimum=2)
     fewest: int = setting(3, "fewer comparisons than this leave a frame on its raw scale", minimum=2)
+    fewest_for_curve: int = setting(
+        8, "a photographic frame with fewer comparisons than this tells only whether a source is seen", minimum=3
+    )
     uncalibrated_scatter: float = setting(
         0.05,
         "error of the flux scale, as a fraction, where comparisons cannot tell; 5 % is usual, common practice, no source",

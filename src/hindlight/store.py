@@ -21,6 +21,7 @@ import pyarrow as pa
 from numpy.typing import NDArray
 
 from hindlight.ensemble import calibrated
+from hindlight.ensemble import flags as flags_of
 from hindlight.errors import RunInUseError, UsageError
 from hindlight.lightcurve import Block, Channel, FloatArray, IntArray, freeze
 from hindlight.schema import FRAME_SOLUTION, FRAMES, MEASUREMENTS, POSITIONS, UNUSABLE, TableColumn
@@ -210,7 +211,7 @@ def _block(rows: Columns, positions: IntArray, names: Sequence[str], solution: C
         return filled
 
     flags = np.zeros((len(positions), len(frames)), np.int64)
-    flags[row, column] = rows["flags"]
+    flags[row, column] = flags_of(rows, solution)
     flags.flags.writeable = False
     return Block(
         names=tuple(names),

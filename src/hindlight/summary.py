@@ -35,6 +35,7 @@ SUPPLIED_BY = {
     "no_frequency": "frequency_hz",
     "stokes_assumed": "stokes",
     "primary_beam_unknown": "primary_beam",
+    "photographic_assumed": "response",
     "primary_beam_apparent": "primary_beam_fwhm_deg",
 }  # a word of an assumption -> the key of a block that ends it
 

@@ -17,9 +17,10 @@ import numpy as np
 
 from hindlight import clock, duplicates, ensemble, host, judge, lifted, photometry, store
 from hindlight.background import MAD_TO_SIGMA
-from hindlight.candidates import ChannelView, Described, Examined, View, describe
+from hindlight.candidates import ChannelView, Described, Examined, SeenOnly, View, describe
 from hindlight.channels import channels_of
-from hindlight.comparisons import Located
+from hindlight.comparisons import Located, among_alike
+from hindlight.ensemble import FLUX_COLUMNS
 from hindlight.errors import HindlightError
 from hindlight.facts import visible
 from hindlight.fence import Fault, blank, call, checked, one_line
@@ -31,6 +32,8 @@ from hindlight.plan import BrightSources, owners
 from hindlight.plugin import Candidate, Cutout, Finding, PeriodResult
 from hindlight.positions import moved
 from hindlight.ranking import Thresholds
+from hindlight.response import PHOTOGRAPHIC, SEEN_SNR
+from hindlight.robust import median_of
 from hindlight.schema import MEASUREMENTS, UNUSABLE
 from hindlight.settings import COMPANION_KINDS, Settings
 from hindlight.store import Columns, Piece, RunFolder
@@ -82,15 +85,16 @@ def book(run: str, version: str) -> Book:
 def frame_facts(frames: Columns, row: int) -> photometry.FrameToMeasure:
     """What photometry needs to know of a frame, from its row in the frame table."""
     value = {name: values[row] for name, values in frames.items()}
+    sign = -1.0 if value["negative"] else 1.0
     named = {kind: value[f"{kind}_file"] for kind in COMPANION_KINDS if value[f"{kind}_file"]}
     companions = {kind: str(Path(value["archive"]) / path) for kind, path in named.items()}
     return photometry.FrameToMeasure(
         path=local_path(str(value["archive"]), str(value["path"])), hdu=int(value["hdu"]), plane=int(value["plane"]),
         mjd=float(value["middle_mjd_tdb"]), beam_major=float(value["beam_major"]),
         beam_minor=float(value["beam_minor"]), beam_angle=float(value["beam_angle"]), unit=str(value["unit"]),
-        electrons_per_unit=float(value["electrons_per_unit"]), saturation=float(value["saturation"]),
+        electrons_per_unit=float(value["electrons_per_unit"]), saturation=sign * float(value["saturation"]),
         primary_beam=str(value["primary_beam"]), primary_beam_fwhm_deg=float(value["primary_beam_fwhm_deg"]),
-        companions=companions,
+        negative=bool(value["negative"]), companions=companions,
     )  # fmt: skip
 
 
@@ -219,19 +223,22 @@ def locate_sources(order: Order, frame: int, ra: FloatArray, dec: FloatArray) ->
     tables = book(order.run, order.version)
     try:
         facts = frame_facts(tables.frames, tables.row_of_frame[frame])
-        found_ra, found_dec, snr, width = photometry.locate(facts, ra, dec, order.settings)
+        found_ra, found_dec, snr, width, flat = photometry.locate(facts, ra, dec, order.settings)
+        if tables.frames["response"][tables.row_of_frame[frame]] == PHOTOGRAPHIC:
+            width = among_alike(snr, width)
     except (SetAsideError, OSError, ValueError):
         found_ra = found_dec = snr = width = np.full(len(ra), np.nan)
+        flat = np.zeros(len(ra), bool)
     east = ((found_ra - ra + 180.0) % 360.0 - 180.0) * np.cos(np.radians(dec))
-    return Located(east, found_dec - dec, snr, width)
+    return Located(east, found_dec - dec, snr, width, flat)
 
 
 @dataclass(frozen=True, eq=False)
 class FrameEvidence:
     """What one batch of frames tells of its flux scale.
 
-    `comparisons` are columns frame, position, flux, flux_err of usable measurements; `frames` are columns frame, pull
-    (MAD-sigma of flux over error at the controls), n_controls, and ensemble.IMAGE_COLUMNS, one row a frame.
+    `comparisons` are columns ensemble.FLUX_COLUMNS of usable measurements; `frames` are columns frame, pull (MAD-sigma of
+    flux over error at the controls), n_controls, and ensemble.IMAGE_COLUMNS, one row a frame.
     """
 
     comparisons: Columns
@@ -257,8 +264,7 @@ def frame_evidence(order: Order, batch: int) -> FrameEvidence:
         pull = rows["flux"][mine] / rows["flux_err"][mine]
         frames["pull"][at] = MAD_TO_SIGMA * np.median(np.abs(pull - np.median(pull)))
         frames["n_controls"][at] = len(mine)
-    names = ("frame", "position", "flux", "flux_err")
-    return FrameEvidence({name: rows[name][steady] for name in names}, frames)
+    return FrameEvidence({name: rows[name][steady] for name in FLUX_COLUMNS}, frames)
 
 
 def position_label(positions: Columns, row: int) -> str:
@@ -350,15 +356,18 @@ def describe_targets(
     utc = tables.frames["middle_utc"]
     covering = Counter(zip(found["rows"]["position"].tolist(), found["rows"]["channel"].tolist(), strict=True))
 
+    only = _seen_only(tables, found["rows"], thresholds)
+
     def channel_view(row: int, target: int, label: str) -> ChannelView:
+        alone = only.get((target, label), SeenOnly())
         curve = found["blocks"][label].curve(row)
         verdict = tables.solution["verdict"][np.searchsorted(tables.solution["frame"], curve.frame)]
         n_calibrated = int((verdict == "good").sum())
         if label not in found["deep"]:
-            return ChannelView(curve, covering[target, label], n_calibrated, thresholds[label])
+            return ChannelView(curve, covering[target, label], n_calibrated, thresholds[label], seen_only=alone)
         within = tables.deepest[[tables.row_of_frame[frame] for frame in curve.frame.tolist()]]
         deep = found["deep"][label].curve(row)
-        return ChannelView(curve, covering[target, label], n_calibrated, thresholds[label], deep, within)
+        return ChannelView(curve, covering[target, label], n_calibrated, thresholds[label], deep, within, alone)
 
     described = []
     for row, target in enumerate(ids.tolist()):
@@ -371,6 +380,25 @@ def describe_targets(
         )  # fmt: skip
         described.append(describe(view, given[row], decided[row], examined[row], order.settings.detection))
     return described
+
+
+def _seen_only(
+    tables: Book, rows: Columns, thresholds: Mapping[str, Thresholds]
+) -> dict[tuple[int, str], SeenOnly]:  # fmt: skip
+    """What photographic frames without a response curve tell of positions, by position and channel."""
+    at = np.asarray(np.searchsorted(tables.solution["frame"], rows["frame"]))
+    mine = tables.solution["verdict"][at] == "seen_only"
+    mine &= np.isfinite(rows["flux"]) & (rows["flux_err"] > 0) & ((rows["flags"] & int(UNUSABLE)) == 0)
+    found: dict[tuple[int, str], list[int]] = {}
+    for row in np.flatnonzero(mine).tolist():
+        found.setdefault((int(rows["position"][row]), str(rows["channel"][row])), []).append(row)
+    told = {}
+    for (position, label), some in found.items():
+        least = max(SEEN_SNR, thresholds[label].detected)
+        snr = rows["flux"][some] / (rows["flux_err"][some] * tables.solution["error_scale"][at[some]])
+        limit = median_of(tables.solution["seen_limit"][at[some]])
+        told[position, label] = SeenOnly(len(some), int(np.count_nonzero(snr > least)), float(limit))
+    return told
 
 
 def examine_target(order: Order, target: int, field_controls: IntArray, above_quiet: dict[str, float]) -> Examined:
@@ -465,7 +493,10 @@ def _cutout(order: Order, rows: Columns, frame: int, half_width: float) -> Cutou
         )
     except (SetAsideError, OSError, ValueError, HindlightError):
         return None
+    fwhm = float(rows["fwhm"][at])  # that of the comparisons where the header gives none
+    known = float(tables.frames["beam_major"][row]) > 0 or fwhm != order.settings.photometry.assumed_fwhm_pixels
     return Cutout(
         frame=frame, channel=str(tables.frames["channel"][row]), pixels=made.pixels, x=made.x, y=made.y,
-        to_sky=made.to_sky, fwhm=made.fwhm, background=float(rows["background"][at]), rms=float(rows["rms"][at]),
+        to_sky=made.to_sky, fwhm=fwhm, background=float(rows["background"][at]), rms=float(rows["rms"][at]),
+        fwhm_known=known,
     )  # fmt: skip
