@@ -21,6 +21,14 @@ def test_false_discovery_gives_the_published_example():
     assert q[3] == pytest.approx(0.035625)
 
 
+def test_false_discovery_under_any_dependence():
+    """Of the same fifteen three are rejected (the fourth adjusts to 0.035625 times 1 + 1/2 + ... + 1/15 = 3.318229)."""
+    q = calibrate.false_discovery(np.array(PUBLISHED_P), any_dependence=True)
+    assert (q <= 0.05).sum() == 3
+    assert q[3] == pytest.approx(0.035625 * 3.3182290)
+    assert calibrate.controls_needed(15, 0.05, any_dependence=True) == 995  # 15 * 3.318229 / 0.05 = 995.5
+
+
 def test_false_discovery_leaves_unknown_p_values_out():
     """A target without a p-value is no trial and keeps NaN."""
     q = calibrate.false_discovery(np.array([0.01, np.nan, 0.02]))

@@ -79,7 +79,9 @@ def apart(found: Field, left: Evidence, n_targets: int, settings: Settings) -> t
     for index, key in enumerate(map(tuple, step.T.tolist())):
         if max(key) >= 0:
             groups.setdefault(key, []).append(index)
-    wanted = min(calibrate.controls_needed(n_targets, settings.ranking.level), settings.controls.bright_pool)
+    ranking = settings.ranking
+    needed = calibrate.controls_needed(n_targets, ranking.level, ranking.any_dependence)
+    wanted = min(needed, settings.controls.bright_pool)
     made = []
     for key, members in sorted(groups.items()):
         lit = [row for row, at in enumerate(key) if at >= 0]

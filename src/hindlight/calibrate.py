@@ -128,18 +128,26 @@ def leave_one_out(null: Null) -> FloatArray:
     return result
 
 
-def false_discovery(p_values: FloatArray) -> FloatArray:
-    """Benjamini-Hochberg (1995, JRSS B 57, 289) adjusted p-values; NaN stays NaN and does not count as a trial."""
+def false_discovery(p_values: FloatArray, any_dependence: bool = False) -> FloatArray:
+    """Benjamini-Hochberg (1995, JRSS B 57, 289) adjusted p-values; NaN stays NaN and does not count as a trial.
+
+    With `any_dependence` those of Benjamini & Yekutieli (2001, Ann. Stat. 29, 1165), which hold whatever the p-values have
+    in common: larger by sum(1 / i) over the trials.
+    """
     adjusted = np.full(p_values.shape, np.nan)
     known = np.isfinite(p_values)
     if known.any():
-        adjusted[known] = stats.false_discovery_control(p_values[known], method="bh")
+        adjusted[known] = stats.false_discovery_control(p_values[known], method="by" if any_dependence else "bh")
     return adjusted
 
 
-def controls_needed(n_targets: int, level: float) -> int:
-    """How many controls let a single candidate among `n_targets` reach the level: n >= targets / level - 1."""
-    return max(1, int(np.ceil(n_targets / level)) - 1)
+def controls_needed(n_targets: int, level: float, any_dependence: bool = False) -> int:
+    """How many controls let a single candidate among `n_targets` reach the level: n >= targets / level - 1.
+
+    With `any_dependence` times sum(1 / i) over the targets, see `false_discovery`.
+    """
+    factor = float((1.0 / np.arange(1, n_targets + 1)).sum()) if any_dependence else 1.0
+    return max(1, int(np.ceil(factor * n_targets / level)) - 1)
 
 
 def tail_bound(distances: FloatArray, target: float, exceedances: int, weight: float = 1.0) -> float:

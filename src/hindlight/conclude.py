@@ -155,7 +155,8 @@ def p_values(ranks: Sequence[calibrate.Rank], weights: Sequence[float], settings
     """
     empirical = np.array([r.p_value for r in ranks])
     level = settings.ranking.level
-    q = calibrate.false_discovery(empirical)
+    dependent = settings.ranking.any_dependence
+    q = calibrate.false_discovery(empirical, dependent)
     p = empirical.copy()
     with np.errstate(invalid="ignore"):
         undecided = np.array([r.exceeded_by == 0 for r in ranks]) & (q > level)
@@ -168,5 +169,5 @@ def p_values(ranks: Sequence[calibrate.Rank], weights: Sequence[float], settings
         testable[index] = np.isfinite(bound)
         if bound < p[index]:
             p[index], extrapolated[index] = bound, True
-    needed = calibrate.controls_needed(int(np.isfinite(empirical).sum()), level)
-    return PValues(empirical, p, calibrate.false_discovery(p), extrapolated, undecided, testable, needed)
+    needed = calibrate.controls_needed(int(np.isfinite(empirical).sum()), level, dependent)
+    return PValues(empirical, p, calibrate.false_discovery(p, dependent), extrapolated, undecided, testable, needed)

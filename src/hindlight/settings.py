@@ -185,6 +185,9 @@ class Ranking:
     """What counts as beyond chance."""
 
     level: float = setting(0.05, "false-discovery rate of the run", minimum=1e-6, maximum=0.5)
+    any_dependence: bool = setting(
+        False, "make it hold whatever targets have in common (Benjamini and Yekutieli): q is several times larger"
+    )
     gate: float = setting(
         0.1, "a period is searched where some statistic is among this fraction of the controls", minimum=0, maximum=1
     )
