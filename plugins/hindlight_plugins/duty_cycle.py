@@ -22,8 +22,10 @@ class DutyCycle(RowStatistic):
 
     min_points: ClassVar[int] = 3
     columns = (
-        Column("fraction", "share of samples that are bright", unusual="high", ucd="stat.value;arith.ratio"),
-        Column("by_chance", "how many samples of Gaussian noise would be bright", ucd="stat.probability;meta.number"),
+        Column("fraction", "share of samples that are bright", ucd="stat.value;arith.ratio"),
+        Column("by_chance", "how many samples would be bright in Gaussian noise", ucd="stat.value;meta.number"),
+        Column("surprise", "minus log10 of the chance that at least as many are bright in Gaussian noise, at most 300; 0 "
+               "where none is", unusual="high", ucd="stat.probability"),
         Column("longest", "most bright samples in a row", dtype="int64", ucd="meta.number;obs"),
         Column("longest_s", "time from the first to the last of them, the longest of equal runs; NaN where none is "
                "bright", unit="s", ucd="time.duration"),
@@ -39,10 +41,13 @@ class DutyCycle(RowStatistic):
         longest = run.max(axis=1)
         began = np.take_along_axis(rows.t_tdb_s, at - np.maximum(run - 1, 0), axis=1)
         lasted = np.where(bright & (run == longest[:, None]), rows.t_tdb_s - began, -1.0).max(axis=1)
-        tails = 2 if rows.channel.signed else 1
+        rate = min(1.0, (2 if rows.channel.signed else 1) * float(special.ndtr(-self.sigma)))
+        n_bright = bright.sum(axis=1)
+        chance = np.where(n_bright > 0, special.betainc(np.maximum(n_bright, 1), rows.n - n_bright + 1, rate), 1.0)
         return {
-            "fraction": bright.sum(axis=1) / rows.n,
-            "by_chance": rows.n * (tails * special.ndtr(-self.sigma)),
+            "fraction": n_bright / rows.n,
+            "by_chance": rows.n * rate,
+            "surprise": np.abs(np.log10(np.maximum(chance, 1e-300))),
             "longest": longest,
             "longest_s": np.where(longest > 0, lasted, np.nan),
         }
