@@ -23,7 +23,7 @@ class DutyCycle(RowStatistic):
     min_points: ClassVar[int] = 3
     columns = (
         Column("fraction", "share of samples that are bright", ucd="stat.value;arith.ratio"),
-        Column("by_chance", "how many samples would be bright in Gaussian noise", ucd="stat.value;meta.number"),
+        Column("by_chance", "how many samples would be bright in Gaussian noise", ucd="meta.number"),
         Column("surprise", "minus log10 of the chance that at least as many are bright in Gaussian noise, at most 300; 0 "
                "where none is", unusual="high", ucd="stat.probability"),
         Column("longest", "most bright samples in a row", dtype="int64", ucd="meta.number;obs"),

@@ -22,7 +22,7 @@ class EpochActivity(RowStatistic):
 
     min_points: ClassVar[int] = 2
     columns = (
-        Column("n", "epochs", dtype="int64", ucd="meta.number;obs"),
+        Column("n", "how many epochs there are", dtype="int64", ucd="meta.number;obs"),
         Column("reduced", "chi-square of the epochs' mean fluxes about their weighted mean, per degree of freedom",
                unusual="high", ucd="stat.fit.chi2"),
         Column("brightening", "largest rise from one epoch to the next over the error of the difference", ucd="stat.snr"),
