@@ -226,7 +226,7 @@ def test_blocks_are_those_of_astropy(seed, price):
     t = np.cumsum(rng.uniform(1, 9, 60))
     err = rng.uniform(0.5, 2, 60)
     flux = err * rng.normal(size=60) + 4.0 * (np.arange(60) // 6 == 3) + 2.0 * (np.arange(60) > 40)
-    first = first_of_blocks(err[None] ** -2, (flux - flux.mean())[None], np.ones((1, 60), bool), price)[0]
+    first = first_of_blocks(err[None] ** -2, (flux - flux.mean())[None], price)[0]
     edges = astropy_stats.bayesian_blocks(t, flux, err, fitness="measures", ncp_prior=price)
     middles = (t[1:] + t[:-1]) / 2
     np.testing.assert_allclose(middles[np.flatnonzero(first)[1:] - 1], edges[1:-1])
@@ -236,9 +236,21 @@ def test_blocks_are_those_of_astropy(seed, price):
 def test_samples_of_one_time_share_a_block():
     """A jump within samples of the same time is no block's edge, and no interval's."""
     t, flux = np.array([0.0, 1, 2, 3, 3, 4, 5, 6]), np.array([0.0, 0, 0, 0, 50, 50, 50, 50])
-    values = BayesianBlocks().compute(LightCurve.from_arrays(t, flux, np.ones(8)))
-    assert values["start"] in (2.5, 3.5)
-    assert values["interval"] < 50 / math.sqrt(1 / 4 + 1 / 4)
+    up, down = (BayesianBlocks().compute(LightCurve.from_arrays(t, f, np.ones(8))) for f in (flux, flux[::-1]))
+    assert up["start"] in (2.5, 3.5)
+    assert up["interval"] == pytest.approx(40 / math.sqrt(1 / 5 + 1 / 3))  # five of mean 40, or three of mean 50
+    assert down["interval"] == pytest.approx(40 / math.sqrt(1 / 5 + 1 / 3))
+
+
+def test_long_light_curves_are_divided_in_coarser_pieces():
+    """In 5000 samples, three to a piece, a burst is found to within a piece."""
+    t = np.arange(5000.0)
+    flux = np.random.default_rng(9).normal(size=5000) + 3.0 * ((t >= 2998) & (t < 3100))
+    values = BayesianBlocks(price=9.0).compute(LightCurve.from_arrays(t, flux, np.ones(5000)))
+    assert values["n"] == 3
+    assert abs(values["start"] - 2997.5) <= 3
+    assert abs(values["length"] - 102) <= 6
+    assert values["interval"] == pytest.approx(3 * math.sqrt(102), abs=4)
 
 
 @pytest.mark.parametrize("seed", range(3))

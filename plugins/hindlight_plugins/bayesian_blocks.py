@@ -19,13 +19,16 @@ from hindlight import Column, Rows, RowStatistic, Statistic, hookimpl, setting
 Array = NDArray[np.float64]
 Mask = NDArray[np.bool_]
 
+MOST_PIECES = 2000  # the time taken grows with their square
+
 
 @dataclass(frozen=True)
 class BayesianBlocks(RowStatistic):
     """The block that stands highest above the quiet level, of those that Scargle et al. 2013 (ApJ 764, 167) find.
 
-    Edges lie halfway between samples; samples of the same time share a block. A light curve of one block has no excess.
-    In channels whose flux may be negative (Stokes Q, U, V) the excess of either sign counts.
+    Edges lie halfway between samples; samples of the same time share a block, and so do successive ones, as few as will
+    do, where there are more than 2000. A light curve of one block has no excess. In channels whose flux may be negative
+    (Stokes Q, U, V) the excess of either sign counts.
     """
 
     columns = (
@@ -46,10 +49,9 @@ class BayesianBlocks(RowStatistic):
 
     def compute_rows(self, rows: Rows) -> Mapping[str, NDArray[Any]]:
         """The declared columns."""
-        late = rows.t_tdb_s[:, 1:] > rows.t_tdb_s[:, :-1]
-        may_start = np.concatenate((np.ones((len(rows), 1), bool), late), axis=1)
-        away = np.where(rows.used, rows.flux - rows.weighted_mean[:, None], 0)
-        first = first_of_blocks(rows.weight, away, may_start, self.price)
+        apart, pieces, weight, away = _pieces(rows)
+        first = apart & np.take_along_axis(first_of_blocks(weight, away, self.price), pieces, axis=1)
+        interval = highest_interval(weight, away, rows.channel.signed)
         group, weight, mean = rows.groups(first)
         n = first.sum(axis=1)
         level, level_err = (values[:, None] for values in rows.quiet_level)
@@ -63,31 +65,42 @@ class BayesianBlocks(RowStatistic):
             "excess": np.where(several, above[np.arange(len(rows)), best], 0.0),
             "start": np.where(several, start, np.nan),
             "length": np.where(several, end - start, np.nan),
-            "interval": highest_interval(rows.weight, away, may_start, rows.channel.signed),
+            "interval": interval,
         }
 
 
-def first_of_blocks(weight: Array, flux: Array, may_start: Mask, price: float) -> Mask:
+def _pieces(rows: Rows) -> tuple[Mask, NDArray[np.int64], Array, Array]:
+    """What is never divided: which samples begin such a piece, the piece of each sample, shapes (n_curves, n_most),
+
+    and each piece's weight and mean flux less that of all samples, shapes (n_curves, n_pieces), 0 for none.
+    """
+    in_turn = np.arange(rows.flux.shape[1]) % np.maximum(-(-rows.n // MOST_PIECES), 1)[:, None] == 0
+    in_turn[:, 1:] &= rows.t_tdb_s[:, 1:] > rows.t_tdb_s[:, :-1]
+    pieces, weight, mean = rows.groups(in_turn)
+    return in_turn, pieces, weight, np.where(weight > 0, mean - rows.weighted_mean[:, None], 0)
+
+
+def first_of_blocks(weight: Array, flux: Array, price: float) -> Mask:
     """Which samples begin a block in the best division of each row, shapes (n_rows, n_samples).
 
     Fitness for measurements with Gaussian errors (Scargle et al. 2013, eq. 41): (sum w x)^2 / (2 sum w), w = 1/err^2,
-    less `price` for each block; the best division by dynamic programming (their section 2.6), all rows at once. Where
-    `may_start` is false, as for padding of weight 0, no block begins.
+    less `price` for each block; the best division by dynamic programming (their section 2.6), all rows at once. Samples
+    of weight 0 at the end of a row are none.
     """
     n_rows, n = flux.shape
     before = np.zeros((n_rows, 1))
     weights = np.concatenate((before, np.cumsum(weight, axis=1)), axis=1)
     fluxes = np.concatenate((before, np.cumsum(weight * flux, axis=1)), axis=1)
-    until = np.where(may_start, weights[:, :-1], -np.inf)  # no gain from where no block may begin
+    until = np.where(weight > 0, weights[:, :-1], -np.inf)  # no block begins where no sample is
+    barred = np.where(weight > 0, 0.0, -np.inf)
     so_far = np.zeros((n_rows, n + 1))  # of the best division of all samples before
     start = np.empty((n_rows, n), np.int64)
     every = np.arange(n_rows)
     for last in range(n):
         gain = fluxes[:, last + 1, None] - fluxes[:, : last + 1]
         gain *= gain
-        gain /= weights[:, last + 1, None] - until[:, : last + 1]
-        gain *= 0.5
-        gain += np.where(may_start[:, : last + 1], so_far[:, : last + 1], -np.inf)
+        gain /= 2 * (weights[:, last + 1, None] - until[:, : last + 1])
+        gain += so_far[:, : last + 1] + barred[:, : last + 1]
         start[:, last] = gain.argmax(axis=1)
         so_far[:, last + 1] = gain[every, start[:, last]] - price
     first = np.zeros((n_rows, n), bool)
@@ -99,28 +112,25 @@ def first_of_blocks(weight: Array, flux: Array, may_start: Mask, price: float) -
     return first
 
 
-def highest_interval(weight: Array, flux: Array, may_start: Mask, either_sign: bool) -> Array:
+def highest_interval(weight: Array, flux: Array, either_sign: bool) -> Array:
     """The largest (mean inside - mean outside) / error of an interval of samples of each row, shape (n_rows,).
 
-    `weight`, `flux` and `may_start` as in `first_of_blocks`, the fluxes' weighted means being zero: then the ratio is
-    F / sqrt(W (1 - W / W_all)) with the sums F of w x and W of w inside; exact. NaN where all samples are of one time.
+    `weight` and `flux` as in `first_of_blocks`, the fluxes' weighted means being zero: then the ratio is
+    F / sqrt(W (1 - W / W_all)) with the sums F of w x and W of w inside; exact. NaN for a single sample.
     """
     n_rows, n = flux.shape
     before = np.zeros((n_rows, 1))
     weights = np.concatenate((before, np.cumsum(weight, axis=1)), axis=1)
     fluxes = np.concatenate((before, np.cumsum(weight * flux, axis=1)), axis=1)
     total = weights[:, -1:]
-    may_end = np.concatenate((may_start[:, 1:], np.zeros((n_rows, 1), bool)), axis=1)
-    may_end |= weights[:, 1:] == total  # the last sample, and padding, which changes no sum
     best = np.full(n_rows, -np.inf)
     for last in range(n):
         inside = weights[:, last + 1, None] - weights[:, : last + 1]
         gain = fluxes[:, last + 1, None] - fluxes[:, : last + 1]
         if either_sign:
             gain = np.abs(gain)
-        share = inside * (1 - inside / total)
-        possible = may_start[:, : last + 1] & may_end[:, last, None] & (inside < total)
-        gain /= np.sqrt(np.where(possible, share, np.inf))
+        possible = (inside > 0) & (inside < total)
+        gain /= np.sqrt(np.where(possible, inside * (1 - inside / total), np.inf))
         best = np.maximum(best, np.where(possible, gain, -np.inf).max(axis=1))
     return np.where(np.isfinite(best), best, np.nan)
 
