@@ -74,6 +74,18 @@ def test_a_target_far_beyond_all_controls_reaches_the_floor_whatever_the_number_
     assert found.column == 7
 
 
+def test_columns_of_many_equal_values_have_a_sensible_scale():
+    """A lone control with anything at all is some 2.3 units out, not hundreds; so is the tail of one-sided values."""
+    lone = np.zeros((98, 1))
+    lone[31] = 2.5
+    assert (lone.max() / calibrate.centre_and_spread(lone)[1])[0] == pytest.approx(2.33)
+    rng = np.random.default_rng(3)
+    seldom = np.where(rng.random((5000, 1)) < 0.3, np.abs(rng.normal(size=(5000, 1))), 0.0)
+    tail = np.quantile(seldom, 0.99) / calibrate.centre_and_spread(seldom)[1]
+    assert tail[0] == pytest.approx(2.33, rel=0.01)
+    assert calibrate.centre_and_spread(np.zeros((98, 1)))[1][0] == 1.0
+
+
 def test_leave_one_out_equals_counting():
     """Every control's p-value equals a plain count over the others and itself."""
     rng = np.random.default_rng(2)

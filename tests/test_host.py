@@ -35,6 +35,7 @@ def test_shipped_plugins_are_all_found():
     assert {"chi_square", "von_neumann", "stetson", "brightest", "lomb_scargle", "peak", "psf", "aperture"} <= set(
         names
     )
+    assert {"bayesian_blocks", "distribution", "duty_cycle", "epoch_activity", "structure_function"} <= set(names)
     assert {e.plugin.kind for e in found.loaded} == {
         "dialect", "estimator", "statistic", "period_search", "consistency_check"
     }  # fmt: skip

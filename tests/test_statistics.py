@@ -2,25 +2,37 @@
 
 from __future__ import annotations
 
+import itertools
 import math
 
 import numpy as np
 import pytest
+from astropy import stats as astropy_stats
 from astropy.io.votable.ucd import check_ucd
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from hindlight import Channel, LightCurve, Statistic
+from hindlight_plugins.bayesian_blocks import BayesianBlocks, first_of_blocks
 from hindlight_plugins.brightest import Brightest, leave_one_out, p_of_maximum
 from hindlight_plugins.chi_square import ChiSquare
 from hindlight_plugins.common_mode import FrameWide
+from hindlight_plugins.distribution import Distribution, quantiles, skewness
+from hindlight_plugins.duty_cycle import DutyCycle
+from hindlight_plugins.epoch_activity import EpochActivity
 from hindlight_plugins.lomb_scargle import LombScargle
 from hindlight_plugins.mean_flux import MeanFlux
 from hindlight_plugins.position_check import Position
 from hindlight_plugins.stetson import Stetson
+from hindlight_plugins.structure_function import StructureFunction, separations, structure_function
 from hindlight_plugins.von_neumann import VonNeumann
+from hindlight_plugins.welch_stetson import WelchStetson, pairs
 
-STATISTICS = (ChiSquare(), VonNeumann(), Stetson(), Brightest(), MeanFlux())
+PER_CHANNEL = (
+    ChiSquare(), VonNeumann(), Stetson(), Brightest(), MeanFlux(), BayesianBlocks(), StructureFunction(), Distribution(),
+    DutyCycle(), EpochActivity(),
+)  # fmt: skip
+STATISTICS = (*PER_CHANNEL, WelchStetson())
 
 # A light curve of eight samples, two of them bright.
 TIMES = np.array([0.0, 1, 2, 4, 5, 7, 8, 10])
@@ -48,13 +60,30 @@ REFERENCE = [
     (Brightest(), "snr", 10.0),  # exact: 5.0 / 0.5
     (Brightest(), "leave_one_out", 7.160057),
     (MeanFlux(), "snr", 1.541193 / 0.129010),
+    (BayesianBlocks(), "n", 3),  # astropy.stats.bayesian_blocks with p0=0.01: edges 0, 3, 6, 10
+    (BayesianBlocks(), "start", 3.0),
+    (BayesianBlocks(), "length", 3.0),
+    (WelchStetson(), "i", -4.486130),  # Welch & Stetson 1993, AJ 105, 1813
+    (WelchStetson(), "j", -0.926060),  # as Stetson's over disjoint pairs
+    (WelchStetson(), "n_successive", 4),
+    (DutyCycle(), "fraction", 0.25),  # exact: 5.0 and 4.4 of eight
+    (DutyCycle(), "by_chance", 8 * 3.167124e-5),  # 1 - Phi(4), printed tables
+    (DutyCycle(), "surprise", 7.551667),  # -log10 scipy.stats.binom.sf(1, 8, 3.167124e-5)
+    (DutyCycle(), "longest", 2),
+    (DutyCycle(), "longest_s", 1.0),
+    (EpochActivity(gap_days=1.5 / 86400), "n", 4),  # exact: gaps of 2 s after samples 3, 5 and 7
 ]
+
+
+def computed(statistic: Statistic, curve: LightCurve) -> dict[str, float]:
+    """The columns of one light curve, that of a position's only channel."""
+    return dict(statistic.compute((curve,) if statistic.all_channels else curve))
 
 
 @pytest.mark.parametrize(("statistic", "column", "expected"), REFERENCE)
 def test_reference_values(statistic, column, expected):
     """Each column has the value of its published formula for the reference light curve."""
-    assert statistic.compute(CURVE)[column] == pytest.approx(expected, rel=2e-5)
+    assert computed(statistic, CURVE)[column] == pytest.approx(expected, rel=2e-5)
 
 
 def test_trials_of_the_maximum():
@@ -168,10 +197,167 @@ def test_leave_one_out_agrees_with_the_obvious_way():
     np.testing.assert_allclose(leave_one_out(flux, error), slow, rtol=1e-10)
 
 
+def test_robust_measures_and_skewness():
+    """Quantiles as numpy's, MAD and skewness of the reference fluxes; G1 is scipy.stats.skew(FLUX, bias=False)."""
+    n = np.array([8])
+    quarter, three = (quantiles(FLUX[None], n, q)[0] for q in (0.25, 0.75))
+    assert three - quarter == pytest.approx(1.2)
+    assert quantiles(np.abs(FLUX - np.median(FLUX))[None], n, 0.5)[0] == pytest.approx(0.3)
+    assert skewness(FLUX[None], n)[0] == pytest.approx(1.419551, rel=1e-6)
+    assert skewness(FLUX[None], n)[0] * 6 / math.sqrt(8 * 7) == pytest.approx(1.138173, rel=1e-6)  # g1
+
+
+def test_pulls_decide_the_shape():
+    """Skewness and spread are those of (S - median) / err: twice the errors, half the spread, the same skewness."""
+    one, two = (Distribution().compute(LightCurve.from_arrays(TIMES, FLUX, np.full(8, e))) for e in (1.0, 2.0))
+    assert one["skewness"] == pytest.approx(1.419551, rel=1e-6)
+    assert one["mad"] == pytest.approx(0.3 * 1.482602)
+    assert one["iqr"] == pytest.approx(1.2 / 1.348980, rel=1e-5)
+    assert one["quantile_ratio"] == pytest.approx((4.79 - 1.15) / (1.15 - 0.735))  # numpy.quantile
+    assert two["mad"] == pytest.approx(one["mad"] / 2)
+    assert two["skewness"] == pytest.approx(one["skewness"])
+
+
+@pytest.mark.parametrize("seed", range(4))
+@pytest.mark.parametrize("price", [1.0, 4.0])
+def test_blocks_are_those_of_astropy(seed, price):
+    """The division of a light curve with a burst and a step is that of astropy.stats.bayesian_blocks."""
+    rng = np.random.default_rng(seed)
+    t = np.cumsum(rng.uniform(1, 9, 60))
+    err = rng.uniform(0.5, 2, 60)
+    flux = err * rng.normal(size=60) + 4.0 * (np.arange(60) // 6 == 3) + 2.0 * (np.arange(60) > 40)
+    first = first_of_blocks(err[None] ** -2, (flux - flux.mean())[None], price)[0]
+    edges = astropy_stats.bayesian_blocks(t, flux, err, fitness="measures", ncp_prior=price)
+    middles = (t[1:] + t[:-1]) / 2
+    np.testing.assert_allclose(middles[np.flatnonzero(first)[1:] - 1], edges[1:-1])
+    assert BayesianBlocks(price=price).compute(LightCurve.from_arrays(t, flux, err))["n"] == len(edges) - 1
+
+
+def test_samples_of_one_time_share_a_block():
+    """A jump within samples of the same time is no block's edge, and no interval's."""
+    t, flux = np.array([0.0, 1, 2, 3, 3, 4, 5, 6]), np.array([0.0, 0, 0, 0, 50, 50, 50, 50])
+    up, down = (BayesianBlocks().compute(LightCurve.from_arrays(t, f, np.ones(8))) for f in (flux, flux[::-1]))
+    assert up["start"] in (2.5, 3.5)
+    assert up["interval"] == pytest.approx(40 / math.sqrt(1 / 5 + 1 / 3))  # five of mean 40, or three of mean 50
+    assert down["interval"] == pytest.approx(40 / math.sqrt(1 / 5 + 1 / 3))
+
+
+def test_long_light_curves_are_divided_in_coarser_pieces():
+    """In 5000 samples, three to a piece, a burst is found to within a piece."""
+    t = np.arange(5000.0)
+    flux = np.random.default_rng(9).normal(size=5000) + 3.0 * ((t >= 2998) & (t < 3100))
+    values = BayesianBlocks(price=9.0).compute(LightCurve.from_arrays(t, flux, np.ones(5000)))
+    assert values["n"] == 3
+    assert abs(values["start"] - 2997.5) <= 3
+    assert abs(values["length"] - 102) <= 6
+    assert values["interval"] == pytest.approx(3 * math.sqrt(102), abs=4)
+
+
+@pytest.mark.parametrize("seed", range(3))
+def test_highest_interval_agrees_with_the_obvious_way(seed):
+    """The best of all intervals, each compared with the samples outside it."""
+    rng = np.random.default_rng(seed)
+    curve = LightCurve.from_arrays(np.arange(11.0), rng.normal(size=11), rng.uniform(0.5, 2, 11))
+    weight = curve.flux_err**-2
+    found = []
+    for first in range(11):
+        for end in range(first + 1, 12 if first else 11):
+            inside = (np.arange(11) >= first) & (np.arange(11) < end)
+            means = [(weight * curve.flux)[m].sum() / weight[m].sum() for m in (inside, ~inside)]
+            found.append((means[0] - means[1]) / math.sqrt(sum(1 / weight[m].sum() for m in (inside, ~inside))))
+    assert BayesianBlocks().compute(curve)["interval"] == pytest.approx(max(found))
+
+
+def test_structure_function_of_the_reference():
+    """Pairs, mean squared differences and noise in three bins of lag, as computed outside this project (numpy)."""
+    n, _, raw, noise = structure_function(TIMES[None], FLUX[None], ERROR[None], np.array([0, 1.5, 3.5, 6.5]))
+    assert n.tolist() == [[4, 9, 9]]
+    assert raw[0] == pytest.approx([0.1925, 9.202222, 9.288889], rel=1e-6)
+    assert raw[0] - noise[0] == pytest.approx([-0.12, 8.868889, 8.955556], rel=1e-6)
+
+
+def test_structure_function_is_blank_without_pairs():
+    """Fewer than four pairs at a lag are none: two groups of two have one bin only."""
+    t = np.array([0.0, 60.0, 9e6, 9e6 + 60.0])
+    values = StructureFunction().compute(LightCurve.from_arrays(t, np.arange(4.0), np.ones(4)))
+    assert values["short_lag"] == pytest.approx(9e6 / 86400)
+    assert math.isnan(values["long"])
+    assert math.isnan(values["rise"])
+
+
+def test_pairs_are_thinned_evenly_over_time_scales():
+    """Separations in order of time: all of the first eight, four in each doubling, the cost n log n."""
+    found = list(separations(4000))
+    assert found[:14] == [1, 2, 3, 4, 5, 6, 7, 8, 10, 12, 14, 16, 20, 24]
+    assert len(found) < 50
+    assert max(b / a for a, b in itertools.pairwise(found[7:])) <= 1.25
+
+
+def test_simultaneous_channels_are_paired_once():
+    """Overlapping neighbours of different channels are pairs, the rest within its channel where it is close in time."""
+    #              a     b      a     a      b      c      c       a
+    t = np.array([0.0, 10.0, 100.0, 130.0, 500.0, 500.0, 520.0, 5000.0])
+    channel = np.array([0, 1, 0, 0, 1, 2, 2, 0])
+    first, second, at_once = pairs(t, np.full(8, 15.0), channel, 60.0)
+    assert list(zip(first.tolist(), second.tolist(), strict=True)) == [(0, 1), (4, 5), (2, 3)]
+    assert at_once == 2
+    first, second, at_once = pairs(t, np.zeros(8), channel, 60.0)  # unknown exposures: equal times only
+    assert list(zip(first.tolist(), second.tolist(), strict=True)) == [(4, 5), (2, 3)]
+
+
+def test_welch_stetson_of_two_channels():
+    """I of two channels at equal times is sqrt(1/(n(n-1))) sum delta_1 delta_2 (Welch & Stetson 1993)."""
+    rng = np.random.default_rng(2)
+    common = rng.normal(size=30)
+    flux = [common + 0.3 * rng.normal(size=30) for _ in range(2)]
+    curves = tuple(LightCurve.from_arrays(np.arange(30) * 1e6, f, np.full(30, 0.3), channel=Channel(str(k)))
+                   for k, f in enumerate(flux))  # fmt: skip
+    values = WelchStetson().compute(curves)
+    delta = [(f - f.mean()) / 0.3 for f in flux]
+    assert values["n_simultaneous"] == 30
+    assert values["i"] == pytest.approx((delta[0] * delta[1]).sum() / math.sqrt(30 * 29))
+    product = 30 / 29 * delta[0] * delta[1]
+    assert values["j"] == pytest.approx(np.mean(np.sign(product) * np.sqrt(np.abs(product))))
+
+
+def test_a_source_switched_on():
+    """Two levels with one change: its time, and the square root of twice the log likelihood ratio; exact."""
+    t = np.repeat(np.arange(6) * 10 * 86400.0, 3) + np.tile([0.0, 60, 120], 6)
+    flux = np.where(np.arange(18) < 6, 1.0, 3.0)
+    on, off = (EpochActivity().compute(LightCurve.from_arrays(t, f, np.ones(18))) for f in (flux, -flux))
+    assert on["n"] == 6
+    assert on["switch"] == pytest.approx(2 / math.sqrt(1 / 6 + 1 / 12))
+    assert off["switch"] == pytest.approx(-on["switch"])
+    assert on["switch_time"] == pytest.approx((t[5] + t[6]) / 2)
+    assert on["brightening"] == off["fading"] == pytest.approx(2 / math.sqrt(2 / 3))
+    assert on["fading"] == pytest.approx(0, abs=1e-9)
+    assert on["reduced"] == pytest.approx(on["switch"] ** 2 / 5)  # all of the chi-square of 6 means is this step
+
+
+def test_longest_run_in_time_of_those_with_most_samples():
+    """Of two runs of two bright samples the longer in time is told; a quiet light curve has none."""
+    flux = np.array([0, 9, 9, 0, 0, 9, 9, 0, 0, 0, 0, 0.0])
+    t = np.array([0, 1, 2, 3, 4, 5, 9, 10, 11, 12, 13, 14.0])
+    values = DutyCycle().compute(LightCurve.from_arrays(t, flux, np.ones(12)))
+    assert (values["longest"], values["longest_s"], values["fraction"]) == (2, 4.0, pytest.approx(1 / 3))
+    quiet = DutyCycle().compute(LightCurve.from_arrays(t, flux * 0, np.ones(12)))
+    assert (quiet["longest"], quiet["fraction"], quiet["surprise"]) == (0, 0.0, 0.0)
+    assert math.isnan(quiet["longest_s"])
+
+
 def light_curves(min_size: int = 3) -> st.SearchStrategy[LightCurve]:
     """Light curves of any sensible fluxes, errors over a factor 100, ties in time included."""
     sample = st.tuples(st.integers(0, 10**9), st.floats(-1e3, 1e3, allow_subnormal=False), st.floats(0.01, 1.0))
     return st.lists(sample, min_size=min_size, max_size=40).map(lambda rows: LightCurve.from_arrays(*np.array(rows).T))
+
+
+RATIOS = ("k", "eta", "z", "skewness", "quantile_ratio", "rise")  # of fluxes that are equal: of rounding errors
+CHOSEN = ("time", "start", "length", "n", "switch", "switch_time")  # among equal maxima any may be chosen
+
+
+def enough_for(curve: LightCurve) -> list[Statistic]:
+    """The statistics that may be given so short a light curve."""
+    return [statistic for statistic in STATISTICS if len(curve) >= statistic.min_points]
 
 
 @settings(deadline=None)
@@ -179,15 +365,15 @@ def light_curves(min_size: int = 3) -> st.SearchStrategy[LightCurve]:
 def test_flux_scaling(curve):
     """Fluxes and errors a thousand times larger multiply each column by a thousand to its declared power of flux."""
     larger = LightCurve.from_arrays(curve.t_tdb_s, curve.flux * 1000, curve.flux_err * 1000)
-    for statistic in STATISTICS:
-        before, after = statistic.compute(curve), statistic.compute(larger)
+    for statistic in enough_for(curve):
+        before, after = computed(statistic, curve), computed(statistic, larger)
         size = float(np.square(curve.flux).sum() + np.square(curve.flux_err).sum())
         for column in statistic.columns:
             floor = 1e-9 * max(1.0, (size if column.flux_power else 1.0) * 1000**column.flux_power)
             expected = before[column.name] * 1000**column.flux_power
-            if column.name in ("k", "eta", "z") and np.ptp(curve.flux) < 1e-7 * max(1, np.abs(curve.flux).max()):
+            if column.name in RATIOS and np.ptp(curve.flux) < 1e-7 * max(1, np.abs(curve.flux).max()):
                 continue  # a ratio of rounding errors
-            if column.name == "time":
+            if column.name in CHOSEN:
                 continue  # equal maxima may change places
             assert after[column.name] == pytest.approx(expected, rel=1e-6, abs=floor, nan_ok=True), column.name
 
@@ -197,8 +383,8 @@ def test_flux_scaling(curve):
 def test_time_shift(curve, shift):
     """A shift of the time origin changes nothing but times."""
     moved = LightCurve.from_arrays(curve.t_tdb_s + shift, curve.flux, curve.flux_err)
-    for statistic in STATISTICS:
-        before, after = statistic.compute(curve), statistic.compute(moved)
+    for statistic in enough_for(curve):
+        before, after = computed(statistic, curve), computed(statistic, moved)
         for column in statistic.columns:
             expected = before[column.name] + (shift if column.is_time else 0)
             assert after[column.name] == pytest.approx(expected, nan_ok=True)
@@ -221,9 +407,12 @@ AWKWARD = {
 def test_awkward_curves(statistic, rows):
     """No awkward light curve raises or warns, and every declared column comes back as a float."""
     curve = LightCurve.from_arrays(*(np.array(list(column), float) for column in rows))
-    values = statistic.compute(curve)
+    if len(curve) < statistic.min_points:
+        return
+    values = computed(statistic, curve)
     assert list(values) == [column.name for column in statistic.columns]
-    assert all(type(value) is float for value in values.values())
+    kinds = {"float64": float, "int64": int}
+    assert all(type(values[column.name]) is kinds[column.dtype] for column in statistic.columns)
 
 
 def test_every_column_is_described():

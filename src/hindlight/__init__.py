@@ -7,7 +7,7 @@ from hindlight.dates import between, greenwich_sidereal_s, read_angle, read_cloc
 from hindlight.facts import Cards, FrameFacts, Moment, PlaneAxes
 from hindlight.headers import fold_unit
 from hindlight.hookspecs import hookimpl
-from hindlight.lightcurve import Block, Channel, LightCurve, quiet_level, weighted_mean
+from hindlight.lightcurve import Block, Channel, LightCurve, Rows, quiet_level, weighted_mean
 from hindlight.plugin import (
     BeamShape,
     Candidate,
@@ -20,6 +20,7 @@ from hindlight.plugin import (
     Finding,
     PeriodResult,
     PeriodSearch,
+    RowStatistic,
     Stamps,
     Statistic,
 )
@@ -68,6 +69,8 @@ __all__ = [
     "PeriodResult",
     "PeriodSearch",
     "PlaneAxes",
+    "RowStatistic",
+    "Rows",
     "Stamps",
     "Statistic",
     "beam_of",

@@ -62,7 +62,12 @@ def null_from(values: FloatArray) -> Null:
 
 
 def centre_and_spread(values: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Median and MAD (as a sigma) of each column's finite values; a wider measure where more than half are equal."""
+    """Median and MAD (as a sigma) of each column's finite values; a wider measure where more than half are equal.
+
+    That is the distance of the 1 % quantile on the further side, which for a Gaussian is 2.33 sigma. Quantiles are values
+    that occur: between many equal ones and a lone other an interpolated one would be next to nothing, and would put the
+    lone one further out than any real source.
+    """
     k = values.shape[1]
     centre, spread = np.zeros(k), np.ones(k)
     for j in range(k):
@@ -70,8 +75,12 @@ def centre_and_spread(values: FloatArray) -> tuple[FloatArray, FloatArray]:
         if finite.size == 0:
             continue
         centre[j] = np.median(finite)
-        low, high = np.quantile(finite, [0.01, 0.99])
-        measures = (MAD_TO_SIGMA * np.median(np.abs(finite - centre[j])), (high - low) / 4.65, np.ptp(finite))
+        low, high = np.quantile(finite, 0.01, method="lower"), np.quantile(finite, 0.99, method="higher")
+        measures = (
+            MAD_TO_SIGMA * np.median(np.abs(finite - centre[j])),
+            max(high - centre[j], centre[j] - low) / 2.33,
+            np.ptp(finite),
+        )
         spread[j] = next((m for m in measures if m > 0), 1.0)
     return centre, spread
 

@@ -102,27 +102,31 @@ def _rows(
 ) -> list[dict[str, Any] | None]:
     """One statistic at every position of a block; None where there are too few samples or it failed."""
     given = [curve.timed if statistic.uses_times else curve for curve in curves]
-    enough = [len(curve) >= statistic.min_points for curve in given]
-    if all(enough) and all(len(curve) == len(whole) for curve, whole in zip(given, curves, strict=True)):
-        together = call(statistic, lambda: statistic.compute_block(block), block.names[0], label)
-        if isinstance(together, Mapping):
-            rows = [_unpacked(together, row) for row in range(len(block))]
+    enough = np.array([len(curve) >= statistic.min_points for curve in given], bool)
+    if enough.any():
+        whole = all(curve is full for curve, full in zip(given, curves, strict=True))
+        part = block if whole and enough.all() else block.select(enough, timed=statistic.uses_times)
+        together = call(statistic, lambda: _unpacked(statistic.compute_block(part), len(part)), part.names[0], label)
+        if isinstance(together, Fault):
+            result.faults.append(together)
+        elif together is not None:
+            cells = iter(together)
             return [
-                _one(result, statistic, partial(dict, v), curve.name, label)
-                for v, curve in zip(rows, given, strict=True)
+                _one(result, statistic, partial(next, cells), curve.name, label) if ok else None
+                for curve, ok in zip(given, enough.tolist(), strict=True)
             ]
     return [
         _one(result, statistic, partial(statistic.compute, curve), curve.name, label) if ok else None
-        for curve, ok in zip(given, enough, strict=True)
+        for curve, ok in zip(given, enough.tolist(), strict=True)
     ]
 
 
 def _whole_rows(result: Judgement, statistic: Statistic, blocks: Mapping[str, Block]) -> list[dict[str, Any] | None]:
     rows = []
-    for index, name in enumerate(next(iter(blocks.values())).names):
-        curves = [block.curve(index) for block in blocks.values()]
+    for curves in zip(*(block.curves() for block in blocks.values()), strict=True):
         given = tuple(curve.timed if statistic.uses_times else curve for curve in curves)
         given = tuple(curve for curve in given if len(curve) >= statistic.min_points)
+        name = curves[0].name
         rows.append(_one(result, statistic, partial(statistic.compute, given), name, WHOLE) if given else None)
     return rows
 
@@ -137,8 +141,12 @@ def _one(result: Judgement, plugin: Plugin, method: Any, name: str, label: str) 
     return values
 
 
-def _unpacked(together: Mapping[str, Any], row: int) -> dict[str, Any]:
-    return {name: np.asarray(values)[row] for name, values in together.items()}
+def _unpacked(together: Mapping[str, Any] | None, n: int) -> list[dict[str, Any]] | None:
+    """What `compute_block` returned for n positions as one mapping for each."""
+    if together is None:
+        return None
+    lists = [np.broadcast_to(np.asarray(values), n).tolist() for values in together.values()]
+    return [dict(zip(together, row, strict=True)) for row in zip(*lists, strict=True)] if lists else [{}] * n
 
 
 def _store(

@@ -1,13 +1,13 @@
 """Light curves: what a statistic is given.
 
-`LightCurve` is one position in one channel; `Block` holds many positions over the same frames as matrices. All arrays
-are read-only. Nothing here reads files or decides anything.
+`LightCurve` is one position in one channel; `Block` holds many positions over the same frames as matrices, `Rows` many
+light curves each in order of time. All arrays are read-only. Nothing here reads files or decides anything.
 """
 
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass, fields
+from dataclasses import dataclass, fields, replace
 from functools import cached_property
 from typing import Any
 
@@ -144,6 +144,11 @@ class LightCurve:
         return self if bool(known.all()) else self.select(known)
 
     @cached_property
+    def rows(self) -> Rows:
+        """This light curve alone as `Rows`."""
+        return Rows.of((self,))
+
+    @cached_property
     def quiet_level(self) -> tuple[float, float]:
         """The flux when the source is not bright, and its 1-sigma error; see `quiet_level`."""
         return quiet_level(self.flux, self.flux_err)
@@ -200,7 +205,119 @@ class Block:
 
     def curves(self) -> Iterator[LightCurve]:
         """The light curves of all rows, in order."""
-        return (self.curve(row) for row in range(len(self.names)))
+        return iter(self._curves)
+
+    @cached_property
+    def _curves(self) -> tuple[LightCurve, ...]:
+        """Kept, since every statistic asks for them."""
+        return tuple(self.curve(row) for row in range(len(self.names)))
+
+    @cached_property
+    def rows(self) -> Rows:
+        """The light curves of all rows as matrices in order of time."""
+        return Rows.of(self._curves)
+
+    def select(self, keep: NDArray[np.bool_], timed: bool = False) -> Block:
+        """The positions where `keep`, shape (n_positions,), is true; if `timed` without samples whose time is unknown."""
+        arrays: dict[str, Any] = {
+            f.name: value[keep]
+            for f in fields(self)
+            if isinstance(value := getattr(self, f.name), np.ndarray) and value.ndim == 2
+        }
+        if timed:
+            arrays["flux"] = np.where(np.isnan(arrays["t_tdb_s"]), np.nan, arrays["flux"])
+        frozen = {name: freeze(value, value.dtype.type) for name, value in arrays.items()}
+        return replace(self, names=tuple(n for n, kept in zip(self.names, keep, strict=True) if kept), **frozen)
+
+
+@dataclass(frozen=True, eq=False)
+class Rows:
+    """Many light curves of one channel as matrices of shape (n_curves, n_most): what statistics of many at once work on.
+
+    Each row holds a light curve's samples in order of time, then NaN up to the longest one's length. What a row gives
+    must not depend on the others, to the last digit: sums go through `sums`, which adds in order, so that the width of
+    the matrix changes nothing.
+
+    n
+        How many samples each row has, shape (n_curves,).
+    t_tdb_s, exposure_s, flux, flux_err
+        See `LightCurve`.
+    """
+
+    curves: tuple[LightCurve, ...]
+    channel: Channel
+    n: IntArray
+    t_tdb_s: FloatArray
+    exposure_s: FloatArray
+    flux: FloatArray
+    flux_err: FloatArray
+
+    @classmethod
+    def of(cls, curves: tuple[LightCurve, ...]) -> Rows:
+        """Light curves of one channel, at least one, as rows."""
+        n = np.array([len(curve) for curve in curves], np.int64)
+        used = np.arange(n.max(initial=0)) < n[:, None]
+
+        def matrix(name: str) -> FloatArray:
+            filled = np.full(used.shape, np.nan)
+            filled[used] = np.concatenate([getattr(curve, name) for curve in curves])
+            filled.flags.writeable = False
+            return filled
+
+        names = ("t_tdb_s", "exposure_s", "flux", "flux_err")
+        return cls(curves, curves[0].channel, freeze(n, np.int64), **{name: matrix(name) for name in names})
+
+    def __len__(self) -> int:
+        return len(self.curves)
+
+    @cached_property
+    def used(self) -> NDArray[np.bool_]:
+        """Where there is a sample, shape (n_curves, n_most)."""
+        return np.asarray(np.arange(self.flux.shape[1]) < self.n[:, None])
+
+    @cached_property
+    def weight(self) -> FloatArray:
+        """Inverse variance of each sample, 0 where there is none; shape (n_curves, n_most)."""
+        return np.asarray(np.where(self.used, self.flux_err, np.inf) ** -2.0)
+
+    @cached_property
+    def weighted_mean(self) -> FloatArray:
+        """Inverse-variance weighted mean flux, shape (n_curves,); NaN for no samples."""
+        weight, flux = self.sums(self.weight), self.sums(self.weight * np.where(self.used, self.flux, 0))
+        return np.asarray(np.divide(flux, weight, out=np.full(len(self), np.nan), where=weight > 0))
+
+    @cached_property
+    def quiet_level(self) -> tuple[FloatArray, FloatArray]:
+        """The flux when each source is not bright and its 1-sigma error, shapes (n_curves,); see `quiet_level`."""
+        level, error = np.array([curve.quiet_level for curve in self.curves]).T
+        return level, error
+
+    @cached_property
+    def above_quiet(self) -> FloatArray:
+        """Excess over the quiet level in units of its own error, shape (n_curves, n_most), NaN where no sample is."""
+        level, error = self.quiet_level
+        return np.asarray((self.flux - level[:, None]) / np.hypot(self.flux_err, error[:, None]))
+
+    @staticmethod
+    def sums(values: FloatArray) -> FloatArray:
+        """Sum over each row's samples, shape (n_curves,), of values that are 0 where there is none."""
+        return np.asarray(np.cumsum(values, axis=1)[:, -1]) if values.shape[1] else np.zeros(len(values))
+
+    def groups(self, first: NDArray[np.bool_]) -> tuple[IntArray, FloatArray, FloatArray]:
+        """Consecutive samples as groups that begin where `first`, shape (n_curves, n_most), is true.
+
+        Gives each sample's group, shape (n_curves, n_most), and for each group the sum of the inverse variances (0 for
+        none) and the weighted mean flux (NaN for none), shapes (n_curves, n_groups), `n_groups` of the row with most.
+        """
+        first = first & self.used
+        group: IntArray = np.maximum(np.cumsum(first, axis=1, dtype=np.int64) - 1, 0)
+        shape = (len(self), int(group.max(initial=0)) + 1)
+        place = (group + np.arange(len(self))[:, None] * shape[1]).ravel()
+        offset = np.where(self.used, self.flux - self.weighted_mean[:, None], 0)
+        weight = np.bincount(place, self.weight.ravel(), shape[0] * shape[1]).reshape(shape)
+        flux = np.bincount(place, (self.weight * offset).ravel(), shape[0] * shape[1]).reshape(shape)
+        mean = np.divide(flux, weight, out=np.full(shape, np.nan), where=weight > 0) + self.weighted_mean[:, None]
+        return group, np.asarray(weight), np.asarray(mean)
 
 
 def weighted_mean(flux: FloatArray, flux_err: FloatArray) -> tuple[float, float]:

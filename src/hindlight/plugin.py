@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hindlight.facts import Cards, FrameFacts, PlaneAxes
-from hindlight.lightcurve import Block, FloatArray, IntArray, LightCurve
+from hindlight.lightcurve import Block, FloatArray, IntArray, LightCurve, Rows
 from hindlight.schema import TableColumn
 
 Values = Mapping[str, Any]
@@ -76,8 +76,28 @@ class Statistic(Plugin):
         raise TypeError(f"statistic {self.name} defines no compute()")
 
     def compute_block(self, block: Block) -> Mapping[str, NDArray[np.generic]] | None:
-        """The declared columns for a whole block, arrays of shape (n_positions,); None leaves it to `compute`."""
+        """The declared columns for a whole block, arrays of shape (n_positions,); None leaves it to `compute`.
+
+        Every position of the block has `min_points` samples, and with `uses_times` only samples whose time is known.
+        """
         return None
+
+
+@dataclass(frozen=True)
+class RowStatistic(Statistic):
+    """A statistic of one channel that is worked out for many light curves at once: it defines `compute_rows` only."""
+
+    def compute_rows(self, rows: Rows) -> Mapping[str, NDArray[np.generic]]:
+        """The declared columns, arrays of shape (n_curves,); none may depend on which other rows there are."""
+        raise TypeError(f"statistic {self.name} defines no compute_rows()")
+
+    def compute(self, curve: LightCurve) -> Values:
+        """The same for one light curve."""
+        return {name: values.item() for name, values in self.compute_rows(curve.rows).items()}
+
+    def compute_block(self, block: Block) -> Mapping[str, NDArray[np.generic]] | None:
+        """The same for a block."""
+        return self.compute_rows(block.rows)
 
 
 @dataclass(frozen=True)
