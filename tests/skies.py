@@ -56,6 +56,7 @@ class Sky:
     noisier: tuple[float, ...] = ()
     site: tuple[float, float, float] = (5195675.767, 1891071.326, -3170873.735)
     extra: dict[str, object] = field(default_factory=dict)
+    backdrop: Callable[[int], np.ndarray] | None = None  # what lies behind a frame's sources, in units of the rms
 
 
 def header(sky: Sky, day: float, shift: Sequence[float]) -> fits.Header:
@@ -117,6 +118,8 @@ def write_sky(folder: Path, sky: Sky, sources: Sequence[Source], seed: int, pref
         image = sky.rms * noise_image(sky, rng)
         if sky.noisier:
             image *= sky.noisier[number]
+        if sky.backdrop is not None:
+            image += sky.rms * sky.backdrop(number)
         gain, shift, gradient = 1.0, np.zeros(2), np.zeros((2, 2))
         if sky.gain_scatter or sky.pointing_pixels:
             gain = 1.0 + sky.gain_scatter * rng.standard_normal()

@@ -5,7 +5,7 @@ import pytest
 
 from hindlight import candidates, judge, ranking
 from hindlight.lightcurve import Block, Channel, freeze
-from hindlight.settings import Detection
+from hindlight.settings import Controls, Detection
 
 CHANNEL = Channel(label="array|1400MHz|I|30as|Jy/beam", unit="Jy/beam")
 
@@ -53,3 +53,37 @@ def test_bounds_on_total_flux_hold_above_confusion() -> None:
         assert row["confusion_rms"] == found.confusion
     assert 0.92 * 400 <= above <= 0.98 * 400  # binomial: 380 +- 4, and the confusion is known to 6 %
     assert plain < 0.8 * 400
+
+
+def test_controls_of_a_like_noise_serve() -> None:
+    """Those within a tenth of the target's typical error, or the most alike ones where these are few; how unlike is said."""
+    error = np.geomspace(1.0, 4.0, 60)
+    found = judge.Judgement(61, {
+        ("c", "core_n_used"): np.full(61, 20), ("c", "core_depth"): np.append(error, 1.0),
+        ("d", "core_n_used"): np.full(61, 20), ("d", "core_depth"): np.append(np.where(np.arange(60) == 2, 9.0, 1.0), 1.0),
+    })  # fmt: skip
+    target, controls = np.array([60]), np.arange(60)
+    few = Controls(fewest_alike=3)
+    serving, unlike = ranking.matched(found, target, controls, np.ones((1, 60), bool), few)
+    assert np.flatnonzero(serving[0]).tolist() == [0, 1, 3, 4]  # 1.1 is the fifth; the third is unlike in channel d
+    assert unlike[0] == pytest.approx(error[4])
+    serving, unlike = ranking.matched(found, target, controls, np.ones((1, 60), bool), Controls(fewest_alike=10))
+    assert np.flatnonzero(serving[0]).tolist() == [0, 1, *range(3, 11)]
+    assert unlike[0] == pytest.approx(error[10])
+    allowed = (np.arange(60) % 2 == 0)[None, :]
+    serving, _ = ranking.matched(found, target, controls, allowed, Controls(fewest_alike=100))
+    assert np.array_equal(serving, allowed & (np.arange(60) >= 0))
+
+
+def test_no_control_is_alike_by_default() -> None:
+    """A target without controls is unlike none; a channel in which the target was not measured does not count."""
+    found = judge.Judgement(3, {
+        ("c", "core_n_used"): np.array([20, 20, 20]), ("c", "core_depth"): np.array([1.0, 1.0, 1.0]),
+        ("d", "core_n_used"): np.array([0, 20, 0]), ("d", "core_depth"): np.array([np.nan, 5.0, np.nan]),
+    })  # fmt: skip
+    none, unlike = ranking.matched(found, np.array([0]), np.empty(0, int), np.ones((1, 0), bool), Controls())
+    assert none.shape == (1, 0)
+    assert unlike.tolist() == [1.0]
+    serving, unlike = ranking.matched(found, np.array([0]), np.array([1, 2]), np.ones((1, 2), bool), Controls())
+    assert serving.all()
+    assert unlike.tolist() == [1.0]

@@ -41,6 +41,7 @@ class Field:
     judgement: Judgement = field(default_factory=lambda: Judgement(0))
     ranks: ranking.FieldRanks | None = None
     thresholds: dict[str, ranking.Thresholds] = field(default_factory=dict)
+    unlike: FloatArray = field(default_factory=lambda: np.empty(0))
 
     @property
     def ranked(self) -> ranking.FieldRanks:
@@ -115,7 +116,7 @@ def rank(found: Field, plugins: Plugins, settings: Settings) -> None:
     """Fill in a field's ranks and thresholds from its judgement."""
     columns = full_columns([*plugins.statistics, *plugins.period_searches])
     targets, controls = found.rows(found.targets), found.rows(found.controls)
-    serving = ranking.matched(found.judgement, targets, controls, found.serving, settings.controls.shared_frames)
+    serving, found.unlike = ranking.matched(found.judgement, targets, controls, found.serving, settings.controls)
     found.ranks = ranking.rank_field(found.judgement, columns, targets, controls, serving, found.group_size)
     found.thresholds = ranking.thresholds(found.judgement, controls, settings.detection)
 

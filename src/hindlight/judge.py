@@ -27,6 +27,7 @@ CORE = (
     Column("mean_snr", "weighted mean flux over its error", unusual="high", about="presence"),
     Column("mean", "weighted mean flux"),
     Column("mean_err", "its error"),
+    Column("depth", "median error of a single raw flux"),
     Column("reduced", "chi-square per degree of freedom about the weighted mean", unusual="high"),
 )
 
@@ -93,6 +94,7 @@ def core_columns(curve: LightCurve) -> dict[str, Any]:
         "mean_snr": mean_snr,
         "mean": mean,
         "mean_err": error,
+        "depth": float(np.median(curve.raw_flux_err)),
         "reduced": spread / (len(curve) - 1) if len(curve) > 1 else float("nan"),
     }
 

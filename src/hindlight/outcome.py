@@ -85,6 +85,7 @@ def chance_cells(found: Field, index: int, at: int, p: PValues) -> dict[str, Any
         "beyond_controls": rank.beyond,
         "n_controls": int(found.ranked.n_controls[index]),
         "null": null_of(found),
+        "unlike": float(found.unlike[index]),
     }
 
 

@@ -17,7 +17,7 @@ from hindlight.judge import WHOLE, Judgement, oriented
 from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.plugin import Column, Plugin
 from hindlight.robust import excess_scatter
-from hindlight.settings import Detection
+from hindlight.settings import Controls, Detection
 
 FAILING_SHARE = 0.05  # a plugin that fails on more of the controls than this gets no p-value
 STEADY_SIGMA = 5.0  # controls with a mean flux further out than this do not set detection thresholds
@@ -95,18 +95,29 @@ def oriented_matrix(
 
 
 def matched(
-    judgement: Judgement, targets: IntArray, controls: IntArray, in_frames: NDArray[np.bool_], share: float
-) -> NDArray[np.bool_]:
-    """Which controls serve which target, shape (n_targets, n_controls).
+    judgement: Judgement, targets: IntArray, controls: IntArray, in_frames: NDArray[np.bool_], settings: Controls
+) -> tuple[NDArray[np.bool_], FloatArray]:
+    """Which controls serve which target, shape (n_targets, n_controls), and how unlike these are in depth, (n_targets,).
 
-    `in_frames` says who shares enough frames by footprint; a control must also have nearly as many usable samples in
-    each channel.
+    `in_frames` says who shares enough frames by footprint; a control must also have nearly as many usable samples in each
+    channel, and a like noise: structure in the sky, the edge of the primary beam and sidelobes of bright sources all show
+    in it. Where fewer than `fewest_alike` are within the factor `alike`, so many of the most alike ones serve. How unlike:
+    the largest factor between the depth of the target and that of a control that serves it, 1 for none.
     """
     good = in_frames.copy()
+    unlike = np.zeros(good.shape)
     for (_, full), values in judgement.values.items():
         if full == "core_n_used":
-            good &= values[controls][None, :] >= share * values[targets][:, None]
-    return good
+            good &= values[controls][None, :] >= settings.shared_frames * values[targets][:, None]
+        if full == "core_depth":
+            logs = np.log(values)
+            unlike = np.fmax(unlike, np.abs(logs[controls][None, :] - logs[targets][:, None]))
+    unlike[~good] = np.inf
+    if good.shape[1] == 0:
+        return good, np.ones(len(good))
+    enough = np.sort(unlike, axis=1)[:, : settings.fewest_alike][:, -1:]  # infinite where there are fewer
+    good &= unlike <= np.maximum(np.log(settings.alike), enough)
+    return good, np.exp(np.max(unlike, axis=1, initial=0.0, where=good))
 
 
 def rank_field(

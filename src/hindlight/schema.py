@@ -471,6 +471,7 @@ CANDIDATES = (
     ),
     TableColumn("n_controls", "blank positions that the target was ranked with", dtype="int64", ucd="meta.number"),
     TableColumn("null", "what these controls are: blank sky, or blank sky made as bright as the target", dtype="str"),
+    TableColumn("unlike", "largest factor between the typical error of the target and of one of its controls"),
     TableColumn("p_empirical", "p_value before any extrapolation: (r+1)/(n+1)", ucd="stat.probability"),
     TableColumn("beyond_controls", "distance of the combination beyond the controls, in their MAD", ucd="stat.value"),
     TableColumn("notes", "what a reader should know before trusting the row", dtype="str", ucd="meta.note"),

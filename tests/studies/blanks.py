@@ -67,7 +67,7 @@ def uniformity(table: Table, controls: dict[str, np.ndarray]) -> dict[str, float
     blank = np.array([str(name).startswith("blank") for name in table["name"]])
     found = {}
     for name in controls:
-        if name in ("id", "field", "p_value"):
+        if name in ("id", "field", "copy", "p_value"):
             continue
         a, b = np.asarray(table[name][blank], float), controls[name]
         a, b = a[np.isfinite(a)], b[np.isfinite(b)]
