@@ -1,11 +1,14 @@
 """Thresholds of a field from its blank positions, where faint sources and diffuse emission lie under all of them."""
 
+from pathlib import Path
+
 import numpy as np
 import pytest
 
 from hindlight import candidates, judge, ranking
 from hindlight.lightcurve import Block, Channel, freeze
 from hindlight.settings import Controls, Detection
+from test_estimators import study
 
 CHANNEL = Channel(label="array|1400MHz|I|30as|Jy/beam", unit="Jy/beam")
 
@@ -87,3 +90,11 @@ def test_no_control_is_alike_by_default() -> None:
     serving, unlike = ranking.matched(found, np.array([0]), np.array([1, 2]), np.ones((1, 2), bool), Controls())
     assert serving.all()
     assert unlike.tolist() == [1.0]
+
+
+def test_a_small_version_of_the_study(tmp_path: Path) -> None:
+    """Blank targets among ripples: with controls alike their p-values are those of chance, with others they are not."""
+    kinds = study("blank_kinds")
+    kinds.archive(tmp_path, "ripple", 5, targets=60, frames=16, size=300)
+    assert kinds.holds([kinds.p_values(tmp_path, "")], "alike", say=False)
+    assert not kinds.holds([kinds.p_values(tmp_path, kinds.ANYWHERE)], "anywhere", say=False)
