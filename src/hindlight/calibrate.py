@@ -20,6 +20,7 @@ MAD_TO_SIGMA = 1.482602
 TAIL_CONFIDENCE = 0.95
 SHAPES = np.concatenate(([0.0], np.geomspace(1e-3, 5.0, 160)))
 SCALES = np.geomspace(0.02, 50.0, 400)
+LOGS_AT_ONCE = 25  # factors: no product of so many, each below the largest shape / scale * excess, overflows
 
 
 @dataclass(frozen=True, eq=False)
@@ -163,11 +164,14 @@ def tail_bound(distances: FloatArray, target: float, exceedances: int) -> float:
 
 def _log_terms(shape: FloatArray, scale: FloatArray, excess: FloatArray) -> FloatArray:
     """Sum over the excesses of log(1 + shape y / scale) / shape, and of y / scale where the shape is zero."""
-    total = np.zeros(np.broadcast_shapes(shape.shape, scale.shape))
-    safe = np.where(shape > 0, shape, 1.0)
-    for y in excess:
-        total += np.where(shape > 0, np.log1p(shape * y / scale) / safe, y / scale)
-    return total
+    ratio = shape / scale
+    logs = np.zeros(ratio.shape)
+    for start in range(0, len(excess), LOGS_AT_ONCE):  # one logarithm of a product is much faster than many
+        product = np.ones(ratio.shape)
+        for y in excess[start : start + LOGS_AT_ONCE]:
+            product *= 1.0 + ratio * y
+        logs += np.log(product)
+    return np.where(shape > 0, logs / np.where(shape > 0, shape, 1.0), excess.sum() / scale)
 
 
 def threshold(maxima: FloatArray, false_alarms: float) -> float:
