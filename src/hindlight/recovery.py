@@ -1,0 +1,777 @@
+"""`hindlight completeness` and `plugins --power`: made-up sources through the unchanged judging of a run, and the tables.
+
+The run is only read; what is made goes beside its result tables. Pieces of work are plain functions of plain arguments, as
+in `tasks`.
+"""
+
+from __future__ import annotations
+
+import time
+import tomllib
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, field, replace
+from pathlib import Path
+from typing import Any
+
+import astropy.table
+import numpy as np
+from numpy.typing import NDArray
+
+from hindlight import completeness, host, injection, judge, photometry, plan, planted, ranking, record, store
+from hindlight import settings as settings_module
+from hindlight.completeness import Bars, Cell, Found, Injection, Looks, Null
+from hindlight.crew import Crew, assembled
+from hindlight.duplicates import counts
+from hindlight.errors import NothingToDoError, UsageError
+from hindlight.files import check_unchanged
+from hindlight.headers import SetAsideError
+from hindlight.lightcurve import Block, FloatArray, IntArray
+from hindlight.plugin import Column, Plugin
+from hindlight.positions import read_targets, serves
+from hindlight.record import Request
+from hindlight.schema import COMPLETENESS, COMPLETENESS_LIMITS, COMPLETENESS_TARGETS, UNUSABLE
+from hindlight.settings import Settings
+from hindlight.store import Columns, RunFolder
+from hindlight.systems import unit_vectors
+from hindlight.tables import astropy_table, read_ecsv, rows_to_columns, write_table
+from hindlight.tasks import Order, anchors_of, book, frame_facts, position_blocks
+from hindlight.timing import DAY, J2000_JD
+from hindlight.verdicts import Watcher
+
+ALL = "all"
+INJECTIONS_AT_ONCE = 64
+SMALL_WORK = 20_000_000  # frames times positions judged; up to this many the work is done in this process
+POWER_RATE = 1e-3
+FEWEST_FOR_TAIL = 40  # controls: fewer show no tail, see `calibrate.tail_bound`
+UPPER_BOUND = (
+    "sources are added to images as they are: what deconvolution does to a source that flickers is not in it, so for "
+    "synthesis images completeness is an upper bound"
+)
+
+Mask = NDArray[np.bool_]
+
+
+@dataclass(frozen=True, eq=False)
+class Subset:
+    """Some frames of the run: their ids, ascending; empty names for all."""
+
+    name: str
+    instrument: str
+    decade: str
+    frames: IntArray
+
+
+@dataclass(frozen=True, eq=False)
+class FieldControls:
+    """The controls of one field, ids ascending, how many targets they serve, and where they are: ICRS unit vectors."""
+
+    number: int
+    ids: IntArray
+    n_targets: int
+    vectors: FloatArray
+
+
+@dataclass(frozen=True, eq=False)
+class Judged:
+    """Blank controls of one piece of work: in each subset what was judged, and each channel's errors at each control.
+
+    `errors` are medians over the frames, shape (n,), by channel.
+    """
+
+    judgements: Mapping[str, judge.Judgement]
+    errors: Mapping[str, FloatArray]
+
+
+@dataclass(frozen=True, eq=False)
+class Outcomes:
+    """Made-up sources in one subset: what became of them, and of each the highest S/N added, frames lit, frames used."""
+
+    found: Found
+    extra: Mapping[str, FloatArray]
+
+
+EXTRA = ("median_snr", "median_lit", "median_used")
+
+
+@dataclass(frozen=True, eq=False)
+class Report:
+    """What is written and said: the three tables, sentences for the last lines, and the raw outcomes in all frames."""
+
+    table: astropy.table.Table
+    targets: astropy.table.Table
+    limits: astropy.table.Table
+    remarks: tuple[str, ...]
+
+
+@dataclass(frozen=True)
+class Power:
+    """A statistic's report card.
+
+    `power` maps kinds of source to the share of them that the statistic alone finds at the rate; `only_here` counts those
+    that no other finds; `cost_s` is what a thousand positions (all their channels) take.
+    """
+
+    plugin: str
+    power: Mapping[str, float]
+    only_here: int
+    cost_s: float
+
+
+@dataclass(frozen=True)
+class Asked:
+    """What the command line asks for."""
+
+    run: Path
+    settings: Path | None = None
+    targets: Path | None = None
+    plugins: tuple[Path, ...] = ()
+    workers: int | None = None
+
+
+@dataclass(frozen=True, eq=False)
+class Study:
+    """What every stage needs."""
+
+    order: Order
+    plugins: host.Plugins
+    crew: Crew
+    watcher: Watcher
+    frames: Columns
+    fields: Sequence[FieldControls]
+    subsets: Sequence[Subset]
+    cells: Sequence[Cell]
+    bars: Bars
+    columns: Mapping[str, Column] = field(default_factory=dict)
+
+    @property
+    def settings(self) -> Settings:
+        """The settings in force."""
+        return self.order.settings
+
+    def each(self, stage: str, function: Callable[..., Any], jobs: Sequence[tuple[Any, ...]]) -> list[Any]:
+        """The results of jobs in their order, each told the order first."""
+        self.watcher.stage(stage, len(jobs))
+        results: list[Any] = [None] * len(jobs)
+
+        def done(number: int, result: Any) -> None:
+            results[number] = result
+            self.watcher.step()
+
+        self.crew.run(function, [(self.order, *job) for job in jobs], done)
+        return results
+
+
+# The pieces of work.
+
+
+def judge_controls(order: Order, ids: IntArray, subsets: Sequence[Subset]) -> Judged:
+    """Every statistic at these controls (ascending ids) in each subset."""
+    blocks = position_blocks(order, ids)["blocks"]
+    statistics = host.load(order.plugins).statistics
+    judged = {subset.name: judge.judge(_within(blocks, subset), statistics) for subset in subsets}
+    return Judged(judged, {label: _typical(block.flux_err) for label, block in blocks.items()})
+
+
+def search_controls(order: Order, ids: IntArray, subset: Subset) -> judge.Judgement:
+    """Every period search at these positions (ascending ids) in a subset."""
+    blocks = _within(position_blocks(order, ids)["blocks"], subset)
+    return judge.search(_curves(blocks), host.load(order.plugins).period_searches)
+
+
+def judge_injected(
+    order: Order, wanted: Sequence[Injection], cells: Sequence[Cell], units: Mapping[str, float],
+    subsets: Sequence[Subset], nulls: Mapping[str, Null], bars: Bars, with_plugins: bool,
+) -> list[Outcomes]:  # fmt: skip
+    """What becomes of sources at controls of one field, in each subset; `units` are fluxes of 1 by channel."""
+    hosts = np.array([one.host for one in wanted])
+    ids = np.unique(hosts)
+    plugins = host.load(order.plugins)
+    columns = judge.full_columns([*plugins.statistics, *plugins.period_searches])
+    plain = position_blocks(order, ids)["blocks"]
+    made = {
+        label: _injected(order, block, np.searchsorted(ids, hosts), wanted, cells, units[label])
+        for label, block in plain.items()
+    }
+    asked = [*plugins.statistics, *plugins.period_searches] if with_plugins else []
+    outcomes = []
+    for subset in subsets:
+        blocks = _within({label: block for label, (block, _) in made.items()}, subset)
+        judged = judge.judge(blocks, plugins.statistics)
+        null = nulls[subset.name]
+        if order.settings.completeness.period_search and plugins.period_searches:
+            _search_gated(judged, hosts, null, blocks, columns, order.settings, plugins)
+        became = completeness.found(judged, hosts, null, columns, bars, order.settings, asked)
+        outcomes.append(Outcomes(became, _extra(plain, made, np.searchsorted(ids, hosts), subset)))
+    return outcomes
+
+
+def plant_in_frame(order: Order, frame: int, controls: IntArray) -> planted.Proof | None:
+    """A source added to the pixels of a frame at one of these controls; None where no flux can be measured now."""
+    tables = book(order.run, order.version)
+    row = tables.row_of_frame[frame]
+    who = tables.positions
+    pieces = [p for p in store.pieces(tables.frames, who) if p.batch == tables.frames["batch"][row]]
+    rows = store.read_rows(tables.folder, pieces, controls, np.array([frame]))
+    usable = np.isfinite(rows["flux"]) & ((rows["flags"] & int(UNUSABLE)) == 0)
+    if not usable.any():
+        return None
+    ids = rows["position"][usable]
+    key = (order.settings.completeness.seed << 32) + frame
+    chosen = int(ids[int(len(ids) * injection.uniform(key, completeness.HOST, np.zeros(1, np.int64))[0])])
+    at = int(np.searchsorted(who["id"], chosen))
+    facts = frame_facts(tables.frames, row)
+    estimator = photometry.choose_estimator(
+        host.load(order.plugins).estimators, facts.unit, order.settings.photometry.estimator, facts.beam_major > 0
+    )
+    try:
+        check_unchanged(facts.path, int(tables.frames["size"][row]), int(tables.frames["modified_ns"][row]))
+        return planted.plant(
+            facts, who["ra"][at : at + 1], who["dec"][at : at + 1], estimator, order.settings,
+            anchors_of(tables, row, int(who["round"][at])), key,
+        )  # fmt: skip
+    except (SetAsideError, OSError, ValueError):
+        return None
+
+
+def looks_of(
+    order: Order, ids: IntArray, thresholds: Sequence[Mapping[str, float]], given: Sequence[Mapping[str, float]]
+) -> list[tuple[Looks, bool]]:
+    """The looks at targets (ascending ids) and whether they are cycles.
+
+    `thresholds` are each target's in sigma by channel; `given` is its ephemeris, NaN for none.
+    """
+    blocks = position_blocks(order, ids)["blocks"]
+    gap = order.settings.detection.epoch_gap_days
+    return [
+        _looks({label: block for label, block in blocks.items() if label in limits}, row, limits, ephemeris, gap)
+        for row, (limits, ephemeris) in enumerate(zip(thresholds, given, strict=True))
+    ]
+
+
+# What the pieces are made of.
+
+
+def _within(blocks: Mapping[str, Block], subset: Subset) -> dict[str, Block]:
+    """Blocks in the frames of a subset, those without any left out."""
+    if subset.name == ALL:
+        return dict(blocks)
+    kept = {label: np.isin(block.frame, subset.frames) for label, block in blocks.items()}
+    return {label: injection.restricted(block, kept[label]) for label, block in blocks.items() if kept[label].any()}
+
+
+def _typical(flux_err: FloatArray) -> FloatArray:
+    """The median error of each row, NaN where there is none."""
+    return np.array([np.median(row[np.isfinite(row)]) if np.isfinite(row).any() else np.nan for row in flux_err])
+
+
+def _curves(blocks: Mapping[str, Block]) -> list[list[Any]]:
+    """Each position's light curves."""
+    n = len(next(iter(blocks.values()), ()))
+    return [[block.curve(row) for block in blocks.values()] for row in range(n)]
+
+
+def _injected(
+    order: Order, block: Block, rows: IntArray, wanted: Sequence[Injection], cells: Sequence[Cell], unit: float
+) -> tuple[Block, FloatArray]:
+    """A channel's light curves with the sources added, and the fluxes that were, shape (n, n_frames)."""
+    flux = np.zeros((len(rows), len(block.frame)))
+    if not block.channel.signed and np.isfinite(unit):
+        for number, (row, one) in enumerate(zip(rows, wanted, strict=True)):
+            peak = unit * cells[one.cell].flux
+            if peak > 0:
+                flux[number] = peak * injection.brightness(
+                    one.source, block.t_tdb_s[row], block.exposure_s[row], block.frame
+                )
+    tables = book(order.run, order.version)
+    at = [tables.row_of_frame[int(frame)] for frame in block.frame]
+    electrons = tables.frames["electrons_per_unit"][at]
+    keys = np.array([one.source.key for one in wanted])
+    return injection.injected(block, rows, flux, keys, tables.solution, electrons), flux
+
+
+def _extra(
+    plain: Mapping[str, Block], made: Mapping[str, tuple[Block, FloatArray]], rows: IntArray, subset: Subset
+) -> dict[str, FloatArray]:
+    """Of each source the highest S/N that was added to a frame, how many frames it lit, and how many could be used."""
+    highest, lit, used = np.zeros((3, len(rows)))
+    for label, block in plain.items():
+        here = np.isin(block.frame, subset.frames) if subset.name != ALL else np.ones(len(block.frame), bool)
+        error = block.flux_err[rows][:, here]
+        snr = np.where(np.isfinite(error), made[label][1][:, here] / error, 0.0)
+        highest = np.maximum(highest, snr.max(axis=1, initial=0.0))
+        lit += (snr > 1.0).sum(axis=1)
+        used += np.isfinite(error).sum(axis=1)
+    return dict(zip(EXTRA, (highest, lit, used), strict=True))
+
+
+def _search_gated(
+    judged: judge.Judgement, hosts: IntArray, null: Null, blocks: Mapping[str, Block], columns: Mapping[str, Column],
+    settings: Settings, plugins: host.Plugins,
+) -> None:  # fmt: skip
+    """Search the periods of the sources that the statistics so far put among the foremost, as in a run."""
+    plain = replace(null, judgement=_without(null.judgement, plugins.period_searches))
+    passes = completeness.ranked(judged, hosts, plain, columns, settings).p <= settings.ranking.gate
+    rows = np.flatnonzero(passes)
+    curves = _curves(blocks)
+    judge.spread(judged, judge.search([curves[row] for row in rows], plugins.period_searches), rows, columns)
+
+
+def _without(judgement: judge.Judgement, plugins: Sequence[Plugin]) -> judge.Judgement:
+    """A judgement without the columns of some plugins."""
+    names = {f"{plugin.name}_{column.name}" for plugin in plugins for column in plugin.columns}
+    return replace(judgement, values={key: v for key, v in judgement.values.items() if key[1] not in names})
+
+
+def _looks(
+    blocks: Mapping[str, Block], row: int, limits: Mapping[str, float], given: Mapping[str, float], gap_days: float
+) -> tuple[Looks, bool]:
+    """The looks at one target in unsigned channels."""
+    parts: list[list[Any]] = [[], [], [], [], []]
+    for number, (label, block) in enumerate(blocks.items()):
+        curve = block.curve(row)
+        if len(curve) == 0 or block.channel.signed:
+            continue
+        unit = float(np.median(curve.flux_err))
+        n = len(curve)
+        told = (curve.t_tdb_s, curve.exposure_s, curve.flux_err / unit, np.full(n, limits[label]), np.full(n, number))
+        for part, values in zip(parts, told, strict=True):
+            part.append(values)
+    t, exposure, error, threshold, channel = (np.concatenate(p) if p else np.empty(0) for p in parts)
+    cycles = bool(np.isfinite([given["period"], given["epoch"]]).all())
+    look, share = completeness.by_epoch(t, gap_days), np.ones(len(t))
+    if cycles:
+        known = np.isfinite(t)
+        t, exposure, error, threshold, channel = (v[known] for v in (t, exposure, error, threshold, channel))
+        since = t - (given["epoch"] - J2000_JD) * DAY
+        dot, window = float(np.nan_to_num(given["period_dot"])), float(np.nan_to_num(given["window"]))
+        look, share = completeness.by_cycle(since, exposure, given["period"], dot, window)
+    return Looks(look, channel.astype(np.int64), error, threshold, share), cycles
+
+
+# The stages.
+
+
+def recover(asked: Asked, watcher: Watcher) -> Report:
+    """Measure what a finished run could have shown, and write its tables of completeness.
+
+    Raises `UsageError` where there is no finished run, `NothingToDoError` where it has no controls.
+    """
+    run, order, plugins = _opened(asked)
+    ephemerides = read_targets(asked.targets) if asked.targets is not None else None
+    with run.locked(), assembled(asked.workers, None, _is_small(run, order.settings)) as crew:
+        study = _study(run, order, plugins, crew, watcher, _subsets)
+        nulls, units = _nulls(study)
+        wanted = _wanted(study)
+        outcomes = _outcomes(study, wanted, nulls, units, with_plugins=False)
+        proofs = _proofs(study)
+        meta = _meta(study, units)
+        table = _table(study, wanted, outcomes, meta)
+        targets, limits = _target_tables(study, run, table, ephemerides, meta)
+    remarks = (*_remarks(study, nulls, targets), *_proof_remarks(proofs, study), UPPER_BOUND)
+    for name, made in (("completeness_limits", limits), ("completeness_targets", targets), ("completeness", table)):
+        for ending in (".fits", ".vot", ".ecsv"):
+            write_table(run.file(f"{name}{ending}"), made)
+    store.write_text(run, "completeness.txt", "\n".join(remarks) + "\n")
+    return Report(table, targets, limits, remarks)
+
+
+def report_cards(asked: Asked, watcher: Watcher) -> tuple[list[Power], tuple[str, ...]]:
+    """The power of each statistic alone on made-up sources in all frames of a run, and what is to be said of it."""
+    run, order, plugins = _opened(asked)
+    with run.locked(), assembled(asked.workers, None, _is_small(run, order.settings)) as crew:
+        study = _study(run, order, plugins, crew, watcher, lambda frames: [_all_frames(frames)])
+        nulls, units = _nulls(study)
+        wanted = _wanted(study)
+        outcome = _outcomes(study, wanted, nulls, units, with_plugins=True)[ALL]
+        asks = [*plugins.statistics, *(plugins.period_searches if order.settings.completeness.period_search else ())]
+        rate = np.maximum(POWER_RATE, outcome.found.lowest_p)
+        hit = outcome.found.own_p <= rate[:, None] * (1 + 1e-9)
+        costs = _costs(study, asks)
+    kinds = np.array([study.cells[one.cell].kind for one in wanted])
+    cards = []
+    for number, plugin in enumerate(asks):
+        only = hit[:, number] & (hit.sum(axis=1) == 1) & (kinds != completeness.NOTHING)
+        power = {kind: float(hit[kinds == kind, number].mean()) for kind in dict.fromkeys(kinds.tolist())}
+        cards.append(Power(plugin.name, power, int(only.sum()), costs[number]))
+    highest = float(rate.max())
+    said = f"power at a false-alarm rate of {POWER_RATE:g}"
+    if highest > POWER_RATE:
+        said += f", or what the controls can tell, which is {float(rate.min()):.3g} to {highest:.3g} here"
+    searched = () if order.settings.completeness.period_search else ("period searches are left out: [completeness] "
+                                                                     "period_search = true asks them too",)  # fmt: skip
+    return cards, (said, *searched)
+
+
+def _opened(asked: Asked) -> tuple[RunFolder, Order, host.Plugins]:
+    """The finished run, and what it was judged with; `[completeness]` from the settings file, if one is given."""
+    run = RunFolder(asked.run)
+    run.require()
+    if not run.has("candidates.ecsv"):
+        raise UsageError(f"{run.path}: this run was stopped before it was judged; its command continues it")
+    request = Request((), Path(), run.path, None, asked.plugins)
+    chosen = record.settings_in_force(run, request)
+    if asked.settings is not None:
+        chosen = replace(chosen, completeness=settings_module.read_settings(asked.settings).completeness)
+    recorded = tomllib.loads(run.file("settings.toml").read_text(encoding="utf-8")).get("versions", {})
+    known = host.load(host.spec_from(Settings(), asked.plugins))
+    names = {entry.plugin.name for entry in known.loaded}
+    missing = sorted(set(recorded.get("plugins", {})) - names)
+    if missing:
+        raise UsageError(f"{run.path}: the run was judged with plugin {missing[0]!r}; give its file with --plugin")
+    spec = host.spec_from(chosen, asked.plugins, sorted(names - set(recorded.get("plugins", names))))
+    plugins = host.load(spec)
+    spec = replace(spec, expected=plugins.fingerprint())
+    return run, Order(str(run.path.resolve()), chosen, spec, run.version()), plugins
+
+
+def _is_small(run: RunFolder, settings: Settings) -> bool:
+    """Whether the work is too small to be worth other processes."""
+    n = len(completeness.grid(settings.completeness)) * settings.completeness.per_cell
+    return n * len(run.frames()["id"]) * (100 if settings.completeness.period_search else 1) < SMALL_WORK
+
+
+def _study(
+    run: RunFolder, order: Order, plugins: host.Plugins, crew: Crew, watcher: Watcher,
+    chosen: Callable[[Columns], Sequence[Subset]],
+) -> Study:  # fmt: skip
+    """Fields, subsets and cells; raises `NothingToDoError` where no field has controls."""
+    tables = book(order.run, order.version)
+    fields = [found for found in _fields(tables.positions) if len(found.ids) > 1]
+    if not fields:
+        raise NothingToDoError(
+            f"run {run.path}: no controls, so nothing can be said of completeness; [controls] per_field sets how many"
+        )
+    candidates = read_ecsv(run.file("candidates.ecsv"))
+    level = order.settings.ranking.level
+    bars = Bars(*(completeness.bar(np.asarray(candidates[name], float), level) for name in ("p_empirical", "p_value")))
+    asked = plugins.period_searches if order.settings.completeness.period_search else ()
+    columns = judge.full_columns([*plugins.statistics, *asked])
+    cells = completeness.grid(order.settings.completeness)
+    return Study(order, plugins, crew, watcher, tables.frames, fields, chosen(tables.frames), cells, bars, columns)
+
+
+def _fields(positions: Columns) -> list[FieldControls]:
+    """The controls of every field with targets that are judged at their stated place."""
+    is_target = (positions["kind"] == "target") & (positions["search"] < 0)
+    found = []
+    for number in sorted(set(positions["field"][is_target].tolist())):
+        here = (positions["kind"] == "control") & (positions["field"] == number)
+        order = np.argsort(positions["id"][here])
+        vectors = unit_vectors(positions["ra"][here], positions["dec"][here])[order]
+        n_targets = int((is_target & (positions["field"] == number)).sum())
+        found.append(FieldControls(int(number), positions["id"][here][order], n_targets, vectors))
+    return found
+
+
+def _all_frames(frames: Columns) -> Subset:
+    return Subset(ALL, "", "", frames["id"][counts(frames)])
+
+
+def _subsets(frames: Columns) -> list[Subset]:
+    """All frames, those of each instrument, and those of each instrument and decade, in order of names."""
+    used = counts(frames)
+    decade = np.array([f"{text[:3]}0s" if text else "" for text in frames["middle_utc"]], object)
+    found = [_all_frames(frames)]
+    for name in sorted(set(frames["instrument"][used].tolist())):
+        mine = used & (frames["instrument"] == name)
+        found.append(Subset(name or "(no name)", name, "", frames["id"][mine]))
+        found += [
+            Subset(f"{name or '(no name)'} {ten}", name, ten, frames["id"][mine & (decade == ten)])
+            for ten in sorted(set(decade[mine].tolist()) - {""})
+        ]
+    return found
+
+
+def _nulls(study: Study) -> tuple[dict[int, dict[str, Null]], dict[str, float]]:
+    """Each field's null in each subset, and the median frame error of each channel over all controls."""
+    size = study.settings.ranking.gather_curves
+    groups = [(f, f.ids[start : start + size]) for f in study.fields for start in range(0, len(f.ids), size)]
+    results = study.each("judging controls", judge_controls, [(ids, study.subsets) for _, ids in groups])
+    nulls: dict[int, dict[str, Null]] = {}
+    for found in study.fields:
+        mine = [
+            (result, len(ids)) for (owner, ids), result in zip(groups, results, strict=True) if owner is found
+        ]
+        nulls[found.number] = {
+            subset.name: completeness.null_of(
+                found.ids,
+                _in_frames(study, found, subset),
+                judge.joined([r.judgements[subset.name] for r, _ in mine], [n for _, n in mine], study.columns),
+                study.settings,
+            )
+            for subset in study.subsets
+        }
+    if study.settings.completeness.period_search and study.plugins.period_searches:
+        _search_nulls(study, nulls)
+    labels = sorted({label for result in results for label in result.errors})
+    errors = {label: np.concatenate([r.errors[label] for r in results if label in r.errors]) for label in labels}
+    return nulls, {label: float(np.nanmedian(v)) if np.isfinite(v).any() else np.nan for label, v in errors.items()}
+
+
+def _in_frames(study: Study, found: FieldControls, subset: Subset) -> Mask:
+    """Which controls share enough frames of a subset with which, shape (n, n)."""
+    inside = plan.field_frames(study.frames, found.vectors)
+    mine = np.isin(study.frames["id"][inside.rows], subset.frames)
+    return serves(inside.covered[mine], inside.covered[mine], study.settings.controls.shared_frames)
+
+
+def _search_nulls(study: Study, nulls: Mapping[int, Mapping[str, Null]]) -> None:
+    """Search the periods of controls that pass the gate, as in a run."""
+    jobs, places = [], []
+    for found in study.fields:
+        for subset in study.subsets:
+            null = nulls[found.number][subset.name]
+            rows = np.arange(len(found.ids))
+            ranked = ranking.rank_field(null.judgement, study.columns, rows[:0], rows, null.serving[:0])
+            passes = rows[ranked.control_p <= study.settings.ranking.gate]
+            if len(passes):
+                jobs.append((found.ids[passes], subset))
+                places.append((null, passes))
+    for (null, passes), result in zip(
+        places, study.each("searching periods of controls", search_controls, jobs), strict=True
+    ):
+        judge.spread(null.judgement, result, passes, study.columns)
+
+
+def _wanted(study: Study) -> list[Injection]:
+    """The made-up sources: at the controls of fields, as often as these have targets."""
+    hosts = np.concatenate([found.ids for found in study.fields])
+    weights = np.concatenate([np.full(len(f.ids), f.n_targets / len(f.ids)) for f in study.fields])
+    return completeness.drawn(study.cells, hosts, weights, study.settings.completeness)
+
+
+def _outcomes(
+    study: Study, wanted: Sequence[Injection], nulls: Mapping[int, Mapping[str, Null]], units: Mapping[str, float],
+    with_plugins: bool,
+) -> dict[str, Outcomes]:  # fmt: skip
+    """What becomes of every source, by subset."""
+    hosts = np.array([one.host for one in wanted])
+    places, jobs = [], []
+    for found in study.fields:
+        mine = np.flatnonzero(np.isin(hosts, found.ids))
+        for start in range(0, len(mine), INJECTIONS_AT_ONCE):
+            part = mine[start : start + INJECTIONS_AT_ONCE]
+            places.append(part)
+            jobs.append((
+                [wanted[i] for i in part], study.cells, units, study.subsets, nulls[found.number], study.bars, with_plugins
+            ))  # fmt: skip
+    results = study.each("judging made-up sources", judge_injected, jobs)
+    back = np.argsort(np.concatenate(places))
+    return {
+        subset.name: _joined([result[number] for result in results], back)
+        for number, subset in enumerate(study.subsets)
+    }
+
+
+def _joined(parts: Sequence[Outcomes], back: IntArray) -> Outcomes:
+    """Outcomes of pieces of work as one, in the order of the sources."""
+    names = ("recovered", "extrapolated", "seen", "lowest_p", "own_p")
+    found = Found(*(np.concatenate([getattr(part.found, name) for part in parts])[back] for name in names))
+    return Outcomes(found, {name: np.concatenate([part.extra[name] for part in parts])[back] for name in EXTRA})
+
+
+def _proofs(study: Study) -> list[planted.Proof | None]:
+    """Sources added to pixels, in frames evenly spread over time in every unsigned channel."""
+    tables = book(study.order.run, study.order.version)
+    usable = counts(study.frames) & (study.frames["state"] == "current")
+    labels = [label for label, channel in tables.channels.items() if not channel.signed]
+    each = int(np.ceil(study.settings.completeness.pixels / max(1, len(labels))))
+    chosen: list[int] = []
+    for label in labels:
+        mine = study.frames["id"][usable & (study.frames["channel"] == label)]
+        chosen += mine[np.unique(np.linspace(0, len(mine) - 1, min(each, len(mine))).astype(int))].tolist()
+    controls = np.sort(np.concatenate([found.ids for found in study.fields]))
+    return study.each("adding sources to pixels", plant_in_frame, [(frame, controls) for frame in chosen])
+
+
+def _costs(study: Study, plugins: Sequence[Plugin]) -> list[float]:
+    """Seconds that each plugin takes for a thousand positions, all channels of each, by the clock on the wall."""
+    ids = study.fields[0].ids[:INJECTIONS_AT_ONCE]
+    blocks = position_blocks(study.order, ids)["blocks"]
+    curves = _curves(blocks)
+    for channels in curves:
+        for curve in channels:
+            _ = curve.above_quiet  # what all statistics share
+    found = []
+    for plugin in plugins:
+        start = time.perf_counter()
+        if plugin.kind == "statistic":
+            judge.judge(blocks, [plugin])  # type: ignore[list-item]
+        else:
+            judge.search(curves, [plugin])  # type: ignore[list-item]
+        spent = time.perf_counter() - start
+        start = time.perf_counter()
+        judge.judge(blocks, [])
+        without = time.perf_counter() - start if plugin.kind == "statistic" else 0.0
+        found.append(1000.0 / len(ids) * max(0.0, spent - without))
+    return found
+
+
+# The tables.
+
+
+def _meta(study: Study, units: Mapping[str, float]) -> dict[str, Any]:
+    """What the tables say of themselves."""
+    chosen = study.settings.completeness
+    return {
+        "rule": "recovered: the p-value is below what the run's own p-values leave for one more target at its "
+        "false-discovery level; ranked among the other controls, by the tail bound where these cannot decide",
+        "false_discovery_level": study.settings.ranking.level,
+        "p_value_bar": study.bars.final,
+        "seed": chosen.seed,
+        "period_search": chosen.period_search,
+        "median_frame_error": {label: float(f"{unit:.6g}") for label, unit in units.items()},
+        "interval": "95 %, Jeffreys: Brown, Cai & DasGupta 2001, Stat. Sci. 16, 101",
+        "caution": UPPER_BOUND,
+    }
+
+
+def _table(
+    study: Study, wanted: Sequence[Injection], outcomes: Mapping[str, Outcomes], meta: Mapping[str, Any]
+) -> astropy.table.Table:
+    """completeness.ecsv."""
+    of_cell = np.array([one.cell for one in wanted])
+    rows = []
+    for subset in study.subsets:
+        outcome = outcomes[subset.name]
+        for number, cell in enumerate(study.cells):
+            row = {
+                "subset": subset.name, "instrument": subset.instrument, "decade": subset.decade,
+                "n_frames": len(subset.frames), "kind": cell.kind, "flux": cell.flux, "period": cell.period_s,
+                "duty_cycle": cell.duty_cycle, "duration": cell.duty_cycle * cell.period_s,
+                "window": cell.window * cell.duty_cycle * cell.period_s, "missing": cell.missing,
+            }  # fmt: skip
+            rows.append(row | completeness.summary_row(of_cell == number, outcome.found, outcome.extra))
+    return astropy_table(COMPLETENESS, rows_to_columns(COMPLETENESS, rows), meta)
+
+
+def _target_tables(
+    study: Study, run: RunFolder, table: astropy.table.Table, ephemerides: Any, meta: Mapping[str, Any]
+) -> tuple[astropy.table.Table, astropy.table.Table]:
+    """completeness_targets.ecsv and completeness_limits.ecsv."""
+    candidates, channels = read_ecsv(run.file("candidates.ecsv")), read_ecsv(run.file("channels.ecsv"))
+    positions = book(study.order.run, study.order.version).positions
+    standing = {str(row["name"]): str(row["standing"]) for row in candidates}
+    limits: dict[str, dict[str, float]] = {}
+    for row in channels:
+        limits.setdefault(str(row["name"]), {})[str(row["channel"])] = float(row["threshold"])
+    is_target = (positions["kind"] == "target") & (positions["search"] < 0)
+    ids = positions["id"][is_target]
+    names = [str(name) for name in positions["name"][is_target]]
+    size = study.settings.ranking.gather_curves
+    jobs = []
+    for start in range(0, len(ids), size):
+        mine = names[start : start + size]
+        given = [_ephemeris(ephemerides, name) for name in mine]
+        jobs.append((ids[start : start + size], [limits.get(name, {}) for name in mine], given))
+    looks = [one for result in study.each("counting looks", looks_of, jobs) for one in result]
+    peaks = {str(row["name"]): (int(row["n_detected"]), float(row["peak_snr"])) for row in candidates}
+    rows, more = [], []
+    curve = _pulse_curve(table, study.settings.completeness.fluxes)
+    for name, (seen_in, cycles) in zip(names, looks, strict=True):
+        unseen = standing.get(name) == "unseen"
+        rows.append(_target_row(name, standing.get(name, ""), seen_in, cycles, peaks.get(name, (0, np.nan)), curve))
+        for flux in sorted(study.settings.completeness.fluxes) if unseen else ():
+            weight = completeness.weights(seen_in, flux)
+            limit = completeness.duty_limit(weight)
+            more.append({"name": name, "flux": flux, "looks_effective": float(weight.sum()), "duty_limit": limit})
+    return (
+        astropy_table(COMPLETENESS_TARGETS, rows_to_columns(COMPLETENESS_TARGETS, rows), meta),
+        astropy_table(COMPLETENESS_LIMITS, rows_to_columns(COMPLETENESS_LIMITS, more), meta),
+    )
+
+
+def _ephemeris(targets: Any, name: str) -> dict[str, float]:
+    """The ephemeris that a target list gives, NaN for none."""
+    wanted = ("period", "epoch", "period_dot", "window")
+    if targets is None or name not in targets.names:
+        return dict.fromkeys(wanted, float("nan"))
+    row = targets.names.index(name)
+    return {column: float(targets.column(column)[row]) for column in wanted}
+
+
+def _pulse_curve(table: astropy.table.Table, fluxes: Sequence[float]) -> tuple[FloatArray, FloatArray]:
+    """Fluxes, ascending, and the completeness of pulse trains in all frames, mean over the other cells."""
+    mine = table[(table["subset"] == ALL) & (table["kind"] == injection.PULSES)]
+    grid = np.unique(np.asarray(fluxes, float))
+    return grid, np.array([np.mean(mine["completeness"][np.asarray(mine["flux"]) == flux]) for flux in grid])
+
+
+def _target_row(
+    name: str, standing: str, looks: Looks, cycles: bool, peak: tuple[int, float], curve: tuple[FloatArray, FloatArray]
+) -> dict[str, Any]:
+    """A row of completeness_targets.ecsv."""
+    n_detected, peak_snr = peak
+    like = peak_snr if n_detected else float(np.min(looks.threshold, initial=np.inf))
+    row: dict[str, Any] = {
+        "name": name, "standing": standing, "n_used": len(looks.look), "n_looks": looks.n, "by_cycles": cycles,
+        "like_flux": like if np.isfinite(like) else float("nan"),
+        "found_probability": completeness.between(like, *curve),
+    }  # fmt: skip
+    if standing == "unseen":
+        surely = completeness.weights(looks, completeness.HIGHEST_FLUX)
+        row["lowest_duty_limit"] = completeness.duty_limit(surely)
+        for word, duty in (("half", 0.5), ("tenth", 0.1), ("hundredth", 0.01)):
+            row[f"flux_limit_{word}"] = completeness.flux_limit(looks, duty)
+    return row
+
+
+# What the last lines say.
+
+
+def _remarks(
+    study: Study, nulls: Mapping[int, Mapping[str, Null]], targets: astropy.table.Table
+) -> tuple[str, ...]:
+    """What holds for the tables as a whole."""
+    chosen = study.settings.completeness
+    sizes = [len(found.ids) - 1 for found in study.fields]
+    said = [
+        f"{len(study.cells)} cells of {chosen.per_cell} sources each in {len(study.subsets)} subsets of frames, at "
+        f"{sum(len(f.ids) for f in study.fields)} controls of {len(study.fields)} fields",
+        f"recovered means: p below {study.bars.final:.3g}, which the run's own p-values leave for one more target at a "
+        f"false-discovery rate of {study.settings.ranking.level:g}; what checks would say of it is not asked",
+        "a source has the same flux in median frame errors in every channel; channels of Stokes Q, U, V get none",
+    ]
+    if not chosen.period_search:
+        said.append("period searches are left out, of sources and controls alike ([completeness] period_search)")
+    if min(sizes) < FEWEST_FOR_TAIL and 1.0 / (min(sizes) + 1) >= study.bars.empirical:
+        hopeless = sum(n < FEWEST_FOR_TAIL and 1.0 / (n + 1) >= study.bars.empirical for n in sizes)
+        said.append(
+            f"too few controls in {hopeless} of {len(sizes)} fields: with {min(sizes)} a p-value cannot be below "
+            f"{1.0 / (min(sizes) + 1):.3g} and no tail can be fitted ({FEWEST_FOR_TAIL} are needed), so that no source, "
+            "however bright, could have been found there"
+        )
+    elif 1.0 / (min(sizes) + 1) >= study.bars.empirical:
+        said.append(
+            f"{min(sizes)} controls cannot decide at this level by themselves (p is at least {1.0 / (min(sizes) + 1):.3g}, "
+            f"below {study.bars.empirical:.3g} is needed): the upper bound of a fitted tail does (n_extrapolated)"
+        )
+    tables = book(study.order.run, study.order.version)
+    searched = int(((tables.positions["kind"] == "target") & (tables.positions["search"] >= 0)).sum())
+    if searched:
+        said.append(f"{searched} targets that were searched within their position errors are not in these tables")
+    undated = int((counts(study.frames) & ~np.isfinite(study.frames["middle_tdb_s"])).sum())
+    if undated:
+        said.append(f"{undated} frames without a clock see a source at a random phase")
+    if not targets["by_cycles"].any():
+        said.append("looks are epochs; a target list with ephemerides (--targets) makes them cycles")
+    return tuple(said)
+
+
+def _proof_remarks(proofs: Sequence[planted.Proof | None], study: Study) -> tuple[str, ...]:
+    """What sources added to pixels have shown."""
+    made = [proof for proof in proofs if proof is not None]
+    if not made:
+        return ("not proved on pixels: no frame could be measured again" if proofs else "not proved on pixels: none asked",)
+    said = (
+        f"proved on {len(made)} injections in pixels: largest difference {max(abs(p.difference) for p in made):.2g} sigma "
+        f"as stored, {max(abs(p.linear) for p in made):.1g} sigma in floating-point numbers"
+    )
+    if len(made) < len(proofs):
+        said += f"; {len(proofs) - len(made)} more could not be measured"
+    counted = [p.counted for p in made]
+    return (
+        said,
+        f"of a beam-shaped source {100 * min(counted):.1f} to {100 * max(counted):.1f} % are counted; fluxes here are "
+        "those counted, put right where comparisons tell what is lost",
+    )
