@@ -65,15 +65,25 @@ def centre_and_spread(values: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Median and MAD (as a sigma) of each column's finite values; a wider measure where more than half are equal."""
     k = values.shape[1]
     centre, spread = np.zeros(k), np.ones(k)
-    for j in range(k):
-        finite = values[np.isfinite(values[:, j]), j]
-        if finite.size == 0:
-            continue
-        centre[j] = np.median(finite)
-        low, high = np.quantile(finite, [0.01, 0.99])
-        measures = (MAD_TO_SIGMA * np.median(np.abs(finite - centre[j])), (high - low) / 4.65, np.ptp(finite))
-        spread[j] = next((m for m in measures if m > 0), 1.0)
+    finite = np.isfinite(values)
+    whole = finite.all(axis=0) & (len(values) > 0)
+    centre[whole], spread[whole] = _middle_and_spread(values[:, whole])
+    for j in np.flatnonzero(~whole & finite.any(axis=0)).tolist():
+        (centre[j],), (spread[j],) = _middle_and_spread(values[finite[:, j], j : j + 1])
     return centre, spread
+
+
+def _middle_and_spread(values: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """The same for columns of finite values, shape (n, k), n > 0."""
+    if values.shape[1] == 0:
+        return np.empty(0), np.empty(0)
+    middle = np.median(values, axis=0)
+    low, high = np.quantile(values, [0.01, 0.99], axis=0)
+    measures = (MAD_TO_SIGMA * np.median(np.abs(values - middle), axis=0), (high - low) / 4.65, np.ptp(values, axis=0))
+    spread = np.ones(values.shape[1])
+    for measure in reversed(measures):
+        spread = np.where(measure > 0, measure, spread)
+    return middle, spread
 
 
 def rank(null: Null, target: FloatArray) -> Rank:

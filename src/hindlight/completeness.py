@@ -56,9 +56,7 @@ class Injection:
 
 def grid(settings: Completeness) -> tuple[Cell, ...]:
     """The cells, in the order of the table; the first holds nothing."""
-    trains = product(
-        settings.pulse_periods, settings.duty_cycles, settings.windows, settings.missing, settings.fluxes
-    )
+    trains = product(settings.pulse_periods, settings.duty_cycles, settings.windows, settings.missing, settings.fluxes)
     return (
         Cell(NOTHING, 0.0),
         *(Cell(PULSES, flux, period, duty, window, missing) for period, duty, window, missing, flux in trains),
@@ -159,9 +157,7 @@ class Ranked:
         return np.array([rank.p_value for rank in self.ranks.ranks])
 
 
-def ranked(
-    judged: Judgement, hosts: IntArray, null: Null, columns: Mapping[str, Column], settings: Settings
-) -> Ranked:
+def ranked(judged: Judgement, hosts: IntArray, null: Null, columns: Mapping[str, Column], settings: Settings) -> Ranked:
     """Sources that were judged at these controls (ids, shape (n,)) ranked as targets are."""
     n, at = len(null.ids), np.searchsorted(null.ids, hosts)
     both = joined([null.judgement, judged], [n, judged.n], columns)

@@ -31,6 +31,8 @@ class Proof:
 
     difference
         What the flux rose by in the frame as it is stored, less what it rises by in a light curve.
+    beyond_rounding
+        The same, had the source itself been rounded to the steps that the frame is stored in.
     linear
         Flux of stamp and source together less those of each, in floating-point numbers.
     counted
@@ -38,6 +40,7 @@ class Proof:
     """
 
     difference: float
+    beyond_rounding: float
     linear: float
     counted: float
 
@@ -62,19 +65,24 @@ def plant(
     per_beam = fold_unit(frame.unit).endswith(PER_BEAM)
     total = PLANTED_SNR * one["flux_err"] * one["gain"]  # as the pixels hold it
     light = _source(beam, one["x"], one["y"], total if per_beam or not estimator.sums else total / area)
+    own_scale = one["gain"] * (area if estimator.sums and per_beam else 1.0)
+    counted = _flux(estimator, light, one, beam) / own_scale * one["gain"] / total
     if math.isfinite(frame.electrons_per_unit):
         photons = np.random.default_rng(seed).poisson(light * frame.electrons_per_unit)
         light = photons / frame.electrons_per_unit
-    after = measure_opened(_with(opened, light, one), frame, ra, dec, estimator, settings, anchors)
-    own_scale = one["gain"] * (area if estimator.sums and per_beam else 1.0)
-    added = _flux(estimator, light, one, beam) / own_scale
+    assert opened.unpacked is not None
+    changed, rounded = _with(opened.unpacked, light, one)
+    after = measure_opened(replace(opened, unpacked=changed), frame, ra, dec, estimator, settings, anchors)
+    added, stored = (_flux(estimator, square, one, beam) / own_scale for square in (light, rounded))
+    rise = float(after["flux"][0]) - one["flux"]
     stamp = _stamp(opened, one, light.shape[0] // 2)
     both = _flux(estimator, stamp + light, one, beam) - _flux(estimator, stamp, one, beam)
     error = one["flux_err"]
     return Proof(
-        (float(after["flux"][0]) - one["flux"] - added) / error,
+        (rise - added) / error,
+        (rise - stored) / error,
         (both / own_scale - added) / error,
-        added * one["gain"] / total,
+        counted,
     )
 
 
@@ -88,31 +96,31 @@ def _source(beam: BeamShape, x: float, y: float, peak: float) -> FloatArray:
     return np.asarray(peak * np.exp(-LOG16 * ((along / beam.major) ** 2 + (across / beam.minor) ** 2)))
 
 
-def _with(opened: OpenFrame, light: FloatArray, one: dict[str, float]) -> OpenFrame:
-    """The frame with light added around a position, rounded and clipped as its pixels are stored."""
-    assert opened.unpacked is not None
-    pixels = opened.unpacked
-    stored = pixels.stored.copy()
+def _with(pixels: Pixels, light: FloatArray, one: dict[str, float]) -> tuple[Pixels, FloatArray]:
+    """An image with light added around a position as it would be stored, and the light as rounded to its steps."""
+    stored, rounded = pixels.stored.copy(), light.copy()
     half = light.shape[0] // 2
     left, top = math.floor(one["x"] + 0.5) - half, math.floor(one["y"] + 0.5) - half
     height, width = stored.shape
     rows = slice(max(0, top), min(height, top + len(light)))
     columns = slice(max(0, left), min(width, left + len(light)))
-    here = light[rows.start - top : rows.stop - top, columns.start - left : columns.stop - left]
-    stored[rows, columns] = _stored(pixels, stored[rows, columns], here)
-    return replace(opened, unpacked=replace(pixels, stored=stored))
-
-
-def _stored(pixels: Pixels, raw: NDArray[Any], light: FloatArray) -> NDArray[Any]:
-    """Stored numbers with light added: whole numbers where they were, within their type's range, blanks left alone."""
-    more = raw.astype(float) + light / pixels.scale
+    here = (slice(rows.start - top, rows.stop - top), slice(columns.start - left, columns.stop - left))
+    raw = stored[rows, columns]
+    steps = light[here] / pixels.scale
     if pixels.quantum > 0:
-        more = np.where(np.isfinite(more), np.rint(more), more)
+        steps = np.rint(steps)
+        rounded[here] = steps * pixels.scale
+    stored[rows, columns] = _stored(pixels, raw, raw.astype(float) + steps)
+    return replace(pixels, stored=stored), rounded
+
+
+def _stored(pixels: Pixels, raw: NDArray[Any], numbers: FloatArray) -> NDArray[Any]:
+    """Numbers as the image's type holds them, clipped to its range; blanks stay what they were."""
     if raw.dtype.kind in "iu":
         limits = np.iinfo(raw.dtype)
-        more = np.clip(more, limits.min, limits.max)
-    more = more if pixels.blank is None else np.where(raw == pixels.blank, raw, more)
-    return more.astype(raw.dtype)
+        numbers = np.clip(numbers, limits.min, limits.max)
+    numbers = numbers if pixels.blank is None else np.where(raw == pixels.blank, raw, numbers)
+    return numbers.astype(raw.dtype)
 
 
 def _stamp(opened: OpenFrame, one: dict[str, float], half: int) -> FloatArray:

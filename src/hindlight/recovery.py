@@ -1,7 +1,6 @@
 """`hindlight completeness` and `plugins --power`: made-up sources through the unchanged judging of a run, and the tables.
 
-The run is only read; what is made goes beside its result tables. Pieces of work are plain functions of plain arguments, as
-in `tasks`.
+The run is only read; what is made goes beside its result tables. The pieces of work are in `trials`.
 """
 
 from __future__ import annotations
@@ -17,28 +16,36 @@ import astropy.table
 import numpy as np
 from numpy.typing import NDArray
 
-from hindlight import completeness, host, injection, judge, photometry, plan, planted, ranking, record, store
+from hindlight import completeness, host, injection, judge, plan, planted, ranking, record, store
 from hindlight import settings as settings_module
 from hindlight.completeness import Bars, Cell, Found, Injection, Looks, Null
 from hindlight.crew import Crew, assembled
 from hindlight.duplicates import counts
 from hindlight.errors import NothingToDoError, UsageError
-from hindlight.files import check_unchanged
-from hindlight.headers import SetAsideError
-from hindlight.lightcurve import Block, FloatArray, IntArray
+from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.plugin import Column, Plugin
 from hindlight.positions import read_targets, serves
 from hindlight.record import Request
-from hindlight.schema import COMPLETENESS, COMPLETENESS_LIMITS, COMPLETENESS_TARGETS, UNUSABLE
+from hindlight.schema import COMPLETENESS, COMPLETENESS_LIMITS, COMPLETENESS_TARGETS
 from hindlight.settings import Settings
 from hindlight.store import Columns, RunFolder
 from hindlight.systems import unit_vectors
 from hindlight.tables import astropy_table, read_ecsv, rows_to_columns, write_table
-from hindlight.tasks import Order, anchors_of, book, frame_facts, position_blocks
-from hindlight.timing import DAY, J2000_JD
+from hindlight.tasks import Order, book, position_blocks
+from hindlight.trials import (
+    ALL,
+    EXTRA,
+    Outcomes,
+    Subset,
+    curves_of,
+    judge_controls,
+    judge_injected,
+    looks_of,
+    plant_in_frame,
+    search_controls,
+)
 from hindlight.verdicts import Watcher
 
-ALL = "all"
 INJECTIONS_AT_ONCE = 64
 SMALL_WORK = 20_000_000  # frames times positions judged; up to this many the work is done in this process
 POWER_RATE = 1e-3
@@ -52,16 +59,6 @@ Mask = NDArray[np.bool_]
 
 
 @dataclass(frozen=True, eq=False)
-class Subset:
-    """Some frames of the run: their ids, ascending; empty names for all."""
-
-    name: str
-    instrument: str
-    decade: str
-    frames: IntArray
-
-
-@dataclass(frozen=True, eq=False)
 class FieldControls:
     """The controls of one field, ids ascending, how many targets they serve, and where they are: ICRS unit vectors."""
 
@@ -69,28 +66,6 @@ class FieldControls:
     ids: IntArray
     n_targets: int
     vectors: FloatArray
-
-
-@dataclass(frozen=True, eq=False)
-class Judged:
-    """Blank controls of one piece of work: in each subset what was judged, and each channel's errors at each control.
-
-    `errors` are medians over the frames, shape (n,), by channel.
-    """
-
-    judgements: Mapping[str, judge.Judgement]
-    errors: Mapping[str, FloatArray]
-
-
-@dataclass(frozen=True, eq=False)
-class Outcomes:
-    """Made-up sources in one subset: what became of them, and of each the highest S/N added, frames lit, frames used."""
-
-    found: Found
-    extra: Mapping[str, FloatArray]
-
-
-EXTRA = ("median_snr", "median_lit", "median_used")
 
 
 @dataclass(frozen=True, eq=False)
@@ -159,196 +134,6 @@ class Study:
 
         self.crew.run(function, [(self.order, *job) for job in jobs], done)
         return results
-
-
-# The pieces of work.
-
-
-def judge_controls(order: Order, ids: IntArray, subsets: Sequence[Subset]) -> Judged:
-    """Every statistic at these controls (ascending ids) in each subset."""
-    blocks = position_blocks(order, ids)["blocks"]
-    statistics = host.load(order.plugins).statistics
-    judged = {subset.name: judge.judge(_within(blocks, subset), statistics) for subset in subsets}
-    return Judged(judged, {label: _typical(block.flux_err) for label, block in blocks.items()})
-
-
-def search_controls(order: Order, ids: IntArray, subset: Subset) -> judge.Judgement:
-    """Every period search at these positions (ascending ids) in a subset."""
-    blocks = _within(position_blocks(order, ids)["blocks"], subset)
-    return judge.search(_curves(blocks), host.load(order.plugins).period_searches)
-
-
-def judge_injected(
-    order: Order, wanted: Sequence[Injection], cells: Sequence[Cell], units: Mapping[str, float],
-    subsets: Sequence[Subset], nulls: Mapping[str, Null], bars: Bars, with_plugins: bool,
-) -> list[Outcomes]:  # fmt: skip
-    """What becomes of sources at controls of one field, in each subset; `units` are fluxes of 1 by channel."""
-    hosts = np.array([one.host for one in wanted])
-    ids = np.unique(hosts)
-    plugins = host.load(order.plugins)
-    columns = judge.full_columns([*plugins.statistics, *plugins.period_searches])
-    plain = position_blocks(order, ids)["blocks"]
-    made = {
-        label: _injected(order, block, np.searchsorted(ids, hosts), wanted, cells, units[label])
-        for label, block in plain.items()
-    }
-    asked = [*plugins.statistics, *plugins.period_searches] if with_plugins else []
-    outcomes = []
-    for subset in subsets:
-        blocks = _within({label: block for label, (block, _) in made.items()}, subset)
-        judged = judge.judge(blocks, plugins.statistics)
-        null = nulls[subset.name]
-        if order.settings.completeness.period_search and plugins.period_searches:
-            _search_gated(judged, hosts, null, blocks, columns, order.settings, plugins)
-        became = completeness.found(judged, hosts, null, columns, bars, order.settings, asked)
-        outcomes.append(Outcomes(became, _extra(plain, made, np.searchsorted(ids, hosts), subset)))
-    return outcomes
-
-
-def plant_in_frame(order: Order, frame: int, controls: IntArray) -> planted.Proof | None:
-    """A source added to the pixels of a frame at one of these controls; None where no flux can be measured now."""
-    tables = book(order.run, order.version)
-    row = tables.row_of_frame[frame]
-    who = tables.positions
-    pieces = [p for p in store.pieces(tables.frames, who) if p.batch == tables.frames["batch"][row]]
-    rows = store.read_rows(tables.folder, pieces, controls, np.array([frame]))
-    usable = np.isfinite(rows["flux"]) & ((rows["flags"] & int(UNUSABLE)) == 0)
-    if not usable.any():
-        return None
-    ids = rows["position"][usable]
-    key = (order.settings.completeness.seed << 32) + frame
-    chosen = int(ids[int(len(ids) * injection.uniform(key, completeness.HOST, np.zeros(1, np.int64))[0])])
-    at = int(np.searchsorted(who["id"], chosen))
-    facts = frame_facts(tables.frames, row)
-    estimator = photometry.choose_estimator(
-        host.load(order.plugins).estimators, facts.unit, order.settings.photometry.estimator, facts.beam_major > 0
-    )
-    try:
-        check_unchanged(facts.path, int(tables.frames["size"][row]), int(tables.frames["modified_ns"][row]))
-        return planted.plant(
-            facts, who["ra"][at : at + 1], who["dec"][at : at + 1], estimator, order.settings,
-            anchors_of(tables, row, int(who["round"][at])), key,
-        )  # fmt: skip
-    except (SetAsideError, OSError, ValueError):
-        return None
-
-
-def looks_of(
-    order: Order, ids: IntArray, thresholds: Sequence[Mapping[str, float]], given: Sequence[Mapping[str, float]]
-) -> list[tuple[Looks, bool]]:
-    """The looks at targets (ascending ids) and whether they are cycles.
-
-    `thresholds` are each target's in sigma by channel; `given` is its ephemeris, NaN for none.
-    """
-    blocks = position_blocks(order, ids)["blocks"]
-    gap = order.settings.detection.epoch_gap_days
-    return [
-        _looks({label: block for label, block in blocks.items() if label in limits}, row, limits, ephemeris, gap)
-        for row, (limits, ephemeris) in enumerate(zip(thresholds, given, strict=True))
-    ]
-
-
-# What the pieces are made of.
-
-
-def _within(blocks: Mapping[str, Block], subset: Subset) -> dict[str, Block]:
-    """Blocks in the frames of a subset, those without any left out."""
-    if subset.name == ALL:
-        return dict(blocks)
-    kept = {label: np.isin(block.frame, subset.frames) for label, block in blocks.items()}
-    return {label: injection.restricted(block, kept[label]) for label, block in blocks.items() if kept[label].any()}
-
-
-def _typical(flux_err: FloatArray) -> FloatArray:
-    """The median error of each row, NaN where there is none."""
-    return np.array([np.median(row[np.isfinite(row)]) if np.isfinite(row).any() else np.nan for row in flux_err])
-
-
-def _curves(blocks: Mapping[str, Block]) -> list[list[Any]]:
-    """Each position's light curves."""
-    n = len(next(iter(blocks.values()), ()))
-    return [[block.curve(row) for block in blocks.values()] for row in range(n)]
-
-
-def _injected(
-    order: Order, block: Block, rows: IntArray, wanted: Sequence[Injection], cells: Sequence[Cell], unit: float
-) -> tuple[Block, FloatArray]:
-    """A channel's light curves with the sources added, and the fluxes that were, shape (n, n_frames)."""
-    flux = np.zeros((len(rows), len(block.frame)))
-    if not block.channel.signed and np.isfinite(unit):
-        for number, (row, one) in enumerate(zip(rows, wanted, strict=True)):
-            peak = unit * cells[one.cell].flux
-            if peak > 0:
-                flux[number] = peak * injection.brightness(
-                    one.source, block.t_tdb_s[row], block.exposure_s[row], block.frame
-                )
-    tables = book(order.run, order.version)
-    at = [tables.row_of_frame[int(frame)] for frame in block.frame]
-    electrons = tables.frames["electrons_per_unit"][at]
-    keys = np.array([one.source.key for one in wanted])
-    return injection.injected(block, rows, flux, keys, tables.solution, electrons), flux
-
-
-def _extra(
-    plain: Mapping[str, Block], made: Mapping[str, tuple[Block, FloatArray]], rows: IntArray, subset: Subset
-) -> dict[str, FloatArray]:
-    """Of each source the highest S/N that was added to a frame, how many frames it lit, and how many could be used."""
-    highest, lit, used = np.zeros((3, len(rows)))
-    for label, block in plain.items():
-        here = np.isin(block.frame, subset.frames) if subset.name != ALL else np.ones(len(block.frame), bool)
-        error = block.flux_err[rows][:, here]
-        snr = np.where(np.isfinite(error), made[label][1][:, here] / error, 0.0)
-        highest = np.maximum(highest, snr.max(axis=1, initial=0.0))
-        lit += (snr > 1.0).sum(axis=1)
-        used += np.isfinite(error).sum(axis=1)
-    return dict(zip(EXTRA, (highest, lit, used), strict=True))
-
-
-def _search_gated(
-    judged: judge.Judgement, hosts: IntArray, null: Null, blocks: Mapping[str, Block], columns: Mapping[str, Column],
-    settings: Settings, plugins: host.Plugins,
-) -> None:  # fmt: skip
-    """Search the periods of the sources that the statistics so far put among the foremost, as in a run."""
-    plain = replace(null, judgement=_without(null.judgement, plugins.period_searches))
-    passes = completeness.ranked(judged, hosts, plain, columns, settings).p <= settings.ranking.gate
-    rows = np.flatnonzero(passes)
-    curves = _curves(blocks)
-    judge.spread(judged, judge.search([curves[row] for row in rows], plugins.period_searches), rows, columns)
-
-
-def _without(judgement: judge.Judgement, plugins: Sequence[Plugin]) -> judge.Judgement:
-    """A judgement without the columns of some plugins."""
-    names = {f"{plugin.name}_{column.name}" for plugin in plugins for column in plugin.columns}
-    return replace(judgement, values={key: v for key, v in judgement.values.items() if key[1] not in names})
-
-
-def _looks(
-    blocks: Mapping[str, Block], row: int, limits: Mapping[str, float], given: Mapping[str, float], gap_days: float
-) -> tuple[Looks, bool]:
-    """The looks at one target in unsigned channels."""
-    parts: list[list[Any]] = [[], [], [], [], []]
-    for number, (label, block) in enumerate(blocks.items()):
-        curve = block.curve(row)
-        if len(curve) == 0 or block.channel.signed:
-            continue
-        unit = float(np.median(curve.flux_err))
-        n = len(curve)
-        told = (curve.t_tdb_s, curve.exposure_s, curve.flux_err / unit, np.full(n, limits[label]), np.full(n, number))
-        for part, values in zip(parts, told, strict=True):
-            part.append(values)
-    t, exposure, error, threshold, channel = (np.concatenate(p) if p else np.empty(0) for p in parts)
-    cycles = bool(np.isfinite([given["period"], given["epoch"]]).all())
-    look, share = completeness.by_epoch(t, gap_days), np.ones(len(t))
-    if cycles:
-        known = np.isfinite(t)
-        t, exposure, error, threshold, channel = (v[known] for v in (t, exposure, error, threshold, channel))
-        since = t - (given["epoch"] - J2000_JD) * DAY
-        dot, window = float(np.nan_to_num(given["period_dot"])), float(np.nan_to_num(given["window"]))
-        look, share = completeness.by_cycle(since, exposure, given["period"], dot, window)
-    return Looks(look, channel.astype(np.int64), error, threshold, share), cycles
-
-
-# The stages.
 
 
 def recover(asked: Asked, watcher: Watcher) -> Report:
@@ -489,9 +274,7 @@ def _nulls(study: Study) -> tuple[dict[int, dict[str, Null]], dict[str, float]]:
     results = study.each("judging controls", judge_controls, [(ids, study.subsets) for _, ids in groups])
     nulls: dict[int, dict[str, Null]] = {}
     for found in study.fields:
-        mine = [
-            (result, len(ids)) for (owner, ids), result in zip(groups, results, strict=True) if owner is found
-        ]
+        mine = [(result, len(ids)) for (owner, ids), result in zip(groups, results, strict=True) if owner is found]
         nulls[found.number] = {
             subset.name: completeness.null_of(
                 found.ids,
@@ -549,6 +332,7 @@ def _outcomes(
     places, jobs = [], []
     for found in study.fields:
         mine = np.flatnonzero(np.isin(hosts, found.ids))
+        mine = mine[np.argsort(hosts[mine], kind="stable")]  # those at one control share its null
         for start in range(0, len(mine), INJECTIONS_AT_ONCE):
             part = mine[start : start + INJECTIONS_AT_ONCE]
             places.append(part)
@@ -588,7 +372,7 @@ def _costs(study: Study, plugins: Sequence[Plugin]) -> list[float]:
     """Seconds that each plugin takes for a thousand positions, all channels of each, by the clock on the wall."""
     ids = study.fields[0].ids[:INJECTIONS_AT_ONCE]
     blocks = position_blocks(study.order, ids)["blocks"]
-    curves = _curves(blocks)
+    curves = curves_of(blocks)
     for channels in curves:
         for curve in channels:
             _ = curve.above_quiet  # what all statistics share
@@ -605,9 +389,6 @@ def _costs(study: Study, plugins: Sequence[Plugin]) -> list[float]:
         without = time.perf_counter() - start if plugin.kind == "statistic" else 0.0
         found.append(1000.0 / len(ids) * max(0.0, spent - without))
     return found
-
-
-# The tables.
 
 
 def _meta(study: Study, units: Mapping[str, float]) -> dict[str, Any]:
@@ -716,12 +497,7 @@ def _target_row(
     return row
 
 
-# What the last lines say.
-
-
-def _remarks(
-    study: Study, nulls: Mapping[int, Mapping[str, Null]], targets: astropy.table.Table
-) -> tuple[str, ...]:
+def _remarks(study: Study, nulls: Mapping[int, Mapping[str, Null]], targets: astropy.table.Table) -> tuple[str, ...]:
     """What holds for the tables as a whole."""
     chosen = study.settings.completeness
     sizes = [len(found.ids) - 1 for found in study.fields]
@@ -762,10 +538,13 @@ def _proof_remarks(proofs: Sequence[planted.Proof | None], study: Study) -> tupl
     """What sources added to pixels have shown."""
     made = [proof for proof in proofs if proof is not None]
     if not made:
-        return ("not proved on pixels: no frame could be measured again" if proofs else "not proved on pixels: none asked",)
+        return (
+            "not proved on pixels: no frame could be measured again" if proofs else "not proved on pixels: none asked",
+        )
     said = (
-        f"proved on {len(made)} injections in pixels: largest difference {max(abs(p.difference) for p in made):.2g} sigma "
-        f"as stored, {max(abs(p.linear) for p in made):.1g} sigma in floating-point numbers"
+        f"proved on {len(made)} injections in pixels: largest difference {max(abs(p.difference) for p in made):.2g} sigma, "
+        f"of which rounding to the steps of stored images leaves {max(abs(p.beyond_rounding) for p in made):.2g}, and "
+        f"floating-point pixels without their local background {max(abs(p.linear) for p in made):.1g}"
     )
     if len(made) < len(proofs):
         said += f"; {len(proofs) - len(made)} more could not be measured"

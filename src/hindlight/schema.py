@@ -459,16 +459,22 @@ COMPLETENESS = (
     TableColumn("n_seen", "sources above the detection threshold in some frame", dtype="int64", ucd="meta.number"),
     TableColumn("n_extrapolated", "recovered by the upper bound of a fitted tail", dtype="int64", ucd="meta.number"),
     TableColumn("median_snr", "highest flux added to a frame over its error, median of the sources", ucd="stat.snr"),
-    TableColumn("median_lit", "frames in which more than the error was added, median of the sources", ucd="meta.number"),
+    TableColumn(
+        "median_lit", "frames in which more than the error was added, median of the sources", ucd="meta.number"
+    ),
     TableColumn("median_used", "usable frames, median of the sources", ucd="meta.number;obs"),
-    TableColumn("lowest_p", "smallest p-value that the controls can give, median of the sources", ucd="stat.probability"),
+    TableColumn(
+        "lowest_p", "smallest p-value that the controls can give, median of the sources", ucd="stat.probability"
+    ),
 )
 
 COMPLETENESS_TARGETS = (
     TableColumn("name", "target", dtype="str", ucd="meta.id;meta.main"),
     TableColumn("standing", "the run's verdict", dtype="str", ucd="meta.code.class"),
     TableColumn("n_used", "usable frames of unsigned channels", dtype="int64", ucd="meta.number;obs"),
-    TableColumn("n_looks", "independent looks: epochs, or cycles of a known ephemeris", dtype="int64", ucd="meta.number"),
+    TableColumn(
+        "n_looks", "independent looks: epochs, or cycles of a known ephemeris", dtype="int64", ucd="meta.number"
+    ),
     TableColumn("by_cycles", "whether looks are cycles of a known ephemeris", dtype="bool"),
     TableColumn(
         "like_flux",

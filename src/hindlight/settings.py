@@ -200,7 +200,10 @@ class Completeness:
     )
     missing: tuple[float, ...] = setting((0.2,), "fraction of pulses that are not there", minimum=0, maximum=1)
     smooth_periods: tuple[float, ...] = setting(
-        (86400.0, 8640000.0), "periods of smooth variables (sinusoids from zero to the peak flux)", unit="s", minimum=1e-3
+        (86400.0, 8640000.0),
+        "periods of smooth variables (sinusoids from zero to the peak flux)",
+        unit="s",
+        minimum=1e-3,
     )
     period_search: bool = setting(
         False, "whether periods are searched for as in the run; it takes a hundred times as long, and misses little"
