@@ -16,9 +16,10 @@ ORDER = [
     "errors", "schema", "facts", "blocks", "settings", "dates", "lightcurve", "plugin", "hookspecs", "tables", "host",
     "fence", "clock", "systems", "celestial", "sky", "headers", "reading", "goodtime", "knowledge", "files",
     "companions", "channels", "outlines", "footprints", "archive", "summary", "positions", "apart", "pixels",
-    "background", "detection", "pointing", "growth", "photometry", "duplicates", "ensemble", "store", "judge", "calibrate",
-    "ranking", "search", "timing", "candidates", "plan", "comparisons", "tasks", "conclude", "outcome", "crew", "record",
-    "verdicts", "runner", "survey", "export", "demo", "testing", "cli", "__main__",
+    "background", "detection", "pointing", "growth", "photometry", "planted", "duplicates", "ensemble",
+    "store", "judge", "calibrate", "ranking", "search", "timing", "injection", "completeness", "candidates", "plan",
+    "comparisons", "tasks", "trials", "conclude", "outcome", "crew", "record", "verdicts", "runner", "recovery", "survey",
+    "export", "demo", "testing", "cli", "__main__",
 ]  # fmt: skip
 PLUGINS_MAY_IMPORT = {"hindlight", "numpy", "scipy", "astropy", "photutils", "nifty_ls"}
 

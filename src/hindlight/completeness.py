@@ -205,8 +205,13 @@ def _core(judged: Judgement, name: str) -> dict[str, FloatArray]:
     }
 
 
+def used_frames(judged: Judgement) -> dict[str, FloatArray]:
+    """How many usable frames each position has, by channel."""
+    return _core(judged, "n_used")
+
+
 def _most_used(judged: Judgement) -> FloatArray:
-    return np.asarray(np.max([np.zeros(judged.n), *_core(judged, "n_used").values()], axis=0))
+    return np.asarray(np.max([np.zeros(judged.n), *used_frames(judged).values()], axis=0))
 
 
 def _seen(judged: Judgement, thresholds: Mapping[str, ranking.Thresholds]) -> Mask:

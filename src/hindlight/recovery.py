@@ -8,7 +8,9 @@ from __future__ import annotations
 import time
 import tomllib
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, replace
+from functools import partial
+from itertools import chain
 from pathlib import Path
 from typing import Any
 
@@ -22,8 +24,9 @@ from hindlight.completeness import Bars, Cell, Found, Injection, Looks, Null
 from hindlight.crew import Crew, assembled
 from hindlight.duplicates import counts
 from hindlight.errors import NothingToDoError, UsageError
-from hindlight.lightcurve import FloatArray, IntArray
-from hindlight.plugin import Column, Plugin
+from hindlight.fence import call
+from hindlight.lightcurve import FloatArray, IntArray, LightCurve
+from hindlight.plugin import Column, PeriodSearch, Statistic
 from hindlight.positions import read_targets, serves
 from hindlight.record import Request
 from hindlight.schema import COMPLETENESS, COMPLETENESS_LIMITS, COMPLETENESS_TARGETS
@@ -60,12 +63,12 @@ Mask = NDArray[np.bool_]
 
 @dataclass(frozen=True, eq=False)
 class FieldControls:
-    """The controls of one field, ids ascending, how many targets they serve, and where they are: ICRS unit vectors."""
+    """The controls of one field, ids ascending, and where they are (ICRS unit vectors); the names of its targets."""
 
     number: int
     ids: IntArray
-    n_targets: int
     vectors: FloatArray
+    targets: tuple[str, ...]
 
 
 @dataclass(frozen=True, eq=False)
@@ -83,7 +86,7 @@ class Power:
     """A statistic's report card.
 
     `power` maps kinds of source to the share of them that the statistic alone finds at the rate; `only_here` counts those
-    that no other finds; `cost_s` is what a thousand positions (all their channels) take.
+    that no other finds; `cost_s` is what a thousand light curves take.
     """
 
     plugin: str
@@ -105,7 +108,7 @@ class Asked:
 
 @dataclass(frozen=True, eq=False)
 class Study:
-    """What every stage needs."""
+    """What every stage needs; `used_by_target` says how many frames of each channel each target has."""
 
     order: Order
     plugins: host.Plugins
@@ -116,7 +119,8 @@ class Study:
     subsets: Sequence[Subset]
     cells: Sequence[Cell]
     bars: Bars
-    columns: Mapping[str, Column] = field(default_factory=dict)
+    columns: Mapping[str, Column]
+    used_by_target: Mapping[str, Mapping[str, int]]
 
     @property
     def settings(self) -> Settings:
@@ -146,13 +150,13 @@ def recover(asked: Asked, watcher: Watcher) -> Report:
     with run.locked(), assembled(asked.workers, None, _is_small(run, order.settings)) as crew:
         study = _study(run, order, plugins, crew, watcher, _subsets)
         nulls, units = _nulls(study)
-        wanted = _wanted(study)
+        wanted = _wanted(study, nulls)
         outcomes = _outcomes(study, wanted, nulls, units, with_plugins=False)
         proofs = _proofs(study)
         meta = _meta(study, units)
         table = _table(study, wanted, outcomes, meta)
         targets, limits = _target_tables(study, run, table, ephemerides, meta)
-    remarks = (*_remarks(study, nulls, targets), *_proof_remarks(proofs, study), UPPER_BOUND)
+    remarks = (*_remarks(study, nulls, targets), *_proof_remarks(proofs), UPPER_BOUND)
     for name, made in (("completeness_limits", limits), ("completeness_targets", targets), ("completeness", table)):
         for ending in (".fits", ".vot", ".ecsv"):
             write_table(run.file(f"{name}{ending}"), made)
@@ -166,7 +170,7 @@ def report_cards(asked: Asked, watcher: Watcher) -> tuple[list[Power], tuple[str
     with run.locked(), assembled(asked.workers, None, _is_small(run, order.settings)) as crew:
         study = _study(run, order, plugins, crew, watcher, lambda frames: [_all_frames(frames)])
         nulls, units = _nulls(study)
-        wanted = _wanted(study)
+        wanted = _wanted(study, nulls)
         outcome = _outcomes(study, wanted, nulls, units, with_plugins=True)[ALL]
         asks = [*plugins.statistics, *(plugins.period_searches if order.settings.completeness.period_search else ())]
         rate = np.maximum(POWER_RATE, outcome.found.lowest_p)
@@ -232,7 +236,12 @@ def _study(
     asked = plugins.period_searches if order.settings.completeness.period_search else ()
     columns = judge.full_columns([*plugins.statistics, *asked])
     cells = completeness.grid(order.settings.completeness)
-    return Study(order, plugins, crew, watcher, tables.frames, fields, chosen(tables.frames), cells, bars, columns)
+    used: dict[str, dict[str, int]] = {}
+    for row in read_ecsv(run.file("channels.ecsv")):
+        used.setdefault(str(row["name"]), {})[str(row["channel"])] = int(row["n_used"])
+    return Study(
+        order, plugins, crew, watcher, tables.frames, fields, chosen(tables.frames), cells, bars, columns, used
+    )
 
 
 def _fields(positions: Columns) -> list[FieldControls]:
@@ -243,8 +252,8 @@ def _fields(positions: Columns) -> list[FieldControls]:
         here = (positions["kind"] == "control") & (positions["field"] == number)
         order = np.argsort(positions["id"][here])
         vectors = unit_vectors(positions["ra"][here], positions["dec"][here])[order]
-        n_targets = int((is_target & (positions["field"] == number)).sum())
-        found.append(FieldControls(int(number), positions["id"][here][order], n_targets, vectors))
+        names = tuple(positions["name"][is_target & (positions["field"] == number)].tolist())
+        found.append(FieldControls(int(number), positions["id"][here][order], vectors, names))
     return found
 
 
@@ -316,11 +325,31 @@ def _search_nulls(study: Study, nulls: Mapping[int, Mapping[str, Null]]) -> None
         judge.spread(null.judgement, result, passes, study.columns)
 
 
-def _wanted(study: Study) -> list[Injection]:
-    """The made-up sources: at the controls of fields, as often as these have targets."""
+def _wanted(study: Study, nulls: Mapping[int, Mapping[str, Null]]) -> list[Injection]:
+    """The made-up sources: as often for each target, at any of the controls that are measured as well as it is.
+
+    Raises `NothingToDoError` where no target has such a control.
+    """
     hosts = np.concatenate([found.ids for found in study.fields])
-    weights = np.concatenate([np.full(len(f.ids), f.n_targets / len(f.ids)) for f in study.fields])
+    weights = np.concatenate([_like_targets(study, found, nulls[found.number][ALL]) for found in study.fields])
+    if not weights.any():
+        raise NothingToDoError("no target has a control that is measured in as many frames: nothing can be said")
     return completeness.drawn(study.cells, hosts, weights, study.settings.completeness)
+
+
+def _like_targets(study: Study, found: FieldControls, null: Null) -> FloatArray:
+    """For each control of a field the number of targets it stands for, shape (n,): each is shared by those like it."""
+    used = completeness.used_frames(null.judgement)
+    share = study.settings.controls.shared_frames
+    weight = np.zeros(len(found.ids))
+    for name in found.targets:
+        mine = study.used_by_target.get(name, {})
+        like = np.ones(len(found.ids), bool)
+        for label, n_used in mine.items():
+            like &= used.get(label, np.zeros(len(found.ids))) >= share * n_used
+        if like.any() and sum(mine.values()) > 0:
+            weight += like / like.sum()
+    return weight
 
 
 def _outcomes(
@@ -368,27 +397,25 @@ def _proofs(study: Study) -> list[planted.Proof | None]:
     return study.each("adding sources to pixels", plant_in_frame, [(frame, controls) for frame in chosen])
 
 
-def _costs(study: Study, plugins: Sequence[Plugin]) -> list[float]:
-    """Seconds that each plugin takes for a thousand positions, all channels of each, by the clock on the wall."""
+def _costs(study: Study, plugins: Sequence[Statistic | PeriodSearch]) -> list[float]:
+    """Seconds that each plugin takes for a thousand calls with one light curve (or all of a position), by the wall clock."""
     ids = study.fields[0].ids[:INJECTIONS_AT_ONCE]
-    blocks = position_blocks(study.order, ids)["blocks"]
-    curves = curves_of(blocks)
-    for channels in curves:
-        for curve in channels:
-            _ = curve.above_quiet  # what all statistics share
-    found = []
-    for plugin in plugins:
-        start = time.perf_counter()
-        if plugin.kind == "statistic":
-            judge.judge(blocks, [plugin])  # type: ignore[list-item]
-        else:
-            judge.search(curves, [plugin])  # type: ignore[list-item]
-        spent = time.perf_counter() - start
-        start = time.perf_counter()
-        judge.judge(blocks, [])
-        without = time.perf_counter() - start if plugin.kind == "statistic" else 0.0
-        found.append(1000.0 / len(ids) * max(0.0, spent - without))
-    return found
+    curves = curves_of(position_blocks(study.order, ids)["blocks"])
+    for curve in chain.from_iterable(curves):
+        _ = curve.above_quiet if len(curve) else None  # what statistics share is not the cost of the first one asked
+    return [_cost(plugin, curves) for plugin in plugins]
+
+
+def _cost(plugin: Statistic | PeriodSearch, curves: Sequence[Sequence[LightCurve]]) -> float:
+    """The same for one plugin, NaN where no light curve has enough samples for it."""
+    method: Callable[[Any], Any] = plugin.compute if isinstance(plugin, Statistic) else plugin.search
+    given: list[Any] = [channels for one in curves if (channels := judge.timed_curves(one, plugin.min_points))]
+    if isinstance(plugin, Statistic) and not plugin.all_channels:
+        given = list(chain.from_iterable(given))
+    start = time.perf_counter()
+    for curve in given:
+        call(plugin, partial(method, curve), "")
+    return 1000.0 * (time.perf_counter() - start) / len(given) if given else float("nan")
 
 
 def _meta(study: Study, units: Mapping[str, float]) -> dict[str, Any]:
@@ -534,7 +561,7 @@ def _remarks(study: Study, nulls: Mapping[int, Mapping[str, Null]], targets: ast
     return tuple(said)
 
 
-def _proof_remarks(proofs: Sequence[planted.Proof | None], study: Study) -> tuple[str, ...]:
+def _proof_remarks(proofs: Sequence[planted.Proof | None]) -> tuple[str, ...]:
     """What sources added to pixels have shown."""
     made = [proof for proof in proofs if proof is not None]
     if not made:

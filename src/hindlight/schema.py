@@ -478,7 +478,7 @@ COMPLETENESS_TARGETS = (
     TableColumn("by_cycles", "whether looks are cycles of a known ephemeris", dtype="bool"),
     TableColumn(
         "like_flux",
-        "highest flux in median frame errors; the detection threshold for a target with no detection",
+        "highest S/N in a frame; for a target with no detection its lowest detection threshold",
         ucd="phot.flux;stat.max",
     ),
     TableColumn(
