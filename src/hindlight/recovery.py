@@ -172,7 +172,10 @@ def report_cards(asked: Asked, watcher: Watcher) -> tuple[list[Power], tuple[str
         nulls, units = _nulls(study)
         wanted = _wanted(study, nulls)
         outcome = _outcomes(study, wanted, nulls, units, with_plugins=True)[ALL]
-        asks = [*plugins.statistics, *(plugins.period_searches if order.settings.completeness.period_search else ())]
+        asks: list[Statistic | PeriodSearch] = [
+            *plugins.statistics,
+            *(plugins.period_searches if order.settings.completeness.period_search else ()),
+        ]
         rate = np.maximum(POWER_RATE, outcome.found.lowest_p)
         hit = outcome.found.own_p <= rate[:, None] * (1 + 1e-9)
         costs = _costs(study, asks)
