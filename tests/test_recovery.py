@@ -1,5 +1,7 @@
 """`hindlight completeness` and `plugins --power` on a small archive: tables, their bytes, what is said, and mistakes."""
 
+from pathlib import Path
+
 import numpy as np
 import pytest
 from astropy.table import Table
@@ -171,6 +173,15 @@ def test_with_period_search(archive, tmp_path):
     assert "not proved on pixels: none asked" in report.remarks
 
 
+def test_a_grid_without_pulse_trains(archive, tmp_path):
+    """Smooth variables alone: targets have no chance of a pulse train to be told, and nothing warns."""
+    text = GRID.replace("duty_cycles = [0.3]", "duty_cycles = []").replace("pixels = 6", "pixels = 0")
+    (tmp_path / "g.toml").write_text(text, encoding="utf-8")
+    report = recovery.recover(Asked(archive / "run", tmp_path / "g.toml", workers=1), cli._Silent())
+    assert set(report.table["kind"]) == {"nothing", "smooth"}
+    assert np.isnan(np.asarray(report.targets["found_probability"], float)).all()
+
+
 def test_report_cards(archive, capsys):
     """Each statistic's power by itself, at the rate that sixty controls can tell."""
     cards, said = recovery.report_cards(Asked(archive / "run", archive / "grid.toml", workers=1), cli._Silent())
@@ -181,6 +192,15 @@ def test_report_cards(archive, capsys):
     assert power["chi_square"]["nothing"] <= 0.5
     assert all(card.cost_s > 0 for card in cards)
     assert cli.run_command(["plugins", "--power", str(archive / "none")]) == 2
+
+
+def test_a_new_plugin_gets_a_report_card(archive):
+    """A plugin that the run was judged without is asked for its power, but is no part of the run's completeness."""
+    stranger = Path(__file__).parent / "third_party" / "stranger_plugin" / "longest_run.py"
+    asked = Asked(archive / "run", archive / "grid.toml", plugins=(stranger,), workers=1)
+    cards, _ = recovery.report_cards(asked, cli._Silent())
+    assert "longest_run" in {card.plugin for card in cards}
+    assert "longest_run" not in {entry.plugin.name for entry in recovery._opened(asked)[2].loaded}
 
 
 def test_too_few_controls_say_so(tmp_path):

@@ -49,7 +49,7 @@ from hindlight.trials import (
 )
 from hindlight.verdicts import Watcher
 
-INJECTIONS_AT_ONCE = 64
+INJECTIONS_AT_ONCE = 128
 SMALL_WORK = 20_000_000  # frames times positions judged; up to this many the work is done in this process
 POWER_RATE = 1e-3
 FEWEST_FOR_TAIL = 40  # controls: fewer show no tail, see `calibrate.tail_bound`
@@ -166,7 +166,7 @@ def recover(asked: Asked, watcher: Watcher) -> Report:
 
 def report_cards(asked: Asked, watcher: Watcher) -> tuple[list[Power], tuple[str, ...]]:
     """The power of each statistic alone on made-up sources in all frames of a run, and what is to be said of it."""
-    run, order, plugins = _opened(asked)
+    run, order, plugins = _opened(asked, with_new=True)
     with run.locked(), assembled(asked.workers, None, _is_small(run, order.settings)) as crew:
         study = _study(run, order, plugins, crew, watcher, lambda frames: [_all_frames(frames)])
         nulls, units = _nulls(study)
@@ -189,13 +189,19 @@ def report_cards(asked: Asked, watcher: Watcher) -> tuple[list[Power], tuple[str
     said = f"power at a false-alarm rate of {POWER_RATE:g}"
     if highest > POWER_RATE:
         said += f", or what the controls can tell, which is {float(rate.min()):.3g} to {highest:.3g} here"
-    searched = () if order.settings.completeness.period_search else ("period searches are left out: [completeness] "
-                                                                     "period_search = true asks them too",)  # fmt: skip
-    return cards, (said, *searched)
+    if order.settings.completeness.period_search:
+        return cards, (said,)
+    return cards, (
+        said,
+        "period searches are left out: [completeness] period_search = true in the run's settings asks them",
+    )
 
 
-def _opened(asked: Asked) -> tuple[RunFolder, Order, host.Plugins]:
-    """The finished run, and what it was judged with; `[completeness]` from the settings file, if one is given."""
+def _opened(asked: Asked, with_new: bool = False) -> tuple[RunFolder, Order, host.Plugins]:
+    """The finished run, and what it was judged with; `[completeness]` from the settings file, if one is given.
+
+    Plugins that the run was judged without are left out; `with_new` keeps those of the files given.
+    """
     run = RunFolder(asked.run)
     run.require()
     if not run.has("candidates.ecsv"):
@@ -204,13 +210,15 @@ def _opened(asked: Asked) -> tuple[RunFolder, Order, host.Plugins]:
     chosen = record.settings_in_force(run, request)
     if asked.settings is not None:
         chosen = replace(chosen, completeness=settings_module.read_settings(asked.settings).completeness)
-    recorded = tomllib.loads(run.file("settings.toml").read_text(encoding="utf-8")).get("versions", {})
-    known = host.load(host.spec_from(Settings(), asked.plugins))
-    names = {entry.plugin.name for entry in known.loaded}
-    missing = sorted(set(recorded.get("plugins", {})) - names)
+    recorded = (
+        tomllib.loads(run.file("settings.toml").read_text(encoding="utf-8")).get("versions", {}).get("plugins", {})
+    )
+    known = host.load(host.spec_from(Settings(), asked.plugins)).loaded
+    missing = sorted(set(recorded) - {entry.plugin.name for entry in known})
     if missing:
         raise UsageError(f"{run.path}: the run was judged with plugin {missing[0]!r}; give its file with --plugin")
-    spec = host.spec_from(chosen, asked.plugins, sorted(names - set(recorded.get("plugins", names))))
+    left_out = {e.plugin.name for e in known if e.plugin.name not in recorded and not (with_new and e.origin == "file")}
+    spec = host.spec_from(chosen, asked.plugins, sorted(left_out))
     plugins = host.load(spec)
     spec = replace(spec, expected=plugins.fingerprint())
     return run, Order(str(run.path.resolve()), chosen, spec, run.version()), plugins
@@ -305,9 +313,9 @@ def _nulls(study: Study) -> tuple[dict[int, dict[str, Null]], dict[str, float]]:
 
 def _in_frames(study: Study, found: FieldControls, subset: Subset) -> Mask:
     """Which controls share enough frames of a subset with which, shape (n, n)."""
-    inside = plan.field_frames(study.frames, found.vectors)
-    mine = np.isin(study.frames["id"][inside.rows], subset.frames)
-    return serves(inside.covered[mine], inside.covered[mine], study.settings.controls.shared_frames)
+    mine = np.isin(study.frames["id"], subset.frames)
+    inside = plan.field_frames({name: values[mine] for name, values in study.frames.items()}, found.vectors)
+    return serves(inside.covered, inside.covered, study.settings.controls.shared_frames)
 
 
 def _search_nulls(study: Study, nulls: Mapping[int, Mapping[str, Null]]) -> None:
@@ -504,6 +512,8 @@ def _ephemeris(targets: Any, name: str) -> dict[str, float]:
 def _pulse_curve(table: astropy.table.Table, fluxes: Sequence[float]) -> tuple[FloatArray, FloatArray]:
     """Fluxes, ascending, and the completeness of pulse trains in all frames, mean over the other cells."""
     mine = table[(table["subset"] == ALL) & (table["kind"] == injection.PULSES)]
+    if len(mine) == 0:
+        return np.empty(0), np.empty(0)
     grid = np.unique(np.asarray(fluxes, float))
     return grid, np.array([np.mean(mine["completeness"][np.asarray(mine["flux"]) == flux]) for flux in grid])
 

@@ -209,7 +209,7 @@ class Completeness:
         False, "whether periods are searched for as in the run; it takes a hundred times as long, and misses little"
     )
     pixels: int = setting(24, "sources added to pixels, to prove those added to light curves; 0 for none", minimum=0)
-    seed: int = setting(1, "what all draws are made from", minimum=0, maximum=2**31)
+    seed: int = setting(1, "what all draws are made from", minimum=0, maximum=2**31 - 1)
 
 
 @dataclass(frozen=True)
