@@ -161,6 +161,8 @@ def test_a_frame_that_is_gone_proves_nothing(archive, tmp_path, monkeypatch):
     monkeypatch.setattr(trials, "check_unchanged", gone)
     assert trials.plant_in_frame(order, int(tables.frames["id"][0]), controls) is None
     assert "no frame could be measured" in recovery._proof_remarks([None])[0]
+    assert recovery._proof_remarks([planted.Proof(0.1, 0.01, 1e-9, 1.0), None])[0].startswith("proved on 1")
+    assert recovery._proof_remarks([planted.Proof(0.1, 0.05, 1e-9, 1.0)])[0].startswith("NOT proved")
 
 
 def test_with_period_search(archive, tmp_path):
@@ -217,7 +219,7 @@ def test_too_few_controls_say_so(tmp_path):
         command = ["completeness", str(run), "--settings", str(tmp_path / "g.toml"), "-q"]
         assert cli.run_command(command) == status
     said = (tmp_path / "run10" / "completeness.txt").read_text(encoding="utf-8")
-    assert "too few controls in 1 of 1 fields" in said
+    assert "too few controls for 30 of 30 sources" in said
     assert not Table.read(tmp_path / "run10" / "completeness.ecsv")["n_recovered"].any()
 
 

@@ -52,6 +52,7 @@ from hindlight.verdicts import Watcher
 INJECTIONS_AT_ONCE = 128
 SMALL_WORK = 20_000_000  # frames times positions judged; up to this many the work is done in this process
 POWER_RATE = 1e-3
+MOST_BEYOND_ROUNDING, MOST_NONLINEAR = 0.02, 1e-6  # sigma: what pixels may differ by from light curves
 FEWEST_FOR_TAIL = 40  # controls: fewer show no tail, see `calibrate.tail_bound`
 UPPER_BOUND = (
     "sources are added to images as they are: what deconvolution does to a source that flickers is not in it, so for "
@@ -156,7 +157,7 @@ def recover(asked: Asked, watcher: Watcher) -> Report:
         meta = _meta(study, units)
         table = _table(study, wanted, outcomes, meta)
         targets, limits = _target_tables(study, run, table, ephemerides, meta)
-    remarks = (*_remarks(study, nulls, targets), *_proof_remarks(proofs), UPPER_BOUND)
+    remarks = (*_remarks(study, outcomes[ALL].found, targets), *_proof_remarks(proofs), UPPER_BOUND)
     for name, made in (("completeness_limits", limits), ("completeness_targets", targets), ("completeness", table)):
         for ending in (".fits", ".vot", ".ecsv"):
             write_table(run.file(f"{name}{ending}"), made)
@@ -537,10 +538,9 @@ def _target_row(
     return row
 
 
-def _remarks(study: Study, nulls: Mapping[int, Mapping[str, Null]], targets: astropy.table.Table) -> tuple[str, ...]:
-    """What holds for the tables as a whole."""
+def _remarks(study: Study, found: Found, targets: astropy.table.Table) -> tuple[str, ...]:
+    """What holds for the tables as a whole; `found` is what became of the sources in all frames."""
     chosen = study.settings.completeness
-    sizes = [len(found.ids) - 1 for found in study.fields]
     said = [
         f"{len(study.cells)} cells of {chosen.per_cell} sources each in {len(study.subsets)} subsets of frames, at "
         f"{sum(len(f.ids) for f in study.fields)} controls of {len(study.fields)} fields",
@@ -550,19 +550,12 @@ def _remarks(study: Study, nulls: Mapping[int, Mapping[str, Null]], targets: ast
     ]
     if not chosen.period_search:
         said.append("period searches are left out, of sources and controls alike ([completeness] period_search)")
-    if min(sizes) < FEWEST_FOR_TAIL and 1.0 / (min(sizes) + 1) >= study.bars.empirical:
-        hopeless = sum(n < FEWEST_FOR_TAIL and 1.0 / (n + 1) >= study.bars.empirical for n in sizes)
-        said.append(
-            f"too few controls in {hopeless} of {len(sizes)} fields: with {min(sizes)} a p-value cannot be below "
-            f"{1.0 / (min(sizes) + 1):.3g} and no tail can be fitted ({FEWEST_FOR_TAIL} are needed), so that no source, "
-            "however bright, could have been found there"
-        )
-    elif 1.0 / (min(sizes) + 1) >= study.bars.empirical:
-        said.append(
-            f"{min(sizes)} controls cannot decide at this level by themselves (p is at least {1.0 / (min(sizes) + 1):.3g}, "
-            f"below {study.bars.empirical:.3g} is needed): the upper bound of a fitted tail does (n_extrapolated)"
-        )
+    said += _control_remarks(study, found.lowest_p)
     tables = book(study.order.run, study.order.version)
+    without = {int(n) for n in tables.positions["field"][tables.positions["kind"] == "target"]}
+    without -= {f.number for f in study.fields}
+    if without:
+        said.append(f"{len(without)} fields without controls are left out")
     searched = int(((tables.positions["kind"] == "target") & (tables.positions["search"] >= 0)).sum())
     if searched:
         said.append(f"{searched} targets that were searched within their position errors are not in these tables")
@@ -574,6 +567,25 @@ def _remarks(study: Study, nulls: Mapping[int, Mapping[str, Null]], targets: ast
     return tuple(said)
 
 
+def _control_remarks(study: Study, lowest_p: FloatArray) -> list[str]:
+    """Whether controls are enough to find anything, by the smallest p-value that each source could have got."""
+    short = lowest_p >= study.bars.empirical
+    hopeless = short & (np.rint(1.0 / lowest_p - 1.0) < FEWEST_FOR_TAIL)
+    said = []
+    if hopeless.any():
+        said.append(
+            f"too few controls for {hopeless.sum()} of {len(short)} sources: p cannot be below "
+            f"{lowest_p[hopeless].min():.3g} at best, below {study.bars.empirical:.3g} is needed, and no tail can be fitted to "
+            f"fewer than {FEWEST_FOR_TAIL}: however bright, they could not have been found"
+        )
+    if (short & ~hopeless).any():
+        said.append(
+            f"controls cannot decide by themselves for {(short & ~hopeless).sum()} of {len(short)} sources (p below "
+            f"{study.bars.empirical:.3g} is needed): the upper bound of a fitted tail does (n_extrapolated)"
+        )
+    return said
+
+
 def _proof_remarks(proofs: Sequence[planted.Proof | None]) -> tuple[str, ...]:
     """What sources added to pixels have shown."""
     made = [proof for proof in proofs if proof is not None]
@@ -581,10 +593,12 @@ def _proof_remarks(proofs: Sequence[planted.Proof | None]) -> tuple[str, ...]:
         return (
             "not proved on pixels: no frame could be measured again" if proofs else "not proved on pixels: none asked",
         )
-    said = (
-        f"proved on {len(made)} injections in pixels: largest difference {max(abs(p.difference) for p in made):.2g} sigma, "
-        f"of which rounding to the steps of stored images leaves {max(abs(p.beyond_rounding) for p in made):.2g}, and "
-        f"floating-point pixels without their local background {max(abs(p.linear) for p in made):.1g}"
+    beyond, linear = max(abs(p.beyond_rounding) for p in made), max(abs(p.linear) for p in made)
+    said = "proved" if beyond <= MOST_BEYOND_ROUNDING and linear <= MOST_NONLINEAR else "NOT proved"
+    said += (
+        f" on {len(made)} injections in pixels: largest difference {max(abs(p.difference) for p in made):.2g} sigma, "
+        f"of which rounding to the steps of stored images leaves {beyond:.2g}, and floating-point pixels without their "
+        f"local background {linear:.1g}"
     )
     if len(made) < len(proofs):
         said += f"; {len(proofs) - len(made)} more could not be measured"
