@@ -16,10 +16,10 @@ ORDER = [
     "errors", "schema", "facts", "blocks", "settings", "dates", "lightcurve", "plugin", "hookspecs", "tables", "host",
     "fence", "clock", "systems", "celestial", "sky", "headers", "reading", "goodtime", "knowledge", "files",
     "companions", "channels", "outlines", "footprints", "archive", "summary", "positions", "apart", "pixels",
-    "background", "detection", "pointing", "growth", "photometry", "duplicates", "robust", "losses", "response",
-    "ensemble", "store", "judge", "calibrate", "ranking", "lifted", "search", "timing", "candidates", "plan", "comparisons",
-    "tasks", "conclude", "bright", "outcome", "crew", "record", "verdicts", "runner", "survey", "export", "demo", "testing",
-    "cli", "__main__",
+    "background", "detection", "pointing", "growth", "photometry", "planted", "duplicates", "robust", "losses", "response",
+    "ensemble", "store", "judge", "calibrate", "ranking", "lifted", "search", "timing", "injection", "completeness",
+    "candidates", "plan", "comparisons", "tasks", "trials", "conclude", "bright", "outcome", "crew", "record", "verdicts",
+    "runner", "recovery", "survey", "export", "demo", "testing", "cli", "__main__",
 ]  # fmt: skip
 PLUGINS_MAY_IMPORT = {"hindlight", "numpy", "scipy", "astropy", "photutils", "nifty_ls"}
 

@@ -21,6 +21,7 @@ TAIL_CONFIDENCE = 0.95
 FEWEST_EXCEEDANCES = 10
 SHAPES = np.concatenate(([0.0], np.geomspace(1e-3, 5.0, 160)))
 SCALES = np.geomspace(0.02, 50.0, 400)
+LOGS_AT_ONCE = 25  # factors: no product of so many, each below the largest shape / scale * excess, overflows
 
 
 @dataclass(frozen=True, eq=False)
@@ -70,19 +71,27 @@ def centre_and_spread(values: FloatArray) -> tuple[FloatArray, FloatArray]:
     """
     k = values.shape[1]
     centre, spread = np.zeros(k), np.ones(k)
-    for j in range(k):
-        finite = values[np.isfinite(values[:, j]), j]
-        if finite.size == 0:
-            continue
-        centre[j] = np.median(finite)
-        low, high = np.quantile(finite, 0.01, method="lower"), np.quantile(finite, 0.99, method="higher")
-        measures = (
-            MAD_TO_SIGMA * np.median(np.abs(finite - centre[j])),
-            max(high - centre[j], centre[j] - low) / 2.33,
-            np.ptp(finite),
-        )
-        spread[j] = next((m for m in measures if m > 0), 1.0)
+    finite = np.isfinite(values)
+    whole = finite.all(axis=0) & (len(values) > 0)
+    centre[whole], spread[whole] = _middle_and_spread(values[:, whole])
+    for j in np.flatnonzero(~whole & finite.any(axis=0)).tolist():
+        (centre[j],), (spread[j],) = _middle_and_spread(values[finite[:, j], j : j + 1])
     return centre, spread
+
+
+def _middle_and_spread(values: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """The same for columns of finite values, shape (n, k), n > 0."""
+    if values.shape[1] == 0:
+        return np.empty(0), np.empty(0)
+    middle = np.median(values, axis=0)
+    low = np.quantile(values, 0.01, axis=0, method="lower")
+    high = np.quantile(values, 0.99, axis=0, method="higher")
+    further = np.maximum(high - middle, middle - low) / 2.33
+    measures = (MAD_TO_SIGMA * np.median(np.abs(values - middle), axis=0), further, np.ptp(values, axis=0))
+    spread = np.ones(values.shape[1])
+    for measure in reversed(measures):
+        spread = np.where(measure > 0, measure, spread)
+    return middle, spread
 
 
 def rank(null: Null, target: FloatArray, weight: float = 1.0) -> Rank:
@@ -186,11 +195,14 @@ def tail_bound(distances: FloatArray, target: float, exceedances: int, weight: f
 
 def _log_terms(shape: FloatArray, scale: FloatArray, excess: FloatArray) -> FloatArray:
     """Sum over the excesses of log(1 + shape y / scale) / shape, and of y / scale where the shape is zero."""
-    total = np.zeros(np.broadcast_shapes(shape.shape, scale.shape))
-    safe = np.where(shape > 0, shape, 1.0)
-    for y in excess:
-        total += np.where(shape > 0, np.log1p(shape * y / scale) / safe, y / scale)
-    return total
+    ratio = shape / scale
+    logs = np.zeros(ratio.shape)
+    for start in range(0, len(excess), LOGS_AT_ONCE):  # one logarithm of a product is much faster than many
+        product = np.ones(ratio.shape)
+        for y in excess[start : start + LOGS_AT_ONCE]:
+            product *= 1.0 + ratio * y
+        logs += np.log(product)
+    return np.where(shape > 0, logs / np.where(shape > 0, shape, 1.0), excess.sum() / scale)
 
 
 def threshold(maxima: FloatArray, false_alarms: float) -> float:

@@ -174,14 +174,40 @@ def lightcurve(run: Path, target: str, out: Path | None, quiet: bool, verbose: b
 
 
 @cli.command()
+@click.argument("run", type=click.Path(path_type=Path))
+@click.option("--settings", "settings_file", type=click.Path(path_type=Path), help="Settings (TOML): [completeness].")
+@click.option("--targets", type=click.Path(path_type=Path), help="Target list: ephemerides make looks cycles.")
+@click.option("--plugin", "plugins", multiple=True, type=click.Path(path_type=Path), help="A plugin file of the run.")
+@click.option("--workers", type=click.IntRange(min=1), help="Processes; default: one for small work, else one a core.")
+@common_options
+def completeness(
+    run: Path, settings_file: Path | None, targets: Path | None, plugins: tuple[Path, ...], workers: int | None,
+    quiet: bool, verbose: bool,
+) -> None:  # fmt: skip
+    """What a finished run could have shown: made-up sources hidden in its light curves, and how many are found."""
+    from hindlight.recovery import Asked, recover
+
+    with _watching(quiet, verbose) as watcher:
+        report = recover(Asked(run, settings_file, targets, plugins, workers), watcher)
+    if not quiet:
+        _print_completeness(run, report)
+
+
+@cli.command()
 @click.option("--check", type=click.Path(path_type=Path), metavar="FILE.py", help="Check that a plugin behaves.")
 @click.option("--plugin", "files", multiple=True, type=click.Path(path_type=Path), help="List this file's plugins too.")
+@click.option("--power", type=click.Path(path_type=Path), metavar="RUN", help="Which sources each statistic finds.")
 @common_options
-def plugins(check: Path | None, files: tuple[Path, ...], quiet: bool, verbose: bool) -> None:
-    """What is installed, its columns; with --check whether a plugin behaves."""
+def plugins(check: Path | None, files: tuple[Path, ...], power: Path | None, quiet: bool, verbose: bool) -> None:
+    """What is installed, its columns; with --check whether a plugin behaves, with --power what statistics are worth."""
     from hindlight import host
     from hindlight.settings import Settings
 
+    if check is not None and power is not None:
+        raise UsageError("give --check or --power, not both")
+    if power is not None:
+        _print_power(power, files, quiet, verbose)
+        return
     with _logging(verbose):
         if check is not None:
             _check_plugin(check)
@@ -400,6 +426,44 @@ def _shade(count: int, most: int, shades: str) -> str:
     if count == 0:
         return " "
     return shades[round((len(shades) - 1) * math.log(count) / math.log(most))] if most > 1 else shades[0]
+
+
+def _print_completeness(run: Path, report: Any) -> None:
+    """Completeness in all frames, a row for each kind of source and a column for each flux; then what is to be said."""
+    console = _console()
+    mine = report.table[report.table["subset"] == "all"]
+    fluxes = sorted({float(flux) for flux in mine["flux"]})
+    table = _simple_table(
+        "completeness in all frames, by peak flux in median frame errors",
+        "kind", "period (s)", "duty cycle", *(f"{flux:.3g}" for flux in fluxes),
+    )  # fmt: skip
+    rows: dict[tuple[str, ...], dict[float, str]] = {}
+    for row in mine:
+        key = (str(row["kind"]), *(_short(row[name]) for name in ("period", "duty_cycle", "window", "missing")))
+        rows.setdefault(key, {})[float(row["flux"])] = _short(row["completeness"])
+    for (kind, period, duty, *_), cells in rows.items():
+        _add(table, kind, period, duty, *(cells.get(flux, "") for flux in fluxes))
+    console.print(table)
+    for line in report.remarks:
+        console.print(visible(line), markup=False)
+    names = "completeness.ecsv, completeness_targets.ecsv, completeness_limits.ecsv (each .fits, .vot too)"
+    console.print(f"written to {run}: {names}, completeness.txt", markup=False)
+
+
+def _print_power(run: Path, files: tuple[Path, ...], quiet: bool, verbose: bool) -> None:
+    """A statistic's report card, for each."""
+    from hindlight.recovery import Asked, report_cards
+
+    with _watching(quiet, verbose) as watcher:
+        cards, remarks = report_cards(Asked(run, plugins=files), watcher)
+    console = _console()
+    kinds = list(cards[0].power) if cards else []
+    table = _simple_table("what each statistic finds by itself", "name", *kinds, "only it finds", "s per 1000")
+    for card in cards:
+        _add(table, card.plugin, *(_short(card.power[k]) for k in kinds), card.only_here, _short(card.cost_s))
+    console.print(table)
+    for line in remarks:
+        console.print(visible(line), markup=False)
 
 
 def _print_plugins(loaded: Any) -> None:

@@ -149,10 +149,10 @@ class PValues:
     needed: int
 
 
-def p_values(ranks: Sequence[calibrate.Rank], weights: Sequence[float], settings: Settings) -> PValues:
+def p_values(ranks: Sequence[calibrate.Rank], settings: Settings, weights: Sequence[float] | None = None) -> PValues:
     """One p-value and q-value per target; a tail bound stands in where the controls alone cannot decide.
 
-    `weights` are the group sizes of the controls that each was ranked with.
+    `weights` are the group sizes of the controls that each was ranked with, 1 where they are not given.
     """
     empirical = np.array([r.p_value for r in ranks])
     level = settings.ranking.level
@@ -165,7 +165,10 @@ def p_values(ranks: Sequence[calibrate.Rank], weights: Sequence[float], settings
     testable = np.isfinite(empirical)
     for index in np.flatnonzero(undecided).tolist():
         bound = calibrate.tail_bound(
-            ranks[index].control_distances, ranks[index].beyond, settings.ranking.tail_exceedances, weights[index]
+            ranks[index].control_distances,
+            ranks[index].beyond,
+            settings.ranking.tail_exceedances,
+            weights[index] if weights else 1.0,
         )
         testable[index] = np.isfinite(bound)
         if bound < p[index]:

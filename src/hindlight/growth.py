@@ -18,7 +18,7 @@ from hindlight.plugin import BeamShape, Estimator, Stamps
 WANTED = 12  # of the brightest known sources of a frame
 FEWEST = 5
 WORST_ERROR = 0.1
-LEAST_SNR = 20.0  # of all the light of a source that is to tell
+LEAST_SNR = 20.0  # against the noise in the wide circle, of a source that is to tell
 
 Columns = dict[str, NDArray[Any]]
 
@@ -54,7 +54,7 @@ def fraction_held(counted: Columns, whole: Columns) -> float:
     NaN where fewer than five unflagged sources stand out, or where they tell it to worse than 10 %.
     """
     with np.errstate(invalid="ignore"):
-        clear = (whole["flux"] >= LEAST_SNR * whole["flux_err"]) & np.isfinite(counted["flux"])
+        clear = counted["flux"] >= LEAST_SNR * whole["flux_err"]  # by the whole flux, faint sources would be lucky ones
     clear &= (counted["flags"] == 0) & (whole["flags"] == 0)
     if clear.sum() < FEWEST:
         return float("nan")

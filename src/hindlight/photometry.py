@@ -187,7 +187,14 @@ def measure_frame(
     where the anchors do not tell), and those of `measure`, flux and error divided by the gain.
     Raises `SetAsideError`, `OSError`, or `ValueError` from an unusable projection.
     """
-    opened = open_frame(frame, settings)
+    return measure_opened(open_frame(frame, settings), frame, ra, dec, estimator, settings, anchors)
+
+
+def measure_opened(
+    opened: OpenFrame, frame: FrameToMeasure, ra: FloatArray, dec: FloatArray, estimator: Estimator, settings: Settings,
+    anchors: tuple[FloatArray, FloatArray] | None = None,
+) -> Columns:  # fmt: skip
+    """`measure_frame` for a frame that has been opened."""
     if anchors is not None and len(anchors[0]):
         opened = _with_own_width(frame, opened.unpacked_once(), *anchors)
     x, y = opened.sky.icrs_to_pixel(ra, dec, frame.mjd)

@@ -483,3 +483,73 @@ CANDIDATES = (
     ),
     TableColumn("n_trials", "places searched; the controls were searched alike", dtype="int64", ucd="meta.number"),
 )
+
+COMPLETENESS = (
+    TableColumn("subset", "which frames: all, those of an instrument, or of an instrument and a decade", dtype="str"),
+    TableColumn("instrument", "instrument, empty for all", dtype="str", ucd="meta.id;instr"),
+    TableColumn("decade", "such as 1990s, empty for all", dtype="str"),
+    TableColumn("n_frames", "frames of the subset", dtype="int64", ucd="meta.number;obs"),
+    TableColumn("kind", "pulses, smooth, or nothing (no source: false alarms)", dtype="str", ucd="meta.code.class"),
+    TableColumn("flux", "peak flux in median frame errors of each channel; the table says these", ucd="phot.flux"),
+    TableColumn("period", "period, NaN for no source", unit="s", ucd="time.period"),
+    TableColumn("duty_cycle", "how much of a period a pulse fills; NaN where there are none"),
+    TableColumn("duration", "of a pulse; NaN where there are none", unit="s", ucd="time.duration"),
+    TableColumn("window", "in which a pulse lies anywhere; NaN where there are none", unit="s", ucd="time.duration"),
+    TableColumn("missing", "fraction of the pulses that are not there; NaN where there are none"),
+    TableColumn("n_injected", "sources added", dtype="int64", ucd="meta.number"),
+    TableColumn("n_recovered", "sources that would have been candidates of the run", dtype="int64", ucd="meta.number"),
+    TableColumn("completeness", "n_recovered / n_injected", ucd="stat.probability"),
+    TableColumn("completeness_low", "lower end of its 95 % Jeffreys interval", ucd="stat.probability;stat.min"),
+    TableColumn("completeness_high", "upper end of its 95 % Jeffreys interval", ucd="stat.probability;stat.max"),
+    TableColumn("n_seen", "sources above the detection threshold in some frame", dtype="int64", ucd="meta.number"),
+    TableColumn("n_extrapolated", "recovered by the upper bound of a fitted tail", dtype="int64", ucd="meta.number"),
+    TableColumn("median_snr", "highest flux added to a frame over its error, median of the sources", ucd="stat.snr"),
+    TableColumn(
+        "median_lit", "frames in which more than the error was added, median of the sources", ucd="meta.number"
+    ),
+    TableColumn("median_used", "usable frames, median of the sources", ucd="meta.number;obs"),
+    TableColumn(
+        "lowest_p", "smallest p-value that the controls can give, median of the sources", ucd="stat.probability"
+    ),
+)
+
+COMPLETENESS_TARGETS = (
+    TableColumn("name", "target", dtype="str", ucd="meta.id;meta.main"),
+    TableColumn("standing", "the run's verdict", dtype="str", ucd="meta.code.class"),
+    TableColumn("n_used", "usable frames of unsigned channels", dtype="int64", ucd="meta.number;obs"),
+    TableColumn(
+        "n_looks", "independent looks: epochs, or cycles of a known ephemeris", dtype="int64", ucd="meta.number"
+    ),
+    TableColumn("by_cycles", "whether looks are cycles of a known ephemeris", dtype="bool"),
+    TableColumn(
+        "like_flux",
+        "highest S/N in a frame; for a target with no detection its lowest detection threshold",
+        ucd="phot.flux;stat.max",
+    ),
+    TableColumn(
+        "found_probability",
+        "chance that a pulse train of this peak flux would have been found, mean over the grid's periods and duty cycles, "
+        "between its fluxes; NaN outside them",
+        ucd="stat.probability",
+    ),
+    TableColumn(
+        "lowest_duty_limit",
+        "95 % limit on the duty cycle of a source that no look could miss, NaN where the looks are too few or it was seen",
+        ucd="stat.max",
+    ),
+    *(
+        TableColumn(
+            f"flux_limit_{word}",
+            f"peak flux in median frame errors above which a duty cycle of {duty} or more is excluded at 95 %; NaN for none",
+            ucd="phot.flux;stat.max",
+        )
+        for word, duty in (("half", 0.5), ("tenth", 0.1), ("hundredth", 0.01))
+    ),
+)
+
+COMPLETENESS_LIMITS = (
+    TableColumn("name", "unseen target", dtype="str", ucd="meta.id;meta.main"),
+    TableColumn("flux", "flux in median frame errors, mean over an exposure", ucd="phot.flux"),
+    TableColumn("looks_effective", "sum over the looks of the chance to see such a source", ucd="meta.number"),
+    TableColumn("duty_limit", "95 % limit on its duty cycle; NaN where all looks together set none", ucd="stat.max"),
+)

@@ -200,6 +200,38 @@ class Ranking:
 
 
 @dataclass(frozen=True)
+class Completeness:
+    """Made-up sources that `hindlight completeness` hides in light curves of blank sky.
+
+    Fluxes are peak fluxes in units of each channel's median frame error; channels of Stokes Q, U, V get none.
+    """
+
+    per_cell: int = setting(40, "sources for each cell of the grid", minimum=1)
+    fluxes: tuple[float, ...] = setting(
+        (2.0, 3.4, 5.9, 10.2, 17.5, 30.0), "peak fluxes", unit="median frame errors", minimum=0
+    )
+    pulse_periods: tuple[float, ...] = setting((1200.0, 18000.0), "periods of pulse trains", unit="s", minimum=1e-3)
+    duty_cycles: tuple[float, ...] = setting(
+        (0.03, 0.1, 0.3), "how much of a period a pulse fills", minimum=1e-9, maximum=1
+    )
+    windows: tuple[float, ...] = setting(
+        (2.0,), "windows that a pulse lies anywhere in, in pulse durations; 1 is strictly periodic", minimum=1
+    )
+    missing: tuple[float, ...] = setting((0.2,), "fraction of pulses that are not there", minimum=0, maximum=1)
+    smooth_periods: tuple[float, ...] = setting(
+        (86400.0, 8640000.0),
+        "periods of smooth variables (sinusoids from zero to the peak flux)",
+        unit="s",
+        minimum=1e-3,
+    )
+    period_search: bool = setting(
+        False, "whether periods are searched for as in the run; it takes a hundred times as long, and misses little"
+    )
+    pixels: int = setting(24, "sources added to pixels, to prove those added to light curves; 0 for none", minimum=0)
+    seed: int = setting(1, "what all draws are made from", minimum=0, maximum=2**31 - 1)
+
+
+@dataclass(frozen=True)
 class Settings:
     """Every setting in force.
 
@@ -216,6 +248,7 @@ class Settings:
     flow: Flow = field(default_factory=Flow)
     detection: Detection = field(default_factory=Detection)
     ranking: Ranking = field(default_factory=Ranking)
+    completeness: Completeness = field(default_factory=Completeness)
     sites: dict[str, Vector] = field(default_factory=dict)
     companions: Companions = field(default_factory=Companions)
     frames: tuple[FrameBlock, ...] = ()
@@ -313,13 +346,27 @@ def _checked(declared: dataclasses.Field[Any], default: Any, value: Any, where: 
         bad = [k for k, v in value.items() if isinstance(v, bool) or not isinstance(v, int | float) or not v > 0]
         if bad:
             raise UsageError(f"{where}: {bad[0]!r} must be a positive number, got {value[bad[0]]!r}")
+    if isinstance(value, tuple):
+        value = tuple(_within(meta, _number(item, where), where) for item in value)
     if isinstance(value, int | float) and not isinstance(value, bool):
-        low, high = meta["minimum"], meta["maximum"]
-        if not math.isfinite(value) or (low is not None and value < low) or (high is not None and value > high):
-            bounds = f"from {'any' if low is None else low} to {'any' if high is None else high}"
-            raise UsageError(f"{where}: {value!r} is out of range, expected {bounds}")
+        _within(meta, value, where)
     if meta["choices"] is not None and value not in meta["choices"]:
         raise UsageError(f"{where}: {value!r} is none of {', '.join(map(repr, meta['choices']))}")
+    return value
+
+
+def _number(value: Any, where: str) -> float:
+    if isinstance(value, bool) or not isinstance(value, int | float):
+        raise UsageError(f"{where}: expected a list of numbers, got {value!r} in it")
+    return float(value)
+
+
+def _within(meta: Mapping[str, Any], value: float, where: str) -> float:
+    """`value` if it lies within the declared bounds."""
+    low, high = meta["minimum"], meta["maximum"]
+    if not math.isfinite(value) or (low is not None and value < low) or (high is not None and value > high):
+        bounds = f"from {'any' if low is None else low} to {'any' if high is None else high}"
+        raise UsageError(f"{where}: {value!r} is out of range, expected {bounds}")
     return value
 
 

@@ -155,6 +155,17 @@ def _anchors(positions: Columns, round_number: int) -> Columns:
     return {"ra": ra, "dec": dec, "vectors": unit_vectors(ra, dec)}
 
 
+def _anchors_near(frames: Columns, row: int, anchors: Columns) -> tuple[FloatArray, FloatArray]:
+    """Those that tell how far a frame is off its header, ICRS degrees."""
+    known = _near(frames, row, anchors["vectors"])[:MOST_ANCHORS]
+    return anchors["ra"][known], anchors["dec"][known]
+
+
+def anchors_of(tables: Book, row: int, round_number: int) -> tuple[FloatArray, FloatArray]:
+    """The comparisons, ICRS degrees, that one frame was measured with in a round."""
+    return _anchors_near(tables.frames, row, _anchors(tables.positions, round_number))
+
+
 def _near(frames: Columns, row: int, vectors: FloatArray) -> IntArray:
     """Positions that may lie in a frame: within the circle around its corners."""
     centre = unit_vectors(frames["centre_ra"][row : row + 1], frames["centre_dec"][row : row + 1])[0]
@@ -176,8 +187,7 @@ def _measure_frame(
     facts = frame_facts(frames, row)
     wanted = order.settings.photometry.estimator
     estimator = photometry.choose_estimator(estimators, facts.unit, wanted, facts.beam_major > 0)
-    known = _near(frames, row, anchors["vectors"])[:MOST_ANCHORS]
-    sources = anchors["ra"][known], anchors["dec"][known]
+    sources = _anchors_near(frames, row, anchors)
     listed = int(frames["size"][row]), int(frames["modified_ns"][row])
     check_unchanged(facts.path, *listed)
     found = photometry.measure_frame(facts, ra, dec, estimator, order.settings, sources)

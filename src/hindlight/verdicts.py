@@ -225,7 +225,7 @@ def _tabled(
     settings, plugins = session.order.settings, session.plugins
     places = _places(fields, positions)
     ranks = [place.found.ranked.ranks[place.index] for place in places]
-    p = conclude.p_values(ranks, [place.found.group_size for place in places], settings)
+    p = conclude.p_values(ranks, settings, [place.found.group_size for place in places])
     with np.errstate(invalid="ignore"):
         beyond = p.q < settings.ranking.level
     examined = _examined(session, places, beyond)

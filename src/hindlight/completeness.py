@@ -1,0 +1,377 @@
+"""What an archive could have shown: which made-up sources would have been found, and what looks without a detection say.
+
+Pure: judgements, p-values and looks in, verdicts and limits out. A source hidden at a control is judged and ranked by the
+code that ranks targets, among the other controls: one that carries a source leaves its own null. It is recovered if it
+would have been a candidate of the run, had it been one more target of it.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from itertools import product
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import special, stats
+
+from hindlight import calibrate, ranking
+from hindlight.injection import PULSES, SMOOTH, Source, uniform
+from hindlight.judge import WHOLE, Judgement, joined
+from hindlight.lightcurve import FloatArray, IntArray
+from hindlight.plugin import Column, Plugin
+from hindlight.settings import Completeness, Settings
+from hindlight.timing import DAY, from_nearest_pulse
+
+NOTHING = "nothing"  # a kind: no source at all, which tells the rate of false alarms
+CONFIDENCE = 0.95
+BISECTIONS = 60
+HIGHEST_FLUX = 1e4  # median frame errors; limits above it are none
+HOST, START = 16, 17  # what is drawn of a source
+
+Mask = NDArray[np.bool_]
+
+
+@dataclass(frozen=True)
+class Cell:
+    """Sources alike: `flux` in median frame errors, period in s; the rest is NaN where there are no pulses."""
+
+    kind: str
+    flux: float
+    period_s: float = float("nan")
+    duty_cycle: float = float("nan")
+    window: float = float("nan")
+    missing: float = float("nan")
+
+
+@dataclass(frozen=True)
+class Injection:
+    """One made-up source: the number of its cell, the id of the control that it is hidden at, and itself."""
+
+    cell: int
+    host: int
+    source: Source
+
+
+def grid(settings: Completeness) -> tuple[Cell, ...]:
+    """The cells, in the order of the table; the first holds nothing."""
+    trains = product(settings.pulse_periods, settings.duty_cycles, settings.windows, settings.missing, settings.fluxes)
+    return (
+        Cell(NOTHING, 0.0),
+        *(Cell(PULSES, flux, period, duty, window, missing) for period, duty, window, missing, flux in trains),
+        *(Cell(SMOOTH, flux, period) for period in settings.smooth_periods for flux in settings.fluxes),
+    )
+
+
+def drawn(cells: Sequence[Cell], hosts: IntArray, weights: FloatArray, settings: Completeness) -> list[Injection]:
+    """`per_cell` sources for each cell at hosts, shape (n,), drawn with these weights; phases at random."""
+    keys = (settings.seed << 32) + np.arange(len(cells) * settings.per_cell)
+    edges = np.cumsum(weights) / np.sum(weights)
+    found = []
+    for number, key in enumerate(keys.tolist()):
+        cell = number // settings.per_cell
+        at = np.searchsorted(edges, uniform(key, HOST, np.zeros(1, np.int64))[0], side="right")
+        host = int(hosts[min(int(at), len(hosts) - 1)])
+        found.append(Injection(cell, host, _source(cells[cell], key)))
+    return found
+
+
+def _source(cell: Cell, key: int) -> Source:
+    """A source of a cell."""
+    if cell.kind == NOTHING:
+        return Source(SMOOTH, DAY, 0.0, key)
+    start = cell.period_s * float(uniform(key, START, np.zeros(1, np.int64))[0])
+    if cell.kind == SMOOTH:
+        return Source(SMOOTH, cell.period_s, start, key)
+    duration = cell.duty_cycle * cell.period_s
+    return Source(PULSES, cell.period_s, start, key, duration, cell.window * duration, cell.missing)
+
+
+@dataclass(frozen=True, eq=False)
+class Null:
+    """The controls of one field in some of the frames: ids ascending, shape (n,), what was judged of them, and the rest.
+
+    `serving` (n, n) says which controls serve which one, as if that were a target; never itself.
+    """
+
+    ids: IntArray
+    serving: Mask
+    judgement: Judgement
+    thresholds: Mapping[str, ranking.Thresholds]
+
+
+def null_of(ids: IntArray, in_frames: Mask, judgement: Judgement, settings: Settings) -> Null:
+    """The null of controls that share frames as `in_frames` says, shape (n, n)."""
+    rows = np.arange(len(ids))
+    serving, _ = ranking.matched(judgement, rows, rows, in_frames & ~np.eye(len(ids), dtype=bool), settings.controls)
+    return Null(ids, serving, judgement, ranking.thresholds(judgement, rows, settings.detection))
+
+
+@dataclass(frozen=True)
+class Bars:
+    """Below which p-value one more target of the run would be a candidate: by the controls alone, and by all p-values."""
+
+    empirical: float
+    final: float
+
+
+def bar(p_values: FloatArray, level: float) -> float:
+    """Below which p-value one more test, beside those of shape (n,), has a false-discovery rate below the level.
+
+    Benjamini & Hochberg (1995, JRSS B 57, 289): of n + 1 tests, the one with r others below a bound t is below the level
+    if t <= (r + 1) level / (n + 1); the largest such bound. NaN is no test.
+    """
+    known = np.sort(p_values[np.isfinite(p_values)])
+    bounds = np.arange(1, len(known) + 2) * level / (len(known) + 1)
+    below = np.searchsorted(known, bounds, side="left")
+    return float(bounds[below >= np.arange(len(bounds))].max())
+
+
+@dataclass(frozen=True, eq=False)
+class Found:
+    """What became of n sources: arrays of shape (n,), `own_p` (n, n_plugins) NaN where a plugin says nothing."""
+
+    recovered: Mask
+    extrapolated: Mask
+    seen: Mask
+    lowest_p: FloatArray
+    own_p: FloatArray
+
+
+@dataclass(frozen=True, eq=False)
+class Ranked:
+    """Sources among the controls: what was judged of both (controls first), which serve which source, and the ranks."""
+
+    both: Judgement
+    controls: IntArray
+    sources: IntArray
+    serving: Mask
+    ranks: ranking.FieldRanks
+
+    @property
+    def p(self) -> FloatArray:
+        """The sources' p-values before any extrapolation, shape (n,)."""
+        return np.array([rank.p_value for rank in self.ranks.ranks])
+
+
+def ranked(judged: Judgement, hosts: IntArray, null: Null, columns: Mapping[str, Column], settings: Settings) -> Ranked:
+    """Sources that were judged at these controls (ids, shape (n,)) ranked as targets are."""
+    n, at = len(null.ids), np.searchsorted(null.ids, hosts)
+    both = joined([null.judgement, judged], [n, judged.n], columns)
+    controls, sources = np.arange(n), n + np.arange(judged.n)
+    serving, _ = ranking.matched(both, sources, controls, null.serving[at], settings.controls)
+    ranks = ranking.rank_field(both, columns, sources, controls, serving)
+    return Ranked(both, controls, sources, serving, ranks)
+
+
+def found(
+    judged: Judgement, hosts: IntArray, null: Null, columns: Mapping[str, Column], bars: Bars, settings: Settings,
+    plugins: Sequence[Plugin] = (),
+) -> Found:  # fmt: skip
+    """What becomes of sources that were judged at these controls (ids, shape (n,)); `plugins` each ask by themselves too."""
+    among = ranked(judged, hosts, null, columns, settings)
+    decided = np.array([_decided(rank, bars, settings) for rank in among.ranks.ranks], bool).reshape(-1, 2)
+    enough = _most_used(judged) >= settings.detection.min_frames
+    own = [_own_p(among, plugin, columns) for plugin in plugins]
+    return Found(
+        decided[:, 0] & enough,
+        decided[:, 1] & enough,
+        _seen(judged, null.thresholds),
+        np.asarray(1.0 / (among.ranks.n_controls + 1.0), float),
+        np.stack(own, axis=1) if own else np.empty((judged.n, 0)),
+    )
+
+
+def _decided(rank: calibrate.Rank, bars: Bars, settings: Settings) -> tuple[bool, bool]:
+    """Whether a rank makes a candidate, and whether only by the fitted tail: as `conclude.p_values` has it."""
+    if rank.p_value < bars.empirical:
+        return True, False
+    if rank.exceeded_by > 0 or not np.isfinite(rank.p_value):
+        return bool(rank.p_value < bars.final), False
+    bound = calibrate.tail_bound(rank.control_distances, rank.beyond, settings.ranking.tail_exceedances)
+    by_tail = bound < rank.p_value
+    return bool((bound if by_tail else rank.p_value) < bars.final), bool(by_tail and bound < bars.final)
+
+
+def _core(judged: Judgement, name: str) -> dict[str, FloatArray]:
+    """A column of the core by channel."""
+    return {
+        label: np.asarray(values, float)
+        for (label, full), values in judged.values.items()
+        if full == f"core_{name}" and label != WHOLE
+    }
+
+
+def used_frames(judged: Judgement) -> dict[str, FloatArray]:
+    """How many usable frames each position has, by channel."""
+    return _core(judged, "n_used")
+
+
+def _most_used(judged: Judgement) -> FloatArray:
+    return np.asarray(np.max([np.zeros(judged.n), *used_frames(judged).values()], axis=0))
+
+
+def _seen(judged: Judgement, thresholds: Mapping[str, ranking.Thresholds]) -> Mask:
+    """Whether any frame is above its channel's threshold."""
+    seen = np.zeros(judged.n, bool)
+    for label, highest in _core(judged, "snr_max").items():
+        seen |= highest > thresholds[label].detected
+    return seen
+
+
+def _own_p(among: Ranked, plugin: Plugin, columns: Mapping[str, Column]) -> FloatArray:
+    """The p-values of sources by one plugin's calibrated columns alone, those that ask about presence included."""
+    mine = {f"{plugin.name}_{column.name}" for column in plugin.columns if column.unusual is not None}
+    keys = [key for key in sorted(among.both.values) if key[1] in mine]
+    matrix = ranking.oriented_matrix(among.both, keys, columns, among.controls)
+    nulls: dict[bytes, calibrate.Null] = {}
+    p = []
+    for row, mask in zip(among.sources, among.serving, strict=True):
+        if mask.tobytes() not in nulls:
+            nulls[mask.tobytes()] = calibrate.null_from(matrix[among.controls[mask]])
+        p.append(calibrate.rank(nulls[mask.tobytes()], matrix[row]).p_value)
+    return np.array(p)
+
+
+def jeffreys(k: int, n: int, confidence: float = CONFIDENCE) -> tuple[float, float]:
+    """The interval of a binomial fraction: Beta(k + 1/2, n - k + 1/2), from 0 where k = 0, to 1 where k = n.
+
+    Brown, Cai & DasGupta 2001 (Stat. Sci. 16, 101), eq. 6 and 7.
+    """
+    tail = (1 - confidence) / 2
+    low = 0.0 if k == 0 else float(stats.beta.ppf(tail, k + 0.5, n - k + 0.5))
+    high = 1.0 if k == n else float(stats.beta.isf(tail, k + 0.5, n - k + 0.5))
+    return low, high
+
+
+@dataclass(frozen=True, eq=False)
+class Looks:
+    """The usable frames of a target, shape (n,).
+
+    `look` numbers the independent looks they belong to, ascending from 0; `channel` numbers channels; `error` and
+    `threshold` are those of the frame's flux in median errors of its channel; `share` is the chance that a source that is
+    on during the look is on in this frame.
+    """
+
+    look: IntArray
+    channel: IntArray
+    error: FloatArray
+    threshold: FloatArray
+    share: FloatArray
+
+    @property
+    def n(self) -> int:
+        """How many looks."""
+        return int(self.look.max()) + 1 if self.look.size else 0
+
+
+def by_epoch(t_s: FloatArray, gap_days: float) -> IntArray:
+    """The epoch of each frame of shape (n,), from 0; frames without a clock (NaN) count as one epoch together."""
+    order = np.argsort(t_s, kind="stable")  # NaN last
+    later = np.diff(t_s[order], prepend=t_s[order][:1])
+    new = (later > gap_days * DAY) | (np.isnan(t_s[order]) & ~np.isnan(np.concatenate(([np.nan], t_s[order][:-1]))))
+    look = np.empty(len(t_s), np.int64)
+    look[order] = np.cumsum(new)
+    return look
+
+
+def by_cycle(
+    t_s: FloatArray, exposure_s: FloatArray, period: float, period_dot: float, window_s: float
+) -> tuple[IntArray, FloatArray]:
+    """The cycle of each frame (from 0, in order of time) and how much of the window around its pulse it covers.
+
+    `t_s` are seconds from the ephemeris' epoch, finite; an exposure that is not known, and a window of no width, are
+    taken as instants.
+    """
+    away = from_nearest_pulse(t_s, period, period_dot)
+    _, cycle = np.unique(np.rint((t_s - away) / period).astype(np.int64), return_inverse=True)
+    exposure = np.nan_to_num(exposure_s)
+    inside = (np.abs(away) <= (exposure + window_s) / 2).astype(float)
+    if not window_s > 0:
+        return cycle, inside
+    overlap = np.minimum(exposure / 2, away + window_s / 2) - np.maximum(-exposure / 2, away - window_s / 2)
+    return cycle, np.clip(overlap / window_s, 0.0, 1.0)
+
+
+def chance_seen(flux: FloatArray | float, error: FloatArray, threshold: FloatArray) -> FloatArray:
+    """The chance that Gaussian noise leaves a flux above threshold times error: Phi(flux / error - threshold)."""
+    return np.asarray(special.ndtr(flux / error - threshold))
+
+
+def weights(looks: Looks, flux: float) -> FloatArray:
+    """The chance of each look to show a source of this flux that is on; shape (n_looks,).
+
+    Frames of one look in different channels are of the same pulse: the best channel counts. Within a channel, frames
+    that hold the source surely (share 1) are independent tries, those that cover parts of a window are alternatives.
+    """
+    seen = looks.share * chance_seen(flux, looks.error, looks.threshold)
+    best = np.zeros(looks.n)
+    for channel in np.unique(looks.channel):
+        mine = looks.channel == channel
+        sure = mine & (looks.share >= 1.0)
+        missed = np.ones(looks.n)
+        np.multiply.at(missed, looks.look[sure], 1.0 - seen[sure])
+        parts = np.bincount(looks.look[mine & ~sure], seen[mine & ~sure], minlength=looks.n)
+        best = np.maximum(best, np.maximum(1.0 - missed, np.minimum(parts, 1.0)))
+    return best
+
+
+def duty_limit(weight: FloatArray, confidence: float = CONFIDENCE) -> float:
+    """The largest duty cycle q that looks without a detection allow: product of (1 - q weight) = 1 - confidence.
+
+    `weight` (n,) is each look's chance to show the source if it is on. For weights of 1 it is the exact one-sided
+    binomial limit 1 - (1 - confidence)^(1/n). NaN where the product is larger at q = 1: no limit.
+    """
+    wanted = np.log1p(-confidence)
+
+    def missed(q: float) -> float:
+        with np.errstate(divide="ignore"):
+            return float(np.log1p(-q * weight).sum())
+
+    if not missed(1.0) <= wanted:
+        return float("nan")
+    low, high = 0.0, 1.0
+    for _ in range(BISECTIONS):
+        middle = (low + high) / 2
+        low, high = (middle, high) if missed(middle) > wanted else (low, middle)
+    return (low + high) / 2
+
+
+def flux_limit(looks: Looks, duty_cycle: float) -> float:
+    """The flux in median frame errors from which this duty cycle is excluded; NaN where the looks are too few."""
+
+    def excluded(flux: float) -> bool:
+        return bool(duty_limit(weights(looks, flux)) <= duty_cycle)
+
+    if looks.n == 0 or not excluded(HIGHEST_FLUX):
+        return float("nan")
+    low, high = 0.0, HIGHEST_FLUX
+    for _ in range(BISECTIONS):
+        middle = (low + high) / 2
+        low, high = (low, middle) if excluded(middle) else (middle, high)
+    return high
+
+
+def between(flux: float, fluxes: FloatArray, completeness: FloatArray) -> float:
+    """Completeness at a flux, linear in its logarithm between those of the grid (ascending, > 0); NaN outside them."""
+    known = fluxes > 0
+    if not (np.isfinite(flux) and flux > 0 and known.any()):
+        return float("nan")
+    return float(np.interp(np.log(flux), np.log(fluxes[known]), completeness[known], left=np.nan, right=np.nan))
+
+
+def summary_row(mine: Mask, outcome: Found, extra: Mapping[str, FloatArray]) -> dict[str, Any]:
+    """The counted columns of a cell whose sources are `mine`, shape (n,); medians of what `extra` holds of each source."""
+    n, k = int(mine.sum()), int(outcome.recovered[mine].sum())
+    low, high = jeffreys(k, n)
+    return {
+        "n_injected": n,
+        "n_recovered": k,
+        "completeness": k / n if n else float("nan"),
+        "completeness_low": low,
+        "completeness_high": high,
+        "n_seen": int(outcome.seen[mine].sum()),
+        "n_extrapolated": int((outcome.extrapolated & outcome.recovered)[mine].sum()),
+        "lowest_p": float(np.median(outcome.lowest_p[mine])) if n else float("nan"),
+    } | {name: float(np.median(values[mine])) if n else float("nan") for name, values in extra.items()}
