@@ -16,6 +16,7 @@ Array = NDArray[np.float64]
 Ints = NDArray[np.int64]
 ALIKE = 0.5  # what has at least this part of the candidate's flux is as bright
 GHOST_ALIKE = (0.4, 2.5)  # a ghost's flux in other frames over that in the bright one
+SPARE = 1.0  # sigma above the least S/N that are expected of what is to be seen
 MOST_STARS = 3  # brightest sources across the middle of the image that are tried as the ghost's origin
 
 
@@ -65,7 +66,7 @@ def seen_there(
     It does not count where the bright frame shows that sky as bright: that is another source.
     """
     frame, other = pairs.curve.frame[pairs.bright], pairs.curve.frame[pairs.other]
-    deep = alike[0] * np.abs(pairs.flux) >= min_snr * pairs.error
+    deep = np.abs(pairs.flux) >= (min_snr + SPARE) * pairs.error
     can = np.flatnonzero(deep & np.isfinite(x) & np.isfinite(y))
     tells, seen = np.zeros(len(x), bool), np.zeros(len(x), bool)
     sign, size = np.sign(pairs.flux[can]), np.abs(pairs.flux[can])
@@ -98,7 +99,7 @@ class DetectorFixed(ConsistencyCheck):
     )  # fmt: skip
     max_frames: int = setting(10, "at most so many bright frames, those furthest above the quiet level", minimum=1)
     each: int = setting(3, "frames that point elsewhere, for each bright one", minimum=1)
-    min_snr: float = setting(5.0, "least flux over error of what is seen", unit="sigma", minimum=3)
+    min_snr: float = setting(4.5, "least flux over error of what is seen", unit="sigma", minimum=3)
     share: float = setting(0.3, "fraction of the pairs that makes the check fail", minimum=0, maximum=1)
 
     def check(self, candidate: Candidate) -> Finding:
@@ -144,7 +145,7 @@ class Ghost(ConsistencyCheck):
     off_centre: float = setting(
         0.05, "how far the axis may be off the middle of the image, as a fraction of its side", minimum=0, maximum=0.5
     )
-    min_snr: float = setting(5.0, "least flux over error of what is seen", unit="sigma", minimum=3)
+    min_snr: float = setting(4.5, "least flux over error of what is seen", unit="sigma", minimum=3)
     share: float = setting(0.5, "fraction of the pairs that makes the check fail", minimum=0, maximum=1)
 
     def check(self, candidate: Candidate) -> Finding:

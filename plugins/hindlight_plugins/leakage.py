@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -136,7 +137,7 @@ def field_leakage(polarised: Block, total: Block) -> float:
             noise.append(error / light)
     if len(ratios) < FEWEST_STEADY:
         return float("nan")
-    return float(np.sqrt(max(0.0, np.mean(np.square(ratios)) - np.mean(np.square(noise)))))
+    return math.sqrt(max(0.0, float(np.mean(np.square(ratios)) - np.mean(np.square(noise)))))
 
 
 def _mean(curve: LightCurve) -> tuple[float, float]:

@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import ndimage
 
-from hindlight import Candidate, Column, ConsistencyCheck, Cutout, Finding, hookimpl, setting
+from hindlight import Candidate, Column, ConsistencyCheck, Cutout, Finding, beam_arcsec, hookimpl, setting
 
 Array = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -17,7 +17,9 @@ SIGMA_OF_FWHM = 0.42466090014400953  # 1 / sqrt(8 ln 2)
 HOUR_S = 3600.0
 MOST_PEAKS = 3  # of a neighbouring frame that are measured
 ALIKE = (0.5, 2.0)
+SPARE = 1.0  # sigma above the least S/N that are expected of a counterpart
 ON_TRACK = 1.0  # beams: how far from a straight, even track a counterpart may lie
+ELSEWHEN = 20  # frames in which the place of a counterpart must be dark: else it is a variable source
 GONE = 0.5  # the place has less than this part of the counterpart's flux when the candidate is bright
 
 
@@ -26,11 +28,11 @@ class Moving(ConsistencyCheck):
     """Whether frames of the same channel within `hours` of a bright one show a counterpart aside.
 
     A counterpart lies between one beam and `radius` beams from the position, is as bright as the candidate within a factor
-    of two, and the bright frame has nothing there. What smears by more than a beam in an exposure is no point, so no
-    counterpart is sought further away than a beam for each exposure time passed. The check fails if such counterparts lie
-    on one straight and even track in at least the fraction `share` of the frames that can tell. Uninformative where no
-    frame within `hours` in which the position is dark is deep enough. Objects that leave `radius` beams between frames
-    pass. Known objects are not looked up: that would need their ephemerides.
+    of two, and the bright frame and twenty others have nothing there. What smears by more than a beam in an exposure is no
+    point, so no counterpart is sought further away than a beam for each exposure time passed. The check fails if such
+    counterparts lie on one straight and even track in at least the fraction `share` of the frames that can tell.
+    Uninformative where no frame within `hours` in which the position is dark is deep enough. Objects that leave `radius`
+    beams between frames pass. Known objects are not looked up: that would need their ephemerides.
     """
 
     columns = (
@@ -44,7 +46,7 @@ class Moving(ConsistencyCheck):
     max_frames: int = setting(5, "at most so many bright frames, those furthest above the quiet level", minimum=1)
     each: int = setting(4, "frames near in time, for each bright one", minimum=1)
     min_snr: float = setting(6.0, "least flux over error of a counterpart", unit="sigma", minimum=4)
-    share: float = setting(0.5, "fraction of the frames that makes the check fail", minimum=0, maximum=1)
+    share: float = setting(0.6, "fraction of the frames that makes the check fail", minimum=0, maximum=1)
 
     def check(self, candidate: Candidate) -> Finding:
         """The finding for one candidate."""
@@ -86,11 +88,11 @@ class Moving(ConsistencyCheck):
             if bright is None or cutout is None:
                 continue
             lags.append(float(curve.t_tdb_s[other] - curve.t_tdb_s[row]))
-            limits.append(limit * beam(cutout))
+            limits.append(limit * beam_arcsec(cutout))
             places.append(self._counterparts(candidate, at, row, other, bright, cutout, limit))
         if not lags or bright is None:
             return 0, 0, float("nan")
-        return best_track(np.array(lags), np.array(limits), places, beam(bright))
+        return best_track(np.array(lags), np.array(limits), places, beam_arcsec(bright))
 
     def _near(self, candidate: Candidate, at: int, row: int) -> tuple[Ints, Array]:
         """Rows near in time that are dark and deep enough, and how many beams away a counterpart may lie in each."""
@@ -102,7 +104,7 @@ class Moving(ConsistencyCheck):
             reach = np.where(longest > 0, lag / longest, np.inf)
             reach = np.minimum(np.nan_to_num(reach, nan=np.inf), self.radius)
             can = ~candidate.bright[at] & (lag > 0) & (lag <= self.hours * HOUR_S) & (reach > 1.0)
-            can &= ALIKE[0] * size >= self.min_snr * curve.flux_err
+            can &= size >= (self.min_snr + SPARE) * curve.flux_err
         rows = np.flatnonzero(can)
         rows = rows[np.argsort(lag[rows], kind="stable")][: self.each]
         return rows, reach[rows]
@@ -121,15 +123,23 @@ class Moving(ConsistencyCheck):
         x, y = candidate.x[at][other] + offset[:, 0], candidate.y[at][other] + offset[:, 1]
         flux, error = candidate.images.measure(frame, x, y)
         before, _ = candidate.images.measure(back, *candidate.images.carried(frame, x, y, back))
+        on_pixel = np.hypot(x - candidate.x[at][row], y - candidate.y[at][row]) <= cutout.fwhm  # a fixed defect
         with np.errstate(invalid="ignore"):
             alike = (flux >= self.min_snr * error) & (flux >= ALIKE[0] * size) & (flux <= ALIKE[1] * size)
-            alike &= before < GONE * flux
+            alike &= (before < GONE * flux) & ~on_pixel
+        for i in np.flatnonzero(alike).tolist():
+            alike[i] = self._never_else(candidate, at, other, (float(x[i]), float(y[i])), GONE * float(flux[i]))
         return np.asarray(offset[alike] @ cutout.to_sky.T)
 
-
-def beam(cutout: Cutout) -> float:
-    """Width of the beam on the sky, arcsec."""
-    return float(cutout.fwhm * abs(np.linalg.det(cutout.to_sky)) ** 0.5)
+    def _never_else(self, candidate: Candidate, at: int, row: int, place: tuple[float, float], limit: float) -> bool:
+        """Whether the sky at a pixel of one frame is below a flux in others all over the light curve."""
+        frames = candidate.curves[at].frame
+        rows = np.unique(np.linspace(0, len(frames) - 1, min(len(frames), ELSEWHEN)).round().astype(np.int64))
+        others = frames[rows[rows != row]]
+        x, y = (np.full(len(others), value) for value in place)
+        there = candidate.images.carried(np.full(len(others), frames[row]), x, y, others)
+        flux, _ = candidate.images.measure(others, *there)
+        return not bool((flux[np.isfinite(flux)] >= limit).any())
 
 
 def peaks_of_difference(first: Cutout, second: Cutout, limit: float) -> Array:

@@ -6,9 +6,8 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import ndimage
 
-from hindlight import Candidate, Column, ConsistencyCheck, Cutout, Finding, hookimpl, setting
+from hindlight import Candidate, Column, ConsistencyCheck, Finding, beam_arcsec, hookimpl, mean_at, setting
 
 Array = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -96,16 +95,16 @@ class Neighbour(ConsistencyCheck):
         cutouts = [list(candidate.cutouts(frames, self.radius + 0.5)) for frames in (bright, quiet)]
         if not cutouts[0] or not cutouts[1]:
             return None
-        width = float(np.median([_beam(cutout) for cutout in cutouts[0]]))
+        width = float(np.median([beam_arcsec(cutout) for cutout in cutouts[0]]))
         steps = np.arange(-int(self.radius * STEPS), int(self.radius * STEPS) + 1) * width / STEPS
         grid = np.stack([axis.ravel() for axis in np.meshgrid(steps, steps)])
-        difference = sign * (_mean(cutouts[0], grid) - _mean(cutouts[1], grid))
+        difference = sign * (mean_at(cutouts[0], grid) - mean_at(cutouts[1], grid))
         far = np.hypot(*grid) / width
         around = (far >= INSIDE) & (far <= self.radius)
         if not np.isfinite(difference[around]).any():
             return None
         top = int(np.nanargmax(np.where(around, difference, np.nan)))
-        return grid[:, top], {c.frame: np.linalg.inv(c.to_sky) for some in cutouts for c in some}
+        return grid[:, top], {c.frame: np.asarray(np.linalg.inv(c.to_sky), float) for some in cutouts for c in some}
 
     def _measured(self, candidate: Candidate, at: int, rows: Ints, aside: dict[int, Array]) -> tuple[Array, Array]:
         """Flux and error that far aside in each frame, NaN where its cut-out could not be read."""
@@ -117,24 +116,6 @@ class Neighbour(ConsistencyCheck):
         x, y = candidate.x[at][mine] + off[known, 0], candidate.y[at][mine] + off[known, 1]
         flux[known], error[known] = candidate.images.measure(curve.frame[mine], x, y)
         return flux, error
-
-
-def _beam(cutout: Cutout) -> float:
-    return float(cutout.fwhm * abs(np.linalg.det(cutout.to_sky)) ** 0.5)
-
-
-def _mean(cutouts: list[Cutout], grid: Array) -> Array:
-    """Mean of cut-outs less their backgrounds at offsets (east, north) in arcsec, shape (2, n); NaN where none reaches."""
-    values = []
-    for cutout in cutouts:
-        x, y = np.linalg.inv(cutout.to_sky) @ grid
-        place = y + cutout.y, x + cutout.x
-        data = cutout.pixels - cutout.background
-        values.append(ndimage.map_coordinates(data, place, order=1, cval=np.nan))
-    whole = np.array(values)
-    known = np.isfinite(whole)
-    total = np.where(known, whole, 0.0).sum(axis=0)
-    return np.asarray(np.where(known.any(axis=0), total / np.maximum(1, known.sum(axis=0)), np.nan))
 
 
 @hookimpl

@@ -9,13 +9,15 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import optimize, special
 
-from hindlight import Candidate, Column, ConsistencyCheck, Cutout, Finding, hookimpl, setting
+from hindlight import Candidate, Column, ConsistencyCheck, Cutout, Finding, added, beam_arcsec, hookimpl, setting
 
 Array = NDArray[np.float64]
 SIGMA_OF_FWHM = 0.42466090014400953  # 1 / sqrt(8 ln 2)
 CIRCLE_95 = 2.4477468306808166  # radius that holds 95 % of a two-dimensional Gaussian, in sigma
 FEWEST_PIXELS = 6
 SMALLEST_RADIUS = 1.5  # pixels
+QUIET_FRAMES = 10  # that show what stands beside a candidate
+LEFT_OVER = 0.05  # beams by which a steady source as bright as the candidate shifts a centroid once it is taken off
 JULIAN_YEAR_S = 31557600.0
 FEWEST_TIMES = 3
 
@@ -156,24 +158,34 @@ def linear_motion(times: Array, offsets: Array, error: Array) -> tuple[Array, fl
 def bright_centroids(candidate: Candidate, min_snr: float, most: int, half_width: float) -> Array:
     """Frame, centroid east and north of the position, its error per axis and the beam in arcsec: shape (n, 5).
 
-    Of the bright frames of at least `min_snr`, at most `most`, those of highest flux over error first.
+    Of the bright frames of at least `min_snr`, at most `most`, those of highest flux over error first. Beside a steady
+    source it is the centroid of the light that is added to the quiet frames.
     """
     found = []
-    for curve, bright in zip(candidate.curves, candidate.bright, strict=True):
+    for at, (curve, bright) in enumerate(zip(candidate.curves, candidate.bright, strict=True)):
         snr = curve.flux / curve.flux_err
         snr = np.abs(snr) if curve.channel.signed else snr
         good = bright & (snr >= min_snr)
-        signed = curve.channel.signed
-        found += [(-float(s), int(f), signed) for s, f in zip(snr[good], curve.frame[good], strict=True)]
-    best = {frame: (-negative, signed) for negative, frame, signed in sorted(found)[:most]}
+        found += [(-float(s), int(f), at) for s, f in zip(snr[good], curve.frame[good], strict=True)]
+    best = {frame: (-negative, at) for negative, frame, at in sorted(found)[:most]}
+    quiet = {at: quiet_cutouts(candidate, at, half_width) for at in {at for _, at in best.values()}}
     rows = []
     for cutout in candidate.cutouts(np.array(list(best), dtype=np.int64), half_width) if best else ():
-        snr, signed = best[cutout.frame]
-        shift = centroid(cutout, signed=signed)
+        height, at = best[cutout.frame]
+        light, crowd = added(cutout, quiet[at])
+        shift = centroid(light, signed=candidate.curves[at].channel.signed)
         if shift is not None:
-            fwhm = cutout.fwhm * abs(float(np.linalg.det(cutout.to_sky))) ** 0.5
-            rows.append((cutout.frame, *(cutout.to_sky @ shift), centroid_error(fwhm, snr), fwhm))
+            fwhm = beam_arcsec(cutout)
+            error = math.hypot(centroid_error(fwhm, height), LEFT_OVER * crowd * fwhm)
+            rows.append((cutout.frame, *(cutout.to_sky @ shift), error, fwhm))
     return np.array(rows, float).reshape(-1, 5)
+
+
+def quiet_cutouts(candidate: Candidate, at: int, half_width: float) -> list[Cutout]:
+    """Cut-outs of some quiet frames of curve number `at`, evenly over it."""
+    frames = candidate.curves[at].frame[~candidate.bright[at]]
+    rows = np.linspace(0, len(frames) - 1, min(len(frames), QUIET_FRAMES)).round().astype(np.int64)
+    return list(candidate.cutouts(frames[np.unique(rows)], half_width)) if len(frames) else []
 
 
 def centroid(cutout: Cutout, *, signed: bool = False) -> Array | None:

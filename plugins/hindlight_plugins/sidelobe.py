@@ -21,6 +21,7 @@ SIDEREAL_DAY_S = 86164.0905
 FEWEST_DAYS = 3
 QUIET_FRAMES = 3  # in which the sky across is looked at
 ALIKE = (0.5, 2.0)
+SPARE = 1.0  # sigma above the least S/N that are expected of what is to be seen
 LOBE_OUTSIDE = 2.0  # beams: nearer to the candidate than this a source is the candidate
 
 
@@ -100,7 +101,7 @@ class Sidelobe(ConsistencyCheck):
         quiet = self._when_quiet(candidate, at, rows, place)
         with np.errstate(invalid="ignore"):
             above = np.abs(flux - quiet)
-            can = (ALIKE[0] * size >= self.min_snr * error) & np.isfinite(flux) & np.isfinite(quiet)
+            can = (size >= (self.min_snr + SPARE) * error) & np.isfinite(flux) & np.isfinite(quiet)
             hit = can & (above >= self.min_snr * error) & (above >= ALIKE[0] * size) & (above <= ALIKE[1] * size)
         return int(can.sum()), int(hit.sum())
 
@@ -125,8 +126,8 @@ class Sidelobe(ConsistencyCheck):
         for i, row in enumerate(rows.tolist()):
             lag = np.abs(curve.t_tdb_s[quiet] - curve.t_tdb_s[row])
             near = curve.frame[quiet[np.argsort(lag, kind="stable")][:QUIET_FRAMES]]
-            there = (np.full(len(near), value) for value in place[i])
-            same = candidate.images.carried(np.full(len(near), curve.frame[row]), *there, near)
+            x, y = (np.full(len(near), value) for value in place[i])
+            same = candidate.images.carried(np.full(len(near), curve.frame[row]), x, y, near)
             flux, _ = candidate.images.measure(near, *same)
             if np.isfinite(flux).any():
                 level[i] = np.nanmedian(flux)

@@ -3,6 +3,7 @@
 Everything a plugin needs is here and in `hindlight.testing`; other modules are the program's own.
 """
 
+from hindlight.cutouts import added, beam_arcsec, mean_at
 from hindlight.dates import between, greenwich_sidereal_s, read_angle, read_clock, read_date
 from hindlight.facts import Cards, FrameFacts, Moment, PlaneAxes
 from hindlight.headers import fold_unit
@@ -72,6 +73,8 @@ __all__ = [
     "PlaneAxes",
     "Stamps",
     "Statistic",
+    "added",
+    "beam_arcsec",
     "beam_of",
     "between",
     "comment_of",
@@ -82,6 +85,7 @@ __all__ = [
     "has_old_times",
     "hookimpl",
     "julian_instant",
+    "mean_at",
     "quiet_level",
     "read_angle",
     "read_clock",
