@@ -17,6 +17,7 @@ Ints = NDArray[np.int64]
 ALIKE = 0.5  # what has at least this part of the candidate's flux is as bright
 GHOST_ALIKE = (0.4, 2.5)  # a ghost's flux in other frames over that in the bright one
 SPARE = 1.0  # sigma above the least S/N that are expected of what is to be seen
+DROP = 5.0  # sigma below the quiet level at which something is gone
 MOST_STARS = 3  # brightest sources across the middle of the image that are tried as the ghost's origin
 
 
@@ -37,14 +38,28 @@ class Pairs:
     error: Array
 
 
+def lit(candidate: Candidate, at: int, most: int) -> tuple[Ints, float]:
+    """Rows of up to `most` frames in which curve number `at` is bright, brightest first, and its level when it is dark.
+
+    What is there in most frames and gone in some has no bright ones: then all but those count.
+    """
+    curve, bright = candidate.curves[at], candidate.bright[at]
+    level = curve.quiet_level[0]
+    dropped = curve.above_quiet < -DROP
+    if not bright.any() and dropped.any():
+        bright, level = ~dropped, float(np.median(curve.flux[dropped]))
+    rows = np.flatnonzero(bright)
+    excess = np.abs(curve.flux[rows] - level) / curve.flux_err[rows]
+    return rows[np.argsort(-excess, kind="stable")][:most], level
+
+
 def dithered_pairs(candidate: Candidate, at: int, most: int, each: int) -> Pairs | None:
     """Of curve number `at`, for up to `most` bright frames the `each` nearest in time that point elsewhere."""
     curve, x, y = candidate.curves[at], candidate.x[at], candidate.y[at]
-    if len(candidate.fwhm) <= at or not candidate.bright[at].any():
+    rows, level = lit(candidate, at, most)
+    if len(candidate.fwhm) <= at or len(rows) == 0:
         return None
     fwhm = candidate.fwhm[at]
-    rows = np.flatnonzero(candidate.bright[at])
-    rows = rows[np.argsort(-np.abs(curve.above_quiet[rows]), kind="stable")][:most]
     bright, other = [], []
     for row in rows.tolist():
         apart = np.hypot(x - x[row], y - y[row]) > np.maximum(fwhm, fwhm[row])
@@ -54,7 +69,7 @@ def dithered_pairs(candidate: Candidate, at: int, most: int, each: int) -> Pairs
         bright += [row] * len(chosen)
         other += chosen.tolist()
     first, second = np.array(bright, np.int64), np.array(other, np.int64)
-    flux = curve.flux[first] - curve.quiet_level[0]
+    flux = curve.flux[first] - level
     return Pairs(curve, x, y, first, second, flux, curve.flux_err[second])
 
 
@@ -152,9 +167,10 @@ class Ghost(ConsistencyCheck):
         """The finding for one candidate."""
         n_sources = n_bright = 0
         best = (0, 0)
+        sized = True
         for at, curve in enumerate(candidate.curves):
-            rows = np.flatnonzero(candidate.bright[at])
-            rows = rows[np.argsort(-np.abs(curve.above_quiet[rows]), kind="stable")][: self.max_frames]
+            rows, _ = lit(candidate, at, self.max_frames)
+            sized &= bool(np.isfinite(candidate.images.size(curve.frame[rows])).all())
             stars = {int(row): self._across(candidate, at, int(row)) for row in rows}
             n_bright += len(rows)
             n_sources += sum(len(found) > 0 for found in stars.values())
@@ -165,8 +181,8 @@ class Ghost(ConsistencyCheck):
                 best = max(best, self._tried(candidate, pairs, stars, rank), key=lambda pair: (pair[1], pair[0]))
         tested, seen = best
         values = {"n_tested": tested, "n_seen": seen, "n_sources": n_sources}
-        if n_bright == 0 or not np.isfinite(candidate.images.size(_bright_frames(candidate))).all():
-            return Finding("uninformative", "the size of the images is not known", values)
+        if n_bright == 0 or not sized:
+            return Finding("uninformative", "no frame is bright, or the size of the images is not known", values)
         if n_sources == 0:
             return Finding("pass", "no brighter source lies across the middle of the image in any bright frame", values)
         if tested == 0:
@@ -216,12 +232,6 @@ class Ghost(ConsistencyCheck):
 
 def _width(candidate: Candidate, at: int, row: int) -> float:
     return float(candidate.fwhm[at][row]) if len(candidate.fwhm) > at else 0.0
-
-
-def _bright_frames(candidate: Candidate) -> Ints:
-    return np.concatenate(
-        [curve.frame[bright] for curve, bright in zip(candidate.curves, candidate.bright, strict=True)]
-    )
 
 
 @hookimpl

@@ -146,10 +146,11 @@ def _mean(curve: LightCurve) -> tuple[float, float]:
 
 
 def constant_ratio(flux: Array, error: Array, total: Array, total_err: Array) -> float:
-    """Chance that flux = r total with one r, each to 5 % of itself besides its errors; NaN for fewer than two."""
-    if len(flux) < 2:
+    """Chance that flux = r total with one r, each to 5 % of itself besides its errors; NaN for fewer than two or no I."""
+    light = float((total**2 / error**2).sum())
+    if len(flux) < 2 or light == 0.0:
         return float("nan")
-    ratio = float((flux * total / error**2).sum() / (total**2 / error**2).sum())
+    ratio = float((flux * total / error**2).sum()) / light
     variance = error**2 + (ratio * total_err) ** 2 + (0.05 * flux) ** 2
     return float(special.chdtrc(len(flux) - 1, float(((flux - ratio * total) ** 2 / variance).sum())))
 

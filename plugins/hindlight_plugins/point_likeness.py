@@ -13,7 +13,18 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import optimize, special
 
-from hindlight import Candidate, Column, ConsistencyCheck, Cutout, Finding, LightCurve, added, hookimpl, setting
+from hindlight import (
+    Candidate,
+    Column,
+    ConsistencyCheck,
+    Cutout,
+    Finding,
+    LightCurve,
+    added,
+    hookimpl,
+    quiet_cutouts,
+    setting,
+)
 
 Array = NDArray[np.float64]
 SIGMA_OF_FWHM = 0.42466090014400953  # 1 / sqrt(8 ln 2)
@@ -21,7 +32,6 @@ PER_BEAM = "/beam"
 REACH = 1.5  # FWHM from the position within which pixels are fitted
 MOST = 2.5  # natural logarithm of the widest, and the narrowest, shape over the beam
 NUMBERS = 3  # that describe a shape
-QUIET_FRAMES = 10  # that show what stands beside a candidate
 LEFT_OVER = 0.1  # by which a steady source as bright as the candidate changes a shape once it is taken off
 
 
@@ -115,13 +125,6 @@ def _nothing(evidence: str) -> Finding:
 def _raw_snr(curve: LightCurve) -> Array:
     """Signal to noise by the pixels alone: the error of the flux scale does not blur a shape."""
     return np.asarray(curve.raw_flux / curve.raw_flux_err)
-
-
-def quiet_cutouts(candidate: Candidate, at: int, half_width: float) -> list[Cutout]:
-    """Cut-outs of some quiet frames of curve number `at`, evenly over it."""
-    frames = candidate.curves[at].frame[~candidate.bright[at]]
-    rows = np.linspace(0, len(frames) - 1, min(len(frames), QUIET_FRAMES)).round().astype(np.int64)
-    return list(candidate.cutouts(frames[np.unique(rows)], half_width)) if len(frames) else []
 
 
 def fitted_shape(cutout: Cutout) -> Array | None:

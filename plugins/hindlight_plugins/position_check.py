@@ -9,14 +9,24 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import optimize, special
 
-from hindlight import Candidate, Column, ConsistencyCheck, Cutout, Finding, added, beam_arcsec, hookimpl, setting
+from hindlight import (
+    Candidate,
+    Column,
+    ConsistencyCheck,
+    Cutout,
+    Finding,
+    added,
+    beam_arcsec,
+    hookimpl,
+    quiet_cutouts,
+    setting,
+)
 
 Array = NDArray[np.float64]
 SIGMA_OF_FWHM = 0.42466090014400953  # 1 / sqrt(8 ln 2)
 CIRCLE_95 = 2.4477468306808166  # radius that holds 95 % of a two-dimensional Gaussian, in sigma
 FEWEST_PIXELS = 6
 SMALLEST_RADIUS = 1.5  # pixels
-QUIET_FRAMES = 10  # that show what stands beside a candidate
 LEFT_OVER = 0.05  # beams by which a steady source as bright as the candidate shifts a centroid once it is taken off
 JULIAN_YEAR_S = 31557600.0
 FEWEST_TIMES = 3
@@ -179,13 +189,6 @@ def bright_centroids(candidate: Candidate, min_snr: float, most: int, half_width
             error = math.hypot(centroid_error(fwhm, height), LEFT_OVER * crowd * fwhm)
             rows.append((cutout.frame, *(cutout.to_sky @ shift), error, fwhm))
     return np.array(rows, float).reshape(-1, 5)
-
-
-def quiet_cutouts(candidate: Candidate, at: int, half_width: float) -> list[Cutout]:
-    """Cut-outs of some quiet frames of curve number `at`, evenly over it."""
-    frames = candidate.curves[at].frame[~candidate.bright[at]]
-    rows = np.linspace(0, len(frames) - 1, min(len(frames), QUIET_FRAMES)).round().astype(np.int64)
-    return list(candidate.cutouts(frames[np.unique(rows)], half_width)) if len(frames) else []
 
 
 def centroid(cutout: Cutout, *, signed: bool = False) -> Array | None:

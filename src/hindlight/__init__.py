@@ -3,7 +3,7 @@
 Everything a plugin needs is here and in `hindlight.testing`; other modules are the program's own.
 """
 
-from hindlight.cutouts import added, beam_arcsec, mean_at
+from hindlight.cutouts import added, beam_arcsec, mean_at, quiet_cutouts
 from hindlight.dates import between, greenwich_sidereal_s, read_angle, read_clock, read_date
 from hindlight.facts import Cards, FrameFacts, Moment, PlaneAxes
 from hindlight.headers import fold_unit
@@ -86,6 +86,7 @@ __all__ = [
     "hookimpl",
     "julian_instant",
     "mean_at",
+    "quiet_cutouts",
     "quiet_level",
     "read_angle",
     "read_clock",

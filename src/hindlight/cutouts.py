@@ -12,16 +12,24 @@ import numpy as np
 from scipy import ndimage
 
 from hindlight.lightcurve import FloatArray
-from hindlight.plugin import Cutout
+from hindlight.plugin import Candidate, Cutout
 
 RING = (0.7, 2.5)  # beams: where a steady source spoils centroid and shape
 SEEN = 4.0  # sigma that a steady source has in the mean of the quiet frames
+QUIET_FRAMES = 10
 SPOILS = 0.15  # a steady source of this part of the bright frame's height spoils them
 
 
 def beam_arcsec(cutout: Cutout) -> float:
     """Width of a cut-out's beam on the sky."""
     return float(cutout.fwhm * abs(np.linalg.det(cutout.to_sky)) ** 0.5)
+
+
+def quiet_cutouts(candidate: Candidate, at: int, half_width: float) -> list[Cutout]:
+    """Cut-outs of up to ten quiet frames of curve number `at` of a candidate, evenly over it."""
+    frames = candidate.curves[at].frame[~candidate.bright[at]]
+    rows = np.linspace(0, len(frames) - 1, min(len(frames), QUIET_FRAMES)).round().astype(np.int64)
+    return list(candidate.cutouts(frames[np.unique(rows)], half_width)) if len(frames) else []
 
 
 def mean_at(cutouts: Sequence[Cutout], offsets: FloatArray) -> FloatArray:
