@@ -15,12 +15,12 @@ Array = NDArray[np.float64]
 Ints = NDArray[np.int64]
 SIGMA_OF_FWHM = 0.42466090014400953  # 1 / sqrt(8 ln 2)
 HOUR_S = 3600.0
-MOST_PEAKS = 3  # of a neighbouring frame that are measured
+MOST_PEAKS = 6  # of a neighbouring frame that are measured
 ALIKE = (0.5, 2.0)
 SPARE = 1.0  # sigma above the least S/N that are expected of a counterpart
 ON_TRACK = 1.0  # beams: how far from a straight, even track a counterpart may lie
 ELSEWHEN = 20  # frames in which the place of a counterpart must be dark: else it is a variable source
-GONE = 0.5  # the place has less than this part of the counterpart's flux when the candidate is bright
+GONE = 0.5  # the place of a counterpart is never brighter in other frames by this part of what the counterpart adds
 
 
 @dataclass(frozen=True)
@@ -28,7 +28,7 @@ class Moving(ConsistencyCheck):
     """Whether frames of the same channel within `hours` of a bright one show a counterpart aside.
 
     A counterpart lies between one beam and `radius` beams from the position, is as bright as the candidate within a factor
-    of two, and the bright frame and twenty others have nothing there. What smears by more than a beam in an exposure is no
+    of two, and is new: neither in the bright frame nor in twenty others. What smears by more than a beam in an exposure is no
     point, so no counterpart is sought further away than a beam for each exposure time passed. The check fails if such
     counterparts lie on one straight and even track in at least the fraction `share` of the frames that can tell.
     Uninformative where no frame within `hours` in which the position is dark is deep enough. Objects that leave `radius`
@@ -125,21 +125,25 @@ class Moving(ConsistencyCheck):
         before, _ = candidate.images.measure(back, *candidate.images.carried(frame, x, y, back))
         on_pixel = np.hypot(x - candidate.x[at][row], y - candidate.y[at][row]) <= cutout.fwhm  # a fixed defect
         with np.errstate(invalid="ignore"):
-            alike = (flux >= self.min_snr * error) & (flux >= ALIKE[0] * size) & (flux <= ALIKE[1] * size)
-            alike &= (before < GONE * flux) & ~on_pixel
+            new = flux - before
+            alike = (new >= self.min_snr * error) & (new >= ALIKE[0] * size) & (new <= ALIKE[1] * size) & ~on_pixel
         for i in np.flatnonzero(alike).tolist():
-            alike[i] = self._never_else(candidate, at, other, (float(x[i]), float(y[i])), GONE * float(flux[i]))
+            alike[i] = self._never_else(candidate, at, other, (float(x[i]), float(y[i])), float(flux[i]))
         return np.asarray(offset[alike] @ cutout.to_sky.T)
 
-    def _never_else(self, candidate: Candidate, at: int, row: int, place: tuple[float, float], limit: float) -> bool:
-        """Whether the sky at a pixel of one frame is below a flux in others all over the light curve."""
+    def _never_else(self, candidate: Candidate, at: int, row: int, place: tuple[float, float], flux: float) -> bool:
+        """Whether the sky at a pixel of one frame stays near its level in frames all over the light curve."""
         frames = candidate.curves[at].frame
         rows = np.unique(np.linspace(0, len(frames) - 1, min(len(frames), ELSEWHEN)).round().astype(np.int64))
         others = frames[rows[rows != row]]
         x, y = (np.full(len(others), value) for value in place)
         there = candidate.images.carried(np.full(len(others), frames[row]), x, y, others)
-        flux, _ = candidate.images.measure(others, *there)
-        return not bool((flux[np.isfinite(flux)] >= limit).any())
+        found, _ = candidate.images.measure(others, *there)
+        found = found[np.isfinite(found)]
+        if len(found) == 0:
+            return True
+        level = float(np.median(found))
+        return bool((found - level < GONE * (flux - level)).all())
 
 
 def peaks_of_difference(first: Cutout, second: Cutout, limit: float) -> Array:
@@ -152,7 +156,7 @@ def peaks_of_difference(first: Cutout, second: Cutout, limit: float) -> Array:
     offset = np.stack((x - second.x, y - second.y))
     in_first = np.linalg.inv(first.to_sky) @ second.to_sky @ offset.reshape(2, -1)
     rows, columns = in_first[1] + first.y, in_first[0] + first.x
-    before = ndimage.map_coordinates(smooth[0], (rows, columns), order=1, cval=0.0).reshape(x.shape)
+    before = ndimage.map_coordinates(smooth[0], (rows, columns), order=3, cval=0.0).reshape(x.shape)
     difference = smooth[1] - before
     distance = np.hypot(*offset) / second.fwhm
     side = 2 * max(1, round(second.fwhm / 2)) + 1
@@ -179,7 +183,7 @@ def best_track(lags: Array, limits: Array, places: list[Array], width: float) ->
             speed = place / lag
             expected = lags[:, None] * speed
             far = np.hypot(*expected.T)
-            within = (far >= width) & (far <= limits)
+            within = (far >= width) & (far <= limits - width / 2)
             seen = [
                 len(some) > 0 and float(np.hypot(*(some - where).T).min()) <= ON_TRACK * width
                 for some, where in zip(places, expected, strict=True)
