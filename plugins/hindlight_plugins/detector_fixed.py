@@ -1,6 +1,6 @@
 """Is it fixed to the detector, or a ghost? The pixels of a candidate's bright frames in frames that point elsewhere.
 
-Both checks need pointings that differ by more than a beam: what stays on one pixel cannot be told from the sky else.
+Both checks need pointings that differ by more than 1.5 beams: what stays on one pixel cannot be told from the sky else.
 """
 
 from __future__ import annotations
@@ -17,13 +17,14 @@ Ints = NDArray[np.int64]
 ALIKE = 0.5  # what has at least this part of the candidate's flux is as bright
 GHOST_ALIKE = (0.4, 2.5)  # a ghost's flux in other frames over that in the bright one
 SPARE = 1.0  # sigma above the least S/N that are expected of what is to be seen
+ELSEWHERE = 1.5  # beams: nearer by, a bright candidate would be seen at its old pixel by its own wing
 DROP = 5.0  # sigma below the quiet level at which something is gone
 MOST_STARS = 3  # brightest sources across the middle of the image that are tried as the ghost's origin
 
 
 @dataclass(frozen=True, eq=False)
 class Pairs:
-    """Bright frames of one channel, each with some frames in which the target lies more than a beam away on the detector.
+    """Bright frames of one channel, each with some frames in which the target lies more than 1.5 beams away.
 
     `bright` and `other` are rows of the curve, `flux` is what the target is above its quiet level, `error` that of its
     flux in the other frame; all of shape (n,).
@@ -62,7 +63,7 @@ def dithered_pairs(candidate: Candidate, at: int, most: int, each: int) -> Pairs
     fwhm = candidate.fwhm[at]
     bright, other = [], []
     for row in rows.tolist():
-        apart = np.hypot(x - x[row], y - y[row]) > np.maximum(fwhm, fwhm[row])
+        apart = np.hypot(x - x[row], y - y[row]) > ELSEWHERE * np.maximum(fwhm, fwhm[row])
         elsewhere = np.flatnonzero(apart)
         lag = np.abs(curve.t_tdb_s[elsewhere] - curve.t_tdb_s[row])
         chosen = elsewhere[np.argsort(lag, kind="stable")][:each]
@@ -102,7 +103,7 @@ class DetectorFixed(ConsistencyCheck):
     """Whether the pixel of a bright frame is as bright in frames that point elsewhere.
 
     It fails if at least the fraction `share` of those frames shows it. They are the ones nearest in time, so that what
-    comes and goes with the seasons is found. Uninformative where pointings never differ by more than a beam, or where
+    comes and goes with the seasons is found. Uninformative where pointings never differ by more than 1.5 beams, or where
     frames that do are not deep enough. A defect of one frame only (a cosmic ray) passes.
     """
 
@@ -132,7 +133,11 @@ class DetectorFixed(ConsistencyCheck):
                 where = f" (pixel {np.median(x[hit]):.0f}, {np.median(y[hit]):.0f} of {pairs.curve.channel.label})"
         values = {"n_tested": tested, "n_seen": seen}
         if tested == 0:
-            return Finding("uninformative", "no frame that is deep enough points elsewhere by more than a beam", values)
+            return Finding(
+                "uninformative",
+                "no frame that is deep enough points elsewhere by more than 1.5 beams",
+                values,
+            )
         evidence = f"in {seen} of {tested} frames that point elsewhere the pixel of a bright frame is as bright{where}"
         return Finding("fail" if seen > 0 and seen >= self.share * tested else "pass", evidence, values)
 
@@ -144,7 +149,7 @@ class Ghost(ConsistencyCheck):
     Of each bright frame the sources near the place across the middle that are at least `brighter` times the
     candidate's S/N are tried: in frames that point elsewhere the reflection moves the other way. It fails if at least
     the fraction `share` of those shows it, for one source. Passes where no such source is there; uninformative where there
-    is one and pointings never differ by more than a beam. Ghosts that are not reflected at a point are not found.
+    is one and pointings never differ by more than 1.5 beams. Ghosts that are not reflected at a point are not found.
     """
 
     columns = (
@@ -189,7 +194,7 @@ class Ghost(ConsistencyCheck):
             return Finding(
                 "uninformative",
                 f"a brighter source lies across the middle of the image in {n_sources} bright frames, and no frame that "
-                "is deep enough points elsewhere by more than a beam",
+                "is deep enough points elsewhere by more than 1.5 beams",
                 values,
             )
         evidence = (

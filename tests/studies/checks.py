@@ -63,7 +63,7 @@ def main() -> int:
         found = collected(make, many, checks)
         concerned = sum("fail" in answer.values() for answer in found)
         by = Counter(k for answer in found for k, v in answer.items() if v == "fail")
-        power = {k: sum(answer[k] != "uninformative" for answer in found) for k in found[0]}
+        power = {check.name: sum(a[check.name] != "uninformative" for a in found) for check in checks}
         met &= concerned <= limit
         print(f"{name}: {concerned} of {many} carry a concern {dict(by)}; informative: {power}", flush=True)
     print("met" if met else "NOT met")
