@@ -146,8 +146,8 @@ class DetectorFixed(ConsistencyCheck):
 class Ghost(ConsistencyCheck):
     """Whether a candidate is the reflection of a bright source across the middle of the image.
 
-    Of each bright frame the sources near the place across the middle that are at least `brighter` times the
-    candidate's S/N are tried: in frames that point elsewhere the reflection moves the other way. It fails if at least
+    Of each bright frame the sources near the place across the middle that are at least `brighter` times as
+    high as the candidate are tried: in frames that point elsewhere the reflection moves the other way. It fails if at least
     the fraction `share` of those shows it, for one source. Passes where no such source is there; uninformative where there
     is one and pointings never differ by more than 1.5 beams. Ghosts that are not reflected at a point are not found.
     """
@@ -161,7 +161,7 @@ class Ghost(ConsistencyCheck):
     )  # fmt: skip
     max_frames: int = setting(5, "at most so many bright frames, those furthest above the quiet level", minimum=1)
     each: int = setting(3, "frames that point elsewhere, for each bright one", minimum=1)
-    brighter: float = setting(5.0, "least S/N of the source, in terms of the candidate's", minimum=1)
+    brighter: float = setting(5.0, "least height of the source, in terms of the candidate's", minimum=1)
     off_centre: float = setting(
         0.05, "how far the axis may be off the middle of the image, as a fraction of its side", minimum=0, maximum=0.5
     )
@@ -208,10 +208,9 @@ class Ghost(ConsistencyCheck):
         curve = candidate.curves[at]
         frame = int(curve.frame[row])
         width, height = (float(size[0]) for size in candidate.images.size(curve.frame[row : row + 1]))
-        snr = self.brighter * abs(float(curve.flux[row] / curve.flux_err[row]))
         if not np.isfinite(width):
             return np.empty((0, 2))
-        x, y, height_snr = candidate.images.sources(frame, snr)
+        x, y, height_snr = candidate.images.sources(frame, self.brighter * _height(candidate, curve, row))
         off = np.hypot(x - (width - 1 - candidate.x[at][row]), y - (height - 1 - candidate.y[at][row]))
         # The source is no reflection of itself, and the axis' distance from the middle counts twice.
         itself = np.hypot(x - candidate.x[at][row], y - candidate.y[at][row]) <= 2 * _width(candidate, at, row)
@@ -233,6 +232,17 @@ class Ghost(ConsistencyCheck):
         y = pairs.y[pairs.bright] + star[:, 1] - there[1]
         tells, hit = seen_there(candidate, pairs, x, y, self.min_snr, GHOST_ALIKE)
         return int(tells.sum()), int(hit.sum())
+
+
+def _height(candidate: Candidate, curve: LightCurve, row: int) -> float:
+    """The candidate's highest pixel within a beam over the noise of a pixel; its flux over error without a cut-out."""
+    for cutout in candidate.cutouts(curve.frame[row : row + 1], 1.0):
+        y, x = np.indices(cutout.pixels.shape)
+        near = np.hypot(x - cutout.x, y - cutout.y) <= cutout.fwhm
+        found = np.abs(cutout.pixels - cutout.background)[near]
+        if np.isfinite(found).any() and cutout.rms > 0:
+            return float(np.nanmax(found)) / cutout.rms
+    return abs(float(curve.flux[row] / curve.flux_err[row]))
 
 
 def _width(candidate: Candidate, at: int, row: int) -> float:
