@@ -15,9 +15,10 @@ from hindlight_plugins.across_bands import AcrossBands, mean_index, spectral_ind
 from hindlight_plugins.detector_fixed import DetectorFixed, Ghost
 from hindlight_plugins.leakage import Leakage
 from hindlight_plugins.moving import Moving, best_track
+from hindlight_plugins.point_likeness import PointLikeness
 from hindlight_plugins.position_check import CIRCLE_95, ProperMotion, linear_motion
 from hindlight_plugins.sidelobe import Sidelobe, fisher
-from planted import FIRST_FRAME, PLANTED, Field, blank_field, clean, defect, ghost, moving, sidelobe
+from planted import FIRST_FRAME, PLANTED, Field, blank_field, clean, defect, ghost, moving, short_pulse, sidelobe
 
 CHECKS: tuple[ConsistencyCheck, ...] = host.load(host.PluginSpec()).checks
 
@@ -50,11 +51,11 @@ def test_clean_variables_carry_no_concern() -> None:
     assert [concerns(candidate) for candidate in bright_ones(clean, 10)] == [[]] * 10
 
 
-def without_dither(make, seed: int) -> Field:
-    """A field with every pointing alike."""
-    made = make(seed)
-    made.pointing[:] = 0.0
-    return made
+def test_short_pulses_in_long_syntheses_carry_no_concern() -> None:
+    """A 30 s pulse in an image of 2 min is no point there, and no check takes that for a flaw."""
+    for candidate in bright_ones(short_pulse, 4):
+        assert concerns(candidate) == []
+        assert PointLikeness().check(candidate).verdict == "uninformative"
 
 
 def test_what_never_dithered_is_not_known() -> None:

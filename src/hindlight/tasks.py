@@ -41,6 +41,7 @@ from hindlight.systems import BadWcsError, NoCelestialError, unit_vectors
 
 JULIAN_YEAR_S = 31557600.0
 MOST_ANCHORS = 100  # comparisons of a frame that tell its shift
+SOURCE_SNR = 20.0  # whole frames are searched for sources once, down to this or what a check asks for
 NEAREST_COMPARISONS = 30  # that a consistency check is given
 UNREADABLE = (SetAsideError, OSError, ValueError, HindlightError)  # what reading a frame again may end in
 FRAME_WIDE = ("shift_x", "shift_y", "fwhm")  # columns of measurements that are the same all over a frame
@@ -484,7 +485,7 @@ class FrameImages(Images):
         self.tables = book(order.run, order.version)
         found, first = np.unique(rows["frame"], return_index=True)
         self.own = {int(frame): {n: rows[n][i] for n in FRAME_WIDE} for frame, i in zip(found, first, strict=True)}
-        self.found: dict[tuple[int, float], tuple[FloatArray, FloatArray, FloatArray]] = {}
+        self.found: dict[int, tuple[float, FloatArray]] = {}  # sources of frames, and down to which S/N
 
     def size(self, frames: IntArray) -> tuple[FloatArray, FloatArray]:
         """Pixels along x and y."""
@@ -525,11 +526,15 @@ class FrameImages(Images):
 
     def sources(self, frame: int, snr: float) -> tuple[FloatArray, FloatArray, FloatArray]:
         """x, y and S/N of the sources of one frame."""
-        if (frame, snr) not in self.found:
-            self.found[frame, snr] = super().sources(frame, snr)
+        if frame not in self.found or self.found[frame][0] > snr:
+            least = min(snr, SOURCE_SNR)
+            self.found[frame] = least, np.empty((3, 0))
             with suppress(*UNREADABLE):
-                self.found[frame, snr] = photometry.bright_pixels(self._facts(frame), snr, self.order.settings)
-        return self.found[frame, snr]
+                found = photometry.bright_pixels(self._facts(frame), least, self.order.settings)
+                self.found[frame] = least, np.stack(found)
+        x, y, height = self.found[frame][1]
+        above = height > snr
+        return x[above], y[above], height[above]
 
     def _rows(self, frames: IntArray) -> IntArray:
         return np.array([self.tables.row_of_frame[int(frame)] for frame in frames], np.int64)
