@@ -18,6 +18,7 @@ ALIKE = 0.5  # what has at least this part of the candidate's flux is as bright
 GHOST_ALIKE = (0.4, 2.5)  # a ghost's flux in other frames over that in the bright one
 SPARE = 1.0  # sigma above the least S/N that are expected of what is to be seen
 ELSEWHERE = 1.5  # beams: nearer by, a bright candidate would be seen at its old pixel by its own wing
+ELSEWHEN = 20  # frames that show what is usually there
 DROP = 5.0  # sigma below the quiet level at which something is gone
 MOST_STARS = 3  # brightest sources across the middle of the image that are tried as the ghost's origin
 
@@ -79,7 +80,8 @@ def seen_there(
 ) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
     """Which pairs can tell, and in which of them the other frame shows as bright a thing at its pixel (x, y).
 
-    It does not count where the bright frame shows that sky as bright: that is another source.
+    It does not count where the bright frame shows that sky as bright: that is another source. Where the bright frame does
+    not show it the median of frames all over the curve decides.
     """
     frame, other = pairs.curve.frame[pairs.bright], pairs.curve.frame[pairs.other]
     deep = np.abs(pairs.flux) >= (min_snr + SPARE) * pairs.error
@@ -87,15 +89,28 @@ def seen_there(
     tells, seen = np.zeros(len(x), bool), np.zeros(len(x), bool)
     sign, size = np.sign(pairs.flux[can]), np.abs(pairs.flux[can])
     flux, error = candidate.images.measure(other[can], x[can], y[can])
+    with np.errstate(invalid="ignore"):
+        hit = (sign * flux >= min_snr * error) & (sign * flux >= alike[0] * size) & (sign * flux <= alike[1] * size)
     back = candidate.images.carried(other[can], x[can], y[can], frame[can])
     same_sky, _ = candidate.images.measure(frame[can], *back)
-    known = np.isfinite(flux) & np.isfinite(same_sky)
+    for i in np.flatnonzero(hit & ~np.isfinite(same_sky)).tolist():
+        same_sky[i] = usual_flux(candidate, pairs.curve, int(other[can[i]]), float(x[can[i]]), float(y[can[i]]))
     with np.errstate(invalid="ignore"):
-        is_source = sign * same_sky >= ALIKE * np.maximum(alike[0] * size, np.abs(flux))
-        hit = (sign * flux >= min_snr * error) & (sign * flux >= alike[0] * size) & (sign * flux <= alike[1] * size)
-    tells[can] = known & ~is_source
-    seen[can] = known & ~is_source & hit
+        is_source = sign * same_sky >= ALIKE * np.abs(flux)
+    tells[can] = np.isfinite(flux) & (~hit | (np.isfinite(same_sky) & ~is_source))
+    seen[can] = hit & np.isfinite(same_sky) & ~is_source
     return tells, seen
+
+
+def usual_flux(candidate: Candidate, curve: LightCurve, frame: int, x: float, y: float) -> float:
+    """Median flux, in frames all over a curve, of the sky at a pixel of one frame; NaN where none shows it."""
+    rows = np.unique(np.linspace(0, len(curve) - 1, min(len(curve), ELSEWHEN)).round().astype(np.int64))
+    others = curve.frame[rows]
+    others = others[others != frame]
+    here = (np.full(len(others), frame), np.full(len(others), x), np.full(len(others), y))
+    flux, _ = candidate.images.measure(others, *candidate.images.carried(*here, others))
+    flux = flux[np.isfinite(flux)]
+    return float(np.median(flux)) if len(flux) else float("nan")
 
 
 @dataclass(frozen=True)
