@@ -46,6 +46,9 @@ class Moving(ConsistencyCheck):
     max_frames: int = setting(5, "at most so many bright frames, those furthest above the quiet level", minimum=1)
     each: int = setting(4, "frames near in time, for each bright one", minimum=1)
     min_snr: float = setting(6.0, "least flux over error of a counterpart", unit="sigma", minimum=4)
+    lone_snr: float = setting(
+        7.5, "least flux over error of a counterpart seen in one frame only", unit="sigma", minimum=4
+    )
     share: float = setting(0.6, "fraction of the frames that makes the check fail", minimum=0, maximum=1)
 
     def check(self, candidate: Candidate) -> Finding:
@@ -74,6 +77,11 @@ class Moving(ConsistencyCheck):
 
     def _track(self, candidate: Candidate, at: int, row: int) -> tuple[int, int, float]:
         """Frames that can tell, those with a counterpart on the best track, and its rate, for one bright frame."""
+        found = self._best(candidate, at, row, self.min_snr)
+        return self._best(candidate, at, row, self.lone_snr) if found[1] == 1 else found
+
+    def _best(self, candidate: Candidate, at: int, row: int, min_snr: float) -> tuple[int, int, float]:
+        """The same, with counterparts of at least this flux over error."""
         near, reach = self._near(candidate, at, row)
         if len(near) == 0:
             return 0, 0, float("nan")
@@ -89,7 +97,7 @@ class Moving(ConsistencyCheck):
                 continue
             lags.append(float(curve.t_tdb_s[other] - curve.t_tdb_s[row]))
             limits.append(limit * beam_arcsec(cutout))
-            places.append(self._counterparts(candidate, at, row, other, bright, cutout, limit))
+            places.append(self._counterparts(candidate, at, row, other, bright, cutout, limit, min_snr))
         if not lags or bright is None:
             return 0, 0, float("nan")
         return best_track(np.array(lags), np.array(limits), places, beam_arcsec(bright))
@@ -110,8 +118,9 @@ class Moving(ConsistencyCheck):
         return rows, reach[rows]
 
     def _counterparts(
-        self, candidate: Candidate, at: int, row: int, other: int, bright: Cutout, cutout: Cutout, limit: float
-    ) -> Array:
+        self, candidate: Candidate, at: int, row: int, other: int, bright: Cutout, cutout: Cutout, limit: float,
+        min_snr: float,
+    ) -> Array:  # fmt: skip
         """(east, north) arcsec of what is as bright in the other frame and not there in the bright one, shape (n, 2)."""
         curve = candidate.curves[at]
         size = float(curve.flux[row] - curve.quiet_level[0])
@@ -126,7 +135,7 @@ class Moving(ConsistencyCheck):
         on_pixel = np.hypot(x - candidate.x[at][row], y - candidate.y[at][row]) <= cutout.fwhm  # a fixed defect
         with np.errstate(invalid="ignore"):
             new = flux - before
-            alike = (new >= self.min_snr * error) & (new >= ALIKE[0] * size) & (new <= ALIKE[1] * size) & ~on_pixel
+            alike = (new >= min_snr * error) & (new >= ALIKE[0] * size) & (new <= ALIKE[1] * size) & ~on_pixel
         for i in np.flatnonzero(alike).tolist():
             alike[i] = self._never_else(candidate, at, other, (float(x[i]), float(y[i])), float(flux[i]))
         return np.asarray(offset[alike] @ cutout.to_sky.T)
