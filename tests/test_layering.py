@@ -13,8 +13,8 @@ SOURCE = Path(hindlight.__file__).parent
 PLUGINS = Path(hindlight_plugins.__file__).parent
 
 ORDER = [
-    "errors", "schema", "facts", "blocks", "settings", "dates", "lightcurve", "plugin", "hookspecs", "tables", "host",
-    "fence", "clock", "systems", "celestial", "sky", "headers", "reading", "goodtime", "knowledge", "files",
+    "errors", "schema", "facts", "blocks", "settings", "dates", "lightcurve", "plugin", "cutouts", "hookspecs", "tables",
+    "host", "fence", "clock", "systems", "celestial", "sky", "headers", "reading", "goodtime", "knowledge", "files",
     "companions", "channels", "outlines", "footprints", "archive", "summary", "positions", "apart", "pixels",
     "background", "detection", "pointing", "growth", "photometry", "planted", "duplicates", "robust", "losses", "response",
     "ensemble", "store", "judge", "calibrate", "ranking", "lifted", "search", "timing", "injection", "completeness",

@@ -13,7 +13,18 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import optimize, special
 
-from hindlight import Candidate, Column, ConsistencyCheck, Cutout, Finding, LightCurve, hookimpl, setting
+from hindlight import (
+    Candidate,
+    Column,
+    ConsistencyCheck,
+    Cutout,
+    Finding,
+    LightCurve,
+    added,
+    hookimpl,
+    quiet_cutouts,
+    setting,
+)
 
 Array = NDArray[np.float64]
 SIGMA_OF_FWHM = 0.42466090014400953  # 1 / sqrt(8 ln 2)
@@ -21,6 +32,7 @@ PER_BEAM = "/beam"
 REACH = 1.5  # FWHM from the position within which pixels are fitted
 MOST = 2.5  # natural logarithm of the widest, and the narrowest, shape over the beam
 NUMBERS = 3  # that describe a shape
+LEFT_OVER = 0.1  # by which a steady source as bright as the candidate changes a shape once it is taken off
 
 
 @dataclass(frozen=True)
@@ -59,30 +71,33 @@ class PointLikeness(ConsistencyCheck):
                 "every channel is synthesised: a source that was on for a part of an image is no point there"
             )
         bright = self._bright_frames(candidate)
+        quiet = {at: quiet_cutouts(candidate, at, self.half_width) for at in {at for _, at in bright.values()}}
         shapes, errors, blurred = [], [], 0
         for cutout in candidate.cutouts(np.array(list(bright), dtype=np.int64), self.half_width) if bright else ():
             if not cutout.fwhm_known or cutout.fwhm < self.min_fwhm:
                 blurred += 1
                 continue
-            shape = fitted_shape(cutout)
+            snr, at = bright[cutout.frame]
+            light, crowd = added(cutout, quiet[at])
+            shape = fitted_shape(light)
             if shape is not None:
                 shapes.append(shape)
-                errors.append(shape_error(bright[cutout.frame]))
+                errors.append(math.hypot(shape_error(snr), LEFT_OVER * crowd))
         if not shapes:
             why = f", {blurred} with a beam that is only assumed or below {self.min_fwhm:g} pixels" if blurred else ""
             return _nothing(f"{len(bright)} bright frames of {self.min_snr:g} sigma{why}: none shows a shape")
         return self._judge(np.array(shapes), np.array(errors))
 
-    def _bright_frames(self, candidate: Candidate) -> dict[int, float]:
-        """Signal to noise of each bright frame that may show a shape, best first."""
+    def _bright_frames(self, candidate: Candidate) -> dict[int, tuple[float, int]]:
+        """Signal to noise of each bright frame that may show a shape, and its curve's number, best first."""
         found = []
-        for curve, bright in zip(candidate.curves, candidate.bright, strict=True):
+        for at, (curve, bright) in enumerate(zip(candidate.curves, candidate.bright, strict=True)):
             if curve.channel.signed or curve.channel.unit.endswith(PER_BEAM):
                 continue
             snr = _raw_snr(curve)
             good = bright & (snr >= self.min_snr)
-            found += [(-float(s), int(f)) for s, f in zip(snr[good], curve.frame[good], strict=True)]
-        return {frame: -negative for negative, frame in sorted(found)[: self.max_frames]}
+            found += [(-float(s), int(f), at) for s, f in zip(snr[good], curve.frame[good], strict=True)]
+        return {frame: (-negative, at) for negative, frame, at in sorted(found)[: self.max_frames]}
 
     def _judge(self, shapes: Array, errors: Array) -> Finding:
         """The finding from shapes of shape (n, 3), see `fitted_shape`, and their errors of shape (n,)."""

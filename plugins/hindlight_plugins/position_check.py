@@ -1,4 +1,4 @@
-"""Does the light come from where the candidate is? Centroids of its bright frames against its position."""
+"""Does the light come from where the candidate is, and does it stay there? Centroids of its bright frames."""
 
 from __future__ import annotations
 
@@ -9,13 +9,27 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import optimize, special
 
-from hindlight import Candidate, Column, ConsistencyCheck, Cutout, Finding, hookimpl, setting
+from hindlight import (
+    Candidate,
+    Column,
+    ConsistencyCheck,
+    Cutout,
+    Finding,
+    added,
+    beam_arcsec,
+    hookimpl,
+    quiet_cutouts,
+    setting,
+)
 
 Array = NDArray[np.float64]
 SIGMA_OF_FWHM = 0.42466090014400953  # 1 / sqrt(8 ln 2)
 CIRCLE_95 = 2.4477468306808166  # radius that holds 95 % of a two-dimensional Gaussian, in sigma
 FEWEST_PIXELS = 6
 SMALLEST_RADIUS = 1.5  # pixels
+LEFT_OVER = 0.05  # beams by which a steady source as bright as the candidate shifts a centroid once it is taken off
+JULIAN_YEAR_S = 31557600.0
+FEWEST_TIMES = 3
 
 
 @dataclass(frozen=True)
@@ -44,31 +58,13 @@ class Position(ConsistencyCheck):
 
     def check(self, candidate: Candidate) -> Finding:
         """The finding for one candidate."""
-        bright = self._bright_frames(candidate)
-        rows = []
-        for cutout in candidate.cutouts(np.array(list(bright), dtype=np.int64), self.half_width) if bright else ():
-            snr, signed = bright[cutout.frame]
-            shift = centroid(cutout, signed=signed)
-            if shift is not None:
-                fwhm = cutout.fwhm * abs(float(np.linalg.det(cutout.to_sky))) ** 0.5
-                rows.append((*(cutout.to_sky @ shift), centroid_error(fwhm, snr), fwhm))
-        if not rows:
+        rows = bright_centroids(candidate, self.min_snr, self.max_frames, self.half_width)
+        if len(rows) == 0:
             values = {"offset": float("nan"), "chi2_scatter": float("nan"), "p": float("nan"), "n_frames": 0}
             return Finding("uninformative", f"no bright frame of {self.min_snr:g} sigma has a centroid", values)
-        east, north, error, fwhm = np.array(rows).T
+        _, east, north, error, fwhm = rows.T
         known_to = math.hypot(self.target_err, candidate.place_err)
         return self._judge(np.stack((east, north), axis=1), error, fwhm, known_to)
-
-    def _bright_frames(self, candidate: Candidate) -> dict[int, tuple[float, bool]]:
-        """Signal to noise, and whether it may be negative, of each bright frame that carries a position, best first."""
-        found = []
-        for curve, bright in zip(candidate.curves, candidate.bright, strict=True):
-            snr = curve.flux / curve.flux_err
-            snr = np.abs(snr) if curve.channel.signed else snr
-            good = bright & (snr >= self.min_snr)
-            signed = curve.channel.signed
-            found += [(-float(s), int(f), signed) for s, f in zip(snr[good], curve.frame[good], strict=True)]
-        return {frame: (-negative, signed) for negative, frame, signed in sorted(found)[: self.max_frames]}
 
     def _judge(self, offsets: Array, error: Array, fwhm: Array, known_to: float = 0.0) -> Finding:
         """The finding from offsets of shape (n, 2), their errors per axis and beams, shape (n,), all in arcsec.
@@ -99,6 +95,100 @@ class Position(ConsistencyCheck):
         both = -math.expm1(len(p) * math.log1p(-min(*p, 1 - 1e-16)))
         values = {"offset": distance, "chi2_scatter": scatter, "p": both, "n_frames": n}
         return Finding("fail" if both < self.level else "pass", f"{evidence} (p = {both:.2g})", values)
+
+
+@dataclass(frozen=True)
+class ProperMotion(ConsistencyCheck):
+    """Whether the centroids of the bright frames move: a straight line in time against one place.
+
+    Needs at least three times. A motion that a straight line describes and that is significant within a year is of a
+    body of the Solar System: the check fails. Over longer spans a motion is information, that of a near star. Where
+    centroids scatter beyond a straight line, or there are too few, the check is uninformative; `position` judges scatter.
+    """
+
+    columns = (
+        Column("ra_cosdec", "motion of the centroids along ra times cos dec", unit="arcsec/yr",
+               ucd="pos.pm;pos.eq.ra"),
+        Column("dec", "motion of the centroids along dec", unit="arcsec/yr", ucd="pos.pm;pos.eq.dec"),
+        Column("err", "1-sigma error of either", unit="arcsec/yr", ucd="stat.error;pos.pm"),
+        Column("delta_chi2", "chi-square that the motion explains, 2 degrees of freedom", ucd="stat.fit.chi2"),
+        Column("p", "chance of so large a motion", ucd="stat.probability"),
+        Column("span", "from the first to the last centroid", unit="yr", ucd="time.interval"),
+        Column("n_frames", "bright frames with a centroid and a time", dtype="int64", ucd="meta.number;obs"),
+    )  # fmt: skip
+    min_snr: float = setting(5.0, "least flux over error of a frame whose centroid counts", unit="sigma", minimum=3)
+    max_frames: int = setting(30, "at most so many frames, those of highest flux over error", minimum=3)
+    floor: float = setting(0.05, "systematic error of a centroid", unit="FWHM", minimum=0)
+    half_width: float = setting(2.5, "half width of the cut-outs", unit="FWHM", minimum=1.5)
+    level: float = setting(1e-4, "a motion, or a scatter, is significant below this chance", minimum=0, maximum=1)
+    within: float = setting(1.0, "spans up to this are those of a body of the Solar System", unit="yr", minimum=0)
+
+    def check(self, candidate: Candidate) -> Finding:
+        """The finding for one candidate."""
+        times = {int(f): float(t) for c in candidate.curves for f, t in zip(c.frame, c.t_tdb_s, strict=True)}
+        rows = bright_centroids(candidate, self.min_snr, self.max_frames, self.half_width)
+        years = np.array([times[int(frame)] / JULIAN_YEAR_S for frame in rows[:, 0]])
+        rows, years = rows[np.isfinite(years)], years[np.isfinite(years)]
+        nan = float("nan")
+        names = ("ra_cosdec", "dec", "err", "delta_chi2", "p", "span")
+        if len(np.unique(years)) < FEWEST_TIMES:
+            values = {**dict.fromkeys(names, nan), "n_frames": len(rows)}
+            return Finding("uninformative", "fewer than three bright frames have a centroid and a time", values)
+        error = np.hypot(rows[:, 3], self.floor * rows[:, 4])
+        rate, rate_err, delta, left = linear_motion(years, rows[:, 1:3], error)
+        span = float(np.ptp(years))
+        p = math.exp(-delta / 2)
+        numbers = (float(rate[0]), float(rate[1]), rate_err, delta, p, span)
+        values = {**dict(zip(names, numbers, strict=True)), "n_frames": len(rows)}
+        evidence = (
+            f"the centroids of {len(rows)} bright frames move by {rate[0]:.3g}, {rate[1]:.3g} +- {rate_err:.2g} arcsec/yr "
+            f"(east, north) over {span:.3g} years (p = {p:.2g})"
+        )
+        freedom = 2 * (len(rows) - 2)
+        if p < self.level and float(special.chdtrc(freedom, left)) < self.level:
+            evidence += f", but scatter about it: chi-square {left:.1f} for {freedom} degrees of freedom"
+            return Finding("uninformative", evidence, values)
+        return Finding("fail" if p < self.level and span <= self.within else "pass", evidence, values)
+
+
+def linear_motion(times: Array, offsets: Array, error: Array) -> tuple[Array, float, float, float]:
+    """Rate (2,) of offsets (n, 2) by weighted least squares, its error, what it takes off chi-square, and what is left.
+
+    A straight line against a constant, both axes with one error: 2 degrees of freedom, and 2 (n - 2) left.
+    """
+    weight = error**-2
+    late = times - np.average(times, weights=weight)
+    about = offsets - np.average(offsets, axis=0, weights=weight)
+    lever = float((weight * late**2).sum())
+    rate = (weight * late) @ about / lever
+    left = float((weight[:, None] * (about - late[:, None] * rate) ** 2).sum())
+    return rate, lever**-0.5, lever * float(rate @ rate), left
+
+
+def bright_centroids(candidate: Candidate, min_snr: float, most: int, half_width: float) -> Array:
+    """Frame, centroid east and north of the position, its error per axis and the beam in arcsec: shape (n, 5).
+
+    Of the bright frames of at least `min_snr`, at most `most`, those of highest flux over error first. Beside a steady
+    source it is the centroid of the light that is added to the quiet frames.
+    """
+    found = []
+    for at, (curve, bright) in enumerate(zip(candidate.curves, candidate.bright, strict=True)):
+        snr = curve.flux / curve.flux_err
+        snr = np.abs(snr) if curve.channel.signed else snr
+        good = bright & (snr >= min_snr)
+        found += [(-float(s), int(f), at) for s, f in zip(snr[good], curve.frame[good], strict=True)]
+    best = {frame: (-negative, at) for negative, frame, at in sorted(found)[:most]}
+    quiet = {at: quiet_cutouts(candidate, at, half_width) for at in {at for _, at in best.values()}}
+    rows = []
+    for cutout in candidate.cutouts(np.array(list(best), dtype=np.int64), half_width) if best else ():
+        height, at = best[cutout.frame]
+        light, crowd = added(cutout, quiet[at])
+        shift = centroid(light, signed=candidate.curves[at].channel.signed)
+        if shift is not None:
+            fwhm = beam_arcsec(cutout)
+            error = math.hypot(centroid_error(fwhm, height), LEFT_OVER * crowd * fwhm)
+            rows.append((cutout.frame, *(cutout.to_sky @ shift), error, fwhm))
+    return np.array(rows, float).reshape(-1, 5)
 
 
 def centroid(cutout: Cutout, *, signed: bool = False) -> Array | None:
@@ -147,4 +237,4 @@ def centroid_error(fwhm: float, snr: float) -> float:
 @hookimpl
 def register_consistency_checks() -> list[type[ConsistencyCheck]]:
     """What this module offers."""
-    return [Position]
+    return [Position, ProperMotion]

@@ -3,6 +3,7 @@
 Everything a plugin needs is here and in `hindlight.testing`; other modules are the program's own.
 """
 
+from hindlight.cutouts import added, beam_arcsec, mean_at, quiet_cutouts
 from hindlight.dates import between, greenwich_sidereal_s, read_angle, read_clock, read_date
 from hindlight.facts import Cards, FrameFacts, Moment, PlaneAxes
 from hindlight.headers import fold_unit
@@ -18,6 +19,7 @@ from hindlight.plugin import (
     Ephemeris,
     Estimator,
     Finding,
+    Images,
     PeriodResult,
     PeriodSearch,
     RowStatistic,
@@ -63,6 +65,7 @@ __all__ = [
     "Finding",
     "Flag",
     "FrameFacts",
+    "Images",
     "LightCurve",
     "Moment",
     "Observed",
@@ -73,6 +76,8 @@ __all__ = [
     "Rows",
     "Stamps",
     "Statistic",
+    "added",
+    "beam_arcsec",
     "beam_of",
     "between",
     "comment_of",
@@ -83,6 +88,8 @@ __all__ = [
     "has_old_times",
     "hookimpl",
     "julian_instant",
+    "mean_at",
+    "quiet_cutouts",
     "quiet_level",
     "read_angle",
     "read_clock",

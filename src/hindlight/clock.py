@@ -17,6 +17,7 @@ import numpy as np
 from astropy.utils import iers
 from numpy.typing import NDArray
 
+from hindlight.dates import greenwich_sidereal_s
 from hindlight.facts import Moment
 from hindlight.lightcurve import FloatArray
 
@@ -232,6 +233,20 @@ def roemer(vector: FloatArray, unit_vectors: FloatArray) -> FloatArray:
     x, y, z = (float(v) for v in vector)
     # No matrix product: its last bits depend on how many sources there are.
     return np.asarray(unit_vectors[:, 0] * x + unit_vectors[:, 1] * y + unit_vectors[:, 2] * z)
+
+
+def sidereal_deg(middle_tdb_s: FloatArray, sites: FloatArray) -> FloatArray:
+    """Local mean sidereal time in degrees at ITRF places of shape (n, 3), UTC taken for UT1: good to 0.005 degrees.
+
+    NaN without a time or a place.
+    """
+    known = np.isfinite(middle_tdb_s) & np.isfinite(sites).all(axis=1)
+    found = np.full(len(middle_tdb_s), np.nan)
+    day, seconds = _utc_of(middle_tdb_s[known])
+    moments = (Moment(int(d), float(s)) for d, s in zip(day, seconds, strict=True))
+    greenwich = np.array([greenwich_sidereal_s(moment) / 240.0 for moment in moments])
+    found[known] = (greenwich + np.degrees(np.arctan2(sites[known, 1], sites[known, 0]))) % 360.0
+    return found
 
 
 def bjd(t_tdb_s: FloatArray) -> FloatArray:

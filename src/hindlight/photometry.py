@@ -208,6 +208,18 @@ def measure_opened(
     place |= {f"shift_{axis}": np.full(len(index), value) for axis, value in zip("xy", offset, strict=True)}
     if len(index) == 0:
         return {**place, "gain": np.empty(0), "held": np.empty(0), **_nothing()}
+    found = _measured(frame, opened, x, y, estimator, settings)
+    held = _held(frame, opened, anchors, shift, estimator, settings) if anchors is not None else NAN
+    found["held"] = np.full(len(index), held)
+    found["gain"] = _gain(opened, frame, ra[index], dec[index], x, y)
+    _divide(found, settings.photometry.primary_beam_floor)
+    return {**place, **found}
+
+
+def _measured(
+    frame: FrameToMeasure, opened: OpenFrame, x: FloatArray, y: FloatArray, estimator: Estimator, settings: Settings
+) -> Columns:
+    """The columns of `measure` at pixels of a frame, in flux per point where the unit is per beam."""
     lattice = annulus_of(opened.beam, settings.photometry).lattice
     half = max(lattice.rows, lattice.columns, _half_width(estimator, opened.beam))
     windows = Windows(_nearest(x), _nearest(y), half)
@@ -221,11 +233,30 @@ def measure_opened(
         area = math.pi * opened.beam.major * opened.beam.minor / (4.0 * math.log(2.0))
         found["flux"] /= area
         found["flux_err"] /= area
-    held = _held(frame, opened, anchors, shift, estimator, settings) if anchors is not None else NAN
-    found["held"] = np.full(len(index), held)
-    found["gain"] = _gain(opened, frame, ra[index], dec[index], x, y)
+    return found
+
+
+def measure_pixels(
+    frame: FrameToMeasure, x: FloatArray, y: FloatArray, estimator: Estimator, settings: Settings, fwhm: float = NAN
+) -> Columns:
+    """Measure 0-based pixels, shape (n,), of a frame; `fwhm` is its beam's width in pixels if the header gives none.
+
+    Returns `x`, `y`, `gain` and the columns of `measure`, flux and error divided by the gain; pixels off the image have
+    neither flux nor error. Raises as `measure_frame` does.
+    """
+    opened = open_frame(frame, settings)
+    if not frame.beam_major > 0.0 and fwhm > 0.0:
+        opened = replace(opened, beam=BeamShape(fwhm, fwhm, 0.0))
+    inside = _inside(opened, x, y)
+    found = _measured(frame, opened, x[inside], y[inside], estimator, settings) if len(inside) else _nothing()
+    sky = opened.sky.pixel_to_icrs(x[inside], y[inside], frame.mjd)
+    found["gain"] = _gain(opened, frame, *sky, x[inside], y[inside])
     _divide(found, settings.photometry.primary_beam_floor)
-    return {**place, **found}
+    columns: Columns = {"x": x, "y": y}
+    for name, values in found.items():
+        columns[name] = np.full(len(x), int(Flag.EDGE) if name == "flags" else NAN).astype(values.dtype)
+        columns[name][inside] = values
+    return columns
 
 
 def _inside(opened: OpenFrame, x: FloatArray, y: FloatArray) -> IntArray:
@@ -370,6 +401,27 @@ def bright_sources(
     ra, dec = opened.sky.pixel_to_icrs(x, y, frame.mjd)
     known = np.isfinite(ra)
     return ra[known], dec[known], found[known], opened.beam.major * opened.sky.pixel_scale_arcsec
+
+
+def bright_pixels(frame: FrameToMeasure, snr: float, settings: Settings) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Sources brighter than `snr` in a whole frame: 0-based x, y of whole pixels and S/N, shape (n,).
+
+    Raises as `measure_frame` does.
+    """
+    opened = open_frame(frame, settings)
+    return detect_bright(opened.pixels().whole(), opened.beam, snr)
+
+
+def to_sky(frame: FrameToMeasure, x: FloatArray, y: FloatArray, settings: Settings) -> tuple[FloatArray, FloatArray]:
+    """ICRS degrees of 0-based pixels of a frame by its header, shape (n,). Raises as `measure_frame` does."""
+    return open_frame(frame, settings).sky.pixel_to_icrs(x, y, frame.mjd)
+
+
+def to_pixels(
+    frame: FrameToMeasure, ra: FloatArray, dec: FloatArray, settings: Settings
+) -> tuple[FloatArray, FloatArray]:
+    """0-based pixels of ICRS degrees in a frame by its header, shape (n,). Raises as `measure_frame` does."""
+    return open_frame(frame, settings).sky.icrs_to_pixel(ra, dec, frame.mjd)
 
 
 @dataclass(frozen=True, eq=False)

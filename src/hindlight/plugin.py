@@ -166,6 +166,45 @@ class Cutout:
     fwhm_known: bool = True
 
 
+class Images:
+    """What a check may ask of the frames beyond the target itself, by frame identifiers.
+
+    Arrays have shape (n,), pixels are 0-based, NaN stands for what is not known. This class knows nothing; a run gives
+    one that reads its frames.
+    """
+
+    def size(self, frames: IntArray) -> tuple[FloatArray, FloatArray]:
+        """Pixels along x and y."""
+        return _unknown(frames), _unknown(frames)
+
+    def sidereal(self, frames: IntArray) -> FloatArray:
+        """Local sidereal time in degrees at the middle of the good time; NaN without a clock or a site."""
+        return _unknown(frames)
+
+    def measure(self, frames: IntArray, x: FloatArray, y: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Calibrated flux and error at one pixel of each frame, by the code that makes the light curves."""
+        return _unknown(frames), _unknown(frames)
+
+    def carried(
+        self, frames: IntArray, x: FloatArray, y: FloatArray, others: IntArray
+    ) -> tuple[FloatArray, FloatArray]:
+        """The pixel of `others` that shows the sky which pixel (x, y) of `frames` shows; it may lie outside the image."""
+        return _unknown(frames), _unknown(frames)
+
+    def sources(self, frame: int, snr: float) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """x, y (whole pixels) and S/N of the pixel of the sources of one frame that are brighter than `snr`, (m,) each."""
+        return np.empty(0), np.empty(0), np.empty(0)
+
+
+def _unknown(frames: IntArray) -> FloatArray:
+    return np.full(len(frames), np.nan)
+
+
+def no_comparisons(channel: str, frames: IntArray) -> Block | None:
+    """For where no comparisons are known."""
+    return None
+
+
 @dataclass(frozen=True, eq=False)
 class Candidate:
     """What a consistency check is given: a target that varies beyond chance.
@@ -184,6 +223,12 @@ class Candidate:
         Called with frame identifiers and a half width in beams: raw pixels around the target.
     place_err
         1-sigma error per axis of a place that was searched for, arcsec; 0 where it was given.
+    fwhm
+        For each curve the width of the beam in pixels that was used, shape (n,); empty where nobody has said it.
+    images
+        What else there is in the frames; see `Images`.
+    comparisons
+        Called like `controls`: steady sources near the target in those frames; None where there are none.
     """
 
     name: str
@@ -197,6 +242,9 @@ class Candidate:
     controls: Callable[[str, IntArray], Block]
     cutouts: Callable[[IntArray, float], Sequence[Cutout]]
     place_err: float = 0.0
+    fwhm: tuple[FloatArray, ...] = ()
+    images: Images = field(default_factory=Images)
+    comparisons: Callable[[str, IntArray], Block | None] = no_comparisons
 
 
 @dataclass(frozen=True)

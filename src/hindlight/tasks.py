@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Mapping, Sequence
+from contextlib import suppress
 from dataclasses import dataclass, field
 from functools import cached_property, lru_cache, partial
 from pathlib import Path
@@ -27,9 +28,9 @@ from hindlight.fence import Fault, blank, call, checked, one_line
 from hindlight.files import check_unchanged, local_path
 from hindlight.headers import SetAsideError
 from hindlight.lifted import Lift, originals
-from hindlight.lightcurve import Channel, FloatArray, IntArray, LightCurve
+from hindlight.lightcurve import Block, Channel, FloatArray, IntArray, LightCurve
 from hindlight.plan import BrightSources, owners
-from hindlight.plugin import Candidate, Cutout, Finding, PeriodResult
+from hindlight.plugin import Candidate, Cutout, Finding, Images, PeriodResult
 from hindlight.positions import moved
 from hindlight.ranking import Thresholds
 from hindlight.response import PHOTOGRAPHIC, SEEN_SNR
@@ -41,6 +42,10 @@ from hindlight.systems import BadWcsError, NoCelestialError, unit_vectors
 
 JULIAN_YEAR_S = 31557600.0
 MOST_ANCHORS = 100  # comparisons of a frame that tell its shift
+SOURCE_SNR = 20.0  # whole frames are searched for sources once, down to this or what a check asks for
+NEAREST_COMPARISONS = 30  # that a consistency check is given
+UNREADABLE = (SetAsideError, OSError, ValueError, HindlightError)  # what reading a frame again may end in
+FRAME_WIDE = ("shift_x", "shift_y", "fwhm")  # columns of measurements that are the same all over a frame
 MEASURED = ("x", "y", "flux", "flux_err", "background", "rms", "gain", "flags", "shift_x", "shift_y", "fwhm", "held")
 
 
@@ -468,7 +473,7 @@ def _candidate(
 ) -> Candidate:  # fmt: skip
     tables = book(order.run, order.version)
     at = int(np.searchsorted(tables.positions["id"], target))
-    bright, xs, ys = [], [], []
+    bright, xs, ys, widths = [], [], [], []
     for curve in curves:
         excess = np.abs(curve.above_quiet) if curve.channel.signed else curve.above_quiet
         bright.append(np.asarray(excess > above_quiet.get(curve.channel.label, np.inf)))
@@ -476,10 +481,16 @@ def _candidate(
         index = np.array([where[int(frame)] for frame in curve.frame], np.int64)
         xs.append(rows["x"][index])
         ys.append(rows["y"][index])
+        widths.append(rows["fwhm"][index])
 
     def blank_sky(channel: str, frames: IntArray) -> Any:
         found = position_blocks(order, controls, np.asarray(frames))["blocks"]
         return found[channel]
+
+    def comparisons(channel: str, frames: IntArray) -> Block | None:
+        near = _nearest_comparisons(tables.positions, at)
+        blocks: dict[str, Block] = position_blocks(order, near, np.asarray(frames))["blocks"] if len(near) else {}
+        return blocks.get(channel)
 
     def cutouts(frames: IntArray, half_width: float) -> list[Cutout]:
         return [made for frame in frames if (made := _cutout(order, rows, int(frame), half_width)) is not None]
@@ -489,7 +500,105 @@ def _candidate(
         name=position_label(tables.positions, at), ra=float(tables.positions["ra"][at]),
         dec=float(tables.positions["dec"][at]), curves=tuple(curves), bright=tuple(bright), x=tuple(xs), y=tuple(ys),
         ephemeris=ephemeris, controls=blank_sky, cutouts=cutouts, place_err=float(tables.positions["place_err"][at]),
+        fwhm=tuple(widths), images=FrameImages(order, rows), comparisons=comparisons,
     )  # fmt: skip
+
+
+def _nearest_comparisons(positions: Columns, row: int) -> IntArray:
+    """Ids of the comparisons nearest to a position, ascending."""
+    steady = np.flatnonzero(positions["kind"] == "comparison")
+    vectors = unit_vectors(positions["ra"][steady], positions["dec"][steady])
+    here = unit_vectors(positions["ra"][row : row + 1], positions["dec"][row : row + 1])[0]
+    nearest = np.argsort(-(vectors @ here), kind="stable")[:NEAREST_COMPARISONS]
+    return np.sort(positions["id"][steady[nearest]])
+
+
+class FrameImages(Images):
+    """The frames of a run, for checks; what cannot be read is not known. `rows` are those of the target."""
+
+    def __init__(self, order: Order, rows: Columns) -> None:
+        self.order = order
+        self.tables = book(order.run, order.version)
+        found, first = np.unique(rows["frame"], return_index=True)
+        self.own = {int(frame): {n: rows[n][i] for n in FRAME_WIDE} for frame, i in zip(found, first, strict=True)}
+        self.found: dict[int, tuple[float, FloatArray]] = {}  # sources of frames, and down to which S/N
+
+    def size(self, frames: IntArray) -> tuple[FloatArray, FloatArray]:
+        """Pixels along x and y."""
+        at = self._rows(frames)
+        return self.tables.frames["width"][at].astype(float), self.tables.frames["height"][at].astype(float)
+
+    def sidereal(self, frames: IntArray) -> FloatArray:
+        """Local sidereal time in degrees."""
+        table, at = self.tables.frames, self._rows(frames)
+        middle = np.where(table["barycentric"][at], np.nan, table["middle_tdb_s"][at])
+        return clock.sidereal_deg(middle, np.stack([table[f"site_{axis}"][at] for axis in "xyz"], axis=1))
+
+    def measure(self, frames: IntArray, x: FloatArray, y: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Calibrated flux and error at one pixel of each frame."""
+        flux, error = np.full(len(frames), np.nan), np.full(len(frames), np.nan)
+        for frame, mine in _by_frame(frames):
+            with suppress(*UNREADABLE):
+                flux[mine], error[mine] = self._measured(frame, x[mine], y[mine])
+        return flux, error
+
+    def carried(
+        self, frames: IntArray, x: FloatArray, y: FloatArray, others: IntArray
+    ) -> tuple[FloatArray, FloatArray]:
+        """The pixel of `others` with the same sky, by the headers and each frame's shift at its middle."""
+        ra, dec, to_x, to_y = np.full((4, len(frames)), np.nan)
+        for frame, mine in _by_frame(frames):
+            with suppress(*UNREADABLE):
+                dx, dy = self._shift(frame)
+                ra[mine], dec[mine] = photometry.to_sky(
+                    self._facts(frame), x[mine] - dx, y[mine] - dy, self.order.settings
+                )
+        for frame, mine in _by_frame(others):
+            with suppress(*UNREADABLE):
+                dx, dy = self._shift(frame)
+                there = photometry.to_pixels(self._facts(frame), ra[mine], dec[mine], self.order.settings)
+                to_x[mine], to_y[mine] = there[0] + dx, there[1] + dy
+        return to_x, to_y
+
+    def sources(self, frame: int, snr: float) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """x, y and S/N of the sources of one frame."""
+        if frame not in self.found or self.found[frame][0] > snr:
+            least = min(snr, SOURCE_SNR)
+            self.found[frame] = least, np.empty((3, 0))
+            with suppress(*UNREADABLE):
+                found = photometry.bright_pixels(self._facts(frame), least, self.order.settings)
+                self.found[frame] = least, np.stack(found)
+        x, y, height = self.found[frame][1]
+        above = height > snr
+        return x[above], y[above], height[above]
+
+    def _rows(self, frames: IntArray) -> IntArray:
+        return np.array([self.tables.row_of_frame[int(frame)] for frame in frames], np.int64)
+
+    def _facts(self, frame: int) -> photometry.FrameToMeasure:
+        return frame_facts(self.tables.frames, self.tables.row_of_frame[frame])
+
+    def _shift(self, frame: int) -> FloatArray:
+        own = self.own.get(frame)
+        return np.zeros(2) if own is None else np.nan_to_num([float(own["shift_x"]), float(own["shift_y"])])
+
+    def _measured(self, frame: int, x: FloatArray, y: FloatArray) -> tuple[FloatArray, FloatArray]:
+        facts, own, settings = self._facts(frame), self.own.get(frame), self.order.settings
+        estimators = host.load(self.order.plugins).estimators
+        estimator = photometry.choose_estimator(
+            estimators, facts.unit, settings.photometry.estimator, facts.beam_major > 0
+        )
+        fwhm = float("nan") if own is None else float(own["fwhm"])
+        found = photometry.measure_pixels(facts, x, y, estimator, settings, fwhm)
+        found["frame"] = np.full(len(x), frame)
+        flux, error, bad = ensemble.calibrated(found, self.tables.solution)
+        lost = bad | ((found["flags"] & int(UNUSABLE)) != 0)
+        return np.where(lost, np.nan, flux), np.where(lost, np.nan, error)
+
+
+def _by_frame(frames: IntArray) -> list[tuple[int, IntArray]]:
+    """Each frame with the places it stands at."""
+    return [(int(frame), np.flatnonzero(frames == frame)) for frame in np.unique(frames)]
 
 
 def _cutout(order: Order, rows: Columns, frame: int, half_width: float) -> Cutout | None:
@@ -501,7 +610,7 @@ def _cutout(order: Order, rows: Columns, frame: int, half_width: float) -> Cutou
         made = photometry.cutout(
             frame_facts(tables.frames, row), float(rows["x"][at]), float(rows["y"][at]), half_width, order.settings
         )
-    except (SetAsideError, OSError, ValueError, HindlightError):
+    except UNREADABLE:
         return None
     fwhm = float(rows["fwhm"][at])  # that of the comparisons where the header gives none
     known = float(tables.frames["beam_major"][row]) > 0 or fwhm != order.settings.photometry.assumed_fwhm_pixels
