@@ -163,8 +163,8 @@ def test_few_controls_need_a_tail_and_too_few_find_nothing():
 def test_completeness_agrees_with_simulated_archives():
     """The small version of tests/studies/completeness.py: sources hidden at controls, and sources that are targets."""
     cells = [Cell(PULSES, 6.0, 1200.0, 0.1, 2.0, 0.2), Cell(SMOOTH, 2.5, 1e6), Cell(NOTHING, 0.0, 1.0)]
-    hid = np.stack([hidden.by_injection(seed, cells, 60, 20, 0.2)[:, 0] for seed in range(40)])
-    made = np.stack([hidden.by_simulation(seed, cells, 60, 20, 0.2) for seed in range(80)])
+    hid = np.stack([hidden.by_injection(seed, cells, 60, 20, 0.2)[:, 0] for seed in range(25)])
+    made = np.stack([hidden.by_simulation(seed, cells, 60, 20, 0.2) for seed in range(50)])
     p = [
         stats.fisher_exact([[a.sum(), len(a) - a.sum()], [b.sum(), len(b) - b.sum()]]).pvalue
         for a, b in zip(hid.T, made.T, strict=True)

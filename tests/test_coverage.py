@@ -14,7 +14,7 @@ STUDY = study("coverage")
 
 def test_a_small_version_of_the_study(tmp_path: Path) -> None:
     """PSF photometry in the noise it is made for and in others; bounds as wide as so few measurements ask."""
-    cells = STUDY.cells(tmp_path, "psf", frames=8, size=640, seed=1)
+    cells = STUDY.cells(tmp_path, "psf", frames=8, size=480, seed=1)
     assert {(cell.noise, cell.snr) for cell in cells} == {(n, s) for n in STUDY.NOISES for s in STUDY.SNRS}
     for cell in cells:
         n = len(cell.pull)

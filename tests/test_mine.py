@@ -50,7 +50,8 @@ def test_demo_finds_what_is_planted(demo):
     assert first["flare"] == "single"
     for row in table[3:]:
         if truth[str(row["name"])] == "detector artefact":
-            assert str(row["concerns"]).startswith("position")
+            assert str(row["concerns"]).startswith("detector_fixed")
+            assert "; position: " in str(row["concerns"])
         else:
             assert row["standing"] in ("unseen", "steady"), row["name"]
     steady = [row["standing"] for row in table if truth[str(row["name"])].endswith("steady")]

@@ -31,7 +31,7 @@ class Neighbour(ConsistencyCheck):
         Column("n_brighter", "those in which it brightens more than the candidate", dtype="int64",
                ucd="meta.number;obs"),
         Column("distance", "of the neighbour from the position, blank for none", unit="arcsec", ucd="pos.angDistance"),
-        Column("share", "the candidate's brightening over the neighbour's, blank for none", ucd="arith.ratio"),
+        Column("share", "the candidate's brightening over the neighbour's, blank for none", ucd="stat.value"),
     )  # fmt: skip
     radius: float = setting(3.0, "furthest neighbours", unit="FWHM", minimum=1)
     stronger: float = setting(2.0, "least brightening, in terms of the candidate's", minimum=1)

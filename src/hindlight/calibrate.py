@@ -168,29 +168,64 @@ def controls_needed(n_targets: int, level: float, any_dependence: bool = False) 
     return max(1, int(np.ceil(factor * n_targets / level)) - 1)
 
 
-def tail_bound(distances: FloatArray, target: float, exceedances: int, weight: float = 1.0) -> float:
-    """An upper bound on the chance that a control lies beyond `target`, from a fitted tail; NaN where none can be.
+@dataclass(frozen=True, eq=False)
+class Tail:
+    """What the largest of some controls' distances allow of the distribution beyond them.
 
-    A generalised Pareto tail with shape >= 0 is fitted to the largest `exceedances` of the controls' distances; the
-    bound is the upper end of the 95 % profile-likelihood interval of the tail probability. The plain estimate
-    (Knijnenburg et al. 2009, Bioinformatics 25, i161) understates heavy tails and is not used. Controls alike in groups of
-    `weight` tell that much less: more of them are used, and the likelihood counts accordingly.
+    Generalised Pareto tails, shape >= 0, that start at `start`, beyond which lies `fraction` of the controls; `shape` and
+    `scale` (n,) are those within the 95 % profile-likelihood interval of the tail probability.
+    """
+
+    fraction: float
+    start: float
+    shape: FloatArray
+    scale: FloatArray
+
+    def beyond(self, distance: float) -> float:
+        """The largest chance that any of the tails gives to lie beyond a distance: an upper bound."""
+        shape, scale = self.shape[:, None], self.scale[:, None]
+        return float(self.fraction * np.exp(-_log_terms(shape, scale, np.array([distance - self.start])).min()))
+
+    def reached(self, chance: float) -> float:
+        """The distance beyond which that bound is the given chance."""
+        log = np.log(self.fraction / chance)
+        curved = self.shape > 0
+        shape = np.where(curved, self.shape, 1.0)
+        return float(self.start + (self.scale * np.where(curved, np.expm1(shape * log) / shape, log)).max())
+
+
+def tail_of(distances: FloatArray, exceedances: int, weight: float = 1.0) -> Tail | None:
+    """The tail of the controls' distances, shape (n,), fitted to the largest `exceedances`; None where none can be.
+
+    The bound it gives is the upper end of the 95 % profile-likelihood interval. The plain estimate (Knijnenburg et al.
+    2009, Bioinformatics 25, i161) understates heavy tails and is not used. Controls alike in groups of `weight` tell that
+    much less: more of them are used, and the likelihood counts accordingly.
     """
     finite = np.sort(distances[np.isfinite(distances)])[::-1]
     m = min(round(exceedances * weight), finite.size // 4)
-    if m < FEWEST_EXCEEDANCES * weight or not np.isfinite(target):
-        return float("nan")
-    start = (finite[m - 1] + finite[m]) / 2
+    if m < FEWEST_EXCEEDANCES * weight:
+        return None
+    start = float((finite[m - 1] + finite[m]) / 2)
     excess = finite[:m] - start
     scale0 = float(excess.mean())
-    if scale0 <= 0 or target <= finite[0]:
-        return float("nan")
+    if scale0 <= 0:
+        return None
     shape, scale = SHAPES[:, None], SCALES[None, :] * scale0
     likelihood = -m * np.log(scale) - (shape + 1) * _log_terms(shape, scale, excess)
-    log_tail = -_log_terms(shape, scale, np.array([target - start]))
-    drop = weight * stats.chi2.isf(1 - TAIL_CONFIDENCE, 1) / 2
-    inside = likelihood >= likelihood.max() - drop
-    return float(m / finite.size * np.exp(log_tail[inside].max()))
+    inside = likelihood >= likelihood.max() - weight * stats.chi2.isf(1 - TAIL_CONFIDENCE, 1) / 2
+    row, column = np.nonzero(inside)
+    return Tail(m / finite.size, start, SHAPES[row], scale[0, column])
+
+
+def tail_bound(distances: FloatArray, target: float, exceedances: int, weight: float = 1.0) -> float:
+    """An upper bound on the chance that a control lies beyond a target that lies beyond all of them; NaN where none can be.
+
+    See `tail_of`.
+    """
+    if not target > np.max(distances, initial=-np.inf, where=np.isfinite(distances)) or not np.isfinite(target):
+        return float("nan")
+    tail = tail_of(distances, exceedances, weight)
+    return float("nan") if tail is None else tail.beyond(target)
 
 
 def _log_terms(shape: FloatArray, scale: FloatArray, excess: FloatArray) -> FloatArray:

@@ -535,7 +535,7 @@ COMPLETENESS_TARGETS = (
     TableColumn(
         "lowest_duty_limit",
         "95 % limit on the duty cycle of a source that no look could miss, NaN where the looks are too few or it was seen",
-        ucd="stat.max",
+        ucd="stat.value;stat.max",
     ),
     *(
         TableColumn(
@@ -551,5 +551,7 @@ COMPLETENESS_LIMITS = (
     TableColumn("name", "unseen target", dtype="str", ucd="meta.id;meta.main"),
     TableColumn("flux", "flux in median frame errors, mean over an exposure", ucd="phot.flux"),
     TableColumn("looks_effective", "sum over the looks of the chance to see such a source", ucd="meta.number"),
-    TableColumn("duty_limit", "95 % limit on its duty cycle; NaN where all looks together set none", ucd="stat.max"),
+    TableColumn(
+        "duty_limit", "95 % limit on its duty cycle; NaN where all looks together set none", ucd="stat.value;stat.max"
+    ),
 )

@@ -35,7 +35,8 @@ ESTIMATORS: dict[str, Estimator] = {"peak": Peak(), "psf": Psf(), "aperture": Ap
 SNRS = (0, 5, 20, 100)
 NOISES = ("white", "beam", "changing")
 WITHIN = {1.0: 0.682689, 1.96: 0.950004}
-WITHOUT = ("lomb_scargle", "stetson", "von_neumann", "brightest", "frame_wide", "position")
+WITHOUT = ("lomb_scargle", "bayesian_blocks", "structure_function", "distribution", "duty_cycle", "epoch_activity",
+           "welch_stetson", "stetson", "von_neumann", "brightest", "frame_wide", "position")  # fmt: skip
 COMPARISONS = 40
 TARGETS = 40  # at each S/N; few, so that sources lie in few annuli of controls: in those of targets there are none
 FWHM = 3.0
@@ -148,7 +149,8 @@ def sources(at: np.ndarray, unit_flux: float, sky: skies.Sky, rng: np.random.Gen
 def mined(folder: Path, estimator: str) -> dict[str, dict[str, np.ndarray]]:
     """The run's tables as columns."""
     (folder / "settings.toml").write_text(
-        f'[controls]\nfield_size_deg = 50.0\n[photometry]\nestimator = "{estimator}"\n', encoding="utf-8"
+        f'[controls]\nfield_size_deg = 50.0\nbright_target_snr = 1e9\n[photometry]\nestimator = "{estimator}"\n',
+        encoding="utf-8",
     )
     without = [word for name in WITHOUT for word in ("--without", name)]
     arguments = ["mine", folder / "frames", "--targets", folder / "targets.csv", "--out", folder / "run",

@@ -72,7 +72,9 @@ def scaled(sky: skies.Sky, some: list[skies.Source]) -> list[skies.Source]:
 
 def mined(folder: Path, settings: str) -> dict[str, dict[str, np.ndarray]]:
     """The run's tables as columns, mined with these settings."""
-    (folder / "settings.toml").write_text("[controls]\nper_field = 200\nfield_size_deg = 50.0\n" + settings)
+    (folder / "settings.toml").write_text(
+        "[controls]\nper_field = 200\nfield_size_deg = 50.0\nbright_target_snr = 1e9\n" + settings
+    )
     run = folder / ("raw" if settings else "run")
     without = [word for name in WITHOUT for word in ("--without", name)]
     arguments = ["mine", folder / "frames", "--targets", folder / "targets.csv", "--out", run,
