@@ -40,7 +40,7 @@ SIGNIFICANT = 3.3  # sigma: one frame in a thousand by chance
 FEWEST_CONTROLS = 30
 BAD_P = 1e-6
 BAD_SCATTER = 0.5
-WORTH_SAYING = 0.01
+LEAST_LIGHT = 0.02  # less than this is within what neighbours and noise common to both sums do to the measurement
 MEDIAN_ERROR = 1.253  # relative to that of the mean, for normal errors
 FEWEST_HELD = 5  # frames that tell how much light the estimator counts
 FLUX_COLUMNS = ("frame", "position", "x", "y", "flux", "flux_err")  # of comparisons
@@ -246,7 +246,7 @@ def _said(label: str, part: Columns, gains: Gains) -> list[str]:
     bad = int((part["verdict"] == "bad").sum())
     scales = _said_of_errors(label, part["error_scale"])
     held = float(part["held"][0])
-    if abs(held - 1.0) > WORTH_SAYING:
+    if held != 1.0:
         scales.append(
             f"{label}: {100 * held:.1f} % of a point source's light is counted; fluxes are corrected to all of it within "
             "the inner radius of the annulus"
@@ -362,7 +362,7 @@ def _held(told: FloatArray) -> float:
         return 1.0
     held = float(np.median(told))
     error = MEDIAN_ERROR * MAD_TO_SIGMA * float(np.median(np.abs(told - held))) / len(told) ** 0.5
-    return held if abs(held - 1.0) > SIGNIFICANT * error else 1.0
+    return held if abs(held - 1.0) > max(SIGNIFICANT * error, LEAST_LIGHT) else 1.0
 
 
 def calibrated(rows: Columns, solution: Columns) -> tuple[FloatArray, FloatArray, NDArray[np.bool_]]:
