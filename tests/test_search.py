@@ -230,3 +230,26 @@ def test_any_number_of_workers_and_extension_give_the_same(searched):
     old = Table.read(folder / "run" / "candidates.ecsv")
     assert (table[0]["name"], table[0]["found_ra"]) == (old[0]["name"], old[0]["found_ra"])
     assert np.isfinite(table["found_ra"][table["name"] == "late"][0])
+
+
+def test_a_bright_target_that_was_searched_is_judged_among_bright_copies(tmp_path):
+    """A steady source at its stated place, known to a beam, in frames with comparisons: steady, by a null of its own."""
+    sky = skies.Sky(n_frames=12, size=260, noise="beam", gain_scatter=0.05)
+    star = skies.Source("star", 0.0, 0.0, 30.0)
+    rest = [skies.Source(f"s{k}", *(25 * BEAM * np.array((np.cos(k), np.sin(k)))), 80.0) for k in range(1, 7)]
+    skies.write_sky(tmp_path / "frames", sky, [star, *rest], 5)
+    head, row = skies.target_text([star], sky).splitlines()
+    (tmp_path / "targets.csv").write_text(f"{head},pos_err\n{row},{1.01 * BEAM}\n", encoding="utf-8")
+    (tmp_path / "s.toml").write_text(
+        "[controls]\nper_field = 40\n[search]\ncontrols = 40\nsigmas = 1.6\n", encoding="utf-8"
+    )
+    mine(tmp_path, "run", 1)
+    (found,) = Table.read(tmp_path / "run" / "candidates.ecsv")
+    assert found["null"].startswith("blank sky and the residuals of comparisons")
+    assert found["standing"] == "steady"
+    assert (found["found_ra"], found["found_dec"]) == (found["ra"], found["dec"])
+    controls = pq.read_table(tmp_path / "run" / "controls.parquet").to_pydict()
+    plain = {n for n, copy in zip(controls["field"], controls["copy"], strict=True) if copy == 0}
+    lifted = {n for n, copy in zip(controls["field"], controls["copy"], strict=True) if copy > 0}
+    assert lifted
+    assert not plain & lifted
