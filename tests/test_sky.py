@@ -299,6 +299,23 @@ def test_pixel_scale_and_jacobian() -> None:
     assert 0.05 < abs(turned[0, 1]) < 0.3
 
 
+@pytest.mark.parametrize("code", ["SIN", "TAN", "ZEA", "ARC", "STG", "NCP"])
+@pytest.mark.parametrize("style", ["crota", "pc", "cd"])
+@pytest.mark.parametrize("swap", [False, True])
+@pytest.mark.parametrize("where", ["anywhere", "turned", "pole"])
+def test_jacobian_at_the_reference_pixel(code: str, style: str, swap: bool, where: str) -> None:
+    """It is what the sky around that pixel says, and taken from the matrix alone only where that says it all."""
+    head = rotated(code, style, swap, 2, np.random.default_rng(len(code + style)))
+    if where == "turned":
+        head["LONPOLE"] = 150.0
+    elif where == "pole":
+        head[f"CRVAL{1 if swap else 2}"] = 90.0
+    ours = projection(cards(head))
+    from_sky = ours.jacobian(*ours.reference)
+    np.testing.assert_allclose(ours.reference_jacobian, from_sky, atol=1e-5 * ours.pixel_scale_arcsec)
+    assert (ours.scale_matrix is not None) == (where == "anywhere" and code != "NCP")
+
+
 def test_jacobian_at_the_pole() -> None:
     """Near a pole east and north are still right: a pixel step goes where the projection says."""
     ours = projection(cards(header(CRVAL2=89.99)))

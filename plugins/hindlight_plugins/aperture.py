@@ -55,30 +55,31 @@ def circle_overlap(radius: float, x: Array, y: Array, half: int) -> Array:
     `x`, `y` have shape (n,), `size` is 2 * half + 1. The area of the circle to the lower left of each pixel corner has a
     closed form, made of functions of one coordinate and the product of both; differences of it give the pixels.
     """
-    square = radius * radius  # a * a below must be the same number at the clipped edges
-    full = np.pi * square
+    square = radius * radius
     edges = np.arange(-half - 0.5, half + 1.0)[:, None]
-    # Positions come last while corners are worked out: inner loops are then long, and fast.
-    a, b = (np.minimum(np.maximum(edges - c, -radius), radius) for c in (x, y))
-    a, b = a[None, :, :], b[:, None, :]
-    sector_a, chord_a = square * np.arccos(a / radius), a * np.sqrt(square - a * a)
-    sector_b, chord_b = square * np.arccos(b / radius), b * np.sqrt(square - b * b)
-    left_of_a, below_b = full - sector_a + chord_a, full - sector_b + chord_b
-    # A corner inside the circle: what is left of it, and what is below it, less all, and again what is neither.
+    # Positions come last while corners are worked out: inner loops are then long, and fast. Both coordinates go together.
+    cut = np.minimum(np.maximum(edges - np.concatenate((x, y)), -radius), radius)
+    cut2 = cut * cut
+    beyond = square * np.arccos(cut / radius) - cut * np.sqrt(square - cut2)  # area of the circle on the far side
+    before, half_before = np.pi * square - beyond, 0.375 * np.pi * square - beyond / 2
+    past = (cut > 0).astype(float)
+    a, left, half_left, right, a2 = (of[None, :, : len(x)] for of in (cut, before, half_before, past, cut2))
+    b, below, half_below, above, b2 = (of[:, None, len(x) :] for of in (cut, before, half_before, past, cut2))
+    # A corner inside the circle: halves of what is left of it and below it, less a quarter, and the rectangle between.
     corner = a * b
-    corner += left_of_a + (sector_a - chord_a) / 2
-    corner += below_b + (sector_b - chord_b) / 2 - 1.25 * full
+    corner += half_left
+    corner += half_below
     # A corner outside the circle: nothing, all, or a part cut off by one of the two lines.
-    right, above = (a > 0).astype(float), (b > 0).astype(float)
-    outside = right * (below_b - above * full)
-    outside += above * left_of_a
+    outside = right * (below - above * (np.pi * square))
+    outside += above * left
     corner -= outside
-    corner *= a * a + b * b < square  # several times faster than choosing between the two
+    corner *= a2 + b2 < square  # several times faster than choosing between the two
     corner += outside
     strip = corner[1:] - corner[:-1]
-    area = strip[:, 1:] - strip[:, :-1]
+    area = np.empty((len(x), len(strip), len(strip)))
+    np.subtract(strip[:, 1:], strip[:, :-1], out=np.moveaxis(area, 0, 2))
     area *= area > ROUNDING  # pixels that the circle does not touch carry no weight at all
-    return np.ascontiguousarray(np.moveaxis(area, 2, 0))
+    return area
 
 
 @hookimpl

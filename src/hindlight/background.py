@@ -79,13 +79,13 @@ class Background:
     core: FloatArray
     around: FloatArray
 
-    def error(self, beam_pixels: float) -> FloatArray:
-        """1-sigma error of the median, where `beam_pixels` pixels of the annulus have independent noise together.
+    def error(self, rms: FloatArray, beam_pixels: float) -> FloatArray:
+        """1-sigma error of the median for a noise per pixel, `beam_pixels` pixels having independent noise together.
 
         MEDIAN_TO_MEAN rms / sqrt(n), exact for white noise (`beam_pixels` = 1), an upper bound for correlated noise.
         """
         independent = np.maximum(1.0, self.used / max(1.0, beam_pixels))
-        return MEDIAN_TO_MEAN * self.rms / np.sqrt(independent)
+        return MEDIAN_TO_MEAN * rms / np.sqrt(independent)
 
 
 @lru_cache(maxsize=1)

@@ -8,6 +8,7 @@ from __future__ import annotations
 import math
 import re
 from dataclasses import dataclass
+from functools import lru_cache
 
 from hindlight.facts import CARD, Cards
 from hindlight.systems import BadWcsError, NoCelestialError, System, system_of
@@ -87,7 +88,7 @@ def _check_numbers(cards: Cards, axes: tuple[int, int]) -> None:
         for stem in ("CRVAL", "CRPIX"):
             if not math.isfinite(cards.number(f"{stem}{i}")):
                 raise BadWcsError(f"{stem}{i} is missing or no number")
-    matrix = [key for key in cards if _MATRIX.fullmatch(key)]
+    matrix = [key for key in cards if key[:2] in ("PC", "CD") and _MATRIX.fullmatch(key)]
     other = [k for k in matrix if (int(k[2]) in axes) != (int(k[4]) in axes) and cards.number(k) != 0.0]
     if other:
         raise BadWcsError(f"{other[0]} mixes a celestial axis with another one")
@@ -106,11 +107,11 @@ def two_axes(cards: Cards, axes: tuple[int, int]) -> str:
     out = []
     for key in cards:
         text = cards.card(key)
-        match = _OF_AXES.fullmatch(key)
-        if match is None:
+        of_axes = _of_axes(key)
+        if of_axes is None:
             out += [text] if key in ("LONPOLE", "LATPOLE") else []
             continue
-        stem, first, _, second = match.groups()
+        stem, first, second = of_axes
         if first not in number or (stem in ("PC", "CD") and second not in number):
             continue
         tail = "" if second is None else "_" + (number[second] if stem in ("PC", "CD") else second)
@@ -118,6 +119,13 @@ def two_axes(cards: Cards, axes: tuple[int, int]) -> str:
         value = quoted.group() if quoted else text[8:]
         out.append((f"{stem}{number[first]}{tail}".ljust(8) + value).ljust(CARD))
     return "".join(out)
+
+
+@lru_cache(maxsize=4096)
+def _of_axes(key: str) -> tuple[str, str, str | None] | None:
+    """Stem and numbers of a keyword that belongs to an axis ('CTYPE1') or to two ('CD1_2'), None for any other."""
+    match = _OF_AXES.fullmatch(key)
+    return (match[1], match[2], match[4]) if match else None
 
 
 def _size(cards: Cards, axes: tuple[int, int]) -> tuple[int, int]:

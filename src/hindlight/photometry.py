@@ -18,7 +18,15 @@ from numpy.typing import NDArray
 
 from hindlight import growth
 from hindlight.archive import MEGABYTE
-from hindlight.background import Annulus, Background, annulus_of, keep_freed_memory, local_background, median_and_mad
+from hindlight.background import (
+    TOLERANCE,
+    Annulus,
+    Background,
+    annulus_of,
+    keep_freed_memory,
+    local_background,
+    median_and_mad,
+)
 from hindlight.detection import detect_bright
 from hindlight.errors import UsageError
 from hindlight.facts import NAN
@@ -211,8 +219,7 @@ def measure_opened(
     found = _measured(frame, opened, x, y, estimator, settings)
     held = _held(frame, opened, anchors, shift, estimator, settings) if anchors is not None else NAN
     found["held"] = np.full(len(index), held)
-    found["gain"] = _gain(opened, frame, ra[index], dec[index], x, y)
-    _divide(found, settings.photometry.primary_beam_floor)
+    _correct(found, opened, frame, x, y, settings.photometry.primary_beam_floor)
     return {**place, **found}
 
 
@@ -249,9 +256,7 @@ def measure_pixels(
         opened = replace(opened, beam=BeamShape(fwhm, fwhm, 0.0))
     inside = _inside(opened, x, y)
     found = _measured(frame, opened, x[inside], y[inside], estimator, settings) if len(inside) else _nothing()
-    sky = opened.sky.pixel_to_icrs(x[inside], y[inside], frame.mjd)
-    found["gain"] = _gain(opened, frame, *sky, x[inside], y[inside])
-    _divide(found, settings.photometry.primary_beam_floor)
+    _correct(found, opened, frame, x[inside], y[inside], settings.photometry.primary_beam_floor)
     columns: Columns = {"x": x, "y": y}
     for name, values in found.items():
         columns[name] = np.full(len(x), int(Flag.EDGE) if name == "flags" else NAN).astype(values.dtype)
@@ -348,20 +353,35 @@ def locate(
     return there[0], there[1], there[2], there[3], flat
 
 
-def _gain(
-    opened: OpenFrame, frame: FrameToMeasure, ra: FloatArray, dec: FloatArray, x: FloatArray, y: FloatArray
-) -> FloatArray:
-    """The primary beam's gain at positions of a frame, in degrees and in pixels; 1 where none is to be applied."""
+def _correct(
+    found: Columns, opened: OpenFrame, frame: FrameToMeasure, x: FloatArray, y: FloatArray, floor: float
+) -> None:
+    """Apply the primary beam's gain to flux and error, and add it to the columns; 1 where none is to be applied.
+
+    Where it is below the floor or no number there is no flux.
+    """
+    found["gain"] = np.ones(len(x))
     if frame.primary_beam != "uncorrected":
-        return np.ones(len(x))
+        return
+    gain = found["gain"] = _gain(opened, frame, x, y)
+    low = ~((gain >= floor) & (gain > 0.0))
+    found["flags"][low] |= Flag.LOW_GAIN
+    gain = np.where(low, np.nan, gain)
+    found["flux"] /= gain
+    found["flux_err"] /= gain
+
+
+def _gain(opened: OpenFrame, frame: FrameToMeasure, x: FloatArray, y: FloatArray) -> FloatArray:
+    """The primary beam's gain at pixels of a frame, 1 where it is not known."""
     gains = opened.companion("primary_beam", Windows(_nearest(x), _nearest(y), 1))
     if gains is not None:
         return _between_pixels(gains, x, y)
     if not frame.primary_beam_fwhm_deg > 0:
         return np.ones(len(x))
-    column, row = (np.array([place]) for place in opened.sky.reference)
-    axis = unit_vectors(*opened.sky.pixel_to_icrs(column, row, frame.mjd))
-    chord = np.linalg.norm(unit_vectors(ra, dec) - axis, axis=1)
+    column, row = opened.sky.reference
+    sky = opened.sky.pixel_to_icrs(np.append(x, column), np.append(y, row), frame.mjd)
+    *places, axis = unit_vectors(*sky)
+    chord = np.linalg.norm(np.array(places) - axis, axis=1)
     distance = np.degrees(2.0 * np.arcsin(np.minimum(1.0, chord / 2.0)))
     return np.asarray(2.0 ** (-4.0 * (distance / frame.primary_beam_fwhm_deg) ** 2))
 
@@ -378,15 +398,6 @@ def _between_pixels(pixels: Pixels, x: FloatArray, y: FloatArray) -> FloatArray:
     value = (1 - v) * ((1 - u) * middle + u * stamps[every, 1, across])
     value += v * ((1 - u) * stamps[every, down, 1] + u * stamps[every, down, across])
     return np.asarray(np.where(np.isfinite(value), value, middle))
-
-
-def _divide(found: Columns, floor: float) -> None:
-    """Apply the gain to flux and error; where it is below the floor or no number there is no flux."""
-    low = ~((found["gain"] >= floor) & (found["gain"] > 0.0))
-    found["flags"][low] |= Flag.LOW_GAIN
-    gain = np.where(low, np.nan, found["gain"])
-    found["flux"] /= gain
-    found["flux_err"] /= gain
 
 
 def bright_sources(
@@ -444,7 +455,7 @@ def cutout(frame: FrameToMeasure, x: float, y: float, half_width: float, setting
     NaN where blank or outside. Raises as `measure_frame` does.
     """
     opened = open_frame(frame, settings)
-    half = max(1, math.ceil(half_width * opened.beam.fwhm))
+    half = _reach(half_width * opened.beam.fwhm)
     ix, iy = _nearest(np.array([x])), _nearest(np.array([y]))
     stamp = opened.pixels(Windows(ix, iy, half)).stamps(ix, iy, Lattice.square(half))[0].astype(float)
     to_sky = opened.sky.jacobian_icrs(x, y, frame.mjd)
@@ -528,12 +539,15 @@ def measure(
     if len(x) == 0:
         return _nothing()
     keep_freed_memory()
+
+    def measured(x: FloatArray, y: FloatArray) -> Columns:
+        return _measure_some(pixels, x, y, beam, estimator, settings, electrons_per_unit, saturation, noise)
+
+    if len(x) <= AT_A_TIME:
+        return measured(x, y)
     order = np.argsort(y, kind="stable")  # what lies together in the file is read together
     parts = [order[start : start + AT_A_TIME] for start in range(0, len(x), AT_A_TIME)]
-    found = [
-        _measure_some(pixels, x[part], y[part], beam, estimator, settings, electrons_per_unit, saturation, noise)
-        for part in parts
-    ]
+    found = [measured(x[part], y[part]) for part in parts]
     back = np.argsort(order)
     return {name: np.concatenate([part[name] for part in found])[back] for name in found[0]}
 
@@ -560,11 +574,10 @@ def _measure_some(
     with np.errstate(invalid="ignore"):  # infinite pixels may make NaN, never a warning
         signal = raw - local.level[:, None, None]
     rms = noise.at(ix, iy, local.rms, annulus)
-    background_err = replace(local, rms=rms).error(beam_pixels if estimator.correlated else 1.0)
+    background_err = local.error(rms, beam_pixels if estimator.correlated else 1.0)
     stamps = Stamps(signal, x - ix, y - iy, rms, background_err, beam, electrons_per_unit)
     flux, flux_err = _estimate(estimator, stamps)
-    flags = np.zeros(len(ix), np.int64)
-    flags[(2 * local.used < len(annulus.index)) | np.isnan(local.rms)] |= Flag.THIN_BACKGROUND
+    flags = np.where((2 * local.used < len(annulus.index)) | np.isnan(local.rms), int(Flag.THIN_BACKGROUND), 0)
     flags[_has_neighbour(local)] |= Flag.NEIGHBOUR
     if saturation == saturation:
         flags[_saturated(raw, saturation, estimator.radius(beam))] |= Flag.SATURATED
@@ -585,7 +598,12 @@ def _nearest(coordinate: FloatArray) -> IntArray:
 
 def _half_width(estimator: Estimator, beam: BeamShape) -> int:
     """Of the stamps that hold every pixel which reaches into the estimator's radius, wherever in a pixel they centre."""
-    return max(1, math.ceil(estimator.radius(beam)))
+    return _reach(estimator.radius(beam))
+
+
+def _reach(radius: float) -> int:
+    """Whole pixels that a radius reaches to, which must not hang on the last digits of the beam."""
+    return max(1, math.ceil(radius - TOLERANCE))
 
 
 def _small_stamps(pixels: Pixels, ix: IntArray, iy: IntArray, half: int, wide: Floats, lattice: Lattice) -> Floats:

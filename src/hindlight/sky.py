@@ -30,6 +30,7 @@ __all__ = ["BadWcsError", "NoCelestialError", "Projection", "System", "beam_shap
 
 LEAN_CODES = {"SIN", "TAN", "ARC", "ZEA", "STG", "CAR", "CEA", "MER", "SFL", "AIT", "MOL", "NCP", "GLS"}
 LEGACY_CODES = {"NCP", "GLS"}
+TOUCHING_CODES = {"SIN", "TAN", "ARC", "ZEA", "STG"}  # without parameters: scale 1 at the reference, where they touch
 TURNING_CODES = {"CAR", "CEA", "MER"}  # 360 degrees of native longitude are one constant step of pixels
 MOST = {"WCSAXES": 99, "A_ORDER": 9, "B_ORDER": 9, "AP_ORDER": 9, "BP_ORDER": 9}  # more would only fill the memory
 ROUND_TRIP_PIXELS = 0.01  # an inverted distortion that comes back further off than this has not converged
@@ -62,6 +63,8 @@ class Projection:
         Pixels along x and y, 0 where the cards do not say.
     reference
         The 0-based pixel to which scale and beam refer, see `Celestial`.
+    scale_matrix
+        `jacobian` at the reference pixel, None where it has to be found from the sky around it.
     """
 
     axes: tuple[int, int]
@@ -71,6 +74,7 @@ class Projection:
     reference: tuple[float, float]
     engine: _Engine = field(repr=False)
     swapped: bool = False
+    scale_matrix: FloatArray | None = None
 
     def icrs_to_pixel(self, ra: FloatArray, dec: FloatArray, mjd: float = NAN) -> tuple[FloatArray, FloatArray]:
         """0-based pixel coordinates of positions in degrees, shape (n,); NaN where the projection is undefined.
@@ -97,7 +101,7 @@ class Projection:
     @cached_property
     def reference_jacobian(self) -> FloatArray:
         """`jacobian` at the reference pixel, which is what `beam_shape` wants."""
-        return self.jacobian(*self.reference)
+        return self.jacobian(*self.reference) if self.scale_matrix is None else self.scale_matrix
 
     def jacobian(self, x: float, y: float) -> FloatArray:
         """Shape (2, 2): a pixel offset (dx, dy) to (east, north) arcsec of the header's *own* system, as beams use."""
@@ -179,7 +183,8 @@ def _lean(key: str) -> Projection | None:
     if found.code in TURNING_CODES:
         turn = _turn(prm, found.swapped)
         prm.bounds_check(False, True)  # else pixels over 180 degrees from the reference value have no sky
-    return _finished(found, _WcslibEngine(prm, turn, found.reference))
+    scale_matrix = None if has_pv else _scale_matrix(prm, found)
+    return _finished(found, _WcslibEngine(prm, turn, found.reference), scale_matrix)
 
 
 @lru_cache(maxsize=64)
@@ -221,9 +226,11 @@ def _has_tables(cards: Cards) -> bool:
     return any(_TABLE.fullmatch(key) for key in cards)
 
 
-def _finished(found: Celestial, engine: _Engine) -> Projection:
+def _finished(found: Celestial, engine: _Engine, scale_matrix: FloatArray | None = None) -> Projection:
     """The projection, if its scale is finite and positive at the reference pixel."""
-    result = Projection(found.axes, found.system, found.assumed, found.size, found.reference, engine, found.swapped)
+    result = Projection(
+        found.axes, found.system, found.assumed, found.size, found.reference, engine, found.swapped, scale_matrix
+    )
     scale = result.pixel_scale_arcsec
     if not (math.isfinite(scale) and scale > 0.0):
         raise BadWcsError("the projection is undefined or singular at the image's reference pixel")
@@ -241,6 +248,18 @@ class _as_bad_wcs:  # noqa: N801 - a context manager, written like a function wh
             lines = [line for line in str(error).splitlines() if line and not line.startswith("ERROR")]
             said = " ".join(lines) if isinstance(error, Warning) else (lines or [str(error)])[-1]
             raise BadWcsError(f"wcslib refuses the coordinates: {said.rstrip('.')}") from error
+
+
+def _scale_matrix(prm: Wcsprm, found: Celestial) -> FloatArray | None:
+    """The jacobian at the reference pixel of a zenithal projection, whose plane touches the sky there.
+
+    In that plane x is east and y north if the native longitude of the pole is 180 degrees (M. R. Calabretta &
+    E. W. Greisen 2002, 2.2 and 5.1), so that the matrix of the header is all there is; None for anything else.
+    """
+    if found.code not in TOUCHING_CODES or prm.lonpole != 180.0:
+        return None
+    matrix: FloatArray = prm.get_pc() * (prm.get_cdelt()[:, None] * 3600.0)
+    return matrix[::-1] if found.swapped else matrix
 
 
 # --- the two engines

@@ -89,6 +89,8 @@ def system_of(cards: Cards) -> tuple[System, bool]:
 
 def _equinox(cards: Cards, key: str) -> float:
     """A year from a number or from text such as 'J2000' or 'B1950.0'; NaN where absent or no possible equinox."""
+    if key not in cards:
+        return NAN
     value = cards.number(key)
     if value != value:
         match = re.fullmatch(r"[JB]?\s*(\d{4}(?:\.\d*)?)", cards.text(key).upper())
