@@ -16,7 +16,7 @@ from astropy.io import fits
 from scipy import ndimage
 
 import skies
-from hindlight import archive, duplicates, host, plan, tasks
+from hindlight import archive, duplicates, host, likeness, plan, tasks
 from hindlight.channels import assign
 from hindlight.schema import FRAMES
 from hindlight.settings import Settings
@@ -61,7 +61,7 @@ def found(*folders: Path) -> tuple[dict[str, str], dict[str, str], dict[str, np.
     same = np.zeros(len(pairs), bool)
     order = tasks.Order("", settings, host.PluginSpec())
     for piece in duplicates.jobs(pairs):
-        answers = duplicates.compare(*tasks.comparison(order, frames, pairs, piece))
+        answers = likeness.compare(*tasks.comparison(order, frames, pairs, piece))
         same[piece] = [bool(answer.word) for answer in answers]
     frames["duplicate_of"] = duplicates.settled(frames, pairs.first[same], pairs.second[same])
     frames["related_to"] = duplicates.related(frames)

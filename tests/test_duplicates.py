@@ -11,10 +11,10 @@ from astropy.table import Table
 
 import copies
 import skies
-from hindlight import cli, duplicates, plan
+from hindlight import cli, duplicates, likeness, plan
 from hindlight.candidates import ChannelView
-from hindlight.duplicates import Sample, alike
 from hindlight.lightcurve import LightCurve
+from hindlight.likeness import Sample, alike
 from hindlight.ranking import Thresholds
 from hindlight.schema import FRAMES
 
@@ -269,9 +269,9 @@ def test_whole_numbers_and_rough_steps():
     stored = np.rint(noise(1) / 2) * 2
     assert alike(Sample(noise(1)), Sample(stored, 2.0), 1.0).word == "equal"
     nothing = np.zeros((16, 12, 12))
-    assert alike(Sample(nothing), Sample(nothing), 1.0) == duplicates.Likeness()
+    assert alike(Sample(nothing), Sample(nothing), 1.0) == likeness.Likeness()
     gone = np.where(np.arange(12) < 11, np.nan, noise(1))
-    assert alike(Sample(gone[:2]), Sample(gone[:2]), 1.0) == duplicates.Likeness()
+    assert alike(Sample(gone[:2]), Sample(gone[:2]), 1.0) == likeness.Likeness()
 
 
 # --- the whole job
@@ -351,7 +351,7 @@ def test_a_run_killed_while_it_compares_goes_on(tmp_path, monkeypatch):
         shutil.copy(path, path.with_name("copy_of_" + path.name))
     mine(*line, "--out", tmp_path / "whole")
     with monkeypatch.context() as patch:
-        patch.setattr(duplicates, "compare", lambda *_: (_ for _ in ()).throw(KeyboardInterrupt()))
+        patch.setattr(likeness, "compare", lambda *_: (_ for _ in ()).throw(KeyboardInterrupt()))
         mine(*line, "--out", tmp_path / "broken", status=130)
     assert (tmp_path / "broken" / "frames.parquet").is_file()
     mine(*line, "--out", tmp_path / "broken")

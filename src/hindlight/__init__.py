@@ -8,6 +8,16 @@ from hindlight.dates import between, greenwich_sidereal_s, read_angle, read_cloc
 from hindlight.facts import Cards, FrameFacts, Moment, PlaneAxes
 from hindlight.headers import fold_unit
 from hindlight.hookspecs import hookimpl
+from hindlight.instants import (
+    Observed,
+    comment_of,
+    has_old_times,
+    julian_instant,
+    separate_clock,
+    spoken_exposure,
+    stated_exposure,
+    stated_instant,
+)
 from hindlight.lightcurve import Block, Channel, LightCurve, Rows, quiet_level, weighted_mean
 from hindlight.plugin import (
     BeamShape,
@@ -26,25 +36,10 @@ from hindlight.plugin import (
     Stamps,
     Statistic,
 )
-from hindlight.reading import (
-    Beam,
-    Observed,
-    beam_of,
-    comment_of,
-    east_longitude,
-    east_or_west,
-    has_old_times,
-    julian_instant,
-    read_facts,
-    separate_clock,
-    sidereal_clock,
-    spoken_exposure,
-    stated_beam,
-    stated_exposure,
-    stated_instant,
-)
+from hindlight.reading import Beam, beam_of, read_facts, stated_beam
 from hindlight.schema import ASSUMPTIONS, Flag
 from hindlight.settings import setting
+from hindlight.sites import east_longitude, east_or_west, sidereal_clock
 
 __version__ = "0.1.0"
 

@@ -11,8 +11,8 @@ from dataclasses import replace
 import numpy as np
 
 from hindlight.facts import NAN, Cards, FrameFacts
+from hindlight.instants import GPS_BEHIND_TAI_S, SCALES, SECONDS, after_reference
 from hindlight.lightcurve import FloatArray
-from hindlight.reading import GPS_BEHIND_TAI_S, SCALES, SECONDS, after_reference
 
 WIDTHS = {
     "L": 1, "X": 1, "B": 1, "I": 2, "J": 4, "K": 8, "A": 1, "E": 4, "D": 8, "C": 8, "M": 16, "P": 8, "Q": 16,

@@ -15,7 +15,7 @@ from typing import Any
 
 import numpy as np
 
-from hindlight import archive, comparisons, duplicates, ensemble, files, host, plan, record, store, tasks
+from hindlight import archive, comparisons, duplicates, ensemble, files, host, likeness, plan, record, store, tasks
 from hindlight.channels import assign
 from hindlight.crew import assembled
 from hindlight.errors import HindlightError, NothingToDoError, UsageError
@@ -118,12 +118,12 @@ def _same_exposure(session: Session, frames: Columns, pairs: duplicates.Pairs) -
     pieces = duplicates.jobs(pairs)
     same = np.zeros(len(pairs), bool)
 
-    def done(number: int, result: list[duplicates.Likeness]) -> None:
+    def done(number: int, result: list[likeness.Likeness]) -> None:
         same[pieces[number]] = [bool(likeness.word) for likeness in result]
         session.watcher.step(len(result))
 
     todo = [tasks.comparison(session.order, frames, pairs, piece) for piece in pieces]
-    session.crew.run(duplicates.compare, todo, done)
+    session.crew.run(likeness.compare, todo, done)
     log.info("duplicates: %d of %d possible pairs are one exposure", np.count_nonzero(same), len(pairs))
     return same
 

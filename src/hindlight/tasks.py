@@ -109,7 +109,7 @@ def frame_label(frames: Columns, row: int) -> str:
 
 
 def comparison(order: Order, frames: Columns, pairs: duplicates.Pairs, piece: IntArray) -> tuple[Any, ...]:
-    """What `duplicates.compare` is to be given for some of the pairs."""
+    """What `likeness.compare` is to be given for some of the pairs."""
     rows, index = np.unique(np.concatenate([pairs.first[piece], pairs.second[piece]]), return_inverse=True)
     both = index.reshape(2, -1).T.tolist()
     return [frame_facts(frames, int(row)) for row in rows], both, pairs.strict[piece].tolist(), order.settings
