@@ -15,7 +15,8 @@ from hindlight.archive import walk
 from hindlight.companions import sort_out
 from hindlight.files import FileEntry
 from hindlight.headers import SetAsideError
-from hindlight.photometry import FrameToMeasure, bright_sources, measure_frame
+from hindlight.opening import FrameToMeasure
+from hindlight.photometry import bright_sources, measure_frame
 from hindlight.schema import REASONS, Flag
 from hindlight.settings import Companions, Settings, settings_from
 from hindlight_plugins.aperture import Aperture

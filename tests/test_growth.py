@@ -5,7 +5,8 @@ import pytest
 from astropy.io import fits
 from astropy.wcs import WCS
 
-from hindlight.photometry import FrameToMeasure, measure_frame
+from hindlight.opening import FrameToMeasure
+from hindlight.photometry import measure_frame
 from hindlight.settings import Settings
 from hindlight_plugins.aperture import Aperture
 from hindlight_plugins.peak import Peak

@@ -14,8 +14,10 @@ from astropy.wcs import WCS
 from photutils.aperture import ApertureStats, CircularAnnulus, CircularAperture
 
 from hindlight.errors import UsageError
+from hindlight.fluxes import measure
 from hindlight.headers import SetAsideError
-from hindlight.photometry import FrameToMeasure, bright_sources, choose_estimator, cutout, measure, measure_frame
+from hindlight.opening import FrameToMeasure
+from hindlight.photometry import bright_sources, choose_estimator, cutout, measure_frame
 from hindlight.pixels import Pixels
 from hindlight.plugin import BeamShape, Estimator
 from hindlight.schema import Flag

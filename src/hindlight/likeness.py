@@ -17,7 +17,7 @@ from scipy import ndimage
 from hindlight.background import MAD_TO_SIGMA
 from hindlight.headers import SetAsideError
 from hindlight.lightcurve import FloatArray, IntArray
-from hindlight.photometry import FrameToMeasure, OpenFrame, open_frame
+from hindlight.opening import FrameToMeasure, OpenFrame, open_frame
 from hindlight.pixels import Lattice, Windows
 from hindlight.settings import Settings
 

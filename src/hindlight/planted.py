@@ -15,7 +15,8 @@ from numpy.typing import NDArray
 
 from hindlight.headers import fold_unit
 from hindlight.lightcurve import FloatArray
-from hindlight.photometry import PER_BEAM, FrameToMeasure, OpenFrame, measure_opened, open_frame
+from hindlight.opening import FrameToMeasure, OpenFrame, open_frame
+from hindlight.photometry import PER_BEAM, measure_opened
 from hindlight.pixels import Lattice, Pixels, read_plane
 from hindlight.plugin import BeamShape, Estimator, Stamps
 from hindlight.settings import Settings

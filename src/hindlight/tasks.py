@@ -29,6 +29,7 @@ from hindlight.files import check_unchanged, local_path
 from hindlight.headers import SetAsideError
 from hindlight.lifted import Lift, originals
 from hindlight.lightcurve import Block, Channel, FloatArray, IntArray, LightCurve
+from hindlight.opening import FrameToMeasure
 from hindlight.plan import BrightSources, owners
 from hindlight.plugin import Candidate, Cutout, Finding, Images, PeriodResult
 from hindlight.positions import moved
@@ -87,13 +88,13 @@ def book(run: str, version: str) -> Book:
     return Book(folder, frames, positions, solution, channels_of(frames), rows)
 
 
-def frame_facts(frames: Columns, row: int) -> photometry.FrameToMeasure:
+def frame_facts(frames: Columns, row: int) -> FrameToMeasure:
     """What photometry needs to know of a frame, from its row in the frame table."""
     value = {name: values[row] for name, values in frames.items()}
     sign = -1.0 if value["negative"] else 1.0
     named = {kind: value[f"{kind}_file"] for kind in COMPANION_KINDS if value[f"{kind}_file"]}
     companions = {kind: str(Path(value["archive"]) / path) for kind, path in named.items()}
-    return photometry.FrameToMeasure(
+    return FrameToMeasure(
         path=local_path(str(value["archive"]), str(value["path"])), hdu=int(value["hdu"]), plane=int(value["plane"]),
         mjd=float(value["middle_mjd_tdb"]), beam_major=float(value["beam_major"]),
         beam_minor=float(value["beam_minor"]), beam_angle=float(value["beam_angle"]), unit=str(value["unit"]),
@@ -575,7 +576,7 @@ class FrameImages(Images):
     def _rows(self, frames: IntArray) -> IntArray:
         return np.array([self.tables.row_of_frame[int(frame)] for frame in frames], np.int64)
 
-    def _facts(self, frame: int) -> photometry.FrameToMeasure:
+    def _facts(self, frame: int) -> FrameToMeasure:
         return frame_facts(self.tables.frames, self.tables.row_of_frame[frame])
 
     def _shift(self, frame: int) -> FloatArray:

@@ -28,7 +28,8 @@ from numpy.lib.stride_tricks import sliding_window_view
 from photutils.aperture import ApertureStats, CircularAnnulus, CircularAperture
 
 from hindlight import sky
-from hindlight.photometry import FrameToMeasure, measure_frame
+from hindlight.opening import FrameToMeasure
+from hindlight.photometry import measure_frame
 from hindlight.settings import Settings
 from hindlight_plugins.aperture import Aperture
 

@@ -32,7 +32,8 @@ from astropy.io import fits
 from hindlight.archive import WalkResult, walk
 from hindlight.files import local_path
 from hindlight.headers import SetAsideError
-from hindlight.photometry import FrameToMeasure, choose_estimator, measure_frame
+from hindlight.opening import FrameToMeasure
+from hindlight.photometry import choose_estimator, measure_frame
 from hindlight.schema import REASONS
 from hindlight.settings import Settings
 from hindlight.summary import words_of

@@ -14,7 +14,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from hindlight.photometry import measure
+from hindlight.fluxes import measure
 from hindlight.pixels import Pixels
 from hindlight.plugin import BeamShape, Estimator
 from hindlight.settings import Photometry
