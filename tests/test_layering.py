@@ -15,12 +15,12 @@ PLUGINS = Path(hindlight_plugins.__file__).parent
 ORDER = [
     "errors", "schema", "facts", "blocks", "settings", "dates", "lightcurve", "plugin", "cutouts", "hookspecs",
     "tables", "host", "fence", "clock", "systems", "celestial", "sky", "headers", "instants", "sites", "reading",
-    "goodtime", "knowledge", "files", "companions", "channels", "outlines", "footprints", "archive", "summary",
-    "positions", "apart", "pixels", "background", "detection", "pointing", "growth", "opening", "fluxes", "photometry",
-    "planted", "duplicates", "likeness", "robust", "losses", "response", "ensemble", "store", "judge", "calibrate",
-    "ranking", "lifted", "search", "timing", "injection", "completeness", "candidates", "plan", "comparisons", "tasks",
-    "trials", "conclude", "bright", "outcome", "crew", "record", "verdicts", "runner", "recovery", "survey", "export",
-    "demo", "testing", "cli", "__main__",
+    "goodtime", "knowledge", "files", "companions", "channels", "outlines", "footprints", "frametable", "archive",
+    "summary", "positions", "apart", "pixels", "background", "detection", "pointing", "growth", "opening", "fluxes",
+    "photometry", "planted", "duplicates", "likeness", "robust", "losses", "response", "ensemble", "store", "judge",
+    "calibrate", "ranking", "lifted", "search", "timing", "injection", "completeness", "candidates", "plan",
+    "comparisons", "tasks", "trials", "conclude", "bright", "outcome", "crew", "record", "verdicts", "runner",
+    "recovery", "survey", "export", "demo", "testing", "cli", "__main__",
 ]  # fmt: skip
 PLUGINS_MAY_IMPORT = {"hindlight", "numpy", "scipy", "astropy", "photutils", "nifty_ls"}
 
