@@ -33,6 +33,7 @@ LEGACY_CODES = {"NCP", "GLS"}
 TOUCHING_CODES = {"SIN", "TAN", "ARC", "ZEA", "STG"}  # without parameters: scale 1 at the reference, where they touch
 TURNING_CODES = {"CAR", "CEA", "MER"}  # 360 degrees of native longitude are one constant step of pixels
 MOST = {"WCSAXES": 99, "A_ORDER": 9, "B_ORDER": 9, "AP_ORDER": 9, "BP_ORDER": 9}  # more would only fill the memory
+LARGEST_STEP_ARCSEC = 3600.0  # from pixel to pixel, for the plane to be as good as the sky
 ROUND_TRIP_PIXELS = 0.01  # an inverted distortion that comes back further off than this has not converged
 
 _PLAIN = re.compile(
@@ -259,6 +260,8 @@ def _scale_matrix(prm: Wcsprm, found: Celestial) -> FloatArray | None:
     if found.code not in TOUCHING_CODES or prm.lonpole != 180.0:
         return None
     matrix: FloatArray = prm.get_pc() * (prm.get_cdelt()[:, None] * 3600.0)
+    if not np.abs(matrix).max() < LARGEST_STEP_ARCSEC:
+        return None
     return matrix[::-1] if found.swapped else matrix
 
 
