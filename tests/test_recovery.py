@@ -10,6 +10,7 @@ import skies
 from hindlight import cli, planted, recovery, tasks, trials
 from hindlight.recovery import Asked
 from hindlight.store import RunFolder
+from test_estimators import study
 
 GRID = """[completeness]
 per_cell = 6
@@ -147,6 +148,17 @@ def test_sources_added_to_pixels(archive):
         assert abs(proof.beyond_rounding) < 0.02
         assert abs(proof.difference) < 0.02
         assert 0.995 < proof.counted < 1.0001
+
+
+def test_a_small_version_of_the_study_of_linearity(tmp_path):
+    """Sources in stored pixels and in light curves: fluxes agree, and the same targets are found, of which there are some."""
+    linearity = study("linearity")
+    result = linearity.measured(tmp_path, frames=12, side=4, seed=5)
+    assert len(result.differences) == 2
+    for differ in result.differences.values():
+        assert 1e-6 < np.sqrt(np.mean(differ**2)) < linearity.MOST_RMS
+    assert np.array_equal(result.by_curves, result.by_pixels)
+    assert 2 <= result.by_curves.sum() <= 14
 
 
 def test_a_frame_that_is_gone_proves_nothing(archive, tmp_path, monkeypatch):

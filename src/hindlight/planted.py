@@ -65,19 +65,19 @@ def plant(
     area = math.pi * beam.major * beam.minor / LOG16
     per_beam = fold_unit(frame.unit).endswith(PER_BEAM)
     total = PLANTED_SNR * one["flux_err"] * one["gain"]  # as the pixels hold it
-    light = _source(beam, one["x"], one["y"], total if per_beam or not estimator.sums else total / area)
+    light = light_of(beam, one["x"], one["y"], total if per_beam or not estimator.sums else total / area)
     own_scale = one["gain"] * (area if estimator.sums and per_beam else 1.0)
-    counted = _flux(estimator, light, one, beam) / own_scale * one["gain"] / total
+    counted = reading(estimator, light, one, beam) / own_scale * one["gain"] / total
     if math.isfinite(frame.electrons_per_unit):
         photons = np.random.default_rng(seed).poisson(light * frame.electrons_per_unit)
         light = photons / frame.electrons_per_unit
     assert opened.unpacked is not None
     changed, rounded = _with(opened.unpacked, light, one)
     after = measure_opened(replace(opened, unpacked=changed), frame, ra, dec, estimator, settings, anchors)
-    added, stored = (_flux(estimator, square, one, beam) / own_scale for square in (light, rounded))
+    added, stored = (reading(estimator, square, one, beam) / own_scale for square in (light, rounded))
     rise = float(after["flux"][0]) - one["flux"]
     stamp = _stamp(opened, one, light.shape[0] // 2)
-    both = _flux(estimator, stamp + light, one, beam) - _flux(estimator, stamp, one, beam)
+    both = reading(estimator, stamp + light, one, beam) - reading(estimator, stamp, one, beam)
     error = one["flux_err"]
     return Proof(
         (rise - added) / error,
@@ -87,7 +87,7 @@ def plant(
     )
 
 
-def _source(beam: BeamShape, x: float, y: float, peak: float) -> FloatArray:
+def light_of(beam: BeamShape, x: float, y: float, peak: float) -> FloatArray:
     """A Gaussian at (x, y), on a square of pixels around the nearest one."""
     half = math.ceil(REACH_FWHM * max(beam.major, beam.minor))
     row, column = np.mgrid[-half : half + 1, -half : half + 1]
@@ -131,7 +131,7 @@ def _stamp(opened: OpenFrame, one: dict[str, float], half: int) -> FloatArray:
     return np.where(np.isfinite(stamp), stamp, 0.0)
 
 
-def _flux(estimator: Estimator, square: FloatArray, one: dict[str, float], beam: BeamShape) -> float:
+def reading(estimator: Estimator, square: FloatArray, one: dict[str, float], beam: BeamShape) -> float:
     """What the estimator makes of a square of pixels around a position, with nothing else."""
     half, need = square.shape[0] // 2, max(1, math.ceil(estimator.radius(beam)))
     pixels = np.pad(square, max(0, need - half))
