@@ -163,7 +163,7 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings) -> tuple[st
     if p.short.any():
         said.append(
             f"{int(p.short.sum())} targets lie beyond every control, but their number cannot decide at q < "
-            f"{settings.ranking.level:g}: {p.needed} controls would ([controls] per_field, [search] controls)"
+            f"{settings.ranking.level:g}: {p.needed} controls would ([controls] most_per_field, [search] controls)"
         )
     said += [*_error_remarks(fields), *_confusion_remarks(fields)]
     if p.extrapolated.any():
@@ -191,7 +191,7 @@ def _error_remarks(fields: Sequence[Field]) -> list[str]:
     for found in fields:
         controls = found.rows(found.controls)
         for (label, full), values in found.judgement.values.items():
-            typical = found.n_trials == 1 and found.lift is None  # a place chosen is not
+            typical = found.n_trials == 1 and found.lift is None and not found.n_passes  # a place chosen is not
             if full == "core_reduced" and controls.size and typical:
                 scatter.setdefault(label, []).extend(np.sqrt(values[controls][np.isfinite(values[controls])]).tolist())
     said = []
