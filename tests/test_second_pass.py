@@ -159,12 +159,15 @@ def test_a_second_pass_is_over_their_frames_only(runs):
     aside = frames["id"][np.char.startswith(frames["path"].astype(str), "aside")]
     (added,) = passes(positions, int(positions["field"][0]))
     rounds = sorted((runs / "whole" / "measurements").iterdir())
-    rows = [np.concatenate([pq.read_table(path)["frame"] for path in sorted(part.iterdir())]) for part in rounds]
+    measured = [np.concatenate([pq.read_table(path)["frame"] for path in sorted(part.iterdir())]) for part in rounds]
     assert len(aside) == 6
-    assert np.isin(rows[0], aside).any()
+    assert np.isin(measured[0], aside).any()
+    rows_of = np.unique(pq.read_table(runs / "whole" / "controls.parquet")["id"], return_counts=True)
+    np.testing.assert_array_equal(rows_of[0], positions["id"][positions["kind"] == "control"])
+    assert set(rows_of[1].tolist()) == {1}
     asked = set(positions["added_for"][np.isin(positions["id"], added)].tolist())
     assert asked == set(positions["id"][positions["name"] == "pulser"].tolist())
-    assert not np.isin(rows[1], aside).any()
+    assert not np.isin(measured[1], aside).any()
 
 
 def test_killed_in_a_second_pass_and_continued(runs, monkeypatch):

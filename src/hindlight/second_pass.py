@@ -22,6 +22,7 @@ from hindlight.store import Columns
 from hindlight.systems import unit_vectors
 from hindlight.verdicts import Place, Session, all_columns, chances, field_of, judged_in, places_of
 
+FULL_BEFORE = "not even the first all fit"
 FULL = "no more fit into their frames clear of sources and of each other"
 SPENT = "[controls] most_per_field is reached"
 DECIDED = "these decide"
@@ -84,7 +85,7 @@ def _asking(session: Session, positions: Columns, fields: Sequence[Field], stopp
     p = chances(places, settings)
     asks = []
     for found in fields:
-        if found.n_trials > 1 or found.lift is not None:
+        if found.number < 0 and not found.n_passes:  # searched, or bright
             continue
         mine = [place for place in places if place.found is found]
         index = tuple(place.index for place in mine if p.short[place.at] and place.target not in stopped)
@@ -112,7 +113,7 @@ def _provided(
         if had and len(ask.found.controls) + len(had[0]) <= chosen.most_per_field:
             found[ask.found.number] = had[0]
         elif more_controls.was_full(positions, ask.wanted.field, chosen):
-            _stop(ask, FULL, stopped)
+            _stop(ask, FULL_BEFORE, stopped)
         elif had or ask.wanted.size <= len(ask.wanted.pool):
             _stop(ask, SPENT, stopped)
         else:
@@ -245,8 +246,8 @@ def _said(
     """What became of those who asked: a sentence for each way it ended, and a line in the log for each target."""
     ends: dict[str, list[tuple[str, int, int]]] = {}
     for place in places:
-        if place.target not in before and stopped.get(place.target) in (None, FULL):
-            continue  # that the first did not all fit is said of the field
+        if place.target not in before and stopped.get(place.target, FULL_BEFORE) == FULL_BEFORE:
+            continue  # that the first did not all fit is said anyway
         rank = place.found.ranked.ranks[place.index]
         now = int(place.found.ranked.n_controls[place.index])
         end = WITHIN if rank.exceeded_by else DECIDED if not p.short[place.at] else stopped[place.target]
