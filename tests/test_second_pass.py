@@ -1,6 +1,7 @@
 """More controls for targets beyond all of the first: p-values that hold, budgets, frames, killed and continued runs."""
 
 import shutil
+from types import SimpleNamespace
 
 import numpy as np
 import pyarrow.parquet as pq
@@ -9,10 +10,12 @@ from astropy.table import Table
 
 import sequential
 import skies
-from hindlight import plan, recovery, tasks
+from hindlight import host, plan, recovery, second_pass, tasks
+from hindlight.conclude import Field
+from hindlight.judge import Judgement
 from hindlight.more_controls import GROWTH, Wanted, next_size, passes, sites
 from hindlight.positions import Targets, first_controls, separation_deg
-from hindlight.settings import Controls
+from hindlight.settings import Controls, Settings
 from hindlight.store import RunFolder
 from hindlight.systems import unit_vectors
 from test_mine import candidates, mine
@@ -77,6 +80,17 @@ def test_more_controls_stand_on_the_lattice_of_the_first():
     control = kind == "control"
     nearest = separation_deg(new, unit_vectors(positions["ra"][control], positions["dec"][control])).min(axis=1)
     assert np.sum(np.abs(nearest - 0.03) < 1e-5) > 40  # next nodes of one lattice
+
+
+def test_a_target_listed_after_a_pass_keeps_its_own_values():
+    """Positions stand by id in what is judged, whether a target came before the controls of a pass or after them."""
+    key = ("", "core_n_used")
+    targets, controls, more = np.array([50]), np.array([1, 2]), np.array([10, 11])
+    found = Field(0, targets, controls, np.ones((1, 2), bool), judgement=Judgement(3, {key: np.array([1, 2, 50])}))
+    deep = Field(-1, targets, np.append(controls, more), np.ones((1, 4), bool))
+    session = SimpleNamespace(plugins=host.load(host.PluginSpec()))
+    merged = second_pass._merged(session, found, deep, Judgement(2, {key: more}), more)
+    np.testing.assert_array_equal(merged.values[key], deep.ids)
 
 
 def archive(folder):
@@ -148,7 +162,10 @@ def test_what_has_been_judged_stays(runs):
         assert same[0] == same[1]
         tables = [Table.read(runs / run / "channels.ecsv") for run in ("small", name)]
         np.testing.assert_array_equal(tables[0]["threshold"], tables[1]["threshold"])
-        positions = RunFolder(runs / name).positions()
+        run = RunFolder(runs / name)
+        order = tasks.Order(str(run.path), Settings(), host.PluginSpec(), run.version())
+        assert tasks.frame_evidence(order, 0).frames["n_controls"].max() == FIRST
+        positions = run.positions()
         assert [len(found.ids) for found in recovery._fields(positions)] == [FIRST]
 
 
