@@ -93,6 +93,20 @@ def test_a_target_listed_after_a_pass_keeps_its_own_values():
     np.testing.assert_array_equal(merged.values[key], deep.ids)
 
 
+def test_who_asks_later_shares_what_is_added():
+    """Two sets of targets of one cell get one set of new controls, those of another cell their own."""
+
+    def ask(cell, targets, size):
+        want = Wanted(cell, np.array(targets), np.arange(64), size)
+        return second_pass.Ask(Field(cell, want.targets, want.pool, np.ones((len(targets), 64), bool)), (0,), want)
+
+    wanted = second_pass._together([ask(7, [3, 5], 100), ask(8, [9], 70), ask(7, [1], 120)])
+    assert {cell: (want.targets.tolist(), want.size) for cell, want in wanted.items()} == {
+        7: ([1, 3, 5], 120),
+        8: ([9], 70),
+    }
+
+
 def archive(folder):
     """A pulser too faint for single frames, eight blanks, and frames aside that hold controls but not the pulser."""
     pulser = skies.Source("pulser", 0.0, 0.0, lambda k, _d, _s: 9.0 if k % 6 == 0 else 0.0)

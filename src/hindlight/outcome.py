@@ -163,7 +163,8 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings) -> tuple[st
     if p.short.any():
         said.append(
             f"{int(p.short.sum())} targets lie beyond every control, but their number cannot decide at q < "
-            f"{settings.ranking.level:g}: {p.needed} controls would ([controls] most_per_field, [search] controls)"
+            f"{settings.ranking.level:g}: {p.needed} controls would ([controls] per_field and most_per_field, "
+            "[search] controls)"
         )
     said += [*_error_remarks(fields), *_confusion_remarks(fields)]
     if p.extrapolated.any():

@@ -140,26 +140,36 @@ def _stop(ask: Ask, why: str, stopped: dict[int, str]) -> None:
 def _planned(session: Session, frames: Columns, positions: Columns, asks: Sequence[Ask], size_deg: float) -> Columns:
     """The position table with new controls for those fields that have room for them, all in one round."""
     chosen, round_number = session.order.settings.controls, plan.next_round(positions)
+    wanted = _together(asks)
     within: dict[int, plan.FieldFrames] = {}
     sites = {}
-    for ask in asks:
-        rows = np.searchsorted(positions["id"], ask.wanted.targets)
+    for number, want in wanted.items():
+        rows = np.searchsorted(positions["id"], want.targets)
         here = plan.field_frames(frames, unit_vectors(positions["ra"][rows], positions["dec"][rows]))
-        places = more_controls.sites(positions, ask.wanted, frames, here, size_deg)
-        worth, vectors = ask.wanted.worth, unit_vectors(*places)
-        room = more_controls.serving_sites(frames, here, vectors, chosen.shared_frames, worth)
-        if room.any(axis=0).sum() >= worth:  # before any pixel is read
-            within[ask.found.number], sites[ask.found.number] = here, places
+        places = more_controls.sites(positions, want, frames, here, size_deg)
+        vectors = unit_vectors(*places)
+        room = more_controls.serving_sites(frames, here, vectors, chosen.shared_frames, want.worth)
+        if room.any(axis=0).sum() >= want.worth:  # before any pixel is read
+            within[number], sites[number] = here, places
     if not within:
         return positions
     bright = measuring.bright_sources(session, frames, within)
-    for ask in asks:
-        if (number := ask.found.number) in within:
-            here = within[number]
-            positions = more_controls.add(
-                positions, ask.wanted, sites[number], round_number, frames, here, bright[number], chosen
-            )
+    for number, here in within.items():
+        positions = more_controls.add(
+            positions, wanted[number], sites[number], round_number, frames, here, bright[number], chosen
+        )
     return positions
+
+
+def _together(asks: Sequence[Ask]) -> dict[int, more_controls.Wanted]:
+    """What is wanted for each cell: those of one cell who have come apart share what is added."""
+    wanted: dict[int, more_controls.Wanted] = {}
+    for ask in asks:
+        other = wanted.setdefault(ask.wanted.field, ask.wanted)
+        if other is not ask.wanted:
+            targets = np.union1d(other.targets, ask.wanted.targets)
+            wanted[other.field] = replace(other, targets=targets, size=max(other.size, ask.wanted.size))
+    return wanted
 
 
 def _deeper(
@@ -175,7 +185,7 @@ def _deeper(
             rest.append(found)
             continue
         rest.append(conclude.without(found, ask.index))
-        conclude.rank(rest[-1], session.plugins, session.order.settings)
+        _rank(session, found, rest[-1])
         made.append(_apart(session, frames, positions, ask, more[found.number]))
     fresh = judged_in(session, made, _more_by(made, asks, more), tasks.judge_positions, "judging more controls")
     for deep, ask in zip(made, asks, strict=True):
@@ -214,10 +224,10 @@ def _split(session: Session, whole: judge.Judgement, periods: bool) -> judge.Jud
     return judge.Judgement(whole.n, {key: v for key, v in whole.values.items() if (key[1] in theirs) == periods})
 
 
-def _rank(session: Session, found: Field, deep: Field) -> None:
-    """Rank a field apart; what counts as seen is told by the first controls, for all targets of a field alike."""
-    conclude.rank(deep, session.plugins, session.order.settings)
-    deep.thresholds = found.thresholds
+def _rank(session: Session, found: Field, made: Field) -> None:
+    """Rank what was made of a field; what counts as seen is told by the first controls, for all targets of a field alike."""
+    conclude.rank(made, session.plugins, session.order.settings)
+    made.thresholds = found.thresholds
 
 
 def _search_periods(session: Session, made: Sequence[Field], asks: Sequence[Ask]) -> None:
