@@ -25,8 +25,8 @@ def contents(run):
 
 
 def test_same_bytes_for_any_number_of_workers(tmp_path):
-    """One process, two processes and four write the same bytes."""
-    folder = small(tmp_path)
+    """One process, two processes and four write the same bytes, with a second pass for the flare."""
+    folder = small(tmp_path, per_field=50)
     mine(*arguments(folder, tmp_path / "one"), "--workers", 1)
     expected = contents(tmp_path / "one")
     for workers in (2, 4):
@@ -35,7 +35,9 @@ def test_same_bytes_for_any_number_of_workers(tmp_path):
         assert found.keys() == expected.keys()
         for name, data in expected.items():
             assert found[name] == data, name
-    assert candidates(tmp_path / "one")["flare"]["standing"] == "single"
+    flare = candidates(tmp_path / "one")["flare"]
+    assert flare["standing"] == "single"
+    assert flare["n_controls"] > 50
 
 
 def test_a_scheduler_that_exists_is_used(tmp_path, monkeypatch):
@@ -54,8 +56,11 @@ def test_a_scheduler_that_exists_is_used(tmp_path, monkeypatch):
 
 
 def test_new_files_and_targets_extend_a_finished_run(tmp_path):
-    """Frames added later are measured, and nothing else again; a target added later gets a row; a changed file is said."""
-    folder = small(tmp_path)
+    """Frames added later are measured, and nothing else again; a target added later gets a row; a changed file is said.
+
+    Controls of a second pass are measured in new frames as all others are.
+    """
+    folder = small(tmp_path, per_field=50)
     late = sorted((folder / "frames").iterdir())[-6:]
     (tmp_path / "aside").mkdir()
     for path in late:
@@ -63,6 +68,8 @@ def test_new_files_and_targets_extend_a_finished_run(tmp_path):
     run = tmp_path / "run"
     mine(*arguments(folder, run))
     assert candidates(run)["flare"]["n_frames"] == 18
+    n_controls = candidates(run)["flare"]["n_controls"]
+    assert n_controls > 50
     before = {p: (p.stat().st_ino, p.stat().st_mtime_ns) for p in (run / "measurements").rglob("*.parquet")}
     for path in late:
         shutil.move(tmp_path / "aside" / path.name, path)
@@ -72,6 +79,7 @@ def test_new_files_and_targets_extend_a_finished_run(tmp_path):
     table = candidates(run)
     assert table["flare"]["n_frames"] == 24
     assert table["later"]["n_frames"] == 24
+    assert table["flare"]["n_controls"] >= 0.9 * n_controls
     for path, stat in before.items():
         assert (path.stat().st_ino, path.stat().st_mtime_ns) == stat
     late[0].unlink()

@@ -11,7 +11,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from hindlight import calibrate
-from hindlight.conclude import Field, rank
+from hindlight.conclude import Field, rank, without
 from hindlight.host import Plugins
 from hindlight.judge import Judgement, joined, taken
 from hindlight.lifted import COPY, Lift, Residuals, copies
@@ -89,7 +89,7 @@ def apart(found: Field, left: Evidence, n_targets: int, settings: Settings) -> t
         share = of.share[lit][:, members].max(axis=1)
         leading = left[labels[lit[int(share.argmax())]]]
         made.append(_copied(found, members, Lift(levels), wanted, float(share.max()), len(leading.values)))
-    return _without(found, [index for members in groups.values() for index in members]), made
+    return without(found, [index for members in groups.values() for index in members]), made
 
 
 def _brightness(found: Field, labels: list[str], left: Evidence) -> _Brightness:
@@ -116,12 +116,3 @@ def _copied(found: Field, members: list[int], lift: Lift, wanted: int, share: fl
     )  # below those of searched targets, which may be taken out of fields of their own
     field = Field(number, targets, controls, serving, found.n_trials, lift, size)
     return Bright(found, field)
-
-
-def _without(found: Field, index: list[int]) -> Field:
-    """The field without some of its targets."""
-    kept = np.setdiff1d(np.arange(len(found.targets)), np.array(index, np.int64))
-    rest = replace(found, targets=found.targets[kept], serving=found.serving[kept])
-    judgement = taken(found.judgement, found.rows(rest.ids))
-    rest.judgement = replace(judgement, faults=found.judgement.faults, calls=found.judgement.calls)
-    return rest

@@ -6,7 +6,7 @@ Pure: judgements in, ranks and p-values out. The arithmetic is in `calibrate`, o
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from hindlight import calibrate, ranking
 from hindlight.host import Plugins
-from hindlight.judge import Judgement, full_columns
+from hindlight.judge import Judgement, full_columns, taken
 from hindlight.lifted import Lift, originals
 from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.plan import serving_controls
@@ -28,7 +28,8 @@ class Field:
 
     Targets that were searched are in fields apart, with their best places and those of their controls, out of
     `n_trials` each; so are bright ones, with copies of the controls made as bright as they are (`lift`), which are alike in
-    groups of `group_size`. The numbers of such fields are below zero.
+    groups of `group_size`; so are those that had `n_passes` second passes, with the controls these added. The numbers of such
+    fields are below zero. `searched` are the positions whose periods have been searched.
     """
 
     number: int
@@ -38,6 +39,8 @@ class Field:
     n_trials: int = 1
     lift: Lift | None = None
     group_size: float = 1.0
+    n_passes: int = 0
+    searched: IntArray = field(default_factory=lambda: np.empty(0, np.int64))
     judgement: Judgement = field(default_factory=lambda: Judgement(0))
     ranks: ranking.FieldRanks | None = None
     thresholds: dict[str, ranking.Thresholds] = field(default_factory=dict)
@@ -110,6 +113,15 @@ def _places(positions: Mapping[str, Any], parent: int, nodes: IntArray) -> IntAr
     rows = np.flatnonzero(positions["parent"] == parent)
     rows = rows[np.argsort(positions["node"][rows])]
     return np.asarray(positions["id"][rows[np.searchsorted(positions["node"][rows], nodes)]])
+
+
+def without(found: Field, index: Sequence[int]) -> Field:
+    """The field without some of its targets, given by their places in it; it must be ranked again."""
+    kept = np.setdiff1d(np.arange(len(found.targets)), np.array(index, np.int64))
+    rest = replace(found, targets=found.targets[kept], serving=found.serving[kept])
+    judgement = taken(found.judgement, found.rows(rest.ids))
+    rest.judgement = replace(judgement, faults=found.judgement.faults, calls=found.judgement.calls)
+    return rest
 
 
 def rank(found: Field, plugins: Plugins, settings: Settings) -> None:

@@ -147,7 +147,7 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings) -> tuple[st
     """What the last lines of a run must say."""
     said = []
     sizes = [int(n) for found in fields for n in found.ranked.n_controls]
-    placed = [int(n) for found in fields if found.n_trials == 1 and not found.lift for n in found.ranked.n_controls]
+    placed = [int(n) for found in fields if _is_plain(found) for n in found.ranked.n_controls]
     alone = sum(size == 0 for size in sizes)
     if alone:
         said.append(f"{alone} targets have no control and so no p-value: nothing is said of their variation")
@@ -163,12 +163,18 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings) -> tuple[st
     if p.short.any():
         said.append(
             f"{int(p.short.sum())} targets lie beyond every control, but their number cannot decide at q < "
-            f"{settings.ranking.level:g}: {p.needed} controls would ([controls] per_field, [search] controls)"
+            f"{settings.ranking.level:g}: {p.needed} controls would ([controls] per_field and most_per_field, "
+            "[search] controls)"
         )
     said += [*_error_remarks(fields), *_confusion_remarks(fields)]
     if p.extrapolated.any():
         said.append(f"{int(p.extrapolated.sum())} p-values are upper bounds of a fitted tail (p_is_extrapolated)")
     return tuple(said)
+
+
+def _is_plain(found: Field) -> bool:
+    """Whether a field holds blank sky as it was chosen first: no places that were chosen, no copies, none added."""
+    return found.n_trials == 1 and found.lift is None and not found.n_passes
 
 
 def _search_remarks(fields: Sequence[Field], settings: Settings) -> list[str]:
@@ -191,8 +197,7 @@ def _error_remarks(fields: Sequence[Field]) -> list[str]:
     for found in fields:
         controls = found.rows(found.controls)
         for (label, full), values in found.judgement.values.items():
-            typical = found.n_trials == 1 and found.lift is None  # a place chosen is not
-            if full == "core_reduced" and controls.size and typical:
+            if full == "core_reduced" and controls.size and _is_plain(found):
                 scatter.setdefault(label, []).extend(np.sqrt(values[controls][np.isfinite(values[controls])]).tolist())
     said = []
     for label, values in sorted(scatter.items()):
@@ -277,7 +282,10 @@ def candidate_table(
 
 
 def control_columns(fields: Sequence[Field], plugins: Plugins) -> tuple[list[TableColumn], dict[str, Any]]:
-    """The controls' table: id, field, every calibrated column, and each control's p-value among the others."""
+    """The controls' table: id, field, every calibrated column, and each control's p-value among the others.
+
+    A control has one row, though the sets of second passes hold those of earlier ones.
+    """
     calibrated = [
         _full(plugin.name, column)
         for plugin in [*plugins.statistics, *plugins.period_searches]
@@ -292,9 +300,13 @@ def control_columns(fields: Sequence[Field], plugins: Plugins) -> tuple[list[Tab
         TableColumn("p_value", "rank of the control among all controls of its field", ucd="stat.probability"),
     ]
     values: dict[str, list[Any]] = {c.name: [] for c in declared}
+    told: set[int] = set()
     for found in fields:
         cells = plugin_cells(found, plugins)
         for control, row, p in zip(found.controls, found.rows(found.controls), found.ranked.control_p, strict=True):
+            if found.n_passes and int(control) in told:
+                continue
+            told.add(int(control))
             values["id"].append(int(control) % COPY)
             values["copy"].append(int(control) // COPY)
             values["field"].append(found.number)

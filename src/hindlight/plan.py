@@ -24,6 +24,7 @@ from hindlight.positions import (
     control_grid,
     field_of,
     field_size,
+    first_controls,
     from_tangent,
     nearest_deg,
     separation_deg,
@@ -192,7 +193,7 @@ def add_targets(positions: Columns, targets: Targets, rows: NDArray[np.int64], s
     ra, dec = targets.ra[rows], targets.dec[rows]
     motion = {name: targets.column(name)[rows] for name in MOTION}
     return _added(
-        positions, "target", ra, dec, field_of(ra, dec, size_deg), _next_round(positions),
+        positions, "target", ra, dec, field_of(ra, dec, size_deg), next_round(positions),
         name=[targets.names[row] for row in rows], **motion,
     )  # fmt: skip
 
@@ -205,7 +206,7 @@ def _added(
     usual = {
         "id": _next_id(positions) + np.arange(n), "name": "", "kind": kind, "ra": ra, "dec": dec, "pm_ra_cosdec": 0.0,
         "pm_dec": 0.0, "ref_epoch": 2000.0, "field": field, "round": round_, "clear_radius": 0.0, "search": -1,
-        "parent": -1, "place_err": 0.0, "node": -1,
+        "parent": -1, "place_err": 0.0, "node": -1, "added_for": -1,
     }  # fmt: skip
     rows = {**usual, **more}
     return append(positions, {
@@ -218,7 +219,8 @@ def _next_id(positions: Columns) -> int:
     return int(positions["id"].max()) + 1 if len(positions["id"]) else 0
 
 
-def _next_round(positions: Columns) -> int:
+def next_round(positions: Columns) -> int:
+    """The first round that has no position yet."""
     return int(positions["round"].max()) + 1 if len(positions["round"]) else 0
 
 
@@ -230,7 +232,7 @@ def fields_without_controls(positions: Columns) -> list[int]:
 
 def round_for_controls(known: Columns, positions: Columns) -> int:
     """The round of controls planned now: with the new targets if there are any, else one of their own."""
-    return int(positions["round"].max()) if len(positions["id"]) > len(known["id"]) else _next_round(positions)
+    return int(positions["round"].max()) if len(positions["id"]) > len(known["id"]) else next_round(positions)
 
 
 def lost_frames(frames: Columns) -> list[dict[str, Any]]:
@@ -331,7 +333,7 @@ def add_controls(
 ) -> Columns:  # fmt: skip
     """The position table with controls for one field, in the given round; its targets join a field that has theirs."""
     mine = (positions["kind"] == "target") & (positions["field"] == field)
-    ra, dec = _clear_of_targets(positions, mine, spacing_deg, spacing_deg, settings.per_field, field, frames, within)
+    ra, dec = clear_of_targets(positions, mine, spacing_deg, spacing_deg, settings.per_field, field, frames, within)
     vectors = unit_vectors(ra, dec)
     free = np.ones(len(ra), bool)
     if len(bright.ra):
@@ -356,7 +358,7 @@ def _neighbour(
 
     Only controls within `reach_deg` of the targets' middle count, so that a field whose own would be nearer has its own.
     """
-    near = positions["kind"] == "control"
+    near = first_controls(positions)
     vectors = unit_vectors(positions["ra"], positions["dec"])
     near[near] = separation_deg(vectors[near], middle[None, :])[:, 0] <= reach_deg
     in_frames = serves(within.covered, covered(frames, within.rows, vectors[near]), settings.shared_frames)
@@ -393,8 +395,8 @@ def owners(positions: Mapping[str, Any], ids: IntArray) -> IntArray:
     return np.where(tried, np.searchsorted(positions["id"], positions["parent"][rows]), rows)
 
 
-def _clear_of_targets(
-    positions: Columns, middle_of: NDArray[np.bool_], spacing_deg: float, clear_deg: float, wanted: int, seed: int,
+def clear_of_targets(
+    positions: Mapping[str, Any], middle_of: NDArray[np.bool_], spacing_deg: float, clear_deg: float, wanted: int, seed: int,
     frames: Columns, within: FieldFrames,
 ) -> tuple[FloatArray, FloatArray]:  # fmt: skip
     """Places around the middle of some targets, `spacing_deg` apart and `clear_deg` from where any target may be."""
@@ -409,7 +411,7 @@ def _clear_of_targets(
     return ra[free], dec[free]
 
 
-def _middle(positions: Columns, of: NDArray[np.bool_]) -> FloatArray:
+def _middle(positions: Mapping[str, Any], of: NDArray[np.bool_]) -> FloatArray:
     """The direction halfway between some positions, shape (3,)."""
     total = unit_vectors(positions["ra"][of], positions["dec"][of]).sum(axis=0)
     return np.asarray(total / np.linalg.norm(total))
@@ -476,7 +478,7 @@ def add_trials(positions: Columns, group: Sought) -> Columns:
 
 def _rounds(positions: Columns, n: int) -> IntArray:
     """New rounds for `n` places."""
-    return np.asarray(_next_round(positions) + np.arange(n) // ROUND_PLACES)
+    return np.asarray(next_round(positions) + np.arange(n) // ROUND_PLACES)
 
 
 def add_blanks(
@@ -494,7 +496,7 @@ def add_blanks(
     clear = group.reach + spacing_deg
     mine = np.isin(positions["id"], group.targets)
     field, search = int(positions["field"][mine][0]), int(group.targets[0])
-    ra0, dec0 = _clear_of_targets(positions, mine, clear + group.reach, clear, wanted, search, frames, within)
+    ra0, dec0 = clear_of_targets(positions, mine, clear + group.reach, clear, wanted, search, frames, within)
     whole = np.ones(len(ra0), bool)
     for angle in RIM:
         rim = from_tangent(
@@ -515,6 +517,13 @@ def add_blanks(
 def add_comparisons(positions: Columns, field: int, round_number: int, ra: FloatArray, dec: FloatArray) -> Columns:
     """The position table with comparisons of one field in the given round."""
     return _added(positions, "comparison", ra, dec, field, round_number)
+
+
+def add_more_controls(
+    positions: Columns, field: int, round_number: int, ra: FloatArray, dec: FloatArray, clear_deg: float, targets: IntArray
+) -> Columns:  # fmt: skip
+    """The position table with controls of a second pass, each for one of the targets that asked for it (ids, shape (n,))."""
+    return _added(positions, "control", ra, dec, field, round_number, clear_radius=clear_deg, added_for=targets)
 
 
 def no_positions() -> Columns:

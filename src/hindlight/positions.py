@@ -294,6 +294,11 @@ def from_tangent(
     return np.asarray(ra % 360.0), np.asarray(dec)
 
 
+def first_controls(positions: Mapping[str, Any]) -> NDArray[np.bool_]:
+    """Which rows of a position table are controls that every target of their field has, not those of a second pass."""
+    return np.asarray((positions["kind"] == "control") & (positions["added_for"] < 0))
+
+
 def serves(target_frames: NDArray[np.bool_], control_frames: NDArray[np.bool_], share: float) -> NDArray[np.bool_]:
     """Which controls are in at least a fraction `share` of each target's frames.
 

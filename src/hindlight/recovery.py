@@ -27,7 +27,7 @@ from hindlight.errors import NothingToDoError, UsageError
 from hindlight.fence import call
 from hindlight.lightcurve import FloatArray, IntArray, LightCurve
 from hindlight.plugin import Column, PeriodSearch, Statistic
-from hindlight.positions import read_targets, serves
+from hindlight.positions import first_controls, read_targets, serves
 from hindlight.record import Request
 from hindlight.schema import COMPLETENESS, COMPLETENESS_LIMITS, COMPLETENESS_TARGETS
 from hindlight.settings import Settings
@@ -261,7 +261,7 @@ def _fields(positions: Columns) -> list[FieldControls]:
     is_target = (positions["kind"] == "target") & (positions["search"] < 0)
     found = []
     for number in sorted(set(positions["field"][is_target].tolist())):
-        here = (positions["kind"] == "control") & (positions["field"] == number)
+        here = first_controls(positions) & (positions["field"] == number)
         order = np.argsort(positions["id"][here])
         vectors = unit_vectors(positions["ra"][here], positions["dec"][here])[order]
         names = tuple(positions["name"][is_target & (positions["field"] == number)].tolist())

@@ -1,7 +1,8 @@
 """The stages of `mine`, one after the other: what is done, what is left, and which tables are written when.
 
 Every stage can be stopped at any instant; the same call continues. Work is handed to a crew, see `hindlight.crew`;
-what follows measuring is in `hindlight.verdicts`.
+pixels are read in `hindlight.measuring`, what
+follows is in `hindlight.verdicts` and `hindlight.second_pass`.
 """
 
 from __future__ import annotations
@@ -15,7 +16,22 @@ from typing import Any
 
 import numpy as np
 
-from hindlight import archive, comparisons, duplicates, ensemble, files, host, likeness, plan, record, store, tasks
+from hindlight import (
+    archive,
+    comparisons,
+    duplicates,
+    ensemble,
+    files,
+    host,
+    likeness,
+    measuring,
+    plan,
+    record,
+    second_pass,
+    store,
+    tasks,
+    verdicts,
+)  # fmt: skip
 from hindlight.channels import assign
 from hindlight.crew import assembled
 from hindlight.errors import HindlightError, NothingToDoError, UsageError
@@ -28,7 +44,7 @@ from hindlight.settings import Settings
 from hindlight.store import Columns, RunFolder
 from hindlight.systems import unit_vectors
 from hindlight.tables import astropy_table, read_ecsv, rows_to_columns, write_table
-from hindlight.verdicts import Session, Watcher, verdicts
+from hindlight.verdicts import Session, Watcher
 
 SMALL_WORK = 2_000_000  # measurements; up to this many the work is done in this process unless told otherwise
 
@@ -85,7 +101,7 @@ def _mine_locked(
         session = replace(session, order=replace(order, version=run.version()))
         positions = _planned(session, frames, size)
         session = replace(session, order=replace(order, version=run.version()))
-        return _measured_and_judged(session, frames, positions, rejects)
+        return _measured_and_judged(session, frames, positions, rejects, size)
 
 
 def _most_positions(frames: Columns, targets: Targets, settings: Settings) -> int:
@@ -128,14 +144,26 @@ def _same_exposure(session: Session, frames: Columns, pairs: duplicates.Pairs) -
     return same
 
 
-def _measured_and_judged(session: Session, frames: Columns, positions: Columns, rejects: list[Row]) -> Outcome:
-    pieces = store.pieces(frames, positions)
-    _measure(session, pieces)
-    rejects = _distinct([*rejects, *store.part_rejects(session.run, pieces)])
-    _write_rejects(session.run, rejects)
+def _measured_and_judged(
+    session: Session, frames: Columns, positions: Columns, rejects: list[Row], size_deg: float
+) -> Outcome:
+    """All after planning: what is measured is judged and ranked, with more controls where they are wanted."""
+    measuring.measure(session, store.pieces(frames, positions))
+    _with_parts(session, frames, positions, rejects)
     said = _solved(session, frames, positions)
     session = replace(session, order=replace(session.order, version=session.run.version()))
-    return verdicts(session, frames, positions, rejects, said)
+    first = verdicts.ranked_fields(session, frames, positions)
+    last = second_pass.carried_out(session, frames, positions, first, size_deg)
+    rejects = _with_parts(last.session, frames, last.positions, rejects)
+    return verdicts.tabled(last.session, frames, last.positions, rejects, last.fields, (*said, *last.said))
+
+
+def _with_parts(session: Session, frames: Columns, positions: Columns, rejects: Sequence[Row]) -> list[Row]:
+    """What was set aside, in measuring too, once it is written."""
+    measured = store.part_rejects(session.run, store.pieces(frames, positions))
+    every = _distinct([*rejects, *measured])
+    _write_rejects(session.run, every)
+    return every
 
 
 @contextmanager
@@ -244,7 +272,7 @@ def _planned(session: Session, frames: Columns, size_deg: float) -> Columns:
             f"no target is covered by any of the {len(frames['id'])} frames; "
             f"check the positions (ICRS degrees) and the archive{hint}"
         )
-    bright = _bright_sources(session, frames, within)
+    bright = measuring.bright_sources(session, frames, within)
     chosen = _comparisons(session, frames, positions, within, bright)
     for number, (ra, dec) in chosen.items():
         positions = plan.add_comparisons(positions, number, round_of_controls, ra, dec)
@@ -279,31 +307,6 @@ def _sought(
             groups = plan.sought(positions, session.targets, positions["id"][mine], beam, settings.search)
             found += [(here, group) for group in groups]
     return found
-
-
-def _bright_sources(
-    session: Session, frames: Columns, within: Mapping[int, plan.FieldFrames]
-) -> dict[int, plan.BrightSources]:
-    """Sources that controls of each field must keep clear of, from its reference frames."""
-    per_channel = session.order.settings.controls.reference_frames
-    per_field = {number: plan.reference_frames(frames, here.rows, per_channel) for number, here in within.items()}
-    wanted = sorted({int(row) for rows in per_field.values() for row in rows})
-    session.watcher.stage("looking for bright sources", len(wanted))
-    results: dict[int, plan.BrightSources] = {}
-
-    def done(number: int, result: plan.BrightSources) -> None:
-        results[wanted[number]] = result
-        session.watcher.step()
-
-    session.crew.run(tasks.find_bright, [(session.order, int(frames["id"][row])) for row in wanted], done)
-    labels = frames["channel"]
-    return {
-        number: plan.joined([
-            plan.persistent([results[int(row)] for row in rows if labels[row] == label])
-            for label in sorted(set(labels[rows].tolist()))
-        ])
-        for number, rows in per_field.items()
-    }  # fmt: skip
 
 
 def _comparisons(
@@ -376,13 +379,3 @@ def _given_fluxes(session: Session, positions: Columns) -> dict[int, float]:
     mine = positions["kind"] == "comparison"
     places = zip(positions["ra"][mine].tolist(), positions["dec"][mine].tolist(), strict=True)
     return {int(i): flux[place] for i, place in zip(positions["id"][mine], places, strict=True) if place in flux}
-
-
-def _measure(session: Session, pieces: Sequence[store.Piece]) -> None:
-    """Measure every piece that has no part yet."""
-    todo = [piece for piece in pieces if not session.run.part(piece).is_file()]
-    session.watcher.stage("measuring", len(pieces))
-    session.watcher.step(len(pieces) - len(todo))
-    log.info("measuring: %d of %d pieces to do", len(todo), len(pieces))
-    jobs = [(session.order, piece) for piece in todo]
-    session.crew.run(tasks.measure_piece, jobs, lambda _n, _r: session.watcher.step())

@@ -237,6 +237,11 @@ POSITIONS = (
     TableColumn("parent", "where places are searched: the id of that in the middle, -1 elsewhere", dtype="int64"),
     TableColumn("place_err", "1-sigma error per axis of a place tried, from the distance to the next", unit="arcsec"),
     TableColumn("node", "place on the lattice around it, the same number for the same offset; else -1", dtype="int64"),
+    TableColumn(
+        "added_for",
+        "for a control of a second pass: a target that lay beyond all controls before; else -1",
+        dtype="int64",
+    ),
 )
 
 FRAME_SOLUTION = (

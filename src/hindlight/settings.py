@@ -105,6 +105,12 @@ class Controls:
     """Blank positions that set the null."""
 
     per_field: int = setting(512, "blank positions wanted for each field of sky", minimum=0)
+    most_per_field: int = setting(
+        8192,
+        "and at most so many, four times as many at a time, where a target lies beyond all of them and their number cannot "
+        "decide; per_field or less: none are added",
+        minimum=0,
+    )
     separation: float = setting(2.0, "least distance between controls and to targets", unit="FWHM", minimum=1)
     shared_frames: float = setting(
         0.9, "a control serves a target when it is in at least this fraction of its frames", minimum=0, maximum=1
@@ -268,6 +274,7 @@ class Settings:
             "companions",
         )
         sections = {name: as_plain(getattr(self, name)) for name in names}
+        del sections["controls"]["most_per_field"]  # it only says how many more are measured
         return sections | {"frames": {f"block {block.number}": block.as_plain() for block in self.frames}}
 
 

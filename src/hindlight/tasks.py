@@ -29,10 +29,11 @@ from hindlight.files import check_unchanged, local_path
 from hindlight.headers import SetAsideError
 from hindlight.lifted import Lift, originals
 from hindlight.lightcurve import Block, Channel, FloatArray, IntArray, LightCurve
+from hindlight.more_controls import asking
 from hindlight.opening import FrameToMeasure
-from hindlight.plan import BrightSources, owners
+from hindlight.plan import BrightSources, covered, owners
 from hindlight.plugin import Candidate, Cutout, Finding, Images, PeriodResult
-from hindlight.positions import moved
+from hindlight.positions import first_controls, moved
 from hindlight.ranking import Thresholds
 from hindlight.response import PHOTOGRAPHIC, SEEN_SNR
 from hindlight.robust import median_of
@@ -120,6 +121,9 @@ def measure_piece(order: Order, piece: Piece) -> dict[str, int]:
     """Measure one batch of frames at one round of positions and write the part. Returns counts."""
     tables = book(order.run, order.version)
     rows = np.flatnonzero((tables.frames["batch"] == piece.batch) & (tables.frames["state"] == "current"))
+    asked_by = asking(tables.positions, piece.round)
+    if len(asked_by):  # a second pass is over their frames only
+        rows = rows[covered(tables.frames, rows, asked_by).any(axis=1)]
     who = {name: values[tables.positions["round"] == piece.round] for name, values in tables.positions.items()}
     vectors = unit_vectors(who["ra"], who["dec"])
     anchors = _anchors(tables.positions, piece.round)
@@ -262,11 +266,14 @@ class FrameEvidence:
 
 
 def frame_evidence(order: Order, batch: int) -> FrameEvidence:
-    """What the measurements of one batch, in all rounds, tell of each frame's flux scale."""
+    """What the measurements of one batch tell of each frame's flux scale, in all rounds but those of second passes:
+
+    what has been judged stays as it is when controls are added.
+    """
     tables = book(order.run, order.version)
     who = tables.positions
     plan = [p for p in store.pieces(tables.frames, who) if p.batch == batch]
-    rows = store.read_rows(tables.folder, plan, who["id"][np.isin(who["kind"], ("control", "comparison"))])
+    rows = store.read_rows(tables.folder, plan, who["id"][first_controls(who) | (who["kind"] == "comparison")])
     kind = who["kind"][np.searchsorted(who["id"], rows["position"])]
     usable = np.isfinite(rows["flux"]) & (rows["flux_err"] > 0) & ((rows["flags"] & int(UNUSABLE)) == 0)
     steady = usable & (kind == "comparison")

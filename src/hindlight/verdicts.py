@@ -25,7 +25,7 @@ from hindlight.fence import Fault, merged
 from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.outcome import Outcome
 from hindlight.plugin import Column
-from hindlight.positions import Targets, separation_deg, serves
+from hindlight.positions import Targets, first_controls, separation_deg, serves
 from hindlight.schema import CHANNELS, STANDINGS
 from hindlight.settings import Settings
 from hindlight.store import Columns, RunFolder
@@ -59,20 +59,20 @@ class Session:
     comparisons: Targets | None = None
 
 
-def verdicts(
-    session: Session, frames: Columns, positions: Columns, rejects: Sequence[Mapping[str, Any]], said: Sequence[str]
-) -> Outcome:
-    """Judge, rank, examine and describe every target, and write the result tables.
+def all_columns(session: Session) -> dict[str, Column]:
+    """Every column that is judged, by its full name."""
+    return judge.full_columns([*session.plugins.statistics, *session.plugins.period_searches])
 
-    `said` are sentences for the last lines that earlier stages have to say.
-    """
-    columns = judge.full_columns([*session.plugins.statistics, *session.plugins.period_searches])
+
+def ranked_fields(session: Session, frames: Columns, positions: Columns) -> list[Field]:
+    """Every target judged and ranked, in fields of those that have one null, each with the controls that it had first."""
+    columns = all_columns(session)
     fields = [
         *_fields(frames, positions, session.order.settings),
         *_searched_fields(session, frames, positions, columns),
     ]
     everyone = {found.number: found.ids for found in fields}
-    judged = _judged(session, fields, everyone, tasks.judge_positions, columns, "judging")
+    judged = judged_in(session, fields, everyone, tasks.judge_positions, "judging")
     for found in fields:
         found.judgement = judged[found.number]
         conclude.rank(found, session.plugins, session.order.settings)
@@ -80,11 +80,12 @@ def verdicts(
     everything = [*fields, *(targets.apart for targets in bright)]
     if session.plugins.period_searches:
         gate = {found.number: conclude.gated(found, session.order.settings) for found in everything}
-        searched = _judged(session, everything, gate, tasks.search_positions, columns, "searching periods")
+        searched = judged_in(session, everything, gate, tasks.search_positions, "searching periods")
         for found in everything:
-            judge.spread(found.judgement, searched[found.number], found.rows(gate[found.number]), columns)
+            found.searched = gate[found.number]
+            judge.spread(found.judgement, searched[found.number], found.rows(found.searched), columns)
         _ranked(session, fields, bright)
-    return _tabled(session, frames, positions, rejects, everything, said)
+    return everything
 
 
 def _by_brightness(
@@ -100,7 +101,7 @@ def _by_brightness(
         return list(fields), []
     copies = {targets.number: targets.apart.controls for targets in made}
     lifted = [targets.apart for targets in made]
-    judged = _judged(session, lifted, copies, tasks.judge_positions, columns, "judging controls as bright as targets")
+    judged = judged_in(session, lifted, copies, tasks.judge_positions, "judging controls as bright as targets")
     for targets in made:
         targets.judged(judged[targets.number], columns)
     rest = [found for found, _ in split]
@@ -116,20 +117,27 @@ def _ranked(session: Session, fields: Sequence[Field], bright: Sequence[Bright])
 
 
 def _fields(frames: Columns, positions: Columns, chosen: Settings) -> list[Field]:
-    """The fields that hold targets, with which control may serve which target."""
+    """The fields that hold targets, with which of their first controls may serve which target."""
     found = []
-    is_control = positions["kind"] == "control"
+    is_control = first_controls(positions)
     is_target = (positions["kind"] == "target") & (positions["search"] < 0)
     for number in sorted(set(positions["field"][is_target].tolist())):
         here = positions["field"] == number
         targets, controls = positions["id"][is_target & here], positions["id"][is_control & here]
-        vectors = unit_vectors(positions["ra"], positions["dec"])
-        within = plan.field_frames(frames, vectors[is_target & here])
-        covered = plan.covered(frames, within.rows, vectors[is_control & here])
-        in_frames = serves(within.covered, covered, chosen.controls.shared_frames)
-        serving = plan.serving_controls(positions, np.sort(controls), in_frames)
-        found.append(Field(int(number), np.sort(targets), np.sort(controls), serving))
+        found.append(field_of(frames, positions, int(number), targets, controls, chosen))
     return found
+
+
+def field_of(
+    frames: Columns, positions: Columns, number: int, targets: IntArray, controls: IntArray, chosen: Settings
+) -> Field:
+    """These targets and controls (ids) as a field, with which control may serve which target by its frames and place."""
+    targets, controls = np.sort(targets), np.sort(controls)
+    rows = [np.searchsorted(positions["id"], ids) for ids in (targets, controls)]
+    vectors = [unit_vectors(positions["ra"][some], positions["dec"][some]) for some in rows]
+    within = plan.field_frames(frames, vectors[0])
+    in_frames = serves(within.covered, plan.covered(frames, within.rows, vectors[1]), chosen.controls.shared_frames)
+    return Field(number, targets, controls, plan.serving_controls(positions, controls, in_frames))
 
 
 def _searched_fields(
@@ -176,16 +184,15 @@ def _grouped(ids: IntArray, size: int) -> list[IntArray]:
     return [ids[start : start + size] for start in range(0, len(ids), size)]
 
 
-def _judged(
+def judged_in(
     session: Session,
     fields: Sequence[Field],
     wanted: Mapping[int, IntArray],
     function: Callable[..., judge.Judgement],
-    columns: Mapping[str, Column],
     stage: str,
 ) -> dict[int, judge.Judgement]:
     """Each field's judgement of its wanted positions, made in groups of a fixed size."""
-    size = session.order.settings.ranking.gather_curves
+    size, columns = session.order.settings.ranking.gather_curves, all_columns(session)
     groups = {found.number: _grouped(wanted[found.number], size) for found in fields}
     jobs = [(ids, found.lift) for found in fields for ids in groups[found.number]]
     results = iter(_collected(session, stage, function, jobs, [len(ids) for ids, _ in jobs]))
@@ -206,14 +213,20 @@ class Place:
     name: str
 
 
-def _places(fields: Sequence[Field], positions: Columns) -> list[Place]:
+def places_of(fields: Sequence[Field], positions: Columns) -> list[Place]:
     """Every target, in order of field and id."""
     flat = [(found, index, int(target)) for found in fields for index, target in enumerate(found.targets)]
     names = positions["name"][plan.owners(positions, np.array([target for _, _, target in flat], np.int64))]
     return [Place(f, index, at, target, str(names[at])) for at, (f, index, target) in enumerate(flat)]
 
 
-def _tabled(
+def chances(places: Sequence[Place], settings: Settings) -> conclude.PValues:
+    """P-values and q-values of all targets of the run."""
+    ranks = [place.found.ranked.ranks[place.index] for place in places]
+    return conclude.p_values(ranks, settings, [place.found.group_size for place in places])
+
+
+def tabled(
     session: Session,
     frames: Columns,
     positions: Columns,
@@ -221,11 +234,13 @@ def _tabled(
     fields: Sequence[Field],
     said: Sequence[str],
 ) -> Outcome:
-    """The result tables of a run, made from its ranked fields and written."""
+    """Every target of the ranked fields examined and described; the result tables, made and written.
+
+    `said` are sentences for the last lines that earlier stages have to say.
+    """
     settings, plugins = session.order.settings, session.plugins
-    places = _places(fields, positions)
-    ranks = [place.found.ranked.ranks[place.index] for place in places]
-    p = conclude.p_values(ranks, settings, [place.found.group_size for place in places])
+    places = places_of(fields, positions)
+    p = chances(places, settings)
     with np.errstate(invalid="ignore"):
         beyond = p.q < settings.ranking.level
     examined = _examined(session, places, beyond)
