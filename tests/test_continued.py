@@ -129,6 +129,7 @@ def test_killed_ten_times_and_continued(tmp_path):
     """SIGKILL at ten random moments, continued each time: the same table, and no finished part written again."""
     folder = small(tmp_path, n_frames=20, size=80, per_field=40, batch=1, most=8192)
     mine(*arguments(folder, tmp_path / "quiet"))
+    assert (tmp_path / "quiet" / "measurements" / "round-001").is_dir()  # of a second pass
     run = tmp_path / "run"
     command = [sys.executable, "-m", "hindlight", "mine", "-q", *map(str, arguments(folder, run))]
     rng = np.random.default_rng(17)
