@@ -226,7 +226,7 @@ def test_a_second_pass_is_over_their_frames_only(runs):
 
 
 def test_killed_in_a_second_pass_and_continued(runs, monkeypatch):
-    """Stopped while it measures for a second pass and continued: the same tables; continued again: nothing is measured."""
+    """Stopped while it measures more controls a second time, and continued: the same tables; again: nothing is measured."""
     done = []
 
     def measure(order, piece, work=tasks.measure_piece):
