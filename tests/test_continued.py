@@ -26,7 +26,7 @@ def contents(run):
 
 def test_same_bytes_for_any_number_of_workers(tmp_path):
     """One process, two processes and four write the same bytes, with a second pass for the flare."""
-    folder = small(tmp_path, per_field=50)
+    folder = small(tmp_path, per_field=50, most=8192)
     mine(*arguments(folder, tmp_path / "one"), "--workers", 1)
     expected = contents(tmp_path / "one")
     for workers in (2, 4):
@@ -60,7 +60,7 @@ def test_new_files_and_targets_extend_a_finished_run(tmp_path):
 
     Controls of a second pass are measured in new frames as all others are.
     """
-    folder = small(tmp_path, per_field=50)
+    folder = small(tmp_path, per_field=50, most=8192)
     late = sorted((folder / "frames").iterdir())[-6:]
     (tmp_path / "aside").mkdir()
     for path in late:
@@ -127,8 +127,9 @@ def test_a_damaged_part_is_named_and_made_anew(tmp_path, capsys):
 
 def test_killed_ten_times_and_continued(tmp_path):
     """SIGKILL at ten random moments, continued each time: the same table, and no finished part written again."""
-    folder = small(tmp_path, n_frames=20, size=80, per_field=40, batch=1)
+    folder = small(tmp_path, n_frames=20, size=80, per_field=40, batch=1, most=8192)
     mine(*arguments(folder, tmp_path / "quiet"))
+    assert (tmp_path / "quiet" / "measurements" / "round-001").is_dir()  # of a second pass
     run = tmp_path / "run"
     command = [sys.executable, "-m", "hindlight", "mine", "-q", *map(str, arguments(folder, run))]
     rng = np.random.default_rng(17)

@@ -140,15 +140,15 @@ def test_measured_times_agree_with_astropy(demo):
             assert abs(rows["bjd_tdb"][row] - (2451545.0 + expected / 86400)) < 1e-9
 
 
-def small(tmp_path, n_frames=24, size=100, per_field=130, batch=6, **sky):
-    """A small archive with a flare, a steady source and blanks; returns its folder."""
+def small(tmp_path, n_frames=24, size=100, per_field=130, batch=6, most=0, **sky):
+    """A small archive with a flare, a steady source and blanks; its folder. With `most` there are second passes."""
     flare = skies.Source("flare", 200.0, 0.0, lambda k, _d, _s: 20.0 if k == 7 else 0.0)
     steady = skies.Source("steady", -200.0, 0.0, 8.0)
     blanks = skies.lattice(4, 200.0)
     look = skies.Sky(n_frames=n_frames, size=size, **sky)
     skies.write_sky(tmp_path / "frames", look, [flare, steady], seed=3)
     (tmp_path / "targets.csv").write_text(skies.target_text([flare, steady, *blanks], look), encoding="utf-8")
-    settings = f"[controls]\nper_field = {per_field}\n[flow]\nbatch_frames = {batch}\n"
+    settings = f"[controls]\nper_field = {per_field}\nmost_per_field = {most}\n[flow]\nbatch_frames = {batch}\n"
     (tmp_path / "s.toml").write_text(settings, encoding="utf-8")
     return tmp_path
 

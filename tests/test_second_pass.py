@@ -1,6 +1,7 @@
 """More controls for targets beyond all of the first: p-values that hold, budgets, frames, killed and continued runs."""
 
 import shutil
+from dataclasses import replace
 from types import SimpleNamespace
 
 import numpy as np
@@ -11,11 +12,13 @@ from astropy.table import Table
 import sequential
 import skies
 from hindlight import host, plan, recovery, second_pass, tasks
+from hindlight.calibrate import Rank
 from hindlight.conclude import Field
 from hindlight.judge import Judgement
 from hindlight.more_controls import GROWTH, Wanted, next_size, passes, sites
 from hindlight.positions import Targets, first_controls, separation_deg
-from hindlight.settings import Controls, Settings
+from hindlight.ranking import FieldRanks
+from hindlight.settings import Controls, Ranking, Settings
 from hindlight.store import RunFolder
 from hindlight.systems import unit_vectors
 from test_mine import candidates, mine
@@ -105,6 +108,25 @@ def test_who_asks_later_shares_what_is_added():
         7: ([1, 3, 5], 120),
         8: ([9], 70),
     }
+
+
+@pytest.mark.parametrize("most", [0, FIRST])
+def test_without_a_budget_nobody_asks(most):
+    """None, or one that the first controls fill, switches second passes off."""
+    settings = Settings(controls=Controls(per_field=FIRST, most_per_field=most))
+    session = SimpleNamespace(order=SimpleNamespace(settings=settings))
+    ranks = FieldRanks(
+        (Rank(1 / (FIRST + 1), 0, 9.0, 0, np.zeros(FIRST)),) * 9, (None,) * 9, np.full(9, FIRST), np.ones(1), ()
+    )
+    found = Field(7, np.arange(9), np.arange(9, FIRST + 9), np.ones((9, FIRST), bool), ranks=ranks)
+    positions = plan.add_targets(
+        plan.no_positions(), Targets(tuple("abcdefghi"), np.zeros(9), np.zeros(9), {}), np.arange(9), 1.0
+    )
+    assert second_pass._asking(session, positions, [found], {}) == []
+    session.order.settings = replace(
+        settings, controls=replace(settings.controls, most_per_field=FIRST + 1), ranking=Ranking(level=1e-3)
+    )
+    assert len(second_pass._asking(session, positions, [found], {})) == 1
 
 
 def archive(folder):

@@ -161,21 +161,28 @@ class PValues:
     needed: int
 
 
+def undecided(ranks: Sequence[calibrate.Rank], settings: Settings) -> tuple[NDArray[np.bool_], int]:
+    """Which targets of the run lie beyond all controls, whose number cannot decide, shape (n,), and the number that would."""
+    empirical = np.array([r.p_value for r in ranks])
+    level, dependent = settings.ranking.level, settings.ranking.any_dependence
+    with np.errstate(invalid="ignore"):
+        short = np.array([r.exceeded_by == 0 for r in ranks]) & (
+            calibrate.false_discovery(empirical, dependent) > level
+        )
+    return short, calibrate.controls_needed(int(np.isfinite(empirical).sum()), level, dependent)
+
+
 def p_values(ranks: Sequence[calibrate.Rank], settings: Settings, weights: Sequence[float] | None = None) -> PValues:
     """One p-value and q-value per target; a tail bound stands in where the controls alone cannot decide.
 
     `weights` are the group sizes of the controls that each was ranked with, 1 where they are not given.
     """
     empirical = np.array([r.p_value for r in ranks])
-    level = settings.ranking.level
-    dependent = settings.ranking.any_dependence
-    q = calibrate.false_discovery(empirical, dependent)
+    short, needed = undecided(ranks, settings)
     p = empirical.copy()
-    with np.errstate(invalid="ignore"):
-        undecided = np.array([r.exceeded_by == 0 for r in ranks]) & (q > level)
     extrapolated = np.zeros(len(ranks), dtype=bool)
     testable = np.isfinite(empirical)
-    for index in np.flatnonzero(undecided).tolist():
+    for index in np.flatnonzero(short).tolist():
         bound = calibrate.tail_bound(
             ranks[index].control_distances,
             ranks[index].beyond,
@@ -185,5 +192,5 @@ def p_values(ranks: Sequence[calibrate.Rank], settings: Settings, weights: Seque
         testable[index] = np.isfinite(bound)
         if bound < p[index]:
             p[index], extrapolated[index] = bound, True
-    needed = calibrate.controls_needed(int(np.isfinite(empirical).sum()), level, dependent)
-    return PValues(empirical, p, calibrate.false_discovery(p, dependent), extrapolated, undecided, testable, needed)
+    q = calibrate.false_discovery(p, settings.ranking.any_dependence)
+    return PValues(empirical, p, q, extrapolated, short, testable, needed)

@@ -12,15 +12,16 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
+from numpy.typing import NDArray
 
 from hindlight import conclude, judge, measuring, more_controls, plan, store, tasks
-from hindlight.conclude import Field, PValues
+from hindlight.conclude import Field
 from hindlight.lifted import COPY
 from hindlight.lightcurve import IntArray
 from hindlight.schema import POSITIONS
 from hindlight.store import Columns
 from hindlight.systems import unit_vectors
-from hindlight.verdicts import Place, Session, all_columns, chances, field_of, judged_in, places_of
+from hindlight.verdicts import Place, Session, all_columns, field_of, judged_in, places_of
 
 FULL_BEFORE = "not even the first all fit"
 FULL = "no more fit into their frames clear of sources and of each other"
@@ -73,7 +74,8 @@ def carried_out(
             before |= {t: before.get(t, int(sizes[i])) for t, i in zip(ask.targets, ask.index, strict=True)}
         fields = _deeper(session, frames, positions, fields, going, more)
     places = places_of(fields, positions)
-    return Carried(session, positions, fields, _said(places, chances(places, session.order.settings), before, stopped))
+    short, _ = conclude.undecided([place.rank for place in places], session.order.settings)
+    return Carried(session, positions, fields, _said(places, short, before, stopped))
 
 
 def _asking(session: Session, positions: Columns, fields: Sequence[Field], stopped: Mapping[int, str]) -> list[Ask]:
@@ -82,17 +84,17 @@ def _asking(session: Session, positions: Columns, fields: Sequence[Field], stopp
     if settings.controls.most_per_field <= settings.controls.per_field:
         return []
     places = places_of(fields, positions)
-    p = chances(places, settings)
+    short, needed = conclude.undecided([place.rank for place in places], settings)
     asks = []
     for found in fields:
         if found.number < 0 and not found.n_passes:  # searched, or bright
             continue
         mine = [place for place in places if place.found is found]
-        index = tuple(place.index for place in mine if p.short[place.at] and place.target not in stopped)
+        index = tuple(place.index for place in mine if short[place.at] and place.target not in stopped)
         if index:
             targets = found.targets[list(index)]
             served = int(found.ranked.n_controls[list(index)].min())
-            size = more_controls.next_size(len(found.controls), served, p.needed, settings.controls)
+            size = more_controls.next_size(len(found.controls), served, needed, settings.controls)
             cell = int(positions["field"][np.searchsorted(positions["id"], targets[0])])
             asks.append(Ask(found, index, more_controls.Wanted(cell, targets, found.controls, size)))
     return asks
@@ -251,16 +253,15 @@ def _search_periods(session: Session, made: Sequence[Field], asks: Sequence[Ask]
 
 
 def _said(
-    places: Sequence[Place], p: PValues, before: Mapping[int, int], stopped: Mapping[int, str]
+    places: Sequence[Place], short: NDArray[np.bool_], before: Mapping[int, int], stopped: Mapping[int, str]
 ) -> tuple[str, ...]:
     """What became of those who asked: a sentence for each way it ended, and a line in the log for each target."""
     ends: dict[str, list[tuple[str, int, int]]] = {}
     for place in places:
         if place.target not in before and stopped.get(place.target, FULL_BEFORE) == FULL_BEFORE:
             continue  # that the first did not all fit is said anyway
-        rank = place.found.ranked.ranks[place.index]
         now = int(place.found.ranked.n_controls[place.index])
-        end = WITHIN if rank.exceeded_by else DECIDED if not p.short[place.at] else stopped[place.target]
+        end = WITHIN if place.rank.exceeded_by else DECIDED if not short[place.at] else stopped[place.target]
         ends.setdefault(end, []).append((place.name, before.get(place.target, now), now))
         log.info("second pass: %s: %d controls, %d in the end: %s", *ends[end][-1], end)
     return tuple(_sentence(end, ends[end]) for end in (DECIDED, WITHIN, FULL, SPENT) if end in ends)

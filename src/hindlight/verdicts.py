@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 
 from hindlight import conclude, host, judge, outcome, plan, store, tasks
 from hindlight.bright import Bright, apart
+from hindlight.calibrate import Rank
 from hindlight.candidates import Described, Examined
 from hindlight.conclude import Field
 from hindlight.crew import Crew
@@ -212,18 +213,17 @@ class Place:
     target: int
     name: str
 
+    @property
+    def rank(self) -> Rank:
+        """Where it stands among its controls."""
+        return self.found.ranked.ranks[self.index]
+
 
 def places_of(fields: Sequence[Field], positions: Columns) -> list[Place]:
     """Every target, in order of field and id."""
     flat = [(found, index, int(target)) for found in fields for index, target in enumerate(found.targets)]
     names = positions["name"][plan.owners(positions, np.array([target for _, _, target in flat], np.int64))]
     return [Place(f, index, at, target, str(names[at])) for at, (f, index, target) in enumerate(flat)]
-
-
-def chances(places: Sequence[Place], settings: Settings) -> conclude.PValues:
-    """P-values and q-values of all targets of the run."""
-    ranks = [place.found.ranked.ranks[place.index] for place in places]
-    return conclude.p_values(ranks, settings, [place.found.group_size for place in places])
 
 
 def tabled(
@@ -240,7 +240,8 @@ def tabled(
     """
     settings, plugins = session.order.settings, session.plugins
     places = places_of(fields, positions)
-    p = chances(places, settings)
+    ranks = [place.rank for place in places]
+    p = conclude.p_values(ranks, settings, [place.found.group_size for place in places])
     with np.errstate(invalid="ignore"):
         beyond = p.q < settings.ranking.level
     examined = _examined(session, places, beyond)
