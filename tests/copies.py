@@ -18,6 +18,7 @@ from scipy import ndimage
 import skies
 from hindlight import archive, duplicates, host, likeness, plan, tasks
 from hindlight.channels import assign
+from hindlight.order import Order, frame_label
 from hindlight.schema import FRAMES
 from hindlight.settings import Settings
 
@@ -59,14 +60,14 @@ def found(*folders: Path) -> tuple[dict[str, str], dict[str, str], dict[str, np.
     frames = plan.merge_frames(plan.empty(FRAMES), {**walked.frames, "channel": labels}, walked.present)
     pairs = duplicates.candidates(frames)
     same = np.zeros(len(pairs), bool)
-    order = tasks.Order("", settings, host.PluginSpec())
+    order = Order("", settings, host.PluginSpec())
     for piece in duplicates.jobs(pairs):
         answers = likeness.compare(*tasks.comparison(order, frames, pairs, piece))
         same[piece] = [bool(answer.word) for answer in answers]
     frames["duplicate_of"] = duplicates.settled(frames, pairs.first[same], pairs.second[same])
     frames["related_to"] = duplicates.related(frames)
     frames = plan.batched(frames, 32)
-    names = [tasks.frame_label(frames, row).removesuffix("[0,0]") for row in range(len(frames["id"]))]
+    names = [frame_label(frames, row).removesuffix("[0,0]") for row in range(len(frames["id"]))]
     copies, parts = (
         {names[row]: names[frames[column][row]] for row in np.flatnonzero(frames[column] >= 0)}
         for column in ("duplicate_of", "related_to")

@@ -15,7 +15,9 @@ from astropy.time import Time
 
 import skies
 from hindlight import cli, host, store, tasks
+from hindlight.examining import FrameImages
 from hindlight.lightcurve import LightCurve
+from hindlight.order import Order, book
 from hindlight.settings import Settings
 
 ASIDE_PIXELS = 20.0
@@ -28,7 +30,7 @@ class Run:
     """A run's folder, and what a piece of work is told of it."""
 
     folder: Path
-    order: tasks.Order
+    order: Order
 
 
 @pytest.fixture(scope="module")
@@ -57,7 +59,7 @@ def dithered(tmp_path_factory: pytest.TempPathFactory) -> Run:
                  "--settings", folder / "s.toml", "--without", "lomb_scargle"]  # fmt: skip
     assert cli.run_command([str(a) for a in arguments]) == 0
     run = store.RunFolder(folder / "run")
-    return Run(folder / "run", tasks.Order(str(run.path), Settings(), host.PluginSpec(), run.version()))
+    return Run(folder / "run", Order(str(run.path), Settings(), host.PluginSpec(), run.version()))
 
 
 def test_a_warm_pixel_carries_the_concern_and_a_star_does_not(dithered: Run) -> None:
@@ -74,10 +76,10 @@ def test_a_warm_pixel_carries_the_concern_and_a_star_does_not(dithered: Run) -> 
     assert len(Table.read(dithered.folder / "plugin_faults.ecsv")) == 0
 
 
-def curve_and_images(run: Run, target: int) -> tuple[LightCurve, dict, tasks.FrameImages]:
+def curve_and_images(run: Run, target: int) -> tuple[LightCurve, dict, FrameImages]:
     """The light curve of one target, its raw rows, and the frames as its checks see them."""
     curves, rows = tasks.target_data(run.order, target)
-    return curves[0], rows, tasks.FrameImages(run.order, rows)
+    return curves[0], rows, FrameImages(run.order, rows)
 
 
 def test_other_pixels_are_measured_by_the_same_code(dithered: Run) -> None:
@@ -111,7 +113,7 @@ def test_sizes_sources_and_sidereal_times(dithered: Run) -> None:
     assert 6 <= len(x) <= 9
     assert (snr > 5).all()
     assert len(y) == len(x)
-    frames = tasks.book(dithered.order.run, dithered.order.version).frames
+    frames = book(dithered.order.run, dithered.order.version).frames
     row = [int(np.flatnonzero(frames["id"] == frame)[0]) for frame in curve.frame]
     site = EarthLocation(*(frames[f"site_{axis}"][row[0]] * u.m for axis in "xyz"))
     expected = Time(list(frames["middle_utc"][row]), scale="utc").sidereal_time("mean", site.lon).deg

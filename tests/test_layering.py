@@ -19,8 +19,9 @@ ORDER = [
     "summary", "positions", "apart", "pixels", "background", "detection", "pointing", "growth", "opening", "fluxes",
     "photometry", "planted", "duplicates", "likeness", "robust", "losses", "response", "ensemble", "store", "judge",
     "calibrate", "ranking", "lifted", "search", "timing", "injection", "completeness", "candidates", "plan",
-    "more_controls", "comparisons", "tasks", "trials", "conclude", "bright", "outcome", "crew", "record", "verdicts",
-    "measuring", "second_pass", "runner", "recovery", "survey", "export", "demo", "testing", "cli", "__main__",
+    "more_controls", "comparisons", "order", "tasks", "examining", "trials", "conclude", "bright", "outcome", "crew",
+    "record", "verdicts", "measuring", "second_pass", "runner", "recovery", "survey", "export", "demo", "testing",
+    "cli", "__main__",
 ]  # fmt: skip
 PLUGINS_MAY_IMPORT = {"hindlight", "numpy", "scipy", "astropy", "photutils", "nifty_ls"}
 

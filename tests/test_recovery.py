@@ -7,7 +7,8 @@ import pytest
 from astropy.table import Table
 
 import skies
-from hindlight import cli, planted, recovery, tasks, trials
+from hindlight import cli, planted, recovery, trials
+from hindlight.order import book
 from hindlight.recovery import Asked
 from hindlight.store import RunFolder
 from test_estimators import study
@@ -112,7 +113,7 @@ def test_known_ephemeris_makes_looks_cycles(archive, tmp_path):
 
     targets = read_targets(tmp_path / "t.csv")
     _, order, _ = recovery._opened(Asked(archive / "run"))
-    positions = tasks.book(order.run, order.version).positions
+    positions = book(order.run, order.version).positions
     ids = positions["id"][positions["kind"] == "target"]
     channels = Table.read(archive / "run" / "channels.ecsv")
     limits = dict.fromkeys({str(c) for c in channels["channel"]}, 5.0)
@@ -138,7 +139,7 @@ def test_same_bytes_with_two_workers(archive, tmp_path):
 def test_sources_added_to_pixels(archive):
     """Radio and optical frames as stored: the flux rises by what is added to light curves; so do floats, exactly."""
     _, order, _ = recovery._opened(Asked(archive / "run"))
-    tables = tasks.book(order.run, order.version)
+    tables = book(order.run, order.version)
     controls = tables.positions["id"][tables.positions["kind"] == "control"]
     proofs = [trials.plant_in_frame(order, int(frame), controls) for frame in tables.frames["id"][::4]]
     assert {str(u) for u in tables.frames["unit"][::4]} == {"Jy/beam", "adu"}
@@ -164,7 +165,7 @@ def test_a_small_version_of_the_study_of_linearity(tmp_path):
 def test_a_frame_that_is_gone_proves_nothing(archive, tmp_path, monkeypatch):
     """A file that is no longer there is left out of the proof, and that is said."""
     _, order, _ = recovery._opened(Asked(archive / "run"))
-    tables = tasks.book(order.run, order.version)
+    tables = book(order.run, order.version)
     controls = tables.positions["id"][tables.positions["kind"] == "control"]
 
     def gone(*_args):

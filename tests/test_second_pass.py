@@ -16,6 +16,7 @@ from hindlight.calibrate import Rank
 from hindlight.conclude import Field
 from hindlight.judge import Judgement
 from hindlight.more_controls import GROWTH, Wanted, next_size, passes, sites
+from hindlight.order import Order
 from hindlight.positions import Targets, first_controls, separation_deg
 from hindlight.ranking import FieldRanks
 from hindlight.settings import Controls, Ranking, Settings
@@ -199,7 +200,7 @@ def test_what_has_been_judged_stays(runs):
         tables = [Table.read(runs / run / "channels.ecsv") for run in ("small", name)]
         np.testing.assert_array_equal(tables[0]["threshold"], tables[1]["threshold"])
         run = RunFolder(runs / name)
-        order = tasks.Order(str(run.path), Settings(), host.PluginSpec(), run.version())
+        order = Order(str(run.path), Settings(), host.PluginSpec(), run.version())
         assert tasks.frame_evidence(order, 0).frames["n_controls"].max() == FIRST
         positions = run.positions()
         assert [len(found.ids) for found in recovery._fields(positions)] == [FIRST]

@@ -9,11 +9,12 @@ from typing import Any
 import astropy.table
 import numpy as np
 
-from hindlight import store, tasks
+from hindlight import store
 from hindlight.calibrate import upper_bounds
 from hindlight.ensemble import calibrated, flags
 from hindlight.errors import UsageError
 from hindlight.lightcurve import FloatArray
+from hindlight.order import Book, book, frame_label
 from hindlight.response import SEEN_SNR
 from hindlight.schema import LIGHT_CURVE
 from hindlight.store import RunFolder
@@ -26,7 +27,7 @@ def light_curves(run: RunFolder, target: str) -> astropy.table.Table:
     Raises `UsageError` for a folder that holds no run, or a name that is no target of it.
     """
     run.require()
-    tables = tasks.book(str(run.path.resolve()), "")
+    tables = book(str(run.path.resolve()), "")
     row = _judged_row(run, tables.positions, _row_of(tables.positions, target, run.path), target)
     plan = [
         piece
@@ -72,7 +73,7 @@ def _judged_row(run: RunFolder, positions: dict[str, Any], row: int, target: str
     return int(tried[np.argmin(offset)])
 
 
-def _columns(run: RunFolder, tables: tasks.Book, rows: dict[str, Any], target: str) -> dict[str, Any]:
+def _columns(run: RunFolder, tables: Book, rows: dict[str, Any], target: str) -> dict[str, Any]:
     """The table's columns from raw rows."""
     flux, flux_err, _ = calibrated(rows, tables.solution)
     at = np.array([tables.row_of_frame[int(frame)] for frame in rows["frame"]], np.int64)
@@ -104,7 +105,7 @@ def _columns(run: RunFolder, tables: tasks.Book, rows: dict[str, Any], target: s
         "limit_bayes": np.where(signed, np.nan, upper_bounds(flux, np.hypot(flux_err, confusion))),
         "limit_above_quiet": _finite(above * np.hypot(flux_err, quiet_err)),
         "deep": np.isin(rows["frame"], tables.frames["related_to"]),
-        "path": [tasks.frame_label(tables.frames, int(row)) for row in at],
+        "path": [frame_label(tables.frames, int(row)) for row in at],
     }
 
 

@@ -26,6 +26,7 @@ from hindlight.duplicates import counts
 from hindlight.errors import NothingToDoError, UsageError
 from hindlight.fence import call
 from hindlight.lightcurve import FloatArray, IntArray, LightCurve
+from hindlight.order import Order, book
 from hindlight.plugin import Column, PeriodSearch, Statistic
 from hindlight.positions import first_controls, read_targets, serves
 from hindlight.record import Request
@@ -34,7 +35,7 @@ from hindlight.settings import Settings
 from hindlight.store import Columns, RunFolder
 from hindlight.systems import unit_vectors
 from hindlight.tables import astropy_table, read_ecsv, rows_to_columns, write_table
-from hindlight.tasks import Order, book, position_blocks
+from hindlight.tasks import position_blocks
 from hindlight.trials import (
     ALL,
     EXTRA,

@@ -36,6 +36,7 @@ from hindlight.channels import assign
 from hindlight.crew import assembled
 from hindlight.errors import HindlightError, NothingToDoError, UsageError
 from hindlight.lightcurve import FloatArray
+from hindlight.order import Order
 from hindlight.outcome import Outcome
 from hindlight.positions import Targets, read_targets
 from hindlight.record import Request
@@ -69,7 +70,7 @@ def mine(request: Request, watcher: Watcher) -> Outcome:
     record.compare(run, request, settings, plugins)
     files.check_folders(request.folders)
     run.create()
-    order = tasks.Order(str(run.path.resolve()), settings, replace(spec, expected=plugins.fingerprint()))
+    order = Order(str(run.path.resolve()), settings, replace(spec, expected=plugins.fingerprint()))
     with run.locked():
         try:
             with _logged(run):
@@ -80,7 +81,7 @@ def mine(request: Request, watcher: Watcher) -> Outcome:
 
 
 def _mine_locked(
-    run: RunFolder, request: Request, order: tasks.Order, plugins: host.Plugins,
+    run: RunFolder, request: Request, order: Order, plugins: host.Plugins,
     lists: tuple[Targets, Targets | None], watcher: Watcher,
 ) -> Outcome:  # fmt: skip
     """The job once the run folder is ours; `lists` are the targets and the user's own comparisons, if any."""

@@ -16,10 +16,11 @@ from hindlight.completeness import Bars, Cell, Found, Injection, Looks, Null
 from hindlight.files import check_unchanged
 from hindlight.headers import SetAsideError
 from hindlight.lightcurve import Block, FloatArray, IntArray
+from hindlight.order import Order, book, frame_facts
 from hindlight.plugin import Column, Plugin
 from hindlight.schema import UNUSABLE
 from hindlight.settings import Settings
-from hindlight.tasks import Order, anchors_of, book, frame_facts, position_blocks
+from hindlight.tasks import anchors_of, position_blocks
 from hindlight.timing import DAY, J2000_JD
 
 ALL = "all"

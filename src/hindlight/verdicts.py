@@ -14,7 +14,7 @@ from typing import Any, Protocol
 import numpy as np
 from numpy.typing import NDArray
 
-from hindlight import conclude, host, judge, outcome, plan, store, tasks
+from hindlight import conclude, examining, host, judge, outcome, plan, store, tasks
 from hindlight.bright import Bright, apart
 from hindlight.calibrate import Rank
 from hindlight.candidates import Described, Examined
@@ -24,6 +24,7 @@ from hindlight.duplicates import counts
 from hindlight.errors import NothingToDoError
 from hindlight.fence import Fault, merged
 from hindlight.lightcurve import FloatArray, IntArray
+from hindlight.order import Order
 from hindlight.outcome import Outcome
 from hindlight.plugin import Column
 from hindlight.positions import Targets, first_controls, separation_deg, serves
@@ -53,7 +54,7 @@ class Session:
 
     run: RunFolder
     crew: Crew
-    order: tasks.Order
+    order: Order
     plugins: host.Plugins
     targets: Targets
     watcher: Watcher
@@ -290,7 +291,7 @@ def _examined(session: Session, places: Sequence[Place], beyond: NDArray[np.bool
         (place.target, place.found.blank_sky, {k: v.above_quiet for k, v in place.found.thresholds.items()})
         for place in chosen
     ]
-    results = _collected(session, "examining candidates", tasks.examine_target, jobs, [1] * len(jobs))
+    results = _collected(session, "examining candidates", examining.examine_target, jobs, [1] * len(jobs))
     return {place.at: result for place, result in zip(chosen, results, strict=True)}
 
 
