@@ -160,7 +160,7 @@ def p_values(ranks: Sequence[calibrate.Rank], settings: Settings, weights: Seque
     q = calibrate.false_discovery(empirical, dependent)
     p = empirical.copy()
     with np.errstate(invalid="ignore"):
-        undecided = np.array([r.exceeded_by == 0 for r in ranks]) & (q > level)
+        undecided = np.array([r.exceeded_by == 0 for r in ranks]) & (q >= level)
     extrapolated = np.zeros(len(ranks), dtype=bool)
     testable = np.isfinite(empirical)
     for index in np.flatnonzero(undecided).tolist():
