@@ -7,6 +7,7 @@ import pytest
 from scipy import stats
 
 from hindlight import LightCurve, added_part
+from hindlight_plugins.detector_fixed import DetectorFixed
 from hindlight_plugins.moving import Moving, pulls_of, reached_by_chance
 from hindlight_plugins.point_likeness import PointLikeness
 from hindlight_plugins.position_check import Position, centroid
@@ -98,3 +99,18 @@ def test_a_source_that_is_never_dark_stays_in_its_place(radio: bool) -> None:
     p = p[np.isfinite(p)]
     assert len(p) > 20
     assert (p < 0.01).sum() <= stats.binom.isf(1e-3, len(p), 0.01)
+
+
+@pytest.mark.parametrize("sky", [True, False], ids=["variable of the sky", "warm pixel"])
+def test_a_variable_where_the_pixel_falls_is_no_defect(sky: bool) -> None:
+    """Another variable at the pixel of a bright frame, in a frame that points elsewhere: its flares at other pixels tell."""
+    n = 40
+    pointing = np.array([(0.0, 0.0), (15.0, 4.0), (-9.0, 13.0)])[np.arange(n) % 3]
+    made = Field(4, np.arange(n) * 1e5, pointing, False)
+    made.source(0.0, 0.0, np.where(np.arange(n) == 12, 15.0, 0.0))
+    if sky:
+        made.source(-15.0, -4.0, np.where(np.isin(np.arange(n), (13, 11, 20, 30, 33)), 15.0, 0.0))
+    else:
+        made.fixed(made.x[12], made.y[12], np.where(np.arange(n) == 13, 15.0, 0.0))
+    finding = DetectorFixed().check(made.candidate())
+    assert (finding.verdict, finding.values["n_seen"]) == (("pass", 0) if sky else ("fail", 1))
