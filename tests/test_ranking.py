@@ -96,7 +96,7 @@ def test_a_small_version_of_the_study(tmp_path: Path) -> None:
     """Blank targets among ripples: with controls alike their p-values and columns are those of chance, with others not."""
     kinds = study("blank_kinds")
     kinds.archive(tmp_path, "ripple", 5, targets=60, frames=16, size=300)
-    alike, anywhere = kinds.mined(tmp_path, ""), kinds.mined(tmp_path, kinds.ANYWHERE)
+    alike, anywhere = (kinds.mined(tmp_path, chosen, periods=False) for chosen in ("", kinds.ANYWHERE))
     assert kinds.holds([alike], "alike", say=False)
     assert not kinds.holds([anywhere], "anywhere", say=False)
     p, other = kinds.likeness([alike]), kinds.likeness([anywhere])

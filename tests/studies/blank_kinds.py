@@ -14,7 +14,7 @@ targets lie where the structure is. Frames come in nights of four. Verdict:
     p-value is that among the controls that would serve it, were it a target. Where most values are equal the test asks only
     whether targets are more extreme;
  3. with controls from anywhere the last two kinds must fail.
-Period searches are left out. Exits non-zero when short.
+Exits non-zero when short.
 """
 
 from __future__ import annotations
@@ -50,8 +50,8 @@ DRAWS = 20_000
 EACH = 3  # controls drawn for each target
 LEAST_P = 0.01
 COMBINED = "combined p"
-STATISTICS = host.load(host.spec_from(Settings(), [], ["lomb_scargle"])).statistics
-COLUMNS = judge.full_columns(STATISTICS)
+PLUGINS = host.load(host.spec_from(Settings(), [], []))
+COLUMNS = judge.full_columns([*PLUGINS.statistics, *PLUGINS.period_searches])
 
 
 def backdrop(kind: str, size: int, frames: int, seed: int) -> Callable[[int], np.ndarray] | None:
@@ -115,13 +115,14 @@ def watched() -> Iterator[list[conclude.Field]]:
         outcome.control_columns = made
 
 
-def mined(folder: Path, settings: str) -> Run:
+def mined(folder: Path, settings: str, periods: bool = True) -> Run:
     """A run of an archive, all work in this process."""
     text = f"[controls]\nper_field = 600\nfield_size_deg = 50.0\nfewest_alike = 40\nbright_snr = 50.0\n{settings}"
     (folder / "s.toml").write_text(text, encoding="utf-8")
     with tempfile.TemporaryDirectory(dir=folder) as out, watched() as fields:
         arguments = ["mine", folder / "frames", "--targets", folder / "targets.csv", "--out", Path(out) / "run",
-                     "--settings", folder / "s.toml", "-q", "--without", "lomb_scargle", "--workers", "1"]  # fmt: skip
+                     "--settings", folder / "s.toml", "-q", "--workers", "1"]  # fmt: skip
+        arguments += [] if periods else ["--without", "lomb_scargle"]
         status = cli.run_command([str(a) for a in arguments])
         if status:
             raise SystemExit(f"the run ended with status {status}")
