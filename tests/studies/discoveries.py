@@ -16,7 +16,7 @@ Verdict:
     7.5 % have any candidate (q < 0.05);
  2. of runs of 400 targets, 20 of them true variables, again with as many controls as needed, the share of false ones among
     the candidates (none where there are none) is at most 0.06 on average, and the share of variables found at least 90 % of
-    what the oracle finds.
+    what the oracle finds; with 512 controls and their tails the first of these must hold.
 
 The oracle has the same combination of statistics, ranked in a null so large that it is the true one: its p-value is exact. It
 knows the truth, and takes the one threshold t at which the share of false ones is 0.05: the largest t with
@@ -208,15 +208,15 @@ def blank_verdict(found: np.ndarray, label: str) -> bool:
     return fine and bool(smallest > MOST_WITH_ANY)
 
 
-def mixed_verdict(found: np.ndarray, n_true: int, best: tuple[float, float]) -> bool:
-    """Print a line; whether candidates are true often enough, and variables found often enough."""
+def mixed_verdict(found: np.ndarray, n_true: int, best: tuple[float, float], label: str, powerful: bool = True) -> bool:
+    """Print a line; whether candidates are true often enough, and, where `powerful`, variables found often enough."""
     share = found[:, 0] / np.maximum(1, found.sum(axis=1))
     power, (t, most) = float(found[:, 1].mean()) / n_true, best
-    fine = bool(share.mean() <= MOST_FALSE and power >= LEAST_POWER * most)
-    print(f"{len(found)} runs with {n_true} variables: false-discovery rate {share.mean():.4f} +- "
-          f"{share.std() / len(found) ** 0.5:.4f} (at most {MOST_FALSE:g}); power {power:.3f}, the oracle's (p <= {t:.2g}) "
-          f"{most:.3f}, ratio {power / most:.3f} (at least {LEAST_POWER:g}): {'holds' if fine else 'FALLS SHORT'}",
-          flush=True)  # fmt: skip
+    wanted = f" (at least {LEAST_POWER:g})" if powerful else ""
+    fine = bool(share.mean() <= MOST_FALSE and (power >= LEAST_POWER * most or not powerful))
+    print(f"{label}, {len(found)} runs: false-discovery rate {share.mean():.4f} +- {share.std() / len(found) ** 0.5:.4f} "
+          f"(at most {MOST_FALSE:g}); power {power:.3f}, the oracle's (p <= {t:.2g}) {most:.3f}, ratio {power / most:.3f}"
+          f"{wanted}: {'holds' if fine else 'FALLS SHORT'}", flush=True)  # fmt: skip
     return fine
 
 
@@ -236,8 +236,11 @@ def main() -> int:
         found = blank_runs(bank, given.runs, 100, n_controls, given.seed)
         good &= blank_verdict(found, f"100 targets, {n_controls} controls")
     sources = variables(20 * given.runs, seen, given.noise, given.seed)
-    found = mixed_runs(bank, sources, given.runs, 400, 20, calibrate.controls_needed(400, LEVEL), given.seed)
-    good &= mixed_verdict(found, 20, oracle(bank, sources, 400, 20))
+    best = oracle(bank, sources, 400, 20)
+    for n_controls in (calibrate.controls_needed(400, LEVEL), FEW):
+        found = mixed_runs(bank, sources, given.runs, 400, 20, n_controls, given.seed)
+        label = f"400 targets, 20 of them variables, {n_controls} controls"
+        good &= mixed_verdict(found, 20, best, label, powerful=n_controls != FEW)
     print("verdict:", "holds" if good else "FALLS SHORT")
     return 0 if good else 1
 
