@@ -7,11 +7,11 @@ import pytest
 from scipy import stats
 
 from hindlight import LightCurve, added_part
-from hindlight_plugins.detector_fixed import DetectorFixed
+from hindlight_plugins.detector_fixed import DetectorFixed, Ghost
 from hindlight_plugins.moving import Moving, pulls_of, reached_by_chance
 from hindlight_plugins.point_likeness import PointLikeness
 from hindlight_plugins.position_check import Position, centroid
-from planted import Field
+from planted import Field, ghost
 from test_checks import make_cutout
 
 CHANCE = 1e-6
@@ -114,3 +114,10 @@ def test_a_variable_where_the_pixel_falls_is_no_defect(sky: bool) -> None:
         made.fixed(made.x[12], made.y[12], np.where(np.arange(n) == 13, 15.0, 0.0))
     finding = DetectorFixed().check(made.candidate())
     assert (finding.verdict, finding.values["n_seen"]) == (("pass", 0) if sky else ("fail", 1))
+
+
+def test_a_ghost_upon_stars_is_told_by_the_frames_that_have_it_on_dark_sky() -> None:
+    """In ten of fifteen frames this ghost falls upon brighter stars: those cannot tell, in all others it is seen."""
+    finding = Ghost().check(ghost(80031).candidate())
+    assert finding.verdict == "fail"
+    assert finding.values["n_seen"] == finding.values["n_tested"] == 5

@@ -82,7 +82,7 @@ def seen_there(
 
     It does not count where the bright frame shows that sky as bright: that is another source. Where the bright frame does
     not show it the median of frames all over the curve decides. Nor does it count where that sky is as bright in some frame
-    that has it at other pixels: that is another variable.
+    that has it at other pixels: that is another variable. A pair whose place holds a source of the sky cannot tell.
     """
     frame, other = pairs.curve.frame[pairs.bright], pairs.curve.frame[pairs.other]
     deep = np.abs(pairs.flux) >= (min_snr + SPARE) * pairs.error
@@ -101,7 +101,9 @@ def seen_there(
     for i in np.flatnonzero(hit & ~is_source).tolist():
         place = (int(other[can[i]]), float(x[can[i]]), float(y[can[i]]))
         is_source[i] = shines_elsewhere(candidate, pairs.curve, place, float(flux[i]), min_snr)
-    tells[can] = np.isfinite(flux) & (~hit | (np.isfinite(same_sky) & ~is_source))
+    with np.errstate(invalid="ignore"):
+        hidden = ~hit & (sign * same_sky >= min_snr * error) & (sign * same_sky >= alike[0] * size)
+    tells[can] = np.isfinite(flux) & ~hidden & (~hit | (np.isfinite(same_sky) & ~is_source))
     seen[can] = hit & np.isfinite(same_sky) & ~is_source
     return tells, seen
 
