@@ -29,9 +29,9 @@ class Sky:
     """One instrument's frames.
 
     `gain_scatter` is that of the frames' gains; `pointing_pixels` and `pointing_gradient` (per pixel) are how far, on
-    each axis, images are off their headers. `noise` is white, beam (autocorrelation equal to the beam) or heavy (the
-    same from Student t(4) pixels, and the rms differs from frame to frame by a quarter). `noisier`, where it is given,
-    is by how much each frame's noise is larger than `rms`.
+    each axis, images are off their headers. `per_night` frames follow each other half an hour apart. `noise` is white,
+    beam (autocorrelation equal to the beam) or heavy (the same from Student t(4) pixels, and the rms differs from frame to
+    frame by a quarter). `noisier`, where it is given, is by how much each frame's noise is larger than `rms`.
     """
 
     instrument: str = "north array"
@@ -54,6 +54,7 @@ class Sky:
     pointing_pixels: float = 0.0
     pointing_gradient: float = 0.0
     noisier: tuple[float, ...] = ()
+    per_night: int = 1
     site: tuple[float, float, float] = (5195675.767, 1891071.326, -3170873.735)
     extra: dict[str, object] = field(default_factory=dict)
     backdrop: Callable[[int], np.ndarray] | None = None  # what lies behind a frame's sources, in units of the rms
@@ -110,7 +111,8 @@ def write_sky(folder: Path, sky: Sky, sources: Sequence[Source], seed: int, pref
     """Write the frames of one instrument into a folder."""
     folder.mkdir(parents=True, exist_ok=True)
     rng = np.random.default_rng(seed)
-    days = np.sort(rng.uniform(sky.first_day, sky.last_day, sky.n_frames))
+    nights = np.sort(rng.uniform(sky.first_day, sky.last_day, -(-sky.n_frames // sky.per_night)))
+    days = (nights[:, None] + np.arange(sky.per_night) / 48).ravel()[: sky.n_frames]
     middle = (sky.size - 1) / 2
     done = []
     for number, day in enumerate(days):

@@ -180,9 +180,19 @@ def test_robust_threshold_ignores_a_few_real_sources():
     )
 
 
-def test_controls_needed():
-    """To decide one candidate among 400 targets at 0.05 takes 7999 controls: 1/(n+1) = 0.05/400."""
-    assert calibrate.controls_needed(400, 0.05) == 7999
+@pytest.mark.parametrize("n_targets", [1, 7, 100, 400, 1234])
+@pytest.mark.parametrize("level", [0.01, 0.05, 0.1, 0.3])
+def test_controls_needed(n_targets, level):
+    """With so many controls a target beyond all of them is below the level among others that are not, with fewer it is not."""
+    n = calibrate.controls_needed(n_targets, level)
+    for controls, decides in (
+        (n, True),
+        (n - 2, False),
+    ):  # with n - 1 the level itself may be hit, give or take rounding
+        p = np.ones(n_targets)
+        p[0] = 1 / (controls + 1)
+        assert (calibrate.false_discovery(p)[0] < level) == decides
+    assert calibrate.controls_needed(400, 0.05) == 8000  # 400 / 8000 is 0.05 itself
 
 
 @given(st.lists(st.booleans(), max_size=30))

@@ -22,7 +22,10 @@ from hindlight.timing import DAY
     ],
 )  # fmt: skip
 def test_jeffreys_intervals(k, n, low, high):
-    """Values by an independent computation of Beta(k + 1/2, n - k + 1/2)."""
+    """Equal tails of Beta(k + 1/2, n - k + 1/2), its ends moved to 0 and 1: Brown, Cai & DasGupta 2001, Stat. Sci. 16, 101.
+
+    Values by scipy.stats.beta.ppf, computed outside this project.
+    """
     assert jeffreys(k, n) == pytest.approx((low, high), abs=1e-6)
 
 

@@ -93,8 +93,13 @@ def test_no_control_is_alike_by_default() -> None:
 
 
 def test_a_small_version_of_the_study(tmp_path: Path) -> None:
-    """Blank targets among ripples: with controls alike their p-values are those of chance, with others they are not."""
+    """Blank targets among ripples: with controls alike their p-values and columns are those of chance, with others not."""
     kinds = study("blank_kinds")
     kinds.archive(tmp_path, "ripple", 5, targets=60, frames=16, size=300)
-    assert kinds.holds([kinds.p_values(tmp_path, "")], "alike", say=False)
-    assert not kinds.holds([kinds.p_values(tmp_path, kinds.ANYWHERE)], "anywhere", say=False)
+    alike, anywhere = (kinds.mined(tmp_path, chosen, periods=False) for chosen in ("", kinds.ANYWHERE))
+    assert kinds.holds([alike], "alike", say=False)
+    assert not kinds.holds([anywhere], "anywhere", say=False)
+    p, other = kinds.likeness([alike]), kinds.likeness([anywhere])
+    assert len(p) > 12
+    assert len(p) * min(p.values()) > kinds.LEAST_P
+    assert len(other) * min(other.values()) <= kinds.LEAST_P

@@ -198,15 +198,22 @@ def test_a_grid_without_pulse_trains(archive, tmp_path):
 
 
 def test_report_cards(archive, capsys):
-    """Each statistic's power by itself, at the rate that sixty controls can tell."""
+    """Each statistic's power by itself, at the rate that some sixty controls can tell."""
     cards, said = recovery.report_cards(Asked(archive / "run", archive / "grid.toml", workers=1), cli._Silent())
     assert {"brightest", "chi_square", "mean_flux"} <= {card.plugin for card in cards}
-    assert "what the controls can tell" in said[0]
+    assert "NOT 0.001: that takes 999 controls" in said[0]
     power = {card.plugin: card.power for card in cards}
     assert power["chi_square"]["smooth"] >= 0.5
     assert power["chi_square"]["nothing"] <= 0.5
     assert all(card.cost_s > 0 for card in cards)
     assert cli.run_command(["plugins", "--power", str(archive / "none")]) == 2
+
+
+def test_the_rate_of_power_is_that_of_the_controls():
+    """With enough controls the rate asked for, with fewer for some sources what all of them can tell."""
+    assert recovery._rate_said(np.array([1 / 1000, 1 / 5000])) == "power at a false-alarm rate of 0.001"
+    assert "rate of 0.001 to 0.00195, NOT 0.001" in recovery._rate_said(np.array([1 / 512, 1 / 5000]))
+    assert "some have 511" in recovery._rate_said(np.array([1 / 512, 1 / 5000]))
 
 
 def test_a_new_plugin_gets_a_report_card(archive):

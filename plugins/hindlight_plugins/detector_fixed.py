@@ -81,7 +81,8 @@ def seen_there(
     """Which pairs can tell, and in which of them the other frame shows as bright a thing at its pixel (x, y).
 
     It does not count where the bright frame shows that sky as bright: that is another source. Where the bright frame does
-    not show it the median of frames all over the curve decides.
+    not show it the median of frames all over the curve decides. Nor does it count where that sky is as bright in some frame
+    that has it at other pixels: that is another variable. A pair whose place holds a source of the sky cannot tell.
     """
     frame, other = pairs.curve.frame[pairs.bright], pairs.curve.frame[pairs.other]
     deep = np.abs(pairs.flux) >= (min_snr + SPARE) * pairs.error
@@ -97,9 +98,30 @@ def seen_there(
         same_sky[i] = usual_flux(candidate, pairs.curve, int(other[can[i]]), float(x[can[i]]), float(y[can[i]]))
     with np.errstate(invalid="ignore"):
         is_source = sign * same_sky >= ALIKE * np.abs(flux)
-    tells[can] = np.isfinite(flux) & (~hit | (np.isfinite(same_sky) & ~is_source))
+    for i in np.flatnonzero(hit & ~is_source).tolist():
+        place = (int(other[can[i]]), float(x[can[i]]), float(y[can[i]]))
+        is_source[i] = shines_elsewhere(candidate, pairs.curve, place, float(flux[i]), min_snr)
+    with np.errstate(invalid="ignore"):
+        hidden = ~hit & (sign * same_sky >= min_snr * error) & (sign * same_sky >= alike[0] * size)
+    tells[can] = np.isfinite(flux) & ~hidden & (~hit | (np.isfinite(same_sky) & ~is_source))
     seen[can] = hit & np.isfinite(same_sky) & ~is_source
     return tells, seen
+
+
+def shines_elsewhere(
+    candidate: Candidate, curve: LightCurve, place: tuple[int, float, float], flux: float, min_snr: float
+) -> bool:
+    """Whether the sky at a place (frame, x, y) is half as bright, or as negative, in a frame that has it at other pixels."""
+    frame, x, y = place
+    rows = np.unique(np.linspace(0, len(curve) - 1, min(len(curve), ELSEWHEN)).round().astype(np.int64))
+    others = curve.frame[rows]
+    there = candidate.images.carried(*(np.full(len(others), value) for value in place), others)
+    width = float(np.median(np.concatenate(candidate.fwhm)))
+    apart = (np.hypot(there[0] - x, there[1] - y) > ELSEWHERE * width) & (others != frame)
+    found, error = candidate.images.measure(others[apart], there[0][apart], there[1][apart])
+    with np.errstate(invalid="ignore"):
+        found = np.sign(flux) * found
+        return bool(((found >= ALIKE * abs(flux)) & (found >= min_snr * error)).any())
 
 
 def usual_flux(candidate: Candidate, curve: LightCurve, frame: int, x: float, y: float) -> float:

@@ -20,6 +20,9 @@ ALIKE = (0.5, 2.0)
 SPARE = 1.0  # sigma above the least S/N that are expected of a counterpart
 ON_TRACK = 1.0  # beams: how far from a straight, even track a counterpart may lie
 ELSEWHEN = 20  # frames in which the place of a counterpart must be dark: else it is a variable source
+FEWEST_SAMPLES = 500  # of blank positions that show the tail of the noise
+TAIL = 0.05  # of them are in the tail
+PLACES = 2 * 2.8  # independent places in a circle of one beam's radius, in either of the frames that are compared
 GONE = 0.5  # the place of a counterpart is never brighter in other frames by this part of what the counterpart adds
 
 
@@ -31,6 +34,7 @@ class Moving(ConsistencyCheck):
     of two, and is new: neither in the bright frame nor in twenty others. What smears by more than a beam in an exposure is no
     point, so no counterpart is sought further away than a beam for each exposure time passed. The check fails if such
     counterparts lie on one straight and even track in at least the fraction `share` of the frames that can tell.
+    What is seen in one frame only must be too bright for chance, by what fluxes at blank positions of the field reach.
     Uninformative where no frame within `hours` in which the position is dark is deep enough. Objects that leave `radius`
     beams between frames pass. Known objects are not looked up: that would need their ephemerides.
     """
@@ -48,6 +52,9 @@ class Moving(ConsistencyCheck):
     min_snr: float = setting(6.0, "least flux over error of a counterpart", unit="sigma", minimum=4)
     lone_snr: float = setting(
         7.5, "least flux over error of a counterpart seen in one frame only", unit="sigma", minimum=4
+    )
+    level: float = setting(
+        1e-3, "chance that noise makes a counterpart seen in one frame only, all places counted", minimum=0, maximum=1
     )
     share: float = setting(0.6, "fraction of the frames that makes the check fail", minimum=0, maximum=1)
 
@@ -78,7 +85,14 @@ class Moving(ConsistencyCheck):
     def _track(self, candidate: Candidate, at: int, row: int) -> tuple[int, int, float]:
         """Frames that can tell, those with a counterpart on the best track, and its rate, for one bright frame."""
         found = self._best(candidate, at, row, self.min_snr)
-        return self._best(candidate, at, row, self.lone_snr) if found[1] == 1 else found
+        return self._best(candidate, at, row, self._beyond_chance(candidate, at)) if found[1] == 1 else found
+
+    def _beyond_chance(self, candidate: Candidate, at: int) -> float:
+        """The flux over error that a counterpart seen in one frame only must have."""
+        curve = candidate.curves[at]
+        block = candidate.controls(curve.channel.label, curve.frame)
+        places = PLACES * self.radius**2 * self.each * min(self.max_frames, int(candidate.bright[at].sum()))
+        return max(self.lone_snr, reached_by_chance(pulls_of(block.flux, block.flux_err), self.level / places))
 
     def _best(self, candidate: Candidate, at: int, row: int, min_snr: float) -> tuple[int, int, float]:
         """The same, with counterparts of at least this flux over error."""
@@ -174,6 +188,34 @@ def peaks_of_difference(first: Cutout, second: Cutout, limit: float) -> Array:
     found = np.argwhere(top)
     found = found[np.argsort(-difference[top], kind="stable")][:MOST_PEAKS]
     return np.stack((found[:, 1] - second.x, found[:, 0] - second.y), axis=1)
+
+
+def pulls_of(flux: Array, error: Array) -> Array:
+    """Fluxes of blank positions less each one's median, over their errors, from matrices with NaN; one long row."""
+    known = np.isfinite(flux).any(axis=1)
+    flux, error = flux[known], error[known]
+    z = (flux - np.nanmedian(flux, axis=1, keepdims=True)) / error if len(flux) else np.empty(0)
+    return np.asarray(z[np.isfinite(z)])
+
+
+def reached_by_chance(z: Array, chance: float) -> float:
+    """What noise like `z`, shape (n,), exceeds with this chance, from a tail fitted to its highest twentieth; 0 for few.
+
+    Generalised Pareto by probability-weighted moments (Hosking & Wallis 1987, Technometrics 29, 339; their k is minus the
+    shape), its shape not below zero: exponential where the tail is no heavier.
+    """
+    if len(z) < FEWEST_SAMPLES or chance <= 0:
+        return 0.0
+    m = int(TAIL * len(z))
+    highest = np.sort(z)[-m - 1 :]
+    excess = highest[1:] - highest[0]
+    mean = float(excess.mean())
+    weighted = float(((m - np.arange(m) - 0.65) / m * excess).mean())  # by 1 - F, plotting positions (i - 0.35) / m
+    shape, scale = 2.0 - mean / (mean - 2 * weighted), 2 * mean * weighted / (mean - 2 * weighted)
+    rarer = math.log(m / len(z) / chance)
+    if not shape > 0.0:
+        return float(highest[0]) + mean * rarer
+    return float(highest[0]) + scale / shape * math.expm1(shape * rarer)
 
 
 def _smoothed(cutout: Cutout) -> Array:

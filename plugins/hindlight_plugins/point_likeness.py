@@ -21,6 +21,7 @@ from hindlight import (
     Finding,
     LightCurve,
     added,
+    added_part,
     hookimpl,
     quiet_cutouts,
     setting,
@@ -71,15 +72,17 @@ class PointLikeness(ConsistencyCheck):
                 "every channel is synthesised: a source that was on for a part of an image is no point there"
             )
         bright = self._bright_frames(candidate)
-        quiet = {at: quiet_cutouts(candidate, at, self.half_width) for at in {at for _, at in bright.values()}}
+        quiet = {at: quiet_cutouts(candidate, at, self.half_width) for at in {at for _, at, _ in bright.values()}}
         shapes, errors, blurred = [], [], 0
         for cutout in candidate.cutouts(np.array(list(bright), dtype=np.int64), self.half_width) if bright else ():
             if not cutout.fwhm_known or cutout.fwhm < self.min_fwhm:
                 blurred += 1
                 continue
-            snr, at = bright[cutout.frame]
+            snr, at, part = bright[cutout.frame]
             light, crowd = added(cutout, quiet[at])
-            shape = fitted_shape(light)
+            if crowd > 0.0:
+                snr *= part
+            shape = fitted_shape(light) if snr >= self.min_snr else None
             if shape is not None:
                 shapes.append(shape)
                 errors.append(math.hypot(shape_error(snr), LEFT_OVER * crowd))
@@ -88,16 +91,17 @@ class PointLikeness(ConsistencyCheck):
             return _nothing(f"{len(bright)} bright frames of {self.min_snr:g} sigma{why}: none shows a shape")
         return self._judge(np.array(shapes), np.array(errors))
 
-    def _bright_frames(self, candidate: Candidate) -> dict[int, tuple[float, int]]:
-        """Signal to noise of each bright frame that may show a shape, and its curve's number, best first."""
+    def _bright_frames(self, candidate: Candidate) -> dict[int, tuple[float, int, float]]:
+        """Of each bright frame that may show a shape signal to noise, number of its curve and added part, best first."""
         found = []
         for at, (curve, bright) in enumerate(zip(candidate.curves, candidate.bright, strict=True)):
             if curve.channel.signed or curve.channel.unit.endswith(PER_BEAM):
                 continue
             snr = _raw_snr(curve)
-            good = bright & (snr >= self.min_snr)
-            found += [(-float(s), int(f), at) for s, f in zip(snr[good], curve.frame[good], strict=True)]
-        return {frame: (-negative, at) for negative, frame, at in sorted(found)[: self.max_frames]}
+            part = added_part(curve)
+            good = np.flatnonzero(bright & (snr >= self.min_snr))
+            found += [(-float(snr[row]), int(curve.frame[row]), at, float(part[row])) for row in good]
+        return {frame: (-negative, at, part) for negative, frame, at, part in sorted(found)[: self.max_frames]}
 
     def _judge(self, shapes: Array, errors: Array) -> Finding:
         """The finding from shapes of shape (n, 3), see `fitted_shape`, and their errors of shape (n,)."""

@@ -3,7 +3,7 @@
 Everything a plugin needs is here and in `hindlight.testing`; other modules are the program's own.
 """
 
-from hindlight.cutouts import added, beam_arcsec, mean_at, quiet_cutouts
+from hindlight.cutouts import added, added_part, beam_arcsec, mean_at, quiet_cutouts
 from hindlight.dates import between, greenwich_sidereal_s, read_angle, read_clock, read_date
 from hindlight.facts import Cards, FrameFacts, Moment, PlaneAxes
 from hindlight.headers import fold_unit
@@ -72,6 +72,7 @@ __all__ = [
     "Stamps",
     "Statistic",
     "added",
+    "added_part",
     "beam_arcsec",
     "beam_of",
     "between",

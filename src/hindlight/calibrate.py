@@ -160,12 +160,12 @@ def false_discovery(p_values: FloatArray, any_dependence: bool = False) -> Float
 
 
 def controls_needed(n_targets: int, level: float, any_dependence: bool = False) -> int:
-    """How many controls let a single candidate among `n_targets` reach the level: n >= targets / level - 1.
+    """How many controls let a lone candidate among `n_targets` get below the level: targets / (n + 1) < level.
 
     With `any_dependence` times sum(1 / i) over the targets, see `false_discovery`.
     """
     factor = float((1.0 / np.arange(1, n_targets + 1)).sum()) if any_dependence else 1.0
-    return max(1, int(np.ceil(factor * n_targets / level)) - 1)
+    return max(1, int(np.floor(factor * n_targets / level * (1 + 1e-12))))  # the level itself is not below it
 
 
 @dataclass(frozen=True, eq=False)

@@ -461,9 +461,9 @@ def _print_power(run: Path, files: tuple[Path, ...], quiet: bool, verbose: bool)
     table = _simple_table("what each statistic finds by itself", "name", *kinds, "only it finds", "s per 1000")
     for card in cards:
         _add(table, card.plugin, *(_short(card.power[k]) for k in kinds), card.only_here, _short(card.cost_s))
-    console.print(table)
     for line in remarks:
         console.print(visible(line), markup=False)
+    console.print(table)
 
 
 def _print_plugins(loaded: Any) -> None:

@@ -167,7 +167,7 @@ def undecided(ranks: Sequence[calibrate.Rank], settings: Settings) -> tuple[NDAr
     level, dependent = settings.ranking.level, settings.ranking.any_dependence
     with np.errstate(invalid="ignore"):
         short = np.array([r.exceeded_by == 0 for r in ranks]) & (
-            calibrate.false_discovery(empirical, dependent) > level
+            calibrate.false_discovery(empirical, dependent) >= level
         )
     return short, calibrate.controls_needed(int(np.isfinite(empirical).sum()), level, dependent)
 

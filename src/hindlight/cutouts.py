@@ -11,7 +11,7 @@ from dataclasses import replace
 import numpy as np
 from scipy import ndimage
 
-from hindlight.lightcurve import FloatArray
+from hindlight.lightcurve import FloatArray, LightCurve
 from hindlight.plugin import Candidate, Cutout
 
 RING = (0.7, 2.5)  # beams: where a steady source spoils centroid and shape
@@ -75,3 +75,13 @@ def added(cutout: Cutout, quiet: Sequence[Cutout]) -> tuple[Cutout, float]:
         return cutout, 0.0
     pixels = cutout.background + excess.reshape(cutout.pixels.shape)
     return replace(cutout, pixels=pixels), height / own
+
+
+def added_part(curve: LightCurve) -> FloatArray:
+    """How much of each flux is above the quiet level, 0 to 1, shape (n,): what is left of it where `added` takes light off.
+
+    A source that is never dark is seen in the mean of the quiet frames as well, and is taken off like any other steady one.
+    """
+    with np.errstate(divide="ignore", invalid="ignore"):
+        part = 1.0 - curve.quiet_level[0] / curve.flux
+    return np.asarray(np.clip(np.nan_to_num(part, nan=1.0), 0.0, 1.0))

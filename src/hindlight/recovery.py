@@ -187,15 +187,22 @@ def report_cards(asked: Asked, watcher: Watcher) -> tuple[list[Power], tuple[str
         only = hit[:, number] & (hit.sum(axis=1) == 1) & (kinds != completeness.NOTHING)
         power = {kind: float(hit[kinds == kind, number].mean()) for kind in dict.fromkeys(kinds.tolist())}
         cards.append(Power(plugin.name, power, int(only.sum()), costs[number]))
-    highest = float(rate.max())
-    said = f"power at a false-alarm rate of {POWER_RATE:g}"
-    if highest > POWER_RATE:
-        said += f", or what the controls can tell, which is {float(rate.min()):.3g} to {highest:.3g} here"
-    if order.settings.completeness.period_search:
-        return cards, (said,)
-    return cards, (
-        said,
-        "period searches are left out: [completeness] period_search = true in the run's settings asks them",
+    said = [_rate_said(outcome.found.lowest_p)]
+    if not order.settings.completeness.period_search:
+        said.append("period searches are left out: [completeness] period_search = true in the run's settings asks them")
+    return cards, tuple(said)
+
+
+def _rate_said(lowest_p: FloatArray) -> str:
+    """At which rate of false alarms power is told, by the smallest p-value that each source could have got."""
+    low, high = (float(np.maximum(POWER_RATE, p)) for p in (lowest_p.min(), lowest_p.max()))
+    if high <= POWER_RATE * (1 + 1e-9):
+        return f"power at a false-alarm rate of {POWER_RATE:g}"
+    rates = f"{high:.3g}" if f"{low:.3g}" == f"{high:.3g}" else f"{low:.3g} to {high:.3g}"
+    fewest = round(1.0 / float(lowest_p.max()) - 1.0)
+    return (
+        f"power at a false-alarm rate of {rates}, NOT {POWER_RATE:g}: that takes {round(1 / POWER_RATE) - 1} controls beside "
+        f"the one that holds the source, some have {fewest}; at {POWER_RATE:g} power is lower ([controls] per_field)"
     )
 
 
