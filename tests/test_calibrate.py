@@ -121,6 +121,15 @@ def test_tail_bound_seldom_understates(draw, survival):
     assert low <= stats.binom.ppf(0.999, n_sets, 0.03)
 
 
+@pytest.mark.parametrize("weight", [1.0, 4.0])
+def test_no_tail_reaches_beyond_three_decades(weight):
+    """However far out a target is, its bound is a thousandth of what one control (or group of like ones) weighs."""
+    controls = np.sort(np.random.default_rng(1).standard_normal(400))
+    far = [calibrate.tail_bound(controls, target, 50, weight) for target in (50.0, 1e4, 1e12)]
+    np.testing.assert_allclose(far, 1e-3 * weight / 400)
+    assert calibrate.tail_bound(controls, controls[-1] + 0.01, 50, weight) > 1e-3 * weight / 400
+
+
 def test_tail_bound_says_nothing_inside_the_controls():
     """A target within the controls, or too few of them, gets no tail."""
     controls = np.random.default_rng(1).standard_normal(400)

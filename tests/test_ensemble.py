@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from scipy import optimize
+from scipy import optimize, stats
 
 from hindlight import losses
 from hindlight.ensemble import IMAGE_COLUMNS, calibrated, error_scales, solution, solve_gains, solved
@@ -173,14 +173,31 @@ def test_solution_and_its_use() -> None:
     rows = solution(np.arange(12), "c", gains, np.full(12, 1.5), nothing(12), Comparisons())
     rows |= losses.columns(losses.Loss(np.zeros(12)), losses.centres(images(12)))
     assert rows["verdict"].tolist() == ["good"] * 4 + ["uncalibrated"] + ["good"] * 7
-    assert rows["extra_scatter"][4] == pytest.approx(gains.spread)  # the scatter of the others' gains
+    assert rows["extra_scatter"][4] == pytest.approx(gains.spread_limit)  # what the others' gains may scatter by
     value, sigma, bad = calibrated(
         {"frame": np.array([3, 4]), "flux": np.array([100.0, 100.0]), "flux_err": np.array([2.0, 2.0])}, rows
     )
     assert value.tolist() == [100 / rows["gain"][3], 100.0]
-    want = [np.hypot(3.0, rows["extra_scatter"][3] * 100) / rows["gain"][3], np.hypot(3.0, 100 * gains.spread)]
+    want = [np.hypot(3.0, rows["extra_scatter"][3] * 100) / rows["gain"][3], np.hypot(3.0, 100 * gains.spread_limit)]
     np.testing.assert_allclose(sigma, want)
     assert not bad.any()
+
+
+def test_frames_without_a_gain_are_not_trusted_beyond_what_a_few_tell() -> None:
+    """With eight gains that scatter by 9 %, the error of the other frames' scale is seldom below that, and is said."""
+    limits = []
+    for seed in range(60):
+        rng = np.random.default_rng(seed)
+        gain, brightness = np.exp(0.09 * rng.standard_normal(8)), 10 ** rng.uniform(2, 3, 12)
+        flux = np.full((20, 12), np.nan)
+        flux[:8] = gain[:, None] * brightness + rng.standard_normal((8, 12))
+        gains = solve_gains(flux, np.ones((20, 12)))
+        rows = solution(np.arange(20), "c", gains, np.ones(20), nothing(20), Comparisons())
+        assert (rows["extra_scatter"][8:] == gains.spread_limit).all()
+        limits.append(gains.spread_limit)
+    below = int(np.sum(np.array(limits) < 0.09))
+    assert below <= stats.binom.ppf(0.999, 60, 0.05)
+    assert 0.1 < np.median(limits) < 0.2
 
 
 def test_a_frame_that_scatters_wildly_is_bad() -> None:
@@ -210,6 +227,11 @@ def test_channels_are_solved_apart_and_spoken_of() -> None:
     assert np.isnan(table["shift_x"][1])
     assert any("tied" in line and "10 of 10 frames" in line for line in said)
     assert any("raw is not tied" in line and "5 %" in line for line in said)
+    some = {name: values[rows["frame"] < 14] for name, values in rows.items()}
+    _, said = solved(np.arange(20), channels, [known], [some], Comparisons(), images(20))
+    assert any(
+        "7 of 10 frames" in line and "the other 3 keep raw fluxes, with errors widened by" in line for line in said
+    )
 
 
 def test_light_that_is_not_counted_is_a_factor_of_the_channel() -> None:

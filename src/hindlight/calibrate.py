@@ -19,6 +19,7 @@ from hindlight.lightcurve import FloatArray, IntArray
 MAD_TO_SIGMA = 1.482602
 TAIL_CONFIDENCE = 0.95
 FEWEST_EXCEEDANCES = 10
+TAIL_REACH = 1e-3  # of what one control weighs: no smaller chance is told by a tail, however far out a target is
 SHAPES = np.concatenate(([0.0], np.geomspace(1e-3, 5.0, 160)))
 SCALES = np.geomspace(0.02, 50.0, 400)
 LOGS_AT_ONCE = 25  # factors: no product of so many, each below the largest shape / scale * excess, overflows
@@ -173,21 +174,24 @@ class Tail:
     """What the largest of some controls' distances allow of the distribution beyond them.
 
     Generalised Pareto tails, shape >= 0, that start at `start`, beyond which lies `fraction` of the controls; `shape` and
-    `scale` (n,) are those within the 95 % profile-likelihood interval of the tail probability.
+    `scale` (n,) are those within the 95 % profile-likelihood interval of the tail probability. No chance below `least` is
+    told: beyond a few decades a fit says what form was chosen for it, and changes by orders of magnitude with a few controls.
     """
 
     fraction: float
     start: float
     shape: FloatArray
     scale: FloatArray
+    least: float
 
     def beyond(self, distance: float) -> float:
-        """The largest chance that any of the tails gives to lie beyond a distance: an upper bound."""
+        """The largest chance that any of the tails gives to lie beyond a distance, `least` at least: an upper bound."""
         shape, scale = self.shape[:, None], self.scale[:, None]
-        return float(self.fraction * np.exp(-_log_terms(shape, scale, np.array([distance - self.start])).min()))
+        chance = float(self.fraction * np.exp(-_log_terms(shape, scale, np.array([distance - self.start])).min()))
+        return max(chance, self.least)
 
     def reached(self, chance: float) -> float:
-        """The distance beyond which that bound is the given chance."""
+        """The distance beyond which that bound would be the given chance, were there no `least`."""
         log = np.log(self.fraction / chance)
         curved = self.shape > 0
         shape = np.where(curved, self.shape, 1.0)
@@ -214,7 +218,7 @@ def tail_of(distances: FloatArray, exceedances: int, weight: float = 1.0) -> Tai
     likelihood = -m * np.log(scale) - (shape + 1) * _log_terms(shape, scale, excess)
     inside = likelihood >= likelihood.max() - weight * stats.chi2.isf(1 - TAIL_CONFIDENCE, 1) / 2
     row, column = np.nonzero(inside)
-    return Tail(m / finite.size, start, SHAPES[row], scale[0, column])
+    return Tail(m / finite.size, start, SHAPES[row], scale[0, column], TAIL_REACH * weight / finite.size)
 
 
 def tail_bound(distances: FloatArray, target: float, exceedances: int, weight: float = 1.0) -> float:

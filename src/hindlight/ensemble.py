@@ -15,6 +15,7 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy import stats
 from scipy.sparse.linalg import lsqr
 
 from hindlight import losses
@@ -42,6 +43,7 @@ BAD_P = 1e-6
 BAD_SCATTER = 0.5
 LEAST_LIGHT = 0.02  # less than this is within what neighbours and noise common to both sums do to the measurement
 MEDIAN_ERROR = 1.253  # relative to that of the mean, for normal errors
+FEWEST_GAINS = 5  # frames with a gain that tell how far those without may be off
 FEWEST_HELD = 5  # frames that tell how much light the estimator counts
 FLUX_COLUMNS = ("frame", "position", "x", "y", "flux", "flux_err")  # of comparisons
 IMAGE_COLUMNS = ("shift_x", "shift_y", "fwhm", "held")  # what measuring found of the image itself
@@ -54,7 +56,8 @@ class Gains:
     """A channel's solution: `gain`, its error, own scatter (fraction of flux) and number of comparisons, per frame.
 
     Shapes (n_frames,); gain is NaN where there are too few comparisons. `brightness` and `scatter` are per source, NaN
-    for one that was left out; `common_scatter` is that of the channel; `spread` the scatter of the gains themselves.
+    for one that was left out; `common_scatter` is that of the channel; `spread` the scatter of the gains themselves
+    (robust), `spread_limit` the 95 % upper limit of their standard deviation, NaN where fewer than five frames have a gain.
     """
 
     gain: FloatArray
@@ -65,6 +68,7 @@ class Gains:
     scatter: FloatArray
     common_scatter: float
     spread: float
+    spread_limit: float
 
 
 def solve_gains(flux: FloatArray, flux_err: FloatArray, fewest: int = 3) -> Gains:
@@ -85,7 +89,15 @@ def solve_gains(flux: FloatArray, flux_err: FloatArray, fewest: int = 3) -> Gain
         if not known.any():
             nothing = np.full(n_frames, np.nan)
             return Gains(
-                nothing, nothing, nothing, np.zeros(n_frames, np.int64), np.full(n_sources, np.nan), scatter, 0.0, 0.0
+                nothing,
+                nothing,
+                nothing,
+                np.zeros(n_frames, np.int64),
+                np.full(n_sources, np.nan),
+                scatter,
+                0.0,
+                0.0,
+                np.nan,
             )
         gain, brightness = _bilinear_fit(flux, flux_err, known)
         relative, error = _relative(flux, flux_err, known, gain, brightness)
@@ -112,7 +124,16 @@ def solve_gains(flux: FloatArray, flux_err: FloatArray, fewest: int = 3) -> Gain
         scatter=np.where(known.any(axis=0), scatter, np.nan),
         common_scatter=common,
         spread=float(MAD_TO_SIGMA * np.median(np.abs(logs - np.median(logs)))),
+        spread_limit=_largest_scatter(logs),
     )
+
+
+def _largest_scatter(values: FloatArray) -> float:
+    """The 95 % upper limit of the standard deviation that values (n,) come from, if it is normal: (n - 1) s^2 / chi^2."""
+    freedom = len(values) - 1
+    if freedom + 1 < FEWEST_GAINS:
+        return float("nan")
+    return float(values.std(ddof=1) * np.sqrt(freedom / stats.chi2.ppf(0.05, freedom)))
 
 
 def _bilinear_fit(flux: FloatArray, flux_err: FloatArray, known: NDArray[np.bool_]) -> tuple[FloatArray, FloatArray]:
@@ -264,6 +285,9 @@ def _said(label: str, part: Columns, gains: Gains) -> list[str]:
         f", gains scatter by {100 * gains.spread:.1f} %, comparisons by {100 * gains.common_scatter:.1f} % more than"
     )
     said += " their errors"
+    if tied < n:
+        widened = float(part["extra_scatter"][part["verdict"] == "uncalibrated"][0])
+        said += f"; the other {n - tied} keep raw fluxes, with errors widened by {100 * widened:.3g} % of the flux"
     return [*scales, said + (f"; {bad} frames scatter so much that they are not used" if bad else "")]
 
 
@@ -330,11 +354,12 @@ def solution(
 
     `image` are the columns IMAGE_COLUMNS, NaN where nothing was found; what is `held` is taken for the channel as a whole,
     since gains make up for its changes. A frame without enough comparisons keeps its raw scale,
-    with the error widened by the scatter of the channel's gains, or by `uncalibrated_scatter` where that is not known.
+    with the error widened by the scatter that the channel's gains may have (a few of them tell it badly), or by
+    `uncalibrated_scatter` where that is not known.
     """
     tied = np.isfinite(gains.gain)
     held = _held(image["held"])
-    unknown = max(gains.spread, 0.0) if tied.sum() >= 5 else settings.uncalibrated_scatter
+    unknown = gains.spread_limit if np.isfinite(gains.spread_limit) else settings.uncalibrated_scatter
     with np.errstate(invalid="ignore"):
         own = np.hypot(gains.frame_scatter, gains.gain_err / gains.gain)
         bad = tied & (gains.frame_scatter > BAD_SCATTER)

@@ -41,8 +41,11 @@ def light_curves(run: RunFolder, target: str) -> astropy.table.Table:
     rows = {name: values[~np.isin(rows["frame"], void)] for name, values in rows.items()}
     order = np.lexsort((rows["frame"], rows["t_tdb_s"], rows["channel"].astype(str)))
     rows = {name: values[order] for name, values in rows.items()}
+    searched = tables.positions["parent"][row] >= 0
+    place = {name: float(tables.positions[name][row]) for name in ("ra", "dec")}
     meta = {
         "target": target,
+        **({f"judged_{name}": value for name, value in place.items()} if searched else {}),
         "flags": "bits are explained in the README",
         "time": "BJD (TDB) at the middle of good time",
     }
@@ -83,7 +86,8 @@ def _columns(run: RunFolder, tables: Book, rows: dict[str, Any], target: str) ->
     limit, above, quiet_err, confusion = (np.array([row[name] for row in known], float) for name in nothing)
     signed = np.array([tables.channels[channel].signed for channel in rows["channel"]], bool)
     of_frame = np.searchsorted(tables.solution["frame"], rows["frame"])
-    seen_only = tables.solution["verdict"][of_frame] == "seen_only"
+    verdict = tables.solution["verdict"][of_frame]
+    seen_only = verdict == "seen_only"
     with np.errstate(invalid="ignore"):
         snr = np.where(
             seen_only, rows["flux"] / (rows["flux_err"] * tables.solution["error_scale"][of_frame]), flux / flux_err
@@ -99,6 +103,7 @@ def _columns(run: RunFolder, tables: Book, rows: dict[str, Any], target: str) ->
         "flux_unit": [tables.channels[channel].unit for channel in rows["channel"]],
         "raw_flux": rows["flux"],
         "raw_flux_err": rows["flux_err"],
+        "verdict": verdict,
         "detected": detected,
         "limit_sigma": np.where(seen_only, tables.solution["seen_limit"][of_frame], _finite(limit * flux_err)),
         "flags": flags(rows, tables.solution),

@@ -324,13 +324,19 @@ LIGHT_CURVE = (
     TableColumn("exposure_s", "good time, NaN where unknown", unit="s", ucd="time.duration;obs.exposure"),
     TableColumn(
         "flux",
-        "calibrated flux, NaN where there is none, or where a frame tells only whether a source is seen",
+        "flux on the channel's scale (see verdict), NaN where there is none or a frame tells only whether a source is seen",
         ucd="phot.flux",
     ),
     TableColumn("flux_err", "its 1-sigma error", ucd="stat.error;phot.flux"),
     TableColumn("flux_unit", "unit of the fluxes and of background and rms", dtype="str", ucd="meta.unit"),
     TableColumn("raw_flux", "flux before the frame's gain", ucd="phot.flux"),
     TableColumn("raw_flux_err", "its 1-sigma error", ucd="stat.error;phot.flux"),
+    TableColumn(
+        "verdict",
+        "of the frame: good (on the flux scale of the comparisons), uncalibrated (flux is raw, its error widened), bad (not "
+        "used) or seen_only",
+        dtype="str",
+    ),
     TableColumn("background", "local background per pixel that was taken off", ucd="instr.background"),
     TableColumn("rms", "robust local noise per pixel", ucd="instr.det.noise"),
     TableColumn("detected", "whether the measurement is above the channel's threshold", dtype="bool"),
