@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 
 from hindlight import calibrate
+from hindlight.bright import group_size
 from hindlight.lifted import COPY, copies, lifted, originals, residuals
 from hindlight.lightcurve import Block, Channel, freeze
 from test_estimators import study
@@ -103,6 +104,28 @@ def test_rank_among_groups_that_are_alike() -> None:
     assert np.mean(np.array(p) <= 10 / 210) == pytest.approx(1 / 21, abs=3 * (1 / 21 / 2000) ** 0.5)
     with_one = calibrate.rank(calibrate.null_from(groups), np.array([9.0])).p_value
     assert with_one == pytest.approx(1 / 201)
+
+
+@pytest.mark.parametrize(("controls", "each", "sources"), [(5, 8, 8), (40, 2, 8), (40, 10, 40)])
+@pytest.mark.parametrize("share", [0.0, 0.05, 0.2, 0.5, 0.9, 1.0])
+def test_a_target_is_beyond_all_copies_no_more_often_than_stated(
+    controls: int, each: int, sources: int, share: float
+) -> None:
+    """Values of a control and a comparison's added, in heavy tails, the copies made as `lifted` does it: exact where all
+    are alike, on the safe side elsewhere.
+    """
+    rng, trials = np.random.default_rng(7), 8000
+    ids = copies(np.arange(100, 100 + controls), each)
+    blank, left = rng.standard_t(3, (trials, controls + 1)), rng.standard_t(3, (trials, sources + 1))
+    sky, wander = (1 - share) ** 0.5 * blank, share**0.5 * left
+    made = sky[:, ids % COPY - 100] + wander[:, (ids + ids // COPY) % COPY % sources]
+    beyond = np.mean(sky[:, -1] + wander[:, -1] > made.max(axis=1))
+    size = group_size(share, each, controls, sources)
+    stated = size / (len(ids) + size)
+    noise = 3 * (stated / trials) ** 0.5
+    assert beyond <= stated + noise
+    if share in (0.0, 1.0):
+        assert beyond >= stated - noise
 
 
 def test_a_small_version_of_the_study(tmp_path: Path) -> None:

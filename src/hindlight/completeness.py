@@ -130,11 +130,15 @@ def bar(p_values: FloatArray, level: float) -> float:
 
 @dataclass(frozen=True, eq=False)
 class Found:
-    """What became of n sources: arrays of shape (n,), `own_p` (n, n_plugins) NaN where a plugin says nothing."""
+    """What became of n sources: arrays of shape (n,), `own_p` (n, n_plugins) NaN where a plugin says nothing.
+
+    `enough`: there are as many usable frames as it takes to decide anything.
+    """
 
     recovered: Mask
     extrapolated: Mask
     seen: Mask
+    enough: Mask
     lowest_p: FloatArray
     own_p: FloatArray
 
@@ -178,6 +182,7 @@ def found(
         decided[:, 0] & enough,
         decided[:, 1] & enough,
         _seen(judged, null.thresholds),
+        enough,
         np.asarray(1.0 / (among.ranks.n_controls + 1.0), float),
         np.stack(own, axis=1) if own else np.empty((judged.n, 0)),
     )

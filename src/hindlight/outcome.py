@@ -84,6 +84,7 @@ def chance_cells(found: Field, index: int, at: int, p: PValues) -> dict[str, Any
         "lowest_p_statistic": f"{column} in {channel}" if channel else column,
         "beyond_controls": rank.beyond,
         "n_controls": int(found.ranked.n_controls[index]),
+        "n_effective": float(found.ranked.n_controls[index] / found.group_size),
         "null": null_of(found),
         "unlike": float(found.unlike[index]),
     }
@@ -102,7 +103,8 @@ def notes(found: Field, index: int, at: int, p: PValues, place: str = "") -> str
     n_controls = int(found.ranked.n_controls[index])
     said = []
     if p.short[at]:
-        said.append(f"{n_controls} controls cannot decide at this level, {p.needed} are needed")
+        counted = f" that count as {n_controls / found.group_size:.3g}" if found.group_size > 1 else ""
+        said.append(f"{n_controls} controls{counted} cannot decide at this level, {p.needed} are needed")
     if p.extrapolated[at]:
         said.append("p_value is the upper bound of a fitted tail, beyond every control")
     if n_controls == 0:
@@ -154,16 +156,17 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings) -> tuple[st
     if not p.testable.all() and len(sizes) - alone:
         said.append(f"{int((~p.testable).sum())} targets are undecided: too few controls, or too few usable frames")
     if placed and min(placed) < settings.controls.per_field:
-        number = f"{min(placed)} to {max(placed)}" if max(placed) > min(placed) else str(min(placed))
         said.append(
-            f"controls per target: {number}, {settings.controls.per_field} were asked for; "
+            f"controls per target: {_span(placed)}, {settings.controls.per_field} were asked for; "
             "no more fit into the frames clear of sources and of each other"
         )
     said += _search_remarks(fields, settings)
     if p.short.any():
+        lit = any(found.group_size > 1 for found in fields)
         said.append(
             f"{int(p.short.sum())} targets lie beyond every control, but their number cannot decide at q < "
-            f"{settings.ranking.level:g}: {p.needed} controls would ([controls] per_field, [search] controls)"
+            f"{settings.ranking.level:g}: {p.needed} controls would ([controls] per_field, [search] controls"
+            + ("; for bright targets as many [comparisons] wanted, too)" if lit else ")")
         )
     said += [*_error_remarks(fields), *_confusion_remarks(fields)]
     if p.extrapolated.any():
@@ -171,15 +174,22 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings) -> tuple[st
     return tuple(said)
 
 
+def _span(numbers: Sequence[int]) -> str:
+    """The smallest and the largest of some numbers, or the one that all are."""
+    low, high = min(numbers), max(numbers)
+    return f"{low} to {high}" if high > low else str(low)
+
+
 def _search_remarks(fields: Sequence[Field], settings: Settings) -> list[str]:
     """Targets that were searched within their position errors."""
     found = [f for f in fields if f.n_trials > 1]
     if not found:
         return []
-    trials, sizes = [f.n_trials for f in found], [int(n) for f in found for n in f.ranked.n_controls]
+    each = [(f, len(f.controls) // max(1, len(f.blank_sky))) for f in found]  # copies of bright targets' controls
+    trials, sizes = [f.n_trials for f in found], [int(n) // k for f, k in each for n in f.ranked.n_controls]
     said = (
-        f"{len(sizes)} targets were searched within their position errors at {min(trials)} to {max(trials)} places each, "
-        f"with {min(sizes)} to {max(sizes)} controls searched alike"
+        f"{len(sizes)} targets were searched within their position errors at {_span(trials)} places each, "
+        f"with {_span(sizes)} controls searched alike"
     )
     short = min(sizes) < settings.search.controls
     return [said + (f"; {settings.search.controls} were asked for, no more fit into the frames" if short else "")]

@@ -239,9 +239,7 @@ def _study(
     tables = book(order.run, order.version)
     fields = [found for found in _fields(tables.positions) if len(found.ids) > 1]
     if not fields:
-        raise NothingToDoError(
-            f"run {run.path}: no controls, so nothing can be said of completeness; [controls] per_field sets how many"
-        )
+        raise NothingToDoError(f"run {run.path}: {_why_no_fields(tables.positions)}")
     candidates = read_ecsv(run.file("candidates.ecsv"))
     level = order.settings.ranking.level
     bars = Bars(*(completeness.bar(np.asarray(candidates[name], float), level) for name in ("p_empirical", "p_value")))
@@ -267,6 +265,21 @@ def _fields(positions: Columns) -> list[FieldControls]:
         names = tuple(positions["name"][is_target & (positions["field"] == number)].tolist())
         found.append(FieldControls(int(number), positions["id"][here][order], vectors, names))
     return found
+
+
+def _why_no_fields(positions: Columns) -> str:
+    """Why nothing can be said of completeness, and what would mend it."""
+    targets = positions["kind"] == "target"
+    if targets.any() and (positions["search"][targets] >= 0).all():
+        return (
+            f"all {targets.sum()} targets were searched within their position errors, and completeness is that of targets "
+            "at their stated places; [search] sigmas = 0 measures targets there, in a run of its own"
+        )
+    n = int((positions["kind"] == "control").sum())
+    return (
+        f"no field has more than one control ({n} in all), so nothing can be said of completeness; [controls] per_field "
+        "sets how many, in a run of its own"
+    )
 
 
 def _all_frames(frames: Columns) -> Subset:
@@ -390,7 +403,7 @@ def _outcomes(
 
 def _joined(parts: Sequence[Outcomes], back: IntArray) -> Outcomes:
     """Outcomes of pieces of work as one, in the order of the sources."""
-    names = ("recovered", "extrapolated", "seen", "lowest_p", "own_p")
+    names = ("recovered", "extrapolated", "seen", "enough", "lowest_p", "own_p")
     found = Found(*(np.concatenate([getattr(part.found, name) for part in parts])[back] for name in names))
     return Outcomes(found, {name: np.concatenate([part.extra[name] for part in parts])[back] for name in EXTRA})
 
@@ -551,11 +564,17 @@ def _remarks(study: Study, found: Found, targets: astropy.table.Table) -> tuple[
     if not chosen.period_search:
         said.append("period searches are left out, of sources and controls alike ([completeness] period_search)")
     said += _control_remarks(study, found.lowest_p)
+    least = study.settings.detection.min_frames
+    if not found.enough.all():
+        said.append(
+            f"{int((~found.enough).sum())} of {len(found.enough)} sources have fewer than {least} usable frames in every "
+            "channel: a target is undecided then, however bright ([detection] min_frames)"
+        )
     tables = book(study.order.run, study.order.version)
-    without = {int(n) for n in tables.positions["field"][tables.positions["kind"] == "target"]}
-    without -= {f.number for f in study.fields}
+    placed = (tables.positions["kind"] == "target") & (tables.positions["search"] < 0)
+    without = {int(n) for n in tables.positions["field"][placed]} - {f.number for f in study.fields}
     if without:
-        said.append(f"{len(without)} fields without controls are left out")
+        said.append(f"{len(without)} fields with fewer than two controls are left out")
     searched = int(((tables.positions["kind"] == "target") & (tables.positions["search"] >= 0)).sum())
     if searched:
         said.append(f"{searched} targets that were searched within their position errors are not in these tables")

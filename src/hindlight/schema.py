@@ -470,6 +470,9 @@ CANDIDATES = (
         "lookback_p", "chance of the detections falling in the windows of the ephemeris given", ucd="stat.probability"
     ),
     TableColumn("n_controls", "blank positions that the target was ranked with", dtype="int64", ucd="meta.number"),
+    TableColumn(
+        "n_effective", "how many of them count: copies made for a bright target are alike in groups", ucd="meta.number"
+    ),
     TableColumn("null", "what these controls are: blank sky, or blank sky made as bright as the target", dtype="str"),
     TableColumn("unlike", "largest factor between the typical error of the target and of one of its controls"),
     TableColumn("p_empirical", "p_value before any extrapolation: (r+1)/(n+1)", ucd="stat.probability"),
