@@ -58,6 +58,22 @@ def test_bounds_on_total_flux_hold_above_confusion() -> None:
     assert plain < 0.8 * 400
 
 
+def test_bounds_hold_where_blank_sky_measures_less_than_nothing() -> None:
+    """Blank positions at -1: bounds lie above a source of 0.5 in 95 % of cases, and a frame's limit is that much higher."""
+    found = thresholds(np.full(200, -1.0), 6)
+    assert found.level == pytest.approx(-1.0, abs=0.05)
+    assert thresholds(np.full(200, 1.0), 6).level == thresholds(np.zeros(200), 6).level == 0.0
+    assert thresholds(np.full(9, -1.0), 6).level == 0.0
+    above = 0
+    for curve in block(np.full(400, 0.5 - 1.0), 7).curves():
+        seen = candidates.ChannelView(curve, len(curve), 0, found)
+        row = candidates.channel_row(candidates.View("x", (seen,), str, str), seen)
+        above += row["limit_bayes"] > 0.5
+        assert row["limit_sigma"] == pytest.approx(found.detected - found.level)
+        assert row["blank_level"] == found.level
+    assert 0.92 * 400 <= above <= 0.98 * 400  # binomial: 380 +- 4
+
+
 def test_controls_of_a_like_noise_serve() -> None:
     """Those within a tenth of the target's typical error, or the most alike ones where these are few; how unlike is said."""
     error = np.geomspace(1.0, 4.0, 60)

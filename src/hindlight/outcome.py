@@ -168,7 +168,7 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings) -> tuple[st
             f"{settings.ranking.level:g}: {p.needed} controls would ([controls] per_field, [search] controls"
             + ("; for bright targets as many [comparisons] wanted, too)" if lit else ")")
         )
-    said += [*_error_remarks(fields), *_confusion_remarks(fields)]
+    said += [*_error_remarks(fields), *_confusion_remarks(fields), *_level_remarks(fields)]
     if p.extrapolated.any():
         said.append(f"{int(p.extrapolated.sum())} p-values are upper bounds of a fitted tail (p_is_extrapolated)")
     return tuple(said)
@@ -224,9 +224,24 @@ def _confusion_remarks(fields: Sequence[Field]) -> list[str]:
             if limits.confusion > 0 and limits.confusion > np.nanmedian(error):
                 worst[label] = max(worst.get(label, 0.0), limits.confusion)
     return [
-        f"blank positions in {label} differ in their mean fluxes by {confusion:.3g} rms beyond their errors: confusion or "
-        "diffuse emission, which bounds on the total flux contain (confusion_rms in channels.ecsv)"
+        f"blank positions in {label} differ in their mean fluxes by an rms of {confusion:.3g} beyond their errors: "
+        "confusion or diffuse emission, which bounds on the total flux contain (confusion_rms in channels.ecsv)"
         for label, confusion in sorted(worst.items())
+    ]
+
+
+def _level_remarks(fields: Sequence[Field]) -> list[str]:
+    """Channels in which blank positions measure less than nothing by more than the error of a mean."""
+    lowest: dict[str, float] = {}
+    for found in fields:
+        for label, limits in found.thresholds.items() if found.lift is None else ():
+            error = found.judgement.values[label, "core_mean_err"][found.rows(found.controls)]
+            if limits.level < 0 and -limits.level > np.nanmedian(error):
+                lowest[label] = min(lowest.get(label, 0.0), limits.level)
+    return [
+        f"blank positions in {label} measure down to {level:.3g} in the median, not 0: among many sources the local background "
+        "comes out too high; fluxes are as measured, limits on them allow for it (blank_level in channels.ecsv)"
+        for label, level in sorted(lowest.items())
     ]
 
 

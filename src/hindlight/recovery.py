@@ -485,9 +485,10 @@ def _target_tables(
     candidates, channels = read_ecsv(run.file("candidates.ecsv")), read_ecsv(run.file("channels.ecsv"))
     positions = book(study.order.run, study.order.version).positions
     standing = {str(row["name"]): str(row["standing"]) for row in candidates}
-    limits: dict[str, dict[str, float]] = {}
+    limits: dict[str, dict[str, tuple[float, float]]] = {}
     for row in channels:
-        limits.setdefault(str(row["name"]), {})[str(row["channel"])] = float(row["threshold"])
+        told = float(row["threshold"]), float(row["blank_level"])
+        limits.setdefault(str(row["name"]), {})[str(row["channel"])] = told
     is_target = (positions["kind"] == "target") & (positions["search"] < 0)
     ids = positions["id"][is_target]
     names = [str(name) for name in positions["name"][is_target]]

@@ -404,13 +404,19 @@ CHANNELS = (
         ucd="stat.stdev;phot.flux",
     ),
     TableColumn(
+        "blank_level",
+        "median mean flux of blank positions where that is below zero beyond chance (background too high), else 0",
+        ucd="phot.flux",
+    ),
+    TableColumn(
         "limit_sigma",
-        "k-sigma limit of a median frame: a source this bright is detected in half of them",
+        "k-sigma limit of a median frame, above blank_level: a source this bright is detected in half of them",
         ucd="phot.flux;stat.max",
     ),
     TableColumn(
         "limit_bayes",
-        "95 % upper bound on the mean total flux (flat prior, flux not negative); its error holds confusion_rms",
+        "95 % upper bound on the mean total flux above blank_level (flat prior, flux not negative); its error holds "
+        "confusion_rms",
         ucd="phot.flux;stat.max",
     ),
     TableColumn(

@@ -127,11 +127,13 @@ def plant_in_frame(order: Order, frame: int, controls: IntArray) -> planted.Proo
 
 
 def looks_of(
-    order: Order, ids: IntArray, thresholds: Sequence[Mapping[str, float]], given: Sequence[Mapping[str, float]]
-) -> list[tuple[Looks, bool]]:
+    order: Order, ids: IntArray, thresholds: Sequence[Mapping[str, tuple[float, float]]],
+    given: Sequence[Mapping[str, float]],
+) -> list[tuple[Looks, bool]]:  # fmt: skip
     """The looks at targets (ascending ids) and whether they are cycles.
 
-    `thresholds` are each target's in sigma by channel; `given` is its ephemeris, NaN for none.
+    `thresholds` are each target's in sigma by channel, and what blank sky measures there (`blank_level`); `given` is its
+    ephemeris, NaN for none.
     """
     blocks = position_blocks(order, ids)["blocks"]
     gap = order.settings.detection.epoch_gap_days
@@ -213,8 +215,9 @@ def _without(judgement: judge.Judgement, plugins: Sequence[Plugin]) -> judge.Jud
 
 
 def _looks(
-    blocks: Mapping[str, Block], row: int, limits: Mapping[str, float], given: Mapping[str, float], gap_days: float
-) -> tuple[Looks, bool]:
+    blocks: Mapping[str, Block], row: int, limits: Mapping[str, tuple[float, float]], given: Mapping[str, float],
+    gap_days: float,
+) -> tuple[Looks, bool]:  # fmt: skip
     """The looks at one target in unsigned channels."""
     parts: list[list[Any]] = [[], [], [], [], []]
     for number, (label, block) in enumerate(blocks.items()):
@@ -223,7 +226,14 @@ def _looks(
             continue
         unit = float(np.median(curve.flux_err))
         n = len(curve)
-        told = (curve.t_tdb_s, curve.exposure_s, curve.flux_err / unit, np.full(n, limits[label]), np.full(n, number))
+        least, level = limits[label]
+        told = (
+            curve.t_tdb_s,
+            curve.exposure_s,
+            curve.flux_err / unit,
+            least - level / curve.flux_err,
+            np.full(n, number),
+        )
         for part, values in zip(parts, told, strict=True):
             part.append(values)
     t, exposure, error, threshold, channel = (np.concatenate(p) if p else np.empty(0) for p in parts)
