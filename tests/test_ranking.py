@@ -90,8 +90,13 @@ def test_controls_of_a_like_noise_serve() -> None:
     assert np.flatnonzero(serving[0]).tolist() == [0, 1, *range(3, 11)]
     assert unlike[0] == pytest.approx(error[10])
     allowed = (np.arange(60) % 2 == 0)[None, :]
-    serving, _ = ranking.matched(found, target, controls, allowed, Controls(fewest_alike=100))
-    assert np.array_equal(serving, allowed & (np.arange(60) >= 0))
+    serving, _ = ranking.matched(found, target, controls, allowed, Controls(fewest_alike=100, most_unlike=10.0))
+    assert np.array_equal(serving, allowed)
+    serving, unlike = ranking.matched(found, target, controls, allowed, Controls())
+    assert np.array_equal(serving, allowed & (error < 3.0) & (controls != 2))
+    assert unlike[0] == error[error < 3.0][-1]
+    anyhow, _ = ranking.matched(found, target, controls, allowed, Controls(), bounded=False)
+    assert np.array_equal(anyhow, allowed)
 
 
 def test_no_control_is_alike_by_default() -> None:
@@ -114,3 +119,12 @@ def test_a_small_version_of_the_study(tmp_path: Path) -> None:
     kinds.archive(tmp_path, "ripple", 5, targets=60, frames=16, size=300)
     assert kinds.holds([kinds.p_values(tmp_path, "")], "alike", say=False)
     assert not kinds.holds([kinds.p_values(tmp_path, kinds.ANYWHERE)], "anywhere", say=False)
+
+
+def test_blank_sky_near_a_bright_source_is_no_more_unusual_than_elsewhere(tmp_path: Path) -> None:
+    """A small version of another study: high rings that vary by factors are where all targets and few controls are."""
+    matching = study("matching")
+    settings = matching.archive(tmp_path, "rings", 2, targets=100, frames=12, size=360)
+    for more, fine in (("", True), ("most_unlike = 1e9\n", False)):
+        runs = [matching.p_values(tmp_path, more + settings)]
+        assert matching.holds(runs, "rings", say=False)[0] == fine

@@ -22,7 +22,7 @@ from hindlight.lifted import COPY
 from hindlight.lightcurve import FloatArray
 from hindlight.plugin import Column, ConsistencyCheck, Statistic
 from hindlight.schema import CANDIDATES, PLUGIN_FAULTS, TableColumn
-from hindlight.settings import Settings
+from hindlight.settings import Controls, Settings
 from hindlight.tables import astropy_table, rows_to_columns
 
 CAUTION = (
@@ -98,7 +98,7 @@ def null_of(found: Field) -> str:
     return f"blank sky and the residuals of comparisons, scaled to a flux of {levels}"
 
 
-def notes(found: Field, index: int, at: int, p: PValues, place: str = "") -> str:
+def notes(found: Field, index: int, at: int, p: PValues, controls: Controls, place: str = "") -> str:
     """What a reader should know before trusting a row."""
     n_controls = int(found.ranked.n_controls[index])
     said = []
@@ -107,8 +107,14 @@ def notes(found: Field, index: int, at: int, p: PValues, place: str = "") -> str
         said.append(f"{n_controls} controls{counted} cannot decide at this level, {p.needed} are needed")
     if p.extrapolated[at]:
         said.append("p_value is the upper bound of a fitted tail, beyond every control")
+    in_frames = int(found.serving[index].sum())
     if n_controls == 0:
         said.append("no control serves this target: no p-value")
+    if n_controls < min(in_frames, controls.fewest_alike) and found.lift is None:
+        said.append(
+            f"{n_controls} of {in_frames} controls have as many samples, and a noise like its own within a factor "
+            f"{controls.most_unlike:g}"
+        )
     return "; ".join([*said, place] if place else said)
 
 

@@ -100,14 +100,16 @@ def oriented_matrix(
 
 
 def matched(
-    judgement: Judgement, targets: IntArray, controls: IntArray, in_frames: NDArray[np.bool_], settings: Controls
-) -> tuple[NDArray[np.bool_], FloatArray]:
+    judgement: Judgement, targets: IntArray, controls: IntArray, in_frames: NDArray[np.bool_], settings: Controls,
+    bounded: bool = True,
+) -> tuple[NDArray[np.bool_], FloatArray]:  # fmt: skip
     """Which controls serve which target, shape (n_targets, n_controls), and how unlike these are in depth, (n_targets,).
 
     `in_frames` says who shares enough frames by footprint; a control must also have nearly as many usable samples in each
     channel, and a like noise: structure in the sky, the edge of the primary beam and sidelobes of bright sources all show
-    in it. Where fewer than `fewest_alike` are within the factor `alike`, so many of the most alike ones serve. How unlike:
-    the largest factor between the depth of the target and that of a control that serves it, 1 for none.
+    in it. Where fewer than `fewest_alike` are within the factor `alike`, so many of the most alike ones serve, those that
+    are `most_unlike` and beyond never where `bounded`. How unlike: the largest factor between the depth of the target and
+    that of a control that serves it, 1 for none.
     """
     good = in_frames.copy()
     unlike = np.zeros(good.shape)
@@ -122,6 +124,8 @@ def matched(
         return good, np.ones(len(good))
     enough = np.sort(unlike, axis=1)[:, : settings.fewest_alike][:, -1:]  # infinite where there are fewer
     good &= unlike <= np.maximum(np.log(settings.alike), enough)
+    if bounded:
+        good &= unlike <= np.log(max(settings.alike, settings.most_unlike))
     return good, np.exp(np.max(unlike, axis=1, initial=0.0, where=good))
 
 
