@@ -95,3 +95,26 @@ def test_completeness_of_searched_targets_alone_says_why_there_is_none(
     said = (tmp_path / "run" / "completeness.txt").read_text(encoding="utf-8")
     assert "2 targets that were searched" in said
     assert "controls are left out" not in said
+
+
+def test_a_target_among_sidelobes_says_which_controls_it_lacks(tmp_path: Path) -> None:
+    """In noise seven times that of all controls there is none for it: no p-value, undecided, and the reason is said."""
+    y, x = np.mgrid[:160, :160] - 79.5
+    rng = np.random.default_rng(4)
+    near = 1.0 + 6.0 * (np.hypot(x, y) < 38)
+    noisy = skies.Sky(
+        n_frames=12, size=160, noise="white", rms=1.0, backdrop=lambda _k: near * rng.standard_normal(x.shape)
+    )
+    spots = [skies.Source("middle", 0.0, 0.0), skies.Source("aside", 550.0, 0.0)]
+    skies.write_sky(tmp_path / "frames", noisy, [], 2)
+    (tmp_path / "t.csv").write_text(skies.target_text(spots, noisy), encoding="utf-8")
+    (tmp_path / "s.toml").write_text("[controls]\nper_field = 40\nseparation = 13.0\n", encoding="utf-8")
+    rows = mine(tmp_path, "run", "t.csv")
+    assert rows["middle"]["standing"] == "undecided"
+    assert rows["middle"]["n_controls"] == 0
+    assert "no control serves this target" in str(rows["middle"]["notes"])
+    assert "more controls were left out, whose noise is unlike its own by more than a factor 3" in str(
+        rows["middle"]["notes"]
+    )
+    assert rows["aside"]["n_controls"] >= 8
+    assert "left out" not in str(rows["aside"]["notes"])

@@ -107,15 +107,24 @@ def notes(found: Field, index: int, at: int, p: PValues, controls: Controls, pla
         said.append(f"{n_controls} controls{counted} cannot decide at this level, {p.needed} are needed")
     if p.extrapolated[at]:
         said.append("p_value is the upper bound of a fitted tail, beyond every control")
-    in_frames = int(found.serving[index].sum())
     if n_controls == 0:
         said.append("no control serves this target: no p-value")
-    if n_controls < min(in_frames, controls.fewest_alike) and found.lift is None:
+    if (left_out := _too_unlike(found, index, controls)) > 0:
         said.append(
-            f"{n_controls} of {in_frames} controls have as many samples, and a noise like its own within a factor "
-            f"{controls.most_unlike:g}"
+            f"{left_out} more controls were left out, whose noise is unlike its own by more than a factor "
+            f"{controls.most_unlike:g} ([controls] most_unlike)"
         )
     return "; ".join([*said, place] if place else said)
+
+
+def _too_unlike(found: Field, index: int, controls: Controls) -> int:
+    """How many controls would have served a target that has few, had they not been too unlike it."""
+    n_controls = int(found.ranked.n_controls[index])
+    if n_controls >= controls.fewest_alike or found.lift is not None:
+        return 0
+    rows = found.rows(found.targets[[index]]), found.rows(found.controls)
+    anyhow, _ = ranking.matched(found.judgement, *rows, found.serving[[index]], controls, bounded=False)
+    return int(anyhow.sum()) - n_controls
 
 
 def place_note(found: Field, distances: FloatArray, error: float, most_places: int) -> str:
@@ -164,7 +173,11 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings) -> tuple[st
     if placed and min(placed) < settings.controls.per_field:
         said.append(
             f"controls per target: {_span(placed)}, {settings.controls.per_field} were asked for; "
-            "no more fit into the frames clear of sources and of each other"
+            + (
+                "no more fit into the frames clear of sources and of each other"
+                if all(len(found.controls) < settings.controls.per_field for found in fields if not found.lift)
+                else "more were measured, but in fewer frames or with another noise"
+            )
         )
     said += _search_remarks(fields, settings)
     if p.short.any():
