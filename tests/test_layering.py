@@ -18,8 +18,8 @@ ORDER = [
     "companions", "channels", "outlines", "footprints", "archive", "summary", "positions", "apart", "pixels",
     "background", "detection", "pointing", "growth", "photometry", "planted", "duplicates", "robust", "losses", "response",
     "ensemble", "store", "judge", "calibrate", "ranking", "lifted", "search", "timing", "injection", "completeness",
-    "candidates", "plan", "comparisons", "tasks", "trials", "conclude", "bright", "outcome", "crew", "record", "verdicts",
-    "runner", "recovery", "survey", "export", "demo", "testing", "cli", "__main__",
+    "brighter", "candidates", "plan", "comparisons", "tasks", "trials", "conclude", "bright", "outcome", "crew", "record",
+    "verdicts", "runner", "recovery", "survey", "export", "demo", "testing", "cli", "__main__",
 ]  # fmt: skip
 PLUGINS_MAY_IMPORT = {"hindlight", "numpy", "scipy", "astropy", "photutils", "nifty_ls"}
 

@@ -6,8 +6,7 @@ import numpy as np
 import pytest
 
 from hindlight import calibrate
-from hindlight.bright import group_size
-from hindlight.lifted import COPY, copies, lifted, originals, residuals
+from hindlight.lifted import COPY, copies, group_size, lifted, originals, residuals
 from hindlight.lightcurve import Block, Channel, freeze
 from test_estimators import study
 

@@ -14,7 +14,7 @@ from hindlight import calibrate
 from hindlight.conclude import Field, rank
 from hindlight.host import Plugins
 from hindlight.judge import Judgement, joined, taken
-from hindlight.lifted import COPY, Lift, Residuals, copies
+from hindlight.lifted import COPY, Lift, Residuals, copies, group_size, how_many
 from hindlight.lightcurve import FloatArray
 from hindlight.plugin import Column
 from hindlight.settings import Settings
@@ -107,7 +107,7 @@ def _brightness(found: Field, labels: list[str], left: Evidence) -> _Brightness:
 
 def _copied(found: Field, members: list[int], lift: Lift, wanted: int, share: float, n_sources: int) -> Bright:
     """Targets of a field, with copies of its controls, about `wanted`, in which calibration has a share of the variance."""
-    each = max(1, min(-(-wanted // len(found.controls)), n_sources))
+    each = how_many(wanted, len(found.controls), n_sources)
     controls = copies(found.controls, each)
     size = group_size(share, each, len(found.controls), n_sources)
     targets, serving = found.targets[members], np.tile(found.serving[members], each)
@@ -116,16 +116,6 @@ def _copied(found: Field, members: list[int], lift: Lift, wanted: int, share: fl
     )  # below those of searched targets, which may be taken out of fields of their own
     field = Field(number, targets, controls, serving, found.n_trials, lift, size)
     return Bright(found, field)
-
-
-def group_size(share: float, each: int, n_controls: int, n_sources: int) -> float:
-    """How many copies are as good as one, where calibration has a `share` of the variance.
-
-    Without any, the `each` copies of a control differ by a constant only; where it is all, those made with one of the
-    `n_sources` comparisons are alike. Between the two copies tell more than this line says, which is on the safe side.
-    """
-    of_a_source = max(1.0, each * n_controls / n_sources)
-    return (1.0 - share) * each + share * of_a_source
 
 
 def _without(found: Field, index: list[int]) -> Field:

@@ -120,4 +120,6 @@ def _judged_channels(run: RunFolder, target: str) -> dict[str, dict[str, float]]
         return {}
     table = read_ecsv(run.file("channels.ecsv"))
     mine = table[table["name"] == target]
-    return {str(row["channel"]): {name: float(row[name]) for name in JUDGED} for row in mine}
+    there = [name for name in JUDGED if name in table.colnames]  # runs judged by earlier versions lack the last one
+    nothing = dict.fromkeys(JUDGED, 0.0)
+    return {str(row["channel"]): nothing | {name: float(row[name]) for name in there} for row in mine}

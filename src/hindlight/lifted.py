@@ -117,3 +117,18 @@ def copies(controls: IntArray, number: int) -> IntArray:
 def originals(ids: IntArray) -> NDArray[np.int64]:
     """The controls that copies are made of, each once, ascending."""
     return np.unique(ids % COPY)
+
+
+def how_many(wanted: int, n_controls: int, n_sources: int) -> int:
+    """How often each control is copied for about `wanted` copies; no more often than there are comparisons."""
+    return max(1, min(-(-wanted // n_controls), n_sources))
+
+
+def group_size(share: float, each: int, n_controls: int, n_sources: int) -> float:
+    """How many copies are as good as one, where calibration has a `share` of the variance.
+
+    Without any, the `each` copies of a control differ by a constant only; where it is all, those made with one of the
+    `n_sources` comparisons are alike. Between the two copies tell more than this line says, which is on the safe side.
+    """
+    of_a_source = max(1.0, each * n_controls / n_sources)
+    return (1.0 - share) * each + share * of_a_source

@@ -18,13 +18,14 @@ import astropy.table
 import numpy as np
 from numpy.typing import NDArray
 
-from hindlight import completeness, host, injection, judge, plan, planted, ranking, record, store
+from hindlight import brighter, completeness, host, injection, judge, plan, planted, ranking, record, store
 from hindlight import settings as settings_module
 from hindlight.completeness import Bars, Cell, Found, Injection, Looks, Null
 from hindlight.crew import Crew, assembled
 from hindlight.duplicates import counts
 from hindlight.errors import NothingToDoError, UsageError
 from hindlight.fence import call
+from hindlight.lifted import copies
 from hindlight.lightcurve import FloatArray, IntArray, LightCurve
 from hindlight.plugin import Column, PeriodSearch, Statistic
 from hindlight.positions import read_targets, serves
@@ -34,7 +35,7 @@ from hindlight.settings import Settings
 from hindlight.store import Columns, RunFolder
 from hindlight.systems import unit_vectors
 from hindlight.tables import astropy_table, read_ecsv, rows_to_columns, write_table
-from hindlight.tasks import Order, book, position_blocks
+from hindlight.tasks import Order, book, position_blocks, residuals
 from hindlight.trials import (
     ALL,
     EXTRA,
@@ -42,6 +43,7 @@ from hindlight.trials import (
     Subset,
     curves_of,
     judge_controls,
+    judge_copies,
     judge_injected,
     looks_of,
     plant_in_frame,
@@ -157,7 +159,7 @@ def recover(asked: Asked, watcher: Watcher) -> Report:
         meta = _meta(study, units)
         table = _table(study, wanted, outcomes, meta)
         targets, limits = _target_tables(study, run, table, ephemerides, meta)
-    remarks = (*_remarks(study, outcomes[ALL].found, targets), *_proof_remarks(proofs), UPPER_BOUND)
+    remarks = (*_remarks(study, nulls, outcomes[ALL].found, targets), *_proof_remarks(proofs), UPPER_BOUND)
     for name, made in (("completeness_limits", limits), ("completeness_targets", targets), ("completeness", table)):
         for ending in (".fits", ".vot", ".ecsv"):
             write_table(run.file(f"{name}{ending}"), made)
@@ -241,8 +243,9 @@ def _study(
     if not fields:
         raise NothingToDoError(f"run {run.path}: {_why_no_fields(tables.positions)}")
     candidates = read_ecsv(run.file("candidates.ecsv"))
-    level = order.settings.ranking.level
-    bars = Bars(*(completeness.bar(np.asarray(candidates[name], float), level) for name in ("p_empirical", "p_value")))
+    level, dependent = order.settings.ranking.level, order.settings.ranking.any_dependence
+    p_values = (np.asarray(candidates[name], float) for name in ("p_empirical", "p_value"))
+    bars = Bars(*(completeness.bar(p, level, dependent) for p in p_values))
     asked = plugins.period_searches if order.settings.completeness.period_search else ()
     columns = judge.full_columns([*plugins.statistics, *asked])
     cells = completeness.grid(order.settings.completeness)
@@ -322,7 +325,38 @@ def _nulls(study: Study) -> tuple[dict[int, dict[str, Null]], dict[str, float]]:
         _search_nulls(study, nulls)
     labels = sorted({label for result in results for label in result.errors})
     errors = {label: np.concatenate([r.errors[label] for r in results if label in r.errors]) for label in labels}
-    return nulls, {label: float(np.nanmedian(v)) if np.isfinite(v).any() else np.nan for label, v in errors.items()}
+    units = {label: float(np.nanmedian(v)) if np.isfinite(v).any() else np.nan for label, v in errors.items()}
+    return _with_brighter(study, nulls, units), units
+
+
+def _with_brighter(
+    study: Study, nulls: Mapping[int, Mapping[str, Null]], units: Mapping[str, float]
+) -> dict[int, dict[str, Null]]:
+    """The nulls with those of sources that are bright in single frames."""
+    left = residuals(study.order)
+    ladder = brighter.rungs(study.cells, units, left, study.settings)
+    n_targets = len(study.used_by_target) + 1
+    jobs, places = [], []
+    for found in study.fields:
+        for rung in ladder:
+            each = brighter.copied_times(rung, len(found.ids), n_targets, study.settings)
+            ids = copies(found.ids, each)
+            places.append((found.number, rung))
+            jobs.append((ids, study.subsets, rung.lift))
+    made = study.each("judging controls as bright as sources", judge_copies, jobs) if jobs else []
+    on: dict[tuple[int, str], dict[int, Null]] = {}
+    for (number, rung), judged in zip(places, made, strict=True):
+        for name, judgement in judged.items():
+            on.setdefault((number, name), {})[rung.step] = brighter.null_on(rung, nulls[number][name], judgement)
+    told = {label: units[label] for label in left if label in units}
+    scatter = {label: float(np.median(left[label].extra)) for label in told}
+    return {
+        number: {
+            name: replace(null, brighter=on.get((number, name), {}), units=told, scatter=scatter)
+            for name, null in of_field.items()
+        }
+        for number, of_field in nulls.items()
+    }
 
 
 def _in_frames(study: Study, found: FieldControls, subset: Subset) -> Mask:
@@ -487,7 +521,8 @@ def _target_tables(
     standing = {str(row["name"]): str(row["standing"]) for row in candidates}
     limits: dict[str, dict[str, tuple[float, float]]] = {}
     for row in channels:
-        told = float(row["threshold"]), float(row["blank_level"])
+        level = float(row["blank_level"]) if "blank_level" in channels.colnames else 0.0  # not in runs of before
+        told = float(row["threshold"]), level
         limits.setdefault(str(row["name"]), {})[str(row["channel"])] = told
     is_target = (positions["kind"] == "target") & (positions["search"] < 0)
     ids = positions["id"][is_target]
@@ -552,9 +587,12 @@ def _target_row(
     return row
 
 
-def _remarks(study: Study, found: Found, targets: astropy.table.Table) -> tuple[str, ...]:
+def _remarks(
+    study: Study, nulls: Mapping[int, Mapping[str, Null]], found: Found, targets: astropy.table.Table
+) -> tuple[str, ...]:
     """What holds for the tables as a whole; `found` is what became of the sources in all frames."""
     chosen = study.settings.completeness
+    lit = any(null.brighter for of_field in nulls.values() for null in of_field.values())
     said = [
         f"{len(study.cells)} cells of {chosen.per_cell} sources each in {len(study.subsets)} subsets of frames, at "
         f"{sum(len(f.ids) for f in study.fields)} controls of {len(study.fields)} fields",
@@ -564,7 +602,9 @@ def _remarks(study: Study, found: Found, targets: astropy.table.Table) -> tuple[
     ]
     if not chosen.period_search:
         said.append("period searches are left out, of sources and controls alike ([completeness] period_search)")
-    said += _control_remarks(study, found.lowest_p)
+    elif lit:
+        said.append("periods of sources that are bright in single frames are not searched for")
+    said += _control_remarks(study, found.lowest_p, lit)
     least = study.settings.detection.min_frames
     if not found.enough.all():
         said.append(
@@ -587,7 +627,7 @@ def _remarks(study: Study, found: Found, targets: astropy.table.Table) -> tuple[
     return tuple(said)
 
 
-def _control_remarks(study: Study, lowest_p: FloatArray) -> list[str]:
+def _control_remarks(study: Study, lowest_p: FloatArray, lit: bool) -> list[str]:
     """Whether controls are enough to find anything, by the smallest p-value that each source could have got."""
     short = lowest_p >= study.bars.empirical
     hopeless = short & (np.rint(1.0 / lowest_p - 1.0) < FEWEST_FOR_TAIL)
@@ -597,6 +637,7 @@ def _control_remarks(study: Study, lowest_p: FloatArray) -> list[str]:
             f"too few controls for {hopeless.sum()} of {len(short)} sources: p cannot be below "
             f"{lowest_p[hopeless].min():.3g} at best, below {study.bars.empirical:.3g} is needed, and no tail can be fitted to "
             f"fewer than {FEWEST_FOR_TAIL}: however bright, they could not have been found"
+            + ("; for bright sources as many comparisons are wanted as controls" if lit else "")
         )
     if (short & ~hopeless).any():
         said.append(

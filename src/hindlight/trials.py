@@ -15,11 +15,12 @@ from hindlight import completeness, host, injection, judge, photometry, planted,
 from hindlight.completeness import Bars, Cell, Found, Injection, Looks, Null
 from hindlight.files import check_unchanged
 from hindlight.headers import SetAsideError
+from hindlight.lifted import Lift
 from hindlight.lightcurve import Block, FloatArray, IntArray
 from hindlight.plugin import Column, Plugin
 from hindlight.schema import UNUSABLE
 from hindlight.settings import Settings
-from hindlight.tasks import Order, anchors_of, book, frame_facts, position_blocks
+from hindlight.tasks import Order, anchors_of, book, frame_facts, position_blocks, residuals
 from hindlight.timing import DAY, J2000_JD
 
 ALL = "all"
@@ -63,6 +64,13 @@ def judge_controls(order: Order, ids: IntArray, subsets: Sequence[Subset]) -> Ju
     statistics = host.load(order.plugins).statistics
     judged = {subset.name: judge.judge(_within(blocks, subset), statistics) for subset in subsets}
     return Judged(judged, {label: _typical(block.flux_err) for label, block in blocks.items()})
+
+
+def judge_copies(order: Order, ids: IntArray, subsets: Sequence[Subset], lift: Lift) -> dict[str, judge.Judgement]:
+    """Every statistic at these copies of controls (ascending ids), made as bright as `lift` says, in each subset."""
+    blocks = position_blocks(order, ids, lift=lift)["blocks"]
+    statistics = host.load(order.plugins).statistics
+    return {subset.name: judge.judge(_within(blocks, subset), statistics) for subset in subsets}
 
 
 def search_controls(order: Order, ids: IntArray, subset: Subset) -> judge.Judgement:
@@ -165,15 +173,21 @@ def curves_of(blocks: Mapping[str, Block]) -> list[list[Any]]:
 def _injected(
     order: Order, block: Block, rows: IntArray, wanted: Sequence[Injection], cells: Sequence[Cell], unit: float
 ) -> tuple[Block, FloatArray]:
-    """A channel's light curves with the sources added, and the fluxes that were, shape (n, n_frames)."""
+    """A channel's light curves with the sources added, and the fluxes that were, shape (n, n_frames).
+
+    What calibration leaves of a comparison it leaves of a source, too.
+    """
     flux = np.zeros((len(rows), len(block.frame)))
+    left = residuals(order).get(block.channel.label)
+    wander = np.zeros((1, len(block.frame)))
+    if left is not None:
+        wander = left.values[:, np.searchsorted(left.frame, block.frame)]
     if not block.channel.signed and np.isfinite(unit):
         for number, (row, one) in enumerate(zip(rows, wanted, strict=True)):
             peak = unit * cells[one.cell].flux
             if peak > 0:
-                flux[number] = peak * injection.brightness(
-                    one.source, block.t_tdb_s[row], block.exposure_s[row], block.frame
-                )
+                shape = injection.brightness(one.source, block.t_tdb_s[row], block.exposure_s[row], block.frame)
+                flux[number] = peak * shape * (1.0 + wander[one.source.key % len(wander)])
     tables = book(order.run, order.version)
     at = [tables.row_of_frame[int(frame)] for frame in block.frame]
     electrons = tables.frames["electrons_per_unit"][at]
