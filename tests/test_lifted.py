@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from hindlight import calibrate
-from hindlight.lifted import COPY, copies, group_size, lifted, originals, residuals
+from hindlight.lifted import COPY, copies, group_size, lifted, originals, over_all, residuals
 from hindlight.lightcurve import Block, Channel, freeze
 from test_estimators import study
 
@@ -90,6 +90,27 @@ def test_copies_are_blank_sky_and_a_steady_source() -> None:
     np.testing.assert_array_equal(again.flux, made.flux[np.searchsorted(ids, some)])
     assert originals(some).tolist() == [4, 7]
     np.testing.assert_array_equal(lifted(blank, base, ids, 100.0, None).flux[5:10], blank.flux)
+
+
+def test_copies_scatter_as_errors_say_where_comparisons_do_not_tell() -> None:
+    """In frames that are not tied, and in those that show no comparison: else a target would vary beside its copies."""
+    known = solution(200, 0.03)
+    known["verdict"][150:] = "uncalibrated"
+    known["extra_scatter"][100:] = 0.07
+    some = comparisons(8, 0.03, 1.0)
+    seen = block(some.flux[:, :180], 1.0, 0.03)  # the last twenty show none
+    left = residuals(seen, known)
+    assert left is not None
+    whole = over_all(left, known["frame"], known)
+    np.testing.assert_array_equal(whole.values[:, :150], left.values[:, :150])
+    assert np.std(whole.values[:, 150:]) == pytest.approx(0.07, rel=0.05)
+    assert np.abs(np.corrcoef(whole.values[:, 150:])[np.triu_indices(len(whole.values), 1)]).max() < 0.6
+    blank = block(np.zeros((3, 200)), 1.0)
+    made = lifted(blank, np.arange(3), copies(np.arange(3), 5), 1000.0, whole)
+    pulls = (made.flux[:, 150:] - 1000.0) / made.flux_err[:, 150:]
+    assert np.std(pulls) == pytest.approx(1.0, rel=0.1)
+    some_frames = over_all(left, known["frame"][170:], known)
+    np.testing.assert_array_equal(some_frames.values, whole.values[:, 170:])
 
 
 def test_rank_among_groups_that_are_alike() -> None:

@@ -76,6 +76,22 @@ def residuals(block: Block, solution: Columns) -> Residuals | None:
     return Residuals(block.frame, _filled(left), extra, gain)
 
 
+def over_all(left: Residuals, frame: IntArray, solution: Columns) -> Residuals:
+    """The same over all frames of a channel, shape (n,), ascending.
+
+    Where a frame is not tied to comparisons, or shows none of these, what is left scatters as the errors there say. Each draw
+    is made of the frame and the number of the source.
+    """
+    at = np.searchsorted(solution["frame"], frame)
+    extra, gain = np.nan_to_num(solution["extra_scatter"][at]), solution["gain"][at]
+    tied = (solution["verdict"][at] == "good") & np.isin(frame, left.frame)
+    values = np.zeros((len(left.values), len(frame)))
+    values[:, tied] = left.values[:, np.searchsorted(left.frame, frame[tied])]
+    for column in np.flatnonzero(~tied).tolist():
+        values[:, column] = extra[column] * np.random.default_rng(int(frame[column])).standard_normal(len(values))
+    return Residuals(frame, values, extra, gain)
+
+
 def _filled(values: FloatArray) -> FloatArray:
     """The matrix with each gap filled from the next row that has a value there; zero where none has."""
     filled = values.copy()

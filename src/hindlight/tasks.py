@@ -338,7 +338,14 @@ def _residuals(run: str, version: str, assumed: float) -> Mapping[str, lifted.Re
         return {}
     blocks = position_blocks(Order(run, Settings(), host.PluginSpec(), version), ids)["blocks"]
     found = {label: lifted.residuals(block, tables.solution) for label, block in blocks.items()}
-    return {label: left for label, left in found.items() if left is not None}
+    of_channel = {label: np.sort(tables.frames["id"][tables.frames["channel"] == label]) for label in found}
+    return {
+        label: lifted.over_all(
+            left, of_channel[label][np.isin(of_channel[label], tables.solution["frame"])], tables.solution
+        )
+        for label, left in found.items()
+        if left is not None
+    }
 
 
 def judge_positions(order: Order, ids: IntArray, lift: Lift | None = None) -> judge.Judgement:
