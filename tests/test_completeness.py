@@ -90,15 +90,16 @@ def test_epochs_and_cycles():
     assert share == pytest.approx([40 / 60, 40 / 60, 30 / 60, 0.0])
 
 
-def test_bar_is_what_benjamini_and_hochberg_leave_for_one_more():
-    """Below the bar one more p-value is below the level among the others, above it is not."""
+@pytest.mark.parametrize(("dependent", "method"), [(False, "bh"), (True, "by")])
+def test_bar_is_what_the_false_discovery_rate_leaves_for_one_more(dependent, method):
+    """Below the bar one more p-value is below the level among the others, above it is not; in either form of the rate."""
     rng = np.random.default_rng(3)
     for n in (0, 1, 3, 20):
         for _ in range(50):
             p = rng.uniform(size=n) ** rng.integers(1, 6)
-            at = bar(p, 0.05)
+            at = bar(p, 0.05, dependent)
             for value, expected in ((at * 0.999, True), (at * 1.001, False)):
-                q = stats.false_discovery_control(np.append(p, value))[-1]
+                q = stats.false_discovery_control(np.append(p, value), method=method)[-1]
                 assert (q < 0.05) == expected
     assert bar(np.array([np.nan, np.nan]), 0.05) == 0.05
 
@@ -182,3 +183,15 @@ def test_between_fluxes_of_the_grid():
     assert completeness.between(10**0.5, grid, found) == pytest.approx(0.25)
     assert np.isnan(completeness.between(1000.0, grid, found))
     assert np.isnan(completeness.between(np.nan, grid, found))
+
+
+def test_bright_sources_are_ranked_as_a_run_ranks_bright_targets():
+    """Calibration leaves a tenth, ten comparisons tell of it: found as seldom as targets are, not as often as by blank sky."""
+    cell, archive = Cell(SMOOTH, 12.0, 8.64e6), (80, 24, 0.05, 0.1, 10)
+    hid = [hidden.by_injection_of_bright(seed, cell, *archive, each=4) for seed in range(8)]
+    full, blank = (np.concatenate([one[which] for one in hid]) for which in (0, 1))
+    made = np.array([hidden.by_simulation_of_bright(seed, cell, *archive) for seed in range(24)])
+    table = [[full.sum(), (~full).sum()], [made.sum(), (~made).sum()]]
+    assert stats.fisher_exact(table).pvalue > 0.001
+    table[0] = [blank.sum(), (~blank).sum()]
+    assert stats.fisher_exact(table).pvalue < 1e-4

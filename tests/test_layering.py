@@ -18,7 +18,7 @@ ORDER = [
     "goodtime", "knowledge", "files", "companions", "channels", "outlines", "footprints", "frametable", "archive",
     "summary", "positions", "apart", "pixels", "background", "detection", "pointing", "growth", "opening", "fluxes",
     "photometry", "planted", "duplicates", "likeness", "robust", "losses", "response", "ensemble", "store", "judge",
-    "calibrate", "ranking", "lifted", "search", "timing", "injection", "completeness", "candidates", "plan",
+    "calibrate", "ranking", "lifted", "search", "timing", "injection", "completeness", "brighter", "candidates", "plan",
     "more_controls", "comparisons", "order", "tasks", "examining", "trials", "conclude", "bright", "outcome", "crew",
     "record", "verdicts", "measuring", "second_pass", "runner", "recovery", "survey", "export", "demo", "testing",
     "cli", "__main__",

@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from hindlight import calibrate
-from hindlight.lifted import COPY, copies, lifted, originals, residuals
+from hindlight.lifted import COPY, copies, group_size, lifted, originals, over_all, residuals
 from hindlight.lightcurve import Block, Channel, freeze
 from test_estimators import study
 
@@ -92,6 +92,27 @@ def test_copies_are_blank_sky_and_a_steady_source() -> None:
     np.testing.assert_array_equal(lifted(blank, base, ids, 100.0, None).flux[5:10], blank.flux)
 
 
+def test_copies_scatter_as_errors_say_where_comparisons_do_not_tell() -> None:
+    """In frames that are not tied, and in those that show no comparison: else a target would vary beside its copies."""
+    known = solution(200, 0.03)
+    known["verdict"][150:] = "uncalibrated"
+    known["extra_scatter"][100:] = 0.07
+    some = comparisons(8, 0.03, 1.0)
+    seen = block(some.flux[:, :180], 1.0, 0.03)  # the last twenty show none
+    left = residuals(seen, known)
+    assert left is not None
+    whole = over_all(left, known["frame"], known)
+    np.testing.assert_array_equal(whole.values[:, :150], left.values[:, :150])
+    assert np.std(whole.values[:, 150:]) == pytest.approx(0.07, rel=0.05)
+    assert np.abs(np.corrcoef(whole.values[:, 150:])[np.triu_indices(len(whole.values), 1)]).max() < 0.6
+    blank = block(np.zeros((3, 200)), 1.0)
+    made = lifted(blank, np.arange(3), copies(np.arange(3), 5), 1000.0, whole)
+    pulls = (made.flux[:, 150:] - 1000.0) / made.flux_err[:, 150:]
+    assert np.std(pulls) == pytest.approx(1.0, rel=0.1)
+    some_frames = over_all(left, known["frame"][170:], known)
+    np.testing.assert_array_equal(some_frames.values, whole.values[:, 170:])
+
+
 def test_rank_among_groups_that_are_alike() -> None:
     """Of 20 groups of ten equal controls the target is beyond all with chance 1/21, and never less by their number."""
     rng = np.random.default_rng(6)
@@ -103,6 +124,28 @@ def test_rank_among_groups_that_are_alike() -> None:
     assert np.mean(np.array(p) <= 10 / 210) == pytest.approx(1 / 21, abs=3 * (1 / 21 / 2000) ** 0.5)
     with_one = calibrate.rank(calibrate.null_from(groups), np.array([9.0])).p_value
     assert with_one == pytest.approx(1 / 201)
+
+
+@pytest.mark.parametrize(("controls", "each", "sources"), [(5, 8, 8), (40, 2, 8), (40, 10, 40)])
+@pytest.mark.parametrize("share", [0.0, 0.05, 0.2, 0.5, 0.9, 1.0])
+def test_a_target_is_beyond_all_copies_no_more_often_than_stated(
+    controls: int, each: int, sources: int, share: float
+) -> None:
+    """Values of a control and a comparison's added, in heavy tails, the copies made as `lifted` does it: exact where all
+    are alike, on the safe side elsewhere.
+    """
+    rng, trials = np.random.default_rng(7), 8000
+    ids = copies(np.arange(100, 100 + controls), each)
+    blank, left = rng.standard_t(3, (trials, controls + 1)), rng.standard_t(3, (trials, sources + 1))
+    sky, wander = (1 - share) ** 0.5 * blank, share**0.5 * left
+    made = sky[:, ids % COPY - 100] + wander[:, (ids + ids // COPY) % COPY % sources]
+    beyond = np.mean(sky[:, -1] + wander[:, -1] > made.max(axis=1))
+    size = group_size(share, each, controls, sources)
+    stated = size / (len(ids) + size)
+    noise = 3 * (stated / trials) ** 0.5
+    assert beyond <= stated + noise
+    if share in (0.0, 1.0):
+        assert beyond >= stated - noise
 
 
 def test_a_small_version_of_the_study(tmp_path: Path) -> None:

@@ -58,6 +58,22 @@ def test_bounds_on_total_flux_hold_above_confusion() -> None:
     assert plain < 0.8 * 400
 
 
+def test_bounds_hold_where_blank_sky_measures_less_than_nothing() -> None:
+    """Blank positions at -1: bounds lie above a source of 0.5 in 95 % of cases, and a frame's limit is that much higher."""
+    found = thresholds(np.full(200, -1.0), 6)
+    assert found.level == pytest.approx(-1.0, abs=0.05)
+    assert thresholds(np.full(200, 1.0), 6).level == thresholds(np.zeros(200), 6).level == 0.0
+    assert thresholds(np.full(9, -1.0), 6).level == 0.0
+    above = 0
+    for curve in block(np.full(400, 0.5 - 1.0), 7).curves():
+        seen = candidates.ChannelView(curve, len(curve), 0, found)
+        row = candidates.channel_row(candidates.View("x", (seen,), str, str), seen)
+        above += row["limit_bayes"] > 0.5
+        assert row["limit_sigma"] == pytest.approx(found.detected - found.level)
+        assert row["blank_level"] == found.level
+    assert 0.92 * 400 <= above <= 0.98 * 400  # binomial: 380 +- 4
+
+
 def test_controls_of_a_like_noise_serve() -> None:
     """Those within a tenth of the target's typical error, or the most alike ones where these are few; how unlike is said."""
     error = np.geomspace(1.0, 4.0, 60)
@@ -74,8 +90,13 @@ def test_controls_of_a_like_noise_serve() -> None:
     assert np.flatnonzero(serving[0]).tolist() == [0, 1, *range(3, 11)]
     assert unlike[0] == pytest.approx(error[10])
     allowed = (np.arange(60) % 2 == 0)[None, :]
-    serving, _ = ranking.matched(found, target, controls, allowed, Controls(fewest_alike=100))
-    assert np.array_equal(serving, allowed & (np.arange(60) >= 0))
+    serving, _ = ranking.matched(found, target, controls, allowed, Controls(fewest_alike=100, most_unlike=10.0))
+    assert np.array_equal(serving, allowed)
+    serving, unlike = ranking.matched(found, target, controls, allowed, Controls())
+    assert np.array_equal(serving, allowed & (error < 3.0) & (controls != 2))
+    assert unlike[0] == error[error < 3.0][-1]
+    anyhow, _ = ranking.matched(found, target, controls, allowed, Controls(), bounded=False)
+    assert np.array_equal(anyhow, allowed)
 
 
 def test_no_control_is_alike_by_default() -> None:
@@ -103,3 +124,12 @@ def test_a_small_version_of_the_study(tmp_path: Path) -> None:
     assert len(p) > 12
     assert len(p) * min(p.values()) > kinds.LEAST_P
     assert len(other) * min(other.values()) <= kinds.LEAST_P
+
+
+def test_blank_sky_near_a_bright_source_is_no_more_unusual_than_elsewhere(tmp_path: Path) -> None:
+    """A small version of another study: high rings that vary by factors are where all targets and few controls are."""
+    matching = study("matching")
+    settings = matching.archive(tmp_path, "rings", 2, targets=100, frames=12, size=360)
+    for more, fine in (("", True), ("most_unlike = 1e9\n", False)):
+        runs = [matching.p_values(tmp_path, more + settings)]
+        assert matching.holds(runs, "rings", say=False)[0] == fine

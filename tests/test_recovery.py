@@ -116,7 +116,7 @@ def test_known_ephemeris_makes_looks_cycles(archive, tmp_path):
     positions = book(order.run, order.version).positions
     ids = positions["id"][positions["kind"] == "target"]
     channels = Table.read(archive / "run" / "channels.ecsv")
-    limits = dict.fromkeys({str(c) for c in channels["channel"]}, 5.0)
+    limits = dict.fromkeys({str(c) for c in channels["channel"]}, (5.0, 0.0))
     given = recovery._ephemeris(targets, targets.names[0])
     (looks, cycles), = trials.looks_of(order, ids[:1], [limits], [given])  # fmt: skip
     assert cycles

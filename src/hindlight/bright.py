@@ -14,7 +14,7 @@ from hindlight import calibrate
 from hindlight.conclude import Field, rank, without
 from hindlight.host import Plugins
 from hindlight.judge import Judgement, joined, taken
-from hindlight.lifted import COPY, Lift, Residuals, copies
+from hindlight.lifted import COPY, Lift, Residuals, copies, group_size, how_many
 from hindlight.lightcurve import FloatArray
 from hindlight.plugin import Column
 from hindlight.settings import Settings
@@ -107,9 +107,9 @@ def _brightness(found: Field, labels: list[str], left: Evidence) -> _Brightness:
 
 def _copied(found: Field, members: list[int], lift: Lift, wanted: int, share: float, n_sources: int) -> Bright:
     """Targets of a field, with copies of its controls, about `wanted`, in which calibration has a share of the variance."""
-    each = max(1, min(-(-wanted // len(found.controls)), n_sources))
+    each = how_many(wanted, len(found.controls), n_sources)
     controls = copies(found.controls, each)
-    size = 1.0 + share * max(0.0, len(controls) / n_sources - 1.0)
+    size = group_size(share, each, len(found.controls), n_sources)
     targets, serving = found.targets[members], np.tile(found.serving[members], each)
     number = (
         -1 - COPY - int(targets[0])

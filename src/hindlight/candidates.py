@@ -309,6 +309,7 @@ def channel_row(view: View, c: ChannelView) -> dict[str, Any]:
     quiet, quiet_err = c.quiet_level
     deep, deep_err = c.deep_mean
     typical = float(np.median(curve.flux_err)) if len(curve) else float("nan")
+    level = 0.0 if curve.channel.signed else c.thresholds.level
     return {
         "name": view.name,
         "channel": curve.channel.label,
@@ -326,10 +327,13 @@ def channel_row(view: View, c: ChannelView) -> dict[str, Any]:
         "flux_mean": mean,
         "flux_mean_err": error,
         "scatter": extra_scatter(curve.flux, curve.flux_err),
-        "limit_sigma": c.thresholds.detected * typical,
+        "blank_level": level,
+        "limit_sigma": c.thresholds.detected * typical - level,
         "confusion_rms": c.thresholds.confusion,
         "limit_bayes": (
-            float("nan") if curve.channel.signed else upper_bound(mean, float(np.hypot(error, c.thresholds.confusion)))
+            float("nan")
+            if curve.channel.signed
+            else upper_bound(mean - level, float(np.hypot(error, c.thresholds.confusion)))
         ),
         "limit_above_quiet": c.thresholds.above_quiet * float(np.hypot(typical, curve.quiet_level[1])),
         "n_deep": 0 if c.deep is None else len(c.deep),

@@ -14,9 +14,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hindlight.lightcurve import FloatArray, IntArray
-from hindlight.plan import BrightSources
+from hindlight.plan import BrightSources, beams
 from hindlight.pointing import LEAST_SNR
-from hindlight.positions import BlankSky
+from hindlight.positions import BlankSky, nearest_deg
 from hindlight.robust import median_of
 from hindlight.settings import Comparisons
 from hindlight.systems import unit_vectors
@@ -98,6 +98,20 @@ def placed(
     good &= _steady(snr, seen)
     kept = np.flatnonzero(good)[: settings.wanted]
     return ra[kept] + place_east[kept] / np.cos(np.radians(dec[kept])), dec[kept] + place_north[kept]
+
+
+def apart_from(positions: Columns, frames: Columns, kinds: Sequence[str], assumed_fwhm_pixels: float) -> IntArray:
+    """The ids of the comparisons, ascending, that lie more than a median beam from every position of these kinds.
+
+    A target that is added to a finished run may be a comparison of it. Were it to serve on, gains would take up a part of
+    its variation, and it would be among the steady sources that it is held against.
+    """
+    mine, target = (np.flatnonzero(np.isin(positions["kind"], some)) for some in (("comparison",), tuple(kinds)))
+    if len(mine) and len(target):
+        beam = float(np.median(beams(frames, np.arange(len(frames["id"])), assumed_fwhm_pixels)))
+        apart = nearest_deg(*(unit_vectors(positions["ra"][rows], positions["dec"][rows]) for rows in (mine, target)))
+        mine = mine[apart > beam]
+    return np.sort(positions["id"][mine])
 
 
 def among_alike(snr: FloatArray, width: FloatArray) -> FloatArray:

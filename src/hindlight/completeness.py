@@ -8,7 +8,7 @@ would have been a candidate of the run, had it been one more target of it.
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field, fields, replace
 from itertools import product
 from typing import Any
 
@@ -18,7 +18,8 @@ from scipy import special, stats
 
 from hindlight import calibrate, ranking
 from hindlight.injection import PULSES, SMOOTH, Source, uniform
-from hindlight.judge import WHOLE, Judgement, joined
+from hindlight.judge import WHOLE, Judgement, joined, taken
+from hindlight.lifted import group_size
 from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.plugin import Column, Plugin
 from hindlight.settings import Completeness, Settings
@@ -28,6 +29,9 @@ NOTHING = "nothing"  # a kind: no source at all, which tells the rate of false a
 CONFIDENCE = 0.95
 BISECTIONS = 60
 HIGHEST_FLUX = 1e4  # median frame errors; limits above it are none
+BRIGHTER = 1.5  # factor from one step of brightness to the next
+FAINT = -1  # a step: not bright
+SHARES = 50  # steps of the share of calibration in the variance
 HOST, START = 16, 17  # what is drawn of a source
 
 Mask = NDArray[np.bool_]
@@ -92,13 +96,28 @@ def _source(cell: Cell, key: int) -> Source:
 class Null:
     """The controls of one field in some of the frames: ids ascending, shape (n,), what was judged of them, and the rest.
 
-    `serving` (n, n) says which controls serve which one, as if that were a target; never itself.
+    `serving` (n, n) says which controls serve which one, as if that were a target; never itself. `brighter` are the nulls
+    of sources that are bright, by `brightness`: there the judgement is of copies of the controls (`copied`), `serving`
+    has shape (n, n_copies), copies are alike in groups of `weight`, and made with one of `n_sources` comparisons. By
+    channel, of those whose comparisons tell what calibration leaves: fluxes of 1 (`units`), and the `scatter` it leaves as a
+    fraction.
     """
 
     ids: IntArray
     serving: Mask
     judgement: Judgement
     thresholds: Mapping[str, ranking.Thresholds]
+    weight: float = 1.0
+    copied: bool = False
+    brighter: Mapping[int, Null] = field(default_factory=dict)
+    n_sources: int = 0
+    units: Mapping[str, float] = field(default_factory=dict)
+    scatter: Mapping[str, float] = field(default_factory=dict)
+
+    def alike(self, share: float) -> Null:
+        """The same copies, as alike as they are where calibration has this share of the variance."""
+        n = len(self.ids)
+        return replace(self, weight=group_size(share, self.judgement.n // n, n, self.n_sources))
 
 
 def null_of(ids: IntArray, in_frames: Mask, judgement: Judgement, settings: Settings) -> Null:
@@ -116,25 +135,31 @@ class Bars:
     final: float
 
 
-def bar(p_values: FloatArray, level: float) -> float:
+def bar(p_values: FloatArray, level: float, any_dependence: bool = False) -> float:
     """Below which p-value one more test, beside those of shape (n,), has a false-discovery rate below the level.
 
     Benjamini & Hochberg (1995, JRSS B 57, 289): of n + 1 tests, the one with r others below a bound t is below the level
-    if t <= (r + 1) level / (n + 1); the largest such bound. NaN is no test.
+    if t <= (r + 1) level / (n + 1); the largest such bound. With `any_dependence` the level is divided by sum(1 / i) over
+    the tests, see `calibrate.false_discovery`. NaN is no test.
     """
     known = np.sort(p_values[np.isfinite(p_values)])
-    bounds = np.arange(1, len(known) + 2) * level / (len(known) + 1)
+    rank = np.arange(1, len(known) + 2)
+    bounds = rank * level / (len(known) + 1) / (float((1.0 / rank).sum()) if any_dependence else 1.0)
     below = np.searchsorted(known, bounds, side="left")
     return float(bounds[below >= np.arange(len(bounds))].max())
 
 
 @dataclass(frozen=True, eq=False)
 class Found:
-    """What became of n sources: arrays of shape (n,), `own_p` (n, n_plugins) NaN where a plugin says nothing."""
+    """What became of n sources: arrays of shape (n,), `own_p` (n, n_plugins) NaN where a plugin says nothing.
+
+    `enough`: there are as many usable frames as it takes to decide anything.
+    """
 
     recovered: Mask
     extrapolated: Mask
     seen: Mask
+    enough: Mask
     lowest_p: FloatArray
     own_p: FloatArray
 
@@ -157,11 +182,11 @@ class Ranked:
 
 def ranked(judged: Judgement, hosts: IntArray, null: Null, columns: Mapping[str, Column], settings: Settings) -> Ranked:
     """Sources that were judged at these controls (ids, shape (n,)) ranked as targets are."""
-    n, at = len(null.ids), np.searchsorted(null.ids, hosts)
+    n, at = null.judgement.n, np.searchsorted(null.ids, hosts)
     both = joined([null.judgement, judged], [n, judged.n], columns)
     controls, sources = np.arange(n), n + np.arange(judged.n)
-    serving, _ = ranking.matched(both, sources, controls, null.serving[at], settings.controls)
-    ranks = ranking.rank_field(both, columns, sources, controls, serving)
+    serving, _ = ranking.matched(both, sources, controls, null.serving[at], settings.controls, bounded=not null.copied)
+    ranks = ranking.rank_field(both, columns, sources, controls, serving, null.weight)
     return Ranked(both, controls, sources, serving, ranks)
 
 
@@ -169,27 +194,71 @@ def found(
     judged: Judgement, hosts: IntArray, null: Null, columns: Mapping[str, Column], bars: Bars, settings: Settings,
     plugins: Sequence[Plugin] = (),
 ) -> Found:  # fmt: skip
-    """What becomes of sources that were judged at these controls (ids, shape (n,)); `plugins` each ask by themselves too."""
+    """What becomes of sources that were judged at these controls (ids, shape (n,)); `plugins` each ask by themselves too.
+
+    Those that are bright in single frames are ranked among controls made as bright.
+    """
+    step, share = brightness(judged, null, settings.controls.bright_target_snr)
+    bins = np.where(step == FAINT, 0, np.rint(SHARES * share)).astype(np.int64)
+    order, parts = [], []
+    for number, of_calibration in sorted(set(zip(step.tolist(), bins.tolist(), strict=True))):
+        rows = np.flatnonzero((step == number) & (bins == of_calibration))
+        among = null if number == FAINT else null.brighter[number].alike(of_calibration / SHARES)
+        order.append(rows)
+        parts.append(_found(taken(judged, rows), hosts[rows], among, columns, bars, settings, plugins))
+    back = np.argsort(np.concatenate(order)) if order else np.empty(0, np.int64)
+    return Found(*(np.concatenate([getattr(part, f.name) for part in parts])[back] for f in fields(Found)))
+
+
+def brightness(judged: Judgement, null: Null, least_snr: float) -> tuple[IntArray, FloatArray]:
+    """How bright positions are in the mean of their brightest channel, and the share of calibration in the variance there.
+
+    In steps of a factor BRIGHTER from one median frame error, of those that `null` has, FAINT for S/N below the least in a
+    typical frame; the share as it is of targets (`hindlight.bright`). Shapes (n,).
+    """
+    mean, error, used = (_core(judged, name) for name in ("mean", "mean_err", "n_used"))
+    flux, snr, share = np.zeros((3, judged.n))
+    for label in sorted(set(null.units) & set(mean)):
+        with np.errstate(invalid="ignore", divide="ignore"):
+            own = np.nan_to_num(np.abs(mean[label]) / (error[label] * np.sqrt(used[label])))
+        snr = np.maximum(snr, own)
+        flux = np.fmax(flux, np.abs(mean[label]) / null.units[label])
+        share = np.maximum(share, np.minimum(1.0, (null.scatter[label] * own) ** 2))
+    with np.errstate(divide="ignore"):
+        steps = np.where(snr >= least_snr, np.rint(np.log(flux) / np.log(BRIGHTER)), FAINT)
+    steps = np.minimum(steps, max(null.brighter, default=FAINT))
+    return np.where(np.isin(steps, list(null.brighter)), steps, FAINT).astype(np.int64), share
+
+
+def _found(
+    judged: Judgement, hosts: IntArray, null: Null, columns: Mapping[str, Column], bars: Bars, settings: Settings,
+    plugins: Sequence[Plugin],
+) -> Found:  # fmt: skip
+    """The same for sources with one null."""
+    if null.copied:  # periods of copies are not searched for, and so none count
+        judged = replace(judged, values={key: v for key, v in judged.values.items() if key in null.judgement.values})
     among = ranked(judged, hosts, null, columns, settings)
-    decided = np.array([_decided(rank, bars, settings) for rank in among.ranks.ranks], bool).reshape(-1, 2)
+    each = [_decided(rank, bars, settings, null.weight) for rank in among.ranks.ranks]
+    decided = np.array(each, bool).reshape(-1, 2)
     enough = _most_used(judged) >= settings.detection.min_frames
-    own = [_own_p(among, plugin, columns) for plugin in plugins]
+    own = [_own_p(among, plugin, columns, null.weight) for plugin in plugins]
     return Found(
         decided[:, 0] & enough,
         decided[:, 1] & enough,
         _seen(judged, null.thresholds),
-        np.asarray(1.0 / (among.ranks.n_controls + 1.0), float),
+        enough,
+        np.asarray(null.weight / (among.ranks.n_controls + null.weight), float),
         np.stack(own, axis=1) if own else np.empty((judged.n, 0)),
     )
 
 
-def _decided(rank: calibrate.Rank, bars: Bars, settings: Settings) -> tuple[bool, bool]:
+def _decided(rank: calibrate.Rank, bars: Bars, settings: Settings, weight: float) -> tuple[bool, bool]:
     """Whether a rank makes a candidate, and whether only by the fitted tail: as `conclude.p_values` has it."""
     if rank.p_value < bars.empirical:
         return True, False
     if rank.exceeded_by > 0 or not np.isfinite(rank.p_value):
         return bool(rank.p_value < bars.final), False
-    bound = calibrate.tail_bound(rank.control_distances, rank.beyond, settings.ranking.tail_exceedances)
+    bound = calibrate.tail_bound(rank.control_distances, rank.beyond, settings.ranking.tail_exceedances, weight)
     by_tail = bound < rank.p_value
     return bool((bound if by_tail else rank.p_value) < bars.final), bool(by_tail and bound < bars.final)
 
@@ -220,7 +289,7 @@ def _seen(judged: Judgement, thresholds: Mapping[str, ranking.Thresholds]) -> Ma
     return seen
 
 
-def _own_p(among: Ranked, plugin: Plugin, columns: Mapping[str, Column]) -> FloatArray:
+def _own_p(among: Ranked, plugin: Plugin, columns: Mapping[str, Column], weight: float) -> FloatArray:
     """The p-values of sources by one plugin's calibrated columns alone, those that ask about presence included."""
     mine = {f"{plugin.name}_{column.name}" for column in plugin.columns if column.unusual is not None}
     keys = [key for key in sorted(among.both.values) if key[1] in mine]
@@ -230,7 +299,7 @@ def _own_p(among: Ranked, plugin: Plugin, columns: Mapping[str, Column]) -> Floa
     for row, mask in zip(among.sources, among.serving, strict=True):
         if mask.tobytes() not in nulls:
             nulls[mask.tobytes()] = calibrate.null_from(matrix[among.controls[mask]])
-        p.append(calibrate.rank(nulls[mask.tobytes()], matrix[row]).p_value)
+        p.append(calibrate.rank(nulls[mask.tobytes()], matrix[row], weight).p_value)
     return np.array(p)
 
 

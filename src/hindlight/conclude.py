@@ -128,7 +128,10 @@ def rank(found: Field, plugins: Plugins, settings: Settings) -> None:
     """Fill in a field's ranks and thresholds from its judgement."""
     columns = full_columns([*plugins.statistics, *plugins.period_searches])
     targets, controls = found.rows(found.targets), found.rows(found.controls)
-    serving, found.unlike = ranking.matched(found.judgement, targets, controls, found.serving, settings.controls)
+    # A bright target's own photons are in its errors, and not in those of the copies.
+    serving, found.unlike = ranking.matched(
+        found.judgement, targets, controls, found.serving, settings.controls, bounded=found.lift is None
+    )
     found.ranks = ranking.rank_field(found.judgement, columns, targets, controls, serving, found.group_size)
     found.thresholds = ranking.thresholds(found.judgement, controls, settings.detection)
 

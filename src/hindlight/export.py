@@ -20,6 +20,8 @@ from hindlight.schema import LIGHT_CURVE
 from hindlight.store import RunFolder
 from hindlight.tables import astropy_table, read_ecsv
 
+JUDGED = ("threshold", "threshold_above_quiet", "quiet_level_err", "confusion_rms", "blank_level")
+
 
 def light_curves(run: RunFolder, target: str) -> astropy.table.Table:
     """Every measurement of a target, in order of channel and time; NaN flux where a frame gave none.
@@ -81,9 +83,9 @@ def _columns(run: RunFolder, tables: Book, rows: dict[str, Any], target: str) ->
     flux, flux_err, _ = calibrated(rows, tables.solution)
     at = np.array([tables.row_of_frame[int(frame)] for frame in rows["frame"]], np.int64)
     judged = _judged_channels(run, target)
-    nothing = {"threshold": np.inf, "threshold_above_quiet": np.inf, "quiet_level_err": 0.0, "confusion_rms": 0.0}
+    nothing = dict.fromkeys(JUDGED, 0.0) | {"threshold": np.inf, "threshold_above_quiet": np.inf}
     known = [judged.get(channel, nothing) for channel in rows["channel"]]
-    limit, above, quiet_err, confusion = (np.array([row[name] for row in known], float) for name in nothing)
+    limit, above, quiet_err, confusion, level = (np.array([row[name] for row in known], float) for name in JUDGED)
     signed = np.array([tables.channels[channel].signed for channel in rows["channel"]], bool)
     of_frame = np.searchsorted(tables.solution["frame"], rows["frame"])
     verdict = tables.solution["verdict"][of_frame]
@@ -105,9 +107,9 @@ def _columns(run: RunFolder, tables: Book, rows: dict[str, Any], target: str) ->
         "raw_flux_err": rows["flux_err"],
         "verdict": verdict,
         "detected": detected,
-        "limit_sigma": np.where(seen_only, tables.solution["seen_limit"][of_frame], _finite(limit * flux_err)),
+        "limit_sigma": np.where(seen_only, tables.solution["seen_limit"][of_frame], _finite(limit * flux_err - level)),
         "flags": flags(rows, tables.solution),
-        "limit_bayes": np.where(signed, np.nan, upper_bounds(flux, np.hypot(flux_err, confusion))),
+        "limit_bayes": np.where(signed, np.nan, upper_bounds(flux - level, np.hypot(flux_err, confusion))),
         "limit_above_quiet": _finite(above * np.hypot(flux_err, quiet_err)),
         "deep": np.isin(rows["frame"], tables.frames["related_to"]),
         "path": [frame_label(tables.frames, int(row)) for row in at],
@@ -124,5 +126,6 @@ def _judged_channels(run: RunFolder, target: str) -> dict[str, dict[str, float]]
         return {}
     table = read_ecsv(run.file("channels.ecsv"))
     mine = table[table["name"] == target]
-    names = ("threshold", "threshold_above_quiet", "quiet_level_err", "confusion_rms")
-    return {str(row["channel"]): {name: float(row[name]) for name in names} for row in mine}
+    there = [name for name in JUDGED if name in table.colnames]  # runs judged by earlier versions lack the last one
+    nothing = dict.fromkeys(JUDGED, 0.0)
+    return {str(row["channel"]): nothing | {name: float(row[name]) for name in there} for row in mine}

@@ -76,6 +76,22 @@ def residuals(block: Block, solution: Columns) -> Residuals | None:
     return Residuals(block.frame, _filled(left), extra, gain)
 
 
+def over_all(left: Residuals, frame: IntArray, solution: Columns) -> Residuals:
+    """The same over all frames of a channel, shape (n,), ascending.
+
+    Where a frame is not tied to comparisons, or shows none of these, what is left scatters as the errors there say. Each draw
+    is made of the frame and the number of the source.
+    """
+    at = np.searchsorted(solution["frame"], frame)
+    extra, gain = np.nan_to_num(solution["extra_scatter"][at]), solution["gain"][at]
+    tied = (solution["verdict"][at] == "good") & np.isin(frame, left.frame)
+    values = np.zeros((len(left.values), len(frame)))
+    values[:, tied] = left.values[:, np.searchsorted(left.frame, frame[tied])]
+    for column in np.flatnonzero(~tied).tolist():
+        values[:, column] = extra[column] * np.random.default_rng(int(frame[column])).standard_normal(len(values))
+    return Residuals(frame, values, extra, gain)
+
+
 def _filled(values: FloatArray) -> FloatArray:
     """The matrix with each gap filled from the next row that has a value there; zero where none has."""
     filled = values.copy()
@@ -117,3 +133,18 @@ def copies(controls: IntArray, number: int) -> IntArray:
 def originals(ids: IntArray) -> NDArray[np.int64]:
     """The controls that copies are made of, each once, ascending."""
     return np.unique(ids % COPY)
+
+
+def how_many(wanted: int, n_controls: int, n_sources: int) -> int:
+    """How often each control is copied for about `wanted` copies; no more often than there are comparisons."""
+    return max(1, min(-(-wanted // n_controls), n_sources))
+
+
+def group_size(share: float, each: int, n_controls: int, n_sources: int) -> float:
+    """How many copies are as good as one, where calibration has a `share` of the variance.
+
+    Without any, the `each` copies of a control differ by a constant only; where it is all, those made with one of the
+    `n_sources` comparisons are alike. Between the two copies tell more than this line says, which is on the safe side.
+    """
+    of_a_source = max(1.0, each * n_controls / n_sources)
+    return (1.0 - share) * each + share * of_a_source

@@ -22,7 +22,7 @@ from hindlight.lifted import COPY
 from hindlight.lightcurve import FloatArray
 from hindlight.plugin import Column, ConsistencyCheck, Statistic
 from hindlight.schema import CANDIDATES, PLUGIN_FAULTS, TableColumn
-from hindlight.settings import Settings
+from hindlight.settings import Controls, Settings
 from hindlight.tables import astropy_table, rows_to_columns
 
 CAUTION = (
@@ -84,6 +84,7 @@ def chance_cells(found: Field, index: int, at: int, p: PValues) -> dict[str, Any
         "lowest_p_statistic": f"{column} in {channel}" if channel else column,
         "beyond_controls": rank.beyond,
         "n_controls": int(found.ranked.n_controls[index]),
+        "n_effective": float(found.ranked.n_controls[index] / found.group_size),
         "null": null_of(found),
         "unlike": float(found.unlike[index]),
     }
@@ -97,17 +98,33 @@ def null_of(found: Field) -> str:
     return f"blank sky and the residuals of comparisons, scaled to a flux of {levels}"
 
 
-def notes(found: Field, index: int, at: int, p: PValues, place: str = "") -> str:
+def notes(found: Field, index: int, at: int, p: PValues, controls: Controls, place: str = "") -> str:
     """What a reader should know before trusting a row."""
     n_controls = int(found.ranked.n_controls[index])
     said = []
     if p.short[at]:
-        said.append(f"{n_controls} controls cannot decide at this level, {p.needed} are needed")
+        counted = f" that count as {n_controls / found.group_size:.3g}" if found.group_size > 1 else ""
+        said.append(f"{n_controls} controls{counted} cannot decide at this level, {p.needed} are needed")
     if p.extrapolated[at]:
         said.append("p_value is the upper bound of a fitted tail, beyond every control")
     if n_controls == 0:
         said.append("no control serves this target: no p-value")
+    if (left_out := _too_unlike(found, index, controls)) > 0:
+        said.append(
+            f"{left_out} more controls were left out, whose noise is unlike its own by more than a factor "
+            f"{controls.most_unlike:g} ([controls] most_unlike)"
+        )
     return "; ".join([*said, place] if place else said)
+
+
+def _too_unlike(found: Field, index: int, controls: Controls) -> int:
+    """How many controls would have served a target that has few, had they not been too unlike it."""
+    n_controls = int(found.ranked.n_controls[index])
+    if n_controls >= controls.fewest_alike or found.lift is not None:
+        return 0
+    rows = found.rows(found.targets[[index]]), found.rows(found.controls)
+    anyhow, _ = ranking.matched(found.judgement, *rows, found.serving[[index]], controls, bounded=False)
+    return int(anyhow.sum()) - n_controls
 
 
 def place_note(found: Field, distances: FloatArray, error: float, most_places: int) -> str:
@@ -154,19 +171,23 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings) -> tuple[st
     if not p.testable.all() and len(sizes) - alone:
         said.append(f"{int((~p.testable).sum())} targets are undecided: too few controls, or too few usable frames")
     if placed and min(placed) < settings.controls.per_field:
-        number = f"{min(placed)} to {max(placed)}" if max(placed) > min(placed) else str(min(placed))
         said.append(
-            f"controls per target: {number}, {settings.controls.per_field} were asked for; "
-            "no more fit into the frames clear of sources and of each other"
+            f"controls per target: {_span(placed)}, {settings.controls.per_field} were asked for; "
+            + (
+                "no more fit into the frames clear of sources and of each other"
+                if all(len(found.controls) < settings.controls.per_field for found in fields if not found.lift)
+                else "more were measured, but in fewer frames or with another noise"
+            )
         )
     said += _search_remarks(fields, settings)
     if p.short.any():
+        lit = any(found.group_size > 1 for found in fields)
         said.append(
             f"{int(p.short.sum())} targets lie beyond every control, but their number cannot decide at q < "
-            f"{settings.ranking.level:g}: {p.needed} controls would ([controls] per_field and most_per_field, "
-            "[search] controls)"
+            f"{settings.ranking.level:g}: {p.needed} controls would ([controls] per_field and most_per_field, [search] controls"
+            + ("; for bright targets as many [comparisons] wanted, too)" if lit else ")")
         )
-    said += [*_error_remarks(fields), *_confusion_remarks(fields)]
+    said += [*_error_remarks(fields), *_confusion_remarks(fields), *_level_remarks(fields)]
     if p.extrapolated.any():
         said.append(f"{int(p.extrapolated.sum())} p-values are upper bounds of a fitted tail (p_is_extrapolated)")
     return tuple(said)
@@ -177,15 +198,22 @@ def _is_plain(found: Field) -> bool:
     return found.n_trials == 1 and found.lift is None and not found.n_passes
 
 
+def _span(numbers: Sequence[int]) -> str:
+    """The smallest and the largest of some numbers, or the one that all are."""
+    low, high = min(numbers), max(numbers)
+    return f"{low} to {high}" if high > low else str(low)
+
+
 def _search_remarks(fields: Sequence[Field], settings: Settings) -> list[str]:
     """Targets that were searched within their position errors."""
     found = [f for f in fields if f.n_trials > 1]
     if not found:
         return []
-    trials, sizes = [f.n_trials for f in found], [int(n) for f in found for n in f.ranked.n_controls]
+    each = [(f, len(f.controls) // max(1, len(f.blank_sky))) for f in found]  # copies of bright targets' controls
+    trials, sizes = [f.n_trials for f in found], [int(n) // k for f, k in each for n in f.ranked.n_controls]
     said = (
-        f"{len(sizes)} targets were searched within their position errors at {min(trials)} to {max(trials)} places each, "
-        f"with {min(sizes)} to {max(sizes)} controls searched alike"
+        f"{len(sizes)} targets were searched within their position errors at {_span(trials)} places each, "
+        f"with {_span(sizes)} controls searched alike"
     )
     short = min(sizes) < settings.search.controls
     return [said + (f"; {settings.search.controls} were asked for, no more fit into the frames" if short else "")]
@@ -219,9 +247,24 @@ def _confusion_remarks(fields: Sequence[Field]) -> list[str]:
             if limits.confusion > 0 and limits.confusion > np.nanmedian(error):
                 worst[label] = max(worst.get(label, 0.0), limits.confusion)
     return [
-        f"blank positions in {label} differ in their mean fluxes by {confusion:.3g} rms beyond their errors: confusion or "
-        "diffuse emission, which bounds on the total flux contain (confusion_rms in channels.ecsv)"
+        f"blank positions in {label} differ in their mean fluxes by an rms of {confusion:.3g} beyond their errors: "
+        "confusion or diffuse emission, which bounds on the total flux contain (confusion_rms in channels.ecsv)"
         for label, confusion in sorted(worst.items())
+    ]
+
+
+def _level_remarks(fields: Sequence[Field]) -> list[str]:
+    """Channels in which blank positions measure less than nothing by more than the error of a mean."""
+    lowest: dict[str, float] = {}
+    for found in fields:
+        for label, limits in found.thresholds.items() if found.lift is None else ():
+            error = found.judgement.values[label, "core_mean_err"][found.rows(found.controls)]
+            if limits.level < 0 and -limits.level > np.nanmedian(error):
+                lowest[label] = min(lowest.get(label, 0.0), limits.level)
+    return [
+        f"blank positions in {label} measure down to {level:.3g} in the median, not 0: among many sources the local background "
+        "comes out too high; fluxes are as measured, limits on them allow for it (blank_level in channels.ecsv)"
+        for label, level in sorted(lowest.items())
     ]
 
 

@@ -23,6 +23,7 @@ FAILING_SHARE = 0.05  # a plugin that fails on more of the controls than this ge
 STEADY_SIGMA = 5.0  # controls with a mean flux further out than this do not set detection thresholds
 COMMON_SHARE = 0.1  # a channel's scale: what this share of its blank positions exceeds at most
 FEWEST_MEANS = 10  # blank positions that show how much their mean fluxes differ
+LOW_SIGMA = 3.3  # a median of blank means that is further below zero is no chance
 QUIET_SPREAD = 5.0
 QUIET_WITHOUT_CONTROLS = 2.0
 
@@ -40,6 +41,9 @@ class Thresholds:
     confusion
         In units of flux: rms by which the mean fluxes of blank positions differ beyond their errors, since faint sources
         and diffuse emission lie in all of them.
+    level
+        In units of flux: the median mean flux of blank positions where it is below zero beyond chance, else 0. Among many
+        sources the local background comes out too high.
     """
 
     detected: float
@@ -48,6 +52,7 @@ class Thresholds:
     reduced: float
     n_controls: int
     confusion: float = 0.0
+    level: float = 0.0
 
 
 @dataclass(frozen=True, eq=False)
@@ -95,14 +100,16 @@ def oriented_matrix(
 
 
 def matched(
-    judgement: Judgement, targets: IntArray, controls: IntArray, in_frames: NDArray[np.bool_], settings: Controls
-) -> tuple[NDArray[np.bool_], FloatArray]:
+    judgement: Judgement, targets: IntArray, controls: IntArray, in_frames: NDArray[np.bool_], settings: Controls,
+    bounded: bool = True,
+) -> tuple[NDArray[np.bool_], FloatArray]:  # fmt: skip
     """Which controls serve which target, shape (n_targets, n_controls), and how unlike these are in depth, (n_targets,).
 
     `in_frames` says who shares enough frames by footprint; a control must also have nearly as many usable samples in each
     channel, and a like noise: structure in the sky, the edge of the primary beam and sidelobes of bright sources all show
-    in it. Where fewer than `fewest_alike` are within the factor `alike`, so many of the most alike ones serve. How unlike:
-    the largest factor between the depth of the target and that of a control that serves it, 1 for none.
+    in it. Where fewer than `fewest_alike` are within the factor `alike`, so many of the most alike ones serve, those that
+    are `most_unlike` and beyond never where `bounded`. How unlike: the largest factor between the depth of the target and
+    that of a control that serves it, 1 for none.
     """
     good = in_frames.copy()
     unlike = np.zeros(good.shape)
@@ -117,6 +124,8 @@ def matched(
         return good, np.ones(len(good))
     enough = np.sort(unlike, axis=1)[:, : settings.fewest_alike][:, -1:]  # infinite where there are fewer
     good &= unlike <= np.maximum(np.log(settings.alike), enough)
+    if bounded:
+        good &= unlike <= np.log(max(settings.alike, settings.most_unlike))
     return good, np.exp(np.max(unlike, axis=1, initial=0.0, where=good))
 
 
@@ -195,6 +204,7 @@ def _channel_thresholds(
     """A channel's thresholds by itself, before the common factor; those of Gaussian noise where there is no control."""
     rate = detection.false_alarms / n_channels
     n_used = _column(judgement, label, "n_used")
+    means = _column(judgement, label, "mean")[blank], _column(judgement, label, "mean_err")[blank]
     if blank.size == 0:
         typical = int(np.median(n_used[n_used > 0])) if np.any(n_used > 0) else 0
         gaussian = calibrate.gaussian_threshold(typical, rate)
@@ -205,7 +215,8 @@ def _channel_thresholds(
         mean=calibrate.robust_threshold(_column(judgement, label, "mean_snr")[blank], rate),
         reduced=_quiet_limit(_column(judgement, label, "reduced")[blank]),
         n_controls=int(blank.size),
-        confusion=_confusion(_column(judgement, label, "mean")[blank], _column(judgement, label, "mean_err")[blank]),
+        confusion=_confusion(*means),
+        level=_level(*means),
     )
 
 
@@ -214,6 +225,18 @@ def _confusion(mean: FloatArray, error: FloatArray) -> float:
     if len(mean) < FEWEST_MEANS:
         return 0.0
     return excess_scatter(mean - np.median(mean), error)
+
+
+def _level(mean: FloatArray, error: FloatArray) -> float:
+    """The median of mean fluxes, shape (n,), where it is below zero beyond chance; else 0, and for fewer than FEWEST_MEANS.
+
+    The error of a median is (pi / 2 n)^(1/2) times the scatter, that of a normal law; from memory.
+    """
+    if len(mean) < FEWEST_MEANS:
+        return 0.0
+    middle = float(np.median(mean))
+    scatter = max(calibrate.MAD_TO_SIGMA * float(np.median(np.abs(mean - middle))), float(np.median(error)))
+    return middle if middle < -LOW_SIGMA * scatter * (np.pi / 2 / len(mean)) ** 0.5 else 0.0
 
 
 def _quiet_limit(reduced: FloatArray) -> float:

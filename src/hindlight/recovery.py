@@ -18,13 +18,14 @@ import astropy.table
 import numpy as np
 from numpy.typing import NDArray
 
-from hindlight import completeness, host, injection, judge, plan, planted, ranking, record, store
+from hindlight import brighter, completeness, host, injection, judge, plan, planted, ranking, record, store
 from hindlight import settings as settings_module
 from hindlight.completeness import Bars, Cell, Found, Injection, Looks, Null
 from hindlight.crew import Crew, assembled
 from hindlight.duplicates import counts
 from hindlight.errors import NothingToDoError, UsageError
 from hindlight.fence import call
+from hindlight.lifted import copies
 from hindlight.lightcurve import FloatArray, IntArray, LightCurve
 from hindlight.order import Order, book
 from hindlight.plugin import Column, PeriodSearch, Statistic
@@ -35,7 +36,7 @@ from hindlight.settings import Settings
 from hindlight.store import Columns, RunFolder
 from hindlight.systems import unit_vectors
 from hindlight.tables import astropy_table, read_ecsv, rows_to_columns, write_table
-from hindlight.tasks import position_blocks
+from hindlight.tasks import position_blocks, residuals
 from hindlight.trials import (
     ALL,
     EXTRA,
@@ -43,6 +44,7 @@ from hindlight.trials import (
     Subset,
     curves_of,
     judge_controls,
+    judge_copies,
     judge_injected,
     looks_of,
     plant_in_frame,
@@ -158,7 +160,7 @@ def recover(asked: Asked, watcher: Watcher) -> Report:
         meta = _meta(study, units)
         table = _table(study, wanted, outcomes, meta)
         targets, limits = _target_tables(study, run, table, ephemerides, meta)
-    remarks = (*_remarks(study, outcomes[ALL].found, targets), *_proof_remarks(proofs), UPPER_BOUND)
+    remarks = (*_remarks(study, nulls, outcomes[ALL].found, targets), *_proof_remarks(proofs), UPPER_BOUND)
     for name, made in (("completeness_limits", limits), ("completeness_targets", targets), ("completeness", table)):
         for ending in (".fits", ".vot", ".ecsv"):
             write_table(run.file(f"{name}{ending}"), made)
@@ -247,12 +249,11 @@ def _study(
     tables = book(order.run, order.version)
     fields = [found for found in _fields(tables.positions) if len(found.ids) > 1]
     if not fields:
-        raise NothingToDoError(
-            f"run {run.path}: no controls, so nothing can be said of completeness; [controls] per_field sets how many"
-        )
+        raise NothingToDoError(f"run {run.path}: {_why_no_fields(tables.positions)}")
     candidates = read_ecsv(run.file("candidates.ecsv"))
-    level = order.settings.ranking.level
-    bars = Bars(*(completeness.bar(np.asarray(candidates[name], float), level) for name in ("p_empirical", "p_value")))
+    level, dependent = order.settings.ranking.level, order.settings.ranking.any_dependence
+    p_values = (np.asarray(candidates[name], float) for name in ("p_empirical", "p_value"))
+    bars = Bars(*(completeness.bar(p, level, dependent) for p in p_values))
     asked = plugins.period_searches if order.settings.completeness.period_search else ()
     columns = judge.full_columns([*plugins.statistics, *asked])
     cells = completeness.grid(order.settings.completeness)
@@ -275,6 +276,21 @@ def _fields(positions: Columns) -> list[FieldControls]:
         names = tuple(positions["name"][is_target & (positions["field"] == number)].tolist())
         found.append(FieldControls(int(number), positions["id"][here][order], vectors, names))
     return found
+
+
+def _why_no_fields(positions: Columns) -> str:
+    """Why nothing can be said of completeness, and what would mend it."""
+    targets = positions["kind"] == "target"
+    if targets.any() and (positions["search"][targets] >= 0).all():
+        return (
+            f"all {targets.sum()} targets were searched within their position errors, and completeness is that of targets "
+            "at their stated places; [search] sigmas = 0 measures targets there, in a run of its own"
+        )
+    n = int((positions["kind"] == "control").sum())
+    return (
+        f"no field has more than one control ({n} in all), so nothing can be said of completeness; [controls] per_field "
+        "sets how many, in a run of its own"
+    )
 
 
 def _all_frames(frames: Columns) -> Subset:
@@ -317,7 +333,38 @@ def _nulls(study: Study) -> tuple[dict[int, dict[str, Null]], dict[str, float]]:
         _search_nulls(study, nulls)
     labels = sorted({label for result in results for label in result.errors})
     errors = {label: np.concatenate([r.errors[label] for r in results if label in r.errors]) for label in labels}
-    return nulls, {label: float(np.nanmedian(v)) if np.isfinite(v).any() else np.nan for label, v in errors.items()}
+    units = {label: float(np.nanmedian(v)) if np.isfinite(v).any() else np.nan for label, v in errors.items()}
+    return _with_brighter(study, nulls, units), units
+
+
+def _with_brighter(
+    study: Study, nulls: Mapping[int, Mapping[str, Null]], units: Mapping[str, float]
+) -> dict[int, dict[str, Null]]:
+    """The nulls with those of sources that are bright in single frames."""
+    left = residuals(study.order)
+    ladder = brighter.rungs(study.cells, units, left, study.settings)
+    n_targets = len(study.used_by_target) + 1
+    jobs, places = [], []
+    for found in study.fields:
+        for rung in ladder:
+            each = brighter.copied_times(rung, len(found.ids), n_targets, study.settings)
+            ids = copies(found.ids, each)
+            places.append((found.number, rung))
+            jobs.append((ids, study.subsets, rung.lift))
+    made = study.each("judging controls as bright as sources", judge_copies, jobs) if jobs else []
+    on: dict[tuple[int, str], dict[int, Null]] = {}
+    for (number, rung), judged in zip(places, made, strict=True):
+        for name, judgement in judged.items():
+            on.setdefault((number, name), {})[rung.step] = brighter.null_on(rung, nulls[number][name], judgement)
+    told = {label: units[label] for label in left if label in units}
+    scatter = {label: float(np.median(left[label].extra)) for label in told}
+    return {
+        number: {
+            name: replace(null, brighter=on.get((number, name), {}), units=told, scatter=scatter)
+            for name, null in of_field.items()
+        }
+        for number, of_field in nulls.items()
+    }
 
 
 def _in_frames(study: Study, found: FieldControls, subset: Subset) -> Mask:
@@ -398,7 +445,7 @@ def _outcomes(
 
 def _joined(parts: Sequence[Outcomes], back: IntArray) -> Outcomes:
     """Outcomes of pieces of work as one, in the order of the sources."""
-    names = ("recovered", "extrapolated", "seen", "lowest_p", "own_p")
+    names = ("recovered", "extrapolated", "seen", "enough", "lowest_p", "own_p")
     found = Found(*(np.concatenate([getattr(part.found, name) for part in parts])[back] for name in names))
     return Outcomes(found, {name: np.concatenate([part.extra[name] for part in parts])[back] for name in EXTRA})
 
@@ -480,9 +527,11 @@ def _target_tables(
     candidates, channels = read_ecsv(run.file("candidates.ecsv")), read_ecsv(run.file("channels.ecsv"))
     positions = book(study.order.run, study.order.version).positions
     standing = {str(row["name"]): str(row["standing"]) for row in candidates}
-    limits: dict[str, dict[str, float]] = {}
+    limits: dict[str, dict[str, tuple[float, float]]] = {}
     for row in channels:
-        limits.setdefault(str(row["name"]), {})[str(row["channel"])] = float(row["threshold"])
+        level = float(row["blank_level"]) if "blank_level" in channels.colnames else 0.0  # not in runs of before
+        told = float(row["threshold"]), level
+        limits.setdefault(str(row["name"]), {})[str(row["channel"])] = told
     is_target = (positions["kind"] == "target") & (positions["search"] < 0)
     ids = positions["id"][is_target]
     names = [str(name) for name in positions["name"][is_target]]
@@ -546,9 +595,12 @@ def _target_row(
     return row
 
 
-def _remarks(study: Study, found: Found, targets: astropy.table.Table) -> tuple[str, ...]:
+def _remarks(
+    study: Study, nulls: Mapping[int, Mapping[str, Null]], found: Found, targets: astropy.table.Table
+) -> tuple[str, ...]:
     """What holds for the tables as a whole; `found` is what became of the sources in all frames."""
     chosen = study.settings.completeness
+    lit = any(null.brighter for of_field in nulls.values() for null in of_field.values())
     said = [
         f"{len(study.cells)} cells of {chosen.per_cell} sources each in {len(study.subsets)} subsets of frames, at "
         f"{sum(len(f.ids) for f in study.fields)} controls of {len(study.fields)} fields",
@@ -558,12 +610,20 @@ def _remarks(study: Study, found: Found, targets: astropy.table.Table) -> tuple[
     ]
     if not chosen.period_search:
         said.append("period searches are left out, of sources and controls alike ([completeness] period_search)")
-    said += _control_remarks(study, found.lowest_p)
+    elif lit:
+        said.append("periods of sources that are bright in single frames are not searched for")
+    said += _control_remarks(study, found.lowest_p, lit)
+    least = study.settings.detection.min_frames
+    if not found.enough.all():
+        said.append(
+            f"{int((~found.enough).sum())} of {len(found.enough)} sources have fewer than {least} usable frames in every "
+            "channel: a target is undecided then, however bright ([detection] min_frames)"
+        )
     tables = book(study.order.run, study.order.version)
-    without = {int(n) for n in tables.positions["field"][tables.positions["kind"] == "target"]}
-    without -= {f.number for f in study.fields}
+    placed = (tables.positions["kind"] == "target") & (tables.positions["search"] < 0)
+    without = {int(n) for n in tables.positions["field"][placed]} - {f.number for f in study.fields}
     if without:
-        said.append(f"{len(without)} fields without controls are left out")
+        said.append(f"{len(without)} fields with fewer than two controls are left out")
     searched = int(((tables.positions["kind"] == "target") & (tables.positions["search"] >= 0)).sum())
     if searched:
         said.append(f"{searched} targets that were searched within their position errors are not in these tables")
@@ -575,7 +635,7 @@ def _remarks(study: Study, found: Found, targets: astropy.table.Table) -> tuple[
     return tuple(said)
 
 
-def _control_remarks(study: Study, lowest_p: FloatArray) -> list[str]:
+def _control_remarks(study: Study, lowest_p: FloatArray, lit: bool) -> list[str]:
     """Whether controls are enough to find anything, by the smallest p-value that each source could have got."""
     short = lowest_p >= study.bars.empirical
     hopeless = short & (np.rint(1.0 / lowest_p - 1.0) < FEWEST_FOR_TAIL)
@@ -585,6 +645,7 @@ def _control_remarks(study: Study, lowest_p: FloatArray) -> list[str]:
             f"too few controls for {hopeless.sum()} of {len(short)} sources: p cannot be below "
             f"{lowest_p[hopeless].min():.3g} at best, below {study.bars.empirical:.3g} is needed, and no tail can be fitted to "
             f"fewer than {FEWEST_FOR_TAIL}: however bright, they could not have been found"
+            + ("; for bright sources as many comparisons are wanted as controls" if lit else "")
         )
     if (short & ~hopeless).any():
         said.append(

@@ -415,13 +415,19 @@ CHANNELS = (
         ucd="stat.stdev;phot.flux",
     ),
     TableColumn(
+        "blank_level",
+        "median mean flux of blank positions where that is below zero beyond chance (background too high), else 0",
+        ucd="phot.flux",
+    ),
+    TableColumn(
         "limit_sigma",
-        "k-sigma limit of a median frame: a source this bright is detected in half of them",
+        "k-sigma limit of a median frame, above blank_level: a source this bright is detected in half of them",
         ucd="phot.flux;stat.max",
     ),
     TableColumn(
         "limit_bayes",
-        "95 % upper bound on the mean total flux (flat prior, flux not negative); its error holds confusion_rms",
+        "95 % upper bound on the mean total flux above blank_level (flat prior, flux not negative); its error holds "
+        "confusion_rms",
         ucd="phot.flux;stat.max",
     ),
     TableColumn(
@@ -481,6 +487,9 @@ CANDIDATES = (
         "lookback_p", "chance of the detections falling in the windows of the ephemeris given", ucd="stat.probability"
     ),
     TableColumn("n_controls", "blank positions that the target was ranked with", dtype="int64", ucd="meta.number"),
+    TableColumn(
+        "n_effective", "how many of them count: copies made for a bright target are alike in groups", ucd="meta.number"
+    ),
     TableColumn("null", "what these controls are: blank sky, or blank sky made as bright as the target", dtype="str"),
     TableColumn("unlike", "largest factor between the typical error of the target and of one of its controls"),
     TableColumn("p_empirical", "p_value before any extrapolation: (r+1)/(n+1)", ucd="stat.probability"),

@@ -119,6 +119,11 @@ class Controls:
         1.1, "controls whose typical error is within this factor of a target's serve it, in every channel", minimum=1
     )
     fewest_alike: int = setting(100, "or so many of those most alike, where fewer are", minimum=1)
+    most_unlike: float = setting(
+        3.0,
+        "but none whose typical error is further from the target's than by this factor, however few are left",
+        minimum=1,
+    )
     field_size_deg: float = setting(0.0, "side of a field; 0 takes half the median footprint", unit="deg", minimum=0)
     reference_frames: int = setting(
         3, "frames per channel and field in which bright sources to stay clear of are looked for", minimum=1

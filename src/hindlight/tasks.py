@@ -16,7 +16,7 @@ import numpy as np
 from hindlight import clock, duplicates, ensemble, host, judge, lifted, photometry, store
 from hindlight.background import MAD_TO_SIGMA
 from hindlight.candidates import ChannelView, Described, Examined, SeenOnly, View, describe
-from hindlight.comparisons import Located, among_alike
+from hindlight.comparisons import Located, among_alike, apart_from
 from hindlight.ensemble import FLUX_COLUMNS
 from hindlight.facts import visible
 from hindlight.fence import one_line
@@ -208,6 +208,9 @@ def frame_evidence(order: Order, batch: int) -> FrameEvidence:
     kind = who["kind"][np.searchsorted(who["id"], rows["position"])]
     usable = np.isfinite(rows["flux"]) & (rows["flux_err"] > 0) & ((rows["flags"] & int(UNUSABLE)) == 0)
     steady = usable & (kind == "comparison")
+    if not order.settings.comparisons.table:  # what the user calls steady serves, target or not
+        assumed = order.settings.photometry.assumed_fwhm_pixels
+        steady &= np.isin(rows["position"], apart_from(who, tables.frames, ("target",), assumed))
     ids, row = np.unique(rows["frame"], return_inverse=True)
     first = np.unique(row, return_index=True)[1]
     frames: Columns = {"frame": ids, "pull": np.full(len(ids), np.nan), "n_controls": np.zeros(len(ids), np.int64)}
@@ -262,19 +265,26 @@ def position_blocks(
 
 
 def residuals(order: Order) -> Mapping[str, lifted.Residuals]:
-    """What calibration leaves in each channel whose comparisons tell it."""
-    return _residuals(order.run, order.version)
+    """What calibration leaves in each channel whose comparisons tell it, those that may be a target left out."""
+    return _residuals(order.run, order.version, order.settings.photometry.assumed_fwhm_pixels)
 
 
 @lru_cache(maxsize=2)
-def _residuals(run: str, version: str) -> Mapping[str, lifted.Residuals]:
+def _residuals(run: str, version: str, assumed: float) -> Mapping[str, lifted.Residuals]:
     tables = book(run, version)
-    ids = np.sort(tables.positions["id"][tables.positions["kind"] == "comparison"])
+    ids = apart_from(tables.positions, tables.frames, ("target", "trial"), assumed)
     if len(ids) == 0:
         return {}
     blocks = position_blocks(Order(run, Settings(), host.PluginSpec(), version), ids)["blocks"]
     found = {label: lifted.residuals(block, tables.solution) for label, block in blocks.items()}
-    return {label: left for label, left in found.items() if left is not None}
+    of_channel = {label: np.sort(tables.frames["id"][tables.frames["channel"] == label]) for label in found}
+    return {
+        label: lifted.over_all(
+            left, of_channel[label][np.isin(of_channel[label], tables.solution["frame"])], tables.solution
+        )
+        for label, left in found.items()
+        if left is not None
+    }
 
 
 def judge_positions(order: Order, ids: IntArray, lift: Lift | None = None) -> judge.Judgement:

@@ -15,12 +15,13 @@ from hindlight import completeness, host, injection, judge, photometry, planted,
 from hindlight.completeness import Bars, Cell, Found, Injection, Looks, Null
 from hindlight.files import check_unchanged
 from hindlight.headers import SetAsideError
+from hindlight.lifted import Lift
 from hindlight.lightcurve import Block, FloatArray, IntArray
 from hindlight.order import Order, book, frame_facts
 from hindlight.plugin import Column, Plugin
 from hindlight.schema import UNUSABLE
 from hindlight.settings import Settings
-from hindlight.tasks import anchors_of, position_blocks
+from hindlight.tasks import anchors_of, position_blocks, residuals
 from hindlight.timing import DAY, J2000_JD
 
 ALL = "all"
@@ -64,6 +65,13 @@ def judge_controls(order: Order, ids: IntArray, subsets: Sequence[Subset]) -> Ju
     statistics = host.load(order.plugins).statistics
     judged = {subset.name: judge.judge(_within(blocks, subset), statistics) for subset in subsets}
     return Judged(judged, {label: _typical(block.flux_err) for label, block in blocks.items()})
+
+
+def judge_copies(order: Order, ids: IntArray, subsets: Sequence[Subset], lift: Lift) -> dict[str, judge.Judgement]:
+    """Every statistic at these copies of controls (ascending ids), made as bright as `lift` says, in each subset."""
+    blocks = position_blocks(order, ids, lift=lift)["blocks"]
+    statistics = host.load(order.plugins).statistics
+    return {subset.name: judge.judge(_within(blocks, subset), statistics) for subset in subsets}
 
 
 def search_controls(order: Order, ids: IntArray, subset: Subset) -> judge.Judgement:
@@ -128,11 +136,13 @@ def plant_in_frame(order: Order, frame: int, controls: IntArray) -> planted.Proo
 
 
 def looks_of(
-    order: Order, ids: IntArray, thresholds: Sequence[Mapping[str, float]], given: Sequence[Mapping[str, float]]
-) -> list[tuple[Looks, bool]]:
+    order: Order, ids: IntArray, thresholds: Sequence[Mapping[str, tuple[float, float]]],
+    given: Sequence[Mapping[str, float]],
+) -> list[tuple[Looks, bool]]:  # fmt: skip
     """The looks at targets (ascending ids) and whether they are cycles.
 
-    `thresholds` are each target's in sigma by channel; `given` is its ephemeris, NaN for none.
+    `thresholds` are each target's in sigma by channel, and what blank sky measures there (`blank_level`); `given` is its
+    ephemeris, NaN for none.
     """
     blocks = position_blocks(order, ids)["blocks"]
     gap = order.settings.detection.epoch_gap_days
@@ -164,15 +174,21 @@ def curves_of(blocks: Mapping[str, Block]) -> list[list[Any]]:
 def _injected(
     order: Order, block: Block, rows: IntArray, wanted: Sequence[Injection], cells: Sequence[Cell], unit: float
 ) -> tuple[Block, FloatArray]:
-    """A channel's light curves with the sources added, and the fluxes that were, shape (n, n_frames)."""
+    """A channel's light curves with the sources added, and the fluxes that were, shape (n, n_frames).
+
+    What calibration leaves of a comparison it leaves of a source, too.
+    """
     flux = np.zeros((len(rows), len(block.frame)))
+    left = residuals(order).get(block.channel.label)
+    wander = np.zeros((1, len(block.frame)))
+    if left is not None:
+        wander = left.values[:, np.searchsorted(left.frame, block.frame)]
     if not block.channel.signed and np.isfinite(unit):
         for number, (row, one) in enumerate(zip(rows, wanted, strict=True)):
             peak = unit * cells[one.cell].flux
             if peak > 0:
-                flux[number] = peak * injection.brightness(
-                    one.source, block.t_tdb_s[row], block.exposure_s[row], block.frame
-                )
+                shape = injection.brightness(one.source, block.t_tdb_s[row], block.exposure_s[row], block.frame)
+                flux[number] = peak * shape * (1.0 + wander[one.source.key % len(wander)])
     tables = book(order.run, order.version)
     at = [tables.row_of_frame[int(frame)] for frame in block.frame]
     electrons = tables.frames["electrons_per_unit"][at]
@@ -214,8 +230,9 @@ def _without(judgement: judge.Judgement, plugins: Sequence[Plugin]) -> judge.Jud
 
 
 def _looks(
-    blocks: Mapping[str, Block], row: int, limits: Mapping[str, float], given: Mapping[str, float], gap_days: float
-) -> tuple[Looks, bool]:
+    blocks: Mapping[str, Block], row: int, limits: Mapping[str, tuple[float, float]], given: Mapping[str, float],
+    gap_days: float,
+) -> tuple[Looks, bool]:  # fmt: skip
     """The looks at one target in unsigned channels."""
     parts: list[list[Any]] = [[], [], [], [], []]
     for number, (label, block) in enumerate(blocks.items()):
@@ -224,7 +241,14 @@ def _looks(
             continue
         unit = float(np.median(curve.flux_err))
         n = len(curve)
-        told = (curve.t_tdb_s, curve.exposure_s, curve.flux_err / unit, np.full(n, limits[label]), np.full(n, number))
+        least, level = limits[label]
+        told = (
+            curve.t_tdb_s,
+            curve.exposure_s,
+            curve.flux_err / unit,
+            least - level / curve.flux_err,
+            np.full(n, number),
+        )
         for part, values in zip(parts, told, strict=True):
             part.append(values)
     t, exposure, error, threshold, channel = (np.concatenate(p) if p else np.empty(0) for p in parts)

@@ -263,7 +263,7 @@ def tabled(
         said_of_it = outcome.place_note(
             found, _distances(positions, stated, where), errors.get(place.name, 0.0), settings.search.most_places
         )
-        row["notes"] = outcome.notes(found, place.index, place.at, p, said_of_it)
+        row["notes"] = outcome.notes(found, place.index, place.at, p, settings.controls, said_of_it)
         rows.append(row)
     faults = [f for found in fields for f in found.judgement.faults] + [f for e in examined.values() for f in e.faults]
     meta = outcome.meta(settings, p, fields)
