@@ -25,7 +25,7 @@ from scipy import ndimage
 
 sys.path.insert(0, str(Path(__file__).parent))
 sys.path.insert(0, str(Path(__file__).parents[1]))
-from blank_kinds import ANYWHERE, p_values
+from blank_kinds import ANYWHERE, mined
 
 import skies
 
@@ -82,6 +82,12 @@ def archive(folder: Path, kind: str, seed: int, targets: int, frames: int, size:
     skies.write_sky(folder / "frames", sky, [], seed)
     (folder / "targets.csv").write_text(skies.target_text([places[k] for k in chosen], sky), encoding="utf-8")
     return RAW + ("" if kind in ("rings", "fixed") else UNCORRECTED.format(FWHM_PIXELS * sky.pixel_arcsec / 3600))
+
+
+def p_values(folder: Path, settings: str) -> Run:
+    """The targets' p-values of a run of the archive, and the number of controls behind each."""
+    run = mined(folder, settings, periods=False)
+    return run.p, run.n_controls
 
 
 def counts(runs: list[Run], high: float) -> tuple[int, int, int]:
