@@ -32,6 +32,18 @@ def thresholds(steady: np.ndarray, seed: int) -> ranking.Thresholds:
     return ranking.thresholds(found, np.arange(len(steady)), Detection())[CHANNEL.label]
 
 
+def test_a_few_controls_with_sources_set_no_threshold() -> None:
+    """Two controls upon steady sources would hide everything fainter; thresholds are then those of Gaussian noise."""
+    found = judge.judge({CHANNEL.label: block(np.array([300.0, 500.0]), 1)}, ())
+    limits = ranking.thresholds(found, np.arange(2), Detection())[CHANNEL.label]
+    assert (limits.n_controls, limits.confusion) == (0, 0.0)
+    assert 3.0 < limits.detected < 5.0
+    assert 2.0 < limits.mean < 4.0
+    more = ranking.thresholds(found, np.arange(2), Detection(), n_trials=500)[CHANNEL.label]
+    assert limits.detected + 0.5 < more.detected < 7.0
+    assert limits.mean + 0.5 < more.mean < 6.0
+
+
 @pytest.mark.parametrize("seed", [1, 2, 3])
 def test_confusion_is_the_scatter_of_blank_means_beyond_their_errors(seed: int) -> None:
     """An rms of 0.5 under means known to 0.13 is found to within its own error of some 6 %; without it next to nothing."""

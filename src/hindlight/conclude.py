@@ -133,7 +133,7 @@ def rank(found: Field, plugins: Plugins, settings: Settings) -> None:
         found.judgement, targets, controls, found.serving, settings.controls, bounded=found.lift is None
     )
     found.ranks = ranking.rank_field(found.judgement, columns, targets, controls, serving, found.group_size)
-    found.thresholds = ranking.thresholds(found.judgement, controls, settings.detection)
+    found.thresholds = ranking.thresholds(found.judgement, controls, settings.detection, found.n_trials)
 
 
 def gated(found: Field, settings: Settings) -> IntArray:

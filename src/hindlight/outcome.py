@@ -21,6 +21,7 @@ from hindlight.judge import full_columns
 from hindlight.lifted import COPY
 from hindlight.lightcurve import FloatArray
 from hindlight.plugin import Column, ConsistencyCheck, Statistic
+from hindlight.ranking import FEWEST_BLANK
 from hindlight.schema import CANDIDATES, PLUGIN_FAULTS, TableColumn
 from hindlight.settings import Controls, Settings
 from hindlight.tables import astropy_table, rows_to_columns
@@ -187,7 +188,7 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings) -> tuple[st
             f"{settings.ranking.level:g}: {p.needed} controls would ([controls] per_field and most_per_field, [search] controls"
             + ("; for bright targets as many [comparisons] wanted, too)" if lit else ")")
         )
-    said += [*_error_remarks(fields), *_confusion_remarks(fields), *_level_remarks(fields)]
+    said += [*_threshold_remarks(fields), *_error_remarks(fields), *_confusion_remarks(fields), *_level_remarks(fields)]
     if p.extrapolated.any():
         said.append(f"{int(p.extrapolated.sum())} p-values are upper bounds of a fitted tail (p_is_extrapolated)")
     return tuple(said)
@@ -217,6 +218,19 @@ def _search_remarks(fields: Sequence[Field], settings: Settings) -> list[str]:
     )
     short = min(sizes) < settings.search.controls
     return [said + (f"; {settings.search.controls} were asked for, no more fit into the frames" if short else "")]
+
+
+def _threshold_remarks(fields: Sequence[Field]) -> list[str]:
+    """Targets whose detection thresholds no blank positions could set."""
+    assumed = sum(
+        len(found.targets) for found in fields if any(limits.n_controls == 0 for limits in found.thresholds.values())
+    )
+    if not assumed:
+        return []
+    return [
+        f"detection thresholds of {assumed} targets are, in some channel, those of Gaussian noise: fewer than {FEWEST_BLANK} "
+        "controls without a source of their own are measured there; real noise has more outliers (n_detected)"
+    ]
 
 
 def _error_remarks(fields: Sequence[Field]) -> list[str]:

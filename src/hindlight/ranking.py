@@ -22,6 +22,7 @@ from hindlight.settings import Controls, Detection
 FAILING_SHARE = 0.05  # a plugin that fails on more of the controls than this gets no p-value
 STEADY_SIGMA = 5.0  # controls with a mean flux further out than this do not set detection thresholds
 COMMON_SHARE = 0.1  # a channel's scale: what this share of its blank positions exceeds at most
+FEWEST_BLANK = 10  # blank positions that set thresholds: of fewer, a steady source in one would set them
 FEWEST_MEANS = 10  # blank positions that show how much their mean fluxes differ
 LOW_SIGMA = 3.3  # a median of blank means that is further below zero is no chance
 QUIET_SPREAD = 5.0
@@ -156,16 +157,21 @@ def rank_field(
     return FieldRanks(tuple(ranks), tuple(deciding), serving.sum(axis=1), control_p, tuple(keys))
 
 
-def thresholds(judgement: Judgement, controls: IntArray, detection: Detection) -> dict[str, Thresholds]:
+def thresholds(
+    judgement: Judgement, controls: IntArray, detection: Detection, n_trials: int = 1
+) -> dict[str, Thresholds]:
     """What counts as seen, for each channel of the field.
 
     The rate of false alarms holds for a position as a whole: a blank one has any detection, in any of its channels,
     with that chance. Each channel's threshold is what one blank position in ten exceeds there, times the one factor
-    that makes the rate hold for the channels together.
+    that makes the rate hold for the channels together. A channel with too few controls has those of Gaussian noise, for the
+    brightest of `n_trials` places.
     """
     labels = sorted({channel for channel, _ in judgement.values if channel != WHOLE})
     blank = {label: _blank_rows(judgement, label, controls) for label in labels}
-    own = {label: _channel_thresholds(judgement, label, blank[label], detection, len(labels)) for label in labels}
+    own = {
+        label: _channel_thresholds(judgement, label, blank[label], detection, len(labels), n_trials) for label in labels
+    }
     single = _common_factor(judgement, "snr_max", {k: v.detected for k, v in own.items()}, blank, detection)
     excess = _common_factor(judgement, "excess_max", {k: v.above_quiet for k, v in own.items()}, blank, detection)
     return {
@@ -179,10 +185,14 @@ def _column(judgement: Judgement, label: str, name: str) -> FloatArray:
 
 
 def _blank_rows(judgement: Judgement, label: str, controls: IntArray) -> IntArray:
-    """The controls that set a channel's thresholds: those measured in it and without a steady source of their own."""
+    """The controls that set a channel's thresholds: those measured in it and without a steady source of their own.
+
+    None where these are too few.
+    """
     rows = controls[_column(judgement, label, "n_used")[controls] > 0]
     mean = _column(judgement, label, "mean_snr")[rows]
-    return rows[mean <= calibrate.robust_threshold(mean, float(norm.sf(STEADY_SIGMA)))]
+    quiet = rows[mean <= calibrate.robust_threshold(mean, float(norm.sf(STEADY_SIGMA)))]
+    return quiet if len(quiet) >= FEWEST_BLANK else quiet[:0]
 
 
 def _common_factor(
@@ -199,16 +209,16 @@ def _common_factor(
 
 
 def _channel_thresholds(
-    judgement: Judgement, label: str, blank: IntArray, detection: Detection, n_channels: int
+    judgement: Judgement, label: str, blank: IntArray, detection: Detection, n_channels: int, n_trials: int
 ) -> Thresholds:
-    """A channel's thresholds by itself, before the common factor; those of Gaussian noise where there is no control."""
+    """A channel's thresholds by itself, before the common factor; those of Gaussian noise where no control sets them."""
     rate = detection.false_alarms / n_channels
     n_used = _column(judgement, label, "n_used")
     means = _column(judgement, label, "mean")[blank], _column(judgement, label, "mean_err")[blank]
     if blank.size == 0:
         typical = int(np.median(n_used[n_used > 0])) if np.any(n_used > 0) else 0
-        gaussian = calibrate.gaussian_threshold(typical, rate)
-        return Thresholds(gaussian, gaussian, float(norm.isf(rate)), QUIET_WITHOUT_CONTROLS, 0)
+        gaussian = calibrate.gaussian_threshold(typical * n_trials, rate)
+        return Thresholds(gaussian, gaussian, float(norm.isf(rate / n_trials)), QUIET_WITHOUT_CONTROLS, 0)
     return Thresholds(
         detected=calibrate.threshold(_column(judgement, label, "snr_max")[blank], COMMON_SHARE),
         above_quiet=calibrate.threshold(_column(judgement, label, "excess_max")[blank], COMMON_SHARE),

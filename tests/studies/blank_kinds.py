@@ -117,7 +117,10 @@ def watched() -> Iterator[list[conclude.Field]]:
 
 def mined(folder: Path, settings: str, periods: bool = True) -> Run:
     """A run of an archive, all work in this process."""
-    text = f"[controls]\nper_field = 600\nmost_per_field = 600\nfield_size_deg = 50.0\nfewest_alike = 40\nbright_snr = 50.0\n{settings}"
+    text = (
+        "[controls]\nper_field = 600\nmost_per_field = 600\nfield_size_deg = 50.0\nfewest_alike = 40\nbright_snr = 50.0\n"
+        + settings
+    )
     (folder / "s.toml").write_text(text, encoding="utf-8")
     with tempfile.TemporaryDirectory(dir=folder) as out, watched() as fields:
         arguments = ["mine", folder / "frames", "--targets", folder / "targets.csv", "--out", Path(out) / "run",
