@@ -1,13 +1,17 @@
 """Controls made as bright as a target: what is added to them, and that steady bright sources are then no candidates."""
 
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 import pytest
 
-from hindlight import calibrate
-from hindlight.lifted import COPY, copies, group_size, lifted, originals, over_all, residuals
+from hindlight import calibrate, host
+from hindlight.conclude import Field, rank
+from hindlight.judge import Judgement
+from hindlight.lifted import COPY, Lift, copies, group_size, lifted, originals, over_all, residuals
 from hindlight.lightcurve import Block, Channel, freeze
+from hindlight.settings import Controls, Settings
 from test_estimators import study
 
 CHANNEL = Channel(label="camera|R|I|3as|adu", unit="adu")
@@ -92,6 +96,30 @@ def test_copies_are_blank_sky_and_a_steady_source() -> None:
     np.testing.assert_array_equal(lifted(blank, base, ids, 100.0, None).flux[5:10], blank.flux)
 
 
+def test_only_copies_that_serve_are_counted_as_alike() -> None:
+    """Of a hundred controls thirty are as noisy as the target: with ten comparisons, six of their sixty copies are alike."""
+    controls = copies(np.arange(1, 101), 2)
+    depth = np.concatenate(([1.0], np.tile(np.where(np.arange(100) < 30, 1.0, 2.0), 2)))
+    found = Field(-5, np.array([0]), controls, np.ones((1, 200), bool), lift=Lift({"c": 50.0}, 1.0, 10))
+    core = {
+        "n_used": 20,
+        "snr_max": 3.0,
+        "excess_max": 3.0,
+        "mean_snr": 0.0,
+        "mean": 0.0,
+        "mean_err": 0.2,
+        "reduced": 1.0,
+    }
+    values = {("c", f"core_{name}"): np.full(201, value) for name, value in core.items()}
+    chi_square = np.concatenate(([9.0], np.random.default_rng(9).uniform(0.5, 1.5, 200)))
+    found.judgement = Judgement(201, {**values, ("c", "core_depth"): depth, ("c", "chi_square_reduced"): chi_square})
+    settings = replace(Settings(), controls=Controls(fewest_alike=20))
+    rank(found, host.load(host.spec_from(settings)), settings)
+    assert found.ranked.n_controls[0] == 60
+    assert found.group_size == pytest.approx(6.0)
+    assert found.ranked.ranks[0].p_value == pytest.approx(6 / 66)
+
+
 def test_copies_scatter_as_errors_say_where_comparisons_do_not_tell() -> None:
     """In frames that are not tied, and in those that show no comparison: else a target would vary beside its copies."""
     known = solution(200, 0.03)
@@ -140,7 +168,7 @@ def test_a_target_is_beyond_all_copies_no_more_often_than_stated(
     sky, wander = (1 - share) ** 0.5 * blank, share**0.5 * left
     made = sky[:, ids % COPY - 100] + wander[:, (ids + ids // COPY) % COPY % sources]
     beyond = np.mean(sky[:, -1] + wander[:, -1] > made.max(axis=1))
-    size = group_size(share, each, controls, sources)
+    size = group_size(share, each, len(ids), sources)
     stated = size / (len(ids) + size)
     noise = 3 * (stated / trials) ** 0.5
     assert beyond <= stated + noise

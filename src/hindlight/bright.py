@@ -14,7 +14,7 @@ from hindlight import calibrate
 from hindlight.conclude import Field, rank, without
 from hindlight.host import Plugins
 from hindlight.judge import Judgement, joined, taken
-from hindlight.lifted import COPY, Lift, Residuals, copies, group_size, how_many
+from hindlight.lifted import COPY, Lift, Residuals, copies, how_many
 from hindlight.lightcurve import FloatArray
 from hindlight.plugin import Column
 from hindlight.settings import Settings
@@ -88,7 +88,8 @@ def apart(found: Field, left: Evidence, n_targets: int, settings: Settings) -> t
         levels = {labels[row]: float(np.median(of.flux[row, members])) for row in lit}
         share = of.share[lit][:, members].max(axis=1)
         leading = left[labels[lit[int(share.argmax())]]]
-        made.append(_copied(found, members, Lift(levels), wanted, float(share.max()), len(leading.values)))
+        lift = Lift(levels, float(share.max()), len(leading.values))
+        made.append(_copied(found, members, lift, wanted))
     return without(found, [index for members in groups.values() for index in members]), made
 
 
@@ -105,14 +106,13 @@ def _brightness(found: Field, labels: list[str], left: Evidence) -> _Brightness:
     return _Brightness(flux, np.nan_to_num(flux / frame_error), np.nan_to_num(share))
 
 
-def _copied(found: Field, members: list[int], lift: Lift, wanted: int, share: float, n_sources: int) -> Bright:
-    """Targets of a field, with copies of its controls, about `wanted`, in which calibration has a share of the variance."""
-    each = how_many(wanted, len(found.controls), n_sources)
+def _copied(found: Field, members: list[int], lift: Lift, wanted: int) -> Bright:
+    """Targets of a field, with copies of its controls, about `wanted`."""
+    each = how_many(wanted, len(found.controls), lift.n_sources)
     controls = copies(found.controls, each)
-    size = group_size(share, each, len(found.controls), n_sources)
     targets, serving = found.targets[members], np.tile(found.serving[members], each)
     number = (
         -1 - COPY - int(targets[0])
     )  # below those of searched targets, which may be taken out of fields of their own
-    field = Field(number, targets, controls, serving, found.n_trials, lift, size)
+    field = Field(number, targets, controls, serving, found.n_trials, lift)
     return Bright(found, field)

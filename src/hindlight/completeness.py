@@ -114,10 +114,11 @@ class Null:
     units: Mapping[str, float] = field(default_factory=dict)
     scatter: Mapping[str, float] = field(default_factory=dict)
 
-    def alike(self, share: float) -> Null:
-        """The same copies, as alike as they are where calibration has this share of the variance."""
-        n = len(self.ids)
-        return replace(self, weight=group_size(share, self.judgement.n // n, n, self.n_sources))
+    def alike(self, share: float, hosts: IntArray) -> Null:
+        """The same copies, as alike as they are for sources at these controls of this share of calibration in the variance."""
+        most = int(self.serving[np.searchsorted(self.ids, hosts)].sum(axis=1).max(initial=0))
+        each = self.judgement.n // len(self.ids)
+        return replace(self, weight=group_size(share, each, most, self.n_sources))
 
 
 def null_of(ids: IntArray, in_frames: Mask, judgement: Judgement, settings: Settings) -> Null:
@@ -203,7 +204,7 @@ def found(
     order, parts = [], []
     for number, of_calibration in sorted(set(zip(step.tolist(), bins.tolist(), strict=True))):
         rows = np.flatnonzero((step == number) & (bins == of_calibration))
-        among = null if number == FAINT else null.brighter[number].alike(of_calibration / SHARES)
+        among = null if number == FAINT else null.brighter[number].alike(of_calibration / SHARES, hosts[rows])
         order.append(rows)
         parts.append(_found(taken(judged, rows), hosts[rows], among, columns, bars, settings, plugins))
     back = np.argsort(np.concatenate(order)) if order else np.empty(0, np.int64)

@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from hindlight import calibrate, ranking
 from hindlight.host import Plugins
 from hindlight.judge import Judgement, full_columns, taken
-from hindlight.lifted import Lift, originals
+from hindlight.lifted import Lift, group_size, originals
 from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.plan import serving_controls
 from hindlight.search import best_places
@@ -132,6 +132,9 @@ def rank(found: Field, plugins: Plugins, settings: Settings) -> None:
     serving, found.unlike = ranking.matched(
         found.judgement, targets, controls, found.serving, settings.controls, bounded=found.lift is None
     )
+    if found.lift is not None:
+        each, most = len(found.controls) // len(found.blank_sky), int(serving.sum(axis=1).max(initial=0))
+        found.group_size = group_size(found.lift.share, each, most, found.lift.n_sources)
     found.ranks = ranking.rank_field(found.judgement, columns, targets, controls, serving, found.group_size)
     found.thresholds = ranking.thresholds(found.judgement, controls, settings.detection, found.n_trials)
 

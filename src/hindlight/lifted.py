@@ -30,9 +30,15 @@ Columns = dict[str, Any]
 
 @dataclass(frozen=True)
 class Lift:
-    """How bright copies of controls are made: channel label -> flux in the channel's unit; a channel not named stays blank."""
+    """How bright copies of controls are made: channel label -> flux in the channel's unit; a channel not named stays blank.
+
+    `share` is that of calibration in the variance, in the channel where it is largest, `n_sources` how many comparisons
+    tell of it there.
+    """
 
     levels: Mapping[str, float]
+    share: float = 0.0
+    n_sources: int = 1
 
 
 @dataclass(frozen=True, eq=False)
@@ -140,11 +146,11 @@ def how_many(wanted: int, n_controls: int, n_sources: int) -> int:
     return max(1, min(-(-wanted // n_controls), n_sources))
 
 
-def group_size(share: float, each: int, n_controls: int, n_sources: int) -> float:
-    """How many copies are as good as one, where calibration has a `share` of the variance.
+def group_size(share: float, each: int, n_copies: int, n_sources: int) -> float:
+    """How many copies are as good as one, of those that serve a target, where calibration has a `share` of the variance.
 
     Without any, the `each` copies of a control differ by a constant only; where it is all, those made with one of the
     `n_sources` comparisons are alike. Between the two copies tell more than this line says, which is on the safe side.
     """
-    of_a_source = max(1.0, each * n_controls / n_sources)
+    of_a_source = max(1.0, n_copies / n_sources)
     return (1.0 - share) * each + share * of_a_source
