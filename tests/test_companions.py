@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import dataclasses
 import os
+import tomllib
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 import pytest
 from astropy.io import fits
+from astropy.time import Time
 
 from hindlight.archive import walk
 from hindlight.companions import sort_out
@@ -27,6 +29,58 @@ from made import header, write
 SIZE = 120
 SCALE = 10.0  # arcsec
 SETTINGS = Settings()
+
+
+# --- tables of good time
+
+
+def intervals(path: Path, *spells: tuple[float, float], name: str = "GTI") -> None:
+    """A file with a table of good time, seconds from 2001-02-03 TT."""
+    columns = [
+        fits.Column(key, "D", unit="s", array=np.array(v))
+        for key, v in zip(("START", "STOP"), zip(*spells, strict=True), strict=True)
+    ]
+    table = fits.BinTableHDU.from_columns(columns, name=name)
+    table.header["MJDREF"], table.header["TIMESYS"] = 51943.0, "TT"
+    fits.HDUList([fits.PrimaryHDU(), table]).writeto(path)
+
+
+def test_good_time_in_a_file_beside_the_image(tmp_path: Path) -> None:
+    """It gives exposure, span and instants of the images of its image's file alone; a block counts before it."""
+    for name in ("a", "b", "c"):
+        write(tmp_path / f"{name}.fits", EXPTIME=5.0)
+    intervals(tmp_path / "a_gti.fits", (100.0, 200.0), (500.0, 700.0))
+    intervals(tmp_path / "c_gti.fits", (0.0, 50.0))
+    text = '[companions]\ngood_time = "{stem}_gti.fits"\n[[frames]]\npath = "c.fits"\nexposure_s = 40.0\n'
+    settings = settings_from(tomllib.loads(text), "s.toml")
+    found = walk([str(tmp_path)], [StandardHeaders()], settings)
+    assert found.frames["path"].tolist() == ["a.fits", "b.fits", "c.fits"]
+    assert found.frames["exposure_s"].tolist() == [300.0, 5.0, 40.0]
+    assert found.frames["good_time_file"].tolist() == ["a_gti.fits", "", "c_gti.fits"]
+    tt = Time(51943.0 + 400.0 / 86400, format="mjd", scale="tt")
+    assert found.frames["middle_mjd_tdb"][0] == pytest.approx(tt.tdb.mjd, abs=1e-8)
+    assert "intermittent" in found.frames["assumptions"][0]
+    assert [row["reason"] for row in found.rejects] == ["companion", "companion"]
+    same = walk(
+        [str(tmp_path)], [StandardHeaders()], settings, {**found.frames, "state": np.full(3, "current", object)}
+    )
+    assert len(same.frames["path"]) == 0
+
+
+@pytest.mark.parametrize("kind", ["broken", "another name"])
+def test_a_good_time_companion_that_cannot_be_used(tmp_path: Path, kind: str) -> None:
+    """Its image is set aside, since its exposure is not what the header says."""
+    write(tmp_path / "a.fits")
+    if kind == "broken":
+        (tmp_path / "a_gti.fits").write_bytes(b"nothing")
+    else:
+        intervals(tmp_path / "a_gti.fits", (0.0, 1.0), name="EVENTS")
+    settings = settings_from({"companions": {"good_time": "{stem}_gti.fits"}}, "s.toml")
+    found = walk([str(tmp_path)], [StandardHeaders()], settings)
+    assert len(found.frames["path"]) == 0
+    (row,) = [row for row in found.rejects if row["reason"] == "bad_companion"]
+    assert row["path"] == "a.fits"
+    assert "a_gti.fits" in row["detail"]
 
 
 # --- names

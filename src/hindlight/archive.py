@@ -22,7 +22,7 @@ from hindlight.facts import NAN, Cards, FrameFacts
 from hindlight.files import FileEntry, list_files, local_path, open_source
 from hindlight.frametable import LONGEST_EXPOSURE_S, Columns, Found, Row, columns_of, reject
 from hindlight.goodtime import with_good_time
-from hindlight.headers import Hdu, Plane, SetAsideError, facts_of, inherited, planes, read_hdus
+from hindlight.headers import GOOD_TIME, Hdu, Plane, SetAsideError, facts_of, inherited, planes, read_hdus
 from hindlight.knowledge import Knowledge
 from hindlight.plugin import Dialect
 from hindlight.schema import FRAMES
@@ -169,10 +169,12 @@ def _read_file(archive: str, entry: FileEntry, companions: Mapping[str, str], re
     images, last, held = 0, -1, 0
     primary: Cards | None = None
     waiting: list[Found] = []
+    table: Hdu | None = None
     try:
         if entry.fault:
             raise SetAsideError("unreadable", entry.fault)
         limit = reader.settings.unpacked_limit_mb * MEGABYTE
+        table = _companion_table(archive, companions, limit)
         with open_source(local_path(archive, entry.path), limit) as source:
             for hdu in read_hdus(source):
                 last = hdu.index
@@ -184,7 +186,7 @@ def _read_file(archive: str, entry: FileEntry, companions: Mapping[str, str], re
                     waiting += frames
                     held += _held(frames)
                     if held > HELD_AT_ONCE:
-                        yield [_known(frame, reader) for frame in waiting]
+                        yield [_known(frame, reader, table) for frame in waiting]
                         waiting, held = [], 0
                 elif hdu.is_good_time:
                     waiting = [_with_good_time(frame, hdu) for frame in waiting]
@@ -197,7 +199,24 @@ def _read_file(archive: str, entry: FileEntry, companions: Mapping[str, str], re
         reason = SetAsideError("unreadable", f"the system says: {error.strerror}")
         reader.rejects.append(reject(archive, entry, reason))
     if waiting:
-        yield [_known(frame, reader) for frame in waiting]
+        yield [_known(frame, reader, table) for frame in waiting]
+
+
+def _companion_table(archive: str, companions: Mapping[str, str], limit: int) -> Hdu | None:
+    """The table of good time in a file beside the image, None where none is named. Raises `SetAsideError`."""
+    name = companions.get("good_time")
+    if name is None:
+        return None
+    try:
+        with open_source(local_path(archive, name), limit) as source:
+            table = next((hdu for hdu in read_hdus(source) if hdu.is_good_time), None)
+    except (SetAsideError, OSError) as error:
+        detail = (error.strerror if isinstance(error, OSError) else None) or str(error)
+        raise SetAsideError("bad_companion", f"its good_time companion {name} cannot be used: {detail}") from error
+    if table is None:
+        words = " or ".join(GOOD_TIME)
+        raise SetAsideError("bad_companion", f"its good_time companion {name} has no table with EXTNAME {words}")
+    return table
 
 
 def _held(frames: Sequence[Found]) -> int:
@@ -221,8 +240,10 @@ def _frames_of(
     return frames
 
 
-def _known(frame: Found, reader: _Reader) -> Found:
-    """The frame with what the user knows of it, and what follows from its companions."""
+def _known(frame: Found, reader: _Reader, table: Hdu | None) -> Found:
+    """The frame with what the user knows of it, and what follows from its companions, a table of good time among them."""
+    if table is not None:
+        frame = _with_good_time(frame, table)
     facts = frame.facts
     if reader.knowledge:
         facts = reader.knowledge.applied(frame.hdu.cards, frame.entry.path, facts)

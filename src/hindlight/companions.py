@@ -14,7 +14,13 @@ from hindlight.files import ENDINGS, FileEntry
 from hindlight.settings import COMPANION_KINDS, Companions
 
 PACKED = ("", ".gz", ".fz")  # a companion may be packed where its pattern does not say so
-NOUNS = {"weight": "weights", "rms": "noise map", "mask": "mask", "primary_beam": "primary-beam gains"}
+NOUNS = {
+    "weight": "weights",
+    "rms": "noise map",
+    "mask": "mask",
+    "primary_beam": "primary-beam gains",
+    "good_time": "good-time intervals",
+}
 
 
 @dataclass(frozen=True)

@@ -11,7 +11,7 @@ from hindlight.channels import channels_of
 from hindlight.files import local_path
 from hindlight.lightcurve import Channel, IntArray
 from hindlight.opening import FrameToMeasure
-from hindlight.settings import COMPANION_KINDS, Settings
+from hindlight.settings import PIXEL_COMPANIONS, Settings
 from hindlight.store import Columns, RunFolder
 
 
@@ -57,7 +57,7 @@ def frame_facts(frames: Columns, row: int) -> FrameToMeasure:
     """What photometry needs to know of a frame, from its row in the frame table."""
     value = {name: values[row] for name, values in frames.items()}
     sign = -1.0 if value["negative"] else 1.0
-    named = {kind: value[f"{kind}_file"] for kind in COMPANION_KINDS if value[f"{kind}_file"]}
+    named = {kind: value[f"{kind}_file"] for kind in PIXEL_COMPANIONS if value[f"{kind}_file"]}
     companions = {kind: str(Path(value["archive"]) / path) for kind, path in named.items()}
     return FrameToMeasure(
         path=local_path(str(value["archive"]), str(value["path"])), hdu=int(value["hdu"]), plane=int(value["plane"]),

@@ -205,6 +205,12 @@ FRAMES = (
         dtype="str",
         ucd="meta.id;meta.file",
     ),
+    TableColumn(
+        "good_time_file",
+        "companion with a table of good time, relative to the archive folder",
+        dtype="str",
+        ucd="meta.id;meta.file",
+    ),
     TableColumn("dialect", "plugin that read the header", dtype="str"),
     TableColumn("state", "current, vanished (kept) or void (the file has changed since)", dtype="str"),
     TableColumn("duplicate_of", "id of the frame kept of the same exposure, -1 for none", dtype="int64"),

@@ -95,9 +95,11 @@ class Companions:
     rms: str = setting("", "noise per pixel: taken for the error in place of the local noise")
     mask: str = setting("", "anything but zero: the pixel is blank")
     primary_beam: str = setting("", "gain of the primary beam: fluxes and errors are divided by it")
+    good_time: str = setting("", "table of good-time intervals (EXTNAME GTI, columns START and STOP) of the exposure")
 
 
 COMPANION_KINDS = tuple(f.name for f in fields(Companions))
+PIXEL_COMPANIONS = tuple(kind for kind in COMPANION_KINDS if kind != "good_time")  # images like their image
 
 
 @dataclass(frozen=True)
