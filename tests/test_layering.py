@@ -21,7 +21,7 @@ ORDER = [
     "calibrate", "ranking", "lifted", "search", "timing", "injection", "completeness", "candidates", "plan",
     "more_controls", "comparisons", "order", "tasks", "examining", "trials", "conclude", "bright", "outcome", "crew",
     "record", "verdicts", "measuring", "second_pass", "runner", "recovery", "survey", "export", "demo", "testing",
-    "cli", "__main__",
+    "outlet", "cli", "__main__",
 ]  # fmt: skip
 PLUGINS_MAY_IMPORT = {"hindlight", "numpy", "scipy", "astropy", "photutils", "nifty_ls"}
 

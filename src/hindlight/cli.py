@@ -23,8 +23,9 @@ from rich.table import Table
 from rich.text import Text
 
 from hindlight import __version__
-from hindlight.errors import HindlightError, UsageError
+from hindlight.errors import HindlightError, ReaderGoneError, UsageError
 from hindlight.facts import visible
+from hindlight.outlet import PipedConsole, let_go, read_by_someone
 
 BEST_ROWS = 10
 LONGEST_CELL = 200
@@ -43,7 +44,9 @@ def main() -> None:
     signal.signal(signal.SIGTERM, _terminate)
     logging.captureWarnings(True)  # libraries' warnings go to the log, not between the user's lines
     logging.getLogger("py.warnings").addHandler(logging.NullHandler())
-    sys.exit(run_command(sys.argv[1:]))
+    status = run_command(sys.argv[1:])
+    let_go()
+    sys.exit(status)
 
 
 def run_command(arguments: list[str]) -> int:
@@ -56,6 +59,8 @@ def run_command(arguments: list[str]) -> int:
         return _say("interrupted; the same command continues", INTERRUPTED)
     except click.ClickException as error:
         return _say(f"{error.format_message()}; see `hindlight --help`", 2)
+    except ReaderGoneError as gone:
+        return gone.exit_status
     except HindlightError as error:
         return _say(str(error), error.exit_status)
     except OSError as error:
@@ -91,7 +96,21 @@ def common_options(command: Command) -> Command:
     return click.option("-v", "--verbose", is_flag=True, help="Say more, and show tracebacks.")(command)
 
 
-@click.group(context_settings={"help_option_names": ["-h", "--help"]})
+class _Group(click.Group):
+    """The commands, none of which minds when its output is read no further."""
+
+    def make_context(self, *args: Any, **kwargs: Any) -> click.Context:
+        """Reads the command line, and prints help."""
+        with read_by_someone():
+            return super().make_context(*args, **kwargs)
+
+    def invoke(self, ctx: click.Context) -> Any:
+        """Runs a command."""
+        with read_by_someone():
+            return super().invoke(ctx)
+
+
+@click.group(cls=_Group, context_settings={"help_option_names": ["-h", "--help"]})
 @click.version_option(__version__, prog_name="hindlight")
 def cli() -> None:
     """Was this position ever bright before?
@@ -269,7 +288,8 @@ class _Lines:
 
     def stage(self, name: str, total: int) -> None:
         """Say the stage."""
-        click.echo(f"hindlight: {name}" + (f", {total} steps" if total else ""), err=True)
+        with read_by_someone():
+            click.echo(f"hindlight: {name}" + (f", {total} steps" if total else ""), err=True)
 
     def step(self, n: int = 1) -> None:
         """Nothing to say between stages."""
@@ -310,7 +330,7 @@ def _watching(quiet: bool, verbose: bool) -> Iterator[Any]:
 
 def _console() -> Console:
     """Standard output; wide enough for its tables where it is no terminal."""
-    return Console(width=None if sys.stdout.isatty() else 160, highlight=False, soft_wrap=not sys.stdout.isatty())
+    return PipedConsole(width=None if sys.stdout.isatty() else 160, highlight=False, soft_wrap=not sys.stdout.isatty())
 
 
 def _simple_table(title: str, *names: str) -> Table:
