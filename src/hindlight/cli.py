@@ -513,6 +513,8 @@ def _check_plugin(path: Path) -> None:
             click.echo(f"  {problem}")
         if not report.problems:
             click.echo(f"  passes {report.n_checks} checks")
+        for remark in report.remarks:
+            click.echo(f"  note: {remark}")
     if problems:
         raise UsageError(
             f"plugin file {path}: {problems} checks failed; the lines above say which and how to mend them"
