@@ -20,7 +20,7 @@ ORDER = [
     "photometry", "planted", "duplicates", "likeness", "robust", "losses", "response", "ensemble", "store", "judge",
     "calibrate", "ranking", "lifted", "search", "timing", "injection", "completeness", "candidates", "plan",
     "more_controls", "comparisons", "order", "tasks", "examining", "trials", "conclude", "bright", "outcome", "crew",
-    "record", "verdicts", "measuring", "second_pass", "runner", "recovery", "survey", "export", "demo", "testing",
+    "record", "asides", "verdicts", "measuring", "second_pass", "runner", "recovery", "survey", "export", "demo", "testing",
     "outlet", "cli", "__main__",
 ]  # fmt: skip
 PLUGINS_MAY_IMPORT = {"hindlight", "numpy", "scipy", "astropy", "photutils", "nifty_ls"}

@@ -404,6 +404,8 @@ def _print_inventory(found: Any) -> None:
     console.print(f"possible duplicates: {found.possible_duplicates} pairs, compared when mined")
     if found.deep_images:
         console.print(f"deep images that hold other frames: {found.deep_images}, kept apart from those when mined")
+    for line in found.remarks:
+        console.print(visible(line), markup=False)
     text = settings_to_fill_in(found.missing)
     if text:
         click.echo(

@@ -44,12 +44,16 @@ DEFAULTS = {"pm_ra_cosdec": 0.0, "pm_dec": 0.0, "ref_epoch": 2000.0, "pos_err": 
 
 @dataclass(frozen=True, eq=False)
 class Targets:
-    """The target list: names, ICRS degrees of shape (n,), and the optional columns in their contract units."""
+    """The target list: names, ICRS degrees of shape (n,), and the optional columns in their contract units.
+
+    `unused` are the names of other columns of the table.
+    """
 
     names: tuple[str, ...]
     ra: FloatArray
     dec: FloatArray
     optional: Mapping[str, FloatArray]
+    unused: tuple[str, ...] = ()
 
     def __len__(self) -> int:
         return len(self.names)
@@ -103,7 +107,8 @@ def read_targets(path: Path, fluxes: bool = False) -> Targets:
         _refuse_out_of_range(name, values, path)
     if fluxes and "flux" in table.colnames:
         optional["flux"] = _quantity(table["flux"], "flux", table["flux"].unit or u.one, path)
-    return Targets(names, ra % 360.0, dec, optional)
+    unused = tuple(name for name in table.colnames if name not in ("name", "ra", "dec", *optional))
+    return Targets(names, ra % 360.0, dec, optional, unused)
 
 
 def _read_table(path: Path) -> astropy.table.Table:

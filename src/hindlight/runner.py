@@ -18,6 +18,7 @@ import numpy as np
 
 from hindlight import (
     archive,
+    asides,
     comparisons,
     duplicates,
     ensemble,
@@ -156,7 +157,13 @@ def _measured_and_judged(
     first = verdicts.ranked_fields(session, frames, positions)
     last = second_pass.carried_out(session, frames, positions, first, size_deg)
     rejects = _with_parts(last.session, frames, last.positions, rejects)
-    return verdicts.tabled(last.session, frames, last.positions, rejects, last.fields, (*said, *last.said))
+    said = (*said, *last.said, *_of_the_request(last.session, frames))
+    return verdicts.tabled(last.session, frames, last.positions, rejects, last.fields, said)
+
+
+def _of_the_request(session: Session, frames: Columns) -> tuple[str, ...]:
+    """What the last lines say of settings and lists."""
+    return asides.of_lists(session.order.settings.frames, frames, session.targets, session.comparisons)
 
 
 def _with_parts(session: Session, frames: Columns, positions: Columns, rejects: Sequence[Row]) -> list[Row]:
