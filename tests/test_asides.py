@@ -5,11 +5,14 @@ from __future__ import annotations
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import pytest
 
 import skies
-from hindlight import asides, blocks, cli, reading
+from hindlight import asides, blocks, cli, host, reading
 from hindlight.positions import read_targets
+from hindlight.settings import Settings, settings_from
+from hindlight.store import RunFolder
 
 NORTH = {"instrument": "north*", "site": [5195675.767, 1891071.326, -3170873.735]}
 
@@ -105,3 +108,47 @@ def test_both_commands_say_it(folder: Path, tmp_path: Path, capsys: pytest.Captu
         assert '[[frames]] block 2 (instrument = "DOMCAM") fits no usable frame' in said
         assert "block 1" not in said
         assert "target list: columns not used: pos_er (did you mean pos_err?)" in said
+
+
+def test_a_run_that_is_continued_says_what_holds_unasked(
+    folder: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """Its own settings, a target that the list has no longer, a file that is gone; on a new run nothing of this."""
+    (tmp_path / "frames").mkdir()
+    for path in (folder / "frames").iterdir():
+        (tmp_path / "frames" / path.name).write_bytes(path.read_bytes())
+    (tmp_path / "t.csv").write_bytes((folder / "t.csv").read_bytes())
+    words = ("settings: none were given", "not in this one", "vanished", "completeness tables")
+    command = arguments(tmp_path, tmp_path / "run")
+    assert cli.run_command([*command, "--settings", str(folder / "s.toml")]) == 0
+    assert not any(word in capsys.readouterr().out for word in words)
+    (tmp_path / "t.csv").write_text("name,ra,dec\nb,150.005,-30.0\n", encoding="utf-8")
+    next((tmp_path / "frames").iterdir()).unlink()
+    assert cli.run_command(command) == 0
+    said = capsys.readouterr().out
+    assert f"those of the run hold ({tmp_path}/run/settings.toml: [controls], [[frames]])" in said
+    assert (
+        "1 target of an earlier list is not in this one (a): still in the tables, and counted in every q-value" in said
+    )
+    assert "set aside: 1 vanished (rejects.ecsv)" in said
+    assert "completeness" not in said
+
+
+def test_defaults_of_a_run_are_not_worth_a_line(tmp_path: Path) -> None:
+    """Where the run has no settings of its own nothing is borrowed; a plugin's setting is."""
+    run = RunFolder(tmp_path)
+    for settings in (Settings(), settings_from({"plugin": {"ghost": {}}}, "t")):
+        assert asides.borrowed_settings(run, settings, host.load(host.spec_from(settings))) == ()
+    settings = settings_from({"plugin": {"ghost": {"min_snr": 9.0}}}, "t")
+    (said,) = asides.borrowed_settings(run, settings, host.load(host.spec_from(settings)))
+    assert said.endswith("settings.toml: [plugin.ghost])")
+
+
+def test_many_targets_that_are_gone_are_counted(tmp_path: Path) -> None:
+    """A few are named."""
+    (tmp_path / "t.csv").write_text("name,ra,dec\nt0,1,1\n", encoding="utf-8")
+    names = np.array([f"t{k}" for k in range(12)] + [""], dtype=object)
+    positions = {"name": names, "kind": np.array(["target"] * 12 + ["control"], dtype=object)}
+    (said,) = asides.earlier_targets(positions, read_targets(tmp_path / "t.csv"))
+    assert said.startswith("11 targets of earlier lists are not in this one (t1, ")
+    assert "t8 and 3 more)" in said

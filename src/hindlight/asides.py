@@ -8,10 +8,16 @@ from __future__ import annotations
 import difflib
 import re
 from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import fields
 from typing import Any
 
 from hindlight.blocks import FrameBlock, block_lines
+from hindlight.errors import UsageError
+from hindlight.host import Plugins
 from hindlight.positions import OPTIONAL_UNITS, Targets
+from hindlight.settings import Settings
+from hindlight.store import RunFolder
+from hindlight.tables import read_ecsv
 
 LISTED = 8  # names in a sentence; of more the number is told
 LIKE = 0.7  # likeness of two names, of difflib, above which one may be meant for the other
@@ -79,3 +85,44 @@ def of_lists(
         *unused_columns("target list", targets),
         *unused_columns("[comparisons] table", comparisons),
     )
+
+
+def borrowed_settings(run: RunFolder, chosen: Settings, plugins: Plugins) -> tuple[str, ...]:
+    """That no settings were given and those of the run hold, where they are not the defaults anyway."""
+    default = Settings()
+    names = [
+        f.name for f in fields(Settings) if f.name != "plugin" and getattr(chosen, f.name) != getattr(default, f.name)
+    ]
+    sections = ["[[frames]]" if name == "frames" else f"[{name}]" for name in names]
+    sections += [f"[plugin.{e.plugin.name}]" for e in plugins.loaded if e.plugin != type(e.plugin)()]
+    if not sections:
+        return ()
+    return (
+        f"settings: none were given, so those of the run hold ({run.file('settings.toml')}: {', '.join(sections)})",
+    )
+
+
+def earlier_targets(positions: Mapping[str, Any], targets: Targets) -> tuple[str, ...]:
+    """That targets of the run are not in the list of now; they stay, and make q-values larger."""
+    known = positions["name"][positions["kind"] == "target"].tolist()
+    gone = [str(name) for name in known if name not in set(targets.names)]
+    if not gone:
+        return ()
+    verb = "targets of earlier lists are" if len(gone) > 1 else "target of an earlier list is"
+    return (
+        f"{len(gone)} {verb} not in this one ({shortened(gone)}): still in the tables, and counted in every q-value; "
+        "another --out makes a run without",
+    )
+
+
+def outdated_completeness(run: RunFolder, state: str) -> tuple[str, ...]:
+    """That the tables of completeness are of the run as it was; `state` is that of now, see `record.state`."""
+    if not run.has("completeness.ecsv"):
+        return ()
+    try:
+        made_of = read_ecsv(run.file("completeness.ecsv")).meta.get("run_state")
+    except UsageError:
+        made_of = None  # damaged: not the tables of this run either
+    if made_of == state:
+        return ()
+    return (f"completeness tables are of the run as it was; `hindlight completeness {run.path}` makes them again",)
