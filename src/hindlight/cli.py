@@ -23,7 +23,7 @@ from rich.table import Table
 from rich.text import Text
 
 from hindlight import __version__
-from hindlight.errors import HindlightError, ReaderGoneError, UsageError
+from hindlight.errors import HindlightError, NothingToDoError, ReaderGoneError, UsageError
 from hindlight.facts import visible
 from hindlight.outlet import PipedConsole, let_go, read_by_someone
 
@@ -33,6 +33,7 @@ TABLE_ENDINGS = (".ecsv", ".fits", ".vot", ".csv", ".parquet")
 BARS, PLAIN_SHADES = "▁▂▃▄▅▆▇█", ".:-=+*#%@"
 LONGEST_LABEL = 30
 PLAIN_WIDTH = 100
+QUIET = "No progress and no closing summary; errors, and tables that the command is there to print, remain."
 INTERRUPTED = 130
 TERMINATED = 143
 
@@ -92,7 +93,7 @@ def _inside_error(error: BaseException) -> int:
 
 def common_options(command: Command) -> Command:
     """-q and -v, which every command has."""
-    command = click.option("-q", "--quiet", is_flag=True, help="Say nothing but errors.")(command)
+    command = click.option("-q", "--quiet", is_flag=True, help=QUIET)(command)
     return click.option("-v", "--verbose", is_flag=True, help="Say more, and show tracebacks.")(command)
 
 
@@ -135,6 +136,11 @@ def inventory(
     with _watching(quiet, verbose) as watcher:
         found = survey.inventory(archive, targets, settings_file, plugins, watcher)
     _print_inventory(found)
+    if found.n_frames == 0:
+        raise NothingToDoError(
+            f"archive {', '.join(archive)}: no usable FITS image found, all that is there was set aside; "
+            "the words above say why"
+        )
 
 
 @cli.command()
@@ -182,6 +188,8 @@ def lightcurve(run: Path, target: str, out: Path | None, quiet: bool, verbose: b
         raise UsageError(f"--out {out}: unknown ending {out.suffix!r}; use one of {', '.join(TABLE_ENDINGS)}")
     with _logging(verbose):
         table = light_curves(RunFolder(run), target)
+        if len(table) == 0 and not quiet:
+            click.echo(visible(f"hindlight: no frame of the run covers {target}: the table has no rows"), err=True)
         if out is None:
             table.write(sys.stdout, format="ascii.ecsv")
             return

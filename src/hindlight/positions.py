@@ -14,6 +14,7 @@ import astropy.table
 import astropy.units as u
 import numpy as np
 from astropy.coordinates import Angle
+from astropy.io.registry import IORegistryError
 from numpy.typing import NDArray
 from scipy.spatial import cKDTree
 
@@ -120,8 +121,16 @@ def _read_table(path: Path) -> astropy.table.Table:
         # A byte-order mark is no part of the first column's name, and a name such as 002 is no number.
         text = path.read_text(encoding="utf-8-sig")
         return astropy.table.Table.read(text.splitlines(), format="ascii.csv", converters={"name": str})
+    except IORegistryError:  # its text is the table of all formats there are
+        known = path.suffix.lower() in (".ecsv", ".fits", ".vot")
+        why = (
+            f"its content is not that of a {path.suffix} file"
+            if known
+            else f"the ending {path.suffix!r} names no format"
+        )
+        raise UsageError(f"targets {path}: {why}; give a table as .ecsv, .csv, .fits or .vot") from None
     except Exception as error:  # noqa: BLE001 - readers raise whatever they like on a broken table
-        detail = " ".join(str(error).split())[:200]
+        detail = " ".join(str(error).split())[:200] if path.stat().st_size else "it is empty"
         raise UsageError(
             f"targets {path}: not readable as a table ({detail}); give .ecsv, .csv, .fits or .vot"
         ) from None
