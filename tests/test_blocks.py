@@ -107,6 +107,11 @@ GOOD: dict[str, Any] = {"unit": "adu"}
         ({"exposure_s": 0.0}, ["expected a positive number"]),
         ({"exposure_s": float("nan")}, ["expected a positive number"]),
         ({"clock_error_s": -1.0}, ["expected a positive number"]),
+        ({"frequency_hz": 1400}, ["block 2 frequency_hz: expected a frequency in Hz, 1e7 to 1e12, got 1400"]),
+        (
+            {"primary_beam_fwhm_deg": 1.0, "primary_beam_at_hz": 1.4},
+            ["primary_beam_at_hz: expected a frequency in Hz, 1e7 to 1e12, got 1.4"],
+        ),
         ({"good_time_fraction": 1.2}, ["expected a fraction above 0, at most 1"]),
         ({"date_means": "beginning"}, ["one of start, middle, end"]),
         ({"time_scale": "gmt"}, ["one of utc"]),

@@ -53,6 +53,34 @@ def test_empty_folder_and_no_fits(archive, tmp_path, capsys):
     assert not (tmp_path / "r").exists()
 
 
+def test_inventory_without_an_image(tmp_path, capsys):
+    """No FITS file at all, and files that are all set aside: status 3; what was set aside is printed all the same."""
+    ends(capsys, ["inventory", tmp_path, "-q"], 3, "no FITS file found")
+    (tmp_path / "text.fits").write_text("nothing", encoding="utf-8")
+    assert cli.run_command(["inventory", str(tmp_path), "-q"]) == 3
+    said = capsys.readouterr()
+    assert "not_fits" in said.out
+    assert said.err.startswith("hindlight: archive ")
+    assert "no usable FITS image found" in said.err
+
+
+@pytest.mark.parametrize(
+    ("name", "text", "words"),
+    [
+        ("t.dat", TEXT, "t.dat: the ending '.dat' names no format; give a table as .ecsv"),
+        ("t.vot", TEXT, "t.vot: its content is not that of a .vot file; give"),
+        ("t.csv", "", "t.csv: not readable as a table (it is empty)"),
+    ],
+)
+def test_target_lists_in_no_known_format(archive, tmp_path, capsys, name, text, words):
+    """The line is the program's own, without a library's list of formats."""
+    (tmp_path / name).write_text(text, encoding="utf-8")
+    assert cli.run_command(["inventory", str(archive / "frames"), "--targets", str(tmp_path / name)]) == 2
+    said = capsys.readouterr().err
+    assert words in said
+    assert len(said) < 160 + len(str(tmp_path))
+
+
 @pytest.mark.parametrize(
     ("text", "words"),
     [("name,ra\na,1\n", "no column 'dec'"), ("name,ra,dec\na,1,2\na,3,4\n", "'a' stands in row 1")],
@@ -135,6 +163,30 @@ def test_lightcurve_in_every_format(archive, tmp_path):
         assert len(table) == 10
         assert {"flux", "raw_flux", "bjd_tdb", "detected"} <= set(table.colnames)
     assert cli.run_command(["lightcurve", str(archive / "run"), "a", "--out", str(tmp_path / "l.parquet"), "-q"]) == 0
+
+
+def test_parquet_is_read_as_the_readme_says(archive, tmp_path):
+    """Without pandas, by pyarrow."""
+    import pyarrow.parquet as pq
+    from astropy.table import Table
+
+    path = tmp_path / "lc.parquet"
+    assert cli.run_command(["lightcurve", str(archive / "run"), "a", "--out", str(path), "-q"]) == 0
+    curve = Table(pq.read_table(path).to_pydict())
+    assert len(curve) == 10
+    assert curve["flux"].dtype == float
+
+
+def test_the_light_curve_of_a_target_that_no_frame_covers(archive, tmp_path, capsys):
+    """Its table has no rows, which is said; also where the target came to a run that this process has read before."""
+    shutil.copytree(archive / "run", tmp_path / "run")
+    assert cli.run_command(["lightcurve", str(tmp_path / "run"), "a"]) == 0
+    assert "no rows" not in capsys.readouterr().err
+    (tmp_path / "t.csv").write_text(TEXT + "far,10,10\n", encoding="utf-8")
+    command = ["mine", str(archive / "frames"), "--targets", str(tmp_path / "t.csv"), "--out", str(tmp_path / "run")]
+    assert cli.run_command([*command, "-q"]) == 0
+    assert cli.run_command(["lightcurve", str(tmp_path / "run"), "far"]) == 0
+    assert "no frame of the run covers far: the table has no rows" in capsys.readouterr().err
 
 
 def test_settings_printed_are_read_back(tmp_path, capsys):

@@ -64,6 +64,15 @@ def test_a_file_plugin_is_loaded_with_its_settings():
         (statistic("", columns="('a',)"), "must be Column"),
         (statistic("", columns="()"), "at least one column"),
         (statistic("", columns='(Column("a b", "doc"),)'), "is not a plain word"),
+        (
+            statistic("", columns='(Column("a", "doc", unusual="hi"),)'),
+            "mine.py fails: .*'a': unusual must be one of 'high', 'low', 'both', None, got 'hi'",
+        ),
+        (statistic("", columns='(Column("a", "doc", unusual="Low"),)'), "got 'Low'"),
+        (
+            statistic("", columns='(Column("a", "doc", unusual="low", about="variatoin"),)'),
+            "mine.py fails: .*'a': about must be one of 'variation', 'presence', got 'variatoin'",
+        ),
         (statistic("    name = 'chi_square'"), "'chi_square' stands twice"),
         (statistic("    name = 'Big Name'"), "snake case"),
         (statistic("    name = 'quiet'", columns='(Column("BEFORE", "doc"),)'), "'quiet_before'.*is taken"),

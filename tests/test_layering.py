@@ -20,8 +20,8 @@ ORDER = [
     "photometry", "planted", "duplicates", "likeness", "robust", "losses", "response", "ensemble", "store", "judge",
     "calibrate", "ranking", "lifted", "search", "timing", "injection", "completeness", "brighter", "candidates", "plan",
     "more_controls", "comparisons", "order", "tasks", "examining", "trials", "conclude", "bright", "outcome", "crew",
-    "record", "verdicts", "measuring", "second_pass", "runner", "recovery", "survey", "export", "demo", "testing",
-    "cli", "__main__",
+    "record", "asides", "verdicts", "measuring", "second_pass", "runner", "recovery", "survey", "export", "demo",
+    "testing", "outlet", "cli", "__main__",
 ]  # fmt: skip
 PLUGINS_MAY_IMPORT = {"hindlight", "numpy", "scipy", "astropy", "photutils", "nifty_ls"}
 

@@ -1,5 +1,6 @@
 """`hindlight completeness` and `plugins --power` on a small archive: tables, their bytes, what is said, and mistakes."""
 
+import shutil
 from pathlib import Path
 
 import numpy as np
@@ -134,6 +135,28 @@ def test_same_bytes_with_two_workers(archive, tmp_path):
         assert cli.run_command([*command, "-q"]) == 0
         made.append([(archive / "run" / name).read_bytes() for name in [*names, "completeness.txt"]])
     assert made[0] == made[1]
+
+
+def test_tables_of_the_run_as_it_was_are_said_to_be_so(archive, tmp_path, capsys):
+    """Not while the run is what they were made of; after a target came, and until they are made again, always."""
+    shutil.copytree(archive / "run", tmp_path / "run")
+    targets = tmp_path / "t.csv"
+    targets.write_bytes((archive / "targets.csv").read_bytes())
+    mine = ["mine", archive / "frames", "--targets", targets, "--out", tmp_path / "run", "--workers", "1"]
+    again = ["completeness", tmp_path / "run", "--settings", archive / "grid.toml", "--workers", "1", "-q"]
+
+    def said(command):
+        assert cli.run_command([str(a) for a in command]) == 0
+        return "completeness tables are of the run as it was" in capsys.readouterr().out
+
+    said(again)
+    assert not said(mine)
+    with targets.open("a", encoding="utf-8") as stream:
+        stream.write("later,150.0,-30.01\n")
+    assert said(mine)
+    assert said(mine)
+    said(again)
+    assert not said(mine)
 
 
 def test_sources_added_to_pixels(archive):

@@ -123,9 +123,32 @@ def test_check_from_the_command_line(tmp_path, capsys):
     path = tmp_path / "spread.py"
     path.write_text(good, encoding="utf-8")
     assert cli.run_command(["plugins", "--check", str(path)]) == 0
-    assert "passes" in capsys.readouterr().out
+    said = capsys.readouterr().out
+    assert "passes" in said
+    assert "note:" not in said
     path.write_text(good.replace(", flux_power=1", ""), encoding="utf-8")
     assert cli.run_command(["plugins", "--check", str(path)]) == 2
     said = capsys.readouterr()
     assert "scales with the flux" in said.out
     assert "1 checks failed" in said.err
+
+
+@pytest.mark.parametrize(
+    ("column", "words"),
+    [
+        ("Column('sd', 'scatter', flux_power=1)", "no column is ranked, so none enters p_value"),
+        (
+            "Column('sd', 'scatter', unusual='high', about='presence', flux_power=1)",
+            "ask about presence, so none enters",
+        ),
+    ],
+)
+def test_a_statistic_that_never_enters_the_p_value_is_said(tmp_path, capsys, column, words):
+    """It passes, since a column may be there to inform, but its author is told."""
+    text = "from dataclasses import dataclass\nimport numpy as np\nfrom hindlight import *\n\n@dataclass(frozen=True)\n"
+    text += f"class Spread(Statistic):\n    columns = ({column},)\n"
+    text += "    def compute(self, curve):\n        return {'sd': float(np.std(curve.flux))}\n"
+    text += "@hookimpl\ndef register_statistics():\n    return [Spread]\n"
+    (tmp_path / "spread.py").write_text(text, encoding="utf-8")
+    assert cli.run_command(["plugins", "--check", str(tmp_path / "spread.py")]) == 0
+    assert words in capsys.readouterr().out

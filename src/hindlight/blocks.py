@@ -24,6 +24,8 @@ EARTH_RADII_M = (6.2e6, 6.5e6)
 WGS84_RADIUS_M, WGS84_FLATTENING = 6378137.0, 1.0 / 298.257223563
 SITE_FORMS = "[x, y, z] in metres from the Earth's centre, or { lat = , lon = , height = } in degrees and metres"
 TIME_SCALES = ("utc", "ut1", "tai", "tt", "tdb", "tcg", "tcb")
+FREQUENCIES_HZ = (1e7, 1e12)  # those that headers are believed to state; another number is in another unit
+FREQUENCY = "a frequency in Hz, 1e7 to 1e12"
 POSITIVE, FRACTION = "a positive number", "a fraction above 0, at most 1"
 STOKES = ("I", "Q", "U", "V", "RR", "LL", "RL", "LR", "XX", "YY", "XY", "YX")
 
@@ -185,7 +187,7 @@ FACTS = {
     "unit": Key("of the pixels", '"Jy/beam"', _text),
     "beam_arcsec": Key("FWHM of beam or seeing, or [major, minor, angle]", "45.0", _beam),
     "band": Key("filter or band", '"R"', _text),
-    "frequency_hz": Key("frequency, Hz", "1.4e9", _number(POSITIVE, 0.0)),
+    "frequency_hz": Key("frequency, Hz", "1.4e9", _number(FREQUENCY, *FREQUENCIES_HZ, above=False)),
     "stokes": Key("Stokes parameter or correlation", '"I"', _one_of(*STOKES, fold=str.upper)),
     "saturation": Key("saturation level in the pixels' unit", "60000.0", _number("a number")),
     "electrons_per_unit": Key("electrons for one unit of the pixels", "2.0", _number(POSITIVE, 0.0)),
@@ -200,7 +202,7 @@ FACTS = {
     "primary_beam_at_hz": Key(
         "frequency of that width, which goes with 1 / frequency; else it is that of every frame",
         "1.4e9",
-        _number(POSITIVE, 0.0),
+        _number(FREQUENCY, *FREQUENCIES_HZ, above=False),
     ),
 }
 KEYS = {**MATCH, **FACTS}

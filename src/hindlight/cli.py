@@ -23,8 +23,9 @@ from rich.table import Table
 from rich.text import Text
 
 from hindlight import __version__
-from hindlight.errors import HindlightError, UsageError
+from hindlight.errors import HindlightError, NothingToDoError, ReaderGoneError, UsageError
 from hindlight.facts import visible
+from hindlight.outlet import PipedConsole, let_go, read_by_someone
 
 BEST_ROWS = 10
 LONGEST_CELL = 200
@@ -32,6 +33,7 @@ TABLE_ENDINGS = (".ecsv", ".fits", ".vot", ".csv", ".parquet")
 BARS, PLAIN_SHADES = "▁▂▃▄▅▆▇█", ".:-=+*#%@"
 LONGEST_LABEL = 30
 PLAIN_WIDTH = 100
+QUIET = "No progress and no closing summary; errors, and tables that the command is there to print, remain."
 INTERRUPTED = 130
 TERMINATED = 143
 
@@ -43,7 +45,9 @@ def main() -> None:
     signal.signal(signal.SIGTERM, _terminate)
     logging.captureWarnings(True)  # libraries' warnings go to the log, not between the user's lines
     logging.getLogger("py.warnings").addHandler(logging.NullHandler())
-    sys.exit(run_command(sys.argv[1:]))
+    status = run_command(sys.argv[1:])
+    let_go()
+    sys.exit(status)
 
 
 def run_command(arguments: list[str]) -> int:
@@ -56,6 +60,8 @@ def run_command(arguments: list[str]) -> int:
         return _say("interrupted; the same command continues", INTERRUPTED)
     except click.ClickException as error:
         return _say(f"{error.format_message()}; see `hindlight --help`", 2)
+    except ReaderGoneError as gone:
+        return gone.exit_status
     except HindlightError as error:
         return _say(str(error), error.exit_status)
     except OSError as error:
@@ -87,11 +93,25 @@ def _inside_error(error: BaseException) -> int:
 
 def common_options(command: Command) -> Command:
     """-q and -v, which every command has."""
-    command = click.option("-q", "--quiet", is_flag=True, help="Say nothing but errors.")(command)
+    command = click.option("-q", "--quiet", is_flag=True, help=QUIET)(command)
     return click.option("-v", "--verbose", is_flag=True, help="Say more, and show tracebacks.")(command)
 
 
-@click.group(context_settings={"help_option_names": ["-h", "--help"]})
+class _Group(click.Group):
+    """The commands, none of which minds when its output is read no further."""
+
+    def make_context(self, *args: Any, **kwargs: Any) -> click.Context:
+        """Reads the command line, and prints help."""
+        with read_by_someone():
+            return super().make_context(*args, **kwargs)
+
+    def invoke(self, ctx: click.Context) -> Any:
+        """Runs a command."""
+        with read_by_someone():
+            return super().invoke(ctx)
+
+
+@click.group(cls=_Group, context_settings={"help_option_names": ["-h", "--help"]})
 @click.version_option(__version__, prog_name="hindlight")
 def cli() -> None:
     """Was this position ever bright before?
@@ -116,6 +136,11 @@ def inventory(
     with _watching(quiet, verbose) as watcher:
         found = survey.inventory(archive, targets, settings_file, plugins, watcher)
     _print_inventory(found)
+    if found.n_frames == 0:
+        raise NothingToDoError(
+            f"archive {', '.join(archive)}: no usable FITS image found, all that is there was set aside; "
+            "the words above say why"
+        )
 
 
 @cli.command()
@@ -163,6 +188,8 @@ def lightcurve(run: Path, target: str, out: Path | None, quiet: bool, verbose: b
         raise UsageError(f"--out {out}: unknown ending {out.suffix!r}; use one of {', '.join(TABLE_ENDINGS)}")
     with _logging(verbose):
         table = light_curves(RunFolder(run), target)
+        if len(table) == 0 and not quiet:
+            click.echo(visible(f"hindlight: no frame of the run covers {target}: the table has no rows"), err=True)
         if out is None:
             table.write(sys.stdout, format="ascii.ecsv")
             return
@@ -269,7 +296,8 @@ class _Lines:
 
     def stage(self, name: str, total: int) -> None:
         """Say the stage."""
-        click.echo(f"hindlight: {name}" + (f", {total} steps" if total else ""), err=True)
+        with read_by_someone():
+            click.echo(f"hindlight: {name}" + (f", {total} steps" if total else ""), err=True)
 
     def step(self, n: int = 1) -> None:
         """Nothing to say between stages."""
@@ -310,7 +338,7 @@ def _watching(quiet: bool, verbose: bool) -> Iterator[Any]:
 
 def _console() -> Console:
     """Standard output; wide enough for its tables where it is no terminal."""
-    return Console(width=None if sys.stdout.isatty() else 160, highlight=False, soft_wrap=not sys.stdout.isatty())
+    return PipedConsole(width=None if sys.stdout.isatty() else 160, highlight=False, soft_wrap=not sys.stdout.isatty())
 
 
 def _simple_table(title: str, *names: str) -> Table:
@@ -384,6 +412,8 @@ def _print_inventory(found: Any) -> None:
     console.print(f"possible duplicates: {found.possible_duplicates} pairs, compared when mined")
     if found.deep_images:
         console.print(f"deep images that hold other frames: {found.deep_images}, kept apart from those when mined")
+    for line in found.remarks:
+        console.print(visible(line), markup=False)
     text = settings_to_fill_in(found.missing)
     if text:
         click.echo(
@@ -493,6 +523,8 @@ def _check_plugin(path: Path) -> None:
             click.echo(f"  {problem}")
         if not report.problems:
             click.echo(f"  passes {report.n_checks} checks")
+        for remark in report.remarks:
+            click.echo(f"  note: {remark}")
     if problems:
         raise UsageError(
             f"plugin file {path}: {problems} checks failed; the lines above say which and how to mend them"

@@ -35,6 +35,12 @@ class StoppedError(HindlightError):
     exit_status = 4
 
 
+class ReaderGoneError(HindlightError):
+    """Whoever read the output has gone (`| head`); the command ends without a word."""
+
+    exit_status = 141  # 128 + 13: what a shell says of a program that SIGPIPE has ended
+
+
 def nearest(name: str, valid: Iterable[str]) -> str:
     """The end of a message about an unknown name: the nearest valid one, or all there are."""
     names = list(valid)

@@ -29,7 +29,7 @@ def light_curves(run: RunFolder, target: str) -> astropy.table.Table:
     Raises `UsageError` for a folder that holds no run, or a name that is no target of it.
     """
     run.require()
-    tables = book(str(run.path.resolve()), "")
+    tables = book(str(run.path.resolve()), run.version())
     row = _judged_row(run, tables.positions, _row_of(tables.positions, target, run.path), target)
     plan = [
         piece

@@ -20,6 +20,9 @@ from hindlight.schema import TableColumn
 
 Values = Mapping[str, Any]
 
+UNUSUAL = ("high", "low", "both", None)
+ABOUT = ("variation", "presence")
+
 
 @dataclass(frozen=True)
 class Column(TableColumn):
@@ -35,12 +38,20 @@ class Column(TableColumn):
         The power of flux the column scales with: 1 for a flux, 2 for a variance, 0 for a pure number.
     is_time
         Whether the column is a time on the light curve's axis: it moves with the time origin.
+
+    Raises `ValueError` for any other word: one that is misspelt would be taken for something else in silence.
     """
 
     unusual: Literal["high", "low", "both"] | None = None
     about: Literal["variation", "presence"] = "variation"
     flux_power: float = 0.0
     is_time: bool = False
+
+    def __post_init__(self) -> None:
+        for key, known in (("unusual", UNUSUAL), ("about", ABOUT)):
+            if getattr(self, key) not in known:
+                words = ", ".join(map(repr, known))
+                raise ValueError(f"Column {self.name!r}: {key} must be one of {words}, got {getattr(self, key)!r}")
 
 
 @dataclass(frozen=True)

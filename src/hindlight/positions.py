@@ -14,6 +14,7 @@ import astropy.table
 import astropy.units as u
 import numpy as np
 from astropy.coordinates import Angle
+from astropy.io.registry import IORegistryError
 from numpy.typing import NDArray
 from scipy.spatial import cKDTree
 
@@ -44,12 +45,16 @@ DEFAULTS = {"pm_ra_cosdec": 0.0, "pm_dec": 0.0, "ref_epoch": 2000.0, "pos_err": 
 
 @dataclass(frozen=True, eq=False)
 class Targets:
-    """The target list: names, ICRS degrees of shape (n,), and the optional columns in their contract units."""
+    """The target list: names, ICRS degrees of shape (n,), and the optional columns in their contract units.
+
+    `unused` are the names of other columns of the table.
+    """
 
     names: tuple[str, ...]
     ra: FloatArray
     dec: FloatArray
     optional: Mapping[str, FloatArray]
+    unused: tuple[str, ...] = ()
 
     def __len__(self) -> int:
         return len(self.names)
@@ -103,7 +108,8 @@ def read_targets(path: Path, fluxes: bool = False) -> Targets:
         _refuse_out_of_range(name, values, path)
     if fluxes and "flux" in table.colnames:
         optional["flux"] = _quantity(table["flux"], "flux", table["flux"].unit or u.one, path)
-    return Targets(names, ra % 360.0, dec, optional)
+    unused = tuple(name for name in table.colnames if name not in ("name", "ra", "dec", *optional))
+    return Targets(names, ra % 360.0, dec, optional, unused)
 
 
 def _read_table(path: Path) -> astropy.table.Table:
@@ -115,8 +121,16 @@ def _read_table(path: Path) -> astropy.table.Table:
         # A byte-order mark is no part of the first column's name, and a name such as 002 is no number.
         text = path.read_text(encoding="utf-8-sig")
         return astropy.table.Table.read(text.splitlines(), format="ascii.csv", converters={"name": str})
+    except IORegistryError:  # its text is the table of all formats there are
+        known = path.suffix.lower() in (".ecsv", ".fits", ".vot")
+        why = (
+            f"its content is not that of a {path.suffix} file"
+            if known
+            else f"the ending {path.suffix!r} names no format"
+        )
+        raise UsageError(f"targets {path}: {why}; give a table as .ecsv, .csv, .fits or .vot") from None
     except Exception as error:  # noqa: BLE001 - readers raise whatever they like on a broken table
-        detail = " ".join(str(error).split())[:200]
+        detail = " ".join(str(error).split())[:200] if path.stat().st_size else "it is empty"
         raise UsageError(
             f"targets {path}: not readable as a table ({detail}); give .ecsv, .csv, .fits or .vot"
         ) from None

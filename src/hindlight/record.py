@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import hashlib
+import json
 import platform
 import tomllib
 from collections.abc import Mapping
@@ -14,7 +16,7 @@ import tomli_w
 from hindlight import host, settings
 from hindlight.errors import UsageError
 from hindlight.files import path_text
-from hindlight.settings import Settings
+from hindlight.settings import Settings, as_plain
 from hindlight.store import RunFolder
 from hindlight.tables import damaged
 
@@ -103,6 +105,19 @@ def compare(run: RunFolder, request: Request, chosen: Settings, plugins: host.Pl
             f"run {run.path}: its dialects or estimators differ from those now; use the same, or give another --out"
         )
     return recorded
+
+
+def state(run: RunFolder, chosen: Settings, plugins: host.Plugins) -> str:
+    """A digest of what the p-values of a run follow from: frames, positions, flux scale, rules and plugins.
+
+    Tables made of a run carry it, so that they can be told from those of the run as it is.
+    """
+    digest = hashlib.sha256()
+    for name in ("frames.parquet", "positions.parquet", "frame_solution.parquet"):
+        digest.update(hashlib.sha256(run.file(name).read_bytes()).digest())
+    rules = [as_plain(chosen.detection), as_plain(chosen.ranking), plugins.fingerprint()]
+    digest.update(json.dumps(rules, sort_keys=True).encode())
+    return f"sha256:{digest.hexdigest()[:32]}"
 
 
 def _measuring_plugins(plugins: host.Plugins) -> str:

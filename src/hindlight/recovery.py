@@ -157,7 +157,7 @@ def recover(asked: Asked, watcher: Watcher) -> Report:
         wanted = _wanted(study, nulls)
         outcomes = _outcomes(study, wanted, nulls, units, with_plugins=False)
         proofs = _proofs(study)
-        meta = _meta(study, units)
+        meta = {**_meta(study, units), "run_state": record.state(run, order.settings, plugins)}
         table = _table(study, wanted, outcomes, meta)
         targets, limits = _target_tables(study, run, table, ephemerides, meta)
     remarks = (*_remarks(study, nulls, outcomes[ALL].found, targets), *_proof_remarks(proofs), UPPER_BOUND)

@@ -18,6 +18,7 @@ import numpy as np
 
 from hindlight import (
     archive,
+    asides,
     comparisons,
     duplicates,
     ensemble,
@@ -102,7 +103,9 @@ def _mine_locked(
         session = replace(session, order=replace(order, version=run.version()))
         positions = _planned(session, frames, size)
         session = replace(session, order=replace(order, version=run.version()))
-        return _measured_and_judged(session, frames, positions, rejects, size)
+        given = request.settings is not None or not recorded
+        told = () if given else asides.borrowed_settings(run, settings, plugins)
+        return _measured_and_judged(session, frames, positions, rejects, size, told)
 
 
 def _most_positions(frames: Columns, targets: Targets, settings: Settings) -> int:
@@ -146,9 +149,12 @@ def _same_exposure(session: Session, frames: Columns, pairs: duplicates.Pairs) -
 
 
 def _measured_and_judged(
-    session: Session, frames: Columns, positions: Columns, rejects: list[Row], size_deg: float
+    session: Session, frames: Columns, positions: Columns, rejects: list[Row], size_deg: float, told: tuple[str, ...]
 ) -> Outcome:
-    """All after planning: what is measured is judged and ranked, with more controls where they are wanted."""
+    """All after planning: what is measured is judged and ranked, with more controls where they are wanted.
+
+    `told` is what the last lines say anyway.
+    """
     measuring.measure(session, store.pieces(frames, positions))
     _with_parts(session, frames, positions, rejects)
     said = _solved(session, frames, positions)
@@ -156,7 +162,18 @@ def _measured_and_judged(
     first = verdicts.ranked_fields(session, frames, positions)
     last = second_pass.carried_out(session, frames, positions, first, size_deg)
     rejects = _with_parts(last.session, frames, last.positions, rejects)
-    return verdicts.tabled(last.session, frames, last.positions, rejects, last.fields, (*said, *last.said))
+    said = (*said, *last.said, *told, *_of_the_request(last.session, frames, last.positions))
+    return verdicts.tabled(last.session, frames, last.positions, rejects, last.fields, said)
+
+
+def _of_the_request(session: Session, frames: Columns, positions: Columns) -> tuple[str, ...]:
+    """What the last lines say of settings and lists, and of tables that were made of the run before."""
+    run, settings = session.run, session.order.settings
+    return (
+        *asides.of_lists(settings.frames, frames, session.targets, session.comparisons),
+        *asides.earlier_targets(positions, session.targets),
+        *asides.outdated_completeness(run, record.state(run, settings, session.plugins)),
+    )
 
 
 def _with_parts(session: Session, frames: Columns, positions: Columns, rejects: Sequence[Row]) -> list[Row]:

@@ -52,11 +52,15 @@ CHANNEL = Channel("test|1.4GHz|I|30as|Jy/beam", "test", "", "I", 1.4e9, 30.0, "J
 
 @dataclass(frozen=True)
 class Report:
-    """What was found: one line per problem, how many checks were made, and how long a thousand calls took."""
+    """What was found: one line per problem, how many checks were made, and how long a thousand calls took.
+
+    `remarks` are sentences about what is allowed and perhaps not meant.
+    """
 
     problems: tuple[str, ...]
     n_checks: int
     timing: str
+    remarks: tuple[str, ...] = ()
 
 
 def check_plugin(plugin: Plugin) -> None:
@@ -79,7 +83,21 @@ def examine(plugin: Plugin) -> Report:
             problem = f"raised {type(error).__name__}: {error}"
         if problem:
             problems.append(f"{name}: {problem}")
-    return Report(tuple(problems), len(checks), _timing(plugin))
+    return Report(tuple(problems), len(checks), _timing(plugin), _remarks(plugin))
+
+
+def _remarks(plugin: Plugin) -> tuple[str, ...]:
+    """What to say of a statistic that takes no part in the ranking."""
+    if not isinstance(plugin, Statistic) or any(c.unusual and c.about == "variation" for c in plugin.columns):
+        return ()
+    if any(c.unusual for c in plugin.columns):
+        return (
+            "its ranked columns ask about presence, so none enters p_value: "
+            "leave about out where a column asks whether the flux changes",
+        )
+    return (
+        'no column is ranked, so none enters p_value: set unusual="high", "low" or "both" on one that is to be calibrated',
+    )
 
 
 def simulated_curve(n: int = SAMPLES, seed: int = 0, channel: Channel = CHANNEL, brighter: float = 0.0) -> LightCurve:
