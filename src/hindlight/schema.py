@@ -69,7 +69,11 @@ REASONS = {
 
 ASSUMPTIONS = {
     "geocentre": "no site in the header or settings: the Earth's centre was used, times are uncertain by 21 ms",
-    "no_clock": "no time of day: fluxes are measured, timing is refused",
+    "no_clock": "no time of day that can be trusted: fluxes are measured, timing is refused",
+    "axis_zero_assumed": "the time axis has no reference (MJDREF, DATEREF): DATE-OBS is taken for its zero and each coordinate "
+    "for the middle of its plane, where that is wrong clock_offset_s in a [[frames]] block shifts it",
+    "axis_time_unknown": "the planes of the time axis cannot be placed: CRVAL, CDELT, the unit or the reference (MJDREF, "
+    "DATEREF) is missing, and no start with a time of day (DATE-OBS) can stand in for its zero: MJDREF in a copy would",
     "implausible_date": "a date before 1850 or after 2100, or an end before its start: that date was not used",
     "implausible_exposure": "an exposure above 100 days, or negative: it was taken as unknown",
     "repeated_keyword": "a keyword stands more than once with different values: the first one was taken",
