@@ -142,6 +142,18 @@ def test_possible_pairs_by_plane_and_frequency():
     assert (0, 4) in listed(duplicates.candidates(frames))
 
 
+def test_planes_of_one_image_are_no_copies():
+    """A cube over time without a clock has planes of one date; only another file may hold the same exposures."""
+    frames = table(6) | {"middle_tdb_s": np.full(6, np.nan), "middle_mjd_tdb": np.full(6, 50000.5)}
+    frames["path"][:] = "cube"
+    frames["plane"][:] = np.arange(6)
+    assert listed(duplicates.candidates(frames)) == []
+    frames["path"][3:] = "copy of the cube"
+    frames["plane"][3:] = np.arange(3)
+    frames["plane"][:3] = np.arange(3)
+    assert listed(duplicates.candidates(frames)) == [(k, k + 3) for k in range(3)]
+
+
 def test_the_sweep_is_fast_and_agrees_with_every_pair():
     """The pairs of 300 frames are those of the plain double loop; 20,000 frames take a fraction of a second."""
     rng = np.random.default_rng(4)
