@@ -13,7 +13,7 @@ from dataclasses import replace
 from functools import lru_cache
 from typing import NamedTuple
 
-from hindlight.dates import DAY_S, between, read_clock, read_date
+from hindlight.dates import DAY_S, WrittenDate, between, read_clock, read_date
 from hindlight.facts import NAN, Cards, Moment, PlaneAxes
 
 SCALES = {
@@ -197,6 +197,7 @@ def separate_clock(cards: Cards) -> Observed:
     written = read_date(cards.get(key))
     if written.moment is None:
         return julian_instant(cards)
+    century = _century_words(cards, written)
     words: list[str] = []
     moment, comments, scale = written.moment, [comment_of(cards, key)], ""
     separate = not moment.has_clock
@@ -205,12 +206,14 @@ def separate_clock(cards: Cards) -> Observed:
         if clock is None:
             other = julian_instant(cards)
             near = other.moment is not None and abs(other.moment.mjd - moment.mjd) <= 1
-            return other if near else Observed(moment, *_said_which(comments, written.two_digits))
+            if near:
+                return other
+            which, _, assumed = _said_which(comments, written.two_digits)
+            return Observed(moment, which, words=(*century, *assumed))
         moment = clock if clock.mjd else replace(clock, mjd=moment.mjd)
         comments.insert(0, comment_of(cards, clock_key) + (" start" if clock_key in CLOCKS_OF_START else ""))
         scale = "UTC" if "UT" in clock_key else ""
-    if written.day_first:
-        words = [*words, "date_form"]
+    words = [*words, *century, *(["date_form"] if written.day_first else [])]
     if _LOCAL.search(comments[0]):
         return Observed(replace(moment, seconds=0.0, has_clock=False), words=(*words, "local_unsettled"))
     moment, more = _checked_day(cards, moment, separate)
@@ -219,6 +222,15 @@ def separate_clock(cards: Cards) -> Observed:
     said = scale or next((found.group(1) for text in comments if (found := _SCALE.search(text))), "")
     date = written.moment if separate else None
     return Observed(moment, which, cards.text("TIMESYS") or said, (*words, *assumed), date)
+
+
+def _century_words(cards: Cards, written: WrittenDate) -> tuple[str, ...]:
+    """A word where the year has two digits that may be of this century, and no MJD or JD says which."""
+    if written.moment is None or not written.century_assumed:
+        return ()
+    _, other = _julian(cards)
+    said = other is not None and abs(other.mjd - written.moment.mjd) <= 1
+    return () if said else ("century_assumed",)
 
 
 def _said_which(comments: Sequence[str], doubtful: bool) -> tuple[str, str, tuple[str, ...]]:
