@@ -409,7 +409,7 @@ def test_a_deep_image_counts_for_the_quiet_level_alone(tmp_path, flare):
     assert abs(blank["deep_flux"] - flare / 10) < 5 * blank["deep_flux_err"]
     assert abs(blank["quiet_level"]) < 5 * blank["quiet_level_err"]
     last = (tmp_path / "run" / "summary.txt").read_text(encoding="utf-8")
-    assert "related: 1 deep images hold 10 of the other frames" in last
+    assert "related: 1 deep image holds 10 of the other frames" in last
     assert (tmp_path / "run" / "rejects.ecsv").read_text(encoding="utf-8").count("duplicate_of") == 0
     curve = tmp_path / "flare.ecsv"
     assert cli.run_command(["lightcurve", "-q", str(tmp_path / "run"), "flare", "--out", str(curve)]) == 0
