@@ -13,7 +13,8 @@ from astropy.table import Table
 
 import skies
 from hindlight import cli
-from hindlight.summary import Coverage, Missing, settings_to_fill_in, timeline
+from hindlight.schema import ASSUMPTIONS
+from hindlight.summary import Coverage, Missing, _counts, settings_to_fill_in, timeline
 from made import write
 
 TITLE = "# what headers do not say"
@@ -132,6 +133,15 @@ def test_each_word_names_a_file(archive: Path, capsys: pytest.CaptureFixture[str
     for word, path in (("geocentre", "old/a0.fits"), ("scale_assumed", "new/b1.fits"), ("no_clock", "new/c.fits")):
         assert re.search(rf" {word} [^()]*(\([^()]*\)[^()]*)*\(as in {path}\)", text)
     assert re.search(r" empty_file [^()]*\(as in old/empty.fits\)", text)
+
+
+def test_long_paths_keep_their_end() -> None:
+    """What is cut off is the beginning, so that sentence, path and closing bracket fit a cell of the page."""
+    words = "; ".join(f"{word}: {sentence}" for word, sentence in ASSUMPTIONS.items())
+    for entry in _counts([("deep/" * 40 + "name.fits", words)], ASSUMPTIONS):
+        assert entry.meaning.endswith("deep/deep/name.fits)")
+        assert "(as in ...ep/deep/" in entry.meaning
+        assert len(entry.meaning) <= cli.LONGEST_CELL
 
 
 def test_years_of_two_digits_are_asked_about(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:

@@ -39,10 +39,9 @@ SUPPLIED_BY = {
     "primary_beam_apparent": "primary_beam_fwhm_deg",
     "century_assumed": "clock_offset_s",
 }  # a word of an assumption -> the key of a block that ends it
+LONGEST_PATH = 50
 CENTURY = "clock_offset_s"
-CENTURY_S = (
-    3155760000.0  # 36525 days: from a date in 1900 to 1929 to the same one a century later, but before March 1900
-)
+CENTURY_S = 3155760000.0  # 36525 days: from a date of 1900 to 1929 to the same one a century later, from March 1900 on
 CENTURY_BLOCK = {"to": "1930-01-01"}  # an offset is no fact that a header lacks: only a date tells these frames
 UNIT_EXAMPLES = {"optical": '"adu"', "radio": '"Jy/beam"', "": '"adu" or "Jy/beam"'}
 SITE_EXAMPLE = '"north hill", or { lat = -30.1, lon = 20.4, height = 1200.0 }'
@@ -297,7 +296,14 @@ def _counts(found: Iterable[tuple[str, str]], meanings: Mapping[str, str]) -> tu
             counted[word] += count
             first[word] = min(first.get(word, path), path)
     ordered = sorted(counted.items(), key=lambda item: (-item[1], item[0]))
-    return tuple(Count(word, n, f"{meanings.get(word, '')} (as in {first[word]})".strip()) for word, n in ordered)
+    return tuple(
+        Count(word, n, f"{meanings.get(word, '')} (as in {_end_of(first[word])})".strip()) for word, n in ordered
+    )
+
+
+def _end_of(path: str) -> str:
+    """A path, without its beginning where it is too long for a table."""
+    return path if len(path) <= LONGEST_PATH else "..." + path[3 - LONGEST_PATH :]
 
 
 def _finite(values: FloatArray) -> FloatArray:
