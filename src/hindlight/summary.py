@@ -289,9 +289,13 @@ def _targets(
 
 def _counts(found: Iterable[tuple[str, str]], meanings: Mapping[str, str]) -> tuple[Count, ...]:
     """Words counted, given paths with their words, most frequent first; each with the first path that has it."""
+    texts: dict[str, tuple[int, str]] = {}  # few, though frames are many
+    for path, text in found:
+        count, least = texts.get(text, (0, path))
+        texts[text] = count + 1, min(least, path)
     counted: Counter[str] = Counter()
     first: dict[str, str] = {}
-    for (path, text), count in Counter(found).items():
+    for text, (count, path) in texts.items():
         for word in dict.fromkeys(words_of(text)):
             counted[word] += count
             first[word] = min(first.get(word, path), path)
