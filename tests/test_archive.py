@@ -182,6 +182,14 @@ def test_time_cube_without_reference_has_no_clock(tmp_path: Path) -> None:
     assert all("no_clock" in text for text in found.frames["assumptions"])
 
 
+def test_time_cube_whose_zero_is_its_date(tmp_path: Path) -> None:
+    """Seconds from 0 without a reference are seconds from DATE-OBS, which is said of each plane."""
+    write(tmp_path / "a.fits", (3, 12, 16), CTYPE3="TIME", CRVAL3=0.0, CDELT3=60.0, CRPIX3=1.0, CUNIT3="s", MJDREF=0.0)
+    found = walked(tmp_path)
+    assert found.frames["middle_utc"].tolist() == [f"1988-03-17T06:0{i}:00.000" for i in range(3)]
+    assert all("axis_zero_assumed" in words_of(text) for text in found.frames["assumptions"])
+
+
 def same(found: WalkResult, other: WalkResult, *besides: str) -> None:
     """Two walks found the same but for some columns."""
     assert found.rejects == other.rejects

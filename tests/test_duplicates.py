@@ -142,6 +142,18 @@ def test_possible_pairs_by_plane_and_frequency():
     assert (0, 4) in listed(duplicates.candidates(frames))
 
 
+def test_planes_of_one_image_are_no_copies():
+    """A cube over time without a clock has planes of one date; only another file may hold the same exposures."""
+    frames = table(6) | {"middle_tdb_s": np.full(6, np.nan), "middle_mjd_tdb": np.full(6, 50000.5)}
+    frames["path"][:] = "cube"
+    frames["plane"][:] = np.arange(6)
+    assert listed(duplicates.candidates(frames)) == []
+    frames["path"][3:] = "copy of the cube"
+    frames["plane"][3:] = np.arange(3)
+    frames["plane"][:3] = np.arange(3)
+    assert listed(duplicates.candidates(frames)) == [(k, k + 3) for k in range(3)]
+
+
 def test_the_sweep_is_fast_and_agrees_with_every_pair():
     """The pairs of 300 frames are those of the plain double loop; 20,000 frames take a fraction of a second."""
     rng = np.random.default_rng(4)
@@ -397,7 +409,7 @@ def test_a_deep_image_counts_for_the_quiet_level_alone(tmp_path, flare):
     assert abs(blank["deep_flux"] - flare / 10) < 5 * blank["deep_flux_err"]
     assert abs(blank["quiet_level"]) < 5 * blank["quiet_level_err"]
     last = (tmp_path / "run" / "summary.txt").read_text(encoding="utf-8")
-    assert "related: 1 deep images hold 10 of the other frames" in last
+    assert "related: 1 deep image holds 10 of the other frames" in last
     assert (tmp_path / "run" / "rejects.ecsv").read_text(encoding="utf-8").count("duplicate_of") == 0
     curve = tmp_path / "flare.ecsv"
     assert cli.run_command(["lightcurve", "-q", str(tmp_path / "run"), "flare", "--out", str(curve)]) == 0

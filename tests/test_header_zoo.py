@@ -486,8 +486,23 @@ OLD_CASES = [
     Case(
         "MJD of another century",
         OLD + "DATE-OBS= '17/03/03'\nUT      = '06:00:00'\nMJD-OBS =             52715.25",
-        "dates_disagree no_clock",
+        "dates_disagree no_clock century_assumed",
         date="1903-03-17",
+        **OPTICAL,
+    ),
+    Case(
+        "two digits of this century by the settings",
+        OLD + "DATE-OBS= '17/03/24' / start\nUT      = '06:00:00'",
+        "century_assumed set_by_user",
+        "2024-03-17T06:01:00",
+        settings={"frames": [{"to": "1930-01-01", "clock_offset_s": 3155760000.0}]},
+        **OPTICAL,
+    ),
+    Case(
+        "two digits that may be of this century, and no time of day",
+        OLD + "DATE-OBS= '17/03/24'",
+        "century_assumed no_clock",
+        date="1924-03-17",
         **OPTICAL,
     ),
     Case(
@@ -1077,6 +1092,35 @@ def test_facts_in_the_primary_header(tmp_path: Path, inherit: str, words: list[s
     if "no_clock" not in words:
         assert (row["instrument"], row["exposure_s"]) == ("WESTFERN", 120.0)
         assert row["middle_tdb_s"] == pytest.approx(seconds("1988-03-17T06:01:00", "utc"), abs=1e-3)
+
+
+@pytest.mark.parametrize(
+    ("cards", "words", "middle"),
+    [
+        ("DATE-OBS= '17/03/24' / start\nUT      = '06:00:00'", ["century_assumed"], "1924-03-17T06:01:00.000"),
+        ("DATE-OBS= '17/03/24' / start\nJD      =         2423861.75", [], "1924-03-17T06:01:00.000"),
+        ("DATE-OBS= '17/03/24' / start\nUT      = '06:00:00'\nMJD-OBS = 23861.25", [], "1924-03-17T06:01:00.000"),
+        ("DATE-OBS= '31/12/29' / start\nUT      = '06:00:00'", ["century_assumed"], "1929-12-31T06:01:00.000"),
+        ("DATE-OBS= '01/01/30' / start\nUT      = '06:00:00'", [], "1930-01-01T06:01:00.000"),
+        ("DATE-OBS= '17/03/1924' / start\nUT      = '06:00:00'", [], "1924-03-17T06:01:00.000"),
+    ],
+)
+def test_years_of_two_digits(tmp_path: Path, cards: str, words: list[str], middle: str) -> None:
+    """DD/MM/YY is of the years 19YY (FITS 4.0, 4.4.2.1); below 30, where no other date confirms it, that is said.
+
+    JD 2423861.75 is 1924-03-17T06:00, by Fliegel and Van Flandern 1968 (Comm. ACM 11, 657): JD 2423862 at noon.
+    """
+    (row,) = rows(tmp_path, fits_bytes(OLD + cards))
+    kept = [word for word in words_of(row["assumptions"]) if word not in ("start_assumed", "scale_assumed")]
+    assert (kept, row["middle_utc"]) == (words, middle)
+
+
+def test_the_night_of_a_plate_in_two_digits(tmp_path: Path) -> None:
+    """A date of night, without any other, is read as every date is."""
+    data = fits_bytes(LOG + "PLTLABEL= 'K 1234'\nDATE-OBS= 'unknown '\nNIGHT   = '16/03/24'")
+    (row,) = rows(tmp_path, data)
+    assert (row["dialect"], row["middle_utc"]) == ("plate_headers", "1924-03-16")
+    assert "century_assumed" in words_of(row["assumptions"])
 
 
 def test_a_dialect_by_name(tmp_path: Path) -> None:

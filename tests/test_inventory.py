@@ -13,7 +13,8 @@ from astropy.table import Table
 
 import skies
 from hindlight import cli
-from hindlight.summary import Coverage, Missing, settings_to_fill_in, timeline
+from hindlight.schema import ASSUMPTIONS
+from hindlight.summary import Coverage, Missing, _counts, settings_to_fill_in, timeline
 from made import write
 
 TITLE = "# what headers do not say"
@@ -95,6 +96,68 @@ def test_a_value_that_was_not_filled_in_is_refused(
         assert cli.run_command(["inventory", "-q", str(archive), "--settings", str(tmp_path / "s.toml")]) == 2
         (error,) = capsys.readouterr().err.splitlines()
         assert f"[[frames]] block 1 {line.split()[1]}: expected" in error
+
+
+def test_the_example_of_a_site_says_how(archive: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    """A site left empty is refused with the two ways to give one, and the line shows both."""
+    (line,) = re.findall(r"^# site = .*$", inventory(capsys, archive), re.MULTILINE)
+    assert line.endswith('as "north hill", or { lat = -30.1, lon = 20.4, height = 1200.0 }')
+    (tmp_path / "s.toml").write_text(f"[[frames]]\n{line[2:]}\n", encoding="utf-8")
+    assert cli.run_command(["inventory", "-q", str(archive), "--settings", str(tmp_path / "s.toml")]) == 2
+    (error,) = capsys.readouterr().err.splitlines()
+    assert "site: expected the name of a site of [sites], or [x, y, z] in metres" in error
+    assert error.endswith("""got ''; fill it in, as site = "north hill\"""")
+
+
+@pytest.mark.parametrize(
+    ("cards", "example"),
+    [
+        ({"FILTER": "R", "FREQ": None, "BMAJ": None}, '"adu"'),
+        ({}, '"Jy/beam"'),
+        ({"FREQ": None, "STOKES": None}, '"adu" or "Jy/beam"'),
+    ],
+)
+def test_the_example_of_a_unit_is_of_the_kind(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str], cards: dict[str, object], example: str
+) -> None:
+    """Counts for a camera, a brightness for an array, both where nothing tells."""
+    write(tmp_path / "a/a.fits", BUNIT=None, **cards)
+    (line,) = re.findall(r"^# unit = .*$", inventory(capsys, tmp_path / "a"), re.MULTILINE)
+    assert line == f'# unit = ""  # all 1 frames: of the pixels, as {example}'
+
+
+def test_each_word_names_a_file(archive: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    """The first by path of the files that a word is said of, for what is set aside too."""
+    (archive / "old/empty.fits").write_bytes(b"")
+    text = " ".join(inventory(capsys, archive).split())
+    for word, path in (("geocentre", "old/a0.fits"), ("scale_assumed", "new/b1.fits"), ("no_clock", "new/c.fits")):
+        assert re.search(rf" {word} [^()]*(\([^()]*\)[^()]*)*\(as in {path}\)", text)
+    assert re.search(r" empty_file [^()]*\(as in old/empty.fits\)", text)
+
+
+def test_long_paths_keep_their_end() -> None:
+    """What is cut off is the beginning, so that sentence, path and closing bracket fit a cell of the page."""
+    words = "; ".join(f"{word}: {sentence}" for word, sentence in ASSUMPTIONS.items())
+    for entry in _counts([("deep/" * 40 + "name.fits", words)], ASSUMPTIONS):
+        assert entry.meaning.endswith("deep/deep/name.fits)")
+        assert "(as in ...ep/deep/" in entry.meaning
+        assert len(entry.meaning) <= cli.LONGEST_CELL
+
+
+def test_years_of_two_digits_are_asked_about(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    """The block that is printed moves frames of 1924 by a century and leaves the same instrument's others alone."""
+    folder = tmp_path / "a"
+    write(folder / "a.fits", DATE__OBS="17/03/24", UT="06:00:00")
+    write(folder / "b.fits", DATE__OBS="2023-03-17T06:00:00")
+    write(folder / "c.fits", DATE__OBS="18/03/24")
+    text = inventory(capsys, folder)
+    pasted = text.split(TITLE)[1].split("\n", 1)[1].replace("# clock", "clock")
+    assert 'to = "1930-01-01"\nclock_offset_s = 3155760000.0  # 1 of 3 frames' in pasted
+    assert re.search(r" 1924-03-17 +2023-03-17 ", text)
+    (tmp_path / "s.toml").write_text(pasted, encoding="utf-8")
+    after = inventory(capsys, folder, tmp_path / "s.toml")
+    assert "clock_offset_s = 3" not in after.split("taken for granted")[1].partition(TITLE)[2]
+    assert re.search(r" 1924-03-18 +2024-03-17 ", after)  # a date without a time of day cannot be moved
 
 
 def test_timelines_fit_their_width() -> None:

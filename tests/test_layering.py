@@ -13,15 +13,15 @@ SOURCE = Path(hindlight.__file__).parent
 PLUGINS = Path(hindlight_plugins.__file__).parent
 
 ORDER = [
-    "errors", "schema", "facts", "blocks", "settings", "dates", "lightcurve", "plugin", "cutouts", "hookspecs",
-    "tables", "host", "fence", "clock", "systems", "celestial", "sky", "headers", "instants", "sites", "reading",
-    "goodtime", "knowledge", "files", "companions", "channels", "outlines", "footprints", "frametable", "archive",
-    "summary", "positions", "apart", "pixels", "background", "detection", "pointing", "growth", "opening", "fluxes",
-    "photometry", "planted", "duplicates", "likeness", "robust", "losses", "response", "ensemble", "store", "judge",
-    "calibrate", "ranking", "lifted", "search", "timing", "injection", "completeness", "brighter", "candidates", "plan",
-    "more_controls", "comparisons", "order", "tasks", "examining", "trials", "conclude", "bright", "outcome", "crew",
-    "record", "asides", "verdicts", "measuring", "second_pass", "runner", "recovery", "survey", "export", "demo",
-    "testing", "outlet", "cli", "__main__",
+    "errors", "wording", "schema", "facts", "blocks", "settings", "dates", "lightcurve", "plugin", "cutouts",
+    "hookspecs", "tables", "host", "fence", "clock", "systems", "celestial", "sky", "headers", "instants", "sites",
+    "reading", "goodtime", "knowledge", "files", "companions", "channels", "outlines", "footprints", "frametable",
+    "archive", "summary", "positions", "apart", "pixels", "background", "detection", "pointing", "growth", "opening",
+    "fluxes", "photometry", "planted", "duplicates", "likeness", "robust", "losses", "response", "ensemble", "store",
+    "judge", "calibrate", "ranking", "lifted", "search", "timing", "injection", "completeness", "brighter",
+    "candidates", "plan", "more_controls", "comparisons", "order", "tasks", "examining", "trials", "conclude", "bright",
+    "outcome", "crew", "record", "asides", "verdicts", "measuring", "second_pass", "runner", "report_card", "recovery",
+    "survey", "export", "demo", "testing", "outlet", "cli", "__main__",
 ]  # fmt: skip
 PLUGINS_MAY_IMPORT = {"hindlight", "numpy", "scipy", "astropy", "photutils", "nifty_ls"}
 

@@ -3,8 +3,9 @@
 import re
 from pathlib import Path
 
-from hindlight import cli, hookspecs
+from hindlight import cli, hookspecs, host
 from hindlight.schema import CANDIDATES, STANDINGS, Flag
+from hindlight.settings import Settings
 
 TOP = Path(__file__).parents[1]
 README = (TOP / "README.md").read_text(encoding="utf-8")
@@ -25,6 +26,19 @@ def test_every_core_column_is_explained():
     named = re.findall(r"`([a-z_]+)`", section)
     wanted = [c.name for c in CANDIDATES]
     assert [n for n in dict.fromkeys(named) if n in wanted] == wanted
+
+
+def test_times_for_arithmetic_are_named():
+    """Each column of a shipped plugin that is an instant says its zero and unit, and the README names it among those."""
+    found = host.load(host.spec_from(Settings())).loaded
+    times = [(e.plugin.name, c) for e in found for c in e.plugin.columns if getattr(c, "is_time", False)]
+    assert len(times) >= 3
+    sentence = README.split("Columns with dates for people")[1].split("Each column says")[0]
+    for name, column in times:
+        assert f"`{name}_{column.name}`" in sentence
+        assert column.unit == "s"
+        assert "seconds from J2000.0 TDB at the barycentre" in column.doc
+    assert "2451545 + t / 86400" in sentence
 
 
 def test_every_standing_flag_and_command_is_explained():

@@ -2,13 +2,15 @@
 
 import shutil
 from pathlib import Path
+from types import SimpleNamespace
 
 import numpy as np
 import pytest
 from astropy.table import Table
 
 import skies
-from hindlight import cli, planted, recovery, trials
+from hindlight import Column, Statistic, cli, completeness, planted, recovery, report_card, trials
+from hindlight.judge import Judgement
 from hindlight.order import book
 from hindlight.recovery import Asked
 from hindlight.store import RunFolder
@@ -229,7 +231,53 @@ def test_report_cards(archive, capsys):
     assert power["chi_square"]["smooth"] >= 0.5
     assert power["chi_square"]["nothing"] <= 0.5
     assert all(card.cost_s > 0 for card in cards)
+    assert (
+        "of 12 sources of kind 'pulses' and of 12 sources of kind 'smooth'; 'nothing': the same of 6 controls"
+        in said[1]
+    )
+    silent = [name for name, of in power.items() if not any(share for kind, share in of.items() if kind != "nothing")]
+    assert [line.partition(" ")[0] for line in said[2:-1]] == silent
     assert cli.run_command(["plugins", "--power", str(archive / "none")]) == 2
+
+
+def card_plugin(name, *columns, whole=False, fewest=3):
+    """A statistic that only declares."""
+    members = {"name": name, "columns": columns, "all_channels": whole, "min_points": fewest}
+    return type(name, (Statistic,), members | {"compute": lambda self, curve: {}})()
+
+
+def test_a_statistic_that_finds_nothing_says_why():
+    """Nothing to rank, no value anywhere, no pairs of channels, or nothing far enough out: four reasons."""
+    ranked = Column("x", "a number", unusual="high")
+    asked = [
+        card_plugin("plain", Column("x", "a number")), card_plugin("short", ranked, fewest=9),
+        card_plugin("pairs", ranked, whole=True), card_plugin("dull", ranked), card_plugin("keen", ranked),
+    ]  # fmt: skip
+    values = {
+        ("a", f"{name}_x"): np.full(3, value) for name, value in (("short", np.nan), ("dull", 1.0), ("keen", 1.0))
+    }
+    empty = report_card.blank(asked, [Judgement(3, values | {("", "pairs_x"): np.full(3, np.nan)})])
+    assert empty == {"plain", "short", "pairs"}
+    power = {plugin.name: {"nothing": 0.1, "smooth": float(plugin.name == "keen")} for plugin in asked}
+    said = report_card.silence_said(asked, power, empty)
+    assert [line.partition(" finds nothing: ")[0] for line in said] == ["plain", "short", "pairs", "dull"]
+    for line, words in zip(
+        said, ("none of its", "at least 9", "several channels", "further out than chance"), strict=True
+    ):
+        assert words in line
+
+
+def test_the_two_bars_are_explained():
+    """Where the controls' own bar is not that of the tails, one sentence says why there are two; else there is none."""
+    for final, n in ((0.0188, 2), (0.0125, 1)):
+        study = SimpleNamespace(bars=completeness.Bars(0.0125, final))
+        said = recovery._control_remarks(study, np.full(4, 1 / 60), False)
+        assert len(said) == n
+        assert "p below 0.0125 is needed" in said[0]
+    study = SimpleNamespace(bars=completeness.Bars(0.0125, 0.0188))
+    assert "where a tail is fitted" in recovery._control_remarks(study, np.full(4, 1 / 60), False)[1]
+    assert "0.0188" in recovery._control_remarks(study, np.full(4, 1 / 60), False)[1]
+    assert recovery._control_remarks(study, np.full(4, 1e-3), False) == []
 
 
 def test_the_rate_of_power_is_that_of_the_controls():

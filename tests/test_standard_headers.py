@@ -6,6 +6,7 @@ import math
 
 import pytest
 from astropy.coordinates import EarthLocation
+from astropy.wcs import WCS
 from hypothesis import given
 from hypothesis import strategies as st
 
@@ -307,16 +308,76 @@ def test_time_axis_in_other_units_and_scales() -> None:
     assert absolute[1].middle == Moment(MARCH, 60.0)
 
 
+UNPLACED = TIME_AXIS | {"CRVAL3": 0.0, "MJDREF": None}
+
+
 @pytest.mark.parametrize(
     "cards",
-    [{"MJDREF": None}, {"CUNIT3": "furlong"}, {"CDELT3": None}, {"CTYPE3": "TIME-TAB"}, {"DATEREF": "1988-03-17"}],
+    [
+        {"CUNIT3": "furlong"},
+        {"CDELT3": None},
+        {"CTYPE3": "TIME-TAB"},
+        {"DATE__OBS": "1988-03-17"},
+        {"DATE__OBS": ("1988-03-17T06:00:00", "middle of the observation")},
+        {"MJDREF": -60000.0},  # a reference that leads nowhere is one all the same
+        {"DATEREF": "in spring"},
+        {"CRVAL3": 1.0e9},  # seconds since another zero
+        {"CRVAL3": 21600.0},  # seconds since midnight: DATE-OBS has 06:00:00
+        {"CRVAL3": 21660.0, "CRPIX3": 2.0},
+        {"CTYPE3": "TAI"},  # DATE-OBS is in UTC
+        {"CTYPE3": "GPS", "TIMESYS": "TAI"},
+    ],
 )
-def test_time_axis_without_reference(cards: dict[str, object]) -> None:
+def test_time_axis_that_cannot_be_placed(cards: dict[str, object]) -> None:
     """Planes whose times cannot be told have no clock but the file's date; they are not spread over its span."""
-    drop = {"MJDREF": None} if "DATEREF" in cards else {}
-    found = plane_times(**(TIME_AXIS | {"CRVAL3": 30.0} | drop | cards))
-    if "DATEREF" in cards:  # midnight of a date is an instant
-        assert found[0].middle == Moment(MARCH, 30.0)
-        return
-    assert all("no_clock" in facts.assumptions for facts in found)
+    found = plane_times(**(UNPLACED | cards))
+    assert all({"no_clock", "axis_time_unknown"} <= set(facts.assumptions) for facts in found)
+    assert not any("axis_zero_assumed" in facts.assumptions for facts in found)
     assert {facts.start for facts in found} == {Moment(MARCH, 0.0, has_clock=False)}
+
+
+def test_time_axis_with_a_date_for_reference() -> None:
+    """Midnight of DATEREF is an instant (FITS 4.0, 9.2.2), and no assumption."""
+    found = plane_times(**(UNPLACED | {"CRVAL3": 30.0, "DATEREF": "1988-03-17"}))
+    assert [facts.middle for facts in found] == [Moment(MARCH, s) for s in (30.0, 90.0, 150.0)]
+    assert not any("axis" in word for word in found[0].assumptions)
+
+
+@pytest.mark.parametrize(
+    "cards",
+    [
+        {},
+        {"MJDREF": 0.0},
+        {"MJDREF": 0.0, "DATEREF": "1858-11-17"},
+        {"MJDREFI": 0, "MJDREFF": 0.0},
+        {"JDREF": 0.0},
+        {"DATEREF": ""},
+        {"CTYPE3": "UTC"},
+        {"CTYPE3": "TAI", "TIMESYS": "TAI"},
+        {"CDELT3": 1.0, "CUNIT3": "min"},
+        {"CRVAL3": -30.0, "TIMEOFFS": 30.0},
+        {"CRVAL3": 60.0, "CRPIX3": 2.0},
+    ],
+)
+def test_date_for_the_zero_of_a_time_axis(cards: dict[str, object]) -> None:
+    """Without a reference, or with the zero of a calendar, DATE-OBS is the zero of the axis, which is said.
+
+    MJD 0, which the standard takes (FITS 4.0, 9.2.2), counts where it leads to a likely date, as in seconds of MJD.
+    """
+    found = plane_times(**(UNPLACED | cards))
+    assert [facts.middle for facts in found] == [Moment(MARCH, s) for s in (21600.0, 21660.0, 21720.0)]
+    assert all("axis_zero_assumed" in facts.assumptions for facts in found)
+    assert not any({"no_clock", "axis_time_unknown"} & set(facts.assumptions) for facts in found)
+    assert {(facts.exposure_s, facts.span_s) for facts in found} == {(60.0, 60.0)}
+
+
+def test_header_as_astropy_writes_a_time_axis() -> None:
+    """`WCS.to_header` writes MJDREF = 0.0 for a header without a reference: the planes are where DATE-OBS says."""
+    wcs = WCS(naxis=3)
+    wcs.wcs.ctype = "RA---SIN", "DEC--SIN", "TIME"
+    wcs.wcs.cdelt, wcs.wcs.crval, wcs.wcs.crpix = (-0.01, 0.01, 60.0), (30.0, 40.0, 0.0), (8.0, 6.0, 1.0)
+    wcs.wcs.cunit = "deg", "deg", "s"
+    written = {key: card for key, card in wcs.to_header().items() if "REF" in key and "PIX" not in key}
+    assert any(float(card) == 0.0 for key, card in written.items() if key.startswith("MJDREF"))
+    found = plane_times(**(UNPLACED | written))
+    assert [facts.middle for facts in found] == [Moment(MARCH, s) for s in (21600.0, 21660.0, 21720.0)]

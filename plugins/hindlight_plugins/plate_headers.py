@@ -115,7 +115,8 @@ def _instant(cards: Cards) -> Observed:
 
 def _of_night(cards: Cards) -> Observed:
     """The date of a NIGHT card, where DATE-OBS gives none; its time of day is not looked for."""
-    return Observed(read_date(cards.get("NIGHT")).moment)
+    night = read_date(cards.get("NIGHT"))
+    return Observed(night.moment, words=("century_assumed",) if night.century_assumed else ())
 
 
 def _right_day(cards: Cards, seen: Observed) -> Observed:

@@ -165,7 +165,9 @@ def from_geodetic(latitude: float, longitude: float, height: float) -> Vector:
 
 
 def _site(value: Any) -> str | Vector:
-    return _text(value) if isinstance(value, str) else read_place(value)
+    if isinstance(value, str) and not value.strip():
+        raise ValueError(f"the name of a site of [sites], or {SITE_FORMS}")
+    return value.strip() if isinstance(value, str) else read_place(value)
 
 
 MATCH = {
@@ -254,7 +256,8 @@ def _checked(where: str, key: str, value: Any, read: Callable[[Any], Any]) -> An
     try:
         return read(value)
     except ValueError as expected:
-        raise UsageError(f"{where} {key}: expected {expected}, got {value!r}") from None
+        empty = f"; fill it in, as {key} = {KEYS[key].example}" if value == "" and key in KEYS else ""
+        raise UsageError(f"{where} {key}: expected {expected}, got {value!r}{empty}") from None
 
 
 def _later(first: str, second: str) -> bool:

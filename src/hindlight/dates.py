@@ -12,6 +12,7 @@ from hindlight.facts import NAN, Moment, Value
 
 DAY_S = 86400.0
 J2000_MJD = 51544.5
+MJD_1930 = 25977
 SIDEREAL_RATE = 1.00273790935  # sidereal seconds in a second of universal time (Aoki et al. 1982, A&A 105, 359)
 
 _MONTHS = ("JAN", "FEB", "MAR", "APR", "MAY", "JUN", "JUL", "AUG", "SEP", "OCT", "NOV", "DEC")
@@ -34,6 +35,11 @@ class WrittenDate(NamedTuple):
     moment: Moment | None = None
     two_digits: bool = False
     day_first: bool = False
+
+    @property
+    def century_assumed(self) -> bool:
+        """Whether two digits from 00 to 29 were read as 1900 to 1929, where many mean this century."""
+        return self.two_digits and self.moment is not None and self.moment.mjd < MJD_1930
 
 
 def read_date(value: Value) -> WrittenDate:

@@ -64,9 +64,9 @@ def waiting(frames: Columns) -> Mask:
 def candidates(frames: Columns) -> Pairs:
     """Pairs of frames that may be one exposure, at least one of each pair waiting.
 
-    Same Stokes parameter, band and frequency, pointing (or one within the other), overlapping good time, exposures
-    alike. Under another instrument's name size, exposure and instant must be the same too; there, and where there is no
-    clock but the same date, only equal pixels will do.
+    Never planes of one image. Same Stokes parameter, band and frequency, pointing (or one within the other), overlapping
+    good time, exposures alike. Under another instrument's name size, exposure and instant must be the same too; there, and
+    where there is no clock but the same date, only equal pixels will do.
     """
     here = np.flatnonzero((frames["state"] == "current") & (frames["duplicate_of"] < 0))
     low, high = _spans(frames, here)
@@ -168,10 +168,10 @@ class _Look:
 
     def may_be_one(self, i: IntArray, j: IntArray) -> Mask:
         """Whether pairs whose spans touch may be one exposure."""
-        keep = self.new[i] | self.new[j]
+        keep = (self.new[i] | self.new[j]) & (self.hdu[i] != self.hdu[j])  # planes of one image were taken one by one
         step = np.abs(self.frequency[i] - self.frequency[j])
-        keep &= np.isnan(step) | (step <= np.where(self.hdu[i] == self.hdu[j], 0.0, SAME_FREQUENCY))
-        cubes = (self.hdu[i] != self.hdu[j]) & (self.planes[i] > 1) & (self.planes[j] > 1)
+        keep &= np.isnan(step) | (step <= SAME_FREQUENCY)
+        cubes = (self.planes[i] > 1) & (self.planes[j] > 1)
         keep &= ~cubes | (self.plane[i] == self.plane[j])  # of two cubes, like planes
         longer = np.maximum(self.exposure[i], self.exposure[j])
         keep &= ~(longer > DEEPER * np.minimum(self.exposure[i], self.exposure[j]))

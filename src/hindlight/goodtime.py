@@ -11,14 +11,13 @@ from dataclasses import replace
 import numpy as np
 
 from hindlight.facts import NAN, Cards, FrameFacts
-from hindlight.instants import GPS_BEHIND_TAI_S, SCALES, SECONDS, after_reference
+from hindlight.instants import GPS_BEHIND_TAI_S, REFERENCES, SCALES, SECONDS, after_reference
 from hindlight.lightcurve import FloatArray
 
 WIDTHS = {
     "L": 1, "X": 1, "B": 1, "I": 2, "J": 4, "K": 8, "A": 1, "E": 4, "D": 8, "C": 8, "M": 16, "P": 8, "Q": 16,
 }  # fmt: skip
 NUMBERS = {"I": ">i2", "J": ">i4", "K": ">i8", "E": ">f4", "D": ">f8"}
-REFERENCES = ("MJDREF", "MJDREFI", "JDREF", "JDREFI", "DATEREF")
 OF_EXPOSURE = ("coadds", "exposure_doubtful")
 
 _FORM = re.compile(r"(\d*)([LXBIJKAEDCMPQ])")

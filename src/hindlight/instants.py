@@ -13,7 +13,7 @@ from dataclasses import replace
 from functools import lru_cache
 from typing import NamedTuple
 
-from hindlight.dates import DAY_S, between, read_clock, read_date
+from hindlight.dates import DAY_S, WrittenDate, between, read_clock, read_date
 from hindlight.facts import NAN, Cards, Moment, PlaneAxes
 
 SCALES = {
@@ -23,6 +23,10 @@ SCALES = {
 GPS_BEHIND_TAI_S = 19.0
 SECONDS = {"s": 1.0, "min": 60.0, "h": 3600.0, "d": 86400.0, "a": 31557600.0, "yr": 31557600.0}
 PLAUSIBLE_MJD = (15020, 88069)  # 1900 to 2100: an offset that leads elsewhere was not meant from MJD 0
+LONGEST_FROM_ZERO_S = 100 * DAY_S  # a plane further from DATE-OBS is counted from something else
+MOST_AXES = 9
+REFERENCES = ("MJDREF", "MJDREFI", "JDREF", "JDREFI", "DATEREF")
+NO_REFERENCE = (Moment(0, 0.0), Moment(-2400001, 43200.0))  # MJD 0 and JD 0: what is written where nothing is known
 DISAGREE_S = 1.0
 SAME_HOURS_S = 21600.0  # what is a day off to within this is the same time of another day
 EXPOSURES = ("EXPTIME", "EXPOSURE", "ITIME", "EXP_TIME", "INTTIME", "ONTIME", "LIVETIME")
@@ -85,7 +89,9 @@ def read_times(
 ) -> tuple[Times, str]:
     """The instants and their astropy time scale; instants without a clock where the scale is none we know."""
     good_time, words = exposure(cards)
-    times = _plane_times(cards, axes, good_time) if axes.time_axis else _header_times(cards, observed, good_time)
+    times = (
+        _plane_times(cards, axes, observed, good_time) if axes.time_axis else _header_times(cards, observed, good_time)
+    )
     if words:
         times = times._replace(words=(*times.words, *words))
     stated = axes.time_axis if axes.time_axis not in ("", "TIME") else times.scale or cards.text("TIMESYS")
@@ -95,7 +101,7 @@ def read_times(
     if not name and "no_clock" not in times.words:
         times = times._replace(words=(*times.words, "scale_assumed"))
     if name == "GPS":
-        start, middle, end = (m and m.plus(GPS_BEHIND_TAI_S) for m in times[:3])
+        start, middle, end = (m.plus(GPS_BEHIND_TAI_S) if m and m.has_clock else m for m in times[:3])
         times = times._replace(start=start, middle=middle, end=end)
     return times, SCALES[name or "UTC"]
 
@@ -191,6 +197,7 @@ def separate_clock(cards: Cards) -> Observed:
     written = read_date(cards.get(key))
     if written.moment is None:
         return julian_instant(cards)
+    century = _century_words(cards, written)
     words: list[str] = []
     moment, comments, scale = written.moment, [comment_of(cards, key)], ""
     separate = not moment.has_clock
@@ -199,12 +206,14 @@ def separate_clock(cards: Cards) -> Observed:
         if clock is None:
             other = julian_instant(cards)
             near = other.moment is not None and abs(other.moment.mjd - moment.mjd) <= 1
-            return other if near else Observed(moment, *_said_which(comments, written.two_digits))
+            if near:
+                return other
+            which, _, assumed = _said_which(comments, written.two_digits)
+            return Observed(moment, which, words=(*century, *assumed))
         moment = clock if clock.mjd else replace(clock, mjd=moment.mjd)
         comments.insert(0, comment_of(cards, clock_key) + (" start" if clock_key in CLOCKS_OF_START else ""))
         scale = "UTC" if "UT" in clock_key else ""
-    if written.day_first:
-        words = [*words, "date_form"]
+    words = [*words, *century, *(["date_form"] if written.day_first else [])]
     if _LOCAL.search(comments[0]):
         return Observed(replace(moment, seconds=0.0, has_clock=False), words=(*words, "local_unsettled"))
     moment, more = _checked_day(cards, moment, separate)
@@ -213,6 +222,15 @@ def separate_clock(cards: Cards) -> Observed:
     said = scale or next((found.group(1) for text in comments if (found := _SCALE.search(text))), "")
     date = written.moment if separate else None
     return Observed(moment, which, cards.text("TIMESYS") or said, (*words, *assumed), date)
+
+
+def _century_words(cards: Cards, written: WrittenDate) -> tuple[str, ...]:
+    """A word where the year has two digits that may be of this century, and no MJD or JD says which."""
+    if written.moment is None or not written.century_assumed:
+        return ()
+    _, other = _julian(cards)
+    said = other is not None and abs(other.mjd - written.moment.mjd) <= 1
+    return () if said else ("century_assumed",)
 
 
 def _said_which(comments: Sequence[str], doubtful: bool) -> tuple[str, str, tuple[str, ...]]:
@@ -288,10 +306,10 @@ def _checked_day(cards: Cards, moment: Moment, separate: bool) -> tuple[Moment, 
     return replace(moment, seconds=0.0, has_clock=False), ("dates_disagree",)
 
 
-def _plane_times(cards: Cards, axes: PlaneAxes, exposure: float) -> Times:
+def _plane_times(cards: Cards, axes: PlaneAxes, observed: Callable[[Cards], Observed], exposure: float) -> Times:
     """The instant of one plane on a time axis: its pixel is centred on its world coordinate.
 
-    Without a usable coordinate, unit or reference the plane has no clock: planes are never spread over the file's span.
+    Without a usable coordinate, unit or zero the plane has no clock: planes are never spread over the file's span.
     """
     axis = axes.time_axis
     value = axes.values.get(axis, NAN)
@@ -301,10 +319,57 @@ def _plane_times(cards: Cards, axes: PlaneAxes, exposure: float) -> Times:
     words: tuple[str, ...] = ()
     if step == step and not exposure <= step:
         exposure, words = step, ("plane_exposure",)  # what the header states is longer: that of all planes together
-    if middle is None:
-        start = _header_times(cards, stated_instant, exposure).start
-        return without_clock(Times(start, None, None, exposure, step, words=words))
-    return Times(None, middle, None, exposure, step, words=words)
+    if middle is not None:
+        return Times(None, middle, None, exposure, step, words=words)
+    seen = observed(cards)
+    middle = _after_date(cards, axes, seen, unit)
+    if middle is not None:
+        return Times(None, middle, None, exposure, step, seen.scale, (*words, "axis_zero_assumed", *seen.words))
+    dated = _header_times(cards, observed, exposure)
+    said = tuple(word for word in dated.words if word not in ("start_assumed", "no_clock"))
+    day = dated.start or dated.middle or dated.end
+    return without_clock(Times(day, None, None, exposure, step, words=(*words, *said, "axis_time_unknown")))
+
+
+def _after_date(cards: Cards, axes: PlaneAxes, seen: Observed, unit: float) -> Moment | None:
+    """The instant of a plane whose axis has no reference, with DATE-OBS for the axis' zero; None where that may not be.
+
+    By the standard the zero is MJD 0 then (FITS 4.0, 9.2.2; Rots et al. 2015, 4.2.2), which is asked before this and
+    leads to no likely date. DATE-OBS stands in where it is the start, with a time of day, in the axis' time scale, and
+    the axis does not count from midnight: its first plane would then be at the time of day of DATE-OBS.
+    """
+    seconds = axes.values.get(axes.time_axis, NAN) * unit
+    zero = seen.moment
+    if zero is None or not zero.has_clock or seen.which != "start" or not abs(seconds) <= LONGEST_FROM_ZERO_S:
+        return None
+    if not _lacks_reference(cards) or not _scales_agree(axes.time_axis, seen.scale or cards.text("TIMESYS")):
+        return None
+    step = abs(axes.steps.get(axes.time_axis, NAN) * unit)
+    if zero.seconds > step and abs(_first_coordinate(cards, axes) * unit - zero.seconds) <= step:
+        return None
+    offset = cards.number("TIMEOFFS") * _time_unit(cards)
+    return zero.plus(seconds + (0.0 if offset != offset else offset))
+
+
+def _lacks_reference(cards: Cards) -> bool:
+    """Whether no card gives a time reference, or only the zero of a calendar; one that cannot be read is a reference."""
+    unreadable = any(cards.text(key) and cards.moment(key) is None for key in REFERENCES)
+    return not unreadable and _reference(cards) in NO_REFERENCE
+
+
+def _scales_agree(axis: str, date: str) -> bool:
+    """Whether a time axis of this type counts in the scale of DATE-OBS, which is UTC where none is named."""
+    name = date.upper().partition("(")[0].strip() or "UTC"
+    return axis == "TIME" or (SCALES.get(axis) == SCALES.get(name) and (axis == "GPS") == (name == "GPS"))
+
+
+def _first_coordinate(cards: Cards, axes: PlaneAxes) -> float:
+    """The world coordinate of the first plane of the time axis, in the axis' unit; NaN where no card says it."""
+    types = (cards.text(f"CTYPE{i}").upper().partition("-")[0].strip() for i in range(1, MOST_AXES + 1))
+    number = next((i for i, kind in enumerate(types, 1) if kind == axes.time_axis), 0)
+    pixel = cards.number(f"CRPIX{number}")
+    first = 1.0 - (0.0 if pixel != pixel else pixel)
+    return cards.number(f"CRVAL{number}") + first * axes.steps.get(axes.time_axis, NAN)
 
 
 def stated_exposure(cards: Cards) -> Exposure:

@@ -5,6 +5,7 @@ Pure: what was judged, ranked and examined in, tables out. Nothing is written he
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -14,6 +15,7 @@ import astropy.table
 import numpy as np
 
 from hindlight import candidates, ranking
+from hindlight.candidates import Described
 from hindlight.conclude import Field, PValues
 from hindlight.fence import Fault, blank
 from hindlight.host import Plugins
@@ -25,6 +27,7 @@ from hindlight.ranking import FEWEST_BLANK
 from hindlight.schema import CANDIDATES, PLUGIN_FAULTS, TableColumn
 from hindlight.settings import Controls, Settings
 from hindlight.tables import astropy_table, rows_to_columns
+from hindlight.wording import from_to, how_many
 
 CAUTION = (
     "A low p_value says that a position varies unlike blank sky in the same frames, not what it is. Look at the frames, "
@@ -32,6 +35,7 @@ CAUTION = (
 )
 
 HONEST_ERRORS = 1.25  # blank sky that scatters by more than this times its errors, or less than its inverse, is said
+MATTERS = 0.2  # of the beam: a position error that small loses 10 % of a Gaussian's peak flux at 1 sigma
 NO_EPHEMERIS = dict.fromkeys(("period", "epoch", "period_dot", "window"), float("nan"))
 
 
@@ -128,14 +132,20 @@ def _too_unlike(found: Field, index: int, controls: Controls) -> int:
     return int(anyhow.sum()) - n_controls
 
 
-def place_note(found: Field, distances: FloatArray, error: float, most_places: int) -> str:
-    """What is to be said of the place a target was judged at; '' where it is the stated one and no error is given.
+def place_note(found: Field, distances: FloatArray, error: float, most_places: int, beam: float) -> str:
+    """What is to be said of the place a target was judged at; '' where it is the stated one and its error small.
 
     `distances` in arcsec from the stated place: of the place judged, and of the one tried furthest out; `error` is the
-    target's position error in arcsec.
+    target's position error and `beam` the narrowest width at half maximum of its channels, in arcsec.
     """
     if found.n_trials == 1:
-        return f"measured at the stated place only, its error being {error:g} arcsec" if error > 0 else ""
+        if not error > MATTERS * beam:
+            return ""
+        lost = 100 * (1 - 2 ** (-4 * (error / beam) ** 2))  # a Gaussian beam of that width
+        return (
+            f"measured at the stated place only: off by its error of {error:g} arcsec, {lost:.0f} % of the flux would be "
+            f"lost in a beam of {beam:.3g} arcsec"
+        )
     said = (
         f"searched at {found.n_trials} places up to {distances[1]:.4g} arcsec from the stated one, as its controls were; "
         f"judged {distances[0]:.4g} arcsec away from it"
@@ -148,32 +158,50 @@ def related_frames(frames: Mapping[str, Any]) -> tuple[str, ...]:
     said = []
     copies = int(np.count_nonzero((frames["duplicate_of"] >= 0) & (frames["state"] != "void")))
     if copies:
-        said.append(
-            f"duplicates: {copies} frames are copies of an exposure that is kept, and count nowhere (rejects.ecsv)"
-        )
+        kept = "of an exposure that is kept, and"
+        are = how_many(copies, f"frame is a copy {kept} counts", f"frames are copies {kept} count")
+        said.append(f"duplicates: {are} nowhere (rejects.ecsv)")
     holds = np.unique(frames["related_to"][frames["related_to"] >= 0])
     parts = int(np.count_nonzero((frames["related_to"] >= 0) & ~np.isin(frames["id"], holds)))
     if parts:
         said.append(
-            f"related: {len(holds)} deep images hold {parts} of the other frames: those are judged for variability, the "
-            "deep ones count for the quiet level alone (channels.ecsv)"
+            f"related: {how_many(len(holds), 'deep image holds', 'deep images hold')} {parts} of the other frames: those are "
+            "judged for variability, the deep ones count for the quiet level alone (channels.ecsv)"
         )
     return tuple(said)
 
 
-def remarks(p: PValues, fields: Sequence[Field], settings: Settings) -> tuple[str, ...]:
-    """What the last lines of a run must say."""
+def undecided_remarks(
+    described: Sequence[Described], n_controls: Sequence[int], p: PValues, min_frames: int
+) -> list[str]:
+    """Why targets that frames cover are undecided, in a sentence for each reason; those without any control are not here.
+
+    Targets in the order of `p`, with how many controls each was ranked with.
+    """
+    reasons: Counter[str] = Counter()
+    for said, controls, empirical in zip(described, n_controls, p.empirical.tolist(), strict=True):
+        if said.cells["standing"] != "undecided":
+            continue
+        if max((int(row["n_used"]) for row in said.channels), default=0) < min_frames:
+            reasons[f"fewer than {min_frames} usable frames in every channel"] += 1
+        elif controls:
+            few = "too few controls to decide, and no tail can be fitted to them"
+            reasons[few if np.isfinite(empirical) else "no statistic that can be ranked"] += 1
+    return [f"{how_many(n, 'target is', 'targets are')} undecided: {why}" for why, n in sorted(reasons.items())]
+
+
+def remarks(p: PValues, fields: Sequence[Field], settings: Settings, units: Mapping[str, str]) -> tuple[str, ...]:
+    """What the last lines of a run must say; `units` are those of flux by channel."""
     said = []
     sizes = [int(n) for found in fields for n in found.ranked.n_controls]
     placed = [int(n) for found in fields if _is_plain(found) for n in found.ranked.n_controls]
     alone = sum(size == 0 for size in sizes)
     if alone:
-        said.append(f"{alone} targets have no control and so no p-value: nothing is said of their variation")
-    if not p.testable.all() and len(sizes) - alone:
-        said.append(f"{int((~p.testable).sum())} targets are undecided: too few controls, or too few usable frames")
+        has = how_many(alone, "target has", "targets have")
+        said.append(f"{has} no control and so no p-value: nothing is said of their variation")
     if placed and min(placed) < settings.controls.per_field:
         said.append(
-            f"controls per target: {_span(placed)}, {settings.controls.per_field} were asked for; "
+            f"controls per target: {from_to(min(placed), max(placed))}, {settings.controls.per_field} were asked for; "
             + (
                 "no more fit into the frames clear of sources and of each other"
                 if all(len(found.controls) < settings.controls.per_field for found in fields if not found.lift)
@@ -182,27 +210,25 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings) -> tuple[st
         )
     said += _search_remarks(fields, settings)
     if p.short.any():
+        lie = how_many(int(p.short.sum()), "target lies", "targets lie")
         lit = any(found.group_size > 1 for found in fields)
         said.append(
-            f"{int(p.short.sum())} targets lie beyond every control, but their number cannot decide at q < "
-            f"{settings.ranking.level:g}: {p.needed} controls would ([controls] per_field and most_per_field, [search] controls"
+            f"{lie} beyond every control, but their number cannot decide at q < {settings.ranking.level:g}: {p.needed} "
+            "controls would ([controls] per_field and most_per_field, [search] controls"
             + ("; for bright targets as many [comparisons] wanted, too)" if lit else ")")
         )
-    said += [*_threshold_remarks(fields), *_error_remarks(fields), *_confusion_remarks(fields), *_level_remarks(fields)]
+    said += [
+        *_threshold_remarks(fields), *_error_remarks(fields), *_confusion_remarks(fields, units), *_level_remarks(fields)
+    ]  # fmt: skip
     if p.extrapolated.any():
-        said.append(f"{int(p.extrapolated.sum())} p-values are upper bounds of a fitted tail (p_is_extrapolated)")
+        are = how_many(int(p.extrapolated.sum()), "p-value is the upper bound", "p-values are upper bounds")
+        said.append(f"{are} of a fitted tail (p_is_extrapolated)")
     return tuple(said)
 
 
 def _is_plain(found: Field) -> bool:
     """Whether a field holds blank sky as it was chosen first: no places that were chosen, no copies, none added."""
     return found.n_trials == 1 and found.lift is None and not found.n_passes
-
-
-def _span(numbers: Sequence[int]) -> str:
-    """The smallest and the largest of some numbers, or the one that all are."""
-    low, high = min(numbers), max(numbers)
-    return f"{low} to {high}" if high > low else str(low)
 
 
 def _search_remarks(fields: Sequence[Field], settings: Settings) -> list[str]:
@@ -212,9 +238,11 @@ def _search_remarks(fields: Sequence[Field], settings: Settings) -> list[str]:
         return []
     each = [(f, len(f.controls) // max(1, len(f.blank_sky))) for f in found]  # copies of bright targets' controls
     trials, sizes = [f.n_trials for f in found], [int(n) // k for f, k in each for n in f.ranked.n_controls]
+    one, several = "target was searched within its position error", "targets were searched within their position errors"
+    were = how_many(len(sizes), one, several)
     said = (
-        f"{len(sizes)} targets were searched within their position errors at {_span(trials)} places each, "
-        f"with {_span(sizes)} controls searched alike"
+        f"{were} at "
+        f"{from_to(min(trials), max(trials))} places each, with {from_to(min(sizes), max(sizes))} controls searched alike"
     )
     short = min(sizes) < settings.search.controls
     return [said + (f"; {settings.search.controls} were asked for, no more fit into the frames" if short else "")]
@@ -252,7 +280,7 @@ def _error_remarks(fields: Sequence[Field]) -> list[str]:
     return said
 
 
-def _confusion_remarks(fields: Sequence[Field]) -> list[str]:
+def _confusion_remarks(fields: Sequence[Field], units: Mapping[str, str]) -> list[str]:
     """Channels in which faint sources and diffuse emission, not noise, bound what can be said of a mean flux."""
     worst: dict[str, float] = {}
     for found in fields:
@@ -261,8 +289,9 @@ def _confusion_remarks(fields: Sequence[Field]) -> list[str]:
             if limits.confusion > 0 and limits.confusion > np.nanmedian(error):
                 worst[label] = max(worst.get(label, 0.0), limits.confusion)
     return [
-        f"blank positions in {label} differ in their mean fluxes by an rms of {confusion:.3g} beyond their errors: "
-        "confusion or diffuse emission, which bounds on the total flux contain (confusion_rms in channels.ecsv)"
+        f"mean fluxes of blank positions in {label} scatter by {confusion:.3g} {units[label] or 'of the image'} "
+        "(rms) more than their errors explain: confusion or diffuse emission, which bounds on the total flux contain "
+        "(confusion_rms in channels.ecsv)"
         for label, confusion in sorted(worst.items())
     ]
 

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import time
 import tomllib
+from collections import Counter
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from functools import partial
@@ -18,7 +19,7 @@ import astropy.table
 import numpy as np
 from numpy.typing import NDArray
 
-from hindlight import brighter, completeness, host, injection, judge, plan, planted, ranking, record, store
+from hindlight import brighter, completeness, host, injection, judge, plan, planted, ranking, record, report_card, store
 from hindlight import settings as settings_module
 from hindlight.completeness import Bars, Cell, Found, Injection, Looks, Null
 from hindlight.crew import Crew, assembled
@@ -51,12 +52,17 @@ from hindlight.trials import (
     search_controls,
 )
 from hindlight.verdicts import Watcher
+from hindlight.wording import from_to, how_many
 
 INJECTIONS_AT_ONCE = 128
 SMALL_WORK = 20_000_000  # frames times positions judged; up to this many the work is done in this process
 POWER_RATE = 1e-3
 MOST_BEYOND_ROUNDING, MOST_NONLINEAR = 0.02, 1e-6  # sigma: what pixels may differ by from light curves
 FEWEST_FOR_TAIL = 40  # controls: fewer show no tail, see `calibrate.tail_bound`
+SEARCHED = (
+    "target that was searched within its position error is",
+    "targets that were searched within their position errors are",
+)
 UPPER_BOUND = (
     "sources are added to images as they are: what deconvolution does to a source that flickers is not in it, so for "
     "synthesis images completeness is an upper bound"
@@ -189,7 +195,10 @@ def report_cards(asked: Asked, watcher: Watcher) -> tuple[list[Power], tuple[str
         only = hit[:, number] & (hit.sum(axis=1) == 1) & (kinds != completeness.NOTHING)
         power = {kind: float(hit[kinds == kind, number].mean()) for kind in dict.fromkeys(kinds.tolist())}
         cards.append(Power(plugin.name, power, int(only.sum()), costs[number]))
-    said = [_rate_said(outcome.found.lowest_p)]
+    powers = {card.plugin: card.power for card in cards}
+    empty = report_card.blank(asks, [nulls[found.number][ALL].judgement for found in study.fields])
+    said = [_rate_said(outcome.found.lowest_p), report_card.columns_said(Counter(kinds.tolist()))]
+    said += report_card.silence_said(asks, powers, empty)
     if not order.settings.completeness.period_search:
         said.append("period searches are left out: [completeness] period_search = true in the run's settings asks them")
     return cards, tuple(said)
@@ -200,7 +209,7 @@ def _rate_said(lowest_p: FloatArray) -> str:
     low, high = (float(np.maximum(POWER_RATE, p)) for p in (lowest_p.min(), lowest_p.max()))
     if high <= POWER_RATE * (1 + 1e-9):
         return f"power at a false-alarm rate of {POWER_RATE:g}"
-    rates = f"{high:.3g}" if f"{low:.3g}" == f"{high:.3g}" else f"{low:.3g} to {high:.3g}"
+    rates = from_to(low, high, ".3g")
     fewest = round(1.0 / float(lowest_p.max()) - 1.0)
     return (
         f"power at a false-alarm rate of {rates}, NOT {POWER_RATE:g}: that takes {round(1 / POWER_RATE) - 1} controls beside "
@@ -623,13 +632,18 @@ def _remarks(
     placed = (tables.positions["kind"] == "target") & (tables.positions["search"] < 0)
     without = {int(n) for n in tables.positions["field"][placed]} - {f.number for f in study.fields}
     if without:
-        said.append(f"{len(without)} fields with fewer than two controls are left out")
+        fields = how_many(
+            len(without), "field with fewer than two controls is", "fields with fewer than two controls are"
+        )
+        said.append(f"{fields} left out")
     searched = int(((tables.positions["kind"] == "target") & (tables.positions["search"] >= 0)).sum())
     if searched:
-        said.append(f"{searched} targets that were searched within their position errors are not in these tables")
+        said.append(f"{how_many(searched, *SEARCHED)} not in these tables")
     undated = int((counts(study.frames) & ~np.isfinite(study.frames["middle_tdb_s"])).sum())
     if undated:
-        said.append(f"{undated} frames without a clock see a source at a random phase")
+        said.append(
+            f"{how_many(undated, 'frame without a clock sees', 'frames without a clock see')} a source at a random phase"
+        )
     if not targets["by_cycles"].any():
         said.append("looks are epochs; a target list with ephemerides (--targets) makes them cycles")
     return tuple(said)
@@ -639,18 +653,24 @@ def _control_remarks(study: Study, lowest_p: FloatArray, lit: bool) -> list[str]
     """Whether controls are enough to find anything, by the smallest p-value that each source could have got."""
     short = lowest_p >= study.bars.empirical
     hopeless = short & (np.rint(1.0 / lowest_p - 1.0) < FEWEST_FOR_TAIL)
+    bar, final = f"{study.bars.empirical:.3g}", f"{study.bars.final:.3g}"
     said = []
     if hopeless.any():
         said.append(
             f"too few controls for {hopeless.sum()} of {len(short)} sources: p cannot be below "
-            f"{lowest_p[hopeless].min():.3g} at best, below {study.bars.empirical:.3g} is needed, and no tail can be fitted to "
-            f"fewer than {FEWEST_FOR_TAIL}: however bright, they could not have been found"
+            f"{lowest_p[hopeless].min():.3g} at best, below {bar} is needed, and no tail can be fitted to fewer than "
+            f"{FEWEST_FOR_TAIL}: however bright, they could not have been found"
             + ("; for bright sources as many comparisons are wanted as controls" if lit else "")
         )
     if (short & ~hopeless).any():
         said.append(
-            f"controls cannot decide by themselves for {(short & ~hopeless).sum()} of {len(short)} sources (p below "
-            f"{study.bars.empirical:.3g} is needed): the upper bound of a fitted tail does (n_extrapolated)"
+            f"controls cannot decide by themselves for {(short & ~hopeless).sum()} of {len(short)} sources (p below {bar} is "
+            "needed): the upper bound of a fitted tail does (n_extrapolated)"
+        )
+    if said and bar != final:
+        said.append(
+            f"p below {bar} is what the run's p-values by controls alone leave for one more target; where a tail is fitted, "
+            f"those of the run's targets count by their tails too, are smaller, and leave more: p below {final}"
         )
     return said
 
@@ -674,6 +694,6 @@ def _proof_remarks(proofs: Sequence[planted.Proof | None]) -> tuple[str, ...]:
     counted = [p.counted for p in made]
     return (
         said,
-        f"of a beam-shaped source {100 * min(counted):.1f} to {100 * max(counted):.1f} % are counted; fluxes here are "
+        f"of a beam-shaped source {from_to(100 * min(counted), 100 * max(counted), '.1f')} % are counted; fluxes here are "
         "those counted, put right where comparisons tell what is lost",
     )

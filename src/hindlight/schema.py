@@ -69,7 +69,11 @@ REASONS = {
 
 ASSUMPTIONS = {
     "geocentre": "no site in the header or settings: the Earth's centre was used, times are uncertain by 21 ms",
-    "no_clock": "no time of day: fluxes are measured, timing is refused",
+    "no_clock": "no time of day that can be trusted: fluxes are measured, timing is refused",
+    "axis_zero_assumed": "the time axis has no reference (MJDREF, DATEREF): DATE-OBS is taken for its zero, each coordinate "
+    "for the middle of its plane",
+    "axis_time_unknown": "planes of a time axis without CRVAL, CDELT or unit, or without a reference (MJDREF, DATEREF) and a "
+    "start (DATE-OBS) that could be its zero",
     "implausible_date": "a date before 1850 or after 2100, or an end before its start: that date was not used",
     "implausible_exposure": "an exposure above 100 days, or negative: it was taken as unknown",
     "repeated_keyword": "a keyword stands more than once with different values: the first one was taken",
@@ -90,6 +94,8 @@ ASSUMPTIONS = {
     "night_unsettled": "the date is that of the night and nothing says whether the time is of the day after",
     "dates_disagree": "the date and MJD (or JD) are more than half a day apart: neither time was trusted",
     "date_form": "day and month of the date could be the other way round: the first was taken as the day",
+    "century_assumed": "a year of two digits, 00 to 29, was read as 19YY: where 20YY was meant, clock_offset_s = 3155760000.0 "
+    "in a [[frames]] block",
     "clock_unit_assumed": "the time of day is a bare number: up to 24 it was taken as hours, above as seconds",
     "local_time": "the time of day is local: the offset from UTC in the header was applied",
     "local_unsettled": "the time of day is local and its offset from UTC, or the sign of that, is not stated",

@@ -7,7 +7,7 @@ the command line's business.
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -37,7 +37,14 @@ SUPPLIED_BY = {
     "primary_beam_unknown": "primary_beam",
     "photographic_assumed": "response",
     "primary_beam_apparent": "primary_beam_fwhm_deg",
+    "century_assumed": "clock_offset_s",
 }  # a word of an assumption -> the key of a block that ends it
+LONGEST_PATH = 50
+CENTURY = "clock_offset_s"
+CENTURY_S = 3155760000.0  # 36525 days: from a date of 1900 to 1929 to the same one a century later, from March 1900 on
+CENTURY_BLOCK = {"to": "1930-01-01"}  # an offset is no fact that a header lacks: only a date tells these frames
+UNIT_EXAMPLES = {"optical": '"adu"', "radio": '"Jy/beam"', "": '"adu" or "Jy/beam"'}
+SITE_EXAMPLE = '"north hill", or { lat = -30.1, lon = 20.4, height = 1200.0 }'
 
 
 @dataclass(frozen=True)
@@ -72,7 +79,7 @@ class TargetSummary:
 
 @dataclass(frozen=True)
 class Count:
-    """How often a fixed word occurs, and what it means."""
+    """How often a fixed word occurs, and what it means, with the first file by path that it is said of."""
 
     word: str
     count: int
@@ -90,11 +97,15 @@ class Coverage:
 
 @dataclass(frozen=True)
 class Missing:
-    """What the headers of an instrument's frames do not say: for each key of a `[[frames]]` block how many lack it."""
+    """What the headers of an instrument's frames do not say: for each key of a `[[frames]]` block how many lack it.
+
+    `kind` is 'radio', 'optical', or '' where nothing tells.
+    """
 
     instrument: str
     n_frames: int
     lacking: Mapping[str, int]
+    kind: str = ""
 
 
 @dataclass(frozen=True)
@@ -135,15 +146,13 @@ def summarise(
     labels = np.asarray(frames["channel"], dtype=object)
     rows_of = {label: np.flatnonzero(labels == label) for label in sorted(set(labels.tolist()))}
     channels = [_channel(frames, label, rows) for label, rows in rows_of.items()]
-    words: Counter[str] = Counter()
-    for text, count in Counter(frames["assumptions"]).items():
-        words.update(dict.fromkeys(words_of(text), count))
+    assumed = zip(frames["path"], frames["assumptions"], strict=True)
     return Summary(
         n_frames=len(labels),
         channels=tuple(sorted(channels, key=lambda c: (c.instrument, c.channel))),
         targets=_targets(frames, rows_of, target_names, np.asarray(ra, float), np.asarray(dec, float)),
-        rejects=_counts(Counter(str(row["reason"]) for row in rejects), REASONS),
-        assumptions=_counts(words, ASSUMPTIONS),
+        rejects=_counts(((str(row["path"]), str(row["reason"])) for row in rejects), REASONS),
+        assumptions=_counts(assumed, ASSUMPTIONS),
         coverage=_coverage(frames),
         missing=_missing(frames),
     )
@@ -192,10 +201,28 @@ def _missing(frames: Mapping[str, Any]) -> tuple[Missing, ...]:
     for name, rows in _by_instrument(frames).items():
         lacking: Counter[str] = Counter()
         for text, count in Counter(frames["assumptions"][rows]).items():
-            lacking.update({SUPPLIED_BY[word]: count for word in words_of(text) if word in SUPPLIED_BY})
+            lacking.update(dict.fromkeys(_keys_for(text), count))
         if lacking:
-            found.append(Missing(name, len(rows), {key: lacking[key] for key in FACTS if key in lacking}))
+            keys = {key: lacking[key] for key in FACTS if key in lacking}
+            found.append(Missing(name, len(rows), keys, _kind(frames, rows)))
     return tuple(sorted(found, key=lambda row: (-row.n_frames, row.instrument)))
+
+
+def _keys_for(assumptions: str) -> set[str]:
+    """Keys of a block that would end assumptions of a frame; no offset of a clock that is set, or that is not there."""
+    words = words_of(assumptions)
+    keys = {SUPPLIED_BY[word] for word in words if word in SUPPLIED_BY}
+    given = next((part for part in assumptions.split(";") if part.strip().startswith("set_by_user")), "")
+    return keys - ({CENTURY} if "no_clock" in words or CENTURY in given else set())
+
+
+def _kind(frames: Mapping[str, Any], rows: NDArray[np.int64]) -> str:
+    """Whether an instrument's frames are of radio or of light, '' where no column tells."""
+    if np.isfinite(frames["frequency_hz"][rows]).any():
+        return "radio"
+    counts = np.isfinite(np.asarray(frames["electrons_per_unit"][rows], float)).any()
+    seen = counts or any(frames["band"][rows]) or any(frames["response"][rows] == "photographic")
+    return "optical" if seen else ""
 
 
 def settings_to_fill_in(missing: Sequence[Missing]) -> str:
@@ -205,8 +232,13 @@ def settings_to_fill_in(missing: Sequence[Missing]) -> str:
     """
     lines: list[str] = []
     for row in missing:
-        everywhere = [key for key, count in row.lacking.items() if count == row.n_frames]
-        for keys, more in ((everywhere, {}), ([k for k in row.lacking if k not in everywhere], {WHERE_MISSING: True})):
+        plain = [key for key in row.lacking if key != CENTURY]
+        everywhere = [key for key in plain if row.lacking[key] == row.n_frames]
+        for keys, more in (
+            (everywhere, {}),
+            ([k for k in plain if k not in everywhere], {WHERE_MISSING: True}),
+            ([k for k in row.lacking if k == CENTURY], CENTURY_BLOCK),
+        ):
             if keys:
                 lines += ["", *block_lines({**block_for(row.instrument), **more})]
                 lines += [_to_fill_in(key, row) for key in keys]
@@ -216,7 +248,10 @@ def settings_to_fill_in(missing: Sequence[Missing]) -> str:
 def _to_fill_in(key: str, row: Missing) -> str:
     few = row.lacking[key] < row.n_frames
     count = f"{row.lacking[key]} of {row.n_frames} frames" if few else f"all {row.n_frames} frames"
-    return f'# {key} = ""  # {count}: {FACTS[key].doc}, as {FACTS[key].example}'
+    if key == CENTURY:
+        return f"# {key} = {CENTURY_S}  # {count}: where years of two digits, 00 to 29, mean 20YY; 0.0 where they mean 19YY"
+    example = {"unit": UNIT_EXAMPLES[row.kind], "site": SITE_EXAMPLE}.get(key, FACTS[key].example)
+    return f'# {key} = ""  # {count}: {FACTS[key].doc}, as {example}'
 
 
 def _channel(frames: Mapping[str, Any], label: str, rows: NDArray[np.int64]) -> ChannelSummary:
@@ -252,9 +287,27 @@ def _targets(
     return tuple(TargetSummary(name, n, channels) for name, n, channels in counts)
 
 
-def _counts(found: Counter[str], meanings: Mapping[str, str]) -> tuple[Count, ...]:
-    ordered = sorted(found.items(), key=lambda item: (-item[1], item[0]))
-    return tuple(Count(word, count, meanings.get(word, "")) for word, count in ordered)
+def _counts(found: Iterable[tuple[str, str]], meanings: Mapping[str, str]) -> tuple[Count, ...]:
+    """Words counted, given paths with their words, most frequent first; each with the first path that has it."""
+    texts: dict[str, tuple[int, str]] = {}  # few, though frames are many
+    for path, text in found:
+        count, least = texts.get(text, (0, path))
+        texts[text] = count + 1, min(least, path)
+    counted: Counter[str] = Counter()
+    first: dict[str, str] = {}
+    for text, (count, path) in texts.items():
+        for word in dict.fromkeys(words_of(text)):
+            counted[word] += count
+            first[word] = min(first.get(word, path), path)
+    ordered = sorted(counted.items(), key=lambda item: (-item[1], item[0]))
+    return tuple(
+        Count(word, n, f"{meanings.get(word, '')} (as in {_end_of(first[word])})".strip()) for word, n in ordered
+    )
+
+
+def _end_of(path: str) -> str:
+    """A path, without its beginning where it is too long for a table."""
+    return path if len(path) <= LONGEST_PATH else "..." + path[3 - LONGEST_PATH :]
 
 
 def _finite(values: FloatArray) -> FloatArray:

@@ -249,7 +249,7 @@ def tabled(
     described = _described(session, places, [*zip(beyond.tolist(), p.testable.tolist(), strict=True)], examined)
     cells = {found.number: outcome.plugin_cells(found, plugins) for found in fields}
     errors = dict(zip(session.targets.names, session.targets.position_error.tolist(), strict=True))
-    rows = []
+    beams, rows = _beams(frames, settings), []
     for place, cells_of in zip(places, described, strict=True):
         found, where = place.found, int(np.searchsorted(positions["id"], place.target))
         row = dict(cells[found.number][int(np.searchsorted(found.ids, place.target))])
@@ -260,17 +260,27 @@ def tabled(
         row["n_trials"] = found.n_trials
         if found.n_trials > 1:
             row |= {"found_ra": float(positions["ra"][where]), "found_dec": float(positions["dec"][where])}
-        said_of_it = outcome.place_note(
-            found, _distances(positions, stated, where), errors.get(place.name, 0.0), settings.search.most_places
-        )
+        beam = min((beams[row["channel"]] for row in cells_of.channels if row["channel"] in beams), default=np.inf)
+        apart = _distances(positions, stated, where)
+        said_of_it = outcome.place_note(found, apart, errors.get(place.name, 0.0), settings.search.most_places, beam)
         row["notes"] = outcome.notes(found, place.index, place.at, p, settings.controls, said_of_it)
         rows.append(row)
     faults = [f for found in fields for f in found.judgement.faults] + [f for e in examined.values() for f in e.faults]
     meta = outcome.meta(settings, p, fields)
     table = outcome.candidate_table(rows, plugins, meta)
+    sizes = [int(place.found.ranked.n_controls[place.index]) for place in places]
+    said = [*said, *outcome.undecided_remarks(described, sizes, p, settings.detection.min_frames)]
     result = _result(session.run, table, described, frames, rejects, merged(faults), p, fields, settings, said)
     _write(session, result, described, fields, {place.target: place.name for place in places}, meta)
     return result
+
+
+def _beams(frames: Columns, settings: Settings) -> dict[str, float]:
+    """The median width of the beam or seeing of each channel, in arcsec."""
+    labels = np.asarray(frames["channel"], object)
+    rows_of = {str(label): np.flatnonzero(labels == label) for label in sorted(set(labels.tolist()))}
+    width = settings.photometry.assumed_fwhm_pixels
+    return {label: 3600.0 * float(np.median(plan.beams(frames, rows, width))) for label, rows in rows_of.items()}
 
 
 def _distances(positions: Columns, stated: int, judged: int) -> FloatArray:
@@ -334,6 +344,7 @@ def _result(
     said: Sequence[str],
 ) -> Outcome:
     """The run's outcome in numbers."""
+    units = dict(zip(frames["channel"].tolist(), frames["unit"].tolist(), strict=True))
     return Outcome(
         run=run.path,
         table=table,
@@ -343,7 +354,7 @@ def _result(
         rejects=dict(sorted(Counter(str(row["reason"]) for row in rejects).items())),
         faults=tuple(faults),
         extrapolated=int(p.extrapolated.sum()),
-        remarks=(*outcome.related_frames(frames), *said, *outcome.remarks(p, fields, settings)),
+        remarks=(*outcome.related_frames(frames), *said, *outcome.remarks(p, fields, settings, units)),
     )
 
 
