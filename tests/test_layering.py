@@ -15,7 +15,7 @@ PLUGINS = Path(hindlight_plugins.__file__).parent
 ORDER = [
     "errors", "schema", "facts", "blocks", "settings", "dates", "lightcurve", "plugin", "cutouts", "hookspecs",
     "tables", "host", "fence", "clock", "systems", "celestial", "sky", "headers", "instants", "sites", "reading",
-    "goodtime", "knowledge", "files", "companions", "channels", "outlines", "footprints", "frametable", "archive",
+    "integrity", "goodtime", "knowledge", "files", "companions", "channels", "outlines", "footprints", "frametable", "archive",
     "summary", "positions", "apart", "pixels", "background", "detection", "pointing", "growth", "opening", "fluxes",
     "photometry", "planted", "duplicates", "likeness", "robust", "losses", "response", "ensemble", "store", "judge",
     "calibrate", "ranking", "lifted", "search", "timing", "injection", "completeness", "brighter", "candidates", "plan",
