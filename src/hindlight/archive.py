@@ -116,8 +116,8 @@ def walk(
                 if held > HELD_AT_ONCE:
                     parts.append(columns_of(found, settings, rejects))
                     found, held = [], 0
+            step(1)  # a file whose checksums are verified may take a while
         parts.append(columns_of(found, settings, rejects))
-        step(len(piece))
     rejects.sort(key=lambda row: (row["path"], row["hdu"], row["plane"], row["archive"]))
     unchanged = present - {(archive, entry.path) for archive, entry in new}
     return WalkResult(_joined(parts), rejects, present, unchanged)
