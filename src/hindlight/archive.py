@@ -1,7 +1,8 @@
 """Walking an archive: every frame with what its header says, and everything that is set aside, from headers only.
 
 Files are read in pieces of some hundreds; what is costly one by one (times, footprints) is done for a piece at once.
-A file that is broken never ends the walk: it becomes a row of the rejects. No pixel is read here.
+A file that is broken never ends the walk: it becomes a row of the rejects. No pixel is read here, unless checksums are
+to be verified.
 """
 
 from __future__ import annotations
@@ -9,7 +10,9 @@ from __future__ import annotations
 import math
 import os
 from collections.abc import Callable, Iterator, Mapping, Sequence
+from contextlib import AbstractContextManager
 from dataclasses import dataclass, replace
+from functools import partial
 from itertools import islice
 from typing import Any, NamedTuple
 
@@ -22,7 +25,8 @@ from hindlight.facts import NAN, Cards, FrameFacts
 from hindlight.files import FileEntry, list_files, local_path, open_source
 from hindlight.frametable import LONGEST_EXPOSURE_S, Columns, Found, Row, columns_of, reject
 from hindlight.goodtime import with_good_time
-from hindlight.headers import GOOD_TIME, Hdu, Plane, SetAsideError, facts_of, inherited, planes, read_hdus
+from hindlight.headers import GOOD_TIME, Hdu, Plane, SetAsideError, Source, facts_of, inherited, planes, read_hdus
+from hindlight.integrity import verifier
 from hindlight.knowledge import Knowledge
 from hindlight.plugin import Dialect
 from hindlight.schema import FRAMES
@@ -112,8 +116,8 @@ def walk(
                 if held > HELD_AT_ONCE:
                     parts.append(columns_of(found, settings, rejects))
                     found, held = [], 0
+            step(1)  # a file whose checksums are verified may take a while
         parts.append(columns_of(found, settings, rejects))
-        step(len(piece))
     rejects.sort(key=lambda row: (row["path"], row["hdu"], row["plane"], row["archive"]))
     unchanged = present - {(archive, entry.path) for archive, entry in new}
     return WalkResult(_joined(parts), rejects, present, unchanged)
@@ -173,16 +177,21 @@ def _read_file(archive: str, entry: FileEntry, companions: Mapping[str, str], re
     try:
         if entry.fault:
             raise SetAsideError("unreadable", entry.fault)
-        limit = reader.settings.unpacked_limit_mb * MEGABYTE
-        table = _companion_table(archive, companions, limit)
-        with open_source(local_path(archive, entry.path), limit) as source:
+        opened = partial(_opened, archive, reader)
+        wanted = reader.settings.verify_checksums
+        table = _companion_table(opened, companions)
+        with opened(entry.path) as source, verifier(wanted, opened, entry.path, companions) as sums:
             for hdu in read_hdus(source):
+                unverified, fault = sums.verdict(hdu, _takes_primary(hdu.cards, primary))
                 last = hdu.index
+                images += hdu.is_image
                 if not hdu.index and not hdu.axes:
                     primary = hdu.cards
-                if hdu.is_image:
-                    images += 1
-                    frames = _frames_of(archive, entry, hdu, primary, companions, reader)
+                if fault is not None:
+                    reader.rejects.append(reject(archive, entry, fault, last))
+                elif hdu.is_image:
+                    words = ("unverified",) if unverified else ()
+                    frames = _frames_of(archive, entry, hdu, primary, companions, reader, words)
                     waiting += frames
                     held += _held(frames)
                     if held > HELD_AT_ONCE:
@@ -202,13 +211,15 @@ def _read_file(archive: str, entry: FileEntry, companions: Mapping[str, str], re
         yield [_known(frame, reader, table) for frame in waiting]
 
 
-def _companion_table(archive: str, companions: Mapping[str, str], limit: int) -> Hdu | None:
+def _companion_table(
+    opened: Callable[[str], AbstractContextManager[Source]], companions: Mapping[str, str]
+) -> Hdu | None:
     """The table of good time in a file beside the image, None where none is named. Raises `SetAsideError`."""
     name = companions.get("good_time")
     if name is None:
         return None
     try:
-        with open_source(local_path(archive, name), limit) as source:
+        with opened(name) as source:
             table = next((hdu for hdu in read_hdus(source) if hdu.is_good_time), None)
     except (SetAsideError, OSError) as error:
         detail = (error.strerror if isinstance(error, OSError) else None) or str(error)
@@ -219,21 +230,31 @@ def _companion_table(archive: str, companions: Mapping[str, str], limit: int) ->
     return table
 
 
+def _opened(archive: str, reader: _Reader, path: str) -> AbstractContextManager[Source]:
+    return open_source(local_path(archive, path), reader.settings.unpacked_limit_mb * MEGABYTE)
+
+
 def _held(frames: Sequence[Found]) -> int:
     """About the bytes that frames take while they wait."""
     return FRAME_BYTES * len(frames) + sum(len(f.hdu.cards.raw) for f in frames if f.plane.index == 0)
 
 
 def _frames_of(
-    archive: str, entry: FileEntry, hdu: Hdu, primary: Cards | None, companions: Mapping[str, str], reader: _Reader
+    archive: str,
+    entry: FileEntry,
+    hdu: Hdu,
+    primary: Cards | None,
+    companions: Mapping[str, str],
+    reader: _Reader,
+    words: tuple[str, ...],
 ) -> list[Found]:
-    """The frames of an HDU, as far as nothing is wrong with it."""
+    """The frames of an HDU, as far as nothing is wrong with it; `words` are among the assumptions of each."""
     frames: list[Found] = []
     forced = reader.settings.dialect != AUTO
     try:
-        cards, words = _with_primary(hdu.cards, primary)
+        cards, more = _with_primary(hdu.cards, primary)
         for plane in planes(hdu, reader.settings.planes_limit):
-            read = _facts(cards, plane, reader.dialects, forced, words)
+            read = _facts(cards, plane, reader.dialects, forced, (*more, *words))
             frames.append(Found(archive, entry, hdu, plane, *read, companions))
     except SetAsideError as error:
         reader.rejects.append(reject(archive, entry, error, hdu.index))
@@ -271,11 +292,18 @@ def _with_primary(cards: Cards, primary: Cards | None) -> tuple[Cards, tuple[str
 
     The standard has INHERIT for this (see `read_hdus`); many files that mean it do not say it.
     """
-    if primary is None or "INHERIT" in cards or any(key in cards for key in TIME_CARDS):
-        return cards, ()
-    if not any(key in primary for key in TIME_CARDS):
+    if primary is None or "INHERIT" in cards or not _takes_primary(cards, primary):
         return cards, ()
     return inherited(cards, primary), ("primary_header",)
+
+
+def _takes_primary(cards: Cards, primary: Cards | None) -> bool:
+    """Whether cards of a primary header without data count for an extension too."""
+    if primary is None or cards.get("INHERIT") is True:
+        return primary is not None
+    if "INHERIT" in cards or any(key in cards for key in TIME_CARDS):
+        return False
+    return any(key in primary for key in TIME_CARDS)
 
 
 def _facts(

@@ -52,6 +52,7 @@ REASONS = {
     "bad_header": "the header cannot be parsed or has no END",
     "truncated": "the file ends before its data do",
     "bad_compression": "the compressed file is broken or unpacks to more than the limit",
+    "checksum": "a checksum in the header is not that of the bytes: damaged, or changed since without a new checksum",
     "no_image": "no HDU of the file holds an image",
     "no_wcs": "the image has no celestial coordinates",
     "bad_wcs": "the celestial coordinates are unusable",
@@ -115,7 +116,7 @@ ASSUMPTIONS = {
     "gains_not_applied": "the primary beam is corrected already: the companion with its gains is not applied",
     "set_by_user": "these facts come from [[frames]] blocks of the settings",
     "set_without_effect": "facts that [[frames]] blocks give but this header leaves no place for",
-    "unverified": "checksums were not verified",
+    "unverified": "the header has checksums that were not verified: see verify_checksums under [inventory]",
 }
 
 VERDICTS = {

@@ -47,6 +47,9 @@ class Inventory:
         False, "whether BMAJ and BMIN that are too wide in degrees but not in arcsec are read as arcsec"
     )
     planes_limit: int = setting(100_000, "a cube of more planes than this is set aside", minimum=1)
+    verify_checksums: bool = setting(
+        False, "whether CHECKSUM and DATASUM are verified where a header has them, which reads whole files"
+    )
 
 
 @dataclass(frozen=True)
