@@ -612,7 +612,7 @@ def _remarks(
     lit = any(null.brighter for of_field in nulls.values() for null in of_field.values())
     said = [
         f"{len(study.cells)} cells of {chosen.per_cell} sources each in {len(study.subsets)} subsets of frames, at "
-        f"{sum(len(f.ids) for f in study.fields)} controls of {len(study.fields)} fields",
+        f"{sum(len(f.ids) for f in study.fields)} controls of {how_many(len(study.fields), 'field', 'fields')}",
         f"recovered means: p below {study.bars.final:.3g}, which the run's own p-values leave for one more target at a "
         f"false-discovery rate of {study.settings.ranking.level:g}; what checks would say of it is not asked",
         "a source has the same flux in median frame errors in every channel; channels of Stokes Q, U, V get none",
