@@ -14,14 +14,15 @@ PLUGINS = Path(hindlight_plugins.__file__).parent
 
 ORDER = [
     "errors", "wording", "schema", "facts", "blocks", "settings", "dates", "lightcurve", "plugin", "cutouts",
-    "hookspecs", "tables", "host", "fence", "clock", "systems", "celestial", "sky", "headers", "instants", "sites",
-    "reading", "integrity", "goodtime", "knowledge", "files", "companions", "channels", "outlines", "footprints",
-    "frametable", "archive", "summary", "positions", "apart", "pixels", "background", "detection", "pointing", "growth",
-    "opening", "fluxes", "photometry", "planted", "duplicates", "likeness", "robust", "losses", "response", "ensemble",
-    "store", "judge", "calibrate", "ranking", "lifted", "search", "timing", "injection", "completeness", "brighter",
-    "candidates", "plan", "more_controls", "comparisons", "order", "tasks", "examining", "trials", "conclude", "bright",
-    "outcome", "crew", "record", "asides", "verdicts", "measuring", "second_pass", "runner", "report_card", "recovery",
-    "survey", "export", "demo", "testing", "outlet", "cli", "__main__",
+    "hookspecs", "tables", "host", "fence", "clock", "storage", "systems", "celestial", "sky", "headers", "instants",
+    "sites", "reading", "integrity", "goodtime", "knowledge", "files", "companions", "channels", "outlines",
+    "footprints", "frametable", "archive", "summary", "positions", "apart", "spans", "pixels", "background",
+    "detection", "pointing", "growth", "opening", "fluxes", "photometry", "planted", "duplicates", "likeness", "robust",
+    "losses", "response", "ensemble", "store", "judge", "calibrate", "ranking", "lifted", "search", "timing",
+    "injection", "completeness", "brighter", "candidates", "plan", "more_controls", "comparisons", "order", "tasks",
+    "examining", "trials", "conclude", "bright", "outcome", "crew", "record", "asides", "verdicts", "measuring",
+    "second_pass", "runner", "report_card", "recovery", "survey", "export", "demo", "testing", "outlet", "cli",
+    "__main__",
 ]  # fmt: skip
 PLUGINS_MAY_IMPORT = {"hindlight", "numpy", "scipy", "astropy", "photutils", "nifty_ls"}
 
@@ -59,6 +60,12 @@ def test_only_the_crew_imports_dask():
     for path in SOURCE.glob("*.py"):
         names = {module.split(".")[0] for module in imports(path)}
         assert path.stem == "crew" or not names & {"dask", "distributed"}
+
+
+def test_only_storage_imports_fsspec():
+    """Whoever reads files need not know where they are."""
+    for path in SOURCE.glob("*.py"):
+        assert path.stem == "storage" or "fsspec" not in {module.split(".")[0] for module in imports(path)}
 
 
 def test_only_the_command_line_prints():

@@ -31,6 +31,7 @@ from hindlight.knowledge import Knowledge
 from hindlight.plugin import Dialect
 from hindlight.schema import FRAMES
 from hindlight.settings import COMPANION_KINDS, Inventory, Settings
+from hindlight.storage import StorageError
 
 FILES_AT_ONCE = 512
 HELD_AT_ONCE = 1 << 25  # bytes of headers and of frames: files may have many HDUs, and these long headers
@@ -79,7 +80,7 @@ def walk(
     progress: Callable[[int], None] | None = None,
     skip: Sequence[str] = (),
 ) -> WalkResult:
-    """Every frame of some archive folders that is not among the `known` frames, read from headers alone.
+    """Every frame of some archives (folders or URLs) that is not among the `known` frames, read from headers alone.
 
     `known` are columns of frames found before; their files are not read again while size and time are the same.
     `progress` is called with a number of files now and then; folders in `skip`, as that of a run, are not entered.
@@ -205,7 +206,8 @@ def _read_file(archive: str, entry: FileEntry, companions: Mapping[str, str], re
         # A gzip stream that breaks after some HDUs cannot know which one it was in.
         reader.rejects.append(reject(archive, entry, error, last + 1 if last >= 0 and images else error.hdu))
     except OSError as error:
-        reason = SetAsideError("unreadable", f"the system says: {error.strerror}")
+        said = str(error) if isinstance(error, StorageError) else f"the system says: {error.strerror}"
+        reason = SetAsideError("unreadable", said)
         reader.rejects.append(reject(archive, entry, reason))
     if waiting:
         yield [_known(frame, reader, table) for frame in waiting]

@@ -130,7 +130,10 @@ def inventory(
     archive: tuple[str, ...], targets: Path | None, settings_file: Path | None, plugins: tuple[Path, ...],
     quiet: bool, verbose: bool,
 ) -> None:  # fmt: skip
-    """Headers only: what is there, when, where, in what state."""
+    """Headers only: what is there, when, where, in what state.
+
+    ARCHIVE is a folder, searched with all below it, or the URL of one in any storage that fsspec reaches (s3://...).
+    """
     from hindlight import survey
 
     with _watching(quiet, verbose) as watcher:
@@ -158,6 +161,8 @@ def mine(
     without: tuple[str, ...], workers: int | None, scheduler: str | None, quiet: bool, verbose: bool,
 ) -> None:  # fmt: skip
     """The whole job: measure every target in every frame, and rank them.
+
+    ARCHIVE is a folder, searched with all below it, or the URL of one in any storage that fsspec reaches (s3://...).
 
     The same command again continues an interrupted run, or extends it with new files and targets.
     """

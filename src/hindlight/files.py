@@ -1,21 +1,24 @@
 """Files of an archive: which there are, and their bytes, unpacked as far as is needed.
 
-Only local paths are known. `list_files` and `open_source` are the two places that touch a file system, so that other
-kinds of storage can be added there. Nothing here knows what FITS is, apart from the endings of its names and its
-blocks.
+A file is named by its path, or as `storage.joined` writes it where the archive is a URL; `list_files`, `opened` and
+`check_unchanged` tell the two apart, and whoever reads through them need not. Nothing here knows what FITS is, apart from
+the endings of its names and its blocks.
 """
 
 from __future__ import annotations
 
+import logging
 import os
 import re
 import stat
 import zlib
 from collections.abc import Iterable, Iterator
-from contextlib import contextmanager
+from contextlib import closing, contextmanager, suppress
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Any, Protocol
 
+from hindlight import storage
 from hindlight.errors import UsageError
 from hindlight.headers import BLOCK, FIRST_READ, SetAsideError, Source
 
@@ -29,10 +32,12 @@ COARSE_CLOCK_NS = 2_000_000_000  # the same file may show a rounded time where i
 _UNFIT = re.compile(r"[\x00-\x08\x0b-\x1f\x7f-\x9f\u2028\u2029\ud800-\udfff]|\A\s|\s\Z")
 _ESCAPE = re.compile(rb"\\x([0-9a-f]{2})")
 
+log = logging.getLogger("hindlight")
+
 
 @dataclass(frozen=True)
 class FileEntry:
-    """A file of an archive: its path relative to the archive folder, size in bytes and modification time.
+    """A file of an archive: its path relative to the archive folder, size in bytes and modification time (0: not told).
 
     `path` is as `path_text` writes it. `fault` is a sentence where the file (or a folder) cannot be read; size and time
     are then 0.
@@ -57,30 +62,42 @@ def path_text(path: str) -> str:
     )
 
 
+def archive_text(archive: str, absolute: bool = False) -> str:
+    """An archive as tables hold it: a folder, on request by its absolute path, or a URL. Raises `UsageError`."""
+    name = storage.without_scheme(archive)
+    return path_text(str(Path(name).resolve()) if absolute and not storage.is_remote(name) else name)
+
+
 def local_path(archive: str, path: str = "") -> str:
-    """Where the system finds a file of an archive, both as `path_text` writes them."""
+    """Where the system finds a file of an archive, or storage does; both as `path_text` writes them."""
+    join = storage.joined if storage.is_remote(archive) else os.path.join
     if "\\x" not in archive and "\\x" not in path:
-        return os.path.join(archive, path) if path else archive
-    names = (_ESCAPE.sub(lambda found: bytes([int(found[1], 16)]), os.fsencode(text)) for text in (archive, path))
-    return os.path.join(*(os.fsdecode(name) for name in names)) if path else os.fsdecode(next(names))
+        return join(archive, path) if path else archive
+    names = [_ESCAPE.sub(lambda found: bytes([int(found[1], 16)]), os.fsencode(text)) for text in (archive, path)]
+    archive, path = (os.fsdecode(name) for name in names)
+    return join(archive, path) if path else archive
 
 
 def check_folders(archives: Iterable[str]) -> None:
-    """Raise `UsageError` for the first archive that is no folder."""
+    """Raise `UsageError` for the first archive that is no folder, here or in its storage."""
     for archive in archives:
-        if not os.path.isdir(local_path(archive)):
+        if storage.is_remote(archive):
+            storage.check(local_path(archive))
+        elif not os.path.isdir(local_path(archive)):
             raise UsageError(f"archive {archive}: no such folder; give folders that hold FITS files")
 
 
-def list_files(archive: str, visited: set[tuple[int, int]] | None = None) -> list[FileEntry]:
+def list_files(archive: str, visited: set[tuple[int, Any]] | None = None) -> list[FileEntry]:
     """Every FITS file below a folder, hidden ones too, in order of their paths.
 
-    Links are followed; each folder is entered once, so that loops of links end. `visited` (device and inode of folders)
-    is shared between archives that may overlap. Raises `UsageError` if the archive is no folder.
+    Links are followed; each folder is entered once, so that loops of links end. `visited` (device and inode of folders,
+    storage and name of files) is shared between archives that may overlap. Raises `UsageError` if the archive is no folder.
     """
+    visited = set() if visited is None else visited
+    if storage.is_remote(archive):
+        return _remote_files(archive, visited)
     check_folders([archive])
     root = Path(local_path(archive))
-    visited = set() if visited is None else visited
     entries: list[FileEntry] = []
     pending = [""]
     while pending:
@@ -99,7 +116,16 @@ def list_files(archive: str, visited: set[tuple[int, int]] | None = None) -> lis
     return sorted(entries, key=lambda entry: entry.path)
 
 
-def _scan(root: Path, folder: str, visited: set[tuple[int, int]]) -> list[os.DirEntry[str]]:
+def _remote_files(archive: str, visited: set[tuple[int, Any]]) -> list[FileEntry]:
+    """The same of an archive given by URL."""
+    seen = [s for s in storage.listed(local_path(archive), visited) if s.fault or s.path.lower().endswith(ENDINGS)]
+    entries = [FileEntry(path_text(s.path), s.size, s.modified_ns, s.fault) for s in seen]
+    if any(entry.modified_ns == 0 and not entry.fault for entry in entries):
+        log.info("archive %s: no times of change are told; a file counts as changed if its size does", archive)
+    return sorted(entries, key=lambda entry: entry.path)
+
+
+def _scan(root: Path, folder: str, visited: set[tuple[int, Any]]) -> list[os.DirEntry[str]]:
     """What a folder holds, in order of names; nothing if it has been visited."""
     path = root / folder
     status = path.stat()
@@ -137,14 +163,62 @@ def open_file(path: str) -> int:
     raise SetAsideError("unreadable", "not a regular file")
 
 
-def check_unchanged(path: str, size: int, modified_ns: int) -> None:
-    """Raise `SetAsideError` where a file is no longer the one that was listed. Raises `OSError` too."""
+def _status(path: str) -> tuple[int, int]:
+    """Size and time of change (ns) of a file now."""
+    if storage.is_remote(path):
+        return storage.status(path)
+    status = os.stat(path)
+    return status.st_size, status.st_mtime_ns
+
+
+def check_unchanged(path: str, size: int, modified_ns: int, companions: Iterable[str] = ()) -> None:
+    """Raise `SetAsideError` where a file is no longer the one that was listed. Raises `OSError` too.
+
+    `modified_ns` is that of the latest of the file and its companions. Where a storage told no time, then or now, the size
+    alone decides.
+    """
     try:
-        status = os.stat(path)
+        size_now, time_now = _status(path)
     except FileNotFoundError:
         raise SetAsideError("vanished", "the file is gone since its header was read") from None
-    if status.st_size != size or abs(status.st_mtime_ns - modified_ns) > COARSE_CLOCK_NS:
+    for companion in companions:
+        with suppress(FileNotFoundError):  # whoever opens it says so
+            time_now = max(time_now, _status(companion)[1])
+    untimed = storage.is_remote(path) and 0 in (modified_ns, time_now)
+    if size_now != size or (not untimed and abs(time_now - modified_ns) > COARSE_CLOCK_NS):
         raise SetAsideError("changed", "the file has changed since its header was read; give the same command again")
+
+
+class Bytes(Protocol):
+    """The bytes of a file as it is stored."""
+
+    @property
+    def size(self) -> int:
+        """How many there are."""
+
+    def pread(self, length: int, offset: int) -> bytes:
+        """Up to `length` bytes from `offset`, fewer only at the end."""
+
+
+class LocalFile:
+    """A regular file of this system. Raises as `open_file`."""
+
+    def __init__(self, path: str) -> None:
+        self._descriptor = open_file(path)
+        self.size = os.fstat(self._descriptor).st_size
+
+    def pread(self, length: int, offset: int) -> bytes:
+        """See `Bytes`."""
+        return os.pread(self._descriptor, length, offset)
+
+    def close(self) -> None:
+        """Let go of it."""
+        os.close(self._descriptor)
+
+
+def opened(path: str) -> closing[LocalFile] | closing[storage.RemoteFile]:
+    """A file as it is stored, wherever it is, to be used in a `with` statement. Raises `OSError`, `SetAsideError`."""
+    return closing(storage.RemoteFile(path)) if storage.is_remote(path) else closing(LocalFile(path))
 
 
 @contextmanager
@@ -154,35 +228,31 @@ def open_source(path: str, unpacked_limit: int) -> Iterator[Source]:
     `unpacked_limit` bounds, in bytes, what a gzip file may unpack to. Raises `OSError` where the system refuses, and
     `SetAsideError` (bad_compression) while a broken or too large gzip file is read.
     """
-    descriptor = open_file(path)
-    try:
-        head = os.pread(descriptor, FIRST_READ, 0)
+    with opened(path) as file:
+        head = file.pread(FIRST_READ, 0)
         if head.startswith(GZIP_MAGIC):
-            yield GzipSource(descriptor, unpacked_limit)
+            yield GzipSource(file, unpacked_limit)
         else:
-            yield PlainSource(descriptor, head)
-    finally:
-        os.close(descriptor)
+            yield PlainSource(file, head)
 
 
 class PlainSource:
     """A file as it is; `head` are its first bytes, which need not be read again."""
 
-    def __init__(self, descriptor: int, head: bytes) -> None:
-        self._descriptor, self._head = descriptor, head
-        self._size = os.fstat(descriptor).st_size
+    def __init__(self, file: Bytes, head: bytes) -> None:
+        self._file, self._head = file, head
 
     def read_at(self, offset: int, length: int) -> bytes:
         """Up to `length` bytes, fewer only at the end."""
-        if offset >= self._size:
+        if offset >= self._file.size:
             return b""
         if offset + length <= len(self._head):
             return self._head[offset : offset + length]
-        return os.pread(self._descriptor, length, offset)
+        return self._file.pread(length, offset)
 
     def reaches(self, end: int) -> bool:
         """Whether the file has `end` bytes."""
-        return self._size >= end
+        return self._file.size >= end
 
 
 class GzipStream:
@@ -192,9 +262,9 @@ class GzipStream:
     would be copied once for each of a great many small members.
     """
 
-    def __init__(self, descriptor: int, chunk: int = CHUNK) -> None:
+    def __init__(self, file: Bytes, chunk: int = CHUNK) -> None:
         self.packed_at = 0  # how far the file has been read
-        self._descriptor, self._chunk = descriptor, chunk
+        self._file, self._chunk = file, chunk
         self._waiting = memoryview(b"")  # packed bytes read and not yet fed
         self._member = zlib.decompressobj(wbits=31)
         self._step = FIRST_FEED
@@ -220,7 +290,7 @@ class GzipStream:
 
     def _fill(self) -> bool:
         """Read more of the file; False at its end."""
-        more = os.pread(self._descriptor, self._chunk, self.packed_at)
+        more = self._file.pread(self._chunk, self.packed_at)
         self.packed_at += len(more)
         self._waiting = memoryview(bytes(self._waiting) + more)
         return bool(more)
@@ -240,9 +310,9 @@ class GzipSource:
     data at hand end, nothing follows them and they need not be unpacked; otherwise they are, in small pieces.
     """
 
-    def __init__(self, descriptor: int, limit: int) -> None:
-        self.stream = GzipStream(descriptor)
-        self._descriptor, self._limit = descriptor, limit
+    def __init__(self, file: Bytes, limit: int) -> None:
+        self.stream = GzipStream(file)
+        self._file, self._limit = file, limit
         self._window, self._window_at = bytearray(), 0  # the unpacked bytes kept, and where they begin
         self._known_end: int | None = None
 
@@ -264,8 +334,7 @@ class GzipSource:
         return self._window_at + len(self._window) >= end
 
     def _trailer_size(self) -> int:
-        size = os.fstat(self._descriptor).st_size
-        return int.from_bytes(os.pread(self._descriptor, 4, max(0, size - 4)), "little")
+        return int.from_bytes(self._file.pread(4, max(0, self._file.size - 4)), "little")
 
     def _unpack_to(self, end: int, keep_from: int) -> None:
         """Unpack up to `end`, or the file's end; forget what is before `keep_from`, which is never asked for again."""

@@ -63,10 +63,14 @@ class OpenFrame:
     unpacked: Pixels | None = None
 
     def unpacked_once(self) -> OpenFrame:
-        """The same with its pixels in memory if they are packed or compressed: for a frame that is read several times."""
+        """The same for being read several times: its pixels in memory if they are packed or compressed, and what is read
+
+        kept if it is remote.
+        """
         if self.place.image.packed or self.place.image.hdu.compressed:
             return replace(self, unpacked=read_plane(self.place, self.unpacked_limit))
-        return self
+        kept = {kind: place.keeping() for kind, place in self.companions.items()}
+        return replace(self, place=self.place.keeping(), companions=kept)
 
     def pixels(self, windows: Windows | None = None) -> Pixels:
         """Its pixels, blank where a companion says so; see `pixels.read_plane`."""

@@ -58,7 +58,7 @@ def frame_facts(frames: Columns, row: int) -> FrameToMeasure:
     value = {name: values[row] for name, values in frames.items()}
     sign = -1.0 if value["negative"] else 1.0
     named = {kind: value[f"{kind}_file"] for kind in PIXEL_COMPANIONS if value[f"{kind}_file"]}
-    companions = {kind: str(Path(value["archive"]) / path) for kind, path in named.items()}
+    companions = {kind: local_path(str(value["archive"]), str(path)) for kind, path in named.items()}
     return FrameToMeasure(
         path=local_path(str(value["archive"]), str(value["path"])), hdu=int(value["hdu"]), plane=int(value["plane"]),
         mjd=float(value["middle_mjd_tdb"]), beam_major=float(value["beam_major"]),

@@ -1,8 +1,8 @@
 """Pixels of one plane of one HDU: stamps around positions, or the whole.
 
-A plain file is mapped and only the stamps' pixels are read; a gzip file is unpacked once, with a cap; a tile-compressed
-image is unpacked around the positions where they are few, else whole. Values are scaled, blanks are NaN, bytes native.
-Nothing here knows of sky or beams.
+A plain file is mapped and only the stamps' pixels are read, of a remote one the bytes that hold them (`spans`); a gzip
+file is unpacked once, with a cap; a tile-compressed image is unpacked around the positions where they are few, else whole,
+from a local copy where it is remote. Values are scaled, blanks are NaN, bytes native. Nothing here knows of sky or beams.
 """
 
 from __future__ import annotations
@@ -13,7 +13,8 @@ import mmap
 import os
 import warnings
 from collections.abc import Iterator
-from dataclasses import dataclass
+from contextlib import contextmanager
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -21,9 +22,9 @@ from astropy.io import fits
 from numpy.lib.stride_tricks import as_strided
 from numpy.typing import NDArray
 
-from hindlight import apart
-from hindlight.files import GzipStream, PlainSource, open_file, open_source
-from hindlight.headers import Hdu, SetAsideError, Source, read_hdus
+from hindlight import apart, spans, storage
+from hindlight.files import GzipStream, PlainSource, open_file, open_source, opened
+from hindlight.headers import BLOCK, Hdu, SetAsideError, Source, read_hdus
 from hindlight.lightcurve import IntArray
 
 SAMPLE = 256
@@ -190,17 +191,24 @@ class ImagePlace:
     packed: bool
     hdu: Hdu
 
+    @property
+    def in_ranges(self) -> bool:
+        """Whether its pixels are read by ranges of bytes: those of a remote file that is neither packed nor compressed."""
+        return storage.is_remote(self.path) and not (self.packed or self.hdu.compressed)
+
 
 @dataclass(frozen=True, eq=False)
 class PlanePlace:
     """A plane of an image: `axes` are the FITS numbers of the two celestial axes, `index` counts in storage order.
 
     Axes stored before or between the celestial ones have length one (`hindlight.headers.planes` refuses others).
+    `held` is what has been read of a remote one, where that is to be kept.
     """
 
     image: ImagePlace
     axes: tuple[int, int]
     index: int = 0
+    held: spans.Held | None = None
 
     @property
     def width(self) -> int:
@@ -211,6 +219,22 @@ class PlanePlace:
     def height(self) -> int:
         """Pixels along the second celestial axis."""
         return self.image.hdu.axes[self.axes[1] - 1]
+
+    @property
+    def dtype(self) -> np.dtype[Any]:
+        """The type of the stored numbers."""
+        return np.dtype({8: ">u1", 16: ">i2", 32: ">i4", 64: ">i8", -32: ">f4", -64: ">f8"}[self.image.hdu.bitpix])
+
+    @property
+    def span(self) -> tuple[int, int]:
+        """The first byte of its pixels in the unpacked file, and the first one after them."""
+        length = self.width * self.height * self.dtype.itemsize
+        start = self.image.hdu.data_offset + self.index * length
+        return start, start + length
+
+    def keeping(self) -> PlanePlace:
+        """The same, what is read of it kept where it is remote: for a plane that is read several times."""
+        return replace(self, held=_held(self)) if self.image.in_ranges and self.held is None else self
 
     @property
     def lead(self) -> tuple[int, ...]:
@@ -267,15 +291,17 @@ def read_plane(place: PlanePlace, unpacked_limit: int, windows: Windows | None =
     the result lives. Raises `OSError` and `SetAsideError`; `unpacked_limit` is in bytes.
     """
     hdu, lead = place.image.hdu, place.lead
+    buffer: Any
     if hdu.compressed:
         return _unpack_tiles(place, lead, unpacked_limit, windows)
-    dtype = np.dtype({8: ">u1", 16: ">i2", 32: ">i4", 64: ">i8", -32: ">f4", -64: ">f8"}[hdu.bitpix])
-    count = place.width * place.height
-    start = hdu.data_offset + place.index * count * dtype.itemsize
-    end = start + count * dtype.itemsize
-    packed = place.image.packed
-    buffer: Any = _unpacked(place, start, end, unpacked_limit) if packed else _mapped(place, end)
-    stored = np.frombuffer(buffer, dtype, count, 0 if packed else start)
+    start, end = place.span
+    if place.image.packed:
+        buffer, at = _unpacked(place, start, end, unpacked_limit), 0
+    elif place.image.in_ranges:
+        buffer, at = _ranges(place, windows), 0
+    else:
+        buffer, at = _mapped(place, end), start
+    stored = np.frombuffer(buffer, place.dtype, place.width * place.height, at)
     return _scaled(stored.reshape(place.height, place.width), hdu)
 
 
@@ -296,6 +322,26 @@ def _holds_counts(stored: NDArray[Any]) -> bool:
     return bool((finite == np.rint(finite)).all()) and len(np.unique(finite)) > 2
 
 
+def _ranges(place: PlanePlace, windows: Windows | None) -> NDArray[np.uint8]:
+    """The bytes of a plane in a remote file, right within the windows and where `_holds_counts` looks; else zero."""
+    held = place.held or _held(place)
+    shape = (place.height, place.width)
+    if windows is None:
+        wanted = np.array([[0, place.width * place.height]])
+    else:
+        middle = place.height // 2 * place.width
+        looked_at = [[middle, middle + min(SAMPLE, place.width)], np.array([0, 1]) + middle + place.width // 2]
+        wanted = np.concatenate([spans.of_windows(shape, windows.ix, windows.iy, windows.half), looked_at])
+    held.fill(wanted * place.dtype.itemsize)
+    return held.bytes
+
+
+def _held(place: PlanePlace) -> spans.Held:
+    """A plane of a remote file, of which nothing is there yet."""
+    start, end = place.span
+    return spans.Held(place.image.path, start, end - start)
+
+
 def _mapped(place: PlanePlace, end: int) -> mmap.mmap:
     """The first `end` bytes of a file as a read-only mapping, which goes away with the arrays that use it."""
     descriptor = open_file(place.image.path)
@@ -312,19 +358,17 @@ def _unpacked(place: PlanePlace, start: int, end: int, limit: int) -> bytearray:
     if end > limit:
         raise place.fault("bad_compression", "the gzip file unpacks to more than the limit")
     kept, done = bytearray(), 0
-    descriptor = open_file(place.image.path)
-    try:
-        stream = GzipStream(descriptor, PIECE)
-        while done < end:
-            piece = stream.piece(4 * PIECE)
-            if not piece:
-                raise _truncated(place, end)
-            kept += piece[max(0, start - done) : max(0, end - done)]
-            done += len(piece)
-    except SetAsideError as error:
-        raise place.fault(error.reason, error.detail) from error
-    finally:
-        os.close(descriptor)
+    with opened(place.image.path) as file:
+        stream = GzipStream(file, PIECE)
+        try:
+            while done < end:
+                piece = stream.piece(4 * PIECE)
+                if not piece:
+                    raise _truncated(place, end)
+                kept += piece[max(0, start - done) : max(0, end - done)]
+                done += len(piece)
+        except SetAsideError as error:
+            raise place.fault(error.reason, error.detail) from error
     return kept
 
 
@@ -337,18 +381,32 @@ def _unpack_tiles(place: PlanePlace, lead: tuple[int, ...], limit: int, windows:
     hdu = place.image.hdu
     if place.width * place.height * abs(hdu.bitpix) // 8 > limit:
         raise place.fault("bad_compression", "the image unpacks to more than the limit")
-    target: Any = place.image.path
-    if place.image.packed:  # a tile-compressed file inside a gzip file
-        target = io.BytesIO(_unpacked(place, 0, hdu.data_offset + hdu.data_bytes, limit))
-    try:
-        if hdu.cards.text("ZCMPTYPE") in FRAGILE:
-            stored = apart.call(_decoded, target, place, lead, windows)
-        else:
-            stored = _decoded(target, place, lead, windows)
-    except Exception as error:  # on broken bytes the decoders raise whatever they like
-        detail = " ".join(str(error).split())
-        raise place.fault("bad_compression", f"the tiles cannot be unpacked: {detail}") from error
+    with _tiles(place, limit) as target:
+        try:
+            if hdu.cards.text("ZCMPTYPE") in FRAGILE:
+                stored = apart.call(_decoded, target, place, lead, windows)
+            else:
+                stored = _decoded(target, place, lead, windows)
+        except Exception as error:  # on broken bytes the decoders raise whatever they like
+            detail = " ".join(str(error).split())
+            raise place.fault("bad_compression", f"the tiles cannot be unpacked: {detail}") from error
     return _scaled(stored, hdu)
+
+
+@contextmanager
+def _tiles(place: PlanePlace, limit: int) -> Iterator[Any]:
+    """A path, or bytes in memory, from which astropy reads a file up to the end of this HDU."""
+    hdu = place.image.hdu
+    end = hdu.data_offset + hdu.data_bytes
+    if place.image.packed:  # a tile-compressed file inside a gzip file
+        yield io.BytesIO(_unpacked(place, 0, end, limit))
+    elif storage.is_remote(place.image.path):
+        if end > limit:
+            raise place.fault("bad_compression", "the file is larger than what a file may unpack to")
+        with storage.fetched(place.image.path, -(-end // BLOCK) * BLOCK) as path:
+            yield path
+    else:
+        yield place.image.path
 
 
 def _decoded(target: Any, place: PlanePlace, lead: tuple[int, ...], windows: Windows | None) -> NDArray[Any]:

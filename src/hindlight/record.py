@@ -15,7 +15,7 @@ import tomli_w
 
 from hindlight import host, settings
 from hindlight.errors import UsageError
-from hindlight.files import path_text
+from hindlight.files import archive_text
 from hindlight.settings import Settings, as_plain
 from hindlight.store import RunFolder
 from hindlight.tables import damaged
@@ -40,8 +40,8 @@ class Request:
 
     @property
     def folders(self) -> tuple[str, ...]:
-        """The archive folders as absolute paths, as `path_text` writes them."""
-        return tuple(path_text(str(Path(archive).resolve())) for archive in self.archives)
+        """The archives: folders as absolute paths, and URLs, as `archive_text` writes them."""
+        return tuple(archive_text(archive, absolute=True) for archive in self.archives)
 
 
 def settings_in_force(run: RunFolder, request: Request) -> Settings:

@@ -43,6 +43,7 @@ from hindlight.positions import Targets, read_targets
 from hindlight.record import Request
 from hindlight.schema import FRAME_SOLUTION, FRAMES, POSITIONS, REJECTS
 from hindlight.settings import Settings
+from hindlight.storage import alone
 from hindlight.store import Columns, RunFolder
 from hindlight.systems import unit_vectors
 from hindlight.tables import astropy_table, read_ecsv, rows_to_columns, write_table
@@ -70,6 +71,7 @@ def mine(request: Request, watcher: Watcher) -> Outcome:
     own = _own_comparisons(settings)
     record.compare(run, request, settings, plugins)
     files.check_folders(request.folders)
+    _check_shared(request)
     run.create()
     order = Order(str(run.path.resolve()), settings, replace(spec, expected=plugins.fingerprint()))
     with run.locked():
@@ -90,7 +92,7 @@ def _mine_locked(
     recorded = record.compare(run, request, settings, plugins)
     frames, rejects = _walked(run, request, settings, plugins, watcher)
     size = float(recorded.get("field_size_deg", 0.0))
-    small = len(frames["id"]) * _most_positions(frames, lists[0], settings) < SMALL_WORK
+    small = bool(alone(request.folders)) or len(frames["id"]) * _most_positions(frames, lists[0], settings) < SMALL_WORK
     with assembled(request.workers, request.scheduler, small) as crew:
         session = Session(run, crew, order, plugins, lists[0], watcher, lists[1])
         pairs = duplicates.candidates(frames)
@@ -106,6 +108,13 @@ def _mine_locked(
         given = request.settings is not None or not recorded
         told = () if given else asides.borrowed_settings(run, settings, plugins)
         return _measured_and_judged(session, frames, positions, rejects, size, told)
+
+
+def _check_shared(request: Request) -> None:
+    """Raise `UsageError` where other processes are to read what only this one has."""
+    several = request.scheduler is not None or (request.workers or 1) > 1
+    if several and (mine_only := alone(request.folders)):
+        raise UsageError(f"archive {mine_only[0]}: is in the memory of this process alone; give --workers 1")
 
 
 def _most_positions(frames: Columns, targets: Targets, settings: Settings) -> int:

@@ -11,7 +11,8 @@ import math
 import re
 import threading
 import warnings
-from contextlib import ExitStack
+from collections.abc import Iterator
+from contextlib import ExitStack, contextmanager
 from dataclasses import dataclass, field
 from functools import cached_property, lru_cache
 from typing import Any, Protocol
@@ -24,6 +25,7 @@ from hindlight.celestial import Celestial, find_celestial, two_axes
 from hindlight.facts import NAN, Cards
 from hindlight.lightcurve import FloatArray
 from hindlight.plugin import BeamShape
+from hindlight.storage import readable
 from hindlight.systems import BadWcsError, NoCelestialError, System, from_icrs, to_icrs
 
 __all__ = ["BadWcsError", "NoCelestialError", "Projection", "System", "beam_shape", "projection"]
@@ -205,7 +207,7 @@ def _full(raw: bytes, path: str) -> Projection:
             raise BadWcsError(f"{key} is {cards.number(key):g}, more than {most}")
     with warnings.catch_warnings(), ExitStack() as stack:
         warnings.simplefilter("ignore")  # FITSFixedWarning and card warnings: what cannot be used raises below
-        hdus = stack.enter_context(fits.open(path)) if tables else None
+        hdus = stack.enter_context(_tables_of(path)) if tables else None
         header = fits.Header.fromstring(raw.decode("latin-1"))
         for i in found.axes if "A_ORDER" in header else ():
             suffix = cards.text(f"CTYPE{i}")[8:]
@@ -213,7 +215,10 @@ def _full(raw: bytes, path: str) -> Projection:
                 raise BadWcsError(f"CTYPE{i} ends in {suffix!r}, and there are SIP coefficients")
             if not suffix:  # astropy applies such coefficients too, but complains on standard error
                 header[f"CTYPE{i}"] = cards.text(f"CTYPE{i}") + "-SIP"
-        wcs = WCS(header, fobj=hdus).celestial
+        try:
+            wcs = WCS(header, fobj=hdus).celestial
+        except OSError as error:
+            raise _unread(error) from error
         wcs.wcs.set()
     if found.code == "TPV" and not any(key.startswith("CD") for key in cards if key[2:3].isdigit()):
         # wcslib would apply the polynomial before CDELT, where nobody means it.
@@ -221,6 +226,21 @@ def _full(raw: bytes, path: str) -> Projection:
     if wcs.naxis != 2:
         raise BadWcsError("the two celestial axes cannot be separated from the others")
     return _finished(found, _AstropyEngine(wcs))
+
+
+@contextmanager
+def _tables_of(path: str) -> Iterator[Any]:
+    """The HDUs of a file, for the tables of a distortion; of a remote one the bytes of these tables are read."""
+    with ExitStack() as stack:
+        try:
+            hdus = stack.enter_context(fits.open(stack.enter_context(readable(path))))
+        except OSError as error:
+            raise _unread(error) from error
+        yield hdus
+
+
+def _unread(error: OSError) -> BadWcsError:
+    return BadWcsError(f"the distortion's look-up table cannot be read: {error}")
 
 
 def _has_tables(cards: Cards) -> bool:

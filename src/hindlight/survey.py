@@ -35,7 +35,7 @@ def inventory(
     listed = read_targets(targets) if targets is not None else None
     watcher.stage("reading headers", 0)
     found = archive.walk(
-        [files.path_text(folder) for folder in archives], loaded.dialects, settings, None, watcher.step
+        [files.archive_text(folder) for folder in archives], loaded.dialects, settings, None, watcher.step
     )
     if len(found.frames["path"]) == 0 and not found.rejects:
         raise NothingToDoError(

@@ -33,6 +33,7 @@ from hindlight.response import PHOTOGRAPHIC, SEEN_SNR
 from hindlight.robust import median_of
 from hindlight.schema import MEASUREMENTS, UNUSABLE
 from hindlight.settings import Settings
+from hindlight.storage import StorageError
 from hindlight.store import Columns, Piece
 from hindlight.systems import BadWcsError, NoCelestialError, unit_vectors
 
@@ -78,6 +79,8 @@ def _reject(frames: Columns, row: int, error: BaseException) -> dict[str, Any]:
     """A row of the rejects for a frame that could not be measured."""
     if isinstance(error, SetAsideError):
         reason, detail = error.reason, error.detail
+    elif isinstance(error, StorageError):
+        reason, detail = "unreadable", str(error)
     elif isinstance(error, BadWcsError | NoCelestialError):
         reason, detail = "bad_wcs", str(error)
     else:
@@ -129,7 +132,7 @@ def _measure_frame(
     wanted = order.settings.photometry.estimator
     estimator = photometry.choose_estimator(estimators, facts.unit, wanted, facts.beam_major > 0)
     sources = _anchors_near(frames, row, anchors)
-    listed = int(frames["size"][row]), int(frames["modified_ns"][row])
+    listed = int(frames["size"][row]), int(frames["modified_ns"][row]), tuple(facts.companions.values())
     check_unchanged(facts.path, *listed)
     found = photometry.measure_frame(facts, ra, dec, estimator, order.settings, sources)
     check_unchanged(facts.path, *listed)  # nor while it was read

@@ -126,7 +126,8 @@ def plant_in_frame(order: Order, frame: int, controls: IntArray) -> planted.Proo
         host.load(order.plugins).estimators, facts.unit, order.settings.photometry.estimator, facts.beam_major > 0
     )
     try:
-        check_unchanged(facts.path, int(tables.frames["size"][row]), int(tables.frames["modified_ns"][row]))
+        listed = int(tables.frames["size"][row]), int(tables.frames["modified_ns"][row])
+        check_unchanged(facts.path, *listed, tuple(facts.companions.values()))
         return planted.plant(
             facts, who["ra"][at : at + 1], who["dec"][at : at + 1], estimator, order.settings,
             anchors_of(tables, row, int(who["round"][at])), key,
