@@ -27,7 +27,7 @@ SKY = 0.6  # of the exposure at which the density is half of the highest
 FWHM = 4.0
 NOISE = 0.03
 NORTH = skies.Sky(instrument="scanner", n_frames=PLATES, size=260, fwhm_pixels=FWHM, unit="density", noise="white",
-                  extra={"EMULSION": "IIIa J", "FILTER": "GG 385", "PLATENUM": 7})  # fmt: skip
+                  extra={"EMULSION": "PX40 B", "FILTER": "Y 38", "PLATENUM": 7})  # fmt: skip
 
 
 def densities(light: np.ndarray, rng: np.random.Generator, exposure: float) -> np.ndarray:
@@ -159,9 +159,9 @@ def facts_of(**cards: object) -> FrameFacts:
 @pytest.mark.parametrize(
     ("cards", "band", "response", "assumed"),
     [
-        ({"EMULSION": "IIIa J", "FILTER": "GG 385"}, "IIIaJ+GG385", "photographic", False),
-        ({"EMULSION": "103aO", "FILTER": "none"}, "103aO", "photographic", False),
-        ({"PLATENUM": 1234, "FILTER": "RG630"}, "RG630", "photographic", True),
+        ({"EMULSION": "PX40 B", "FILTER": "Y 38"}, "PX40B+Y38", "photographic", False),
+        ({"EMULSION": "OLD9", "FILTER": "none"}, "OLD9", "photographic", False),
+        ({"PLATENUM": 1234, "FILTER": "R63"}, "R63", "photographic", True),
         ({"PLATEID": "06S3", "BANDPASS": 8}, "bandpass 8", "photographic", True),
         ({"PLATE": "A 17"}, "", "photographic", True),
         ({"PLTSCALE": 67.2, "FILTER": "R"}, "R", "linear", False),
@@ -177,10 +177,10 @@ def test_emulsion_and_filter_make_the_band(cards: dict[str, object], band: str, 
 
 def test_unlike_plates_never_share_a_channel(tmp_path: Path) -> None:
     """Nor does a plate share one with a frame of a linear detector; a block of the settings may say what a frame is."""
-    same = {"BMAJ": None, "BMIN": None, "BPA": None, "FREQ": None, "STOKES": None, "BUNIT": "adu", "FILTER": "GG385"}
+    same = {"BMAJ": None, "BMIN": None, "BPA": None, "FREQ": None, "STOKES": None, "BUNIT": "adu", "FILTER": "Y38"}
     for name, cards in (
-        ("a", {"EMULSION": "IIIaJ"}), ("b", {"EMULSION": "IIIaF"}), ("c", {"EMULSION": "IIIaJ", "FILTER": "GG395"}),
-        ("d", {}), ("e", {"EMULSION": "IIIaJ"}), ("f", {}),
+        ("a", {"EMULSION": "PX40B"}), ("b", {"EMULSION": "PX40R"}), ("c", {"EMULSION": "PX40B", "FILTER": "Y39"}),
+        ("d", {}), ("e", {"EMULSION": "PX40B"}), ("f", {}),
     ):  # fmt: skip
         write(tmp_path / f"{name}.fits", **(same | cards | {"DATE__OBS": f"1988-03-1{ord(name) - 96}T06:00:00"}))
     blocks = [{"path": "f.fits", "response": "photographic", "negative": True}]
@@ -188,8 +188,8 @@ def test_unlike_plates_never_share_a_channel(tmp_path: Path) -> None:
     found = walk([str(tmp_path)], host.load(host.PluginSpec()).dialects, settings, {})
     labels = assign(found.frames, {}, Channels())
     a, b, c, d, e, f = labels[np.argsort(found.frames["path"].astype(str))].tolist()
-    assert a == e == "north array|IIIaJ+GG385|I|adu|photographic"
-    assert d == "north array|GG385|I|adu"
-    assert f == "north array|GG385|I|adu|photographic"
+    assert a == e == "north array|PX40B+Y38|I|adu|photographic"
+    assert d == "north array|Y38|I|adu"
+    assert f == "north array|Y38|I|adu|photographic"
     assert len({a, b, c, d, f}) == 5
     assert found.frames["negative"].tolist().count(True) == 1

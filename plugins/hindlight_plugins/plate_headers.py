@@ -84,7 +84,7 @@ class PlateHeaders(Dialect):
 
 
 def _band(cards: Cards, emulsion: str) -> str:
-    """Emulsion and filter as `IIIaJ+GG385`, or the code of the band pass where there is neither."""
+    """Emulsion and filter as `PX40B+Y38`, or the code of the band pass where there is neither."""
     code = cards.get("BANDPASS")
     glass = _joined(cards.text("FILTER"))
     parts = [emulsion, "" if glass.upper() in NO_FILTER else glass]
