@@ -10,7 +10,7 @@ from collections.abc import Iterator
 from importlib import import_module
 from io import BytesIO
 from pathlib import Path
-from typing import Any
+from typing import Any, ClassVar
 
 import fsspec
 import numpy as np
@@ -19,6 +19,7 @@ import pytest
 from astropy.io import fits
 from astropy.table import Table
 from astropy.wcs import WCS
+from fsspec.implementations.memory import MemoryFileSystem
 from hypothesis import given
 from hypothesis import strategies as st
 
@@ -244,6 +245,16 @@ def test_packed_files(folder: Path, server: Served, name: str, tmp_path: Path, m
     assert list(tmp_path.iterdir()) == []
 
 
+def test_reading_on_takes_larger_pieces(server: Served, large: str) -> None:
+    """A file that is read from its beginning to its end, as a gzip file is, takes few requests and nothing twice."""
+    path = server.folder / large
+    with files.opened(f"{server.url}//{large}") as file:
+        pieces = [file.pread(1 << 16, at) for at in range(0, path.stat().st_size + 1, 1 << 16)]
+    assert b"".join(pieces) == path.read_bytes()
+    assert server.requests[large] < 15
+    assert server.bytes[large] < path.stat().st_size + 15 * storage.LEAST
+
+
 def test_look_up_tables_of_distortions(server: Served) -> None:
     """The tables of a distortion are read from a remote file, not the image before them; unread they are no coordinates."""
     name, head = "table.fits", skies.header(skies.Sky(size=400), 52000.0, (0.0, 0.0))
@@ -319,6 +330,35 @@ def test_changes_are_seen(folder: Path, memory: str, server: Served) -> None:
     fs.pipe_file("/hindlight/arch/frame0006.fits", (folder / "frame0006.fits").read_bytes() + b"\0" * 2880)
     again = walk([memory], STANDARD, settings_from(PATTERNS, "test"), known.frames | {"state": state})
     assert list(again.frames["path"]) == ["frame0006.fits"]
+
+
+class Remembering(MemoryFileSystem):
+    """Memory that tells what it told before, as object stores do, until it is told to forget."""
+
+    protocol = "remembering"
+    told: ClassVar[dict[str, Any]] = {}
+
+    @classmethod
+    def _strip_protocol(cls, path: str) -> str:
+        return str(super()._strip_protocol(path.removeprefix("remembering://")))
+
+    def info(self, path: str, **given: Any) -> Any:
+        return self.told.setdefault(path, super().info(path, **given))
+
+    def invalidate_cache(self, path: str | None = None) -> None:
+        self.told.clear()
+
+
+def test_changes_are_seen_in_storage_that_remembers(memory: str) -> None:
+    """What a storage remembers of an earlier listing is not taken for the file as it is now."""
+    fsspec.register_implementation("remembering", Remembering, clobber=True)
+    url, name = memory.replace("memory", "remembering"), "/hindlight/arch/frame0005.fits"
+    (entry,) = [e for e in files.list_files(url) if e.path == "frame0005.fits"]
+    path = files.local_path(url, entry.path)
+    files.check_unchanged(path, entry.size, entry.modified_ns)
+    fsspec.filesystem("memory").pipe_file(name, b"short")
+    with pytest.raises(SetAsideError, match="changed since"):
+        files.check_unchanged(path, entry.size, entry.modified_ns)
 
 
 def test_companions_may_be_newer(folder: Path) -> None:
