@@ -26,12 +26,13 @@ from hypothesis import strategies as st
 import skies
 from hindlight import cli, files, photometry, spans, storage
 from hindlight.archive import WalkResult, walk
+from hindlight.companions import as_listed
 from hindlight.headers import SetAsideError
 from hindlight.opening import FrameToMeasure
 from hindlight.photometry import bright_sources, measure_frame
 from hindlight.pixels import PlanePlace, Windows, find_image, read_plane
 from hindlight.record import Request
-from hindlight.settings import Settings, settings_from
+from hindlight.settings import COMPANION_KINDS, Settings, settings_from
 from hindlight.sky import projection
 from hindlight.systems import BadWcsError
 from hindlight_plugins.peak import Peak
@@ -62,7 +63,10 @@ def folder(tmp_path_factory: pytest.TempPathFactory) -> Path:
     for number, blank in ((0, False), (2, True)):
         data = np.ones((80, 80), np.float32)
         data[40, 40] = 0.0 if blank else 3.0
-        fits.PrimaryHDU(data).writeto(place / f"frame000{number}.rms.fits")
+        path = place / f"frame000{number}.rms.fits"
+        fits.PrimaryHDU(data).writeto(path)
+        later = path.stat().st_mtime_ns + 60 * storage.NS  # noise maps are made after their images
+        os.utime(path, ns=(later, later))
     mask = np.zeros((80, 80), np.uint8)
     mask[30:33, 20:50] = 1
     (place / "frame0004.mask.fits.gz").write_bytes(gzip.compress(written(mask), mtime=0))
@@ -144,6 +148,8 @@ def test_a_run_is_the_same_byte_for_byte(folder: Path, memory: str, tmp_path: Pa
         assert (tmp_path / "here" / name).read_bytes() == (tmp_path / "there" / name).read_bytes(), name
     parts = sorted(p.relative_to(tmp_path / "here") for p in (tmp_path / "here" / "measurements").rglob("*.parquet"))
     assert parts
+    measured = [pq.read_table(tmp_path / "there" / part)["frame"].to_pylist() for part in parts]
+    assert len(np.unique(np.concatenate(measured))) == 10  # those with newer companions too
     for part in parts:
         assert (tmp_path / "here" / part).read_bytes() == (tmp_path / "there" / part).read_bytes()
     table = Table.read(tmp_path / "there" / "candidates.ecsv")
@@ -373,6 +379,14 @@ def test_companions_may_be_newer(folder: Path) -> None:
     os.utime(place, ns=(now, now))
     with pytest.raises(SetAsideError, match="changed since"):
         files.check_unchanged(str(folder / "frame0000.fits"), size, time, [str(place)])
+
+
+def test_companions_of_every_kind_count_as_listed() -> None:
+    """Whatever kind a companion is of, its time is among those that were listed, so it is looked at again."""
+    names = {f"{kind}_file": [f"{kind}.fits"] for kind in COMPANION_KINDS}
+    frames = {"archive": ["s3://b/n"], "size": [7], "modified_ns": [8], **names}
+    assert as_listed(frames, 0) == (7, 8, tuple(f"s3://b/n//{kind}.fits" for kind in COMPANION_KINDS))
+    assert as_listed({**frames, **{name: [""] for name in names}}, 0) == (7, 8, ())
 
 
 @pytest.mark.parametrize(
