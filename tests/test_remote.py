@@ -164,8 +164,10 @@ def test_file_urls_are_folders(folder: Path) -> None:
     same_facts(walked(str(folder)), found)
 
 
-def test_chained_urls(folder: Path, tmp_path: Path) -> None:
-    """A folder within a zip file is an archive too: the path belongs to the first link of the chain."""
+def test_chained_urls(folder: Path, server: Served, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """A folder within a zip file is an archive too, the path being that of the first link; so is one behind a cache."""
+    monkeypatch.setattr("tempfile.tempdir", str(tmp_path))
+    same_facts(walked(str(folder)), walked(f"simplecache::{server.url}/arch"))
     with zipfile.ZipFile(tmp_path / "all.zip", "w") as zipped:
         for path in sorted(folder.rglob("*")):
             zipped.write(path, f"in/{path.relative_to(folder)}")
