@@ -10,7 +10,7 @@ from collections.abc import Iterator
 from importlib import import_module
 from io import BytesIO
 from pathlib import Path
-from typing import Any
+from typing import Any, ClassVar
 
 import fsspec
 import numpy as np
@@ -19,18 +19,20 @@ import pytest
 from astropy.io import fits
 from astropy.table import Table
 from astropy.wcs import WCS
+from fsspec.implementations.memory import MemoryFileSystem
 from hypothesis import given
 from hypothesis import strategies as st
 
 import skies
 from hindlight import cli, files, photometry, spans, storage
 from hindlight.archive import WalkResult, walk
+from hindlight.companions import as_listed
 from hindlight.headers import SetAsideError
 from hindlight.opening import FrameToMeasure
 from hindlight.photometry import bright_sources, measure_frame
 from hindlight.pixels import PlanePlace, Windows, find_image, read_plane
 from hindlight.record import Request
-from hindlight.settings import Settings, settings_from
+from hindlight.settings import COMPANION_KINDS, Settings, settings_from
 from hindlight.sky import projection
 from hindlight.systems import BadWcsError
 from hindlight_plugins.peak import Peak
@@ -61,7 +63,10 @@ def folder(tmp_path_factory: pytest.TempPathFactory) -> Path:
     for number, blank in ((0, False), (2, True)):
         data = np.ones((80, 80), np.float32)
         data[40, 40] = 0.0 if blank else 3.0
-        fits.PrimaryHDU(data).writeto(place / f"frame000{number}.rms.fits")
+        path = place / f"frame000{number}.rms.fits"
+        fits.PrimaryHDU(data).writeto(path)
+        later = path.stat().st_mtime_ns + 60 * storage.NS  # noise maps are made after their images
+        os.utime(path, ns=(later, later))
     mask = np.zeros((80, 80), np.uint8)
     mask[30:33, 20:50] = 1
     (place / "frame0004.mask.fits.gz").write_bytes(gzip.compress(written(mask), mtime=0))
@@ -143,6 +148,8 @@ def test_a_run_is_the_same_byte_for_byte(folder: Path, memory: str, tmp_path: Pa
         assert (tmp_path / "here" / name).read_bytes() == (tmp_path / "there" / name).read_bytes(), name
     parts = sorted(p.relative_to(tmp_path / "here") for p in (tmp_path / "here" / "measurements").rglob("*.parquet"))
     assert parts
+    measured = [pq.read_table(tmp_path / "there" / part)["frame"].to_pylist() for part in parts]
+    assert len(np.unique(np.concatenate(measured))) == 10  # those with newer companions too
     for part in parts:
         assert (tmp_path / "here" / part).read_bytes() == (tmp_path / "there" / part).read_bytes()
     table = Table.read(tmp_path / "there" / "candidates.ecsv")
@@ -157,8 +164,10 @@ def test_file_urls_are_folders(folder: Path) -> None:
     same_facts(walked(str(folder)), found)
 
 
-def test_chained_urls(folder: Path, tmp_path: Path) -> None:
-    """A folder within a zip file is an archive too: the path belongs to the first link of the chain."""
+def test_chained_urls(folder: Path, server: Served, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """A folder within a zip file is an archive too, the path being that of the first link; so is one behind a cache."""
+    monkeypatch.setattr("tempfile.tempdir", str(tmp_path))
+    same_facts(walked(str(folder)), walked(f"simplecache::{server.url}/arch"))
     with zipfile.ZipFile(tmp_path / "all.zip", "w") as zipped:
         for path in sorted(folder.rglob("*")):
             zipped.write(path, f"in/{path.relative_to(folder)}")
@@ -244,6 +253,16 @@ def test_packed_files(folder: Path, server: Served, name: str, tmp_path: Path, m
     assert list(tmp_path.iterdir()) == []
 
 
+def test_reading_on_takes_larger_pieces(server: Served, large: str) -> None:
+    """A file that is read from its beginning to its end, as a gzip file is, takes few requests and nothing twice."""
+    path = server.folder / large
+    with files.opened(f"{server.url}//{large}") as file:
+        pieces = [file.pread(1 << 16, at) for at in range(0, path.stat().st_size + 1, 1 << 16)]
+    assert b"".join(pieces) == path.read_bytes()
+    assert server.requests[large] < 15
+    assert server.bytes[large] < path.stat().st_size + 15 * storage.LEAST
+
+
 def test_look_up_tables_of_distortions(server: Served) -> None:
     """The tables of a distortion are read from a remote file, not the image before them; unread they are no coordinates."""
     name, head = "table.fits", skies.header(skies.Sky(size=400), 52000.0, (0.0, 0.0))
@@ -321,6 +340,35 @@ def test_changes_are_seen(folder: Path, memory: str, server: Served) -> None:
     assert list(again.frames["path"]) == ["frame0006.fits"]
 
 
+class Remembering(MemoryFileSystem):
+    """Memory that tells what it told before, as object stores do, until it is told to forget."""
+
+    protocol = "remembering"
+    told: ClassVar[dict[str, Any]] = {}
+
+    @classmethod
+    def _strip_protocol(cls, path: str) -> str:
+        return str(super()._strip_protocol(path.removeprefix("remembering://")))
+
+    def info(self, path: str, **given: Any) -> Any:
+        return self.told.setdefault(path, super().info(path, **given))
+
+    def invalidate_cache(self, path: str | None = None) -> None:
+        self.told.clear()
+
+
+def test_changes_are_seen_in_storage_that_remembers(memory: str) -> None:
+    """What a storage remembers of an earlier listing is not taken for the file as it is now."""
+    fsspec.register_implementation("remembering", Remembering, clobber=True)
+    url, name = memory.replace("memory", "remembering"), "/hindlight/arch/frame0005.fits"
+    (entry,) = [e for e in files.list_files(url) if e.path == "frame0005.fits"]
+    path = files.local_path(url, entry.path)
+    files.check_unchanged(path, entry.size, entry.modified_ns)
+    fsspec.filesystem("memory").pipe_file(name, b"short")
+    with pytest.raises(SetAsideError, match="changed since"):
+        files.check_unchanged(path, entry.size, entry.modified_ns)
+
+
 def test_companions_may_be_newer(folder: Path) -> None:
     """A companion that was made after its image does not make the image a changed one."""
     (place,) = list(folder.glob("frame0000.rms.fits"))
@@ -333,6 +381,14 @@ def test_companions_may_be_newer(folder: Path) -> None:
     os.utime(place, ns=(now, now))
     with pytest.raises(SetAsideError, match="changed since"):
         files.check_unchanged(str(folder / "frame0000.fits"), size, time, [str(place)])
+
+
+def test_companions_of_every_kind_count_as_listed() -> None:
+    """Whatever kind a companion is of, its time is among those that were listed, so it is looked at again."""
+    names = {f"{kind}_file": [f"{kind}.fits"] for kind in COMPANION_KINDS}
+    frames = {"archive": ["s3://b/n"], "size": [7], "modified_ns": [8], **names}
+    assert as_listed(frames, 0) == (7, 8, tuple(f"s3://b/n//{kind}.fits" for kind in COMPANION_KINDS))
+    assert as_listed({**frames, **{name: [""] for name in names}}, 0) == (7, 8, ())
 
 
 @pytest.mark.parametrize(

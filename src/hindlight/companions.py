@@ -7,10 +7,11 @@ from __future__ import annotations
 
 import posixpath
 import re
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
+from typing import Any
 
-from hindlight.files import ENDINGS, FileEntry
+from hindlight.files import ENDINGS, FileEntry, local_path
 from hindlight.settings import COMPANION_KINDS, Companions
 
 PACKED = ("", ".gz", ".fz")  # a companion may be packed where its pattern does not say so
@@ -74,6 +75,16 @@ def sort_out(entries: Sequence[FileEntry], patterns: Companions) -> SortedFiles:
         )
         found.aside.append((by_path[path], whose))
     return found
+
+
+def as_listed(frames: Mapping[str, Any], row: int) -> tuple[int, int, tuple[str, ...]]:
+    """Size, time (ns) and companions' places of a frame's file, from the frame table: what `check_unchanged` is given.
+
+    Companions of every kind count, as they did for the time.
+    """
+    named = [str(frames[f"{kind}_file"][row]) for kind in COMPANION_KINDS]
+    places = tuple(local_path(str(frames["archive"][row]), path) for path in named if path)
+    return int(frames["size"][row]), int(frames["modified_ns"][row]), places
 
 
 def _shape(pattern: str) -> re.Pattern[str]:

@@ -249,7 +249,9 @@ class RemoteFile:
             return b""
         held_to = self._held_at + len(self._held)
         if not self._held_at <= offset <= end <= held_to:
-            self._ahead = min(2 * self._ahead, MOST_AHEAD) if 0 < self._held_at <= offset <= held_to else AHEAD
+            self._ahead = (
+                min(2 * self._ahead, MOST_AHEAD) if self._held and self._held_at <= offset <= held_to else AHEAD
+            )
             (self._held,) = self.ranges([offset], [min(self.size, max(end, offset + self._ahead))])
             self._held_at = offset
         return self._held[offset - self._held_at : end - self._held_at]

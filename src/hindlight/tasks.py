@@ -16,6 +16,7 @@ import numpy as np
 from hindlight import clock, duplicates, ensemble, host, judge, lifted, photometry, store
 from hindlight.background import MAD_TO_SIGMA
 from hindlight.candidates import ChannelView, Described, Examined, SeenOnly, View, describe
+from hindlight.companions import as_listed
 from hindlight.comparisons import Located, among_alike, apart_from
 from hindlight.ensemble import FLUX_COLUMNS
 from hindlight.facts import visible
@@ -132,7 +133,7 @@ def _measure_frame(
     wanted = order.settings.photometry.estimator
     estimator = photometry.choose_estimator(estimators, facts.unit, wanted, facts.beam_major > 0)
     sources = _anchors_near(frames, row, anchors)
-    listed = int(frames["size"][row]), int(frames["modified_ns"][row]), tuple(facts.companions.values())
+    listed = as_listed(frames, row)
     check_unchanged(facts.path, *listed)
     found = photometry.measure_frame(facts, ra, dec, estimator, order.settings, sources)
     check_unchanged(facts.path, *listed)  # nor while it was read

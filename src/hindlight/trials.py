@@ -12,6 +12,7 @@ from typing import Any
 import numpy as np
 
 from hindlight import completeness, host, injection, judge, photometry, planted, store
+from hindlight.companions import as_listed
 from hindlight.completeness import Bars, Cell, Found, Injection, Looks, Null
 from hindlight.files import check_unchanged
 from hindlight.headers import SetAsideError
@@ -126,8 +127,7 @@ def plant_in_frame(order: Order, frame: int, controls: IntArray) -> planted.Proo
         host.load(order.plugins).estimators, facts.unit, order.settings.photometry.estimator, facts.beam_major > 0
     )
     try:
-        listed = int(tables.frames["size"][row]), int(tables.frames["modified_ns"][row])
-        check_unchanged(facts.path, *listed, tuple(facts.companions.values()))
+        check_unchanged(facts.path, *as_listed(tables.frames, row))
         return planted.plant(
             facts, who["ra"][at : at + 1], who["dec"][at : at + 1], estimator, order.settings,
             anchors_of(tables, row, int(who["round"][at])), key,
