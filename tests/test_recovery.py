@@ -9,11 +9,12 @@ import pytest
 from astropy.table import Table
 
 import skies
-from hindlight import Column, Statistic, cli, completeness, planted, recovery, report_card, trials
+from hindlight import Column, Statistic, cli, completeness, planted, recovered, recovery, report_card, trials
+from hindlight import study as study_module
 from hindlight.judge import Judgement
 from hindlight.order import book
-from hindlight.recovery import Asked
 from hindlight.store import RunFolder
+from hindlight.study import Asked
 from test_estimators import study
 
 GRID = """[completeness]
@@ -115,12 +116,12 @@ def test_known_ephemeris_makes_looks_cycles(archive, tmp_path):
     from hindlight.positions import read_targets
 
     targets = read_targets(tmp_path / "t.csv")
-    _, order, _ = recovery._opened(Asked(archive / "run"))
+    _, order, _ = study_module.opened(Asked(archive / "run"))
     positions = book(order.run, order.version).positions
     ids = positions["id"][positions["kind"] == "target"]
     channels = Table.read(archive / "run" / "channels.ecsv")
     limits = dict.fromkeys({str(c) for c in channels["channel"]}, (5.0, 0.0))
-    given = recovery._ephemeris(targets, targets.names[0])
+    given = recovered._ephemeris(targets, targets.names[0])
     (looks, cycles), = trials.looks_of(order, ids[:1], [limits], [given])  # fmt: skip
     assert cycles
     assert looks.n < 28
@@ -163,7 +164,7 @@ def test_tables_of_the_run_as_it_was_are_said_to_be_so(archive, tmp_path, capsys
 
 def test_sources_added_to_pixels(archive):
     """Radio and optical frames as stored: the flux rises by what is added to light curves; so do floats, exactly."""
-    _, order, _ = recovery._opened(Asked(archive / "run"))
+    _, order, _ = study_module.opened(Asked(archive / "run"))
     tables = book(order.run, order.version)
     controls = tables.positions["id"][tables.positions["kind"] == "control"]
     proofs = [trials.plant_in_frame(order, int(frame), controls) for frame in tables.frames["id"][::4]]
@@ -189,7 +190,7 @@ def test_a_small_version_of_the_study_of_linearity(tmp_path):
 
 def test_a_frame_that_is_gone_proves_nothing(archive, tmp_path, monkeypatch):
     """A file that is no longer there is left out of the proof, and that is said."""
-    _, order, _ = recovery._opened(Asked(archive / "run"))
+    _, order, _ = study_module.opened(Asked(archive / "run"))
     tables = book(order.run, order.version)
     controls = tables.positions["id"][tables.positions["kind"] == "control"]
 
@@ -198,9 +199,9 @@ def test_a_frame_that_is_gone_proves_nothing(archive, tmp_path, monkeypatch):
 
     monkeypatch.setattr(trials, "check_unchanged", gone)
     assert trials.plant_in_frame(order, int(tables.frames["id"][0]), controls) is None
-    assert "no frame could be measured" in recovery._proof_remarks([None])[0]
-    assert recovery._proof_remarks([planted.Proof(0.1, 0.01, 1e-9, 1.0), None])[0].startswith("proved on 1")
-    assert recovery._proof_remarks([planted.Proof(0.1, 0.05, 1e-9, 1.0)])[0].startswith("NOT proved")
+    assert "no frame could be measured" in recovered.proof_remarks([None])[0]
+    assert recovered.proof_remarks([planted.Proof(0.1, 0.01, 1e-9, 1.0), None])[0].startswith("proved on 1")
+    assert recovered.proof_remarks([planted.Proof(0.1, 0.05, 1e-9, 1.0)])[0].startswith("NOT proved")
 
 
 def test_with_period_search(archive, tmp_path):
@@ -271,13 +272,13 @@ def test_the_two_bars_are_explained():
     """Where the controls' own bar is not that of the tails, one sentence says why there are two; else there is none."""
     for final, n in ((0.0188, 2), (0.0125, 1)):
         study = SimpleNamespace(bars=completeness.Bars(0.0125, final))
-        said = recovery._control_remarks(study, np.full(4, 1 / 60), False)
+        said = recovered._control_remarks(study, np.full(4, 1 / 60), False)
         assert len(said) == n
         assert "p below 0.0125 is needed" in said[0]
     study = SimpleNamespace(bars=completeness.Bars(0.0125, 0.0188))
-    assert "where a tail is fitted" in recovery._control_remarks(study, np.full(4, 1 / 60), False)[1]
-    assert "0.0188" in recovery._control_remarks(study, np.full(4, 1 / 60), False)[1]
-    assert recovery._control_remarks(study, np.full(4, 1e-3), False) == []
+    assert "where a tail is fitted" in recovered._control_remarks(study, np.full(4, 1 / 60), False)[1]
+    assert "0.0188" in recovered._control_remarks(study, np.full(4, 1 / 60), False)[1]
+    assert recovered._control_remarks(study, np.full(4, 1e-3), False) == []
 
 
 def test_the_rate_of_power_is_that_of_the_controls():
@@ -293,7 +294,7 @@ def test_a_new_plugin_gets_a_report_card(archive):
     asked = Asked(archive / "run", archive / "grid.toml", plugins=(stranger,), workers=1)
     cards, _ = recovery.report_cards(asked, cli._Silent())
     assert "longest_run" in {card.plugin for card in cards}
-    assert "longest_run" not in {entry.plugin.name for entry in recovery._opened(asked)[2].loaded}
+    assert "longest_run" not in {entry.plugin.name for entry in study_module.opened(asked)[2].loaded}
 
 
 def test_too_few_controls_say_so(tmp_path):

@@ -11,7 +11,7 @@ from astropy.table import Table
 
 import sequential
 import skies
-from hindlight import host, plan, recovery, second_pass, tasks
+from hindlight import host, plan, second_pass, study, tasks
 from hindlight.calibrate import Rank
 from hindlight.conclude import Field
 from hindlight.judge import Judgement
@@ -203,7 +203,7 @@ def test_what_has_been_judged_stays(runs):
         order = Order(str(run.path), Settings(), host.PluginSpec(), run.version())
         assert tasks.frame_evidence(order, 0).frames["n_controls"].max() == FIRST
         positions = run.positions()
-        assert [len(found.ids) for found in recovery._fields(positions)] == [FIRST]
+        assert [len(found.ids) for found in study.fields_of(positions)] == [FIRST]
 
 
 def test_a_second_pass_is_over_their_frames_only(runs):

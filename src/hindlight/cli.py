@@ -217,7 +217,8 @@ def completeness(
     quiet: bool, verbose: bool,
 ) -> None:  # fmt: skip
     """What a finished run could have shown: made-up sources hidden in its light curves, and how many are found."""
-    from hindlight.recovery import Asked, recover
+    from hindlight.recovery import recover
+    from hindlight.study import Asked
 
     with _watching(quiet, verbose) as watcher:
         report = recover(Asked(run, settings_file, targets, plugins, workers), watcher)
@@ -487,7 +488,8 @@ def _print_completeness(run: Path, report: Any) -> None:
 
 def _print_power(run: Path, files: tuple[Path, ...], quiet: bool, verbose: bool) -> None:
     """A statistic's report card, for each."""
-    from hindlight.recovery import Asked, report_cards
+    from hindlight.recovery import report_cards
+    from hindlight.study import Asked
 
     with _watching(quiet, verbose) as watcher:
         cards, remarks = report_cards(Asked(run, plugins=files), watcher)

@@ -6,37 +6,31 @@ The run is only read; what is made goes beside its result tables. The pieces of 
 from __future__ import annotations
 
 import time
-import tomllib
 from collections import Counter
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from functools import partial
 from itertools import chain
-from pathlib import Path
 from typing import Any
 
 import astropy.table
 import numpy as np
 from numpy.typing import NDArray
 
-from hindlight import brighter, completeness, host, injection, judge, plan, planted, ranking, record, report_card, store
-from hindlight import settings as settings_module
-from hindlight.completeness import Bars, Cell, Found, Injection, Looks, Null
-from hindlight.crew import Crew, assembled
+from hindlight import brighter, completeness, judge, plan, planted, ranking, record, report_card, store
+from hindlight.completeness import Found, Injection, Null
+from hindlight.crew import assembled
 from hindlight.duplicates import counts
-from hindlight.errors import NothingToDoError, UsageError
+from hindlight.errors import NothingToDoError
 from hindlight.fence import call
 from hindlight.lifted import copies
 from hindlight.lightcurve import FloatArray, IntArray, LightCurve
-from hindlight.order import Order, book
-from hindlight.plugin import Column, PeriodSearch, Statistic
-from hindlight.positions import first_controls, read_targets, serves
-from hindlight.record import Request
-from hindlight.schema import COMPLETENESS, COMPLETENESS_LIMITS, COMPLETENESS_TARGETS
-from hindlight.settings import Settings
-from hindlight.store import Columns, RunFolder
-from hindlight.systems import unit_vectors
-from hindlight.tables import astropy_table, read_ecsv, rows_to_columns, write_table
+from hindlight.order import book
+from hindlight.plugin import PeriodSearch, Statistic
+from hindlight.positions import read_targets, serves
+from hindlight.recovered import UPPER_BOUND, completeness_table, metadata, proof_remarks, remarks, target_tables
+from hindlight.study import Asked, FieldControls, Study, all_frames, is_small, opened, study_of, subsets_of
+from hindlight.tables import write_table
 from hindlight.tasks import position_blocks, residuals
 from hindlight.trials import (
     ALL,
@@ -47,38 +41,15 @@ from hindlight.trials import (
     judge_controls,
     judge_copies,
     judge_injected,
-    looks_of,
     plant_in_frame,
     search_controls,
 )
 from hindlight.verdicts import Watcher
-from hindlight.wording import from_to, how_many
+from hindlight.wording import from_to
 
 INJECTIONS_AT_ONCE = 128
-SMALL_WORK = 20_000_000  # frames times positions judged; up to this many the work is done in this process
 POWER_RATE = 1e-3
-MOST_BEYOND_ROUNDING, MOST_NONLINEAR = 0.02, 1e-6  # sigma: what pixels may differ by from light curves
-FEWEST_FOR_TAIL = 40  # controls: fewer show no tail, see `calibrate.tail_bound`
-SEARCHED = (
-    "target that was searched within its position error is",
-    "targets that were searched within their position errors are",
-)
-UPPER_BOUND = (
-    "sources are added to images as they are: what deconvolution does to a source that flickers is not in it, so for "
-    "synthesis images completeness is an upper bound"
-)
-
 Mask = NDArray[np.bool_]
-
-
-@dataclass(frozen=True, eq=False)
-class FieldControls:
-    """The controls of one field, ids ascending, and where they are (ICRS unit vectors); the names of its targets."""
-
-    number: int
-    ids: IntArray
-    vectors: FloatArray
-    targets: tuple[str, ...]
 
 
 @dataclass(frozen=True, eq=False)
@@ -105,80 +76,35 @@ class Power:
     cost_s: float
 
 
-@dataclass(frozen=True)
-class Asked:
-    """What the command line asks for."""
-
-    run: Path
-    settings: Path | None = None
-    targets: Path | None = None
-    plugins: tuple[Path, ...] = ()
-    workers: int | None = None
-
-
-@dataclass(frozen=True, eq=False)
-class Study:
-    """What every stage needs; `used_by_target` says how many frames of each channel each target has."""
-
-    order: Order
-    plugins: host.Plugins
-    crew: Crew
-    watcher: Watcher
-    frames: Columns
-    fields: Sequence[FieldControls]
-    subsets: Sequence[Subset]
-    cells: Sequence[Cell]
-    bars: Bars
-    columns: Mapping[str, Column]
-    used_by_target: Mapping[str, Mapping[str, int]]
-
-    @property
-    def settings(self) -> Settings:
-        """The settings in force."""
-        return self.order.settings
-
-    def each(self, stage: str, function: Callable[..., Any], jobs: Sequence[tuple[Any, ...]]) -> list[Any]:
-        """The results of jobs in their order, each told the order first."""
-        self.watcher.stage(stage, len(jobs))
-        results: list[Any] = [None] * len(jobs)
-
-        def done(number: int, result: Any) -> None:
-            results[number] = result
-            self.watcher.step()
-
-        self.crew.run(function, [(self.order, *job) for job in jobs], done)
-        return results
-
-
 def recover(asked: Asked, watcher: Watcher) -> Report:
     """Measure what a finished run could have shown, and write its tables of completeness.
 
     Raises `UsageError` where there is no finished run, `NothingToDoError` where it has no controls.
     """
-    run, order, plugins = _opened(asked)
+    run, order, plugins = opened(asked)
     ephemerides = read_targets(asked.targets) if asked.targets is not None else None
-    with run.locked(), assembled(asked.workers, None, _is_small(run, order.settings)) as crew:
-        study = _study(run, order, plugins, crew, watcher, _subsets)
+    with run.locked(), assembled(asked.workers, None, is_small(run, order.settings)) as crew:
+        study = study_of(run, order, plugins, crew, watcher, subsets_of)
         nulls, units = _nulls(study)
         wanted = _wanted(study, nulls)
         outcomes = _outcomes(study, wanted, nulls, units, with_plugins=False)
         proofs = _proofs(study)
-        meta = {**_meta(study, units), "run_state": record.state(run, order.settings, plugins)}
-        table = _table(study, wanted, outcomes, meta)
-        targets, limits = _target_tables(study, run, table, ephemerides, meta)
-    remarks = (*_remarks(study, nulls, outcomes[ALL].found, targets), *_proof_remarks(proofs), UPPER_BOUND)
+        meta = {**metadata(study, units), "run_state": record.state(run, order.settings, plugins)}
+        table = completeness_table(study, wanted, outcomes, meta)
+        targets, limits = target_tables(study, run, table, ephemerides, meta)
+    said = (*remarks(study, nulls, outcomes[ALL].found, targets), *proof_remarks(proofs), UPPER_BOUND)
     for name, made in (("completeness_limits", limits), ("completeness_targets", targets), ("completeness", table)):
         for ending in (".fits", ".vot", ".ecsv"):
             write_table(run.file(f"{name}{ending}"), made)
-    store.write_text(run, "completeness.txt", "\n".join(remarks) + "\n")
-    return Report(table, targets, limits, remarks)
+    store.write_text(run, "completeness.txt", "\n".join(said) + "\n")
+    return Report(table, targets, limits, said)
 
 
 def report_cards(asked: Asked, watcher: Watcher) -> tuple[list[Power], tuple[str, ...]]:
     """The power of each statistic alone on made-up sources in all frames of a run, and what is to be said of it."""
-    run, order, plugins = _opened(asked, with_new=True)
-    with run.locked(), assembled(asked.workers, None, _is_small(run, order.settings)) as crew:
-        study = _study(run, order, plugins, crew, watcher, lambda frames: [_all_frames(frames)])
+    run, order, plugins = opened(asked, with_new=True)
+    with run.locked(), assembled(asked.workers, None, is_small(run, order.settings)) as crew:
+        study = study_of(run, order, plugins, crew, watcher, lambda frames: [all_frames(frames)])
         nulls, units = _nulls(study)
         wanted = _wanted(study, nulls)
         outcome = _outcomes(study, wanted, nulls, units, with_plugins=True)[ALL]
@@ -215,110 +141,6 @@ def _rate_said(lowest_p: FloatArray) -> str:
         f"power at a false-alarm rate of {rates}, NOT {POWER_RATE:g}: that takes {round(1 / POWER_RATE) - 1} controls beside "
         f"the one that holds the source, some have {fewest}; at {POWER_RATE:g} power is lower ([controls] per_field)"
     )
-
-
-def _opened(asked: Asked, with_new: bool = False) -> tuple[RunFolder, Order, host.Plugins]:
-    """The finished run, and what it was judged with; `[completeness]` from the settings file, if one is given.
-
-    Plugins that the run was judged without are left out; `with_new` keeps those of the files given.
-    """
-    run = RunFolder(asked.run)
-    run.require()
-    if not run.has("candidates.ecsv"):
-        raise UsageError(f"{run.path}: this run was stopped before it was judged; its command continues it")
-    request = Request((), Path(), run.path, None, asked.plugins)
-    chosen = record.settings_in_force(run, request)
-    if asked.settings is not None:
-        chosen = replace(chosen, completeness=settings_module.read_settings(asked.settings).completeness)
-    recorded = (
-        tomllib.loads(run.file("settings.toml").read_text(encoding="utf-8")).get("versions", {}).get("plugins", {})
-    )
-    known = host.load(host.spec_from(Settings(), asked.plugins)).loaded
-    missing = sorted(set(recorded) - {entry.plugin.name for entry in known})
-    if missing:
-        raise UsageError(f"{run.path}: the run was judged with plugin {missing[0]!r}; give its file with --plugin")
-    left_out = {e.plugin.name for e in known if e.plugin.name not in recorded and not (with_new and e.origin == "file")}
-    spec = host.spec_from(chosen, asked.plugins, sorted(left_out))
-    plugins = host.load(spec)
-    spec = replace(spec, expected=plugins.fingerprint())
-    return run, Order(str(run.path.resolve()), chosen, spec, run.version()), plugins
-
-
-def _is_small(run: RunFolder, settings: Settings) -> bool:
-    """Whether the work is too small to be worth other processes."""
-    n = len(completeness.grid(settings.completeness)) * settings.completeness.per_cell
-    return n * len(run.frames()["id"]) * (100 if settings.completeness.period_search else 1) < SMALL_WORK
-
-
-def _study(
-    run: RunFolder, order: Order, plugins: host.Plugins, crew: Crew, watcher: Watcher,
-    chosen: Callable[[Columns], Sequence[Subset]],
-) -> Study:  # fmt: skip
-    """Fields, subsets and cells; raises `NothingToDoError` where no field has controls."""
-    tables = book(order.run, order.version)
-    fields = [found for found in _fields(tables.positions) if len(found.ids) > 1]
-    if not fields:
-        raise NothingToDoError(f"run {run.path}: {_why_no_fields(tables.positions)}")
-    candidates = read_ecsv(run.file("candidates.ecsv"))
-    level, dependent = order.settings.ranking.level, order.settings.ranking.any_dependence
-    p_values = (np.asarray(candidates[name], float) for name in ("p_empirical", "p_value"))
-    bars = Bars(*(completeness.bar(p, level, dependent) for p in p_values))
-    asked = plugins.period_searches if order.settings.completeness.period_search else ()
-    columns = judge.full_columns([*plugins.statistics, *asked])
-    cells = completeness.grid(order.settings.completeness)
-    used: dict[str, dict[str, int]] = {}
-    for row in read_ecsv(run.file("channels.ecsv")):
-        used.setdefault(str(row["name"]), {})[str(row["channel"])] = int(row["n_used"])
-    return Study(
-        order, plugins, crew, watcher, tables.frames, fields, chosen(tables.frames), cells, bars, columns, used
-    )
-
-
-def _fields(positions: Columns) -> list[FieldControls]:
-    """The controls of every field with targets that are judged at their stated place."""
-    is_target = (positions["kind"] == "target") & (positions["search"] < 0)
-    found = []
-    for number in sorted(set(positions["field"][is_target].tolist())):
-        here = first_controls(positions) & (positions["field"] == number)
-        order = np.argsort(positions["id"][here])
-        vectors = unit_vectors(positions["ra"][here], positions["dec"][here])[order]
-        names = tuple(positions["name"][is_target & (positions["field"] == number)].tolist())
-        found.append(FieldControls(int(number), positions["id"][here][order], vectors, names))
-    return found
-
-
-def _why_no_fields(positions: Columns) -> str:
-    """Why nothing can be said of completeness, and what would mend it."""
-    targets = positions["kind"] == "target"
-    if targets.any() and (positions["search"][targets] >= 0).all():
-        return (
-            f"all {targets.sum()} targets were searched within their position errors, and completeness is that of targets "
-            "at their stated places; [search] sigmas = 0 measures targets there, in a run of its own"
-        )
-    n = int((positions["kind"] == "control").sum())
-    return (
-        f"no field has more than one control ({n} in all), so nothing can be said of completeness; [controls] per_field "
-        "sets how many, in a run of its own"
-    )
-
-
-def _all_frames(frames: Columns) -> Subset:
-    return Subset(ALL, "", "", frames["id"][counts(frames)])
-
-
-def _subsets(frames: Columns) -> list[Subset]:
-    """All frames, those of each instrument, and those of each instrument and decade, in order of names."""
-    used = counts(frames)
-    decade = np.array([f"{text[:3]}0s" if text else "" for text in frames["middle_utc"]], object)
-    found = [_all_frames(frames)]
-    for name in sorted(set(frames["instrument"][used].tolist())):
-        mine = used & (frames["instrument"] == name)
-        found.append(Subset(name or "(no name)", name, "", frames["id"][mine]))
-        found += [
-            Subset(f"{name or '(no name)'} {ten}", name, ten, frames["id"][mine & (decade == ten)])
-            for ten in sorted(set(decade[mine].tolist()) - {""})
-        ]
-    return found
 
 
 def _nulls(study: Study) -> tuple[dict[int, dict[str, Null]], dict[str, float]]:
@@ -492,208 +314,3 @@ def _cost(plugin: Statistic | PeriodSearch, curves: Sequence[Sequence[LightCurve
     for curve in given:
         call(plugin, partial(method, curve), "")
     return 1000.0 * (time.perf_counter() - start) / len(given) if given else float("nan")
-
-
-def _meta(study: Study, units: Mapping[str, float]) -> dict[str, Any]:
-    """What the tables say of themselves."""
-    chosen = study.settings.completeness
-    return {
-        "rule": "recovered: the p-value is below what the run's own p-values leave for one more target at its "
-        "false-discovery level; ranked among the other controls, by the tail bound where these cannot decide",
-        "false_discovery_level": study.settings.ranking.level,
-        "p_value_bar": study.bars.final,
-        "seed": chosen.seed,
-        "period_search": chosen.period_search,
-        "median_frame_error": {label: float(f"{unit:.6g}") for label, unit in units.items()},
-        "interval": "95 %, Jeffreys: Brown, Cai & DasGupta 2001, Stat. Sci. 16, 101",
-        "caution": UPPER_BOUND,
-    }
-
-
-def _table(
-    study: Study, wanted: Sequence[Injection], outcomes: Mapping[str, Outcomes], meta: Mapping[str, Any]
-) -> astropy.table.Table:
-    """completeness.ecsv."""
-    of_cell = np.array([one.cell for one in wanted])
-    rows = []
-    for subset in study.subsets:
-        outcome = outcomes[subset.name]
-        for number, cell in enumerate(study.cells):
-            row = {
-                "subset": subset.name, "instrument": subset.instrument, "decade": subset.decade,
-                "n_frames": len(subset.frames), "kind": cell.kind, "flux": cell.flux, "period": cell.period_s,
-                "duty_cycle": cell.duty_cycle, "duration": cell.duty_cycle * cell.period_s,
-                "window": cell.window * cell.duty_cycle * cell.period_s, "missing": cell.missing,
-            }  # fmt: skip
-            rows.append(row | completeness.summary_row(of_cell == number, outcome.found, outcome.extra))
-    return astropy_table(COMPLETENESS, rows_to_columns(COMPLETENESS, rows), meta)
-
-
-def _target_tables(
-    study: Study, run: RunFolder, table: astropy.table.Table, ephemerides: Any, meta: Mapping[str, Any]
-) -> tuple[astropy.table.Table, astropy.table.Table]:
-    """completeness_targets.ecsv and completeness_limits.ecsv."""
-    candidates, channels = read_ecsv(run.file("candidates.ecsv")), read_ecsv(run.file("channels.ecsv"))
-    positions = book(study.order.run, study.order.version).positions
-    standing = {str(row["name"]): str(row["standing"]) for row in candidates}
-    limits: dict[str, dict[str, tuple[float, float]]] = {}
-    for row in channels:
-        level = float(row["blank_level"]) if "blank_level" in channels.colnames else 0.0  # not in runs of before
-        told = float(row["threshold"]), level
-        limits.setdefault(str(row["name"]), {})[str(row["channel"])] = told
-    is_target = (positions["kind"] == "target") & (positions["search"] < 0)
-    ids = positions["id"][is_target]
-    names = [str(name) for name in positions["name"][is_target]]
-    size = study.settings.ranking.gather_curves
-    jobs = []
-    for start in range(0, len(ids), size):
-        mine = names[start : start + size]
-        given = [_ephemeris(ephemerides, name) for name in mine]
-        jobs.append((ids[start : start + size], [limits.get(name, {}) for name in mine], given))
-    looks = [one for result in study.each("counting looks", looks_of, jobs) for one in result]
-    peaks = {str(row["name"]): (int(row["n_detected"]), float(row["peak_snr"])) for row in candidates}
-    rows, more = [], []
-    curve = _pulse_curve(table, study.settings.completeness.fluxes)
-    for name, (seen_in, cycles) in zip(names, looks, strict=True):
-        unseen = standing.get(name) == "unseen"
-        rows.append(_target_row(name, standing.get(name, ""), seen_in, cycles, peaks.get(name, (0, np.nan)), curve))
-        for flux in sorted(study.settings.completeness.fluxes) if unseen else ():
-            weight = completeness.weights(seen_in, flux)
-            limit = completeness.duty_limit(weight)
-            more.append({"name": name, "flux": flux, "looks_effective": float(weight.sum()), "duty_limit": limit})
-    return (
-        astropy_table(COMPLETENESS_TARGETS, rows_to_columns(COMPLETENESS_TARGETS, rows), meta),
-        astropy_table(COMPLETENESS_LIMITS, rows_to_columns(COMPLETENESS_LIMITS, more), meta),
-    )
-
-
-def _ephemeris(targets: Any, name: str) -> dict[str, float]:
-    """The ephemeris that a target list gives, NaN for none."""
-    wanted = ("period", "epoch", "period_dot", "window")
-    if targets is None or name not in targets.names:
-        return dict.fromkeys(wanted, float("nan"))
-    row = targets.names.index(name)
-    return {column: float(targets.column(column)[row]) for column in wanted}
-
-
-def _pulse_curve(table: astropy.table.Table, fluxes: Sequence[float]) -> tuple[FloatArray, FloatArray]:
-    """Fluxes, ascending, and the completeness of pulse trains in all frames, mean over the other cells."""
-    mine = table[(table["subset"] == ALL) & (table["kind"] == injection.PULSES)]
-    if len(mine) == 0:
-        return np.empty(0), np.empty(0)
-    grid = np.unique(np.asarray(fluxes, float))
-    return grid, np.array([np.mean(mine["completeness"][np.asarray(mine["flux"]) == flux]) for flux in grid])
-
-
-def _target_row(
-    name: str, standing: str, looks: Looks, cycles: bool, peak: tuple[int, float], curve: tuple[FloatArray, FloatArray]
-) -> dict[str, Any]:
-    """A row of completeness_targets.ecsv."""
-    n_detected, peak_snr = peak
-    like = peak_snr if n_detected else float(np.min(looks.threshold, initial=np.inf))
-    row: dict[str, Any] = {
-        "name": name, "standing": standing, "n_used": len(looks.look), "n_looks": looks.n, "by_cycles": cycles,
-        "like_flux": like if np.isfinite(like) else float("nan"),
-        "found_probability": completeness.between(like, *curve),
-    }  # fmt: skip
-    if standing == "unseen":
-        surely = completeness.weights(looks, completeness.HIGHEST_FLUX)
-        row["lowest_duty_limit"] = completeness.duty_limit(surely)
-        for word, duty in (("half", 0.5), ("tenth", 0.1), ("hundredth", 0.01)):
-            row[f"flux_limit_{word}"] = completeness.flux_limit(looks, duty)
-    return row
-
-
-def _remarks(
-    study: Study, nulls: Mapping[int, Mapping[str, Null]], found: Found, targets: astropy.table.Table
-) -> tuple[str, ...]:
-    """What holds for the tables as a whole; `found` is what became of the sources in all frames."""
-    chosen = study.settings.completeness
-    lit = any(null.brighter for of_field in nulls.values() for null in of_field.values())
-    said = [
-        f"{len(study.cells)} cells of {chosen.per_cell} sources each in {len(study.subsets)} subsets of frames, at "
-        f"{sum(len(f.ids) for f in study.fields)} controls of {how_many(len(study.fields), 'field', 'fields')}",
-        f"recovered means: p below {study.bars.final:.3g}, which the run's own p-values leave for one more target at a "
-        f"false-discovery rate of {study.settings.ranking.level:g}; what checks would say of it is not asked",
-        "a source has the same flux in median frame errors in every channel; channels of Stokes Q, U, V get none",
-    ]
-    if not chosen.period_search:
-        said.append("period searches are left out, of sources and controls alike ([completeness] period_search)")
-    elif lit:
-        said.append("periods of sources that are bright in single frames are not searched for")
-    said += _control_remarks(study, found.lowest_p, lit)
-    least = study.settings.detection.min_frames
-    if not found.enough.all():
-        said.append(
-            f"{int((~found.enough).sum())} of {len(found.enough)} sources have fewer than {least} usable frames in every "
-            "channel: a target is undecided then, however bright ([detection] min_frames)"
-        )
-    tables = book(study.order.run, study.order.version)
-    placed = (tables.positions["kind"] == "target") & (tables.positions["search"] < 0)
-    without = {int(n) for n in tables.positions["field"][placed]} - {f.number for f in study.fields}
-    if without:
-        fields = how_many(
-            len(without), "field with fewer than two controls is", "fields with fewer than two controls are"
-        )
-        said.append(f"{fields} left out")
-    searched = int(((tables.positions["kind"] == "target") & (tables.positions["search"] >= 0)).sum())
-    if searched:
-        said.append(f"{how_many(searched, *SEARCHED)} not in these tables")
-    undated = int((counts(study.frames) & ~np.isfinite(study.frames["middle_tdb_s"])).sum())
-    if undated:
-        said.append(
-            f"{how_many(undated, 'frame without a clock sees', 'frames without a clock see')} a source at a random phase"
-        )
-    if not targets["by_cycles"].any():
-        said.append("looks are epochs; a target list with ephemerides (--targets) makes them cycles")
-    return tuple(said)
-
-
-def _control_remarks(study: Study, lowest_p: FloatArray, lit: bool) -> list[str]:
-    """Whether controls are enough to find anything, by the smallest p-value that each source could have got."""
-    short = lowest_p >= study.bars.empirical
-    hopeless = short & (np.rint(1.0 / lowest_p - 1.0) < FEWEST_FOR_TAIL)
-    bar, final = f"{study.bars.empirical:.3g}", f"{study.bars.final:.3g}"
-    said = []
-    if hopeless.any():
-        said.append(
-            f"too few controls for {hopeless.sum()} of {len(short)} sources: p cannot be below "
-            f"{lowest_p[hopeless].min():.3g} at best, below {bar} is needed, and no tail can be fitted to fewer than "
-            f"{FEWEST_FOR_TAIL}: however bright, they could not have been found"
-            + ("; for bright sources as many comparisons are wanted as controls" if lit else "")
-        )
-    if (short & ~hopeless).any():
-        said.append(
-            f"controls cannot decide by themselves for {(short & ~hopeless).sum()} of {len(short)} sources (p below {bar} is "
-            "needed): the upper bound of a fitted tail does (n_extrapolated)"
-        )
-    if said and bar != final:
-        said.append(
-            f"p below {bar} is what the run's p-values by controls alone leave for one more target; where a tail is fitted, "
-            f"those of the run's targets count by their tails too, are smaller, and leave more: p below {final}"
-        )
-    return said
-
-
-def _proof_remarks(proofs: Sequence[planted.Proof | None]) -> tuple[str, ...]:
-    """What sources added to pixels have shown."""
-    made = [proof for proof in proofs if proof is not None]
-    if not made:
-        return (
-            "not proved on pixels: no frame could be measured again" if proofs else "not proved on pixels: none asked",
-        )
-    beyond, linear = max(abs(p.beyond_rounding) for p in made), max(abs(p.linear) for p in made)
-    said = "proved" if beyond <= MOST_BEYOND_ROUNDING and linear <= MOST_NONLINEAR else "NOT proved"
-    said += (
-        f" on {len(made)} injections in pixels: largest difference {max(abs(p.difference) for p in made):.2g} sigma, "
-        f"of which rounding to the steps of stored images leaves {beyond:.2g}, and floating-point pixels without their "
-        f"local background {linear:.1g}"
-    )
-    if len(made) < len(proofs):
-        said += f"; {len(proofs) - len(made)} more could not be measured"
-    counted = [p.counted for p in made]
-    return (
-        said,
-        f"of a beam-shaped source {from_to(100 * min(counted), 100 * max(counted), '.1f')} % are counted; fluxes here are "
-        "those counted, put right where comparisons tell what is lost",
-    )

@@ -1,0 +1,241 @@
+"""The tables and last lines of `hindlight completeness`, from what became of made-up sources."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from typing import Any
+
+import astropy.table
+import numpy as np
+
+from hindlight import completeness, injection, planted
+from hindlight.completeness import Found, Injection, Looks, Null
+from hindlight.duplicates import counts
+from hindlight.lightcurve import FloatArray
+from hindlight.order import book
+from hindlight.schema import COMPLETENESS, COMPLETENESS_LIMITS, COMPLETENESS_TARGETS
+from hindlight.store import RunFolder
+from hindlight.study import Study
+from hindlight.tables import astropy_table, read_ecsv, rows_to_columns
+from hindlight.trials import (
+    ALL,
+    Outcomes,
+    looks_of,
+)
+from hindlight.wording import from_to, how_many
+
+MOST_BEYOND_ROUNDING, MOST_NONLINEAR = 0.02, 1e-6  # sigma: what pixels may differ by from light curves
+FEWEST_FOR_TAIL = 40  # controls: fewer show no tail, see `calibrate.tail_bound`
+SEARCHED = (
+    "target that was searched within its position error is",
+    "targets that were searched within their position errors are",
+)
+UPPER_BOUND = (
+    "sources are added to images as they are: what deconvolution does to a source that flickers is not in it, so for "
+    "synthesis images completeness is an upper bound"
+)
+
+
+def metadata(study: Study, units: Mapping[str, float]) -> dict[str, Any]:
+    """What the tables say of themselves."""
+    chosen = study.settings.completeness
+    return {
+        "rule": "recovered: the p-value is below what the run's own p-values leave for one more target at its "
+        "false-discovery level; ranked among the other controls, by the tail bound where these cannot decide",
+        "false_discovery_level": study.settings.ranking.level,
+        "p_value_bar": study.bars.final,
+        "seed": chosen.seed,
+        "period_search": chosen.period_search,
+        "median_frame_error": {label: float(f"{unit:.6g}") for label, unit in units.items()},
+        "interval": "95 %, Jeffreys: Brown, Cai & DasGupta 2001, Stat. Sci. 16, 101",
+        "caution": UPPER_BOUND,
+    }
+
+
+def completeness_table(
+    study: Study, wanted: Sequence[Injection], outcomes: Mapping[str, Outcomes], meta: Mapping[str, Any]
+) -> astropy.table.Table:
+    """completeness.ecsv."""
+    of_cell = np.array([one.cell for one in wanted])
+    rows = []
+    for subset in study.subsets:
+        outcome = outcomes[subset.name]
+        for number, cell in enumerate(study.cells):
+            row = {
+                "subset": subset.name, "instrument": subset.instrument, "decade": subset.decade,
+                "n_frames": len(subset.frames), "kind": cell.kind, "flux": cell.flux, "period": cell.period_s,
+                "duty_cycle": cell.duty_cycle, "duration": cell.duty_cycle * cell.period_s,
+                "window": cell.window * cell.duty_cycle * cell.period_s, "missing": cell.missing,
+            }  # fmt: skip
+            rows.append(row | completeness.summary_row(of_cell == number, outcome.found, outcome.extra))
+    return astropy_table(COMPLETENESS, rows_to_columns(COMPLETENESS, rows), meta)
+
+
+def target_tables(
+    study: Study, run: RunFolder, table: astropy.table.Table, ephemerides: Any, meta: Mapping[str, Any]
+) -> tuple[astropy.table.Table, astropy.table.Table]:
+    """completeness_targets.ecsv and completeness_limits.ecsv."""
+    candidates, channels = read_ecsv(run.file("candidates.ecsv")), read_ecsv(run.file("channels.ecsv"))
+    positions = book(study.order.run, study.order.version).positions
+    standing = {str(row["name"]): str(row["standing"]) for row in candidates}
+    limits: dict[str, dict[str, tuple[float, float]]] = {}
+    for row in channels:
+        level = float(row["blank_level"]) if "blank_level" in channels.colnames else 0.0  # not in runs of before
+        told = float(row["threshold"]), level
+        limits.setdefault(str(row["name"]), {})[str(row["channel"])] = told
+    is_target = (positions["kind"] == "target") & (positions["search"] < 0)
+    ids = positions["id"][is_target]
+    names = [str(name) for name in positions["name"][is_target]]
+    size = study.settings.ranking.gather_curves
+    jobs = []
+    for start in range(0, len(ids), size):
+        mine = names[start : start + size]
+        given = [_ephemeris(ephemerides, name) for name in mine]
+        jobs.append((ids[start : start + size], [limits.get(name, {}) for name in mine], given))
+    looks = [one for result in study.each("counting looks", looks_of, jobs) for one in result]
+    peaks = {str(row["name"]): (int(row["n_detected"]), float(row["peak_snr"])) for row in candidates}
+    rows, more = [], []
+    curve = _pulse_curve(table, study.settings.completeness.fluxes)
+    for name, (seen_in, cycles) in zip(names, looks, strict=True):
+        unseen = standing.get(name) == "unseen"
+        rows.append(_target_row(name, standing.get(name, ""), seen_in, cycles, peaks.get(name, (0, np.nan)), curve))
+        for flux in sorted(study.settings.completeness.fluxes) if unseen else ():
+            weight = completeness.weights(seen_in, flux)
+            limit = completeness.duty_limit(weight)
+            more.append({"name": name, "flux": flux, "looks_effective": float(weight.sum()), "duty_limit": limit})
+    return (
+        astropy_table(COMPLETENESS_TARGETS, rows_to_columns(COMPLETENESS_TARGETS, rows), meta),
+        astropy_table(COMPLETENESS_LIMITS, rows_to_columns(COMPLETENESS_LIMITS, more), meta),
+    )
+
+
+def _ephemeris(targets: Any, name: str) -> dict[str, float]:
+    """The ephemeris that a target list gives, NaN for none."""
+    wanted = ("period", "epoch", "period_dot", "window")
+    if targets is None or name not in targets.names:
+        return dict.fromkeys(wanted, float("nan"))
+    row = targets.names.index(name)
+    return {column: float(targets.column(column)[row]) for column in wanted}
+
+
+def _pulse_curve(table: astropy.table.Table, fluxes: Sequence[float]) -> tuple[FloatArray, FloatArray]:
+    """Fluxes, ascending, and the completeness of pulse trains in all frames, mean over the other cells."""
+    mine = table[(table["subset"] == ALL) & (table["kind"] == injection.PULSES)]
+    if len(mine) == 0:
+        return np.empty(0), np.empty(0)
+    grid = np.unique(np.asarray(fluxes, float))
+    return grid, np.array([np.mean(mine["completeness"][np.asarray(mine["flux"]) == flux]) for flux in grid])
+
+
+def _target_row(
+    name: str, standing: str, looks: Looks, cycles: bool, peak: tuple[int, float], curve: tuple[FloatArray, FloatArray]
+) -> dict[str, Any]:
+    """A row of completeness_targets.ecsv."""
+    n_detected, peak_snr = peak
+    like = peak_snr if n_detected else float(np.min(looks.threshold, initial=np.inf))
+    row: dict[str, Any] = {
+        "name": name, "standing": standing, "n_used": len(looks.look), "n_looks": looks.n, "by_cycles": cycles,
+        "like_flux": like if np.isfinite(like) else float("nan"),
+        "found_probability": completeness.between(like, *curve),
+    }  # fmt: skip
+    if standing == "unseen":
+        surely = completeness.weights(looks, completeness.HIGHEST_FLUX)
+        row["lowest_duty_limit"] = completeness.duty_limit(surely)
+        for word, duty in (("half", 0.5), ("tenth", 0.1), ("hundredth", 0.01)):
+            row[f"flux_limit_{word}"] = completeness.flux_limit(looks, duty)
+    return row
+
+
+def remarks(
+    study: Study, nulls: Mapping[int, Mapping[str, Null]], found: Found, targets: astropy.table.Table
+) -> tuple[str, ...]:
+    """What holds for the tables as a whole; `found` is what became of the sources in all frames."""
+    chosen = study.settings.completeness
+    lit = any(null.brighter for of_field in nulls.values() for null in of_field.values())
+    said = [
+        f"{len(study.cells)} cells of {chosen.per_cell} sources each in {len(study.subsets)} subsets of frames, at "
+        f"{sum(len(f.ids) for f in study.fields)} controls of {how_many(len(study.fields), 'field', 'fields')}",
+        f"recovered means: p below {study.bars.final:.3g}, which the run's own p-values leave for one more target at a "
+        f"false-discovery rate of {study.settings.ranking.level:g}; what checks would say of it is not asked",
+        "a source has the same flux in median frame errors in every channel; channels of Stokes Q, U, V get none",
+    ]
+    if not chosen.period_search:
+        said.append("period searches are left out, of sources and controls alike ([completeness] period_search)")
+    elif lit:
+        said.append("periods of sources that are bright in single frames are not searched for")
+    said += _control_remarks(study, found.lowest_p, lit)
+    least = study.settings.detection.min_frames
+    if not found.enough.all():
+        said.append(
+            f"{int((~found.enough).sum())} of {len(found.enough)} sources have fewer than {least} usable frames in every "
+            "channel: a target is undecided then, however bright ([detection] min_frames)"
+        )
+    tables = book(study.order.run, study.order.version)
+    placed = (tables.positions["kind"] == "target") & (tables.positions["search"] < 0)
+    without = {int(n) for n in tables.positions["field"][placed]} - {f.number for f in study.fields}
+    if without:
+        fields = how_many(
+            len(without), "field with fewer than two controls is", "fields with fewer than two controls are"
+        )
+        said.append(f"{fields} left out")
+    searched = int(((tables.positions["kind"] == "target") & (tables.positions["search"] >= 0)).sum())
+    if searched:
+        said.append(f"{how_many(searched, *SEARCHED)} not in these tables")
+    undated = int((counts(study.frames) & ~np.isfinite(study.frames["middle_tdb_s"])).sum())
+    if undated:
+        said.append(
+            f"{how_many(undated, 'frame without a clock sees', 'frames without a clock see')} a source at a random phase"
+        )
+    if not targets["by_cycles"].any():
+        said.append("looks are epochs; a target list with ephemerides (--targets) makes them cycles")
+    return tuple(said)
+
+
+def _control_remarks(study: Study, lowest_p: FloatArray, lit: bool) -> list[str]:
+    """Whether controls are enough to find anything, by the smallest p-value that each source could have got."""
+    short = lowest_p >= study.bars.empirical
+    hopeless = short & (np.rint(1.0 / lowest_p - 1.0) < FEWEST_FOR_TAIL)
+    bar, final = f"{study.bars.empirical:.3g}", f"{study.bars.final:.3g}"
+    said = []
+    if hopeless.any():
+        said.append(
+            f"too few controls for {hopeless.sum()} of {len(short)} sources: p cannot be below "
+            f"{lowest_p[hopeless].min():.3g} at best, below {bar} is needed, and no tail can be fitted to fewer than "
+            f"{FEWEST_FOR_TAIL}: however bright, they could not have been found"
+            + ("; for bright sources as many comparisons are wanted as controls" if lit else "")
+        )
+    if (short & ~hopeless).any():
+        said.append(
+            f"controls cannot decide by themselves for {(short & ~hopeless).sum()} of {len(short)} sources (p below {bar} is "
+            "needed): the upper bound of a fitted tail does (n_extrapolated)"
+        )
+    if said and bar != final:
+        said.append(
+            f"p below {bar} is what the run's p-values by controls alone leave for one more target; where a tail is fitted, "
+            f"those of the run's targets count by their tails too, are smaller, and leave more: p below {final}"
+        )
+    return said
+
+
+def proof_remarks(proofs: Sequence[planted.Proof | None]) -> tuple[str, ...]:
+    """What sources added to pixels have shown."""
+    made = [proof for proof in proofs if proof is not None]
+    if not made:
+        return (
+            "not proved on pixels: no frame could be measured again" if proofs else "not proved on pixels: none asked",
+        )
+    beyond, linear = max(abs(p.beyond_rounding) for p in made), max(abs(p.linear) for p in made)
+    said = "proved" if beyond <= MOST_BEYOND_ROUNDING and linear <= MOST_NONLINEAR else "NOT proved"
+    said += (
+        f" on {len(made)} injections in pixels: largest difference {max(abs(p.difference) for p in made):.2g} sigma, "
+        f"of which rounding to the steps of stored images leaves {beyond:.2g}, and floating-point pixels without their "
+        f"local background {linear:.1g}"
+    )
+    if len(made) < len(proofs):
+        said += f"; {len(proofs) - len(made)} more could not be measured"
+    counted = [p.counted for p in made]
+    return (
+        said,
+        f"of a beam-shaped source {from_to(100 * min(counted), 100 * max(counted), '.1f')} % are counted; fluxes here are "
+        "those counted, put right where comparisons tell what is lost",
+    )
