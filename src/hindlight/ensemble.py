@@ -87,18 +87,7 @@ def solve_gains(flux: FloatArray, flux_err: FloatArray, fewest: int = 3) -> Gain
         known &= (known.sum(axis=1) >= fewest)[:, None]
         known &= (known.sum(axis=0) >= 2)[None, :]
         if not known.any():
-            nothing = np.full(n_frames, np.nan)
-            return Gains(
-                nothing,
-                nothing,
-                nothing,
-                np.zeros(n_frames, np.int64),
-                np.full(n_sources, np.nan),
-                scatter,
-                0.0,
-                0.0,
-                np.nan,
-            )
+            return _no_gains(n_frames, scatter)
         gain, brightness = _bilinear_fit(flux, flux_err, known)
         relative, error = _relative(flux, flux_err, known, gain, brightness)
         common = excess_scatter(relative[known], error[known])
@@ -126,6 +115,11 @@ def solve_gains(flux: FloatArray, flux_err: FloatArray, fewest: int = 3) -> Gain
         spread=float(MAD_TO_SIGMA * np.median(np.abs(logs - np.median(logs)))),
         spread_limit=_largest_scatter(logs),
     )
+
+
+def _no_gains(n_frames: int, scatter: FloatArray) -> Gains:
+    nothing, counts = np.full(n_frames, np.nan), np.zeros(n_frames, np.int64)
+    return Gains(nothing, nothing, nothing, counts, np.full(len(scatter), np.nan), scatter, 0.0, 0.0, np.nan)
 
 
 def _largest_scatter(values: FloatArray) -> float:
