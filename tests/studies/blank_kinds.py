@@ -233,14 +233,14 @@ def main() -> int:
 
 
 def fails(runs: list[Run], kind: str) -> bool:
-    """Whether a kind falls short with controls from anywhere, by the combined p-values and by columns."""
-    by_count = not holds(runs, f"{kind}, controls from anywhere")
+    """Whether a kind falls short with controls from anywhere, by its columns; the count of small p-values is shown beside."""
+    holds(runs, f"{kind}, controls from anywhere")
     p = likeness(runs)
     adjusted = holm(np.array(list(p.values())))
     print(
         f"   {(adjusted <= LEAST_P).sum()} of {len(p)} columns differ as well, {COMBINED} {p[COMBINED]:.2g}", flush=True
     )
-    if not (by_count and (adjusted <= LEAST_P).any()):
+    if not (adjusted <= LEAST_P).any():
         print("   that should have failed")
         return False
     return True
