@@ -2,15 +2,16 @@
 
     python tests/studies/search.py [--seeds 1 2 3] [--targets 300] [--controls 200] [--frames 24]
 
-First a pulser (S/N 13 in one frame of eight) is put seven beams from the stated place of a target whose error, searched
-to 2 sigma, is 20 beams across: once in Gaussian noise with a steady source of S/N 8 per frame nearer to it, once by
-itself in heavy-tailed noise, where blank sky reaches S/N 11 among so many places. Verdict: it is found within half a
-beam, seen bright, with q < 0.05 (in the heavy-tailed noise what counts as bright lies so high that often one of its three
-pulses does). Then targets without anything, each searched 5 beams across among
-steady sources that its ellipse or a control's may hold. Verdict: the number of p-values up to 0.05 lies within the central 99 % of what exchangeable targets and controls give
-(beta-binomial, since all share the same controls), at most 1 % have q < 0.05, and for every calibrated column, in a
-second run where no place is too bright for blank sky as its null, the places judged agree with those of the controls
-by a two-sample Kolmogorov-Smirnov test, Holm-corrected p > 0.01. Exits non-zero when short.
+First a pulser (S/N 13 in one frame of eight) is put seven beams from the stated place of a target whose error,
+searched to 2 sigma, is 20 beams across: once in Gaussian noise with a steady source of S/N 8 per frame nearer to it,
+once by itself in heavy-tailed noise, where blank sky reaches S/N 11 among so many places. Verdict: it is found within
+half a beam, seen bright, with q < 0.05 (in the heavy-tailed noise what counts as bright lies so high that often one
+of its three pulses does). Then targets without anything, each searched 5 beams across among steady sources that its
+ellipse or a control's may hold. Verdict: the number of p-values up to 0.05 lies within the central 99 % of what
+exchangeable targets and controls give (beta-binomial, since all share the same controls), at most 1 % have q < 0.05,
+and for every calibrated column, in a second run where no place is too bright for blank sky as its null, the places
+judged agree with those of the controls by a two-sample Kolmogorov-Smirnov test, Holm-corrected p > 0.01. Exits
+non-zero when short.
 """
 
 from __future__ import annotations
