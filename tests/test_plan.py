@@ -184,3 +184,13 @@ def test_controls_stand_clear_of_targets_sources_and_each_other():
     assert separation_deg(vectors, unit_vectors(targets.ra, targets.dec)).min() > 0.0299
     assert bright.blank_sky(0.015).clear(vectors).all()
     assert BlankSky(unit_vectors(np.zeros(1), np.zeros(1)), np.array([0.45])).clear(vectors).sum() == 0
+
+
+def test_frames_that_are_gone_are_no_reference_frames():
+    """They show no bright source, and blank sky would be looked for without; where no other is left they are taken."""
+    table = squares([0.0] * 4)
+    table["exposure_s"][:] = (10.0, 60.0, 60.0, 10.0)
+    table["state"][:] = ["current", "vanished", "current", "current"]
+    assert plan.reference_frames(table, np.arange(4), 8).tolist() == [2]
+    table["state"][:] = "vanished"
+    assert plan.reference_frames(table, np.arange(4), 8).tolist() == [1, 2]

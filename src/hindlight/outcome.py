@@ -109,7 +109,8 @@ def notes(found: Field, index: int, at: int, p: PValues, controls: Controls, pla
     said = []
     if p.short[at]:
         counted = f" that count as {n_controls / found.group_size:.3g}" if found.group_size > 1 else ""
-        said.append(f"{n_controls} controls{counted} cannot decide at this level, {p.needed} are needed")
+        are = how_many(n_controls, "control", "controls")
+        said.append(f"{are}{counted} cannot decide at this level, {p.needed} are needed")
     if p.extrapolated[at]:
         said.append("p_value is the upper bound of a fitted tail, beyond every control")
     if n_controls == 0:

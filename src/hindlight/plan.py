@@ -285,6 +285,10 @@ class FieldFrames:
     rows: IntArray
     covered: NDArray[np.bool_]
 
+    def rows_there(self, frames: Columns) -> NDArray[np.bool_]:
+        """Which of the frames can be measured now, shape (n_frames,)."""
+        return np.asarray(frames["state"][self.rows] == "current")
+
 
 def covered(frames: Columns, rows: IntArray, vectors: FloatArray) -> NDArray[np.bool_]:
     """Which of these frames cover which positions (n, 3) by their footprints; shape (n_rows, n)."""
@@ -303,10 +307,15 @@ def field_frames(frames: Columns, vectors: FloatArray) -> FieldFrames:
 
 
 def reference_frames(frames: Columns, rows: IntArray, per_channel: int) -> IntArray:
-    """The frames in which to look for bright sources: per channel the longest exposures, spread over time."""
+    """The frames in which to look for bright sources: per channel the longest exposures, spread over time.
+
+    Frames that are not there any more show none, and are taken only where a channel has no other.
+    """
     chosen: list[int] = []
     for label in sorted(set(frames["channel"][rows].tolist())):
         mine = rows[frames["channel"][rows] == label]
+        there = mine[frames["state"][mine] == "current"]
+        mine = there if len(there) else mine
         exposure = np.nan_to_num(frames["exposure_s"][mine])
         longest = mine[exposure >= 0.99 * exposure.max()]
         spread = np.linspace(0, len(longest) - 1, min(per_channel, len(longest))).round().astype(int)
