@@ -194,3 +194,16 @@ def test_frames_that_are_gone_are_no_reference_frames():
     assert plan.reference_frames(table, np.arange(4), 8).tolist() == [2]
     table["state"][:] = "vanished"
     assert plan.reference_frames(table, np.arange(4), 8).tolist() == [1, 2]
+
+
+def test_controls_stand_around_a_crowd_of_targets():
+    """Where targets fill the middle of the field, the lattice goes on beyond them until as many places as wanted are free."""
+    table = squares([0.0] * 4)
+    side = np.linspace(-0.06, 0.06, 25)
+    ra, dec = (axis.ravel() for axis in np.meshgrid(side % 360.0, side))
+    targets = Targets(tuple(f"t{k}" for k in range(len(ra))), ra, dec, {})
+    positions = plan.add_targets(plan.no_positions(), targets, np.arange(len(ra)), 50.0)
+    within = plan.field_frames(table, unit_vectors(ra, dec))
+    number = int(positions["field"][0])
+    positions = plan.add_controls(positions, number, 0, table, within, 0.02, sources([]), Controls(per_field=5))
+    assert (positions["kind"] == "control").sum() == 5

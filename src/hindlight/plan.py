@@ -408,16 +408,23 @@ def clear_of_targets(
     positions: Mapping[str, Any], middle_of: NDArray[np.bool_], spacing_deg: float, clear_deg: float, wanted: int, seed: int,
     frames: Columns, within: FieldFrames,
 ) -> tuple[FloatArray, FloatArray]:  # fmt: skip
-    """Places around the middle of some targets, `spacing_deg` apart and `clear_deg` from where any target may be."""
+    """Places around the middle of some targets, `spacing_deg` apart and `clear_deg` from where any target may be.
+
+    The lattice grows where targets take up so much of it that less than `wanted` places are left.
+    """
     centre = _middle(positions, middle_of)
     ra0 = float(np.degrees(np.arctan2(centre[1], centre[0])) % 360)
     dec0 = float(np.degrees(np.arctan2(centre[2], np.hypot(centre[0], centre[1]))))
     extent = 2 * float(np.median(frames["radius"][within.rows]))
-    ra, dec = control_grid(ra0, dec0, extent, spacing_deg, wanted, seed)
     near = of_targets(positions)
     occupied = unit_vectors(positions["ra"][near], positions["dec"][near])
-    free = nearest_deg(unit_vectors(ra, dec), occupied) > clear_deg
-    return ra[free], dec[free]
+    size, n_before = wanted, 0
+    while True:
+        ra, dec = control_grid(ra0, dec0, extent, spacing_deg, size, seed)
+        free = nearest_deg(unit_vectors(ra, dec), occupied) > clear_deg
+        if free.sum() >= wanted or len(ra) == n_before:  # it reaches as far as there are frames
+            return ra[free], dec[free]
+        size, n_before = 4 * size, len(ra)
 
 
 def _middle(positions: Mapping[str, Any], of: NDArray[np.bool_]) -> FloatArray:
