@@ -56,6 +56,15 @@ def test_rank_is_exact_for_exchangeable_sets():
         assert low <= np.sum(np.array(p) <= level + 1e-12) <= high
 
 
+@pytest.mark.parametrize("n_controls", [2, 9, 30])
+def test_rank_is_exact_among_few_controls_by_many_statistics(n_controls):
+    """A target is first as seldom as any other of the set, though it is often far out in the scale of a few controls."""
+    rng = np.random.default_rng(12)
+    sets = [rng.standard_normal((n_controls + 1, 20)) for _ in range(1500)]
+    first = sum(calibrate.rank(calibrate.null_from(values[1:]), values[0]).exceeded_by == 0 for values in sets)
+    assert first <= stats.binom.ppf(0.9999, len(sets), 1 / (n_controls + 1))
+
+
 def test_missing_values_are_least_extreme():
     """A statistic that a member of the set lacks never makes it unusual, and no values give no p-value."""
     values = np.array([[1.0, -np.inf], [2.0, -np.inf], [3.0, 0.5]])

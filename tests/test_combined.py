@@ -118,3 +118,15 @@ def test_a_target_among_sidelobes_says_which_controls_it_lacks(tmp_path: Path) -
     )
     assert rows["aside"]["n_controls"] >= 8
     assert "left out" not in str(rows["aside"]["notes"])
+
+
+@pytest.mark.parametrize("wanted", [0, 1])
+def test_a_search_with_no_control_or_one_is_undecided_and_says_so(tmp_path: Path, wanted: int) -> None:
+    """Nothing is said of such a target but that there was nothing to hold it against."""
+    write(tmp_path, [], {"t.csv": [(skies.Source("a", 0.0, 0.0), 1.02 * BEAM)]})
+    (tmp_path / "s.toml").write_text(SETTINGS.replace("controls = 40", f"controls = {wanted}"), encoding="utf-8")
+    row = mine(tmp_path, "run", "t.csv")["a"]
+    assert (row["n_controls"], row["standing"]) == (wanted, "undecided")
+    said = (tmp_path / "run" / "summary.txt").read_text(encoding="utf-8")
+    assert f"with {wanted} control{'' if wanted else 's'} searched alike" in said
+    assert "1 control cannot decide at this level" in str(row["notes"]) or not wanted

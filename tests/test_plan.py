@@ -184,3 +184,26 @@ def test_controls_stand_clear_of_targets_sources_and_each_other():
     assert separation_deg(vectors, unit_vectors(targets.ra, targets.dec)).min() > 0.0299
     assert bright.blank_sky(0.015).clear(vectors).all()
     assert BlankSky(unit_vectors(np.zeros(1), np.zeros(1)), np.array([0.45])).clear(vectors).sum() == 0
+
+
+def test_frames_that_are_gone_are_no_reference_frames():
+    """They show no bright source, and blank sky would be looked for without; where no other is left they are taken."""
+    table = squares([0.0] * 4)
+    table["exposure_s"][:] = (10.0, 60.0, 60.0, 10.0)
+    table["state"][:] = ["current", "vanished", "current", "current"]
+    assert plan.reference_frames(table, np.arange(4), 8).tolist() == [2]
+    table["state"][:] = "vanished"
+    assert plan.reference_frames(table, np.arange(4), 8).tolist() == [1, 2]
+
+
+def test_controls_stand_around_a_crowd_of_targets():
+    """Where targets fill the middle of the field, the lattice goes on beyond them until as many places as wanted are free."""
+    table = squares([0.0] * 4)
+    side = np.linspace(-0.06, 0.06, 25)
+    ra, dec = (axis.ravel() for axis in np.meshgrid(side % 360.0, side))
+    targets = Targets(tuple(f"t{k}" for k in range(len(ra))), ra, dec, {})
+    positions = plan.add_targets(plan.no_positions(), targets, np.arange(len(ra)), 50.0)
+    within = plan.field_frames(table, unit_vectors(ra, dec))
+    number = int(positions["field"][0])
+    positions = plan.add_controls(positions, number, 0, table, within, 0.02, sources([]), Controls(per_field=5))
+    assert (positions["kind"] == "control").sum() == 5

@@ -11,7 +11,7 @@ from astropy.table import Table
 
 import sequential
 import skies
-from hindlight import host, plan, second_pass, study, tasks
+from hindlight import host, plan, recovered, second_pass, study, tasks
 from hindlight.calibrate import Rank
 from hindlight.conclude import Field
 from hindlight.judge import Judgement
@@ -248,3 +248,36 @@ def test_killed_in_a_second_pass_and_continued(runs, monkeypatch):
     assert parts == {path: path.stat().st_mtime_ns for path in (run / "measurements").rglob("*.parquet")}
     for name in ("candidates.ecsv", "controls.parquet", "positions.parquet", "summary.txt"):
         assert (run / name).read_bytes() == (runs / "whole" / name).read_bytes(), name
+
+
+def test_frames_that_are_gone_hold_no_more_controls(tmp_path):
+    """Where a third of a target's frames are not there any more, none is measured that could not serve; that is said."""
+    pulser = skies.Source("pulser", 0.0, 0.0, lambda k, _d, _s: 9.0 if k % 6 == 0 else 0.0)
+    look = skies.Sky(n_frames=24)
+    skies.write_sky(tmp_path / "frames", look, [pulser], seed=9)
+    (tmp_path / "targets.csv").write_text(skies.target_text([pulser], look), encoding="utf-8")
+    run = tmp_path / "run"
+    words = [tmp_path / "frames", "--targets", tmp_path / "targets.csv", "--out", run, "--settings", tmp_path / "s.toml",
+             "--workers", 1, "--without", "lomb_scargle"]  # fmt: skip
+    text = "[controls]\nper_field = 10\nmost_per_field = {}\nfield_size_deg = 50.0\n"
+    (tmp_path / "s.toml").write_text(text.format(0), encoding="utf-8")
+    mine(*words)
+    for number in range(8):
+        (tmp_path / "frames" / f"frame{number:04d}.fits").unlink()
+    (tmp_path / "s.toml").write_text(text.format(8192), encoding="utf-8")
+    mine(*words)
+    assert len(list((run / "measurements").iterdir())) == 1
+    said = (run / "summary.txt").read_text(encoding="utf-8")
+    assert f"for pulser: 10, where 10 could not decide; {second_pass.GONE}" in said
+
+
+def test_too_few_controls_are_said_to_be_those_of_completeness():
+    """Made-up sources have the first controls only: that none is found says nothing of a run that would add some."""
+
+    def said(most):
+        settings = Settings(controls=Controls(per_field=20, most_per_field=most))
+        asked = SimpleNamespace(settings=settings, bars=SimpleNamespace(empirical=0.01, final=0.01))
+        return recovered._control_remarks(asked, np.full(3, 1 / 21), False)[0]
+
+    assert said(20).endswith("no tail can be fitted to fewer than 40: however bright, they are not found")
+    assert "(a second pass), and may find it" in said(21)

@@ -1,8 +1,8 @@
 """Columns and their null to p-values, thresholds, tails and false-discovery rates. Pure numbers in and out.
 
 A target is ranked within the set of itself and its controls: every calibrated column gives each member of the set a
-rank p-value; the smallest is the member's combination, ties ordered by how far that column lies beyond the controls,
-in their MAD; the combination is ranked in the same set. Under exchangeability the result is exact (Phipson & Smyth
+rank p-value; the smallest is the member's combination, ties ordered by how far out that column lies, in the MAD of the
+whole set; the combination is ranked in the same set. Under exchangeability the result is exact (Phipson & Smyth
 2010, SAGMB 9, 39): P(p <= a) <= a.
 """
 
@@ -99,7 +99,9 @@ def rank(null: Null, target: FloatArray, weight: float = 1.0) -> Rank:
     """Rank a target's oriented values, shape (k,), within the set of itself and the controls; NaN p for no values.
 
     Where controls are alike in groups of `weight`, one target stands for so many of them: p = (r + weight) / (n + weight),
-    which for whole groups is the exact rank among groups.
+    which for whole groups is the exact rank among groups. Ties of the combination are ordered in the scale of the whole set:
+    in that of the controls alone, which each of them has a part in, a target would be further out than it is. The distance
+    that is returned, and those of the controls, are in the latter: a source is not to set the scale of how far out it is.
     """
     n = null.n
     if n == 0 or not np.isfinite(target).any():
@@ -110,9 +112,27 @@ def rank(null: Null, target: FloatArray, weight: float = 1.0) -> Rank:
     control_p = np.where(np.isfinite(null.values), control_p, 1.0)
     column, best, distance = _combination(target_p[None, :], (target[None, :] - null.centre) / null.spread)
     _, control_best, control_distance = _combination(control_p, (null.values - null.centre) / null.spread)
-    ahead = (control_best < best[0]) | ((control_best == best[0]) & (control_distance >= distance[0]))
-    r = int(ahead.sum())
+    tied = control_best == best[0]
+    ahead = control_distance[tied] >= distance[0]
+    if (
+        n > 1
+    ):  # of two each is as far from their middle as the other: the target is first then, with a p that says nothing
+        ahead = _as_far_in_set(null, control_p, tied, target, target_p)
+    r = int((control_best < best[0]).sum() + ahead.sum())
     return Rank((r + weight) / (n + weight), int(column[0]), float(distance[0]), r, control_distance)
+
+
+def _as_far_in_set(
+    null: Null, control_p: FloatArray, tied: NDArray[np.bool_], target: FloatArray, target_p: FloatArray
+) -> NDArray[np.bool_]:
+    """Which of the controls that have a target's combination are as far out as it is, in the scale of the whole set."""
+    p = np.concatenate((target_p[None, :], control_p[tied]))
+    deciding = (p == target_p.min()).any(axis=0)
+    values = np.concatenate((target[None, deciding], null.values[:, deciding]))
+    centre, spread = centre_and_spread(values)
+    members = np.concatenate(([True], tied))
+    distance = _combination(p[:, deciding], (values[members] - centre) / spread)[2]
+    return np.asarray(distance[1:] >= distance[0])
 
 
 def furthest_columns(null: Null, values: FloatArray) -> IntArray:

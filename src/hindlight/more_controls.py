@@ -90,12 +90,13 @@ def serving_sites(
 ) -> NDArray[np.bool_]:
     """Which of the first sites (n, 3) serve which targets by their frames, shape (n_targets, m) with m <= n.
 
-    Looked up only until `enough` serve any target.
+    Looked up only until `enough` serve any target. Frames that are not there any more cannot be measured, and do not count.
     """
+    there = within.rows_there(frames)[:, None]
     found = [np.zeros((within.covered.shape[1], 0), bool)]
     count = 0
     for start in range(0, len(vectors), PLACES_AT_ONCE):
-        inside = covered(frames, within.rows, vectors[start : start + PLACES_AT_ONCE])
+        inside = covered(frames, within.rows, vectors[start : start + PLACES_AT_ONCE]) & there
         found.append(serves(within.covered, inside, share))
         count += int(found[-1].any(axis=0).sum())
         if count >= enough:

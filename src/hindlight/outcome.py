@@ -109,7 +109,8 @@ def notes(found: Field, index: int, at: int, p: PValues, controls: Controls, pla
     said = []
     if p.short[at]:
         counted = f" that count as {n_controls / found.group_size:.3g}" if found.group_size > 1 else ""
-        said.append(f"{n_controls} controls{counted} cannot decide at this level, {p.needed} are needed")
+        are = how_many(n_controls, "control", "controls")
+        said.append(f"{are}{counted} cannot decide at this level, {p.needed} are needed")
     if p.extrapolated[at]:
         said.append("p_value is the upper bound of a fitted tail, beyond every control")
     if n_controls == 0:
@@ -236,13 +237,14 @@ def _search_remarks(fields: Sequence[Field], settings: Settings) -> list[str]:
     found = [f for f in fields if f.n_trials > 1]
     if not found:
         return []
-    each = [(f, len(f.controls) // max(1, len(f.blank_sky))) for f in found]  # copies of bright targets' controls
+    each = [(f, max(1, len(f.controls) // max(1, len(f.blank_sky)))) for f in found]  # copies for bright targets
     trials, sizes = [f.n_trials for f in found], [int(n) // k for f, k in each for n in f.ranked.n_controls]
     one, several = "target was searched within its position error", "targets were searched within their position errors"
     were = how_many(len(sizes), one, several)
+    noun = "control" if max(sizes) == 1 else "controls"
     said = (
         f"{were} at "
-        f"{from_to(min(trials), max(trials))} places each, with {from_to(min(sizes), max(sizes))} controls searched alike"
+        f"{from_to(min(trials), max(trials))} places each, with {from_to(min(sizes), max(sizes))} {noun} searched alike"
     )
     short = min(sizes) < settings.search.controls
     return [said + (f"; {settings.search.controls} were asked for, no more fit into the frames" if short else "")]

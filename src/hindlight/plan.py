@@ -285,6 +285,10 @@ class FieldFrames:
     rows: IntArray
     covered: NDArray[np.bool_]
 
+    def rows_there(self, frames: Columns) -> NDArray[np.bool_]:
+        """Which of the frames can be measured now, shape (n_frames,)."""
+        return np.asarray(frames["state"][self.rows] == "current")
+
 
 def covered(frames: Columns, rows: IntArray, vectors: FloatArray) -> NDArray[np.bool_]:
     """Which of these frames cover which positions (n, 3) by their footprints; shape (n_rows, n)."""
@@ -303,10 +307,15 @@ def field_frames(frames: Columns, vectors: FloatArray) -> FieldFrames:
 
 
 def reference_frames(frames: Columns, rows: IntArray, per_channel: int) -> IntArray:
-    """The frames in which to look for bright sources: per channel the longest exposures, spread over time."""
+    """The frames in which to look for bright sources: per channel the longest exposures, spread over time.
+
+    Frames that are not there any more show none, and are taken only where a channel has no other.
+    """
     chosen: list[int] = []
     for label in sorted(set(frames["channel"][rows].tolist())):
         mine = rows[frames["channel"][rows] == label]
+        there = mine[frames["state"][mine] == "current"]
+        mine = there if len(there) else mine
         exposure = np.nan_to_num(frames["exposure_s"][mine])
         longest = mine[exposure >= 0.99 * exposure.max()]
         spread = np.linspace(0, len(longest) - 1, min(per_channel, len(longest))).round().astype(int)
@@ -399,16 +408,23 @@ def clear_of_targets(
     positions: Mapping[str, Any], middle_of: NDArray[np.bool_], spacing_deg: float, clear_deg: float, wanted: int, seed: int,
     frames: Columns, within: FieldFrames,
 ) -> tuple[FloatArray, FloatArray]:  # fmt: skip
-    """Places around the middle of some targets, `spacing_deg` apart and `clear_deg` from where any target may be."""
+    """Places around the middle of some targets, `spacing_deg` apart and `clear_deg` from where any target may be.
+
+    The lattice grows where targets take up so much of it that less than `wanted` places are left.
+    """
     centre = _middle(positions, middle_of)
     ra0 = float(np.degrees(np.arctan2(centre[1], centre[0])) % 360)
     dec0 = float(np.degrees(np.arctan2(centre[2], np.hypot(centre[0], centre[1]))))
     extent = 2 * float(np.median(frames["radius"][within.rows]))
-    ra, dec = control_grid(ra0, dec0, extent, spacing_deg, wanted, seed)
     near = of_targets(positions)
     occupied = unit_vectors(positions["ra"][near], positions["dec"][near])
-    free = nearest_deg(unit_vectors(ra, dec), occupied) > clear_deg
-    return ra[free], dec[free]
+    size, n_before = wanted, 0
+    while True:
+        ra, dec = control_grid(ra0, dec0, extent, spacing_deg, size, seed)
+        free = nearest_deg(unit_vectors(ra, dec), occupied) > clear_deg
+        if free.sum() >= wanted or len(ra) == n_before:  # it reaches as far as there are frames
+            return ra[free], dec[free]
+        size, n_before = 4 * size, len(ra)
 
 
 def _middle(positions: Mapping[str, Any], of: NDArray[np.bool_]) -> FloatArray:

@@ -14,6 +14,7 @@ from hindlight.duplicates import counts
 from hindlight.lightcurve import FloatArray
 from hindlight.order import book
 from hindlight.schema import COMPLETENESS, COMPLETENESS_LIMITS, COMPLETENESS_TARGETS
+from hindlight.settings import Controls
 from hindlight.store import RunFolder
 from hindlight.study import Study
 from hindlight.tables import astropy_table, read_ecsv, rows_to_columns
@@ -201,7 +202,8 @@ def _control_remarks(study: Study, lowest_p: FloatArray, lit: bool) -> list[str]
         said.append(
             f"too few controls for {hopeless.sum()} of {len(short)} sources: p cannot be below "
             f"{lowest_p[hopeless].min():.3g} at best, below {bar} is needed, and no tail can be fitted to fewer than "
-            f"{FEWEST_FOR_TAIL}: however bright, they could not have been found"
+            f"{FEWEST_FOR_TAIL}: however bright, they are not found"
+            + _more_in_a_run(study.settings.controls)
             + ("; for bright sources as many comparisons are wanted as controls" if lit else "")
         )
     if (short & ~hopeless).any():
@@ -215,6 +217,13 @@ def _control_remarks(study: Study, lowest_p: FloatArray, lit: bool) -> list[str]
             f"those of the run's targets count by their tails too, are smaller, and leave more: p below {final}"
         )
     return said
+
+
+def _more_in_a_run(controls: Controls) -> str:
+    """That a run may do better, where it gives more controls to a target beyond all of its first."""
+    if controls.most_per_field <= controls.per_field:
+        return ""
+    return " here; a run gives a target beyond all of these more of them (a second pass), and may find it"
 
 
 def proof_remarks(proofs: Sequence[planted.Proof | None]) -> tuple[str, ...]:

@@ -25,6 +25,7 @@ from hindlight.verdicts import Place, Session, all_columns, field_of, judged_in,
 
 FULL_BEFORE = "not even the first all fit"
 FULL = "no more fit into their frames clear of sources and of each other"
+GONE = "too many of their frames are not there any more to measure others in"
 SPENT = "[controls] most_per_field is reached"
 DECIDED = "these decide"
 WITHIN = "some of these are as far out"
@@ -131,8 +132,16 @@ def _provided(
         if had:
             found[ask.found.number] = had[0]
         else:
-            _stop(ask, FULL, stopped)
+            _stop(ask, _why_none(frames, positions, ask, chosen.shared_frames), stopped)
     return session, positions, found
+
+
+def _why_none(frames: Columns, positions: Columns, ask: Ask, share: float) -> str:
+    """Why no control could be added: a field is full, or what is left of its frames is less than they are to share."""
+    rows = np.searchsorted(positions["id"], ask.wanted.targets)
+    here = plan.field_frames(frames, unit_vectors(positions["ra"][rows], positions["dec"][rows]))
+    left = here.covered[here.rows_there(frames)].sum(axis=0)
+    return FULL if (left >= share * here.covered.sum(axis=0)).any() else GONE
 
 
 def _stop(ask: Ask, why: str, stopped: dict[int, str]) -> None:
@@ -264,7 +273,7 @@ def _said(
         end = WITHIN if place.rank.exceeded_by else DECIDED if not short[place.at] else stopped[place.target]
         ends.setdefault(end, []).append((place.name, before.get(place.target, now), now))
         log.info("second pass: %s: %d controls, %d in the end: %s", *ends[end][-1], end)
-    return tuple(_sentence(end, ends[end]) for end in (DECIDED, WITHIN, FULL, SPENT) if end in ends)
+    return tuple(_sentence(end, ends[end]) for end in (DECIDED, WITHIN, FULL, GONE, SPENT) if end in ends)
 
 
 def _sentence(end: str, who: Sequence[tuple[str, int, int]]) -> str:
