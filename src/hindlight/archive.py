@@ -32,6 +32,7 @@ from hindlight.plugin import Dialect
 from hindlight.schema import FRAMES
 from hindlight.settings import COMPANION_KINDS, Inventory, Settings
 from hindlight.storage import StorageError
+from hindlight.timetables import plane_times
 
 FILES_AT_ONCE = 512
 HELD_AT_ONCE = 1 << 25  # bytes of headers and of frames: files may have many HDUs, and these long headers
@@ -174,6 +175,7 @@ def _read_file(archive: str, entry: FileEntry, companions: Mapping[str, str], re
     images, last, held = 0, -1, 0
     primary: Cards | None = None
     waiting: list[Found] = []
+    timeless: list[tuple[Hdu, Callable[..., list[Found]]]] = []  # images whose planes may get their times from a table
     table: Hdu | None = None
     try:
         if entry.fault:
@@ -192,7 +194,10 @@ def _read_file(archive: str, entry: FileEntry, companions: Mapping[str, str], re
                     reader.rejects.append(reject(archive, entry, fault, last))
                 elif hdu.is_image:
                     words = ("unverified",) if unverified else ()
-                    frames = _frames_of(archive, entry, hdu, primary, companions, reader, words)
+                    made = partial(_frames_of, archive, entry, hdu, primary, companions, reader, words)
+                    frames = made()
+                    if hdu.time_table and frames:
+                        timeless.append((hdu, made))
                     waiting += frames
                     held += _held(frames)
                     if held > HELD_AT_ONCE:
@@ -200,6 +205,8 @@ def _read_file(archive: str, entry: FileEntry, companions: Mapping[str, str], re
                         waiting, held = [], 0
                 elif hdu.is_good_time:
                     waiting = [_with_good_time(frame, hdu) for frame in waiting]
+                elif hdu.table:
+                    waiting = _with_times(waiting, hdu, timeless)
         if not images:
             raise SetAsideError("no_image", f"none of its {last + 1} HDUs holds an image")
     except SetAsideError as error:
@@ -249,17 +256,34 @@ def _frames_of(
     companions: Mapping[str, str],
     reader: _Reader,
     words: tuple[str, ...],
+    times: Sequence[float] = (),
 ) -> list[Found]:
-    """The frames of an HDU, as far as nothing is wrong with it; `words` are among the assumptions of each."""
+    """The frames of an HDU, as far as nothing is wrong with it; `words` are among the assumptions of each.
+
+    `times` are those of its planes where a table gives them.
+    """
     frames: list[Found] = []
     forced = reader.settings.dialect != AUTO
     try:
         cards, more = _with_primary(hdu.cards, primary)
-        for plane in planes(hdu, reader.settings.planes_limit):
+        for plane in planes(hdu, reader.settings.planes_limit, times):
             read = _facts(cards, plane, reader.dialects, forced, (*more, *words))
             frames.append(Found(archive, entry, hdu, plane, *read, companions))
     except SetAsideError as error:
         reader.rejects.append(reject(archive, entry, error, hdu.index))
+    return frames
+
+
+def _with_times(
+    waiting: Sequence[Found], table: Hdu, timeless: Sequence[tuple[Hdu, Callable[..., list[Found]]]]
+) -> list[Found]:
+    """The waiting frames, those of images whose planes have their times in this table made anew."""
+    frames = list(waiting)
+    for image, made in timeless:
+        here = [f for f in frames if f.hdu is image]
+        if here and (times := plane_times(image, table)):
+            at = frames.index(here[0])
+            frames[at : at + len(here)] = made(times=times)
     return frames
 
 

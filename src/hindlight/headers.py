@@ -11,8 +11,8 @@ import math
 import re
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, replace
-from functools import lru_cache
-from typing import Protocol
+from functools import cached_property, lru_cache
+from typing import NamedTuple, Protocol
 
 from hindlight.facts import CARD, Cards, FrameFacts, PlaneAxes
 from hindlight.plugin import Dialect
@@ -67,7 +67,7 @@ class Hdu:
         Of the image; `axes` are the lengths NAXIS1, NAXIS2, ... For a tile-compressed image they are those of the
         image and not of the table that holds it, and `compressed` is true.
     table
-        The rows of a table of good-time intervals; no other data are kept.
+        The rows of a table of good-time intervals, or of one that gives the times of planes; no other data are kept.
     bscale, bzero, blank
         value = bzero + bscale * stored; `blank` is the stored integer that means no value, None where there is none.
         Scale and zero point are NaN where the header gives something else than a number.
@@ -91,11 +91,37 @@ class Hdu:
         extension = self.cards.text("XTENSION")
         return len(self.axes) >= 2 and 0 not in self.axes and (self.compressed or extension in ("", *IMAGE_EXTENSIONS))
 
+    @cached_property
+    def time_table(self) -> TimeTable | None:
+        """The table that gives the times of an image's planes (an axis of type TIME-TAB or its like), None for none."""
+        for axis in range(1, len(self.axes) + 1):
+            kind, _, code = self.cards.text(f"CTYPE{axis}").upper().partition("-")
+            if code.strip("-") == "TAB" and kind in TIME_TYPES:
+                name, column, index = (self.cards.text(f"PS{axis}_{k}").upper() for k in range(3))
+                return TimeTable(axis, name, column, index)
+        return None
+
     @property
     def is_good_time(self) -> bool:
         """Whether it is a table of good-time intervals, of a reasonable size."""
-        named = self.cards.text("EXTNAME").upper() in GOOD_TIME
-        return named and self.cards.text("XTENSION") == "BINTABLE" and self.data_bytes <= GOOD_TIME_LIMIT
+        return self.cards.text("EXTNAME").upper() in GOOD_TIME and self.is_small_table
+
+    @property
+    def is_small_table(self) -> bool:
+        """Whether it is a binary table small enough to be read with the headers."""
+        return self.cards.text("XTENSION") == "BINTABLE" and self.data_bytes <= GOOD_TIME_LIMIT
+
+
+class TimeTable(NamedTuple):
+    """What an axis of type -TAB names (E. W. Greisen et al. 2006, A&A 446, 747, 6.1): its number, the table's EXTNAME, the
+
+    columns of coordinates and of indices ('' where the indices are 1, 2, ...).
+    """
+
+    axis: int
+    name: str
+    column: str
+    indices: str
 
 
 @dataclass(frozen=True)
@@ -124,6 +150,7 @@ def read_hdus(source: Source) -> Iterator[Hdu]:
     """
     offset = index = 0
     primary: Cards | None = None
+    awaited: set[str] = set()
     while True:
         raw = _read_header(source, offset, index)
         if not raw:
@@ -133,7 +160,10 @@ def read_hdus(source: Source) -> Iterator[Hdu]:
             primary = hdu.cards if not hdu.axes else None
         elif primary is not None and hdu.cards.get("INHERIT") is True:
             hdu = replace(hdu, cards=inherited(hdu.cards, primary))
-        if hdu.is_good_time:
+        if hdu.time_table:
+            awaited.add(hdu.time_table.name)
+        is_awaited = bool(awaited) and hdu.cards.text("EXTNAME").upper() in awaited
+        if hdu.is_good_time or (is_awaited and hdu.is_small_table):
             hdu = replace(hdu, table=source.read_at(hdu.data_offset, hdu.data_bytes))
         end = hdu.data_offset + hdu.data_bytes
         if not source.reaches(end):
@@ -260,10 +290,13 @@ class _Axis:
     value: float
     step: float
     unit: str
+    listed: tuple[float, ...] = ()  # coordinates of its pixels, where a table gives them
 
 
-def planes(hdu: Hdu, most: int | None = None) -> list[Plane]:
+def planes(hdu: Hdu, most: int | None = None, times: Sequence[float] = ()) -> list[Plane]:
     """The planes of an image in storage order, with the world coordinates of each on the other axes.
+
+    `times` are the coordinates on the axis of `Hdu.time_table`, one for each of its pixels.
 
     Raises `SetAsideError`: no_wcs without a celestial pair of axes, unknown_axis where a longer axis is neither time,
     frequency nor Stokes with usable coordinates, or is stored inside the celestial ones, bad_header where the stored
@@ -280,6 +313,8 @@ def planes(hdu: Hdu, most: int | None = None) -> list[Plane]:
     first, second = celestial
     lengths = hdu.axes + (1,) * (count - n_data)
     others = [_axis(cards, i + 1, types[i], lengths[i]) for i in range(count) if i not in celestial]
+    if hdu.time_table and len(times) == lengths[hdu.time_table.axis - 1]:
+        others = [replace(a, listed=tuple(times)) if a.number == hdu.time_table.axis else a for a in others]
     for axis in others:
         _refuse_unknown(axis, second + 1, hdu.index)
     outer = lengths[second + 1 : n_data]
@@ -355,7 +390,9 @@ def _plane_axes(others: Sequence[_Axis], place: dict[int, int]) -> PlaneAxes:
     for axis in others:
         if axis.kind in TIME_TYPES and axis.length > 1 and not time_axis:
             time_axis = axis.kind
-        if axis.kind and axis.kind not in values and math.isfinite(axis.value):
+        if axis.listed:
+            values[axis.kind], units[axis.kind] = axis.listed[place.get(axis.number, 0)], axis.unit
+        elif axis.kind and axis.kind not in values and math.isfinite(axis.value):
             values[axis.kind] = axis.value + place.get(axis.number, 0) * axis.step
             steps[axis.kind], units[axis.kind] = axis.step, axis.unit
     return PlaneAxes(values, steps, units, time_axis)

@@ -41,7 +41,7 @@ ROUND_TRIP_PIXELS = 0.01  # an inverted distortion that comes back further off t
 _PLAIN = re.compile(
     r"(CTYPE|CRPIX|CRVAL|CDELT|CROTA|CUNIT|Z?NAXIS)\d|(PC|CD|PV)\d_\d+|LONPOLE|LATPOLE|RADEC?SYS|EQUINOX|EPOCH|ZIMAGE"
 )
-_ODD = re.compile(r"[AB]P?_ORDER|(CPDIS|CQDIS|DP|DQ)\d|D2IM.*|WAT\d_\d+|(PC|CD)\d{6}|PS\d_\d+|AMDX.*|PLTRAH")
+_ODD = re.compile(r"[AB]P?_ORDER|(CPDIS|CQDIS|DP|DQ)\d|D2IM.*|WAT\d_\d+|(PC|CD)\d{6}|AMDX.*|PLTRAH")
 _TABLE = re.compile(r"(CPDIS|CQDIS|D2IMDIS)\d")
 _FIVE_POINTS = np.array([[0.5, 0.0], [-0.5, 0.0], [0.0, 0.5], [0.0, -0.5], [0.0, 0.0]])  # right, left, up, down, middle
 
@@ -172,7 +172,7 @@ def _lean(key: str) -> Projection | None:
     cards = Cards(key.encode("latin-1"))
     found = find_celestial(cards)
     odd_unit = any(cards.text(f"CUNIT{i}") not in ("", "deg") for i in found.axes)
-    has_pv = any(k[:2] == "PV" for k in cards)
+    has_pv = any(k.startswith((f"PV{found.axes[0]}_", f"PV{found.axes[1]}_")) for k in cards)
     if found.code not in LEAN_CODES or found.suffix or odd_unit or (found.code == "TAN" and has_pv):
         return None
     text = two_axes(cards, found.axes)
