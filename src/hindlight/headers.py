@@ -94,7 +94,7 @@ class Hdu:
     @cached_property
     def time_table(self) -> TimeTable | None:
         """The table that gives the times of an image's planes (an axis of type TIME-TAB or its like), None for none."""
-        for axis in range(1, len(self.axes) + 1):
+        for axis in range(1, len(self.axes) + 1) if b"-TAB" in self.cards.raw else ():
             kind, _, code = self.cards.text(f"CTYPE{axis}").upper().partition("-")
             if code.strip("-") == "TAB" and kind in TIME_TYPES:
                 name, column, index = (self.cards.text(f"PS{axis}_{k}").upper() for k in range(3))
