@@ -29,6 +29,27 @@ def test_jeffreys_intervals(k, n, low, high):
     assert jeffreys(k, n) == pytest.approx((low, high), abs=1e-6)
 
 
+@pytest.mark.parametrize(
+    ("k", "n", "low", "high"),
+    [
+        (0, 10, 0, 0.277533), (5, 10, 0.236593, 0.763407), (9, 10, 0.595850, 0.982124), (10, 10, 0.722467, 1),
+        (0, 100, 0, 0.036993),
+    ],
+)  # fmt: skip
+def test_the_other_interval_that_is_recommended_says_the_same(k, n, low, high):
+    """Wilson's (1927, JASA 22, 209), by scipy, which the same authors recommend beside it: ends differ by at most 0.07.
+
+    Values computed outside this project; where a limit is one-sided, theirs is the wider.
+    """
+    wilson = stats.binomtest(k, n).proportion_ci(0.95, "wilson")
+    assert (wilson.low, wilson.high) == pytest.approx((low, high), abs=1e-6)
+    ours = jeffreys(k, n)
+    assert abs(ours[0] - low) < 0.07
+    assert abs(ours[1] - high) < 0.07
+    if k in (0, n):
+        assert ours[1] - ours[0] < high - low
+
+
 def test_interval_of_nothing():
     """No trials, no interval."""
     assert jeffreys(0, 0) == (0.0, 1.0)
