@@ -85,7 +85,7 @@ class Hdu:
     bzero: float = 0.0
     blank: int | None = None
 
-    @property
+    @cached_property
     def is_image(self) -> bool:
         """Whether it holds an image of two dimensions or more with any pixel."""
         extension = self.cards.text("XTENSION")
@@ -101,7 +101,7 @@ class Hdu:
                 return TimeTable(axis, name, column, index)
         return None
 
-    @property
+    @cached_property
     def is_good_time(self) -> bool:
         """Whether it is a table of good-time intervals, of a reasonable size."""
         return self.cards.text("EXTNAME").upper() in GOOD_TIME and self.is_small_table

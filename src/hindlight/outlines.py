@@ -121,7 +121,7 @@ def _has_extent(points: FloatArray, scale: FloatArray, diagonal: FloatArray) -> 
 def _plain(cards: Cards) -> _Plain | None:
     """The header if it is a plain zenithal one without fault, None for the careful way."""
     pair = PAIRS.get((cards.text("CTYPE1"), cards.text("CTYPE2")))
-    if pair is None or any(map(_is_unusual, cards)):
+    if pair is None or _any_unusual(tuple(cards)):
         return None
     matrix = _matrix(cards)
     numbers = (*(cards.number(key) for key in ("CRVAL1", "CRVAL2", "CRPIX1", "CRPIX2")), *matrix)
@@ -141,6 +141,11 @@ def _plain(cards: Cards) -> _Plain | None:
     except BadWcsError:
         return None
     return None if system.name.startswith("fk4") else _Plain(pair[0], system, assumed, numbers)
+
+
+@lru_cache(maxsize=256)  # files of one instrument have the same keywords
+def _any_unusual(keys: tuple[str, ...]) -> bool:
+    return any(map(_is_unusual, keys))
 
 
 @lru_cache(maxsize=4096)
