@@ -60,10 +60,11 @@ def test_planes_have_the_times_of_the_table(tmp_path: Path) -> None:
     assert found.frames["exposure_s"].tolist() == [8.0] * 4
 
 
-def test_indices_and_units_of_the_table(tmp_path: Path) -> None:
-    """Coordinates are looked up by the column of indices, between its entries too; the table's unit is the table's."""
+@pytest.mark.parametrize("step", [1, -1])
+def test_indices_and_units_of_the_table(tmp_path: Path, step: int) -> None:
+    """Coordinates are looked up by the column of indices, rising or falling, between its entries too, in the table's unit."""
     index = np.array([2.0, 4.0, 6.0, 10.0])
-    columns = [one_row(TIMES / 60, unit="min"), one_row(index, "PLACE", "")]
+    columns = [one_row(TIMES[::step] / 60, unit="min"), one_row(index[::step], "PLACE", "")]
     cube(tmp_path, columns, PS3_2="PLACE", CRVAL3=2.0, CDELT3=2.0)
     np.testing.assert_allclose(middles(tmp_path), [10.0, 75.0, 300.0, 305.0], atol=1e-3)
 
