@@ -111,8 +111,7 @@ def _copied(found: Field, members: list[int], lift: Lift, wanted: int) -> Bright
     each = how_many(wanted, len(found.controls), lift.n_sources)
     controls = copies(found.controls, each)
     targets, serving = found.targets[members], np.tile(found.serving[members], each)
-    number = (
-        -1 - COPY - int(targets[0])
-    )  # below those of searched targets, which may be taken out of fields of their own
+    # Below the numbers of searched targets, which may be taken out of fields of their own.
+    number = -1 - COPY - int(targets[0])
     field = Field(number, targets, controls, serving, found.n_trials, lift)
     return Bright(found, field)

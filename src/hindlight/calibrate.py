@@ -113,11 +113,8 @@ def rank(null: Null, target: FloatArray, weight: float = 1.0) -> Rank:
     column, best, distance = _combination(target_p[None, :], (target[None, :] - null.centre) / null.spread)
     _, control_best, control_distance = _combination(control_p, (null.values - null.centre) / null.spread)
     tied = control_best == best[0]
-    ahead = control_distance[tied] >= distance[0]
-    if (
-        n > 1
-    ):  # of two each is as far from their middle as the other: the target is first then, with a p that says nothing
-        ahead = _as_far_in_set(null, control_p, tied, target, target_p)
+    # Of two each is as far from their middle as the other: the target is first then, with a p that says nothing.
+    ahead = _as_far_in_set(null, control_p, tied, target, target_p) if n > 1 else control_distance[tied] >= distance[0]
     r = int((control_best < best[0]).sum() + ahead.sum())
     return Rank((r + weight) / (n + weight), int(column[0]), float(distance[0]), r, control_distance)
 

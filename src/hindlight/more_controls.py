@@ -74,9 +74,8 @@ def sites(
     spacing = float(positions["clear_radius"][ours][0])
     then = (positions["kind"] == "target") & (positions["round"] <= positions["round"][ours].max())
     then &= positions["field"] == wanted.field
-    at_home = then & (
-        field_of(positions["ra"], positions["dec"], size_deg) == wanted.field
-    )  # not come from a neighbour
+    # Those in this cell, which have not come from a neighbour.
+    at_home = then & (field_of(positions["ra"], positions["dec"], size_deg) == wanted.field)
     around = at_home if at_home.any() else then
     ra, dec = clear_of_targets(positions, around, spacing, spacing, wanted.size, wanted.field, frames, within)
     taken = (positions["kind"] == "control") & (positions["field"] == wanted.field)
