@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from hindlight.comparisons import Located, candidates, placed, sampled_frames
+from hindlight.comparisons import Candidates, Located, at_positions, candidates, placed, sampled_frames, serving
 from hindlight.plan import BrightSources
 from hindlight.settings import Comparisons
 from hindlight.systems import unit_vectors
@@ -22,19 +22,25 @@ def sources(east_beams: list[float], snr: list[float]) -> BrightSources:
 
 
 def test_the_bright_that_stand_alone() -> None:
-    """Brightest first; not the faint, not those with a neighbour, not one found twice, not those near a target."""
+    """Brightest first; not the faint, not those with a neighbour, not one found twice, those near a target last."""
     found = sources([0, 10, 20, 22, 40, 40.2, 50, 60], [30, 100, 60, 50, 80, 70, 10, 90])
     target = unit_vectors(np.array([10 + 61 * BEAM / 3600]), np.array([0.0]))
-    ra, _ = candidates(found, target, NOBODY, SETTINGS)
-    np.testing.assert_allclose((ra - 10) * 3600 / BEAM, [10, 40, 0])
+    some = candidates(found, target, NOBODY, SETTINGS)
+    np.testing.assert_allclose((some.ra - 10) * 3600 / BEAM, [10, 40, 0, 60])
+    assert some.at_target.tolist() == [False, False, False, True]
 
 
 def test_a_faint_neighbour_does_no_harm_and_a_known_one_is_not_taken_again() -> None:
     """A tenth of the S/N is little; what another field has already is left alone."""
     found = sources([0, 2, 30], [200, 15, 100])
     known = unit_vectors(np.array([10 + 30 * BEAM / 3600]), np.array([0.0]))
-    ra, _ = candidates(found, NOBODY, known, SETTINGS)
-    np.testing.assert_allclose((ra - 10) * 3600 / BEAM, [0])
+    some = candidates(found, NOBODY, known, SETTINGS)
+    np.testing.assert_allclose((some.ra - 10) * 3600 / BEAM, [0])
+
+
+def at(ra: np.ndarray, dec: np.ndarray, of_targets: int = 0) -> Candidates:
+    """Candidates at these places, the last few at targets."""
+    return Candidates(ra, dec, np.arange(len(ra)) >= len(ra) - of_targets)
 
 
 def located(seed: int, frames: int = 40, n: int = 6) -> tuple[np.ndarray, list[Located]]:
@@ -55,7 +61,7 @@ def test_places_are_common_to_all_frames() -> None:
     true, found = located(1)
     for k, frame in enumerate(found):
         frame.east[k % 6] = frame.north[k % 6] = frame.snr[k % 6] = np.nan
-    ra, dec = placed(np.full(6, 20.0), np.full(6, 60.0), found, Comparisons(wanted=6))
+    ra, dec = placed(at(np.full(6, 20.0), np.full(6, 60.0)), found, Comparisons(wanted=6))
     np.testing.assert_allclose((ra - 20) * np.cos(np.radians(60)), true[0], atol=1e-4)
     np.testing.assert_allclose(dec - 60, true[1], atol=1e-4)
 
@@ -68,7 +74,7 @@ def test_what_is_no_point_or_comes_and_goes_is_left_out() -> None:
         for source, seen in ((1, k % 4 == 0), (2, k == 7)):
             if not seen:
                 frame.east[source] = frame.north[source] = frame.snr[source] = np.nan
-    ra, _ = placed(np.arange(6) * 1.0, np.zeros(6), found, Comparisons(wanted=2))
+    ra, _ = placed(at(np.arange(6) * 1.0, np.zeros(6)), found, Comparisons(wanted=2))
     np.testing.assert_allclose(ra, [3, 4], atol=0.01)
 
 
@@ -78,7 +84,7 @@ def test_saturated_sources_are_left_out() -> None:
     for k, frame in enumerate(found):
         frame.flat[0] = k % 3 == 0
         frame.flat[1] = k == 5
-    ra, _ = placed(np.arange(6) * 1.0, np.zeros(6), found, Comparisons(wanted=2))
+    ra, _ = placed(at(np.arange(6) * 1.0, np.zeros(6)), found, Comparisons(wanted=2))
     np.testing.assert_allclose(ra, [1, 2], atol=0.01)
 
 
@@ -89,13 +95,48 @@ def test_shallow_frames_do_not_make_a_source_inconstant() -> None:
         frame.snr[:] /= 9.0
         for values in (frame.east, frame.north, frame.snr):
             values[2:] = np.nan
-    assert len(placed(np.arange(6) * 1.0, np.zeros(6), found, Comparisons(wanted=6))[0]) == 6
+    assert len(placed(at(np.arange(6) * 1.0, np.zeros(6)), found, Comparisons(wanted=6))[0]) == 6
+
+
+@pytest.mark.parametrize(
+    ("of_targets", "enough", "kept"), [(2, 4, 4), (3, 4, 6), (3, 6, 6), (3, 7, 3), (6, 6, 6), (6, 7, 0)]
+)
+def test_targets_serve_each_other_where_little_else_does(of_targets: int, enough: int, kept: int) -> None:
+    """Only where the others are not enough, and only where they are enough with them."""
+    _, found = located(5)
+    some = at(np.arange(6) * 1.0, np.zeros(6), of_targets)
+    ra, _ = placed(some, found, Comparisons(enough=enough))
+    np.testing.assert_allclose(ra, np.arange(kept), atol=0.01)
+
+
+def test_candidates_at_targets_are_looked_at_where_there_may_be_too_few_others() -> None:
+    """Twice as many as are enough are sure to leave enough."""
+    found = sources([0, 10, 20, 30], [60, 50, 40, 30])
+    target = unit_vectors(np.array([10.0]), np.array([0.0]))
+    for enough, n in ((2, 4), (3, 4)):
+        some = candidates(found, target, NOBODY, Comparisons(enough=enough))
+        assert (len(some.ra), int(some.at_target.sum())) == (n, 1)
+    more = sources([0, 10, 20, 30, 40], [60, 50, 40, 30, 20])
+    assert not candidates(more, target, NOBODY, Comparisons(enough=2)).at_target.any()
+
+
+def test_who_serves_when_a_comparison_becomes_a_target() -> None:
+    """It serves no more where its field has enough others; else all of the field serve, and it is known whose they are."""
+    frames = {"id": np.arange(2), "beam_major": np.full(2, BEAM), "pixel_scale": np.full(2, 10.0)}
+    ra = np.concatenate((10 + np.arange(7) * 0.1, [10.0 + BEAM / 3600 / 3, 10.0, 10.3, 10.6]))
+    kind = np.array(["comparison"] * 7 + ["target"] * 4, object)
+    field = np.array([0, 0, 0, 1, 1, 1, 1, 0, 0, 1, 1])
+    positions = {"id": 20 + np.arange(11), "kind": kind, "ra": ra, "dec": np.zeros(11), "field": field}
+    own = at_positions(positions, frames, ("target",), 3.0)
+    assert {source: some.tolist() for source, some in own.items()} == {20: [27, 28], 23: [29], 26: [30]}
+    for enough, served in ((2, [21, 22, 24, 25]), (3, [20, 21, 22, 23, 24, 25, 26]), (4, [21, 22, 23, 24, 25, 26])):
+        assert serving(positions, frames, ("target",), 3.0, Comparisons(enough=enough)).tolist() == served
 
 
 def test_nothing_to_choose_from() -> None:
     """No candidates, or no frame."""
-    assert len(placed(np.empty(0), np.empty(0), [], SETTINGS)[0]) == 0
-    assert len(candidates(sources([], []), NOBODY, NOBODY, SETTINGS)[0]) == 0
+    assert len(placed(at(np.empty(0), np.empty(0)), [], SETTINGS)[0]) == 0
+    assert len(candidates(sources([], []), NOBODY, NOBODY, SETTINGS).ra) == 0
 
 
 def test_frames_are_spread_over_time() -> None:

@@ -19,7 +19,7 @@ ORDER = [
     "outlines", "footprints", "frametable", "archive", "summary", "positions", "apart", "spans", "pixels", "background",
     "detection", "pointing", "growth", "opening", "fluxes", "photometry", "planted", "duplicates", "likeness", "robust",
     "losses", "response", "ensemble", "store", "judge", "calibrate", "ranking", "lifted", "search", "timing",
-    "injection", "completeness", "brighter", "candidates", "plan", "more_controls", "comparisons", "order", "tasks",
+    "injection", "completeness", "brighter", "candidates", "plan", "more_controls", "comparisons", "tied", "order", "tasks",
     "examining", "trials", "conclude", "bright", "outcome", "crew", "record", "asides", "verdicts", "measuring",
     "second_pass", "runner", "report_card", "study", "recovered", "recovery", "survey", "export", "demo", "testing",
     "outlet", "cli", "__main__",

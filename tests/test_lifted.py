@@ -5,6 +5,7 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from astropy.table import Table
 
 from hindlight import calibrate, host
 from hindlight.conclude import Field, rank
@@ -64,6 +65,27 @@ def test_gaps_are_filled_and_variable_sources_left_out() -> None:
     assert left is not None
     assert left.values.shape == (29, 200)
     np.testing.assert_array_equal(left.values[3, 40:60], left.values[4, 40:60])
+
+
+def test_no_target_is_held_against_itself() -> None:
+    """Copies made with the residuals of a source serve all targets but those that it is; sources left out are not counted."""
+    given = comparisons(2, 0.03, 1.0)
+    flux = given.flux.copy()
+    flux[4] *= 1 + 0.5 * (np.arange(200) % 2)  # varies by itself, and is left out
+    whose = [np.array([100 + k, 200 + k]) if k in (3, 5) else np.empty(0, np.int64) for k in range(30)]
+    left = residuals(replace(given, flux=freeze(flux)), solution(200, 0.03), whose)
+    assert left is not None
+    assert len(left.values) == len(left.whose) == 29
+    left = over_all(left, 10 + np.arange(200), solution(200, 0.03))
+    made = copies(np.arange(1000, 1058), 3)
+    rows = left.row_of(made)
+    np.testing.assert_array_equal(
+        left.foreign(np.array([103, 205, 104, 7]), made), [rows != 3, rows != 4, rows >= 0, rows >= 0]
+    )
+    blank = block(np.zeros((58, 200)), 1.0)
+    ids = np.concatenate((np.arange(1000, 1058), made))
+    risen = lifted(blank, np.arange(1000, 1058), ids, 100.0, left).flux[58:]
+    np.testing.assert_allclose(risen, 100.0 * (1 + left.values[rows]))
 
 
 def test_two_comparisons_tell_nothing() -> None:
@@ -176,13 +198,22 @@ def test_a_target_is_beyond_all_copies_no_more_often_than_stated(
         assert beyond >= stated - noise
 
 
-def test_a_small_version_of_the_study(tmp_path: Path) -> None:
-    """Wild calibration errors: ranked among blank sky steady sources are candidates, among copies they are not."""
+@pytest.mark.parametrize("kind", ["wild", "listed"])
+def test_a_small_version_of_the_study(tmp_path: Path, kind: str) -> None:
+    """Steady sources are candidates among blank sky where calibration errors are wild, or large and nothing tells them.
+
+    They are not among copies, also where all of them are targets that serve each other as comparisons.
+    """
     bright = study("bright")
-    snr = bright.simulated(tmp_path, 3, targets=60, frames=20, size=520, wild=True)
-    blank = bright.mined(tmp_path, "blank", snr, "bright_target_snr = 1e9\n")
+    snr = bright.simulated(tmp_path, 3, targets=60, frames=20, size=520, kind=kind)
+    blank = bright.mined(tmp_path, "blank", snr, bright.ALONE[kind])
     lit = bright.mined(tmp_path, "lifted", snr, "")
     assert blank.nulls == {"blank sky"}
     assert lit.nulls == {"blank sky and the residu"}
     assert (blank.q < 0.05).sum() >= 5
     assert not (lit.q < 0.05).any()
+    said = {
+        name: {str(n) for n in Table.read(tmp_path / name / "candidates.ecsv")["notes"]} for name in ("blank", "lifted")
+    }
+    assert any("comparisons do not tie the frames" in note for note in said["blank"]) == (kind == "listed")
+    assert any("since its field has too few others" in note for note in said["lifted"]) == (kind == "listed")

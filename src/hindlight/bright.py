@@ -89,7 +89,7 @@ def apart(found: Field, left: Evidence, n_targets: int, settings: Settings) -> t
         share = of.share[lit][:, members].max(axis=1)
         leading = left[labels[lit[int(share.argmax())]]]
         lift = Lift(levels, float(share.max()), len(leading.values))
-        made.append(_copied(found, members, lift, wanted))
+        made.append(_copied(found, members, lift, wanted, left))
     return without(found, [index for members in groups.values() for index in members]), made
 
 
@@ -106,11 +106,13 @@ def _brightness(found: Field, labels: list[str], left: Evidence) -> _Brightness:
     return _Brightness(flux, np.nan_to_num(flux / frame_error), np.nan_to_num(share))
 
 
-def _copied(found: Field, members: list[int], lift: Lift, wanted: int) -> Bright:
-    """Targets of a field, with copies of its controls, about `wanted`."""
+def _copied(found: Field, members: list[int], lift: Lift, wanted: int, left: Evidence) -> Bright:
+    """Targets of a field, with copies of its controls, about `wanted`; none is held against its own residuals."""
     each = how_many(wanted, len(found.controls), lift.n_sources)
     controls = copies(found.controls, each)
     targets, serving = found.targets[members], np.tile(found.serving[members], each)
+    for label in lift.levels:
+        serving &= left[label].foreign(targets, controls)
     # Below the numbers of searched targets, which may be taken out of fields of their own.
     number = -1 - COPY - int(targets[0])
     field = Field(number, targets, controls, serving, found.n_trials, lift)

@@ -1,7 +1,8 @@
 """Which sources of an archive can serve as comparisons, and where exactly they are.
 
 Candidates are the bright sources of the reference frames that stand alone; centroids in many frames then tell their
-places, whether they are points, and which of them come and go. Pure: sources and centroids in, positions out.
+places, whether they are points, and which of them come and go. Targets are no comparisons, unless a field has few other
+sources, as where a whole catalogue is listed: then they serve each other. Pure: sources and centroids in, positions out.
 """
 
 from __future__ import annotations
@@ -16,7 +17,7 @@ from numpy.typing import NDArray
 from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.plan import BrightSources, beams
 from hindlight.pointing import LEAST_SNR
-from hindlight.positions import BlankSky, nearest_deg
+from hindlight.positions import BlankSky, within_deg
 from hindlight.robust import median_of
 from hindlight.settings import Comparisons
 from hindlight.systems import unit_vectors
@@ -47,10 +48,20 @@ class Located:
     flat: NDArray[np.bool_]
 
 
-def candidates(
-    sources: BrightSources, occupied: FloatArray, known: FloatArray, settings: Comparisons
-) -> tuple[FloatArray, FloatArray]:
-    """ICRS degrees, shape (n,) twice, of sources that may serve: brightest first.
+@dataclass(frozen=True, eq=False)
+class Candidates:
+    """Sources that may serve: ICRS degrees, shape (n,), brightest first; and which of them are at a target, or near one.
+
+    Those at targets come last, and only where there may be too few others.
+    """
+
+    ra: FloatArray
+    dec: FloatArray
+    at_target: NDArray[np.bool_]
+
+
+def candidates(sources: BrightSources, occupied: FloatArray, known: FloatArray, settings: Comparisons) -> Candidates:
+    """The sources that may serve.
 
     `sources` are all bright ones, each as often as it was found; `occupied` are unit vectors of targets to stay clear
     of, `known` those of comparisons that are there already.
@@ -58,12 +69,13 @@ def candidates(
     order = np.argsort(-sources.snr, kind="stable")
     ra, dec, snr, beam = (getattr(sources, name)[order] for name in ("ra", "dec", "snr", "beam"))
     vectors = unit_vectors(ra, dec)
-    clear = BlankSky(occupied, np.full(len(occupied), settings.isolation * float(beam.max(initial=0.0)) / 3600.0))
-    free = (snr >= settings.min_snr) & (clear.clear(vectors) if len(occupied) else True)
+    sky = BlankSky(occupied, np.full(len(occupied), settings.isolation * float(beam.max(initial=0.0)) / 3600.0))
+    clear = sky.clear(vectors)
+    bright = np.flatnonzero(snr >= settings.min_snr)
     taken = [*known]
     chosen: list[int] = []
-    for i in np.flatnonzero(free).tolist():
-        if len(chosen) >= SPARE * settings.wanted:
+    for i in bright[np.argsort(~clear[bright], kind="stable")].tolist():
+        if len(chosen) >= SPARE * settings.wanted or (not clear[i] and clear[chosen].sum() >= SPARE * settings.enough):
             break
         same = np.cos(np.radians(beam[i] / 3600.0))
         alone = np.cos(np.radians(settings.isolation * beam[i] / 3600.0))
@@ -73,18 +85,17 @@ def candidates(
             continue
         chosen.append(i)
         taken.append(vectors[i])
-    return ra[chosen], dec[chosen]
+    return Candidates(ra[chosen], dec[chosen], ~clear[chosen])
 
 
-def placed(
-    ra: FloatArray, dec: FloatArray, found: Sequence[Located], settings: Comparisons
-) -> tuple[FloatArray, FloatArray]:
-    """ICRS degrees of the comparisons among the candidates at (ra, dec), shape (n,), brightest first.
+def placed(some: Candidates, found: Sequence[Located], settings: Comparisons) -> tuple[FloatArray, FloatArray]:
+    """ICRS degrees of the comparisons among some candidates, shape (n,) twice, brightest first.
 
     A place is the median over the frames of the centroids less each frame's own shift, the mean shift of all frames
     being zero. Left out are sources that are no points, saturated ones, and those found in too few of the frames
-    deep enough for them.
+    deep enough for them; those at targets too, unless it takes them to have enough.
     """
+    ra, dec = some.ra, some.dec
     if not found or len(ra) == 0:
         return ra[:0], dec[:0]
     east, north, snr, width = (
@@ -96,22 +107,44 @@ def placed(
     good &= median_of(width) <= POINT_WIDTH
     good &= np.stack([f.flat for f in found]).sum(axis=0) <= FLAT * seen.sum(axis=0)
     good &= _steady(snr, seen)
-    kept = np.flatnonzero(good)[: settings.wanted]
+    clear = good & ~some.at_target
+    alone = clear.sum() >= settings.enough or good.sum() < settings.enough
+    kept = np.flatnonzero(clear if alone else good)[: settings.wanted]
     return ra[kept] + place_east[kept] / np.cos(np.radians(dec[kept])), dec[kept] + place_north[kept]
 
 
-def apart_from(positions: Columns, frames: Columns, kinds: Sequence[str], assumed_fwhm_pixels: float) -> IntArray:
-    """The ids of the comparisons, ascending, that lie more than a median beam from every position of these kinds.
+def serving(
+    positions: Columns, frames: Columns, kinds: Sequence[str], assumed_fwhm_pixels: float, settings: Comparisons
+) -> IntArray:
+    """The ids of the comparisons, ascending, that serve: those more than a median beam from every position of these kinds.
 
     A target that is added to a finished run may be a comparison of it. Were it to serve on, gains would take up a part of
-    its variation, and it would be among the steady sources that it is held against.
+    its variation, and it would be among the steady sources that it is held against. In a field that has too few others
+    all serve.
     """
+    mine = positions["kind"] == "comparison"
+    ids, field = positions["id"][mine], positions["field"][mine]
+    clear = ~np.isin(ids, list(at_positions(positions, frames, kinds, assumed_fwhm_pixels)))
+    n_clear, n_all = (np.bincount(field[which], minlength=field.max(initial=-1) + 1) for which in (clear, clear | True))
+    needed = (n_clear < settings.enough) & (n_all >= settings.enough)
+    return np.sort(ids[clear | needed[field]])
+
+
+def at_positions(
+    positions: Columns, frames: Columns, kinds: Sequence[str], assumed_fwhm_pixels: float
+) -> dict[int, IntArray]:
+    """By comparison that lies within a median beam of positions of these kinds the ids of these, ascending."""
     mine, target = (np.flatnonzero(np.isin(positions["kind"], some)) for some in (("comparison",), tuple(kinds)))
-    if len(mine) and len(target):
-        beam = float(np.median(beams(frames, np.arange(len(frames["id"])), assumed_fwhm_pixels)))
-        apart = nearest_deg(*(unit_vectors(positions["ra"][rows], positions["dec"][rows]) for rows in (mine, target)))
-        mine = mine[apart > beam]
-    return np.sort(positions["id"][mine])
+    if not len(mine) or not len(target):
+        return {}
+    beam = float(np.median(beams(frames, np.arange(len(frames["id"])), assumed_fwhm_pixels)))
+    near = within_deg(
+        unit_vectors(positions["ra"][mine], positions["dec"][mine]),
+        unit_vectors(positions["ra"][target], positions["dec"][target]),
+        beam,
+    )
+    ids = positions["id"]
+    return {int(ids[row]): np.sort(ids[target[some]]) for row, some in zip(mine, near, strict=True) if some}
 
 
 def among_alike(snr: FloatArray, width: FloatArray) -> FloatArray:

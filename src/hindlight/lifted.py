@@ -7,7 +7,7 @@ blocks out.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -46,16 +46,31 @@ class Residuals:
     """What calibration leaves in a channel, as fractions of the flux: `values` of shape (n_sources, n_frames), no gaps.
 
     `frame` are the frames, ascending; `extra` the further scatter that errors of that frame contain, `gain` its gain.
+    `whose` are the targets, if any, that each source is: none of them is held against itself.
     """
 
     frame: IntArray
     values: FloatArray
     extra: FloatArray
     gain: FloatArray
+    whose: tuple[IntArray, ...] = ()
+
+    def row_of(self, copies: IntArray) -> IntArray:
+        """The row of `values` that goes into each copy of a control, by the ids of these: another in each copy."""
+        return np.asarray((copies + copies // COPY) % COPY % len(self.values))
+
+    def foreign(self, targets: IntArray, copies: IntArray) -> NDArray[np.bool_]:
+        """Which copies are made with a source that is not the target itself, shape (n_targets, n_copies)."""
+        own = np.zeros((len(targets), len(self.values)), bool)
+        for row, some in enumerate(self.whose):
+            own[:, row] = np.isin(targets, some)
+        return ~own[:, self.row_of(copies)]
 
 
-def residuals(block: Block, solution: Columns) -> Residuals | None:
+def residuals(block: Block, solution: Columns, whose: Sequence[IntArray] = ()) -> Residuals | None:
     """The residuals of a channel's comparisons, one row each in `block`; None where too few tell anything.
+
+    `whose` are the targets that each comparison is.
 
     Each is scaled down by the share that the comparison's own noise has in it, and up for the part that the fit of n
     sources in a frame has taken off, (n / (n - 1))^(1/2). Where a source was not measured the next one stands in.
@@ -79,7 +94,8 @@ def residuals(block: Block, solution: Columns) -> Residuals | None:
     n = known.sum(axis=0)
     left = left * np.where(extra > 0, extra / np.hypot(extra, np.nan_to_num(noise)), 0.0)
     left = left * np.sqrt(n / np.maximum(n - 1, 1))
-    return Residuals(block.frame, _filled(left), extra, gain)
+    own = tuple(some for some, used in zip(whose, usable, strict=True) if used) if whose else ()
+    return Residuals(block.frame, _filled(left), extra, gain, own)
 
 
 def over_all(left: Residuals, frame: IntArray, solution: Columns) -> Residuals:
@@ -95,7 +111,7 @@ def over_all(left: Residuals, frame: IntArray, solution: Columns) -> Residuals:
     values[:, tied] = left.values[:, np.searchsorted(left.frame, frame[tied])]
     for column in np.flatnonzero(~tied).tolist():
         values[:, column] = extra[column] * np.random.default_rng(int(frame[column])).standard_normal(len(values))
-    return Residuals(frame, values, extra, gain)
+    return replace(left, frame=frame, values=values, extra=extra, gain=gain)
 
 
 def _filled(values: FloatArray) -> FloatArray:
@@ -120,8 +136,7 @@ def lifted(block: Block, base: IntArray, ids: IntArray, level: float, left: Resi
     if level == 0.0 or left is None or not copy.any():
         return replace(block, names=names, **{name: freeze(m, m.dtype.type) for name, m in taken.items()})
     at = np.searchsorted(left.frame, block.frame)
-    source = (ids + copy) % COPY % len(left.values)
-    added = np.where(copy[:, None] > 0, level * (1.0 + left.values[source][:, at]), 0.0)
+    added = np.where(copy[:, None] > 0, level * (1.0 + left.values[left.row_of(ids)][:, at]), 0.0)
     taken["flux"] = taken["flux"] + added
     taken["flux_err"] = np.hypot(taken["flux_err"], left.extra[at] * added)
     taken["raw_flux"] = taken["raw_flux"] + added * left.gain[at]

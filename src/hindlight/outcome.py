@@ -103,8 +103,8 @@ def null_of(found: Field) -> str:
     return f"blank sky and the residuals of comparisons, scaled to a flux of {levels}"
 
 
-def notes(found: Field, index: int, at: int, p: PValues, controls: Controls, place: str = "") -> str:
-    """What a reader should know before trusting a row."""
+def notes(found: Field, index: int, at: int, p: PValues, controls: Controls, known: Sequence[str] = ()) -> str:
+    """What a reader should know before trusting a row; `known` is what others have to say of it, '' for nothing."""
     n_controls = int(found.ranked.n_controls[index])
     said = []
     if p.short[at]:
@@ -120,7 +120,7 @@ def notes(found: Field, index: int, at: int, p: PValues, controls: Controls, pla
             f"{left_out} more controls were left out, whose noise is unlike its own by more than a factor "
             f"{controls.most_unlike:g} ([controls] most_unlike)"
         )
-    return "; ".join([*said, place] if place else said)
+    return "; ".join([*said, *filter(None, known)])
 
 
 def _too_unlike(found: Field, index: int, controls: Controls) -> int:

@@ -234,6 +234,12 @@ def nearest_deg(a: FloatArray, b: FloatArray) -> FloatArray:
     return np.asarray(np.degrees(2 * np.arcsin(chord / 2)))
 
 
+def within_deg(a: FloatArray, b: FloatArray, radius: float) -> list[list[int]]:
+    """For each unit vector of `a` (n, 3) the rows of `b` (m, 3) that lie within an angle in degrees."""
+    chord = 2 * np.sin(np.radians(min(radius, 180.0)) / 2)
+    return [list(rows) for rows in cKDTree(b).query_ball_point(a, chord)]
+
+
 def moved(
     ra: FloatArray, dec: FloatArray, pm_ra_cosdec: FloatArray, pm_dec: FloatArray, ref_epoch: FloatArray, year: float
 ) -> tuple[FloatArray, FloatArray]:

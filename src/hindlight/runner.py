@@ -351,11 +351,11 @@ def _comparisons(
     occupied = unit_vectors(positions["ra"][kind == "target"], positions["dec"][kind == "target"])
     known = unit_vectors(positions["ra"][kind == "comparison"], positions["dec"][kind == "comparison"])
     wanted: list[tuple[int, int]] = []
-    places: dict[int, tuple[FloatArray, FloatArray]] = {}
+    places: dict[int, comparisons.Candidates] = {}
     for number, here in within.items():
-        places[number] = comparisons.candidates(bright[number], occupied, known, settings)
-        known = np.concatenate((known, unit_vectors(*places[number])))
-        if len(places[number][0]) >= settings.fewest:
+        some = places[number] = comparisons.candidates(bright[number], occupied, known, settings)
+        known = np.concatenate((known, unit_vectors(some.ra, some.dec)))
+        if len(some.ra) >= settings.fewest:
             rows = comparisons.sampled_frames(frames, here.rows, settings.located_in)
             wanted += [(number, int(row)) for row in rows]
     session.watcher.stage("locating comparison sources", len(wanted))
@@ -365,11 +365,11 @@ def _comparisons(
         found[number] = result
         session.watcher.step()
 
-    jobs = [(session.order, int(frames["id"][row]), *places[number]) for number, row in wanted]
+    jobs = [(session.order, int(frames["id"][row]), places[number].ra, places[number].dec) for number, row in wanted]
     session.crew.run(tasks.locate_sources, jobs, done)
     return {
         number: comparisons.placed(
-            *places[number], [f for (n, _), f in zip(wanted, found, strict=True) if f and n == number], settings
+            places[number], [f for (n, _), f in zip(wanted, found, strict=True) if f and n == number], settings
         )
         for number in within
     }

@@ -17,7 +17,7 @@ from hindlight import clock, duplicates, ensemble, host, judge, lifted, photomet
 from hindlight.background import MAD_TO_SIGMA
 from hindlight.candidates import ChannelView, Described, Examined, SeenOnly, View, describe
 from hindlight.companions import as_listed
-from hindlight.comparisons import Located, among_alike, apart_from
+from hindlight.comparisons import Located, among_alike, at_positions, serving
 from hindlight.ensemble import FLUX_COLUMNS
 from hindlight.facts import visible
 from hindlight.fence import one_line
@@ -33,7 +33,7 @@ from hindlight.ranking import Thresholds
 from hindlight.response import PHOTOGRAPHIC, SEEN_SNR
 from hindlight.robust import median_of
 from hindlight.schema import MEASUREMENTS, UNUSABLE
-from hindlight.settings import Settings
+from hindlight.settings import Comparisons, Settings
 from hindlight.storage import StorageError
 from hindlight.store import Columns, Piece
 from hindlight.systems import BadWcsError, NoCelestialError, unit_vectors
@@ -214,7 +214,8 @@ def frame_evidence(order: Order, batch: int) -> FrameEvidence:
     steady = usable & (kind == "comparison")
     if not order.settings.comparisons.table:  # what the user calls steady serves, target or not
         assumed = order.settings.photometry.assumed_fwhm_pixels
-        steady &= np.isin(rows["position"], apart_from(who, tables.frames, ("target",), assumed))
+        chosen = serving(who, tables.frames, ("target",), assumed, order.settings.comparisons)
+        steady &= np.isin(rows["position"], chosen)
     ids, row = np.unique(rows["frame"], return_inverse=True)
     first = np.unique(row, return_index=True)[1]
     frames: Columns = {"frame": ids, "pull": np.full(len(ids), np.nan), "n_controls": np.zeros(len(ids), np.int64)}
@@ -269,18 +270,26 @@ def position_blocks(
 
 
 def residuals(order: Order) -> Mapping[str, lifted.Residuals]:
-    """What calibration leaves in each channel whose comparisons tell it, those that may be a target left out."""
-    return _residuals(order.run, order.version, order.settings.photometry.assumed_fwhm_pixels)
+    """What calibration leaves in each channel whose comparisons tell it.
+
+    Those that may be a target are left out, but where they must serve: then the target is known whose residuals they are.
+    """
+    return _residuals(
+        order.run, order.version, order.settings.photometry.assumed_fwhm_pixels, order.settings.comparisons
+    )
 
 
 @lru_cache(maxsize=2)
-def _residuals(run: str, version: str, assumed: float) -> Mapping[str, lifted.Residuals]:
+def _residuals(run: str, version: str, assumed: float, chosen: Comparisons) -> Mapping[str, lifted.Residuals]:
     tables = book(run, version)
-    ids = apart_from(tables.positions, tables.frames, ("target", "trial"), assumed)
+    near = (tables.positions, tables.frames, ("target", "trial"), assumed)
+    ids, own = serving(*near, chosen), at_positions(*near)
     if len(ids) == 0:
         return {}
     blocks = position_blocks(Order(run, Settings(), host.PluginSpec(), version), ids)["blocks"]
-    found = {label: lifted.residuals(block, tables.solution) for label, block in blocks.items()}
+    nobody = np.empty(0, np.int64)
+    whose = [own.get(source, nobody) for source in ids.tolist()]
+    found = {label: lifted.residuals(block, tables.solution, whose) for label, block in blocks.items()}
     of_channel = {label: np.sort(tables.frames["id"][tables.frames["channel"] == label]) for label in found}
     return {
         label: lifted.over_all(

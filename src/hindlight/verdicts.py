@@ -14,7 +14,7 @@ from typing import Any, Protocol
 import numpy as np
 from numpy.typing import NDArray
 
-from hindlight import conclude, examining, host, judge, outcome, plan, store, tasks
+from hindlight import conclude, examining, host, judge, outcome, plan, store, tasks, tied
 from hindlight.bright import Bright, apart
 from hindlight.calibrate import Rank
 from hindlight.candidates import Described, Examined
@@ -249,7 +249,7 @@ def tabled(
     described = _described(session, places, [*zip(beyond.tolist(), p.testable.tolist(), strict=True)], examined)
     cells = {found.number: outcome.plugin_cells(found, plugins) for found in fields}
     errors = dict(zip(session.targets.names, session.targets.position_error.tolist(), strict=True))
-    beams, rows = _beams(frames, settings), []
+    beams, serves, rows = _beams(frames, settings), tied.of_targets(positions, frames, settings), []
     for place, cells_of in zip(places, described, strict=True):
         found, where = place.found, int(np.searchsorted(positions["id"], place.target))
         row = dict(cells[found.number][int(np.searchsorted(found.ids, place.target))])
@@ -262,8 +262,12 @@ def tabled(
             row |= {"found_ra": float(positions["ra"][where]), "found_dec": float(positions["dec"][where])}
         beam = min((beams[row["channel"]] for row in cells_of.channels if row["channel"] in beams), default=np.inf)
         apart = _distances(positions, stated, where)
-        said_of_it = outcome.place_note(found, apart, errors.get(place.name, 0.0), settings.search.most_places, beam)
-        row["notes"] = outcome.notes(found, place.index, place.at, p, settings.controls, said_of_it)
+        known = (
+            outcome.place_note(found, apart, errors.get(place.name, 0.0), settings.search.most_places, beam),
+            serves.get(place.target, ""),
+            tied.untied_note(cells_of.channels, settings),
+        )
+        row["notes"] = outcome.notes(found, place.index, place.at, p, settings.controls, known)
         rows.append(row)
     faults = [f for found in fields for f in found.judgement.faults] + [f for e in examined.values() for f in e.faults]
     meta = outcome.meta(settings, p, fields)
