@@ -95,6 +95,31 @@ def test_columns_of_many_equal_values_have_a_sensible_scale():
     assert calibrate.centre_and_spread(np.zeros((98, 1)))[1][0] == 1.0
 
 
+@pytest.mark.parametrize("n", [98, 512, 2000])
+def test_a_lone_control_of_another_channel_does_not_stand_beside_a_target_far_beyond_it(n):
+    """A statistic that is nearly always zero: its values in two channels are compared as they are, alone or among some."""
+    values = np.zeros((n, 2))
+    values[3, 1] = 2.3
+    target = np.array([109.0, 0.0])
+    assert calibrate.rank(calibrate.null_from(values, ["a", "a"]), target).p_value == pytest.approx(1 / (n + 1))
+    assert calibrate.rank(calibrate.null_from(values, ["a", "b"]), target).p_value == pytest.approx(2 / (n + 1))
+    assert calibrate.rank(calibrate.null_from(values, ["a", "a"]), np.array([2.2, 0.0])).p_value > 1.5 / (n + 1)
+
+
+def test_ranks_of_statistics_that_are_nearly_always_zero_are_exact():
+    """A blank target is first no more often than one in so many, and nearly that often (4,000 sets, binomial bounds)."""
+    rng = np.random.default_rng(17)
+    n, sets = 40, 4000
+    first = 0
+    for _ in range(sets):
+        seldom = np.where(rng.random((n + 1, 4)) < 0.03, rng.poisson(2.0, (n + 1, 4)) * rng.random((n + 1, 4)), 0.0)
+        values = np.concatenate([seldom, rng.standard_t(4, (n + 1, 4))], axis=1)
+        null = calibrate.null_from(values[1:], ["a", "a", "a", "b", "c", "d", "e", "f"])
+        first += calibrate.rank(null, values[0]).p_value <= 1 / (n + 1) + 1e-9
+    low, high = stats.binom.interval(0.999, sets, 1 / (n + 1))
+    assert low <= first <= high
+
+
 def test_leave_one_out_equals_counting():
     """Every control's p-value equals a plain count over the others and itself."""
     rng = np.random.default_rng(2)

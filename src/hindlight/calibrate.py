@@ -8,6 +8,7 @@ whole set; the combination is ranked in the same set. Under exchangeability the 
 
 from __future__ import annotations
 
+from collections.abc import Hashable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -27,13 +28,17 @@ LOGS_AT_ONCE = 25  # factors: no product of so many, each below the largest shap
 
 @dataclass(frozen=True, eq=False)
 class Null:
-    """Controls of one set: oriented values of shape (n, k), larger more unusual, -inf for none; and what follows."""
+    """Controls of one set: oriented values of shape (n, k), larger more unusual, -inf for none; and what follows.
+
+    `family` (k,) is the same number for columns that are of one kind, those of a statistic in several channels.
+    """
 
     values: FloatArray
     sorted_values: FloatArray
     at_least: IntArray
     centre: FloatArray
     spread: FloatArray
+    family: IntArray
 
     @property
     def n(self) -> int:
@@ -52,15 +57,17 @@ class Rank:
     control_distances: FloatArray
 
 
-def null_from(values: FloatArray) -> Null:
-    """The null of controls' oriented values, shape (n, k)."""
+def null_from(values: FloatArray, family: Sequence[Hashable] = ()) -> Null:
+    """The null of controls' oriented values, shape (n, k); `family` names the kind of each column, () for k kinds."""
     ordered = np.sort(values, axis=0)
     n = len(values)
     at_least = np.empty(values.shape, np.int64)
     for k in range(values.shape[1]):
         at_least[:, k] = n - np.searchsorted(ordered[:, k], values[:, k], side="left")
     centre, spread = centre_and_spread(values)
-    return Null(values, ordered, at_least, centre, spread)
+    numbers: dict[Hashable, int] = {}
+    kinds = [numbers.setdefault(kind, len(numbers)) for kind in family or range(values.shape[1])]
+    return Null(values, ordered, at_least, centre, spread, np.array(kinds, np.int64))
 
 
 def centre_and_spread(values: FloatArray) -> tuple[FloatArray, FloatArray]:
@@ -127,9 +134,24 @@ def _as_far_in_set(
     deciding = (p == target_p.min()).any(axis=0)
     values = np.concatenate((target[None, deciding], null.values[:, deciding]))
     centre, spread = centre_and_spread(values)
+    spread = _one_scale(values, centre, spread, null.family[deciding])
     members = np.concatenate(([True], tied))
     distance = _combination(p[:, deciding], (values[members] - centre) / spread)[2]
     return np.asarray(distance[1:] >= distance[0])
+
+
+def _one_scale(values: FloatArray, centre: FloatArray, spread: FloatArray, family: IntArray) -> FloatArray:
+    """The spread of each column (k,), one for all columns of a family of which more than half of the values are equal.
+
+    There the few others set the scale: a lone value is as far out as any other lone one, be it large or next to nothing.
+    Among channels of one statistic that can be told.
+    """
+    equal = (values == centre).mean(axis=0) > 0.5
+    shared = spread.copy()
+    for kind in np.unique(family[equal]):
+        mine = equal & (family == kind)
+        shared[mine] = spread[mine].max()
+    return shared
 
 
 def furthest_columns(null: Null, values: FloatArray) -> IntArray:

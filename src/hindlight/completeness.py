@@ -299,7 +299,7 @@ def _own_p(among: Ranked, plugin: Plugin, columns: Mapping[str, Column], weight:
     p = []
     for row, mask in zip(among.sources, among.serving, strict=True):
         if mask.tobytes() not in nulls:
-            nulls[mask.tobytes()] = calibrate.null_from(matrix[among.controls[mask]])
+            nulls[mask.tobytes()] = calibrate.null_from(matrix[among.controls[mask]], [column for _, column in keys])
         p.append(calibrate.rank(nulls[mask.tobytes()], matrix[row], weight).p_value)
     return np.array(p)
 

@@ -149,7 +149,7 @@ def rank_field(
     for row, mask in zip(targets, serving, strict=True):
         signature = mask.tobytes()
         if signature not in nulls:
-            nulls[signature] = calibrate.null_from(matrix[controls[mask]])
+            nulls[signature] = calibrate.null_from(matrix[controls[mask]], [column for _, column in keys])
         found = calibrate.rank(nulls[signature], matrix[row], weight)
         ranks.append(found)
         deciding.append(keys[found.column] if found.column >= 0 else None)
