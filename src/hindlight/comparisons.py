@@ -108,7 +108,7 @@ def placed(some: Candidates, found: Sequence[Located], settings: Comparisons) ->
     good &= np.stack([f.flat for f in found]).sum(axis=0) <= FLAT * seen.sum(axis=0)
     good &= _steady(snr, seen)
     clear = good & ~some.at_target
-    alone = clear.sum() >= settings.enough or good.sum() < settings.enough
+    alone = clear.sum() >= settings.enough or good.sum() <= settings.fewest
     kept = np.flatnonzero(clear if alone else good)[: settings.wanted]
     return ra[kept] + place_east[kept] / np.cos(np.radians(dec[kept])), dec[kept] + place_north[kept]
 
@@ -126,7 +126,7 @@ def serving(
     ids, field = positions["id"][mine], positions["field"][mine]
     clear = ~np.isin(ids, list(at_positions(positions, frames, kinds, assumed_fwhm_pixels)))
     n_clear, n_all = (np.bincount(field[which], minlength=field.max(initial=-1) + 1) for which in (clear, clear | True))
-    needed = (n_clear < settings.enough) & (n_all >= settings.enough)
+    needed = (n_clear < settings.enough) & (n_all > settings.fewest)
     return np.sort(ids[clear | needed[field]])
 
 

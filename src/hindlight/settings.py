@@ -171,9 +171,7 @@ class Comparisons:
     isolation: float = setting(4.0, "no other bright source or target is nearer than this", unit="FWHM", minimum=1)
     located_in: int = setting(60, "frames per channel and field in which their exact places are measured", minimum=2)
     fewest: int = setting(3, "fewer comparisons than this leave a frame on its raw scale", minimum=2)
-    enough: int = setting(
-        10, "where a field has fewer comparisons, bright targets serve too, if there are then so many", minimum=2
-    )
+    enough: int = setting(5, "where a field has fewer comparisons, bright targets serve too", minimum=2)
     fewest_for_curve: int = setting(
         8, "a photographic frame with fewer comparisons than this tells only whether a source is seen", minimum=3
     )
