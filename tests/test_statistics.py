@@ -14,8 +14,8 @@ from hypothesis import strategies as st
 
 from hindlight import Channel, LightCurve, Statistic
 from hindlight_plugins.bayesian_blocks import BayesianBlocks, first_of_blocks
-from hindlight_plugins.brightest import Brightest, leave_one_out, p_of_maximum
-from hindlight_plugins.chi_square import ChiSquare
+from hindlight_plugins.brightest import Brightest, leave_one_out, log10_p_of_maximum, p_of_maximum
+from hindlight_plugins.chi_square import ChiSquare, log10_p_chi_square
 from hindlight_plugins.common_mode import FrameWide
 from hindlight_plugins.distribution import Distribution, quantiles, skewness
 from hindlight_plugins.duty_cycle import DutyCycle
@@ -44,6 +44,7 @@ CURVE = LightCurve.from_arrays(TIMES, FLUX, ERROR)
 REFERENCE = [
     (ChiSquare(), "reduced", 13.58182),  # 95.07277 / 7
     (ChiSquare(), "p_gauss", 1.1198e-17),  # scipy.stats.chi2.sf(95.07277, 7)
+    (ChiSquare(), "log10_p_gauss", math.log10(1.1198e-17)),
     (ChiSquare(), "modulation_index", 0.8996595),
     (ChiSquare(), "modulation_index_debiased", 0.8161178),  # Akritas & Bershady 1996, ApJ 470, 706
     (ChiSquare(), "excess_variance", 2.843036),  # this and the next four: Vaughan et al. 2003, MNRAS 345, 1271
@@ -93,6 +94,30 @@ def test_trials_of_the_maximum():
     assert p_of_maximum(0.0, 3, two_sided=True) == 1.0  # exact
     assert p_of_maximum(6.0, 5, two_sided=True) == pytest.approx(2 * p_of_maximum(6.0, 5), rel=1e-6)
     assert p_of_maximum(50.0, 5) == 0.0
+
+
+def test_chances_too_small_for_a_number():
+    """Logarithms go on where chances are 0, and are theirs where they are not."""
+    assert log10_p_of_maximum(10.0, 8) == pytest.approx(math.log10(6.096e-23), abs=1e-4)
+    # scipy.stats.norm.logsf(60) = -1805.0135606805675
+    assert p_of_maximum(60.0, 300) == 0.0
+    assert log10_p_of_maximum(60.0, 300) == pytest.approx(
+        -1805.0135606805675 / math.log(10) + math.log10(300), rel=1e-12
+    )
+    assert log10_p_of_maximum(60.0, 300, two_sided=True) == pytest.approx(log10_p_of_maximum(60.0, 600), rel=1e-12)
+    # scipy.stats.chi2.logsf(1450, 29) = -659.9306788550208: reduced 50
+    assert log10_p_chi_square(1450.0, 29) == pytest.approx(-659.9306788550208 / math.log(10), rel=1e-12)
+    # For 30 degrees of freedom Q = e^-x sum_{k<15} x^k / k!; exact
+    for chi2 in (30.0, 3000.0, 30000.0):
+        x = chi2 / 2
+        exact = (math.log(math.fsum(x**k / math.factorial(k) for k in range(15))) - x) / math.log(10)
+        assert log10_p_chi_square(chi2, 30) == pytest.approx(exact, rel=1e-12)
+    flux = 60.0 * (np.arange(30) == 7)
+    curve = LightCurve.from_arrays(np.arange(30.0), flux, np.full(30, 0.3))
+    values, brightest = ChiSquare().compute(curve), Brightest().compute(curve)
+    assert (values["p_gauss"], brightest["p_trials"]) == (0.0, 0.0)
+    assert values["log10_p_gauss"] == pytest.approx(log10_p_chi_square(29 * values["reduced"], 29), rel=1e-12)
+    assert brightest["log10_p_trials"] == pytest.approx(log10_p_of_maximum(brightest["excess"], 30), rel=1e-12)
 
 
 def test_chi_square_of_published_table():

@@ -5,6 +5,7 @@ These weigh every sample alike; a source that is bright in one frame out of hund
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from typing import ClassVar
 
@@ -14,6 +15,8 @@ from hindlight import Column, LightCurve, Statistic, hookimpl, weighted_mean
 
 NAN = float("nan")
 MEAN_SIGNIFICANCE = 3.0  # ratios to the mean are blank below this: they would only say that the mean is near zero
+SMALLEST = 1e-290  # chances above it are told to all digits
+TERMS = 500  # of a continued fraction; far more than chances below that need
 
 
 @dataclass(frozen=True)
@@ -31,6 +34,7 @@ class ChiSquare(Statistic):
                ucd="stat.fit.chi2"),
         Column("p_gauss", "chance of a chi-square as high if errors were Gaussian and right; 0 where below 1e-308",
                ucd="stat.probability"),
+        Column("log10_p_gauss", "logarithm (base 10) of that chance, however small", ucd="stat.probability"),
         Column("modulation_index", "standard deviation over mean", ucd="src.var.index"),
         Column("modulation_index_debiased", "the same with the variance of the errors taken off; negative where the "
                "scatter is below the errors", ucd="src.var.index"),
@@ -58,6 +62,7 @@ class ChiSquare(Statistic):
         values = {
             "reduced": chi2 / (n - 1),
             "p_gauss": float(special.chdtrc(n - 1, chi2)),
+            "log10_p_gauss": log10_p_chi_square(chi2, n - 1),
             "modulation_index": NAN,
             "modulation_index_debiased": NAN,
             "excess_variance": squares / (n - 1) - noise / n,
@@ -90,6 +95,23 @@ def _normalized(excess: float, noise: float, n: int) -> dict[str, float]:
         "fractional_variability": fraction,
         "fractional_variability_err": error / (2 * fraction),
     }
+
+
+def log10_p_chi_square(chi2: float, dof: int) -> float:
+    """Logarithm (base 10) of the chance that chi-square with `dof` degrees of freedom reaches `chi2`.
+
+    Where the chance is too small for a number: Q(a, x) = x^a e^-x / Gamma(a) times the continued fraction
+    1/(x+1-a- 1(1-a)/(x+3-a- 2(2-a)/(x+5-a- ...))) with a = dof / 2, x = chi2 / 2 (Abramowitz & Stegun 1964, eq. 6.5.31,
+    its even part).
+    """
+    chance = float(special.chdtrc(dof, chi2))
+    if chance > SMALLEST:
+        return math.log10(chance)
+    a, x = dof / 2, chi2 / 2
+    below = x + 2 * TERMS + 1 - a
+    for k in range(TERMS, 0, -1):
+        below = x + 2 * k - 1 - a - k * (k - a) / below
+    return (a * math.log(x) - x - math.lgamma(a) - math.log(below)) / math.log(10)
 
 
 @hookimpl
