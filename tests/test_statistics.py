@@ -47,7 +47,8 @@ REFERENCE = [
     (ChiSquare(), "log10_p_gauss", math.log10(1.1198e-17)),
     (ChiSquare(), "modulation_index", 0.8996595),
     (ChiSquare(), "modulation_index_debiased", 0.8161178),  # Akritas & Bershady 1996, ApJ 470, 706
-    (ChiSquare(), "excess_variance", 2.843036),  # this and the next four: Vaughan et al. 2003, MNRAS 345, 1271
+    (ChiSquare(), "excess_variance", 2.843036),  # this and the next five: Vaughan et al. 2003, MNRAS 345, 1271
+    (ChiSquare(), "excess_variance_err", 0.128917 * FLUX.mean() ** 2),  # eq. 11 with the mean held fixed
     (ChiSquare(), "normalized_excess_variance", 0.767222),
     (ChiSquare(), "normalized_excess_variance_err", 0.128917),  # eq. 11
     (ChiSquare(), "fractional_variability", 0.875912),
@@ -170,6 +171,22 @@ def test_ratios_to_a_mean_that_is_not_there_are_blank():
         assert math.isfinite(values["excess_variance"])
 
 
+def test_the_error_of_the_excess_variance_is_its_scatter():
+    """Of a source that varies the same way each time, in 4000 noises of errors unlike each other; within 4 sigma."""
+    rng = np.random.default_rng(6)
+    error = rng.uniform(0.8, 1.2, 60)
+    shape = 2.0 * np.sin(np.arange(60.0)) - 3  # a negative mean: no ratio to it, and the error all the same
+    found = [
+        ChiSquare().compute(LightCurve.from_arrays(np.arange(60.0), shape + error * rng.normal(size=60), error))
+        for _ in range(4000)
+    ]
+    excess, told = (np.array([v[name] for v in found]) for name in ("excess_variance", "excess_variance_err"))
+    assert np.isfinite(told).all()
+    assert excess.std() == pytest.approx(
+        np.sqrt(np.mean(told**2)), rel=4 / np.sqrt(2 * 4000) + 0.03
+    )  # 0.03: s^2 has n - 1
+
+
 def test_scatter_below_the_errors_gives_a_negative_index():
     """A steady, well-measured source has a negative debiased index and no fractional variability."""
     values = ChiSquare().compute(LightCurve.from_arrays(TIMES, np.full(8, 10.0), ERROR))
@@ -177,6 +194,8 @@ def test_scatter_below_the_errors_gives_a_negative_index():
     assert values["normalized_excess_variance"] < 0
     assert math.isnan(values["fractional_variability"])
     assert math.isnan(values["normalized_excess_variance_err"])
+    assert values["excess_variance"] < 0
+    assert math.isnan(values["excess_variance_err"])
 
 
 def test_brightest_sees_a_lone_flare_and_its_time():
