@@ -12,7 +12,7 @@ from astropy.io.votable.ucd import check_ucd
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from hindlight import Channel, LightCurve, Statistic
+from hindlight import Channel, LightCurve, Statistic, weighted_mean
 from hindlight_plugins.bayesian_blocks import BayesianBlocks, first_of_blocks
 from hindlight_plugins.brightest import Brightest, leave_one_out, log10_p_of_maximum, p_of_maximum
 from hindlight_plugins.chi_square import ChiSquare, log10_p_chi_square
@@ -54,7 +54,7 @@ REFERENCE = [
     (ChiSquare(), "fractional_variability", 0.875912),
     (ChiSquare(), "fractional_variability_err", 0.0735903),  # eq. B2
     (VonNeumann(), "eta", 1.361753),  # von Neumann 1941, Ann. Math. Stat. 12, 367
-    (VonNeumann(), "z", -1.03408),
+    (VonNeumann(), "z", -1.03408),  # (eta - 2) / sqrt(4 (n-2) / (n^2-1))
     (Stetson(), "j", 0.856774),  # Stetson 1996, PASP 108, 851
     (Stetson(pairs="disjoint"), "j", -0.926060),
     (Stetson(pairs="singles"), "j", 2.483257),
@@ -86,6 +86,18 @@ def computed(statistic: Statistic, curve: LightCurve) -> dict[str, float]:
 def test_reference_values(statistic, column, expected):
     """Each column has the value of its published formula for the reference light curve."""
     assert computed(statistic, CURVE)[column] == pytest.approx(expected, rel=2e-5)
+
+
+def test_mean_robust_measures_and_blocks_of_the_reference():
+    """What no column shows by itself; values computed outside this project as those above."""
+    assert weighted_mean(FLUX, ERROR) == pytest.approx((1.541193, 0.129010), rel=1e-5)
+    robust = Distribution().compute(LightCurve.from_arrays(TIMES, FLUX, np.ones(8)))
+    assert robust["iqr"] == pytest.approx(0.889561, abs=1e-6)  # 0.741301 times 1.2
+    assert robust["mad"] == pytest.approx(0.444781, abs=1e-6)  # 1.482602 times 0.3
+    # astropy.stats.bayesian_blocks with p0=0.01 and with p0=0.05: edges 0, 3, 6, 10
+    first = first_of_blocks(ERROR[None] ** -2, (FLUX - weighted_mean(FLUX, ERROR)[0])[None], 4.0)[0]
+    middles = (TIMES[1:] + TIMES[:-1]) / 2
+    assert [TIMES[0], *middles[np.flatnonzero(first)[1:] - 1], TIMES[-1]] == [0, 3, 6, 10]
 
 
 def test_trials_of_the_maximum():
@@ -144,12 +156,19 @@ def test_von_neumann_moments():
 
 
 def test_stetson_k_limits():
-    """K of a lone outlier is 2 sqrt(n-1) / n (exact: its mean is taken off), of Gaussian noise sqrt(2/pi) for many."""
+    """K of a lone outlier and of Gaussian noise, exact.
+
+    A lone deviation among n that are 0 has K = 1 / sqrt(n): that of an outlier which does not move the mean, since
+    another sample outweighs it. Where all weigh the same it does: the n - 1 others lie 1/n of it below the mean, and
+    K = 2 sqrt(n-1) / n, twice as much for many. Gaussian noise: sqrt(2/pi).
+    """
     lone = np.zeros(10_000)
     lone[17] = 1.0
     noise = np.random.default_rng(3).normal(size=10_000)
     times, error = np.arange(10_000), np.full(10_000, 1.0)
     assert Stetson().compute(LightCurve.from_arrays(times, lone, error))["k"] == pytest.approx(2 * 9999**0.5 / 10_000)
+    pinned = np.where(times == 4000, 1e-7, error)
+    assert Stetson().compute(LightCurve.from_arrays(times, lone, pinned))["k"] == pytest.approx(0.01, rel=1e-5)
     gaussian = Stetson().compute(LightCurve.from_arrays(times, noise, error))["k"]
     assert gaussian == pytest.approx((2 / np.pi) ** 0.5, abs=0.02)
 
