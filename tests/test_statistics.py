@@ -270,6 +270,19 @@ def test_robust_measures_and_skewness():
     assert skewness(FLUX[None], n)[0] * 6 / math.sqrt(8 * 7) == pytest.approx(1.138173, rel=1e-6)  # g1
 
 
+def test_skewness_of_hardly_any_spread_is_blank():
+    """Fluxes so nearly equal that the cube of their spread is no number have none, and say so without a warning."""
+    flux = np.array([0, 0, 0, 0, 1.3e-160])
+    assert np.isnan(skewness(flux[None], np.array([5]))[0])
+
+
+def test_the_rise_over_hardly_any_difference():
+    """A ratio that is no number any more has a logarithm: fluxes equal but for 1e-160 within an hour, and 1 a year on."""
+    t = np.concatenate((np.arange(4) * 900.0, [3e7]))
+    values = StructureFunction().compute(LightCurve.from_arrays(t, np.array([0, 0, 0, 1.3e-160, 1.0]), np.ones(5)))
+    assert 319 < values["rise"] < 322
+
+
 def test_pulls_decide_the_shape():
     """Skewness and spread are those of (S - median) / err: twice the errors, half the spread, the same skewness."""
     one, two = (Distribution().compute(LightCurve.from_arrays(TIMES, FLUX, np.full(8, e))) for e in (1.0, 2.0))

@@ -67,7 +67,7 @@ class StructureFunction(RowStatistic):
         low, high = raw[every, short], raw[every, long]
         epoch = np.cumsum(np.diff(t, axis=1, prepend=t[:, :1]) > self.gap_days * DAY, axis=1)
         short_err, long_err = pairs.epoch_errors((short, long), epoch)
-        ratio = np.divide(high, low, out=np.full(len(t), np.nan), where=two & (low > 0) & (high > 0))
+        both = two & (low > 0) & (high > 0)
         return {
             "short": np.where(any_bin, low - noise[every, short], np.nan),
             "short_err": np.where(any_bin, short_err, np.nan),
@@ -75,7 +75,7 @@ class StructureFunction(RowStatistic):
             "long": np.where(two, high - noise[every, long], np.nan),
             "long_err": np.where(two, long_err, np.nan),
             "long_lag": np.where(two, lag[every, long], np.nan),
-            "rise": np.log10(ratio),
+            "rise": np.where(both, np.log10(np.where(both, high, 1)) - np.log10(np.where(both, low, 1)), np.nan),
         }
 
 
