@@ -13,7 +13,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from hindlight import Channel, LightCurve, Statistic, weighted_mean
-from hindlight_plugins.bayesian_blocks import BayesianBlocks, first_of_blocks
+from hindlight_plugins.bayesian_blocks import BayesianBlocks, best_of_few, first_of_blocks
 from hindlight_plugins.brightest import Brightest, leave_one_out, log10_p_of_maximum, p_of_maximum
 from hindlight_plugins.chi_square import ChiSquare, log10_p_chi_square
 from hindlight_plugins.common_mode import FrameWide
@@ -307,6 +307,38 @@ def test_blocks_are_those_of_astropy(seed, price):
     middles = (t[1:] + t[:-1]) / 2
     np.testing.assert_allclose(middles[np.flatnonzero(first)[1:] - 1], edges[1:-1])
     assert BayesianBlocks(price=price).compute(LightCurve.from_arrays(t, flux, err))["n"] == len(edges) - 1
+
+
+@pytest.mark.parametrize("seed", range(12))
+def test_the_price_is_where_astropy_finds_one_block(seed):
+    """Just below it astropy.stats.bayesian_blocks divides the light curve, just above it does not."""
+    rng = np.random.default_rng([seed, 3])
+    t = np.cumsum(rng.uniform(1, 9, 40))
+    err = rng.uniform(0.5, 2, 40)
+    burst = 3.0 * (np.arange(40) // 5 == 3) * (seed % 2)
+    flux = (
+        7.0 + err * rng.normal(size=40) + burst - burst[::-1] * (seed % 3) + 1.5 * (np.arange(40) % 13 > 9) * (seed > 7)
+    )
+    price = BayesianBlocks().compute(LightCurve.from_arrays(t, flux, err))["price"]
+    blocks = [len(astropy_stats.bayesian_blocks(t, flux - 7, err, fitness="measures", ncp_prior=price + d)) - 1
+              for d in (-1e-9, 1e-9)]  # fmt: skip
+    assert blocks[0] > 1
+    assert blocks[1] == 1
+
+
+def test_prices_of_few_steps_and_of_many():
+    """Prices of light curves without noise; exact.
+
+    Twice the log likelihood ratio of a step is its significance squared. Four neighbours that go up and down by 1, four
+    samples each among zeros, gain 2 each for five steps, more than any two or three blocks gain for theirs.
+    """
+    t, err = np.arange(60.0), np.ones(60)
+    step = 2.0 * (t >= 20)
+    wave = np.where((t >= 22) & (t < 38), 1 - 2 * ((t - 22) // 4 % 2), 0)
+    prices = [BayesianBlocks().compute(LightCurve.from_arrays(t, f, err))["price"] for f in (step, wave, 0 * step)]
+    assert prices == pytest.approx([(2 / math.sqrt(1 / 20 + 1 / 40)) ** 2 / 2, 4 * 2 / 5, 0])
+    assert best_of_few(np.ones((1, 60)), wave[None], False)[1][0] < 1.2
+    assert best_of_few(np.ones((1, 60)), (step - step.mean())[None], False)[1][0] == pytest.approx(prices[0])
 
 
 def test_samples_of_one_time_share_a_block():
