@@ -8,7 +8,8 @@ import pyarrow.parquet as pq
 import pytest
 from astropy.table import Table
 
-from test_mine import arguments, candidates, mine, small
+from hindlight import host
+from test_mine import DEMO, arguments, candidates, mine, small
 
 STRANGER = Path(__file__).parent / "third_party" / "stranger_plugin"
 
@@ -34,9 +35,25 @@ def test_a_strangers_statistic_works_as_file_and_as_distribution(tmp_path):
     assert len(set(tables)) == 1
     table = candidates(tmp_path / "site2")
     assert table["flare"]["longest_run_length"] == 1
-    assert table["steady"]["longest_run_length"] > 5
+    assert table["steady"]["longest_run_length"] == 0, "a steady source has no run of bright measurements"
     controls = pq.read_table(tmp_path / "site2" / "controls.parquet")
     assert "longest_run_length" in controls.column_names
+
+
+def test_alone_on_the_demo_it_takes_no_steady_source_for_a_variable(tmp_path):
+    """The README's statistic by itself: what varies comes first, steady sources of S/N 10 in hundreds of frames last."""
+    loaded = host.load(host.PluginSpec())
+    others = [part for p in (*loaded.statistics, *loaded.period_searches) for part in ("--without", p.name)]
+    run = tmp_path / "run"
+    mine(DEMO, "--targets", DEMO / "targets.ecsv", "--out", run, "--plugin", STRANGER / "longest_run.py", *others)
+    table = candidates(run)
+    truth = {str(row["name"]): str(row["kind"]) for row in Table.read(DEMO / "truth.ecsv")}
+    steady = [table[name] for name, kind in truth.items() if kind.endswith("steady")]
+    assert max(row["peak_snr"] for row in steady) > 10
+    assert {str(row["standing"]) for row in steady} == {"steady"}
+    assert min(row["p_value"] for row in steady) > 0.05
+    varying = [table[name] for name, kind in truth.items() if kind in ("pulser", "sinusoid", "flare")]
+    assert max(row["p_value"] for row in varying) < 0.02
 
 
 def with_path(folder):

@@ -12,10 +12,10 @@ from astropy.io.votable.ucd import check_ucd
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from hindlight import Channel, LightCurve, Statistic
-from hindlight_plugins.bayesian_blocks import BayesianBlocks, first_of_blocks
-from hindlight_plugins.brightest import Brightest, leave_one_out, p_of_maximum
-from hindlight_plugins.chi_square import ChiSquare
+from hindlight import Channel, LightCurve, Statistic, weighted_mean
+from hindlight_plugins.bayesian_blocks import BayesianBlocks, best_of_few, first_of_blocks
+from hindlight_plugins.brightest import Brightest, leave_one_out, log10_p_of_maximum, p_of_maximum
+from hindlight_plugins.chi_square import ChiSquare, log10_p_chi_square
 from hindlight_plugins.common_mode import FrameWide
 from hindlight_plugins.distribution import Distribution, quantiles, skewness
 from hindlight_plugins.duty_cycle import DutyCycle
@@ -24,7 +24,7 @@ from hindlight_plugins.lomb_scargle import LombScargle
 from hindlight_plugins.mean_flux import MeanFlux
 from hindlight_plugins.position_check import Position
 from hindlight_plugins.stetson import Stetson
-from hindlight_plugins.structure_function import StructureFunction, separations, structure_function
+from hindlight_plugins.structure_function import Pairs, StructureFunction, pairwise, separations
 from hindlight_plugins.von_neumann import VonNeumann
 from hindlight_plugins.welch_stetson import WelchStetson, pairs
 
@@ -44,15 +44,17 @@ CURVE = LightCurve.from_arrays(TIMES, FLUX, ERROR)
 REFERENCE = [
     (ChiSquare(), "reduced", 13.58182),  # 95.07277 / 7
     (ChiSquare(), "p_gauss", 1.1198e-17),  # scipy.stats.chi2.sf(95.07277, 7)
+    (ChiSquare(), "log10_p_gauss", math.log10(1.1198e-17)),
     (ChiSquare(), "modulation_index", 0.8996595),
     (ChiSquare(), "modulation_index_debiased", 0.8161178),  # Akritas & Bershady 1996, ApJ 470, 706
-    (ChiSquare(), "excess_variance", 2.843036),  # this and the next four: Vaughan et al. 2003, MNRAS 345, 1271
+    (ChiSquare(), "excess_variance", 2.843036),  # this and the next five: Vaughan et al. 2003, MNRAS 345, 1271
+    (ChiSquare(), "excess_variance_err", 0.128917 * FLUX.mean() ** 2),  # eq. 11 with the mean held fixed
     (ChiSquare(), "normalized_excess_variance", 0.767222),
     (ChiSquare(), "normalized_excess_variance_err", 0.128917),  # eq. 11
     (ChiSquare(), "fractional_variability", 0.875912),
     (ChiSquare(), "fractional_variability_err", 0.0735903),  # eq. B2
     (VonNeumann(), "eta", 1.361753),  # von Neumann 1941, Ann. Math. Stat. 12, 367
-    (VonNeumann(), "z", -1.03408),
+    (VonNeumann(), "z", -1.03408),  # (eta - 2) / sqrt(4 (n-2) / (n^2-1))
     (Stetson(), "j", 0.856774),  # Stetson 1996, PASP 108, 851
     (Stetson(pairs="disjoint"), "j", -0.926060),
     (Stetson(pairs="singles"), "j", 2.483257),
@@ -86,6 +88,18 @@ def test_reference_values(statistic, column, expected):
     assert computed(statistic, CURVE)[column] == pytest.approx(expected, rel=2e-5)
 
 
+def test_mean_robust_measures_and_blocks_of_the_reference():
+    """What no column shows by itself; values computed outside this project as those above."""
+    assert weighted_mean(FLUX, ERROR) == pytest.approx((1.541193, 0.129010), rel=1e-5)
+    robust = Distribution().compute(LightCurve.from_arrays(TIMES, FLUX, np.ones(8)))
+    assert robust["iqr"] == pytest.approx(0.889561, abs=1e-6)  # 0.741301 times 1.2
+    assert robust["mad"] == pytest.approx(0.444781, abs=1e-6)  # 1.482602 times 0.3
+    # astropy.stats.bayesian_blocks with p0=0.01 and with p0=0.05: edges 0, 3, 6, 10
+    first = first_of_blocks(ERROR[None] ** -2, (FLUX - weighted_mean(FLUX, ERROR)[0])[None], 4.0)[0]
+    middles = (TIMES[1:] + TIMES[:-1]) / 2
+    assert [TIMES[0], *middles[np.flatnonzero(first)[1:] - 1], TIMES[-1]] == [0, 3, 6, 10]
+
+
 def test_trials_of_the_maximum():
     """The chance of the highest of n samples agrees with 1 - Phi(z)^n, and doubles its tail when two-sided."""
     assert p_of_maximum(10.0, 8) == pytest.approx(6.096e-23, rel=1e-3)  # computed with scipy.stats.norm.logcdf
@@ -93,6 +107,30 @@ def test_trials_of_the_maximum():
     assert p_of_maximum(0.0, 3, two_sided=True) == 1.0  # exact
     assert p_of_maximum(6.0, 5, two_sided=True) == pytest.approx(2 * p_of_maximum(6.0, 5), rel=1e-6)
     assert p_of_maximum(50.0, 5) == 0.0
+
+
+def test_chances_too_small_for_a_number():
+    """Logarithms go on where chances are 0, and are theirs where they are not."""
+    assert log10_p_of_maximum(10.0, 8) == pytest.approx(math.log10(6.096e-23), abs=1e-4)
+    # scipy.stats.norm.logsf(60) = -1805.0135606805675
+    assert p_of_maximum(60.0, 300) == 0.0
+    assert log10_p_of_maximum(60.0, 300) == pytest.approx(
+        -1805.0135606805675 / math.log(10) + math.log10(300), rel=1e-12
+    )
+    assert log10_p_of_maximum(60.0, 300, two_sided=True) == pytest.approx(log10_p_of_maximum(60.0, 600), rel=1e-12)
+    # scipy.stats.chi2.logsf(1450, 29) = -659.9306788550208: reduced 50
+    assert log10_p_chi_square(1450.0, 29) == pytest.approx(-659.9306788550208 / math.log(10), rel=1e-12)
+    # For 30 degrees of freedom Q = e^-x sum_{k<15} x^k / k!; exact
+    for chi2 in (30.0, 3000.0, 30000.0):
+        x = chi2 / 2
+        exact = (math.log(math.fsum(x**k / math.factorial(k) for k in range(15))) - x) / math.log(10)
+        assert log10_p_chi_square(chi2, 30) == pytest.approx(exact, rel=1e-12)
+    flux = 60.0 * (np.arange(30) == 7)
+    curve = LightCurve.from_arrays(np.arange(30.0), flux, np.full(30, 0.3))
+    values, brightest = ChiSquare().compute(curve), Brightest().compute(curve)
+    assert (values["p_gauss"], brightest["p_trials"]) == (0.0, 0.0)
+    assert values["log10_p_gauss"] == pytest.approx(log10_p_chi_square(29 * values["reduced"], 29), rel=1e-12)
+    assert brightest["log10_p_trials"] == pytest.approx(log10_p_of_maximum(brightest["excess"], 30), rel=1e-12)
 
 
 def test_chi_square_of_published_table():
@@ -118,12 +156,19 @@ def test_von_neumann_moments():
 
 
 def test_stetson_k_limits():
-    """K of a lone outlier is 2 sqrt(n-1) / n (exact: its mean is taken off), of Gaussian noise sqrt(2/pi) for many."""
+    """K of a lone outlier and of Gaussian noise, exact.
+
+    A lone deviation among n that are 0 has K = 1 / sqrt(n): that of an outlier which does not move the mean, since
+    another sample outweighs it. Where all weigh the same it does: the n - 1 others lie 1/n of it below the mean, and
+    K = 2 sqrt(n-1) / n, twice as much for many. Gaussian noise: sqrt(2/pi).
+    """
     lone = np.zeros(10_000)
     lone[17] = 1.0
     noise = np.random.default_rng(3).normal(size=10_000)
     times, error = np.arange(10_000), np.full(10_000, 1.0)
     assert Stetson().compute(LightCurve.from_arrays(times, lone, error))["k"] == pytest.approx(2 * 9999**0.5 / 10_000)
+    pinned = np.where(times == 4000, 1e-7, error)
+    assert Stetson().compute(LightCurve.from_arrays(times, lone, pinned))["k"] == pytest.approx(0.01, rel=1e-5)
     gaussian = Stetson().compute(LightCurve.from_arrays(times, noise, error))["k"]
     assert gaussian == pytest.approx((2 / np.pi) ** 0.5, abs=0.02)
 
@@ -145,6 +190,22 @@ def test_ratios_to_a_mean_that_is_not_there_are_blank():
         assert math.isfinite(values["excess_variance"])
 
 
+def test_the_error_of_the_excess_variance_is_its_scatter():
+    """Of a source that varies the same way each time, in 4000 noises of errors unlike each other; within 4 sigma."""
+    rng = np.random.default_rng(6)
+    error = rng.uniform(0.8, 1.2, 60)
+    shape = 2.0 * np.sin(np.arange(60.0)) - 3  # a negative mean: no ratio to it, and the error all the same
+    found = [
+        ChiSquare().compute(LightCurve.from_arrays(np.arange(60.0), shape + error * rng.normal(size=60), error))
+        for _ in range(4000)
+    ]
+    excess, told = (np.array([v[name] for v in found]) for name in ("excess_variance", "excess_variance_err"))
+    assert np.isfinite(told).all()
+    assert excess.std() == pytest.approx(
+        np.sqrt(np.mean(told**2)), rel=4 / np.sqrt(2 * 4000) + 0.03
+    )  # 0.03: s^2 has n - 1
+
+
 def test_scatter_below_the_errors_gives_a_negative_index():
     """A steady, well-measured source has a negative debiased index and no fractional variability."""
     values = ChiSquare().compute(LightCurve.from_arrays(TIMES, np.full(8, 10.0), ERROR))
@@ -152,6 +213,8 @@ def test_scatter_below_the_errors_gives_a_negative_index():
     assert values["normalized_excess_variance"] < 0
     assert math.isnan(values["fractional_variability"])
     assert math.isnan(values["normalized_excess_variance_err"])
+    assert values["excess_variance"] < 0
+    assert math.isnan(values["excess_variance_err"])
 
 
 def test_brightest_sees_a_lone_flare_and_its_time():
@@ -207,6 +270,19 @@ def test_robust_measures_and_skewness():
     assert skewness(FLUX[None], n)[0] * 6 / math.sqrt(8 * 7) == pytest.approx(1.138173, rel=1e-6)  # g1
 
 
+def test_skewness_of_hardly_any_spread_is_blank():
+    """Fluxes so nearly equal that the cube of their spread is no number have none, and say so without a warning."""
+    flux = np.array([0, 0, 0, 0, 1.3e-160])
+    assert np.isnan(skewness(flux[None], np.array([5]))[0])
+
+
+def test_the_rise_over_hardly_any_difference():
+    """A ratio that is no number any more has a logarithm: fluxes equal but for 1e-160 within an hour, and 1 a year on."""
+    t = np.concatenate((np.arange(4) * 900.0, [3e7]))
+    values = StructureFunction().compute(LightCurve.from_arrays(t, np.array([0, 0, 0, 1.3e-160, 1.0]), np.ones(5)))
+    assert 319 < values["rise"] < 322
+
+
 def test_pulls_decide_the_shape():
     """Skewness and spread are those of (S - median) / err: twice the errors, half the spread, the same skewness."""
     one, two = (Distribution().compute(LightCurve.from_arrays(TIMES, FLUX, np.full(8, e))) for e in (1.0, 2.0))
@@ -231,6 +307,38 @@ def test_blocks_are_those_of_astropy(seed, price):
     middles = (t[1:] + t[:-1]) / 2
     np.testing.assert_allclose(middles[np.flatnonzero(first)[1:] - 1], edges[1:-1])
     assert BayesianBlocks(price=price).compute(LightCurve.from_arrays(t, flux, err))["n"] == len(edges) - 1
+
+
+@pytest.mark.parametrize("seed", range(12))
+def test_the_price_is_where_astropy_finds_one_block(seed):
+    """Just below it astropy.stats.bayesian_blocks divides the light curve, just above it does not."""
+    rng = np.random.default_rng([seed, 3])
+    t = np.cumsum(rng.uniform(1, 9, 40))
+    err = rng.uniform(0.5, 2, 40)
+    burst = 3.0 * (np.arange(40) // 5 == 3) * (seed % 2)
+    flux = (
+        7.0 + err * rng.normal(size=40) + burst - burst[::-1] * (seed % 3) + 1.5 * (np.arange(40) % 13 > 9) * (seed > 7)
+    )
+    price = BayesianBlocks().compute(LightCurve.from_arrays(t, flux, err))["price"]
+    blocks = [len(astropy_stats.bayesian_blocks(t, flux - 7, err, fitness="measures", ncp_prior=price + d)) - 1
+              for d in (-1e-9, 1e-9)]  # fmt: skip
+    assert blocks[0] > 1
+    assert blocks[1] == 1
+
+
+def test_prices_of_few_steps_and_of_many():
+    """Prices of light curves without noise; exact.
+
+    Twice the log likelihood ratio of a step is its significance squared. Four neighbours that go up and down by 1, four
+    samples each among zeros, gain 2 each for five steps, more than any two or three blocks gain for theirs.
+    """
+    t, err = np.arange(60.0), np.ones(60)
+    step = 2.0 * (t >= 20)
+    wave = np.where((t >= 22) & (t < 38), 1 - 2 * ((t - 22) // 4 % 2), 0)
+    prices = [BayesianBlocks().compute(LightCurve.from_arrays(t, f, err))["price"] for f in (step, wave, 0 * step)]
+    assert prices == pytest.approx([(2 / math.sqrt(1 / 20 + 1 / 40)) ** 2 / 2, 4 * 2 / 5, 0])
+    assert best_of_few(np.ones((1, 60)), wave[None], False)[1][0] < 1.2
+    assert best_of_few(np.ones((1, 60)), (step - step.mean())[None], False)[1][0] == pytest.approx(prices[0])
 
 
 def test_samples_of_one_time_share_a_block():
@@ -270,10 +378,58 @@ def test_highest_interval_agrees_with_the_obvious_way(seed):
 
 def test_structure_function_of_the_reference():
     """Pairs, mean squared differences and noise in three bins of lag, as computed outside this project (numpy)."""
-    n, _, raw, noise = structure_function(TIMES[None], FLUX[None], ERROR[None], np.array([0, 1.5, 3.5, 6.5]))
+    n, _, raw, noise = Pairs.of(TIMES[None], FLUX[None], ERROR[None], np.array([0, 1.5, 3.5, 6.5])).means()
     assert n.tolist() == [[4, 9, 9]]
     assert raw[0] == pytest.approx([0.1925, 9.202222, 9.288889], rel=1e-6)
     assert raw[0] - noise[0] == pytest.approx([-0.12, 8.868889, 8.955556], rel=1e-6)
+
+
+def epochs_of(seed: int) -> LightCurve:
+    """Twelve epochs thirty days apart, each of four samples an hour apart and of a level of its own beside noise."""
+    rng = np.random.default_rng([seed, 21])
+    epoch = np.repeat(np.arange(12), 4)
+    t = 86400.0 * 30 * epoch + 3600.0 * np.tile(np.arange(4), 12)
+    error = rng.uniform(0.5, 1.5, len(t))
+    flux = 2.0 * rng.normal(size=12)[epoch] + error * rng.normal(size=len(t))
+    return LightCurve.from_arrays(t, flux, error)
+
+
+def test_errors_of_the_structure_function_are_a_jackknife_over_epochs():
+    """They are what leaving out all pairs with a member in one epoch gives, one epoch after the other."""
+    curve = epochs_of(1)
+    values = StructureFunction().compute(curve)
+    first, second = (pairwise(which, np.arange(48)[None])[0] for which in (np.minimum, np.maximum))
+    lag = (curve.t_tdb_s[second] - curve.t_tdb_s[first]) / 86400
+    value = (curve.flux[second] - curve.flux[first]) ** 2 - curve.flux_err[second] ** 2 - curve.flux_err[first] ** 2
+    for name, low, high in (("short", 0.01, 0.1), ("long", 100, 1e3)):
+        mine = (lag >= low) & (lag < high)
+        left = [value[mine & (first // 4 != e) & (second // 4 != e)].mean() for e in range(12)]
+        assert values[name] == pytest.approx(value[mine].mean())
+        expected = math.sqrt(11 / 12 * np.sum((np.array(left) - value[mine].mean()) ** 2))
+        assert values[f"{name}_err"] == pytest.approx(expected)
+
+
+def test_errors_of_the_structure_function_are_its_scatter():
+    """Over 600 sources that vary from epoch to epoch, 48 samples in 12 epochs, at both ends of the lags.
+
+    Errors that took pairs for independent would be three times too small at long lags. A jackknife over pairs is somewhat too
+    large in the mean (Efron & Stein 1981, Ann. Stat. 9, 586).
+    """
+    found = [StructureFunction().compute(epochs_of(seed)) for seed in range(600)]
+    for name in ("short", "long"):
+        value, told = (np.array([v[key] for v in found]) for key in (name, f"{name}_err"))
+        assert 0.9 < np.sqrt(np.mean(told**2)) / value.std() < 1.3
+    assert np.mean([v["short"] for v in found]) == pytest.approx(0, abs=4 * 0.5 / 600**0.5)
+
+
+def test_a_structure_function_that_rests_on_one_epoch_has_no_error():
+    """Where each pair has a member in one epoch nothing is left without it; values stay."""
+    t = np.concatenate((np.arange(6) * 60.0, [8.64e7]))
+    values = StructureFunction().compute(LightCurve.from_arrays(t, np.arange(7.0), np.ones(7)))
+    assert math.isfinite(values["short"])
+    assert math.isfinite(values["long"])
+    assert math.isnan(values["short_err"])
+    assert math.isnan(values["long_err"])
 
 
 def test_structure_function_is_blank_without_pairs():

@@ -152,3 +152,63 @@ def test_a_statistic_that_never_enters_the_p_value_is_said(tmp_path, capsys, col
     (tmp_path / "spread.py").write_text(text, encoding="utf-8")
     assert cli.run_command(["plugins", "--check", str(tmp_path / "spread.py")]) == 0
     assert words in capsys.readouterr().out
+
+
+@dataclass(frozen=True)
+class Detections(Statistic):
+    """It counts from zero, not from the quiet level."""
+
+    columns = (Column("n", "samples above 5 sigma", unusual="high"),)
+
+    def compute(self, curve):
+        return {"n": int((curve.flux > 5 * curve.flux_err).sum())}
+
+
+class SpreadOfRatios(Detections):
+    """The scatter of S/N grows with the flux where errors differ."""
+
+    def compute(self, curve):
+        return {"n": float(np.std(curve.flux / curve.flux_err))}
+
+
+class RatioToMean(Detections):
+    """Blank where there is no mean, so that a value alone tells a source from blank sky."""
+
+    def compute(self, curve):
+        mean = curve.flux.mean()
+        return {"n": float(curve.flux.std() / mean) if mean > 1 else float("nan")}
+
+
+class FaintIsUnusual(Detections):
+    """The same the other way round."""
+
+    columns = (Column("n", "median, sign turned", unusual="low", flux_power=1),)
+
+    def compute(self, curve):
+        return {"n": -float(np.median(curve.flux))}
+
+
+class Bright(Detections):
+    """It says that it asks about presence, beside a column that asks about variation."""
+
+    columns = (
+        Column("n", "samples above 5 sigma", unusual="high", about="presence"),
+        Column("above", "highest above the quiet level", unusual="high"),
+    )
+
+    def compute(self, curve):
+        return {"n": int((curve.flux > 5 * curve.flux_err).sum()), "above": float(curve.above_quiet.max())}
+
+
+@pytest.mark.parametrize("kind", [Detections, SpreadOfRatios, RatioToMean, FaintIsUnusual])
+def test_a_column_that_grows_with_steady_light_is_told(kind):
+    """Bright steady sources would be variable: the author is told which column does it and how to mend it."""
+    (said,) = testing.examine(kind()).remarks
+    assert said.startswith("column 'n' tells a steady source of S/N 10")
+    assert 'curve.above_quiet, curve.quiet_level), or set about="presence"' in said
+
+
+@pytest.mark.parametrize("plugin", [*(p for p in SHIPPED if isinstance(p, Statistic)), Bright()], ids=lambda p: p.name)
+def test_nothing_is_said_of_columns_that_do_not(plugin):
+    """Shipped statistics, whose columns about variation start from the quiet level or from the mean, get no such note."""
+    assert not [said for said in testing.examine(plugin).remarks if "steady" in said]

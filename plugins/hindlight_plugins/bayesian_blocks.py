@@ -41,6 +41,8 @@ class BayesianBlocks(RowStatistic):
                ucd="time.duration"),
         Column("interval", "highest mean flux of successive samples above the mean of all others over the error of the "
                "difference, for the best choice of such an interval", unusual="high", ucd="stat.snr;stat.max"),
+        Column("price", "highest price of a block at which the light curve is still more than one; a prior's rate of "
+               "false alarms is the share of blank positions whose own is higher than its price", ucd="stat.likelihood"),
     )  # fmt: skip
     min_points: ClassVar[int] = 3
     # Fixed: the table of priors for a rate of false alarms (eq. 21 there) is for Gaussian errors, and what is unusual the
@@ -51,7 +53,8 @@ class BayesianBlocks(RowStatistic):
         """The declared columns."""
         apart, pieces, weight, away = _pieces(rows)
         first = apart & np.take_along_axis(first_of_blocks(weight, away, self.price), pieces, axis=1)
-        interval = highest_interval(weight, away, rows.channel.signed)
+        interval, price = best_of_few(weight, away, rows.channel.signed)
+        price = highest_price(weight, away, price)
         group, weight, mean = rows.groups(first)
         n = first.sum(axis=1)
         level, level_err = (values[:, None] for values in rows.quiet_level)
@@ -66,6 +69,7 @@ class BayesianBlocks(RowStatistic):
             "start": np.where(several, start, np.nan),
             "length": np.where(several, end - start, np.nan),
             "interval": interval,
+            "price": price,
         }
 
 
@@ -80,12 +84,12 @@ def _pieces(rows: Rows) -> tuple[Mask, NDArray[np.int64], Array, Array]:
     return in_turn, pieces, weight, np.where(weight > 0, mean - rows.weighted_mean[:, None], 0)
 
 
-def first_of_blocks(weight: Array, flux: Array, price: float) -> Mask:
+def first_of_blocks(weight: Array, flux: Array, price: float | Array) -> Mask:
     """Which samples begin a block in the best division of each row, shapes (n_rows, n_samples).
 
     Fitness for measurements with Gaussian errors (Scargle et al. 2013, eq. 41): (sum w x)^2 / (2 sum w), w = 1/err^2,
-    less `price` for each block; the best division by dynamic programming (their section 2.6), all rows at once. Samples
-    of weight 0 at the end of a row are none.
+    less `price` for each block (one for all, or of shape (n_rows,)); the best division by dynamic programming (their
+    section 2.6), all rows at once. Samples of weight 0 at the end of a row are none.
     """
     n_rows, n = flux.shape
     before = np.zeros((n_rows, 1))
@@ -112,27 +116,67 @@ def first_of_blocks(weight: Array, flux: Array, price: float) -> Mask:
     return first
 
 
-def highest_interval(weight: Array, flux: Array, either_sign: bool) -> Array:
-    """The largest (mean inside - mean outside) / error of an interval of samples of each row, shape (n_rows,).
+def best_of_few(weight: Array, flux: Array, either_sign: bool) -> tuple[Array, Array]:
+    """Of each row the largest (mean inside - mean outside) / error of an interval of samples, and the highest price at
+
+    which a division into two or three blocks is better than none; shapes (n_rows,), NaN for a single sample.
 
     `weight` and `flux` as in `first_of_blocks`, the fluxes' weighted means being zero: then the ratio is
-    F / sqrt(W (1 - W / W_all)) with the sums F of w x and W of w inside; exact. NaN for a single sample.
+    F / sqrt(W (1 - W / W_all)) with the sums F of w x and W of w inside, and the price is the sum of F^2 / (2 W) over
+    the blocks, divided by how many there are but one; exact.
     """
     n_rows, n = flux.shape
-    before = np.zeros((n_rows, 1))
-    weights = np.concatenate((before, np.cumsum(weight, axis=1)), axis=1)
-    fluxes = np.concatenate((before, np.cumsum(weight * flux, axis=1)), axis=1)
+    weights, fluxes = (np.pad(np.cumsum(v, axis=1), ((0, 0), (1, 0))) for v in (weight, weight * flux))
     total = weights[:, -1:]
+    before, after = _fitness(fluxes, weights), _fitness(fluxes[:, -1:] - fluxes, total - weights)
     best = np.full(n_rows, -np.inf)
+    three = np.full(n_rows, -np.inf)
     for last in range(n):
         inside = weights[:, last + 1, None] - weights[:, : last + 1]
+        np.copyto(inside, np.inf, where=inside <= 0)
         gain = fluxes[:, last + 1, None] - fluxes[:, : last + 1]
-        if either_sign:
-            gain = np.abs(gain)
-        possible = (inside > 0) & (inside < total)
-        gain /= np.sqrt(np.where(possible, inside * (1 - inside / total), np.inf))
-        best = np.maximum(best, np.where(possible, gain, -np.inf).max(axis=1))
-    return np.where(np.isfinite(best), best, np.nan)
+        fitness = gain * gain
+        fitness /= inside
+        fitness *= 0.5
+        fitness += before[:, : last + 1]
+        three = np.maximum(three, fitness.max(axis=1) + after[:, last + 1])
+        spread = inside / total
+        np.subtract(1, spread, out=spread)
+        spread *= inside
+        np.copyto(spread, np.inf, where=spread <= 0)
+        gain /= np.sqrt(spread, out=spread)
+        best = np.maximum(best, (np.abs(gain, out=gain) if either_sign else gain).max(axis=1))
+    two = (before + after).max(axis=1)
+    several = (weight > 0).sum(axis=1) > 1
+    price = np.maximum(np.maximum(two - before[:, -1], (three - before[:, -1]) / 2), 0)
+    return np.where(several, best, np.nan), np.where(several, price, np.nan)
+
+
+def highest_price(weight: Array, flux: Array, price: Array) -> Array:
+    """The highest price at which the best division of each row has more than one block, shape (n_rows,).
+
+    That is the highest ratio of what a division gains over one block to how many more blocks it has. From a `price` that
+    is too low, if anything, the ratio of the division that is best at it is a higher one, until there is none (Dinkelbach
+    1967, Management Science 13, 492); exact. `weight` and `flux` as in `first_of_blocks`; NaN stays.
+    """
+    price = price.copy()
+    rows = np.flatnonzero(np.isfinite(price))
+    while rows.size:
+        first = first_of_blocks(weight[rows], flux[rows], price[rows])
+        place = (np.cumsum(first, axis=1) - 1 + np.arange(len(rows))[:, None] * first.shape[1]).ravel()
+        sums = (np.bincount(place, v.ravel(), first.size).reshape(first.shape) for v in (
+            weight[rows] * flux[rows], weight[rows]))  # fmt: skip
+        blocks = _fitness(*sums)
+        ratio = np.cumsum(blocks, axis=1)[:, -1] / np.maximum(first.sum(axis=1) - 1, 1)
+        higher = (first.sum(axis=1) > 1) & (ratio > price[rows] * (1 + 1e-12))
+        price[rows[higher]] = ratio[higher]
+        rows = rows[higher]
+    return price
+
+
+def _fitness(flux: Array, weight: Array) -> Array:
+    """F^2 / (2 W) of sums over blocks, 0 for none."""
+    return np.asarray(np.divide(flux**2, 2 * weight, out=np.zeros_like(flux), where=weight > 0))
 
 
 def _edges(rows: Rows, inside: Mask) -> tuple[Array, Array]:

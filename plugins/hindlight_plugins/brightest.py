@@ -12,6 +12,8 @@ from scipy import special
 
 from hindlight import Column, LightCurve, Statistic, hookimpl
 
+SMALLEST = 1e-290  # chances above it are told to all digits
+
 
 @dataclass(frozen=True)
 class Brightest(Statistic):
@@ -29,6 +31,7 @@ class Brightest(Statistic):
                unusual="high", ucd="stat.snr"),
         Column("p_trials", "chance that Gaussian noise reaches it in as many samples; 0 where below 1e-308",
                ucd="stat.probability"),
+        Column("log10_p_trials", "logarithm (base 10) of that chance, however small", ucd="stat.probability"),
         Column("snr", "highest flux over its error", unusual="high", about="presence", ucd="stat.snr;stat.max"),
         Column("time", "when the highest excess was measured, seconds from J2000.0 TDB at the barycentre; NaN where "
                "that frame has no clock", unit="s", ucd="time.epoch", is_time=True),
@@ -41,10 +44,12 @@ class Brightest(Statistic):
         fold = np.abs if curve.channel.signed else np.asarray
         above = fold(curve.above_quiet)
         at = int(np.argmax(above))
+        highest, n, signed = float(above[at]), len(curve), curve.channel.signed
         return {
-            "excess": float(above[at]),
+            "excess": highest,
             "second": float(np.partition(above, -2)[-2]),
-            "p_trials": p_of_maximum(float(above[at]), len(curve), two_sided=curve.channel.signed),
+            "p_trials": p_of_maximum(highest, n, two_sided=signed),
+            "log10_p_trials": log10_p_of_maximum(highest, n, two_sided=signed),
             "snr": float(np.max(fold(curve.flux / curve.flux_err))),
             "time": float(curve.t_tdb_s[at]),
             "leave_one_out": float(np.max(fold(leave_one_out(curve.flux, curve.flux_err)))),
@@ -60,6 +65,14 @@ def p_of_maximum(z: float, n: int, *, two_sided: bool = False) -> float:
         return float(-np.expm1(n * special.log_ndtr(z)))
     tail = 2 * float(special.ndtr(-z))
     return -math.expm1(n * math.log1p(-tail)) if tail < 1 else 1.0
+
+
+def log10_p_of_maximum(z: float, n: int, *, two_sided: bool = False) -> float:
+    """Logarithm (base 10) of `p_of_maximum`, where that is too small for a number too: n Q(z) there, or 2 n Q(z)."""
+    chance = p_of_maximum(z, n, two_sided=two_sided)
+    if chance > SMALLEST:
+        return math.log10(chance)
+    return (math.log(2 * n if two_sided else n) + float(special.log_ndtr(-z))) / math.log(10)
 
 
 def leave_one_out(flux: NDArray[np.float64], flux_err: NDArray[np.float64]) -> NDArray[np.float64]:

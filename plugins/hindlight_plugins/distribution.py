@@ -65,8 +65,9 @@ def skewness(values: Array, n: NDArray[np.int64]) -> Array:
     used = np.arange(values.shape[1]) < n[:, None]
     away = np.where(used, values - (Rows.sums(values) / n)[:, None], 0)
     m2, m3 = Rows.sums(away**2) / n, Rows.sums(away**3) / n
-    spread = np.where((n > 2) & (m2 > 0), m2, np.nan)
-    return np.sqrt(n * (n - 1.0)) / np.maximum(n - 2, 1) * m3 / spread**1.5
+    cube = m2**1.5  # of a tiny m2 it is 0
+    spread = np.where((n > 2) & (cube > 0), cube, np.nan)
+    return np.sqrt(n * (n - 1.0)) / np.maximum(n - 2, 1) * m3 / spread
 
 
 @hookimpl

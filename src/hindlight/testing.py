@@ -21,6 +21,7 @@ from numpy.typing import NDArray
 
 from hindlight.facts import Cards, FrameFacts, PlaneAxes
 from hindlight.fence import WrongColumnError, checked
+from hindlight.judge import oriented
 from hindlight.lightcurve import Block, Channel, LightCurve, freeze
 from hindlight.plugin import (
     BeamShape,
@@ -44,7 +45,10 @@ FLUX_FACTOR = 1000.0
 TIME_SHIFT_S = 86400.0 * 1000
 RELATIVE = 1e-6
 TIMED_CURVES = 150
+STEADY_CURVES = 40
+STEADY_SNR = (10.0, 100.0)
 SAMPLES = 200
+SIMULATED_LEVEL = 5.0
 THREADS = 4
 
 CHANNEL = Channel("test|1.4GHz|I|30as|Jy/beam", "test", "", "I", 1.4e9, 30.0, "Jy/beam")
@@ -87,9 +91,11 @@ def examine(plugin: Plugin) -> Report:
 
 
 def _remarks(plugin: Plugin) -> tuple[str, ...]:
-    """What to say of a statistic that takes no part in the ranking."""
-    if not isinstance(plugin, Statistic) or any(c.unusual and c.about == "variation" for c in plugin.columns):
+    """What to say of a statistic that takes no part in the ranking, or takes what is bright for what varies."""
+    if not isinstance(plugin, Statistic):
         return ()
+    if any(c.unusual and c.about == "variation" for c in plugin.columns):
+        return _bright_remarks(plugin)
     if any(c.unusual for c in plugin.columns):
         return (
             "its ranked columns ask about presence, so none enters p_value: "
@@ -100,12 +106,51 @@ def _remarks(plugin: Plugin) -> tuple[str, ...]:
     )
 
 
+def _bright_remarks(plugin: Statistic) -> tuple[str, ...]:
+    """A sentence for each column about variation that tells a bright steady source from blank sky.
+
+    Among blank positions the source would be a variable. Told apart are light curves of the same noise about no flux and
+    about one of S/N 10 or 100: most of the bright ones lie beyond nine tenths of the blank ones.
+    """
+    try:
+        with np.errstate(all="ignore"):
+            blank, *bright = (_of_steady(plugin, snr) for snr in (0.0, *STEADY_SNR))
+    except (Exception, SystemExit, GeneratorExit):  # noqa: BLE001 - it is reported by the checks
+        return ()
+    said = []
+    for column in plugin.columns:
+        if not column.unusual or column.about != "variation":
+            continue
+        null = blank[column.name]
+        usual = np.quantile(oriented(null, column, null), 0.9, method="lower")
+        grown = [snr for snr, found in zip(STEADY_SNR, bright, strict=True)
+                 if np.mean(oriented(found[column.name], column, null) > usual) > 0.5]  # fmt: skip
+        if grown:
+            said.append(
+                f"column {column.name!r} tells a steady source of S/N {grown[0]:.0f} from blank sky, so that every bright "
+                "steady source would be called variable: measure from the quiet level (curve.above_quiet, "
+                'curve.quiet_level), or set about="presence"'
+            )
+    return tuple(said)
+
+
+def _of_steady(plugin: Statistic, snr: float) -> dict[str, NDArray[Any]]:
+    """The columns of a steady source so bright in a typical sample; the noise is the same whatever the brightness."""
+    compute = _statistic_call(plugin)
+    found = []
+    for seed in range(STEADY_CURVES):
+        curve = simulated_curve(seed=seed)
+        flux, raw = (f - SIMULATED_LEVEL + snr for f in (curve.flux, curve.raw_flux))
+        found.append(checked(plugin, compute(replace_arrays(curve, flux=flux, raw_flux=raw))))
+    return {c.name: np.array([values[c.name] for values in found], float) for c in plugin.columns if c.unusual}
+
+
 def simulated_curve(n: int = SAMPLES, seed: int = 0, channel: Channel = CHANNEL, brighter: float = 0.0) -> LightCurve:
     """A light curve of white noise about 5 with errors of about 1, over some years; one sample brighter if asked."""
     rng = np.random.default_rng([seed, n])
     t = np.sort(rng.uniform(0.0, 3e8, n))
     err = rng.uniform(0.8, 1.2, n)
-    flux = 5.0 + err * rng.standard_normal(n)
+    flux = SIMULATED_LEVEL + err * rng.standard_normal(n)
     if n:
         flux[n // 3] += brighter
     return LightCurve.from_arrays(t, flux, err, exposure_s=np.full(n, 60.0), name=f"curve {seed}", channel=channel)

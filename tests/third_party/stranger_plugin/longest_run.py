@@ -1,4 +1,4 @@
-"""Longest unbroken run of detections."""
+"""Longest unbroken run of bright measurements."""
 
 from dataclasses import dataclass
 
@@ -9,11 +9,11 @@ from hindlight import Column, Statistic, hookimpl, setting
 
 @dataclass(frozen=True)
 class LongestRun(Statistic):
-    columns = (Column("length", "Most detections in a row", unusual="high"),)
-    threshold: float = setting(5.0, "What counts as a detection, in sigma", minimum=0)
+    columns = (Column("length", "Most bright measurements in a row", unusual="high"),)
+    threshold: float = setting(5.0, "What counts as bright, in sigma above the quiet level", minimum=0)
 
     def compute(self, curve):
-        hit = curve.flux > self.threshold * curve.flux_err
+        hit = curve.above_quiet > self.threshold
         edges = np.flatnonzero(np.diff(np.concatenate(([0], hit, [0]))))
         return {"length": int(np.max(edges[1::2] - edges[::2], initial=0))}
 
