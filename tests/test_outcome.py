@@ -86,9 +86,10 @@ def test_reasons_of_being_undecided_are_counted_apart() -> None:
     ]  # fmt: skip
     p = p_values([np.nan, np.nan, 0.5, 0.1, np.nan, np.nan, 0.5])
     assert outcome.undecided_remarks(targets, [0, 9, 9, 9, 0, 9, 9], p, 8) == [
+        "1 target is undecided: beyond every control, and these are too few to decide, by themselves or by their tail; "
+        "more controls or fewer targets can ([controls] per_field and most_per_field)",
         "2 targets are undecided: fewer than 8 usable frames in every channel",
         "1 target is undecided: no statistic that can be ranked",
-        "1 target is undecided: too few controls to decide, and no tail can be fitted to them",
     ]
 
 

@@ -155,7 +155,8 @@ class PValues:
     """Over all targets of the run, in order of their ids: shapes (n,).
 
     `short`: beyond every control, whose number cannot decide at the run's level; `testable`: there is a p-value that
-    can decide, from the controls or from their tail.
+    decides. That of a target that is short does only where its tail puts it below the level: a target beyond everything
+    blank that is known is not shown to be steady by there being too little of it.
     """
 
     empirical: FloatArray
@@ -187,7 +188,6 @@ def p_values(ranks: Sequence[calibrate.Rank], settings: Settings, weights: Seque
     short, needed = undecided(ranks, settings)
     p = empirical.copy()
     extrapolated = np.zeros(len(ranks), dtype=bool)
-    testable = np.isfinite(empirical)
     for index in np.flatnonzero(short).tolist():
         bound = calibrate.tail_bound(
             ranks[index].control_distances,
@@ -195,8 +195,9 @@ def p_values(ranks: Sequence[calibrate.Rank], settings: Settings, weights: Seque
             settings.ranking.tail_exceedances,
             weights[index] if weights else 1.0,
         )
-        testable[index] = np.isfinite(bound)
         if bound < p[index]:
             p[index], extrapolated[index] = bound, True
     q = calibrate.false_discovery(p, settings.ranking.any_dependence)
+    with np.errstate(invalid="ignore"):
+        testable = np.isfinite(empirical) & (~short | (q < settings.ranking.level))
     return PValues(empirical, p, q, extrapolated, short, testable, needed)

@@ -186,7 +186,10 @@ def undecided_remarks(
         if max((int(row["n_used"]) for row in said.channels), default=0) < min_frames:
             reasons[f"fewer than {min_frames} usable frames in every channel"] += 1
         elif controls:
-            few = "too few controls to decide, and no tail can be fitted to them"
+            few = (
+                "beyond every control, and these are too few to decide, by themselves or by their tail; more controls or "
+                "fewer targets can ([controls] per_field and most_per_field)"
+            )
             reasons[few if np.isfinite(empirical) else "no statistic that can be ranked"] += 1
     return [f"{how_many(n, 'target is', 'targets are')} undecided: {why}" for why, n in sorted(reasons.items())]
 

@@ -133,7 +133,7 @@ STANDINGS = {
     "variable": "varies beyond chance, not in separate brightenings",
     "steady": "seen, does not vary beyond chance, and enough frames to say so",
     "unseen": "enough frames, never seen, not even in the mean",
-    "undecided": "too few usable frames to say",
+    "undecided": "too few usable frames, or too few controls, to say",
     "uncovered": "no usable frame",
 }
 
