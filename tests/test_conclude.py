@@ -41,3 +41,25 @@ def test_a_target_within_its_controls_is_testable_however_few_they_are() -> None
     """Of three controls one is as far out: nothing speaks for the target. Beyond all three nothing can be said."""
     found = conclude.p_values(ranks(np.array([1.0, 2.0, 3.0]), [2.5, 3.5, np.nan]), Settings())
     np.testing.assert_array_equal(found.testable, [True, False, False])
+
+
+def test_a_tail_that_does_not_fit_decides_nothing(controls: np.ndarray) -> None:
+    """With sources among the controls (a jump in their tail) p stays that of the rank, and what the fit says is kept."""
+    jump = np.concatenate(
+        [np.repeat(controls, 4)[:392] + 0.01 * np.random.default_rng(3).standard_normal(392), [20.0] * 8]
+    )
+    found = conclude.p_values(ranks(jump, [1e5, *[0.0] * 99]), Settings())
+    assert found.short[0]
+    assert found.tails[0].rejected
+    assert not found.extrapolated[0]
+    assert found.p[0] == pytest.approx(1 / 401)
+    assert not found.testable[0]
+
+
+def test_what_a_tail_says_is_kept_of_who_asked(controls: np.ndarray) -> None:
+    """Of targets that are short alone; too few controls for a tail leave nothing to keep."""
+    found = conclude.p_values(ranks(controls, [30.0, *[0.0] * 9]), Settings())
+    assert list(found.tails) == [0]
+    assert found.tails[0].n == 25
+    assert found.p[0] == found.tails[0].bound
+    assert not conclude.p_values(ranks(controls[:20], [30.0, 0.0]), Settings()).tails

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
@@ -10,6 +12,7 @@ from hindlight.candidates import Described
 from hindlight.conclude import Field, PValues
 from hindlight.judge import Judgement
 from hindlight.settings import Settings
+from hindlight.tails import Extrapolation
 from hindlight.wording import from_to, how_many
 
 LABEL = "camera|R|I|3as|adu"
@@ -59,6 +62,23 @@ def test_numbers_in_sentences() -> None:
 def test_plurals_and_ranges(field: Field, p: PValues, said: str) -> None:
     """One target is not 'targets', and equal numbers are no range."""
     assert said in "\n".join(outcome.remarks(p, [field], Settings(), {}))
+
+
+def test_a_tail_that_does_not_fit_is_said() -> None:
+    """In the row's cells and notes and in the last lines; a target without a tail has none in its cells."""
+    p = replace(p_values([0.1, 0.5], short=[True, False]), tails={0: Extrapolation(np.nan, 0.7, 50, 0.004)})
+    found = ranked([90, 90])
+    found.unlike = np.ones(2)
+    cells = [outcome.chance_cells(found, index, index, p) for index in range(2)]
+    assert [(c["tail_shape"], c["tail_n"], c["tail_fit_p"]) for c in cells[:1]] == [(0.7, 50, 0.004)]
+    assert cells[1]["tail_n"] == 0
+    assert np.isnan([cells[1]["tail_shape"], cells[1]["tail_fit_p"]]).all()
+    said = "the tail of its controls does not fit (p = 0.004) and is not used"
+    assert said in outcome.notes(found, 0, 0, p, Settings().controls)
+    assert said not in outcome.notes(found, 1, 1, p, Settings().controls)
+    assert "1 target has controls whose tail does not fit at p < 0.01" in "\n".join(
+        outcome.remarks(p, [found], Settings(), {})
+    )
 
 
 def test_confusion_has_the_unit_of_the_fluxes(monkeypatch: pytest.MonkeyPatch) -> None:

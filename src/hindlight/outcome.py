@@ -27,6 +27,7 @@ from hindlight.ranking import FEWEST_BLANK
 from hindlight.schema import CANDIDATES, PLUGIN_FAULTS, TableColumn
 from hindlight.settings import Controls, Settings
 from hindlight.tables import astropy_table, rows_to_columns
+from hindlight.tails import MISFIT, Extrapolation
 from hindlight.wording import from_to, how_many
 
 CAUTION = (
@@ -80,12 +81,16 @@ def _full(name: str, column: Column) -> TableColumn:
 def chance_cells(found: Field, index: int, at: int, p: PValues) -> dict[str, Any]:
     """The columns of a target that come from its rank; `at` is its place among all targets of the run."""
     rank, deciding = found.ranked.ranks[index], found.ranked.deciding[index]
+    tail = p.tails.get(at, Extrapolation())
     channel, column = deciding or ("", "")
     return {
         "p_value": p.p[at],
         "q_value": p.q[at],
         "p_is_extrapolated": bool(p.extrapolated[at]),
         "p_empirical": p.empirical[at],
+        "tail_shape": tail.shape,
+        "tail_n": tail.n,
+        "tail_fit_p": tail.fit_p,
         "lowest_p_statistic": f"{column} in {channel}" if channel else column,
         "beyond_controls": rank.beyond,
         "n_controls": int(found.ranked.n_controls[index]),
@@ -113,6 +118,8 @@ def notes(found: Field, index: int, at: int, p: PValues, controls: Controls, pla
         said.append(f"{are}{counted} cannot decide at this level, {p.needed} are needed")
     if p.extrapolated[at]:
         said.append("p_value is the upper bound of a fitted tail, beyond every control")
+    if (tail := p.tails.get(at)) is not None and tail.rejected:
+        said.append(f"the tail of its controls does not fit (p = {tail.fit_p:.2g}) and is not used")
     if n_controls == 0:
         said.append("no control serves this target: no p-value")
     if (left_out := _too_unlike(found, index, controls)) > 0:
@@ -227,6 +234,11 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings, units: Mapp
     if p.extrapolated.any():
         are = how_many(int(p.extrapolated.sum()), "p-value is the upper bound", "p-values are upper bounds")
         said.append(f"{are} of a fitted tail (p_is_extrapolated)")
+    if rejected := sum(tail.rejected for tail in p.tails.values()):
+        are = how_many(rejected, "target has", "targets have")
+        said.append(
+            f"{are} controls whose tail does not fit at p < {MISFIT:g} (tail_fit_p): p_value is from ranks alone"
+        )
     return tuple(said)
 
 

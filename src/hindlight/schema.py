@@ -506,6 +506,17 @@ CANDIDATES = (
     TableColumn("null", "what these controls are: blank sky, or blank sky made as bright as the target", dtype="str"),
     TableColumn("unlike", "largest factor between the typical error of the target and of one of its controls"),
     TableColumn("p_empirical", "p_value before any extrapolation: (r+1)/(n+1)", ucd="stat.probability"),
+    TableColumn(
+        "tail_shape",
+        "most likely shape (0 exponential, larger heavier) of the tail of its controls; NaN where none was fitted",
+        ucd="stat.fit.param",
+    ),
+    TableColumn("tail_n", "controls that tail was fitted to; 0 for none", dtype="int64", ucd="meta.number"),
+    TableColumn(
+        "tail_fit_p",
+        "chance that controls of such a tail are as unlike it; below 0.01 it is not used; NaN where none was fitted",
+        ucd="stat.probability;stat.fit.goodness",
+    ),
     TableColumn("beyond_controls", "distance of the combination beyond the controls, in their MAD", ucd="stat.value"),
     TableColumn("notes", "what a reader should know before trusting the row", dtype="str", ucd="meta.note"),
     TableColumn(
