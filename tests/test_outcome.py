@@ -93,6 +93,23 @@ def test_confusion_has_the_unit_of_the_fluxes(monkeypatch: pytest.MonkeyPatch) -
     assert "30.1 of the image (rms)" in said
 
 
+def test_a_bound_is_printed_beside_the_p_value_of_the_controls() -> None:
+    """Marked, with its q-value; where no row shown has one there is no such column."""
+    row = {
+        "name": "a", "standing": "single", "p_value": 4.08e-5, "p_is_extrapolated": True, "p_empirical": 1 / 99,
+        "q_value": 0.000815, "n_detected": 1, "n_used": 370, "peak_snr": 15.9, "first_detected": "2009-04-04T09:38:33.1",
+        "period": np.nan,
+    }  # fmt: skip
+    other = row | {"p_value": 0.2, "p_empirical": 0.2, "p_is_extrapolated": False, "q_value": 0.4, "period": 3.5}
+    names, (first, second) = outcome.shown([row, other])
+    assert names[2:5] == ["p", "by controls", "q"]
+    assert first == ["a", "single", "<4.08e-05", "0.0101", "<0.000815", "1/370", "15.9", "2009-04-04T09:38:33", ""]
+    assert second[2:5] == ["0.2", "0.2", "0.4"]
+    names, (second,) = outcome.shown([other])
+    assert names[2:5] == ["p", "q", "seen/used"]
+    assert second == ["a", "single", "0.2", "0.4", "1/370", "15.9", "2009-04-04T09:38:33", "3.5"]
+
+
 def described(standing: str, *n_used: int) -> Described:
     """A target with so many usable frames in each of its channels."""
     return Described({"standing": standing}, tuple({"channel": LABEL, "n_used": n} for n in n_used))

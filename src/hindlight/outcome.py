@@ -28,7 +28,7 @@ from hindlight.schema import CANDIDATES, PLUGIN_FAULTS, TableColumn
 from hindlight.settings import Controls, Settings
 from hindlight.tables import astropy_table, rows_to_columns
 from hindlight.tails import MISFIT, Extrapolation
-from hindlight.wording import from_to, how_many
+from hindlight.wording import from_to, how_many, short
 
 CAUTION = (
     "A low p_value says that a position varies unlike blank sky in the same frames, not what it is. Look at the frames, "
@@ -371,6 +371,27 @@ def summary(result: Outcome) -> str:
         f"plugin faults: {count or 'none'}" + (f" in {', '.join(names)} (plugin_faults.ecsv)" if count else "")
     )
     return "\n".join([*lines, *result.remarks, CAUTION]) + "\n"
+
+
+def shown(rows: Sequence[Mapping[str, Any]]) -> tuple[list[str], list[list[str]]]:
+    """What is printed of some rows of the candidate table: names of columns, and the cells of each row.
+
+    A p-value that is the bound of a tail is marked, its q-value too, and never stands without that of the controls beside it.
+    """
+    names = ["name", "standing", "p", "q", "seen/used", "peak S/N", "first seen", "period (s)"]
+    beside = any(row["p_is_extrapolated"] for row in rows)
+    if beside:
+        names.insert(3, "by controls")
+    cells = []
+    for row in rows:
+        mark = "<" if row["p_is_extrapolated"] else ""
+        cells.append([
+            str(row["name"]), str(row["standing"]), short(row["p_value"], mark),
+            *([short(row["p_empirical"])] if beside else []), short(row["q_value"], mark),
+            f"{row['n_detected']}/{row['n_used']}", short(row["peak_snr"]), str(row["first_detected"])[:19],
+            short(row["period"], digits=8),
+        ])  # fmt: skip
+    return names, cells
 
 
 def candidate_table(
