@@ -147,6 +147,8 @@ def test_threshold_has_the_stated_rate():
 def test_gaussian_threshold_is_the_published_one():
     """One false alarm in a million looks lies at 4.7534 sigma (normal table)."""
     assert calibrate.gaussian_threshold(1, 1e-6) == pytest.approx(4.7534, abs=1e-4)
+    # Sidak 1967, J. Am. Stat. Assoc. 62, 626: one in 1e5 over a thousand looks is 1 - (1 - 1e-5)^1000 = 0.00995022 (exact).
+    assert stats.norm.sf(calibrate.gaussian_threshold(1000, 0.00995022)) == pytest.approx(1e-5, rel=1e-6)
     assert calibrate.gaussian_threshold(1000, -np.expm1(1000 * np.log1p(-1e-6))) == pytest.approx(4.7534, abs=1e-3)
 
 
