@@ -505,7 +505,12 @@ CANDIDATES = (
     ),
     TableColumn("null", "what these controls are: blank sky, or blank sky made as bright as the target", dtype="str"),
     TableColumn("unlike", "largest factor between the typical error of the target and of one of its controls"),
-    TableColumn("p_empirical", "p_value before any extrapolation: (r+1)/(n+1)", ucd="stat.probability"),
+    TableColumn(
+        "p_empirical",
+        "p_value before any extrapolation: (r + w) / (n + w) for r of n controls as far out, w of which count as one "
+        "(n_controls / n_effective)",
+        ucd="stat.probability",
+    ),
     TableColumn(
         "tail_shape",
         "most likely shape (0 exponential, larger heavier) of the tail of its controls; NaN where none was fitted",
@@ -517,7 +522,12 @@ CANDIDATES = (
         "chance that controls of such a tail are as unlike it; below 0.01 it is not used; NaN where none was fitted",
         ucd="stat.probability;stat.fit.goodness",
     ),
-    TableColumn("beyond_controls", "distance of the combination beyond the controls, in their MAD", ucd="stat.value"),
+    TableColumn(
+        "beyond_controls",
+        "distance of the deciding value from the middle of the controls, in their MAD; beyond them only where p_empirical is "
+        "at its floor",
+        ucd="stat.value",
+    ),
     TableColumn("notes", "what a reader should know before trusting the row", dtype="str", ucd="meta.note"),
     TableColumn(
         "found_ra", "where it was judged, if searched within its position error, ICRS", unit="deg", ucd="pos.eq.ra"
