@@ -81,6 +81,35 @@ def test_a_tail_that_does_not_fit_is_said() -> None:
     )
 
 
+@pytest.mark.parametrize(
+    ("n_targets", "n_controls", "said"),
+    [
+        (20, 98, "clear of sources, of 20 targets and of each other"),
+        (320, 35, "of 320 targets and of each other; a shorter list, or one split into runs, leaves room for more"),
+        (1, 98, "of 1 target and of each other"),
+    ],
+)
+def test_targets_that_leave_no_room_for_controls_are_named(n_targets: int, n_controls: int, said: str) -> None:
+    """They are among what controls keep clear of; where they outnumber the controls that is what to mend."""
+    found = ranked([n_controls] * n_targets)
+    (line,) = outcome._placing_remarks([found], Settings())
+    assert line.endswith(said)
+    assert not outcome._placing_remarks([ranked([512] * 3)], Settings())
+    (line,) = outcome._placing_remarks([ranked([100, 600])], Settings())
+    assert "more were measured" in line
+
+
+def test_what_counts_as_a_trial_is_said() -> None:
+    """Targets with a p-value, columns ranked, channels; the columns over all channels are in none."""
+    fields = [ranked([9, 9]), ranked([9])]
+    for found, keys in zip(fields, ([(LABEL, "a"), ("", "b"), (LABEL, "c")], [("other", "a")]), strict=True):
+        assert found.ranks is not None
+        found.ranks = replace(found.ranks, keys=tuple(keys))
+    (line,) = outcome._trial_remarks(p_values([0.1, np.nan, 0.2]), fields)
+    assert line.startswith("counted as trials: 2 targets (q_value), and for each 1 to 3 ranked columns in 2 channels")
+    assert not outcome._trial_remarks(p_values([np.nan]), fields)
+
+
 def test_confusion_has_the_unit_of_the_fluxes(monkeypatch: pytest.MonkeyPatch) -> None:
     """An rms in adu is no number of sigma."""
     found = ranked([3])

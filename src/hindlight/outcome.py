@@ -205,20 +205,11 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings, units: Mapp
     """What the last lines of a run must say; `units` are those of flux by channel."""
     said = []
     sizes = [int(n) for found in fields for n in found.ranked.n_controls]
-    placed = [int(n) for found in fields if _is_plain(found) for n in found.ranked.n_controls]
     alone = sum(size == 0 for size in sizes)
     if alone:
         has = how_many(alone, "target has", "targets have")
         said.append(f"{has} no control and so no p-value: nothing is said of their variation")
-    if placed and min(placed) < settings.controls.per_field:
-        said.append(
-            f"controls per target: {from_to(min(placed), max(placed))}, {settings.controls.per_field} were asked for; "
-            + (
-                "no more fit into the frames clear of sources and of each other"
-                if all(len(found.controls) < settings.controls.per_field for found in fields if not found.lift)
-                else "more were measured, but in fewer frames or with another noise"
-            )
-        )
+    said += [*_trial_remarks(p, fields), *_placing_remarks(fields, settings)]
     said += _search_remarks(fields, settings)
     if p.short.any():
         lie = how_many(int(p.short.sum()), "target lies", "targets lie")
@@ -240,6 +231,36 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings, units: Mapp
             f"{are} controls whose tail does not fit at p < {MISFIT:g} (tail_fit_p): p_value is from ranks alone"
         )
     return tuple(said)
+
+
+def _trial_remarks(p: PValues, fields: Sequence[Field]) -> list[str]:
+    """What was tried: how many targets q counts, and out of how many columns each one's smallest rank is."""
+    counted = int(np.isfinite(p.p).sum())
+    keys = [len(found.ranked.keys) for found in fields if found.ranked.keys]
+    if not (counted and keys):
+        return []
+    channels = {channel for found in fields for channel, _ in found.ranked.keys if channel}
+    return [
+        f"counted as trials: {how_many(counted, 'target', 'targets')} (q_value), and for each {from_to(min(keys), max(keys))} "
+        f"ranked columns in {how_many(len(channels), 'channel', 'channels')} (p_value), as for its controls"
+    ]
+
+
+def _placing_remarks(fields: Sequence[Field], settings: Settings) -> list[str]:
+    """Why there are fewer controls than were asked for; targets are in the way where they outnumber them."""
+    plain, wanted = [found for found in fields if _is_plain(found)], settings.controls.per_field
+    sizes = [int(n) for found in plain for n in found.ranked.n_controls]
+    if not sizes or min(sizes) >= wanted:
+        return []
+    said = f"controls per target: {from_to(min(sizes), max(sizes))}, {wanted} were asked for; "
+    if not all(len(found.controls) < wanted for found in fields if not found.lift):
+        return [said + "more were measured, but in fewer frames or with another noise"]
+    targets = sum(len(found.targets) for found in fields)
+    said += (
+        f"no more fit into the frames clear of sources, of {how_many(targets, 'target', 'targets')} and of each other"
+    )
+    many = targets > sum(len(found.controls) for found in plain)
+    return [said + ("; a shorter list, or one split into runs, leaves room for more" if many else "")]
 
 
 def _is_plain(found: Field) -> bool:
