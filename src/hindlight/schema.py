@@ -520,7 +520,7 @@ CANDIDATES = (
     TableColumn(
         "tail_fit_p",
         "chance that controls of such a tail are as unlike it; below 0.01 it is not used; NaN where none was fitted",
-        ucd="stat.probability;stat.fit.goodness",
+        ucd="stat.fit.goodness",
     ),
     TableColumn(
         "beyond_controls",
