@@ -18,7 +18,7 @@ ORDER = [
     "sites", "reading", "integrity", "goodtime", "timetables", "knowledge", "files", "companions", "channels",
     "outlines", "footprints", "frametable", "archive", "summary", "positions", "apart", "spans", "pixels", "background",
     "detection", "pointing", "growth", "opening", "fluxes", "photometry", "planted", "duplicates", "likeness", "robust",
-    "losses", "response", "ensemble", "store", "judge", "calibrate", "ranking", "lifted", "search", "timing",
+    "losses", "response", "ensemble", "store", "judge", "calibrate", "tails", "ranking", "lifted", "search", "timing",
     "injection", "completeness", "brighter", "candidates", "plan", "more_controls", "comparisons", "tied", "order", "tasks",
     "examining", "trials", "conclude", "bright", "outcome", "crew", "record", "asides", "verdicts", "measuring",
     "second_pass", "runner", "report_card", "study", "recovered", "recovery", "survey", "export", "demo", "testing",

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
@@ -10,6 +12,7 @@ from hindlight.candidates import Described
 from hindlight.conclude import Field, PValues
 from hindlight.judge import Judgement
 from hindlight.settings import Settings
+from hindlight.tails import Extrapolation
 from hindlight.wording import from_to, how_many
 
 LABEL = "camera|R|I|3as|adu"
@@ -61,6 +64,52 @@ def test_plurals_and_ranges(field: Field, p: PValues, said: str) -> None:
     assert said in "\n".join(outcome.remarks(p, [field], Settings(), {}))
 
 
+def test_a_tail_that_does_not_fit_is_said() -> None:
+    """In the row's cells and notes and in the last lines; a target without a tail has none in its cells."""
+    p = replace(p_values([0.1, 0.5], short=[True, False]), tails={0: Extrapolation(np.nan, 0.7, 50, 0.004)})
+    found = ranked([90, 90])
+    found.unlike = np.ones(2)
+    cells = [outcome.chance_cells(found, index, index, p) for index in range(2)]
+    assert [(c["tail_shape"], c["tail_n"], c["tail_fit_p"]) for c in cells[:1]] == [(0.7, 50, 0.004)]
+    assert cells[1]["tail_n"] == 0
+    assert np.isnan([cells[1]["tail_shape"], cells[1]["tail_fit_p"]]).all()
+    said = "the tail of its controls does not fit (p = 0.004) and is not used"
+    assert said in outcome.notes(found, 0, 0, p, Settings().controls)
+    assert said not in outcome.notes(found, 1, 1, p, Settings().controls)
+    assert "1 target has controls whose tail does not fit at p < 0.01" in "\n".join(
+        outcome.remarks(p, [found], Settings(), {})
+    )
+
+
+@pytest.mark.parametrize(
+    ("n_targets", "n_controls", "said"),
+    [
+        (20, 98, "clear of sources, of 20 targets and of each other"),
+        (320, 35, "of 320 targets and of each other; a shorter list, or one split into runs, leaves room for more"),
+        (1, 98, "of 1 target and of each other"),
+    ],
+)
+def test_targets_that_leave_no_room_for_controls_are_named(n_targets: int, n_controls: int, said: str) -> None:
+    """They are among what controls keep clear of; where they outnumber the controls that is what to mend."""
+    found = ranked([n_controls] * n_targets)
+    (line,) = outcome._placing_remarks([found], Settings())
+    assert line.endswith(said)
+    assert not outcome._placing_remarks([ranked([512] * 3)], Settings())
+    (line,) = outcome._placing_remarks([ranked([100, 600])], Settings())
+    assert "more were measured" in line
+
+
+def test_what_counts_as_a_trial_is_said() -> None:
+    """Targets with a p-value, columns ranked, channels; the columns over all channels are in none."""
+    fields = [ranked([9, 9]), ranked([9])]
+    for found, keys in zip(fields, ([(LABEL, "a"), ("", "b"), (LABEL, "c")], [("other", "a")]), strict=True):
+        assert found.ranks is not None
+        found.ranks = replace(found.ranks, keys=tuple(keys))
+    (line,) = outcome._trial_remarks(p_values([0.1, np.nan, 0.2]), fields)
+    assert line.startswith("counted as trials: 2 targets (q_value), and for each 1 to 3 ranked columns in 2 channels")
+    assert not outcome._trial_remarks(p_values([np.nan]), fields)
+
+
 def test_confusion_has_the_unit_of_the_fluxes(monkeypatch: pytest.MonkeyPatch) -> None:
     """An rms in adu is no number of sigma."""
     found = ranked([3])
@@ -71,6 +120,23 @@ def test_confusion_has_the_unit_of_the_fluxes(monkeypatch: pytest.MonkeyPatch) -
     assert "scatter by 30.1 adu (rms) more than their errors explain" in said
     (said,) = outcome._confusion_remarks([found], {LABEL: ""})
     assert "30.1 of the image (rms)" in said
+
+
+def test_a_bound_is_printed_beside_the_p_value_of_the_controls() -> None:
+    """Marked, with its q-value; where no row shown has one there is no such column."""
+    row = {
+        "name": "a", "standing": "single", "p_value": 4.08e-5, "p_is_extrapolated": True, "p_empirical": 1 / 99,
+        "q_value": 0.000815, "n_detected": 1, "n_used": 370, "peak_snr": 15.9, "first_detected": "2009-04-04T09:38:33.1",
+        "period": np.nan,
+    }  # fmt: skip
+    other = row | {"p_value": 0.2, "p_empirical": 0.2, "p_is_extrapolated": False, "q_value": 0.4, "period": 3.5}
+    names, (first, second) = outcome.shown([row, other])
+    assert names[2:5] == ["p", "by controls", "q"]
+    assert first == ["a", "single", "<4.08e-05", "0.0101", "<0.000815", "1/370", "15.9", "2009-04-04T09:38:33", ""]
+    assert second[2:5] == ["0.2", "0.2", "0.4"]
+    names, (second,) = outcome.shown([other])
+    assert names[2:5] == ["p", "q", "seen/used"]
+    assert second == ["a", "single", "0.2", "0.4", "1/370", "15.9", "2009-04-04T09:38:33", "3.5"]
 
 
 def described(standing: str, *n_used: int) -> Described:
@@ -86,9 +152,10 @@ def test_reasons_of_being_undecided_are_counted_apart() -> None:
     ]  # fmt: skip
     p = p_values([np.nan, np.nan, 0.5, 0.1, np.nan, np.nan, 0.5])
     assert outcome.undecided_remarks(targets, [0, 9, 9, 9, 0, 9, 9], p, 8) == [
+        "1 target is undecided: beyond every control, and these are too few to decide, by themselves or by their tail; "
+        "more controls or fewer targets can ([controls] per_field and most_per_field)",
         "2 targets are undecided: fewer than 8 usable frames in every channel",
         "1 target is undecided: no statistic that can be ranked",
-        "1 target is undecided: too few controls to decide, and no tail can be fitted to them",
     ]
 
 

@@ -1,4 +1,4 @@
-"""Columns and their null to p-values, thresholds, tails and false-discovery rates. Pure numbers in and out.
+"""Columns and their null to p-values, thresholds and false-discovery rates. Pure numbers in and out.
 
 A target is ranked within the set of itself and its controls: every calibrated column gives each member of the set a
 rank p-value; the smallest is the member's combination, ties ordered by how far out that column lies, in the MAD of the
@@ -18,12 +18,6 @@ from scipy import special, stats
 from hindlight.lightcurve import FloatArray, IntArray
 
 MAD_TO_SIGMA = 1.482602
-TAIL_CONFIDENCE = 0.95
-FEWEST_EXCEEDANCES = 10
-TAIL_REACH = 1e-3  # of what one control weighs: no smaller chance is told by a tail, however far out a target is
-SHAPES = np.concatenate(([0.0], np.geomspace(1e-3, 5.0, 160)))
-SCALES = np.geomspace(0.02, 50.0, 400)
-LOGS_AT_ONCE = 25  # factors: no product of so many, each below the largest shape / scale * excess, overflows
 
 
 @dataclass(frozen=True, eq=False)
@@ -206,81 +200,6 @@ def controls_needed(n_targets: int, level: float, any_dependence: bool = False) 
     """
     factor = float((1.0 / np.arange(1, n_targets + 1)).sum()) if any_dependence else 1.0
     return max(1, int(np.floor(factor * n_targets / level * (1 + 1e-12))))  # the level itself is not below it
-
-
-@dataclass(frozen=True, eq=False)
-class Tail:
-    """What the largest of some controls' distances allow of the distribution beyond them.
-
-    Generalised Pareto tails, shape >= 0, that start at `start`, beyond which lies `fraction` of the controls; `shape` and
-    `scale` (n,) are those within the 95 % profile-likelihood interval of the tail probability. No chance below `least` is
-    told: beyond a few decades a fit says what form was chosen for it, and changes by orders of magnitude with a few controls.
-    """
-
-    fraction: float
-    start: float
-    shape: FloatArray
-    scale: FloatArray
-    least: float
-
-    def beyond(self, distance: float) -> float:
-        """The largest chance that any of the tails gives to lie beyond a distance, `least` at least: an upper bound."""
-        shape, scale = self.shape[:, None], self.scale[:, None]
-        chance = float(self.fraction * np.exp(-_log_terms(shape, scale, np.array([distance - self.start])).min()))
-        return max(chance, self.least)
-
-    def reached(self, chance: float) -> float:
-        """The distance beyond which that bound would be the given chance, were there no `least`."""
-        log = np.log(self.fraction / chance)
-        curved = self.shape > 0
-        shape = np.where(curved, self.shape, 1.0)
-        return float(self.start + (self.scale * np.where(curved, np.expm1(shape * log) / shape, log)).max())
-
-
-def tail_of(distances: FloatArray, exceedances: int, weight: float = 1.0) -> Tail | None:
-    """The tail of the controls' distances, shape (n,), fitted to the largest `exceedances`; None where none can be.
-
-    The bound it gives is the upper end of the 95 % profile-likelihood interval. The plain estimate (Knijnenburg et al.
-    2009, Bioinformatics 25, i161) understates heavy tails and is not used. Controls alike in groups of `weight` tell that
-    much less: more of them are used, and the likelihood counts accordingly.
-    """
-    finite = np.sort(distances[np.isfinite(distances)])[::-1]
-    m = min(round(exceedances * weight), finite.size // 4)
-    if m < FEWEST_EXCEEDANCES * weight:
-        return None
-    start = float((finite[m - 1] + finite[m]) / 2)
-    excess = finite[:m] - start
-    scale0 = float(excess.mean())
-    if scale0 <= 0:
-        return None
-    shape, scale = SHAPES[:, None], SCALES[None, :] * scale0
-    likelihood = -m * np.log(scale) - (shape + 1) * _log_terms(shape, scale, excess)
-    inside = likelihood >= likelihood.max() - weight * stats.chi2.isf(1 - TAIL_CONFIDENCE, 1) / 2
-    row, column = np.nonzero(inside)
-    return Tail(m / finite.size, start, SHAPES[row], scale[0, column], TAIL_REACH * weight / finite.size)
-
-
-def tail_bound(distances: FloatArray, target: float, exceedances: int, weight: float = 1.0) -> float:
-    """An upper bound on the chance that a control lies beyond a target that lies beyond all of them; NaN where none can be.
-
-    See `tail_of`.
-    """
-    if not target > np.max(distances, initial=-np.inf, where=np.isfinite(distances)) or not np.isfinite(target):
-        return float("nan")
-    tail = tail_of(distances, exceedances, weight)
-    return float("nan") if tail is None else tail.beyond(target)
-
-
-def _log_terms(shape: FloatArray, scale: FloatArray, excess: FloatArray) -> FloatArray:
-    """Sum over the excesses of log(1 + shape y / scale) / shape, and of y / scale where the shape is zero."""
-    ratio = shape / scale
-    logs = np.zeros(ratio.shape)
-    for start in range(0, len(excess), LOGS_AT_ONCE):  # one logarithm of a product is much faster than many
-        product = np.ones(ratio.shape)
-        for y in excess[start : start + LOGS_AT_ONCE]:
-            product *= 1.0 + ratio * y
-        logs += np.log(product)
-    return np.where(shape > 0, logs / np.where(shape > 0, shape, 1.0), excess.sum() / scale)
 
 
 def threshold(maxima: FloatArray, false_alarms: float) -> float:

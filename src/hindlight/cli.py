@@ -26,6 +26,7 @@ from hindlight import __version__
 from hindlight.errors import HindlightError, NothingToDoError, ReaderGoneError, UsageError
 from hindlight.facts import visible
 from hindlight.outlet import PipedConsole, let_go, read_by_someone
+from hindlight.wording import short as _short
 
 BEST_ROWS = 10
 LONGEST_CELL = 200
@@ -375,19 +376,13 @@ def _print_result(result: Any) -> None:
 
 
 def _candidates(title: str, rows: list[Any]) -> Table:
-    table = _simple_table(title, "name", "standing", "p", "q", "seen/used", "peak S/N", "first seen", "period (s)")
-    for row in rows:
-        _add(
-            table,
-            str(row["name"]), str(row["standing"]), _short(row["p_value"], "<" if row["p_is_extrapolated"] else ""),
-            _short(row["q_value"]), f"{row['n_detected']}/{row['n_used']}", _short(row["peak_snr"]),
-            str(row["first_detected"])[:19], _short(row["period"], digits=8),
-        )  # fmt: skip
+    from hindlight.outcome import shown
+
+    names, cells = shown(rows)
+    table = _simple_table(title, *names)
+    for row in cells:
+        _add(table, *row)
     return table
-
-
-def _short(value: Any, before: str = "", digits: int = 3) -> str:
-    return f"{before}{float(value):.{digits}g}" if np.isfinite(value) else ""
 
 
 def _print_inventory(found: Any) -> None:

@@ -16,7 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import special, stats
 
-from hindlight import calibrate, ranking
+from hindlight import calibrate, ranking, tails
 from hindlight.injection import PULSES, SMOOTH, Source, uniform
 from hindlight.judge import WHOLE, Judgement, joined, taken
 from hindlight.lifted import group_size
@@ -259,7 +259,7 @@ def _decided(rank: calibrate.Rank, bars: Bars, settings: Settings, weight: float
         return True, False
     if rank.exceeded_by > 0 or not np.isfinite(rank.p_value):
         return bool(rank.p_value < bars.final), False
-    bound = calibrate.tail_bound(rank.control_distances, rank.beyond, settings.ranking.tail_exceedances, weight)
+    bound = tails.extrapolate(rank.control_distances, rank.beyond, settings.ranking.tail_exceedances, weight).bound
     by_tail = bound < rank.p_value
     return bool((bound if by_tail else rank.p_value) < bars.final), bool(by_tail and bound < bars.final)
 

@@ -12,7 +12,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from hindlight import calibrate, ranking
+from hindlight import calibrate, ranking, tails
 from hindlight.host import Plugins
 from hindlight.judge import Judgement, full_columns, taken
 from hindlight.lifted import Lift, group_size, originals
@@ -155,7 +155,9 @@ class PValues:
     """Over all targets of the run, in order of their ids: shapes (n,).
 
     `short`: beyond every control, whose number cannot decide at the run's level; `testable`: there is a p-value that
-    can decide, from the controls or from their tail.
+    decides. That of a target that is short does only where its tail puts it below the level: a target beyond everything
+    blank that is known is not shown to be steady by there being too little of it. `tails`: what the tail of its controls says
+    of each target that is short and has one, by its place.
     """
 
     empirical: FloatArray
@@ -165,6 +167,7 @@ class PValues:
     short: NDArray[np.bool_]
     testable: NDArray[np.bool_]
     needed: int
+    tails: Mapping[int, tails.Extrapolation] = field(default_factory=dict)
 
 
 def undecided(ranks: Sequence[calibrate.Rank], settings: Settings) -> tuple[NDArray[np.bool_], int]:
@@ -186,17 +189,18 @@ def p_values(ranks: Sequence[calibrate.Rank], settings: Settings, weights: Seque
     empirical = np.array([r.p_value for r in ranks])
     short, needed = undecided(ranks, settings)
     p = empirical.copy()
-    extrapolated = np.zeros(len(ranks), dtype=bool)
-    testable = np.isfinite(empirical)
+    fitted: dict[int, tails.Extrapolation] = {}
     for index in np.flatnonzero(short).tolist():
-        bound = calibrate.tail_bound(
+        tail = tails.extrapolate(
             ranks[index].control_distances,
             ranks[index].beyond,
             settings.ranking.tail_exceedances,
             weights[index] if weights else 1.0,
         )
-        testable[index] = np.isfinite(bound)
-        if bound < p[index]:
-            p[index], extrapolated[index] = bound, True
+        if tail.n:
+            fitted[index] = tail
+        p[index] = np.fmin(p[index], tail.bound)
     q = calibrate.false_discovery(p, settings.ranking.any_dependence)
-    return PValues(empirical, p, q, extrapolated, short, testable, needed)
+    with np.errstate(invalid="ignore"):
+        testable = np.isfinite(empirical) & (~short | (q < settings.ranking.level))
+    return PValues(empirical, p, q, p < empirical, short, testable, needed, fitted)

@@ -27,7 +27,8 @@ from hindlight.ranking import FEWEST_BLANK
 from hindlight.schema import CANDIDATES, PLUGIN_FAULTS, TableColumn
 from hindlight.settings import Controls, Settings
 from hindlight.tables import astropy_table, rows_to_columns
-from hindlight.wording import from_to, how_many
+from hindlight.tails import MISFIT, Extrapolation
+from hindlight.wording import from_to, how_many, short
 
 CAUTION = (
     "A low p_value says that a position varies unlike blank sky in the same frames, not what it is. Look at the frames, "
@@ -80,12 +81,16 @@ def _full(name: str, column: Column) -> TableColumn:
 def chance_cells(found: Field, index: int, at: int, p: PValues) -> dict[str, Any]:
     """The columns of a target that come from its rank; `at` is its place among all targets of the run."""
     rank, deciding = found.ranked.ranks[index], found.ranked.deciding[index]
+    tail = p.tails.get(at, Extrapolation())
     channel, column = deciding or ("", "")
     return {
         "p_value": p.p[at],
         "q_value": p.q[at],
         "p_is_extrapolated": bool(p.extrapolated[at]),
         "p_empirical": p.empirical[at],
+        "tail_shape": tail.shape,
+        "tail_n": tail.n,
+        "tail_fit_p": tail.fit_p,
         "lowest_p_statistic": f"{column} in {channel}" if channel else column,
         "beyond_controls": rank.beyond,
         "n_controls": int(found.ranked.n_controls[index]),
@@ -113,6 +118,8 @@ def notes(found: Field, index: int, at: int, p: PValues, controls: Controls, kno
         said.append(f"{are}{counted} cannot decide at this level, {p.needed} are needed")
     if p.extrapolated[at]:
         said.append("p_value is the upper bound of a fitted tail, beyond every control")
+    if (tail := p.tails.get(at)) is not None and tail.rejected:
+        said.append(f"the tail of its controls does not fit (p = {tail.fit_p:.2g}) and is not used")
     if n_controls == 0:
         said.append("no control serves this target: no p-value")
     if (left_out := _too_unlike(found, index, controls)) > 0:
@@ -186,7 +193,10 @@ def undecided_remarks(
         if max((int(row["n_used"]) for row in said.channels), default=0) < min_frames:
             reasons[f"fewer than {min_frames} usable frames in every channel"] += 1
         elif controls:
-            few = "too few controls to decide, and no tail can be fitted to them"
+            few = (
+                "beyond every control, and these are too few to decide, by themselves or by their tail; more controls or "
+                "fewer targets can ([controls] per_field and most_per_field)"
+            )
             reasons[few if np.isfinite(empirical) else "no statistic that can be ranked"] += 1
     return [f"{how_many(n, 'target is', 'targets are')} undecided: {why}" for why, n in sorted(reasons.items())]
 
@@ -195,20 +205,11 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings, units: Mapp
     """What the last lines of a run must say; `units` are those of flux by channel."""
     said = []
     sizes = [int(n) for found in fields for n in found.ranked.n_controls]
-    placed = [int(n) for found in fields if _is_plain(found) for n in found.ranked.n_controls]
     alone = sum(size == 0 for size in sizes)
     if alone:
         has = how_many(alone, "target has", "targets have")
         said.append(f"{has} no control and so no p-value: nothing is said of their variation")
-    if placed and min(placed) < settings.controls.per_field:
-        said.append(
-            f"controls per target: {from_to(min(placed), max(placed))}, {settings.controls.per_field} were asked for; "
-            + (
-                "no more fit into the frames clear of sources and of each other"
-                if all(len(found.controls) < settings.controls.per_field for found in fields if not found.lift)
-                else "more were measured, but in fewer frames or with another noise"
-            )
-        )
+    said += [*_trial_remarks(p, fields), *_placing_remarks(fields, settings)]
     said += _search_remarks(fields, settings)
     if p.short.any():
         lie = how_many(int(p.short.sum()), "target lies", "targets lie")
@@ -224,7 +225,42 @@ def remarks(p: PValues, fields: Sequence[Field], settings: Settings, units: Mapp
     if p.extrapolated.any():
         are = how_many(int(p.extrapolated.sum()), "p-value is the upper bound", "p-values are upper bounds")
         said.append(f"{are} of a fitted tail (p_is_extrapolated)")
+    if rejected := sum(tail.rejected for tail in p.tails.values()):
+        are = how_many(rejected, "target has", "targets have")
+        said.append(
+            f"{are} controls whose tail does not fit at p < {MISFIT:g} (tail_fit_p): p_value is from ranks alone"
+        )
     return tuple(said)
+
+
+def _trial_remarks(p: PValues, fields: Sequence[Field]) -> list[str]:
+    """What was tried: how many targets q counts, and out of how many columns each one's smallest rank is."""
+    counted = int(np.isfinite(p.p).sum())
+    keys = [len(found.ranked.keys) for found in fields if found.ranked.keys]
+    if not (counted and keys):
+        return []
+    channels = {channel for found in fields for channel, _ in found.ranked.keys if channel}
+    return [
+        f"counted as trials: {how_many(counted, 'target', 'targets')} (q_value), and for each {from_to(min(keys), max(keys))} "
+        f"ranked columns in {how_many(len(channels), 'channel', 'channels')} (p_value), as for its controls"
+    ]
+
+
+def _placing_remarks(fields: Sequence[Field], settings: Settings) -> list[str]:
+    """Why there are fewer controls than were asked for; targets are in the way where they outnumber them."""
+    plain, wanted = [found for found in fields if _is_plain(found)], settings.controls.per_field
+    sizes = [int(n) for found in plain for n in found.ranked.n_controls]
+    if not sizes or min(sizes) >= wanted:
+        return []
+    said = f"controls per target: {from_to(min(sizes), max(sizes))}, {wanted} were asked for; "
+    if not all(len(found.controls) < wanted for found in fields if not found.lift):
+        return [said + "more were measured, but in fewer frames or with another noise"]
+    targets = sum(len(found.targets) for found in fields)
+    said += (
+        f"no more fit into the frames clear of sources, of {how_many(targets, 'target', 'targets')} and of each other"
+    )
+    many = targets > sum(len(found.controls) for found in plain)
+    return [said + ("; a shorter list, or one split into runs, leaves room for more" if many else "")]
 
 
 def _is_plain(found: Field) -> bool:
@@ -356,6 +392,27 @@ def summary(result: Outcome) -> str:
         f"plugin faults: {count or 'none'}" + (f" in {', '.join(names)} (plugin_faults.ecsv)" if count else "")
     )
     return "\n".join([*lines, *result.remarks, CAUTION]) + "\n"
+
+
+def shown(rows: Sequence[Mapping[str, Any]]) -> tuple[list[str], list[list[str]]]:
+    """What is printed of some rows of the candidate table: names of columns, and the cells of each row.
+
+    A p-value that is the bound of a tail is marked, its q-value too, and never stands without that of the controls beside it.
+    """
+    names = ["name", "standing", "p", "q", "seen/used", "peak S/N", "first seen", "period (s)"]
+    beside = any(row["p_is_extrapolated"] for row in rows)
+    if beside:
+        names.insert(3, "by controls")
+    cells = []
+    for row in rows:
+        mark = "<" if row["p_is_extrapolated"] else ""
+        cells.append([
+            str(row["name"]), str(row["standing"]), short(row["p_value"], mark),
+            *([short(row["p_empirical"])] if beside else []), short(row["q_value"], mark),
+            f"{row['n_detected']}/{row['n_used']}", short(row["peak_snr"]), str(row["first_detected"])[:19],
+            short(row["period"], digits=8),
+        ])  # fmt: skip
+    return names, cells
 
 
 def candidate_table(

@@ -26,7 +26,7 @@ from hindlight.trials import (
 from hindlight.wording import from_to, how_many
 
 MOST_BEYOND_ROUNDING, MOST_NONLINEAR = 0.02, 1e-6  # sigma: what pixels may differ by from light curves
-FEWEST_FOR_TAIL = 40  # controls: fewer show no tail, see `calibrate.tail_bound`
+FEWEST_FOR_TAIL = 40  # controls: fewer show no tail, see `tails.extrapolate`
 SEARCHED = (
     "target that was searched within its position error is",
     "targets that were searched within their position errors are",

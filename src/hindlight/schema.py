@@ -133,7 +133,7 @@ STANDINGS = {
     "variable": "varies beyond chance, not in separate brightenings",
     "steady": "seen, does not vary beyond chance, and enough frames to say so",
     "unseen": "enough frames, never seen, not even in the mean",
-    "undecided": "too few usable frames to say",
+    "undecided": "too few usable frames, or too few controls, to say",
     "uncovered": "no usable frame",
 }
 
@@ -505,8 +505,29 @@ CANDIDATES = (
     ),
     TableColumn("null", "what these controls are: blank sky, or blank sky made as bright as the target", dtype="str"),
     TableColumn("unlike", "largest factor between the typical error of the target and of one of its controls"),
-    TableColumn("p_empirical", "p_value before any extrapolation: (r+1)/(n+1)", ucd="stat.probability"),
-    TableColumn("beyond_controls", "distance of the combination beyond the controls, in their MAD", ucd="stat.value"),
+    TableColumn(
+        "p_empirical",
+        "p_value before any extrapolation: (r + w) / (n + w) for r of n controls as far out, w of which count as one "
+        "(n_controls / n_effective)",
+        ucd="stat.probability",
+    ),
+    TableColumn(
+        "tail_shape",
+        "most likely shape (0 exponential, larger heavier) of the tail of its controls; NaN where none was fitted",
+        ucd="stat.fit.param",
+    ),
+    TableColumn("tail_n", "controls that tail was fitted to; 0 for none", dtype="int64", ucd="meta.number"),
+    TableColumn(
+        "tail_fit_p",
+        "chance that controls of such a tail are as unlike it; below 0.01 it is not used; NaN where none was fitted",
+        ucd="stat.fit.goodness",
+    ),
+    TableColumn(
+        "beyond_controls",
+        "distance of the deciding value from the middle of the controls, in their MAD; beyond them only where p_empirical is "
+        "at its floor",
+        ucd="stat.value",
+    ),
     TableColumn("notes", "what a reader should know before trusting the row", dtype="str", ucd="meta.note"),
     TableColumn(
         "found_ra", "where it was judged, if searched within its position error, ICRS", unit="deg", ucd="pos.eq.ra"

@@ -2,10 +2,17 @@
 
 from __future__ import annotations
 
+import math
+
 
 def how_many(count: int, one: str, several: str) -> str:
     """A count with the noun, and the verb where there is one, that go with it: '1 target was', '3 targets were'."""
     return f"{count} {one if count == 1 else several}"
+
+
+def short(value: float, before: str = "", digits: int = 3) -> str:
+    """A number with so many digits behind a mark; '' where there is none."""
+    return f"{before}{float(value):.{digits}g}" if math.isfinite(value) else ""
 
 
 def from_to(low: float, high: float, form: str = "") -> str:
