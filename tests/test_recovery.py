@@ -335,3 +335,20 @@ def test_mistakes_end_with_one_line(archive, tmp_path, capsys):
         assert len(lines) == 1, lines
         assert words in lines[0]
     assert cli.run_command(["plugins", "--power", "x", "--check", "y"]) == 2
+
+
+def test_an_error_inside_leaves_its_traceback_in_the_log(archive, tmp_path, monkeypatch, capsys):
+    """Both commands say that it is there, and it is."""
+    shutil.copytree(archive / "run", tmp_path / "run")
+
+    def broken(*_args, **_kwargs):
+        raise ZeroDivisionError("planted")
+
+    monkeypatch.setattr(recovery, "study_of", broken)
+    for command in (["completeness", tmp_path / "run"], ["plugins", "--power", tmp_path / "run"]):
+        (tmp_path / "run" / "log.txt").unlink(missing_ok=True)
+        assert cli.run_command([str(a) for a in [*command, "-q"]]) == 1
+        assert "the traceback is in the run's log.txt" in capsys.readouterr().err
+        said = (tmp_path / "run" / "log.txt").read_text(encoding="utf-8")
+        assert "Traceback" in said
+        assert "ZeroDivisionError: planted" in said

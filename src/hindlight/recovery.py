@@ -83,7 +83,7 @@ def recover(asked: Asked, watcher: Watcher) -> Report:
     """
     run, order, plugins = opened(asked)
     ephemerides = read_targets(asked.targets) if asked.targets is not None else None
-    with run.locked(), assembled(asked.workers, None, is_small(run, order.settings)) as crew:
+    with run.locked(), record.logged(run), assembled(asked.workers, None, is_small(run, order.settings)) as crew:
         study = study_of(run, order, plugins, crew, watcher, subsets_of)
         nulls, units = _nulls(study)
         wanted = _wanted(study, nulls)
@@ -103,7 +103,7 @@ def recover(asked: Asked, watcher: Watcher) -> Report:
 def report_cards(asked: Asked, watcher: Watcher) -> tuple[list[Power], tuple[str, ...]]:
     """The power of each statistic alone on made-up sources in all frames of a run, and what is to be said of it."""
     run, order, plugins = opened(asked, with_new=True)
-    with run.locked(), assembled(asked.workers, None, is_small(run, order.settings)) as crew:
+    with run.locked(), record.logged(run), assembled(asked.workers, None, is_small(run, order.settings)) as crew:
         study = study_of(run, order, plugins, crew, watcher, lambda frames: [all_frames(frames)])
         nulls, units = _nulls(study)
         wanted = _wanted(study, nulls)
