@@ -312,7 +312,7 @@ def test_too_few_controls_say_so(tmp_path):
         assert cli.run_command(command) == status
     said = (tmp_path / "run10" / "completeness.txt").read_text(encoding="utf-8")
     assert "too few controls for 30 of 30 sources" in said
-    assert "at 10 controls of 1 field\n" in said
+    assert "at 10 controls of 1 field, measured as often as targets\n" in said
     assert not Table.read(tmp_path / "run10" / "completeness.ecsv")["n_recovered"].any()
 
 

@@ -11,6 +11,7 @@ import numpy as np
 from hindlight import completeness, injection, planted
 from hindlight.completeness import Found, Injection, Looks, Null
 from hindlight.duplicates import counts
+from hindlight.hiding import Places, places_said
 from hindlight.lightcurve import FloatArray
 from hindlight.order import book
 from hindlight.schema import COMPLETENESS, COMPLETENESS_LIMITS, COMPLETENESS_TARGETS
@@ -54,17 +55,21 @@ def metadata(study: Study, units: Mapping[str, float]) -> dict[str, Any]:
 
 
 def completeness_table(
-    study: Study, wanted: Sequence[Injection], outcomes: Mapping[str, Outcomes], meta: Mapping[str, Any]
-) -> astropy.table.Table:
-    """completeness.ecsv."""
-    of_cell = np.array([one.cell for one in wanted])
+    study: Study, at: Mapping[str, Places], wanted: Mapping[str, Sequence[Injection]], outcomes: Mapping[str, Outcomes],
+    meta: Mapping[str, Any],
+) -> astropy.table.Table:  # fmt: skip
+    """completeness.ecsv; a subset without sources has no row."""
     rows = []
     for subset in study.subsets:
-        outcome = outcomes[subset.name]
+        if subset.name not in outcomes:
+            continue
+        outcome, there = outcomes[subset.name], at[subset.name]
+        of_cell = np.array([one.cell for one in wanted[subset.name]])
         for number, cell in enumerate(study.cells):
             row = {
                 "subset": subset.name, "instrument": subset.instrument, "decade": subset.decade,
-                "n_frames": len(subset.frames), "kind": cell.kind, "flux": cell.flux, "period": cell.period_s,
+                "n_frames": len(subset.frames), "n_fields": there.n_fields, "n_targets": there.n_targets,
+                "n_hosts": len(there.ids), "kind": cell.kind, "flux": cell.flux, "period": cell.period_s,
                 "duty_cycle": cell.duty_cycle, "duration": cell.duty_cycle * cell.period_s,
                 "window": cell.window * cell.duty_cycle * cell.period_s, "missing": cell.missing,
             }  # fmt: skip
@@ -148,18 +153,24 @@ def _target_row(
 
 
 def remarks(
-    study: Study, nulls: Mapping[int, Mapping[str, Null]], found: Found, targets: astropy.table.Table
+    study: Study,
+    nulls: Mapping[int, Mapping[str, Null]],
+    at: Mapping[str, Places],
+    found: Found,
+    targets: astropy.table.Table,
 ) -> tuple[str, ...]:
     """What holds for the tables as a whole; `found` is what became of the sources in all frames."""
     chosen = study.settings.completeness
     lit = any(null.brighter for of_field in nulls.values() for null in of_field.values())
+    n_subsets = sum(bool(len(one.ids)) for one in at.values())
     said = [
-        f"{len(study.cells)} cells of {chosen.per_cell} sources each in {len(study.subsets)} subsets of frames, at "
-        f"{sum(len(f.ids) for f in study.fields)} controls of {how_many(len(study.fields), 'field', 'fields')}",
+        f"{len(study.cells)} cells of {chosen.per_cell} sources each in {n_subsets} subsets of frames, at "
+        f"{len(at[ALL].ids)} controls of {how_many(at[ALL].n_fields, 'field', 'fields')}, measured as often as targets",
         f"recovered means: p below {study.bars.final:.3g}, which the run's own p-values leave for one more target at a "
         f"false-discovery rate of {study.settings.ranking.level:g}; what checks would say of it is not asked",
         "a source has the same flux in median frame errors in every channel; channels of Stokes Q, U, V get none",
     ]
+    said += places_said(at)
     if not chosen.period_search:
         said.append("period searches are left out, of sources and controls alike ([completeness] period_search)")
     elif lit:

@@ -23,6 +23,7 @@ from hindlight.crew import assembled
 from hindlight.duplicates import counts
 from hindlight.errors import NothingToDoError
 from hindlight.fence import call
+from hindlight.hiding import Places, hidden, places
 from hindlight.lifted import copies
 from hindlight.lightcurve import FloatArray, IntArray, LightCurve
 from hindlight.order import book
@@ -37,6 +38,7 @@ from hindlight.trials import (
     EXTRA,
     Outcomes,
     Subset,
+    count_frames,
     curves_of,
     judge_controls,
     judge_copies,
@@ -86,13 +88,14 @@ def recover(asked: Asked, watcher: Watcher) -> Report:
     with run.locked(), record.logged(run), assembled(asked.workers, None, is_small(run, order.settings)) as crew:
         study = study_of(run, order, plugins, crew, watcher, subsets_of)
         nulls, units = _nulls(study)
-        wanted = _wanted(study, nulls)
+        at = _places(study, nulls)
+        wanted = {name: hidden(study.cells, one, study.settings.completeness) for name, one in at.items()}
         outcomes = _outcomes(study, wanted, nulls, units, with_plugins=False)
         proofs = _proofs(study)
         meta = {**metadata(study, units), "run_state": record.state(run, order.settings, plugins)}
-        table = completeness_table(study, wanted, outcomes, meta)
+        table = completeness_table(study, at, wanted, outcomes, meta)
         targets, limits = target_tables(study, run, table, ephemerides, meta)
-    said = (*remarks(study, nulls, outcomes[ALL].found, targets), *proof_remarks(proofs), UPPER_BOUND)
+    said = (*remarks(study, nulls, at, outcomes[ALL].found, targets), *proof_remarks(proofs), UPPER_BOUND)
     for name, made in (("completeness_limits", limits), ("completeness_targets", targets), ("completeness", table)):
         for ending in (".fits", ".vot", ".ecsv"):
             write_table(run.file(f"{name}{ending}"), made)
@@ -106,8 +109,8 @@ def report_cards(asked: Asked, watcher: Watcher) -> tuple[list[Power], tuple[str
     with run.locked(), record.logged(run), assembled(asked.workers, None, is_small(run, order.settings)) as crew:
         study = study_of(run, order, plugins, crew, watcher, lambda frames: [all_frames(frames)])
         nulls, units = _nulls(study)
-        wanted = _wanted(study, nulls)
-        outcome = _outcomes(study, wanted, nulls, units, with_plugins=True)[ALL]
+        wanted = hidden(study.cells, _places(study, nulls)[ALL], study.settings.completeness)
+        outcome = _outcomes(study, {ALL: wanted}, nulls, units, with_plugins=True)[ALL]
         asks: list[Statistic | PeriodSearch] = [
             *plugins.statistics,
             *(plugins.period_searches if order.settings.completeness.period_search else ()),
@@ -174,7 +177,7 @@ def _with_brighter(
     """The nulls with those of sources that are bright in single frames."""
     left = residuals(study.order)
     ladder = brighter.rungs(study.cells, units, left, study.settings)
-    n_targets = len(study.used_by_target) + 1
+    n_targets = study.n_targets + 1
     jobs, places = [], []
     for found in study.fields:
         for rung in ladder:
@@ -223,55 +226,73 @@ def _search_nulls(study: Study, nulls: Mapping[int, Mapping[str, Null]]) -> None
         judge.spread(null.judgement, result, passes, study.columns)
 
 
-def _wanted(study: Study, nulls: Mapping[int, Mapping[str, Null]]) -> list[Injection]:
-    """The made-up sources: as often for each target, at any of the controls that are measured as well as it is.
+def _places(study: Study, nulls: Mapping[int, Mapping[str, Null]]) -> dict[str, Places]:
+    """Where sources are hidden in each subset.
 
-    Raises `NothingToDoError` where no target has such a control.
+    Raises `NothingToDoError` where no target has a control that is measured as well as it is.
     """
-    hosts = np.concatenate([found.ids for found in study.fields])
-    weights = np.concatenate([_like_targets(study, found, nulls[found.number][ALL]) for found in study.fields])
-    if not weights.any():
-        raise NothingToDoError("no target has a control that is measured in as many frames: nothing can be said")
-    return completeness.drawn(study.cells, hosts, weights, study.settings.completeness)
-
-
-def _like_targets(study: Study, found: FieldControls, null: Null) -> FloatArray:
-    """For each control of a field the number of targets it stands for, shape (n,): each is shared by those like it."""
-    used = completeness.used_frames(null.judgement)
+    size = study.settings.ranking.gather_curves
+    groups = [
+        (f.targets[k : k + size], f.target_ids[k : k + size])
+        for f in study.fields
+        for k in range(0, len(f.targets), size)
+    ]
+    counted = study.each("counting frames of targets", count_frames, [(ids, study.subsets) for _, ids in groups])
     share = study.settings.controls.shared_frames
-    weight = np.zeros(len(found.ids))
-    for name in found.targets:
-        mine = study.used_by_target.get(name, {})
-        like = np.ones(len(found.ids), bool)
-        for label, n_used in mine.items():
-            like &= used.get(label, np.zeros(len(found.ids))) >= share * n_used
-        if like.any() and sum(mine.values()) > 0:
-            weight += like / like.sum()
-    return weight
+    at = {}
+    for subset in study.subsets:
+        used = {
+            name: {label: int(n[row]) for label, n in result[subset.name].items()}
+            for (names, _), result in zip(groups, counted, strict=True)
+            for row, name in enumerate(names)
+        }
+        there = {number: of_field[subset.name] for number, of_field in nulls.items()}
+        at[subset.name] = places(study.fields, used, there, share)
+    if not len(at[ALL].ids):
+        raise NothingToDoError("no target has a control that is measured in as many frames: nothing can be said")
+    return at
 
 
 def _outcomes(
-    study: Study, wanted: Sequence[Injection], nulls: Mapping[int, Mapping[str, Null]], units: Mapping[str, float],
-    with_plugins: bool,
+    study: Study, wanted: Mapping[str, Sequence[Injection]], nulls: Mapping[int, Mapping[str, Null]],
+    units: Mapping[str, float], with_plugins: bool,
 ) -> dict[str, Outcomes]:  # fmt: skip
-    """What becomes of every source, by subset."""
-    hosts = np.array([one.host for one in wanted])
-    places, jobs = [], []
+    """What becomes of every source, by subset; subsets without sources are left out."""
+    at: list[Mapping[str, IntArray]] = []
+    jobs = []
     for found in study.fields:
-        mine = np.flatnonzero(np.isin(hosts, found.ids))
-        mine = mine[np.argsort(hosts[mine], kind="stable")]  # those at one control share its null
-        for start in range(0, len(mine), INJECTIONS_AT_ONCE):
-            part = mine[start : start + INJECTIONS_AT_ONCE]
-            places.append(part)
-            jobs.append((
-                [wanted[i] for i in part], study.cells, units, study.subsets, nulls[found.number], study.bars, with_plugins
-            ))  # fmt: skip
+        for part in _pieces(wanted, found.ids):
+            here = {name: [wanted[name][i] for i in numbers] for name, numbers in part.items()}
+            at.append(part)
+            jobs.append((here, study.cells, units, study.subsets, nulls[found.number], study.bars, with_plugins))
     results = study.each("judging made-up sources", judge_injected, jobs)
-    back = np.argsort(np.concatenate(places))
-    return {
-        subset.name: _joined([result[number] for result in results], back)
-        for number, subset in enumerate(study.subsets)
-    }
+    outcomes = {}
+    for name in wanted:
+        mine = [(part[name], result[name]) for part, result in zip(at, results, strict=True) if name in result]
+        if mine:
+            back = np.argsort(np.concatenate([numbers for numbers, _ in mine]))
+            outcomes[name] = _joined([outcome for _, outcome in mine], back)
+    return outcomes
+
+
+def _pieces(wanted: Mapping[str, Sequence[Injection]], ids: IntArray) -> list[dict[str, IntArray]]:
+    """The sources at these controls in pieces of work: numbers of sources by subset.
+
+    Those at one control are together and next to each other, since they share its null.
+    """
+    hosts = {name: np.array([one.host for one in mine], np.int64) for name, mine in wanted.items()}
+    n_at = sum((np.bincount(np.searchsorted(ids, h[np.isin(h, ids)]), minlength=len(ids)) for h in hosts.values()), 0)
+    piece = (np.cumsum(n_at) - n_at) // (INJECTIONS_AT_ONCE * max(1, len(hosts)))
+    found = []
+    for number in np.unique(piece).tolist():
+        part = {}
+        for name, h in hosts.items():
+            mine = np.flatnonzero(np.isin(h, ids[piece == number]))
+            if len(mine):
+                part[name] = mine[np.argsort(h[mine], kind="stable")]
+        if part:
+            found.append(part)
+    return found
 
 
 def _joined(parts: Sequence[Outcomes], back: IntArray) -> Outcomes:

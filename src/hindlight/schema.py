@@ -522,6 +522,11 @@ COMPLETENESS = (
     TableColumn("instrument", "instrument, empty for all", dtype="str", ucd="meta.id;instr"),
     TableColumn("decade", "such as 1990s, empty for all", dtype="str"),
     TableColumn("n_frames", "frames of the subset", dtype="int64", ucd="meta.number;obs"),
+    TableColumn("n_fields", "fields in which it has looked at targets", dtype="int64", ucd="meta.number"),
+    TableColumn(
+        "n_targets", "targets it has looked at, which sources stand for alike", dtype="int64", ucd="meta.number"
+    ),
+    TableColumn("n_hosts", "controls as often measured, where sources are hidden", dtype="int64", ucd="meta.number"),
     TableColumn("kind", "pulses, smooth, or nothing (no source: false alarms)", dtype="str", ucd="meta.code.class"),
     TableColumn("flux", "peak flux in median frame errors of each channel; the table says these", ucd="phot.flux"),
     TableColumn("period", "period, NaN for no source", unit="s", ucd="time.period"),

@@ -39,12 +39,16 @@ SMALL_WORK = 20_000_000  # frames times positions judged; up to this many the wo
 
 @dataclass(frozen=True, eq=False)
 class FieldControls:
-    """The controls of one field, ids ascending, and where they are (ICRS unit vectors); the names of its targets."""
+    """The controls of one field, ids ascending, and where they are (ICRS unit vectors); the names and ids of its targets.
+
+    Target ids are ascending.
+    """
 
     number: int
     ids: IntArray
     vectors: FloatArray
     targets: tuple[str, ...]
+    target_ids: IntArray
 
 
 @dataclass(frozen=True)
@@ -60,7 +64,7 @@ class Asked:
 
 @dataclass(frozen=True, eq=False)
 class Study:
-    """What every stage needs; `used_by_target` says how many frames of each channel each target has."""
+    """What every stage needs; `n_targets` are those with a frame."""
 
     order: Order
     plugins: host.Plugins
@@ -72,7 +76,7 @@ class Study:
     cells: Sequence[Cell]
     bars: Bars
     columns: Mapping[str, Column]
-    used_by_target: Mapping[str, Mapping[str, int]]
+    n_targets: int
 
     @property
     def settings(self) -> Settings:
@@ -141,11 +145,9 @@ def study_of(
     asked = plugins.period_searches if order.settings.completeness.period_search else ()
     columns = judge.full_columns([*plugins.statistics, *asked])
     cells = completeness.grid(order.settings.completeness)
-    used: dict[str, dict[str, int]] = {}
-    for row in read_ecsv(run.file("channels.ecsv")):
-        used.setdefault(str(row["name"]), {})[str(row["channel"])] = int(row["n_used"])
+    n_targets = len({str(name) for name in read_ecsv(run.file("channels.ecsv"))["name"]})
     return Study(
-        order, plugins, crew, watcher, tables.frames, fields, chosen(tables.frames), cells, bars, columns, used
+        order, plugins, crew, watcher, tables.frames, fields, chosen(tables.frames), cells, bars, columns, n_targets
     )
 
 
@@ -157,8 +159,10 @@ def fields_of(positions: Columns) -> list[FieldControls]:
         here = first_controls(positions) & (positions["field"] == number)
         order = np.argsort(positions["id"][here])
         vectors = unit_vectors(positions["ra"][here], positions["dec"][here])[order]
-        names = tuple(positions["name"][is_target & (positions["field"] == number)].tolist())
-        found.append(FieldControls(int(number), positions["id"][here][order], vectors, names))
+        mine = np.flatnonzero(is_target & (positions["field"] == number))
+        mine = mine[np.argsort(positions["id"][mine])]
+        names = tuple(positions["name"][mine].tolist())
+        found.append(FieldControls(int(number), positions["id"][here][order], vectors, names, positions["id"][mine]))
     return found
 
 

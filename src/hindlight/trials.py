@@ -10,6 +10,7 @@ from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from hindlight import completeness, host, injection, judge, photometry, planted, store
 from hindlight.companions import as_listed
@@ -81,31 +82,56 @@ def search_controls(order: Order, ids: IntArray, subset: Subset) -> judge.Judgem
     return judge.search(curves_of(blocks), host.load(order.plugins).period_searches)
 
 
+def count_frames(order: Order, ids: IntArray, subsets: Sequence[Subset]) -> dict[str, dict[str, IntArray]]:
+    """How many usable frames these positions (ascending ids) have, shape (n,), by subset and channel."""
+    blocks = position_blocks(order, ids)["blocks"]
+    return {
+        subset.name: {label: _usable(block).sum(axis=1) for label, block in _within(blocks, subset).items()}
+        for subset in subsets
+    }
+
+
 def judge_injected(
-    order: Order, wanted: Sequence[Injection], cells: Sequence[Cell], units: Mapping[str, float],
+    order: Order, wanted: Mapping[str, Sequence[Injection]], cells: Sequence[Cell], units: Mapping[str, float],
     subsets: Sequence[Subset], nulls: Mapping[str, Null], bars: Bars, with_plugins: bool,
-) -> list[Outcomes]:  # fmt: skip
-    """What becomes of sources at controls of one field, in each subset; `units` are fluxes of 1 by channel."""
+) -> dict[str, Outcomes]:  # fmt: skip
+    """What becomes of sources at controls of one field, `wanted` by subset; `units` are fluxes of 1 by channel."""
+    ids = np.unique([one.host for mine in wanted.values() for one in mine])
+    plain = position_blocks(order, ids)["blocks"]
+    return {
+        subset.name: _become(
+            order,
+            wanted[subset.name],
+            cells,
+            units,
+            _within(plain, subset),
+            ids,
+            nulls[subset.name],
+            bars,
+            with_plugins,
+        )
+        for subset in subsets
+        if wanted.get(subset.name)
+    }
+
+
+def _become(
+    order: Order, wanted: Sequence[Injection], cells: Sequence[Cell], units: Mapping[str, float],
+    plain: Mapping[str, Block], ids: IntArray, null: Null, bars: Bars, with_plugins: bool,
+) -> Outcomes:  # fmt: skip
+    """The same in one subset, whose frames `plain` has at the controls `ids`."""
     hosts = np.array([one.host for one in wanted])
-    ids = np.unique(hosts)
+    rows = np.searchsorted(ids, hosts)
     plugins = host.load(order.plugins)
     columns = judge.full_columns([*plugins.statistics, *plugins.period_searches])
-    plain = position_blocks(order, ids)["blocks"]
-    made = {
-        label: _injected(order, block, np.searchsorted(ids, hosts), wanted, cells, units[label])
-        for label, block in plain.items()
-    }
+    made = {label: _injected(order, block, rows, wanted, cells, units[label]) for label, block in plain.items()}
+    blocks = {label: block for label, (block, _) in made.items()}
+    judged = judge.judge(blocks, plugins.statistics)
+    if order.settings.completeness.period_search and plugins.period_searches:
+        _search_gated(judged, hosts, null, blocks, columns, order.settings, plugins)
     asked = [*plugins.statistics, *plugins.period_searches] if with_plugins else []
-    outcomes = []
-    for subset in subsets:
-        blocks = _within({label: block for label, (block, _) in made.items()}, subset)
-        judged = judge.judge(blocks, plugins.statistics)
-        null = nulls[subset.name]
-        if order.settings.completeness.period_search and plugins.period_searches:
-            _search_gated(judged, hosts, null, blocks, columns, order.settings, plugins)
-        became = completeness.found(judged, hosts, null, columns, bars, order.settings, asked)
-        outcomes.append(Outcomes(became, _extra(plain, made, np.searchsorted(ids, hosts), subset)))
-    return outcomes
+    became = completeness.found(judged, hosts, null, columns, bars, order.settings, asked)
+    return Outcomes(became, _extra(plain, made, rows))
 
 
 def plant_in_frame(order: Order, frame: int, controls: IntArray) -> planted.Proof | None:
@@ -161,6 +187,11 @@ def _within(blocks: Mapping[str, Block], subset: Subset) -> dict[str, Block]:
     return {label: injection.restricted(block, kept[label]) for label, block in blocks.items() if kept[label].any()}
 
 
+def _usable(block: Block) -> NDArray[np.bool_]:
+    """Where a block has usable samples, shape (n, n_frames), by the rule of `LightCurve.from_arrays`."""
+    return np.isfinite(block.flux) & np.isfinite(block.flux_err) & (block.flux_err > 0)
+
+
 def _typical(flux_err: FloatArray) -> FloatArray:
     """The median error of each row, NaN where there is none."""
     return np.array([np.median(row[np.isfinite(row)]) if np.isfinite(row).any() else np.nan for row in flux_err])
@@ -198,14 +229,13 @@ def _injected(
 
 
 def _extra(
-    plain: Mapping[str, Block], made: Mapping[str, tuple[Block, FloatArray]], rows: IntArray, subset: Subset
+    plain: Mapping[str, Block], made: Mapping[str, tuple[Block, FloatArray]], rows: IntArray
 ) -> dict[str, FloatArray]:
     """Of each source the highest S/N that was added to a frame, how many frames it lit, and how many could be used."""
     highest, lit, used = np.zeros((3, len(rows)))
     for label, block in plain.items():
-        here = np.isin(block.frame, subset.frames) if subset.name != ALL else np.ones(len(block.frame), bool)
-        error = block.flux_err[rows][:, here]
-        snr = np.where(np.isfinite(error), made[label][1][:, here] / error, 0.0)
+        error = block.flux_err[rows]
+        snr = np.where(np.isfinite(error), made[label][1] / error, 0.0)
         highest = np.maximum(highest, snr.max(axis=1, initial=0.0))
         lit += (snr > 1.0).sum(axis=1)
         used += np.isfinite(error).sum(axis=1)

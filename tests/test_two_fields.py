@@ -1,0 +1,92 @@
+"""Completeness of an archive of two fields that share no instrument: each is asked about the field it has looked at."""
+
+import numpy as np
+import pytest
+
+import skies
+from hindlight import cli, completeness, hiding, recovery
+from hindlight.judge import Judgement
+from hindlight.study import Asked, FieldControls
+
+GRID = """[completeness]
+per_cell = 8
+fluxes = [2.0, 60.0]
+pulse_periods = [1200.0]
+duty_cycles = [0.3]
+smooth_periods = [864000.0]
+pixels = 0
+"""
+RUN = "[controls]\nper_field = 60\n[ranking]\nlevel = 0.2\n"
+DEEP = skies.Sky("deep", n_frames=30, size=90, ra=150.0, first_day=50000.0, last_day=51000.0)
+SHALLOW = skies.Sky("shallow", n_frames=10, size=90, ra=152.0, first_day=50000.0, last_day=51000.0)
+ELSEWHERE = skies.Sky("elsewhere", n_frames=9, size=90, ra=155.0, first_day=50000.0, last_day=51000.0)
+
+
+@pytest.fixture(scope="module")
+def archive(tmp_path_factory):
+    """A field of 30 frames by one instrument, one of 10 by another, two blank targets in each; and a third unasked field."""
+    folder = tmp_path_factory.mktemp("two")
+    lines = ["name,ra,dec"]
+    for number, sky in enumerate((DEEP, SHALLOW, ELSEWHERE)):
+        skies.write_sky(folder / "frames", sky, [], number + 1, prefix=f"{sky.instrument}-")
+        if sky is not ELSEWHERE:
+            blank = skies.lattice(2, 150.0, sky.instrument)
+            lines += skies.target_text(blank, sky).splitlines()[1:]
+    (folder / "targets.csv").write_text("\n".join(lines) + "\n", encoding="utf-8")
+    (folder / "s.toml").write_text(RUN, encoding="utf-8")
+    (folder / "grid.toml").write_text(GRID, encoding="utf-8")
+    command = ["mine", folder / "frames", "--targets", folder / "targets.csv", "--out", folder / "run",
+               "--settings", folder / "s.toml", "--workers", 1, "-q"]  # fmt: skip
+    assert cli.run_command([str(a) for a in command]) == 0
+    return folder
+
+
+@pytest.fixture(scope="module")
+def report(archive):
+    """What `completeness` makes of the run."""
+    return recovery.recover(Asked(archive / "run", archive / "grid.toml", workers=1), cli._Silent())
+
+
+def test_an_instrument_is_asked_about_the_targets_it_has_looked_at(report):
+    """All its sources lie where it has frames: those that are bright and smooth are found, all of them."""
+    table = report.table
+    assert set(table["subset"]) == {"all", "deep", "deep 1990s", "shallow", "shallow 1990s"}
+    for name, fields, targets, frames in (("deep", 1, 2, 30), ("shallow", 1, 2, 10), ("all", 2, 4, None)):
+        mine = table[table["subset"] == name]
+        assert set(mine["n_fields"]) == {fields}
+        assert set(mine["n_targets"]) == {targets}
+        assert set(mine["n_injected"]) == {8}
+        bright = mine[(mine["kind"] == "smooth") & (mine["flux"] == 60.0)]
+        assert bright["n_recovered"].tolist() == bright["n_injected"].tolist()
+        if frames:
+            assert (mine["median_used"] == frames).all()
+
+
+def test_what_a_subset_has_not_looked_at_is_said(report):
+    """Which subsets tell of some fields only, and which of none."""
+    said = "\n".join(report.remarks)
+    assert "deep (1 of 2 fields, 2 targets)" in said
+    assert "no target has frames, and controls with as many, in elsewhere, elsewhere 1990s: left out" in said
+    assert "in 5 subsets of frames" in said
+
+
+def test_report_cards_of_two_fields(archive, capsys):
+    """Power is told, too, and with periods searched nothing breaks."""
+    cards, _ = recovery.report_cards(Asked(archive / "run", archive / "grid.toml", workers=1), cli._Silent())
+    assert next(card for card in cards if card.plugin == "chi_square").power["smooth"] > 0.4
+    searching = archive / "searching.toml"
+    searching.write_text(GRID.replace("per_cell = 8", "per_cell = 1") + "period_search = true\n", encoding="utf-8")
+    assert cli.run_command(["completeness", str(archive / "run"), "--settings", str(searching), "-q"]) == 0
+
+
+def test_each_target_counts_once():
+    """A target with two controls like it gives each a half; one without a frame, or without a control like it, none."""
+    null = completeness.Null(
+        np.arange(3), np.ones((3, 3), bool), Judgement(3, {("a", "core_n_used"): np.array([10, 9, 2])}), {}
+    )
+    found = FieldControls(7, np.arange(3), np.zeros((3, 3)), ("t", "none", "most"), np.arange(3))
+    used = {"t": {"a": 10}, "none": {"a": 0}, "most": {"a": 99}}
+    assert hiding.like_targets(found, used, null, 0.9).tolist() == [0.5, 0.5, 0.0]
+    at = hiding.places([found], used, {7: null}, 0.9)
+    assert (at.ids.tolist(), at.n_fields, at.n_targets) == ([0, 1], 1, 1)
+    assert hiding.places([found], {}, {7: null}, 0.9).n_fields == 0
