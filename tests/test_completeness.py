@@ -198,14 +198,6 @@ def test_completeness_agrees_with_simulated_archives():
     assert 0.1 < made[:, 0].mean() < 0.95, "a cell that is always or never found would agree by itself"
 
 
-def test_between_fluxes_of_the_grid():
-    """Linear in the logarithm of the flux, nothing outside."""
-    grid, found = np.array([1.0, 10.0, 100.0]), np.array([0.0, 0.5, 1.0])
-    assert completeness.between(10**0.5, grid, found) == pytest.approx(0.25)
-    assert np.isnan(completeness.between(1000.0, grid, found))
-    assert np.isnan(completeness.between(np.nan, grid, found))
-
-
 def test_bright_sources_are_ranked_as_a_run_ranks_bright_targets():
     """Calibration leaves a tenth, ten comparisons tell of it: found as seldom as targets are, not as often as by blank sky."""
     cell, archive = Cell(SMOOTH, 12.0, 8.64e6), (80, 24, 0.05, 0.1, 10)

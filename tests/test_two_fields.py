@@ -70,6 +70,29 @@ def test_what_a_subset_has_not_looked_at_is_said(report):
     assert "in 5 subsets of frames" in said
 
 
+def test_a_target_is_compared_with_sources_in_as_many_frames(report):
+    """An unseen target of either field with faint sources in that field, though both are among all frames."""
+    assert len(report.targets) == 4
+    for row in report.targets:
+        assert row["like_frames"] == (30 if row["name"].startswith("deep") else 10)
+        assert 3 <= row["like_sources"] <= 8
+        assert row["found_low"] <= row["found_probability"] <= row["found_high"]
+        assert 0 < row["found_probability"] < 1
+
+
+def test_what_was_measured_of_sources_is_in_the_table(report):
+    """Errors have 5 % of the flux in them where no comparison ties the scale: 60 sigma are 60 / (1 + 3^2)^(1/2) in a frame.
+
+    It is seen in most frames, what is not there in none.
+    """
+    bright = report.table[(report.table["kind"] == "smooth") & (report.table["flux"] == 60.0)]
+    assert np.asarray(bright["median_peak"]) == pytest.approx(60 / 10**0.5, rel=0.05)
+    assert np.all(np.asarray(bright["median_detected"]) > 0.6 * np.asarray(bright["median_used"]))
+    nothing = report.table[report.table["kind"] == "nothing"]
+    assert np.all((np.asarray(nothing["median_peak"]) > 0.5) & (np.asarray(nothing["median_peak"]) < 5))
+    assert not np.asarray(nothing["median_detected"]).any()
+
+
 def test_report_cards_of_two_fields(archive, capsys):
     """Power is told, too, and with periods searched nothing breaks."""
     cards, _ = recovery.report_cards(Asked(archive / "run", archive / "grid.toml", workers=1), cli._Silent())

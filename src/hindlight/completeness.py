@@ -304,7 +304,7 @@ def _own_p(among: Ranked, plugin: Plugin, columns: Mapping[str, Column], weight:
     return np.array(p)
 
 
-def jeffreys(k: int, n: int, confidence: float = CONFIDENCE) -> tuple[float, float]:
+def jeffreys(k: float, n: int, confidence: float = CONFIDENCE) -> tuple[float, float]:
     """The interval of a binomial fraction: Beta(k + 1/2, n - k + 1/2), from 0 where k = 0, to 1 where k = n.
 
     Brown, Cai & DasGupta 2001 (Stat. Sci. 16, 101), eq. 6 and 7.
@@ -421,14 +421,6 @@ def flux_limit(looks: Looks, duty_cycle: float) -> float:
         middle = (low + high) / 2
         low, high = (low, middle) if excluded(middle) else (middle, high)
     return high
-
-
-def between(flux: float, fluxes: FloatArray, completeness: FloatArray) -> float:
-    """Completeness at a flux, linear in its logarithm between those of the grid (ascending, > 0); NaN outside them."""
-    known = fluxes > 0
-    if not (np.isfinite(flux) and flux > 0 and known.any()):
-        return float("nan")
-    return float(np.interp(np.log(flux), np.log(fluxes[known]), completeness[known], left=np.nan, right=np.nan))
 
 
 def summary_row(mine: Mask, outcome: Found, extra: Mapping[str, FloatArray]) -> dict[str, Any]:

@@ -8,10 +8,11 @@ from typing import Any
 import astropy.table
 import numpy as np
 
-from hindlight import completeness, injection, planted
+from hindlight import completeness, planted
+from hindlight.chances import Made, Seen, chance
 from hindlight.completeness import Found, Injection, Looks, Null
 from hindlight.duplicates import counts
-from hindlight.hiding import Places, places_said
+from hindlight.hiding import Places, Used, places_said
 from hindlight.lightcurve import FloatArray
 from hindlight.order import book
 from hindlight.schema import COMPLETENESS, COMPLETENESS_LIMITS, COMPLETENESS_TARGETS
@@ -78,12 +79,33 @@ def completeness_table(
 
 
 def target_tables(
-    study: Study, run: RunFolder, table: astropy.table.Table, ephemerides: Any, meta: Mapping[str, Any]
-) -> tuple[astropy.table.Table, astropy.table.Table]:
-    """completeness_targets.ecsv and completeness_limits.ecsv."""
-    candidates, channels = read_ecsv(run.file("candidates.ecsv")), read_ecsv(run.file("channels.ecsv"))
+    study: Study, run: RunFolder, made: Mapping[str, Made], used: Mapping[str, Used], ephemerides: Any,
+    meta: Mapping[str, Any],
+) -> tuple[astropy.table.Table, astropy.table.Table]:  # fmt: skip
+    """completeness_targets.ecsv and completeness_limits.ecsv, from made-up sources and targets' frames, both by subset."""
+    candidates = {str(row["name"]): row for row in read_ecsv(run.file("candidates.ecsv"))}
+    fluxes = sorted(study.settings.completeness.fluxes)
+    rows, more = [], []
+    for name, looks, cycles in _looks_of_targets(study, run, ephemerides):
+        row = candidates[name]
+        has = {subset: sum(of.get(name, {}).values()) for subset, of in used.items()}
+        seen = Seen(str(row["standing"]), _like_flux(row, looks), _seen_share(row), float(row["period"]), has)
+        likely = chance(seen, made, study.cells, study.settings.completeness.per_cell)
+        rows.append(_target_row(name, seen, looks, cycles) | likely)
+        for flux in fluxes if seen.standing == "unseen" else ():
+            weight = completeness.weights(looks, flux)
+            limit = completeness.duty_limit(weight)
+            more.append({"name": name, "flux": flux, "looks_effective": float(weight.sum()), "duty_limit": limit})
+    return (
+        astropy_table(COMPLETENESS_TARGETS, rows_to_columns(COMPLETENESS_TARGETS, rows), meta),
+        astropy_table(COMPLETENESS_LIMITS, rows_to_columns(COMPLETENESS_LIMITS, more), meta),
+    )
+
+
+def _looks_of_targets(study: Study, run: RunFolder, ephemerides: Any) -> list[tuple[str, Looks, bool]]:
+    """Every target judged at its stated place: its name, its looks, and whether they are cycles."""
+    channels = read_ecsv(run.file("channels.ecsv"))
     positions = book(study.order.run, study.order.version).positions
-    standing = {str(row["name"]): str(row["standing"]) for row in candidates}
     limits: dict[str, dict[str, tuple[float, float]]] = {}
     for row in channels:
         level = float(row["blank_level"]) if "blank_level" in channels.colnames else 0.0  # not in runs of before
@@ -99,20 +121,18 @@ def target_tables(
         given = [_ephemeris(ephemerides, name) for name in mine]
         jobs.append((ids[start : start + size], [limits.get(name, {}) for name in mine], given))
     looks = [one for result in study.each("counting looks", looks_of, jobs) for one in result]
-    peaks = {str(row["name"]): (int(row["n_detected"]), float(row["peak_snr"])) for row in candidates}
-    rows, more = [], []
-    curve = _pulse_curve(table, study.settings.completeness.fluxes)
-    for name, (seen_in, cycles) in zip(names, looks, strict=True):
-        unseen = standing.get(name) == "unseen"
-        rows.append(_target_row(name, standing.get(name, ""), seen_in, cycles, peaks.get(name, (0, np.nan)), curve))
-        for flux in sorted(study.settings.completeness.fluxes) if unseen else ():
-            weight = completeness.weights(seen_in, flux)
-            limit = completeness.duty_limit(weight)
-            more.append({"name": name, "flux": flux, "looks_effective": float(weight.sum()), "duty_limit": limit})
-    return (
-        astropy_table(COMPLETENESS_TARGETS, rows_to_columns(COMPLETENESS_TARGETS, rows), meta),
-        astropy_table(COMPLETENESS_LIMITS, rows_to_columns(COMPLETENESS_LIMITS, more), meta),
-    )
+    return [(name, *one) for name, one in zip(names, looks, strict=True)]
+
+
+def _like_flux(row: Any, looks: Looks) -> float:
+    """The highest S/N in a frame of a candidate that is detected, else its lowest threshold; NaN without frames."""
+    like = float(row["peak_snr"]) if row["n_detected"] else float(np.min(looks.threshold, initial=np.inf))
+    return like if np.isfinite(like) else float("nan")
+
+
+def _seen_share(row: Any) -> float:
+    """The share of a candidate's usable frames in which it is detected."""
+    return float(row["n_detected"]) / max(1, int(row["n_used"]))
 
 
 def _ephemeris(targets: Any, name: str) -> dict[str, float]:
@@ -124,27 +144,13 @@ def _ephemeris(targets: Any, name: str) -> dict[str, float]:
     return {column: float(targets.column(column)[row]) for column in wanted}
 
 
-def _pulse_curve(table: astropy.table.Table, fluxes: Sequence[float]) -> tuple[FloatArray, FloatArray]:
-    """Fluxes, ascending, and the completeness of pulse trains in all frames, mean over the other cells."""
-    mine = table[(table["subset"] == ALL) & (table["kind"] == injection.PULSES)]
-    if len(mine) == 0:
-        return np.empty(0), np.empty(0)
-    grid = np.unique(np.asarray(fluxes, float))
-    return grid, np.array([np.mean(mine["completeness"][np.asarray(mine["flux"]) == flux]) for flux in grid])
-
-
-def _target_row(
-    name: str, standing: str, looks: Looks, cycles: bool, peak: tuple[int, float], curve: tuple[FloatArray, FloatArray]
-) -> dict[str, Any]:
-    """A row of completeness_targets.ecsv."""
-    n_detected, peak_snr = peak
-    like = peak_snr if n_detected else float(np.min(looks.threshold, initial=np.inf))
+def _target_row(name: str, seen: Seen, looks: Looks, cycles: bool) -> dict[str, Any]:
+    """A row of completeness_targets.ecsv but for the chance."""
     row: dict[str, Any] = {
-        "name": name, "standing": standing, "n_used": len(looks.look), "n_looks": looks.n, "by_cycles": cycles,
-        "like_flux": like if np.isfinite(like) else float("nan"),
-        "found_probability": completeness.between(like, *curve),
+        "name": name, "standing": seen.standing, "n_used": len(looks.look), "n_looks": looks.n, "by_cycles": cycles,
+        "like_flux": seen.peak,
     }  # fmt: skip
-    if standing == "unseen":
+    if seen.standing == "unseen":
         surely = completeness.weights(looks, completeness.HIGHEST_FLUX)
         row["lowest_duty_limit"] = completeness.duty_limit(surely)
         for word, duty in (("half", 0.5), ("tenth", 0.1), ("hundredth", 0.01)):

@@ -18,12 +18,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hindlight import brighter, completeness, judge, plan, planted, ranking, record, report_card, store
+from hindlight.chances import Made
 from hindlight.completeness import Found, Injection, Null
 from hindlight.crew import assembled
 from hindlight.duplicates import counts
 from hindlight.errors import NothingToDoError
 from hindlight.fence import call
-from hindlight.hiding import Places, hidden, places
+from hindlight.hiding import Places, Used, hidden, places
 from hindlight.lifted import copies
 from hindlight.lightcurve import FloatArray, IntArray, LightCurve
 from hindlight.order import book
@@ -88,13 +89,16 @@ def recover(asked: Asked, watcher: Watcher) -> Report:
     with run.locked(), record.logged(run), assembled(asked.workers, None, is_small(run, order.settings)) as crew:
         study = study_of(run, order, plugins, crew, watcher, subsets_of)
         nulls, units = _nulls(study)
-        at = _places(study, nulls)
+        used = _counted(study)
+        at = _places(study, used, nulls)
         wanted = {name: hidden(study.cells, one, study.settings.completeness) for name, one in at.items()}
         outcomes = _outcomes(study, wanted, nulls, units, with_plugins=False)
         proofs = _proofs(study)
         meta = {**metadata(study, units), "run_state": record.state(run, order.settings, plugins)}
         table = completeness_table(study, at, wanted, outcomes, meta)
-        targets, limits = target_tables(study, run, table, ephemerides, meta)
+        cell_of = {name: np.array([one.cell for one in mine], np.int64) for name, mine in wanted.items()}
+        made = {name: Made.of(cell_of[name], outcome) for name, outcome in outcomes.items()}
+        targets, limits = target_tables(study, run, made, used, ephemerides, meta)
     said = (*remarks(study, nulls, at, outcomes[ALL].found, targets), *proof_remarks(proofs), UPPER_BOUND)
     for name, made in (("completeness_limits", limits), ("completeness_targets", targets), ("completeness", table)):
         for ending in (".fits", ".vot", ".ecsv"):
@@ -109,7 +113,7 @@ def report_cards(asked: Asked, watcher: Watcher) -> tuple[list[Power], tuple[str
     with run.locked(), record.logged(run), assembled(asked.workers, None, is_small(run, order.settings)) as crew:
         study = study_of(run, order, plugins, crew, watcher, lambda frames: [all_frames(frames)])
         nulls, units = _nulls(study)
-        wanted = hidden(study.cells, _places(study, nulls)[ALL], study.settings.completeness)
+        wanted = hidden(study.cells, _places(study, _counted(study), nulls)[ALL], study.settings.completeness)
         outcome = _outcomes(study, {ALL: wanted}, nulls, units, with_plugins=True)[ALL]
         asks: list[Statistic | PeriodSearch] = [
             *plugins.statistics,
@@ -226,11 +230,8 @@ def _search_nulls(study: Study, nulls: Mapping[int, Mapping[str, Null]]) -> None
         judge.spread(null.judgement, result, passes, study.columns)
 
 
-def _places(study: Study, nulls: Mapping[int, Mapping[str, Null]]) -> dict[str, Places]:
-    """Where sources are hidden in each subset.
-
-    Raises `NothingToDoError` where no target has a control that is measured as well as it is.
-    """
+def _counted(study: Study) -> dict[str, Used]:
+    """The usable frames of every target, by subset."""
     size = study.settings.ranking.gather_curves
     groups = [
         (f.targets[k : k + size], f.target_ids[k : k + size])
@@ -238,16 +239,26 @@ def _places(study: Study, nulls: Mapping[int, Mapping[str, Null]]) -> dict[str, 
         for k in range(0, len(f.targets), size)
     ]
     counted = study.each("counting frames of targets", count_frames, [(ids, study.subsets) for _, ids in groups])
-    share = study.settings.controls.shared_frames
-    at = {}
-    for subset in study.subsets:
-        used = {
+    return {
+        subset.name: {
             name: {label: int(n[row]) for label, n in result[subset.name].items()}
             for (names, _), result in zip(groups, counted, strict=True)
             for row, name in enumerate(names)
         }
-        there = {number: of_field[subset.name] for number, of_field in nulls.items()}
-        at[subset.name] = places(study.fields, used, there, share)
+        for subset in study.subsets
+    }
+
+
+def _places(study: Study, used: Mapping[str, Used], nulls: Mapping[int, Mapping[str, Null]]) -> dict[str, Places]:
+    """Where sources are hidden in each subset.
+
+    Raises `NothingToDoError` where no target has a control that is measured as well as it is.
+    """
+    share = study.settings.controls.shared_frames
+    at = {
+        name: places(study.fields, mine, {number: of_field[name] for number, of_field in nulls.items()}, share)
+        for name, mine in used.items()
+    }
     if not len(at[ALL].ids):
         raise NothingToDoError("no target has a control that is measured in as many frames: nothing can be said")
     return at

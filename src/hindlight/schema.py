@@ -547,6 +547,14 @@ COMPLETENESS = (
     ),
     TableColumn("median_used", "usable frames, median of the sources", ucd="meta.number;obs"),
     TableColumn(
+        "median_peak",
+        "highest flux over its error measured in a frame, with the noise, median of the sources",
+        ucd="stat.snr",
+    ),
+    TableColumn(
+        "median_detected", "frames above their channel's threshold, median of the sources", ucd="meta.number;obs"
+    ),
+    TableColumn(
         "lowest_p", "smallest p-value that the controls can give, median of the sources", ucd="stat.probability"
     ),
 )
@@ -561,15 +569,37 @@ COMPLETENESS_TARGETS = (
     TableColumn("by_cycles", "whether looks are cycles of a known ephemeris", dtype="bool"),
     TableColumn(
         "like_flux",
-        "highest S/N in a frame; for a target with no detection its lowest detection threshold",
-        ucd="phot.flux;stat.max",
+        "highest flux over its error in a frame, as measured; for a target with no detection its lowest detection threshold",
+        ucd="stat.snr;stat.max",
     ),
     TableColumn(
         "found_probability",
-        "chance that a pulse train of this peak flux would have been found, mean over the grid's periods and duty cycles, "
-        "between its fluxes; NaN outside them",
+        "chance that a source like this would have been found: made-up sources of like_kind, like_period, like_duty_cycle in "
+        "like_frames frames of like_subset whose highest flux over its error, measured in a frame, is like_flux; linear in "
+        "its logarithm between fluxes of the grid; NaN where none is like it (steady, or outside the grid)",
         ucd="stat.probability",
     ),
+    TableColumn("found_low", "lower end of its 95 % Jeffreys interval", ucd="stat.probability;stat.min"),
+    TableColumn("found_high", "upper end of its 95 % Jeffreys interval", ucd="stat.probability;stat.max"),
+    TableColumn(
+        "like_kind",
+        "pulses for standing single and repeating, smooth for variable; else that of the two which is seen in the nearest "
+        "share of its frames; empty for none",
+        dtype="str",
+        ucd="meta.code.class",
+    ),
+    TableColumn(
+        "like_period",
+        "period of these sources: of those seen in the nearest share of frames, the nearest to the target's if it has one",
+        unit="s",
+        ucd="time.period",
+    ),
+    TableColumn(
+        "like_duty_cycle", "duty cycle of these sources, by the share of frames they are seen in; NaN if smooth"
+    ),
+    TableColumn("like_subset", "the frames they are judged in: most of the target's are among them", dtype="str"),
+    TableColumn("like_frames", "usable frames of these sources, their median", ucd="meta.number;obs"),
+    TableColumn("like_sources", "how many of them the chance rests on", dtype="int64", ucd="meta.number"),
     TableColumn(
         "lowest_duty_limit",
         "95 % limit on the duty cycle of a source that no look could miss, NaN where the looks are too few or it was seen",

@@ -21,6 +21,7 @@ from hindlight.lifted import Lift
 from hindlight.lightcurve import Block, FloatArray, IntArray
 from hindlight.order import Order, book, frame_facts
 from hindlight.plugin import Column, Plugin
+from hindlight.ranking import Thresholds
 from hindlight.schema import UNUSABLE
 from hindlight.settings import Settings
 from hindlight.tasks import anchors_of, position_blocks, residuals
@@ -52,13 +53,13 @@ class Judged:
 
 @dataclass(frozen=True, eq=False)
 class Outcomes:
-    """Made-up sources in one subset: what became of them, and of each the highest S/N added, frames lit, frames used."""
+    """Made-up sources in one subset: what became of them, and of each what EXTRA names, shape (n,) each."""
 
     found: Found
     extra: Mapping[str, FloatArray]
 
 
-EXTRA = ("median_snr", "median_lit", "median_used")
+EXTRA = ("median_snr", "median_lit", "median_used", "median_peak", "median_detected")
 
 
 def judge_controls(order: Order, ids: IntArray, subsets: Sequence[Subset]) -> Judged:
@@ -131,7 +132,7 @@ def _become(
         _search_gated(judged, hosts, null, blocks, columns, order.settings, plugins)
     asked = [*plugins.statistics, *plugins.period_searches] if with_plugins else []
     became = completeness.found(judged, hosts, null, columns, bars, order.settings, asked)
-    return Outcomes(became, _extra(plain, made, rows))
+    return Outcomes(became, _extra(plain, made, rows, null.thresholds))
 
 
 def plant_in_frame(order: Order, frame: int, controls: IntArray) -> planted.Proof | None:
@@ -229,17 +230,25 @@ def _injected(
 
 
 def _extra(
-    plain: Mapping[str, Block], made: Mapping[str, tuple[Block, FloatArray]], rows: IntArray
-) -> dict[str, FloatArray]:
-    """Of each source the highest S/N that was added to a frame, how many frames it lit, and how many could be used."""
-    highest, lit, used = np.zeros((3, len(rows)))
+    plain: Mapping[str, Block], made: Mapping[str, tuple[Block, FloatArray]], rows: IntArray,
+    thresholds: Mapping[str, Thresholds],
+) -> dict[str, FloatArray]:  # fmt: skip
+    """Of each source the highest S/N that was added to a frame, how many frames it lit, and how many could be used;
+
+    then, as measured with the noise, the highest S/N in a frame, and how many frames are above their threshold.
+    """
+    highest, lit, used, peak, detected = np.zeros((5, len(rows)))
     for label, block in plain.items():
         error = block.flux_err[rows]
         snr = np.where(np.isfinite(error), made[label][1] / error, 0.0)
         highest = np.maximum(highest, snr.max(axis=1, initial=0.0))
         lit += (snr > 1.0).sum(axis=1)
         used += np.isfinite(error).sum(axis=1)
-    return dict(zip(EXTRA, (highest, lit, used), strict=True))
+        measured = np.nan_to_num(made[label][0].flux / made[label][0].flux_err)
+        measured = np.abs(measured) if block.channel.signed else measured
+        peak = np.maximum(peak, measured.max(axis=1, initial=0.0))
+        detected += (measured > thresholds[label].detected).sum(axis=1)
+    return dict(zip(EXTRA, (highest, lit, used, peak, detected), strict=True))
 
 
 def _search_gated(
