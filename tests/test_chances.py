@@ -1,6 +1,6 @@
 """The chance that a source like a target would have been found: like is compared with like."""
 
-from dataclasses import replace
+from dataclasses import fields, replace
 
 import numpy as np
 import pytest
@@ -89,9 +89,7 @@ def test_nothing_is_like_it(changed):
 def test_sources_have_as_many_frames():
     """Half of the sources have 10 frames, half 200: a target is compared with those that have as many as it."""
     few, many = sources([0.0] * 11, SHARE, DILUTION, 10.0), sources([1.0] * 11, SHARE, DILUTION, 200.0)
-    both = Made(
-        *(np.concatenate([getattr(few, n), getattr(many, n)]) for n in ("cell", "found", "used", "peak", "share"))
-    )
+    both = Made(*(np.concatenate([getattr(few, f.name), getattr(many, f.name)]) for f in fields(Made)))
     for n_used, expected in ((11, 0.0), (180, 1.0)):
         row = chance(replace(TARGET, used={"all": n_used}), {"all": both}, CELLS, 2 * N)
         assert row["found_probability"] == expected
@@ -101,7 +99,7 @@ def test_sources_have_as_many_frames():
 
 def test_the_subset_with_most_sources_like_it_counts_unless_it_lacks_the_frames():
     """In all frames few sources have as many; in those of one instrument all have, and the target has no others."""
-    lone = Made(*(getattr(MADE["all"], name)[::10] for name in ("cell", "found", "used", "peak", "share")))
+    lone = MADE["all"].taken(np.arange(len(MADE["all"].cell)) % 10 == 0)
     own = sources([1.0] * 11, SHARE, DILUTION)
     made = {"all": lone, "deep": own}
     row = chance(replace(TARGET, used={"all": 100, "deep": 100}), made, CELLS, N)

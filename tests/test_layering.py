@@ -19,9 +19,9 @@ ORDER = [
     "outlines", "footprints", "frametable", "archive", "summary", "positions", "apart", "spans", "pixels", "background",
     "detection", "pointing", "growth", "opening", "fluxes", "photometry", "planted", "duplicates", "likeness", "robust",
     "losses", "response", "ensemble", "store", "judge", "calibrate", "ranking", "lifted", "search", "timing",
-    "injection", "completeness", "brighter", "candidates", "plan", "more_controls", "comparisons", "order", "tasks",
+    "injection", "looks", "completeness", "brighter", "candidates", "plan", "more_controls", "comparisons", "order", "tasks",
     "examining", "trials", "conclude", "bright", "outcome", "crew", "record", "asides", "verdicts", "measuring",
-    "second_pass", "runner", "report_card", "study", "hiding", "chances", "recovered", "recovery", "survey",
+    "second_pass", "runner", "report_card", "study", "hiding", "chances", "unseen", "recovered", "recovery", "survey",
     "export", "demo", "testing", "outlet", "cli", "__main__",
 ]  # fmt: skip
 PLUGINS_MAY_IMPORT = {"hindlight", "numpy", "scipy", "astropy", "photutils", "nifty_ls"}

@@ -108,6 +108,24 @@ def test_unseen_targets_have_limits(report):
     assert np.isnan(np.asarray(seen["lowest_duty_limit"], float)).all()
 
 
+def test_unseen_targets_have_limits_in_each_channel(report):
+    """In the channel's own unit, of its own frames: a steady source is seen in fewer of them than of all channels' looks."""
+    targets = {str(row["name"]): row for row in report.targets}
+    assert len(report.channels) == 2 * (report.targets["standing"] == "unseen").sum()
+    for row in report.channels:
+        radio = "north" in row["channel"]
+        assert row["flux_unit"] == ("Jy/beam" if radio else "adu")
+        assert row["fluence_unit"] == ("Jy/beam s" if radio else "adu")
+        assert row["frame_error"] == pytest.approx(1.0 if radio else 40 * 4.3, rel=0.3)
+        assert (row["n_used"], row["n_looks"]) == (14, 14)
+        exposure = RADIO.exposure_s if radio else OPTICAL.exposure_s
+        assert row["exposure"] == pytest.approx(14 * exposure)
+        assert row["duty_limit"] == pytest.approx((1 - 0.05 ** (1 / 14)) / 0.977, rel=0.05)
+        assert row["rate_limit"] == pytest.approx(86400 * 2.9957 / (14 * exposure) / 0.977, rel=0.05)
+        assert row["flux_limit_half"] > targets[str(row["name"])]["flux_limit_half"] * row["frame_error"]
+        assert str(row["sentence"]).startswith("no pulse of fluence >= ")
+
+
 def test_known_ephemeris_makes_looks_cycles(archive, tmp_path):
     """With a period of 100 days there are at most as many looks as cycles, and only frames in the window count."""
     text = (archive / "targets.csv").read_text(encoding="utf-8").splitlines()
@@ -131,7 +149,11 @@ def test_known_ephemeris_makes_looks_cycles(archive, tmp_path):
 
 def test_same_bytes_with_two_workers(archive, tmp_path):
     """The tables do not depend on who did the work."""
-    names = [f"completeness{which}{ending}" for which in ("", "_targets", "_limits") for ending in (".ecsv", ".vot")]
+    names = [
+        f"completeness{which}{ending}"
+        for which in ("", "_targets", "_limits", "_channels")
+        for ending in (".ecsv", ".vot")
+    ]
     made = []
     for workers in ("1", "2"):
         command = ["completeness", str(archive / "run"), "--settings", str(archive / "grid.toml"), "--workers", workers]

@@ -7,12 +7,12 @@ theirs, noise and the dilution of pulses shorter than an exposure included. Pure
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, fields, replace
 from typing import Any
 
 import numpy as np
 
-from hindlight.completeness import NOTHING, Cell, jeffreys
+from hindlight.completeness import NOTHING, Cell, Mask, jeffreys
 from hindlight.injection import PULSES, SMOOTH
 from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.trials import Outcomes
@@ -57,7 +57,10 @@ class _At:
 
 @dataclass(frozen=True, eq=False)
 class Made:
-    """The made-up sources of a subset: their cells and what became of each, shape (n,)."""
+    """The made-up sources of a subset: their cells and what became of each, shape (n,).
+
+    Whether it was found, usable frames, highest S/N measured in a frame, share of frames above the threshold.
+    """
 
     cell: IntArray
     found: FloatArray
@@ -72,11 +75,14 @@ class Made:
         share = detected / np.maximum(used, 1.0)
         return cls(cell, outcome.found.recovered.astype(float), used, outcome.extra["median_peak"], share)
 
+    def taken(self, mine: Mask) -> Made:
+        """Those where `mine`, shape (n,), is true."""
+        return Made(*(getattr(self, f.name)[mine] for f in fields(self)))
+
     def near(self, n_used: int, factor: float) -> Made:
         """Those with as many frames to within a factor."""
         with np.errstate(divide="ignore"):
-            mine = np.abs(np.log(self.used) - np.log(n_used)) <= np.log(factor)
-        return Made(*(values[mine] for values in (self.cell, self.found, self.used, self.peak, self.share)))
+            return self.taken(np.abs(np.log(self.used) - np.log(n_used)) <= np.log(factor))
 
 
 def chance(target: Seen, made: Mapping[str, Made], cells: Sequence[Cell], per_cell: int) -> dict[str, Any]:

@@ -482,7 +482,7 @@ def _print_completeness(run: Path, report: Any) -> None:
     console.print(table)
     for line in report.remarks:
         console.print(visible(line), markup=False)
-    names = "completeness.ecsv, completeness_targets.ecsv, completeness_limits.ecsv (each .fits, .vot too)"
+    names = "completeness.ecsv, completeness_targets, _limits, _channels.ecsv (each .fits, .vot too)"
     console.print(f"written to {run}: {names}, completeness.txt", markup=False)
 
 

@@ -3,19 +3,21 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 from typing import Any
 
 import astropy.table
 import numpy as np
 
-from hindlight import completeness, planted
+from hindlight import completeness, planted, unseen
 from hindlight.chances import Made, Seen, chance
-from hindlight.completeness import Found, Injection, Looks, Null
+from hindlight.completeness import Found, Injection, Null
 from hindlight.duplicates import counts
 from hindlight.hiding import Places, Used, places_said
 from hindlight.lightcurve import FloatArray
+from hindlight.looks import Looks
 from hindlight.order import book
-from hindlight.schema import COMPLETENESS, COMPLETENESS_LIMITS, COMPLETENESS_TARGETS
+from hindlight.schema import COMPLETENESS, COMPLETENESS_CHANNELS, COMPLETENESS_LIMITS, COMPLETENESS_TARGETS
 from hindlight.settings import Controls
 from hindlight.store import RunFolder
 from hindlight.study import Study
@@ -78,27 +80,47 @@ def completeness_table(
     return astropy_table(COMPLETENESS, rows_to_columns(COMPLETENESS, rows), meta)
 
 
+@dataclass(frozen=True, eq=False)
+class TargetTables:
+    """completeness_targets.ecsv, completeness_limits.ecsv and completeness_channels.ecsv."""
+
+    targets: astropy.table.Table
+    limits: astropy.table.Table
+    channels: astropy.table.Table
+
+
 def target_tables(
-    study: Study, run: RunFolder, made: Mapping[str, Made], used: Mapping[str, Used], ephemerides: Any,
-    meta: Mapping[str, Any],
-) -> tuple[astropy.table.Table, astropy.table.Table]:  # fmt: skip
-    """completeness_targets.ecsv and completeness_limits.ecsv, from made-up sources and targets' frames, both by subset."""
+    study: Study, run: RunFolder, made: Mapping[str, Made], shown: tuple[int, int], used: Mapping[str, Used],
+    ephemerides: Any, meta: Mapping[str, Any],
+) -> TargetTables:  # fmt: skip
+    """The tables about targets, from made-up sources and targets' frames, both by subset.
+
+    `shown` is how many frames show made-up pulses that surely should, and how many should.
+    """
     candidates = {str(row["name"]): row for row in read_ecsv(run.file("candidates.ecsv"))}
-    fluxes = sorted(study.settings.completeness.fluxes)
-    rows, more = [], []
+    channels = book(study.order.run, study.order.version).channels
+    rows: list[dict[str, Any]] = []
+    limits: list[dict[str, Any]] = []
+    each: list[dict[str, Any]] = []
     for name, looks, cycles in _looks_of_targets(study, run, ephemerides):
         row = candidates[name]
         has = {subset: sum(of.get(name, {}).values()) for subset, of in used.items()}
         seen = Seen(str(row["standing"]), _like_flux(row, looks), _seen_share(row), float(row["period"]), has)
-        likely = chance(seen, made, study.cells, study.settings.completeness.per_cell)
-        rows.append(_target_row(name, seen, looks, cycles) | likely)
-        for flux in fluxes if seen.standing == "unseen" else ():
-            weight = completeness.weights(looks, flux)
-            limit = completeness.duty_limit(weight)
-            more.append({"name": name, "flux": flux, "looks_effective": float(weight.sum()), "duty_limit": limit})
-    return (
+        told = _target_row(name, seen, looks, cycles) | chance(
+            seen, made, study.cells, study.settings.completeness.per_cell
+        )
+        if seen.standing == "unseen":
+            told |= unseen.over_all(looks)
+            limits += unseen.by_flux(name, looks, sorted(study.settings.completeness.fluxes))
+            for number, label in enumerate(looks.labels):
+                mine = looks.within(number)
+                if mine.n:
+                    each.append({"name": name, **unseen.in_channel(mine, number, channels[label].unit, cycles, shown)})
+        rows.append(told)
+    return TargetTables(
         astropy_table(COMPLETENESS_TARGETS, rows_to_columns(COMPLETENESS_TARGETS, rows), meta),
-        astropy_table(COMPLETENESS_LIMITS, rows_to_columns(COMPLETENESS_LIMITS, more), meta),
+        astropy_table(COMPLETENESS_LIMITS, rows_to_columns(COMPLETENESS_LIMITS, limits), meta),
+        astropy_table(COMPLETENESS_CHANNELS, rows_to_columns(COMPLETENESS_CHANNELS, each), meta),
     )
 
 
@@ -145,17 +167,11 @@ def _ephemeris(targets: Any, name: str) -> dict[str, float]:
 
 
 def _target_row(name: str, seen: Seen, looks: Looks, cycles: bool) -> dict[str, Any]:
-    """A row of completeness_targets.ecsv but for the chance."""
-    row: dict[str, Any] = {
+    """What completeness_targets.ecsv says of every target."""
+    return {
         "name": name, "standing": seen.standing, "n_used": len(looks.look), "n_looks": looks.n, "by_cycles": cycles,
         "like_flux": seen.peak,
     }  # fmt: skip
-    if seen.standing == "unseen":
-        surely = completeness.weights(looks, completeness.HIGHEST_FLUX)
-        row["lowest_duty_limit"] = completeness.duty_limit(surely)
-        for word, duty in (("half", 0.5), ("tenth", 0.1), ("hundredth", 0.01)):
-            row[f"flux_limit_{word}"] = completeness.flux_limit(looks, duty)
-    return row
 
 
 def remarks(
@@ -206,6 +222,12 @@ def remarks(
         )
     if not targets["by_cycles"].any():
         said.append("looks are epochs; a target list with ephemerides (--targets) makes them cycles")
+    if (targets["standing"] == "unseen").any():
+        said.append(
+            "limits on unseen targets: a duty cycle is the share of looks throughout which the source is on, its flux the mean "
+            "over an exposure, and the best frame of a look counts; completeness_channels.ecsv has them in each unit, "
+            "with the rate of short pulses and a sentence"
+        )
     return tuple(said)
 
 

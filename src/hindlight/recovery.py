@@ -25,6 +25,7 @@ from hindlight.duplicates import counts
 from hindlight.errors import NothingToDoError
 from hindlight.fence import call
 from hindlight.hiding import Places, Used, hidden, places
+from hindlight.injection import PULSES
 from hindlight.lifted import copies
 from hindlight.lightcurve import FloatArray, IntArray, LightCurve
 from hindlight.order import book
@@ -57,11 +58,12 @@ Mask = NDArray[np.bool_]
 
 @dataclass(frozen=True, eq=False)
 class Report:
-    """What is written and said: the three tables, sentences for the last lines, and the raw outcomes in all frames."""
+    """What is written and said: the four tables, and sentences for the last lines."""
 
     table: astropy.table.Table
     targets: astropy.table.Table
     limits: astropy.table.Table
+    channels: astropy.table.Table
     remarks: tuple[str, ...]
 
 
@@ -98,13 +100,14 @@ def recover(asked: Asked, watcher: Watcher) -> Report:
         table = completeness_table(study, at, wanted, outcomes, meta)
         cell_of = {name: np.array([one.cell for one in mine], np.int64) for name, mine in wanted.items()}
         made = {name: Made.of(cell_of[name], outcome) for name, outcome in outcomes.items()}
-        targets, limits = target_tables(study, run, made, used, ephemerides, meta)
-    said = (*remarks(study, nulls, at, outcomes[ALL].found, targets), *proof_remarks(proofs), UPPER_BOUND)
-    for name, made in (("completeness_limits", limits), ("completeness_targets", targets), ("completeness", table)):
+        told = target_tables(study, run, made, _shown(study, cell_of[ALL], outcomes[ALL]), used, ephemerides, meta)
+    said = (*remarks(study, nulls, at, outcomes[ALL].found, told.targets), *proof_remarks(proofs), UPPER_BOUND)
+    written = (("channels", told.channels), ("limits", told.limits), ("targets", told.targets))
+    for name, one in (*((f"completeness_{word}", one) for word, one in written), ("completeness", table)):
         for ending in (".fits", ".vot", ".ecsv"):
-            write_table(run.file(f"{name}{ending}"), made)
+            write_table(run.file(f"{name}{ending}"), one)
     store.write_text(run, "completeness.txt", "\n".join(said) + "\n")
-    return Report(table, targets, limits, said)
+    return Report(table, told.targets, told.limits, told.channels, said)
 
 
 def report_cards(asked: Asked, watcher: Watcher) -> tuple[list[Power], tuple[str, ...]]:
@@ -304,6 +307,13 @@ def _pieces(wanted: Mapping[str, Sequence[Injection]], ids: IntArray) -> list[di
         if part:
             found.append(part)
     return found
+
+
+def _shown(study: Study, cell: IntArray, outcome: Outcomes) -> tuple[int, int]:
+    """How many frames show made-up pulses that surely should, and how many should; `cell` is that of each source."""
+    pulses = np.array([one.kind == PULSES for one in study.cells])[cell]
+    seen, all_of_them = (int(outcome.extra[name][pulses].sum()) for name in ("bright_seen", "bright_frames"))
+    return seen, all_of_them
 
 
 def _joined(parts: Sequence[Outcomes], back: IntArray) -> Outcomes:

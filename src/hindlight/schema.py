@@ -602,13 +602,15 @@ COMPLETENESS_TARGETS = (
     TableColumn("like_sources", "how many of them the chance rests on", dtype="int64", ucd="meta.number"),
     TableColumn(
         "lowest_duty_limit",
-        "95 % limit on the duty cycle of a source that no look could miss, NaN where the looks are too few or it was seen",
+        "95 % limit on the share of looks throughout which a source is on that no look could miss; NaN where the looks are too "
+        "few or it was seen",
         ucd="stat.value;stat.max",
     ),
     *(
         TableColumn(
             f"flux_limit_{word}",
-            f"peak flux in median frame errors above which a duty cycle of {duty} or more is excluded at 95 %; NaN for none",
+            "flux, mean over an exposure, in median frame errors of each channel, from which a source that is on throughout "
+            f"{duty} of the looks or more is excluded at 95 %; NaN for none",
             ucd="phot.flux;stat.max",
         )
         for word, duty in (("half", 0.5), ("tenth", 0.1), ("hundredth", 0.01))
@@ -617,9 +619,65 @@ COMPLETENESS_TARGETS = (
 
 COMPLETENESS_LIMITS = (
     TableColumn("name", "unseen target", dtype="str", ucd="meta.id;meta.main"),
-    TableColumn("flux", "flux in median frame errors, mean over an exposure", ucd="phot.flux"),
-    TableColumn("looks_effective", "sum over the looks of the chance to see such a source", ucd="meta.number"),
+    TableColumn("flux", "flux in median frame errors of each channel, mean over an exposure", ucd="phot.flux"),
     TableColumn(
-        "duty_limit", "95 % limit on its duty cycle; NaN where all looks together set none", ucd="stat.value;stat.max"
+        "looks_effective",
+        "sum over the looks of the chance to see such a source, on throughout, in the best frame of the look",
+        ucd="meta.number",
     ),
+    TableColumn(
+        "duty_limit",
+        "95 % limit on the share of looks throughout which it is on; NaN where all looks together set none",
+        ucd="stat.value;stat.max",
+    ),
+)
+
+COMPLETENESS_CHANNELS = (
+    TableColumn("name", "unseen target", dtype="str", ucd="meta.id;meta.main"),
+    TableColumn("channel", "unsigned channel", dtype="str", ucd="meta.id"),
+    TableColumn("flux_unit", "unit of the fluxes in this row", dtype="str", ucd="meta.unit"),
+    TableColumn("n_used", "usable frames", dtype="int64", ucd="meta.number;obs"),
+    TableColumn("n_looks", "epochs, or cycles of a known ephemeris, among them", dtype="int64", ucd="meta.number"),
+    TableColumn(
+        "exposure", "sum of the exposures that are known, NaN for none", unit="s", ucd="time.duration;obs.exposure"
+    ),
+    TableColumn("frame_error", "median error of the flux in a frame", ucd="stat.error;phot.flux"),
+    *(
+        TableColumn(
+            f"flux_limit_{word}",
+            f"flux, mean over an exposure, from which a source that is on throughout {duty} of the looks or more is excluded "
+            "at 95 % by this channel alone; NaN for none",
+            ucd="phot.flux;stat.max",
+        )
+        for word, duty in (("half", 0.5), ("tenth", 0.1), ("hundredth", 0.01))
+    ),
+    TableColumn(
+        "flux",
+        "flux, mean over an exposure, that a typical frame shows with a chance of 0.977: threshold + 2",
+        ucd="phot.flux",
+    ),
+    TableColumn(
+        "duty_limit", "95 % limit on the share of looks throughout which a source has this flux", ucd="stat.max"
+    ),
+    TableColumn(
+        "fluence",
+        "of a pulse that gives this flux in a frame of median exposure; NaN where exposures are unknown",
+        ucd="phot.fluence",
+    ),
+    TableColumn("fluence_unit", "its unit: counts stay counts, other fluxes are multiplied by seconds", dtype="str"),
+    TableColumn(
+        "rate_limit",
+        "95 % limit on the rate of pulses of this fluence or more, each within one exposure, at random times; NaN for none",
+        unit="1/d",
+        ucd="stat.max",
+    ),
+    TableColumn(
+        "n_made",
+        "frames, in all channels, of made-up pulse trains to which a flux from 2 sigma above the threshold to twice that was "
+        "added",
+        dtype="int64",
+        ucd="meta.number",
+    ),
+    TableColumn("n_seen", "of which so many are above the threshold", dtype="int64", ucd="meta.number"),
+    TableColumn("sentence", "what the looks without a detection say, in words", dtype="str", ucd="meta.note"),
 )

@@ -14,11 +14,12 @@ from numpy.typing import NDArray
 
 from hindlight import completeness, host, injection, judge, photometry, planted, store
 from hindlight.companions import as_listed
-from hindlight.completeness import Bars, Cell, Found, Injection, Looks, Null
+from hindlight.completeness import Bars, Cell, Found, Injection, Null
 from hindlight.files import check_unchanged
 from hindlight.headers import SetAsideError
 from hindlight.lifted import Lift
 from hindlight.lightcurve import Block, FloatArray, IntArray
+from hindlight.looks import SURELY, Looks, by_cycle, by_epoch
 from hindlight.order import Order, book, frame_facts
 from hindlight.plugin import Column, Plugin
 from hindlight.ranking import Thresholds
@@ -59,7 +60,7 @@ class Outcomes:
     extra: Mapping[str, FloatArray]
 
 
-EXTRA = ("median_snr", "median_lit", "median_used", "median_peak", "median_detected")
+EXTRA = ("median_snr", "median_lit", "median_used", "median_peak", "median_detected", "bright_frames", "bright_seen")
 
 
 def judge_controls(order: Order, ids: IntArray, subsets: Sequence[Subset]) -> Judged:
@@ -235,9 +236,10 @@ def _extra(
 ) -> dict[str, FloatArray]:  # fmt: skip
     """Of each source the highest S/N that was added to a frame, how many frames it lit, and how many could be used;
 
-    then, as measured with the noise, the highest S/N in a frame, and how many frames are above their threshold.
+    then, as measured with the noise, the highest S/N in a frame, and how many frames are above their threshold; at last
+    how many frames should surely show it (S/N added SURELY above the threshold, to twice that), and how many of them do.
     """
-    highest, lit, used, peak, detected = np.zeros((5, len(rows)))
+    highest, lit, used, peak, detected, bright, shown = np.zeros((7, len(rows)))
     for label, block in plain.items():
         error = block.flux_err[rows]
         snr = np.where(np.isfinite(error), made[label][1] / error, 0.0)
@@ -247,8 +249,13 @@ def _extra(
         measured = np.nan_to_num(made[label][0].flux / made[label][0].flux_err)
         measured = np.abs(measured) if block.channel.signed else measured
         peak = np.maximum(peak, measured.max(axis=1, initial=0.0))
-        detected += (measured > thresholds[label].detected).sum(axis=1)
-    return dict(zip(EXTRA, (highest, lit, used, peak, detected), strict=True))
+        above = measured > thresholds[label].detected
+        detected += above.sum(axis=1)
+        least = thresholds[label].detected + SURELY
+        surely = (snr >= least) & (snr <= 2 * least)
+        bright += surely.sum(axis=1)
+        shown += (surely & above).sum(axis=1)
+    return dict(zip(EXTRA, (highest, lit, used, peak, detected, bright, shown), strict=True))
 
 
 def _search_gated(
@@ -275,29 +282,26 @@ def _looks(
 ) -> tuple[Looks, bool]:  # fmt: skip
     """The looks at one target in unsigned channels."""
     parts: list[list[Any]] = [[], [], [], [], []]
-    for number, (label, block) in enumerate(blocks.items()):
+    told: dict[str, float] = {}
+    for label, block in blocks.items():
         curve = block.curve(row)
         if len(curve) == 0 or block.channel.signed:
             continue
-        unit = float(np.median(curve.flux_err))
-        n = len(curve)
         least, level = limits[label]
-        told = (
-            curve.t_tdb_s,
-            curve.exposure_s,
-            curve.flux_err / unit,
-            least - level / curve.flux_err,
-            np.full(n, number),
-        )
-        for part, values in zip(parts, told, strict=True):
+        unit = float(np.median(curve.flux_err))
+        threshold = least - level / curve.flux_err
+        mine = (curve.t_tdb_s, curve.exposure_s, curve.flux_err / unit, threshold, np.full(len(curve), len(told)))
+        told[label] = unit
+        for part, values in zip(parts, mine, strict=True):
             part.append(values)
     t, exposure, error, threshold, channel = (np.concatenate(p) if p else np.empty(0) for p in parts)
     cycles = bool(np.isfinite([given["period"], given["epoch"]]).all())
-    look, share = completeness.by_epoch(t, gap_days), np.ones(len(t))
+    look, share = by_epoch(t, gap_days), np.ones(len(t))
     if cycles:
         known = np.isfinite(t)
         t, exposure, error, threshold, channel = (v[known] for v in (t, exposure, error, threshold, channel))
         since = t - (given["epoch"] - J2000_JD) * DAY
         dot, window = float(np.nan_to_num(given["period_dot"])), float(np.nan_to_num(given["window"]))
-        look, share = completeness.by_cycle(since, exposure, given["period"], dot, window)
-    return Looks(look, channel.astype(np.int64), error, threshold, share), cycles
+        look, share = by_cycle(since, exposure, given["period"], dot, window)
+    of = channel.astype(np.int64)
+    return Looks(look, of, error, threshold, share, exposure, tuple(told), tuple(told.values())), cycles
