@@ -21,7 +21,7 @@ ORDER = [
     "losses", "response", "ensemble", "store", "judge", "calibrate", "ranking", "lifted", "search", "timing",
     "injection", "looks", "completeness", "brighter", "candidates", "plan", "more_controls", "comparisons", "order", "tasks",
     "examining", "trials", "conclude", "bright", "outcome", "crew", "record", "asides", "verdicts", "measuring",
-    "second_pass", "runner", "report_card", "study", "hiding", "chances", "unseen", "recovered", "recovery", "survey",
+    "second_pass", "runner", "report_card", "study", "hiding", "chances", "unseen", "recovered", "recovery", "layout", "survey",
     "export", "demo", "testing", "outlet", "cli", "__main__",
 ]  # fmt: skip
 PLUGINS_MAY_IMPORT = {"hindlight", "numpy", "scipy", "astropy", "photutils", "nifty_ls"}

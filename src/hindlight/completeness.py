@@ -313,6 +313,24 @@ def jeffreys(k: float, n: int, confidence: float = CONFIDENCE) -> tuple[float, f
     return low, high
 
 
+def half_flux(fluxes: FloatArray, share: FloatArray) -> float:
+    """The flux from which half of the sources are found, from the shares found at fluxes, ascending, > 0; both shape (n,).
+
+    Linear in the logarithm of the flux, where the share first reaches a half; minus infinity where it does at the lowest
+    flux, infinity where it nowhere does, NaN for no fluxes.
+    """
+    reached = np.flatnonzero(share >= 0.5)
+    if len(fluxes) == 0:
+        return float("nan")
+    if len(reached) == 0:
+        return float("inf")
+    at = int(reached[0])
+    if at == 0:
+        return float("-inf") if share[0] > 0.5 else float(fluxes[0])
+    part = (0.5 - share[at - 1]) / (share[at] - share[at - 1])
+    return float(fluxes[at - 1] * (fluxes[at] / fluxes[at - 1]) ** part)
+
+
 def summary_row(mine: Mask, outcome: Found, extra: Mapping[str, FloatArray]) -> dict[str, Any]:
     """The counted columns of a cell whose sources are `mine`, shape (n,); medians of what `extra` holds of each source."""
     n, k = int(mine.sum()), int(outcome.recovered[mine].sum())

@@ -45,7 +45,7 @@ def metadata(study: Study, units: Mapping[str, float]) -> dict[str, Any]:
     """What the tables say of themselves."""
     chosen = study.settings.completeness
     return {
-        "rule": "recovered: the p-value is below what the run's own p-values leave for one more target at its "
+        "rule": "recovered: the p-value is below what those of this run's target list leave for one more target at its "
         "false-discovery level; ranked among the other controls, by the tail bound where these cannot decide",
         "false_discovery_level": study.settings.ranking.level,
         "p_value_bar": study.bars.final,
@@ -188,8 +188,9 @@ def remarks(
     said = [
         f"{len(study.cells)} cells of {chosen.per_cell} sources each in {n_subsets} subsets of frames, at "
         f"{len(at[ALL].ids)} controls of {how_many(at[ALL].n_fields, 'field', 'fields')}, measured as often as targets",
-        f"recovered means: p below {study.bars.final:.3g}, which the run's own p-values leave for one more target at a "
-        f"false-discovery rate of {study.settings.ranking.level:g}; what checks would say of it is not asked",
+        f"recovered means: p below {study.bars.final:.3g}, which the p-values of this run's target list leave for one more "
+        f"target at a false-discovery rate of {study.settings.ranking.level:g} (another list leaves another); what checks "
+        "would say of it is not asked",
         "a source has the same flux in median frame errors in every channel; channels of Stokes Q, U, V get none",
     ]
     said += places_said(at)

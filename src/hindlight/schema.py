@@ -535,7 +535,12 @@ COMPLETENESS = (
     TableColumn("window", "in which a pulse lies anywhere; NaN where there are none", unit="s", ucd="time.duration"),
     TableColumn("missing", "fraction of the pulses that are not there; NaN where there are none"),
     TableColumn("n_injected", "sources added", dtype="int64", ucd="meta.number"),
-    TableColumn("n_recovered", "sources that would have been candidates of the run", dtype="int64", ucd="meta.number"),
+    TableColumn(
+        "n_recovered",
+        "sources that would have been candidates, as one more target of this run's list",
+        dtype="int64",
+        ucd="meta.number",
+    ),
     TableColumn("completeness", "n_recovered / n_injected", ucd="stat.probability"),
     TableColumn("completeness_low", "lower end of its 95 % Jeffreys interval", ucd="stat.probability;stat.min"),
     TableColumn("completeness_high", "upper end of its 95 % Jeffreys interval", ucd="stat.probability;stat.max"),
