@@ -1,5 +1,6 @@
 """`hindlight completeness` and `plugins --power` on a small archive: tables, their bytes, what is said, and mistakes."""
 
+import re
 import shutil
 from pathlib import Path
 from types import SimpleNamespace
@@ -254,13 +255,53 @@ def test_report_cards(archive, capsys):
     assert power["chi_square"]["smooth"] >= 0.5
     assert power["chi_square"]["nothing"] <= 0.5
     assert all(card.cost_s > 0 for card in cards)
-    assert (
-        "of 12 sources of kind 'pulses' and of 12 sources of kind 'smooth'; 'nothing': the same of 6 controls"
-        in said[1]
+    assert "of 12 sources of kind 'pulses' and of 12 sources of kind 'smooth', over all fluxes of the grid" in said[1]
+    n_controls = int(re.search(r"'nothing': the share of (\d+) controls without a source", said[1]).group(1))
+    assert n_controls >= 40
+    assert power["chi_square"]["nothing"] * n_controls == pytest.approx(
+        round(power["chi_square"]["nothing"] * n_controls)
     )
+    assert 0 < power["chi_square"]["nothing"] < 0.1
+    half = {card.plugin: card.half for card in cards}
+    assert 2 < half["chi_square"]["smooth"] < 60
+    assert "mean_flux: asks whether a source is there" in said[2]
+    assert {card.plugin for card in cards if card.only_here is None} == {"mean_flux"}
     silent = [name for name, of in power.items() if not any(share for kind, share in of.items() if kind != "nothing")]
-    assert [line.partition(" ")[0] for line in said[2:-1]] == silent
+    assert [line.partition(" ")[0] for line in said[3:-1]] == silent
     assert cli.run_command(["plugins", "--power", str(archive / "none")]) == 2
+
+
+def test_report_cards_take_controls_of_second_passes():
+    """A field's later controls are among those that sources are ranked among there, and not in completeness."""
+    positions = {
+        "id": np.arange(4), "kind": np.array(["target", "control", "control", "control"], object),
+        "search": np.full(4, -1), "field": np.zeros(4, int), "added_for": np.array([-1, -1, -1, 0]),
+        "ra": np.full(4, 10.0), "dec": np.arange(4.0), "name": np.array(["a", "", "", ""], object),
+    }  # fmt: skip
+    assert study_module.fields_of(positions)[0].ids.tolist() == [1, 2]
+    found = study_module.fields_of(positions, every_control=True)[0]
+    assert found.ids.tolist() == [1, 2, 3]
+    assert (found.targets, found.target_ids.tolist(), len(found.vectors)) == (("a",), [0], 3)
+
+
+def test_what_only_one_finds_is_counted_among_those_of_p_value():
+    """One that asks about presence finds a source too, and takes it from nobody; the flux of half is by kind."""
+    cells = [
+        completeness.Cell("nothing", 0.0),
+        *(completeness.Cell("smooth", flux, 100.0) for flux in (2.0, 2.0, 8.0, 8.0)),
+    ]
+    ranked, there = Column("x", "a number", unusual="high"), Column("x", "a number", unusual="high", about="presence")
+    asked = [card_plugin("keen", ranked), card_plugin("present", there), card_plugin("slow", ranked)]
+    hit = np.array([[0, 1, 0], [0, 1, 0], [1, 1, 0], [1, 1, 1], [1, 1, 1]], bool)
+    false = np.array([[0, 1, 0]] * 3 + [[1, 0, 0]], bool)
+    keen, present, slow = report_card.cards(asked, hit, cells, false, [1.0, 2.0, 3.0])
+    assert (keen.only_here, present.only_here, slow.only_here) == (1, None, 0)
+    assert keen.power == {"nothing": 0.25, "smooth": 0.75}
+    assert present.power["nothing"] == 0.75
+    assert keen.half["smooth"] == 2.0
+    assert present.half["smooth"] == -np.inf
+    assert slow.half["smooth"] == pytest.approx(4.0)
+    assert report_card.hits(np.array([[0.02, 0.001]]), np.array([0.01]), 1e-3).tolist() == [[False, True]]
 
 
 def card_plugin(name, *columns, whole=False, fewest=3):

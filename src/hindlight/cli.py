@@ -487,16 +487,22 @@ def _print_completeness(run: Path, report: Any) -> None:
 
 def _print_power(run: Path, files: tuple[Path, ...], quiet: bool, verbose: bool) -> None:
     """A statistic's report card, for each."""
+    from hindlight.layout import half_text
     from hindlight.recovery import report_cards
     from hindlight.study import Asked
 
     with _watching(quiet, verbose) as watcher:
         cards, remarks = report_cards(Asked(run, plugins=files), watcher)
     console = _console()
-    kinds = list(cards[0].power) if cards else []
-    table = _simple_table("what each statistic finds by itself", "name", *kinds, "only it finds", "s per 1000")
+    kinds = list(cards[0].half) if cards else []
+    heads = [name for kind in kinds for name in (kind, "half at")]
+    table = _simple_table(
+        "what each statistic finds by itself", "name", *heads, "nothing", "only it finds", "s per 1000"
+    )
     for card in cards:
-        _add(table, card.plugin, *(_short(card.power[k]) for k in kinds), card.only_here, _short(card.cost_s))
+        found = [cell for kind in kinds for cell in (_short(card.power[kind]), half_text(card.half[kind], card.fluxes))]
+        only = "" if card.only_here is None else card.only_here
+        _add(table, card.plugin, *found, _short(card.power["nothing"]), only, _short(card.cost_s))
     for line in remarks:
         console.print(visible(line), markup=False)
     console.print(table)

@@ -240,7 +240,10 @@ def _found(
     each = [_decided(rank, bars, settings, null.weight) for rank in among.ranks.ranks]
     decided = np.array(each, bool).reshape(-1, 2)
     enough = _most_used(judged) >= settings.detection.min_frames
-    own = [_own_p(among, plugin, columns, null.weight) for plugin in plugins]
+    own = [
+        _own_p(among.both, among.controls, among.sources, among.serving, plugin, columns, null.weight)
+        for plugin in plugins
+    ]
     return Found(
         decided[:, 0] & enough,
         decided[:, 1] & enough,
@@ -288,16 +291,36 @@ def _seen(judged: Judgement, thresholds: Mapping[str, ranking.Thresholds]) -> Ma
     return seen
 
 
-def _own_p(among: Ranked, plugin: Plugin, columns: Mapping[str, Column], weight: float) -> FloatArray:
-    """The p-values of sources by one plugin's calibrated columns alone, those that ask about presence included."""
+def own_of_controls(
+    null: Null, ids: IntArray, columns: Mapping[str, Column], plugins: Sequence[Plugin]
+) -> tuple[FloatArray, FloatArray]:
+    """The p-values of blank controls (ids, shape (n,)) by each plugin alone, each among the others: shape (n, n_plugins).
+
+    And the smallest that each could have, shape (n,).
+    """
+    rows, every = np.searchsorted(null.ids, ids), np.arange(null.judgement.n)
+    serving = null.serving[rows]
+    each = [_own_p(null.judgement, every, rows, serving, plugin, columns, null.weight) for plugin in plugins]
+    p = np.stack(each, axis=1) if each else np.empty((len(ids), 0))
+    return p, np.asarray(null.weight / (serving.sum(axis=1) + null.weight), float)
+
+
+def _own_p(
+    judgement: Judgement, controls: IntArray, sources: IntArray, serving: Mask, plugin: Plugin,
+    columns: Mapping[str, Column], weight: float,
+) -> FloatArray:  # fmt: skip
+    """The p-values of sources by one plugin's calibrated columns alone, those that ask about presence included.
+
+    `controls` and `sources` are rows of the judgement, `serving` says which of the first serve which of the second.
+    """
     mine = {f"{plugin.name}_{column.name}" for column in plugin.columns if column.unusual is not None}
-    keys = [key for key in sorted(among.both.values) if key[1] in mine]
-    matrix = ranking.oriented_matrix(among.both, keys, columns, among.controls)
+    keys = [key for key in sorted(judgement.values) if key[1] in mine]
+    matrix = ranking.oriented_matrix(judgement, keys, columns, controls)
     nulls: dict[bytes, calibrate.Null] = {}
     p = []
-    for row, mask in zip(among.sources, among.serving, strict=True):
+    for row, mask in zip(sources, serving, strict=True):
         if mask.tobytes() not in nulls:
-            nulls[mask.tobytes()] = calibrate.null_from(matrix[among.controls[mask]])
+            nulls[mask.tobytes()] = calibrate.null_from(matrix[controls[mask]])
         p.append(calibrate.rank(nulls[mask.tobytes()], matrix[row], weight).p_value)
     return np.array(p)
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
@@ -60,7 +61,7 @@ def half(cells: list[tuple[float, int, int]]) -> str:
     return half_text(half_flux(np.array(fluxes), found / np.maximum(n, 1)), fluxes)
 
 
-def half_text(flux: float, fluxes: list[float]) -> str:
+def half_text(flux: float, fluxes: Sequence[float]) -> str:
     """A flux found in half of the cases among those of a grid, ascending; infinite where it is beyond them."""
     if not fluxes or np.isnan(flux):
         return ""

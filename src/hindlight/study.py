@@ -131,11 +131,14 @@ def is_small(run: RunFolder, settings: Settings) -> bool:
 
 def study_of(
     run: RunFolder, order: Order, plugins: host.Plugins, crew: Crew, watcher: Watcher,
-    chosen: Callable[[Columns], Sequence[Subset]],
+    chosen: Callable[[Columns], Sequence[Subset]], every_control: bool = False,
 ) -> Study:  # fmt: skip
-    """Fields, subsets and cells; raises `NothingToDoError` where no field has controls."""
+    """Fields, subsets and cells; raises `NothingToDoError` where no field has controls.
+
+    With `every_control` those of second passes are among a field's controls.
+    """
     tables = book(order.run, order.version)
-    fields = [found for found in fields_of(tables.positions) if len(found.ids) > 1]
+    fields = [found for found in fields_of(tables.positions, every_control) if len(found.ids) > 1]
     if not fields:
         raise NothingToDoError(f"run {run.path}: {_why_no_fields(tables.positions)}")
     candidates = read_ecsv(run.file("candidates.ecsv"))
@@ -151,12 +154,13 @@ def study_of(
     )
 
 
-def fields_of(positions: Columns) -> list[FieldControls]:
-    """The controls of every field with targets that are judged at their stated place."""
+def fields_of(positions: Columns, every_control: bool = False) -> list[FieldControls]:
+    """The first controls (or all) of every field with targets that are judged at their stated place."""
+    controls = positions["kind"] == "control" if every_control else first_controls(positions)
     is_target = (positions["kind"] == "target") & (positions["search"] < 0)
     found = []
     for number in sorted(set(positions["field"][is_target].tolist())):
-        here = first_controls(positions) & (positions["field"] == number)
+        here = controls & (positions["field"] == number)
         order = np.argsort(positions["id"][here])
         vectors = unit_vectors(positions["ra"][here], positions["dec"][here])[order]
         mine = np.flatnonzero(is_target & (positions["field"] == number))

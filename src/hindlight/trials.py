@@ -136,6 +136,13 @@ def _become(
     return Outcomes(became, _extra(plain, made, rows, null.thresholds))
 
 
+def rank_controls(order: Order, ids: IntArray, null: Null) -> tuple[FloatArray, FloatArray]:
+    """`completeness.own_of_controls` for controls of a field (ascending ids)."""
+    plugins = host.load(order.plugins)
+    asked = [*plugins.statistics, *plugins.period_searches]
+    return completeness.own_of_controls(null, ids, judge.full_columns(asked), asked)
+
+
 def plant_in_frame(order: Order, frame: int, controls: IntArray) -> planted.Proof | None:
     """A source added to the pixels of a frame at one of these controls; None where no flux can be measured now."""
     tables = book(order.run, order.version)
