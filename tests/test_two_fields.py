@@ -4,8 +4,9 @@ import numpy as np
 import pytest
 
 import skies
-from hindlight import cli, completeness, hiding, recovery
+from hindlight import cli, completeness, hiding, recovery, study
 from hindlight.judge import Judgement
+from hindlight.order import book
 from hindlight.study import Asked, FieldControls
 
 GRID = """[completeness]
@@ -100,6 +101,29 @@ def test_report_cards_of_two_fields(archive, capsys):
     searching = archive / "searching.toml"
     searching.write_text(GRID.replace("per_cell = 8", "per_cell = 1") + "period_search = true\n", encoding="utf-8")
     assert cli.run_command(["completeness", str(archive / "run"), "--settings", str(searching), "-q"]) == 0
+
+
+def test_fields_in_the_same_frames_are_one_for_report_cards(archive):
+    """Two halves of a field are put together again; fields in other frames are not."""
+    _, order, _ = study.opened(Asked(archive / "run"))
+    tables = book(order.run, order.version)
+    apart = study.fields_of(tables.positions)
+    assert [(f.number, len(f.targets)) for f in study.together(apart, tables.frames, 0.8)] == [
+        (f.number, 2) for f in apart
+    ]
+    first = apart[0]
+    halves = [
+        FieldControls(
+            9 - k, first.ids[k::2], first.vectors[k::2], first.targets[1 - k : 2 - k], first.target_ids[1 - k : 2 - k]
+        )
+        for k in (0, 1)
+    ]
+    one, other = study.together([*halves, apart[1]], tables.frames, 0.8)
+    assert one.number == 9
+    assert one.ids.tolist() == first.ids.tolist()
+    assert np.array_equal(one.vectors, first.vectors)
+    assert (one.targets, one.target_ids.tolist()) == (first.targets, first.target_ids.tolist())
+    assert other.ids.tolist() == apart[1].ids.tolist()
 
 
 def test_each_target_counts_once():

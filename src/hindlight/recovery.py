@@ -142,9 +142,9 @@ def _rate_said(lowest_p: FloatArray) -> str:
     fewest = round(1.0 / float(lowest_p.max()) - 1.0)
     return (
         f"power at a false-alarm rate of {rates}, NOT {POWER_RATE:g}: that takes {round(1 / POWER_RATE) - 1} controls beside "
-        f"the one that holds the source, some have {fewest}, those of second passes included; at {POWER_RATE:g} power is "
-        "lower. Fields are not put together, for controls in other frames are another null: a run of its own with "
-        f"[controls] per_field = {round(1.2 / POWER_RATE)} reaches it where so many fit into the frames"
+        f"the one that holds the source, some have {fewest}, those of second passes and of other fields in the same "
+        f"frames included; at {POWER_RATE:g} power is lower. A run of its own with [controls] per_field = "
+        f"{round(1.2 / POWER_RATE)} reaches it where so many fit into the frames"
     )
 
 
