@@ -10,7 +10,7 @@ import pytest
 from astropy.table import Table
 
 import skies
-from hindlight import Column, Statistic, cli, completeness, planted, recovered, recovery, report_card, trials
+from hindlight import Column, Statistic, cli, completeness, planted, powers, recovered, recovery, report_card, trials
 from hindlight import study as study_module
 from hindlight.judge import Judgement
 from hindlight.order import book
@@ -248,7 +248,7 @@ def test_a_grid_without_pulse_trains(archive, tmp_path):
 
 def test_report_cards(archive, capsys):
     """Each statistic's power by itself, at the rate that some sixty controls can tell."""
-    cards, said = recovery.report_cards(Asked(archive / "run", archive / "grid.toml", workers=1), cli._Silent())
+    cards, said = powers.report_cards(Asked(archive / "run", archive / "grid.toml", workers=1), cli._Silent())
     assert {"brightest", "chi_square", "mean_flux"} <= {card.plugin for card in cards}
     assert "NOT 0.001: that takes 999 controls" in said[0]
     power = {card.plugin: card.power for card in cards}
@@ -346,16 +346,16 @@ def test_the_two_bars_are_explained():
 
 def test_the_rate_of_power_is_that_of_the_controls():
     """With enough controls the rate asked for, with fewer for some sources what all of them can tell."""
-    assert recovery._rate_said(np.array([1 / 1000, 1 / 5000])) == "power at a false-alarm rate of 0.001"
-    assert "rate of 0.001 to 0.00195, NOT 0.001" in recovery._rate_said(np.array([1 / 512, 1 / 5000]))
-    assert "some have 511" in recovery._rate_said(np.array([1 / 512, 1 / 5000]))
+    assert powers._rate_said(np.array([1 / 1000, 1 / 5000])) == "power at a false-alarm rate of 0.001"
+    assert "rate of 0.001 to 0.00195, NOT 0.001" in powers._rate_said(np.array([1 / 512, 1 / 5000]))
+    assert "some have 511" in powers._rate_said(np.array([1 / 512, 1 / 5000]))
 
 
 def test_a_new_plugin_gets_a_report_card(archive):
     """A plugin that the run was judged without is asked for its power, but is no part of the run's completeness."""
     stranger = Path(__file__).parent / "third_party" / "stranger_plugin" / "longest_run.py"
     asked = Asked(archive / "run", archive / "grid.toml", plugins=(stranger,), workers=1)
-    cards, _ = recovery.report_cards(asked, cli._Silent())
+    cards, _ = powers.report_cards(asked, cli._Silent())
     assert "longest_run" in {card.plugin for card in cards}
     assert "longest_run" not in {entry.plugin.name for entry in study_module.opened(asked)[2].loaded}
 
@@ -407,7 +407,8 @@ def test_an_error_inside_leaves_its_traceback_in_the_log(archive, tmp_path, monk
     def broken(*_args, **_kwargs):
         raise ZeroDivisionError("planted")
 
-    monkeypatch.setattr(recovery, "study_of", broken)
+    for module in (recovery, powers):
+        monkeypatch.setattr(module, "study_of", broken)
     for command in (["completeness", tmp_path / "run"], ["plugins", "--power", tmp_path / "run"]):
         (tmp_path / "run" / "log.txt").unlink(missing_ok=True)
         assert cli.run_command([str(a) for a in [*command, "-q"]]) == 1

@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 import skies
-from hindlight import cli, completeness, hiding, recovery, study
+from hindlight import cli, completeness, hiding, powers, recovery, study
 from hindlight.judge import Judgement
 from hindlight.order import book
 from hindlight.study import Asked, FieldControls
@@ -96,7 +96,7 @@ def test_what_was_measured_of_sources_is_in_the_table(report):
 
 def test_report_cards_of_two_fields(archive, capsys):
     """Power is told, too, and with periods searched nothing breaks."""
-    cards, _ = recovery.report_cards(Asked(archive / "run", archive / "grid.toml", workers=1), cli._Silent())
+    cards, _ = powers.report_cards(Asked(archive / "run", archive / "grid.toml", workers=1), cli._Silent())
     assert next(card for card in cards if card.plugin == "chi_square").power["smooth"] > 0.4
     searching = archive / "searching.toml"
     searching.write_text(GRID.replace("per_cell = 8", "per_cell = 1") + "period_search = true\n", encoding="utf-8")

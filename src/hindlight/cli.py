@@ -488,7 +488,7 @@ def _print_completeness(run: Path, report: Any) -> None:
 def _print_power(run: Path, files: tuple[Path, ...], quiet: bool, verbose: bool) -> None:
     """A statistic's report card, for each."""
     from hindlight.layout import half_text
-    from hindlight.recovery import report_cards
+    from hindlight.powers import report_cards
     from hindlight.study import Asked
 
     with _watching(quiet, verbose) as watcher:

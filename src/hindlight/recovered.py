@@ -12,12 +12,12 @@ import numpy as np
 from hindlight import completeness, planted, unseen
 from hindlight.chances import Made, Seen, chance
 from hindlight.completeness import Found, Injection, Null
+from hindlight.completeness_schema import COMPLETENESS, COMPLETENESS_CHANNELS, COMPLETENESS_LIMITS, COMPLETENESS_TARGETS
 from hindlight.duplicates import counts
 from hindlight.hiding import Places, Used, places_said
 from hindlight.lightcurve import FloatArray
 from hindlight.looks import Looks
 from hindlight.order import book
-from hindlight.schema import COMPLETENESS, COMPLETENESS_CHANNELS, COMPLETENESS_LIMITS, COMPLETENESS_TARGETS
 from hindlight.settings import Controls
 from hindlight.store import RunFolder
 from hindlight.study import Study

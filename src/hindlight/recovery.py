@@ -5,56 +5,44 @@ The run is only read; what is made goes beside its result tables. The pieces of 
 
 from __future__ import annotations
 
-import time
-from collections import Counter
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
-from functools import partial
-from itertools import chain
-from typing import Any
 
 import astropy.table
 import numpy as np
 from numpy.typing import NDArray
 
-from hindlight import brighter, completeness, judge, plan, planted, ranking, record, report_card, store
+from hindlight import brighter, completeness, judge, plan, planted, ranking, record, store
 from hindlight.chances import Made
 from hindlight.completeness import Found, Injection, Null
 from hindlight.crew import assembled
 from hindlight.duplicates import counts
 from hindlight.errors import NothingToDoError
-from hindlight.fence import call
 from hindlight.hiding import Places, Used, hidden, places
 from hindlight.injection import PULSES
 from hindlight.lifted import copies
-from hindlight.lightcurve import FloatArray, IntArray, LightCurve
+from hindlight.lightcurve import IntArray
 from hindlight.order import book
-from hindlight.plugin import PeriodSearch, Statistic
 from hindlight.positions import read_targets, serves
 from hindlight.recovered import UPPER_BOUND, completeness_table, metadata, proof_remarks, remarks, target_tables
-from hindlight.report_card import Power
-from hindlight.study import Asked, FieldControls, Study, all_frames, is_small, opened, study_of, subsets_of
+from hindlight.study import Asked, FieldControls, Study, is_small, opened, study_of, subsets_of
 from hindlight.tables import write_table
-from hindlight.tasks import position_blocks, residuals
+from hindlight.tasks import residuals
 from hindlight.trials import (
     ALL,
     EXTRA,
     Outcomes,
     Subset,
     count_frames,
-    curves_of,
     judge_controls,
     judge_copies,
     judge_injected,
     plant_in_frame,
-    rank_controls,
     search_controls,
 )
 from hindlight.verdicts import Watcher
-from hindlight.wording import from_to
 
 INJECTIONS_AT_ONCE = 128
-POWER_RATE = 1e-3
 Mask = NDArray[np.bool_]
 
 
@@ -78,11 +66,11 @@ def recover(asked: Asked, watcher: Watcher) -> Report:
     ephemerides = read_targets(asked.targets) if asked.targets is not None else None
     with run.locked(), record.logged(run), assembled(asked.workers, None, is_small(run, order.settings)) as crew:
         study = study_of(run, order, plugins, crew, watcher, subsets_of)
-        nulls, units = _nulls(study)
-        used = _counted(study)
-        at = _places(study, used, nulls)
+        nulls, units = nulls_of(study)
+        used = counted_of(study)
+        at = places_of(study, used, nulls)
         wanted = {name: hidden(study.cells, one, study.settings.completeness) for name, one in at.items()}
-        outcomes = _outcomes(study, wanted, nulls, units, with_plugins=False)
+        outcomes = outcomes_of(study, wanted, nulls, units, with_plugins=False)
         proofs = _proofs(study)
         meta = {**metadata(study, units), "run_state": record.state(run, order.settings, plugins)}
         table = completeness_table(study, at, wanted, outcomes, meta)
@@ -98,57 +86,7 @@ def recover(asked: Asked, watcher: Watcher) -> Report:
     return Report(table, told.targets, told.limits, told.channels, said)
 
 
-def report_cards(asked: Asked, watcher: Watcher) -> tuple[list[Power], tuple[str, ...]]:
-    """The power of each statistic alone on made-up sources in all frames of a run, and what is to be said of it."""
-    run, order, plugins = opened(asked, with_new=True)
-    with run.locked(), record.logged(run), assembled(asked.workers, None, is_small(run, order.settings)) as crew:
-        study = study_of(run, order, plugins, crew, watcher, lambda frames: [all_frames(frames)], every_control=True)
-        nulls, units = _nulls(study)
-        at = _places(study, _counted(study), nulls)[ALL]
-        wanted = hidden(study.cells, at, study.settings.completeness)
-        outcome = _outcomes(study, {ALL: wanted}, nulls, units, with_plugins=True)[ALL]
-        asks: list[Statistic | PeriodSearch] = [
-            *plugins.statistics,
-            *(plugins.period_searches if order.settings.completeness.period_search else ()),
-        ]
-        false = _false_alarms(study, at, nulls)
-        costs = _costs(study, asks)
-    hit = report_card.hits(outcome.found.own_p, outcome.found.lowest_p, POWER_RATE)
-    cards = report_card.cards(asks, hit, [study.cells[one.cell] for one in wanted], false, costs)
-    empty = report_card.blank(asks, [nulls[found.number][ALL].judgement for found in study.fields])
-    kinds = Counter(study.cells[one.cell].kind for one in wanted)
-    said = [_rate_said(outcome.found.lowest_p), report_card.columns_said(kinds, len(at.ids))]
-    said += report_card.presence_said(asks)
-    said += report_card.silence_said(asks, {card.plugin: card.power for card in cards}, empty)
-    if not order.settings.completeness.period_search:
-        said.append("period searches are left out: [completeness] period_search = true in the run's settings asks them")
-    return cards, tuple(said)
-
-
-def _false_alarms(study: Study, at: Places, nulls: Mapping[int, Mapping[str, Null]]) -> Mask:
-    """Which plugin alone finds which blank control that may hold a source, each among the others: (n, n_plugins)."""
-    here = [(f, np.intersect1d(f.ids, at.ids)) for f in study.fields]
-    jobs = [(ids, replace(nulls[f.number][ALL], brighter={})) for f, ids in here if len(ids)]
-    ranked = study.each("ranking controls", rank_controls, jobs)
-    return np.concatenate([report_card.hits(p, lowest, POWER_RATE) for p, lowest in ranked])
-
-
-def _rate_said(lowest_p: FloatArray) -> str:
-    """At which rate of false alarms power is told, by the smallest p-value that each source could have got."""
-    low, high = (float(np.maximum(POWER_RATE, p)) for p in (lowest_p.min(), lowest_p.max()))
-    if high <= POWER_RATE * (1 + 1e-9):
-        return f"power at a false-alarm rate of {POWER_RATE:g}"
-    rates = from_to(low, high, ".3g")
-    fewest = round(1.0 / float(lowest_p.max()) - 1.0)
-    return (
-        f"power at a false-alarm rate of {rates}, NOT {POWER_RATE:g}: that takes {round(1 / POWER_RATE) - 1} controls beside "
-        f"the one that holds the source, some have {fewest}, those of second passes and of other fields in the same "
-        f"frames included; at {POWER_RATE:g} power is lower. A run of its own with [controls] per_field = "
-        f"{round(1.2 / POWER_RATE)} reaches it where so many fit into the frames"
-    )
-
-
-def _nulls(study: Study) -> tuple[dict[int, dict[str, Null]], dict[str, float]]:
+def nulls_of(study: Study) -> tuple[dict[int, dict[str, Null]], dict[str, float]]:
     """Each field's null in each subset, and the median frame error of each channel over all controls."""
     size = study.settings.ranking.gather_curves
     groups = [(f, f.ids[start : start + size]) for f in study.fields for start in range(0, len(f.ids), size)]
@@ -228,7 +166,7 @@ def _search_nulls(study: Study, nulls: Mapping[int, Mapping[str, Null]]) -> None
         judge.spread(null.judgement, result, passes, study.columns)
 
 
-def _counted(study: Study) -> dict[str, Used]:
+def counted_of(study: Study) -> dict[str, Used]:
     """The usable frames of every target, by subset."""
     size = study.settings.ranking.gather_curves
     groups = [
@@ -247,7 +185,7 @@ def _counted(study: Study) -> dict[str, Used]:
     }
 
 
-def _places(study: Study, used: Mapping[str, Used], nulls: Mapping[int, Mapping[str, Null]]) -> dict[str, Places]:
+def places_of(study: Study, used: Mapping[str, Used], nulls: Mapping[int, Mapping[str, Null]]) -> dict[str, Places]:
     """Where sources are hidden in each subset.
 
     Raises `NothingToDoError` where no target has a control that is measured as well as it is.
@@ -262,7 +200,7 @@ def _places(study: Study, used: Mapping[str, Used], nulls: Mapping[int, Mapping[
     return at
 
 
-def _outcomes(
+def outcomes_of(
     study: Study, wanted: Mapping[str, Sequence[Injection]], nulls: Mapping[int, Mapping[str, Null]],
     units: Mapping[str, float], with_plugins: bool,
 ) -> dict[str, Outcomes]:  # fmt: skip
@@ -330,24 +268,3 @@ def _proofs(study: Study) -> list[planted.Proof | None]:
         chosen += mine[np.unique(np.linspace(0, len(mine) - 1, min(each, len(mine))).astype(int))].tolist()
     controls = np.sort(np.concatenate([found.ids for found in study.fields]))
     return study.each("adding sources to pixels", plant_in_frame, [(frame, controls) for frame in chosen])
-
-
-def _costs(study: Study, plugins: Sequence[Statistic | PeriodSearch]) -> list[float]:
-    """Seconds that each plugin takes for a thousand calls with one light curve (or all of a position), by the wall clock."""
-    ids = study.fields[0].ids[:INJECTIONS_AT_ONCE]
-    curves = curves_of(position_blocks(study.order, ids)["blocks"])
-    for curve in chain.from_iterable(curves):
-        _ = curve.above_quiet if len(curve) else None  # what statistics share is not the cost of the first one asked
-    return [_cost(plugin, curves) for plugin in plugins]
-
-
-def _cost(plugin: Statistic | PeriodSearch, curves: Sequence[Sequence[LightCurve]]) -> float:
-    """The same for one plugin, NaN where no light curve has enough samples for it."""
-    method: Callable[[Any], Any] = plugin.compute if isinstance(plugin, Statistic) else plugin.search
-    given: list[Any] = [channels for one in curves if (channels := judge.timed_curves(one, plugin.min_points))]
-    if isinstance(plugin, Statistic) and not plugin.all_channels:
-        given = list(chain.from_iterable(given))
-    start = time.perf_counter()
-    for curve in given:
-        call(plugin, partial(method, curve), "")
-    return 1000.0 * (time.perf_counter() - start) / len(given) if given else float("nan")
