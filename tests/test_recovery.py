@@ -320,6 +320,7 @@ def test_a_statistic_that_finds_nothing_says_why():
     values = {
         ("a", f"{name}_x"): np.full(3, value) for name, value in (("short", np.nan), ("dull", 1.0), ("keen", 1.0))
     }
+    values["a", "keen_word"] = np.array(["", "yes", ""], object)  # not ranked, and no number
     empty = report_card.blank(asked, [Judgement(3, values | {("", "pairs_x"): np.full(3, np.nan)})])
     assert empty == {"plain", "short", "pairs"}
     power = {plugin.name: {"nothing": 0.1, "smooth": float(plugin.name == "keen")} for plugin in asked}

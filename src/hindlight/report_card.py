@@ -94,17 +94,15 @@ def columns_said(sources: Mapping[str, int], n_controls: int) -> str:
 
 def blank(asked: Sequence[Statistic | PeriodSearch], judgements: Sequence[Judgement]) -> set[str]:
     """The plugins whose ranked columns have no value at any position."""
+    ranked = {p.name: {f"{p.name}_{column.name}" for column in p.columns if column.unusual is not None} for p in asked}
+    asked_for = set().union(*ranked.values())
     valued = {
         full
         for judged in judgements
         for (_, full), values in judged.values.items()
-        if np.isfinite(np.asarray(values, float)).any()
+        if full in asked_for and np.isfinite(np.asarray(values, float)).any()
     }
-    return {
-        plugin.name
-        for plugin in asked
-        if not any(f"{plugin.name}_{column.name}" in valued for column in plugin.columns if column.unusual)
-    }
+    return {name for name, columns in ranked.items() if not columns & valued}
 
 
 def silence_said(
