@@ -8,10 +8,9 @@ from scipy import stats
 
 import hidden
 from hindlight import completeness
-from hindlight.completeness import NOTHING, Cell, Looks, bar, by_cycle, by_epoch, duty_limit, jeffreys, weights
+from hindlight.completeness import NOTHING, Cell, bar, jeffreys
 from hindlight.injection import PULSES, SMOOTH
 from hindlight.settings import Completeness
-from hindlight.timing import DAY
 
 
 @pytest.mark.parametrize(
@@ -50,65 +49,15 @@ def test_the_other_interval_that_is_recommended_says_the_same(k, n, low, high):
         assert ours[1] - ours[0] < high - low
 
 
+def test_one_sided_limit():
+    """None of 100: below 0.018977 at 95 %, one-sided, which is the upper end of the 90 % interval; scipy.stats.beta.ppf."""
+    assert stats.beta.ppf(0.95, 0.5, 100.5) == pytest.approx(0.018977, abs=1e-6)
+    assert jeffreys(0, 100, 0.9)[1] == pytest.approx(0.018977, abs=1e-6)
+
+
 def test_interval_of_nothing():
     """No trials, no interval."""
     assert jeffreys(0, 0) == (0.0, 1.0)
-
-
-@pytest.mark.parametrize(
-    ("n", "limit"), [(10, 0.258866), (30, 0.0950339), (100, 0.0295130), (1000, 0.00299125)]
-)  # fmt: skip
-def test_duty_limit_of_looks_that_miss_nothing(n, limit):
-    """The exact one-sided binomial limit, 1 - 0.05^(1/n)."""
-    assert duty_limit(np.ones(n)) == pytest.approx(limit, abs=1e-6)
-
-
-def test_duty_limit_of_looks_that_see_part():
-    """Twenty looks of 0.1 and ten of 0.3; and looks that set no limit."""
-    assert duty_limit(np.concatenate([np.full(20, 0.1), np.full(10, 0.3)])) == pytest.approx(0.560685, abs=1e-6)
-    assert np.isnan(duty_limit(np.full(20, 0.1)))
-    assert np.isnan(duty_limit(np.empty(0)))
-    assert duty_limit(np.ones(1)) == pytest.approx(0.95)
-
-
-def test_chance_to_see_a_flux():
-    """At a threshold of 5 sigma a flux of 5, 6, 7 sigma is seen with these chances."""
-    seen = completeness.chance_seen(np.array([5.0, 6.0, 7.0]), np.ones(3), np.full(3, 5.0))
-    assert seen == pytest.approx([0.5, 0.8413, 0.9772], abs=5e-5)
-
-
-def looks(look, channel, share=None):
-    """Looks with errors of 1 and thresholds of 5."""
-    n = len(look)
-    return Looks(np.array(look), np.array(channel), np.ones(n), np.full(n, 5.0), np.ones(n) if share is None else share)
-
-
-def test_frames_of_one_look():
-    """Frames of one channel are independent tries, another channel adds none, parts of a window add up."""
-    assert weights(looks([0, 0, 1], [0, 0, 0]), 5.0) == pytest.approx([0.75, 0.5])
-    assert weights(looks([0, 0], [0, 1]), 5.0) == pytest.approx([0.5])
-    assert weights(looks([0, 0], [0, 0], np.array([0.2, 0.5])), 50.0) == pytest.approx([0.7])
-    assert weights(looks([0, 0], [0, 0], np.array([0.8, 0.5])), 50.0) == pytest.approx([1.0])
-
-
-def test_flux_limits():
-    """A duty cycle of a half is excluded by ten looks only where they see enough of them; by three never."""
-    ten = looks(range(10), [0] * 10)
-    flux = completeness.flux_limit(ten, 0.5)
-    assert duty_limit(weights(ten, flux)) == pytest.approx(0.5, abs=1e-6)
-    assert duty_limit(weights(ten, flux - 0.1)) > 0.5 or np.isnan(duty_limit(weights(ten, flux - 0.1)))
-    assert np.isnan(completeness.flux_limit(looks(range(3), [0] * 3), 0.5))
-
-
-def test_epochs_and_cycles():
-    """Frames nearer than the gap are one look, those without a clock are one together; cycles by the nearest pulse."""
-    t = np.array([3.0, 0.0, np.nan, 0.2, 3.3, np.nan]) * DAY
-    assert by_epoch(t, 0.5).tolist() == [1, 0, 2, 0, 1, 2]
-    assert by_epoch(np.full(2, np.nan), 0.5).tolist() == [0, 0]
-    assert by_epoch(np.empty(0), 0.5).tolist() == []
-    cycle, share = by_cycle(np.array([0.0, 1000.0, 1020.0, 5500.0]), np.full(4, 40.0), 1000.0, 0.0, 60.0)
-    assert cycle.tolist() == [0, 1, 1, 2]
-    assert share == pytest.approx([40 / 60, 40 / 60, 30 / 60, 0.0])
 
 
 @pytest.mark.parametrize(("dependent", "method"), [(False, "bh"), (True, "by")])
@@ -196,14 +145,6 @@ def test_completeness_agrees_with_simulated_archives():
     ]
     assert len(p) * min(p) > 0.01, (hid.mean(axis=0), made.mean(axis=0), p)
     assert 0.1 < made[:, 0].mean() < 0.95, "a cell that is always or never found would agree by itself"
-
-
-def test_between_fluxes_of_the_grid():
-    """Linear in the logarithm of the flux, nothing outside."""
-    grid, found = np.array([1.0, 10.0, 100.0]), np.array([0.0, 0.5, 1.0])
-    assert completeness.between(10**0.5, grid, found) == pytest.approx(0.25)
-    assert np.isnan(completeness.between(1000.0, grid, found))
-    assert np.isnan(completeness.between(np.nan, grid, found))
 
 
 def test_bright_sources_are_ranked_as_a_run_ranks_bright_targets():

@@ -100,9 +100,10 @@ def test_every_ucd_is_valid():
     """Each UCD in the schema and in the shipped plugins is in the IVOA's list (UCD1+ 1.5, as astropy carries it)."""
     from astropy.io.votable.ucd import check_ucd
 
-    from hindlight import host, schema
+    from hindlight import completeness_schema, host, schema
 
-    columns = [c for v in vars(schema).values() if isinstance(v, tuple) for c in v if isinstance(c, schema.TableColumn)]
+    tables = [v for module in (schema, completeness_schema) for v in vars(module).values() if isinstance(v, tuple)]
+    columns = [c for table in tables for c in table if isinstance(c, schema.TableColumn)]
     columns += [c for e in host.load(host.PluginSpec()).loaded for c in e.plugin.columns]
     assert len(columns) > 100
     for column in columns:

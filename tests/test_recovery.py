@@ -1,5 +1,6 @@
 """`hindlight completeness` and `plugins --power` on a small archive: tables, their bytes, what is said, and mistakes."""
 
+import re
 import shutil
 from pathlib import Path
 from types import SimpleNamespace
@@ -9,7 +10,7 @@ import pytest
 from astropy.table import Table
 
 import skies
-from hindlight import Column, Statistic, cli, completeness, planted, recovered, recovery, report_card, trials
+from hindlight import Column, Statistic, cli, completeness, planted, powers, recovered, recovery, report_card, trials
 from hindlight import study as study_module
 from hindlight.judge import Judgement
 from hindlight.order import book
@@ -108,6 +109,24 @@ def test_unseen_targets_have_limits(report):
     assert np.isnan(np.asarray(seen["lowest_duty_limit"], float)).all()
 
 
+def test_unseen_targets_have_limits_in_each_channel(report):
+    """In the channel's own unit, of its own frames: a steady source is seen in fewer of them than of all channels' looks."""
+    targets = {str(row["name"]): row for row in report.targets}
+    assert len(report.channels) == 2 * (report.targets["standing"] == "unseen").sum()
+    for row in report.channels:
+        radio = "north" in row["channel"]
+        assert row["flux_unit"] == ("Jy/beam" if radio else "adu")
+        assert row["fluence_unit"] == ("Jy/beam s" if radio else "adu")
+        assert row["frame_error"] == pytest.approx(1.0 if radio else 40 * 4.3, rel=0.3)
+        assert (row["n_used"], row["n_looks"]) == (14, 14)
+        exposure = RADIO.exposure_s if radio else OPTICAL.exposure_s
+        assert row["exposure"] == pytest.approx(14 * exposure)
+        assert row["duty_limit"] == pytest.approx((1 - 0.05 ** (1 / 14)) / 0.977, rel=0.05)
+        assert row["rate_limit"] == pytest.approx(86400 * 2.9957 / (14 * exposure) / 0.977, rel=0.05)
+        assert row["flux_limit_half"] > targets[str(row["name"])]["flux_limit_half"] * row["frame_error"]
+        assert str(row["sentence"]).startswith("no pulse of fluence >= ")
+
+
 def test_known_ephemeris_makes_looks_cycles(archive, tmp_path):
     """With a period of 100 days there are at most as many looks as cycles, and only frames in the window count."""
     text = (archive / "targets.csv").read_text(encoding="utf-8").splitlines()
@@ -131,7 +150,11 @@ def test_known_ephemeris_makes_looks_cycles(archive, tmp_path):
 
 def test_same_bytes_with_two_workers(archive, tmp_path):
     """The tables do not depend on who did the work."""
-    names = [f"completeness{which}{ending}" for which in ("", "_targets", "_limits") for ending in (".ecsv", ".vot")]
+    names = [
+        f"completeness{which}{ending}"
+        for which in ("", "_targets", "_limits", "_channels")
+        for ending in (".ecsv", ".vot")
+    ]
     made = []
     for workers in ("1", "2"):
         command = ["completeness", str(archive / "run"), "--settings", str(archive / "grid.toml"), "--workers", workers]
@@ -215,30 +238,70 @@ def test_with_period_search(archive, tmp_path):
 
 
 def test_a_grid_without_pulse_trains(archive, tmp_path):
-    """Smooth variables alone: targets have no chance of a pulse train to be told, and nothing warns."""
+    """Smooth variables alone: targets are compared with these, and nothing warns."""
     text = GRID.replace("duty_cycles = [0.3]", "duty_cycles = []").replace("pixels = 6", "pixels = 0")
     (tmp_path / "g.toml").write_text(text, encoding="utf-8")
     report = recovery.recover(Asked(archive / "run", tmp_path / "g.toml", workers=1), cli._Silent())
     assert set(report.table["kind"]) == {"nothing", "smooth"}
-    assert np.isnan(np.asarray(report.targets["found_probability"], float)).all()
+    assert "smooth" in set(report.targets["like_kind"]) <= {"smooth", ""}
 
 
 def test_report_cards(archive, capsys):
     """Each statistic's power by itself, at the rate that some sixty controls can tell."""
-    cards, said = recovery.report_cards(Asked(archive / "run", archive / "grid.toml", workers=1), cli._Silent())
+    cards, said = powers.report_cards(Asked(archive / "run", archive / "grid.toml", workers=1), cli._Silent())
     assert {"brightest", "chi_square", "mean_flux"} <= {card.plugin for card in cards}
     assert "NOT 0.001: that takes 999 controls" in said[0]
     power = {card.plugin: card.power for card in cards}
     assert power["chi_square"]["smooth"] >= 0.5
     assert power["chi_square"]["nothing"] <= 0.5
     assert all(card.cost_s > 0 for card in cards)
-    assert (
-        "of 12 sources of kind 'pulses' and of 12 sources of kind 'smooth'; 'nothing': the same of 6 controls"
-        in said[1]
+    assert "of 12 sources of kind 'pulses' and of 12 sources of kind 'smooth', over all fluxes of the grid" in said[1]
+    n_controls = int(re.search(r"'nothing': the share of (\d+) controls without a source", said[1]).group(1))
+    assert n_controls >= 40
+    assert power["chi_square"]["nothing"] * n_controls == pytest.approx(
+        round(power["chi_square"]["nothing"] * n_controls)
     )
+    assert 0 < power["chi_square"]["nothing"] < 0.1
+    half = {card.plugin: card.half for card in cards}
+    assert 2 < half["chi_square"]["smooth"] < 60
+    assert "mean_flux: asks whether a source is there" in said[2]
+    assert {card.plugin for card in cards if card.only_here is None} == {"mean_flux"}
     silent = [name for name, of in power.items() if not any(share for kind, share in of.items() if kind != "nothing")]
-    assert [line.partition(" ")[0] for line in said[2:-1]] == silent
+    assert [line.partition(" ")[0] for line in said[3:-1]] == silent
     assert cli.run_command(["plugins", "--power", str(archive / "none")]) == 2
+
+
+def test_report_cards_take_controls_of_second_passes():
+    """A field's later controls are among those that sources are ranked among there, and not in completeness."""
+    positions = {
+        "id": np.arange(4), "kind": np.array(["target", "control", "control", "control"], object),
+        "search": np.full(4, -1), "field": np.zeros(4, int), "added_for": np.array([-1, -1, -1, 0]),
+        "ra": np.full(4, 10.0), "dec": np.arange(4.0), "name": np.array(["a", "", "", ""], object),
+    }  # fmt: skip
+    assert study_module.fields_of(positions)[0].ids.tolist() == [1, 2]
+    found = study_module.fields_of(positions, every_control=True)[0]
+    assert found.ids.tolist() == [1, 2, 3]
+    assert (found.targets, found.target_ids.tolist(), len(found.vectors)) == (("a",), [0], 3)
+
+
+def test_what_only_one_finds_is_counted_among_those_of_p_value():
+    """One that asks about presence finds a source too, and takes it from nobody; the flux of half is by kind."""
+    cells = [
+        completeness.Cell("nothing", 0.0),
+        *(completeness.Cell("smooth", flux, 100.0) for flux in (2.0, 2.0, 8.0, 8.0)),
+    ]
+    ranked, there = Column("x", "a number", unusual="high"), Column("x", "a number", unusual="high", about="presence")
+    asked = [card_plugin("keen", ranked), card_plugin("present", there), card_plugin("slow", ranked)]
+    hit = np.array([[0, 1, 0], [0, 1, 0], [1, 1, 0], [1, 1, 1], [1, 1, 1]], bool)
+    false = np.array([[0, 1, 0]] * 3 + [[1, 0, 0]], bool)
+    keen, present, slow = report_card.cards(asked, hit, cells, false, [1.0, 2.0, 3.0])
+    assert (keen.only_here, present.only_here, slow.only_here) == (1, None, 0)
+    assert keen.power == {"nothing": 0.25, "smooth": 0.75}
+    assert present.power["nothing"] == 0.75
+    assert keen.half["smooth"] == 2.0
+    assert present.half["smooth"] == -np.inf
+    assert slow.half["smooth"] == pytest.approx(4.0)
+    assert report_card.hits(np.array([[0.02, 0.001]]), np.array([0.01]), 1e-3).tolist() == [[False, True]]
 
 
 def card_plugin(name, *columns, whole=False, fewest=3):
@@ -257,6 +320,7 @@ def test_a_statistic_that_finds_nothing_says_why():
     values = {
         ("a", f"{name}_x"): np.full(3, value) for name, value in (("short", np.nan), ("dull", 1.0), ("keen", 1.0))
     }
+    values["a", "keen_word"] = np.array(["", "yes", ""], object)  # not ranked, and no number
     empty = report_card.blank(asked, [Judgement(3, values | {("", "pairs_x"): np.full(3, np.nan)})])
     assert empty == {"plain", "short", "pairs"}
     power = {plugin.name: {"nothing": 0.1, "smooth": float(plugin.name == "keen")} for plugin in asked}
@@ -283,16 +347,16 @@ def test_the_two_bars_are_explained():
 
 def test_the_rate_of_power_is_that_of_the_controls():
     """With enough controls the rate asked for, with fewer for some sources what all of them can tell."""
-    assert recovery._rate_said(np.array([1 / 1000, 1 / 5000])) == "power at a false-alarm rate of 0.001"
-    assert "rate of 0.001 to 0.00195, NOT 0.001" in recovery._rate_said(np.array([1 / 512, 1 / 5000]))
-    assert "some have 511" in recovery._rate_said(np.array([1 / 512, 1 / 5000]))
+    assert powers._rate_said(np.array([1 / 1000, 1 / 5000])) == "power at a false-alarm rate of 0.001"
+    assert "rate of 0.001 to 0.00195, NOT 0.001" in powers._rate_said(np.array([1 / 512, 1 / 5000]))
+    assert "some have 511" in powers._rate_said(np.array([1 / 512, 1 / 5000]))
 
 
 def test_a_new_plugin_gets_a_report_card(archive):
     """A plugin that the run was judged without is asked for its power, but is no part of the run's completeness."""
     stranger = Path(__file__).parent / "third_party" / "stranger_plugin" / "longest_run.py"
     asked = Asked(archive / "run", archive / "grid.toml", plugins=(stranger,), workers=1)
-    cards, _ = recovery.report_cards(asked, cli._Silent())
+    cards, _ = powers.report_cards(asked, cli._Silent())
     assert "longest_run" in {card.plugin for card in cards}
     assert "longest_run" not in {entry.plugin.name for entry in study_module.opened(asked)[2].loaded}
 
@@ -312,7 +376,7 @@ def test_too_few_controls_say_so(tmp_path):
         assert cli.run_command(command) == status
     said = (tmp_path / "run10" / "completeness.txt").read_text(encoding="utf-8")
     assert "too few controls for 30 of 30 sources" in said
-    assert "at 10 controls of 1 field\n" in said
+    assert "at 10 controls of 1 field, measured as often as targets\n" in said
     assert not Table.read(tmp_path / "run10" / "completeness.ecsv")["n_recovered"].any()
 
 
@@ -335,3 +399,21 @@ def test_mistakes_end_with_one_line(archive, tmp_path, capsys):
         assert len(lines) == 1, lines
         assert words in lines[0]
     assert cli.run_command(["plugins", "--power", "x", "--check", "y"]) == 2
+
+
+def test_an_error_inside_leaves_its_traceback_in_the_log(archive, tmp_path, monkeypatch, capsys):
+    """Both commands say that it is there, and it is."""
+    shutil.copytree(archive / "run", tmp_path / "run")
+
+    def broken(*_args, **_kwargs):
+        raise ZeroDivisionError("planted")
+
+    for module in (recovery, powers):
+        monkeypatch.setattr(module, "study_of", broken)
+    for command in (["completeness", tmp_path / "run"], ["plugins", "--power", tmp_path / "run"]):
+        (tmp_path / "run" / "log.txt").unlink(missing_ok=True)
+        assert cli.run_command([str(a) for a in [*command, "-q"]]) == 1
+        assert "the traceback is in the run's log.txt" in capsys.readouterr().err
+        said = (tmp_path / "run" / "log.txt").read_text(encoding="utf-8")
+        assert "Traceback" in said
+        assert "ZeroDivisionError: planted" in said

@@ -460,39 +460,44 @@ def _shade(count: int, most: int, shades: str) -> str:
 
 
 def _print_completeness(run: Path, report: Any) -> None:
-    """Completeness in all frames, a row for each kind of source and a column for each flux; then what is to be said."""
+    """Completeness by kind and flux, the flux found in half of the cases by instrument; then what is to be said."""
+    from hindlight import layout
+
     console = _console()
-    mine = report.table[report.table["subset"] == "all"]
-    fluxes = sorted({float(flux) for flux in mine["flux"]})
-    table = _simple_table(
-        "completeness in all frames, by peak flux in median frame errors",
-        "kind", "period (s)", "duty cycle", *(f"{flux:.3g}" for flux in fluxes),
-    )  # fmt: skip
-    rows: dict[tuple[str, ...], dict[float, str]] = {}
-    for row in mine:
-        key = (str(row["kind"]), *(_short(row[name]) for name in ("period", "duty_cycle", "window", "missing")))
-        rows.setdefault(key, {})[float(row["flux"])] = _short(row["completeness"])
-    for (kind, period, duty, *_), cells in rows.items():
-        _add(table, kind, period, duty, *(cells.get(flux, "") for flux in fluxes))
-    console.print(table)
+    for title, (names, rows) in (
+        ("completeness in all frames in %, its 95 % interval below, by peak flux in median frame errors",
+         layout.by_kind(report.table)),
+        ("peak flux in median frame errors found in half of the cases", layout.half_found(report.table)),
+    ):  # fmt: skip
+        table = _simple_table(title, *names)
+        for row in rows:
+            _add(table, *row)
+        console.print(table)
+    console.print(layout.false_alarms(report.table), markup=False)
     for line in report.remarks:
         console.print(visible(line), markup=False)
-    names = "completeness.ecsv, completeness_targets.ecsv, completeness_limits.ecsv (each .fits, .vot too)"
-    console.print(f"written to {run}: {names}, completeness.txt", markup=False)
+    files = "completeness.ecsv, completeness_targets, _limits, _channels.ecsv (each .fits, .vot too)"
+    console.print(f"written to {run}: {files}, completeness.txt", markup=False)
 
 
 def _print_power(run: Path, files: tuple[Path, ...], quiet: bool, verbose: bool) -> None:
     """A statistic's report card, for each."""
-    from hindlight.recovery import report_cards
+    from hindlight.layout import half_text
+    from hindlight.powers import report_cards
     from hindlight.study import Asked
 
     with _watching(quiet, verbose) as watcher:
         cards, remarks = report_cards(Asked(run, plugins=files), watcher)
     console = _console()
-    kinds = list(cards[0].power) if cards else []
-    table = _simple_table("what each statistic finds by itself", "name", *kinds, "only it finds", "s per 1000")
+    kinds = list(cards[0].half) if cards else []
+    heads = [name for kind in kinds for name in (kind, "half at")]
+    table = _simple_table(
+        "what each statistic finds by itself", "name", *heads, "nothing", "only it finds", "s per 1000"
+    )
     for card in cards:
-        _add(table, card.plugin, *(_short(card.power[k]) for k in kinds), card.only_here, _short(card.cost_s))
+        found = [cell for kind in kinds for cell in (_short(card.power[kind]), half_text(card.half[kind], card.fluxes))]
+        only = "" if card.only_here is None else card.only_here
+        _add(table, card.plugin, *found, _short(card.power["nothing"]), only, _short(card.cost_s))
     for line in remarks:
         console.print(visible(line), markup=False)
     console.print(table)

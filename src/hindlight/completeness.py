@@ -1,6 +1,6 @@
-"""What an archive could have shown: which made-up sources would have been found, and what looks without a detection say.
+"""What an archive could have shown: which made-up sources would have been found.
 
-Pure: judgements, p-values and looks in, verdicts and limits out. A source hidden at a control is judged and ranked by the
+Pure: judgements and p-values in, verdicts out. A source hidden at a control is judged and ranked by the
 code that ranks targets, among the other controls: one that carries a source leaves its own null. It is recovered if it
 would have been a candidate of the run, had it been one more target of it.
 """
@@ -14,21 +14,19 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import special, stats
+from scipy import stats
 
 from hindlight import calibrate, ranking, tails
 from hindlight.injection import PULSES, SMOOTH, Source, uniform
 from hindlight.judge import WHOLE, Judgement, joined, taken
 from hindlight.lifted import group_size
 from hindlight.lightcurve import FloatArray, IntArray
+from hindlight.looks import CONFIDENCE
 from hindlight.plugin import Column, Plugin
 from hindlight.settings import Completeness, Settings
-from hindlight.timing import DAY, from_nearest_pulse
+from hindlight.timing import DAY
 
 NOTHING = "nothing"  # a kind: no source at all, which tells the rate of false alarms
-CONFIDENCE = 0.95
-BISECTIONS = 60
-HIGHEST_FLUX = 1e4  # median frame errors; limits above it are none
 BRIGHTER = 1.5  # factor from one step of brightness to the next
 FAINT = -1  # a step: not bright
 SHARES = 50  # steps of the share of calibration in the variance
@@ -242,7 +240,10 @@ def _found(
     each = [_decided(rank, bars, settings, null.weight) for rank in among.ranks.ranks]
     decided = np.array(each, bool).reshape(-1, 2)
     enough = _most_used(judged) >= settings.detection.min_frames
-    own = [_own_p(among, plugin, columns, null.weight) for plugin in plugins]
+    own = [
+        _own_p(among.both, among.controls, among.sources, among.serving, plugin, columns, null.weight)
+        for plugin in plugins
+    ]
     return Found(
         decided[:, 0] & enough,
         decided[:, 1] & enough,
@@ -290,21 +291,41 @@ def _seen(judged: Judgement, thresholds: Mapping[str, ranking.Thresholds]) -> Ma
     return seen
 
 
-def _own_p(among: Ranked, plugin: Plugin, columns: Mapping[str, Column], weight: float) -> FloatArray:
-    """The p-values of sources by one plugin's calibrated columns alone, those that ask about presence included."""
+def own_of_controls(
+    null: Null, ids: IntArray, columns: Mapping[str, Column], plugins: Sequence[Plugin]
+) -> tuple[FloatArray, FloatArray]:
+    """The p-values of blank controls (ids, shape (n,)) by each plugin alone, each among the others: shape (n, n_plugins).
+
+    And the smallest that each could have, shape (n,).
+    """
+    rows, every = np.searchsorted(null.ids, ids), np.arange(null.judgement.n)
+    serving = null.serving[rows]
+    each = [_own_p(null.judgement, every, rows, serving, plugin, columns, null.weight) for plugin in plugins]
+    p = np.stack(each, axis=1) if each else np.empty((len(ids), 0))
+    return p, np.asarray(null.weight / (serving.sum(axis=1) + null.weight), float)
+
+
+def _own_p(
+    judgement: Judgement, controls: IntArray, sources: IntArray, serving: Mask, plugin: Plugin,
+    columns: Mapping[str, Column], weight: float,
+) -> FloatArray:  # fmt: skip
+    """The p-values of sources by one plugin's calibrated columns alone, those that ask about presence included.
+
+    `controls` and `sources` are rows of the judgement, `serving` says which of the first serve which of the second.
+    """
     mine = {f"{plugin.name}_{column.name}" for column in plugin.columns if column.unusual is not None}
-    keys = [key for key in sorted(among.both.values) if key[1] in mine]
-    matrix = ranking.oriented_matrix(among.both, keys, columns, among.controls)
+    keys = [key for key in sorted(judgement.values) if key[1] in mine]
+    matrix = ranking.oriented_matrix(judgement, keys, columns, controls)
     nulls: dict[bytes, calibrate.Null] = {}
     p = []
-    for row, mask in zip(among.sources, among.serving, strict=True):
+    for row, mask in zip(sources, serving, strict=True):
         if mask.tobytes() not in nulls:
-            nulls[mask.tobytes()] = calibrate.null_from(matrix[among.controls[mask]], [column for _, column in keys])
+            nulls[mask.tobytes()] = calibrate.null_from(matrix[controls[mask]], [column for _, column in keys])
         p.append(calibrate.rank(nulls[mask.tobytes()], matrix[row], weight).p_value)
     return np.array(p)
 
 
-def jeffreys(k: int, n: int, confidence: float = CONFIDENCE) -> tuple[float, float]:
+def jeffreys(k: float, n: int, confidence: float = CONFIDENCE) -> tuple[float, float]:
     """The interval of a binomial fraction: Beta(k + 1/2, n - k + 1/2), from 0 where k = 0, to 1 where k = n.
 
     Brown, Cai & DasGupta 2001 (Stat. Sci. 16, 101), eq. 6 and 7.
@@ -315,120 +336,22 @@ def jeffreys(k: int, n: int, confidence: float = CONFIDENCE) -> tuple[float, flo
     return low, high
 
 
-@dataclass(frozen=True, eq=False)
-class Looks:
-    """The usable frames of a target, shape (n,).
+def half_flux(fluxes: FloatArray, share: FloatArray) -> float:
+    """The flux from which half of the sources are found, from the shares found at fluxes, ascending, > 0; both shape (n,).
 
-    `look` numbers the independent looks they belong to, ascending from 0; `channel` numbers channels; `error` and
-    `threshold` are those of the frame's flux in median errors of its channel; `share` is the chance that a source that is
-    on during the look is on in this frame.
+    Linear in the logarithm of the flux, where the share first reaches a half; minus infinity where it does at the lowest
+    flux, infinity where it nowhere does, NaN for no fluxes.
     """
-
-    look: IntArray
-    channel: IntArray
-    error: FloatArray
-    threshold: FloatArray
-    share: FloatArray
-
-    @property
-    def n(self) -> int:
-        """How many looks."""
-        return int(self.look.max()) + 1 if self.look.size else 0
-
-
-def by_epoch(t_s: FloatArray, gap_days: float) -> IntArray:
-    """The epoch of each frame of shape (n,), from 0; frames without a clock (NaN) count as one epoch together."""
-    order = np.argsort(t_s, kind="stable")  # NaN last
-    later = np.diff(t_s[order], prepend=t_s[order][:1])
-    new = (later > gap_days * DAY) | (np.isnan(t_s[order]) & ~np.isnan(np.concatenate(([np.nan], t_s[order][:-1]))))
-    look = np.empty(len(t_s), np.int64)
-    look[order] = np.cumsum(new)
-    return look
-
-
-def by_cycle(
-    t_s: FloatArray, exposure_s: FloatArray, period: float, period_dot: float, window_s: float
-) -> tuple[IntArray, FloatArray]:
-    """The cycle of each frame (from 0, in order of time) and how much of the window around its pulse it covers.
-
-    `t_s` are seconds from the ephemeris' epoch, finite; an exposure that is not known, and a window of no width, are
-    taken as instants.
-    """
-    away = from_nearest_pulse(t_s, period, period_dot)
-    _, cycle = np.unique(np.rint((t_s - away) / period).astype(np.int64), return_inverse=True)
-    exposure = np.nan_to_num(exposure_s)
-    inside = (np.abs(away) <= (exposure + window_s) / 2).astype(float)
-    if not window_s > 0:
-        return cycle, inside
-    overlap = np.minimum(exposure / 2, away + window_s / 2) - np.maximum(-exposure / 2, away - window_s / 2)
-    return cycle, np.clip(overlap / window_s, 0.0, 1.0)
-
-
-def chance_seen(flux: FloatArray | float, error: FloatArray, threshold: FloatArray) -> FloatArray:
-    """The chance that Gaussian noise leaves a flux above threshold times error: Phi(flux / error - threshold)."""
-    return np.asarray(special.ndtr(flux / error - threshold))
-
-
-def weights(looks: Looks, flux: float) -> FloatArray:
-    """The chance of each look to show a source of this flux that is on; shape (n_looks,).
-
-    Frames of one look in different channels are of the same pulse: the best channel counts. Within a channel, frames
-    that hold the source surely (share 1) are independent tries, those that cover parts of a window are alternatives.
-    """
-    seen = looks.share * chance_seen(flux, looks.error, looks.threshold)
-    best = np.zeros(looks.n)
-    for channel in np.unique(looks.channel):
-        mine = looks.channel == channel
-        sure = mine & (looks.share >= 1.0)
-        missed = np.ones(looks.n)
-        np.multiply.at(missed, looks.look[sure], 1.0 - seen[sure])
-        parts = np.bincount(looks.look[mine & ~sure], seen[mine & ~sure], minlength=looks.n)
-        best = np.maximum(best, np.maximum(1.0 - missed, np.minimum(parts, 1.0)))
-    return best
-
-
-def duty_limit(weight: FloatArray, confidence: float = CONFIDENCE) -> float:
-    """The largest duty cycle q that looks without a detection allow: product of (1 - q weight) = 1 - confidence.
-
-    `weight` (n,) is each look's chance to show the source if it is on. For weights of 1 it is the exact one-sided
-    binomial limit 1 - (1 - confidence)^(1/n). NaN where the product is larger at q = 1: no limit.
-    """
-    wanted = np.log1p(-confidence)
-
-    def missed(q: float) -> float:
-        with np.errstate(divide="ignore"):
-            return float(np.log1p(-q * weight).sum())
-
-    if not missed(1.0) <= wanted:
+    reached = np.flatnonzero(share >= 0.5)
+    if len(fluxes) == 0:
         return float("nan")
-    low, high = 0.0, 1.0
-    for _ in range(BISECTIONS):
-        middle = (low + high) / 2
-        low, high = (middle, high) if missed(middle) > wanted else (low, middle)
-    return (low + high) / 2
-
-
-def flux_limit(looks: Looks, duty_cycle: float) -> float:
-    """The flux in median frame errors from which this duty cycle is excluded; NaN where the looks are too few."""
-
-    def excluded(flux: float) -> bool:
-        return bool(duty_limit(weights(looks, flux)) <= duty_cycle)
-
-    if looks.n == 0 or not excluded(HIGHEST_FLUX):
-        return float("nan")
-    low, high = 0.0, HIGHEST_FLUX
-    for _ in range(BISECTIONS):
-        middle = (low + high) / 2
-        low, high = (low, middle) if excluded(middle) else (middle, high)
-    return high
-
-
-def between(flux: float, fluxes: FloatArray, completeness: FloatArray) -> float:
-    """Completeness at a flux, linear in its logarithm between those of the grid (ascending, > 0); NaN outside them."""
-    known = fluxes > 0
-    if not (np.isfinite(flux) and flux > 0 and known.any()):
-        return float("nan")
-    return float(np.interp(np.log(flux), np.log(fluxes[known]), completeness[known], left=np.nan, right=np.nan))
+    if len(reached) == 0:
+        return float("inf")
+    at = int(reached[0])
+    if at == 0:
+        return float("-inf") if share[0] > 0.5 else float(fluxes[0])
+    part = (0.5 - share[at - 1]) / (share[at] - share[at - 1])
+    return float(fluxes[at - 1] * (fluxes[at] / fluxes[at - 1]) ** part)
 
 
 def summary_row(mine: Mask, outcome: Found, extra: Mapping[str, FloatArray]) -> dict[str, Any]:

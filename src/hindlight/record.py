@@ -4,9 +4,11 @@ from __future__ import annotations
 
 import hashlib
 import json
+import logging
 import platform
 import tomllib
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
@@ -14,7 +16,7 @@ from typing import Any
 import tomli_w
 
 from hindlight import host, settings
-from hindlight.errors import UsageError
+from hindlight.errors import HindlightError, UsageError
 from hindlight.files import archive_text
 from hindlight.settings import Settings, as_plain
 from hindlight.store import RunFolder
@@ -23,6 +25,8 @@ from hindlight.tables import damaged
 RECORDED_PACKAGES = (
     "hindlight", "numpy", "scipy", "astropy", "photutils", "pyarrow", "dask", "distributed", "nifty-ls",
 )  # fmt: skip
+
+log = logging.getLogger("hindlight")
 
 
 @dataclass(frozen=True)
@@ -118,6 +122,25 @@ def state(run: RunFolder, chosen: Settings, plugins: host.Plugins) -> str:
     rules = [as_plain(chosen.detection), as_plain(chosen.ranking), plugins.fingerprint()]
     digest.update(json.dumps(rules, sort_keys=True).encode())
     return f"sha256:{digest.hexdigest()[:32]}"
+
+
+@contextmanager
+def logged(run: RunFolder) -> Iterator[None]:
+    """Write the log to the run's log.txt while a command works; what goes wrong stays there with its traceback."""
+    handler = logging.FileHandler(run.file("log.txt"), encoding="utf-8", delay=True)
+    handler.setFormatter(logging.Formatter("%(asctime)s %(levelname)s %(message)s"))
+    log.addHandler(handler)
+    try:
+        yield
+    except HindlightError as error:
+        log.error("%s", error)
+        raise
+    except Exception:
+        log.exception("error inside the program")
+        raise
+    finally:
+        log.removeHandler(handler)
+        handler.close()
 
 
 def _measuring_plugins(plugins: host.Plugins) -> str:

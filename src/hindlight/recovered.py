@@ -3,17 +3,21 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 from typing import Any
 
 import astropy.table
 import numpy as np
 
-from hindlight import completeness, injection, planted
-from hindlight.completeness import Found, Injection, Looks, Null
+from hindlight import completeness, planted, unseen
+from hindlight.chances import Made, Seen, chance
+from hindlight.completeness import Found, Injection, Null
+from hindlight.completeness_schema import COMPLETENESS, COMPLETENESS_CHANNELS, COMPLETENESS_LIMITS, COMPLETENESS_TARGETS
 from hindlight.duplicates import counts
+from hindlight.hiding import Places, Used, places_said
 from hindlight.lightcurve import FloatArray
+from hindlight.looks import Looks
 from hindlight.order import book
-from hindlight.schema import COMPLETENESS, COMPLETENESS_LIMITS, COMPLETENESS_TARGETS
 from hindlight.settings import Controls
 from hindlight.store import RunFolder
 from hindlight.study import Study
@@ -41,7 +45,7 @@ def metadata(study: Study, units: Mapping[str, float]) -> dict[str, Any]:
     """What the tables say of themselves."""
     chosen = study.settings.completeness
     return {
-        "rule": "recovered: the p-value is below what the run's own p-values leave for one more target at its "
+        "rule": "recovered: the p-value is below what those of this run's target list leave for one more target at its "
         "false-discovery level; ranked among the other controls, by the tail bound where these cannot decide",
         "false_discovery_level": study.settings.ranking.level,
         "p_value_bar": study.bars.final,
@@ -54,17 +58,21 @@ def metadata(study: Study, units: Mapping[str, float]) -> dict[str, Any]:
 
 
 def completeness_table(
-    study: Study, wanted: Sequence[Injection], outcomes: Mapping[str, Outcomes], meta: Mapping[str, Any]
-) -> astropy.table.Table:
-    """completeness.ecsv."""
-    of_cell = np.array([one.cell for one in wanted])
+    study: Study, at: Mapping[str, Places], wanted: Mapping[str, Sequence[Injection]], outcomes: Mapping[str, Outcomes],
+    meta: Mapping[str, Any],
+) -> astropy.table.Table:  # fmt: skip
+    """completeness.ecsv; a subset without sources has no row."""
     rows = []
     for subset in study.subsets:
-        outcome = outcomes[subset.name]
+        if subset.name not in outcomes:
+            continue
+        outcome, there = outcomes[subset.name], at[subset.name]
+        of_cell = np.array([one.cell for one in wanted[subset.name]])
         for number, cell in enumerate(study.cells):
             row = {
                 "subset": subset.name, "instrument": subset.instrument, "decade": subset.decade,
-                "n_frames": len(subset.frames), "kind": cell.kind, "flux": cell.flux, "period": cell.period_s,
+                "n_frames": len(subset.frames), "n_fields": there.n_fields, "n_targets": there.n_targets,
+                "n_hosts": len(there.ids), "kind": cell.kind, "flux": cell.flux, "period": cell.period_s,
                 "duty_cycle": cell.duty_cycle, "duration": cell.duty_cycle * cell.period_s,
                 "window": cell.window * cell.duty_cycle * cell.period_s, "missing": cell.missing,
             }  # fmt: skip
@@ -72,13 +80,54 @@ def completeness_table(
     return astropy_table(COMPLETENESS, rows_to_columns(COMPLETENESS, rows), meta)
 
 
+@dataclass(frozen=True, eq=False)
+class TargetTables:
+    """completeness_targets.ecsv, completeness_limits.ecsv and completeness_channels.ecsv."""
+
+    targets: astropy.table.Table
+    limits: astropy.table.Table
+    channels: astropy.table.Table
+
+
 def target_tables(
-    study: Study, run: RunFolder, table: astropy.table.Table, ephemerides: Any, meta: Mapping[str, Any]
-) -> tuple[astropy.table.Table, astropy.table.Table]:
-    """completeness_targets.ecsv and completeness_limits.ecsv."""
-    candidates, channels = read_ecsv(run.file("candidates.ecsv")), read_ecsv(run.file("channels.ecsv"))
+    study: Study, run: RunFolder, made: Mapping[str, Made], shown: tuple[int, int], used: Mapping[str, Used],
+    ephemerides: Any, meta: Mapping[str, Any],
+) -> TargetTables:  # fmt: skip
+    """The tables about targets, from made-up sources and targets' frames, both by subset.
+
+    `shown` is how many frames show made-up pulses that surely should, and how many should.
+    """
+    candidates = {str(row["name"]): row for row in read_ecsv(run.file("candidates.ecsv"))}
+    channels = book(study.order.run, study.order.version).channels
+    rows: list[dict[str, Any]] = []
+    limits: list[dict[str, Any]] = []
+    each: list[dict[str, Any]] = []
+    for name, looks, cycles in _looks_of_targets(study, run, ephemerides):
+        row = candidates[name]
+        has = {subset: sum(of.get(name, {}).values()) for subset, of in used.items()}
+        seen = Seen(str(row["standing"]), _like_flux(row, looks), _seen_share(row), float(row["period"]), has)
+        told = _target_row(name, seen, looks, cycles) | chance(
+            seen, made, study.cells, study.settings.completeness.per_cell
+        )
+        if seen.standing == "unseen":
+            told |= unseen.over_all(looks)
+            limits += unseen.by_flux(name, looks, sorted(study.settings.completeness.fluxes))
+            for number, label in enumerate(looks.labels):
+                mine = looks.within(number)
+                if mine.n:
+                    each.append({"name": name, **unseen.in_channel(mine, number, channels[label].unit, cycles, shown)})
+        rows.append(told)
+    return TargetTables(
+        astropy_table(COMPLETENESS_TARGETS, rows_to_columns(COMPLETENESS_TARGETS, rows), meta),
+        astropy_table(COMPLETENESS_LIMITS, rows_to_columns(COMPLETENESS_LIMITS, limits), meta),
+        astropy_table(COMPLETENESS_CHANNELS, rows_to_columns(COMPLETENESS_CHANNELS, each), meta),
+    )
+
+
+def _looks_of_targets(study: Study, run: RunFolder, ephemerides: Any) -> list[tuple[str, Looks, bool]]:
+    """Every target judged at its stated place: its name, its looks, and whether they are cycles."""
+    channels = read_ecsv(run.file("channels.ecsv"))
     positions = book(study.order.run, study.order.version).positions
-    standing = {str(row["name"]): str(row["standing"]) for row in candidates}
     limits: dict[str, dict[str, tuple[float, float]]] = {}
     for row in channels:
         level = float(row["blank_level"]) if "blank_level" in channels.colnames else 0.0  # not in runs of before
@@ -94,20 +143,18 @@ def target_tables(
         given = [_ephemeris(ephemerides, name) for name in mine]
         jobs.append((ids[start : start + size], [limits.get(name, {}) for name in mine], given))
     looks = [one for result in study.each("counting looks", looks_of, jobs) for one in result]
-    peaks = {str(row["name"]): (int(row["n_detected"]), float(row["peak_snr"])) for row in candidates}
-    rows, more = [], []
-    curve = _pulse_curve(table, study.settings.completeness.fluxes)
-    for name, (seen_in, cycles) in zip(names, looks, strict=True):
-        unseen = standing.get(name) == "unseen"
-        rows.append(_target_row(name, standing.get(name, ""), seen_in, cycles, peaks.get(name, (0, np.nan)), curve))
-        for flux in sorted(study.settings.completeness.fluxes) if unseen else ():
-            weight = completeness.weights(seen_in, flux)
-            limit = completeness.duty_limit(weight)
-            more.append({"name": name, "flux": flux, "looks_effective": float(weight.sum()), "duty_limit": limit})
-    return (
-        astropy_table(COMPLETENESS_TARGETS, rows_to_columns(COMPLETENESS_TARGETS, rows), meta),
-        astropy_table(COMPLETENESS_LIMITS, rows_to_columns(COMPLETENESS_LIMITS, more), meta),
-    )
+    return [(name, *one) for name, one in zip(names, looks, strict=True)]
+
+
+def _like_flux(row: Any, looks: Looks) -> float:
+    """The highest S/N in a frame of a candidate that is detected, else its lowest threshold; NaN without frames."""
+    like = float(row["peak_snr"]) if row["n_detected"] else float(np.min(looks.threshold, initial=np.inf))
+    return like if np.isfinite(like) else float("nan")
+
+
+def _seen_share(row: Any) -> float:
+    """The share of a candidate's usable frames in which it is detected."""
+    return float(row["n_detected"]) / max(1, int(row["n_used"]))
 
 
 def _ephemeris(targets: Any, name: str) -> dict[str, float]:
@@ -119,47 +166,34 @@ def _ephemeris(targets: Any, name: str) -> dict[str, float]:
     return {column: float(targets.column(column)[row]) for column in wanted}
 
 
-def _pulse_curve(table: astropy.table.Table, fluxes: Sequence[float]) -> tuple[FloatArray, FloatArray]:
-    """Fluxes, ascending, and the completeness of pulse trains in all frames, mean over the other cells."""
-    mine = table[(table["subset"] == ALL) & (table["kind"] == injection.PULSES)]
-    if len(mine) == 0:
-        return np.empty(0), np.empty(0)
-    grid = np.unique(np.asarray(fluxes, float))
-    return grid, np.array([np.mean(mine["completeness"][np.asarray(mine["flux"]) == flux]) for flux in grid])
-
-
-def _target_row(
-    name: str, standing: str, looks: Looks, cycles: bool, peak: tuple[int, float], curve: tuple[FloatArray, FloatArray]
-) -> dict[str, Any]:
-    """A row of completeness_targets.ecsv."""
-    n_detected, peak_snr = peak
-    like = peak_snr if n_detected else float(np.min(looks.threshold, initial=np.inf))
-    row: dict[str, Any] = {
-        "name": name, "standing": standing, "n_used": len(looks.look), "n_looks": looks.n, "by_cycles": cycles,
-        "like_flux": like if np.isfinite(like) else float("nan"),
-        "found_probability": completeness.between(like, *curve),
+def _target_row(name: str, seen: Seen, looks: Looks, cycles: bool) -> dict[str, Any]:
+    """What completeness_targets.ecsv says of every target."""
+    return {
+        "name": name, "standing": seen.standing, "n_used": len(looks.look), "n_looks": looks.n, "by_cycles": cycles,
+        "like_flux": seen.peak,
     }  # fmt: skip
-    if standing == "unseen":
-        surely = completeness.weights(looks, completeness.HIGHEST_FLUX)
-        row["lowest_duty_limit"] = completeness.duty_limit(surely)
-        for word, duty in (("half", 0.5), ("tenth", 0.1), ("hundredth", 0.01)):
-            row[f"flux_limit_{word}"] = completeness.flux_limit(looks, duty)
-    return row
 
 
 def remarks(
-    study: Study, nulls: Mapping[int, Mapping[str, Null]], found: Found, targets: astropy.table.Table
+    study: Study,
+    nulls: Mapping[int, Mapping[str, Null]],
+    at: Mapping[str, Places],
+    found: Found,
+    targets: astropy.table.Table,
 ) -> tuple[str, ...]:
     """What holds for the tables as a whole; `found` is what became of the sources in all frames."""
     chosen = study.settings.completeness
     lit = any(null.brighter for of_field in nulls.values() for null in of_field.values())
+    n_subsets = sum(bool(len(one.ids)) for one in at.values())
     said = [
-        f"{len(study.cells)} cells of {chosen.per_cell} sources each in {len(study.subsets)} subsets of frames, at "
-        f"{sum(len(f.ids) for f in study.fields)} controls of {how_many(len(study.fields), 'field', 'fields')}",
-        f"recovered means: p below {study.bars.final:.3g}, which the run's own p-values leave for one more target at a "
-        f"false-discovery rate of {study.settings.ranking.level:g}; what checks would say of it is not asked",
+        f"{len(study.cells)} cells of {chosen.per_cell} sources each in {n_subsets} subsets of frames, at "
+        f"{len(at[ALL].ids)} controls of {how_many(at[ALL].n_fields, 'field', 'fields')}, measured as often as targets",
+        f"recovered means: p below {study.bars.final:.3g}, which the p-values of this run's target list leave for one more "
+        f"target at a false-discovery rate of {study.settings.ranking.level:g} (another list leaves another); what checks "
+        "would say of it is not asked",
         "a source has the same flux in median frame errors in every channel; channels of Stokes Q, U, V get none",
     ]
+    said += places_said(at)
     if not chosen.period_search:
         said.append("period searches are left out, of sources and controls alike ([completeness] period_search)")
     elif lit:
@@ -189,6 +223,12 @@ def remarks(
         )
     if not targets["by_cycles"].any():
         said.append("looks are epochs; a target list with ephemerides (--targets) makes them cycles")
+    if (targets["standing"] == "unseen").any():
+        said.append(
+            "limits on unseen targets: a duty cycle is the share of looks throughout which the source is on, its flux the mean "
+            "over an exposure, and the best frame of a look counts; completeness_channels.ecsv has them in each unit, "
+            "with the rate of short pulses and a sentence"
+        )
     return tuple(said)
 
 

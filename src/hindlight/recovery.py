@@ -5,39 +5,35 @@ The run is only read; what is made goes beside its result tables. The pieces of 
 
 from __future__ import annotations
 
-import time
-from collections import Counter
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
-from functools import partial
-from itertools import chain
-from typing import Any
 
 import astropy.table
 import numpy as np
 from numpy.typing import NDArray
 
-from hindlight import brighter, completeness, judge, plan, planted, ranking, record, report_card, store
+from hindlight import brighter, completeness, judge, plan, planted, ranking, record, store
+from hindlight.chances import Made
 from hindlight.completeness import Found, Injection, Null
 from hindlight.crew import assembled
 from hindlight.duplicates import counts
 from hindlight.errors import NothingToDoError
-from hindlight.fence import call
+from hindlight.hiding import Places, Used, hidden, places
+from hindlight.injection import PULSES
 from hindlight.lifted import copies
-from hindlight.lightcurve import FloatArray, IntArray, LightCurve
+from hindlight.lightcurve import IntArray
 from hindlight.order import book
-from hindlight.plugin import PeriodSearch, Statistic
 from hindlight.positions import read_targets, serves
 from hindlight.recovered import UPPER_BOUND, completeness_table, metadata, proof_remarks, remarks, target_tables
-from hindlight.study import Asked, FieldControls, Study, all_frames, is_small, opened, study_of, subsets_of
+from hindlight.study import Asked, FieldControls, Study, is_small, opened, study_of, subsets_of
 from hindlight.tables import write_table
-from hindlight.tasks import position_blocks, residuals
+from hindlight.tasks import residuals
 from hindlight.trials import (
     ALL,
     EXTRA,
     Outcomes,
     Subset,
-    curves_of,
+    count_frames,
     judge_controls,
     judge_copies,
     judge_injected,
@@ -45,35 +41,20 @@ from hindlight.trials import (
     search_controls,
 )
 from hindlight.verdicts import Watcher
-from hindlight.wording import from_to
 
 INJECTIONS_AT_ONCE = 128
-POWER_RATE = 1e-3
 Mask = NDArray[np.bool_]
 
 
 @dataclass(frozen=True, eq=False)
 class Report:
-    """What is written and said: the three tables, sentences for the last lines, and the raw outcomes in all frames."""
+    """What is written and said: the four tables, and sentences for the last lines."""
 
     table: astropy.table.Table
     targets: astropy.table.Table
     limits: astropy.table.Table
+    channels: astropy.table.Table
     remarks: tuple[str, ...]
-
-
-@dataclass(frozen=True)
-class Power:
-    """A statistic's report card.
-
-    `power` maps kinds of source to the share of them that the statistic alone finds at the rate; `only_here` counts those
-    that no other finds; `cost_s` is what a thousand light curves take.
-    """
-
-    plugin: str
-    power: Mapping[str, float]
-    only_here: int
-    cost_s: float
 
 
 def recover(asked: Asked, watcher: Watcher) -> Report:
@@ -83,67 +64,29 @@ def recover(asked: Asked, watcher: Watcher) -> Report:
     """
     run, order, plugins = opened(asked)
     ephemerides = read_targets(asked.targets) if asked.targets is not None else None
-    with run.locked(), assembled(asked.workers, None, is_small(run, order.settings)) as crew:
+    with run.locked(), record.logged(run), assembled(asked.workers, None, is_small(run, order.settings)) as crew:
         study = study_of(run, order, plugins, crew, watcher, subsets_of)
-        nulls, units = _nulls(study)
-        wanted = _wanted(study, nulls)
-        outcomes = _outcomes(study, wanted, nulls, units, with_plugins=False)
+        nulls, units = nulls_of(study)
+        used = counted_of(study)
+        at = places_of(study, used, nulls)
+        wanted = {name: hidden(study.cells, one, study.settings.completeness) for name, one in at.items()}
+        outcomes = outcomes_of(study, wanted, nulls, units, with_plugins=False)
         proofs = _proofs(study)
         meta = {**metadata(study, units), "run_state": record.state(run, order.settings, plugins)}
-        table = completeness_table(study, wanted, outcomes, meta)
-        targets, limits = target_tables(study, run, table, ephemerides, meta)
-    said = (*remarks(study, nulls, outcomes[ALL].found, targets), *proof_remarks(proofs), UPPER_BOUND)
-    for name, made in (("completeness_limits", limits), ("completeness_targets", targets), ("completeness", table)):
+        table = completeness_table(study, at, wanted, outcomes, meta)
+        cell_of = {name: np.array([one.cell for one in mine], np.int64) for name, mine in wanted.items()}
+        made = {name: Made.of(cell_of[name], outcome) for name, outcome in outcomes.items()}
+        told = target_tables(study, run, made, _shown(study, cell_of[ALL], outcomes[ALL]), used, ephemerides, meta)
+    said = (*remarks(study, nulls, at, outcomes[ALL].found, told.targets), *proof_remarks(proofs), UPPER_BOUND)
+    written = (("channels", told.channels), ("limits", told.limits), ("targets", told.targets))
+    for name, one in (*((f"completeness_{word}", one) for word, one in written), ("completeness", table)):
         for ending in (".fits", ".vot", ".ecsv"):
-            write_table(run.file(f"{name}{ending}"), made)
+            write_table(run.file(f"{name}{ending}"), one)
     store.write_text(run, "completeness.txt", "\n".join(said) + "\n")
-    return Report(table, targets, limits, said)
+    return Report(table, told.targets, told.limits, told.channels, said)
 
 
-def report_cards(asked: Asked, watcher: Watcher) -> tuple[list[Power], tuple[str, ...]]:
-    """The power of each statistic alone on made-up sources in all frames of a run, and what is to be said of it."""
-    run, order, plugins = opened(asked, with_new=True)
-    with run.locked(), assembled(asked.workers, None, is_small(run, order.settings)) as crew:
-        study = study_of(run, order, plugins, crew, watcher, lambda frames: [all_frames(frames)])
-        nulls, units = _nulls(study)
-        wanted = _wanted(study, nulls)
-        outcome = _outcomes(study, wanted, nulls, units, with_plugins=True)[ALL]
-        asks: list[Statistic | PeriodSearch] = [
-            *plugins.statistics,
-            *(plugins.period_searches if order.settings.completeness.period_search else ()),
-        ]
-        rate = np.maximum(POWER_RATE, outcome.found.lowest_p)
-        hit = outcome.found.own_p <= rate[:, None] * (1 + 1e-9)
-        costs = _costs(study, asks)
-    kinds = np.array([study.cells[one.cell].kind for one in wanted])
-    cards = []
-    for number, plugin in enumerate(asks):
-        only = hit[:, number] & (hit.sum(axis=1) == 1) & (kinds != completeness.NOTHING)
-        power = {kind: float(hit[kinds == kind, number].mean()) for kind in dict.fromkeys(kinds.tolist())}
-        cards.append(Power(plugin.name, power, int(only.sum()), costs[number]))
-    powers = {card.plugin: card.power for card in cards}
-    empty = report_card.blank(asks, [nulls[found.number][ALL].judgement for found in study.fields])
-    said = [_rate_said(outcome.found.lowest_p), report_card.columns_said(Counter(kinds.tolist()))]
-    said += report_card.silence_said(asks, powers, empty)
-    if not order.settings.completeness.period_search:
-        said.append("period searches are left out: [completeness] period_search = true in the run's settings asks them")
-    return cards, tuple(said)
-
-
-def _rate_said(lowest_p: FloatArray) -> str:
-    """At which rate of false alarms power is told, by the smallest p-value that each source could have got."""
-    low, high = (float(np.maximum(POWER_RATE, p)) for p in (lowest_p.min(), lowest_p.max()))
-    if high <= POWER_RATE * (1 + 1e-9):
-        return f"power at a false-alarm rate of {POWER_RATE:g}"
-    rates = from_to(low, high, ".3g")
-    fewest = round(1.0 / float(lowest_p.max()) - 1.0)
-    return (
-        f"power at a false-alarm rate of {rates}, NOT {POWER_RATE:g}: that takes {round(1 / POWER_RATE) - 1} controls beside "
-        f"the one that holds the source, some have {fewest}; at {POWER_RATE:g} power is lower ([controls] per_field)"
-    )
-
-
-def _nulls(study: Study) -> tuple[dict[int, dict[str, Null]], dict[str, float]]:
+def nulls_of(study: Study) -> tuple[dict[int, dict[str, Null]], dict[str, float]]:
     """Each field's null in each subset, and the median frame error of each channel over all controls."""
     size = study.settings.ranking.gather_curves
     groups = [(f, f.ids[start : start + size]) for f in study.fields for start in range(0, len(f.ids), size)]
@@ -174,7 +117,7 @@ def _with_brighter(
     """The nulls with those of sources that are bright in single frames."""
     left = residuals(study.order)
     ladder = brighter.rungs(study.cells, units, left, study.settings)
-    n_targets = len(study.used_by_target) + 1
+    n_targets = study.n_targets + 1
     jobs, places = [], []
     for found in study.fields:
         for rung in ladder:
@@ -223,55 +166,87 @@ def _search_nulls(study: Study, nulls: Mapping[int, Mapping[str, Null]]) -> None
         judge.spread(null.judgement, result, passes, study.columns)
 
 
-def _wanted(study: Study, nulls: Mapping[int, Mapping[str, Null]]) -> list[Injection]:
-    """The made-up sources: as often for each target, at any of the controls that are measured as well as it is.
-
-    Raises `NothingToDoError` where no target has such a control.
-    """
-    hosts = np.concatenate([found.ids for found in study.fields])
-    weights = np.concatenate([_like_targets(study, found, nulls[found.number][ALL]) for found in study.fields])
-    if not weights.any():
-        raise NothingToDoError("no target has a control that is measured in as many frames: nothing can be said")
-    return completeness.drawn(study.cells, hosts, weights, study.settings.completeness)
-
-
-def _like_targets(study: Study, found: FieldControls, null: Null) -> FloatArray:
-    """For each control of a field the number of targets it stands for, shape (n,): each is shared by those like it."""
-    used = completeness.used_frames(null.judgement)
-    share = study.settings.controls.shared_frames
-    weight = np.zeros(len(found.ids))
-    for name in found.targets:
-        mine = study.used_by_target.get(name, {})
-        like = np.ones(len(found.ids), bool)
-        for label, n_used in mine.items():
-            like &= used.get(label, np.zeros(len(found.ids))) >= share * n_used
-        if like.any() and sum(mine.values()) > 0:
-            weight += like / like.sum()
-    return weight
-
-
-def _outcomes(
-    study: Study, wanted: Sequence[Injection], nulls: Mapping[int, Mapping[str, Null]], units: Mapping[str, float],
-    with_plugins: bool,
-) -> dict[str, Outcomes]:  # fmt: skip
-    """What becomes of every source, by subset."""
-    hosts = np.array([one.host for one in wanted])
-    places, jobs = [], []
-    for found in study.fields:
-        mine = np.flatnonzero(np.isin(hosts, found.ids))
-        mine = mine[np.argsort(hosts[mine], kind="stable")]  # those at one control share its null
-        for start in range(0, len(mine), INJECTIONS_AT_ONCE):
-            part = mine[start : start + INJECTIONS_AT_ONCE]
-            places.append(part)
-            jobs.append((
-                [wanted[i] for i in part], study.cells, units, study.subsets, nulls[found.number], study.bars, with_plugins
-            ))  # fmt: skip
-    results = study.each("judging made-up sources", judge_injected, jobs)
-    back = np.argsort(np.concatenate(places))
+def counted_of(study: Study) -> dict[str, Used]:
+    """The usable frames of every target, by subset."""
+    size = study.settings.ranking.gather_curves
+    groups = [
+        (f.targets[k : k + size], f.target_ids[k : k + size])
+        for f in study.fields
+        for k in range(0, len(f.targets), size)
+    ]
+    counted = study.each("counting frames of targets", count_frames, [(ids, study.subsets) for _, ids in groups])
     return {
-        subset.name: _joined([result[number] for result in results], back)
-        for number, subset in enumerate(study.subsets)
+        subset.name: {
+            name: {label: int(n[row]) for label, n in result[subset.name].items()}
+            for (names, _), result in zip(groups, counted, strict=True)
+            for row, name in enumerate(names)
+        }
+        for subset in study.subsets
     }
+
+
+def places_of(study: Study, used: Mapping[str, Used], nulls: Mapping[int, Mapping[str, Null]]) -> dict[str, Places]:
+    """Where sources are hidden in each subset.
+
+    Raises `NothingToDoError` where no target has a control that is measured as well as it is.
+    """
+    share = study.settings.controls.shared_frames
+    at = {
+        name: places(study.fields, mine, {number: of_field[name] for number, of_field in nulls.items()}, share)
+        for name, mine in used.items()
+    }
+    if not len(at[ALL].ids):
+        raise NothingToDoError("no target has a control that is measured in as many frames: nothing can be said")
+    return at
+
+
+def outcomes_of(
+    study: Study, wanted: Mapping[str, Sequence[Injection]], nulls: Mapping[int, Mapping[str, Null]],
+    units: Mapping[str, float], with_plugins: bool,
+) -> dict[str, Outcomes]:  # fmt: skip
+    """What becomes of every source, by subset; subsets without sources are left out."""
+    at: list[Mapping[str, IntArray]] = []
+    jobs = []
+    for found in study.fields:
+        for part in _pieces(wanted, found.ids):
+            here = {name: [wanted[name][i] for i in numbers] for name, numbers in part.items()}
+            at.append(part)
+            jobs.append((here, study.cells, units, study.subsets, nulls[found.number], study.bars, with_plugins))
+    results = study.each("judging made-up sources", judge_injected, jobs)
+    outcomes = {}
+    for name in wanted:
+        mine = [(part[name], result[name]) for part, result in zip(at, results, strict=True) if name in result]
+        if mine:
+            back = np.argsort(np.concatenate([numbers for numbers, _ in mine]))
+            outcomes[name] = _joined([outcome for _, outcome in mine], back)
+    return outcomes
+
+
+def _pieces(wanted: Mapping[str, Sequence[Injection]], ids: IntArray) -> list[dict[str, IntArray]]:
+    """The sources at these controls in pieces of work: numbers of sources by subset.
+
+    Those at one control are together and next to each other, since they share its null.
+    """
+    hosts = {name: np.array([one.host for one in mine], np.int64) for name, mine in wanted.items()}
+    n_at = sum((np.bincount(np.searchsorted(ids, h[np.isin(h, ids)]), minlength=len(ids)) for h in hosts.values()), 0)
+    piece = (np.cumsum(n_at) - n_at) // (INJECTIONS_AT_ONCE * max(1, len(hosts)))
+    found = []
+    for number in np.unique(piece).tolist():
+        part = {}
+        for name, h in hosts.items():
+            mine = np.flatnonzero(np.isin(h, ids[piece == number]))
+            if len(mine):
+                part[name] = mine[np.argsort(h[mine], kind="stable")]
+        if part:
+            found.append(part)
+    return found
+
+
+def _shown(study: Study, cell: IntArray, outcome: Outcomes) -> tuple[int, int]:
+    """How many frames show made-up pulses that surely should, and how many should; `cell` is that of each source."""
+    pulses = np.array([one.kind == PULSES for one in study.cells])[cell]
+    seen, all_of_them = (int(outcome.extra[name][pulses].sum()) for name in ("bright_seen", "bright_frames"))
+    return seen, all_of_them
 
 
 def _joined(parts: Sequence[Outcomes], back: IntArray) -> Outcomes:
@@ -293,24 +268,3 @@ def _proofs(study: Study) -> list[planted.Proof | None]:
         chosen += mine[np.unique(np.linspace(0, len(mine) - 1, min(each, len(mine))).astype(int))].tolist()
     controls = np.sort(np.concatenate([found.ids for found in study.fields]))
     return study.each("adding sources to pixels", plant_in_frame, [(frame, controls) for frame in chosen])
-
-
-def _costs(study: Study, plugins: Sequence[Statistic | PeriodSearch]) -> list[float]:
-    """Seconds that each plugin takes for a thousand calls with one light curve (or all of a position), by the wall clock."""
-    ids = study.fields[0].ids[:INJECTIONS_AT_ONCE]
-    curves = curves_of(position_blocks(study.order, ids)["blocks"])
-    for curve in chain.from_iterable(curves):
-        _ = curve.above_quiet if len(curve) else None  # what statistics share is not the cost of the first one asked
-    return [_cost(plugin, curves) for plugin in plugins]
-
-
-def _cost(plugin: Statistic | PeriodSearch, curves: Sequence[Sequence[LightCurve]]) -> float:
-    """The same for one plugin, NaN where no light curve has enough samples for it."""
-    method: Callable[[Any], Any] = plugin.compute if isinstance(plugin, Statistic) else plugin.search
-    given: list[Any] = [channels for one in curves if (channels := judge.timed_curves(one, plugin.min_points))]
-    if isinstance(plugin, Statistic) and not plugin.all_channels:
-        given = list(chain.from_iterable(given))
-    start = time.perf_counter()
-    for curve in given:
-        call(plugin, partial(method, curve), "")
-    return 1000.0 * (time.perf_counter() - start) / len(given) if given else float("nan")

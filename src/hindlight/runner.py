@@ -8,8 +8,7 @@ follows is in `hindlight.verdicts` and `hindlight.second_pass`.
 from __future__ import annotations
 
 import logging
-from collections.abc import Iterator, Mapping, Sequence
-from contextlib import contextmanager
+from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -35,7 +34,7 @@ from hindlight import (
 )  # fmt: skip
 from hindlight.channels import assign
 from hindlight.crew import assembled
-from hindlight.errors import HindlightError, NothingToDoError, UsageError
+from hindlight.errors import NothingToDoError, UsageError
 from hindlight.lightcurve import FloatArray
 from hindlight.order import Order
 from hindlight.outcome import Outcome
@@ -76,7 +75,7 @@ def mine(request: Request, watcher: Watcher) -> Outcome:
     order = Order(str(run.path.resolve()), settings, replace(spec, expected=plugins.fingerprint()))
     with run.locked():
         try:
-            with _logged(run):
+            with record.logged(run):
                 return _mine_locked(run, request, order, plugins, (targets, own), watcher)
         except NothingToDoError:
             run.discard_if_new()
@@ -191,25 +190,6 @@ def _with_parts(session: Session, frames: Columns, positions: Columns, rejects: 
     every = _distinct([*rejects, *measured])
     _write_rejects(session.run, every)
     return every
-
-
-@contextmanager
-def _logged(run: RunFolder) -> Iterator[None]:
-    """Write the log to the run's log.txt while it works; what goes wrong stays there with its traceback."""
-    handler = logging.FileHandler(run.file("log.txt"), encoding="utf-8", delay=True)
-    handler.setFormatter(logging.Formatter("%(asctime)s %(levelname)s %(message)s"))
-    log.addHandler(handler)
-    try:
-        yield
-    except HindlightError as error:
-        log.error("%s", error)
-        raise
-    except Exception:
-        log.exception("error inside the program")
-        raise
-    finally:
-        log.removeHandler(handler)
-        handler.close()
 
 
 def _own_comparisons(settings: Settings) -> Targets | None:

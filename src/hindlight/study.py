@@ -13,7 +13,7 @@ from typing import Any
 
 import numpy as np
 
-from hindlight import completeness, host, judge, record
+from hindlight import completeness, host, judge, plan, record
 from hindlight import settings as settings_module
 from hindlight.completeness import Bars, Cell
 from hindlight.crew import Crew
@@ -22,7 +22,7 @@ from hindlight.errors import NothingToDoError, UsageError
 from hindlight.lightcurve import FloatArray, IntArray
 from hindlight.order import Order, book
 from hindlight.plugin import Column
-from hindlight.positions import first_controls
+from hindlight.positions import first_controls, serves
 from hindlight.record import Request
 from hindlight.settings import Settings
 from hindlight.store import Columns, RunFolder
@@ -34,17 +34,22 @@ from hindlight.trials import (
 )
 from hindlight.verdicts import Watcher
 
+MOST_TOGETHER = 4096  # controls of fields put together
 SMALL_WORK = 20_000_000  # frames times positions judged; up to this many the work is done in this process
 
 
 @dataclass(frozen=True, eq=False)
 class FieldControls:
-    """The controls of one field, ids ascending, and where they are (ICRS unit vectors); the names of its targets."""
+    """The controls of one field, ids ascending, and where they are (ICRS unit vectors); the names and ids of its targets.
+
+    Target ids are ascending.
+    """
 
     number: int
     ids: IntArray
     vectors: FloatArray
     targets: tuple[str, ...]
+    target_ids: IntArray
 
 
 @dataclass(frozen=True)
@@ -60,7 +65,7 @@ class Asked:
 
 @dataclass(frozen=True, eq=False)
 class Study:
-    """What every stage needs; `used_by_target` says how many frames of each channel each target has."""
+    """What every stage needs; `n_targets` are those with a frame."""
 
     order: Order
     plugins: host.Plugins
@@ -72,7 +77,7 @@ class Study:
     cells: Sequence[Cell]
     bars: Bars
     columns: Mapping[str, Column]
-    used_by_target: Mapping[str, Mapping[str, int]]
+    n_targets: int
 
     @property
     def settings(self) -> Settings:
@@ -127,11 +132,16 @@ def is_small(run: RunFolder, settings: Settings) -> bool:
 
 def study_of(
     run: RunFolder, order: Order, plugins: host.Plugins, crew: Crew, watcher: Watcher,
-    chosen: Callable[[Columns], Sequence[Subset]],
+    chosen: Callable[[Columns], Sequence[Subset]], every_control: bool = False,
 ) -> Study:  # fmt: skip
-    """Fields, subsets and cells; raises `NothingToDoError` where no field has controls."""
+    """Fields, subsets and cells; raises `NothingToDoError` where no field has controls.
+
+    With `every_control` those of second passes are among a field's controls, and fields in the same frames are one.
+    """
     tables = book(order.run, order.version)
-    fields = [found for found in fields_of(tables.positions) if len(found.ids) > 1]
+    fields = [found for found in fields_of(tables.positions, every_control) if len(found.ids) > 1]
+    if every_control:
+        fields = together(fields, tables.frames, order.settings.controls.shared_frames)
     if not fields:
         raise NothingToDoError(f"run {run.path}: {_why_no_fields(tables.positions)}")
     candidates = read_ecsv(run.file("candidates.ecsv"))
@@ -141,25 +151,60 @@ def study_of(
     asked = plugins.period_searches if order.settings.completeness.period_search else ()
     columns = judge.full_columns([*plugins.statistics, *asked])
     cells = completeness.grid(order.settings.completeness)
-    used: dict[str, dict[str, int]] = {}
-    for row in read_ecsv(run.file("channels.ecsv")):
-        used.setdefault(str(row["name"]), {})[str(row["channel"])] = int(row["n_used"])
+    n_targets = len({str(name) for name in read_ecsv(run.file("channels.ecsv"))["name"]})
     return Study(
-        order, plugins, crew, watcher, tables.frames, fields, chosen(tables.frames), cells, bars, columns, used
+        order, plugins, crew, watcher, tables.frames, fields, chosen(tables.frames), cells, bars, columns, n_targets
     )
 
 
-def fields_of(positions: Columns) -> list[FieldControls]:
-    """The controls of every field with targets that are judged at their stated place."""
+def fields_of(positions: Columns, every_control: bool = False) -> list[FieldControls]:
+    """The first controls (or all) of every field with targets that are judged at their stated place."""
+    controls = positions["kind"] == "control" if every_control else first_controls(positions)
     is_target = (positions["kind"] == "target") & (positions["search"] < 0)
     found = []
     for number in sorted(set(positions["field"][is_target].tolist())):
-        here = first_controls(positions) & (positions["field"] == number)
+        here = controls & (positions["field"] == number)
         order = np.argsort(positions["id"][here])
         vectors = unit_vectors(positions["ra"][here], positions["dec"][here])[order]
-        names = tuple(positions["name"][is_target & (positions["field"] == number)].tolist())
-        found.append(FieldControls(int(number), positions["id"][here][order], vectors, names))
+        mine = np.flatnonzero(is_target & (positions["field"] == number))
+        mine = mine[np.argsort(positions["id"][mine])]
+        names = tuple(positions["name"][mine].tolist())
+        found.append(FieldControls(int(number), positions["id"][here][order], vectors, names, positions["id"][mine]))
     return found
+
+
+def together(fields: Sequence[FieldControls], frames: Columns, share: float) -> list[FieldControls]:
+    """The fields, those as one whose middles share the frames, up to MOST_TOGETHER controls.
+
+    In the same frames controls of one field are as good a null for another; `ranking.matched` still asks each of them for
+    as many measurements and a like noise.
+    """
+    if not fields:
+        return []
+    middles = np.stack([found.vectors.mean(axis=0) for found in fields])
+    covered = plan.field_frames(frames, middles / np.linalg.norm(middles, axis=1, keepdims=True)).covered
+    alike = serves(covered, covered, share)
+    groups: list[list[int]] = []
+    for number, found in enumerate(fields):
+        for group in groups:
+            first, n = group[0], sum(len(fields[k].ids) for k in group)
+            if alike[number, first] and alike[first, number] and n + len(found.ids) <= MOST_TOGETHER:
+                group.append(number)
+                break
+        else:
+            groups.append([number])
+    return [_merged([fields[k] for k in group]) for group in groups]
+
+
+def _merged(fields: Sequence[FieldControls]) -> FieldControls:
+    """Several fields as one, under the number of the first."""
+    ids, vectors, targets = (
+        np.concatenate([getattr(f, name) for f in fields]) for name in ("ids", "vectors", "target_ids")
+    )
+    names = [name for f in fields for name in f.targets]
+    order, of_targets = np.argsort(ids), np.argsort(targets)
+    named = tuple(names[k] for k in of_targets)
+    return FieldControls(fields[0].number, ids[order], vectors[order], named, targets[of_targets])
 
 
 def _why_no_fields(positions: Columns) -> str:

@@ -10,16 +10,19 @@ from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from hindlight import completeness, host, injection, judge, photometry, planted, store
 from hindlight.companions import as_listed
-from hindlight.completeness import Bars, Cell, Found, Injection, Looks, Null
+from hindlight.completeness import Bars, Cell, Found, Injection, Null
 from hindlight.files import check_unchanged
 from hindlight.headers import SetAsideError
 from hindlight.lifted import Lift
 from hindlight.lightcurve import Block, FloatArray, IntArray
+from hindlight.looks import SURELY, Looks, by_cycle, by_epoch
 from hindlight.order import Order, book, frame_facts
 from hindlight.plugin import Column, Plugin
+from hindlight.ranking import Thresholds
 from hindlight.schema import UNUSABLE
 from hindlight.settings import Settings
 from hindlight.tasks import anchors_of, position_blocks, residuals
@@ -51,13 +54,13 @@ class Judged:
 
 @dataclass(frozen=True, eq=False)
 class Outcomes:
-    """Made-up sources in one subset: what became of them, and of each the highest S/N added, frames lit, frames used."""
+    """Made-up sources in one subset: what became of them, and of each what EXTRA names, shape (n,) each."""
 
     found: Found
     extra: Mapping[str, FloatArray]
 
 
-EXTRA = ("median_snr", "median_lit", "median_used")
+EXTRA = ("median_snr", "median_lit", "median_used", "median_peak", "median_detected", "bright_frames", "bright_seen")
 
 
 def judge_controls(order: Order, ids: IntArray, subsets: Sequence[Subset]) -> Judged:
@@ -81,31 +84,63 @@ def search_controls(order: Order, ids: IntArray, subset: Subset) -> judge.Judgem
     return judge.search(curves_of(blocks), host.load(order.plugins).period_searches)
 
 
+def count_frames(order: Order, ids: IntArray, subsets: Sequence[Subset]) -> dict[str, dict[str, IntArray]]:
+    """How many usable frames these positions (ascending ids) have, shape (n,), by subset and channel."""
+    blocks = position_blocks(order, ids)["blocks"]
+    return {
+        subset.name: {label: _usable(block).sum(axis=1) for label, block in _within(blocks, subset).items()}
+        for subset in subsets
+    }
+
+
 def judge_injected(
-    order: Order, wanted: Sequence[Injection], cells: Sequence[Cell], units: Mapping[str, float],
+    order: Order, wanted: Mapping[str, Sequence[Injection]], cells: Sequence[Cell], units: Mapping[str, float],
     subsets: Sequence[Subset], nulls: Mapping[str, Null], bars: Bars, with_plugins: bool,
-) -> list[Outcomes]:  # fmt: skip
-    """What becomes of sources at controls of one field, in each subset; `units` are fluxes of 1 by channel."""
+) -> dict[str, Outcomes]:  # fmt: skip
+    """What becomes of sources at controls of one field, `wanted` by subset; `units` are fluxes of 1 by channel."""
+    ids = np.unique([one.host for mine in wanted.values() for one in mine])
+    plain = position_blocks(order, ids)["blocks"]
+    return {
+        subset.name: _become(
+            order,
+            wanted[subset.name],
+            cells,
+            units,
+            _within(plain, subset),
+            ids,
+            nulls[subset.name],
+            bars,
+            with_plugins,
+        )
+        for subset in subsets
+        if wanted.get(subset.name)
+    }
+
+
+def _become(
+    order: Order, wanted: Sequence[Injection], cells: Sequence[Cell], units: Mapping[str, float],
+    plain: Mapping[str, Block], ids: IntArray, null: Null, bars: Bars, with_plugins: bool,
+) -> Outcomes:  # fmt: skip
+    """The same in one subset, whose frames `plain` has at the controls `ids`."""
     hosts = np.array([one.host for one in wanted])
-    ids = np.unique(hosts)
+    rows = np.searchsorted(ids, hosts)
     plugins = host.load(order.plugins)
     columns = judge.full_columns([*plugins.statistics, *plugins.period_searches])
-    plain = position_blocks(order, ids)["blocks"]
-    made = {
-        label: _injected(order, block, np.searchsorted(ids, hosts), wanted, cells, units[label])
-        for label, block in plain.items()
-    }
+    made = {label: _injected(order, block, rows, wanted, cells, units[label]) for label, block in plain.items()}
+    blocks = {label: block for label, (block, _) in made.items()}
+    judged = judge.judge(blocks, plugins.statistics)
+    if order.settings.completeness.period_search and plugins.period_searches:
+        _search_gated(judged, hosts, null, blocks, columns, order.settings, plugins)
     asked = [*plugins.statistics, *plugins.period_searches] if with_plugins else []
-    outcomes = []
-    for subset in subsets:
-        blocks = _within({label: block for label, (block, _) in made.items()}, subset)
-        judged = judge.judge(blocks, plugins.statistics)
-        null = nulls[subset.name]
-        if order.settings.completeness.period_search and plugins.period_searches:
-            _search_gated(judged, hosts, null, blocks, columns, order.settings, plugins)
-        became = completeness.found(judged, hosts, null, columns, bars, order.settings, asked)
-        outcomes.append(Outcomes(became, _extra(plain, made, np.searchsorted(ids, hosts), subset)))
-    return outcomes
+    became = completeness.found(judged, hosts, null, columns, bars, order.settings, asked)
+    return Outcomes(became, _extra(plain, made, rows, null.thresholds))
+
+
+def rank_controls(order: Order, ids: IntArray, null: Null) -> tuple[FloatArray, FloatArray]:
+    """`completeness.own_of_controls` for controls of a field (ascending ids)."""
+    plugins = host.load(order.plugins)
+    asked = [*plugins.statistics, *plugins.period_searches]
+    return completeness.own_of_controls(null, ids, judge.full_columns(asked), asked)
 
 
 def plant_in_frame(order: Order, frame: int, controls: IntArray) -> planted.Proof | None:
@@ -161,6 +196,11 @@ def _within(blocks: Mapping[str, Block], subset: Subset) -> dict[str, Block]:
     return {label: injection.restricted(block, kept[label]) for label, block in blocks.items() if kept[label].any()}
 
 
+def _usable(block: Block) -> NDArray[np.bool_]:
+    """Where a block has usable samples, shape (n, n_frames), by the rule of `LightCurve.from_arrays`."""
+    return np.isfinite(block.flux) & np.isfinite(block.flux_err) & (block.flux_err > 0)
+
+
 def _typical(flux_err: FloatArray) -> FloatArray:
     """The median error of each row, NaN where there is none."""
     return np.array([np.median(row[np.isfinite(row)]) if np.isfinite(row).any() else np.nan for row in flux_err])
@@ -198,18 +238,31 @@ def _injected(
 
 
 def _extra(
-    plain: Mapping[str, Block], made: Mapping[str, tuple[Block, FloatArray]], rows: IntArray, subset: Subset
-) -> dict[str, FloatArray]:
-    """Of each source the highest S/N that was added to a frame, how many frames it lit, and how many could be used."""
-    highest, lit, used = np.zeros((3, len(rows)))
+    plain: Mapping[str, Block], made: Mapping[str, tuple[Block, FloatArray]], rows: IntArray,
+    thresholds: Mapping[str, Thresholds],
+) -> dict[str, FloatArray]:  # fmt: skip
+    """Of each source the highest S/N that was added to a frame, how many frames it lit, and how many could be used;
+
+    then, as measured with the noise, the highest S/N in a frame, and how many frames are above their threshold; at last
+    how many frames should surely show it (S/N added SURELY above the threshold, to twice that), and how many of them do.
+    """
+    highest, lit, used, peak, detected, bright, shown = np.zeros((7, len(rows)))
     for label, block in plain.items():
-        here = np.isin(block.frame, subset.frames) if subset.name != ALL else np.ones(len(block.frame), bool)
-        error = block.flux_err[rows][:, here]
-        snr = np.where(np.isfinite(error), made[label][1][:, here] / error, 0.0)
+        error = block.flux_err[rows]
+        snr = np.where(np.isfinite(error), made[label][1] / error, 0.0)
         highest = np.maximum(highest, snr.max(axis=1, initial=0.0))
         lit += (snr > 1.0).sum(axis=1)
         used += np.isfinite(error).sum(axis=1)
-    return dict(zip(EXTRA, (highest, lit, used), strict=True))
+        measured = np.nan_to_num(made[label][0].flux / made[label][0].flux_err)
+        measured = np.abs(measured) if block.channel.signed else measured
+        peak = np.maximum(peak, measured.max(axis=1, initial=0.0))
+        above = measured > thresholds[label].detected
+        detected += above.sum(axis=1)
+        least = thresholds[label].detected + SURELY
+        surely = (snr >= least) & (snr <= 2 * least)
+        bright += surely.sum(axis=1)
+        shown += (surely & above).sum(axis=1)
+    return dict(zip(EXTRA, (highest, lit, used, peak, detected, bright, shown), strict=True))
 
 
 def _search_gated(
@@ -236,29 +289,26 @@ def _looks(
 ) -> tuple[Looks, bool]:  # fmt: skip
     """The looks at one target in unsigned channels."""
     parts: list[list[Any]] = [[], [], [], [], []]
-    for number, (label, block) in enumerate(blocks.items()):
+    told: dict[str, float] = {}
+    for label, block in blocks.items():
         curve = block.curve(row)
         if len(curve) == 0 or block.channel.signed:
             continue
-        unit = float(np.median(curve.flux_err))
-        n = len(curve)
         least, level = limits[label]
-        told = (
-            curve.t_tdb_s,
-            curve.exposure_s,
-            curve.flux_err / unit,
-            least - level / curve.flux_err,
-            np.full(n, number),
-        )
-        for part, values in zip(parts, told, strict=True):
+        unit = float(np.median(curve.flux_err))
+        threshold = least - level / curve.flux_err
+        mine = (curve.t_tdb_s, curve.exposure_s, curve.flux_err / unit, threshold, np.full(len(curve), len(told)))
+        told[label] = unit
+        for part, values in zip(parts, mine, strict=True):
             part.append(values)
     t, exposure, error, threshold, channel = (np.concatenate(p) if p else np.empty(0) for p in parts)
     cycles = bool(np.isfinite([given["period"], given["epoch"]]).all())
-    look, share = completeness.by_epoch(t, gap_days), np.ones(len(t))
+    look, share = by_epoch(t, gap_days), np.ones(len(t))
     if cycles:
         known = np.isfinite(t)
         t, exposure, error, threshold, channel = (v[known] for v in (t, exposure, error, threshold, channel))
         since = t - (given["epoch"] - J2000_JD) * DAY
         dot, window = float(np.nan_to_num(given["period_dot"])), float(np.nan_to_num(given["window"]))
-        look, share = completeness.by_cycle(since, exposure, given["period"], dot, window)
-    return Looks(look, channel.astype(np.int64), error, threshold, share), cycles
+        look, share = by_cycle(since, exposure, given["period"], dot, window)
+    of = channel.astype(np.int64)
+    return Looks(look, of, error, threshold, share, exposure, tuple(told), tuple(told.values())), cycles
