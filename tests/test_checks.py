@@ -402,6 +402,17 @@ def test_what_is_a_point(major: float, minor: float, verdict: str) -> None:
     assert "2 bright frames" in finding.evidence
 
 
+@pytest.mark.parametrize(("spoiled", "verdict"), [(0, "pass"), (5, "pass"), (8, "fail"), (20, "fail")])
+def test_a_bad_column_in_one_pointing_of_many(spoiled: int, verdict: str) -> None:
+    """In a quarter of twenty bright frames, where a true source is long, it is told and does not fail; in more it does."""
+    finding = PointLikeness().check(
+        of_shape([shaped(100 + k, 30.0, *((16.0, 2.0) if k < spoiled else (4.0, 4.0))) for k in range(20)])
+    )
+    assert finding.verdict == verdict
+    assert ("without the worst 5 frames p = " in finding.evidence) == (spoiled == 5)
+    assert (finding.values["p"] < 1e-4) == (spoiled > 0)
+
+
 def test_where_shapes_say_nothing() -> None:
     """Faint frames, a beam of less than two pixels or one that is only assumed, and synthesised images."""
     narrow = [shaped(100, 30.0, 1.0, 1.0)]
