@@ -39,7 +39,6 @@ SPOILED = 2.5  # reduced chi-square beyond which something else is in the fitted
 LEFT_OVER = 0.05  # beams by which a steady source as bright as the candidate shifts a centroid once it is taken off
 FEW_FRAMES = 5  # bright ones with a centroid: with fewer the brightest frames are set against the faintest as well
 MOST_OF, SOME = 0.5, 3  # of the bright frames, or so many, must have centroids, or light moves rather than is added
-CLEAR = 5.0  # sigma of light that is added at the position itself, beside a source that moves
 LARGEST = 0.5  # part of what varies at the position that motion must explain
 JULIAN_YEAR_S = 31557600.0
 FEWEST_TIMES = 3
@@ -139,8 +138,7 @@ class Position(ConsistencyCheck):
         if found is None:
             return None
         change = found.moved + found.there
-        here = found.there >= CLEAR * found.there_err and found.there >= LARGEST * change
-        if here or found.moved < LARGEST * change:
+        if found.moved < LARGEST * change:
             return None
         variance = error**2 + (self.floor * fwhm) ** 2 + known_to**2
         p = max(math.exp(-(distance**2) / variance / 2), math.exp(-max(found.delta_chi2, 0.0) / 2))

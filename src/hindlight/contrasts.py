@@ -15,7 +15,7 @@ import numpy as np
 from scipy import ndimage
 
 from hindlight.cutouts import beam_arcsec, mean_at
-from hindlight.lightcurve import FloatArray, IntArray, LightCurve
+from hindlight.lightcurve import IntArray, LightCurve
 from hindlight.plugin import Candidate, Cutout
 
 FEWEST = 4  # frames in a third
@@ -121,15 +121,14 @@ class Motion:
 
     `shift` is by how much the source lies elsewhere in the brightest frames than in the faintest (east, north; arcsec) and
     `scaled` by what fraction it is brighter; `moved` is what both change at the position, `there` what a point at the
-    position adds beside them, `there_err` its 1-sigma error, in units of the pixels. `delta_chi2` is by how much motion and
-    change describe the contrast better than a point at the position alone, 2 degrees of freedom.
+    position adds beside them, in units of the pixels. `delta_chi2` is by how much motion and change, three numbers,
+    describe the contrast better than a point at the position alone, one number; negative where the point does better.
     """
 
     shift: tuple[float, float]
     scaled: float
     moved: float
     there: float
-    there_err: float
     delta_chi2: float
 
 
@@ -157,19 +156,12 @@ def motion(found: Contrast, east: float, north: float, floor: float) -> Motion |
     basis, data = models[:, used].T, found.added.pixels[used]
     error = math.hypot(height / found.snr, floor * height)  # of a point at the position alone
     alike, dx, dy, there = (float(factor) for factor in np.linalg.lstsq(basis, data)[0])
-    there_err = error * _widened(basis[:, :3], basis[:, 3])
     left = [
         float(np.square(data - some @ np.linalg.lstsq(some, data)[0]).sum()) for some in (basis[:, 3:], basis[:, :3])
     ]
     shift = grid.to_sky @ (-dx, -dy)
     moved = float(models[:3, here[0], here[1]] @ (alike, dx, dy))
     return Motion(
-        (float(shift[0]), float(shift[1])), alike, moved, there, there_err,
+        (float(shift[0]), float(shift[1])), alike, moved, there,
         (left[0] - left[1]) / (float(np.square(basis[:, 3]).sum()) * error**2),
     )  # fmt: skip
-
-
-def _widened(others: FloatArray, last: FloatArray) -> float:
-    """By how much a factor's error grows since other columns are like its own."""
-    apart = float(np.linalg.norm(last - others @ np.linalg.lstsq(others, last)[0]))
-    return float(np.linalg.norm(last)) / max(apart, 1e-12)
