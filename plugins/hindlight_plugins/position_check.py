@@ -52,11 +52,11 @@ class Position(ConsistencyCheck):
     shorter than an aperture synthesis may leave sidelobes that are not the beam's: their centre is right all the same.
 
     Where fewer than five frames have a centroid and a channel varies all over, the light that the brightest third of its
-    frames has more than the faintest third must lie at the position. The check fails too where the
-    mean light is a source `off` beams or more from the position that moves from frame to frame, as pointing errors do it,
-    which explains at least half of what varies here better than a point at the position does; unless half of the bright
-    frames, or three, have centroids and tell to `off` beams where the light is that they add. Uninformative where there
-    is neither.
+    frames has more than the faintest third must lie at the position. The check fails too where the mean light is a source
+    `off` beams or more from the position that moves from frame to frame, as pointing errors do it, or brightens as a
+    whole, which explains at least half of what varies here, and better than a point at the position does; unless half of
+    the bright frames, or three, have centroids and tell to `off` beams where the light is that they add. Uninformative
+    where there is neither.
     """
 
     columns = (
