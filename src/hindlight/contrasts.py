@@ -20,7 +20,7 @@ from hindlight.plugin import Candidate, Cutout
 
 FEWEST = 4  # frames in a third
 MOST = 30  # frames of a third that are added up
-APART = 4.0  # typical errors between the medians of both thirds: those of noise alone are 1.94 apart
+APART = 3.0  # typical errors between the medians of both thirds: those of noise alone are 1.94 apart
 GAINS = (0.5, 2.0)  # factors of the flux scale that are believed of one frame
 AROUND = 1.5  # beams around the steady source in which its motion is fitted
 SLOPE = np.array([1.0, -8.0, 0.0, 8.0, -1.0]) / 12.0  # derivative of samples, to fourth order
@@ -29,7 +29,7 @@ SLOPE = np.array([1.0, -8.0, 0.0, 8.0, -1.0]) / 12.0  # derivative of samples, t
 def brightest_and_faintest(curve: LightCurve) -> tuple[IntArray, IntArray]:
     """Rows of the brightest and of the faintest third of a curve's frames by flux, up to thirty of each, in order of flux.
 
-    Empty where a third has fewer than four frames, or the thirds' medians are less than four typical errors apart: then it
+    Empty where a third has fewer than four frames, or the thirds' medians are less than three typical errors apart: then it
     is noise that sorts them, or what varies is in fewer frames (and those are bright by themselves). Where noise has the
     fraction s of the variance it is s of what such thirds differ by at the position: what lies elsewhere seems nearer by s.
     """
