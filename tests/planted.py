@@ -298,6 +298,46 @@ def neighbour(seed: int) -> Field:
     return made
 
 
+def wave(rng: np.random.Generator, times: np.ndarray) -> np.ndarray:
+    """A sinusoid of amplitude one and a period of half a day to six years."""
+    period = 86400.0 * 10 ** rng.uniform(-0.3, 3.3)
+    return np.sin(2 * np.pi * times / period + rng.uniform(0, 2 * np.pi))
+
+
+def smooth(seed: int) -> Field:
+    """A true variable that is never dark: 5 to 25 sigma of a sinusoid on a steady mean, with or without a steady neighbour."""
+    rng = np.random.default_rng((seed, 11))
+    made = blank_field(seed, dithered=rng.random() < 0.7, heavy=rng.random() < 0.3)
+    height = rng.uniform(5, 25)
+    made.source(0.0, 0.0, height + rng.uniform(0, 30) + height * wave(rng, made.times))
+    if rng.random() < 0.5:
+        angle, away = rng.uniform(0, 2 * np.pi), FWHM * rng.uniform(0.5, 3)
+        made.source(away * math.cos(angle), away * math.sin(angle), 10 ** rng.uniform(0.7, 2.0))
+    return made
+
+
+def smooth_neighbour(seed: int) -> Field:
+    """A source 0.4 to 1.5 beams away that varies smoothly: by 5 to 25 sigma at the target, about a mean."""
+    rng = np.random.default_rng((seed, 12))
+    made = blank_field(seed)
+    angle, away = rng.uniform(0, 2 * np.pi), FWHM * rng.uniform(0.4, 1.5)
+    height, wing = rng.uniform(5, 25), math.exp(-GAUSS * away**2)
+    flux = (height + rng.uniform(0, 10) + height * wave(rng, made.times)) / wing
+    made.source(away * math.cos(angle), away * math.sin(angle), flux)
+    return made
+
+
+def wandering(seed: int) -> Field:
+    """A steady source 0.4 to 1 beams away in frames that are off their headers by a tenth of a beam on each axis."""
+    rng = np.random.default_rng((seed, 13))
+    made = blank_field(seed)
+    angle, away = rng.uniform(0, 2 * np.pi), FWHM * rng.uniform(0.4, 1.0)
+    off = 0.1 * FWHM * rng.normal(size=(2, made.n))
+    flux = 10 ** rng.uniform(1.5, 2.3) / math.exp(-GAUSS * away**2)
+    made.fixed(made.x + away * math.cos(angle) + off[0], made.y + away * math.sin(angle) + off[1], flux)
+    return made
+
+
 def short_pulse(seed: int) -> Field:
     """A 30 s pulse in a synthesised image of 2 min: a quarter of the coverage of the beam that is taken off.
 
@@ -325,4 +365,9 @@ PLANTED: dict[str, tuple[Callable[[int], Field], str]] = {
     "frame-wide flare": (frame_wide, "frame_wide"),
     "sidelobe": (sidelobe, "sidelobe"),
     "variable neighbour": (neighbour, "neighbour"),
+}
+# Varies smoothly, and is bright in few single frames or in none.
+SMOOTH: dict[str, tuple[Callable[[int], Field], str]] = {
+    "smooth neighbour": (smooth_neighbour, "position"),
+    "wandering source": (wandering, "position"),
 }

@@ -125,6 +125,19 @@ def test_a_track_is_straight_and_even() -> None:
     assert best_track(lags, limits, [np.empty((0, 2))] * 3, 6.0)[:2] == (3, 0)
 
 
+def test_how_fast_a_point_may_move() -> None:
+    """A point of 45 arcsec in 120 s moves by at most 22.5 arcsec a minute; exact."""
+    curve = LightCurve.from_arrays(
+        np.array([0.0, 180.0, 600.0, 1200.0]), np.array([30.0, 0, 0, 0]), np.ones(4), exposure_s=np.full(4, 120.0)
+    )
+    alone = in_bands(curve)
+    rows, reach = Moving()._near(alone, 0, 0)
+    lag = curve.t_tdb_s[rows] - curve.t_tdb_s[0]
+    assert rows.tolist() == [1, 2, 3]
+    np.testing.assert_allclose(45.0 * reach[:2] / (lag[:2] / 60.0), 22.5)
+    assert reach[2] == Moving().radius
+
+
 def test_dark_frames_near_in_time_are_needed_for_motion() -> None:
     """Where the next frames are days away nothing is said of motion."""
     made = moving(5001)
@@ -158,6 +171,8 @@ def test_fisher_reference() -> None:
     """The exact test is the tail of the hypergeometric distribution (scipy.stats.hypergeom.sf)."""
     for both, first, second, n in ((3, 5, 4, 30), (0, 5, 4, 30), (8, 8, 8, 96), (2, 30, 2, 31)):
         assert fisher(both, first, second, n) == pytest.approx(hypergeom.sf(both - 1, n, first, second))
+    assert fisher(5, 10, 5, 50) == pytest.approx(1.18937e-4, rel=1e-5)  # scipy 1.17: hypergeom.sf(4, 50, 10, 5)
+    assert fisher(4, 10, 5, 50) == pytest.approx(4.08352e-3, rel=1e-5)
 
 
 def test_motion_reference_values() -> None:

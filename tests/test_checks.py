@@ -130,6 +130,27 @@ def test_heavy_tails_are_no_bad_frames():
     assert verdicts.count("pass") >= 48
 
 
+def test_noisy_frames_are_said_and_fail_nothing():
+    """A frame of three times the noise whose errors tell so is as good as others; in the evidence it stands with figures."""
+    rng = np.random.default_rng(6)
+    curve, bright = flaring([17])
+    z = rng.normal(size=(40, N_FRAMES))
+
+    def controls(label, frames):
+        block = make_block(z, frames)
+        wide = np.where(np.arange(N_FRAMES) == 17, 3.0, 1.0)
+        return dataclasses.replace(block, flux=block.flux * wide, flux_err=block.flux_err * wide)
+
+    candidate = dataclasses.replace(make_candidate([curve], [bright], z), controls=controls)
+    finding = FrameWide().check(candidate)
+    assert finding.verdict == "pass"
+    assert finding.values["noise"] == pytest.approx(3.0)
+    assert "3.0 times as noisy" in finding.evidence
+    quiet = FrameWide().check(make_candidate([curve], [bright], z))
+    assert quiet.values["noise"] == pytest.approx(1.0)
+    assert "noisy" not in quiet.evidence
+
+
 def test_frame_wide_is_uninformative_with_few_controls():
     """With fewer than twenty blank positions in the bright frames, or none, nothing is said."""
     rng = np.random.default_rng(5)
@@ -311,9 +332,9 @@ def test_position_is_uninformative_without_positions():
 def test_only_the_best_frames_are_asked_for():
     """At most `max_frames` cut-outs are read, those of highest signal to noise, over all channels."""
     asked = []
-    snr = np.arange(N_FRAMES, dtype=float) + 5
+    snr = 0.05 * np.arange(N_FRAMES) + 5
     curve = make_curve(snr)
-    other = make_curve(snr + 0.5, OPTICAL, first_frame=500)
+    other = make_curve(snr + 0.02, OPTICAL, first_frame=500)
     candidate = make_candidate([curve, other], [snr > 0, snr > 0])
     object.__setattr__(candidate, "cutouts", lambda frames, half_width: asked.extend(frames) or [])
     Position(max_frames=4).check(candidate)
@@ -379,6 +400,17 @@ def test_what_is_a_point(major: float, minor: float, verdict: str) -> None:
     assert finding.verdict == verdict
     assert finding.values["n_frames"] == 2
     assert "2 bright frames" in finding.evidence
+
+
+@pytest.mark.parametrize(("spoiled", "verdict"), [(0, "pass"), (5, "pass"), (8, "fail"), (20, "fail")])
+def test_a_bad_column_in_one_pointing_of_many(spoiled: int, verdict: str) -> None:
+    """In a quarter of twenty bright frames, where a true source is long, it is told and does not fail; in more it does."""
+    finding = PointLikeness().check(
+        of_shape([shaped(100 + k, 30.0, *((16.0, 2.0) if k < spoiled else (4.0, 4.0))) for k in range(20)])
+    )
+    assert finding.verdict == verdict
+    assert ("without the worst 5 frames p = " in finding.evidence) == (spoiled == 5)
+    assert (finding.values["p"] < 1e-4) == (spoiled > 0)
 
 
 def test_where_shapes_say_nothing() -> None:

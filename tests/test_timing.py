@@ -16,6 +16,9 @@ def test_chance_of_hits_is_fishers() -> None:
     assert lookback(inside, three) == pytest.approx(17 / 70)
     assert lookback(inside, ~inside) == pytest.approx(1.0)
     assert np.isnan(lookback(np.zeros(0, bool), np.zeros(0, bool)))
+    inside, detected = np.arange(50) < 10, np.arange(50) < 5
+    assert lookback(inside, detected) == pytest.approx(1.18937e-4, rel=1e-5)  # scipy 1.17: hypergeom.sf(4, 50, 10, 5)
+    assert lookback(inside, np.roll(detected, -1)) == pytest.approx(4.08352e-3, rel=1e-5)
 
 
 def test_nearest_pulse_of_a_changing_period() -> None:

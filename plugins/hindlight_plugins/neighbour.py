@@ -7,7 +7,17 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from hindlight import Candidate, Column, ConsistencyCheck, Finding, beam_arcsec, hookimpl, mean_at, setting
+from hindlight import (
+    Candidate,
+    Column,
+    ConsistencyCheck,
+    Finding,
+    beam_arcsec,
+    brightest_and_faintest,
+    hookimpl,
+    mean_at,
+    setting,
+)
 
 Array = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -21,12 +31,13 @@ class Neighbour(ConsistencyCheck):
 
     The place is that of the highest excess of the bright over the quiet frames' mean; its flux is measured in each frame.
     The check fails if it brightens that much, significantly, in at least the fraction `share` of the bright frames.
-    Uninformative without cut-outs of bright and quiet frames of one channel. Neighbours nearer than 0.7 beams are blended
+    Where no frame of a channel is bright and it varies all over, its brightest frames are set against its faintest.
+    Uninformative without cut-outs of both sorts of frames of one channel. Neighbours nearer than 0.7 beams are blended
     with the candidate: `position` tells of them.
     """
 
     columns = (
-        Column("n_frames", "bright frames in which the neighbour's place was measured", dtype="int64",
+        Column("n_frames", "bright, or brightest, frames in which the neighbour's place was measured", dtype="int64",
                ucd="meta.number;obs"),
         Column("n_brighter", "those in which it brightens more than the candidate", dtype="int64",
                ucd="meta.number;obs"),
@@ -55,7 +66,9 @@ class Neighbour(ConsistencyCheck):
         part = float(np.median(parts)) if parts else float("nan")
         values = {"n_frames": n, "n_brighter": n_brighter, "distance": distance, "share": part}
         if n == 0:
-            return Finding("uninformative", "no channel has readable bright and quiet frames", values)
+            return Finding(
+                "uninformative", "no channel has readable bright and quiet frames, or varies all over", values
+            )
         evidence = f"something within {self.radius:g} beams brightens more in {n_brighter} of {n} bright frames"
         if parts:
             evidence += f": {distance:.3g} arcsec away, of which the candidate shows {100 * part:.0f} %"
@@ -63,15 +76,11 @@ class Neighbour(ConsistencyCheck):
 
     def _channel(self, candidate: Candidate, at: int) -> tuple[Array, NDArray[np.bool_], float] | None:
         """Candidate's over neighbour's brightening and whether that is stronger, per bright frame; its distance."""
-        curve, bright = candidate.curves[at], candidate.bright[at]
-        rows = np.flatnonzero(bright)
-        rows = rows[np.argsort(-np.abs(curve.above_quiet[rows]), kind="stable")][: self.max_frames]
-        quiet = np.flatnonzero(~bright)
+        curve = candidate.curves[at]
+        rows, quiet, dark = self._both_sorts(candidate, at)
         if len(rows) == 0 or len(quiet) == 0:
             return None
-        quiet = quiet[np.argsort(np.abs(curve.t_tdb_s[quiet] - curve.t_tdb_s[rows[0]]), kind="stable")]
-        quiet = quiet[: self.max_frames]
-        size = curve.flux[rows] - curve.quiet_level[0]
+        size = curve.flux[rows] - dark
         place = self._place(candidate, curve.frame[rows], curve.frame[quiet], float(np.sign(np.median(size))))
         if place is None:
             return None
@@ -87,6 +96,21 @@ class Neighbour(ConsistencyCheck):
         own = np.abs(size[known])
         brighter = (rise >= self.min_snr * error[known]) & (rise >= self.stronger * own)
         return own / np.where(rise > 0, rise, np.nan), brighter, float(np.hypot(*offset))
+
+    def _both_sorts(self, candidate: Candidate, at: int) -> tuple[Ints, Ints, float]:
+        """Rows of the brightest bright frames and of quiet ones near in time, and the flux of the quiet ones.
+
+        Without bright frames the brightest and the faintest ones of what varies all over, none where it does not.
+        """
+        curve, bright = candidate.curves[at], candidate.bright[at]
+        rows, quiet, level = np.flatnonzero(bright), np.flatnonzero(~bright), curve.quiet_level[0]
+        if len(rows) == 0:
+            rows, quiet = brightest_and_faintest(curve)
+            level = float(np.mean(curve.flux[quiet])) if len(quiet) else level
+            return rows[-self.max_frames :], quiet[: self.max_frames], level
+        rows = rows[np.argsort(-np.abs(curve.above_quiet[rows]), kind="stable")][: self.max_frames]
+        quiet = quiet[np.argsort(np.abs(curve.t_tdb_s[quiet] - curve.t_tdb_s[rows[0]]), kind="stable")]
+        return rows, quiet[: self.max_frames], level
 
     def _place(
         self, candidate: Candidate, bright: Ints, quiet: Ints, sign: float

@@ -1,4 +1,7 @@
-"""Does the light come from where the candidate is, and does it stay there? Centroids of its bright frames."""
+"""Does the light come from where the candidate is, and does it stay there?
+
+Centroids of its bright frames; where few are bright, of what its brightest frames have more than its faintest.
+"""
 
 from __future__ import annotations
 
@@ -13,12 +16,15 @@ from hindlight import (
     Candidate,
     Column,
     ConsistencyCheck,
+    Contrast,
     Cutout,
     Finding,
     added,
     added_part,
     beam_arcsec,
+    contrast,
     hookimpl,
+    motion,
     quiet_cutouts,
     setting,
 )
@@ -31,6 +37,9 @@ SMALLEST_RADIUS = 1.5  # pixels
 MISMATCH = 0.05  # of the height: by how much beams differ from Gaussians of the stated width
 SPOILED = 2.5  # reduced chi-square beyond which something else is in the fitted pixels: of white noise 1 in 20,000
 LEFT_OVER = 0.05  # beams by which a steady source as bright as the candidate shifts a centroid once it is taken off
+FEW_FRAMES = 5  # bright ones with a centroid: with fewer the brightest frames are set against the faintest as well
+MOST_OF, SOME = 0.5, 3  # of the bright frames, or so many, must have centroids, or light moves rather than is added
+LARGEST = 0.5  # part of what varies at the position that motion must explain
 JULIAN_YEAR_S = 31557600.0
 FEWEST_TIMES = 3
 
@@ -39,18 +48,26 @@ FEWEST_TIMES = 3
 class Position(ConsistencyCheck):
     """Whether the centroids of the bright frames agree with the target's position and with each other.
 
-    Frames in which the target has less than `min_snr` carry no position. One frame tests the offset only; where no
-    frame has a centroid the check is uninformative. Pulses much shorter than an aperture synthesis may leave sidelobes
-    that are not the beam's: their centre is right all the same.
+    Frames in which the target has less than `min_snr` carry no position. One frame tests the offset only. Pulses much
+    shorter than an aperture synthesis may leave sidelobes that are not the beam's: their centre is right all the same.
+
+    Where fewer than five frames have a centroid and a channel varies all over, the light that the brightest third of its
+    frames has more than the faintest third must lie at the position. The check fails too where the mean light is a source
+    `off` beams or more from the position that moves from frame to frame, as pointing errors do it, or brightens as a
+    whole, which explains at least half of what varies here, and better than a point at the position does; unless half of
+    the bright frames, or three, have centroids and tell to `off` beams where the light is that they add. Uninformative
+    where there is neither.
     """
 
     columns = (
-        Column("offset", "distance of the mean centroid of the bright frames from the target's position",
+        Column("offset", "distance from the target's position of the mean centroid of the bright frames, of what the "
+               "brightest frames have more than the faintest, or of the source that moves",
                unit="arcsec", ucd="pos.angDistance"),
         Column("chi2_scatter", "chi-square of the centroids about their mean, 2 (n - 1) degrees of freedom; blank for "
-               "one frame", ucd="stat.fit.chi2"),
-        Column("p", "chance of an offset or a scatter as large, both tests counted", ucd="stat.probability"),
-        Column("n_frames", "bright frames with a centroid", dtype="int64", ucd="meta.number;obs"),
+               "one frame, and for frames that were added up", ucd="stat.fit.chi2"),
+        Column("p", "chance of an offset, a scatter or a motion as large, all tests counted", ucd="stat.probability"),
+        Column("n_frames", "bright frames with a centroid, or frames that were added up", dtype="int64",
+               ucd="meta.number;obs"),
     )  # fmt: skip
     min_snr: float = setting(5.0, "least flux over error of a frame whose centroid counts", unit="sigma", minimum=3)
     max_frames: int = setting(30, "at most so many frames, those of highest flux over error", minimum=1)
@@ -58,16 +75,81 @@ class Position(ConsistencyCheck):
     target_err: float = setting(0.0, "1-sigma error of the target positions, per axis", unit="arcsec", minimum=0)
     half_width: float = setting(2.5, "half width of the cut-outs", unit="FWHM", minimum=1.5)
     level: float = setting(1e-4, "the check fails below this chance", minimum=0, maximum=1)
+    off: float = setting(0.3, "least distance of a source whose motion is told", unit="FWHM", minimum=0.1)
 
     def check(self, candidate: Candidate) -> Finding:
         """The finding for one candidate."""
         rows = bright_centroids(candidate, self.min_snr, self.max_frames, self.half_width)
-        if len(rows) == 0:
-            values = {"offset": float("nan"), "chi2_scatter": float("nan"), "p": float("nan"), "n_frames": 0}
-            return Finding("uninformative", f"no bright frame of {self.min_snr:g} sigma has a centroid", values)
-        _, east, north, error, fwhm = rows.T
+        tried, rows = len(rows), rows[np.isfinite(rows[:, 1])]
         known_to = math.hypot(self.target_err, candidate.place_err)
-        return self._judge(np.stack((east, north), axis=1), error, fwhm, known_to)
+        found, may_move = [], True
+        if len(rows):
+            _, east, north, error, fwhm = rows.T
+            known = float((error**-2).sum() ** -0.5) <= self.off * float(np.mean(fwhm))
+            may_move = not known or len(rows) < min(MOST_OF * tried, SOME)
+            found.append(self._judge(np.stack((east, north), axis=1), error, fwhm, known_to))
+        if len(rows) < FEW_FRAMES:
+            stacks = [contrast(candidate, at, self.half_width) for at in range(len(candidate.curves))]
+            found += [said for stack in stacks if stack for said in self._all_over(stack, known_to, may_move)]
+        if not found:
+            values = {"offset": float("nan"), "chi2_scatter": float("nan"), "p": float("nan"), "n_frames": 0}
+            why = f"no bright frame of {self.min_snr:g} sigma has a centroid, nor has what varies all over"
+            return Finding("uninformative", why, values)
+        worst = min(found, key=lambda said: float(said.values["p"]))
+        p = _after_trials(float(worst.values["p"]), len(found))
+        return Finding(
+            "fail" if p < self.level else "pass", f"{worst.evidence} (p = {p:.2g})", {**worst.values, "p": p}
+        )
+
+    def _all_over(self, stack: Contrast, known_to: float, may_move: bool) -> list[Finding]:
+        """What is said of the brightest against the faintest frames of a channel: where the light is that is added, and
+
+        if `may_move` whether a source aside moves.
+        """
+        if stack.snr < self.min_snr:
+            return []
+        fwhm = beam_arcsec(stack.added)
+        error = centroid_error(fwhm, stack.snr)
+        found = [said] if may_move and (said := self._moved(stack, error, known_to)) else []
+        shift = centroid(stack.added)
+        if shift is not None:
+            distance = math.hypot(*(stack.added.to_sky @ shift))
+            variance = error**2 + (self.floor * fwhm) ** 2 + known_to**2
+            evidence = (
+                f"what the brightest of {stack.n} frames have more than the faintest lies {distance:.3g} arcsec "
+                f"({distance / fwhm:.2f} beams) from the position, expected within {CIRCLE_95 * variance**0.5:.3g} arcsec "
+                "at 95 %"
+            )
+            found.append(_finding(evidence, distance, math.exp(-(distance**2) / variance / 2), stack.n))
+        return found
+
+    def _moved(self, stack: Contrast, error: float, known_to: float) -> Finding | None:
+        """What is said of a source aside that moves between the frames; None where there is none, or light is added here.
+
+        Both its distance and its motion must be beyond chance.
+        """
+        fwhm = beam_arcsec(stack.light)
+        shift = centroid(stack.light)
+        if shift is None:
+            return None
+        east, north = stack.light.to_sky @ shift
+        distance = math.hypot(east, north)
+        found = motion(stack, east, north, MISMATCH) if distance >= self.off * fwhm else None
+        if found is None:
+            return None
+        change = found.moved + found.there
+        if found.moved < LARGEST * change:
+            return None
+        variance = error**2 + (self.floor * fwhm) ** 2 + known_to**2
+        p = max(math.exp(-(distance**2) / variance / 2), math.exp(-max(found.delta_chi2, 0.0) / 2))
+        level = float(stack.light.pixels[round(stack.light.y), round(stack.light.x)])
+        evidence = (
+            f"a source lies {distance:.3g} arcsec ({distance / fwhm:.2f} beams) from the position; between the faintest "
+            f"and the brightest of {stack.n} frames it moves by {math.hypot(*found.shift) / fwhm:.2f} beams and brightens "
+            f"by {100 * found.scaled:.0f} %, which changes the flux here by {100 * found.moved / level:.0f} %; what varies "
+            f"here is {100 * change / level:.0f} %"
+        )
+        return _finding(evidence, distance, p, stack.n)
 
     def _judge(self, offsets: Array, error: Array, fwhm: Array, known_to: float = 0.0) -> Finding:
         """The finding from offsets of shape (n, 2), their errors per axis and beams, shape (n,), all in arcsec.
@@ -95,9 +177,17 @@ class Position(ConsistencyCheck):
             scatter = float((weight[:, None] * (offsets - mean) ** 2).sum())
             p.append(float(special.chdtrc(2 * (n - 1), scatter)))
             evidence += f"; scatter about the mean: chi-square {scatter:.1f} for {2 * (n - 1)} degrees of freedom"
-        both = -math.expm1(len(p) * math.log1p(-min(*p, 1 - 1e-16)))
-        values = {"offset": distance, "chi2_scatter": scatter, "p": both, "n_frames": n}
-        return Finding("fail" if both < self.level else "pass", f"{evidence} (p = {both:.2g})", values)
+        return _finding(evidence, distance, _after_trials(min(p), len(p)), n, scatter)
+
+
+def _finding(evidence: str, distance: float, p: float, n: int, scatter: float = float("nan")) -> Finding:
+    """One answer of several, whose verdict is still to come."""
+    return Finding("pass", evidence, {"offset": distance, "chi2_scatter": scatter, "p": p, "n_frames": n})
+
+
+def _after_trials(p: float, n: int) -> float:
+    """The chance that the least of n values is p or less."""
+    return -math.expm1(n * math.log1p(-min(p, 1 - 1e-16)))
 
 
 @dataclass(frozen=True)
@@ -130,6 +220,7 @@ class ProperMotion(ConsistencyCheck):
         """The finding for one candidate."""
         times = {int(f): float(t) for c in candidate.curves for f, t in zip(c.frame, c.t_tdb_s, strict=True)}
         rows = bright_centroids(candidate, self.min_snr, self.max_frames, self.half_width)
+        rows = rows[np.isfinite(rows[:, 1])]
         years = np.array([times[int(frame)] / JULIAN_YEAR_S for frame in rows[:, 0]])
         rows, years = rows[np.isfinite(years)], years[np.isfinite(years)]
         nan = float("nan")
@@ -171,9 +262,9 @@ def linear_motion(times: Array, offsets: Array, error: Array) -> tuple[Array, fl
 def bright_centroids(candidate: Candidate, min_snr: float, most: int, half_width: float) -> Array:
     """Frame, centroid east and north of the position, its error per axis and the beam in arcsec: shape (n, 5).
 
-    Of the bright frames of at least `min_snr`, at most `most`, those of highest flux over error first. Beside a steady
-    source it is the centroid of the light that is added to the quiet frames, which must be that bright by itself: of a
-    source that is never dark it is a part.
+    NaN stands for the centroid of a frame that has none. Of the bright frames of at least `min_snr`, at most `most`, those
+    of highest flux over error first. Beside a steady source it is the centroid of the light that is added to the quiet
+    frames, which must be that bright by itself: of a source that is never dark it is a part.
     """
     found = []
     for at, (curve, bright) in enumerate(zip(candidate.curves, candidate.bright, strict=True)):
@@ -191,10 +282,11 @@ def bright_centroids(candidate: Candidate, min_snr: float, most: int, half_width
         if crowd > 0.0:
             height *= part
         shift = centroid(light, signed=candidate.curves[at].channel.signed)
-        if shift is not None and height >= min_snr:
+        if height >= min_snr:
             fwhm = beam_arcsec(cutout)
             error = math.hypot(centroid_error(fwhm, height), LEFT_OVER * crowd * fwhm)
-            rows.append((cutout.frame, *(cutout.to_sky @ shift), error, fwhm))
+            place = (math.nan, math.nan) if shift is None else cutout.to_sky @ shift
+            rows.append((cutout.frame, *place, error, fwhm))
     return np.array(rows, float).reshape(-1, 5)
 
 

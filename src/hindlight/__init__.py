@@ -3,6 +3,7 @@
 Everything a plugin needs is here and in `hindlight.testing`; other modules are the program's own.
 """
 
+from hindlight.contrasts import Contrast, Motion, brightest_and_faintest, contrast, motion
 from hindlight.cutouts import added, added_part, beam_arcsec, mean_at, quiet_cutouts
 from hindlight.dates import between, greenwich_sidereal_s, read_angle, read_clock, read_date
 from hindlight.facts import Cards, FrameFacts, Moment, PlaneAxes
@@ -53,6 +54,7 @@ __all__ = [
     "Channel",
     "Column",
     "ConsistencyCheck",
+    "Contrast",
     "Cutout",
     "Dialect",
     "Ephemeris",
@@ -63,6 +65,7 @@ __all__ = [
     "Images",
     "LightCurve",
     "Moment",
+    "Motion",
     "Observed",
     "PeriodResult",
     "PeriodSearch",
@@ -76,7 +79,9 @@ __all__ = [
     "beam_arcsec",
     "beam_of",
     "between",
+    "brightest_and_faintest",
     "comment_of",
+    "contrast",
     "east_longitude",
     "east_or_west",
     "fold_unit",
@@ -85,6 +90,7 @@ __all__ = [
     "hookimpl",
     "julian_instant",
     "mean_at",
+    "motion",
     "quiet_cutouts",
     "quiet_level",
     "read_angle",
