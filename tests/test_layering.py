@@ -14,8 +14,8 @@ PLUGINS = Path(hindlight_plugins.__file__).parent
 
 ORDER = [
     "errors", "wording", "schema", "completeness_schema", "facts", "blocks", "settings", "dates", "lightcurve", "plugin",
-    "cutouts", "contrasts", "hookspecs", "tables", "host", "fence", "clock", "storage", "systems", "celestial", "sky", "headers",
-    "instants", "sites", "reading", "integrity", "goodtime", "timetables", "knowledge", "files", "companions", "channels",
+    "cutouts", "contrasts", "hookspecs", "tables", "host", "fence", "clock", "storage", "systems", "celestial", "sky",
+    "headers", "instants", "sites", "reading", "integrity", "goodtime", "timetables", "knowledge", "files", "companions", "channels",
     "outlines", "footprints", "frametable", "archive", "summary", "positions", "apart", "spans", "pixels", "background",
     "detection", "pointing", "growth", "opening", "fluxes", "photometry", "planted", "duplicates", "likeness", "robust",
     "losses", "response", "ensemble", "store", "judge", "calibrate", "tails", "ranking", "lifted", "search", "timing",
