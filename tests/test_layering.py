@@ -13,17 +13,17 @@ SOURCE = Path(hindlight.__file__).parent
 PLUGINS = Path(hindlight_plugins.__file__).parent
 
 ORDER = [
-    "errors", "wording", "schema", "completeness_schema", "facts", "blocks", "settings", "dates", "lightcurve", "plugin",
-    "cutouts", "contrasts", "hookspecs", "tables", "host", "fence", "clock", "storage", "systems", "celestial", "sky",
-    "headers", "instants", "sites", "reading", "integrity", "goodtime", "timetables", "knowledge", "files", "companions", "channels",
-    "outlines", "footprints", "frametable", "archive", "summary", "positions", "apart", "spans", "pixels", "background",
-    "detection", "pointing", "growth", "opening", "fluxes", "photometry", "planted", "duplicates", "likeness", "robust",
-    "losses", "response", "ensemble", "store", "judge", "calibrate", "tails", "ranking", "lifted", "search", "timing",
-    "injection", "looks", "completeness", "brighter", "candidates", "plan", "more_controls", "comparisons", "tied", "order",
-    "tasks",
-    "examining", "trials", "conclude", "bright", "outcome", "crew", "record", "asides", "verdicts", "measuring",
-    "second_pass", "runner", "report_card", "study", "hiding", "chances", "unseen", "recovered", "recovery", "powers",
-    "layout", "survey", "export", "demo", "testing", "outlet", "cli", "__main__",
+    "errors", "wording", "schema", "completeness_schema", "facts", "blocks", "settings", "dates", "lightcurve",
+    "plugin", "cutouts", "contrasts", "hookspecs", "tables", "host", "fence", "clock", "storage", "systems",
+    "celestial", "sky", "headers", "instants", "sites", "reading", "integrity", "goodtime", "timetables", "knowledge",
+    "files", "companions", "channels", "outlines", "footprints", "frametable", "archive", "summary", "positions",
+    "apart", "spans", "pixels", "background", "detection", "pointing", "growth", "opening", "fluxes", "photometry",
+    "planted", "duplicates", "likeness", "robust", "losses", "response", "ensemble", "store", "judge", "calibrate",
+    "tails", "ranking", "lifted", "search", "timing", "injection", "looks", "completeness", "brighter", "candidates",
+    "plan", "more_controls", "comparisons", "tied", "order", "tasks", "examining", "trials", "conclude", "bright",
+    "outcome", "crew", "record", "asides", "verdicts", "measuring", "second_pass", "runner", "report_card", "study",
+    "hiding", "chances", "unseen", "recovered", "recovery", "powers", "layout", "survey", "export", "demo", "testing",
+    "outlet", "cli", "__main__",
 ]  # fmt: skip
 PLUGINS_MAY_IMPORT = {"hindlight", "numpy", "scipy", "astropy", "photutils", "nifty_ls"}
 
