@@ -201,15 +201,14 @@ def test_sources_added_to_pixels(archive):
 
 
 def test_a_small_version_of_the_study_of_linearity(tmp_path):
-    """Sources in stored pixels and in light curves: fluxes agree, and the same targets are found, of which there are some."""
+    """Sources in stored pixels and in light curves: fluxes agree, and so do q-values, some of which are small."""
     linearity = study("linearity")
     result = linearity.measured(tmp_path, frames=12, side=4, seed=5)
     assert len(result.differences) == 2
     for differ in result.differences.values():
         assert 1e-6 < np.abs(differ).max() < linearity.MOST
-    found = result.by_curves < linearity.LEVEL
-    assert np.array_equal(found, result.by_pixels < linearity.LEVEL)
-    assert 2 <= found.sum() <= 14
+    np.testing.assert_allclose(result.by_pixels, result.by_curves, rtol=0.25)  # a rank or two
+    assert 2 <= (result.by_curves < linearity.LEVEL).sum() <= 14
 
 
 def test_a_frame_that_is_gone_proves_nothing(archive, tmp_path, monkeypatch):
