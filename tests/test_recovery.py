@@ -207,7 +207,9 @@ def test_a_small_version_of_the_study_of_linearity(tmp_path):
     assert len(result.differences) == 2
     for differ in result.differences.values():
         assert 1e-6 < np.abs(differ).max() < linearity.MOST
-    np.testing.assert_allclose(result.by_pixels, result.by_curves, rtol=0.25)  # a rank or two
+    moved = np.abs(np.log(result.by_pixels / result.by_curves))
+    assert np.median(moved) < 0.02
+    assert (moved > 0.2).sum() <= 1  # a control more or less at the smallest ranks moves p by columns over controls
     assert 2 <= (result.by_curves < linearity.LEVEL).sum() <= 14
 
 
