@@ -203,7 +203,7 @@ def test_sources_added_to_pixels(archive):
 def test_a_small_version_of_the_study_of_linearity(tmp_path):
     """Sources in stored pixels and in light curves: fluxes agree, and so do q-values, some of which are small."""
     linearity = study("linearity")
-    result = linearity.measured(tmp_path, frames=12, side=4, seed=5)
+    result = linearity.measured(tmp_path, frames=12, side=4, seed=5, controls=400)
     assert len(result.differences) == 2
     for differ in result.differences.values():
         assert 1e-6 < np.abs(differ).max() < linearity.MOST

@@ -35,6 +35,7 @@ from hindlight.plugin import BeamShape
 
 APART_FWHM = 18.0  # no source lies in the annulus of another
 COMPARISONS = 30
+CONTROLS = 2500
 STEPS = 200.0  # in which images are stored, to the noise: rounding alone moves a flux by its inverse times 0.4 (rms)
 MOST, MOST_CHANGED = 0.02, 0.005
 LEVEL = 0.05
@@ -70,7 +71,7 @@ def store(path: Path, image: np.ndarray, header: fits.Header) -> None:
     hdu.writeto(path, overwrite=True)
 
 
-def simulated(folder: Path, frames: int, side: int, seed: int) -> None:
+def simulated(folder: Path, frames: int, side: int, seed: int, controls: int) -> None:
     """Archive, targets and settings."""
     looks = instruments(frames, side)
     rng = np.random.default_rng(seed)
@@ -89,7 +90,7 @@ def simulated(folder: Path, frames: int, side: int, seed: int) -> None:
             store(path, image, header)
     (folder / "targets.csv").write_text(skies.target_text(targets, looks[0]))
     (folder / "settings.toml").write_text(
-        "[controls]\nper_field = 2500\nfield_size_deg = 50.0\nbright_target_snr = 1e9\n"
+        f"[controls]\nper_field = {controls}\nfield_size_deg = 50.0\nbright_target_snr = 1e9\n"
     )
 
 
@@ -174,9 +175,9 @@ def add_to_pixels(folder: Path, run: Path, rows: dict[str, np.ndarray], more: np
     shutil.rmtree(run / "measurements")
 
 
-def measured(folder: Path, frames: int, side: int, seed: int) -> Result:
+def measured(folder: Path, frames: int, side: int, seed: int, controls: int = CONTROLS) -> Result:
     """Simulate an archive and add the same sources either way."""
-    simulated(folder, frames, side, seed)
+    simulated(folder, frames, side, seed, controls)
     plain, curves, pixels = (folder / name for name in ("plain", "curves", "pixels"))
     mined(folder, plain)
     rows = rows_of(plain)
