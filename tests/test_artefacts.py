@@ -125,6 +125,18 @@ def test_a_track_is_straight_and_even() -> None:
     assert best_track(lags, limits, [np.empty((0, 2))] * 3, 6.0)[:2] == (3, 0)
 
 
+def test_frames_that_cannot_show_a_track_do_not_count_against_it():
+    """Those in which it would lie on the pixel of the bright frame, or at the rim of what is searched; both may show it."""
+    lags, limits = np.array([-3600.0, 3600.0, 7200.0]), np.array([50.0, 50.0, 50.0])
+    nowhere, there = np.empty((0, 2)), np.array([[20.0, 0.0]])
+    assert best_track(lags, limits, [nowhere, there, nowhere], 6.0)[:2] == (3, 1)
+    blind = np.array([[-20.0, 11.0], [90.0, 90.0], [90.0, 90.0]])
+    assert best_track(lags, limits, [nowhere, there, nowhere], 6.0, blind)[:2] == (2, 1)
+    assert best_track(lags, limits, [-there, there, nowhere], 6.0, blind)[:2] == (3, 2)
+    assert best_track(lags, np.array([50.0, 50.0, 45.0]), [nowhere, there, nowhere], 6.0, blind)[:2] == (1, 1)
+    assert best_track(lags, np.array([50.0, 50.0, 45.0]), [nowhere, there, 2 * there], 6.0, blind)[:2] == (2, 2)
+
+
 def test_how_fast_a_point_may_move() -> None:
     """A point of 45 arcsec in 120 s moves by at most 22.5 arcsec a minute; exact."""
     curve = LightCurve.from_arrays(

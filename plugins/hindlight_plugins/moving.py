@@ -103,7 +103,7 @@ class Moving(ConsistencyCheck):
         frames = np.concatenate((curve.frame[row : row + 1], curve.frame[near]))
         made = {cutout.frame: cutout for cutout in candidate.cutouts(frames, self.radius)}
         bright = made.get(int(curve.frame[row]))
-        places = []
+        places, blind = [], []
         lags, limits = [], []
         for other, limit in zip(near.tolist(), reach.tolist(), strict=True):
             cutout = made.get(int(curve.frame[other]))
@@ -111,10 +111,12 @@ class Moving(ConsistencyCheck):
                 continue
             lags.append(float(curve.t_tdb_s[other] - curve.t_tdb_s[row]))
             limits.append(limit * beam_arcsec(cutout))
+            same_pixel = [axis[at][row] - axis[at][other] for axis in (candidate.x, candidate.y)]
+            blind.append(cutout.to_sky @ same_pixel)
             places.append(self._counterparts(candidate, at, row, other, bright, cutout, limit, min_snr))
         if not lags or bright is None:
             return 0, 0, float("nan")
-        return best_track(np.array(lags), np.array(limits), places, beam_arcsec(bright))
+        return best_track(np.array(lags), np.array(limits), places, beam_arcsec(bright), np.array(blind))
 
     def _near(self, candidate: Candidate, at: int, row: int) -> tuple[Ints, Array]:
         """Rows near in time that are dark and deep enough, and how many beams away a counterpart may lie in each."""
@@ -223,10 +225,14 @@ def _smoothed(cutout: Cutout) -> Array:
     return np.asarray(ndimage.gaussian_filter(data, SIGMA_OF_FWHM * cutout.fwhm))
 
 
-def best_track(lags: Array, limits: Array, places: list[Array], width: float) -> tuple[int, int, float]:
+def best_track(
+    lags: Array, limits: Array, places: list[Array], width: float, blind: Array | None = None
+) -> tuple[int, int, float]:
     """Frames a track can be seen in, frames in which it is, and its rate (arcsec/h): of the track seen most often.
 
-    `lags` (s) and `limits` (arcsec) have shape (n,), `places` n arrays (m, 2) of counterparts' offsets in arcsec.
+    `lags` (s) and `limits` (arcsec) have shape (n,), `places` n arrays (m, 2) of counterparts' offsets in arcsec. `blind`,
+    shape (n, 2), is where in each frame a counterpart would lie on the pixel of the bright one, and is not told from a defect
+    of the detector.
     """
     best = (len(lags), 0, float("nan"))
     for lag, found in zip(lags.tolist(), places, strict=True):
@@ -234,14 +240,17 @@ def best_track(lags: Array, limits: Array, places: list[Array], width: float) ->
             speed = place / lag
             expected = lags[:, None] * speed
             far = np.hypot(*expected.T)
-            within = (far >= width) & (far <= limits - width / 2)
             seen = [
                 len(some) > 0 and float(np.hypot(*(some - where).T).min()) <= ON_TRACK * width
                 for some, where in zip(places, expected, strict=True)
             ]
-            n = int((np.array(seen) & within).sum())
+            can_tell = far <= limits - ON_TRACK * width  # further out some are sought in vain
+            if blind is not None:
+                can_tell &= np.hypot(*(expected - blind).T) > (1.0 + ON_TRACK) * width
+            shown = np.array(seen) & (far >= width) & (far <= limits)
+            n = int(shown.sum())
             if n > best[1]:
-                best = (int(within.sum()), n, math.hypot(*speed) * HOUR_S)
+                best = (int((shown | (can_tell & (far >= width))).sum()), n, math.hypot(*speed) * HOUR_S)
     return best
 
 
