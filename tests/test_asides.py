@@ -74,6 +74,15 @@ def test_columns_that_are_read_are_not(tmp_path: Path) -> None:
     assert read_targets(tmp_path / "c.csv", fluxes=True).unused == ()
 
 
+def test_targets_at_one_place_are_named(tmp_path: Path) -> None:
+    """Across ra = 0 too; an arcsecond and more apart they are two."""
+    rows = ["a,359.9999,5", "b,0,5", "c,0.0001,5", "d,10,5", "e,10,5.0005"]
+    (tmp_path / "t.csv").write_text("name,ra,dec\n" + "\n".join(rows) + "\n", encoding="utf-8")
+    (said,) = asides.same_places(read_targets(tmp_path / "t.csv"))
+    assert said == "targets at one place (within 1 arcsec): a, b, c; each counts as a trial in every q-value"
+    assert asides.same_places(None) == ()
+
+
 def test_bounds_of_frequencies_are_those_of_headers() -> None:
     """One number would not be believed in a header and taken from the settings."""
     assert blocks.FREQUENCIES_HZ == reading.FREQUENCIES_HZ

@@ -14,13 +14,15 @@ from typing import Any
 from hindlight.blocks import FrameBlock, block_lines
 from hindlight.errors import UsageError
 from hindlight.host import Plugins
-from hindlight.positions import OPTIONAL_UNITS, Targets
+from hindlight.positions import OPTIONAL_UNITS, Targets, within_deg
 from hindlight.settings import Settings
 from hindlight.store import RunFolder
+from hindlight.systems import unit_vectors
 from hindlight.tables import read_ecsv
 
 LISTED = 8  # names in a sentence; of more the number is told
 LIKE = 0.7  # likeness of two names, of difflib, above which one may be meant for the other
+SAME_PLACE = 1 / 3600  # degrees
 TARGET_COLUMNS = ("name", "ra", "dec", *OPTIONAL_UNITS)
 
 _BLOCK = re.compile(r"\(block (\d+)\)")
@@ -84,7 +86,23 @@ def of_lists(
         *idle_blocks(blocks, frames["assumptions"].tolist()),
         *unused_columns("target list", targets),
         *unused_columns("[comparisons] table", comparisons),
+        *same_places(targets),
     )
+
+
+def same_places(targets: Targets | None) -> tuple[str, ...]:
+    """A sentence that names targets which lie within an arcsecond of another one; () for none."""
+    if targets is None or len(targets) < 2:
+        return ()
+    vectors = unit_vectors(targets.ra, targets.dec)
+    twins = [
+        name
+        for name, near in zip(targets.names, within_deg(vectors, vectors, SAME_PLACE), strict=True)
+        if len(near) > 1
+    ]
+    if not twins:
+        return ()
+    return (f"targets at one place (within 1 arcsec): {shortened(twins)}; each counts as a trial in every q-value",)
 
 
 def borrowed_settings(run: RunFolder, chosen: Settings, plugins: Plugins) -> tuple[str, ...]:

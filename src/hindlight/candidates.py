@@ -164,10 +164,18 @@ def epochs(times_s: FloatArray, gap_days: float) -> int:
 
 
 def brightenings(view: View, gap_days: float) -> int:
-    """How many separate times the target was bright: epochs, or runs of bright samples within one, if more."""
+    """How many separate times the target is known to have been bright: epochs, or runs of bright samples in one, if more.
+
+    Samples without a time are in no order and tell of none.
+    """
     times = [c.curve.t_tdb_s[c.bright] for c in view.channels]
-    in_runs = [runs(c.bright) for c in view.channels if not c.curve.channel.signed]
+    in_runs = [runs(c.bright[np.isfinite(c.curve.t_tdb_s)]) for c in view.channels if not c.curve.channel.signed]
     return max([epochs(np.concatenate(times), gap_days) if times else 0, *in_runs], default=0)
+
+
+def _timeless(view: View) -> int:
+    """How many bright samples have no time."""
+    return sum(int((c.bright & ~np.isfinite(c.curve.t_tdb_s)).sum()) for c in view.channels)
 
 
 def standing(view: View, beyond_chance: bool, established: bool, detection: Detection, testable: bool = True) -> str:
@@ -184,7 +192,10 @@ def standing(view: View, beyond_chance: bool, established: bool, detection: Dete
     lit = [c for c in view.channels if c.bright.any()]
     if not lit or not all(c.quiet_otherwise for c in lit):
         return "variable"
-    return "repeating" if brightenings(view, detection.epoch_gap_days) > 1 else "single"
+    known = brightenings(view, detection.epoch_gap_days)
+    if known > 1:
+        return "repeating"
+    return "single" if known + _timeless(view) <= 1 else "variable"
 
 
 def counts(view: View, detection: Detection) -> dict[str, Any]:

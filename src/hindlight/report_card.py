@@ -119,7 +119,10 @@ def silence_said(
         elif plugin.name not in empty:
             why = "no source is further out than chance at this rate"
         else:
-            lacking = f"no light curve has what it asks (at least {plugin.min_points} samples)"
+            lacking = (
+                f"it gives no finite number there, or fails (plugin_faults.ecsv), or wants more than they have (at least "
+                f"{plugin.min_points} samples, times)"
+            )
             if isinstance(plugin, Statistic) and plugin.all_channels:
                 lacking = "too few measurements of several channels go together, or soon follow each other"
             why = f"its columns are blank at every control: {lacking}"

@@ -130,7 +130,7 @@ STANDINGS = {
     "periodic": "varies beyond chance and repeats with a period that survives aliases, harmonics and the aperiodic null",
     "repeating": "bright in two or more separate epochs or pulses beyond chance, no period established",
     "single": "bright once beyond chance, quiet otherwise",
-    "variable": "varies beyond chance, not in separate brightenings",
+    "variable": "varies beyond chance, not in separate brightenings, or in several frames whose times are not known",
     "steady": "seen, does not vary beyond chance, and enough frames to say so",
     "unseen": "enough frames, never seen, not even in the mean",
     "undecided": "too few usable frames, or too few controls, to say",
